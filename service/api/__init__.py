@@ -1,0 +1,1 @@
+"""The HTTP edge: the only folder, with app.py, that knows FastAPI."""

@@ -1,0 +1,1 @@
+"""One file per command of the command line."""

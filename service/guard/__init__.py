@@ -1,0 +1,1 @@
+"""May this price leave? Checks and the money in hand, apart from how prices are made."""

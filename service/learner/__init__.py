@@ -1,0 +1,1 @@
+"""Pure estimators: what outcomes have taught, as integers, without clock or storage."""

@@ -1,0 +1,1 @@
+"""Pure rules of money and of the stream: integers only, nothing is ever edited."""

@@ -1,0 +1,92 @@
+"""The only place where text or numbers become money, and money becomes text.
+
+One unit: the nano, 10**-9 of the line item's currency, as an int that fits 64 bits.
+A price is kept per impression, so a CPM of 0.000001 is exactly one nano.
+"""
+
+from __future__ import annotations
+
+import re
+from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Context, Decimal
+
+NANOS_PER_UNIT = 10**9
+NANOS_PER_CPM = 10**6
+NANOS_MAX = 2**62  # Half of int64, so that the sum of two amounts never overflows a column.
+
+DOWN, UP, HALF_EVEN = ROUND_FLOOR, ROUND_CEILING, ROUND_HALF_EVEN
+
+_TEXT = re.compile(r"-?(0|[1-9][0-9]{0,18})(\.[0-9]{1,30})?")
+_EXACT = Context(prec=80)
+
+
+class NotMoney(ValueError):
+    """The text or number does not name an amount of money."""
+
+
+def nanos(amount: object) -> int:
+    """
+    Read an amount of money, such as "500.00", exactly.
+
+    Raises:
+        NotMoney: Not a plain decimal, finer than a nano, or out of range.
+    """
+    return _scaled(amount, NANOS_PER_UNIT, None)
+
+
+def price(cpm: object, rounding: str | None = None) -> int:
+    """
+    Read a CPM price, such as 1.25, as nanos per impression.
+
+    Args:
+        cpm: Decimal, int or plain decimal text.
+        rounding: DOWN for bids, UP for floors and holds, HALF_EVEN for spend;
+            None refuses more than six decimals.
+
+    Raises:
+        NotMoney: Not a plain decimal, or out of range.
+    """
+    return _scaled(cpm, NANOS_PER_CPM, rounding)
+
+
+def nanos_rounded(amount: object, rounding: str) -> int:
+    """Read an amount that may be finer than a nano, such as a value out of a feed."""
+    return _scaled(amount, NANOS_PER_UNIT, rounding)
+
+
+def nanos_text(amount_nanos: int) -> str:
+    """Write an amount as a decimal string with at least two decimals."""
+    sign = "-" if amount_nanos < 0 else ""
+    whole, part = divmod(abs(amount_nanos), NANOS_PER_UNIT)
+    decimals = f"{part:09d}".rstrip("0").ljust(2, "0")
+    return f"{sign}{whole}.{decimals}"
+
+
+def cpm_number(price_nanos: int) -> float:
+    """Write a price per impression as a CPM number of at most six decimals."""
+    return price_nanos / NANOS_PER_CPM
+
+
+def _scaled(amount: object, scale: int, rounding: str | None) -> int:
+    exact = _EXACT.multiply(_decimal(amount), Decimal(scale))
+    whole = exact.to_integral_value(rounding or ROUND_FLOOR, context=_EXACT)
+    if rounding is None and whole != exact:
+        raise NotMoney("more decimals than this field can hold")
+    if abs(whole) > NANOS_MAX:
+        raise NotMoney("out of range")
+    return int(whole)
+
+
+def _decimal(amount: object) -> Decimal:
+    if isinstance(amount, bool):
+        raise NotMoney("a truth value is no amount")
+    if isinstance(amount, Decimal):
+        if not amount.is_finite() or abs(amount.adjusted()) > 30:
+            raise NotMoney("not a plain decimal")
+        return amount
+    if isinstance(amount, int):
+        if abs(amount) > NANOS_MAX:
+            raise NotMoney("out of range")
+        return Decimal(amount)
+    if isinstance(amount, str) and _TEXT.fullmatch(amount):
+        return Decimal(amount)
+    raise NotMoney("not a plain decimal")

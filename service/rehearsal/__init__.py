@@ -1,0 +1,1 @@
+"""Invented markets and hindsight, run with the very code that bids in production."""

@@ -1,0 +1,1 @@
+"""SQL: the only folder that imports sqlalchemy."""
