@@ -1,0 +1,156 @@
+"""The signed string that goes out with a bid and comes back with its outcome.
+
+It carries all that an outcome needs, so any worker can settle a win whose decision
+was lost with a crashed worker. URL-safe text, at most 512 bytes.
+"""
+
+from __future__ import annotations
+
+import base64
+import binascii
+import hmac
+import struct
+from dataclasses import dataclass
+from hashlib import blake2b, sha256
+
+TEXT_MAX = 512
+FORM = 1
+MAC_BYTES = 16
+KEY_ID_BYTES = 4
+TEST = 1
+
+# form, key id, incarnation, slice, counter, price, snapshot, day, flags
+_HEAD = struct.Struct(">B4s8s16sIqqIB")
+
+
+class BadTicket(ValueError):
+    """Not a ticket of ours: another form, an unknown key or a wrong signature."""
+
+
+@dataclass(frozen=True, slots=True)
+class Ticket:
+    """
+    What travels with a bid.
+
+    Args:
+        slice: 16 random bytes of the slice the price was taken from.
+        counter: The bid's place in its slice, from 0.
+        price: The bid, and so its hold, in nanos per impression.
+        snapshot: The learner's seq the price was made from (the epoch).
+        day: Proleptic ordinal of the local day the slice belongs to.
+    """
+
+    line_item: str
+    source: str
+    slice: bytes
+    counter: int
+    price: int
+    snapshot: int
+    day: int
+    incarnation: bytes
+    test: bool = False
+
+    @property
+    def bid(self) -> bytes:
+        """The bid id: slice + counter, so no two bids share one."""
+        return ((int.from_bytes(self.slice) + self.counter) % 2**128).to_bytes(16)
+
+    @property
+    def ref(self) -> str:
+        """The bid id as 22 characters, for values."""
+        return ref_of(self.bid)
+
+
+def ref_of(bid: bytes) -> str:
+    """The 22 characters that name a bid."""
+    return _text(bid)
+
+
+def bid_of(ref: str) -> bytes:
+    """
+    The bid a ref names.
+
+    Raises:
+        BadTicket: Not 22 characters of ours.
+    """
+    bid = _bytes(ref) if len(ref) == 22 else b""
+    if len(bid) != 16 or _text(bid) != ref:
+        raise BadTicket("not a ref")
+    return bid
+
+
+class TicketKeys:
+    """The first key signs, all verify; a key is known by the first bytes of its hash."""
+
+    def __init__(self, secrets: list[bytes]) -> None:
+        self._keys = {_key_id(secret): secret[:64] for secret in secrets}
+        self._signing = _key_id(secrets[0])
+
+    def sign(self, ticket: Ticket) -> str:
+        """The text of a ticket."""
+        head = _HEAD.pack(
+            FORM,
+            self._signing,
+            ticket.incarnation,
+            ticket.slice,
+            ticket.counter,
+            ticket.price,
+            ticket.snapshot,
+            ticket.day,
+            TEST if ticket.test else 0,
+        )
+        body = head + _packed(ticket.line_item) + _packed(ticket.source)
+        return _text(body + _mac(self._keys[self._signing], body))
+
+    def verify(self, text: str) -> Ticket:
+        """
+        Read a ticket of ours.
+
+        Raises:
+            BadTicket: Anything else.
+        """
+        raw = _bytes(text) if len(text) <= TEXT_MAX else b""
+        if len(raw) < _HEAD.size + 2 + MAC_BYTES or raw[0] != FORM:
+            raise BadTicket("not a ticket")
+        body, mac = raw[:-MAC_BYTES], raw[-MAC_BYTES:]
+        key = self._keys.get(body[1 : 1 + KEY_ID_BYTES])
+        if key is None or not hmac.compare_digest(mac, _mac(key, body)):
+            raise BadTicket("not signed by us")
+        return _unpacked(body)
+
+
+def _unpacked(body: bytes) -> Ticket:
+    _, _, incarnation, slice_id, counter, price, snapshot, day, flags = _HEAD.unpack_from(body)
+    line_item, source = _texts(body[_HEAD.size :])
+    return Ticket(
+        line_item, source, slice_id, counter, price, snapshot, day, incarnation, bool(flags & TEST)
+    )
+
+
+def _texts(packed: bytes) -> tuple[str, str]:
+    end = 1 + packed[0]
+    return packed[1:end].decode("ascii"), packed[end + 1 : end + 1 + packed[end]].decode("ascii")
+
+
+def _packed(text: str) -> bytes:
+    raw = text.encode("ascii")
+    return bytes([len(raw)]) + raw
+
+
+def _mac(key: bytes, body: bytes) -> bytes:
+    return blake2b(body, key=key, digest_size=MAC_BYTES).digest()
+
+
+def _key_id(secret: bytes) -> bytes:
+    return sha256(secret).digest()[:KEY_ID_BYTES]
+
+
+def _text(raw: bytes) -> str:
+    return base64.urlsafe_b64encode(raw).rstrip(b"=").decode("ascii")
+
+
+def _bytes(text: str) -> bytes:
+    try:
+        return base64.b64decode(text.encode("ascii") + b"=" * (-len(text) % 4), b"-_", validate=True)
+    except (binascii.Error, UnicodeEncodeError) as error:
+        raise BadTicket("not of our alphabet") from error

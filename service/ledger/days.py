@@ -1,0 +1,27 @@
+"""Local days: where a daily budget begins and ends, in the line item's own zone."""
+
+from __future__ import annotations
+
+from datetime import date, datetime, timedelta
+from zoneinfo import ZoneInfo
+
+
+def local_day(wall_ms: int, zone: str) -> str:
+    """The date at this moment in the zone, such as 2026-12-01."""
+    return _local(wall_ms, zone).date().isoformat()
+
+
+def left_ms(wall_ms: int, zone: str) -> int:
+    """Milliseconds until the local day ends; 23 and 25 hour days are what they are."""
+    tomorrow = _local(wall_ms, zone).date() + timedelta(days=1)
+    return _begins_ms(tomorrow, zone) - wall_ms
+
+
+def _local(wall_ms: int, zone: str) -> datetime:
+    return datetime.fromtimestamp(wall_ms / 1000, ZoneInfo(zone))
+
+
+def _begins_ms(day: date, zone: str) -> int:
+    """The first moment of a day; a midnight that the clocks jump over maps to the jump."""
+    midnight = datetime(day.year, day.month, day.day, tzinfo=ZoneInfo(zone))
+    return int(midnight.timestamp() * 1000)

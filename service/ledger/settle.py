@@ -1,0 +1,210 @@
+"""What a won, lost, void or billed outcome does to money: the table of the promise, as code.
+
+Every function is pure. A bid has the slots `result` (won, lost, void) and `billed`;
+the first content of a slot stands, other content is a conflict kept beside it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
+from service.ledger.entries import Body, Entry, conflict
+from service.ledger.late import late_cost
+
+Slots = Mapping[str, tuple[str, Body]]  # slot -> (kind, body) of what is already there
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """One reported event of one bid; prices in nanos per impression."""
+
+    kind: str
+    bid: bytes
+    counter: int
+    hold: int
+    source: str
+    price: int | None = None
+    to_win: int | None = None
+    why: str | None = None
+    at: str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Place:
+    """Where an outcome lands; `slice` is None when it is unknown or of another incarnation."""
+
+    account: Account
+    day: Day | None
+    slice: Slice | None
+    slots: Slots
+    spend_on: str
+
+    @property
+    def alive(self) -> bool:
+        """Whether the bid still has its hold."""
+        return self.slice is not None and self.slice.alive
+
+
+@dataclass(frozen=True, slots=True)
+class Verdict:
+    """The receipt's status, the money that moves, the entry to append, rounds newly counted."""
+
+    status: str
+    movement: Movement = NOTHING
+    entry: Entry | None = None
+    rounds: int = 0
+
+
+def settle(outcome: Outcome, place: Place) -> Verdict:
+    """Decide one outcome; the caller holds the lock of the line item's balance."""
+    if outcome.kind == "billed":
+        return _billed(outcome, place)
+    taken = place.slots.get("result")
+    if taken is None:
+        return _first_result(outcome, place)
+    if any(_same(place.slots[slot], outcome) for slot in ("result", "void") if slot in place.slots):
+        return Verdict("duplicate")
+    if outcome.kind == "void" and _unbilled_win(taken, place):
+        return _void_of_win(outcome, place, taken[1])
+    return _contradiction(outcome, place, pays=outcome.kind == "won" and taken[0] != "won")
+
+
+def _first_result(outcome: Outcome, place: Place) -> Verdict:
+    billed_before = "billed" in place.slots
+    if billed_before and outcome.kind != "won":
+        return _contradiction(outcome, place, pays=False)
+    movement = NOTHING
+    if not billed_before:
+        movement = _win(outcome, place) if outcome.kind == "won" else _release(outcome, place)
+    rounds = _rounds(outcome, place.slice)
+    body = _said(outcome) | {"round": rounds, "late": not place.alive, "owed": movement.owed}
+    entry = Entry(outcome.kind, body, outcome.bid, "result", movement.cost)
+    return Verdict("recorded" if place.alive else "late", movement, entry, rounds)
+
+
+def _win(outcome: Outcome, place: Place) -> Movement:
+    price = outcome.price or 0
+    if place.spend_on == "billed":
+        if not place.alive:
+            return NOTHING
+        owed = min(price, outcome.hold)
+        return Movement(held=owed - outcome.hold, remaining=-outcome.hold, owed=owed)
+    return _pay(outcome, place)
+
+
+def _pay(outcome: Outcome, place: Place) -> Movement:
+    """Turn a hold into spend; what the price asks beyond the bid is disputed."""
+    price = outcome.price or 0
+    cost, excess = min(price, outcome.hold), max(0, price - outcome.hold)
+    if not place.alive:
+        return late_cost(place.account, place.day, cost) + Movement(disputed=excess)
+    return Movement(
+        spent=cost,
+        held=-outcome.hold,
+        remaining=-outcome.hold,
+        day_spent=cost,
+        disputed=excess,
+    )
+
+
+def _release(outcome: Outcome, place: Place) -> Movement:
+    if not place.alive:
+        return NOTHING
+    return Movement(held=-outcome.hold, remaining=-outcome.hold)
+
+
+def _billed(outcome: Outcome, place: Place) -> Verdict:
+    taken, result = place.slots.get("billed"), place.slots.get("result")
+    if taken is not None:
+        if _same(taken, outcome):
+            return Verdict("duplicate")
+        return _contradiction(outcome, place, pays=False)
+    if result is None:
+        movement = _pay(outcome, place)
+    elif result[0] != "won" or "void" in place.slots:
+        return _contradiction(outcome, place, pays=True, slot="billed")
+    elif place.spend_on == "won":
+        movement = NOTHING
+    else:
+        movement = _billing(outcome, place, result[1])
+    status = "recorded" if place.alive or result is not None else "late"
+    body = _said(outcome) | {"late": not place.alive, "round": 0}
+    return Verdict(status, movement, Entry("billed", body, outcome.bid, "billed", movement.cost))
+
+
+def _billing(outcome: Outcome, place: Place, win: Body) -> Movement:
+    """Billing after a win that owes: pay what was set aside, an excess goes the late way."""
+    price, owed = outcome.price or 0, int(win["owed"])
+    if place.slice is None or place.slice.owed < owed or owed == 0:
+        owed = 0
+    inside = min(price, owed)
+    beyond = max(0, min(price, outcome.hold) - owed)
+    paid = Movement(spent=inside, held=-owed, owed=-owed, day_spent=inside)
+    disputed = Movement(disputed=max(0, price - outcome.hold))
+    if not beyond:
+        return paid + disputed
+    account = place.account.moved(paid)
+    day = place.day.moved(paid) if place.day else None
+    return paid + disputed + late_cost(account, day, beyond)
+
+
+def _unbilled_win(taken: tuple[str, Body], place: Place) -> bool:
+    unbilled = "billed" not in place.slots and "void" not in place.slots
+    return place.spend_on == "billed" and taken[0] == "won" and unbilled
+
+
+def _void_of_win(outcome: Outcome, place: Place, win: Body) -> Verdict:
+    owed = int(win["owed"])
+    has_owed = place.slice is not None and place.slice.owed >= owed > 0
+    movement = Movement(held=-owed, owed=-owed) if has_owed else NOTHING
+    body = _said(outcome) | {"round": 0, "late": not place.alive}
+    return Verdict("recorded", movement, Entry("void", body, outcome.bid, "void"))
+
+
+def _contradiction(
+    outcome: Outcome, place: Place, *, pays: bool, slot: str | None = None
+) -> Verdict:
+    """Keep what contradicts beside what stands; a win we had not booked may cost money."""
+    entry = conflict(outcome.bid, _said(outcome))
+    if entry.slot in place.slots:
+        return Verdict("conflict")
+    movement = NOTHING
+    if pays and not _paid_by_conflict(place.slots):
+        price = outcome.price or 0
+        movement = late_cost(place.account, place.day, min(price, outcome.hold))
+        movement += Movement(disputed=max(0, price - outcome.hold))
+    kept = Entry(
+        "conflict", {**entry.body, "pays": movement.cost}, outcome.bid, entry.slot, movement.cost
+    )
+    return Verdict("conflict", movement, kept)
+
+
+def _paid_by_conflict(slots: Slots) -> bool:
+    """Whether an earlier contradiction of this bid was already paid: one bid costs once."""
+    return any(kind == "conflict" and body.get("pays") for kind, body in slots.values())
+
+
+def _rounds(outcome: Outcome, slice_: Slice | None) -> int:
+    """One round unless a tick has reported this bid already."""
+    return int(slice_ is not None and outcome.counter >= slice_.ticked)
+
+
+def _said(outcome: Outcome) -> dict[str, object]:
+    return {
+        "said": outcome.kind,
+        "price": outcome.price,
+        "to_win": outcome.to_win,
+        "bid": outcome.hold,
+        "counter": outcome.counter,
+        "source": outcome.source,
+        "why": outcome.why,
+        "at": outcome.at,
+    }
+
+
+def _same(taken: tuple[str, Body], outcome: Outcome) -> bool:
+    kind, body = taken
+    content = (body["said"], body["price"], body["to_win"])
+    return content == (outcome.kind, outcome.price, outcome.to_win)

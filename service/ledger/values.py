@@ -1,0 +1,107 @@
+"""What a reported value does: it moves no money, it becomes a lesson, once."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from service.ledger.entries import Entry, conflict
+from service.ledger.settle import Slots
+
+CEILINGS_MAX = 100  # A value of more than so many ceilings is an error of unit, not a value.
+
+
+@dataclass(frozen=True, slots=True)
+class Value:
+    """One reported value of one bid, in nanos."""
+
+    bid: bytes
+    event_id: str
+    amount: int
+    corrects: str | None = None
+    at: str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class ValueVerdict:
+    """The receipt's status (and code when refused) and what to append."""
+
+    status: str
+    entry: Entry | None = None
+    code: str | None = None
+    clipped: bool = False
+
+
+def judge(value: Value, slots: Slots, *, ceiling: int, arrival: str) -> ValueVerdict:
+    """
+    Decide one value; the caller holds the lock of the line item's balance.
+
+    Args:
+        slots: Everything known of this bid.
+        ceiling: Largest value of one event in nanos; what lies above is taught at it.
+        arrival: "once" or "accrues".
+    """
+    if value.amount > CEILINGS_MAX * ceiling:
+        return ValueVerdict("refused", code="value_out_of_range")
+    result = slots.get("result")
+    if result is None and "billed" not in slots:
+        return _park(value, slots)
+    if result is not None and result[0] != "won":
+        return ValueVerdict("refused", code="not_won")
+    return _teach(value, slots, ceiling, arrival)
+
+
+def unparked(slots: Slots, bid: bytes) -> list[Entry]:
+    """The lessons that waited for this bid's win."""
+    parked = [body for kind, body in slots.values() if kind == "parked"]
+    return [
+        Entry("value", {**body, "was": None}, bid, f"value:{body['event_id']}") for body in parked
+    ]
+
+
+def _park(value: Value, slots: Slots) -> ValueVerdict:
+    if value.corrects is not None:
+        return ValueVerdict("refused", code="no_such_event")
+    slot = f"parked:{value.event_id}"
+    if slot in slots:
+        return _again(value, slots, slot)
+    return ValueVerdict("parked", Entry("parked", _said(value), value.bid, slot))
+
+
+def _teach(value: Value, slots: Slots, ceiling: int, arrival: str) -> ValueVerdict:
+    slot = f"value:{value.event_id}"
+    if slot in slots:
+        return _again(value, slots, slot)
+    was: int | None = None
+    events = {body["event_id"]: body for kind, body in slots.values() if kind == "value"}
+    corrected = {body["corrects"] for body in events.values()}
+    if value.corrects is not None:
+        if value.corrects not in events:
+            return ValueVerdict("refused", code="no_such_event")
+        if value.corrects in corrected:
+            return _beside(value, slots)
+        was = int(events[value.corrects]["amount"])
+    elif arrival == "once" and events:
+        return _beside(value, slots)
+    entry = Entry("value", _said(value) | {"was": was}, value.bid, slot)
+    return ValueVerdict("recorded", entry, clipped=value.amount > ceiling)
+
+
+def _again(value: Value, slots: Slots, slot: str) -> ValueVerdict:
+    body = slots[slot][1]
+    if (body["amount"], body["corrects"]) == (value.amount, value.corrects):
+        return ValueVerdict("duplicate")
+    return _beside(value, slots)
+
+
+def _beside(value: Value, slots: Slots) -> ValueVerdict:
+    entry = conflict(value.bid, _said(value))
+    return ValueVerdict("conflict", None if entry.slot in slots else entry)
+
+
+def _said(value: Value) -> dict[str, object]:
+    return {
+        "event_id": value.event_id,
+        "amount": value.amount,
+        "corrects": value.corrects,
+        "at": value.at,
+    }

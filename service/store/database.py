@@ -1,0 +1,154 @@
+"""Connections and transactions, apart from every query: how we begin, retry and give up."""
+
+from __future__ import annotations
+
+import random
+import threading
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from typing import NewType, TypeVar
+
+from sqlalchemy import Connection, create_engine, event, text
+from sqlalchemy.exc import DBAPIError, OperationalError
+from sqlalchemy.exc import TimeoutError as PoolTimeout
+
+from service.errors import StoreAway, Unsafe
+
+# The same object to Python, two types to mypy: a reader cannot call a writer.
+Reading = NewType("Reading", Connection)
+Writing = NewType("Writing", Connection)
+
+T = TypeVar("T")
+TRIES_MAX = 5
+RETRY_STATES = {"40001", "40P01"}
+
+
+class Database:
+    """
+    One SQLite file or one PostgreSQL database.
+
+    Args:
+        url: A SQLAlchemy URL, sqlite:///… or postgresql+psycopg://….
+        pool_size: Connections kept.
+        statement_timeout_ms: The longest one statement may take.
+        wall_ms: The wall clock in milliseconds; data for people, never an order.
+    """
+
+    def __init__(
+        self,
+        url: str,
+        *,
+        pool_size: int = 8,
+        statement_timeout_ms: int = 5000,
+        wall_ms: Callable[[], int] = lambda: time.time_ns() // 1_000_000,
+    ) -> None:
+        self.wall_ms = wall_ms
+        self.is_sqlite = url.startswith("sqlite")
+        self._writer = threading.Lock()
+        if self.is_sqlite:
+            self.engine = create_engine(url, pool_size=pool_size, connect_args={"timeout": 5})
+            event.listen(self.engine, "connect", _prepare_sqlite)
+            event.listen(self.engine, "begin", _begin_sqlite)
+        else:
+            options = f"-c statement_timeout={statement_timeout_ms} -c lock_timeout=2000"
+            options += " -c idle_in_transaction_session_timeout=10000 -c synchronous_commit=on"
+            arguments = {"options": options, "connect_timeout": 3}
+            self.engine = create_engine(
+                url, pool_size=pool_size, max_overflow=0, pool_timeout=2, connect_args=arguments
+            )
+
+    def write(self, work: Callable[[Writing], T]) -> T:
+        """
+        Run `work` in one durable transaction; it is repeated whole after a deadlock.
+
+        Raises:
+            StoreAway: No answer; perhaps it happened, perhaps not.
+        """
+        for attempt in range(TRIES_MAX):
+            try:
+                with self._transaction() as connection:
+                    return work(Writing(connection))
+            except (DBAPIError, PoolTimeout) as error:
+                _raise_unless_retried(error, attempt)
+            time.sleep(random.SystemRandom().uniform(0.002, 0.02) * (attempt + 1))
+        raise StoreAway("the database kept refusing")
+
+    def read(self, work: Callable[[Reading], T]) -> T:
+        """
+        Run `work` on one consistent view, changing nothing.
+
+        Raises:
+            StoreAway: No answer.
+        """
+        try:
+            with self.engine.connect() as connection:
+                connection = connection.execution_options(reading=True)
+                if not self.is_sqlite:
+                    connection = connection.execution_options(isolation_level="REPEATABLE READ")
+                with connection.begin():
+                    return work(Reading(connection))
+        except (OperationalError, PoolTimeout) as error:
+            raise StoreAway("the database did not answer") from error
+
+    def check_safe(self) -> None:
+        """
+        Refuse a database that may forget what it has acknowledged.
+
+        Raises:
+            Unsafe: fsync or WAL is off.
+        """
+        if self.is_sqlite:
+            mode, level = self.read(_sqlite_settings)
+            if (mode, level) != ("wal", 2):
+                raise Unsafe("SQLite must run with journal_mode=wal and synchronous=FULL.")
+        elif self.read(lambda c: c.execute(text("SHOW fsync")).scalar_one()) != "on":
+            raise Unsafe("PostgreSQL runs with fsync=off and may forget money; turn it on.")
+
+    def close(self) -> None:
+        """Close every pooled connection."""
+        self.engine.dispose()
+
+    @contextmanager
+    def _transaction(self) -> Iterator[Connection]:
+        if not self.is_sqlite:
+            with self.engine.begin() as connection:
+                yield connection
+            return
+        # SQLite lets one writer in at a time and is unfair about whom; our lock is fairer.
+        with self._writer, self.engine.begin() as connection:
+            yield connection
+
+
+def locking(connection: Connection) -> str:
+    """The row lock of PostgreSQL; SQLite took its lock when the transaction began."""
+    return "" if connection.dialect.name == "sqlite" else " FOR NO KEY UPDATE"
+
+
+def _prepare_sqlite(connection: object, _record: object) -> None:
+    cursor = connection.cursor()  # type: ignore[attr-defined]
+    connection.isolation_level = None  # type: ignore[attr-defined]
+    for pragma in ("journal_mode=WAL", "synchronous=FULL", "foreign_keys=ON", "busy_timeout=5000"):
+        cursor.execute(f"PRAGMA {pragma}")
+    cursor.close()
+
+
+def _begin_sqlite(connection: Connection) -> None:
+    reading = connection.get_execution_options().get("reading")
+    connection.exec_driver_sql("BEGIN" if reading else "BEGIN IMMEDIATE")
+
+
+def _sqlite_settings(connection: Reading) -> tuple[str, int]:
+    mode = connection.execute(text("PRAGMA journal_mode")).scalar_one()
+    return str(mode), int(connection.execute(text("PRAGMA synchronous")).scalar_one())
+
+
+def _raise_unless_retried(error: Exception, attempt: int) -> None:
+    state = getattr(getattr(error, "orig", None), "sqlstate", None)
+    if state in RETRY_STATES and attempt + 1 < TRIES_MAX:
+        return
+    if isinstance(error, OperationalError | PoolTimeout) or state in RETRY_STATES:
+        raise StoreAway("the database did not answer") from error
+    if isinstance(error, DBAPIError) and error.connection_invalidated:
+        raise StoreAway("the connection broke") from error
+    raise error

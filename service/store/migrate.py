@@ -1,0 +1,70 @@
+"""Bringing a database to the schema of this code, apart from using it."""
+
+from __future__ import annotations
+
+import secrets
+from pathlib import Path
+
+from alembic import command
+from alembic.config import Config
+from alembic.runtime.migration import MigrationContext
+from alembic.script import ScriptDirectory
+from sqlalchemy import Connection, text
+
+import service
+from service.errors import Unsafe
+from service.store.database import Database
+
+ADVISORY_LOCK = 0x6B65656C  # So that two deployments cannot migrate at once.
+
+
+def migrate(url: str) -> None:
+    """Bring the database at `url` to the newest schema; harmless when it already is."""
+    database = Database(url)
+    try:
+        with database.engine.begin() as connection:
+            upgrade(connection)
+    finally:
+        database.close()
+
+
+def upgrade(connection: Connection) -> None:
+    """Run the missing migrations inside the caller's transaction."""
+    if connection.dialect.name == "postgresql":
+        connection.execute(text("SELECT pg_advisory_xact_lock(:lock)"), {"lock": ADVISORY_LOCK})
+    config = _config()
+    config.attributes["connection"] = connection
+    command.upgrade(config, "head")
+    for name, value in (("incarnation", secrets.token_hex(8)), ("ticket_key", secrets.token_hex(32))):
+        connection.execute(
+            text("INSERT INTO fact (name, value) VALUES (:name, :value) ON CONFLICT DO NOTHING"),
+            {"name": name, "value": value},
+        )
+
+
+def require_current(database: Database) -> None:
+    """
+    Refuse a database of another schema than this code's.
+
+    Raises:
+        Unsafe: Older or newer.
+    """
+    with database.engine.connect() as connection:
+        found = MigrationContext.configure(connection).get_current_revision()
+    head = ScriptDirectory.from_config(_config()).get_current_head()
+    if found != head:
+        raise Unsafe(f"The database is at schema {found}, this code at {head}: run bidkeel migrate.")
+
+
+def is_empty(database: Database) -> bool:
+    """Whether nothing was ever migrated here."""
+    with database.engine.connect() as connection:
+        return MigrationContext.configure(connection).get_current_revision() is None
+
+
+def _config() -> Config:
+    package = Path(service.__file__).parent
+    places = [package / "migrations", package.parent / "migrations"]
+    config = Config()
+    config.set_main_option("script_location", str(next(p for p in places if (p / "env.py").exists())))
+    return config
