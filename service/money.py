@@ -12,6 +12,8 @@ from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Context, Decima
 NANOS_PER_UNIT = 10**9
 NANOS_PER_CPM = 10**6
 NANOS_MAX = 2**62  # Half of int64, so that the sum of two amounts never overflows a column.
+PRICE_NANOS_MAX = 10**15  # A CPM of 10**9: up to here a JSON number keeps all six decimals.
+DIGITS_MAX = 60
 
 DOWN, UP, HALF_EVEN = ROUND_FLOOR, ROUND_CEILING, ROUND_HALF_EVEN
 
@@ -45,11 +47,19 @@ def price(cpm: object, rounding: str | None = None) -> int:
     Raises:
         NotMoney: Not a plain decimal, or out of range.
     """
-    return _scaled(cpm, NANOS_PER_CPM, rounding)
+    scaled = _scaled(cpm, NANOS_PER_CPM, rounding)
+    if abs(scaled) > PRICE_NANOS_MAX:
+        raise NotMoney("out of range")
+    return scaled
 
 
 def nanos_rounded(amount: object, rounding: str) -> int:
-    """Read an amount that may be finer than a nano, such as a value out of a feed."""
+    """
+    Read an amount that may be finer than a nano, such as a value out of a feed.
+
+    Raises:
+        NotMoney: Not a plain decimal, or out of range.
+    """
     return _scaled(amount, NANOS_PER_UNIT, rounding)
 
 
@@ -62,7 +72,7 @@ def nanos_text(amount_nanos: int) -> str:
 
 
 def cpm_number(price_nanos: int) -> float:
-    """Write a price per impression as a CPM number of at most six decimals."""
+    """Write a price per impression as a CPM number, exact up to PRICE_NANOS_MAX."""
     return price_nanos / NANOS_PER_CPM
 
 
@@ -80,9 +90,7 @@ def _decimal(amount: object) -> Decimal:
     if isinstance(amount, bool):
         raise NotMoney("a truth value is no amount")
     if isinstance(amount, Decimal):
-        if not amount.is_finite() or abs(amount.adjusted()) > 30:
-            raise NotMoney("not a plain decimal")
-        return amount
+        return _plain(amount)
     if isinstance(amount, int):
         if abs(amount) > NANOS_MAX:
             raise NotMoney("out of range")
@@ -90,3 +98,11 @@ def _decimal(amount: object) -> Decimal:
     if isinstance(amount, str) and _TEXT.fullmatch(amount):
         return Decimal(amount)
     raise NotMoney("not a plain decimal")
+
+
+def _plain(amount: Decimal) -> Decimal:
+    if not amount.is_finite() or abs(amount.adjusted()) > 30:
+        raise NotMoney("not a plain decimal")
+    if len(amount.as_tuple().digits) > DIGITS_MAX:
+        raise NotMoney("more digits than an amount can have")
+    return amount
