@@ -1,0 +1,106 @@
+"""The advertiser's side over HTTP: line items made, states read; apart from the exchange's."""
+
+from __future__ import annotations
+
+import asyncio
+import json
+import time
+from collections.abc import Mapping
+from dataclasses import dataclass
+from decimal import Decimal
+from typing import Any
+
+import httpx
+
+from service import money
+from service.errors import BidkeelError
+
+IN_FLIGHT = 16
+TIMEOUT_S = 30.0
+TAUGHT_S_MAX = 60.0
+_POLL_S = 0.2
+
+
+class Unanswered(BidkeelError):
+    """The service answered in a way the caller cannot go on with."""
+
+
+@dataclass(frozen=True, slots=True)
+class Learnt:
+    """What a line item's state says at the end; money in nanos, values per impression."""
+
+    budget: int
+    spent: int
+    known: int
+    mean: int
+    low: int
+    high: int
+
+
+def client(address: str, key: str) -> httpx.AsyncClient:
+    """An HTTP client with as many connections as the exchange has bids in flight."""
+    return httpx.AsyncClient(
+        base_url=address,
+        headers={"Authorization": f"Bearer {key}"},
+        timeout=TIMEOUT_S,
+        limits=httpx.Limits(max_connections=IN_FLIGHT, max_keepalive_connections=IN_FLIGHT),
+    )
+
+
+def read(response: httpx.Response, status: int = 200) -> dict[str, Any]:
+    """
+    Read a JSON answer, its numbers as exact decimals.
+
+    Raises:
+        Unanswered: The answer has another status.
+    """
+    if response.status_code != status:
+        path = response.request.url.path
+        raise Unanswered(f"{path} answered {response.status_code}: {response.text[:300]}")
+    answer: dict[str, Any] = json.loads(response.content, parse_float=Decimal)
+    return answer
+
+
+async def create(caller: httpx.AsyncClient, body: Mapping[str, object]) -> None:
+    """
+    Make a line item.
+
+    Raises:
+        Unanswered: It was refused.
+    """
+    read(await caller.post("/v1/line-items", json=dict(body)), 201)
+
+
+async def learnt(caller: httpx.AsyncClient, line_item: str, wins: int) -> Learnt:
+    """
+    Wait until the values of all wins are taught, then say what was learnt.
+
+    Args:
+        caller: With a key that may read.
+        line_item: Its id.
+        wins: How many wins must have become known.
+
+    Raises:
+        Unanswered: They were not taught within `TAUGHT_S_MAX` seconds.
+    """
+    end = time.monotonic() + TAUGHT_S_MAX
+    while True:
+        seen = from_state(read(await caller.get(f"/v1/line-items/{line_item}/state")))
+        if seen.known == wins:
+            return seen
+        if time.monotonic() > end:
+            raise Unanswered(f"{line_item} knows {seen.known} of {wins} wins, and no more came.")
+        await asyncio.sleep(_POLL_S)
+
+
+def from_state(state: Mapping[str, Any]) -> Learnt:
+    """Read the few members of a state that the tables show."""
+    learner, books = state["learner"], state["money"]
+    return Learnt(
+        budget=money.nanos(books["budget"]),
+        spent=money.nanos(books["spent"]),
+        known=int(learner["known"]),
+        mean=money.nanos(learner["mean"]),
+        low=money.nanos(learner["low"]),
+        high=money.nanos(learner["high"]),
+    )
