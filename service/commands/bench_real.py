@@ -81,7 +81,7 @@ def run(arguments: argparse.Namespace) -> int:
         2 when the package with the auctions is missing.
     """
     try:
-        lots = timber.read()[: arguments.limit]
+        lots = timber.read(timber.DISTRIBUTION)[: arguments.limit]
     except timber.DataMissing as missing:
         Console(stderr=True).print(str(missing), highlight=False)
         return 2

@@ -49,9 +49,12 @@ class Lot:
     bids: tuple[float, ...]
 
 
-def read(distribution: str = DISTRIBUTION) -> list[Lot]:
+def read(distribution: str) -> list[Lot]:
     """
     Read the auctions in the order of the file.
+
+    Args:
+        distribution: The installed package that carries the file.
 
     Raises:
         DataMissing: The package or its file is not there.

@@ -7,11 +7,12 @@ import pytest
 
 from service import money
 from service.commands import garden
+from service.commands.exchange import Auction
 
 COUNT = 100_000
 
 
-def of_one(line_item: str, seed: int = 1) -> list[garden.Auction]:
+def of_one(line_item: str, seed: int = 1) -> list[Auction]:
     """The auctions of one line item out of a large market."""
     auctions = garden.market(garden.line_items(), COUNT, seed)
     return [auction for auction in auctions if auction.line_item == line_item]

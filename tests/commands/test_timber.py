@@ -24,7 +24,7 @@ FAULTS = [
 
 @pytest.fixture(name="lots", scope="module")
 def _lots() -> list[Lot]:
-    return timber.read()
+    return timber.read(timber.DISTRIBUTION)
 
 
 def test_the_package_carries_the_auctions_that_it_is_known_for(lots: list[Lot]) -> None:
@@ -67,7 +67,7 @@ def test_every_bidder_may_be_us() -> None:
     """Over many equal lots each place is chosen about as often."""
     played, _ = timber.auctions([Lot(1.0, (1.0, 2.0, 3.0))] * 3000, "timber", 5)
     chosen = Counter(auction.value for auction in played)
-    assert sorted(chosen) == [1_000_000, 2_000_000, 3_000_000]
+    assert set(chosen) == {1_000_000, 2_000_000, 3_000_000}
     assert min(chosen.values()) > 850
 
 
