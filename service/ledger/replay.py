@@ -1,0 +1,151 @@
+"""A second, deliberately simple opinion on money: the stream replayed from its facts.
+
+It shares no code with the rules it checks; it reads what was said (kind, price, bid,
+slice) and never the movements that were booked.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+
+@dataclass(slots=True)
+class Replayed:
+    """Balances in nanos as the stream tells them; slices map to [amount, left, owed, closed]."""
+
+    spent: int = 0
+    held: int = 0
+    unfunded: int = 0
+    disputed: int = 0
+    budget: int = 0
+    slices: dict[str, list[int]] = field(default_factory=dict)
+    owed: dict[str, int] = field(default_factory=dict)
+    results: dict[str, str] = field(default_factory=dict)
+    billed: set[str] = field(default_factory=set)
+    paid: set[str] = field(default_factory=set)
+
+
+def replay(
+    budget: int, spend_on: str, entries: list[tuple[str, str, Mapping[str, Any]]]
+) -> Replayed:
+    """
+    Replay (kind, bid hex, body) in order of seq.
+
+    Args:
+        budget: What the line item was created with, in nanos.
+        spend_on: "won" or "billed".
+    """
+    books = Replayed(budget=budget)
+    for kind, bid, body in entries:
+        _apply(books, spend_on, kind, bid, body)
+    books.held = sum(left + owed for _, left, owed, _ in books.slices.values())
+    return books
+
+
+def _apply(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[str, Any]) -> None:
+    if kind == "lease":
+        books.slices[body["slice"]] = [body["amount"], body["amount"], 0, 0]
+    elif kind == "retire":
+        books.slices[body["slice"]][1] -= body["freed"]
+    elif kind == "close":
+        _close(books, body)
+    elif kind == "edit":
+        _edit(books, body["budget"])
+    elif kind in ("won", "lost", "void", "billed"):
+        _outcome(books, spend_on, kind, bid, body)
+    elif kind == "conflict" and "said" in body:
+        _conflict(books, bid, body)
+
+
+def _close(books: Replayed, body: Mapping[str, Any]) -> None:
+    row = books.slices[body["slice"]]
+    if body["released"] or not body["unbilled"]:
+        row[1], row[3] = row[1] - body["released"], 1
+    row[2] -= body["unbilled"]
+
+
+def _edit(books: Replayed, budget: int) -> None:
+    held = sum(left + owed for _, left, owed, _ in books.slices.values())
+    funded = min(books.unfunded, max(0, budget - books.spent - held))
+    books.spent, books.unfunded = books.spent + funded, books.unfunded - funded
+    books.budget = budget
+
+
+def _outcome(
+    books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[str, Any]
+) -> None:
+    row = books.slices.get(body["slice"] or "")
+    hold, price = body["bid"], body["price"] or 0
+    if kind == "billed":
+        _bill(books, spend_on, bid, row, hold, price)
+        return
+    if kind == "void" and books.results.get(bid) == "won":
+        _drop_owed(books, bid, row)
+        return
+    books.results[bid] = kind
+    if bid in books.billed:
+        return
+    if row is not None and not row[3]:
+        row[1] -= hold
+        if kind == "won" and spend_on == "billed":
+            books.owed[bid] = min(price, hold)
+            row[2] += books.owed[bid]
+        elif kind == "won":
+            _pay(books, min(price, hold), price - hold, funded=True)
+    elif kind == "won" and spend_on == "won":
+        _pay(books, min(price, hold), price - hold, funded=_fits(books, min(price, hold)))
+
+
+def _bill(
+    books: Replayed, spend_on: str, bid: str, row: list[int] | None, hold: int, price: int
+) -> None:
+    books.billed.add(bid)
+    if bid not in books.results:
+        if row is not None and not row[3]:
+            row[1] -= hold
+            _pay(books, min(price, hold), price - hold, funded=True)
+        else:
+            _pay(books, min(price, hold), price - hold, funded=_fits(books, min(price, hold)))
+        return
+    if spend_on == "won":
+        return
+    owed = books.owed.get(bid, 0)
+    if row is None or row[2] < owed:
+        owed = 0
+    if row is not None:
+        row[2] -= owed
+    inside = min(price, owed)
+    _pay(books, inside, price - hold, funded=True)
+    beyond = max(0, min(price, hold) - owed)
+    if beyond:
+        _pay(books, beyond, 0, funded=_fits(books, beyond))
+
+
+def _conflict(books: Replayed, bid: str, body: Mapping[str, Any]) -> None:
+    """A contradiction costs money once: a win after a loss, or billing of what was not won."""
+    if not body["pays"]:
+        return
+    hold, price = body["bid"], body["price"] or 0
+    books.paid.add(bid)
+    _pay(books, min(price, hold), price - hold, funded=_fits(books, min(price, hold)))
+
+
+def _drop_owed(books: Replayed, bid: str, row: list[int] | None) -> None:
+    owed = books.owed.pop(bid, 0)
+    if row is not None and row[2] >= owed:
+        row[2] -= owed
+
+
+def _fits(books: Replayed, cost: int) -> bool:
+    held = sum(left + owed for _, left, owed, _ in books.slices.values())
+    return books.spent + held + cost <= max(books.budget, books.spent + held)
+
+
+def _pay(books: Replayed, cost: int, excess: int, *, funded: bool) -> None:
+    if funded:
+        books.spent += cost
+    else:
+        books.unfunded += cost
+    books.disputed += max(0, excess)

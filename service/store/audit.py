@@ -1,0 +1,108 @@
+"""V1 to V7: does the database still say what was promised? Each check is one statement.
+
+V8 (no unfunded cost while every delay stays within grace) is reported as a figure, since
+only the feed knows its own delays.
+"""
+
+from __future__ import annotations
+
+import json
+from dataclasses import dataclass
+
+from sqlalchemy import text
+
+from service.ledger.replay import replay
+from service.store.database import Reading
+
+CHECKS = {
+    "V1 spent + held <= budget": (
+        "SELECT line_item, spent + held - budget AS off FROM balance WHERE spent + held > budget"
+    ),
+    "V1 spent + held <= the day's budget": (
+        "SELECT line_item, spent + held - budget AS off FROM local_day WHERE spent + held > budget"
+    ),
+    "V2 held = sum of what slices hold": (
+        "SELECT b.line_item, b.held - coalesce(s.total, 0) AS off FROM balance b LEFT JOIN"
+        " (SELECT line_item, sum(remaining + owed) AS total FROM slice GROUP BY line_item) s"
+        " ON s.line_item = b.line_item WHERE b.held <> coalesce(s.total, 0)"
+    ),
+    "V2 the day's held = sum of what its slices hold": (
+        "SELECT d.line_item, d.held - coalesce(s.total, 0) AS off FROM local_day d LEFT JOIN"
+        " (SELECT line_item, day, sum(remaining + owed) AS total FROM slice"
+        " GROUP BY line_item, day) s ON s.line_item = d.line_item AND s.day = d.day"
+        " WHERE d.held <> coalesce(s.total, 0)"
+    ),
+    "V3 accepted costs = spent + unfunded + disputed": (
+        "SELECT b.line_item, b.spent + b.unfunded + b.disputed - coalesce(s.total, 0) AS off"
+        " FROM balance b LEFT JOIN (SELECT line_item, sum(cost) AS total FROM stream"
+        " GROUP BY line_item) s ON s.line_item = b.line_item"
+        " WHERE b.spent + b.unfunded + b.disputed <> coalesce(s.total, 0)"
+    ),
+    "V4 no slot booked twice": (
+        "SELECT line_item, count(*) AS off FROM stream WHERE slot IS NOT NULL"
+        " GROUP BY line_item, bid, slot HAVING count(*) > 1"
+    ),
+    "V5 seq gapless": (
+        "SELECT b.line_item, b.seq - count(s.seq) AS off FROM balance b LEFT JOIN stream s"
+        " ON s.line_item = b.line_item GROUP BY b.line_item, b.seq"
+        " HAVING count(s.seq) <> b.seq OR coalesce(max(s.seq), 0) <> b.seq"
+    ),
+    "V6 0 <= remaining and remaining + owed <= amount": (
+        "SELECT line_item, remaining AS off FROM slice"
+        " WHERE remaining < 0 OR owed < 0 OR remaining + owed > amount"
+    ),
+}
+
+
+@dataclass(frozen=True, slots=True)
+class Finding:
+    """One broken promise of one line item and by how much (nanos or rows) it is off."""
+
+    check: str
+    line_item: str
+    off: int
+
+
+def audit(connection: Reading) -> list[Finding]:
+    """Every difference found; an empty list means that V1 to V7 hold."""
+    found = [
+        Finding(name, row.line_item, int(row.off))
+        for name, statement in CHECKS.items()
+        for row in connection.execute(text(statement))
+    ]
+    return found + [f for name in _line_items(connection) for f in _replayed(connection, name)]
+
+
+def unfunded(connection: Reading) -> int:
+    """V8's figure: the sum of costs that found no free money, in nanos."""
+    return int(connection.execute(text("SELECT coalesce(sum(unfunded), 0) FROM balance")).scalar_one())
+
+
+def _line_items(connection: Reading) -> list[str]:
+    return [row.line_item for row in connection.execute(text("SELECT line_item FROM balance"))]
+
+
+def _replayed(connection: Reading, line_item: str) -> list[Finding]:
+    row = connection.execute(
+        text(
+            "SELECT b.budget, b.spent, b.held, b.unfunded, b.disputed, i.config FROM balance b"
+            " JOIN line_item i ON i.id = b.line_item WHERE b.line_item = :id"
+        ),
+        {"id": line_item},
+    ).one()
+    entries = connection.execute(
+        text("SELECT kind, bid, body FROM stream WHERE line_item = :id ORDER BY seq"),
+        {"id": line_item},
+    )
+    config = json.loads(row.config)
+    first = config["first_budget"]
+    books = replay(
+        first,
+        config["spend_on"],
+        [(e.kind, bytes(e.bid).hex() if e.bid else "", json.loads(e.body)) for e in entries],
+    )
+    return [
+        Finding(f"V7 replayed {name} equals {name}", line_item, getattr(row, name) - told)
+        for name in ("spent", "held", "unfunded", "disputed")
+        if (told := getattr(books, name)) != getattr(row, name)
+    ]

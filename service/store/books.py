@@ -1,0 +1,217 @@
+"""Working copies of the money rows that one transaction has locked, written back by adding.
+
+Pure ledger code decides on the copies; the guarded updates here are the net beneath it.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterable
+from dataclasses import replace
+from typing import Any
+
+from sqlalchemy import bindparam, text
+
+from service.errors import BrokenPromise
+from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
+from service.ledger.entries import Entry
+from service.store.clock import now_ms
+from service.store.database import Writing, locking
+
+SLICE_COLUMNS = "id, line_item, worker, day, amount, remaining, owed, ticked, counted, state"
+
+
+class Books:
+    """
+    The balances of some line items, locked in sorted order, with their days and slices.
+
+    Args:
+        connection: A transaction that has touched neither money nor the stream yet.
+        wall_ms: The wall clock, for the stamps of entries.
+    """
+
+    def __init__(self, connection: Writing, line_items: Iterable[str], wall_ms: int) -> None:
+        self._connection = connection
+        self._wall_ms = wall_ms
+        self.service_ms = 0
+        self.accounts = self._lock(sorted(set(line_items)))
+        # Read after the lock, or a waiter would stamp an older moment than its forerunner.
+        self.service_ms = now_ms(connection)
+        self.days: dict[tuple[str, str], Day] = {}
+        self.slices: dict[bytes, Slice] = {}
+        self._accounts_before = dict(self.accounts)
+        self._days_before: dict[tuple[str, str], Day] = {}
+        self._slices_before: dict[bytes, Slice] = {}
+        self._rows: list[dict[str, Any]] = []
+
+    def load_slices(self, ids: Iterable[bytes]) -> None:
+        """Read these slices and the days they belong to."""
+        statement = text(f"SELECT {SLICE_COLUMNS} FROM slice WHERE id IN :ids")
+        statement = statement.bindparams(bindparam("ids", expanding=True))
+        for row in self._connection.execute(statement, {"ids": sorted(set(ids))}):
+            self._keep_slice(Slice(**{**row._mapping, "id": bytes(row.id)}))
+        self.load_days({(s.line_item, s.day) for s in self.slices.values()})
+
+    def load_days(self, wanted: Iterable[tuple[str, str]]) -> None:
+        """Read these days where they exist."""
+        statement = text(
+            "SELECT line_item, day, budget, target, spent, held, over_spent FROM local_day"
+            " WHERE line_item = :line_item AND day = :day"
+        )
+        for line_item, day in sorted(set(wanted) - set(self.days)):
+            row = self._connection.execute(statement, {"line_item": line_item, "day": day})
+            found = row.one_or_none()
+            if found is not None:
+                self.days[line_item, day] = self._days_before[line_item, day] = Day(**found._mapping)
+
+    def open_day(self, line_item: str, day: str, budget: int) -> Day:
+        """The day's row, made with this budget when it is the first use of the day."""
+        self.load_days([(line_item, day)])
+        if (line_item, day) not in self.days:
+            fresh = Day(line_item, day, budget, budget, 0, 0, 0)
+            self._connection.execute(
+                text(
+                    "INSERT INTO local_day (line_item, day, budget, target, spent, held, over_spent)"
+                    " VALUES (:line_item, :day, :budget, :budget, 0, 0, 0)"
+                ),
+                {"line_item": line_item, "day": day, "budget": budget},
+            )
+            self.days[line_item, day] = self._days_before[line_item, day] = fresh
+        return self.days[line_item, day]
+
+    def new_slice(self, fresh: Slice, times_ms: dict[str, int]) -> None:
+        """Insert a slice; its money is counted as held by the movement posted with it."""
+        columns = f"{SLICE_COLUMNS}, leased_ms, expires_ms, close_ms, billing_close_ms"
+        values = ", ".join(f":{name}" for name in columns.split(", "))
+        row = {name: getattr(fresh, name) for name in SLICE_COLUMNS.split(", ")} | times_ms
+        self._connection.execute(text(f"INSERT INTO slice ({columns}) VALUES ({values})"), row)
+        self._keep_slice(fresh)
+
+    def post(
+        self,
+        line_item: str,
+        entry: Entry | None,
+        movement: Movement = NOTHING,
+        *,
+        day: str | None = None,
+        slice_id: bytes | None = None,
+    ) -> None:
+        """Apply a movement to the working copies and append the entry behind it."""
+        self.accounts[line_item] = self.accounts[line_item].moved(movement)
+        if day is not None and (line_item, day) in self.days:
+            self.days[line_item, day] = self.days[line_item, day].moved(movement)
+        if slice_id is not None and slice_id in self.slices:
+            self.slices[slice_id] = self.slices[slice_id].moved(movement)
+        if entry is not None:
+            self._append(line_item, entry)
+
+    def replace_slice(self, changed: Slice) -> None:
+        """Set what is not money: state, ticked and counted."""
+        self.slices[changed.id] = changed
+
+    def replace_account(self, changed: Account) -> None:
+        """Set a balance after a budget edit."""
+        self.accounts[changed.line_item] = changed
+
+    def replace_day(self, changed: Day) -> None:
+        """Set a day after an edit of the daily budget."""
+        self.days[changed.line_item, changed.day] = changed
+
+    def newly_unfunded(self, line_item: str) -> bool:
+        """Whether this transaction booked cost that found no free money."""
+        before = self._accounts_before[line_item]
+        return self.accounts[line_item].unfunded > before.unfunded
+
+    def save(self) -> None:
+        """
+        Write everything back.
+
+        Raises:
+            BrokenPromise: A guard said no although the rules had allowed it.
+        """
+        for name, account in self.accounts.items():
+            if account != self._accounts_before[name]:
+                self._save_account(self._accounts_before[name], account)
+        for key, day in self.days.items():
+            if day != self._days_before[key]:
+                self._save_day(self._days_before[key], day)
+        for slice_id, changed in self.slices.items():
+            if changed != self._slices_before[slice_id]:
+                self._save_slice(self._slices_before[slice_id], changed)
+        if self._rows:
+            self._connection.execute(_INSERT_ENTRY, self._rows)
+
+    def _lock(self, line_items: list[str]) -> dict[str, Account]:
+        statement = text(
+            "SELECT line_item, budget, target, spent, held, unfunded, disputed, seq, at_ms"
+            f" FROM balance WHERE line_item IN :ids ORDER BY line_item{locking(self._connection)}"
+        ).bindparams(bindparam("ids", expanding=True))
+        rows = self._connection.execute(statement, {"ids": line_items})
+        return {row.line_item: Account(**row._mapping) for row in rows}
+
+    def _keep_slice(self, found: Slice) -> None:
+        self.slices[found.id] = self._slices_before[found.id] = found
+
+    def _append(self, line_item: str, entry: Entry) -> None:
+        account = self.accounts[line_item]
+        at_ms = max(account.at_ms, self._wall_ms)
+        self.accounts[line_item] = replace(account, seq=account.seq + 1, at_ms=at_ms)
+        self._rows.append(
+            {
+                "line_item": line_item,
+                "seq": account.seq + 1,
+                "kind": entry.kind,
+                "at_ms": at_ms,
+                "service_ms": self.service_ms,
+                "bid": entry.bid,
+                "slot": entry.slot,
+                "cost": entry.cost,
+                "body": json.dumps(entry.body, separators=(",", ":")),
+            }
+        )
+
+    def _save_account(self, before: Account, after: Account) -> None:
+        self._guarded(_UPDATE_BALANCE, "balance", _differences(before, after, _BALANCE_SUMS))
+
+    def _save_day(self, before: Day, after: Day) -> None:
+        self._guarded(_UPDATE_DAY, "day", _differences(before, after, _DAY_SUMS))
+
+    def _save_slice(self, before: Slice, after: Slice) -> None:
+        row = _differences(before, after, ("remaining", "owed"))
+        self._guarded(_UPDATE_SLICE, "slice", row | {"was": before.state})
+
+    def _guarded(self, statement: Any, what: str, row: dict[str, Any]) -> None:
+        if self._connection.execute(statement, row).rowcount != 1:
+            raise BrokenPromise(f"the guard of a {what} refused a write")
+
+
+_BALANCE_SUMS = ("spent", "held", "unfunded", "disputed", "seq")
+_DAY_SUMS = ("spent", "held", "over_spent")
+
+
+def _differences(before: Any, after: Any, sums: tuple[str, ...]) -> dict[str, Any]:
+    """The row to write: sums as what to add, everything else as it is now."""
+    row = {name: getattr(after, name) for name in after.__slots__}
+    return row | {name: row[name] - getattr(before, name) for name in sums}
+
+
+_UPDATE_BALANCE = text(
+    "UPDATE balance SET budget = :budget, target = :target, spent = spent + :spent,"
+    " held = held + :held, unfunded = unfunded + :unfunded, disputed = disputed + :disputed,"
+    " seq = seq + :seq, at_ms = :at_ms"
+    " WHERE line_item = :line_item AND spent + :spent + held + :held <= :budget"
+)
+_UPDATE_DAY = text(
+    "UPDATE local_day SET budget = :budget, target = :target, spent = spent + :spent,"
+    " held = held + :held, over_spent = over_spent + :over_spent"
+    " WHERE line_item = :line_item AND day = :day AND spent + :spent + held + :held <= :budget"
+)
+_UPDATE_SLICE = text(
+    "UPDATE slice SET remaining = remaining + :remaining, owed = owed + :owed,"
+    " ticked = :ticked, counted = :counted, state = :state"
+    " WHERE id = :id AND state = :was AND remaining + :remaining >= 0 AND owed + :owed >= 0"
+)
+_INSERT_ENTRY = text(
+    "INSERT INTO stream (line_item, seq, kind, at_ms, service_ms, bid, slot, cost, body)"
+    " VALUES (:line_item, :seq, :kind, :at_ms, :service_ms, :bid, :slot, :cost, :body)"
+)

@@ -1,0 +1,43 @@
+"""The decision log and the quarantine: written in bulk, read by people."""
+
+from __future__ import annotations
+
+import json
+from typing import Any
+
+from sqlalchemy import text
+
+from service.store.database import Writing
+
+Decision = dict[str, Any]
+
+
+def log(connection: Writing, decisions: list[Decision]) -> None:
+    """Append decisions; losing some in a crash loses no money, since tickets carry it."""
+    connection.execute(
+        text(
+            "INSERT INTO decision (at_ms, line_item, bid, request_id, source, floor, price,"
+            " reason, set_by, snapshot, test) VALUES (:at_ms, :line_item, :bid, :request_id,"
+            " :source, :floor, :price, :reason, :set_by, :snapshot, :test)"
+        ),
+        decisions,
+    )
+
+
+def prune(connection: Writing, before_ms: int) -> int:
+    """Forget decisions made before this wall clock moment."""
+    statement = text("DELETE FROM decision WHERE at_ms < :before")
+    return connection.execute(statement, {"before": before_ms}).rowcount
+
+
+def quarantine(
+    connection: Writing, line_item: str, error: str, body: dict[str, Any], wall_ms: int
+) -> None:
+    """Set an outcome aside that could not be booked alone, with what went wrong."""
+    connection.execute(
+        text(
+            "INSERT INTO quarantine (at_ms, line_item, error, body)"
+            " VALUES (:now, :line_item, :error, :body)"
+        ),
+        {"now": wall_ms, "line_item": line_item, "error": error, "body": json.dumps(body)},
+    )

@@ -1,0 +1,47 @@
+"""Who did what, when and why: rows are added, never changed."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from typing import Any
+
+from sqlalchemy import text
+
+from service.store.database import Reading, Writing
+
+
+def note(
+    connection: Writing,
+    *,
+    wall_ms: int,
+    actor: str,
+    action: str,
+    line_item: str,
+    reason: str,
+    detail: Mapping[str, Any],
+) -> None:
+    """Add one row; `detail` holds before and after."""
+    connection.execute(
+        text(
+            "INSERT INTO journal (at_ms, actor, action, line_item, reason, detail)"
+            " VALUES (:at_ms, :actor, :action, :line_item, :reason, :detail)"
+        ),
+        {
+            "at_ms": wall_ms,
+            "actor": actor,
+            "action": action,
+            "line_item": line_item,
+            "reason": reason,
+            "detail": json.dumps(detail, sort_keys=True),
+        },
+    )
+
+
+def newest(connection: Reading, line_item: str, limit: int) -> list[dict[str, Any]]:
+    """The newest rows of one line item, newest first."""
+    rows = connection.execute(
+        text("SELECT * FROM journal WHERE line_item = :id ORDER BY number DESC LIMIT :n"),
+        {"id": line_item, "n": limit},
+    )
+    return [{**row._mapping, "detail": json.loads(row.detail)} for row in rows]

@@ -1,0 +1,258 @@
+"""Slices in the database: leased, retired, ticked and closed; each in one transaction."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterable
+from dataclasses import dataclass, replace
+from typing import Any
+
+from sqlalchemy import bindparam, text
+
+from service.ledger.accounts import NO_LIMIT, Account, Day, Movement, Slice
+from service.ledger.days import left_ms, local_day
+from service.ledger.entries import Entry
+from service.ledger.leasing import Wish, slice_amount
+from service.store.books import Books
+from service.store.database import Database, Writing
+from service.store.workers import live
+
+
+@dataclass(frozen=True, slots=True)
+class LeaseRequest:
+    """A worker's wish for one line item, under a slice id it made itself."""
+
+    line_item: str
+    slice_id: bytes
+    forecast: int
+    before: int
+
+
+@dataclass(frozen=True, slots=True)
+class Leased:
+    """A slice this worker may use for `lease_ms` from before it asked; amount in nanos."""
+
+    line_item: str
+    slice_id: bytes
+    amount: int
+    day: str
+    lease_ms: int
+
+
+@dataclass(frozen=True, slots=True)
+class Denied:
+    """No money to lease, and the pass that says so."""
+
+    line_item: str
+    reason: str
+
+
+@dataclass(frozen=True, slots=True)
+class Report:
+    """What a worker has priced from one slice so far: bids issued, passes under the floor."""
+
+    line_item: str
+    slice_id: bytes
+    bids: int
+    under_floor: int
+    issued: int = 0
+
+
+def lease(
+    database: Database, worker: str, requests: list[LeaseRequest], lease_s: int
+) -> list[Leased | Denied]:
+    """Lease for several line items at once; money is held, durably, before this returns."""
+
+    def work(connection: Writing) -> list[Leased | Denied]:
+        wall_ms = database.wall_ms()
+        books = Books(connection, [r.line_item for r in requests], wall_ms)
+        configs = read_configs(connection, list(books.accounts))
+        lenders = _Lenders(connection, worker, lease_s * 1000)
+        answers = [
+            lenders.lend(books, configs[r.line_item], r, wall_ms)
+            for r in requests
+            if r.line_item in configs
+        ]
+        books.save()
+        return answers
+
+    return database.write(work)
+
+
+class _Lenders:
+    """One leasing transaction: who lives, and what the dead still hold."""
+
+    def __init__(self, connection: Writing, worker: str, lease_ms: int) -> None:
+        self._connection = connection
+        self._worker = worker
+        self._lease_ms = lease_ms
+        self._live = set(live(connection)) | {worker}
+
+    def lend(
+        self, books: Books, config: dict[str, Any], request: LeaseRequest, wall_ms: int
+    ) -> Leased | Denied:
+        """Hold money for one slice, or say which limit leaves none."""
+        account = books.accounts[request.line_item]
+        zone = config["flight"]["time_zone"]
+        day = books.open_day(
+            account.line_item, local_day(wall_ms, zone), config["daily_budget"] or NO_LIMIT
+        )
+        amount = self._amount(account, day, config, request)
+        lease_ms = _lease_ms(config, wall_ms, self._lease_ms)
+        if amount <= 0 or lease_ms <= 0:
+            return Denied(account.line_item, _why_none(account, day))
+        fresh = Slice(
+            request.slice_id, account.line_item, self._worker, day.day, amount, amount, 0, 0, 0, "open"
+        )
+        books.new_slice(fresh, _times_ms(config, books.service_ms, lease_ms))
+        entry = Entry("lease", {"slice": fresh.id.hex(), "amount": amount, "day": day.day})
+        books.post(account.line_item, entry, Movement(held=amount), day=day.day)
+        return Leased(account.line_item, fresh.id, amount, day.day, lease_ms)
+
+    def _amount(
+        self, account: Account, day: Day, config: dict[str, Any], request: LeaseRequest
+    ) -> int:
+        wish = Wish(config["bid_cap"], request.forecast, request.before)
+        orphaned = self._orphaned(account.line_item)
+        free = min(account.free, day.free)
+        return slice_amount(wish, free, account.budget, len(self._live), orphaned)
+
+    def _orphaned(self, line_item: str) -> int:
+        statement = text(
+            "SELECT coalesce(sum(remaining), 0) FROM slice WHERE line_item = :id"
+            " AND state = 'open' AND worker NOT IN :live"
+        ).bindparams(bindparam("live", expanding=True))
+        row = {"id": line_item, "live": sorted(self._live)}
+        return int(self._connection.execute(statement, row).scalar_one())
+
+
+def retire(database: Database, reports: list[Report]) -> None:
+    """Free what these slices never issued; doing it twice frees nothing the second time."""
+
+    def work(connection: Writing) -> None:
+        books = Books(connection, [r.line_item for r in reports], database.wall_ms())
+        books.load_slices(r.slice_id for r in reports)
+        for report in reports:
+            _retire(books, report)
+        books.save()
+
+    database.write(work)
+
+
+def tick(database: Database, reports: list[Report]) -> None:
+    """Report what was priced so far, so that silent bids and passes count as rounds."""
+
+    def work(connection: Writing) -> None:
+        books = Books(connection, [r.line_item for r in reports], database.wall_ms())
+        books.load_slices(r.slice_id for r in reports)
+        for report in reports:
+            found = books.slices.get(report.slice_id)
+            rounds = _count(books, found, report.bids) if found else 0
+            if rounds or report.under_floor:
+                body = {"rounds": rounds, "under_floor": report.under_floor}
+                books.post(report.line_item, Entry("tick", body))
+        books.save()
+
+    database.write(work)
+
+
+def close_due(database: Database) -> int:
+    """Close the slices whose grace is over and drop what nobody billed; returns how many."""
+
+    def work(connection: Writing) -> int:
+        due = connection.execute(_DUE).all()
+        books = Books(connection, {row.line_item for row in due}, database.wall_ms())
+        configs = read_configs(connection, list(books.accounts))
+        # Read again under the lock: an outcome may have come in between.
+        rows = {bytes(row.id): row for row in connection.execute(_DUE)}
+        books.load_slices(rows)
+        for slice_id, row in rows.items():
+            if row.line_item in books.accounts and not configs[row.line_item]["strict"]:
+                _close(books, books.slices[slice_id], bool(row.bids), bool(row.bills))
+        books.save()
+        return len(rows)
+
+    if not database.read(lambda connection: connection.execute(_DUE).first()):
+        return 0
+    return database.write(work)
+
+
+def read_configs(connection: Writing, line_items: Iterable[str]) -> dict[str, dict[str, Any]]:
+    """The configuration of these line items."""
+    statement = text("SELECT id, config FROM line_item WHERE id IN :ids")
+    statement = statement.bindparams(bindparam("ids", expanding=True))
+    rows = connection.execute(statement, {"ids": list(line_items)})
+    return {row.id: json.loads(row.config) for row in rows}
+
+
+_DUE = text(
+    "SELECT s.id, s.line_item,"
+    " CASE WHEN s.state <> 'closed' AND s.close_ms <= c.now_ms THEN 1 ELSE 0 END AS bids,"
+    " CASE WHEN s.owed > 0 AND s.billing_close_ms <= c.now_ms THEN 1 ELSE 0 END AS bills"
+    " FROM slice s, service_clock c"
+    " WHERE (s.state <> 'closed' AND s.close_ms <= c.now_ms)"
+    " OR (s.owed > 0 AND s.billing_close_ms <= c.now_ms) LIMIT 500"
+)
+
+
+def _retire(books: Books, report: Report) -> None:
+    found = books.slices.get(report.slice_id)
+    if found is None or found.state != "open":
+        return
+    rounds = _count(books, found, report.bids)
+    books.replace_slice(replace(books.slices[found.id], state="retired"))
+    freed = found.amount - report.issued
+    body = {
+        "slice": found.id.hex(),
+        "freed": freed,
+        "rounds": rounds,
+        "under_floor": report.under_floor,
+    }
+    movement = Movement(held=-freed, remaining=-freed)
+    books.post(
+        found.line_item, Entry("retire", body), movement, day=found.day, slice_id=found.id
+    )
+
+
+def _count(books: Books, found: Slice, bids: int) -> int:
+    """Rounds that a report adds: bids it covers that no outcome has counted before."""
+    rounds = max(0, bids - found.counted)
+    changed = replace(found, ticked=max(bids, found.ticked), counted=found.counted + rounds)
+    books.replace_slice(changed)
+    return rounds
+
+
+def _close(books: Books, found: Slice, bids: bool, bills: bool) -> None:
+    released = found.remaining if bids else 0
+    unbilled = found.owed if bills else 0
+    if bids:
+        books.replace_slice(replace(found, state="closed"))
+    body = {"slice": found.id.hex(), "released": released, "unbilled": unbilled}
+    movement = Movement(held=-released - unbilled, remaining=-released, owed=-unbilled)
+    entry = Entry("close", body)
+    books.post(found.line_item, entry, movement, day=found.day, slice_id=found.id)
+
+
+def _lease_ms(config: dict[str, Any], wall_ms: int, lease_ms: int) -> int:
+    """A slice outlives neither its local day nor the flight."""
+    flight = config["flight"]
+    lease_ms = min(lease_ms, left_ms(wall_ms, flight["time_zone"]))
+    return lease_ms if flight["ends_ms"] is None else min(lease_ms, flight["ends_ms"] - wall_ms)
+
+
+def _times_ms(config: dict[str, Any], now: int, lease_ms: int) -> dict[str, int]:
+    expires = now + lease_ms
+    return {
+        "leased_ms": now,
+        "expires_ms": expires,
+        "close_ms": expires + config["grace_ms"],
+        "billing_close_ms": expires + config["grace_ms"] + config["billing_grace_ms"],
+    }
+
+
+def _why_none(account: Account, day: Day) -> str:
+    if account.target <= account.spent:
+        return "budget_spent"
+    if day.target <= day.spent + day.over_spent:
+        return "day_spent"
+    return "budget_held"
