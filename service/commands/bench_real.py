@@ -9,13 +9,13 @@ the learnt value is the mean over what was won, and the gap to the mean over all
 from __future__ import annotations
 
 import argparse
-import asyncio
 import tempfile
 from collections import Counter
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
+import uvloop
 from rich.console import Console
 
 from service import money
@@ -89,7 +89,7 @@ def run(arguments: argparse.Namespace) -> int:
         with ServerProcess(Path(directory)) as server, report.progress() as bar:
             task = bar.add_task("Real auctions over HTTP", total=len(lots))
             played = play(server, lots, arguments.seed, lambda count: bar.advance(task, count))
-            outcome = asyncio.run(played)
+            outcome = uvloop.run(played)
     _show(outcome, arguments.json)
     return 0 if outcome.kept else 1
 
@@ -108,12 +108,12 @@ async def play(
     """
     auctions, dropped = timber.auctions(lots, LINE_ITEM, seed)
     advance(dropped.total())
-    async with caller.client(server.address, server.key) as client:
-        await caller.create(client, BODY)
-        exchange = Exchange(client)
+    async with server.wire() as wire:
+        await caller.create(wire, BODY)
+        exchange = Exchange(wire)
         await exchange.play(auctions, advance)
         book = exchange.books.setdefault(LINE_ITEM, Book())
-        learnt = await caller.learnt(client, LINE_ITEM, book.wins)
+        learnt = await caller.learnt(wire, LINE_ITEM, book.wins)
     return Outcome(auctions, dropped, book, learnt)
 
 

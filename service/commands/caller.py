@@ -8,17 +8,15 @@ import time
 from collections.abc import Mapping
 from dataclasses import dataclass
 from decimal import Decimal
-from typing import Any
-
-import httpx
+from typing import Any, Protocol
 
 from service import money
+from service.commands.wire import Reply
 from service.errors import BidkeelError
 
-IN_FLIGHT = 16
-TIMEOUT_S = 30.0
 TAUGHT_S_MAX = 60.0
 _POLL_S = 0.2
+_SAID_BYTES_MAX = 300
 
 
 class Unanswered(BidkeelError):
@@ -37,46 +35,48 @@ class Learnt:
     high: int
 
 
-def client(address: str, key: str) -> httpx.AsyncClient:
-    """An HTTP client with as many connections as the exchange has bids in flight."""
-    return httpx.AsyncClient(
-        base_url=address,
-        headers={"Authorization": f"Bearer {key}"},
-        timeout=TIMEOUT_S,
-        limits=httpx.Limits(max_connections=IN_FLIGHT, max_keepalive_connections=IN_FLIGHT),
-    )
+class Service(Protocol):
+    """What answers over HTTP: a wire to a server, or something small in a test."""
+
+    async def get(self, path: str) -> Reply:
+        """Fetch a path."""
+        ...
+
+    async def post(self, path: str, body: Mapping[str, object]) -> Reply:
+        """Send a JSON body to a path."""
+        ...
 
 
-def read(response: httpx.Response, status: int = 200) -> dict[str, Any]:
+def read(reply: Reply, status: int = 200) -> dict[str, Any]:
     """
     Read a JSON answer, its numbers as exact decimals.
 
     Raises:
         Unanswered: The answer has another status.
     """
-    if response.status_code != status:
-        path = response.request.url.path
-        raise Unanswered(f"{path} answered {response.status_code}: {response.text[:300]}")
-    answer: dict[str, Any] = json.loads(response.content, parse_float=Decimal)
+    if reply.status != status:
+        said = reply.content[:_SAID_BYTES_MAX].decode(errors="replace")
+        raise Unanswered(f"The service answered {reply.status}: {said}")
+    answer: dict[str, Any] = json.loads(reply.content, parse_float=Decimal)
     return answer
 
 
-async def create(caller: httpx.AsyncClient, body: Mapping[str, object]) -> None:
+async def create(service: Service, body: Mapping[str, object]) -> None:
     """
     Make a line item.
 
     Raises:
         Unanswered: It was refused.
     """
-    read(await caller.post("/v1/line-items", json=dict(body)), 201)
+    read(await service.post("/v1/line-items", body), 201)
 
 
-async def learnt(caller: httpx.AsyncClient, line_item: str, wins: int) -> Learnt:
+async def learnt(service: Service, line_item: str, wins: int) -> Learnt:
     """
     Wait until the values of all wins are taught, then say what was learnt.
 
     Args:
-        caller: With a key that may read.
+        service: With a key that may read.
         line_item: Its id.
         wins: How many wins must have become known.
 
@@ -85,7 +85,7 @@ async def learnt(caller: httpx.AsyncClient, line_item: str, wins: int) -> Learnt
     """
     end = time.monotonic() + TAUGHT_S_MAX
     while True:
-        seen = from_state(read(await caller.get(f"/v1/line-items/{line_item}/state")))
+        seen = from_state(read(await service.get(f"/v1/line-items/{line_item}/state")))
         if seen.known == wins:
             return seen
         if time.monotonic() > end:

@@ -11,11 +11,10 @@ from collections import Counter
 from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, field
 
-import httpx
-
 from service import money
-from service.commands.caller import IN_FLIGHT, Unanswered, read
+from service.commands.caller import Service, Unanswered, read
 
+IN_FLIGHT = 16
 GROUP_ROWS = 100
 _SETTLED = frozenset({"recorded", "late", "parked", "duplicate"})
 
@@ -80,11 +79,11 @@ class Exchange:
     Plays auctions against the service, several bids in flight, outcomes in groups.
 
     Args:
-        client: An HTTP client with the service's address and key.
+        service: Where to ask for bids and report outcomes.
     """
 
-    def __init__(self, client: httpx.AsyncClient) -> None:
-        self.client = client
+    def __init__(self, service: Service) -> None:
+        self.service = service
         self.books: dict[str, Book] = {}
         self._waiting: list[Row] = []
 
@@ -100,7 +99,7 @@ class Exchange:
 
         Raises:
             Unanswered: The service refused a bid or an outcome.
-            httpx.TransportError: The service cannot be reached.
+            OSError: The service cannot be reached.
         """
         queue = iter(auctions)
         try:
@@ -159,7 +158,7 @@ class Exchange:
         book.clipped += bool(result.get("clipped"))
 
     async def _post(self, path: str, body: dict[str, object]) -> dict[str, object]:
-        return read(await self.client.post(path, json=body))
+        return read(await self.service.post(path, body))
 
 
 def _outcomes_of_a_win(auction: Auction, answer: dict[str, object]) -> Iterator[Row]:

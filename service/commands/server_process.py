@@ -10,19 +10,20 @@ import subprocess
 import sys
 import time
 from collections.abc import Mapping
+from http.client import HTTPConnection, HTTPException
 from pathlib import Path
 from types import TracebackType
 from typing import Self
 
-import httpx
-
 import service
+from service.commands.wire import Wire
 from service.errors import BidkeelError
 
 HOST = "127.0.0.1"
 READY_S_MAX = 60.0
 STOP_S_MAX = 30.0
 _POLL_S = 0.05
+_ASK_S_MAX = 5.0
 _TAIL_CHARACTERS = 2000
 
 
@@ -59,6 +60,10 @@ class ServerProcess:
         trace: TracebackType | None,
     ) -> None:
         self.stop()
+
+    def wire(self) -> Wire:
+        """A client for this server, with the admin key."""
+        return Wire(HOST, self.port, self.key)
 
     @property
     def log_path(self) -> Path:
@@ -136,7 +141,7 @@ class ServerProcess:
         while time.monotonic() < end:
             if self.child is None or self.child.poll() is not None:
                 raise ServerFailed(f"The server ended while starting. {self.tail()}")
-            if is_ready(self.address):
+            if is_ready(self.port):
                 return
             time.sleep(_POLL_S)
         raise ServerFailed(f"The server was not ready in {READY_S_MAX:.0f} s. {self.tail()}")
@@ -147,12 +152,16 @@ def command(*words: str) -> list[str]:
     return [sys.executable, "-m", "service", *words]
 
 
-def is_ready(address: str) -> bool:
-    """Whether the server at the address answers that it is ready."""
+def is_ready(port: int) -> bool:
+    """Whether a server on the port of this machine answers that it is ready."""
+    connection = HTTPConnection(HOST, port, timeout=_ASK_S_MAX)
     try:
-        return httpx.get(f"{address}/health/ready", timeout=5.0).status_code == 200
-    except httpx.TransportError:
+        connection.request("GET", "/health/ready")
+        return connection.getresponse().status == 200
+    except (OSError, HTTPException):
         return False
+    finally:
+        connection.close()
 
 
 def free_port() -> int:
