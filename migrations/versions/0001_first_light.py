@@ -141,7 +141,7 @@ CREATE TABLE decision (
     number NUMBERED,
     at_ms BIG NOT NULL,
     line_item TEXT NOT NULL,
-    bid BYTES,
+    ref TEXT,
     request_id TEXT,
     source TEXT NOT NULL,
     floor BIG NOT NULL,

@@ -27,17 +27,14 @@ class Replayed:
     paid: set[str] = field(default_factory=set)
 
 
-def replay(
-    budget: int, spend_on: str, entries: list[tuple[str, str, Mapping[str, Any]]]
-) -> Replayed:
+def replay(spend_on: str, entries: list[tuple[str, str, Mapping[str, Any]]]) -> Replayed:
     """
     Replay (kind, bid hex, body) in order of seq.
 
     Args:
-        budget: What the line item was created with, in nanos.
         spend_on: "won" or "billed".
     """
-    books = Replayed(budget=budget)
+    books = Replayed()
     for kind, bid, body in entries:
         _apply(books, spend_on, kind, bid, body)
     books.held = sum(left + owed for _, left, owed, _ in books.slices.values())
@@ -51,6 +48,8 @@ def _apply(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[st
         books.slices[body["slice"]][1] -= body["freed"]
     elif kind == "close":
         _close(books, body)
+    elif kind == "create":
+        books.budget = body["budget"]
     elif kind == "edit":
         _edit(books, body["budget"])
     elif kind in ("won", "lost", "void", "billed"):

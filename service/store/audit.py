@@ -85,7 +85,7 @@ def _line_items(connection: Reading) -> list[str]:
 def _replayed(connection: Reading, line_item: str) -> list[Finding]:
     row = connection.execute(
         text(
-            "SELECT b.budget, b.spent, b.held, b.unfunded, b.disputed, i.config FROM balance b"
+            "SELECT b.spent, b.held, b.unfunded, b.disputed, i.config FROM balance b"
             " JOIN line_item i ON i.id = b.line_item WHERE b.line_item = :id"
         ),
         {"id": line_item},
@@ -95,9 +95,7 @@ def _replayed(connection: Reading, line_item: str) -> list[Finding]:
         {"id": line_item},
     )
     config = json.loads(row.config)
-    first = config["first_budget"]
     books = replay(
-        first,
         config["spend_on"],
         [(e.kind, bytes(e.bid).hex() if e.bid else "", json.loads(e.body)) for e in entries],
     )

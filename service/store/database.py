@@ -13,7 +13,7 @@ from sqlalchemy import Connection, create_engine, event, text
 from sqlalchemy.exc import DBAPIError, OperationalError
 from sqlalchemy.exc import TimeoutError as PoolTimeout
 
-from service.errors import StoreAway, Unsafe
+from service.errors import BrokenPromise, StoreAway, Unsafe
 
 # The same object to Python, two types to mypy: a reader cannot call a writer.
 Reading = NewType("Reading", Connection)
@@ -151,4 +151,4 @@ def _raise_unless_retried(error: Exception, attempt: int) -> None:
         raise StoreAway("the database did not answer") from error
     if isinstance(error, DBAPIError) and error.connection_invalidated:
         raise StoreAway("the connection broke") from error
-    raise error
+    raise BrokenPromise("the database refused a row") from error

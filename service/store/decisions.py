@@ -16,8 +16,8 @@ def log(connection: Writing, decisions: list[Decision]) -> None:
     """Append decisions; losing some in a crash loses no money, since tickets carry it."""
     connection.execute(
         text(
-            "INSERT INTO decision (at_ms, line_item, bid, request_id, source, floor, price,"
-            " reason, set_by, snapshot, test) VALUES (:at_ms, :line_item, :bid, :request_id,"
+            "INSERT INTO decision (at_ms, line_item, ref, request_id, source, floor, price,"
+            " reason, set_by, snapshot, test) VALUES (:at_ms, :line_item, :ref, :request_id,"
             " :source, :floor, :price, :reason, :set_by, :snapshot, :test)"
         ),
         decisions,

@@ -55,6 +55,9 @@ def create(connection: Writing, config: Mapping[str, Any], wall_ms: int) -> None
         ),
         {"id": config["id"], "budget": config["budget"], "now": wall_ms},
     )
+    books = Books(connection, [config["id"]], wall_ms)
+    books.post(config["id"], Entry("create", {"budget": config["budget"]}))
+    books.save()
 
 
 def change(

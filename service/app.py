@@ -1,0 +1,140 @@
+"""The application: owns what lives long, starts it in order and closes it in reverse."""
+
+from __future__ import annotations
+
+import asyncio
+import logging
+import os
+import secrets
+import signal
+from collections.abc import AsyncIterator
+from contextlib import asynccontextmanager
+from dataclasses import dataclass
+
+from fastapi import FastAPI
+
+from service.api.routes import install
+from service.bidding import Bidder, Clocks
+from service.catalog import Catalog
+from service.feedback import Feedback
+from service.guard.ticket import TicketKeys
+from service.leasing import Leasing
+from service.operating import Operator
+from service.settings import Settings
+from service.store.database import Database
+from service.store.facts import fact
+from service.store.migrate import require_current
+from service.threads import Threads
+from service.upkeep import Rhythm, Upkeep
+
+logger = logging.getLogger(__name__)
+
+
+@dataclass(frozen=True, slots=True)
+class Stories:
+    """What the routes may call."""
+
+    bidder: Bidder
+    feedback: Feedback
+    operator: Operator
+
+
+def create_app(settings: Settings) -> FastAPI:
+    """The service under these settings; nothing is opened before its lifespan begins."""
+
+    @asynccontextmanager
+    async def lifespan(app: FastAPI) -> AsyncIterator[None]:
+        async with running(settings) as stories:
+            app.state.stories = stories
+            yield
+            app.state.stories = None
+
+    app = FastAPI(
+        title="Bidkeel", lifespan=lifespan, docs_url=None, redoc_url=None, openapi_url=None
+    )
+    app.state.settings = settings
+    install(app)
+    return app
+
+
+def open_database(settings: Settings) -> Database:
+    """The database of these settings."""
+    return Database(
+        settings.database_url.get_secret_value(),
+        pool_size=settings.pool_size,
+        statement_timeout_ms=settings.statement_timeout_ms,
+    )
+
+
+@asynccontextmanager
+async def running(settings: Settings) -> AsyncIterator[Stories]:
+    """
+    One worker, from the first connection to the last slice given back.
+
+    Raises:
+        Unsafe: The database is of another schema or may forget what it acknowledged.
+        StoreAway: It does not answer.
+    """
+    database = open_database(settings)
+    threads = Threads(settings.pool_size)
+    try:
+        database.check_safe()
+        require_current(database)
+        stories, upkeep, loops = _build(settings, database, threads)
+        await upkeep.start()
+        tasks = [asyncio.ensure_future(duty) for duty in loops]
+        for task in tasks:
+            task.add_done_callback(_stop_if_broken)
+        yield stories
+        for task in tasks:
+            task.cancel()
+        await asyncio.gather(*tasks, return_exceptions=True)
+        await upkeep.stop()
+    finally:
+        threads.close()
+        database.close()
+
+
+def _build(
+    settings: Settings, database: Database, threads: Threads
+) -> tuple[Stories, Upkeep, list[object]]:
+    worker = f"{os.getpid()}-{secrets.token_hex(4)}"
+    news = asyncio.Event()
+    keys = TicketKeys(_ticket_keys(settings, database))
+    incarnation = bytes.fromhex(database.read(lambda c: fact(c, "incarnation")))
+    catalog = Catalog(database, threads)
+    leasing = Leasing(database, threads, worker, settings.lease_s)
+    clocks = Clocks(settings.deadline_ms, settings.deadline_ms_max)
+    bidder = Bidder(catalog, leasing, keys, incarnation, clocks, settings.decision_queue_max)
+    feedback = Feedback(database, threads, keys, incarnation)
+    operator = Operator(database, threads, catalog, news)
+    rhythm = Rhythm(
+        settings.change_poll_ms,
+        settings.tick_s,
+        settings.teach_ms,
+        settings.clock_step_ms_max,
+        settings.checkpoint_entries,
+        settings.decision_keep_days,
+    )
+    upkeep = Upkeep(database, threads, worker, catalog, leasing, bidder, news, rhythm)
+    return Stories(bidder, feedback, operator), upkeep, [
+        leasing.run(),
+        feedback.run(),
+        *upkeep.duties(),
+    ]
+
+
+def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:
+    """The keys of the settings, else the one the database made for itself."""
+    given = [key for key in settings.ticket_keys.get_secret_value().split(",") if key.strip()]
+    if given:
+        return [key.strip().encode() for key in given]
+    return [bytes.fromhex(database.read(lambda connection: fact(connection, "ticket_key")))]
+
+
+def _stop_if_broken(task: asyncio.Future[object]) -> None:
+    """A duty that dies takes the worker with it; its slices come back, its tickets settle."""
+    if task.cancelled() or task.exception() is None:
+        return
+    logger.critical("a background duty failed; stopping", exc_info=task.exception())
+    os.kill(os.getpid(), signal.SIGTERM)

@@ -1,0 +1,217 @@
+"""The first story: an opportunity comes in, a price or a pass with its reason goes out.
+
+Before the price a request may wait for an unknown line item or a missing slice; after
+that there is no await and no database between the snapshot and the answer.
+"""
+
+from __future__ import annotations
+
+import secrets
+import time
+from collections import deque
+from dataclasses import dataclass
+
+import numpy
+
+from service.catalog import Catalog, Item
+from service.decision.opportunity import Opportunity
+from service.decision.price import Passed
+from service.errors import Refusal, StoreAway
+from service.guard.gate import Cleared, clear, shut
+from service.guard.hand import SliceInHand
+from service.guard.ticket import Ticket, TicketKeys
+from service.leasing import Leasing
+from service.store.decisions import Decision
+
+
+@dataclass(frozen=True, slots=True)
+class Answer:
+    """A bid (nanos per impression, with its ticket) or a pass with its reason."""
+
+    request_id: str | None
+    line_item: str
+    bid: int | None
+    reason: str | None
+    ticket: str | None = None
+    ref: str | None = None
+    method: str | None = None
+    set_by: str | None = None
+    snapshot: int | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Clocks:
+    """How long a request may take at most, in milliseconds."""
+
+    deadline_ms: int
+    deadline_ms_max: int
+
+
+class Bidder:
+    """Answers opportunities for one worker."""
+
+    def __init__(
+        self,
+        catalog: Catalog,
+        leasing: Leasing,
+        keys: TicketKeys,
+        incarnation: bytes,
+        clocks: Clocks,
+        queue_max: int,
+    ) -> None:
+        self._catalog, self._leasing = catalog, leasing
+        self._keys, self._incarnation = keys, incarnation
+        self._clocks = clocks
+        self._generator = numpy.random.default_rng()
+        self._decisions: deque[Decision] = deque()
+        self._queue_max = queue_max
+        self.decisions_dropped = 0
+
+    async def bid(self, opportunity: Opportunity, arrived: float) -> Answer:
+        """
+        Answer one opportunity.
+
+        Args:
+            arrived: time.monotonic() when the request came in.
+
+        Raises:
+            NotFound: No such line item.
+            StoreAway: An unknown line item could not be looked up.
+        """
+        item = self._catalog.get(opportunity.line_item)
+        if item is None:
+            item = await self._catalog.look_up(opportunity.line_item)
+        until = arrived + self._allowed_s(opportunity)
+        if not opportunity.test and shut(item.limits, _wall_ms()) is None:
+            await self._have_money(item, until)
+        # A freeze may have come while we waited.
+        item = self._catalog.get(item.id) or item
+        answer = self._answer(item, opportunity, until)
+        self._log(answer, opportunity)
+        return answer
+
+    async def bid_batch(
+        self, opportunities: list[Opportunity], arrived: float
+    ) -> list[Answer | Refusal]:
+        """Answer many opportunities in order; an unknown line item spoils only its own row."""
+        answers: list[Answer | Refusal] = []
+        for opportunity in opportunities:
+            try:
+                answers.append(await self.bid(opportunity, arrived))
+            except Refusal as refusal:
+                answers.append(refusal)
+            except StoreAway:
+                answers.append(Refusal("store_away", "The line item could not be looked up."))
+        return answers
+
+    def drain(self, count_max: int) -> list[Decision]:
+        """Take the oldest decisions out of the queue, for the log."""
+        count = min(count_max, len(self._decisions))
+        return [self._decisions.popleft() for _ in range(count)]
+
+    def put_back(self, decisions: list[Decision]) -> None:
+        """Return decisions that could not be written, as far as there is room."""
+        room = max(0, self._queue_max - len(self._decisions))
+        self.decisions_dropped += max(0, len(decisions) - room)
+        self._decisions.extendleft(reversed(decisions[-room:] if room else []))
+
+    async def _have_money(self, item: Item, until: float) -> None:
+        held = self._leasing.hand.usable(item.id, self._leasing.clock())
+        if held is not None and held.free >= item.limits.cap:
+            self._leasing.refresh(held)
+        elif self._leasing.denied(item.id) is None:
+            await self._leasing.obtain(item.id, until - time.monotonic())
+
+    def _answer(self, item: Item, opportunity: Opportunity, until: float) -> Answer:
+        wall_ms = _wall_ms()
+        held = self._leasing.hand.usable(item.id, self._leasing.clock())
+        reason = shut(item.limits, wall_ms) or self._out_of_money(item, held)
+        if reason is None and time.monotonic() > until:
+            reason = "past_deadline"
+        if reason is not None:
+            return _pass(opportunity, reason)
+        if item.ready is None:
+            return _pass(opportunity, "learner_halted")
+        proposed = item.ready.propose(opportunity, self._generator)
+        if isinstance(proposed, Passed):
+            return _pass(opportunity, proposed.reason)
+        free = item.limits.cap if opportunity.test else held.free if held else 0
+        cleared = clear(proposed.price, proposed.set_by, item.limits, opportunity.floor, free)
+        if isinstance(cleared, str):
+            if cleared == "under_floor" and not opportunity.test:
+                passes = self._leasing.hand.under_floor
+                passes[item.id] = passes.get(item.id, 0) + 1
+            return _pass(opportunity, cleared)
+        return self._commit(item, opportunity, cleared, held)
+
+    def _out_of_money(self, item: Item, held: SliceInHand | None) -> str | None:
+        """Spent money is named before anything about the price; held money is named last."""
+        reason = self._leasing.denied(item.id)
+        if held is not None and held.free > 0:
+            return None
+        return reason if reason in ("budget_spent", "day_spent") else None
+
+    def _commit(
+        self, item: Item, opportunity: Opportunity, cleared: Cleared, held: SliceInHand | None
+    ) -> Answer:
+        """From here the price leaves: it is taken out of the slice, signed and answered."""
+        if held is None or opportunity.test:
+            slice_id, counter, day = secrets.token_bytes(16), 0, 1
+        else:
+            slice_id, counter, day = held.id, held.take(cleared.price), held.day
+        ticket = Ticket(
+            item.id,
+            opportunity.source,
+            slice_id,
+            counter,
+            cleared.price,
+            item.snapshot,
+            day,
+            self._incarnation,
+            opportunity.test,
+        )
+        return Answer(
+            opportunity.request_id,
+            item.id,
+            cleared.price,
+            None,
+            self._keys.sign(ticket),
+            ticket.ref,
+            item.terms.method,
+            cleared.set_by,
+            item.snapshot,
+        )
+
+    def _allowed_s(self, opportunity: Opportunity) -> float:
+        asked = opportunity.deadline_ms
+        allowed = self._clocks.deadline_ms if asked is None else asked
+        return min(allowed, self._clocks.deadline_ms_max) / 1000
+
+    def _log(self, answer: Answer, opportunity: Opportunity) -> None:
+        if len(self._decisions) >= self._queue_max:
+            # The log may lose rows under overload; the hold never does.
+            self.decisions_dropped += 1
+            return
+        self._decisions.append(
+            {
+                "at_ms": _wall_ms(),
+                "line_item": answer.line_item,
+                "ref": answer.ref,
+                "request_id": answer.request_id,
+                "source": opportunity.source,
+                "floor": opportunity.floor,
+                "price": answer.bid,
+                "reason": answer.reason,
+                "set_by": answer.set_by,
+                "snapshot": answer.snapshot or 0,
+                "test": int(opportunity.test),
+            }
+        )
+
+
+def _pass(opportunity: Opportunity, reason: str) -> Answer:
+    return Answer(opportunity.request_id, opportunity.line_item, None, reason)
+
+
+def _wall_ms() -> int:
+    return time.time_ns() // 1_000_000

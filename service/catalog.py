@@ -1,0 +1,151 @@
+"""What one worker knows of line items and keys: loaded on demand, renewed by change numbers."""
+
+from __future__ import annotations
+
+import logging
+import time
+from dataclasses import dataclass
+from typing import Any
+
+from service.decision.price import Ready, ready
+from service.decision.terms import Terms
+from service.errors import no_such_line_item
+from service.guard.gate import Limits
+from service.learner.tally import Tally
+from service.store import changes, keys, learners, line_items
+from service.store.database import Database, Reading
+from service.threads import Threads
+
+logger = logging.getLogger(__name__)
+
+MISS_S = 1.0  # How long an unknown id or key stays unknown before it is looked up again.
+MISSES_MAX = 10_000
+
+
+@dataclass(frozen=True, slots=True)
+class Item:
+    """A line item as a price needs it; `ready` is None while there is no good snapshot."""
+
+    id: str
+    version: int
+    limits: Limits
+    terms: Terms
+    snapshot: int
+    ready: Ready | None
+
+
+class Catalog:
+    """The worker's copy; every read of the hot path is a dictionary look-up."""
+
+    def __init__(self, database: Database, threads: Threads) -> None:
+        self._database = database
+        self._threads = threads
+        self._items: dict[str, Item] = {}
+        self._keys: dict[str, keys.Key] = {}
+        self._misses: dict[str, float] = {}
+        self.change_seen = 0
+
+    def get(self, line_item: str) -> Item | None:
+        """The line item if this worker knows it."""
+        return self._items.get(line_item)
+
+    async def look_up(self, line_item: str) -> Item:
+        """
+        Load a line item that this worker does not know yet.
+
+        Raises:
+            NotFound: There is none; the miss is remembered for a moment.
+            StoreAway: The database did not answer.
+        """
+        if self._missed(f"item {line_item}"):
+            raise no_such_line_item()
+        await self.renew([line_item])
+        if line_item not in self._items:
+            self._miss(f"item {line_item}")
+            raise no_such_line_item()
+        return self._items[line_item]
+
+    async def key_for(self, bearer: str) -> keys.Key | None:
+        """The live key behind a bearer text, or None."""
+        hashed = keys.hashed(bearer)
+        if hashed in self._keys:
+            return self._keys[hashed]
+        if self._missed(f"key {hashed}"):
+            return None
+        found = await self._threads.run(
+            self._database.read, lambda connection: keys.by_bearer(connection, bearer)
+        )
+        if found is None:
+            self._miss(f"key {hashed}")
+        else:
+            self._keys[hashed] = found
+        return found
+
+    async def start(self) -> None:
+        """Begin reading the changes at the newest: nothing is cached yet."""
+        self.change_seen = await self._threads.run(self._database.read, changes.latest)
+
+    async def follow(self) -> list[Item]:
+        """Apply what changed since the last look; returns the line items renewed."""
+        news = await self._threads.run(
+            self._database.read, lambda connection: changes.since(connection, self.change_seen)
+        )
+        if not news:
+            return []
+        if any(kind == "keys" for _, kind, _ in news):
+            self._keys.clear()
+        names = {name for _, kind, name in news if kind != "keys"}
+        known = set(self._items)
+        wanted = known if changes.ALL in names else names & known
+        renewed = await self.renew(sorted(wanted))
+        self._misses.clear()
+        self.change_seen = news[-1][0]
+        return renewed
+
+    async def renew(self, names: list[str]) -> list[Item]:
+        """Load these line items again, all of them in one read."""
+        if not names:
+            return []
+        rows, states = await self._threads.run(self._database.read, lambda c: _load(c, names))
+        for name, row in rows.items():
+            self._items[name] = _item(row, states.get(name), self._items.get(name))
+        return [self._items[name] for name in rows]
+
+    def _missed(self, what: str) -> bool:
+        return time.monotonic() - self._misses.get(what, -MISS_S) < MISS_S
+
+    def _miss(self, what: str) -> None:
+        if len(self._misses) >= MISSES_MAX:
+            self._misses.clear()
+        self._misses[what] = time.monotonic()
+
+
+def _load(
+    connection: Reading, names: list[str]
+) -> tuple[dict[str, line_items.Row], dict[str, learners.Snapshot]]:
+    return line_items.load(connection, names), learners.snapshots(connection, names)
+
+
+def _item(row: line_items.Row, snapshot: learners.Snapshot | None, before: Item | None) -> Item:
+    terms = Terms.from_config(row.config)
+    if snapshot is not None and snapshot.sound:
+        return Item(
+            row.id,
+            row.version,
+            limits_of(row),
+            terms,
+            snapshot.seq,
+            ready(Tally.from_bytes(snapshot.state), terms),
+        )
+    # A state that is not what was published is never used: the last good one goes on.
+    logger.error("the snapshot of a line item does not match its digest")
+    seq, last = (before.snapshot, before.ready) if before else (0, None)
+    return Item(row.id, row.version, limits_of(row), terms, seq, last)
+
+
+def limits_of(row: line_items.Row) -> Limits:
+    """What binds every price of this line item."""
+    flight: dict[str, Any] = row.config["flight"]
+    return Limits(
+        row.config["bid_cap"], flight["starts_ms"], flight["ends_ms"], bool(row.freezes)
+    )

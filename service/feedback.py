@@ -1,0 +1,235 @@
+"""The second story: outcomes come in with their tickets, and are durable before the receipt.
+
+Requests that arrive together share one transaction. A group that fails for other than
+connection or lock reasons is tried request by request, then row by row; a row that fails
+alone is set aside and refused.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import logging
+from dataclasses import dataclass
+from datetime import date
+
+from service.errors import BrokenPromise, StoreAway
+from service.guard.ticket import BadTicket, Ticket, TicketKeys, bid_of, ref_of
+from service.ledger.settle import Outcome
+from service.ledger.values import Value
+from service.store import outcomes
+from service.store.database import Database
+from service.store.decisions import quarantine
+from service.store.outcomes import Booked, Booking
+from service.threads import Threads
+
+logger = logging.getLogger(__name__)
+
+ROWS_MAX = 2000
+PAYING = ("won", "billed")
+# What a single bad row may raise; anything else is a fault of ours and ends the worker's task.
+POISON = (BrokenPromise, ValueError, LookupError, ArithmeticError, TypeError)
+
+
+@dataclass(frozen=True, slots=True)
+class Report:
+    """One reported outcome; prices in nanos per impression, values in nanos."""
+
+    kind: str
+    ticket: str | None = None
+    ref: str | None = None
+    clearing: int | None = None
+    to_win: int | None = None
+    value: int | None = None
+    event_id: str | None = None
+    corrects: str | None = None
+    why: str | None = None
+    at: str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Receipt:
+    """What became of one report; `code` says why when it is refused."""
+
+    ref: str | None
+    status: str
+    code: str | None = None
+    clipped: bool = False
+    test: bool = False
+    detail: str | None = None
+
+
+@dataclass(slots=True)
+class _Waiting:
+    """The rows of one request and the future its receipt comes through."""
+
+    rows: list[Booking]
+    done: asyncio.Future[list[Booked]]
+
+
+class Feedback:
+    """Settles outcomes for one worker."""
+
+    def __init__(
+        self, database: Database, threads: Threads, keys: TicketKeys, incarnation: bytes
+    ) -> None:
+        self._database, self._threads = database, threads
+        self._keys, self._incarnation = keys, incarnation
+        self._queue: asyncio.Queue[_Waiting] = asyncio.Queue()
+
+    async def report(self, reports: list[Report]) -> list[Receipt]:
+        """
+        Settle outcomes and values; when this returns they are durable.
+
+        Raises:
+            StoreAway: Perhaps recorded; the repeat answers `duplicate`.
+        """
+        read = [self._read(report) for report in reports]
+        read = await self._find_refs(reports, read)
+        rows = [row for row in read if isinstance(row, Booking)]
+        booked = iter(await self._book(rows) if rows else [])
+        return [
+            row if isinstance(row, Receipt) else _receipt(row, next(booked)) for row in read
+        ]
+
+    async def run(self) -> None:
+        """Book what waits, group by group, until cancelled."""
+        while True:
+            group = [await self._queue.get()]
+            while not self._queue.empty() and sum(len(w.rows) for w in group) < ROWS_MAX:
+                group.append(self._queue.get_nowait())
+            await self._settle(group)
+
+    async def _book(self, rows: list[Booking]) -> list[Booked]:
+        waiting = _Waiting(rows, asyncio.get_running_loop().create_future())
+        await self._queue.put(waiting)
+        return await waiting.done
+
+    async def _settle(self, group: list[_Waiting]) -> None:
+        try:
+            rows = [row for waiting in group for row in waiting.rows]
+            booked = await self._threads.run(outcomes.book, self._database, rows)
+        except StoreAway as error:
+            for waiting in group:
+                _fail(waiting, error)
+        except POISON:
+            logger.exception("a group of outcomes could not be booked; trying it apart")
+            await self._settle_apart(group)
+        else:
+            parts = iter(booked)
+            for waiting in group:
+                _finish(waiting, [next(parts) for _ in waiting.rows])
+
+    async def _settle_apart(self, group: list[_Waiting]) -> None:
+        if len(group) > 1:
+            for waiting in group:
+                await self._settle([waiting])
+            return
+        try:
+            booked = [await self._alone(row) for row in group[0].rows]
+        except StoreAway as error:
+            _fail(group[0], error)
+        else:
+            _finish(group[0], booked)
+
+    async def _alone(self, row: Booking) -> Booked:
+        try:
+            return (await self._threads.run(outcomes.book, self._database, [row]))[0]
+        except POISON as error:
+            await self._threads.run(self._set_aside, row, error)
+            return Booked("refused", "quarantined")
+
+    def _set_aside(self, row: Booking, error: Exception) -> None:
+        body = {"event": type(row.event).__name__, "ref": ref_of(row.event.bid)}
+        self._database.write(
+            lambda connection: quarantine(
+                connection,
+                row.line_item,
+                f"{type(error).__name__}: {error}",
+                body,
+                self._database.wall_ms(),
+            )
+        )
+
+    def _read(self, report: Report) -> Booking | Receipt:
+        """The booking a report asks for, or the receipt that refuses it."""
+        if report.ticket is None:
+            return _read_ref(report)
+        try:
+            ticket = self._keys.verify(report.ticket)
+        except BadTicket:
+            return Receipt(report.ref, "refused", "bad_ticket")
+        if report.ref is not None and report.ref != ticket.ref:
+            return Receipt(report.ref, "refused", "ref_of_another_bid")
+        if report.kind in PAYING and report.clearing is None:
+            return Receipt(ticket.ref, "refused", "no_price")
+        if ticket.test:
+            return Receipt(ticket.ref, "recorded", test=True)
+        return self._booking(report, ticket)
+
+    def _booking(self, report: Report, ticket: Ticket) -> Booking:
+        if report.kind == "value":
+            return Booking(ticket.line_item, _value(report, ticket.bid))
+        outcome = Outcome(
+            report.kind,
+            ticket.bid,
+            ticket.counter,
+            ticket.price,
+            ticket.source,
+            report.clearing if report.kind in PAYING else None,
+            report.to_win,
+            report.why,
+            report.at,
+        )
+        here = ticket.incarnation == self._incarnation
+        day = date.fromordinal(ticket.day).isoformat()
+        return Booking(ticket.line_item, outcome, ticket.slice if here else None, day)
+
+    async def _find_refs(
+        self, reports: list[Report], read: list[Booking | Receipt]
+    ) -> list[Booking | Receipt]:
+        """Give values that came by ref the line item of their settled win."""
+        loose = {row.event.bid for row in read if isinstance(row, Booking) and not row.line_item}
+        if not loose:
+            return read
+        found = await self._threads.run(
+            self._database.read, lambda connection: outcomes.find_wins(connection, loose)
+        )
+        return [_placed(row, found, report.ref) for row, report in zip(read, reports, strict=True)]
+
+
+def _read_ref(report: Report) -> Booking | Receipt:
+    """A value may come by ref alone; its line item is looked up after."""
+    if report.kind != "value" or report.ref is None:
+        return Receipt(report.ref, "refused", "no_ticket")
+    try:
+        return Booking("", _value(report, bid_of(report.ref)))
+    except BadTicket:
+        return Receipt(None, "refused", "bad_ref")
+
+
+def _placed(
+    row: Booking | Receipt, found: dict[bytes, str], ref: str | None
+) -> Booking | Receipt:
+    if isinstance(row, Receipt) or row.line_item:
+        return row
+    if row.event.bid not in found:
+        return Receipt(ref, "refused", "no_such_ref")
+    return Booking(found[row.event.bid], row.event)
+
+
+def _value(report: Report, bid: bytes) -> Value:
+    return Value(bid, report.event_id or "", report.value or 0, report.corrects, report.at)
+
+
+def _receipt(row: Booking, booked: Booked) -> Receipt:
+    return Receipt(ref_of(row.event.bid), booked.status, booked.code, booked.clipped)
+
+
+def _fail(waiting: _Waiting, error: StoreAway) -> None:
+    if not waiting.done.done():
+        waiting.done.set_exception(error)
+
+
+def _finish(waiting: _Waiting, booked: list[Booked]) -> None:
+    if not waiting.done.done():
+        waiting.done.set_result(booked)

@@ -1,0 +1,172 @@
+"""The money side of bidding: keeps slices in the worker's hand and gives back what is left."""
+
+from __future__ import annotations
+
+import asyncio
+import logging
+import secrets
+import time
+from collections.abc import Callable
+from datetime import date
+
+from service.errors import StoreAway
+from service.guard.hand import Given, Hand, SliceInHand
+from service.money import NANOS_MAX
+from service.store import leases
+from service.store.database import Database
+from service.threads import Threads
+
+logger = logging.getLogger(__name__)
+
+MARGIN_SHARE = 20  # A twentieth of the lease is left unused, against clocks that run unevenly.
+DENIED_S = 0.25
+BATCH_MAX = 200
+
+
+def boot_clock() -> float:
+    """Seconds since boot, suspends included: the only clock a slice's time is measured on."""
+    return time.clock_gettime(time.CLOCK_BOOTTIME)
+
+
+class Leasing:
+    """
+    One worker's hand and the one task that fills it.
+
+    Args:
+        worker: This worker's id.
+        lease_s: Seconds a slice is leased for.
+        clock: The boot-time clock; tests hand in their own.
+    """
+
+    def __init__(
+        self,
+        database: Database,
+        threads: Threads,
+        worker: str,
+        lease_s: int,
+        clock: Callable[[], float] = boot_clock,
+    ) -> None:
+        self.hand = Hand()
+        self.clock = clock
+        self._database, self._threads = database, threads
+        self._worker, self._lease_s = worker, lease_s
+        self._wanted: dict[str, asyncio.Future[None]] = {}
+        self._wake = asyncio.Event()
+        self._denied: dict[str, tuple[str, float]] = {}
+        self._before: dict[str, int] = {}
+
+    def denied(self, line_item: str) -> str | None:
+        """Why the last wish of a moment ago found no money, or None."""
+        reason, until = self._denied.get(line_item, ("", 0.0))
+        return reason if self.clock() < until else None
+
+    def wish(self, line_item: str) -> asyncio.Future[None]:
+        """Ask for a slice in the next batch; several who ask share one answer."""
+        if line_item not in self._wanted:
+            self._wanted[line_item] = asyncio.get_running_loop().create_future()
+            self._wake.set()
+        return self._wanted[line_item]
+
+    async def obtain(self, line_item: str, wait_s: float) -> None:
+        """Wait at most `wait_s` seconds for a slice; the caller looks into the hand after."""
+        await asyncio.wait([self.wish(line_item)], timeout=max(0.0, wait_s))
+
+    def refresh(self, held: SliceInHand) -> None:
+        """Ask for the next slice once half of this one, in money or in time, is used."""
+        half_time = (held.leased_at + held.expires_at) / 2
+        if held.free * 2 <= held.amount or self.clock() >= half_time:
+            if self.denied(held.line_item) is None:
+                self.wish(held.line_item)
+
+    def forget(self, line_item: str) -> None:
+        """Drop what was denied, since the line item has changed."""
+        self._denied.pop(line_item, None)
+
+    async def run(self) -> None:
+        """Lease what is wished for, batch by batch, until cancelled."""
+        while True:
+            await self._wake.wait()
+            self._wake.clear()
+            names = list(self._wanted)[:BATCH_MAX]
+            await self._lease(names)
+            for name in names:
+                self._wanted.pop(name).set_result(None)
+            if self._wanted:
+                self._wake.set()
+
+    async def give_back(self) -> None:
+        """Tell the database what retired slices never issued; what fails is told again."""
+        given, self.hand.given = self.hand.given, []
+        if not given:
+            return
+        try:
+            await self._threads.run(leases.retire, self._database, [_report(g) for g in given])
+        except StoreAway:
+            self.hand.given = given + self.hand.given
+
+    async def tick(self) -> None:
+        """Report what was priced since the last tick, so that silence counts as rounds too."""
+        passes, self.hand.under_floor = self.hand.under_floor, {}
+        reports = [
+            leases.Report(s.line_item, s.id, s.bids, passes.pop(s.line_item, 0))
+            for s in self.hand.slices.values()
+        ]
+        reports += [leases.Report(name, bytes(16), 0, count) for name, count in passes.items()]
+        if not reports:
+            return
+        try:
+            await self._threads.run(leases.tick, self._database, reports)
+        except StoreAway:
+            for report in reports:
+                self._pass_again(report)
+
+    def _pass_again(self, report: leases.Report) -> None:
+        before = self.hand.under_floor.get(report.line_item, 0)
+        if report.under_floor:
+            self.hand.under_floor[report.line_item] = before + report.under_floor
+
+    async def _lease(self, names: list[str]) -> None:
+        asked_at = self.clock()
+        requests = [self._request(name, asked_at) for name in names]
+        try:
+            answers = await self._threads.run(
+                leases.lease, self._database, self._worker, requests, self._lease_s
+            )
+        except StoreAway:
+            # Perhaps a slice was leased and the answer was lost: give it back unseen.
+            self.hand.given += [Given(r.slice_id, r.line_item, 0, 0) for r in requests]
+            answers = [leases.Denied(name, "budget_held") for name in names]
+        for answer in answers:
+            self._take(answer, asked_at)
+
+    def _request(self, name: str, now: float) -> leases.LeaseRequest:
+        before = self._before.get(name, 0)
+        held = self.hand.slices.get(name)
+        forecast = NANOS_MAX
+        if held is not None:
+            # Two refreshes from now is two thirds of a lease away.
+            pace = held.issued / max(now - held.leased_at, 0.001)
+            forecast = int(pace * self._lease_s * 2 / 3)
+        return leases.LeaseRequest(name, secrets.token_bytes(16), forecast, before)
+
+    def _take(self, answer: leases.Leased | leases.Denied, asked_at: float) -> None:
+        if isinstance(answer, leases.Denied):
+            self._denied[answer.line_item] = (answer.reason, self.clock() + DENIED_S)
+            return
+        lease_s = answer.lease_ms / 1000
+        self._before[answer.line_item] = answer.amount
+        self._denied.pop(answer.line_item, None)
+        self.hand.receive(
+            SliceInHand(
+                answer.slice_id,
+                answer.line_item,
+                answer.amount,
+                date.fromisoformat(answer.day).toordinal(),
+                asked_at,
+                asked_at + lease_s - lease_s / MARGIN_SHARE,
+            )
+        )
+
+
+def _report(given: Given) -> leases.Report:
+    return leases.Report(given.line_item, given.id, given.bids, given.under_floor, given.issued)

@@ -1,0 +1,315 @@
+"""The fourth story: people order (create, change, freeze, thaw, reset) and everything is journalled.
+
+Each order is one transaction with its journal row and its change number, and it answers
+with what was before and what is after.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import time
+from collections.abc import Callable, Mapping
+from dataclasses import asdict, dataclass
+from typing import Any
+
+from service.catalog import Catalog
+from service.decision.learnability import defaults, learnability, objection
+from service.errors import Malformed, NeedsConfirmation, StoreAway
+from service.learner.tally import Tally
+from service.ledger.entries import Entry
+from service.showing import show
+from service.store import changes, freezes, learners, line_items, reading, workers
+from service.store.books import Books
+from service.store.database import Database, Writing
+from service.store.journal import note
+from service.store.keys import Key
+from service.store.line_items import Row
+from service.store.repeats import Repeat, once
+from service.threads import Threads
+
+__all__ = ["Key", "Operator", "View"]
+
+IN_FORCE_S = 1.0
+LOOK_S = 0.02
+
+
+@dataclass(frozen=True, slots=True)
+class View:
+    """A line item as people see it; money in nanos inside `config`."""
+
+    id: str
+    version: int
+    config: dict[str, Any]
+    created_ms: int
+    updated_ms: int
+    freezes: list[dict[str, Any]]
+    learnability: str
+    defaults: list[str]
+
+
+class Operator:
+    """Obeys people, for one worker."""
+
+    def __init__(
+        self, database: Database, threads: Threads, catalog: Catalog, news: asyncio.Event
+    ) -> None:
+        self._database, self._threads, self._catalog = database, threads, catalog
+        self._news = news
+
+    async def key_for(self, bearer: str) -> Key | None:
+        """The live key behind a bearer text, or None."""
+        return await self._catalog.key_for(bearer)
+
+    async def create(
+        self,
+        config: Mapping[str, Any],
+        confirm: str | None,
+        actor: str,
+        idempotency: str | None = None,
+    ) -> View:
+        """
+        Create a line item; it may bid as soon as this returns.
+
+        Raises:
+            Malformed: Settings that the method cannot work with.
+            NeedsConfirmation: Allowed only with the word named in the refusal.
+            Conflict: The id is taken, or the key was used for another call.
+        """
+        filled, taken = defaults(config)
+        _object(filled, confirm)
+
+        def order(connection: Writing) -> dict[str, Any]:
+            now = self._database.wall_ms()
+            line_items.create(connection, filled, now)
+            learners.begin(connection, filled["id"], Tally.fresh().to_bytes(), now)
+            self._note(connection, actor, "create", filled["id"], "", {"after": filled})
+            changes.announce(connection, "line_item", [filled["id"]])
+            return asdict(_view(line_items.one(connection, filled["id"]), taken))
+
+        wish = {"call": "create", "config": dict(config), "confirm": confirm}
+        return View(**await self._order(order, _repeat(actor, idempotency, wish)))
+
+    async def get(self, line_item: str) -> View:
+        """
+        One line item.
+
+        Raises:
+            NotFound: There is none.
+        """
+        row = await self._read(lambda connection: line_items.one(connection, line_item))
+        return _view(row, [])
+
+    async def list(self, after: str | None, limit: int) -> list[View]:
+        """The line items after this id, in the order of ids."""
+        rows = await self._read(lambda connection: line_items.page(connection, after, limit))
+        return [_view(row, []) for row in rows]
+
+    async def patch(
+        self,
+        line_item: str,
+        changed: Mapping[str, Any],
+        version: int,
+        confirm: str | None,
+        reason: str | None,
+        actor: str,
+    ) -> View:
+        """
+        Change a line item that nobody else has changed since `version`.
+
+        Raises:
+            Stale: Somebody has.
+            Conflict: The budget would fall below what is spent.
+        """
+
+        def order(connection: Writing) -> dict[str, Any]:
+            before = line_items.one(connection, line_item)
+            after, _ = defaults(_merged(before.config, changed))
+            _object(after, confirm)
+            line_items.change(connection, after, version, self._database.wall_ms())
+            if _taught_otherwise(before.config, after):
+                learners.refold(connection, line_item, Tally.fresh().to_bytes())
+            detail = {"before": before.config, "after": after}
+            self._note(connection, actor, "patch", line_item, reason or "", detail)
+            changes.announce(connection, "line_item", [line_item])
+            return asdict(_view(line_items.one(connection, line_item), []))
+
+        return View(**await self._order(order, None))
+
+    async def state(self, line_item: str) -> dict[str, Any]:
+        """
+        What is known of a line item now: money, learner, price, feed, freezes.
+
+        Raises:
+            NotFound: There is none.
+        """
+        return show(await self._read(lambda connection: reading.facts(connection, line_item)))
+
+    async def freeze(
+        self, line_item: str | None, reason: str, actor: str, idempotency: str | None = None
+    ) -> dict[str, Any]:
+        """Stop one line item, or all; answers whether every live worker has stopped already."""
+
+        def order(connection: Writing) -> dict[str, Any]:
+            name, source, before = self._frozen(connection, line_item)
+            now = self._database.wall_ms()
+            freezes.put(connection, name, source, wall_ms=now, actor=actor, reason=reason)
+            return self._stopped(connection, "freeze", name, before, reason, actor)
+
+        wish = {"call": "freeze", "line_item": line_item, "reason": reason}
+        answer = await self._order(order, _repeat(actor, idempotency, wish))
+        return await self._in_force(answer)
+
+    async def thaw(
+        self, line_item: str | None, reason: str, actor: str, idempotency: str | None = None
+    ) -> dict[str, Any]:
+        """Lift every freeze of a line item, or the switch over all (and only that)."""
+
+        def order(connection: Writing) -> dict[str, Any]:
+            name, source, before = self._frozen(connection, line_item)
+            sources = [source] if line_item is None else ["person", "tripwire", "audit"]
+            freezes.lift(connection, name, sources)
+            return self._stopped(connection, "thaw", name, before, reason, actor)
+
+        wish = {"call": "thaw", "line_item": line_item, "reason": reason}
+        return await self._in_force(
+            await self._order(order, _repeat(actor, idempotency, wish))
+        )
+
+    async def reset(
+        self, line_item: str, reason: str, actor: str, idempotency: str | None = None
+    ) -> dict[str, Any]:
+        """Let the learner begin afresh; money and the stream before it stay as they are."""
+
+        def order(connection: Writing) -> dict[str, Any]:
+            line_items.one(connection, line_item)
+            books = Books(connection, [line_item], self._database.wall_ms())
+            books.post(line_item, Entry("reset", {"actor": actor, "reason": reason}))
+            books.save()
+            seq = books.accounts[line_item].seq
+            detail = {"before": {"seq": seq - 1}, "after": {"seq": seq}}
+            self._note(connection, actor, "reset", line_item, reason, detail)
+            return {"line_item": line_item, **detail}
+
+        wish = {"call": "reset", "line_item": line_item, "reason": reason}
+        return await self._order(order, _repeat(actor, idempotency, wish))
+
+    async def health(self) -> dict[str, Any]:
+        """Whether the database answers; prices leave from slices in hand either way."""
+        try:
+            await self._read(changes.latest)
+        except StoreAway:
+            return {"status": "degraded", "database": "away"}
+        return {"status": "ok", "database": "here"}
+
+    async def _read(self, work: Callable[[Any], Any]) -> Any:
+        return await self._threads.run(self._database.read, work)
+
+    async def _order(
+        self, order: Callable[[Writing], dict[str, Any]], repeat: Repeat | None
+    ) -> dict[str, Any]:
+        def work(connection: Writing) -> dict[str, Any]:
+            now = self._database.wall_ms()
+            return once(connection, repeat, lambda: order(connection), now)
+
+        answer = await self._threads.run(self._database.write, work)
+        self._news.set()
+        return answer
+
+    def _frozen(
+        self, connection: Writing, line_item: str | None
+    ) -> tuple[str, str, list[dict[str, Any]]]:
+        if line_item is None:
+            return changes.ALL, "all", freezes.on(connection, [changes.ALL])[changes.ALL]
+        return line_item, "person", line_items.one(connection, line_item).freezes
+
+    def _stopped(
+        self,
+        connection: Writing,
+        action: str,
+        name: str,
+        before: list[dict[str, Any]],
+        reason: str,
+        actor: str,
+    ) -> dict[str, Any]:
+        """The common end of freeze and thaw: journal, change number, before and after."""
+        after = freezes.on(connection, sorted({name, changes.ALL}))
+        left = after[changes.ALL] + (after[name] if name != changes.ALL else [])
+        detail = {"before": before, "after": left}
+        self._note(connection, actor, action, name, reason, detail)
+        by_ms = reading.last_expiry_ms(connection, None if name == changes.ALL else name)
+        number = changes.announce(connection, action, [name])
+        shown = None if name == changes.ALL else name
+        return {"line_item": shown, **detail, "change": number, "by_ms": by_ms}
+
+    async def _in_force(self, answer: dict[str, Any]) -> dict[str, Any]:
+        """Wait a moment until every live worker has passed the change; else say by when."""
+        number, by_ms = answer.pop("change"), answer.pop("by_ms")
+        until = time.monotonic() + IN_FORCE_S
+        while True:
+            seen = await self._read(workers.live)
+            if all(passed >= number for passed in seen.values()):
+                return {**answer, "in_force": True, "by": None}
+            if time.monotonic() > until:
+                return {**answer, "in_force": False, "by_ms": by_ms}
+            await asyncio.sleep(LOOK_S)
+
+    def _note(
+        self,
+        connection: Writing,
+        actor: str,
+        action: str,
+        line_item: str,
+        reason: str,
+        detail: Mapping[str, Any],
+    ) -> None:
+        now = self._database.wall_ms()
+        note(
+            connection,
+            wall_ms=now,
+            actor=actor,
+            action=action,
+            line_item=line_item,
+            reason=reason,
+            detail=detail,
+        )
+
+
+def _object(config: Mapping[str, Any], confirm: str | None) -> None:
+    found = objection(config, confirm)
+    if found is None:
+        return
+    if found.code == "learning_cost":
+        raise NeedsConfirmation(found.code, found.detail, {"confirm": found.code})
+    raise Malformed(found.code, found.detail)
+
+
+def _view(row: Row, taken: list[str]) -> View:
+    return View(
+        row.id,
+        row.version,
+        row.config,
+        row.created_ms,
+        row.updated_ms,
+        row.freezes,
+        learnability(row.config),
+        taken,
+    )
+
+
+def _repeat(actor: str, key: str | None, wish: Mapping[str, Any]) -> Repeat | None:
+    return None if key is None else Repeat(actor, key, wish)
+
+
+def _merged(config: Mapping[str, Any], changed: Mapping[str, Any]) -> dict[str, Any]:
+    """Objects are merged, everything else is replaced; a new method begins with its own settings."""
+    merged = dict(config)
+    for name, value in changed.items():
+        old = merged.get(name)
+        whole = name == "policy" or not (isinstance(value, Mapping) and isinstance(old, Mapping))
+        merged[name] = value if whole else _merged(old, value)
+    return merged
+
+
+def _taught_otherwise(before: Mapping[str, Any], after: Mapping[str, Any]) -> bool:
+    """Whether the lessons must be read again, since they are cut at the ceiling."""
+    return bool(before["value"]["ceiling"] != after["value"]["ceiling"])

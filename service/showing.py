@@ -1,0 +1,104 @@
+"""What people see of a line item, composed of plain facts; pure, so that it can be read in a test."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from service.decision.learnability import learnability
+from service.decision.price import ready
+from service.decision.terms import Terms
+from service.guard.gate import Cleared, clear
+from service.catalog import limits_of
+from service.learner.tally import Tally
+from service.store.reading import Facts
+
+
+def show(facts: Facts) -> dict[str, Any]:
+    """The state of a line item; money in nanos under names that end in `_nanos`."""
+    tally = Tally.from_bytes(facts.snapshot.state)
+    learnt = ready(tally, Terms.from_config(facts.row.config)).describe()
+    return {
+        "line_item": facts.row.id,
+        "version": facts.row.version,
+        "currency": facts.row.config["currency"],
+        "bid": _bid(facts, learnt),
+        "certainty": learnt,
+        "learner": _learner(facts, tally),
+        "money": _money(facts),
+        "day": _day(facts),
+        "pacing": {"method": "none"},
+        "learnability": learnability(facts.row.config),
+        "feed": {"last_ms": facts.feed, "quarantined": facts.quarantined},
+        "passes_of_last_1000": facts.passes,
+        "freezes": facts.row.freezes,
+    }
+
+
+def _bid(facts: Facts, learnt: dict[str, Any]) -> dict[str, Any]:
+    """What an opportunity without a floor would be answered now, and what sets it."""
+    limits = limits_of(facts.row)
+    free = limits.cap
+    cleared = clear(learnt["bid_nanos"], learnt["set_by"], limits, 0, free)
+    if isinstance(cleared, Cleared):
+        price, set_by = cleared.price, cleared.set_by
+    else:
+        price, set_by = 0, cleared
+    return {
+        "method": learnt["method"],
+        "price_cpm_nanos": price,
+        "set_by": set_by,
+        "snapshot": facts.snapshot.seq,
+    }
+
+
+def _learner(facts: Facts, tally: Tally) -> dict[str, Any]:
+    wins = max(tally.wins, 1)
+    return {
+        "snapshot": facts.snapshot.seq,
+        "published_ms": facts.snapshot.published_ms,
+        "entries_behind": facts.balance["seq"] - facts.learner_seq,
+        "rounds": tally.rounds,
+        "wins": tally.wins,
+        "losses": tally.losses,
+        "win_rate": tally.wins / tally.rounds if tally.rounds else None,
+        "mean_price_cpm_nanos": tally.paid // wins if tally.wins else None,
+        "wins_with_known_value": tally.known,
+        "wins_with_value_above_zero": tally.converted,
+        "values_clipped": tally.clipped,
+    }
+
+
+def _money(facts: Facts) -> dict[str, Any]:
+    balance = facts.balance
+    return {
+        "budget_nanos": balance["budget"],
+        "target_nanos": balance["target"],
+        "spent_nanos": balance["spent"],
+        "held_nanos": balance["held"],
+        "free_nanos": max(0, balance["target"] - balance["spent"] - balance["held"]),
+        "unfunded_nanos": balance["unfunded"],
+        "disputed_nanos": balance["disputed"],
+        "slices": [
+            {
+                "state": row["state"],
+                "slices": row["slices"],
+                "remaining_nanos": row["remaining"],
+                "owed_nanos": row["owed"],
+            }
+            for row in facts.slices
+        ],
+    }
+
+
+def _day(facts: Facts) -> dict[str, Any] | None:
+    """Today's row, unless nothing was leased today or there is no daily budget."""
+    if facts.day is None or facts.row.config["daily_budget"] is None:
+        return None
+    return {
+        "day": facts.day["day"],
+        "time_zone": facts.row.config["flight"]["time_zone"],
+        "budget_nanos": facts.day["target"],
+        "spent_nanos": facts.day["spent"],
+        "held_nanos": facts.day["held"],
+        "over_nanos": facts.day["over_spent"],
+    }

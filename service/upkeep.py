@@ -1,0 +1,192 @@
+"""The third story, in the background: time, changes, money to give back, lessons, the log.
+
+Each duty is a loop of its own; a database that is away makes it wait, anything else ends
+the worker, since it is better to stop than to go on in an unknown state.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import logging
+from collections.abc import Awaitable, Callable
+from dataclasses import dataclass
+
+from service.bidding import Bidder
+from service.catalog import Catalog, Item
+from service.errors import StoreAway
+from service.learner.fold import fold
+from service.learner.tally import Tally
+from service.leasing import Leasing
+from service.ledger.entries import Body
+from service.store import clock, decisions, leases, learners, workers
+from service.store.database import Database, Writing
+from service.threads import Threads
+
+logger = logging.getLogger(__name__)
+
+DECISIONS_MAX = 2000
+GIVE_BACK_S = 0.2
+LOG_S = 0.5
+CLOCK_S = 1.0
+AWAY_S = 0.5
+PRUNE_S = 3600.0
+DAY_MS = 86_400_000
+
+
+@dataclass(frozen=True, slots=True)
+class Rhythm:
+    """How often each duty is done; see the settings for the reasons."""
+
+    change_poll_ms: int
+    tick_s: int
+    teach_ms: int
+    clock_step_ms_max: int
+    checkpoint_entries: int
+    decision_keep_days: int
+
+
+class Upkeep:
+    """The background duties of one worker."""
+
+    def __init__(
+        self,
+        database: Database,
+        threads: Threads,
+        worker: str,
+        catalog: Catalog,
+        leasing: Leasing,
+        bidder: Bidder,
+        news: asyncio.Event,
+        rhythm: Rhythm,
+    ) -> None:
+        self._database, self._threads, self._worker = database, threads, worker
+        self._catalog, self._leasing, self._bidder = catalog, leasing, bidder
+        self._news, self._rhythm = news, rhythm
+
+    def duties(self) -> list[Awaitable[None]]:
+        """Every loop, to be run until cancelled."""
+        rhythm = self._rhythm
+        return [
+            self._every(CLOCK_S, self.keep_time),
+            self._follow_changes(),
+            self._every(GIVE_BACK_S, self.give_back),
+            self._every(rhythm.tick_s, self._leasing.tick),
+            self._every(rhythm.teach_ms / 1000, self.teach),
+            self._every(CLOCK_S, self.mature),
+            self._every(LOG_S, self.log),
+            self._every(PRUNE_S, self.prune),
+        ]
+
+    async def start(self) -> None:
+        """Begin reading changes, move time on once and say that this worker lives."""
+        await self._catalog.start()
+        await self.keep_time()
+
+    async def stop(self) -> None:
+        """Give every slice back, write what is left of the log, and leave."""
+        self._leasing.hand.retire_all()
+        try:
+            await self._leasing.give_back()
+            await self.log()
+            await self._threads.run(
+                self._database.write, lambda connection: workers.leave(connection, self._worker)
+            )
+        except StoreAway:
+            logger.warning("the database is away; slices return to their budgets after grace")
+
+    async def keep_time(self) -> None:
+        """Move service time on, beat, and close what is over."""
+
+        def work(connection: Writing) -> None:
+            wall = clock.wall_clock(connection, self._database)
+            clock.advance(connection, wall, self._rhythm.clock_step_ms_max)
+            workers.beat(connection, self._worker, self._catalog.change_seen, wall)
+
+        await self._threads.run(self._database.write, work)
+        await self._threads.run(leases.close_due, self._database)
+
+    async def follow(self) -> None:
+        """Apply what changed, and say how far this worker is."""
+        before = self._catalog.change_seen
+        for item in await self._catalog.follow():
+            self._apply(item)
+        if self._catalog.change_seen != before:
+            await self._threads.run(self._database.write, self._beat)
+
+    async def give_back(self) -> None:
+        """Retire slices whose time is over and free what they never issued."""
+        self._leasing.hand.retire_expired(self._leasing.clock())
+        await self._leasing.give_back()
+
+    async def teach(self) -> None:
+        """Fold what is new, line item by line item."""
+        for name in await self._threads.run(self._database.read, learners.behind):
+            item = self._catalog.get(name) or await self._catalog.look_up(name)
+            while await self._teach(item) == learners.ENTRIES_MAX:
+                pass
+
+    async def mature(self) -> None:
+        """Close value windows that service time has passed."""
+        for name in await self._threads.run(self._database.read, learners.ripening):
+            await self._threads.run(learners.mature, self._database, name)
+
+    async def log(self) -> None:
+        """Write queued decisions."""
+        while batch := self._bidder.drain(DECISIONS_MAX):
+            rows = list(batch)
+            try:
+                await self._threads.run(
+                    self._database.write, lambda connection: decisions.log(connection, rows)
+                )
+            except StoreAway:
+                self._bidder.put_back(rows)
+                return
+
+    async def prune(self) -> None:
+        """Forget old decisions."""
+        before_ms = self._database.wall_ms() - self._rhythm.decision_keep_days * DAY_MS
+        await self._threads.run(
+            self._database.write, lambda connection: decisions.prune(connection, before_ms)
+        )
+
+    async def _teach(self, item: Item) -> int:
+        terms = item.terms
+
+        def lesson(state: bytes, entries: list[tuple[str, Body]]) -> bytes:
+            return fold(Tally.from_bytes(state), entries, terms.ceiling, terms.arrival).to_bytes()
+
+        return await self._threads.run(
+            learners.teach, self._database, item.id, lesson, self._rhythm.checkpoint_entries
+        )
+
+    def _apply(self, item: Item) -> None:
+        """An edit or a freeze takes effect here: the slice leaves the hand at once."""
+        self._leasing.forget(item.id)
+        if item.limits.frozen:
+            self._leasing.hand.retire(item.id)
+
+    def _beat(self, connection: Writing) -> None:
+        wall = clock.wall_clock(connection, self._database)
+        workers.beat(connection, self._worker, self._catalog.change_seen, wall)
+
+    async def _follow_changes(self) -> None:
+        while True:
+            await self._unless_away(self.follow)
+            try:
+                async with asyncio.timeout(self._rhythm.change_poll_ms / 1000):
+                    await self._news.wait()
+            except TimeoutError:
+                continue
+            self._news.clear()
+
+    async def _every(self, seconds: float, duty: Callable[[], Awaitable[None]]) -> None:
+        while True:
+            await asyncio.sleep(seconds)
+            await self._unless_away(duty)
+
+    async def _unless_away(self, duty: Callable[[], Awaitable[None]]) -> None:
+        try:
+            await duty()
+        except StoreAway:
+            logger.warning("the database is away; trying again")
+            await asyncio.sleep(AWAY_S)
