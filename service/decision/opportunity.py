@@ -1,0 +1,34 @@
+"""One impression opportunity as the caller described it, apart from HTTP."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+Feature = str | float | bool
+
+
+@dataclass(frozen=True, slots=True)
+class Opportunity:
+    """
+    What is asked: name a price for this impression.
+
+    Args:
+        line_item: Who would buy it.
+        request_id: The caller's own name for it, echoed only.
+        source: Where it is sold.
+        floor: Least price the seller takes, in nanos per impression.
+        features: What is known of it.
+        value_hint: The caller's own prediction of its value in nanos; not used yet.
+        deadline_ms: How long the caller waits, counted from arrival.
+        test: Answered and signed, but without a hold or a lesson.
+    """
+
+    line_item: str
+    request_id: str | None = None
+    source: str = "default"
+    floor: int = 0
+    features: Mapping[str, Feature] = field(default_factory=dict)
+    value_hint: int | None = None
+    deadline_ms: int | None = None
+    test: bool = False
