@@ -1,0 +1,41 @@
+"""Who may call what: one bearer key with scopes, apart so that every route asks the same way."""
+
+from __future__ import annotations
+
+import re
+
+from starlette.requests import Request
+
+from service.api.stories import Caller, stories
+from service.errors import Forbidden, Unauthenticated
+
+_BEARER = re.compile(r"bearer +([!-~]{1,256})", re.IGNORECASE)
+
+
+async def require(request: Request, scope: str) -> Caller:
+    """
+    The key this request came with, if it has the scope; `admin` implies all.
+
+    Raises:
+        Unauthenticated: No bearer key, or none that we know.
+        Forbidden: The key lacks the scope.
+        StoreAway: The key could not be looked up.
+    """
+    key = await stories(request).operator.key_for(_bearer(request))
+    if key is None:
+        raise Unauthenticated("unknown_key", "The key is unknown or has ended.")
+    if not key.allows(scope):
+        raise Forbidden("scope_missing", "The key lacks the scope of this call.", {"scope": scope})
+    return key
+
+
+def actor(caller: Caller) -> str:
+    """Who did it, for the journal; two keys may share a name, so the id stands beside it."""
+    return f"{caller.name} ({caller.id})"
+
+
+def _bearer(request: Request) -> str:
+    matched = _BEARER.fullmatch(request.headers.get("authorization", ""))
+    if matched is None:
+        raise Unauthenticated("no_key", "Send a key as Authorization: Bearer.")
+    return matched.group(1)
