@@ -1,0 +1,1 @@
+"""The forms callers fill in: one pydantic model per body, and what becomes of it inside."""

@@ -1,0 +1,105 @@
+"""The forms of one opportunity and of a batch of them."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Annotated, Literal
+
+from pydantic import AfterValidator, Field
+
+from service.api.forms import refused
+from service.api.forms.fields import Features, FloorCpm, LineItemId, Printable, SeenValue
+from service.api.forms.reading import OpenForm, bad_field, read, unknown_fields
+from service.decision.opportunity import Opportunity
+from service.errors import Refusal
+
+BATCH_ROWS_MAX = 500
+
+Deadline = Annotated[int, Field(ge=0, le=60_000, description="Milliseconds from arrival here.")]
+
+
+class BidForm(OpenForm):
+    """One impression opportunity that asks for a price."""
+
+    line_items: refused.LineItems = None
+    price_cpm: refused.FixedPrice = None
+    line_item: LineItemId
+    request_id: Printable | None = None
+    source: Printable = "default"
+    auction: (
+        Annotated[Literal["first", "second", "fixed"], AfterValidator(refused.second_price)] | None
+    ) = None
+    floor_cpm: FloorCpm | None = None
+    features: Features | None = None
+    value_hint: SeenValue | None = None
+    deadline_ms: Deadline | None = None
+    test: bool = False
+
+
+class BatchForm(OpenForm):
+    """Up to 500 opportunities and one deadline for all of them."""
+
+    opportunities: Annotated[list[object], Field(min_length=1, max_length=BATCH_ROWS_MAX)]
+    deadline_ms: Deadline | None = None
+
+
+def read_bid(members: Mapping[str, object]) -> tuple[Opportunity, set[str]]:
+    """
+    Read one opportunity, and which of its fields were not used as sent.
+
+    Raises:
+        Malformed: A field is not of its form.
+        NotOffered: The opportunity asks for what this release does not do.
+    """
+    form = read(BidForm, members)
+    return _opportunity(form, form.deadline_ms), _unused(form, members)
+
+
+def read_batch(
+    members: Mapping[str, object],
+) -> tuple[list[Opportunity | Refusal], set[str]]:
+    """
+    Read a batch, each row alone: a bad row becomes its own refusal.
+
+    Raises:
+        Malformed: There is no list of 1 to 500 opportunities, or the deadline is none.
+    """
+    batch = read(BatchForm, members)
+    unused = unknown_fields(BatchForm, members)
+    rows: list[Opportunity | Refusal] = []
+    for row in batch.opportunities:
+        try:
+            rows.append(_row(row, batch.deadline_ms, unused))
+        except Refusal as refusal:
+            rows.append(refusal)
+    return rows, unused
+
+
+def _row(row: object, deadline_ms: int | None, unused: set[str]) -> Opportunity:
+    if not isinstance(row, dict):
+        raise bad_field("", "An opportunity must be an object.")
+    form = read(BidForm, row)
+    unused |= _unused(form, row)
+    return _opportunity(form, form.deadline_ms if deadline_ms is None else deadline_ms)
+
+
+def _opportunity(form: BidForm, deadline_ms: int | None) -> Opportunity:
+    return Opportunity(
+        line_item=form.line_item,
+        request_id=form.request_id,
+        source=form.source,
+        floor=max(0, form.floor_cpm or 0),
+        features=form.features or {},
+        value_hint=form.value_hint,
+        deadline_ms=deadline_ms,
+        test=form.test,
+    )
+
+
+def _unused(form: BidForm, members: Mapping[str, object]) -> set[str]:
+    names = unknown_fields(BidForm, members)
+    if form.value_hint is not None:
+        names.add("value_hint")
+    if form.floor_cpm is not None and form.floor_cpm < 0:
+        names.add("floor_cpm")
+    return names

@@ -1,0 +1,93 @@
+"""The form that creates a line item, with the limits of every field."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+from pydantic import AfterValidator, Field
+
+from service.api.forms import refused
+from service.api.forms.fields import (
+    Amount,
+    CapCpm,
+    Currency,
+    LineItemId,
+    Moment,
+    Name,
+    Printable,
+    TimeZone,
+)
+from service.api.forms.policies import PolicyForm
+from service.api.forms.reading import StrictForm
+
+DAY_S = 86_400
+
+Grace = Annotated[int, Field(ge=1, le=30 * DAY_S, description="Seconds.")]
+Window = Annotated[int, Field(ge=1, le=400 * DAY_S, description="Seconds.")]
+
+
+class FlightForm(StrictForm):
+    """When the line item may bid; its days are days of its zone."""
+
+    starts_at: Moment | None = None
+    ends_at: Moment | None = None
+    time_zone: TimeZone = "UTC"
+
+
+class ExpectedForm(StrictForm):
+    """A guess at the value of one impression, and what it weighs in conversions."""
+
+    per_impression: Amount | None = None
+    conversions: Annotated[int, Field(ge=1, le=1_000_000)] = 1
+
+
+class ValueForm(StrictForm):
+    """What one event may be worth, and how its news arrives."""
+
+    ceiling: Amount | None = None
+    typical: Amount | None = None
+    arrival: Literal["accrues", "once"] = "accrues"
+    window_s: Window = 604_800
+    delay_mean_s: Window | None = None
+    expected: ExpectedForm | None = None
+
+
+class PacingForm(StrictForm):
+    """How the budget is spread; this release offers none."""
+
+    method: Annotated[Literal["none", "dual"], AfterValidator(refused.no_pacing)] = "none"
+    profile: refused.Profile = None
+
+
+class NotYetForm(StrictForm):
+    """What the contract knows of a line item and this release refuses."""
+
+    return_target: refused.ReturnTarget = None
+    allowance: refused.Allowance = None
+    control: refused.Control = None
+    kin: refused.Kin = None
+    fees: refused.Fees = None
+    tripwires: refused.Tripwires = None
+
+
+class CreateForm(NotYetForm):
+    """A new line item; everything after the cap has a default."""
+
+    id: LineItemId
+    name: Name
+    currency: Currency
+    budget: Amount
+    bid_cap_cpm: CapCpm
+    daily_budget: Amount | None = None
+    auction: Annotated[
+        Literal["first", "second", "fixed"], AfterValidator(refused.second_price)
+    ] = "second"
+    flight: FlightForm = FlightForm()
+    spend_on: Literal["won", "billed"] = "won"
+    grace_s: Grace = 900
+    billing_grace_s: Grace = DAY_S
+    strict: bool = False
+    value: ValueForm = ValueForm()
+    policy: PolicyForm | None = None
+    pacing: PacingForm = PacingForm()
+    confirm: Printable | None = None

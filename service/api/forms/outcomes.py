@@ -1,0 +1,127 @@
+"""The forms of outcomes: one per kind, and a row that does not fit is a refusal of that row."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Annotated, Literal, TypeAlias
+
+from pydantic import Field
+
+from service.api.forms.fields import Instant, Name, Printable, SeenCpm, SeenValue, Ticket
+from service.api.forms.reading import OpenForm, bad_field, read, unknown_fields
+from service.errors import Malformed
+from service.feedback import Receipt, Report
+
+OUTCOMES_MAX = 1000
+
+
+class WonForm(OpenForm):
+    """The bid won at this clearing price."""
+
+    kind: Literal["won"]
+    ticket: Ticket
+    clearing_cpm: SeenCpm
+    to_win_cpm: SeenCpm | None = None
+    at: Instant | None = None
+
+
+class LostForm(OpenForm):
+    """The bid was beaten on price."""
+
+    kind: Literal["lost"]
+    ticket: Ticket
+    to_win_cpm: SeenCpm | None = None
+    at: Instant | None = None
+
+
+class VoidForm(OpenForm):
+    """The bid neither won nor lost on price, so it teaches nothing."""
+
+    kind: Literal["void"]
+    ticket: Ticket
+    why: Name | None = None
+    at: Instant | None = None
+
+
+class BilledForm(OpenForm):
+    """The win was billed at this price."""
+
+    kind: Literal["billed"]
+    ticket: Ticket
+    clearing_cpm: SeenCpm
+    at: Instant | None = None
+
+
+class ValuedForm(OpenForm):
+    """A win brought this value; by its ticket or by its ref."""
+
+    kind: Literal["value"]
+    ticket: Ticket | None = None
+    ref: Printable | None = None
+    value: SeenValue
+    event_id: Printable
+    corrects: Printable | None = None
+    at: Instant | None = None
+
+
+class OutcomesForm(OpenForm):
+    """Up to 1,000 outcomes, each of which stands or falls alone."""
+
+    outcomes: Annotated[list[object], Field(min_length=1, max_length=OUTCOMES_MAX)]
+
+
+OutcomeForm: TypeAlias = WonForm | LostForm | VoidForm | BilledForm | ValuedForm
+FORMS: dict[str, type[OutcomeForm]] = {
+    "won": WonForm,
+    "lost": LostForm,
+    "void": VoidForm,
+    "billed": BilledForm,
+    "value": ValuedForm,
+}
+CODES = {
+    "clearing_cpm": "bad_price",
+    "to_win_cpm": "bad_price",
+    "value": "bad_value",
+    "ticket": "bad_ticket",
+}
+
+
+def read_outcomes(members: Mapping[str, object]) -> tuple[list[Report | Receipt], set[str]]:
+    """
+    Read outcomes, each row alone: a bad row becomes a receipt that refuses it.
+
+    Raises:
+        Malformed: There is no list of 1 to 1,000 outcomes.
+    """
+    unused = unknown_fields(OutcomesForm, members)
+    rows: list[Report | Receipt] = []
+    for row in read(OutcomesForm, members).outcomes:
+        try:
+            rows.append(_report(row, unused))
+        except Malformed as refusal:
+            rows.append(refused_row(refusal))
+    return rows, unused
+
+
+def refused_row(refusal: Malformed) -> Receipt:
+    """The receipt of a row that never became a report."""
+    code = CODES.get(str(refusal.data.get("field", "")), refusal.code)
+    return Receipt(ref=None, status="refused", code=code, detail=refusal.detail)
+
+
+def _report(row: object, unused: set[str]) -> Report:
+    if not isinstance(row, dict):
+        raise bad_field("", "An outcome must be an object.")
+    kind = row.get("kind")
+    form = FORMS.get(kind) if isinstance(kind, str) else None
+    if form is None:
+        raise bad_field("kind", "It must be won, lost, void, billed or value.")
+    unused |= unknown_fields(form, row)
+    return _as_report(read(form, row))
+
+
+def _as_report(form: OutcomeForm) -> Report:
+    if isinstance(form, ValuedForm) and form.ticket is None and form.ref is None:
+        raise bad_field("ref", "A value needs the ref or the ticket of its bid.")
+    names = {"clearing_cpm": "clearing", "to_win_cpm": "to_win"}
+    return Report(**{names.get(name, name): value for name, value in form})
