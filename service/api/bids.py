@@ -1,0 +1,46 @@
+"""The routes that ask for a price."""
+
+from __future__ import annotations
+
+import time
+
+from fastapi import APIRouter
+from starlette.requests import Request
+from starlette.responses import Response
+
+from service.api import answers
+from service.api.access import require
+from service.api.body import BATCH_BYTES_MAX, read_object
+from service.api.documentation import described
+from service.api.forms.bids import BatchForm, BidForm, read_batch, read_bid
+from service.api.stories import stories
+from service.decision.opportunity import Opportunity
+from service.errors import Refusal
+
+router = APIRouter()
+
+
+@router.post("/v1/bids", **described("Ask for a price for one opportunity.", "bid", BidForm))
+async def post_bid(request: Request) -> Response:
+    """Answer one opportunity with a bid or a pass."""
+    arrived = time.monotonic()
+    await require(request, "bid")
+    opportunity, unused = read_bid(await read_object(request))
+    answer = await stories(request).bidder.bid(opportunity, arrived)
+    return answers.json_answer(answers.with_warnings(answers.bid(answer), unused))
+
+
+@router.post("/v1/bids/batch", **described("Ask for up to 500 prices.", "bid", BatchForm))
+async def post_batch(request: Request) -> Response:
+    """Answer each opportunity in its place; a bad row is an error in its place."""
+    arrived = time.monotonic()
+    await require(request, "bid")
+    rows, unused = read_batch(await read_object(request, BATCH_BYTES_MAX))
+    good = [row for row in rows if isinstance(row, Opportunity)]
+    priced = iter(await stories(request).bidder.bid_batch(good, arrived) if good else [])
+    results = [next(priced) if isinstance(row, Opportunity) else row for row in rows]
+    written = [
+        answers.bad_row(result) if isinstance(result, Refusal) else answers.bid(result)
+        for result in results
+    ]
+    return answers.json_answer(answers.with_warnings({"answers": written}, unused))

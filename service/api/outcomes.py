@@ -1,0 +1,29 @@
+"""The route that takes what became of bids."""
+
+from __future__ import annotations
+
+from fastapi import APIRouter
+from starlette.requests import Request
+from starlette.responses import Response
+
+from service.api import answers
+from service.api.access import require
+from service.api.body import BATCH_BYTES_MAX, read_object
+from service.api.documentation import described
+from service.api.forms.outcomes import OutcomesForm, read_outcomes
+from service.api.stories import stories
+from service.feedback import Report
+
+router = APIRouter()
+
+
+@router.post("/v1/outcomes", **described("Report up to 1,000 outcomes.", "report", OutcomesForm))
+async def post_outcomes(request: Request) -> Response:
+    """Answer each outcome in its place, once it is durable; a bad row spoils no other."""
+    await require(request, "report")
+    rows, unused = read_outcomes(await read_object(request, BATCH_BYTES_MAX))
+    good = [row for row in rows if isinstance(row, Report)]
+    recorded = iter(await stories(request).feedback.report(good) if good else [])
+    results = [next(recorded) if isinstance(row, Report) else row for row in rows]
+    written: dict[str, object] = {"results": [answers.receipt(result) for result in results]}
+    return answers.json_answer(answers.with_warnings(written, unused))

@@ -1,0 +1,25 @@
+"""Everything that HTTP can reach, hung on the app in one place."""
+
+from __future__ import annotations
+
+from fastapi import FastAPI
+
+from service.api import bids, documentation, health, line_items, orders, outcomes
+from service.api.problems import install_handlers
+
+ROUTERS = (
+    bids.router,
+    outcomes.router,
+    line_items.router,
+    orders.router,
+    health.router,
+    documentation.router,
+)
+
+
+def install(app: FastAPI) -> None:
+    """Add every route and every error handler; a path with a slash too many is not found."""
+    app.router.redirect_slashes = False
+    for router in ROUTERS:
+        app.include_router(router)
+    install_handlers(app)
