@@ -8,7 +8,9 @@ import sys
 from service.commands import audit, bench_real, demo, keys, migrate, serve
 from service.errors import BidkeelError
 
-EXIT_CODES = "exit codes: 0 done, 1 refused or failed, 2 wrong usage, 3 the audit found a difference"
+EXIT_CODES = (
+    "exit codes: 0 done, 1 refused or failed, 2 wrong usage, 3 the audit found a difference"
+)
 
 
 def main(words: list[str] | None = None) -> int:

@@ -7,9 +7,10 @@ import logging
 import os
 import secrets
 import signal
-from collections.abc import AsyncIterator
+from collections.abc import AsyncIterator, Coroutine
 from contextlib import asynccontextmanager
 from dataclasses import dataclass
+from typing import Any
 
 from fastapi import FastAPI
 
@@ -82,7 +83,7 @@ async def running(settings: Settings) -> AsyncIterator[Stories]:
         require_current(database)
         stories, upkeep, loops = _build(settings, database, threads)
         await upkeep.start()
-        tasks = [asyncio.ensure_future(duty) for duty in loops]
+        tasks = [asyncio.create_task(duty) for duty in loops]
         for task in tasks:
             task.add_done_callback(_stop_if_broken)
         yield stories
@@ -97,7 +98,7 @@ async def running(settings: Settings) -> AsyncIterator[Stories]:
 
 def _build(
     settings: Settings, database: Database, threads: Threads
-) -> tuple[Stories, Upkeep, list[object]]:
+) -> tuple[Stories, Upkeep, list[Coroutine[Any, Any, None]]]:
     worker = f"{os.getpid()}-{secrets.token_hex(4)}"
     news = asyncio.Event()
     keys = TicketKeys(_ticket_keys(settings, database))
@@ -117,11 +118,15 @@ def _build(
         settings.decision_keep_days,
     )
     upkeep = Upkeep(database, threads, worker, catalog, leasing, bidder, news, rhythm)
-    return Stories(bidder, feedback, operator), upkeep, [
-        leasing.run(),
-        feedback.run(),
-        *upkeep.duties(),
-    ]
+    return (
+        Stories(bidder, feedback, operator),
+        upkeep,
+        [
+            leasing.run(),
+            feedback.run(),
+            *upkeep.duties(),
+        ],
+    )
 
 
 def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:
@@ -132,7 +137,7 @@ def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:
     return [bytes.fromhex(database.read(lambda connection: fact(connection, "ticket_key")))]
 
 
-def _stop_if_broken(task: asyncio.Future[object]) -> None:
+def _stop_if_broken(task: asyncio.Future[None]) -> None:
     """A duty that dies takes the worker with it; its slices come back, its tickets settle."""
     if task.cancelled() or task.exception() is None:
         return

@@ -146,6 +146,4 @@ def _item(row: line_items.Row, snapshot: learners.Snapshot | None, before: Item 
 def limits_of(row: line_items.Row) -> Limits:
     """What binds every price of this line item."""
     flight: dict[str, Any] = row.config["flight"]
-    return Limits(
-        row.config["bid_cap"], flight["starts_ms"], flight["ends_ms"], bool(row.freezes)
-    )
+    return Limits(row.config["bid_cap"], flight["starts_ms"], flight["ends_ms"], bool(row.freezes))

@@ -87,9 +87,7 @@ class Feedback:
         read = await self._find_refs(reports, read)
         rows = [row for row in read if isinstance(row, Booking)]
         booked = iter(await self._book(rows) if rows else [])
-        return [
-            row if isinstance(row, Receipt) else _receipt(row, next(booked)) for row in read
-        ]
+        return [row if isinstance(row, Receipt) else _receipt(row, next(booked)) for row in read]
 
     async def run(self) -> None:
         """Book what waits, group by group, until cancelled."""
@@ -207,9 +205,7 @@ def _read_ref(report: Report) -> Booking | Receipt:
         return Receipt(None, "refused", "bad_ref")
 
 
-def _placed(
-    row: Booking | Receipt, found: dict[bytes, str], ref: str | None
-) -> Booking | Receipt:
+def _placed(row: Booking | Receipt, found: dict[bytes, str], ref: str | None) -> Booking | Receipt:
     if isinstance(row, Receipt) or row.line_item:
         return row
     if row.event.bid not in found:

@@ -1,4 +1,4 @@
-"""The fourth story: people order (create, change, freeze, thaw, reset) and everything is journalled.
+"""The fourth story: people give orders (create, change, freeze, thaw, reset), all journalled.
 
 Each order is one transaction with its journal row and its change number, and it answers
 with what was before and what is after.
@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import asyncio
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import asdict, dataclass
 from typing import Any
 
@@ -29,6 +29,7 @@ from service.threads import Threads
 
 __all__ = ["Key", "Operator", "View"]
 
+CEILING_CAPS = 20  # An unnamed ceiling is the largest for which a published bound still says much.
 IN_FORCE_S = 1.0
 LOOK_S = 0.02
 
@@ -75,7 +76,7 @@ class Operator:
             NeedsConfirmation: Allowed only with the word named in the refusal.
             Conflict: The id is taken, or the key was used for another call.
         """
-        filled, taken = defaults(config)
+        filled, taken = _filled(config)
         _object(filled, confirm)
 
         def order(connection: Writing) -> dict[str, Any]:
@@ -171,9 +172,7 @@ class Operator:
             return self._stopped(connection, "thaw", name, before, reason, actor)
 
         wish = {"call": "thaw", "line_item": line_item, "reason": reason}
-        return await self._in_force(
-            await self._order(order, _repeat(actor, idempotency, wish))
-        )
+        return await self._in_force(await self._order(order, _repeat(actor, idempotency, wish)))
 
     async def reset(
         self, line_item: str, reason: str, actor: str, idempotency: str | None = None
@@ -217,7 +216,7 @@ class Operator:
 
     def _frozen(
         self, connection: Writing, line_item: str | None
-    ) -> tuple[str, str, list[dict[str, Any]]]:
+    ) -> tuple[str, str, Sequence[dict[str, Any]]]:
         if line_item is None:
             return changes.ALL, "all", freezes.on(connection, [changes.ALL])[changes.ALL]
         return line_item, "person", line_items.one(connection, line_item).freezes
@@ -227,7 +226,7 @@ class Operator:
         connection: Writing,
         action: str,
         name: str,
-        before: list[dict[str, Any]],
+        before: Sequence[dict[str, Any]],
         reason: str,
         actor: str,
     ) -> dict[str, Any]:
@@ -283,6 +282,15 @@ def _object(config: Mapping[str, Any], confirm: str | None) -> None:
     raise Malformed(found.code, found.detail)
 
 
+def _filled(config: Mapping[str, Any]) -> tuple[dict[str, Any], list[str]]:
+    """Defaults for what nobody gave; the answer names them."""
+    value = dict(config.get("value") or {})
+    taken = [] if value.get("ceiling") else ["value.ceiling"]
+    value["ceiling"] = value.get("ceiling") or CEILING_CAPS * config["bid_cap"]
+    filled, more = defaults({**config, "value": value})
+    return filled, taken + more
+
+
 def _view(row: Row, taken: list[str]) -> View:
     return View(
         row.id,
@@ -301,12 +309,13 @@ def _repeat(actor: str, key: str | None, wish: Mapping[str, Any]) -> Repeat | No
 
 
 def _merged(config: Mapping[str, Any], changed: Mapping[str, Any]) -> dict[str, Any]:
-    """Objects are merged, everything else is replaced; a new method begins with its own settings."""
+    """Objects are merged, all else is replaced; a new method begins with its own settings."""
     merged = dict(config)
     for name, value in changed.items():
         old = merged.get(name)
-        whole = name == "policy" or not (isinstance(value, Mapping) and isinstance(old, Mapping))
-        merged[name] = value if whole else _merged(old, value)
+        if name != "policy" and isinstance(value, Mapping) and isinstance(old, Mapping):
+            value = _merged(old, value)
+        merged[name] = value
     return merged
 
 

@@ -1,14 +1,14 @@
-"""What people see of a line item, composed of plain facts; pure, so that it can be read in a test."""
+"""What people see of a line item, composed of plain facts; pure, so a test can read it."""
 
 from __future__ import annotations
 
 from typing import Any
 
+from service.catalog import limits_of
 from service.decision.learnability import learnability
 from service.decision.price import ready
 from service.decision.terms import Terms
-from service.guard.gate import Cleared, clear
-from service.catalog import limits_of
+from service.guard.gate import clear
 from service.learner.tally import Tally
 from service.store.reading import Facts
 
@@ -37,18 +37,14 @@ def show(facts: Facts) -> dict[str, Any]:
 def _bid(facts: Facts, learnt: dict[str, Any]) -> dict[str, Any]:
     """What an opportunity without a floor would be answered now, and what sets it."""
     limits = limits_of(facts.row)
-    free = limits.cap
-    cleared = clear(learnt["bid_nanos"], learnt["set_by"], limits, 0, free)
-    if isinstance(cleared, Cleared):
-        price, set_by = cleared.price, cleared.set_by
-    else:
-        price, set_by = 0, cleared
-    return {
-        "method": learnt["method"],
-        "price_cpm_nanos": price,
-        "set_by": set_by,
-        "snapshot": facts.snapshot.seq,
-    }
+    said = {"method": learnt["method"], "snapshot": facts.snapshot.seq}
+    none = {"price_cpm_nanos": None, "set_by": None}
+    if learnt["bid_nanos"] is None:
+        return said | none | {"pass": learnt["pass"]}
+    cleared = clear(learnt["bid_nanos"], learnt["set_by"], limits, 0, limits.cap)
+    if isinstance(cleared, str):
+        return said | none | {"pass": cleared}
+    return said | {"price_cpm_nanos": cleared.price, "set_by": cleared.set_by, "pass": None}
 
 
 def _learner(facts: Facts, tally: Tally) -> dict[str, Any]:

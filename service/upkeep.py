@@ -8,8 +8,9 @@ from __future__ import annotations
 
 import asyncio
 import logging
-from collections.abc import Awaitable, Callable
+from collections.abc import Awaitable, Callable, Coroutine
 from dataclasses import dataclass
+from typing import Any
 
 from service.bidding import Bidder
 from service.catalog import Catalog, Item
@@ -18,7 +19,7 @@ from service.learner.fold import fold
 from service.learner.tally import Tally
 from service.leasing import Leasing
 from service.ledger.entries import Body
-from service.store import clock, decisions, leases, learners, workers
+from service.store import clock, decisions, learners, leases, workers
 from service.store.database import Database, Writing
 from service.threads import Threads
 
@@ -63,7 +64,7 @@ class Upkeep:
         self._catalog, self._leasing, self._bidder = catalog, leasing, bidder
         self._news, self._rhythm = news, rhythm
 
-    def duties(self) -> list[Awaitable[None]]:
+    def duties(self) -> list[Coroutine[Any, Any, None]]:
         """Every loop, to be run until cancelled."""
         rhythm = self._rhythm
         return [
@@ -132,12 +133,9 @@ class Upkeep:
 
     async def log(self) -> None:
         """Write queued decisions."""
-        while batch := self._bidder.drain(DECISIONS_MAX):
-            rows = list(batch)
+        while rows := self._bidder.drain(DECISIONS_MAX):
             try:
-                await self._threads.run(
-                    self._database.write, lambda connection: decisions.log(connection, rows)
-                )
+                await self._threads.run(decisions.log, self._database, rows)
             except StoreAway:
                 self._bidder.put_back(rows)
                 return

@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import json
 import sys
+from collections.abc import Mapping
 
 from service.app import open_database
 from service.errors import Malformed
@@ -62,6 +63,6 @@ def _line(row: dict[str, object]) -> str:
     return f"{row['id']}  {state:5}  {row['scopes']}  {row['name']}"
 
 
-def _say(arguments: argparse.Namespace, told: dict[str, object], text: str) -> int:
+def _say(arguments: argparse.Namespace, told: Mapping[str, object], text: str) -> int:
     sys.stdout.write((json.dumps(told) if arguments.json else text) + "\n")
     return 0

@@ -35,7 +35,9 @@ def run(arguments: argparse.Namespace) -> int:
     """Serve until a signal; slices are given back before this returns."""
     settings = load()
     if settings.workers > 1:
-        raise Unsafe("One serve is one worker: on PostgreSQL start as many as you want, each alone.")
+        raise Unsafe(
+            "One serve is one worker: on PostgreSQL start as many as you want, each alone."
+        )
     with sole_server(settings):
         prepare(settings)
         uvicorn.run(

@@ -151,6 +151,8 @@ def _text(raw: bytes) -> str:
 
 def _bytes(text: str) -> bytes:
     try:
-        return base64.b64decode(text.encode("ascii") + b"=" * (-len(text) % 4), b"-_", validate=True)
+        return base64.b64decode(
+            text.encode("ascii") + b"=" * (-len(text) % 4), b"-_", validate=True
+        )
     except (binascii.Error, UnicodeEncodeError) as error:
         raise BadTicket("not of our alphabet") from error

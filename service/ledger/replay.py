@@ -72,9 +72,7 @@ def _edit(books: Replayed, budget: int) -> None:
     books.budget = budget
 
 
-def _outcome(
-    books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[str, Any]
-) -> None:
+def _outcome(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[str, Any]) -> None:
     row = books.slices.get(body["slice"] or "")
     hold, price = body["bid"], body["price"] or 0
     if kind == "billed":

@@ -205,6 +205,6 @@ def _said(outcome: Outcome) -> dict[str, object]:
 
 
 def _same(taken: tuple[str, Body], outcome: Outcome) -> bool:
-    kind, body = taken
+    _, body = taken
     content = (body["said"], body["price"], body["to_win"])
     return content == (outcome.kind, outcome.price, outcome.to_win)

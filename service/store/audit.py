@@ -75,7 +75,9 @@ def audit(connection: Reading) -> list[Finding]:
 
 def unfunded(connection: Reading) -> int:
     """V8's figure: the sum of costs that found no free money, in nanos."""
-    return int(connection.execute(text("SELECT coalesce(sum(unfunded), 0) FROM balance")).scalar_one())
+    return int(
+        connection.execute(text("SELECT coalesce(sum(unfunded), 0) FROM balance")).scalar_one()
+    )
 
 
 def _line_items(connection: Reading) -> list[str]:

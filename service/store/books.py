@@ -10,15 +10,13 @@ from collections.abc import Iterable
 from dataclasses import replace
 from typing import Any
 
-from sqlalchemy import bindparam, text
+from sqlalchemy import text
 
 from service.errors import BrokenPromise
 from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
 from service.ledger.entries import Entry
 from service.store.clock import now_ms
-from service.store.database import Writing, locking
-
-SLICE_COLUMNS = "id, line_item, worker, day, amount, remaining, owed, ticked, counted, state"
+from service.store.database import Writing, among, locking
 
 
 class Books:
@@ -46,9 +44,7 @@ class Books:
 
     def load_slices(self, ids: Iterable[bytes]) -> None:
         """Read these slices and the days they belong to."""
-        statement = text(f"SELECT {SLICE_COLUMNS} FROM slice WHERE id IN :ids")
-        statement = statement.bindparams(bindparam("ids", expanding=True))
-        for row in self._connection.execute(statement, {"ids": sorted(set(ids))}):
+        for row in self._connection.execute(_SELECT_SLICES, {"ids": sorted(set(ids))}):
             self._keep_slice(Slice(**{**row._mapping, "id": bytes(row.id)}))
         self.load_days({(s.line_item, s.day) for s in self.slices.values()})
 
@@ -62,7 +58,9 @@ class Books:
             row = self._connection.execute(statement, {"line_item": line_item, "day": day})
             found = row.one_or_none()
             if found is not None:
-                self.days[line_item, day] = self._days_before[line_item, day] = Day(**found._mapping)
+                self.days[line_item, day] = self._days_before[line_item, day] = Day(
+                    **found._mapping
+                )
 
     def open_day(self, line_item: str, day: str, budget: int) -> Day:
         """The day's row, made with this budget when it is the first use of the day."""
@@ -70,10 +68,7 @@ class Books:
         if (line_item, day) not in self.days:
             fresh = Day(line_item, day, budget, budget, 0, 0, 0)
             self._connection.execute(
-                text(
-                    "INSERT INTO local_day (line_item, day, budget, target, spent, held, over_spent)"
-                    " VALUES (:line_item, :day, :budget, :budget, 0, 0, 0)"
-                ),
+                _INSERT_DAY,
                 {"line_item": line_item, "day": day, "budget": budget},
             )
             self.days[line_item, day] = self._days_before[line_item, day] = fresh
@@ -81,10 +76,8 @@ class Books:
 
     def new_slice(self, fresh: Slice, times_ms: dict[str, int]) -> None:
         """Insert a slice; its money is counted as held by the movement posted with it."""
-        columns = f"{SLICE_COLUMNS}, leased_ms, expires_ms, close_ms, billing_close_ms"
-        values = ", ".join(f":{name}" for name in columns.split(", "))
-        row = {name: getattr(fresh, name) for name in SLICE_COLUMNS.split(", ")} | times_ms
-        self._connection.execute(text(f"INSERT INTO slice ({columns}) VALUES ({values})"), row)
+        row = {name: getattr(fresh, name) for name in fresh.__slots__} | times_ms
+        self._connection.execute(_INSERT_SLICE, row)
         self._keep_slice(fresh)
 
     def post(
@@ -142,11 +135,9 @@ class Books:
             self._connection.execute(_INSERT_ENTRY, self._rows)
 
     def _lock(self, line_items: list[str]) -> dict[str, Account]:
-        statement = text(
-            "SELECT line_item, budget, target, spent, held, unfunded, disputed, seq, at_ms"
-            f" FROM balance WHERE line_item IN :ids ORDER BY line_item{locking(self._connection)}"
-        ).bindparams(bindparam("ids", expanding=True))
-        rows = self._connection.execute(statement, {"ids": line_items})
+        rows = self._connection.execute(
+            locking(self._connection, _SELECT_BALANCES), {"ids": line_items}
+        )
         return {row.line_item: Account(**row._mapping) for row in rows}
 
     def _keep_slice(self, found: Slice) -> None:
@@ -195,6 +186,24 @@ def _differences(before: Any, after: Any, sums: tuple[str, ...]) -> dict[str, An
     return row | {name: row[name] - getattr(before, name) for name in sums}
 
 
+_SELECT_BALANCES = (
+    "SELECT line_item, budget, target, spent, held, unfunded, disputed, seq, at_ms"
+    " FROM balance WHERE line_item IN :ids ORDER BY line_item"
+)
+_SELECT_SLICES = among(
+    "SELECT id, line_item, worker, day, amount, remaining, owed, ticked, counted, state"
+    " FROM slice WHERE id IN :ids"
+)
+_INSERT_SLICE = text(
+    "INSERT INTO slice (id, line_item, worker, day, amount, remaining, owed, ticked, counted,"
+    " state, leased_ms, expires_ms, close_ms, billing_close_ms) VALUES (:id, :line_item, :worker,"
+    " :day, :amount, :remaining, :owed, :ticked, :counted, :state, :leased_ms, :expires_ms,"
+    " :close_ms, :billing_close_ms)"
+)
+_INSERT_DAY = text(
+    "INSERT INTO local_day (line_item, day, budget, target, spent, held, over_spent)"
+    " VALUES (:line_item, :day, :budget, :budget, 0, 0, 0)"
+)
 _UPDATE_BALANCE = text(
     "UPDATE balance SET budget = :budget, target = :target, spent = spent + :spent,"
     " held = held + :held, unfunded = unfunded + :unfunded, disputed = disputed + :disputed,"

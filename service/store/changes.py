@@ -25,7 +25,9 @@ def announce(connection: Writing, kind: str, line_items: list[str]) -> int:
         for place, line_item in enumerate(line_items)
     ]
     connection.execute(
-        text("INSERT INTO change_log (number, kind, line_item) VALUES (:number, :kind, :line_item)"),
+        text(
+            "INSERT INTO change_log (number, kind, line_item) VALUES (:number, :kind, :line_item)"
+        ),
         rows,
     )
     return int(last)

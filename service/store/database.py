@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-import random
+import secrets
 import threading
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from typing import NewType, TypeVar
 
-from sqlalchemy import Connection, create_engine, event, text
+from sqlalchemy import Connection, TextClause, bindparam, create_engine, event, text
 from sqlalchemy.exc import DBAPIError, OperationalError
 from sqlalchemy.exc import TimeoutError as PoolTimeout
 
@@ -71,7 +71,7 @@ class Database:
                     return work(Writing(connection))
             except (DBAPIError, PoolTimeout) as error:
                 _raise_unless_retried(error, attempt)
-            time.sleep(random.SystemRandom().uniform(0.002, 0.02) * (attempt + 1))
+            time.sleep((2 + secrets.randbelow(20)) * (attempt + 1) / 1000)
         raise StoreAway("the database kept refusing")
 
     def read(self, work: Callable[[Reading], T]) -> T:
@@ -120,9 +120,24 @@ class Database:
             yield connection
 
 
-def locking(connection: Connection) -> str:
-    """The row lock of PostgreSQL; SQLite took its lock when the transaction began."""
-    return "" if connection.dialect.name == "sqlite" else " FOR NO KEY UPDATE"
+def among(statement: str, *names: str) -> TextClause:
+    """A statement whose `IN :ids` (or the names given) take lists."""
+    lists: list[BindParameter[Any]] = [
+        bindparam(name, expanding=True) for name in names or ("ids",)
+    ]
+    return text(statement).bindparams(*lists)
+
+
+def locking(connection: Connection, statement: str, *, skip: bool = False) -> TextClause:
+    """
+    A SELECT with the row lock of PostgreSQL; SQLite took its lock when it began.
+
+    Args:
+        skip: Pass rows by that somebody else has locked.
+    """
+    if connection.dialect.name != "sqlite":
+        statement += " FOR NO KEY UPDATE" + (" SKIP LOCKED" if skip else "")
+    return among(statement) if ":ids" in statement else text(statement)
 
 
 def _prepare_sqlite(connection: object, _record: object) -> None:

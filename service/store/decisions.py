@@ -7,21 +7,14 @@ from typing import Any
 
 from sqlalchemy import text
 
-from service.store.database import Writing
+from service.store.database import Database, Writing
 
 Decision = dict[str, Any]
 
 
-def log(connection: Writing, decisions: list[Decision]) -> None:
+def log(database: Database, decisions: list[Decision]) -> None:
     """Append decisions; losing some in a crash loses no money, since tickets carry it."""
-    connection.execute(
-        text(
-            "INSERT INTO decision (at_ms, line_item, ref, request_id, source, floor, price,"
-            " reason, set_by, snapshot, test) VALUES (:at_ms, :line_item, :ref, :request_id,"
-            " :source, :floor, :price, :reason, :set_by, :snapshot, :test)"
-        ),
-        decisions,
-    )
+    database.write(lambda connection: connection.execute(_INSERT, decisions))
 
 
 def prune(connection: Writing, before_ms: int) -> int:
@@ -41,3 +34,10 @@ def quarantine(
         ),
         {"now": wall_ms, "line_item": line_item, "error": error, "body": json.dumps(body)},
     )
+
+
+_INSERT = text(
+    "INSERT INTO decision (at_ms, line_item, ref, request_id, source, floor, price,"
+    " reason, set_by, snapshot, test) VALUES (:at_ms, :line_item, :ref, :request_id,"
+    " :source, :floor, :price, :reason, :set_by, :snapshot, :test)"
+)

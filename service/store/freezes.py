@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from typing import Any
 
-from sqlalchemy import bindparam, text
+from sqlalchemy import text
 
-from service.store.database import Reading, Writing
+from service.store.database import Reading, Writing, among
 
 
 def put(
@@ -25,17 +25,16 @@ def put(
 
 def lift(connection: Writing, line_item: str, sources: list[str]) -> int:
     """Remove the freezes of these sources; returns how many there were."""
-    statement = text("DELETE FROM freeze WHERE line_item = :id AND source IN :sources")
-    statement = statement.bindparams(bindparam("sources", expanding=True))
+    statement = among("DELETE FROM freeze WHERE line_item = :id AND source IN :sources", "sources")
     return connection.execute(statement, {"id": line_item, "sources": sources}).rowcount
 
 
 def on(connection: Reading | Writing, line_items: list[str]) -> dict[str, list[dict[str, Any]]]:
     """The freezes on each of these names; ask for "*" to see the switch over all."""
-    statement = text(
+    statement = among(
         "SELECT line_item, source, at_ms, actor, reason FROM freeze"
-        " WHERE line_item IN :ids ORDER BY at_ms, source"
-    ).bindparams(bindparam("ids", expanding=True))
+        " WHERE line_item IN :ids ORDER BY at_ms, source",
+    )
     found: dict[str, list[dict[str, Any]]] = {name: [] for name in line_items}
     for row in connection.execute(statement, {"ids": line_items}):
         freeze = dict(row._mapping)

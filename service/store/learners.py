@@ -8,12 +8,12 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import bindparam, text
+from sqlalchemy import text
 
 from service.ledger.entries import Body, Entry
 from service.store.books import Books
 from service.store.changes import announce
-from service.store.database import Database, Reading, Writing, locking
+from service.store.database import Database, Reading, Writing, among, locking
 from service.store.leases import read_configs
 
 Lesson = tuple[str, Body]
@@ -68,11 +68,9 @@ def teach(
     """
 
     def work(connection: Writing) -> int:
-        lock = f"{locking(connection)} SKIP LOCKED" if locking(connection) else ""
-        row = connection.execute(
-            text(f"SELECT seq, state, digest FROM learner WHERE line_item = :id{lock}"),
-            {"id": line_item},
-        ).one_or_none()
+        mine = "SELECT seq, state, digest FROM learner WHERE line_item = :id"
+        statement = locking(connection, mine, skip=True)
+        row = connection.execute(statement, {"id": line_item}).one_or_none()
         if row is None:
             return 0
         lessons = _lessons(connection, line_item, row.seq, ENTRIES_MAX)
@@ -105,10 +103,10 @@ def fold_all(
 
 def snapshots(connection: Reading, line_items: list[str]) -> dict[str, Snapshot]:
     """The current snapshot of each line item."""
-    statement = text(
+    statement = among(
         "SELECT line_item, snapshot, state, digest, published_ms FROM learner"
-        " WHERE line_item IN :ids"
-    ).bindparams(bindparam("ids", expanding=True))
+        " WHERE line_item IN :ids",
+    )
     return {
         row.line_item: Snapshot(row.snapshot, bytes(row.state), row.digest, row.published_ms)
         for row in connection.execute(statement, {"ids": line_items})
@@ -248,9 +246,11 @@ def _ripe(
 
 def _totals(connection: Writing, wins: dict[bytes, Any], window_ms: int) -> list[int]:
     """What each impression brought inside its window, in nanos; zeros are left out."""
-    statement = text(
-        "SELECT bid, body, service_ms FROM stream WHERE kind = 'value' AND bid IN :bids ORDER BY seq"
-    ).bindparams(bindparam("bids", expanding=True))
+    statement = among(
+        "SELECT bid, body, service_ms FROM stream WHERE kind = 'value' AND bid IN :bids"
+        " ORDER BY seq",
+        "bids",
+    )
     totals: dict[bytes, int] = {}
     for row in connection.execute(statement, {"bids": sorted(wins)}):
         bid, body = bytes(row.bid), json.loads(row.body)

@@ -7,14 +7,14 @@ from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import Any
 
-from sqlalchemy import bindparam, text
+from sqlalchemy import text
 
 from service.ledger.accounts import NO_LIMIT, Account, Day, Movement, Slice
 from service.ledger.days import left_ms, local_day
 from service.ledger.entries import Entry
 from service.ledger.leasing import Wish, slice_amount
 from service.store.books import Books
-from service.store.database import Database, Writing
+from service.store.database import Database, Writing, among
 from service.store.workers import live
 
 
@@ -102,7 +102,16 @@ class _Lenders:
         if amount <= 0 or lease_ms <= 0:
             return Denied(account.line_item, _why_none(account, day))
         fresh = Slice(
-            request.slice_id, account.line_item, self._worker, day.day, amount, amount, 0, 0, 0, "open"
+            request.slice_id,
+            account.line_item,
+            self._worker,
+            day.day,
+            amount,
+            amount,
+            0,
+            0,
+            0,
+            "open",
         )
         books.new_slice(fresh, _times_ms(config, books.service_ms, lease_ms))
         entry = Entry("lease", {"slice": fresh.id.hex(), "amount": amount, "day": day.day})
@@ -118,10 +127,11 @@ class _Lenders:
         return slice_amount(wish, free, account.budget, len(self._live), orphaned)
 
     def _orphaned(self, line_item: str) -> int:
-        statement = text(
+        statement = among(
             "SELECT coalesce(sum(remaining), 0) FROM slice WHERE line_item = :id"
-            " AND state = 'open' AND worker NOT IN :live"
-        ).bindparams(bindparam("live", expanding=True))
+            " AND state = 'open' AND worker NOT IN :live",
+            "live",
+        )
         row = {"id": line_item, "live": sorted(self._live)}
         return int(self._connection.execute(statement, row).scalar_one())
 
@@ -179,8 +189,7 @@ def close_due(database: Database) -> int:
 
 def read_configs(connection: Writing, line_items: Iterable[str]) -> dict[str, dict[str, Any]]:
     """The configuration of these line items."""
-    statement = text("SELECT id, config FROM line_item WHERE id IN :ids")
-    statement = statement.bindparams(bindparam("ids", expanding=True))
+    statement = among("SELECT id, config FROM line_item WHERE id IN :ids")
     rows = connection.execute(statement, {"ids": list(line_items)})
     return {row.id: json.loads(row.config) for row in rows}
 
@@ -209,9 +218,7 @@ def _retire(books: Books, report: Report) -> None:
         "under_floor": report.under_floor,
     }
     movement = Movement(held=-freed, remaining=-freed)
-    books.post(
-        found.line_item, Entry("retire", body), movement, day=found.day, slice_id=found.id
-    )
+    books.post(found.line_item, Entry("retire", body), movement, day=found.day, slice_id=found.id)
 
 
 def _count(books: Books, found: Slice, bids: int) -> int:

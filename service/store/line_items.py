@@ -7,15 +7,15 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import bindparam, text
+from sqlalchemy import text
 
 from service.errors import Conflict, Stale, no_such_line_item
+from service.ledger.accounts import NO_LIMIT
 from service.ledger.budgets import set_budget, set_day_budget
 from service.ledger.days import local_day
-from service.ledger.accounts import NO_LIMIT
 from service.ledger.entries import Entry
 from service.store.books import Books
-from service.store.database import Reading, Writing
+from service.store.database import Reading, Writing, among
 from service.store.freezes import on
 
 
@@ -60,9 +60,7 @@ def create(connection: Writing, config: Mapping[str, Any], wall_ms: int) -> None
     books.save()
 
 
-def change(
-    connection: Writing, config: Mapping[str, Any], version: int, wall_ms: int
-) -> None:
+def change(connection: Writing, config: Mapping[str, Any], version: int, wall_ms: int) -> None:
     """
     Store a new configuration under the lock of the balance, money and stream included.
 
@@ -102,15 +100,12 @@ def change(
 
 def load(connection: Reading | Writing, ids: list[str]) -> dict[str, Row]:
     """These line items, as far as they exist."""
-    statement = text(f"SELECT {_COLUMNS} FROM line_item WHERE id IN :ids ORDER BY id")
-    statement = statement.bindparams(bindparam("ids", expanding=True))
-    return _rows(connection, connection.execute(statement, {"ids": ids}))
+    return _rows(connection, connection.execute(_BY_ID, {"ids": ids}))
 
 
 def page(connection: Reading, after: str | None, limit: int) -> list[Row]:
     """The next line items in the order of their ids."""
-    statement = text(f"SELECT {_COLUMNS} FROM line_item WHERE id > :after ORDER BY id LIMIT :limit")
-    found = connection.execute(statement, {"after": after or "", "limit": limit})
+    found = connection.execute(_AFTER, {"after": after or "", "limit": limit})
     return list(_rows(connection, found).values())
 
 
@@ -127,7 +122,13 @@ def one(connection: Reading | Writing, line_item: str) -> Row:
     return found[line_item]
 
 
-_COLUMNS = "id, config, version, created_ms, updated_ms"
+_BY_ID = among(
+    "SELECT id, config, version, created_ms, updated_ms FROM line_item WHERE id IN :ids ORDER BY id"
+)
+_AFTER = text(
+    "SELECT id, config, version, created_ms, updated_ms FROM line_item"
+    " WHERE id > :after ORDER BY id LIMIT :limit"
+)
 
 
 def _rows(connection: Reading | Writing, found: Any) -> dict[str, Row]:

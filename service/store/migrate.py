@@ -35,7 +35,10 @@ def upgrade(connection: Connection) -> None:
     config = _config()
     config.attributes["connection"] = connection
     command.upgrade(config, "head")
-    for name, value in (("incarnation", secrets.token_hex(8)), ("ticket_key", secrets.token_hex(32))):
+    for name, value in (
+        ("incarnation", secrets.token_hex(8)),
+        ("ticket_key", secrets.token_hex(32)),
+    ):
         connection.execute(
             text("INSERT INTO fact (name, value) VALUES (:name, :value) ON CONFLICT DO NOTHING"),
             {"name": name, "value": value},
@@ -53,7 +56,9 @@ def require_current(database: Database) -> None:
         found = MigrationContext.configure(connection).get_current_revision()
     head = ScriptDirectory.from_config(_config()).get_current_head()
     if found != head:
-        raise Unsafe(f"The database is at schema {found}, this code at {head}: run bidkeel migrate.")
+        raise Unsafe(
+            f"The database is at schema {found}, this code at {head}: run bidkeel migrate."
+        )
 
 
 def is_empty(database: Database) -> bool:
@@ -66,5 +71,7 @@ def _config() -> Config:
     package = Path(service.__file__).parent
     places = [package / "migrations", package.parent / "migrations"]
     config = Config()
-    config.set_main_option("script_location", str(next(p for p in places if (p / "env.py").exists())))
+    config.set_main_option(
+        "script_location", str(next(p for p in places if (p / "env.py").exists()))
+    )
     return config

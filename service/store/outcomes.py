@@ -7,15 +7,13 @@ from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import Any
 
-from sqlalchemy import bindparam, text
-
 from service.ledger.entries import Entry
 from service.ledger.settle import Outcome, Place, settle
 from service.ledger.values import Value, judge, unparked
 from service.money import nanos_text
 from service.store.books import Books
 from service.store.changes import announce
-from service.store.database import Database, Reading, Writing
+from service.store.database import Database, Reading, Writing, among
 from service.store.freezes import put
 from service.store.journal import note
 from service.store.leases import read_configs
@@ -60,9 +58,10 @@ def book(database: Database, group: list[Booking]) -> list[Booked]:
 
 def find_wins(connection: Reading, bids: Iterable[bytes]) -> dict[bytes, str]:
     """The line items of these bids, as far as their win or billing is known."""
-    statement = text(
-        "SELECT bid, line_item FROM stream WHERE bid IN :bids AND slot IN ('result', 'billed')"
-    ).bindparams(bindparam("bids", expanding=True))
+    statement = among(
+        "SELECT bid, line_item FROM stream WHERE bid IN :bids AND slot IN ('result', 'billed')",
+        "bids",
+    )
     rows = connection.execute(statement, {"bids": sorted(set(bids))})
     return {bytes(row.bid): row.line_item for row in rows}
 
@@ -146,8 +145,7 @@ class _Group:
             slots[entry.slot] = (entry.kind, dict(entry.body))
 
     def _read_slots(self, bids: set[bytes]) -> dict[bytes, Slots]:
-        statement = text("SELECT bid, slot, kind, body FROM stream WHERE bid IN :bids")
-        statement = statement.bindparams(bindparam("bids", expanding=True))
+        statement = among("SELECT bid, slot, kind, body FROM stream WHERE bid IN :bids", "bids")
         found: dict[bytes, Slots] = {}
         for row in self._connection.execute(statement, {"bids": sorted(bids)}):
             found.setdefault(bytes(row.bid), {})[row.slot] = (row.kind, json.loads(row.body))
