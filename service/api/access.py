@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import hmac
 import re
 
 from starlette.requests import Request
 
+from service.api.edge import edge
 from service.api.stories import Caller, stories
 from service.errors import Forbidden, Unauthenticated
 
@@ -27,6 +29,20 @@ async def require(request: Request, scope: str) -> Caller:
     if not key.allows(scope):
         raise Forbidden("scope_missing", "The key lacks the scope of this call.", {"scope": scope})
     return key
+
+
+def require_health_key(request: Request) -> None:
+    """
+    Let through whoever may read health: everybody, unless the settings name a key.
+
+    Raises:
+        Unauthenticated: The settings name a key, and this is not it.
+    """
+    secret = edge(request).health_key
+    if secret is None:
+        return
+    if not hmac.compare_digest(_bearer(request), secret.get_secret_value()):
+        raise Unauthenticated("unknown_key", "The key is unknown or has ended.")
 
 
 def actor(caller: Caller) -> str:

@@ -10,8 +10,9 @@ from starlette.responses import Response
 
 from service.api import answers
 from service.api.access import require
-from service.api.body import BATCH_BYTES_MAX, read_object
+from service.api.body import read_object
 from service.api.documentation import described
+from service.api.edge import edge
 from service.api.forms.bids import BatchForm, BidForm, read_batch, read_bid
 from service.api.stories import stories
 from service.decision.opportunity import Opportunity
@@ -25,7 +26,7 @@ async def post_bid(request: Request) -> Response:
     """Answer one opportunity with a bid or a pass."""
     arrived = time.monotonic()
     await require(request, "bid")
-    opportunity, unused = read_bid(await read_object(request))
+    opportunity, unused = read_bid(await read_object(request, edge(request).body_bytes_max))
     answer = await stories(request).bidder.bid(opportunity, arrived)
     return answers.json_answer(answers.with_warnings(answers.bid(answer), unused))
 
@@ -35,7 +36,8 @@ async def post_batch(request: Request) -> Response:
     """Answer each opportunity in its place; a bad row is an error in its place."""
     arrived = time.monotonic()
     await require(request, "bid")
-    rows, unused = read_batch(await read_object(request, BATCH_BYTES_MAX))
+    members = await read_object(request, edge(request).batch_bytes_max)
+    rows, unused = read_batch(members, edge(request).batch_rows_max)
     good = [row for row in rows if isinstance(row, Opportunity)]
     priced = iter(await stories(request).bidder.bid_batch(good, arrived) if good else [])
     results = [next(priced) if isinstance(row, Opportunity) else row for row in rows]

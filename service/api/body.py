@@ -11,9 +11,6 @@ from starlette.requests import Request
 
 from service.errors import Malformed, Refusal
 
-BODY_BYTES_MAX = 1024 * 1024
-BATCH_BYTES_MAX = 4 * 1024 * 1024
-
 _JSON_TYPE = re.compile(
     r'application/(json|[a-z0-9.+-]+\+json)\s*(;\s*charset\s*=\s*"?utf-?8"?\s*)?;?\s*',
     re.IGNORECASE,
@@ -35,7 +32,7 @@ class NotJson(Refusal):
     """The headers say that the body is something else than plain JSON."""
 
 
-async def read_object(request: Request, bytes_max: int = BODY_BYTES_MAX) -> dict[str, object]:
+async def read_object(request: Request, bytes_max: int) -> dict[str, object]:
     """
     Read the body as one JSON object; numbers with a point come as Decimal.
 

@@ -10,6 +10,7 @@ from service.api import answers
 from service.api.access import actor, require
 from service.api.body import read_object
 from service.api.documentation import described
+from service.api.edge import edge
 from service.api.forms.changes import ChangeForm
 from service.api.forms.configs import (
     check_consistent,
@@ -37,7 +38,9 @@ PATH = "/v1/line-items"
 async def post_line_item(request: Request) -> Response:
     """Create a line item and say which defaults were taken."""
     key, once = await require(request, "operate"), idempotency(request)
-    config, form = read_new(await read_object(request), start_of_today_ms())
+    config, form = read_new(
+        await read_object(request, edge(request).body_bytes_max), start_of_today_ms()
+    )
     view = await stories(request).operator.create(config, form.confirm, actor(key), **once)
     headers = {"Location": f"{PATH}/{view.id}", "ETag": etag(view.version)}
     return answers.json_answer(answers.line_item(view, defaults_taken(form)), 201, headers)
@@ -69,7 +72,7 @@ async def patch_line_item(request: Request) -> Response:
     """Change the fields that came, if the version named is still the current one."""
     key, name = await require(request, "operate"), line_item_id(request)
     version, operator = if_match(request), stories(request).operator
-    changes, form = read_changes(await read_object(request))
+    changes, form = read_changes(await read_object(request, edge(request).body_bytes_max))
     check_consistent(merged((await operator.get(name)).config, changes))
     view = await operator.patch(name, changes, version, form.confirm, form.reason, actor(key))
     return _with_etag(view)

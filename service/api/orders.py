@@ -10,6 +10,7 @@ from service.api import answers
 from service.api.access import actor, require
 from service.api.body import read_object
 from service.api.documentation import described
+from service.api.edge import edge
 from service.api.forms.orders import OrderForm
 from service.api.forms.reading import read
 from service.api.headers import idempotency, line_item_id
@@ -23,7 +24,7 @@ _ONCE = ("Idempotency-Key",)
 
 async def _order(request: Request) -> tuple[str, str, dict[str, str]]:
     key, once = await require(request, "operate"), idempotency(request)
-    form = read(OrderForm, await read_object(request))
+    form = read(OrderForm, await read_object(request, edge(request).body_bytes_max))
     return form.reason, actor(key), once
 
 

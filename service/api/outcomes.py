@@ -8,8 +8,9 @@ from starlette.responses import Response
 
 from service.api import answers
 from service.api.access import require
-from service.api.body import BATCH_BYTES_MAX, read_object
+from service.api.body import read_object
 from service.api.documentation import described
+from service.api.edge import edge
 from service.api.forms.outcomes import OutcomesForm, read_outcomes
 from service.api.stories import stories
 from service.feedback import Report
@@ -21,7 +22,8 @@ router = APIRouter()
 async def post_outcomes(request: Request) -> Response:
     """Answer each outcome in its place, once it is durable; a bad row spoils no other."""
     await require(request, "report")
-    rows, unused = read_outcomes(await read_object(request, BATCH_BYTES_MAX))
+    members = await read_object(request, edge(request).batch_bytes_max)
+    rows, unused = read_outcomes(members, edge(request).outcome_rows_max)
     good = [row for row in rows if isinstance(row, Report)]
     recorded = iter(await stories(request).feedback.report(good) if good else [])
     results = [next(recorded) if isinstance(row, Report) else row for row in rows]

@@ -9,11 +9,9 @@ from pydantic import AfterValidator, Field
 
 from service.api.forms import refused
 from service.api.forms.fields import Features, FloorCpm, LineItemId, Printable, SeenValue
-from service.api.forms.reading import OpenForm, bad_field, read, unknown_fields
+from service.api.forms.reading import OpenForm, at_most, bad_field, read, unknown_fields
 from service.decision.opportunity import Opportunity
 from service.errors import Refusal
-
-BATCH_ROWS_MAX = 500
 
 Deadline = Annotated[int, Field(ge=0, le=60_000, description="Milliseconds from arrival here.")]
 
@@ -37,9 +35,9 @@ class BidForm(OpenForm):
 
 
 class BatchForm(OpenForm):
-    """Up to 500 opportunities and one deadline for all of them."""
+    """Opportunities, up to 500 unless set otherwise, and one deadline for all of them."""
 
-    opportunities: Annotated[list[object], Field(min_length=1, max_length=BATCH_ROWS_MAX)]
+    opportunities: Annotated[list[object], Field(min_length=1)]
     deadline_ms: Deadline | None = None
 
 
@@ -56,15 +54,16 @@ def read_bid(members: Mapping[str, object]) -> tuple[Opportunity, set[str]]:
 
 
 def read_batch(
-    members: Mapping[str, object],
+    members: Mapping[str, object], rows_max: int
 ) -> tuple[list[Opportunity | Refusal], set[str]]:
     """
     Read a batch, each row alone: a bad row becomes its own refusal.
 
     Raises:
-        Malformed: There is no list of 1 to 500 opportunities, or the deadline is none.
+        Malformed: There is no list of 1 to `rows_max` opportunities, or the deadline is none.
     """
     batch = read(BatchForm, members)
+    at_most(rows_max, "opportunities", batch.opportunities)
     unused = unknown_fields(BatchForm, members)
     rows: list[Opportunity | Refusal] = []
     for row in batch.opportunities:

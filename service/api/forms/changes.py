@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from pydantic import Field
+
 from service.api.forms import refused
 from service.api.forms.fields import Amount, CapCpm, Moment, Name, Printable, Reason
 from service.api.forms.line_items import (
@@ -12,7 +14,7 @@ from service.api.forms.line_items import (
     PacingForm,
     Window,
 )
-from service.api.forms.policies import PolicyForm
+from service.api.forms.policies import Policy
 from service.api.forms.reading import StrictForm
 
 # The defaults below are never read: only the fields that came are changed.
@@ -53,7 +55,7 @@ class ChangeForm(NotYetForm):
     billing_grace_s: Grace = DAY_S
     strict: bool = False
     value: ValueChange = ValueChange()
-    policy: PolicyForm = PolicyForm(method="mean")
+    policy: Policy = Field(default_factory=dict)
     pacing: PacingForm = PacingForm()
     confirm: Printable | None = None
     reason: Reason | None = None

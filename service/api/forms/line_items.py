@@ -17,7 +17,7 @@ from service.api.forms.fields import (
     Printable,
     TimeZone,
 )
-from service.api.forms.policies import PolicyForm
+from service.api.forms.policies import Policy
 from service.api.forms.reading import StrictForm
 
 DAY_S = 86_400
@@ -88,6 +88,6 @@ class CreateForm(NotYetForm):
     billing_grace_s: Grace = DAY_S
     strict: bool = False
     value: ValueForm = ValueForm()
-    policy: PolicyForm | None = None
+    policy: Policy | None = None
     pacing: PacingForm = PacingForm()
     confirm: Printable | None = None

@@ -8,11 +8,9 @@ from typing import Annotated, Literal, TypeAlias
 from pydantic import Field
 
 from service.api.forms.fields import Instant, Name, Printable, SeenCpm, SeenValue, Ticket
-from service.api.forms.reading import OpenForm, bad_field, read, unknown_fields
+from service.api.forms.reading import OpenForm, at_most, bad_field, read, unknown_fields
 from service.errors import Malformed
 from service.feedback import Receipt, Report
-
-OUTCOMES_MAX = 1000
 
 
 class WonForm(OpenForm):
@@ -65,9 +63,9 @@ class ValuedForm(OpenForm):
 
 
 class OutcomesForm(OpenForm):
-    """Up to 1,000 outcomes, each of which stands or falls alone."""
+    """Outcomes, up to 1,000 unless set otherwise; each stands or falls alone."""
 
-    outcomes: Annotated[list[object], Field(min_length=1, max_length=OUTCOMES_MAX)]
+    outcomes: Annotated[list[object], Field(min_length=1)]
 
 
 OutcomeForm: TypeAlias = WonForm | LostForm | VoidForm | BilledForm | ValuedForm
@@ -86,16 +84,20 @@ CODES = {
 }
 
 
-def read_outcomes(members: Mapping[str, object]) -> tuple[list[Report | Receipt], set[str]]:
+def read_outcomes(
+    members: Mapping[str, object], rows_max: int
+) -> tuple[list[Report | Receipt], set[str]]:
     """
     Read outcomes, each row alone: a bad row becomes a receipt that refuses it.
 
     Raises:
-        Malformed: There is no list of 1 to 1,000 outcomes.
+        Malformed: There is no list of 1 to `rows_max` outcomes.
     """
+    outcomes = read(OutcomesForm, members).outcomes
+    at_most(rows_max, "outcomes", outcomes)
     unused = unknown_fields(OutcomesForm, members)
     rows: list[Report | Receipt] = []
-    for row in read(OutcomesForm, members).outcomes:
+    for row in outcomes:
         try:
             rows.append(_report(row, unused))
         except Malformed as refusal:

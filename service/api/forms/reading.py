@@ -44,7 +44,6 @@ _LIMITS = {
     "greater_than_equal": ("ge", "It must be at least {}."),
     "less_than": ("lt", "It must be less than {}."),
     "less_than_equal": ("le", "It must be at most {}."),
-    "too_long": ("max_length", "It may have at most {} members."),
     "too_short": ("min_length", "It must have at least {} members."),
     "literal_error": ("expected", "It must be {}."),
 }
@@ -68,6 +67,17 @@ def read(form: type[Form], members: Mapping[str, object]) -> Form:
 def bad_field(path: str, sentence: str) -> Malformed:
     """The refusal of one field; `path` must be made of names of ours and of numbers."""
     return Malformed("bad_field", sentence, {"field": path})
+
+
+def at_most(rows_max: int, path: str, rows: list[object]) -> None:
+    """
+    Refuse a list that is longer than the settings allow.
+
+    Raises:
+        Malformed: `bad_field` with the path of the list.
+    """
+    if len(rows) > rows_max:
+        raise bad_field(path, f"It may have at most {rows_max} members.")
 
 
 def unknown_fields(form: type[BaseModel], members: Mapping[str, object]) -> set[str]:
