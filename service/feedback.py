@@ -186,12 +186,15 @@ class Feedback:
         self, reports: list[Report], read: list[Booking | Receipt]
     ) -> list[Booking | Receipt]:
         """Give values that came by ref the line item of their settled win."""
-        loose = {row.event.bid for row in read if isinstance(row, Booking) and not row.line_item}
+        bookings = [row for row in read if isinstance(row, Booking)]
+        loose = {row.event.bid for row in bookings if not row.line_item}
         if not loose:
             return read
         found = await self._threads.run(
             self._database.read, lambda connection: outcomes.find_wins(connection, loose)
         )
+        # The win may stand in the same call; if it does not, the value waits for it.
+        found |= {row.event.bid: row.line_item for row in bookings if row.line_item}
         return [_placed(row, found, report.ref) for row, report in zip(read, reports, strict=True)]
 
 

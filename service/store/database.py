@@ -120,12 +120,9 @@ class Database:
             yield connection
 
 
-def among(statement: str, *names: str) -> TextClause:
-    """A statement whose `IN :ids` (or the names given) take lists."""
-    lists: list[BindParameter[Any]] = [
-        bindparam(name, expanding=True) for name in names or ("ids",)
-    ]
-    return text(statement).bindparams(*lists)
+def among(statement: str, name: str = "ids") -> TextClause:
+    """A statement whose `IN :ids` (or the name given) takes a list."""
+    return text(statement).bindparams(bindparam(name, expanding=True))
 
 
 def locking(connection: Connection, statement: str, *, skip: bool = False) -> TextClause:

@@ -17,6 +17,8 @@ from service.store.books import Books
 from service.store.database import Database, Writing, among
 from service.store.workers import live
 
+NEVER_MS = 2**60
+
 
 @dataclass(frozen=True, slots=True)
 class LeaseRequest:
@@ -172,12 +174,11 @@ def close_due(database: Database) -> int:
     def work(connection: Writing) -> int:
         due = connection.execute(_DUE).all()
         books = Books(connection, {row.line_item for row in due}, database.wall_ms())
-        configs = read_configs(connection, list(books.accounts))
         # Read again under the lock: an outcome may have come in between.
         rows = {bytes(row.id): row for row in connection.execute(_DUE)}
         books.load_slices(rows)
         for slice_id, row in rows.items():
-            if row.line_item in books.accounts and not configs[row.line_item]["strict"]:
+            if row.line_item in books.accounts:
                 _close(books, books.slices[slice_id], bool(row.bids), bool(row.bills))
         books.save()
         return len(rows)
@@ -249,11 +250,13 @@ def _lease_ms(config: dict[str, Any], wall_ms: int, lease_ms: int) -> int:
 
 def _times_ms(config: dict[str, Any], now: int, lease_ms: int) -> dict[str, int]:
     expires = now + lease_ms
+    # The silent slices of a strict line item stay open until an operator says so.
+    close = NEVER_MS if config["strict"] else expires + config["grace_ms"]
     return {
         "leased_ms": now,
         "expires_ms": expires,
-        "close_ms": expires + config["grace_ms"],
-        "billing_close_ms": expires + config["grace_ms"] + config["billing_grace_ms"],
+        "close_ms": close,
+        "billing_close_ms": close + config["billing_grace_ms"],
     }
 
 
