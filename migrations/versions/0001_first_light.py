@@ -129,7 +129,7 @@ CREATE TABLE journal (
     reason TEXT NOT NULL,
     detail TEXT NOT NULL
 ) STRICTLY;
-CREATE TABLE freeze (
+CREATE TABLE freezing (
     line_item TEXT NOT NULL,
     source TEXT NOT NULL CHECK (source IN ('person', 'tripwire', 'audit', 'all')),
     at_ms BIG NOT NULL,

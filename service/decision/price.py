@@ -94,25 +94,25 @@ def ready(tally: Tally, terms: Terms) -> Ready:
 
 def _answer(tally: Tally, terms: Terms) -> Proposal | Passed:
     method = METHODS[terms.method]
-    value = _value(tally, terms)
-    if value is None:
+    bid = _bid(tally, terms)
+    if bid is None:
         return Passed(LEARNER_HALTED)
     if method.learns and brakes.no_value(tally, terms):
         return Passed(NO_VALUE)
-    bid = RULES[terms.auction](value)
     if bid >= terms.cap:
         return Proposal(terms.cap, BY_CAP if bid > terms.cap else BY_VALUE)
     return Proposal(math.floor(bid), BY_VALUE)
 
 
-def _value(tally: Tally, terms: Terms) -> float | None:
+def _bid(tally: Tally, terms: Terms) -> float | None:
     # A sum too large for a float, or a formula outside its range, must not become a price.
     try:
         with np.errstate(all="ignore"):
-            value = float(METHODS[terms.method].index(Counts.of(tally), terms))
+            value = METHODS[terms.method].index(Counts.of(tally), terms)
+            bid = float(RULES[terms.auction](value))
     except OverflowError:
         return None
-    return value if math.isfinite(value) and value >= 0.0 else None
+    return bid if math.isfinite(bid) and bid >= 0.0 else None
 
 
 def _known(tally: Tally, terms: Terms) -> dict[str, object]:

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Callable
 
+from service.learner.bounds import Numbers
 
-def second_price(value_nanos: float) -> float:
+
+def second_price(value_nanos: Numbers) -> Numbers:
     """
     Bid the value: what is bid decides only whether it is won, never what is paid.
 
@@ -15,4 +17,4 @@ def second_price(value_nanos: float) -> float:
     return value_nanos
 
 
-RULES: dict[str, Callable[[float], float]] = {"second": second_price}
+RULES: dict[str, Callable[[Numbers], Numbers]] = {"second": second_price}

@@ -13,7 +13,7 @@ from scipy import special
 
 Numbers = NDArray[np.float64]
 
-NEWTON_STEPS = 16
+NEWTON_STEPS = 12
 SMALLEST_MEAN = 1e-200  # Below it the root is that of mean 0, and quotients overflow.
 
 
