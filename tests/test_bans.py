@@ -12,7 +12,9 @@ from tests.house import ROOT, Source, dotted, imports, nodes, read, tracked
 
 SEEDED = {"Generator", "BitGenerator", "PCG64", "Philox", "SeedSequence", "default_rng"}
 CLOCKS = re.compile(r"(time|datetime)\..*|(perf_counter|monotonic)(_ns)?")
-ADDRESS = re.compile(r"https?://(?!127\.0\.0\.1|localhost|\[::1\]|testserver|[{$]|\S+\.example\b)")
+ADDRESS = re.compile(
+    r"https?://(?!127\.0\.0\.1|localhost|\[::1\]|test(server)?\b|[{$]|\S+\.example\b)"
+)
 WORDS = re.compile(r"\bissue #?\d+|\bmicros\b|_micros\b|\blearning[ _-](phase|limited)\b", re.I)
 
 Rule = Callable[[Source], Iterator[ast.AST]]

@@ -104,13 +104,11 @@ def test_the_length_of_a_function_leaves_its_docstring_out() -> None:
     assert [length(f) for f in functions(Source("service/x.py", text))] == [3]
 
 
-@pytest.mark.parametrize(
-    "line",
-    ["@pytest.mark.skip\ndef test_x(): ...", "pytest.importorskip('x')", "mark.xfail(strict=True)"],
-)
-def test_a_left_out_test_is_found(line: str) -> None:
+@pytest.mark.parametrize("way", sorted(LEFT_OUT))
+@pytest.mark.parametrize("line", ["@pytest.mark.{}\ndef test_x(): ...", "pytest.{}('x')"])
+def test_a_left_out_test_is_found(line: str, way: str) -> None:
     """Marks and calls are both seen."""
-    assert len(left_out(Source("tests/test_x.py", line))) == 1
+    assert len(left_out(Source("tests/test_x.py", line.format(way)))) == 1
 
 
 def test_a_stand_in_is_found() -> None:
