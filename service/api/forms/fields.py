@@ -96,6 +96,11 @@ Ticket = Annotated[
     AfterValidator(_shape(re.compile(r"[!-~]{1,512}"), "It is no ticket of ours.")),
     WithJsonSchema({"type": "string", "maxLength": 512}),
 ]
+Ref = Annotated[
+    str,
+    AfterValidator(_shape(re.compile(r"[A-Za-z0-9_-]{22}"), "It is no ref of ours.")),
+    WithJsonSchema({"type": "string", "pattern": "^[A-Za-z0-9_-]{22}$"}),
+]
 Currency = Annotated[
     str,
     AfterValidator(_shape(re.compile(r"[A-Z]{3}"), "It must be three capital letters.")),

@@ -7,7 +7,7 @@ from typing import Annotated, Literal, TypeAlias
 
 from pydantic import Field
 
-from service.api.forms.fields import Instant, Name, Printable, SeenCpm, SeenValue, Ticket
+from service.api.forms.fields import Instant, Name, Printable, Ref, SeenCpm, SeenValue, Ticket
 from service.api.forms.reading import OpenForm, at_most, bad_field, read, unknown_fields
 from service.errors import Malformed
 from service.feedback import Receipt, Report
@@ -55,7 +55,7 @@ class ValuedForm(OpenForm):
 
     kind: Literal["value"]
     ticket: Ticket | None = None
-    ref: Printable | None = None
+    ref: Ref | None = None
     value: SeenValue
     event_id: Printable
     corrects: Printable | None = None
@@ -81,6 +81,7 @@ CODES = {
     "to_win_cpm": "bad_price",
     "value": "bad_value",
     "ticket": "bad_ticket",
+    "ref": "bad_ref",
 }
 
 
@@ -107,8 +108,9 @@ def read_outcomes(
 
 def refused_row(refusal: Malformed) -> Receipt:
     """The receipt of a row that never became a report."""
-    code = CODES.get(str(refusal.data.get("field", "")), refusal.code)
-    return Receipt(ref=None, status="refused", code=code, detail=refusal.detail)
+    field = str(refusal.data.get("field", ""))
+    detail = f"{field}: {refusal.detail}" if field else refusal.detail
+    return Receipt(ref=None, status="refused", code=CODES.get(field, refusal.code), detail=detail)
 
 
 def _report(row: object, unused: set[str]) -> Report:
@@ -124,6 +126,6 @@ def _report(row: object, unused: set[str]) -> Report:
 
 def _as_report(form: OutcomeForm) -> Report:
     if isinstance(form, ValuedForm) and form.ticket is None and form.ref is None:
-        raise bad_field("ref", "A value needs the ref or the ticket of its bid.")
+        raise bad_field("", "A value needs the ref or the ticket of its bid.")
     names = {"clearing_cpm": "clearing", "to_win_cpm": "to_win"}
     return Report(**{names.get(name, name): value for name, value in form})
