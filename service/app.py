@@ -15,6 +15,7 @@ from typing import Any
 from fastapi import FastAPI
 
 from service.api.routes import install
+from service.backlog import Backlog
 from service.bidding import Bidder, Clocks
 from service.catalog import Catalog
 from service.feedback import Feedback
@@ -106,7 +107,8 @@ def _build(
     catalog = Catalog(database, threads)
     leasing = Leasing(database, threads, worker, settings.lease_s)
     clocks = Clocks(settings.deadline_ms, settings.deadline_ms_max)
-    bidder = Bidder(catalog, leasing, keys, incarnation, clocks, settings.decision_queue_max)
+    backlog = Backlog(settings.decision_queue_max)
+    bidder = Bidder(catalog, leasing, keys, incarnation, clocks, backlog)
     feedback = Feedback(database, threads, keys, incarnation)
     operator = Operator(database, threads, catalog, news)
     rhythm = Rhythm(
@@ -117,7 +119,7 @@ def _build(
         settings.checkpoint_entries,
         settings.decision_keep_days,
     )
-    upkeep = Upkeep(database, threads, worker, catalog, leasing, bidder, news, rhythm)
+    upkeep = Upkeep(database, threads, worker, catalog, leasing, backlog, news, rhythm)
     return (
         Stories(bidder, feedback, operator),
         upkeep,

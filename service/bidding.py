@@ -8,11 +8,11 @@ from __future__ import annotations
 
 import secrets
 import time
-from collections import deque
 from dataclasses import dataclass
 
 import numpy
 
+from service.backlog import Backlog
 from service.catalog import Catalog, Item
 from service.decision.opportunity import Opportunity
 from service.decision.price import Passed
@@ -21,7 +21,6 @@ from service.guard.gate import Cleared, clear, shut
 from service.guard.hand import SliceInHand
 from service.guard.ticket import Ticket, TicketKeys
 from service.leasing import Leasing
-from service.store.decisions import Decision
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,15 +56,13 @@ class Bidder:
         keys: TicketKeys,
         incarnation: bytes,
         clocks: Clocks,
-        queue_max: int,
+        backlog: Backlog,
     ) -> None:
         self._catalog, self._leasing = catalog, leasing
         self._keys, self._incarnation = keys, incarnation
         self._clocks = clocks
         self._generator = numpy.random.default_rng()
-        self._decisions: deque[Decision] = deque()
-        self._queue_max = queue_max
-        self.decisions_dropped = 0
+        self._backlog = backlog
 
     async def bid(self, opportunity: Opportunity, arrived: float) -> Answer:
         """
@@ -103,17 +100,6 @@ class Bidder:
             except StoreAway:
                 answers.append(Refusal("store_away", "The line item could not be looked up."))
         return answers
-
-    def drain(self, count_max: int) -> list[Decision]:
-        """Take the oldest decisions out of the queue, for the log."""
-        count = min(count_max, len(self._decisions))
-        return [self._decisions.popleft() for _ in range(count)]
-
-    def put_back(self, decisions: list[Decision]) -> None:
-        """Return decisions that could not be written, as far as there is room."""
-        room = max(0, self._queue_max - len(self._decisions))
-        self.decisions_dropped += max(0, len(decisions) - room)
-        self._decisions.extendleft(reversed(decisions[-room:] if room else []))
 
     async def _have_money(self, item: Item, until: float) -> None:
         held = self._leasing.hand.usable(item.id, self._leasing.clock())
@@ -188,11 +174,7 @@ class Bidder:
         return min(allowed, self._clocks.deadline_ms_max) / 1000
 
     def _log(self, answer: Answer, opportunity: Opportunity) -> None:
-        if len(self._decisions) >= self._queue_max:
-            # The log may lose rows under overload; the hold never does.
-            self.decisions_dropped += 1
-            return
-        self._decisions.append(
+        self._backlog.add(
             {
                 "at_ms": _wall_ms(),
                 "line_item": answer.line_item,

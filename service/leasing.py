@@ -153,6 +153,12 @@ class Leasing:
         if isinstance(answer, leases.Denied):
             self._denied[answer.line_item] = (answer.reason, self.clock() + DENIED_S)
             return
+        held = self.hand.slices.get(answer.line_item)
+        if held is not None and held.free >= answer.amount:
+            # At the tail of a budget the rest in the hand is worth more than the new slice.
+            self.hand.given.append(Given(answer.slice_id, answer.line_item, 0, 0))
+            self._denied[answer.line_item] = ("budget_held", self.clock() + DENIED_S)
+            return
         lease_s = answer.lease_ms / 1000
         self._before[answer.line_item] = answer.amount
         self._denied.pop(answer.line_item, None)

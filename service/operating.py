@@ -185,6 +185,7 @@ class Operator:
             books.post(line_item, Entry("reset", {"actor": actor, "reason": reason}))
             books.save()
             seq = books.accounts[line_item].seq
+            learners.begin_afresh(connection, line_item, seq)
             detail = {"before": {"seq": seq - 1}, "after": {"seq": seq}}
             self._note(connection, actor, "reset", line_item, reason, detail)
             return {"line_item": line_item, **detail}

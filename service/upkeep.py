@@ -12,7 +12,7 @@ from collections.abc import Awaitable, Callable, Coroutine
 from dataclasses import dataclass
 from typing import Any
 
-from service.bidding import Bidder
+from service.backlog import Backlog
 from service.catalog import Catalog, Item
 from service.errors import StoreAway
 from service.learner.fold import fold
@@ -56,12 +56,12 @@ class Upkeep:
         worker: str,
         catalog: Catalog,
         leasing: Leasing,
-        bidder: Bidder,
+        backlog: Backlog,
         news: asyncio.Event,
         rhythm: Rhythm,
     ) -> None:
         self._database, self._threads, self._worker = database, threads, worker
-        self._catalog, self._leasing, self._bidder = catalog, leasing, bidder
+        self._catalog, self._leasing, self._backlog = catalog, leasing, backlog
         self._news, self._rhythm = news, rhythm
 
     def duties(self) -> list[Coroutine[Any, Any, None]]:
@@ -133,11 +133,11 @@ class Upkeep:
 
     async def log(self) -> None:
         """Write queued decisions."""
-        while rows := self._bidder.drain(DECISIONS_MAX):
+        while rows := self._backlog.drain(DECISIONS_MAX):
             try:
                 await self._threads.run(decisions.log, self._database, rows)
             except StoreAway:
-                self._bidder.put_back(rows)
+                self._backlog.put_back(rows)
                 return
 
     async def prune(self) -> None:

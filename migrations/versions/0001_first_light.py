@@ -100,7 +100,9 @@ CREATE TABLE stream (
 CREATE TABLE learner (
     line_item TEXT PRIMARY KEY REFERENCES line_item (id),
     seq BIG NOT NULL CHECK (seq >= 0),
+    working BYTES NOT NULL,
     matured_seq BIG NOT NULL CHECK (matured_seq >= 0),
+    reset_seq BIG NOT NULL CHECK (reset_seq >= 0),
     snapshot BIG NOT NULL CHECK (snapshot >= 0),
     state BYTES NOT NULL,
     digest TEXT NOT NULL,

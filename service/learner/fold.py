@@ -69,7 +69,7 @@ def _rounds(sums: Sums, body: Body, ceiling: int, arrival: str) -> None:
 def _value(sums: Sums, body: Body, ceiling: int, arrival: str) -> None:
     was = body["was"]
     sums["values_seen"] += was is None
-    if arrival != ONCE:
+    if arrival != ONCE or body.get("before_reset"):
         return
     if was is None:
         sums["known"] += 1

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
-from datetime import date, datetime, timedelta
+from datetime import UTC, date, datetime, timedelta
 from zoneinfo import ZoneInfo
+
+EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 
 
 def local_day(wall_ms: int, zone: str) -> str:
@@ -18,10 +20,10 @@ def left_ms(wall_ms: int, zone: str) -> int:
 
 
 def _local(wall_ms: int, zone: str) -> datetime:
-    return datetime.fromtimestamp(wall_ms / 1000, ZoneInfo(zone))
+    return (EPOCH + timedelta(milliseconds=wall_ms)).astimezone(ZoneInfo(zone))
 
 
 def _begins_ms(day: date, zone: str) -> int:
     """The first moment of a day; a midnight that the clocks jump over maps to the jump."""
     midnight = datetime(day.year, day.month, day.day, tzinfo=ZoneInfo(zone))
-    return int(midnight.timestamp() * 1000)
+    return (midnight.astimezone(UTC) - EPOCH) // timedelta(milliseconds=1)

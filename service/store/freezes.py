@@ -25,7 +25,9 @@ def put(
 
 def lift(connection: Writing, line_item: str, sources: list[str]) -> int:
     """Remove the freezes of these sources; returns how many there were."""
-    statement = among("DELETE FROM freezing WHERE line_item = :id AND source IN :sources", "sources")
+    statement = among(
+        "DELETE FROM freezing WHERE line_item = :id AND source IN :sources", "sources"
+    )
     return connection.execute(statement, {"id": line_item, "sources": sources}).rowcount
 
 

@@ -68,20 +68,20 @@ def teach(
     """
 
     def work(connection: Writing) -> int:
-        mine = "SELECT seq, state, digest FROM learner WHERE line_item = :id"
+        mine = "SELECT seq, working, digest FROM learner WHERE line_item = :id"
         statement = locking(connection, mine, skip=True)
         row = connection.execute(statement, {"id": line_item}).one_or_none()
-        if row is None:
+        lessons = _lessons(connection, line_item, row.seq, ENTRIES_MAX) if row else []
+        if row is None or not lessons:
             return 0
-        lessons = _lessons(connection, line_item, row.seq, ENTRIES_MAX)
-        if not lessons:
-            return 0
-        state = fold(bytes(row.state), lessons)
-        seq = row.seq + len(lessons)
+        state, seq = fold(bytes(row.working), lessons), row.seq + len(lessons)
         now = database.wall_ms()
-        _publish(connection, line_item, seq, state, row.digest, now)
+        connection.execute(_LEARN, {"id": line_item, "seq": seq, "state": state})
         if seq // checkpoint_entries > row.seq // checkpoint_entries:
             _checkpoint(connection, line_item, seq, state, now)
+        # A state that has not caught up is not published, or a refold would forget in public.
+        if len(lessons) < ENTRIES_MAX and digest_of(state) != row.digest:
+            _publish(connection, line_item, seq, state, now)
         return len(lessons)
 
     return database.write(work)
@@ -118,8 +118,8 @@ def begin(connection: Writing, line_item: str, state: bytes, wall_ms: int) -> No
     connection.execute(
         text(
             "INSERT INTO learner"
-            " (line_item, seq, matured_seq, snapshot, state, digest, published_ms)"
-            " VALUES (:id, 0, 0, 0, :state, :digest, :now)"
+            " (line_item, seq, working, matured_seq, reset_seq, snapshot, state, digest,"
+            " published_ms) VALUES (:id, 0, :state, 0, 0, 0, :state, :digest, :now)"
         ),
         {"id": line_item, "state": state, "digest": digest_of(state), "now": wall_ms},
     )
@@ -127,9 +127,14 @@ def begin(connection: Writing, line_item: str, state: bytes, wall_ms: int) -> No
 
 def refold(connection: Writing, line_item: str, state: bytes) -> None:
     """Let the teacher read the whole stream again from `state`, after a change of terms."""
+    connection.execute(_LEARN, {"id": line_item, "seq": 0, "state": state})
+
+
+def begin_afresh(connection: Writing, line_item: str, seq: int) -> None:
+    """Note the seq of a reset: what was won before it teaches nothing more."""
     connection.execute(
-        text("UPDATE learner SET seq = 0, state = :state, digest = '' WHERE line_item = :id"),
-        {"id": line_item, "state": state},
+        text("UPDATE learner SET reset_seq = :seq, matured_seq = :seq WHERE line_item = :id"),
+        {"seq": seq, "id": line_item},
     )
 
 
@@ -189,23 +194,9 @@ def _lessons(connection: Reading | Writing, line_item: str, seq: int, limit: int
     return [(row.kind, json.loads(row.body)) for row in rows]
 
 
-def _publish(
-    connection: Writing, line_item: str, seq: int, state: bytes, digest: str, now: int
-) -> None:
-    fresh = digest_of(state)
-    if fresh == digest:
-        connection.execute(
-            text("UPDATE learner SET seq = :seq WHERE line_item = :id"),
-            {"seq": seq, "id": line_item},
-        )
-        return
-    connection.execute(
-        text(
-            "UPDATE learner SET seq = :seq, snapshot = :seq, state = :state, digest = :digest,"
-            " published_ms = :now WHERE line_item = :id"
-        ),
-        {"seq": seq, "state": state, "digest": fresh, "now": now, "id": line_item},
-    )
+def _publish(connection: Writing, line_item: str, seq: int, state: bytes, now: int) -> None:
+    row = {"seq": seq, "state": state, "digest": digest_of(state), "now": now, "id": line_item}
+    connection.execute(_PUBLISH, row)
     announce(connection, "snapshot", [line_item])
 
 
@@ -257,3 +248,10 @@ def _totals(connection: Writing, wins: dict[bytes, Any], window_ms: int) -> list
         if row.service_ms <= wins[bid].service_ms + window_ms:
             totals[bid] = totals.get(bid, 0) + body["amount"] - (body["was"] or 0)
     return sorted(total for total in totals.values() if total > 0)
+
+
+_LEARN = text("UPDATE learner SET seq = :seq, working = :state WHERE line_item = :id")
+_PUBLISH = text(
+    "UPDATE learner SET snapshot = :seq, state = :state, digest = :digest, published_ms = :now"
+    " WHERE line_item = :id"
+)

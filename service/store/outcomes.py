@@ -7,6 +7,8 @@ from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import Any
 
+from sqlalchemy import text
+
 from service.ledger.entries import Entry
 from service.ledger.settle import Outcome, Place, settle
 from service.ledger.values import Value, judge, unparked
@@ -77,6 +79,7 @@ class _Group:
         self._books.load_slices(b.slice_id for b in group if b.slice_id)
         self._books.load_days({(b.line_item, b.day) for b in group if b.day})
         self._configs = read_configs(connection, list(self._books.accounts))
+        self._won_seqs: dict[bytes, int] = {}
         self._slots = self._read_slots({b.event.bid for b in group})
 
     def book(self) -> list[Booked]:
@@ -126,8 +129,19 @@ class _Group:
         terms = self._configs[booking.line_item]["value"]
         verdict = judge(value, slots, ceiling=terms["ceiling"], arrival=terms["arrival"])
         if verdict.entry is not None:
-            self._append(booking.line_item, slots, verdict.entry)
+            self._append(booking.line_item, slots, self._dated(verdict.entry, booking.line_item))
         return Booked(verdict.status, verdict.code, verdict.clipped)
+
+    def _dated(self, entry: Entry, line_item: str) -> Entry:
+        """A value of a win from before the last reset says so, and teaches nothing."""
+        won = self._won_seqs.get(entry.bid or b"")
+        if entry.kind != "value" or won is None or won > self._reset_seq(line_item):
+            return entry
+        return replace(entry, body={**entry.body, "before_reset": True})
+
+    def _reset_seq(self, line_item: str) -> int:
+        statement = text("SELECT reset_seq FROM learner WHERE line_item = :id")
+        return int(self._connection.execute(statement, {"id": line_item}).scalar_one())
 
     def _append(self, line_item: str, slots: Slots, entry: Entry) -> None:
         self._books.post(line_item, entry)
@@ -145,9 +159,11 @@ class _Group:
             slots[entry.slot] = (entry.kind, dict(entry.body))
 
     def _read_slots(self, bids: set[bytes]) -> dict[bytes, Slots]:
-        statement = among("SELECT bid, slot, kind, body FROM stream WHERE bid IN :bids", "bids")
+        statement = among("SELECT bid, seq, slot, kind, body FROM stream WHERE bid IN :ids")
         found: dict[bytes, Slots] = {}
-        for row in self._connection.execute(statement, {"bids": sorted(bids)}):
+        for row in self._connection.execute(statement, {"ids": sorted(bids)}):
+            if row.slot == "result":
+                self._won_seqs[bytes(row.bid)] = row.seq
             found.setdefault(bytes(row.bid), {})[row.slot] = (row.kind, json.loads(row.body))
         return found
 
