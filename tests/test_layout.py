@@ -130,7 +130,7 @@ def test_an_import_against_the_rule_is_found(path: str, line: str) -> None:
         ("service/learner/fold.py", "from .tally import Tally\nimport numpy as np\nimport json"),
         ("service/learner/bounds.py", "from scipy.special import xlogy\nfrom .. import errors"),
         ("service/store/migrate.py", "import service\nfrom alembic import command"),
-        ("service/api/bids.py", "from service.store.reads import keys\nimport fastapi.routing"),
+        ("service/api/bids.py", "from service.store.reading import facts\nimport fastapi.routing"),
         ("service/upkeep.py", "from service.store import books\nfrom . import money"),
         ("service/commands/serve.py", "import uvicorn\nfrom service.api import problems"),
     ],
