@@ -79,6 +79,7 @@ def _outcome(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[
         _bill(books, spend_on, bid, row, hold, price)
         return
     if kind == "void" and books.results.get(bid) == "won":
+        books.results[bid] = "voided"
         _drop_owed(books, bid, row)
         return
     books.results[bid] = kind
@@ -122,7 +123,9 @@ def _bill(
 
 def _conflict(books: Replayed, bid: str, body: Mapping[str, Any]) -> None:
     """A contradiction costs money once: a win after a loss, or billing of what was not won."""
-    if not body["pays"]:
+    unpaid = {"won": ("lost", "void"), "billed": ("lost", "void", "voided")}
+    result = books.results.get(bid)
+    if bid in books.paid or bid in books.billed or result not in unpaid.get(body["said"], ()):
         return
     hold, price = body["bid"], body["price"] or 0
     books.paid.add(bid)

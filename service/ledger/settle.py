@@ -124,7 +124,7 @@ def _billed(outcome: Outcome, place: Place) -> Verdict:
     if result is None:
         movement = _pay(outcome, place)
     elif result[0] != "won" or "void" in place.slots:
-        return _contradiction(outcome, place, pays=True, slot="billed")
+        return _contradiction(outcome, place, pays=True)
     elif place.spend_on == "won":
         movement = NOTHING
     else:
@@ -163,21 +163,18 @@ def _void_of_win(outcome: Outcome, place: Place, win: Body) -> Verdict:
     return Verdict("recorded", movement, Entry("void", body, outcome.bid, "void"))
 
 
-def _contradiction(
-    outcome: Outcome, place: Place, *, pays: bool, slot: str | None = None
-) -> Verdict:
+def _contradiction(outcome: Outcome, place: Place, *, pays: bool) -> Verdict:
     """Keep what contradicts beside what stands; a win we had not booked may cost money."""
     entry = conflict(outcome.bid, _said(outcome))
     if entry.slot in place.slots:
         return Verdict("conflict")
-    movement = NOTHING
-    if pays and not _paid_by_conflict(place.slots):
+    movement, costs = NOTHING, pays and not _paid_by_conflict(place.slots)
+    if costs:
         price = outcome.price or 0
         movement = late_cost(place.account, place.day, min(price, outcome.hold))
         movement += Movement(disputed=max(0, price - outcome.hold))
-    kept = Entry(
-        "conflict", {**entry.body, "pays": movement.cost}, outcome.bid, entry.slot, movement.cost
-    )
+    body = {**entry.body, "pays": costs}
+    kept = Entry("conflict", body, outcome.bid, entry.slot, movement.cost)
     return Verdict("conflict", movement, kept)
 
 
