@@ -88,7 +88,8 @@ def kl_upper(mean: ArrayLike, divergence: ArrayLike) -> Numbers:
     safe_p = np.where(inside, p, 0.5)
     root = p + _kl_distance(safe_p, np.maximum(d, 0.0))
     at_zero = -np.expm1(-np.maximum(d, 0.0))
-    return np.where(p >= 1.0, 1.0, np.where(p <= SMALLEST_MEAN, at_zero, np.minimum(root, 1.0)))
+    index = np.where(p >= 1.0, 1.0, np.where(p <= SMALLEST_MEAN, at_zero, root))
+    return np.clip(index, p, 1.0)
 
 
 def _kl_distance(p: Numbers, d: Numbers) -> Numbers:

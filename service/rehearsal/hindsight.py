@@ -28,8 +28,9 @@ def best_fixed_bid(
     Sorted by competing bid, the surplus of a bid is a prefix sum of value - competing bid
     (the benchmark of Weed, Perchet, Rigollet, "Online learning in repeated auctions", COLT
     2016). Not bidding, which earns nothing, is bid 0. Under a budget the opportunities come
-    in their order, and bidding ends when less than the bid is left, since a bid is held in
-    full; each bid that meets that end costs one more pass over the sequence.
+    in their order, and bidding ends before the first win whose price is no longer there. That
+    is kinder than a hold of the whole bid, and keeps a bid from earning by what it freezes.
+    Each bid that meets that end costs one more pass over the sequence.
 
     Args:
         competing: Least bid that wins, per opportunity in order, in nanos.
@@ -39,12 +40,12 @@ def best_fixed_bid(
     """
     rivals, worth = np.asarray(competing, dtype=np.int64), np.asarray(values, dtype=np.int64)
     bids, surpluses, spent = _by_bid(rivals, worth)
-    allowed = bids <= min(_limit(cap), _limit(budget))
+    allowed = slice(None) if cap is None else bids <= cap
     best = FixedBid(0, 0)
     for bid, surplus, cost in zip(
         bids[allowed].tolist(), surpluses[allowed].tolist(), spent[allowed].tolist(), strict=True
     ):
-        if budget is not None and cost + bid > budget:
+        if budget is not None and cost > budget:
             surplus = _within(rivals, worth, bid, budget)
         if surplus > best.surplus:
             best = FixedBid(bid, surplus)
@@ -68,10 +69,5 @@ def _by_bid(rivals: Nanos, worth: Nanos) -> tuple[Nanos, Nanos, Nanos]:
 
 def _within(rivals: Nanos, worth: Nanos, bid: int, budget: int) -> int:
     won = np.flatnonzero(rivals <= bid)
-    spent_before = np.cumsum(rivals[won]) - rivals[won]
-    paid = won[spent_before + bid <= budget]
+    paid = won[np.cumsum(rivals[won]) <= budget]
     return int((worth[paid] - rivals[paid]).sum())
-
-
-def _limit(money_nanos: int | None) -> int:
-    return int(np.iinfo(np.int64).max) if money_nanos is None else money_nanos

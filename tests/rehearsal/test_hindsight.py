@@ -12,12 +12,12 @@ limits = some.none() | some.integers(0, 40)
 
 
 def earned(rows: list[tuple[int, int]], bid: int, budget: int | None) -> int:
-    """What one bid earns, one opportunity after the other, holding the bid in full."""
+    """What one bid earns, one opportunity after the other, until a price is not there."""
     spent = surplus = 0
     for competing, value in rows:
-        if budget is not None and spent + bid > budget:
-            break
         if competing <= bid:
+            if budget is not None and spent + competing > budget:
+                break
             spent += competing
             surplus += value - competing
     return surplus
