@@ -11,7 +11,7 @@ from service.decision.price import Ready, ready
 from service.decision.terms import Terms
 from service.errors import no_such_line_item
 from service.guard.gate import Limits
-from service.learner.tally import Tally
+from service.learner.tally import Tally, UnreadableTally
 from service.store import changes, keys, learners, line_items
 from service.store.database import Database, Reading
 from service.threads import Threads
@@ -128,19 +128,22 @@ def _load(
 
 def _item(row: line_items.Row, snapshot: learners.Snapshot | None, before: Item | None) -> Item:
     terms = Terms.from_config(row.config)
-    if snapshot is not None and snapshot.sound:
-        return Item(
-            row.id,
-            row.version,
-            limits_of(row),
-            terms,
-            snapshot.seq,
-            ready(Tally.from_bytes(snapshot.state), terms),
-        )
-    # A state that is not what was published is never used: the last good one goes on.
-    logger.error("the snapshot of a line item does not match its digest")
-    seq, last = (before.snapshot, before.ready) if before else (0, None)
-    return Item(row.id, row.version, limits_of(row), terms, seq, last)
+    seq, made = _ready(snapshot, terms)
+    if made is None and before is not None:
+        # A state that is not what was published is never used: the last good one goes on.
+        seq, made = before.snapshot, before.ready
+    return Item(row.id, row.version, limits_of(row), terms, seq, made)
+
+
+def _ready(snapshot: learners.Snapshot | None, terms: Terms) -> tuple[int, Ready | None]:
+    if snapshot is None or not snapshot.sound:
+        logger.error("the snapshot of a line item does not match its digest")
+        return 0, None
+    try:
+        return snapshot.seq, ready(Tally.from_bytes(snapshot.state), terms)
+    except UnreadableTally:
+        logger.exception("the snapshot of a line item cannot be read by this release")
+        return 0, None
 
 
 def limits_of(row: line_items.Row) -> Limits:

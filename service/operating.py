@@ -14,7 +14,7 @@ from typing import Any
 
 from service.catalog import Catalog
 from service.decision.learnability import defaults, learnability, objection
-from service.errors import Malformed, NeedsConfirmation, StoreAway
+from service.errors import Malformed, NeedsConfirmation, NotOffered, StoreAway
 from service.learner.tally import Tally
 from service.ledger.entries import Entry
 from service.showing import show
@@ -280,7 +280,8 @@ def _object(config: Mapping[str, Any], confirm: str | None) -> None:
         return
     if found.code == "learning_cost":
         raise NeedsConfirmation(found.code, found.detail, {"confirm": found.code})
-    raise Malformed(found.code, found.detail)
+    kind = NotOffered if found.code == "not_offered" else Malformed
+    raise kind(found.code, found.detail)
 
 
 def _filled(config: Mapping[str, Any]) -> tuple[dict[str, Any], list[str]]:
