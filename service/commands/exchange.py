@@ -116,7 +116,8 @@ class Exchange:
             answer = await self._bid(auction)
             self._waiting += self._settle(auction, answer)
             advance(1)
-            if len(self._waiting) >= GROUP_ROWS:
+            # A pass may be for money that only our own news sets free.
+            if len(self._waiting) >= GROUP_ROWS or (self._waiting and answer["pass"]):
                 ready, self._waiting = self._waiting, []
                 await self._report(ready)
 
