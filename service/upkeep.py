@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import asyncio
 import logging
-from collections.abc import Awaitable, Callable, Coroutine
+from collections.abc import Awaitable, Callable, Coroutine, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -18,7 +18,6 @@ from service.errors import StoreAway
 from service.learner.fold import fold
 from service.learner.tally import Tally
 from service.leasing import Leasing
-from service.ledger.entries import Body
 from service.store import clock, decisions, learners, leases, workers
 from service.store.database import Database, Writing
 from service.threads import Threads
@@ -122,8 +121,7 @@ class Upkeep:
     async def teach(self) -> None:
         """Fold what is new, line item by line item."""
         for name in await self._threads.run(self._database.read, learners.behind):
-            item = self._catalog.get(name) or await self._catalog.look_up(name)
-            while await self._teach(item) == learners.ENTRIES_MAX:
+            while await self._teach(name) == learners.ENTRIES_MAX:
                 pass
 
     async def mature(self) -> None:
@@ -147,14 +145,9 @@ class Upkeep:
             self._database.write, lambda connection: decisions.prune(connection, before_ms)
         )
 
-    async def _teach(self, item: Item) -> int:
-        terms = item.terms
-
-        def lesson(state: bytes, entries: list[tuple[str, Body]]) -> bytes:
-            return fold(Tally.from_bytes(state), entries, terms.ceiling, terms.arrival).to_bytes()
-
+    async def _teach(self, line_item: str) -> int:
         return await self._threads.run(
-            learners.teach, self._database, item.id, lesson, self._rhythm.checkpoint_entries
+            learners.teach, self._database, line_item, lesson, self._rhythm.checkpoint_entries
         )
 
     def _apply(self, item: Item) -> None:
@@ -188,3 +181,9 @@ class Upkeep:
         except StoreAway:
             logger.warning("the database is away; trying again")
             await asyncio.sleep(AWAY_S)
+
+
+def lesson(state: bytes, entries: list[learners.Lesson], config: Mapping[str, Any]) -> bytes:
+    """Fold entries into a state under the line item's terms; bytes in, bytes out."""
+    value = config["value"]
+    return fold(Tally.from_bytes(state), entries, value["ceiling"], value["arrival"]).to_bytes()

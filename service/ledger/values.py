@@ -44,26 +44,30 @@ def judge(value: Value, slots: Slots, *, ceiling: int, arrival: str) -> ValueVer
         return ValueVerdict("refused", code="value_out_of_range")
     result = slots.get("result")
     if result is None and "billed" not in slots:
-        return _park(value, slots)
+        return _park(value, slots, arrival)
     if result is not None and result[0] != "won":
         return ValueVerdict("refused", code="not_won")
     return _teach(value, slots, ceiling, arrival)
 
 
 def unparked(slots: Slots, bid: bytes) -> list[Entry]:
-    """The lessons that waited for this bid's win."""
+    """The lessons that waited for this bid's win or bill and are not taught yet."""
     parked = [body for kind, body in slots.values() if kind == "parked"]
     return [
-        Entry("value", {**body, "was": None}, bid, f"value:{body['event_id']}") for body in parked
+        Entry("value", {**body, "was": None}, bid, f"value:{body['event_id']}")
+        for body in parked
+        if f"value:{body['event_id']}" not in slots
     ]
 
 
-def _park(value: Value, slots: Slots) -> ValueVerdict:
+def _park(value: Value, slots: Slots, arrival: str) -> ValueVerdict:
     if value.corrects is not None:
         return ValueVerdict("refused", code="no_such_event")
     slot = f"parked:{value.event_id}"
     if slot in slots:
         return _again(value, slots, slot)
+    if arrival == "once" and any(kind == "parked" for kind, _ in slots.values()):
+        return _beside(value, slots)
     return ValueVerdict("parked", Entry("parked", _said(value), value.bid, slot))
 
 

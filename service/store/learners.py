@@ -17,6 +17,7 @@ from service.store.database import Database, Reading, Writing, among, locking
 from service.store.leases import read_configs
 
 Lesson = tuple[str, Body]
+Fold = Callable[[bytes, list[Lesson], dict[str, Any]], bytes]
 ENTRIES_MAX = 2000
 
 
@@ -51,19 +52,14 @@ def behind(connection: Reading) -> list[str]:
     return [row.line_item for row in rows]
 
 
-def teach(
-    database: Database,
-    line_item: str,
-    fold: Callable[[bytes, list[Lesson]], bytes],
-    checkpoint_entries: int,
-) -> int:
+def teach(database: Database, line_item: str, fold: Fold, checkpoint_entries: int) -> int:
     """
     Fold the next entries into the one state of a line item; returns how many were read.
 
     One teacher at a time: the learner's row is locked, and another teacher passes by.
 
     Args:
-        fold: Pure; state and lessons in, state out.
+        fold: Pure; state, lessons and the line item's configuration in, state out.
         checkpoint_entries: A checkpoint is kept whenever seq passes a multiple of it.
     """
 
@@ -71,10 +67,12 @@ def teach(
         mine = "SELECT seq, working, digest FROM learner WHERE line_item = :id"
         statement = locking(connection, mine, skip=True)
         row = connection.execute(statement, {"id": line_item}).one_or_none()
-        lessons = _lessons(connection, line_item, row.seq, ENTRIES_MAX) if row else []
-        if row is None or not lessons:
+        if row is None:
             return 0
-        state, seq = fold(bytes(row.working), lessons), row.seq + len(lessons)
+        lessons = _lessons(connection, line_item, row.seq, ENTRIES_MAX)
+        # Read under the lock, for a change of terms refolds under it too.
+        config = read_configs(connection, [line_item])[line_item]
+        state, seq = fold(bytes(row.working), lessons, config), row.seq + len(lessons)
         now = database.wall_ms()
         connection.execute(_LEARN, {"id": line_item, "seq": seq, "state": state})
         if seq // checkpoint_entries > row.seq // checkpoint_entries:
@@ -87,16 +85,15 @@ def teach(
     return database.write(work)
 
 
-def fold_all(
-    connection: Reading, line_item: str, start: bytes, fold: Callable[[bytes, list[Lesson]], bytes]
-) -> bytes:
+def fold_all(connection: Reading, line_item: str, start: bytes, fold: Fold) -> bytes:
     """The state that the whole stream up to the learner's seq gives, folded from `start`."""
     end = connection.execute(
         text("SELECT seq FROM learner WHERE line_item = :id"), {"id": line_item}
     ).scalar_one()
+    config = read_configs(connection, [line_item])[line_item]
     state, seq = start, 0
     while lessons := _lessons(connection, line_item, seq, min(ENTRIES_MAX, end - seq)):
-        state = fold(state, lessons)
+        state = fold(state, lessons, config)
         seq += len(lessons)
     return state
 
@@ -128,6 +125,8 @@ def begin(connection: Writing, line_item: str, state: bytes, wall_ms: int) -> No
 def refold(connection: Writing, line_item: str, state: bytes) -> None:
     """Let the teacher read the whole stream again from `state`, after a change of terms."""
     connection.execute(_LEARN, {"id": line_item, "seq": 0, "state": state})
+    # Checkpoints under the old terms would make a later rebuild differ from a fold from zero.
+    connection.execute(text("DELETE FROM checkpoint WHERE line_item = :id"), {"id": line_item})
 
 
 def begin_afresh(connection: Writing, line_item: str, seq: int) -> None:

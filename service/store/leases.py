@@ -14,7 +14,7 @@ from service.ledger.days import left_ms, local_day
 from service.ledger.entries import Entry
 from service.ledger.leasing import Wish, slice_amount
 from service.store.books import Books
-from service.store.database import Database, Writing, among
+from service.store.database import Database, Reading, Writing, among
 from service.store.workers import live
 
 NEVER_MS = 2**60
@@ -188,7 +188,9 @@ def close_due(database: Database) -> int:
     return database.write(work)
 
 
-def read_configs(connection: Writing, line_items: Iterable[str]) -> dict[str, dict[str, Any]]:
+def read_configs(
+    connection: Reading | Writing, line_items: Iterable[str]
+) -> dict[str, dict[str, Any]]:
     """The configuration of these line items."""
     statement = among("SELECT id, config FROM line_item WHERE id IN :ids")
     rows = connection.execute(statement, {"ids": list(line_items)})

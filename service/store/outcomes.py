@@ -119,7 +119,7 @@ class _Group:
             day=day, slice_id=slice_id,
         )  # fmt: skip
         self._keep(slots, verdict.entry)
-        if verdict.entry is not None and verdict.entry.kind == "won":
+        if verdict.entry is not None and verdict.entry.kind in ("won", "billed"):
             for lesson in unparked(slots, outcome.bid):
                 self._append(booking.line_item, slots, lesson)
         return Booked(verdict.status)
