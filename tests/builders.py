@@ -1,4 +1,4 @@
-"""Small builders of what most tests of the stories need: a line item, and one worker driven by hand.
+"""Builders of what most tests of the stories need: a line item, and a worker driven by hand.
 
 Apart from conftest.py, so that a test sees in its own lines what it builds and when time passes.
 """

@@ -6,7 +6,7 @@ slice) and never the movements that were booked.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -27,7 +27,7 @@ class Replayed:
     paid: set[str] = field(default_factory=set)
 
 
-def replay(spend_on: str, entries: list[tuple[str, str, Mapping[str, Any]]]) -> Replayed:
+def replay(spend_on: str, entries: Sequence[tuple[str, str, Mapping[str, Any]]]) -> Replayed:
     """
     Replay (kind, bid hex, body) in order of seq.
 
