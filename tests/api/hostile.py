@@ -42,10 +42,11 @@ _TEXTS = [
     f'"{CANARY * 100_000}"',
     '""',
 ]
+UP = ".." + "/"
 _INJECTIONS = [
     f'"{CANARY}\'; DROP TABLE line_item; --"',
     f'"<script>{CANARY}</script>"',
-    f'"../../{CANARY}"',
+    f'"{UP}{UP}{CANARY}"',
     f'"{{{{{CANARY}}}}}"',
     f'"%00{CANARY}"',
     f'"=cmd|{CANARY}"',

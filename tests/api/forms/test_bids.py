@@ -1,0 +1,116 @@
+"""Opportunities are read one by one, and what is not used of them is named."""
+
+from __future__ import annotations
+
+import json
+from decimal import Decimal
+from typing import Any
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+
+from service.api.body import parse_object
+from service.api.forms.bids import read_batch, read_bid
+from service.api.forms.features import features
+from service.api.forms.fields import ID
+from service.decision.opportunity import Opportunity
+from service.errors import Malformed, NotOffered, Refusal
+from tests.api.anything import ANYTHING
+
+
+def test_an_opportunity_is_read_with_its_floor_rounded_up() -> None:
+    """A floor between two nanos becomes the higher one, so that no bid lies below it."""
+    opportunity, unused = read_bid(
+        {
+            "request_id": "op 81f2",
+            "line_item": "alpine-season-pass",
+            "floor_cpm": Decimal("0.4000001"),
+            "features": {"device": "phone", "hour": 13, "share": Decimal("0.5"), "gone": None},
+            "deadline_ms": 80,
+        }
+    )
+    assert opportunity == Opportunity(
+        line_item="alpine-season-pass",
+        request_id="op 81f2",
+        floor=400_001,
+        features={"device": "phone", "hour": 13, "share": 0.5},
+        deadline_ms=80,
+    )
+    assert unused == set()
+
+
+def test_what_is_not_used_as_sent_is_named() -> None:
+    """Unknown fields, an unused hint and a floor below zero are warnings, not refusals."""
+    opportunity, unused = read_bid(
+        {"line_item": "a", "value_hint": "1", "floor_cpm": -1, "shiny": 1, "<b>": 2, "x" * 65: 3}
+    )
+    assert opportunity.floor == 0
+    assert unused == {"value_hint", "floor_cpm", "shiny", "(no plain word)"}
+
+
+@pytest.mark.parametrize(
+    "wish", [{"line_items": ["a", "b"]}, {"auction": "first"}, {"price_cpm": "1"}]
+)
+def test_kinds_of_bid_that_this_release_lacks_are_refused(wish: dict[str, Any]) -> None:
+    """The refusal comes even where another field is missing because of the wish."""
+    with pytest.raises(NotOffered):
+        read_bid({**({} if "line_items" in wish else {"line_item": "a"}), **wish})
+
+
+def test_a_bad_row_stays_in_its_place_of_a_batch() -> None:
+    """Good rows get the one deadline of the call; a bad row becomes its refusal."""
+    rows, unused = read_batch(
+        {
+            "opportunities": [
+                {"line_item": "a", "deadline_ms": 5},
+                7,
+                {"line_item": "a", "auction": "first"},
+                {"line_item": True},
+                {"line_item": "b", "shiny": 1},
+            ],
+            "deadline_ms": 80,
+        },
+        rows_max=5,
+    )
+    kinds = [row.code if isinstance(row, Refusal) else row.deadline_ms for row in rows]
+    assert kinds == [80, "bad_field", "not_offered", "bad_field", 80]
+    assert unused == {"shiny"}
+
+
+@pytest.mark.parametrize("rows", [[], [{}] * 6, {}, None])
+def test_a_batch_of_none_or_of_too_many_is_refused(rows: object) -> None:
+    """The limit is the one of the settings."""
+    with pytest.raises(Malformed):
+        read_batch({"opportunities": rows}, rows_max=5)
+
+
+FIELDS = st.sampled_from(["line_item", "floor_cpm", "features", "deadline_ms", "source", "test"])
+
+
+@given(st.dictionaries(FIELDS | st.text(), ANYTHING, max_size=6))
+def test_no_opportunity_fails_otherwise_than_by_a_refusal(members: dict[str, object]) -> None:
+    """Whatever stands in the fields, the form is filled in or refused."""
+    try:
+        opportunity, _ = read_bid(members)
+    except Refusal:
+        return
+    assert ID.fullmatch(opportunity.line_item)
+
+
+@given(ANYTHING)
+def test_no_features_fail_otherwise_than_by_a_value_error(members: object) -> None:
+    """What passes is text, finite numbers and truth values, ready for JSON without NaN."""
+    try:
+        read = features(members)
+    except ValueError:
+        return
+    assert len(json.dumps(read, allow_nan=False)) > 1
+
+
+def test_numbers_of_a_body_reach_the_form_exactly() -> None:
+    """No float stands between the text of a price and its nanos."""
+    opportunity, _ = read_bid(
+        parse_object(b'{"line_item": "a", "floor_cpm": 1.000000000000000001}')
+    )
+    assert opportunity.floor == 1_000_001
