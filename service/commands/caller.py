@@ -25,7 +25,11 @@ class Unanswered(BidkeelError):
 
 @dataclass(frozen=True, slots=True)
 class Learnt:
-    """What a line item's state says at the end; money in nanos, values per impression."""
+    """What a line item's state says at the end; money in nanos, values per impression.
+
+    Attributes:
+        known: Wins whose value is known; with none of them the mean is nothing.
+    """
 
     budget: int
     spent: int
@@ -95,12 +99,12 @@ async def learnt(service: Service, line_item: str, wins: int) -> Learnt:
 
 def from_state(state: Mapping[str, Any]) -> Learnt:
     """Read the few members of a state that the tables show."""
-    learner, books = state["learner"], state["money"]
+    certainty, books = state["certainty"], state["money"]
     return Learnt(
         budget=money.nanos(books["budget"]),
         spent=money.nanos(books["spent"]),
-        known=int(learner["known"]),
-        mean=money.nanos(learner["mean"]),
-        low=money.nanos(learner["low"]),
-        high=money.nanos(learner["high"]),
+        known=certainty["known"],
+        mean=money.nanos(certainty["mean"] or 0),
+        low=money.nanos(certainty["low"]),
+        high=money.nanos(certainty["high"]),
     )

@@ -128,7 +128,7 @@ def _show(figures: list[Figures], seconds: float, for_a_program: bool) -> None:
 def table(figures: list[Figures]) -> Table:
     """The demo's table: one column per line item, the unit in the name of every row."""
     rows = {name: [write(of_one) for of_one in figures] for name, write in _ROWS.items()}
-    title = "Firnholz Alpine Garden (invented), amounts in EUR, CPM in EUR per 1,000 impressions"
+    title = "Firnholz Alpine Garden, invented (CPM in EUR per 1,000 impressions)"
     return report.table(title, [of_one.planned.id for of_one in figures], rows)
 
 
@@ -142,25 +142,26 @@ _ROWS: dict[str, Callable[[Figures], str]] = {
     "spent (EUR)": lambda f: money.nanos_text(f.learnt.spent),
     "budget (EUR)": lambda f: money.nanos_text(f.learnt.budget),
     "auctions (count)": lambda f: f"{f.book.auctions:,}",
-    "passes (count)": lambda f: report.reasons(f.book.passes),
+    "passes (count)": lambda f: f"{f.book.passes.total():,}",
     "wins (count)": lambda f: f"{f.book.wins:,}",
-    "win rate (wins per auction)": lambda f: report.share(f.book.wins, f.book.auctions),
-    "mean price paid (CPM)": _mean_price,
+    "win rate (per auction)": lambda f: report.share(f.book.wins, f.book.auctions),
+    "mean price (CPM)": _mean_price,
     "estimated value (CPM)": lambda f: report.cpm(f.learnt.mean),
     "its interval (CPM)": lambda f: report.interval(f.learnt.low, f.learnt.high),
     "true value (CPM)": lambda f: report.cpm(f.planned.mean * money.NANOS_PER_UNIT),
-    "surplus, value won - paid (EUR)": lambda f: money.nanos_text(f.book.surplus),
-    "surplus of best fixed bid (EUR)": lambda f: money.nanos_text(f.best.surplus),
-    "that bid, in hindsight (CPM)": lambda f: report.cpm(f.best.bid),
+    "surplus, won - paid (EUR)": lambda f: money.nanos_text(f.book.surplus),
+    "best fixed bid had (EUR)": lambda f: money.nanos_text(f.best.surplus),
+    "that bid, hindsight (CPM)": lambda f: report.cpm(f.best.bid),
 }
 
 
 def _books_line(of_one: Figures) -> str:
-    charged = report.amount(of_one.book.charged, garden.CURRENCY)
-    spent = report.amount(of_one.learnt.spent, garden.CURRENCY)
-    verdict = "the same" if of_one.book.charged == of_one.learnt.spent else "NOT the same"
-    name = of_one.planned.id
-    return f"{name}: the exchange charged {charged}, the service spent {spent}: {verdict}."
+    charged, spent = of_one.book.charged, of_one.learnt.spent
+    return (
+        f"{of_one.planned.id}: exchange charged {report.amount(charged, garden.CURRENCY)} "
+        f"{'=' if charged == spent else 'BUT'} spent {report.amount(spent, garden.CURRENCY)}\n"
+        f"    passes: {report.reasons(of_one.book.passes)}"
+    )
 
 
 def _data(figures: list[Figures], seconds: float) -> dict[str, object]:

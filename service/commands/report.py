@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Mapping, Sequence
 
+from rich import box
 from rich.console import Console
 from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeElapsedColumn
 from rich.table import Table
@@ -25,8 +26,8 @@ def progress() -> Progress:
 
 def table(title: str, heads: Sequence[str], rows: Mapping[str, Sequence[str]]) -> Table:
     """One row per quantity, its unit in its name; one column per thing compared."""
-    grid = Table(title=title, title_justify="left")
-    grid.add_column("")
+    grid = Table(title=title, title_justify="left", box=box.SIMPLE_HEAD, padding=(0, 1, 0, 0))
+    grid.add_column("", no_wrap=True)
     for head in heads:
         grid.add_column(head, justify="right")
     for name, cells in rows.items():
@@ -46,7 +47,7 @@ def cpm(nanos: float) -> str:
 
 def interval(low_nanos: int, high_nanos: int) -> str:
     """Two ends per impression, as CPM."""
-    return f"{cpm(low_nanos)} to {cpm(high_nanos)}"
+    return f"{low_nanos / money.NANOS_PER_CPM:.2f} to {high_nanos / money.NANOS_PER_CPM:.2f}"
 
 
 def share(part: int, whole: int) -> str:
