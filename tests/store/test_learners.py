@@ -149,7 +149,7 @@ def test_two_teachers_at_once_neither_lose_nor_repeat_an_entry(migrated_url: str
 
 
 def test_a_refold_reads_everything_under_the_new_terms(migrated_url: str) -> None:
-    """After a change of ceiling the state is that of a fresh fold, and no old checkpoint is left."""
+    """After a change of ceiling the state is a fresh fold, and no old checkpoint is left."""
     database = Database(migrated_url)
     begin(database)
     append(database, won(1), valued(1, 80_000_000), won(2), valued(2, 10_000_000))
