@@ -110,7 +110,7 @@ class TicketKeys:
             BadTicket: Anything else.
         """
         raw = _bytes(text) if len(text) <= TEXT_MAX else b""
-        if len(raw) < _HEAD.size + 2 + MAC_BYTES or raw[0] != FORM:
+        if len(raw) < _HEAD.size + 2 + MAC_BYTES or raw[0] != FORM or _text(raw) != text:
             raise BadTicket("not a ticket")
         body, mac = raw[:-MAC_BYTES], raw[-MAC_BYTES:]
         key = self._keys.get(body[1 : 1 + KEY_ID_BYTES])

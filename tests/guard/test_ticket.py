@@ -1,0 +1,192 @@
+"""Tickets: they carry all an outcome needs, and nobody else can make or change one."""
+
+from __future__ import annotations
+
+import base64
+from dataclasses import replace
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as some
+
+from service.guard.ticket import TEXT_MAX, BadTicket, Ticket, TicketKeys, bid_of, ref_of
+
+KEYS = TicketKeys([b"first invented key", b"second invented key"])
+TICKET = Ticket(
+    line_item="alpine-season-pass",
+    source="default",
+    slice=bytes(range(16)),
+    counter=7,
+    price=1_234_567,
+    snapshot=812,
+    day=739_951,
+    incarnation=b"incarnat",
+)
+
+printable = some.text(some.characters(min_codepoint=33, max_codepoint=126), min_size=1, max_size=64)
+tickets = some.builds(
+    Ticket,
+    line_item=printable,
+    source=printable,
+    slice=some.binary(min_size=16, max_size=16),
+    counter=some.integers(0, 2**32 - 1),
+    price=some.integers(0, 2**62),
+    snapshot=some.integers(0, 2**62),
+    day=some.integers(0, 2**32 - 1),
+    incarnation=some.binary(min_size=8, max_size=8),
+    test=some.booleans(),
+)
+
+HOSTILE = [
+    "", "=", "====", "A", " ", "\x00", "\n", "none", "AQ", "AQ==", "..", "%41%41", "\ud800",
+    "ä" * 60,
+    "\u202e" + "A" * 100, "A" * 100, "A" * 512, "A" * 513, "A" * 1_000_000, "ä" * 1_000_000,
+    "AQAAAA" + "A" * 130, "💶" * 50, "'; DROP TABLE stream; --",
+]  # fmt: skip
+
+
+@given(tickets)
+def test_a_ticket_comes_back_as_it_left(ticket: Ticket) -> None:
+    """Every field survives, at any length of the ids, in URL-safe text of at most 512 bytes."""
+    text = KEYS.sign(ticket)
+
+    assert KEYS.verify(text) == ticket
+    assert len(text) <= TEXT_MAX
+    assert set(text) <= set("ABCDEFGHIJKLMNOPQRSTUVWXYZabcdefghijklmnopqrstuvwxyz0123456789-_")
+
+
+def test_the_longest_ids_fit() -> None:
+    """Two ids of 64 characters stay far below the limit."""
+    longest = replace(TICKET, line_item="x" * 64, source="y" * 64)
+    assert len(KEYS.sign(longest)) == 267
+
+
+def test_every_changed_byte_is_refused() -> None:
+    """No bit of a ticket can be turned without breaking its signature."""
+    raw = base64.urlsafe_b64decode(KEYS.sign(TICKET) + "==")
+    for place in range(len(raw)):
+        for bit in range(8):
+            changed = bytearray(raw)
+            changed[place] ^= 1 << bit
+            with pytest.raises(BadTicket):
+                KEYS.verify(base64.urlsafe_b64encode(changed).rstrip(b"=").decode())
+
+
+def test_every_changed_character_is_refused() -> None:
+    """A ticket has one spelling: not even bits that carry nothing may differ."""
+    for fill in range(3):  # All three ways in which base64 can end.
+        text = KEYS.sign(replace(TICKET, source="d" * (7 + fill)))
+        for place, old in enumerate(text):
+            for new in "AQgwBf_-+/=":
+                if new != old:
+                    with pytest.raises(BadTicket):
+                        KEYS.verify(text[:place] + new + text[place + 1 :])
+
+
+def test_another_spelling_of_the_same_bytes_is_refused() -> None:
+    """The plain alphabet of base64 and its padding are not ours."""
+    text = next(t for n in range(100) if "-" in (t := KEYS.sign(replace(TICKET, counter=n))))
+    for other in (text.replace("-", "+"), text + "=", text + "==", text + "\n", " " + text):
+        with pytest.raises(BadTicket):
+            KEYS.verify(other)
+
+
+@pytest.mark.parametrize("cut", [1, 2, 16, 60])
+def test_a_cut_or_extended_ticket_is_refused(cut: int) -> None:
+    """What is missing or too much breaks the signature as well."""
+    text = KEYS.sign(TICKET)
+    for other in (text[:-cut], text[cut:], text + "A" * cut, text + text[:cut]):
+        with pytest.raises(BadTicket):
+            KEYS.verify(other)
+
+
+def test_a_ticket_of_another_key_is_refused() -> None:
+    """Whoever does not have the key cannot make a ticket."""
+    with pytest.raises(BadTicket, match="not signed by us"):
+        KEYS.verify(TicketKeys([b"somebody else's"]).sign(TICKET))
+
+
+def test_a_key_id_alone_opens_nothing() -> None:
+    """A ticket that names our key and is signed by another is refused."""
+    ours = base64.urlsafe_b64decode(KEYS.sign(TICKET) + "==")
+    theirs = base64.urlsafe_b64decode(TicketKeys([b"somebody else's"]).sign(TICKET) + "==")
+    forged = theirs[:1] + ours[1:5] + theirs[5:]
+    with pytest.raises(BadTicket, match="not signed by us"):
+        KEYS.verify(base64.urlsafe_b64encode(forged).rstrip(b"=").decode())
+
+
+def test_the_first_key_signs_and_all_verify() -> None:
+    """Keys are changed by putting the new one first; the old one leaves when all came back."""
+    before, after = TicketKeys([b"old"]), TicketKeys([b"new", b"old"])
+
+    assert after.verify(before.sign(TICKET)) == TICKET
+    assert TicketKeys([b"new"]).verify(after.sign(TICKET)) == TICKET
+    with pytest.raises(BadTicket):
+        TicketKeys([b"new"]).verify(before.sign(TICKET))
+
+
+@pytest.mark.parametrize("text", HOSTILE, ids=lambda text: f"{len(text)} {text[:8]!a}")
+def test_hostile_text_is_refused_in_peace(text: str) -> None:
+    """Whatever comes as a ticket or a ref ends in the same refusal."""
+    with pytest.raises(BadTicket):
+        KEYS.verify(text)
+    with pytest.raises(BadTicket):
+        bid_of(text)
+
+
+@given(some.text() | some.binary().map(lambda raw: base64.urlsafe_b64encode(raw).decode()))
+def test_any_text_is_refused_in_peace(text: str) -> None:
+    """No text fails otherwise than by BadTicket."""
+    with pytest.raises(BadTicket):
+        KEYS.verify(text)
+
+
+@given(some.binary(min_size=16, max_size=16))
+def test_a_ref_names_one_bid_in_22_characters(bid: bytes) -> None:
+    """There and back, and no other spelling."""
+    ref = ref_of(bid)
+
+    assert len(ref) == 22
+    assert bid_of(ref) == bid
+
+
+def test_a_ref_has_one_spelling() -> None:
+    """The last character carries two bits; the other four must be those we write."""
+    spellings = [ref_of(bytes(16))[:-1] + last for last in "ABCDEFGHIJKLMNOPQRSTUVWXYZ"]
+    read = []
+    for ref in spellings:
+        try:
+            read.append(bid_of(ref))
+        except BadTicket:
+            continue
+    assert read == [bytes(16), bytes(15) + b"\x01"]
+
+
+def test_no_two_bids_of_a_slice_share_an_id() -> None:
+    """The id is slice + counter, also where that passes the end of 128 bits."""
+    last = replace(TICKET, slice=b"\xff" * 16)
+    ids = {replace(last, counter=n).bid for n in range(1000)}
+
+    assert len(ids) == 1000
+    assert replace(last, counter=0).bid == b"\xff" * 16
+    assert replace(last, counter=1).bid == bytes(16)
+    assert all(len(bid) == 16 for bid in ids)
+
+
+def test_every_field_is_signed() -> None:
+    """A ticket for one line item, slice or price cannot be used for another."""
+    others = [
+        replace(TICKET, line_item="alpine-season-pasT"),
+        replace(TICKET, source="defaulu"),
+        replace(TICKET, line_item="alpine-season-passd", source="efault"),
+        replace(TICKET, slice=bytes(16)),
+        replace(TICKET, counter=8),
+        replace(TICKET, price=1_234_568),
+        replace(TICKET, snapshot=813),
+        replace(TICKET, day=739_952),
+        replace(TICKET, incarnation=b"incarnas"),
+        replace(TICKET, test=True),
+    ]
+    signatures = {KEYS.sign(ticket)[-21:] for ticket in [TICKET, *others]}
+
+    assert len(signatures) == len(others) + 1
