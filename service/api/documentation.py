@@ -16,6 +16,12 @@ from service.api.forms.schemas import COMPONENTS
 from service.api.problems import MEDIA_TYPE
 from service.errors import NotFound
 
+CAUTIONS = """Prices for impression opportunities, never beyond the budget.
+
+Rehearse before money rides on it: `"test": true` answers without setting money aside.
+Send no personal data and no protected traits, in features, ids or reasons; consent and local
+law come first. Nothing here is legal advice: ask licensed counsel."""
+
 router = APIRouter()
 
 FILES = ("swagger-ui.css", "swagger-ui-bundle.js", "favicon-32x32.png")
@@ -80,6 +86,7 @@ def description(app: FastAPI) -> dict[str, Any]:
     """The OpenAPI description of everything installed, with the forms as we check them."""
     document = get_openapi(
         title="Bidkeel",
+        description=CAUTIONS,
         version=app.version,
         openapi_version=OPENAPI_VERSION,
         routes=app.routes,
