@@ -80,6 +80,7 @@ async def running(settings: Settings) -> AsyncIterator[Stories]:
     database = open_database(settings)
     threads = Threads(settings.pool_size)
     try:
+        # Better not to start than to promise on a database that forgets, or that we misread.
         database.check_safe()
         require_current(database)
         stories, upkeep, loops = _build(settings, database, threads)

@@ -103,6 +103,7 @@ class Bidder:
 
     async def _have_money(self, item: Item, until: float) -> None:
         held = self._leasing.hand.usable(item.id, self._leasing.clock())
+        # Enough for any price this line item may name: nobody waits, the refill comes behind.
         if held is not None and held.free >= item.limits.cap:
             self._leasing.refresh(held)
         elif self._leasing.denied(item.id) is None:
@@ -132,6 +133,7 @@ class Bidder:
 
     def _out_of_money(self, item: Item, held: SliceInHand | None) -> str | None:
         """Spent money is named before anything about the price; held money is named last."""
+        # What is left in the hand may still be spent, whatever the budget says.
         reason = self._leasing.denied(item.id)
         if held is not None and held.free > 0:
             return None
@@ -141,6 +143,7 @@ class Bidder:
         self, item: Item, opportunity: Opportunity, cleared: Cleared, held: SliceInHand | None
     ) -> Answer:
         """From here the price leaves: it is taken out of the slice, signed and answered."""
+        # A test ticket must look like any other, but no slice and no money stand behind it.
         if held is None or opportunity.test:
             slice_id, counter, day = secrets.token_bytes(16), 0, 1
         else:

@@ -94,6 +94,7 @@ class Catalog:
             return []
         if any(kind == "keys" for _, kind, _ in news):
             self._keys.clear()
+        # What this worker never asked for it need not load now.
         names = {name for _, kind, name in news if kind != "keys"}
         known = set(self._items)
         wanted = known if changes.ALL in names else names & known

@@ -92,6 +92,7 @@ class Feedback:
     async def run(self) -> None:
         """Book what waits, group by group, until cancelled."""
         while True:
+            # Whatever arrived while the last group was written shares the next transaction.
             group = [await self._queue.get()]
             while not self._queue.empty() and sum(len(w.rows) for w in group) < ROWS_MAX:
                 group.append(self._queue.get_nowait())
@@ -160,6 +161,7 @@ class Feedback:
             return Receipt(report.ref, "refused", "ref_of_another_bid")
         if report.kind in PAYING and report.clearing is None:
             return Receipt(ticket.ref, "refused", "no_price")
+        # Nothing was held for it, so there is nothing to book and nothing to learn.
         if ticket.test:
             return Receipt(ticket.ref, "recorded", test=True)
         return self._booking(report, ticket)
@@ -178,6 +180,7 @@ class Feedback:
             report.why,
             report.at,
         )
+        # A slice of a database before its restore may be gone or be another's: the late way.
         here = ticket.incarnation == self._incarnation
         day = date.fromordinal(ticket.day).isoformat()
         return Booking(ticket.line_item, outcome, ticket.slice if here else None, day)

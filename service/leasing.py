@@ -102,6 +102,7 @@ class Leasing:
         try:
             await self._threads.run(leases.retire, self._database, [_report(g) for g in given])
         except StoreAway:
+            # Perhaps it was freed: retiring again then touches no row.
             self.hand.given = given + self.hand.given
 
     async def tick(self) -> None:
@@ -127,6 +128,7 @@ class Leasing:
 
     async def _lease(self, names: list[str]) -> None:
         asked_at = self.clock()
+        # The lease is measured from before we asked, so that ours always ends first.
         requests = [self._request(name, asked_at) for name in names]
         try:
             answers = await self._threads.run(

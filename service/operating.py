@@ -212,6 +212,7 @@ class Operator:
             return once(connection, repeat, lambda: order(connection), now)
 
         answer = await self._threads.run(self._database.write, work)
+        # This worker need not wait for its next look to obey its own order.
         self._news.set()
         return answer
 
@@ -247,6 +248,7 @@ class Operator:
         until = time.monotonic() + IN_FORCE_S
         while True:
             seen = await self._read(workers.live)
+            # A worker that no longer beats holds slices that end by themselves.
             if all(passed >= number for passed in seen.values()):
                 return {**answer, "in_force": True, "by": None}
             if time.monotonic() > until:

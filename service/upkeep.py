@@ -84,6 +84,7 @@ class Upkeep:
 
     async def stop(self) -> None:
         """Give every slice back, write what is left of the log, and leave."""
+        # First the hand is emptied, then the database told: a price cannot leave in between.
         self._leasing.hand.retire_all()
         try:
             await self._leasing.give_back()

@@ -33,6 +33,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(arguments: argparse.Namespace) -> int:
     """Serve until a signal; slices are given back before this returns."""
+    # Settings are read here and handed on; nothing below reads the environment.
     settings = load()
     if settings.workers > 1:
         raise Unsafe(

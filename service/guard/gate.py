@@ -48,6 +48,7 @@ def clear(price: int, set_by: str, limits: Limits, floor: int, in_hand: int) -> 
         return "price_rounds_to_zero"
     if price < floor:
         return "under_floor"
+    # Last, since only here does the money decide and not the impression.
     if price > in_hand:
         price, set_by = in_hand, "money_in_hand"
     if price <= 0 or price < floor:

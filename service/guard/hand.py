@@ -75,6 +75,7 @@ class Hand:
 
     def retire(self, line_item: str) -> None:
         """Take the slice out of the hand for good and note what it issued."""
+        # It leaves the hand before its sum is read: no price can leave it after this line.
         old = self.slices.pop(line_item, None)
         if old is not None:
             passed = self.under_floor.pop(line_item, 0)

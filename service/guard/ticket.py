@@ -20,6 +20,7 @@ KEY_ID_BYTES = 4
 TEST = 1
 
 # form, key id, incarnation, slice, counter, price, snapshot, day, flags
+# Fixed widths and lengths before texts: a ticket is parsed without guessing, or not at all.
 _HEAD = struct.Struct(">B4s8s16sIqqIB")
 
 
@@ -114,6 +115,7 @@ class TicketKeys:
             raise BadTicket("not a ticket")
         body, mac = raw[:-MAC_BYTES], raw[-MAC_BYTES:]
         key = self._keys.get(body[1 : 1 + KEY_ID_BYTES])
+        # In constant time, so that a forger learns nothing from how long a refusal takes.
         if key is None or not hmac.compare_digest(mac, _mac(key, body)):
             raise BadTicket("not signed by us")
         return _unpacked(body)

@@ -67,6 +67,7 @@ class Account:
 
     def moved(self, movement: Movement) -> Account:
         """This account after the movement; a lowered budget follows its target down."""
+        # The bound may only fall as far as what is out already, or the promise would break.
         spent, held = self.spent + movement.spent, self.held + movement.held
         return replace(
             self,

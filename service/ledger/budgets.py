@@ -23,6 +23,7 @@ def set_budget(account: Account, budget: int) -> Account:
         detail = f"{nanos_text(account.spent)} is spent already; the budget cannot be lower."
         raise Conflict("budget_below_spent", detail, {"spent": nanos_text(account.spent)})
     bound = max(budget, account.spent + account.held)
+    # Late costs that found no money are the oldest debt, so new money goes to them first.
     funded = min(account.unfunded, max(0, budget - account.spent - account.held))
     return replace(
         account,

@@ -13,5 +13,6 @@ def late_cost(account: Account, day: Day | None, cost: int) -> Movement:
     """
     if account.budget - account.spent - account.held < cost:
         return Movement(unfunded=cost)
+    # A day is a plan, the budget is a promise: the day never refuses what the budget can pay.
     inside = cost if day is None else min(cost, day.room)
     return Movement(spent=cost, day_spent=inside, day_over_spent=cost - inside)

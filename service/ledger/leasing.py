@@ -36,8 +36,10 @@ def slice_amount(wish: Wish, free: int, budget: int, workers: int, orphaned: int
         workers: How many workers are live, at least 1.
         orphaned: Money in slices of workers that are gone.
     """
+    # In a crash loop every start would strand another slice; one bid at a time strands little.
     if orphaned * ORPHANED_SHARE_MAX > budget:
         return min(free, wish.largest_bid)
     grown = GROWTH_MAX * wish.before if wish.before else FIRST_BIDS_MAX * wish.largest_bid
     wanted = min(max(wish.forecast, wish.largest_bid), free // SHARE_OF_FREE // workers, grown)
+    # Less than one largest bid is still worth leasing: it spends the tail of the budget.
     return min(free, max(wish.largest_bid, wanted))

@@ -59,6 +59,7 @@ class Verdict:
 
 def settle(outcome: Outcome, place: Place) -> Verdict:
     """Decide one outcome; the caller holds the lock of the line item's balance."""
+    # Billing has a slot of its own, since it may come before, after or without the win notice.
     if outcome.kind == "billed":
         return _billed(outcome, place)
     taken = place.slots.get("result")
@@ -72,6 +73,7 @@ def settle(outcome: Outcome, place: Place) -> Verdict:
 
 
 def _first_result(outcome: Outcome, place: Place) -> Verdict:
+    # What was billed is paid already: a win after it only teaches, anything else contradicts it.
     billed_before = "billed" in place.slots
     if billed_before and outcome.kind != "won":
         return _contradiction(outcome, place, pays=False)
@@ -87,6 +89,7 @@ def _first_result(outcome: Outcome, place: Place) -> Verdict:
 def _win(outcome: Outcome, place: Place) -> Movement:
     price = outcome.price or 0
     if place.spend_on == "billed":
+        # Its hold is gone, and a win alone is not spend here: the bill will take the late way.
         if not place.alive:
             return NOTHING
         owed = min(price, outcome.hold)
@@ -137,6 +140,7 @@ def _billed(outcome: Outcome, place: Place) -> Verdict:
 def _billing(outcome: Outcome, place: Place, win: Body) -> Movement:
     """Billing after a win that owes: pay what was set aside, an excess goes the late way."""
     price, owed = outcome.price or 0, int(win["owed"])
+    # Billing grace may have dropped what was owed; then nothing is set aside any more.
     if place.slice is None or place.slice.owed < owed or owed == 0:
         owed = 0
     inside = min(price, owed)
@@ -166,6 +170,7 @@ def _void_of_win(outcome: Outcome, place: Place, win: Body) -> Verdict:
 def _contradiction(outcome: Outcome, place: Place, *, pays: bool) -> Verdict:
     """Keep what contradicts beside what stands; a win we had not booked may cost money."""
     entry = conflict(outcome.bid, _said(outcome))
+    # An exchange may resend the same contradiction for days; it is kept once.
     if entry.slot in place.slots:
         return Verdict("conflict")
     movement, costs = NOTHING, pays and not _paid_by_conflict(place.slots)
@@ -202,6 +207,7 @@ def _said(outcome: Outcome) -> dict[str, object]:
 
 
 def _same(taken: tuple[str, Body], outcome: Outcome) -> bool:
+    # When it happened and why are not content: a resend may name another moment.
     _, body = taken
     content = (body["said"], body["price"], body["to_win"])
     return content == (outcome.kind, outcome.price, outcome.to_win)

@@ -32,6 +32,7 @@ class Books:
         self._connection = connection
         self._wall_ms = wall_ms
         self.service_ms = 0
+        # The lock comes first in every such transaction; taking it later deadlocked in trials.
         self.accounts = self._lock(sorted(set(line_items)))
         # Read after the lock, or a waiter would stamp an older moment than its forerunner.
         self.service_ms = now_ms(connection)
@@ -172,6 +173,7 @@ class Books:
         self._guarded(_UPDATE_SLICE, "slice", row | {"was": before.state})
 
     def _guarded(self, statement: Any, what: str, row: dict[str, Any]) -> None:
+        # Reached only when the rules and the guard disagree, so it must never pass in silence.
         if self._connection.execute(statement, row).rowcount != 1:
             raise BrokenPromise(f"the guard of a {what} refused a write")
 

@@ -16,6 +16,7 @@ def advance(connection: Writing, wall_ms: int, step_ms_max: int = STEP_MS_MAX) -
     """Move service time on by what the wall clock shows, at most a step, never back."""
     seen = text("SELECT now_ms, seen_ms FROM service_clock WHERE id = 1")
     row = connection.execute(seen).one()
+    # Back never; forward at most a step: after an outage nothing has aged by the outage.
     step = min(max(0, wall_ms - row.seen_ms), step_ms_max)
     # Guarded by what was seen: of two workers that tick at once only one moves the clock.
     connection.execute(

@@ -54,6 +54,7 @@ class Database:
             options = f"-c statement_timeout={statement_timeout_ms} -c lock_timeout=2000"
             options += " -c idle_in_transaction_session_timeout=10000 -c synchronous_commit=on"
             arguments = {"options": options, "connect_timeout": 3}
+            # A queue of waiters on one hot row gets slower the longer it is: no overflow.
             self.engine = create_engine(
                 url, pool_size=pool_size, max_overflow=0, pool_timeout=2, connect_args=arguments
             )
@@ -69,6 +70,7 @@ class Database:
             try:
                 with self._transaction() as connection:
                     return work(Writing(connection))
+            # Half a transaction is never repeated: locks and reads of the failed try are void.
             except (DBAPIError, PoolTimeout) as error:
                 _raise_unless_retried(error, attempt)
             time.sleep((2 + secrets.randbelow(20)) * (attempt + 1) / 1000)
@@ -139,6 +141,8 @@ def locking(connection: Connection, statement: str, *, skip: bool = False) -> Te
 
 def _prepare_sqlite(connection: object, _record: object) -> None:
     cursor = connection.cursor()  # type: ignore[attr-defined]
+    # The driver would begin transactions by itself, deferred, and they then fail at once when
+    # somebody else writes; we begin them ourselves.
     connection.isolation_level = None  # type: ignore[attr-defined]
     for pragma in ("journal_mode=WAL", "synchronous=FULL", "foreign_keys=ON", "busy_timeout=5000"):
         cursor.execute(f"PRAGMA {pragma}")

@@ -244,6 +244,7 @@ def _totals(connection: Writing, wins: dict[bytes, Any], window_ms: int) -> list
     totals: dict[bytes, int] = {}
     for row in connection.execute(statement, {"bids": sorted(wins)}):
         bid, body = bytes(row.bid), json.loads(row.body)
+        # What comes after the window is kept in the stream, but the window was the question.
         if row.service_ms <= wins[bid].service_ms + window_ms:
             totals[bid] = totals.get(bid, 0) + body["amount"] - (body["was"] or 0)
     return sorted(total for total in totals.values() if total > 0)

@@ -99,6 +99,7 @@ class _Lenders:
         day = books.open_day(
             account.line_item, local_day(wall_ms, zone), config["daily_budget"] or NO_LIMIT
         )
+        # Decided on rows that this transaction has locked, so nobody else can lease them too.
         amount = self._amount(account, day, config, request)
         lease_ms = _lease_ms(config, wall_ms, self._lease_ms)
         if amount <= 0 or lease_ms <= 0:
@@ -209,6 +210,7 @@ _DUE = text(
 
 def _retire(books: Books, report: Report) -> None:
     found = books.slices.get(report.slice_id)
+    # Already retired, or closed meanwhile: its money was freed then, and must not be twice.
     if found is None or found.state != "open":
         return
     rounds = _count(books, found, report.bids)
@@ -226,6 +228,7 @@ def _retire(books: Books, report: Report) -> None:
 
 def _count(books: Books, found: Slice, bids: int) -> int:
     """Rounds that a report adds: bids it covers that no outcome has counted before."""
+    # Outcomes that came before this tick have counted their own rounds.
     rounds = max(0, bids - found.counted)
     changed = replace(found, ticked=max(bids, found.ticked), counted=found.counted + rounds)
     books.replace_slice(changed)
@@ -246,6 +249,7 @@ def _close(books: Books, found: Slice, bids: bool, bills: bool) -> None:
 def _lease_ms(config: dict[str, Any], wall_ms: int, lease_ms: int) -> int:
     """A slice outlives neither its local day nor the flight."""
     flight = config["flight"]
+    # Its bids belong to this day's money, so none may leave after midnight.
     lease_ms = min(lease_ms, left_ms(wall_ms, flight["time_zone"]))
     return lease_ms if flight["ends_ms"] is None else min(lease_ms, flight["ends_ms"] - wall_ms)
 

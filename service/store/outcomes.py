@@ -86,10 +86,12 @@ class _Group:
         """Decide every row in order, write once."""
         booked = [self._one(booking) for booking in self._group]
         self._books.save()
+        # The change number is taken last: its one row is what every writer waits for.
         self._freeze_unfunded()
         return booked
 
     def _one(self, booking: Booking) -> Booked:
+        # A sound ticket of a line item we do not have: a database restored from before it.
         if booking.line_item not in self._configs:
             return Booked("refused", "no_such_line_item")
         if isinstance(booking.event, Value):

@@ -40,6 +40,7 @@ def once(
     if repeat is None:
         return work()
     row = {"actor": repeat.actor, "key": repeat.key, "digest": repeat.digest, "now": wall_ms}
+    # Claimed first, in this very transaction: a twin that came at once waits here for us.
     done = connection.execute(_CLAIM, row)
     if done.rowcount == 0:
         before = connection.execute(_FIND, row).one()
