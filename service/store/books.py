@@ -10,7 +10,7 @@ from collections.abc import Iterable
 from dataclasses import replace
 from typing import Any
 
-from sqlalchemy import text
+from sqlalchemy import LargeBinary, text
 
 from service.errors import BrokenPromise
 from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
@@ -194,7 +194,8 @@ _SELECT_BALANCES = (
 )
 _SELECT_SLICES = among(
     "SELECT id, line_item, worker, day, amount, remaining, owed, ticked, counted, state"
-    " FROM slice WHERE id IN :ids"
+    " FROM slice WHERE id IN :ids",
+    of=LargeBinary,
 )
 _INSERT_SLICE = text(
     "INSERT INTO slice (id, line_item, worker, day, amount, remaining, owed, ticked, counted,"

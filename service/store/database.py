@@ -9,7 +9,16 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from typing import NewType, TypeVar
 
-from sqlalchemy import Connection, TextClause, bindparam, create_engine, event, text
+from sqlalchemy import (
+    Connection,
+    LargeBinary,
+    Text,
+    TextClause,
+    bindparam,
+    create_engine,
+    event,
+    text,
+)
 from sqlalchemy.exc import DBAPIError, OperationalError
 from sqlalchemy.exc import TimeoutError as PoolTimeout
 
@@ -122,9 +131,12 @@ class Database:
             yield connection
 
 
-def among(statement: str, name: str = "ids") -> TextClause:
-    """A statement whose `IN :ids` (or the name given) takes a list."""
-    return text(statement).bindparams(bindparam(name, expanding=True))
+def among(
+    statement: str, name: str = "ids", of: type[Text] | type[LargeBinary] = Text
+) -> TextClause:
+    """A statement whose `IN :ids` (or the name given) takes a list, perhaps an empty one."""
+    # Without a type PostgreSQL would compare an empty list as one of integers, and refuse.
+    return text(statement).bindparams(bindparam(name, type_=of(), expanding=True))
 
 
 def locking(connection: Connection, statement: str, *, skip: bool = False) -> TextClause:

@@ -8,7 +8,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import text
+from sqlalchemy import LargeBinary, text
 
 from service.ledger.entries import Body, Entry
 from service.store.books import Books
@@ -240,6 +240,7 @@ def _totals(connection: Writing, wins: dict[bytes, Any], window_ms: int) -> list
         "SELECT bid, body, service_ms FROM stream WHERE kind = 'value' AND bid IN :bids"
         " ORDER BY seq",
         "bids",
+        LargeBinary,
     )
     totals: dict[bytes, int] = {}
     for row in connection.execute(statement, {"bids": sorted(wins)}):

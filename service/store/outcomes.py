@@ -7,7 +7,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import Any
 
-from sqlalchemy import text
+from sqlalchemy import LargeBinary, text
 
 from service.ledger.entries import Entry
 from service.ledger.settle import Outcome, Place, settle
@@ -63,6 +63,7 @@ def find_wins(connection: Reading, bids: Iterable[bytes]) -> dict[bytes, str]:
     statement = among(
         "SELECT bid, line_item FROM stream WHERE bid IN :bids AND slot IN ('result', 'billed')",
         "bids",
+        LargeBinary,
     )
     rows = connection.execute(statement, {"bids": sorted(set(bids))})
     return {bytes(row.bid): row.line_item for row in rows}
@@ -161,7 +162,9 @@ class _Group:
             slots[entry.slot] = (entry.kind, dict(entry.body))
 
     def _read_slots(self, bids: set[bytes]) -> dict[bytes, Slots]:
-        statement = among("SELECT bid, seq, slot, kind, body FROM stream WHERE bid IN :ids")
+        statement = among(
+            "SELECT bid, seq, slot, kind, body FROM stream WHERE bid IN :ids", of=LargeBinary
+        )
         found: dict[bytes, Slots] = {}
         for row in self._connection.execute(statement, {"ids": sorted(bids)}):
             if row.slot == "result":
