@@ -1,4 +1,4 @@
-"""Builders of what most tests of the stories need: a line item, and a worker driven by hand.
+"""Small builders of what most tests of the stories need: a line item, a worker driven by hand.
 
 Apart from conftest.py, so that a test sees in its own lines what it builds and when time passes.
 """
