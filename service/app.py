@@ -18,6 +18,7 @@ from service.api.routes import install
 from service.backlog import Backlog
 from service.bidding import Bidder, Clocks
 from service.catalog import Catalog
+from service.connecting import open_database
 from service.feedback import Feedback
 from service.guard.ticket import TicketKeys
 from service.leasing import Leasing
@@ -57,15 +58,6 @@ def create_app(settings: Settings) -> FastAPI:
     app.state.settings = settings
     install(app)
     return app
-
-
-def open_database(settings: Settings) -> Database:
-    """The database of these settings."""
-    return Database(
-        settings.database_url.get_secret_value(),
-        pool_size=settings.pool_size,
-        statement_timeout_ms=settings.statement_timeout_ms,
-    )
 
 
 @asynccontextmanager

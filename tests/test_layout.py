@@ -13,7 +13,7 @@ from tests.house import ROOT, Source, imports, read, tracked
 
 STORIES = {"bidding", "feedback", "upkeep", "operating"}
 # What several stories need and none of them owns.
-SHARED = {"backlog", "catalog", "leasing", "showing", "threads"}
+SHARED = {"backlog", "catalog", "connecting", "leasing", "showing", "threads"}
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "rehearsal"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}
 

@@ -7,7 +7,7 @@ import json
 import sys
 from dataclasses import asdict
 
-from service.app import open_database
+from service.connecting import open_database
 from service.money import nanos_text
 from service.settings import load
 from service.store.audit import CHECKS, audit, unfunded

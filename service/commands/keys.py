@@ -7,7 +7,7 @@ import json
 import sys
 from collections.abc import Mapping
 
-from service.app import open_database
+from service.connecting import open_database
 from service.errors import Malformed
 from service.settings import load
 from service.store import keys

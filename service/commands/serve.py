@@ -12,8 +12,9 @@ from pathlib import Path
 
 import uvicorn
 
-from service.app import create_app, open_database
+from service.app import create_app
 from service.commands.logs import log_config
+from service.connecting import open_database
 from service.errors import Unsafe
 from service.settings import Settings, load
 from service.store import keys
