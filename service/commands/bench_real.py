@@ -19,7 +19,7 @@ import uvloop
 from rich.console import Console
 
 from service import money
-from service.commands import caller, report, timber
+from service.commands import caller, options, report, timber
 from service.commands.exchange import Auction, Book, Exchange
 from service.commands.server_process import ServerProcess
 
@@ -67,8 +67,8 @@ class Outcome:
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the command's options."""
-    parser.add_argument("--seed", type=int, default=7, help="which bidder is us (default 7)")
-    parser.add_argument("--limit", type=int, default=None, help="only the first N auctions")
+    parser.add_argument("--seed", type=options.seed, default=7, help="chooses which bidder is us")
+    parser.add_argument("--limit", type=options.count, default=None, help="only the first auctions")
     parser.add_argument("--json", action="store_true", help="print figures for a program")
 
 

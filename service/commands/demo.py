@@ -7,6 +7,7 @@ machine, so two runs bid almost, but not exactly, alike.
 from __future__ import annotations
 
 import argparse
+import signal
 import tempfile
 import time
 from collections.abc import Callable
@@ -18,7 +19,7 @@ from rich.console import Console
 from rich.table import Table
 
 from service import money
-from service.commands import caller, garden, report
+from service.commands import caller, garden, options, report
 from service.commands.exchange import Auction, Book, Exchange
 from service.commands.server_process import ServerProcess
 from service.rehearsal.hindsight import FixedBid, best_fixed_bid
@@ -41,8 +42,8 @@ class Figures:
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the command's options."""
-    parser.add_argument("--auctions", type=int, default=24_000, help="how many (default 24000)")
-    parser.add_argument("--seed", type=int, default=7, help="of the invented market (default 7)")
+    parser.add_argument("--auctions", type=options.count, default=24_000, help="how many")
+    parser.add_argument("--seed", type=options.seed, default=7, help="of the invented market")
     parser.add_argument("--json", action="store_true", help="print figures for a program")
     parser.add_argument(
         "--keep-serving", action="store_true", help="leave the server running until Ctrl-C"
@@ -56,6 +57,8 @@ def run(arguments: argparse.Namespace) -> int:
     Returns:
         0 when every budget held and both sides' books agree to the nano, else 1.
     """
+    # Told to end, end like on Ctrl-C, so that no server outlives the demo.
+    signal.signal(signal.SIGTERM, signal.default_int_handler)
     with tempfile.TemporaryDirectory(prefix="bidkeel-demo-") as directory:
         with ServerProcess(Path(directory)) as server:
             started = time.monotonic()
