@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from contextlib import contextmanager
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from typing import Any
@@ -212,18 +210,6 @@ class Scene:
         if cost != self.exchange.charged:
             faults.append(f"the exchange charged {self.exchange.charged}, we booked {cost}")
         return faults
-
-
-@contextmanager
-def scene(url: str, spend_on: str = "won", **changes: Any) -> Iterator[Scene]:
-    """A scene on a migrated database; its promises must hold at the end."""
-    database = Database(url, pool_size=2)
-    try:
-        yield (played := Scene(database, spend_on, **changes))
-        if faults := played.faults():
-            raise AssertionError(faults)
-    finally:
-        database.close()
 
 
 def _balance(connection: Reading) -> dict[str, int]:
