@@ -1,4 +1,4 @@
-"""Option values that commands share, apart so that a wrong one is refused before a server starts."""
+"""Option values that commands share, so that a wrong one is refused before a server starts."""
 
 from __future__ import annotations
 

@@ -140,7 +140,13 @@ def test_what_this_release_lacks_is_refused_by_name(wish: dict[str, Any]) -> Non
 
 def test_wishes_left_empty_are_no_wishes() -> None:
     """Null, an empty object and an empty list ask for nothing."""
-    empty: dict[str, object] = {"return_target": None, "control": None, "kin": [], "fees": None, "tripwires": {}}
+    empty: dict[str, object] = {
+        "return_target": None,
+        "control": None,
+        "kin": [],
+        "fees": None,
+        "tripwires": {},
+    }
     config, _ = read_new({**SMALLEST, **empty}, TODAY_MS)
     assert config == read_new(SMALLEST, TODAY_MS)[0]
 
