@@ -13,7 +13,12 @@ from typing import Any
 
 @dataclass(slots=True)
 class Replayed:
-    """Balances in nanos as the stream tells them; slices map to [amount, left, owed, closed]."""
+    """
+    Balances in nanos as the stream tells them; slices map to [amount, left, owed, closed].
+
+    `days` map to what was spent on them: out of slices that are known, and by tickets
+    without one, whose day may not have had a row yet.
+    """
 
     spent: int = 0
     held: int = 0
@@ -25,6 +30,9 @@ class Replayed:
     results: dict[str, str] = field(default_factory=dict)
     billed: set[str] = field(default_factory=set)
     paid: set[str] = field(default_factory=set)
+    retired: set[str] = field(default_factory=set)
+    days: dict[str, list[int]] = field(default_factory=dict)
+    place: tuple[str, bool] = ("", False)
 
 
 def replay(spend_on: str, entries: Sequence[tuple[str, str, Mapping[str, Any]]]) -> Replayed:
@@ -42,10 +50,11 @@ def replay(spend_on: str, entries: Sequence[tuple[str, str, Mapping[str, Any]]])
 
 
 def _apply(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[str, Any]) -> None:
+    books.place = (body.get("day") or "", body.get("slice") is None)
     if kind == "lease":
         books.slices[body["slice"]] = [body["amount"], body["amount"], 0, 0]
     elif kind == "retire":
-        books.slices[body["slice"]][1] -= body["freed"]
+        _retire(books, body)
     elif kind == "close":
         _close(books, body)
     elif kind == "create":
@@ -56,6 +65,13 @@ def _apply(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[st
         _outcome(books, spend_on, kind, bid, body)
     elif kind == "conflict" and "said" in body:
         _conflict(books, bid, body)
+
+
+def _retire(books: Replayed, body: Mapping[str, Any]) -> None:
+    # A slice is put down once; whoever books it again would free money that is not there.
+    if body["slice"] not in books.retired:
+        books.retired.add(body["slice"])
+        books.slices[body["slice"]][1] -= body["freed"]
 
 
 def _close(books: Replayed, body: Mapping[str, Any]) -> None:
@@ -145,7 +161,9 @@ def _fits(books: Replayed, cost: int) -> bool:
 
 def _pay(books: Replayed, cost: int, excess: int, *, funded: bool) -> None:
     if funded:
+        day, unsure = books.place
         books.spent += cost
+        books.days.setdefault(day, [0, 0])[unsure] += cost
     else:
         books.unfunded += cost
     books.disputed += max(0, excess)
