@@ -208,7 +208,7 @@ class Scene:
         faults = [f"{finding.check}: off by {finding.off}" for finding in found]
         cost = ours["spent"] + ours["unfunded"] + ours["disputed"]
         if cost != self.exchange.charged:
-            faults.append(f"the exchange charged {self.exchange.charged}, we booked {cost}")
+            faults.append(f"exchange: it charged {self.exchange.charged}, we booked {cost}")
         return faults
 
 
