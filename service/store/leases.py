@@ -161,7 +161,9 @@ def tick(database: Database, reports: list[Report]) -> None:
         for report in reports:
             found = books.slices.get(report.slice_id)
             rounds = _count(books, found, report.bids) if found else 0
-            if rounds or report.under_floor:
+            # Unknown to a database restored from before it; the other reports still count.
+            known = report.line_item in books.accounts
+            if known and (rounds or report.under_floor):
                 body = {"rounds": rounds, "under_floor": report.under_floor}
                 books.post(report.line_item, Entry("tick", body))
         books.save()
