@@ -104,3 +104,20 @@ def test_what_a_slice_owed_falls_with_it() -> None:
 
     assert replay("billed", [CREATE, LEASE, said("won", 7)]).held == 37
     assert replay("billed", [CREATE, LEASE, said("won", 7), close]).held == 0
+
+
+def test_a_slice_is_put_down_once() -> None:
+    """Whoever booked it twice freed money that was not there, and the replay does not follow."""
+    retire: Said = ("retire", "", {"slice": "s", "freed": 15})
+
+    assert replay("won", [CREATE, LEASE, retire, retire]).held == 25
+
+
+def test_spend_of_a_day_is_sure_when_its_slice_is_known() -> None:
+    """A ticket without a slice may name a day that had no row; what is unfunded is no spend."""
+    known, foreign = said("won", 7, day="monday"), said("won", 6, day="monday")
+    strange = (foreign[0], "c", {**foreign[2], "slice": None})
+    unfunded = (foreign[0], "d", {**foreign[2], "slice": None, "price": 9, "bid": 90})
+
+    assert replay("won", [CREATE, LEASE, known, strange]).days == {"monday": [7, 6]}
+    assert replay("won", [("create", "", {"budget": 40}), LEASE, unfunded]).days == {}

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import threading
 import time
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
@@ -9,7 +10,7 @@ from concurrent.futures import ThreadPoolExecutor
 import pytest
 
 from service.store import clock
-from service.store.database import Database
+from service.store.database import Database, Writing
 
 START_MS = 1_796_000_000_000
 
@@ -65,11 +66,24 @@ def test_a_long_history_never_runs_faster_than_the_wall_clock(database: Database
 
 
 def test_of_workers_that_tick_at_once_one_moves_the_clock(database: Database) -> None:
-    """Eight see the same second go by, and it is counted once."""
-    before = tick(database, START_MS)
-    with ThreadPoolExecutor(8) as pool:
-        list(pool.map(lambda _: tick(database, START_MS + 1500), range(8)))
-    assert database.read(clock.now_ms) - before == 1500
+    """Both see the same second go by, and it is counted once."""
+    before, inside, leave = tick(database, START_MS), threading.Event(), threading.Event()
+
+    def slowly(connection: Writing) -> None:
+        clock.advance(connection, START_MS + 1500)
+        inside.set()
+        leave.wait(10)
+
+    with ThreadPoolExecutor(2) as pool:
+        first = pool.submit(database.write, slowly)
+        inside.wait(10)
+        second = pool.submit(tick, database, START_MS + 1600)
+        with pytest.raises(TimeoutError):
+            second.result(0.2)
+        leave.set()
+        first.result()
+        second.result()
+    assert database.read(clock.now_ms) - before in (1500, 1600)
 
 
 def test_a_step_that_is_rolled_back_did_not_happen(database: Database) -> None:

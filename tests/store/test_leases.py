@@ -300,6 +300,16 @@ def test_slices_close_each_at_its_own_moment(database: Database) -> None:
     assert row(database, "SELECT held FROM local_day") == (0,)
 
 
+def test_slices_of_all_line_items_close_together(database: Database) -> None:
+    """One call closes whatever is due, and each balance gets its own back."""
+    for name in ("orchard", NAME):
+        start(database, id=name)
+        leases.lease(database, "w", [LeaseRequest(name, name.encode().ljust(16), ALL, 0)], LEASE_S)
+    pass_service_ms(database, LEASE_MS + GRACE_MS)
+    assert leases.close_due(database) == 2
+    assert row(database, "SELECT sum(held), min(seq) FROM balance") == (0, 3)
+
+
 @pytest.mark.parametrize("at_once", [False, True])
 def test_what_nobody_billed_is_dropped_after_billing_grace(
     database: Database, at_once: bool
