@@ -6,20 +6,62 @@ A command's module is loaded only when it is called, so that small commands star
 from __future__ import annotations
 
 import argparse
-import importlib
 import sys
+from collections.abc import Callable
+from types import ModuleType
 
 from service.errors import BidkeelError
 
+Load = Callable[[], ModuleType]
 EXIT_CODES = "exit codes: 0 done, 1 refused or failed, 2 wrong usage, 3 the audit found something"
-COMMANDS = {
-    "serve": "serve bids, outcomes and operators over HTTP",
-    "demo": "play an invented advertiser's auctions against a real server",
-    "migrate": "bring the database to the schema of this release",
-    "keys": "add, list and end access keys",
-    "audit": "check every promise on the database as it is",
+
+
+def _serve() -> ModuleType:
+    from service.commands import serve
+
+    return serve
+
+
+def _demo() -> ModuleType:
+    from service.commands import demo
+
+    return demo
+
+
+def _migrate() -> ModuleType:
+    from service.commands import migrate
+
+    return migrate
+
+
+def _keys() -> ModuleType:
+    from service.commands import keys
+
+    return keys
+
+
+def _audit() -> ModuleType:
+    from service.commands import audit
+
+    return audit
+
+
+def _bench_real() -> ModuleType:
+    from service.commands import bench_real
+
+    return bench_real
+
+
+COMMANDS: dict[str, tuple[str, Load]] = {
+    "serve": ("serve bids, outcomes and operators over HTTP", _serve),
+    "demo": ("play an invented advertiser's auctions against a real server", _demo),
+    "migrate": ("bring the database to the schema of this release", _migrate),
+    "keys": ("add, list and end access keys", _keys),
+    "audit": ("check every promise on the database as it is", _audit),
 }
-BENCHES = {"real": "play real sealed-bid auctions through a real server"}
+BENCHES: dict[str, tuple[str, Load]] = {
+    "real": ("play real sealed-bid auctions through a real server", _bench_real),
+}
 
 
 def main(words: list[str] | None = None) -> int:
@@ -40,24 +82,23 @@ def _parser(words: list[str]) -> argparse.ArgumentParser:
         epilog=EXIT_CODES,
     )
     parts = parser.add_subparsers(dest="command", required=True)
-    for name, text in COMMANDS.items():
+    for name, (text, load) in COMMANDS.items():
         part = parts.add_parser(name, help=text, description=text, epilog=EXIT_CODES)
         if words[:1] == [name]:
-            _load(part, f"service.commands.{name}")
+            _fill(part, load())
     text = "measure the service against something outside it"
     bench = parts.add_parser("bench", help=text, description=text)
     kinds = bench.add_subparsers(dest="kind", required=True)
-    for name, text in BENCHES.items():
+    for name, (text, load) in BENCHES.items():
         part = kinds.add_parser(name, help=text, description=text, epilog=EXIT_CODES)
         if words[:2] == ["bench", name]:
-            _load(part, f"service.commands.bench_{name}")
+            _fill(part, load())
     return parser
 
 
-def _load(part: argparse.ArgumentParser, name: str) -> None:
-    module = importlib.import_module(name)
-    module.add_arguments(part)
-    part.set_defaults(run=module.run)
+def _fill(part: argparse.ArgumentParser, command: ModuleType) -> None:
+    command.add_arguments(part)
+    part.set_defaults(run=command.run)
 
 
 if __name__ == "__main__":

@@ -8,7 +8,8 @@ import httpx
 import pytest
 from sqlalchemy import create_engine, text
 
-from service.app import create_app, open_database
+from service.app import create_app
+from service.connecting import open_database
 from service.settings import load
 from service.store import keys
 

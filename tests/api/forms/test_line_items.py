@@ -91,7 +91,7 @@ def test_every_field_of_a_line_item_reaches_the_config() -> None:
         ({"grace_s": 30 * 86_400 + 1}, "grace_s"),
         ({"currency": "eur"}, "currency"),
         ({"flight": {"time_zone": "Europe/Nowhere"}}, "flight.time_zone"),
-        ({"flight": {"time_zone": "../../etc/passwd"}}, "flight.time_zone"),
+        ({"flight": {"time_zone": "/etc/passwd"}}, "flight.time_zone"),
         (
             {"flight": {"starts_at": "2026-12-01T00:00:00Z", "ends_at": "2026-12-01T00:00:00Z"}},
             "flight.ends_at",
