@@ -18,7 +18,7 @@ from service.errors import StoreAway
 from service.learner.fold import fold
 from service.learner.tally import Tally
 from service.leasing import Leasing
-from service.store import clock, decisions, learners, leases, workers
+from service.store import audit, clock, decisions, learners, leases, workers
 from service.store.database import Database, Writing
 from service.threads import Threads
 
@@ -29,6 +29,7 @@ GIVE_BACK_S = 0.2
 LOG_S = 0.5
 CLOCK_S = 1.0
 AWAY_S = 0.5
+AUDIT_S = 10.0
 PRUNE_S = 3600.0
 DAY_MS = 86_400_000
 
@@ -74,6 +75,7 @@ class Upkeep:
             self._every(rhythm.teach_ms / 1000, self.teach),
             self._every(CLOCK_S, self.mature),
             self._every(LOG_S, self.log),
+            self._every(AUDIT_S, self.audit),
             self._every(PRUNE_S, self.prune),
         ]
 
@@ -138,6 +140,11 @@ class Upkeep:
             except StoreAway:
                 self._backlog.put_back(rows)
                 return
+
+    async def audit(self) -> None:
+        """Freeze what no longer says what was promised; the command reads the streams too."""
+        for name in await self._threads.run(audit.freeze_broken, self._database):
+            logger.critical("a promise of line item %s is broken; it is frozen", name)
 
     async def prune(self) -> None:
         """Forget old decisions."""

@@ -7,14 +7,18 @@ only the feed knows its own delays.
 from __future__ import annotations
 
 import json
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 
 from sqlalchemy import text
 
 from service.ledger.replay import replay
-from service.store.database import Reading
+from service.store.changes import announce
+from service.store.database import Database, Reading, Writing
+from service.store.freezes import put
+from service.store.journal import note
 
-CHECKS = {
+# Balances, days and slices only: cheap enough to be asked while money moves.
+STANDING = {
     "V1 spent + held <= budget": (
         "SELECT line_item, spent + held - budget AS off FROM balance WHERE spent + held > budget"
     ),
@@ -40,6 +44,13 @@ CHECKS = {
         " GROUP BY line_item, day) s ON s.line_item = d.line_item AND s.day = d.day"
         " WHERE d.held <> coalesce(s.total, 0)"
     ),
+    "V6 0 <= remaining and remaining + owed <= amount": (
+        "SELECT line_item, remaining AS off FROM slice"
+        " WHERE remaining < 0 OR owed < 0 OR remaining + owed > amount"
+    ),
+}
+# Whole streams: asked by the command.
+OF_STREAMS = {
     "V3 accepted costs = spent + unfunded + disputed": (
         "SELECT b.line_item, b.spent + b.unfunded + b.disputed - coalesce(s.total, 0) AS off"
         " FROM balance b LEFT JOIN (SELECT line_item, sum(cost) AS total FROM stream"
@@ -55,11 +66,8 @@ CHECKS = {
         " ON s.line_item = b.line_item GROUP BY b.line_item, b.seq"
         " HAVING count(s.seq) <> b.seq OR coalesce(max(s.seq), 0) <> b.seq"
     ),
-    "V6 0 <= remaining and remaining + owed <= amount": (
-        "SELECT line_item, remaining AS off FROM slice"
-        " WHERE remaining < 0 OR owed < 0 OR remaining + owed > amount"
-    ),
 }
+CHECKS = STANDING | OF_STREAMS
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,12 +81,42 @@ class Finding:
 
 def audit(connection: Reading) -> list[Finding]:
     """Every difference found; an empty list means that V1 to V7 hold."""
-    found = [
+    found = _checked(connection, CHECKS)
+    return found + [f for name in _line_items(connection) for f in _replayed(connection, name)]
+
+
+def freeze_broken(database: Database) -> list[str]:
+    """Freeze the line items whose standing promises are broken; returns those newly frozen."""
+    found = database.read(lambda connection: _checked(connection, STANDING))
+    if not found:
+        return []
+    return database.write(lambda connection: _freeze(connection, found, database.wall_ms()))
+
+
+def _freeze(connection: Writing, found: list[Finding], wall_ms: int) -> list[str]:
+    reasons = {f.line_item: f"{f.check}: off by {f.off}" for f in reversed(found)}
+    frozen = [
+        name
+        for name, reason in sorted(reasons.items())
+        if put(connection, name, "audit", wall_ms=wall_ms, actor="bidkeel", reason=reason)
+    ]
+    for name in frozen:
+        detail = {"findings": [asdict(f) for f in found if f.line_item == name]}
+        note(
+            connection, wall_ms=wall_ms, actor="bidkeel", action="freeze",
+            line_item=name, reason="audit", detail=detail,
+        )  # fmt: skip
+    if frozen:
+        announce(connection, "freeze", frozen)
+    return frozen
+
+
+def _checked(connection: Reading, checks: dict[str, str]) -> list[Finding]:
+    return [
         Finding(name, row.line_item, int(row.off))
-        for name, statement in CHECKS.items()
+        for name, statement in checks.items()
         for row in connection.execute(text(statement))
     ]
-    return found + [f for name in _line_items(connection) for f in _replayed(connection, name)]
 
 
 def unfunded(connection: Reading) -> int:
