@@ -1,0 +1,238 @@
+"""The third story over a real database: what happens in the background, called by hand."""
+
+from __future__ import annotations
+
+import asyncio
+import json
+
+import pytest
+
+from service.feedback import Report
+from tests.builders import GRACE_MS, LEASE_S, NAME, PRICE, Worker, outage, working
+
+pytestmark = pytest.mark.anyio
+
+MEAN = {"method": "mean"}
+WORTH = 6_000_000
+DAY_MS = 86_400_000
+
+
+async def win(worker: Worker, count: int, value: int | None = None) -> None:
+    """Win so many bids at their price, each with this value."""
+    for number, answer in enumerate(await worker.bids(count)):
+        reports = [Report("won", answer.ticket, clearing=answer.bid)]
+        if value is not None:
+            reports.append(Report("value", answer.ticket, value=value, event_id=f"e{number}"))
+        assert {r.status for r in await worker.report(*reports)} == {"recorded"}
+
+
+async def learner(worker: Worker) -> dict[str, int]:
+    """What the state says of the learner."""
+    return dict((await worker.operator.state(NAME))["learner"])
+
+
+async def test_what_one_worker_teaches_others_take_up(migrated_url: str) -> None:
+    """A snapshot is published once, and a follower bids from it without being told more."""
+    async with working(migrated_url) as one, working(migrated_url, "two") as two:
+        await one.create(policy=MEAN)
+        before = await two.bid()
+        await win(one, 4, WORTH)
+        await one.upkeep.teach()
+        assert (await two.bid()).snapshot == before.snapshot == 0
+        await two.upkeep.follow()
+        after = await two.bid()
+        assert (after.bid, after.snapshot) == (4_888_888, (await learner(one))["snapshot"])
+        announced = "SELECT count(*) FROM change_log WHERE kind = 'snapshot'"
+        assert one.one(announced) == 1
+        await two.upkeep.teach()
+        assert one.one(announced) == 1
+
+
+async def test_a_worker_says_how_far_it_has_read(migrated_url: str) -> None:
+    """A look at the changes is written down at once, so that a freeze need not wait a beat."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        seen = "SELECT change_seen FROM worker WHERE id = 'one'"
+        assert worker.one(seen) == 0
+        await worker.upkeep.follow()
+        assert worker.one(seen) == worker.one("SELECT number FROM change_counter") == 1
+
+
+async def test_silent_bids_count_as_rounds_once(migrated_url: str) -> None:
+    """A tick reports what was priced; an outcome after it is no second round."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        answers = await worker.bids(3)
+        await worker.bid(floor=PRICE + 1)
+        await worker.leasing.tick()
+        await worker.leasing.tick()
+        await worker.learn()
+        assert (await learner(worker))["rounds"] == 4
+        assert worker.one("SELECT count(*) FROM stream WHERE kind = 'tick'") == 1
+        await worker.report(Report("lost", answers[0].ticket))
+        await worker.learn()
+        assert (await learner(worker))["rounds"] == 4
+
+
+async def test_a_slice_whose_time_is_over_comes_back(migrated_url: str) -> None:
+    """What was never issued is free again; what was keeps its hold through its grace."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(2)
+        await worker.upkeep.give_back()
+        assert worker.balance()["held"] > 2 * PRICE
+        worker.clock.now += LEASE_S
+        await worker.upkeep.give_back()
+        assert worker.balance()["held"] == 2 * PRICE
+        worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS)
+        await worker.upkeep.keep_time()
+        assert worker.balance()["held"] == 0
+        assert worker.audit() == []
+
+
+async def test_the_slice_of_a_dead_worker_closes_after_grace(migrated_url: str) -> None:
+    """Nobody need know that it died: another worker's upkeep frees what it held."""
+    async with working(migrated_url) as dead:
+        await dead.create()
+        await dead.bids(1)
+    async with working(migrated_url, "two") as worker:
+        worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS - 5000)
+        await worker.upkeep.keep_time()
+        assert worker.balance()["held"] > 0
+        worker.pass_service_ms(5000)
+        await worker.upkeep.keep_time()
+        assert worker.balance()["held"] == 0
+        assert worker.column("SELECT state FROM slice") == ["closed"]
+
+
+async def test_time_moves_by_a_step_at_most(migrated_url: str) -> None:
+    """After an outage of a day nothing has aged by a day."""
+    async with working(migrated_url) as worker:
+        worker.run("UPDATE service_clock SET seen_ms = seen_ms - :day", day=DAY_MS)
+        before = worker.one("SELECT now_ms FROM service_clock")
+        await worker.upkeep.keep_time()
+        assert worker.one("SELECT now_ms FROM service_clock") == before + 2000
+
+
+async def test_windows_mature_and_teach(migrated_url: str) -> None:
+    """A win is known when its window has closed, with all that it brought."""
+    async with working(migrated_url) as worker:
+        await worker.create(policy=MEAN, value={"arrival": "accrues", "window_ms": 60_000})
+        await win(worker, 2, WORTH)
+        await worker.upkeep.mature()
+        await worker.learn()
+        assert (await learner(worker))["wins_with_known_value"] == 0
+        worker.pass_service_ms(60_000)
+        await worker.upkeep.mature()
+        await worker.learn()
+        assert (await learner(worker))["wins_with_known_value"] == 2
+        assert (await worker.operator.state(NAME))["certainty"]["mean_nanos"] == WORTH
+
+
+async def test_the_audit_freezes_what_was_altered(migrated_url: str) -> None:
+    """The line item says by how much it is off, in the journal too, and its neighbour bids on."""
+    async with working(migrated_url) as worker:
+        for name in (NAME, "meadow"):
+            await worker.create(id=name)
+            await worker.bids(1, name)
+        await worker.upkeep.audit()
+        assert worker.column("SELECT line_item FROM freezing") == []
+        worker.run("UPDATE balance SET held = held + 7 WHERE line_item = :id", id=NAME)
+        await worker.upkeep.audit()
+        await worker.upkeep.audit()
+        await worker.upkeep.follow()
+        assert (await worker.bid()).reason == "frozen"
+        assert (await worker.bid("meadow")).bid == PRICE
+        (freeze,) = (await worker.operator.get(NAME)).freezes
+        assert freeze["source"] == "audit"
+        assert freeze["reason"] == "V2 held = sum of what slices hold: off by 7"
+        (detail,) = worker.column("SELECT detail FROM journal WHERE action = 'freeze'")
+        assert [found["off"] for found in json.loads(detail)["findings"]] == [7]
+
+
+async def test_cost_without_free_money_is_a_tripwire(migrated_url: str) -> None:
+    """A late win that the budget cannot take freezes the line item in every hand."""
+    async with working(migrated_url) as worker:
+        await worker.create(budget=PRICE)
+        (answer,) = await worker.bids(1)
+        worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS)
+        await worker.upkeep.keep_time()
+        worker.clock.now += LEASE_S
+        assert (await worker.bid()).bid == PRICE
+        (receipt,) = await worker.report(Report("won", answer.ticket, clearing=PRICE))
+        assert (receipt.status, worker.balance()["unfunded"]) == ("late", PRICE)
+        await worker.upkeep.follow()
+        assert (await worker.bid()).reason == "frozen"
+        assert worker.leasing.hand.slices == {}
+
+
+async def test_a_stop_gives_everything_back(migrated_url: str) -> None:
+    """Only open bids keep their hold, the log is whole, and the worker is off the list."""
+    async with working(migrated_url) as worker:
+        for name in (NAME, "meadow"):
+            await worker.create(id=name)
+            await worker.bids(3, name)
+        await worker.stop()
+        assert [worker.balance(name)["held"] for name in (NAME, "meadow")] == [3 * PRICE] * 2
+        assert worker.column("SELECT id FROM worker") == []
+        assert worker.one("SELECT count(*) FROM decision") == 6
+        assert worker.audit() == []
+
+
+async def test_old_decisions_are_forgotten(migrated_url: str) -> None:
+    """What is older than the setting goes, what is younger stays."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(2)
+        await worker.upkeep.log()
+        worker.run("UPDATE decision SET at_ms = at_ms - :age WHERE number = 1", age=31 * DAY_MS)
+        await worker.upkeep.prune()
+        assert worker.column("SELECT number FROM decision") == [2]
+
+
+@pytest.mark.parametrize("backend", ["postgresql"], indirect=True)
+async def test_an_outage_loses_no_slice_no_tick_and_no_log(migrated_url: str) -> None:
+    """What could not be told is told when the database is back; a stop meanwhile is no error."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(2)
+        await worker.bid(floor=PRICE + 1)
+        with outage(migrated_url):
+            await worker.leasing.tick()
+            await worker.upkeep.stop()
+        assert worker.leasing.hand.slices == {}
+        await worker.upkeep.stop()
+        assert worker.balance()["held"] == 2 * PRICE
+        assert worker.one("SELECT count(*) FROM decision") == 3
+        body = worker.one("SELECT body FROM stream WHERE kind = 'retire'")
+        assert json.loads(body)["rounds"] + json.loads(body)["under_floor"] == 3
+
+
+async def test_the_duties_run_by_themselves(migrated_url: str) -> None:
+    """A win reaches the price within moments, without anybody calling."""
+    async with working(migrated_url) as worker:
+        await worker.create(policy=MEAN)
+        await win(worker, 4, WORTH)
+        tasks = [asyncio.create_task(duty) for duty in worker.upkeep.duties()]
+        async with asyncio.timeout(5):
+            while (await worker.bid()).snapshot == 0:
+                await asyncio.sleep(0.02)
+        assert [task for task in tasks if task.done()] == []
+        for task in tasks:
+            task.cancel()
+        await asyncio.gather(*tasks, return_exceptions=True)
+
+
+async def test_a_duty_ends_on_what_it_does_not_understand(migrated_url: str) -> None:
+    """A worker in an unknown state must stop, not go on; only an absent database is waited for."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(1)
+        worker.run("UPDATE balance SET held = 0")
+        worker.clock.now += LEASE_S
+        tasks = [asyncio.create_task(duty) for duty in worker.upkeep.duties()]
+        done, _ = await asyncio.wait(tasks, timeout=5, return_when=asyncio.FIRST_COMPLETED)
+        assert [type(task.exception()).__name__ for task in done] == ["BrokenPromise"]
+        for task in tasks:
+            task.cancel()
+        await asyncio.gather(*tasks, return_exceptions=True)
