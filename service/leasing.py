@@ -156,7 +156,7 @@ class Leasing:
             self._denied[answer.line_item] = (answer.reason, self.clock() + DENIED_S)
             return
         held = self.hand.slices.get(answer.line_item)
-        if held is not None and held.free >= answer.amount:
+        if held is not None and answer.tail and held.free >= answer.amount:
             # At the tail of a budget the rest in the hand is worth more than the new slice.
             self.hand.given.append(Given(answer.slice_id, answer.line_item, 0, 0))
             self._denied[answer.line_item] = ("budget_held", self.clock() + DENIED_S)

@@ -32,13 +32,19 @@ class LeaseRequest:
 
 @dataclass(frozen=True, slots=True)
 class Leased:
-    """A slice this worker may use for `lease_ms` from before it asked; amount in nanos."""
+    """
+    A slice this worker may use for `lease_ms` from before it asked; amount in nanos.
+
+    Args:
+        tail: It holds less than one largest bid, since no more was free.
+    """
 
     line_item: str
     slice_id: bytes
     amount: int
     day: str
     lease_ms: int
+    tail: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -119,7 +125,8 @@ class _Lenders:
         books.new_slice(fresh, _times_ms(config, books.service_ms, lease_ms))
         entry = Entry("lease", {"slice": fresh.id.hex(), "amount": amount, "day": day.day})
         books.post(account.line_item, entry, Movement(held=amount), day=day.day)
-        return Leased(account.line_item, fresh.id, amount, day.day, lease_ms)
+        tail = amount < config["bid_cap"]
+        return Leased(account.line_item, fresh.id, amount, day.day, lease_ms, tail)
 
     def _amount(
         self, account: Account, day: Day, config: dict[str, Any], request: LeaseRequest
