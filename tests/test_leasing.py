@@ -1,0 +1,203 @@
+"""The money in a worker's hand: leased before it is needed, never extended, given back once."""
+
+from __future__ import annotations
+
+import asyncio
+from collections.abc import Callable
+from typing import TypeVar
+
+import pytest
+
+from service.errors import StoreAway
+from service.leasing import DENIED_S, MARGIN_SHARE
+from service.store.database import Writing
+from tests.builders import CAP, LEASE_S, NAME, PRICE, UNIT, Worker, outage, working
+
+pytestmark = pytest.mark.anyio
+
+T = TypeVar("T")
+FIRST = 16 * CAP
+
+
+def held(worker: Worker) -> int:
+    """What the database holds for the line item."""
+    return worker.balance()["held"]
+
+
+async def lease(worker: Worker) -> int:
+    """Ask for one more slice; returns what the hand then holds."""
+    await worker.leasing.obtain(NAME, 5)
+    return worker.leasing.hand.slices[NAME].amount
+
+
+def losing_answers(worker: Worker) -> Callable[[], None]:
+    """Let every write happen while its answer is lost, until the returned call."""
+    write = worker.database.write
+
+    def lose(work: Callable[[Writing], T]) -> T:
+        write(work)
+        raise StoreAway("the answer was lost")
+
+    def mend() -> None:
+        worker.database.write = write  # type: ignore[method-assign]
+
+    worker.database.write = lose  # type: ignore[method-assign]
+    return mend
+
+
+async def test_a_slice_is_replaced_and_never_extended(migrated_url: str) -> None:
+    """Each next is at most double, and what the old one never issued comes free."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        assert await lease(worker) == FIRST
+        first = worker.leasing.hand.slices[NAME]
+        first.take(PRICE)
+        # A worker that is busy asks for more, and never gets more than double.
+        first.take(FIRST - CAP)
+        worker.clock.now += 1
+        second = await lease(worker)
+        assert FIRST < second <= 2 * FIRST
+        assert worker.leasing.hand.slices[NAME].id != first.id
+        assert held(worker) == FIRST + second
+        await worker.leasing.give_back()
+        assert held(worker) == PRICE + FIRST - CAP + second
+        assert worker.audit() == []
+
+
+async def test_the_next_slice_is_asked_for_at_half(migrated_url: str) -> None:
+    """By money or by time, whichever comes first; nobody waits for it."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(1)
+        first = worker.leasing.hand.slices[NAME]
+        worker.leasing.refresh(first)
+        await settled(worker)
+        assert worker.leasing.hand.slices[NAME] is first
+        worker.clock.now += LEASE_S * (1 - 1 / MARGIN_SHARE) / 2
+        worker.leasing.refresh(first)
+        await settled(worker)
+        second = worker.leasing.hand.slices[NAME]
+        assert second is not first
+        second.take(second.amount // 2)
+        worker.leasing.refresh(second)
+        await settled(worker)
+        assert worker.leasing.hand.slices[NAME] is not second
+
+
+async def settled(worker: Worker) -> None:
+    """Wait until no wish is open: one more for another line item is answered in its turn."""
+    await worker.leasing.obtain("nobody", 5)
+    await worker.leasing.obtain("nobody", 5)
+
+
+async def test_a_slice_ends_here_before_it_ends_there(migrated_url: str) -> None:
+    """Its time is measured from before we asked, less a margin, on a clock that never steps."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await lease(worker)
+        slice_ = worker.leasing.hand.slices[NAME]
+        assert slice_.leased_at == worker.clock.now
+        assert slice_.expires_at - slice_.leased_at == pytest.approx(LEASE_S * 0.95)
+        worker.clock.now = slice_.expires_at
+        assert worker.leasing.hand.usable(NAME, worker.clock.now) is None
+
+
+async def test_no_money_is_asked_for_once_a_moment(migrated_url: str) -> None:
+    """A denial stands for a moment, and a change of the line item ends it."""
+    async with working(migrated_url) as worker:
+        await worker.create(budget=PRICE)
+        await worker.bids(1)
+        assert (await worker.bid()).reason == "budget_held"
+        assert worker.leasing.denied(NAME) == "budget_held"
+        worker.clock.now += DENIED_S
+        assert worker.leasing.denied(NAME) is None
+        await worker.bid()
+        await worker.operator.patch(NAME, {"budget": UNIT}, 1, None, None, "tester")
+        await worker.upkeep.follow()
+        assert worker.leasing.denied(NAME) is None
+        assert (await worker.bid()).bid == PRICE
+
+
+async def test_at_the_tail_the_rest_in_the_hand_is_kept(migrated_url: str) -> None:
+    """A new slice of less than one bid goes back when the hand holds more."""
+    async with working(migrated_url) as worker:
+        await worker.create(budget=FIRST)
+        first = await lease(worker)
+        tail = CAP // 2
+        await worker.operator.patch(NAME, {"budget": first + tail}, 1, None, None, "tester")
+        kept = worker.leasing.hand.slices[NAME]
+        assert await lease(worker) == kept.amount
+        assert (held(worker), worker.leasing.denied(NAME)) == (first + tail, "budget_held")
+        await worker.leasing.give_back()
+        assert held(worker) == first
+        assert worker.audit() == []
+
+
+async def test_a_slow_worker_changes_to_a_smaller_slice(migrated_url: str) -> None:
+    """What it will not need until the next refresh is free for others."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(1)
+        worker.clock.now += LEASE_S / 2
+        await worker.bids(1)
+        await settled(worker)
+        assert worker.leasing.hand.slices[NAME].amount == CAP
+        await worker.leasing.give_back()
+        assert held(worker) == 2 * PRICE + CAP
+
+
+async def test_many_line_items_share_a_transaction(migrated_url: str) -> None:
+    """Wishes that wait together are answered together; an unknown one spoils none."""
+    async with working(migrated_url) as worker:
+        names = [f"bed-{number}" for number in range(12)]
+        for name in names:
+            await worker.create(id=name)
+        seen = worker.one("SELECT count(*) FROM stream")
+        await asyncio.gather(*(worker.leasing.obtain(n, 5) for n in [*names, "nobody"]))
+        assert set(worker.leasing.hand.slices) == set(names)
+        assert worker.one("SELECT count(*) FROM stream") == seen + 12
+        assert worker.one("SELECT count(DISTINCT service_ms) FROM stream WHERE kind='lease'") == 1
+
+
+async def test_a_lease_whose_answer_was_lost_goes_back(migrated_url: str) -> None:
+    """It was held, nobody bids from it, and it comes free without waiting for its grace."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        mend = losing_answers(worker)
+        assert (await worker.bid(deadline_ms=300)).reason == "budget_held"
+        mend()
+        assert held(worker) == FIRST
+        await worker.leasing.give_back()
+        assert held(worker) == 0
+        worker.clock.now += DENIED_S
+        assert (await worker.bid()).bid == PRICE
+
+
+async def test_giving_back_twice_frees_once(migrated_url: str) -> None:
+    """An answer that was lost makes it tell again, and the second telling touches no row."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(2)
+        worker.leasing.hand.retire_all()
+        mend = losing_answers(worker)
+        await worker.leasing.give_back()
+        assert len(worker.leasing.hand.given) == 1
+        mend()
+        await worker.leasing.give_back()
+        assert (held(worker), worker.leasing.hand.given) == (2 * PRICE, [])
+        assert worker.one("SELECT count(*) FROM stream WHERE kind = 'retire'") == 1
+        assert worker.audit() == []
+
+
+@pytest.mark.parametrize("backend", ["postgresql"], indirect=True)
+async def test_an_outage_is_ridden_out_on_the_slice_in_hand(migrated_url: str) -> None:
+    """Prices leave while there is money in the hand, then pass, and come back by themselves."""
+    async with working(migrated_url) as worker:
+        await worker.create(bid_cap=PRICE)
+        await worker.bids(1)
+        with outage(migrated_url):
+            answers = [await worker.bid() for _ in range(16)]
+            assert [a.bid for a in answers[:15]] == [PRICE] * 15
+            assert answers[15].reason == "budget_held"
+        worker.clock.now += 1
+        assert (await worker.bid()).bid == PRICE
