@@ -9,7 +9,7 @@ import time
 from collections.abc import Callable
 from datetime import date
 
-from service.errors import StoreAway
+from service.errors import BrokenPromise, StoreAway
 from service.guard.hand import Given, Hand, SliceInHand
 from service.money import NANOS_MAX
 from service.store import leases
@@ -104,6 +104,9 @@ class Leasing:
         except StoreAway:
             # Perhaps it was freed: retiring again then touches no row.
             self.hand.given = given + self.hand.given
+        except BrokenPromise:
+            for one in given:
+                await self._give_back_alone(one)
 
     async def tick(self) -> None:
         """Report what was priced since the last tick, so that silence counts as rounds too."""
@@ -120,6 +123,15 @@ class Leasing:
         except StoreAway:
             for report in reports:
                 self._pass_again(report)
+
+    async def _give_back_alone(self, one: Given) -> None:
+        try:
+            await self._threads.run(leases.retire, self._database, [_report(one)])
+        except StoreAway:
+            self.hand.given.append(one)
+        except BrokenPromise:
+            # Its money stays held, which is the safe side, until somebody has mended the row.
+            logger.exception("a slice of line item %s could not be given back", one.line_item)
 
     def _pass_again(self, report: leases.Report) -> None:
         before = self.hand.under_floor.get(report.line_item, 0)

@@ -1,7 +1,8 @@
 """The third story, in the background: time, changes, money to give back, lessons, the log.
 
-Each duty is a loop of its own; a database that is away makes it wait, anything else ends
-the worker, since it is better to stop than to go on in an unknown state.
+Each duty is a loop of its own; a database that is away makes it wait, a damaged line item
+is frozen, anything else ends the worker, since it is better to stop than to go on in an
+unknown state.
 """
 
 from __future__ import annotations
@@ -14,7 +15,7 @@ from typing import Any
 
 from service.backlog import Backlog
 from service.catalog import Catalog, Item
-from service.errors import StoreAway
+from service.errors import BrokenPromise, StoreAway
 from service.learner.fold import fold
 from service.learner.tally import Tally
 from service.leasing import Leasing
@@ -82,7 +83,7 @@ class Upkeep:
     async def start(self) -> None:
         """Begin reading changes, move time on once and say that this worker lives."""
         await self._catalog.start()
-        await self.keep_time()
+        await self._sparing(self.keep_time)
 
     async def stop(self) -> None:
         """Give every slice back, write what is left of the log, and leave."""
@@ -143,8 +144,7 @@ class Upkeep:
 
     async def audit(self) -> None:
         """Freeze what no longer says what was promised; the command reads the streams too."""
-        for name in await self._threads.run(audit.freeze_broken, self._database):
-            logger.critical("a promise of line item %s is broken; it is frozen", name)
+        await self._freeze_broken()
 
     async def prune(self) -> None:
         """Forget old decisions."""
@@ -183,9 +183,23 @@ class Upkeep:
             await asyncio.sleep(seconds)
             await self._unless_away(duty)
 
-    async def _unless_away(self, duty: Callable[[], Awaitable[None]]) -> None:
+    async def _freeze_broken(self) -> list[str]:
+        frozen = await self._threads.run(audit.freeze_broken, self._database)
+        for name in frozen:
+            logger.critical("a promise of line item %s is broken; it is frozen", name)
+        return frozen
+
+    async def _sparing(self, duty: Callable[[], Awaitable[None]]) -> None:
+        """Do a duty; one damaged line item in its way is frozen, and must not stop the others."""
         try:
             await duty()
+        except BrokenPromise:
+            if not await self._freeze_broken():
+                raise
+
+    async def _unless_away(self, duty: Callable[[], Awaitable[None]]) -> None:
+        try:
+            await self._sparing(duty)
         except StoreAway:
             logger.warning("the database is away; trying again")
             await asyncio.sleep(AWAY_S)

@@ -212,8 +212,11 @@ _DUE = text(
     " CASE WHEN s.state <> 'closed' AND s.close_ms <= c.now_ms THEN 1 ELSE 0 END AS bids,"
     " CASE WHEN s.owed > 0 AND s.billing_close_ms <= c.now_ms THEN 1 ELSE 0 END AS bills"
     " FROM slice s, service_clock c"
-    " WHERE (s.state <> 'closed' AND s.close_ms <= c.now_ms)"
-    " OR (s.owed > 0 AND s.billing_close_ms <= c.now_ms) LIMIT 500"
+    " WHERE ((s.state <> 'closed' AND s.close_ms <= c.now_ms)"
+    " OR (s.owed > 0 AND s.billing_close_ms <= c.now_ms))"
+    # Books that are off are left as they were found until somebody has looked.
+    " AND NOT EXISTS (SELECT 1 FROM freezing f WHERE f.line_item = s.line_item"
+    " AND f.source = 'audit') LIMIT 500"
 )
 
 
