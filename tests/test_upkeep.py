@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import asyncio
 import json
+from collections.abc import AsyncIterator
+from contextlib import asynccontextmanager
 
 import pytest
 
@@ -208,31 +210,69 @@ async def test_an_outage_loses_no_slice_no_tick_and_no_log(migrated_url: str) ->
         assert json.loads(body)["rounds"] + json.loads(body)["under_floor"] == 3
 
 
+@asynccontextmanager
+async def on_duty(worker: Worker) -> AsyncIterator[list[asyncio.Task[None]]]:
+    """Every duty of a worker as the service runs it, until the end of the block."""
+    tasks = [asyncio.create_task(duty) for duty in worker.upkeep.duties()]
+    try:
+        yield tasks
+    finally:
+        for task in tasks:
+            task.cancel()
+        await asyncio.gather(*tasks, return_exceptions=True)
+
+
 async def test_the_duties_run_by_themselves(migrated_url: str) -> None:
     """A win reaches the price within moments, without anybody calling."""
     async with working(migrated_url) as worker:
         await worker.create(policy=MEAN)
         await win(worker, 4, WORTH)
-        tasks = [asyncio.create_task(duty) for duty in worker.upkeep.duties()]
-        async with asyncio.timeout(5):
+        async with on_duty(worker) as tasks, asyncio.timeout(5):
             while (await worker.bid()).snapshot == 0:
                 await asyncio.sleep(0.02)
-        assert [task for task in tasks if task.done()] == []
-        for task in tasks:
-            task.cancel()
-        await asyncio.gather(*tasks, return_exceptions=True)
+            assert [task for task in tasks if task.done()] == []
 
 
-async def test_a_duty_ends_on_what_it_does_not_understand(migrated_url: str) -> None:
-    """A worker in an unknown state must stop, not go on; only an absent database is waited for."""
+async def test_a_damaged_line_item_stops_no_other(migrated_url: str) -> None:
+    """It is frozen and left as found; its neighbours bid, come free and survive a restart."""
+    async with working(migrated_url) as worker:
+        for name in (NAME, "meadow"):
+            await worker.create(id=name)
+            await worker.bids(1, name)
+        worker.run("UPDATE balance SET held = 0 WHERE line_item = :id", id=NAME)
+        worker.clock.now += LEASE_S
+        await worker.upkeep.give_back()
+        assert worker.balance("meadow")["held"] == PRICE
+        worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS)
+        async with on_duty(worker) as tasks, asyncio.timeout(5):
+            while worker.balance("meadow")["held"]:
+                await asyncio.sleep(0.02)
+            assert [task for task in tasks if task.done()] == []
+        assert worker.column("SELECT source || ' ' || line_item FROM freezing") == ["audit garden"]
+    async with working(migrated_url, "two") as two:
+        assert (await two.bid()).reason == "frozen"
+        assert (await two.bid("meadow")).bid == PRICE
+        open_ = "SELECT line_item FROM slice WHERE state = 'open' AND worker = 'one'"
+        assert two.column(open_) == [NAME]
+
+
+async def test_a_damaged_line_item_keeps_no_worker_from_starting(migrated_url: str) -> None:
+    """What is due for closing there is found by the first step of a start."""
     async with working(migrated_url) as worker:
         await worker.create()
         await worker.bids(1)
         worker.run("UPDATE balance SET held = 0")
-        worker.clock.now += LEASE_S
-        tasks = [asyncio.create_task(duty) for duty in worker.upkeep.duties()]
-        done, _ = await asyncio.wait(tasks, timeout=5, return_when=asyncio.FIRST_COMPLETED)
-        assert [type(task.exception()).__name__ for task in done] == ["BrokenPromise"]
-        for task in tasks:
-            task.cancel()
-        await asyncio.gather(*tasks, return_exceptions=True)
+        worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS)
+    async with working(migrated_url, "two") as two:
+        assert (await two.bid()).reason == "frozen"
+
+
+async def test_a_duty_ends_on_what_it_does_not_understand(migrated_url: str) -> None:
+    """A worker in an unknown state must stop, not go on."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(1)
+        worker.run("UPDATE learner SET working = :state", state=b"?")
+        async with on_duty(worker) as tasks:
+            done, _ = await asyncio.wait(tasks, timeout=5, return_when=asyncio.FIRST_COMPLETED)
+            assert [type(task.exception()).__name__ for task in done] == ["UnreadableTally"]
