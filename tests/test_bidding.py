@@ -3,17 +3,19 @@
 from __future__ import annotations
 
 import asyncio
+import threading
 import time
 from typing import Any
 
 import pytest
-from sqlalchemy import text
+from sqlalchemy import event, text
 
 from service.bidding import Answer
 from service.decision.opportunity import Opportunity
 from service.errors import NotFound, Refusal
 from service.feedback import Report
 from service.guard.ticket import Ticket, TicketKeys
+from service.store import changes
 from tests.builders import CAP, NAME, PRICE, Worker, append, begin, won, working
 
 pytestmark = pytest.mark.anyio
@@ -124,6 +126,42 @@ async def test_the_tail_of_a_budget_is_bid(migrated_url: str) -> None:
         assert (await worker.bid(floor=PRICE)).reason == "budget_held"
         last = await worker.bid()
         assert (last.bid, last.set_by) == (PRICE // 2, "money_in_hand")
+
+
+async def test_what_is_in_the_hand_may_be_spent_whatever_the_budget_says(migrated_url: str) -> None:
+    """A budget lowered to what is spent stops leases; held money was promised before."""
+    async with working(migrated_url) as worker:
+        await worker.create(budget=PRICE + PRICE // 2)
+        (answer,) = await worker.bids(1)
+        await worker.report(Report("won", answer.ticket, clearing=PRICE))
+        await worker.operator.patch(NAME, {"budget": PRICE}, 1, None, None, "tester")
+        await worker.upkeep.follow()
+        assert (await worker.bid()).bid == PRICE // 2
+        assert worker.leasing.denied(NAME) == "budget_spent"
+        assert (await worker.bid()).reason == "budget_spent"
+
+
+async def test_a_freeze_that_comes_while_a_bid_waits_is_obeyed(migrated_url: str) -> None:
+    """The line item is looked at again after the wait for money."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bid(test=True)
+        worker.run("INSERT INTO freezing VALUES (:id, 'person', 1, 'tester', '')", id=NAME)
+        worker.database.write(lambda c: changes.announce(c, "freeze", [NAME]))
+        go, reached = threading.Event(), threading.Event()
+
+        def wait(_connection: object) -> None:
+            if worker.leasing.hand.slices == {} and not reached.is_set():
+                reached.set()
+                go.wait(5)
+
+        event.listen(worker.database.engine, "commit", wait)
+        asking = asyncio.create_task(worker.bid())
+        assert await asyncio.to_thread(reached.wait, 5)
+        await worker.catalog.follow()
+        go.set()
+        assert (await asking).reason == "frozen"
+        assert worker.leasing.hand.slices[NAME].bids == 0
 
 
 async def test_a_price_that_comes_too_late_is_a_pass(migrated_url: str) -> None:

@@ -110,6 +110,7 @@ async def test_an_edit_reaches_the_next_price(migrated_url: str) -> None:
     async with working(migrated_url) as worker:
         await worker.create()
         await worker.bids(1)
+        await worker.upkeep.follow()
         changed = {"policy": {"method": "flat", "price": 2 * PRICE}, "value": {"window_ms": 1}}
         view = await patch(worker, changed)
         assert (view.version, view.config["value"]["window_ms"]) == (2, 1)
@@ -204,15 +205,17 @@ async def test_a_freeze_is_in_force_when_every_live_worker_has_passed_it(migrate
         assert journal(one)[-1] == ("freeze", NAME, "tester", "a look")
 
 
-async def test_a_freeze_that_is_not_seen_says_by_when(migrated_url: str) -> None:
+async def test_a_freeze_that_one_worker_has_not_seen_says_by_when(migrated_url: str) -> None:
     """No price leaves after the last open slice is over, whoever is asleep."""
-    async with working(migrated_url) as worker:
-        await worker.create()
-        await worker.bid()
-        answer = await worker.operator.freeze(NAME, "a look", "tester")
-        seen = worker.one("SELECT seen_ms FROM service_clock")
+    async with working(migrated_url) as one, working(migrated_url, "two") as asleep:
+        await one.create()
+        await asleep.bid()
+        async with running_beside(one):
+            answer = await one.operator.freeze(NAME, "a look", "tester")
+        seen = one.one("SELECT seen_ms FROM service_clock")
         assert answer["in_force"] is False
         assert 25_000 < answer["by_ms"] - seen <= 30_000
+        assert (await asleep.bid()).bid == PRICE
 
 
 async def test_thawing_all_lifts_only_its_own_switch(migrated_url: str) -> None:

@@ -138,6 +138,7 @@ async def test_the_audit_freezes_what_was_altered(migrated_url: str) -> None:
             await worker.create(id=name)
             await worker.bids(1, name)
         await worker.upkeep.audit()
+        await worker.upkeep.follow()
         assert worker.column("SELECT line_item FROM freezing") == []
         worker.run("UPDATE balance SET held = held + 7 WHERE line_item = :id", id=NAME)
         await worker.upkeep.audit()
@@ -156,6 +157,7 @@ async def test_cost_without_free_money_is_a_tripwire(migrated_url: str) -> None:
     """A late win that the budget cannot take freezes the line item in every hand."""
     async with working(migrated_url) as worker:
         await worker.create(budget=PRICE)
+        await worker.upkeep.follow()
         (answer,) = await worker.bids(1)
         worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS)
         await worker.upkeep.keep_time()
