@@ -16,7 +16,7 @@ from service.errors import NotFound, Refusal
 from service.feedback import Report
 from service.guard.ticket import Ticket, TicketKeys
 from service.store import changes
-from tests.builders import CAP, NAME, PRICE, Worker, append, begin, won, working
+from tests.builders import CAP, NAME, PRICE, Worker, append, begin, running_beside, won, working
 
 pytestmark = pytest.mark.anyio
 
@@ -88,8 +88,8 @@ async def test_a_frozen_line_item_passes_before_anything_else(migrated_url: str)
     """The freeze is named although the flight is over too, and nothing is leased."""
     async with working(migrated_url) as worker:
         await worker.create(flight={"ends_ms": 1})
-        await worker.operator.freeze(NAME, "a look", "tester")
-        await worker.upkeep.follow()
+        async with running_beside(worker):
+            await worker.operator.freeze(NAME, "a look", "tester")
         assert (await worker.bid()).reason == "frozen"
         assert worker.balance()["held"] == 0
 

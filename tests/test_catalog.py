@@ -51,11 +51,10 @@ async def test_a_miss_is_remembered_for_a_moment(migrated_url: str) -> None:
         with pytest.raises(NotFound):
             await worker.catalog.look_up(NAME)
         reads = Reads(worker)
+        with pytest.raises(NotFound):
+            await worker.catalog.look_up(NAME)
+        assert reads.count == 0
         begin(worker.database)
-        for _ in range(20):
-            with pytest.raises(NotFound):
-                await worker.catalog.look_up(NAME)
-        assert (reads.count < 20, time.monotonic() - began < MISS_S) == (True, True)
         # Nothing was announced, so only time ends the miss.
         async with asyncio.timeout(5):
             while worker.catalog.get(NAME) is None:
