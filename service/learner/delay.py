@@ -32,8 +32,8 @@ class Seen(NamedTuple):
     Args:
         converted: Number that converted.
         delay_sum: Sum of the delays of those; above 0 when there are any.
-        ages: Age of each bucket of those that did not, the oldest above 0; an impression whose window has closed
-            stays at the age it closed at.
+        ages: Age of each bucket of those that did not, the oldest above 0; an impression whose
+            window has closed stays at the age it closed at.
         counts: Number of those in each bucket.
     """
 
