@@ -16,7 +16,7 @@ import numpy as np
 
 from service.learner.exptree_bounds import UNITS
 from service.learner.exptree_law import Law
-from service.learner.exptree_lessons import Lesson, Lost, Won, Worth, check
+from service.learner.exptree_lessons import CHANCE_MIN, Lesson, Lost, Won, Worth, check
 from service.learner.exptree_rules import Rules, Stage
 from service.learner.exptree_state import Tree
 from service.learner.partition import narrowest
@@ -93,7 +93,7 @@ class _Growing:
     def _won(self, won: Won) -> None:
         if won.chance is None or won.stage is None:
             self._unweighed += 1
-        elif won.price >= self._rules.ticks.top or won.chance == 0.0:
+        elif won.price >= self._rules.ticks.top or won.chance < CHANCE_MIN:
             self._beyond += 1
         else:
             units = self._rules.of_win(won.price, won.chance, won.stage)
@@ -110,7 +110,9 @@ class _Growing:
             self._teach(lost.price, lost.stage, self._rules.of_loss(lost.stage))
 
     def _worth(self, worth: Worth) -> None:
-        if not worth.chance or worth.stage is None or worth.price >= self._rules.ticks.top:
+        if worth.chance is None or worth.stage is None:
+            return
+        if worth.price >= self._rules.ticks.top or worth.chance < CHANCE_MIN:
             return
         self._cut(worth.price, worth.stage)
         if worth.stage == self._stage:

@@ -10,6 +10,7 @@ from dataclasses import dataclass
 
 from service.learner.exptree_rules import DOUBLINGS_MAX, Stage
 
+CHANCE_MIN = 2.0**-80  # A win by less is none that happens; its credit would not fit a step.
 ROUNDS_MAX = 2**32  # In one lesson; so many lessons fit a tree's eight bytes.
 
 

@@ -145,6 +145,15 @@ def test_order_does_not_matter(win_only: bool, rate: float | None, seed: int) ->
     assert learn(Tree.fresh(), shuffled(lessons, rng), of).to_bytes(of) == tree.to_bytes(of)
 
 
+def test_each_guess_goes_as_far_as_the_furthest_seen_of_it() -> None:
+    """A late law may have had one guess further and the other less; both orders agree."""
+    of = rules(20, win_only=False)
+    lessons: list[Lesson] = [Lost(nanos(0.5), (9, 0)), Lost(nanos(0.5), (2, 3))]
+
+    trees = [learn(Tree.fresh(), order, of) for order in (lessons, lessons[::-1])]
+    assert trees == [Tree(rounds=2, stage=(9, 3), steps=((10, 0),), lessons=2)] * 2
+
+
 @pytest.mark.parametrize("win_only", [False, True])
 def test_a_checkpoint_and_its_tail_equal_the_fold_from_zero(win_only: bool) -> None:
     """Wherever the stream is cut, and its first part read back from bytes."""

@@ -8,10 +8,19 @@ from typing import Any
 import pytest
 
 from service.learner.exptree import learn
-from service.learner.exptree_lessons import ROUNDS_MAX, BadLesson, Lesson, Lost, Passed, Won, Worth
+from service.learner.exptree_lessons import (
+    CHANCE_MIN,
+    ROUNDS_MAX,
+    BadLesson,
+    Lesson,
+    Lost,
+    Passed,
+    Won,
+    Worth,
+)
 from service.learner.exptree_rules import DOUBLINGS_MAX, FIRST
 from service.learner.exptree_state import Tree
-from tests.learner.exptree_games import rules
+from tests.learner.exptree_games import SCALE, rules
 
 # What strict types would stop, but a stream read back as JSON might hold.
 ANY: Any = {"half": 0.5, "nan": math.nan, "yes": True, "list": [0, 0], "one": (0,)}
@@ -47,6 +56,10 @@ def test_what_cannot_be_is_refused(win_only: bool, lesson: Lesson) -> None:
     "lesson",
     [
         Won(0, 0.0, FIRST),
+        Won(SCALE - 2, 5e-324, FIRST),
+        Worth(SCALE - 2, 5e-324, FIRST, SCALE),
+        Won(SCALE - 2, CHANCE_MIN, FIRST),
+        Worth(SCALE - 2, CHANCE_MIN, FIRST, SCALE),
         Won(10**30, 1.0, (DOUBLINGS_MAX, 6)),
         Lost(None, None),
         Passed(ROUNDS_MAX),
