@@ -40,4 +40,5 @@ class Backlog:
         room = max(0, self._count_max - len(self._waiting))
         kept = decisions[-room:] if room else []
         self.dropped += len(decisions) - len(kept)
+        # In front of what came meanwhile, so that the log stays in the order of the bids.
         self._waiting.extendleft(reversed(kept))

@@ -13,11 +13,15 @@ NANOS_PER_UNIT = 10**9
 NANOS_PER_CPM = 10**6
 NANOS_MAX = 2**62  # Half of int64, so that the sum of two amounts never overflows a column.
 PRICE_NANOS_MAX = 10**15  # A CPM of 10**9: up to here a JSON number keeps all six decimals.
+# A number of a million digits costs seconds to convert; no amount needs more than these.
 DIGITS_MAX = 60
 
 DOWN, UP, HALF_EVEN = ROUND_FLOOR, ROUND_CEILING, ROUND_HALF_EVEN
 
+# Only plain decimals: Decimal itself would also take NaN, Infinity, 1e9, blanks and digits of
+# other scripts, each of which some caller means differently.
 _TEXT = re.compile(r"-?(0|[1-9][0-9]{0,18})(\.[0-9]{1,30})?")
+# The default precision of 28 digits would round a long amount without a word.
 _EXACT = Context(prec=80)
 
 
@@ -87,6 +91,7 @@ def _scaled(amount: object, scale: int, rounding: str | None) -> int:
 
 
 def _decimal(amount: object) -> Decimal:
+    # In Python True is the int 1, and would buy something.
     if isinstance(amount, bool):
         raise NotMoney("a truth value is no amount")
     if isinstance(amount, Decimal):

@@ -19,6 +19,7 @@ class Threads:
 
     async def run(self, work: Callable[P, T], *args: P.args, **kwargs: P.kwargs) -> T:
         """Run blocking work in a thread and wait for it without blocking the loop."""
+        # Wrapped, because an executor hands on no keyword arguments.
         loop = asyncio.get_running_loop()
         return await loop.run_in_executor(self._pool, lambda: work(*args, **kwargs))
 

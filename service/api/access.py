@@ -24,6 +24,7 @@ async def require(request: Request, scope: str) -> Caller:
         StoreAway: The key could not be looked up.
     """
     key = await stories(request).operator.key_for(_bearer(request))
+    # Unknown and ended keys get one sentence: which of the two it was is nobody's business.
     if key is None:
         raise Unauthenticated("unknown_key", "The key is unknown or has ended.")
     if not key.allows(scope):
@@ -41,6 +42,7 @@ def require_health_key(request: Request) -> None:
     secret = edge(request).health_key
     if secret is None:
         return
+    # In constant time, so that a guesser learns nothing from how long the refusal takes.
     if not hmac.compare_digest(_bearer(request), secret.get_secret_value()):
         raise Unauthenticated("unknown_key", "The key is unknown or has ended.")
 

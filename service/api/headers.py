@@ -33,6 +33,7 @@ def if_match(request: Request) -> int:
     header = request.headers.get("if-match")
     if header is None:
         raise PreconditionMissing("if_match_missing", "Send the version you read as If-Match.")
+    # Neither a list nor a star is taken: a change is meant for the one version that was read.
     matched = _VERSION.fullmatch(header.strip())
     if matched is None:
         raise Stale("stale", "If-Match must be one ETag of this line item, with its quotes.")
@@ -61,6 +62,7 @@ def line_item_id(request: Request) -> str:
     Raises:
         NotFound: No line item can have this id.
     """
+    # An impossible id is answered like an unknown one and never reaches the database.
     name = str(request.path_params["line_item_id"])
     if not ID.fullmatch(name):
         raise no_such_line_item()
@@ -74,6 +76,7 @@ def page(request: Request) -> tuple[str | None, int]:
     Raises:
         Malformed: Another parameter, one twice, no id, or a limit outside 1 to 200.
     """
+    # A parameter that is misspelt would otherwise give the first page for ever.
     given = request.query_params
     if set(given) - {"after", "limit"} or len(given.multi_items()) != len(given):
         raise bad_field("query", "The parameters are after and limit, once each.")

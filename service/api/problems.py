@@ -47,6 +47,7 @@ HEADERS: dict[HTTPStatus, dict[str, str]] = {
 
 def status_of(refusal: errors.Refusal) -> HTTPStatus:
     """The status of the nearest class in the table, along the class tree."""
+    # A new refusal thus has the status of its parent until somebody gives it one of its own.
     return next(STATUS[kind] for kind in type(refusal).__mro__ if kind in STATUS)
 
 
@@ -58,6 +59,7 @@ def problem(
     headers: Mapping[str, str] | None = None,
 ) -> Response:
     """One answer of type application/problem+json; `data` never hides a standard member."""
+    # The data come first, so that none of theirs can stand in place of a standard member.
     members = {
         **(data or {}),
         "type": "about:blank",
@@ -107,10 +109,12 @@ async def _http(_request: Request, error: Exception) -> Response:
 
 
 async def _gone(_request: Request, _error: Exception) -> Response:
+    # Nobody reads this answer, but without it the log would call a hang-up an error of ours.
     return problem(HTTPStatus.BAD_REQUEST, "bad_json", "The body ended early.")
 
 
 async def _unexpected(_request: Request, error: Exception) -> Response:
+    # What went wrong may hold what the caller sent, so it goes to the log and not to the caller.
     _log.error("an error nobody expected", exc_info=error)
     return problem(
         HTTPStatus.INTERNAL_SERVER_ERROR,

@@ -19,6 +19,7 @@ ROUTERS = (
 
 def install(app: FastAPI) -> None:
     """Add every route and every error handler; a path with a slash too many is not found."""
+    # A redirect would drop the body of a POST at many a client, and lose an outcome with it.
     app.router.redirect_slashes = False
     for router in ROUTERS:
         app.include_router(router)

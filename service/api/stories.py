@@ -49,6 +49,7 @@ def stories(request: Request) -> Stories:
     Raises:
         StoreAway: The service is still starting.
     """
+    # The socket may listen before the database has answered; asking again will then help.
     if not started(request):
         raise StoreAway("the service is still starting")
     return cast(Stories, request.app.state.stories)

@@ -25,6 +25,7 @@ class Cleared:
 
 def shut(limits: Limits, wall_ms: int) -> str | None:
     """Why this line item bids for nobody now, or None."""
+    # First of all: whoever froze it at night must see that word and no other.
     if limits.frozen:
         return "frozen"
     begun = limits.starts_ms <= wall_ms
@@ -44,6 +45,7 @@ def clear(price: int, set_by: str, limits: Limits, floor: int, in_hand: int) -> 
     """
     if price > limits.cap:
         price, set_by = limits.cap, "cap"
+    # Before the floor, since a floor of nothing must not let a bid of nothing out.
     if price <= 0:
         return "price_rounds_to_zero"
     if price < floor:

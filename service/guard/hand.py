@@ -33,6 +33,7 @@ class SliceInHand:
 
     def take(self, price: int) -> int:
         """Set `price` nanos aside for a new bid; returns the bid's place in the slice."""
+        # Checked although the gate has clamped the price: here the promise is kept or broken.
         if not 0 < price <= self.free or self.bids >= COUNTER_MAX:
             raise ValueError("not in this slice")
         counter = self.bids
@@ -63,6 +64,7 @@ class Hand:
     def usable(self, line_item: str, now: float) -> SliceInHand | None:
         """The slice to bid from, or None when there is none or its time is over."""
         held = self.slices.get(line_item)
+        # At the moment itself it is over: the database may close it from then on.
         if held is not None and now >= held.expires_at:
             self.retire(line_item)
             return None
@@ -83,6 +85,7 @@ class Hand:
 
     def retire_expired(self, now: float) -> None:
         """Retire every slice whose time is over."""
+        # A list first, since retiring takes slices out of what is being walked over.
         for line_item in [k for k, s in self.slices.items() if now >= s.expires_at]:
             self.retire(line_item)
 

@@ -20,6 +20,7 @@ class Movement:
     day_spent: int = 0
     day_over_spent: int = 0
 
+    # Written out and not looped over: this is the one sum that all money goes through.
     def __add__(self, other: Movement) -> Movement:
         return Movement(
             self.spent + other.spent,
@@ -63,6 +64,7 @@ class Account:
     @property
     def free(self) -> int:
         """Money that may still be leased, in nanos."""
+        # Unfunded cost is not taken off: it is owed beyond the budget, not out of it.
         return max(0, self.target - self.spent - self.held)
 
     def moved(self, movement: Movement) -> Account:

@@ -22,6 +22,7 @@ def set_budget(account: Account, budget: int) -> Account:
     if budget < account.spent:
         detail = f"{nanos_text(account.spent)} is spent already; the budget cannot be lower."
         raise Conflict("budget_below_spent", detail, {"spent": nanos_text(account.spent)})
+    # Open bids cannot be called back, so their holds are the least that the bound may be.
     bound = max(budget, account.spent + account.held)
     # Late costs that found no money are the oldest debt, so new money goes to them first.
     funded = min(account.unfunded, max(0, budget - account.spent - account.held))

@@ -43,6 +43,7 @@ def judge(value: Value, slots: Slots, *, ceiling: int, arrival: str) -> ValueVer
     if value.amount > CEILINGS_MAX * ceiling:
         return ValueVerdict("refused", code="value_out_of_range")
     result = slots.get("result")
+    # Feeds overtake one another; a bill proves the win as well as its notice does.
     if result is None and "billed" not in slots:
         return _park(value, slots, arrival)
     if result is not None and result[0] != "won":
@@ -61,6 +62,7 @@ def unparked(slots: Slots, bid: bytes) -> list[Entry]:
 
 
 def _park(value: Value, slots: Slots, arrival: str) -> ValueVerdict:
+    # What it corrects would have to wait too, and in what order they would be taught is unclear.
     if value.corrects is not None:
         return ValueVerdict("refused", code="no_such_event")
     slot = f"parked:{value.event_id}"
@@ -81,6 +83,7 @@ def _teach(value: Value, slots: Slots, ceiling: int, arrival: str) -> ValueVerdi
     if value.corrects is not None:
         if value.corrects not in events:
             return ValueVerdict("refused", code="no_such_event")
+        # Two corrections of one event contradict each other: the first stands, as in every slot.
         if value.corrects in corrected:
             return _beside(value, slots)
         was = int(events[value.corrects]["amount"])

@@ -20,6 +20,7 @@ def announce(connection: Writing, kind: str, line_items: list[str]) -> int:
         text("UPDATE change_counter SET number = number + :n WHERE id = 1 RETURNING number"),
         {"n": len(line_items)},
     ).scalar_one()
+    # One row for each, so that a reader who was away can renew only what it knows.
     rows = [
         {"number": last - len(line_items) + 1 + place, "kind": kind, "line_item": line_item}
         for place, line_item in enumerate(line_items)

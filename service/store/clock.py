@@ -31,6 +31,7 @@ def advance(connection: Writing, wall_ms: int, step_ms_max: int = STEP_MS_MAX) -
 
 def wall_clock(connection: Writing, database: Database) -> int:
     """The one wall clock all workers of a database share: the database's own."""
+    # Workers' own clocks may differ by minutes; the slowest would hold all the others' grace.
     if database.is_sqlite:
         return database.wall_ms()
     now = text("SELECT CAST(extract(epoch FROM clock_timestamp()) * 1000 AS BIGINT)")

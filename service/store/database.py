@@ -62,6 +62,7 @@ class Database:
         else:
             options = f"-c statement_timeout={statement_timeout_ms} -c lock_timeout=2000"
             options += " -c idle_in_transaction_session_timeout=10000 -c synchronous_commit=on"
+            # Without limits one forgotten session could hold the lock of a line item for ever.
             arguments = {"options": options, "connect_timeout": 3}
             # A queue of waiters on one hot row gets slower the longer it is: no overflow.
             self.engine = create_engine(
@@ -82,6 +83,7 @@ class Database:
             # Half a transaction is never repeated: locks and reads of the failed try are void.
             except (DBAPIError, PoolTimeout) as error:
                 _raise_unless_retried(error, attempt)
+            # By chance, or the two that met would meet again.
             time.sleep((2 + secrets.randbelow(20)) * (attempt + 1) / 1000)
         raise StoreAway("the database kept refusing")
 
@@ -95,6 +97,7 @@ class Database:
         try:
             with self.engine.connect() as connection:
                 connection = connection.execution_options(reading=True)
+                # Two statements of one answer must not see two states of the money.
                 if not self.is_sqlite:
                     connection = connection.execution_options(isolation_level="REPEATABLE READ")
                 with connection.begin():
@@ -177,6 +180,7 @@ def _raise_unless_retried(error: Exception, attempt: int) -> None:
         return
     if isinstance(error, OperationalError | PoolTimeout) or state in RETRY_STATES:
         raise StoreAway("the database did not answer") from error
+    # Broken during COMMIT nobody knows whether it happened; the caller's repeat will tell.
     if isinstance(error, DBAPIError) and error.connection_invalidated:
         raise StoreAway("the connection broke") from error
     raise BrokenPromise("the database refused a row") from error

@@ -37,6 +37,7 @@ def add(database: Database, name: str, scopes: list[str]) -> tuple[Key, str]:
     """
     if not scopes or not set(scopes) <= set(SCOPES):
         raise Malformed("bad_scope", f"Scopes are {', '.join(SCOPES)}.")
+    # Random keys of 256 bits need no slow hash: there is nothing to guess them from.
     key, bearer = Key(secrets.token_hex(6), name, frozenset(scopes)), secrets.token_urlsafe(32)
 
     def work(connection: Writing) -> None:

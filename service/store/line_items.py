@@ -46,6 +46,7 @@ def create(connection: Writing, config: Mapping[str, Any], wall_ms: int) -> None
         ),
         row,
     )
+    # Insert first and look at the count: looking first would let two callers both find nothing.
     if done.rowcount == 0:
         raise Conflict("line_item_exists", "There is a line item with this id already.")
     connection.execute(
@@ -85,9 +86,11 @@ def change(connection: Writing, config: Mapping[str, Any], version: int, wall_ms
             "version": version,
         },
     )
+    # The version is part of the WHERE, so that of two editors exactly one gets through.
     if done.rowcount == 0:
         raise Stale("stale_version", "This line item has changed since that version.")
     books.replace_account(set_budget(books.accounts[name], config["budget"]))
+    # Other days keep the limit they were opened with; their money is spent or comes back.
     today = (name, local_day(wall_ms, config["flight"]["time_zone"]))
     books.load_days([today])
     if today in books.days:

@@ -35,6 +35,7 @@ def upgrade(connection: Connection) -> None:
     config = _config()
     config.attributes["connection"] = connection
     command.upgrade(config, "head")
+    # Both are made once and stay: a new one would turn every open ticket into a stranger's.
     for name, value in (
         ("incarnation", secrets.token_hex(8)),
         ("ticket_key", secrets.token_hex(32)),
@@ -55,6 +56,7 @@ def require_current(database: Database) -> None:
     with database.engine.connect() as connection:
         found = MigrationContext.configure(connection).get_current_revision()
     head = ScriptDirectory.from_config(_config()).get_current_head()
+    # Newer is refused as well: old code would misread what new code has written.
     if found != head:
         raise Unsafe(
             f"The database is at schema {found}, this code at {head}: run bidkeel migrate."
@@ -68,6 +70,7 @@ def is_empty(database: Database) -> bool:
 
 
 def _config() -> Config:
+    # Beside the package in a checkout, inside it once it is installed from a wheel.
     package = Path(service.__file__).parent
     places = [package / "migrations", package.parent / "migrations"]
     config = Config()
