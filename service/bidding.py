@@ -158,6 +158,7 @@ class Bidder:
             day,
             self._incarnation,
             opportunity.test,
+            opportunity.floor,
         )
         return Answer(
             opportunity.request_id,

@@ -11,7 +11,7 @@ from service.decision.price import Ready, ready
 from service.decision.terms import Terms
 from service.errors import no_such_line_item
 from service.guard.gate import Limits
-from service.learner.tally import Tally, UnreadableTally
+from service.learner.memory import Memory, UnreadableMemory
 from service.store import changes, keys, learners, line_items
 from service.store.database import Database, Reading
 from service.threads import Threads
@@ -107,10 +107,14 @@ class Catalog:
         """Load these line items again, all of them in one read."""
         if not names:
             return []
-        rows, states = await self._threads.run(self._database.read, lambda c: _load(c, names))
-        for name, row in rows.items():
-            self._items[name] = _item(row, states.get(name), self._items.get(name))
-        return [self._items[name] for name in rows]
+        before = {name: self._items.get(name) for name in names}
+        # Made ready in the thread too: where values are late that takes milliseconds.
+        renewed = await self._threads.run(
+            self._database.read,
+            lambda connection: [_item(*found) for found in _load(connection, before)],
+        )
+        self._items.update({item.id: item for item in renewed})
+        return renewed
 
     def _missed(self, what: str) -> bool:
         return time.monotonic() - self._misses.get(what, -MISS_S) < MISS_S
@@ -122,9 +126,12 @@ class Catalog:
 
 
 def _load(
-    connection: Reading, names: list[str]
-) -> tuple[dict[str, line_items.Row], dict[str, learners.Snapshot]]:
-    return line_items.load(connection, names), learners.snapshots(connection, names)
+    connection: Reading, before: dict[str, Item | None]
+) -> list[tuple[line_items.Row, learners.Snapshot | None, Item | None]]:
+    names = list(before)
+    states = learners.snapshots(connection, names)
+    rows = line_items.load(connection, names)
+    return [(row, states.get(name), before[name]) for name, row in rows.items()]
 
 
 def _item(row: line_items.Row, snapshot: learners.Snapshot | None, before: Item | None) -> Item:
@@ -141,8 +148,8 @@ def _ready(snapshot: learners.Snapshot | None, terms: Terms) -> tuple[int, Ready
         logger.error("the snapshot of a line item does not match its digest")
         return 0, None
     try:
-        return snapshot.seq, ready(Tally.from_bytes(snapshot.state), terms)
-    except UnreadableTally:
+        return snapshot.seq, ready(Memory.from_bytes(snapshot.state), terms)
+    except UnreadableMemory:
         logger.exception("the snapshot of a line item cannot be read by this release")
         return 0, None
 

@@ -19,7 +19,8 @@ from service.ledger.values import Value
 from service.store import outcomes
 from service.store.database import Database
 from service.store.decisions import quarantine
-from service.store.outcomes import Booked, Booking
+from service.store.outcomes import NO_SNAPSHOT, Booked, Booking
+from service.teaching import weigh
 from service.threads import Threads
 
 logger = logging.getLogger(__name__)
@@ -106,7 +107,7 @@ class Feedback:
     async def _settle(self, group: list[_Waiting]) -> None:
         try:
             rows = [row for waiting in group for row in waiting.rows]
-            booked = await self._threads.run(outcomes.book, self._database, rows)
+            booked = await self._threads.run(outcomes.book, self._database, rows, weigh)
         except StoreAway as error:
             for waiting in group:
                 _fail(waiting, error)
@@ -132,7 +133,7 @@ class Feedback:
 
     async def _alone(self, row: Booking) -> Booked:
         try:
-            return (await self._threads.run(outcomes.book, self._database, [row]))[0]
+            return (await self._threads.run(outcomes.book, self._database, [row], weigh))[0]
         except POISON as error:
             await self._threads.run(self._set_aside, row, error)
             return Booked("refused", "quarantined")
@@ -183,7 +184,10 @@ class Feedback:
         # A slice of a database before its restore may be gone or be another's: the late way.
         here = ticket.incarnation == self._incarnation
         day = date.fromordinal(ticket.day).isoformat()
-        return Booking(ticket.line_item, outcome, ticket.slice if here else None, day)
+        slice_id = ticket.slice if here else None
+        # And the same snapshot may have had another law there.
+        snapshot = ticket.snapshot if here else NO_SNAPSHOT
+        return Booking(ticket.line_item, outcome, slice_id, day, snapshot, ticket.floor)
 
     async def _find_refs(
         self, reports: list[Report], read: list[Booking | Receipt]

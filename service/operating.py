@@ -13,23 +13,31 @@ from dataclasses import asdict, dataclass
 from typing import Any
 
 from service.catalog import Catalog
-from service.decision.learnability import defaults, learnability, objection
-from service.errors import Malformed, NeedsConfirmation, NotOffered, StoreAway
-from service.learner.tally import Tally
+from service.configuring import (
+    drawn_otherwise,
+    filled,
+    guessed_otherwise,
+    merged,
+    object_to,
+    pooled,
+    taught_otherwise,
+)
+from service.decision.learnability import defaults, learnability
+from service.errors import Malformed, StoreAway
 from service.ledger.entries import Entry
 from service.showing import show
-from service.store import changes, freezes, learners, line_items, reading, workers
+from service.store import changes, epochs, freezes, learners, line_items, reading, workers
 from service.store.books import Books
 from service.store.database import Database, Writing
 from service.store.journal import note
 from service.store.keys import Key
 from service.store.line_items import Row
 from service.store.repeats import Repeat, once
+from service.teaching import FRESH, lawful
 from service.threads import Threads
 
 __all__ = ["Key", "Operator", "View"]
 
-CEILING_CAPS = 20  # An unnamed ceiling is the largest for which a published bound still says much.
 IN_FORCE_S = 1.0
 LOOK_S = 0.02
 
@@ -76,16 +84,19 @@ class Operator:
             NeedsConfirmation: Allowed only with the word named in the refusal.
             Conflict: The id is taken, or the key was used for another call.
         """
-        filled, taken = _filled(config)
-        _object(filled, confirm)
+        full, taken = filled(config)
+        object_to(full, confirm)
 
         def order(connection: Writing) -> dict[str, Any]:
             now = self._database.wall_ms()
-            line_items.create(connection, filled, now)
-            learners.begin(connection, filled["id"], Tally.fresh().to_bytes(), now)
-            self._note(connection, actor, "create", filled["id"], "", {"after": filled})
-            changes.announce(connection, "line_item", [filled["id"]])
-            return asdict(_view(line_items.one(connection, filled["id"]), taken))
+            line_items.create(connection, full, now)
+            learners.begin(connection, full["id"], FRESH, now)
+            if (law := lawful(FRESH, full)) is not None:
+                epochs.keep(connection, full["id"], 0, law)
+            self._note(connection, actor, "create", full["id"], "", {"after": full})
+            self._take_prior(connection, full, actor)
+            changes.announce(connection, "line_item", [full["id"]])
+            return asdict(_view(line_items.one(connection, full["id"]), taken))
 
         wish = {"call": "create", "config": dict(config), "confirm": confirm}
         return View(**await self._order(order, _repeat(actor, idempotency, wish)))
@@ -124,13 +135,19 @@ class Operator:
 
         def order(connection: Writing) -> dict[str, Any]:
             before = line_items.one(connection, line_item)
-            after, _ = defaults(_merged(before.config, changed))
-            _object(after, confirm)
+            after, _ = defaults(merged(before.config, changed))
+            object_to(after, confirm)
             line_items.change(connection, after, version, self._database.wall_ms())
-            if _taught_otherwise(before.config, after):
-                learners.refold(connection, line_item, Tally.fresh().to_bytes())
+            if taught_otherwise(before.config, after):
+                learners.refold(connection, line_item, FRESH)
+            if drawn_otherwise(before.config, after):
+                epochs.end(connection, line_item)
             detail = {"before": before.config, "after": after}
             self._note(connection, actor, "patch", line_item, reason or "", detail)
+            if guessed_otherwise(before.config, after):
+                self._post(connection, line_item, Entry("prior", {}))
+            if after.get("kin") != before.config.get("kin"):
+                self._take_prior(connection, after, actor)
             changes.announce(connection, "line_item", [line_item])
             return asdict(_view(line_items.one(connection, line_item), []))
 
@@ -181,10 +198,8 @@ class Operator:
 
         def order(connection: Writing) -> dict[str, Any]:
             line_items.one(connection, line_item)
-            books = Books(connection, [line_item], self._database.wall_ms())
-            books.post(line_item, Entry("reset", {"actor": actor, "reason": reason}))
-            books.save()
-            seq = books.accounts[line_item].seq
+            said = {"actor": actor, "reason": reason}
+            seq = self._post(connection, line_item, Entry("reset", said))
             learners.begin_afresh(connection, line_item, seq)
             detail = {"before": {"seq": seq - 1}, "after": {"seq": seq}}
             self._note(connection, actor, "reset", line_item, reason, detail)
@@ -200,6 +215,31 @@ class Operator:
         except StoreAway:
             return {"status": "degraded", "database": "away"}
         return {"status": "ok", "database": "here"}
+
+    def _take_prior(self, connection: Writing, config: Mapping[str, Any], actor: str) -> None:
+        """Let what sibling line items have learnt enter the stream as one lesson."""
+        kin = sorted(set(config.get("kin") or []))
+        if not kin:
+            return
+        rows, states = line_items.load(connection, kin), learners.snapshots(connection, kin)
+        if set(rows) != set(kin):
+            raise Malformed("no_such_kin", "A line item named as kin does not exist.")
+        if any(row.config["currency"] != config["currency"] for row in rows.values()):
+            raise Malformed("other_currency", "Kin must share the currency of the line item.")
+        states_of = [(rows[name].config, states[name].state) for name in kin]
+        entry = pooled(states_of, config["value"]["ceiling"])
+        if entry is None:
+            return
+        self._post(connection, config["id"], entry)
+        detail = {"kin": kin, "after": dict(entry.body)}
+        self._note(connection, actor, "prior", config["id"], "what kin have learnt", detail)
+
+    def _post(self, connection: Writing, line_item: str, entry: Entry) -> int:
+        """Append one entry to a stream under its lock; returns its seq."""
+        books = Books(connection, [line_item], self._database.wall_ms())
+        books.post(line_item, entry)
+        books.save()
+        return books.accounts[line_item].seq
 
     async def _read(self, work: Callable[[Any], Any]) -> Any:
         return await self._threads.run(self._database.read, work)
@@ -276,25 +316,6 @@ class Operator:
         )
 
 
-def _object(config: Mapping[str, Any], confirm: str | None) -> None:
-    found = objection(config, confirm)
-    if found is None:
-        return
-    if found.code == "learning_cost":
-        raise NeedsConfirmation(found.code, found.detail, {"confirm": found.code})
-    kind = NotOffered if found.code == "not_offered" else Malformed
-    raise kind(found.code, found.detail)
-
-
-def _filled(config: Mapping[str, Any]) -> tuple[dict[str, Any], list[str]]:
-    """Defaults for what nobody gave; the answer names them."""
-    value = dict(config.get("value") or {})
-    taken = [] if value.get("ceiling") else ["value.ceiling"]
-    value["ceiling"] = value.get("ceiling") or CEILING_CAPS * config["bid_cap"]
-    filled, more = defaults({**config, "value": value})
-    return filled, taken + more
-
-
 def _view(row: Row, taken: list[str]) -> View:
     return View(
         row.id,
@@ -310,19 +331,3 @@ def _view(row: Row, taken: list[str]) -> View:
 
 def _repeat(actor: str, key: str | None, wish: Mapping[str, Any]) -> Repeat | None:
     return None if key is None else Repeat(actor, key, wish)
-
-
-def _merged(config: Mapping[str, Any], changed: Mapping[str, Any]) -> dict[str, Any]:
-    """Objects are merged, all else is replaced; a new method begins with its own settings."""
-    merged = dict(config)
-    for name, value in changed.items():
-        old = merged.get(name)
-        if name != "policy" and isinstance(value, Mapping) and isinstance(old, Mapping):
-            value = _merged(old, value)
-        merged[name] = value
-    return merged
-
-
-def _taught_otherwise(before: Mapping[str, Any], after: Mapping[str, Any]) -> bool:
-    """Whether the lessons must be read again, since they are cut at the ceiling."""
-    return bool(before["value"]["ceiling"] != after["value"]["ceiling"])

@@ -5,25 +5,27 @@ from __future__ import annotations
 from typing import Any
 
 from service.catalog import limits_of
+from service.decision.describing import describe
 from service.decision.learnability import learnability
 from service.decision.price import ready
 from service.decision.terms import Terms
 from service.guard.gate import clear
+from service.learner.memory import Memory
 from service.learner.tally import Tally
 from service.store.reading import Facts
 
 
 def show(facts: Facts) -> dict[str, Any]:
     """The state of a line item; money in nanos under names that end in `_nanos`."""
-    tally = Tally.from_bytes(facts.snapshot.state)
-    learnt = ready(tally, Terms.from_config(facts.row.config)).describe()
+    memory = Memory.from_bytes(facts.snapshot.state)
+    learnt = describe(ready(memory, Terms.from_config(facts.row.config)))
     return {
         "line_item": facts.row.id,
         "version": facts.row.version,
         "currency": facts.row.config["currency"],
         "bid": _bid(facts, learnt),
         "certainty": learnt,
-        "learner": _learner(facts, tally),
+        "learner": _learner(facts, memory.total),
         "money": _money(facts),
         "day": _day(facts),
         "pacing": {"method": "none"},

@@ -9,18 +9,20 @@ from __future__ import annotations
 
 import asyncio
 import logging
-from collections.abc import Awaitable, Callable, Coroutine, Mapping
+from collections.abc import Awaitable, Callable, Coroutine
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 from service.backlog import Backlog
 from service.catalog import Catalog, Item
 from service.errors import BrokenPromise, StoreAway
-from service.learner.fold import fold
-from service.learner.tally import Tally
+from service.learner.exptree_state import UnreadableTree
+from service.learner.memory import UnreadableMemory
 from service.leasing import Leasing
-from service.store import audit, clock, decisions, learners, leases, workers
+from service.store import audit, clock, decisions, epochs, learners, leases, workers
 from service.store.database import Database, Writing
+from service.teaching import FRESH, lawful, lesson, readable
 from service.threads import Threads
 
 logger = logging.getLogger(__name__)
@@ -74,16 +76,16 @@ class Upkeep:
             self._every(GIVE_BACK_S, self.give_back),
             self._every(rhythm.tick_s, self._leasing.tick),
             self._every(rhythm.teach_ms / 1000, self.teach),
-            self._every(CLOCK_S, self.mature),
             self._every(LOG_S, self.log),
             self._every(AUDIT_S, self.audit),
             self._every(PRUNE_S, self.prune),
         ]
 
     async def start(self) -> None:
-        """Begin reading changes, move time on once and say that this worker lives."""
+        """Begin reading changes, move time on once, say that this worker lives, mend states."""
         await self._catalog.start()
         await self._sparing(self.keep_time)
+        await self._read_again()
 
     async def stop(self) -> None:
         """Give every slice back, write what is left of the log, and leave."""
@@ -128,11 +130,6 @@ class Upkeep:
             while await self._teach(name) == learners.ENTRIES_MAX:
                 pass
 
-    async def mature(self) -> None:
-        """Close value windows that service time has passed."""
-        for name in await self._threads.run(self._database.read, learners.ripening):
-            await self._threads.run(learners.mature, self._database, name)
-
     async def log(self) -> None:
         """Write queued decisions."""
         while rows := self._backlog.drain(DECISIONS_MAX):
@@ -152,11 +149,33 @@ class Upkeep:
         await self._threads.run(
             self._database.write, lambda connection: decisions.prune(connection, before_ms)
         )
+        await self._threads.run(self._database.write, epochs.prune)
 
     async def _teach(self, line_item: str) -> int:
-        return await self._threads.run(
-            learners.teach, self._database, line_item, lesson, self._rhythm.checkpoint_entries
-        )
+        every = self._rhythm.checkpoint_entries
+        try:
+            return await self._threads.run(
+                learners.teach, self._database, line_item, lesson, every, lawful
+            )
+        except (UnreadableMemory, UnreadableTree):
+            # Of another release, or damaged; the stream has all that it was made from.
+            logger.exception("a learner's state cannot be read; its stream is read again")
+            await self._refold(line_item)
+            return learners.ENTRIES_MAX
+
+    async def _refold(self, line_item: str) -> None:
+        work = self._database.write
+        await self._threads.run(work, lambda c: learners.refold(c, line_item, FRESH))
+
+    async def _read_again(self) -> None:
+        """Refold what another release has written; where nobody can bid, no new entry would."""
+        after: str | None = ""
+        while after is not None:
+            look = partial(learners.unreadable, after=after, readable=readable)
+            bad, after = await self._threads.run(self._database.read, look)
+            for line_item in bad:
+                logger.warning("the state of %s is of another release; it is made anew", line_item)
+                await self._refold(line_item)
 
     def _apply(self, item: Item) -> None:
         """An edit or a freeze takes effect here: the slice leaves the hand at once."""
@@ -203,9 +222,3 @@ class Upkeep:
         except StoreAway:
             logger.warning("the database is away; trying again")
             await asyncio.sleep(AWAY_S)
-
-
-def lesson(state: bytes, entries: list[learners.Lesson], config: Mapping[str, Any]) -> bytes:
-    """Fold entries into a state under the line item's terms; bytes in, bytes out."""
-    value = config["value"]
-    return fold(Tally.from_bytes(state), entries, value["ceiling"], value["arrival"]).to_bytes()

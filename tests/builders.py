@@ -23,7 +23,6 @@ from service.catalog import Catalog
 from service.decision.opportunity import Opportunity
 from service.feedback import Feedback, Receipt, Report
 from service.guard.ticket import TicketKeys
-from service.learner.tally import Tally
 from service.leasing import Leasing
 from service.ledger.entries import Entry
 from service.operating import Operator
@@ -33,6 +32,7 @@ from service.store.audit import Finding, audit
 from service.store.books import Books
 from service.store.database import Database, Writing
 from service.store.facts import fact
+from service.teaching import FRESH
 from service.threads import Threads
 from service.upkeep import Rhythm, Upkeep
 
@@ -251,7 +251,7 @@ def begin(database: Database, **changes: Any) -> str:
 
     def work(connection: Writing) -> None:
         line_items.create(connection, built, 1)
-        learners.begin(connection, built["id"], Tally.fresh().to_bytes(), 1)
+        learners.begin(connection, built["id"], FRESH, 1)
 
     database.write(work)
     return str(built["id"])

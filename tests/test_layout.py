@@ -13,7 +13,10 @@ from tests.house import ROOT, Source, imports, read, tracked
 
 STORIES = {"bidding", "feedback", "upkeep", "operating"}
 # What several stories need and none of them owns.
-SHARED = {"backlog", "catalog", "connecting", "leasing", "showing", "threads"}
+SHARED = {
+    *("backlog", "catalog", "configuring", "connecting", "leasing", "showing"),
+    *("teaching", "threads"),
+}
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "rehearsal"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}
 
@@ -30,7 +33,7 @@ OWN: dict[str, set[str]] = {
     "rehearsal": {"decision", "learner", "guard", "ledger", "money", "errors"},
     **dict.fromkeys(STORIES | SHARED, PURE | SHARED | {"store", "settings"}),
     # Of the store only its named reads, of the decision only the form a bid takes.
-    "api": STORIES | {"errors", "money", "store.reading", "decision.opportunity"},
+    "api": STORIES | {"errors", "money", "store.reading", "decision.opportunity", "configuring"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 

@@ -54,7 +54,7 @@ async def test_a_new_line_item_may_bid_at_once(migrated_url: str) -> None:
         assert (view.id, view.version, view.freezes) == (NAME, 1, [])
         assert view.defaults == [
             *("value.ceiling", "policy.method", "policy.gamma", "value.typical"),
-            *("value.expected.per_impression", "value.expected.conversions"),
+            *("value.expected.per_impression", "value.expected.conversions", "allowance"),
         ]
         assert view.config["value"]["ceiling"] == 20 * CAP
         assert view.config["policy"]["method"] == "kl-ucbid"
@@ -67,7 +67,7 @@ async def test_a_new_line_item_may_bid_at_once(migrated_url: str) -> None:
 @pytest.mark.parametrize(
     ("changes", "error", "code"),
     [
-        ({"policy": {"method": "thompson"}}, NotOffered, "not_offered"),
+        ({"policy": {"method": "linear"}}, NotOffered, "not_offered"),
         ({"policy": {"method": "guess"}}, Malformed, "bad_setting"),
         ({"policy": {"method": "flat", "price": CAP + 1}}, Malformed, "bad_setting"),
         ({"policy": {"method": "kl-ucbid"}, "value": RARE}, NeedsConfirmation, "learning_cost"),

@@ -101,7 +101,6 @@ CREATE TABLE learner (
     line_item TEXT PRIMARY KEY REFERENCES line_item (id),
     seq BIG NOT NULL CHECK (seq >= 0),
     working BYTES NOT NULL,
-    matured_seq BIG NOT NULL CHECK (matured_seq >= 0),
     reset_seq BIG NOT NULL CHECK (reset_seq >= 0),
     snapshot BIG NOT NULL CHECK (snapshot >= 0),
     state BYTES NOT NULL,
@@ -116,6 +115,14 @@ CREATE TABLE checkpoint (
     at_ms BIG NOT NULL,
     PRIMARY KEY (line_item, seq)
 ) STRICTLY;
+CREATE TABLE epoch (
+    line_item TEXT NOT NULL REFERENCES line_item (id),
+    snapshot BIG NOT NULL CHECK (snapshot >= 0),
+    law BYTES NOT NULL,
+    service_ms BIG NOT NULL,
+    PRIMARY KEY (line_item, snapshot)
+) STRICTLY;
+CREATE INDEX epoch_by_age ON epoch (service_ms);
 CREATE TABLE worker (
     id TEXT PRIMARY KEY,
     started_ms BIG NOT NULL,

@@ -127,6 +127,9 @@ _CONFIG: dict[str, tuple[str, Callable[[int], object]]] = {
     "billing_grace_ms": ("billing_grace_s", _seconds),
     "window_ms": ("window_s", _seconds),
     "delay_mean_ms": ("delay_mean_s", _seconds),
+    "memory_ms": ("memory_s", _seconds),
+    "value_silence_ms": ("value_silence_s", _seconds),
+    "allowance": ("allowance", money.nanos_text),
 }
 
 

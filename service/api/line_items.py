@@ -15,7 +15,6 @@ from service.api.forms.changes import ChangeForm
 from service.api.forms.configs import (
     check_consistent,
     defaults_taken,
-    merged,
     read_changes,
     read_new,
 )
@@ -23,6 +22,7 @@ from service.api.forms.line_items import CreateForm
 from service.api.headers import etag, idempotency, if_match, line_item_id, page
 from service.api.stories import stories
 from service.api.times import start_of_today_ms
+from service.configuring import merged
 from service.operating import View
 
 router = APIRouter()

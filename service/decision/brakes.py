@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from service.decision import posterior
+from service.decision.counts import Counts
 from service.decision.terms import Terms
-from service.learner.fold import ONCE
+from service.learner.rules import ONCE
 from service.learner.tally import Tally
 
 WAITING_MIN = 50
@@ -19,5 +21,28 @@ def no_value(tally: Tally, terms: Terms) -> bool:
     """
     if terms.arrival != ONCE:
         return False
-    waiting = tally.wins - tally.known
-    return waiting > max(WAITING_MIN, WAITING_PER_KNOWN * tally.known)
+    # A restart forgets values, which says nothing of the feed; the reports it had still count.
+    told = max(tally.known, tally.values_seen)
+    return tally.wins - told > max(WAITING_MIN, WAITING_PER_KNOWN * told)
+
+
+def learning_cost(tally: Tally, counts: Counts, terms: Terms) -> float:
+    """
+    What was paid less what it is worth at the posterior mean, in nanos; below 0 is a gain.
+
+    An estimate: the impressions bought are all valued at what is believed of one now.
+    """
+    return tally.paid - tally.wins * float(posterior.mean(counts, terms))
+
+
+def allowance_bid(tally: Tally, counts: Counts, terms: Terms) -> float | None:
+    """
+    The most that may be bid once learning has cost more than its allowance, else None.
+
+    That is the posterior mean: nothing is then paid for the sake of knowing more. A brake
+    without a theorem; while it holds, no published guarantee of the method does. It lets go
+    by itself when the bids at the mean have earned the loss back.
+    """
+    if terms.allowance is None or learning_cost(tally, counts, terms) <= terms.allowance:
+        return None
+    return float(posterior.mean(counts, terms))

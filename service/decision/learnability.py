@@ -8,20 +8,23 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from service import money
-from service.decision.method import Counts, Method
+from service.decision.counts import nothing
+from service.decision.method import Method
 from service.decision.methods import METHODS, settings_of
 from service.decision.setting_faults import Objection as Objection
 from service.decision.setting_faults import setting_fault
 from service.decision.terms import Terms
+from service.learner.rules import RARE_FROM
 
 LEARNING_COST = "learning_cost"
 
-RARE_FROM = 20  # Ceilings of more than so many caps are for values that come rarely.
+ALLOWANCE_SHARE = 10  # Learning may cost one typical value, and at most this part of a budget.
 GUESS_SHARE_MIN = 4  # A guess below this part of the cap seldom wins, so it seldom learns.
 NORMAL_QUANTILE = 1.959963984540054  # Of order 0.975.
 WINS_MAX = 10**18
@@ -51,7 +54,11 @@ def defaults(partial: Mapping[str, Any]) -> tuple[dict[str, Any], list[str]]:
     _fill(expected, "per_impression", guess, "value.expected.per_impression", taken)
     _fill(expected, "conversions", 1, "value.expected.conversions", taken)
     value["expected"] = expected
-    return {**partial, "value": value, "policy": policy}, taken
+    filled = {**partial, "value": value, "policy": policy}
+    if "budget" in partial:
+        allowance = max(1, min(value["typical"], partial["budget"] // ALLOWANCE_SHARE))
+        _fill(filled, "allowance", allowance, "allowance", taken)
+    return filled, taken
 
 
 def learnability(config: Mapping[str, Any]) -> str:
@@ -114,8 +121,8 @@ def wins_at_cap(terms: Terms) -> int:
 
 
 def _left_cap(method: Method, terms: Terms, wins: int) -> bool:
-    won, nothing = np.float64(wins), np.float64(0.0)
-    counts = Counts(*(np.asarray(one) for one in (won, won, nothing, nothing)))
+    won = np.asarray(float(wins))
+    counts = replace(nothing(), rounds=won, known=won)
     return float(method.index(counts, terms)) < terms.cap
 
 

@@ -6,55 +6,12 @@ import math
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 
-import numpy as np
+from numpy.random import Generator
 
+from service.decision.counts import Counts as Counts
 from service.decision.terms import Terms
 from service.learner.bounds import Numbers
 from service.learner.tally import Tally
-
-
-@dataclass(frozen=True, slots=True)
-class Counts:
-    """
-    The sums an index reads: one number each, or one array each over many runs.
-
-    Args:
-        rounds: Rounds played.
-        known: Wins whose value is known.
-        converted: Those worth more than nothing.
-        amount: Sum of known values, in nanos.
-    """
-
-    rounds: Numbers
-    known: Numbers
-    converted: Numbers
-    amount: Numbers
-
-    @staticmethod
-    def of(tally: Tally) -> Counts:
-        """
-        The counts of one tally.
-
-        A correction that comes after a reset for a value from before it leaves a sum below
-        zero; no index is defined there, so it counts as zero.
-        """
-        sums = (tally.rounds, tally.known, tally.converted, tally.amount)
-        return Counts(*(np.asarray(max(one, 0), dtype=np.float64) for one in sums))
-
-    @property
-    def round_next(self) -> Numbers:
-        """
-        The round to be bid in, from 1.
-
-        After a reset, values of earlier wins may come before any round; an index must not
-        take them for more than one round each can explain.
-        """
-        return np.asarray(np.maximum(self.rounds, self.known) + 1.0, dtype=np.float64)
-
-    def mean_share(self, terms: Terms) -> Numbers:
-        """Mean of the known values as a share of the scale; 0 while none is known."""
-        share = self.amount / (np.maximum(self.known, 1.0) * terms.scale)
-        return np.asarray(np.minimum(share, 1.0), dtype=np.float64)
 
 
 @dataclass(frozen=True, slots=True)
@@ -103,6 +60,10 @@ class Method:
         needs_prior: Whether it has no price without the weight of at least a part of a
             conversion.
         published_bound: Whether it is an upper confidence index kept as published.
+        needs_priced_losses: Whether it must be told the competing bid of every loss.
+        by_law: Whether it draws from a law that outcomes move, in place of a value.
+        draw: For a method that draws its value afresh for every bid; `index` is then the median.
+        quantile: The value below which a share of its draws lies, for methods that draw.
     """
 
     name: str
@@ -115,3 +76,7 @@ class Method:
     takes_prior: bool = False
     needs_prior: bool = False
     published_bound: bool = False
+    needs_priced_losses: bool = False
+    by_law: bool = False
+    draw: Callable[[Counts, Terms, Generator], Numbers] | None = None
+    quantile: Callable[[Counts, Terms, float], Numbers] | None = None

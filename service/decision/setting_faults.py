@@ -8,11 +8,13 @@ from typing import Any
 
 from service.decision.method import Method
 from service.decision.methods import METHODS, NOT_OFFERED, settings_of
+from service.learner.rules import RARE_FROM
 
 BAD_SETTING = "bad_setting"
 METHOD_NOT_OFFERED = "not_offered"
 
 PRIOR_CONVERSIONS_MAX = 10**6
+LAW_CAP_MIN = 2  # Nanos per impression; below it there is no price to draw.
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,8 +34,31 @@ def setting_fault(config: Mapping[str, Any]) -> Objection | None:
     if name not in METHODS:
         known = ", ".join(sorted(METHODS))
         return Objection(BAD_SETTING, f"policy.method must be one of: {known}.")
-    sentence = _policy_fault(policy, config["bid_cap"]) or _value_fault(value, METHODS[name])
+    sentence = (
+        _feedback_fault(config, METHODS[name])
+        or _policy_fault(policy, config["bid_cap"])
+        or _value_fault(value, METHODS[name])
+    )
     return Objection(BAD_SETTING, sentence) if sentence else None
+
+
+def _feedback_fault(config: Mapping[str, Any], method: Method) -> str | None:
+    """Why the line item's own outcomes cannot teach the method, if they cannot."""
+    if method.needs_priced_losses and config.get("losses", "bare") != "priced":
+        return (
+            f"{method.name} learns from the competing bid of every loss. Where the exchange "
+            'tells it as to_win_cpm, say losses: "priced"; else take exptree-win-only.'
+        )
+    if method.by_law and config["bid_cap"] < LAW_CAP_MIN:
+        return f"{method.name} needs a bid cap of at least 0.000002 CPM, or it has no choice."
+    if method.by_law and config["value"]["ceiling"] > RARE_FROM * config["bid_cap"]:
+        return (
+            f"With a ceiling of more than {RARE_FROM} bid caps, what {method.name} guarantees "
+            "is more than can be lost."
+        )
+    if method.by_law and (config["value"].get("drift") or config["value"].get("change")):
+        return f"{method.name} forgets nothing and restarts by itself; leave drift and change out."
+    return None
 
 
 def _policy_fault(policy: Mapping[str, Any], cap: int) -> str | None:

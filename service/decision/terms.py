@@ -3,8 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
+
+from service.learner import exptree_rules
+from service.learner.memory import Prior
+from service.learner.rules import Drift, drift_of, tree_rules
+
+WINDOW_MS = 604_800_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -23,6 +29,12 @@ class Terms:
         arrival: "once" or "accrues".
         method: Name of the method.
         settings: The method's own settings.
+        window_ms: How long values are waited for.
+        delay_mean_ms: Mean delay of values where it is known, else None.
+        drift: How the old is forgotten, if it is.
+        on_change: What a change detector does on an alarm; None where there is none.
+        allowance: How much may be lost to learning; None for no limit.
+        tree: The game of the tree of exponential weights, where the method grows one.
     """
 
     currency: str
@@ -35,6 +47,12 @@ class Terms:
     arrival: str
     method: str
     settings: Mapping[str, float]
+    window_ms: int = WINDOW_MS
+    delay_mean_ms: int | None = None
+    drift: Drift | None = None
+    on_change: str | None = None
+    allowance: int | None = None
+    tree: exptree_rules.Rules | None = None
 
     @property
     def scale(self) -> float:
@@ -45,6 +63,14 @@ class Terms:
     def prior_impressions(self) -> float:
         """How many impressions the guess weighs: its conversions at the guessed rate."""
         return self.prior_conversions * self.typical / self.expected
+
+    def guided(self, prior: Prior | None) -> Terms:
+        """The terms under a guess that a lesson brought; the same without one."""
+        if prior is None:
+            return self
+        # The ceiling may have been lowered since the lesson.
+        typical, expected = (min(n, self.ceiling) for n in (prior.typical, prior.per_impression))
+        return replace(self, typical=typical, expected=expected)
 
     @staticmethod
     def from_config(config: Mapping[str, Any]) -> Terms:
@@ -61,4 +87,10 @@ class Terms:
             arrival=value["arrival"],
             method=policy["method"],
             settings={name: policy[name] for name in policy if name != "method"},
+            window_ms=value.get("window_ms", WINDOW_MS),
+            delay_mean_ms=value.get("delay_mean_ms"),
+            drift=drift_of(value.get("drift")),
+            on_change=(value.get("change") or {}).get("action"),
+            allowance=config.get("allowance"),
+            tree=tree_rules(config),
         )

@@ -19,9 +19,9 @@ MAC_BYTES = 16
 KEY_ID_BYTES = 4
 TEST = 1
 
-# form, key id, incarnation, slice, counter, price, snapshot, day, flags
+# form, key id, incarnation, slice, counter, price, floor, snapshot, day, flags
 # Fixed widths and lengths before texts: a ticket is parsed without guessing, or not at all.
-_HEAD = struct.Struct(">B4s8s16sIqqIB")
+_HEAD = struct.Struct(">B4s8s16sIqqqIB")
 
 
 class BadTicket(ValueError):
@@ -37,6 +37,7 @@ class Ticket:
         slice: 16 random bytes of the slice the price was taken from.
         counter: The bid's place in its slice, from 0.
         price: The bid, and so its hold, in nanos per impression.
+        floor: Least price the seller took, in nanos per impression.
         snapshot: The learner's seq the price was made from (the epoch).
         day: Proleptic ordinal of the local day the slice belongs to.
     """
@@ -50,6 +51,7 @@ class Ticket:
     day: int
     incarnation: bytes
     test: bool = False
+    floor: int = 0
 
     @property
     def bid(self) -> bytes:
@@ -96,6 +98,7 @@ class TicketKeys:
             ticket.slice,
             ticket.counter,
             ticket.price,
+            ticket.floor,
             ticket.snapshot,
             ticket.day,
             TEST if ticket.test else 0,
@@ -122,11 +125,11 @@ class TicketKeys:
 
 
 def _unpacked(body: bytes) -> Ticket:
-    _, _, incarnation, slice_id, counter, price, snapshot, day, flags = _HEAD.unpack_from(body)
+    fields = _HEAD.unpack_from(body)
+    _, _, incarnation, slice_id, counter, price, floor, snapshot, day, flags = fields
     line_item, source = _texts(body[_HEAD.size :])
-    return Ticket(
-        line_item, source, slice_id, counter, price, snapshot, day, incarnation, bool(flags & TEST)
-    )
+    place = (line_item, source, slice_id, counter, price, snapshot, day, incarnation)
+    return Ticket(*place, test=bool(flags & TEST), floor=floor)
 
 
 def _texts(packed: bytes) -> tuple[str, str]:

@@ -100,7 +100,12 @@ def will_convert(age: ArrayLike, law: Law) -> Numbers:
     return double(special.expit(special.logit(law.share) - law.rate * double(age)))
 
 
-def fit(data: Seen, prior_weight: ArrayLike = 0.0, prior_mean_delay: ArrayLike = 0.0) -> Law:
+def fit(
+    data: Seen,
+    prior_weight: ArrayLike = 0.0,
+    prior_mean_delay: ArrayLike = 0.0,
+    halvings: int = HALVINGS,
+) -> Law:
     """
     The most likely law; with a prior weight the most likely after a Gamma prior of the rate.
 
@@ -111,11 +116,17 @@ def fit(data: Seen, prior_weight: ArrayLike = 0.0, prior_mean_delay: ArrayLike =
     Where nothing has converted the share is 0 and the rate that of the prior, or 0 (a mean
     delay without end) when there is none. Where `identified` says no, the result without
     prior says little.
+
+    Args:
+        data: What is known.
+        prior_weight: Conversions that the prior of the rate is worth; 0 for none.
+        prior_mean_delay: Mean delay of those.
+        halvings: How often the span of the grid is halved; a dozen are plenty for a bid.
     """
     weight, prior_mean = doubles(prior_weight, prior_mean_delay)
     some = data.converted > 0.0
     low, high = (np.log(x) for x in _cell_of_the_top(data, weight, prior_mean))
-    for _ in range(HALVINGS):
+    for _ in range(halvings):
         middle = 0.5 * (low + high)
         law = _best_for(data, np.exp(middle))
         rising = _rises(data, law, weight, prior_mean)

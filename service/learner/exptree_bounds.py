@@ -10,7 +10,9 @@ said of the win-only variant is our own derivation, not published.
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 
+Bound = Callable[[int, float], float]  # Rounds and width to what may be lost, in scales.
 UNITS = 2**40  # Log-weights and chances are kept in whole parts of it.
 
 

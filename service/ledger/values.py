@@ -55,10 +55,16 @@ def unparked(slots: Slots, bid: bytes) -> list[Entry]:
     """The lessons that waited for this bid's win or bill and are not taught yet."""
     parked = [body for kind, body in slots.values() if kind == "parked"]
     return [
-        Entry("value", {**body, "was": None}, bid, f"value:{body['event_id']}")
+        Entry("value", {**body, "was": None, "parked": True}, bid, f"value:{body['event_id']}")
         for body in parked
         if f"value:{body['event_id']}" not in slots
     ]
+
+
+def brought(slots: Slots) -> int:
+    """What this bid's impression has brought so far, corrections in place of what they correct."""
+    bodies = (body for kind, body in slots.values() if kind == "value")
+    return sum(int(body["amount"]) - int(body["was"] or 0) for body in bodies)
 
 
 def _park(value: Value, slots: Slots, arrival: str) -> ValueVerdict:

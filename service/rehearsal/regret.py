@@ -13,24 +13,28 @@ import numpy as np
 from numpy.random import Generator
 from numpy.typing import NDArray
 
+from service.decision.counts import Counts, nothing
 from service.decision.learnability import defaults
-from service.decision.method import Counts
 from service.decision.methods import METHODS
 from service.decision.terms import Terms
 
 SCALE = 10**9
 
 
-def uniform_terms(method: str, **settings: float) -> Terms:
-    """Terms whose cap, ceiling and scale are one, with no prior to lean on."""
+def uniform_terms(method: str, prior: float = 0.0, **settings: float) -> Terms:
+    """Terms whose cap, ceiling and scale are one, with no prior to lean on unless it is given."""
+    guess = SCALE // 2 if prior else SCALE
     config = {
         "currency": "EUR",
+        "spend_on": "won",
+        "losses": "priced",
         "bid_cap": SCALE,
         "auction": "second",
         "value": {
             "ceiling": SCALE,
             "arrival": "once",
-            "expected": {"per_impression": SCALE, "conversions": 0},
+            "typical": SCALE,
+            "expected": {"per_impression": guess, "conversions": prior},
         },
         "policy": {"method": method, **settings},
     }
@@ -50,11 +54,13 @@ def uniform_regret(
         runs: Independent runs.
         rng: The only source of chance.
     """
-    nothing = np.zeros(runs)
-    counts, regret = Counts(nothing, nothing, nothing, nothing), np.zeros(runs)
-    index = METHODS[terms.method].index
+    counts, regret = nothing(runs), np.zeros(runs)
+    method = METHODS[terms.method]
     for _ in range(rounds):
-        bid = np.minimum(index(counts, terms) / SCALE, 1.0)
+        value = method.index(counts, terms)
+        if method.draw is not None:
+            value = method.draw(counts, terms, rng)
+        bid = np.minimum(value / SCALE, 1.0)
         regret += (bid - chance) ** 2 / 2.0
         won = rng.random(runs) <= bid
         counts = _after(counts, won, won & (rng.random(runs) < chance))
@@ -67,4 +73,5 @@ def _after(counts: Counts, won: NDArray[np.bool_], converted: NDArray[np.bool_])
         counts.known + won,
         counts.converted + converted,
         counts.amount + SCALE * converted,
+        counts.amount_square + float(SCALE) * SCALE * converted,
     )

@@ -8,17 +8,19 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import LargeBinary, text
+from sqlalchemy import text
 
-from service.ledger.entries import Body, Entry
-from service.store.books import Books
+from service.ledger.entries import Body
+from service.store import epochs
 from service.store.changes import announce
 from service.store.database import Database, Reading, Writing, among, locking
 from service.store.leases import read_configs
 
-Lesson = tuple[str, Body]
+Lesson = tuple[str, Body, int]  # Kind, body and service time.
 Fold = Callable[[bytes, list[Lesson], dict[str, Any]], bytes]
+Lawful = Callable[[bytes, dict[str, Any]], bytes | None]
 ENTRIES_MAX = 2000
+STATES_MAX = 200  # Read at once; each may be 64 KiB.
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,17 +44,36 @@ def digest_of(state: bytes) -> str:
 
 
 def behind(connection: Reading) -> list[str]:
-    """Line items whose stream has entries that their learner has not read."""
+    """
+    Line items whose stream has entries that their learner has not read.
+
+    One that bids by a law waits until its epoch is over, so that a law serves many bids.
+    """
     rows = connection.execute(
         text(
             "SELECT b.line_item FROM balance b JOIN learner l ON l.line_item = b.line_item"
-            " WHERE b.seq > l.seq ORDER BY b.line_item"
-        )
+            " LEFT JOIN epoch e ON e.line_item = l.line_item AND e.snapshot = l.snapshot"
+            " WHERE b.seq > l.seq AND (e.snapshot IS NULL OR b.seq > l.seq + :bids"
+            " OR e.service_ms + :epoch <= (SELECT now_ms FROM service_clock))"
+            " ORDER BY b.line_item"
+        ),
+        {"bids": epochs.BIDS_MAX, "epoch": epochs.EPOCH_MS},
     )
     return [row.line_item for row in rows]
 
 
-def teach(database: Database, line_item: str, fold: Fold, checkpoint_entries: int) -> int:
+def lawless(state: bytes, config: dict[str, Any]) -> bytes | None:
+    """No law: what a method that draws nothing bids by."""
+    return None
+
+
+def teach(
+    database: Database,
+    line_item: str,
+    fold: Fold,
+    checkpoint_entries: int,
+    lawful: Lawful = lawless,
+) -> int:
     """
     Fold the next entries into the one state of a line item; returns how many were read.
 
@@ -61,6 +82,7 @@ def teach(database: Database, line_item: str, fold: Fold, checkpoint_entries: in
     Args:
         fold: Pure; state, lessons and the line item's configuration in, state out.
         checkpoint_entries: A checkpoint is kept whenever seq passes a multiple of it.
+        lawful: State and configuration in, the law that bids are drawn from out, if any.
     """
 
     def work(connection: Writing) -> int:
@@ -80,6 +102,8 @@ def teach(database: Database, line_item: str, fold: Fold, checkpoint_entries: in
         # A state that has not caught up is not published, or a refold would forget in public.
         if len(lessons) < ENTRIES_MAX and digest_of(state) != row.digest:
             _publish(connection, line_item, seq, state, now)
+            if (law := lawful(state, config)) is not None:
+                epochs.keep(connection, line_item, seq, law)
         return len(lessons)
 
     return database.write(work)
@@ -98,7 +122,7 @@ def fold_all(connection: Reading, line_item: str, start: bytes, fold: Fold) -> b
     return state
 
 
-def snapshots(connection: Reading, line_items: list[str]) -> dict[str, Snapshot]:
+def snapshots(connection: Reading | Writing, line_items: list[str]) -> dict[str, Snapshot]:
     """The current snapshot of each line item."""
     statement = among(
         "SELECT line_item, snapshot, state, digest, published_ms FROM learner"
@@ -110,13 +134,32 @@ def snapshots(connection: Reading, line_items: list[str]) -> dict[str, Snapshot]
     }
 
 
+def unreadable(
+    connection: Reading, after: str, readable: Callable[[bytes, dict[str, Any]], bool]
+) -> tuple[list[str], str | None]:
+    """
+    Of the next line items after an id: those whose state cannot be read, and the last id seen.
+
+    Args:
+        readable: Pure; whether this release can go on from a state under a configuration.
+    """
+    statement = text(
+        "SELECT line_item, state FROM learner WHERE line_item > :after"
+        " ORDER BY line_item LIMIT :limit"
+    )
+    rows = connection.execute(statement, {"after": after, "limit": STATES_MAX}).all()
+    configs = read_configs(connection, [row.line_item for row in rows])
+    bad = [r.line_item for r in rows if not readable(bytes(r.state), configs[r.line_item])]
+    return bad, rows[-1].line_item if rows else None
+
+
 def begin(connection: Writing, line_item: str, state: bytes, wall_ms: int) -> None:
     """Publish the first state of a new line item, so that it can bid at once."""
     connection.execute(
         text(
             "INSERT INTO learner"
-            " (line_item, seq, working, matured_seq, reset_seq, snapshot, state, digest,"
-            " published_ms) VALUES (:id, 0, :state, 0, 0, 0, :state, :digest, :now)"
+            " (line_item, seq, working, reset_seq, snapshot, state, digest, published_ms)"
+            " VALUES (:id, 0, :state, 0, 0, :state, :digest, :now)"
         ),
         {"id": line_item, "state": state, "digest": digest_of(state), "now": wall_ms},
     )
@@ -132,65 +175,20 @@ def refold(connection: Writing, line_item: str, state: bytes) -> None:
 def begin_afresh(connection: Writing, line_item: str, seq: int) -> None:
     """Note the seq of a reset: what was won before it teaches nothing more."""
     connection.execute(
-        text("UPDATE learner SET reset_seq = :seq, matured_seq = :seq WHERE line_item = :id"),
+        text("UPDATE learner SET reset_seq = :seq WHERE line_item = :id"),
         {"seq": seq, "id": line_item},
     )
-
-
-def mature(database: Database, line_item: str) -> int:
-    """
-    Close the value windows that service time has passed; returns how many wins matured.
-
-    The entry carries what each of these impressions brought, so the fold needs no clock.
-    """
-
-    def work(connection: Writing) -> int:
-        books = Books(connection, [line_item], database.wall_ms())
-        config = read_configs(connection, [line_item])[line_item]
-        wins = _ripe(connection, line_item, config, books.service_ms)
-        if not wins:
-            return 0
-        totals = _totals(connection, {bytes(w.bid): w for w in wins}, config["value"]["window_ms"])
-        body = {"wins": len(wins), "amounts": totals, "up_to": wins[-1].seq}
-        books.post(line_item, Entry("matured", body))
-        books.save()
-        connection.execute(
-            text("UPDATE learner SET matured_seq = :seq WHERE line_item = :id"),
-            {"seq": wins[-1].seq, "id": line_item},
-        )
-        return len(wins)
-
-    return database.write(work)
-
-
-def ripening(connection: Reading) -> list[str]:
-    """Line items with wins whose value window may still have to close."""
-    rows = connection.execute(
-        text(
-            "SELECT b.line_item, i.config FROM balance b"
-            " JOIN learner l ON l.line_item = b.line_item JOIN line_item i ON i.id = b.line_item"
-            " WHERE b.seq > l.matured_seq"
-        )
-    ).all()
-    accruing = [(r, json.loads(r.config)) for r in rows]
-    service_ms = connection.execute(text("SELECT now_ms FROM service_clock")).scalar_one()
-    return [
-        row.line_item
-        for row, config in accruing
-        if config["value"]["arrival"] == "accrues"
-        and _ripe(connection, row.line_item, config, service_ms, limit=1)
-    ]
 
 
 def _lessons(connection: Reading | Writing, line_item: str, seq: int, limit: int) -> list[Lesson]:
     rows = connection.execute(
         text(
-            "SELECT kind, body FROM stream WHERE line_item = :id AND seq > :seq"
+            "SELECT kind, body, service_ms FROM stream WHERE line_item = :id AND seq > :seq"
             " ORDER BY seq LIMIT :limit"
         ),
         {"id": line_item, "seq": seq, "limit": limit},
     )
-    return [(row.kind, json.loads(row.body)) for row in rows]
+    return [(row.kind, json.loads(row.body), row.service_ms) for row in rows]
 
 
 def _publish(connection: Writing, line_item: str, seq: int, state: bytes, now: int) -> None:
@@ -207,48 +205,6 @@ def _checkpoint(connection: Writing, line_item: str, seq: int, state: bytes, now
         ),
         {"id": line_item, "seq": seq, "state": state, "digest": digest_of(state), "now": now},
     )
-
-
-def _ripe(
-    connection: Reading | Writing,
-    line_item: str,
-    config: dict[str, Any],
-    service_ms: int,
-    limit: int = 1000,
-) -> list[Any]:
-    """Paid impressions after the last matured one whose window is over, oldest first."""
-    rows = connection.execute(
-        text(
-            "SELECT s.seq, s.bid, s.service_ms FROM stream s"
-            " WHERE s.line_item = :id AND s.kind = :kind AND s.service_ms <= :until"
-            " AND s.seq > (SELECT matured_seq FROM learner WHERE line_item = :id)"
-            " ORDER BY s.seq LIMIT :limit"
-        ),
-        {
-            "id": line_item,
-            "kind": config["spend_on"],
-            "until": service_ms - config["value"]["window_ms"],
-            "limit": limit,
-        },
-    )
-    return list(rows)
-
-
-def _totals(connection: Writing, wins: dict[bytes, Any], window_ms: int) -> list[int]:
-    """What each impression brought inside its window, in nanos; zeros are left out."""
-    statement = among(
-        "SELECT bid, body, service_ms FROM stream WHERE kind = 'value' AND bid IN :bids"
-        " ORDER BY seq",
-        "bids",
-        LargeBinary,
-    )
-    totals: dict[bytes, int] = {}
-    for row in connection.execute(statement, {"bids": sorted(wins)}):
-        bid, body = bytes(row.bid), json.loads(row.body)
-        # What comes after the window is kept in the stream, but the window was the question.
-        if row.service_ms <= wins[bid].service_ms + window_ms:
-            totals[bid] = totals.get(bid, 0) + body["amount"] - (body["was"] or 0)
-    return sorted(total for total in totals.values() if total > 0)
 
 
 _LEARN = text("UPDATE learner SET seq = :seq, working = :state WHERE line_item = :id")

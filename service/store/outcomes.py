@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -11,14 +11,18 @@ from sqlalchemy import LargeBinary, text
 
 from service.ledger.entries import Entry
 from service.ledger.settle import Outcome, Place, settle
-from service.ledger.values import Value, judge, unparked
+from service.ledger.values import Value, brought, judge, unparked
 from service.money import nanos_text
+from service.store import epochs
 from service.store.books import Books
 from service.store.changes import announce
 from service.store.database import Database, Reading, Writing, among
 from service.store.freezes import put
 from service.store.journal import note
 from service.store.leases import read_configs
+
+PAYING = ("won", "billed")
+NO_SNAPSHOT = -1  # Of a price made before the database was restored.
 
 Slots = dict[str, tuple[str, dict[str, Any]]]
 
@@ -31,12 +35,25 @@ class Booking:
     Args:
         slice_id: None when the ticket is of another incarnation of the database.
         day: The local day its money belongs to.
+        snapshot: The learner's state that the price was made from, and so its law, if any.
+        floor: Least price the seller took, in nanos per impression.
     """
 
     line_item: str
     event: Outcome | Value
     slice_id: bytes | None = None
     day: str | None = None
+    snapshot: int = 0
+    floor: int = 0
+
+
+# Law, kind, competing bid, floor and configuration in; what the entry must carry for the learner.
+Weigh = Callable[[bytes, str, int | None, int, dict[str, Any]], dict[str, Any]]
+
+
+def weightless(*_: object) -> dict[str, Any]:
+    """Nothing to carry: what a method that draws nothing needs."""
+    return {}
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,14 +65,19 @@ class Booked:
     clipped: bool = False
 
 
-def book(database: Database, group: list[Booking]) -> list[Booked]:
+def book(database: Database, group: list[Booking], weigh: Weigh = weightless) -> list[Booked]:
     """
     Book a group in one transaction; when this returns, all of it is durable.
+
+    Args:
+        weigh: Pure; asked only where the bid's snapshot has a law.
 
     Raises:
         StoreAway: Perhaps booked; the same group again answers `duplicate`.
     """
-    return database.write(lambda connection: _Group(connection, database.wall_ms(), group).book())
+    return database.write(
+        lambda connection: _Group(connection, database.wall_ms(), group, weigh).book()
+    )
 
 
 def find_wins(connection: Reading, bids: Iterable[bytes]) -> dict[bytes, str]:
@@ -72,8 +94,11 @@ def find_wins(connection: Reading, bids: Iterable[bytes]) -> dict[bytes, str]:
 class _Group:
     """The working set of one transaction."""
 
-    def __init__(self, connection: Writing, wall_ms: int, group: list[Booking]) -> None:
+    def __init__(
+        self, connection: Writing, wall_ms: int, group: list[Booking], weigh: Weigh
+    ) -> None:
         self._connection = connection
+        self._weigh, self._laws = weigh, dict[tuple[str, int], bytes | None]()
         self._wall_ms = wall_ms
         self._group = group
         self._books = Books(connection, [b.line_item for b in group], wall_ms)
@@ -81,6 +106,7 @@ class _Group:
         self._books.load_days({(b.line_item, b.day) for b in group if b.day})
         self._configs = read_configs(connection, list(self._books.accounts))
         self._won_seqs: dict[bytes, int] = {}
+        self._paid_ms: dict[bytes, int] = {}
         self._slots = self._read_slots({b.event.bid for b in group})
 
     def book(self) -> list[Booked]:
@@ -117,14 +143,13 @@ class _Group:
             counted = replace(slice_, counted=slice_.counted + verdict.rounds)
             self._books.replace_slice(counted)
         slice_id = slice_.id if slice_ else None
-        self._books.post(
-            booking.line_item, self._placed(verdict.entry, slice_id, day), verdict.movement,
-            day=day, slice_id=slice_id,
-        )  # fmt: skip
-        self._keep(slots, verdict.entry)
-        if verdict.entry is not None and verdict.entry.kind in ("won", "billed"):
+        entry = self._weighed(booking, self._placed(verdict.entry, slice_id, day), slots)
+        self._books.post(booking.line_item, entry, verdict.movement, day=day, slice_id=slice_id)
+        self._keep(slots, entry)
+        if verdict.entry is not None and verdict.entry.kind in PAYING:
+            self._paid_ms.setdefault(outcome.bid, self._books.service_ms)
             for lesson in unparked(slots, outcome.bid):
-                self._append(booking.line_item, slots, lesson)
+                self._append(booking.line_item, slots, self._dated(lesson, slots, booking))
         return Booked(verdict.status)
 
     def _value(self, booking: Booking, value: Value) -> Booked:
@@ -132,15 +157,27 @@ class _Group:
         terms = self._configs[booking.line_item]["value"]
         verdict = judge(value, slots, ceiling=terms["ceiling"], arrival=terms["arrival"])
         if verdict.entry is not None:
-            self._append(booking.line_item, slots, self._dated(verdict.entry, booking.line_item))
+            self._append(booking.line_item, slots, self._dated(verdict.entry, slots, booking))
         return Booked(verdict.status, verdict.code, verdict.clipped)
 
-    def _dated(self, entry: Entry, line_item: str) -> Entry:
-        """A value of a win from before the last reset says so, and teaches nothing."""
-        won = self._won_seqs.get(entry.bid or b"")
-        if entry.kind != "value" or won is None or won > self._reset_seq(line_item):
+    def _dated(self, entry: Entry, slots: Slots, booking: Booking) -> Entry:
+        """
+        A value with all that a lesson needs of its impression, so that the fold reads one entry.
+
+        That is when it was paid for, what it had brought before, and whether that was before
+        the last reset, since then it teaches nothing.
+        """
+        bid = entry.bid or b""
+        if entry.kind != "value" or bid not in self._paid_ms:
             return entry
-        return replace(entry, body={**entry.body, "before_reset": True})
+        body = {**entry.body, "won_ms": self._paid_ms[bid], "total_was": brought(slots)}
+        win = slots.get("result", ("", {}))[1]
+        if "chance" in win:
+            body["win"] = {name: win[name] for name in ("price", "chance", "stage")}
+        won = self._won_seqs.get(bid)
+        if won is not None and won <= self._reset_seq(booking.line_item):
+            body["before_reset"] = True
+        return replace(entry, body=body)
 
     def _reset_seq(self, line_item: str) -> int:
         statement = text("SELECT reset_seq FROM learner WHERE line_item = :id")
@@ -157,18 +194,43 @@ class _Group:
         place = {"slice": slice_id.hex() if slice_id else None, "day": day}
         return replace(entry, body={**entry.body, **place})
 
+    def _weighed(self, booking: Booking, entry: Entry | None, slots: Slots) -> Entry | None:
+        """The entry with what its bid was likely to beat, where bids are drawn from a law."""
+        if entry is None or entry.kind not in ("won", "lost"):
+            return entry
+        law = self._law(booking.line_item, booking.snapshot)
+        if law is None:
+            return entry
+        price = entry.body["price"] if entry.kind == "won" else entry.body["to_win"]
+        config = self._configs[booking.line_item]
+        said = self._weigh(law, entry.kind, price, booking.floor, config)
+        # A bill may come first, and values on it, when nobody knew by what law it was won.
+        if entry.kind == "won" and (before := brought(slots)):
+            said = {**said, "brought": before}
+        return replace(entry, body={**entry.body, **said})
+
+    def _law(self, line_item: str, snapshot: int) -> bytes | None:
+        key = (line_item, snapshot)
+        if key not in self._laws:
+            self._laws[key] = epochs.law(self._connection, line_item, snapshot)
+        return self._laws[key]
+
     def _keep(self, slots: Slots, entry: Entry | None) -> None:
         if entry is not None and entry.slot is not None:
             slots[entry.slot] = (entry.kind, dict(entry.body))
 
     def _read_slots(self, bids: set[bytes]) -> dict[bytes, Slots]:
         statement = among(
-            "SELECT bid, seq, slot, kind, body FROM stream WHERE bid IN :ids", of=LargeBinary
+            "SELECT bid, seq, service_ms, slot, kind, body FROM stream WHERE bid IN :ids"
+            " ORDER BY seq",
+            of=LargeBinary,
         )
         found: dict[bytes, Slots] = {}
         for row in self._connection.execute(statement, {"ids": sorted(bids)}):
             if row.slot == "result":
                 self._won_seqs[bytes(row.bid)] = row.seq
+            if row.kind in PAYING:
+                self._paid_ms.setdefault(bytes(row.bid), row.service_ms)
             found.setdefault(bytes(row.bid), {})[row.slot] = (row.kind, json.loads(row.body))
         return found
 

@@ -15,7 +15,7 @@ from service.store import keys
 
 # What an order or an outcome leaves behind; what a worker writes by itself is not among it.
 TABLES = ("line_item", "journal", "freezing", "access_key", "repeat_guard", "quarantine")
-STREAM = "stream WHERE kind NOT IN ('lease', 'retire', 'close', 'tick', 'matured')"
+STREAM = "stream WHERE kind NOT IN ('lease', 'retire', 'close', 'tick')"
 
 Counts = dict[str, int]
 

@@ -22,7 +22,9 @@ def partial(method: str | None = None, **policy: float) -> dict[str, Any]:
         "budget": 500 * EUR,
         "bid_cap": CAP,
         "auction": "second",
-        "value": {"ceiling": CEILING, "arrival": "once"},
+        "spend_on": "won",
+        "losses": "priced",
+        "value": {"ceiling": CEILING, "arrival": "once", "window_ms": 604_800_000},
         "policy": {"method": method, **given, **policy},
     }
 

@@ -7,13 +7,22 @@ import dataclasses
 import numpy as np
 import pytest
 
+from service.decision.describing import describe
 from service.decision.opportunity import Opportunity
-from service.decision.price import Passed, Proposal, ready
+from service.decision.price import Passed, Proposal, Ready, ready
 from service.decision.terms import Terms
+from service.learner.memory import Memory
 from service.learner.tally import Tally
 from tests.decision.invented import CAP, CEILING, config, terms, with_value
 
-EARLY = Tally(rounds=100, wins=40, known=40, converted=2, amount=2 * CEILING, amount_square=10**16)
+EARLY = Tally(
+    rounds=100, wins=40, known=40, converted=2, amount=2 * CEILING, amount_square=2 * CEILING**2
+)
+
+
+def made(tally: Tally, of: Terms) -> Ready:
+    """A snapshot of these sums alone, made ready."""
+    return ready(Memory(base=tally), of)
 
 
 def test_bids_round_down() -> None:
@@ -22,22 +31,22 @@ def test_bids_round_down() -> None:
     plain = Terms.from_config(with_value(base, expected={"conversions": 0}))
     tally = Tally(rounds=3, wins=3, known=3, converted=1, amount=200, amount_square=40_000)
 
-    assert ready(tally, plain).answer == Proposal(66, "value")
+    assert made(tally, plain).answer == Proposal(66, "value")
 
 
 def test_the_cap_is_named_when_it_sets_the_price() -> None:
     """Before the first value the published bound bids the ceiling, so the cap sets the price."""
-    assert ready(Tally.fresh(), terms("kl-ucbid")).answer == Proposal(CAP, "cap")
+    assert made(Tally(), terms("kl-ucbid")).answer == Proposal(CAP, "cap")
 
 
 def test_a_value_at_the_cap_is_the_value() -> None:
     """A price that only equals the cap was not moved by it."""
-    assert ready(Tally.fresh(), terms("flat", price=CAP)).answer == Proposal(CAP, "value")
+    assert made(Tally(), terms("flat", price=CAP)).answer == Proposal(CAP, "value")
 
 
 def test_the_opportunity_does_not_move_the_price() -> None:
     """Floor and features are for the guard and for later methods."""
-    snapshot, generator = ready(EARLY, terms("posterior-quantile")), np.random.default_rng(1)
+    snapshot, generator = made(EARLY, terms("posterior-quantile")), np.random.default_rng(1)
     plain = snapshot.propose(Opportunity("a"), generator)
     other = snapshot.propose(Opportunity("a", floor=CAP, features={"hour": 3}), generator)
 
@@ -48,37 +57,37 @@ def test_silent_values_hold_buying_back() -> None:
     """Under `once`, fifty wins may wait for their first word, the fifty-first may not."""
     fifty, more = Tally(rounds=60, wins=50), Tally(rounds=60, wins=51)
 
-    assert isinstance(ready(fifty, terms("kl-ucbid")).answer, Proposal)
-    assert ready(more, terms("kl-ucbid")).answer == Passed("no_value")
-    assert ready(more, terms("kl-ucbid")).describe()["pass"] == "no_value"
+    assert isinstance(made(fifty, terms("kl-ucbid")).answer, Proposal)
+    assert made(more, terms("kl-ucbid")).answer == Passed("no_value")
+    assert describe(made(more, terms("kl-ucbid")))["pass"] == "no_value"
 
 
 def test_a_flat_price_needs_no_values() -> None:
     """A method that learns nothing from values is not held back for want of them."""
     silent = Tally(rounds=60, wins=1000)
 
-    assert isinstance(ready(silent, terms("flat")).answer, Proposal)
+    assert isinstance(made(silent, terms("flat")).answer, Proposal)
 
 
 @pytest.mark.parametrize("method", ["ucbid", "mean", "posterior-quantile"])
 def test_a_state_out_of_range_is_no_price(method: str) -> None:
     """Sums beyond what a float can hold pass the opportunity instead of pricing it."""
     broken = Tally(rounds=10, wins=10, known=10, converted=1, amount=10**400)
-    snapshot = ready(broken, terms(method))
+    snapshot = made(broken, terms(method))
 
     assert snapshot.answer == Passed("learner_halted")
-    assert snapshot.describe()["bid_nanos"] is None
+    assert describe(snapshot)["bid_nanos"] is None
 
 
 def test_what_is_shown() -> None:
     """Mean, interval, bid and what set it, all in nanos, with the published source."""
-    learnt = ready(EARLY, terms("ucbid")).describe()
+    learnt = describe(made(EARLY, terms("ucbid")))
 
     assert learnt["mean_nanos"] == 2 * CEILING // 40
     assert learnt["bid_nanos"] == CAP
     assert learnt["set_by"] == "cap"
     assert "Weed, Perchet, Rigollet" in str(learnt["source"])
-    assert "not at any time" in str(learnt["interval"])
+    assert "at every moment at once" in str(learnt["interval"])
 
 
 def test_a_bound_above_the_money_spent_says_nothing_yet() -> None:
@@ -86,6 +95,6 @@ def test_a_bound_above_the_money_spent_says_nothing_yet() -> None:
     poor = EARLY
     rich = dataclasses.replace(poor, rounds=10**7, paid=10**13)
 
-    assert "says nothing yet" in str(ready(poor, terms("ucbid")).describe()["guarantee"])
+    assert "says nothing yet" in str(describe(made(poor, terms("ucbid")))["guarantee"])
     # 3 + 2 sqrt(6e7 ln 1e7) = 62199.004 ceilings of 0.10, by the formula.
-    assert "at most 6219.90" in str(ready(rich, terms("ucbid")).describe()["guarantee"])
+    assert "at most 6219.90" in str(describe(made(rich, terms("ucbid")))["guarantee"])

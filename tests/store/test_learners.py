@@ -10,14 +10,12 @@ from typing import Any
 import pytest
 from sqlalchemy import text
 
-from service.learner.tally import Tally
+from service.learner.memory import Memory
 from service.ledger.entries import Entry
 from service.store import changes, learners
 from service.store.database import Database
-from service.upkeep import lesson
+from service.teaching import FRESH, lesson
 from tests.builders import NAME, append, begin, line_item, pass_service_ms, valued, won
-
-FRESH = Tally.fresh().to_bytes()
 
 
 def _teach(database: Database, every: int = 1000, fold: learners.Fold = lesson) -> int:
@@ -47,7 +45,7 @@ def test_entries_are_folded_in_the_order_of_seq(migrated_url: str) -> None:
     begin(database)
 
     def fold(state: bytes, lessons: list[learners.Lesson], _: dict[str, Any]) -> bytes:
-        read.extend(body["n"] for kind, body in lessons if kind == "mark")
+        read.extend(body["n"] for kind, body, _ in lessons if kind == "mark")
         return state
 
     for n in range(10):
@@ -72,7 +70,7 @@ def test_a_snapshot_is_announced_only_when_it_changed(migrated_url: str) -> None
     append(database, won(1))
     assert _teach(database) == 1
     assert (_announced(database), _snapshot(database).seq) == (before + 1, 3)
-    assert Tally.from_bytes(_snapshot(database).state).wins == 1
+    assert Memory.from_bytes(_snapshot(database).state).total.wins == 1
     assert _snapshot(database).sound
     database.close()
 
@@ -88,7 +86,7 @@ def test_a_checkpoint_is_kept_every_so_many_entries(migrated_url: str) -> None:
     kept = database.read(
         lambda c: c.execute(text("SELECT state, digest FROM checkpoint WHERE seq = 10")).one()
     )
-    assert Tally.from_bytes(bytes(kept.state)).wins == 9
+    assert Memory.from_bytes(bytes(kept.state)).total.wins == 9
     assert learners.digest_of(bytes(kept.state)) == kept.digest
     database.close()
 
@@ -119,7 +117,7 @@ def test_a_long_stream_is_published_only_when_caught_up(migrated_url: str) -> No
     assert _snapshot(database).seq == 0
     assert _teach(database) == 0
     assert _snapshot(database).seq == most
-    assert Tally.from_bytes(_snapshot(database).state).wins == most - 1
+    assert Memory.from_bytes(_snapshot(database).state).total.wins == most - 1
     database.close()
 
 
@@ -142,7 +140,7 @@ def test_two_teachers_at_once_neither_lose_nor_repeat_an_entry(migrated_url: str
         done.set()
         read = sum(teacher.result() for teacher in teachers) + _teach(databases[2])
     assert read == 61
-    assert Tally.from_bytes(_snapshot(databases[2]).state).wins == 60
+    assert Memory.from_bytes(_snapshot(databases[2]).state).total.wins == 60
     assert _snapshot(databases[2]).state == _from_zero(databases[2])
     for database in databases:
         database.close()
@@ -160,7 +158,7 @@ def test_a_refold_reads_everything_under_the_new_terms(migrated_url: str) -> Non
     database.write(lambda c: learners.refold(c, NAME, FRESH))
     assert _checkpoints(database) == []
     _teach(database, every=2)
-    tally = Tally.from_bytes(_snapshot(database).state)
+    tally = Memory.from_bytes(_snapshot(database).state).total
     assert (tally.amount, tally.clipped) == (60_000_000, 1)
     assert _snapshot(database).state == _from_zero(database)
     database.close()
@@ -172,59 +170,23 @@ def _store_config(database: Database, config: dict[str, Any]) -> None:
     database.write(lambda c: c.execute(statement, row))
 
 
-def _mature(database: Database) -> list[dict[str, Any]]:
-    while learners.mature(database, NAME):
-        pass
-    statement = text("SELECT body FROM stream WHERE kind = 'matured' ORDER BY seq")
-    return [json.loads(b) for b in database.read(lambda c: c.execute(statement).scalars().all())]
-
-
 def test_a_window_closes_by_service_time_only(migrated_url: str) -> None:
     """While everything is away no window closes, whatever the wall clock says."""
     database = Database(migrated_url, wall_ms=lambda: 10**15)
     begin(database, value={"arrival": "accrues", "window_ms": 1000})
-    append(database, won(1))
-    assert database.read(learners.ripening) == []
-    assert _mature(database) == []
-    pass_service_ms(database, 999)
-    assert database.read(learners.ripening) == []
-    pass_service_ms(database, 1)
-    assert database.read(learners.ripening) == [NAME]
-    assert _mature(database) == [{"wins": 1, "amounts": [], "up_to": 2}]
-    assert database.read(learners.ripening) == []
-    database.close()
-
-
-def test_a_window_counts_what_came_inside_it_and_nothing_after(migrated_url: str) -> None:
-    """Corrections inside the window count; values and corrections after it do not."""
-    database = Database(migrated_url)
-    begin(database, value={"arrival": "accrues", "window_ms": 1000})
-    append(database, won(1), won(2), won(3))
-    append(database, valued(1, 700), valued(1, 300, "b"), valued(1, 50, "c", was=300))
-    append(database, valued(2, 40))
-    pass_service_ms(database, 1500)
-    append(database, valued(2, 10, "b", was=40), valued(3, 999))
-    assert _mature(database) == [{"wins": 3, "amounts": [40, 750], "up_to": 4}]
-    database.close()
-
-
-def test_no_win_matures_twice(migrated_url: str) -> None:
-    """Each win is in one entry, though two workers close windows at once."""
-    database, other = Database(migrated_url), Database(migrated_url)
-    begin(database, value={"arrival": "accrues", "window_ms": 1000})
-    append(database, *(won(number) for number in range(1, 31)))
-    pass_service_ms(database, 1000)
-    append(database, *(won(number) for number in range(31, 41)))
-    with ThreadPoolExecutor(2) as pool:
-        closed = list(pool.map(learners.mature, [database, other], [NAME, NAME]))
-    assert sorted(closed) == [0, 30]
-    pass_service_ms(database, 1000)
-    assert [entry["wins"] for entry in _mature(database)] == [30, 10]
+    append(database, won(1), Entry("mark", {}))
     _teach(database)
-    tally = Tally.from_bytes(_snapshot(database).state)
-    assert (tally.wins, tally.known) == (40, 40)
+    assert _known(database) == 0
+    pass_service_ms(database, 2000)
+    append(database, Entry("mark", {}))
+    _teach(database)
+    assert _known(database) == 1
+    assert _snapshot(database).state == _from_zero(database)
     database.close()
-    other.close()
+
+
+def _known(database: Database) -> int:
+    return Memory.from_bytes(_snapshot(database).state).total.known
 
 
 @pytest.mark.parametrize("backend", ["sqlite"], indirect=True)

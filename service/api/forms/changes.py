@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+from typing import Literal
+
 from pydantic import Field
 
 from service.api.forms import refused
 from service.api.forms.fields import Amount, CapCpm, Moment, Name, Printable, Reason
+from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin, TripwiresForm
 from service.api.forms.line_items import (
     DAY_S,
     ExpectedForm,
@@ -37,6 +40,8 @@ class ValueChange(StrictForm):
     window_s: Window = 0
     delay_mean_s: Window | None = None
     expected: ExpectedForm = ExpectedForm()
+    drift: DriftForm | None = None
+    change: ChangeDetectorForm | None = None
 
 
 class ChangeForm(NotYetForm):
@@ -57,5 +62,9 @@ class ChangeForm(NotYetForm):
     value: ValueChange = ValueChange()
     policy: Policy = Field(default_factory=dict)
     pacing: PacingForm = PacingForm()
+    allowance: Amount | None = None
+    kin: Kin | None = None
+    losses: Literal["bare", "priced"] = "bare"
+    tripwires: TripwiresForm | None = None
     confirm: Printable | None = None
     reason: Reason | None = None

@@ -10,6 +10,7 @@ from pydantic import BaseModel
 from service.api.forms.changes import ChangeForm
 from service.api.forms.line_items import CreateForm, NotYetForm
 from service.api.forms.reading import bad_field, read
+from service.configuring import AS_A_WHOLE
 
 MS_PER_S = 1000
 # The form's name -> our name, and what one unit of the form is in ours.
@@ -22,9 +23,14 @@ NAMES = {
     "billing_grace_s": ("billing_grace_ms", MS_PER_S),
     "window_s": ("window_ms", MS_PER_S),
     "delay_mean_s": ("delay_mean_ms", MS_PER_S),
+    "memory_s": ("memory_ms", MS_PER_S),
+    "value_silence_s": ("value_silence_ms", MS_PER_S),
 }
 _NOT_KEPT = {*NotYetForm.model_fields, "confirm", "reason", "profile"}
-_MAY_BE_NULL = {"daily_budget", "ends_at", "delay_mean_s"}
+_MAY_BE_NULL = {
+    *("daily_budget", "ends_at", "delay_mean_s", "drift", "change", "rounds", "memory_s"),
+    *("value_silence_s", "allowance", "kin", "tripwires"),
+}
 
 
 def read_new(members: Mapping[str, object], today_ms: int) -> tuple[dict[str, Any], CreateForm]:
@@ -57,21 +63,10 @@ def read_changes(members: Mapping[str, object]) -> tuple[dict[str, Any], ChangeF
         NotOffered: A field asks for what this release does not do.
     """
     form = read(ChangeForm, members)
-    changes = _config(form.model_dump(exclude_unset=True))
+    changes = _config(_named(form))
     if not changes:
         raise bad_field("", "The body names nothing to change.")
     return changes, form
-
-
-def merged(config: Mapping[str, Any], changes: Mapping[str, Any]) -> dict[str, Any]:
-    """The config after the changes; a policy is replaced as a whole, since its settings differ."""
-    after = dict(config)
-    for name, change in changes.items():
-        if isinstance(change, Mapping) and name != "policy":
-            after[name] = merged(config.get(name) or {}, change)
-        else:
-            after[name] = change
-    return after
 
 
 def check_consistent(config: Mapping[str, Any]) -> None:
@@ -91,6 +86,11 @@ def check_consistent(config: Mapping[str, Any]) -> None:
         raise bad_field("value.typical", "The typical value must not exceed the ceiling.")
     if _above(per_impression, value.get("ceiling")):
         raise bad_field("value.expected.per_impression", "It must not exceed the ceiling.")
+    drift = value.get("drift")
+    if drift is not None and (drift.get("rounds") is None) == (drift.get("memory_ms") is None):
+        raise bad_field("value.drift", "Name exactly one of rounds and memory_s.")
+    if config["id"] in (config.get("kin") or []):
+        raise bad_field("kin", "A line item is no kin of its own.")
     if _above(policy.get("price"), config["bid_cap"]):
         raise bad_field("policy.price_cpm", "The flat price must not exceed the cap.")
 
@@ -107,6 +107,14 @@ def defaults_taken(form: BaseModel, path: str = "") -> list[str]:
         elif value is not None and name not in form.model_fields_set:
             taken.append(path + name)
     return taken
+
+
+def _named(form: ChangeForm) -> dict[str, Any]:
+    """The members that came; an object that is replaced as a whole, with its own defaults."""
+    said, full = form.model_dump(exclude_unset=True), form.model_dump()
+    for name in AS_A_WHOLE & set(said.get("value") or {}):
+        said["value"][name] = full["value"][name]
+    return said
 
 
 def _above(amount: int | None, limit: int | None) -> bool:

@@ -17,6 +17,7 @@ from service.api.forms.fields import (
     Printable,
     TimeZone,
 )
+from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin, TripwiresForm
 from service.api.forms.policies import Policy
 from service.api.forms.reading import StrictForm
 
@@ -50,6 +51,8 @@ class ValueForm(StrictForm):
     window_s: Window = 604_800
     delay_mean_s: Window | None = None
     expected: ExpectedForm | None = None
+    drift: DriftForm | None = None
+    change: ChangeDetectorForm | None = None
 
 
 class PacingForm(StrictForm):
@@ -63,11 +66,8 @@ class NotYetForm(StrictForm):
     """What the contract knows of a line item and this release refuses."""
 
     return_target: refused.ReturnTarget = None
-    allowance: refused.Allowance = None
     control: refused.Control = None
-    kin: refused.Kin = None
     fees: refused.Fees = None
-    tripwires: refused.Tripwires = None
 
 
 class CreateForm(NotYetForm):
@@ -90,4 +90,8 @@ class CreateForm(NotYetForm):
     value: ValueForm = ValueForm()
     policy: Policy | None = None
     pacing: PacingForm = PacingForm()
+    allowance: Amount | None = None
+    kin: Kin | None = None
+    losses: Literal["bare", "priced"] = "bare"
+    tripwires: TripwiresForm | None = None
     confirm: Printable | None = None

@@ -50,11 +50,8 @@ _NULL = WithJsonSchema({"nullable": True, "description": "Not offered in this re
 _NEVER = WithJsonSchema({"not": {}, "description": "Fixed at creation; leave it out."})
 
 ReturnTarget = Annotated[None, _absent("return_target"), _NULL]
-Allowance = Annotated[None, _absent("allowance"), _NULL]
 Control = Annotated[None, _absent("control"), _NULL]
-Kin = Annotated[None, _absent("kin"), _NULL]
 Fees = Annotated[None, _absent("fees"), _NULL]
-Tripwires = Annotated[None, _absent("tripwires"), _NULL]
 LineItems = Annotated[None, _absent("line_items"), _NULL]
 FixedPrice = Annotated[None, _absent("price_cpm"), _NULL]
 Profile = Annotated[None, _absent("pacing.profile"), _NULL]

@@ -11,20 +11,10 @@ again, so it loses at least (1 - v) v^2 / 2 per round.
 
 from __future__ import annotations
 
-import numpy as np
-
-from service.decision.method import Counts, Method
+from service.decision import posterior
+from service.decision.method import Method
 from service.decision.terms import Terms
-from service.learner.bounds import Numbers
 from service.learner.tally import Tally
-
-
-def index(counts: Counts, terms: Terms) -> Numbers:
-    """The mean with its prior, in nanos per impression."""
-    impressions = terms.prior_impressions + counts.known
-    amount = terms.prior_conversions * terms.typical + counts.amount
-    some = np.where(impressions > 0.0, impressions, 1.0)
-    return np.where(impressions > 0.0, amount / some, float(terms.expected))
 
 
 def guarantee(tally: Tally, terms: Terms) -> str:
@@ -34,7 +24,7 @@ def guarantee(tally: Tally, terms: Terms) -> str:
 
 METHOD = Method(
     name="mean",
-    index=index,
+    index=posterior.mean,
     source="Baseline; compare Weed, Perchet, Rigollet, COLT 2016.",
     assumes="Values of wins come from one unchanging distribution.",
     guarantee=guarantee,

@@ -13,8 +13,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from service import money
 from service.decision.method import Counts, Method, Setting
+from service.decision.saying import bound_in_words
 from service.decision.terms import Terms
 from service.learner import bounds
 from service.learner.bounds import Numbers
@@ -36,12 +36,7 @@ def guarantee(tally: Tally, terms: Terms) -> str:
     if terms.settings["gamma"] != GAMMA:
         return "Theorem 1 is stated for gamma = 3; for this gamma only the order is known."
     lost = round(terms.scale * float(bounds.ucbid_regret_bound(max(tally.rounds, 1))))
-    if lost > tally.paid:
-        return "Theorem 1 says nothing yet: its bound is larger than the money spent so far."
-    return (
-        f"Theorem 1: expected loss against the best fixed bid at most {money.nanos_text(lost)} "
-        f"{terms.currency} over {tally.rounds:,} rounds, if each outcome were known at once."
-    )
+    return f"{bound_in_words('Theorem 1', lost, tally, terms)} It is for outcomes known at once."
 
 
 METHOD = Method(

@@ -1,0 +1,179 @@
+"""What a line item has learnt, with the newest part of it kept apart by age.
+
+Sums alone cannot tell how old they are. Impressions whose window is still open count only
+as far as their values have had time to come, and a market that drifts is forgotten by age;
+both need the newest impressions in cells of time, beside the sums of all that is older.
+"""
+
+from __future__ import annotations
+
+import json
+from base64 import b64decode, b64encode
+from dataclasses import dataclass, replace
+
+from service.learner.tally import NAMES, Tally
+from service.learner.watch import FIRST, Watch
+
+FORM = 2
+NOTHING = Tally()
+
+
+class UnreadableMemory(ValueError):
+    """The bytes are not a memory of the form we write."""
+
+
+@dataclass(frozen=True, slots=True)
+class Cell:
+    """
+    Impressions bought from `start_ms` on, up to the next cell; money in nanos.
+
+    Args:
+        start_ms: Service time of the first of them.
+        rounds: Rounds counted meanwhile.
+        bought: Impressions paid for.
+        known: Those whose one value is known; 0 where values accrue.
+        converted: Those that have brought something so far.
+        amount: What they have brought, each cut at the ceiling.
+        amount_square: The same squared, in square nanos.
+    """
+
+    start_ms: int
+    rounds: int = 0
+    bought: int = 0
+    known: int = 0
+    converted: int = 0
+    amount: int = 0
+    amount_square: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class Prior:
+    """
+    A guess that a lesson brought, in place of the configured one; money in nanos.
+
+    Args:
+        per_impression: Value of an impression.
+        typical: Usual value of one event.
+    """
+
+    per_impression: int
+    typical: int
+
+
+@dataclass(frozen=True, slots=True)
+class Memory:
+    """
+    The state of a learner; integers only, equal in whatever order one moment's lessons come.
+
+    Args:
+        base: Every count of the line item, and the values of what is older than all cells.
+        cells: The newest impressions, oldest first.
+        closed: How many of the cells have closed their windows and are kept for drift.
+        clock_ms: Service time of the last lesson, the only clock there is.
+        heard_ms: When the last value came, or the first impression; 0 before.
+        ripe_ms: The moment at which windows stand still after a silence of the values.
+        ripe_again_ms: When they go on.
+        began_ms: Values of impressions bought before teach nothing; a restart moves it.
+        delays: Impressions whose first value was timed.
+        delay_sum_ms: How long they took, in all.
+        prior: The guess a lesson brought, if any.
+        watch: What the change detector has counted.
+        tree: Bytes of the tree of exponential weights, where a method grows one.
+    """
+
+    base: Tally = NOTHING
+    cells: tuple[Cell, ...] = ()
+    closed: int = 0
+    clock_ms: int = 0
+    heard_ms: int = 0
+    ripe_ms: int = 0
+    ripe_again_ms: int = 0
+    began_ms: int = 0
+    delays: int = 0
+    delay_sum_ms: int = 0
+    prior: Prior | None = None
+    watch: Watch = FIRST
+    tree: bytes = b""
+
+    @staticmethod
+    def fresh() -> Memory:
+        """The memory before the first lesson."""
+        return Memory()
+
+    @property
+    def total(self) -> Tally:
+        """The sums over everything, cells included; what is open counts as not known."""
+        base, cells = self.base, self.cells
+        return replace(
+            base,
+            known=base.known + sum(cell.known for cell in cells),
+            converted=base.converted + sum(cell.converted for cell in cells),
+            amount=base.amount + sum(cell.amount for cell in cells),
+            amount_square=base.amount_square + sum(cell.amount_square for cell in cells),
+        )
+
+    def to_bytes(self) -> bytes:
+        """Canonical JSON: equal memories give equal bytes."""
+        content = {
+            "form": FORM,
+            "base": [getattr(self.base, name) for name in NAMES],
+            "cells": [[getattr(cell, name) for name in Cell.__slots__] for cell in self.cells],
+            "prior": [self.prior.per_impression, self.prior.typical] if self.prior else [],
+            "watch": list(self.watch),
+            "tree": b64encode(self.tree).decode("ascii"),
+            **{name: getattr(self, name) for name in _NUMBERS},
+        }
+        return json.dumps(content, sort_keys=True, separators=(",", ":")).encode()
+
+    @staticmethod
+    def from_bytes(state: bytes) -> Memory:
+        """
+        Read what `to_bytes` wrote.
+
+        Raises:
+            UnreadableMemory: Not JSON, another form, or not exactly our integers.
+        """
+        try:
+            content = json.loads(state)
+            form = content.pop("form", None) if isinstance(content, dict) else None
+            if form != FORM or set(content) != {*_NUMBERS, *_PARTS}:
+                raise UnreadableMemory("not the form of memory this release writes")
+            return _read(content)
+        except UnreadableMemory:
+            raise
+        except (ValueError, TypeError) as error:
+            raise UnreadableMemory("not a memory") from error
+
+
+_NUMBERS = (
+    *("closed", "clock_ms", "heard_ms", "ripe_ms", "ripe_again_ms", "began_ms"),
+    *("delays", "delay_sum_ms"),
+)
+_PARTS = ("base", "cells", "prior", "watch", "tree")
+
+
+def _read(content: dict[str, object]) -> Memory:
+    base, cells, prior, watch, tree = (content[name] for name in _PARTS)
+    if not isinstance(tree, str) or not isinstance(cells, list):
+        raise UnreadableMemory("not a memory")
+    numbers = dict(zip(_NUMBERS, _whole([content[name] for name in _NUMBERS], 8), strict=True))
+    read = tuple(Cell(*_whole(cell, len(Cell.__slots__))) for cell in cells)
+    starts = [cell.start_ms for cell in read]
+    if not 0 <= numbers["closed"] <= len(read) or starts != sorted(starts):
+        raise UnreadableMemory("cells out of order")
+    return Memory(
+        base=Tally(*_whole(base, len(NAMES))),
+        cells=read,
+        prior=Prior(*_whole(prior, 2)) if prior else None,
+        watch=Watch(*_whole(watch, len(FIRST))),
+        tree=b64decode(tree, validate=True),
+        **numbers,
+    )
+
+
+def _whole(numbers: object, count: int) -> list[int]:
+    if not isinstance(numbers, list) or len(numbers) != count:
+        raise UnreadableMemory("a part has another length")
+    if any(type(number) is not int for number in numbers):
+        raise UnreadableMemory("a memory holds integers only")
+    return numbers
