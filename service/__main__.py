@@ -52,6 +52,30 @@ def _bench_real() -> ModuleType:
     return bench_real
 
 
+def _bench_regret() -> ModuleType:
+    from service.commands import bench_regret
+
+    return bench_regret
+
+
+def _bench_rare() -> ModuleType:
+    from service.commands import bench_rare
+
+    return bench_rare
+
+
+def _bench_delay() -> ModuleType:
+    from service.commands import bench_delay
+
+    return bench_delay
+
+
+def _bench_learn() -> ModuleType:
+    from service.commands import bench_learn
+
+    return bench_learn
+
+
 COMMANDS: dict[str, tuple[str, Load]] = {
     "serve": ("serve bids, outcomes and operators over HTTP", _serve),
     "demo": ("play an invented advertiser's auctions against a real server", _demo),
@@ -61,6 +85,10 @@ COMMANDS: dict[str, tuple[str, Load]] = {
 }
 BENCHES: dict[str, tuple[str, Load]] = {
     "real": ("play real sealed-bid auctions through a real server", _bench_real),
+    "regret": ("hold every method against its theory on invented markets", _bench_regret),
+    "rare": ("see in money what each method earns on rare values", _bench_rare),
+    "delay": ("see in money what late values cost", _bench_delay),
+    "learn": ("time the folding of each method's lessons", _bench_learn),
 }
 
 

@@ -106,9 +106,18 @@ class Exp3:
 
     def learn(self, arms: NDArray[np.int64], rewards: Shares) -> None:
         """Credit the arm each run played with its reward between 0 and 1."""
+        self.add(self.credits(arms, rewards))
+
+    def credits(self, arms: NDArray[np.int64], rewards: Shares) -> Shares:
+        """What `learn` would add to the log-weights at the chances of now."""
         runs, chances = np.arange(arms.size), self.chances()
-        self._logs += self._step * self._lift / chances
-        self._logs[runs, arms] += self._step * rewards / chances[runs, arms]
+        credits = self._step * self._lift / chances
+        credits[runs, arms] += self._step * rewards / chances[runs, arms]
+        return credits
+
+    def add(self, credits: Shares) -> None:
+        """Add to the log-weights, now or late."""
+        self._logs += credits
 
 
 def play_exp3(paths: Sequence[Path], grid: Nanos, scale: int, rng: Generator) -> Nanos:
