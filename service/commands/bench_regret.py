@@ -9,7 +9,7 @@ import os
 from rich.console import Console
 
 from service.commands import options, report
-from service.rehearsal import arena, contest, theory, tree_contest
+from service.rehearsal import contest, theory, tree_contest, worlds
 from service.rehearsal.regret_table import FULL, METHODS, QUICK, Table, jobs, table
 
 NOTES = (
@@ -18,7 +18,7 @@ NOTES = (
     "an impression at its mean value given its price, so luck with values is left out.",
     "Feedback: price and value of a win; of a loss only that it is one, but for exptree, which is "
     "told the competing bid. Values are known before the next bid, but in `delayed`.",
-    f"'T known' is as published, its law renewed every round on {arena.STAGES[arena.IID].cells} "
+    f"'T known' is as published, its law renewed every round on {worlds.STAGES[worlds.IID].cells} "
     "ticks (40 and 10,000 in the coin flips); the win-only variant and its bound are our own. "
     f"Without these words it is as the service runs it: doubling, one law for {tree_contest.EPOCH} "
     "bids, for which no theorem speaks.",
@@ -64,7 +64,7 @@ def _show(found: Table, for_a_program: bool) -> None:
     heads = [*(f"T = {rounds:,}" for rounds in found.size.horizons), "grows", "theory", "", "bound"]
     for market in found.markets():
         rows = {_named(found, market, name): _row(found, market, name) for name in METHODS}
-        title = f"{market}: {arena.STAGES[market].says} (regret ± s.e.)"
+        title = f"{market}: {worlds.STAGES[market].says} (regret ± s.e.)"
         console.print(report.table(title, heads, rows))
     for line in (*NOTES, *(found.broken() or ["Everything that must hold does."])):
         console.print(line, highlight=False)
@@ -99,7 +99,7 @@ def _data(found: Table) -> dict[str, object]:
         "broken": found.broken(),
         "markets": {
             market: {
-                "says": arena.STAGES[market].says,
+                "says": worlds.STAGES[market].says,
                 "winner": found.winner(market),
                 "methods": {name: _figures(found, market, name) for name in found.methods(market)},
             }

@@ -1,6 +1,6 @@
 """Bidders of a table of regret: the service's own index formulas, and the baselines.
 
-Every bidder plays all runs of an arena at once, each with its own counts, and is told its
+Every bidder plays all runs of a world at once, each with its own counts, and is told its
 values when they come. Forgetting is the plain recursion on the counts, every round.
 """
 
@@ -16,11 +16,11 @@ from numpy.typing import NDArray
 
 from service.decision.counts import Counts, nothing
 from service.learner.drift import discount_factor, window_length
-from service.rehearsal.arena import DELAY_MAX, SCALE, Arena, Shares
 from service.rehearsal.exp3 import Exp3, exp3_rate
 from service.rehearsal.market import Nanos
 from service.rehearsal.regret import uniform_terms
 from service.rehearsal.run import bids_of
+from service.rehearsal.worlds import DELAY_MAX, SCALE, Shares, World
 
 GRID_POINTS = 11
 CHANGES = 1  # The number of changes that methods which forget are tuned for.
@@ -31,13 +31,13 @@ Won = NDArray[np.bool_]
 
 
 class Bidder(Protocol):
-    """What plays all runs of an arena."""
+    """What plays all runs of a world."""
 
     def bids(self, turn: int) -> Nanos:
         """One bid for each run, in nanos."""
         ...
 
-    def learn(self, turn: int, won: Won, arena: Arena) -> None:
+    def learn(self, turn: int, won: Won, world: World) -> None:
         """Take in what the round told."""
         ...
 
@@ -45,14 +45,14 @@ class Bidder(Protocol):
 Make = Callable[[int, int, Generator], Bidder]  # Runs, rounds and chance to a bidder.
 
 
-def play(arena: Arena, bidder: Bidder) -> Shares:
+def play(world: World, bidder: Bidder) -> Shares:
     """The regret of each run, in scales."""
-    rounds, runs = arena.competing.shape
+    rounds, runs = world.competing.shape
     regret = np.zeros(runs)
     for turn in range(rounds):
-        won = arena.competing[turn] <= bidder.bids(turn)
-        regret += arena.lost(turn, won)
-        bidder.learn(turn, won, arena)
+        won = world.competing[turn] <= bidder.bids(turn)
+        regret += world.lost(turn, won)
+        bidder.learn(turn, won, world)
     return regret / SCALE
 
 
@@ -82,7 +82,7 @@ class Learner:
 
     Args:
         method: Its name.
-        runs: Columns of the arena.
+        runs: Columns of the world.
         rng: For methods that draw.
         gamma: Factor on all counts in every round.
         window: Rounds that count; None for all.
@@ -113,11 +113,11 @@ class Learner:
             return bids
         return np.where(self._rng.random(bids.size) < self._tries(turn), SCALE, bids)
 
-    def learn(self, turn: int, won: Won, arena: Arena) -> None:
+    def learn(self, turn: int, won: Won, world: World) -> None:
         """Put the values of this round where they are due, and take those due now."""
-        due, runs = (turn + arena.delays[turn]) % RING, np.arange(won.size)
+        due, runs = (turn + world.delays[turn]) % RING, np.arange(won.size)
         self._known[due, runs] += won
-        self._hits[due, runs] += won & (arena.values[turn] > 0)
+        self._hits[due, runs] += won & (world.values[turn] > 0)
         now = turn % RING
         self._sums.add(self._known[now].copy(), self._hits[now].copy())
         self._known[now] = self._hits[now] = 0.0
@@ -137,10 +137,10 @@ class Grid:
         self._arms = self._exp3.draw(self._rng)
         return self._grid[self._arms]
 
-    def learn(self, turn: int, won: Won, arena: Arena) -> None:
+    def learn(self, turn: int, won: Won, world: World) -> None:
         """Credit what the round gained, between -1 and 1, when it is known."""
-        gained = np.where(won, arena.values[turn] - (arena.competing[turn] - 1), 0) / SCALE
-        due = np.where(won, turn + arena.delays[turn], turn) % RING
+        gained = np.where(won, world.values[turn] - (world.competing[turn] - 1), 0) / SCALE
+        due = np.where(won, turn + world.delays[turn], turn) % RING
         credits = self._exp3.credits(self._arms, (gained + 1.0) / 2.0)
         self._credits[due, np.arange(won.size)] += credits
         self._exp3.add(self._credits[turn % RING])

@@ -8,9 +8,9 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from service.rehearsal import arena, contest, theory, tree_contest
-from service.rehearsal.arena import STAGES, Shares
+from service.rehearsal import contest, theory, tree_contest, worlds
 from service.rehearsal.processes import spread
+from service.rehearsal.worlds import STAGES, Shares
 
 GRID_BEATEN = 2.5  # On a coin flip the grid loses more than so many times what a tree loses.
 FORGETTING = {
@@ -124,9 +124,9 @@ class Table:
     def _forgetting_in_vain(self) -> Iterator[str]:
         last = self.size.horizons[-1]
         for method, ways in FORGETTING.items():
-            plain = self.cells.get((arena.ABRUPT, method, last))
+            plain = self.cells.get((worlds.ABRUPT, method, last))
             for way in ways:
-                forgets = self.cells.get((arena.ABRUPT, way, last))
+                forgets = self.cells.get((worlds.ABRUPT, way, last))
                 if plain and forgets and forgets.mean >= plain.mean:
                     yield f"{way} does not beat its plain form after an abrupt change."
 
@@ -152,7 +152,7 @@ def jobs(
 def played(job: Job) -> list[Shares]:
     """The regret of every run of each of the job's markets, in scales."""
     stages = [STAGES[market] for market in job.markets]
-    ground = arena.arena(stages, job.rounds, job.runs, job.seed)
+    ground = worlds.world(stages, job.rounds, job.runs, job.seed)
     rng = np.random.default_rng([job.seed, job.rounds, zlib.crc32(job.method.encode())])
     if job.method in tree_contest.TREES:
         regret = tree_contest.play_tree(ground, job.method, stages[0], rng)

@@ -18,7 +18,7 @@ import numpy as np
 
 from service.learner import exptree_bounds
 from service.learner.bounds import ucbid_regret_bound
-from service.rehearsal import arena, contest, tree_contest
+from service.rehearsal import contest, tree_contest, worlds
 from service.rehearsal.exp3 import exp3_bound
 
 NO_BOUND = "no bound"
@@ -41,13 +41,13 @@ LOG_SQUARE = Growth("ln^2 T", lambda t: math.log(t) ** 2)
 LOG = Growth("ln T", math.log)
 
 # Markets whose values are independent, alike, and told at once, whatever the prices do.
-ALIKE = (arena.IID, arena.STEEP, arena.EVEN, arena.FLAT, arena.SMALL, arena.HOSTILE)
+ALIKE = (worlds.IID, worlds.STEEP, worlds.EVEN, worlds.FLAT, worlds.SMALL, worlds.HOSTILE)
 # Those with a best fixed bid; 0.3 is on the grid, and above nothing no bid is best in `HOSTILE`.
-FIXED = (*ALIKE, arena.COIN_WIDE, arena.COIN_NARROW)
-ON_GRID = (arena.IID, arena.STEEP, arena.EVEN, arena.FLAT, arena.HOSTILE)
-COINS = (arena.COIN_WIDE, arena.COIN_NARROW)
+FIXED = (*ALIKE, worlds.COIN_WIDE, worlds.COIN_NARROW)
+ON_GRID = (worlds.IID, worlds.STEEP, worlds.EVEN, worlds.FLAT, worlds.HOSTILE)
+COINS = (worlds.COIN_WIDE, worlds.COIN_NARROW)
 # Prices with a density between two bounds.
-BOUNDED = (arena.IID, arena.EVEN, arena.SMALL)
+BOUNDED = (worlds.IID, worlds.EVEN, worlds.SMALL)
 
 
 def growth(method: str, market: str) -> Growth | None:
@@ -65,20 +65,20 @@ def growth(method: str, market: str) -> Growth | None:
         return ROOT
     if method == contest.EXP3:
         return LINEAR if market in COINS else ROOT if market in ON_GRID else None
-    greedy = method == contest.GREEDY and market in ALIKE and market != arena.HOSTILE
+    greedy = method == contest.GREEDY and market in ALIKE and market != worlds.HOSTILE
     return LINEAR if greedy else None
 
 
 def _of_ucbid(market: str) -> Growth | None:
-    by_margin = {arena.STEEP: QUARTER, arena.FLAT: LOG, arena.HOSTILE: ROOT_LOG}
+    by_margin = {worlds.STEEP: QUARTER, worlds.FLAT: LOG, worlds.HOSTILE: ROOT_LOG}
     return by_margin.get(market, LOG_SQUARE if market in BOUNDED else None)
 
 
 def bound(method: str, market: str, rounds: int) -> float | str:
     """What a bidder may lose in so many rounds, in scales, or the words that say why not."""
-    width = arena.STAGES[market].width
+    width = worlds.STAGES[market].width
     if method == contest.UCBID and market in ALIKE:
-        gap = None if market != arena.HOSTILE else math.sqrt(6.0 * math.log(rounds) / rounds)
+        gap = None if market != worlds.HOSTILE else math.sqrt(6.0 * math.log(rounds) / rounds)
         return float(ucbid_regret_bound(rounds, gap))
     if method == tree_contest.TREE and market in FIXED:
         return exptree_bounds.exptree_bound(rounds, width)

@@ -20,7 +20,7 @@ from service.learner.exptree_lessons import Lesson, Lost, Won, Worth
 from service.learner.exptree_rules import Rules
 from service.learner.exptree_state import Tree
 from service.learner.partition import Ticks
-from service.rehearsal.arena import SCALE, Arena, Shares, Stage
+from service.rehearsal.worlds import SCALE, Shares, Stage, World
 
 TREE, TREE_WINS = "exptree, T known", "exptree-win-only, T known"
 DOUBLING, DOUBLING_WINS = "exptree", "exptree-win-only"
@@ -39,21 +39,21 @@ def tree_rules(method: str, stage: Stage, rounds: int) -> Rules:
     return Rules(Ticks(SCALE, SCALE // stage.cells), SCALE, win_only, rate)
 
 
-def play_tree(arena: Arena, method: str, stage: Stage, rng: Generator) -> Shares:
+def play_tree(world: World, method: str, stage: Stage, rng: Generator) -> Shares:
     """The regret of each run, in scales."""
-    rounds, runs = arena.competing.shape
+    rounds, runs = world.competing.shape
     epoch = 1 if method in KNOWN else EPOCH
     won = np.stack(
-        [_wins(arena, run, tree_rules(method, stage, rounds), epoch, rng) for run in range(runs)],
+        [_wins(world, run, tree_rules(method, stage, rounds), epoch, rng) for run in range(runs)],
         axis=1,
     )
-    lost = [arena.lost(turn, won[turn]) for turn in range(rounds)]
+    lost = [world.lost(turn, won[turn]) for turn in range(rounds)]
     return np.asarray(np.sum(lost, axis=0) / SCALE)
 
 
-def _wins(arena: Arena, run: int, rules: Rules, epoch: int, rng: Generator) -> Sequence[bool]:
-    prices = (arena.competing[:, run] - 1).tolist()
-    values, delays = arena.values[:, run].tolist(), arena.delays[:, run].tolist()
+def _wins(world: World, run: int, rules: Rules, epoch: int, rng: Generator) -> Sequence[bool]:
+    prices = (world.competing[:, run] - 1).tolist()
+    values, delays = world.values[:, run].tolist(), world.delays[:, run].tolist()
     due, tree, won = defaultdict[int, list[Lesson]](list), Tree.fresh(), list[bool]()
     now = law(tree, rules)
     lessons = list[Lesson]()

@@ -8,7 +8,7 @@ from argparse import Namespace
 import pytest
 
 from service.commands import bench_regret
-from service.rehearsal import arena, contest, regret_table
+from service.rehearsal import contest, regret_table, worlds
 from service.rehearsal.regret_table import Size
 
 
@@ -27,9 +27,9 @@ def test_the_table_names_every_market_method_and_condition(
     code = bench_regret.run(arguments)
     written = capsys.readouterr().out
 
-    assert all(stage.says in written for stage in arena.STAGES.values())
-    assert all(written.count(method) >= len(arena.STAGES) for method in regret_table.METHODS)
-    assert written.count(" *") >= len(arena.STAGES)
+    assert all(stage.says in written for stage in worlds.STAGES.values())
+    assert all(written.count(method) >= len(worlds.STAGES) for method in regret_table.METHODS)
+    assert written.count(" *") >= len(worlds.STAGES)
     assert "no bound" in written
     assert "Benchmark: the best fixed bid" in written
     assert "Feedback:" in written
@@ -47,11 +47,11 @@ def test_figures_for_a_program_are_whole(
     found = json.loads(capsys.readouterr().out)
 
     assert found["horizons"] == [60, 120]
-    assert list(found["markets"]) == list(arena.STAGES)
+    assert list(found["markets"]) == list(worlds.STAGES)
     for market in found["markets"].values():
         assert list(market["methods"]) == list(regret_table.METHODS)
         assert market["winner"] in market["methods"]
-    ucbid = found["markets"][arena.IID]["methods"][contest.UCBID]
+    ucbid = found["markets"][worlds.IID]["methods"][contest.UCBID]
     assert len(ucbid["regret"]) == len(ucbid["error"]) == 2
     assert ucbid["bounds"][1] > ucbid["bounds"][0] > ucbid["regret"][0] > 0
     assert any("grid" in sentence for sentence in found["broken"])

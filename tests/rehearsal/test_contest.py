@@ -7,26 +7,26 @@ import math
 import numpy as np
 import pytest
 
-from service.rehearsal import arena, contest
-from service.rehearsal.arena import SCALE, STAGES, Arena
+from service.rehearsal import contest, worlds
 from service.rehearsal.regret import uniform_regret, uniform_terms
+from service.rehearsal.worlds import SCALE, STAGES, World
 
 # Simulated apart from this code: 10,000 rounds, 400 runs, uniform prices, mean value 0.3.
 BAND, BAND_ERROR = 58.4, 0.5
 RUNS = 40
 
 
-def ground(market: str, rounds: int, runs: int = RUNS) -> Arena:
+def ground(market: str, rounds: int, runs: int = RUNS) -> World:
     """Seeded runs of one market."""
-    return arena.arena([STAGES[market]], rounds, runs, 5)
+    return worlds.world([STAGES[market]], rounds, runs, 5)
 
 
 @pytest.mark.parametrize(("bidder", "method"), [("ucbid", "ucbid"), ("thompson", "thompson")])
 def test_counting_by_prices_agrees_with_counting_by_expectation(bidder: str, method: str) -> None:
     """Within four standard errors of the figure that takes out the luck of prices as well."""
     rng = np.random.default_rng(1)
-    counted = contest.play(ground(arena.IID, 1000), contest.BIDDERS[bidder](RUNS, 1000, rng))
-    exact = uniform_regret(uniform_terms(method), arena.VALUE, 1000, RUNS, rng)
+    counted = contest.play(ground(worlds.IID, 1000), contest.BIDDERS[bidder](RUNS, 1000, rng))
+    exact = uniform_regret(uniform_terms(method), worlds.VALUE, 1000, RUNS, rng)
 
     error = math.sqrt((counted.var() + exact.var()) / RUNS)
     assert abs(counted.mean() - exact.mean()) <= 4.0 * error
@@ -35,7 +35,7 @@ def test_counting_by_prices_agrees_with_counting_by_expectation(bidder: str, met
 def test_ucbid_lies_in_its_simulated_band() -> None:
     """58.4 ± 0.5 scales at 10,000 rounds, a figure simulated apart from this code."""
     regret = contest.play(
-        ground(arena.IID, 10_000, 20),
+        ground(worlds.IID, 10_000, 20),
         contest.BIDDERS[contest.UCBID](20, 10_000, np.random.default_rng(2)),
     )
 
@@ -48,7 +48,7 @@ def bids_after(hits: list[int], **forgetting: float) -> list[float]:
     rounds = len(hits)
     zeros = np.zeros((rounds, 1), np.int32)
     values = np.asarray(hits, np.int32)[:, np.newaxis] * np.int32(SCALE)
-    always = Arena(zeros + 1, values, zeros, zeros)
+    always = World(zeros + 1, values, zeros, zeros)
     learner = contest.Learner("ucbid", 1, np.random.default_rng(0), **forgetting)  # type: ignore[arg-type]
     bids = [float(learner.bids(0)[0]) / SCALE]
     for turn in range(rounds):
@@ -79,7 +79,7 @@ def test_a_window_knows_its_last_rounds_only() -> None:
 def test_late_values_count_when_they_come() -> None:
     """A value three rounds late leaves the bid at the cap for three rounds more."""
     one = np.ones((6, 1), np.int32)
-    late = Arena(one, 0 * one, 0 * one, 3 * one)
+    late = World(one, 0 * one, 0 * one, 3 * one)
     learner = contest.Learner("mean", 1, np.random.default_rng(0))
     bids = []
     for turn in range(6):
@@ -92,8 +92,8 @@ def test_late_values_count_when_they_come() -> None:
 def test_the_grid_learns_late_what_it_would_have_learnt_at_once() -> None:
     """With values at once it is EXP3 itself; late ones cost, and the best point is still found."""
     rng = np.random.default_rng(4)
-    at_once = contest.play(ground(arena.IID, 3000), contest.Grid(RUNS, 3000, rng))
-    late = contest.play(ground(arena.LATE, 3000), contest.Grid(RUNS, 3000, rng))
+    at_once = contest.play(ground(worlds.IID, 3000), contest.Grid(RUNS, 3000, rng))
+    late = contest.play(ground(worlds.LATE, 3000), contest.Grid(RUNS, 3000, rng))
 
     # A point of the grid by chance loses the mean of (b - 0.3)^2 / 2 a round, which is 0.07.
     assert 0.0 < at_once.mean() < 0.85 * 3000 * 0.07
@@ -106,10 +106,10 @@ def test_baselines_that_explore_bid_the_cap_as_often_as_they_say() -> None:
     first = contest.BIDDERS[contest.EXPLORE](1, 100, rng)
     tries = contest.BIDDERS[contest.EPSILON](4000, 100, rng)
     one = np.ones((1, 1), np.int32)
-    first.learn(0, np.array([True]), Arena(one, 0 * one, 0 * one, 0 * one))
+    first.learn(0, np.array([True]), World(one, 0 * one, 0 * one, 0 * one))
 
     assert [int(first.bids(turn)[0]) for turn in (5, 9, 10, 99)] == [SCALE, SCALE, 0, 0]
     zeros = np.zeros((1, 4000), np.int32)
-    tries.learn(0, np.ones(4000, np.bool_), Arena(zeros + 1, zeros, zeros, zeros))
+    tries.learn(0, np.ones(4000, np.bool_), World(zeros + 1, zeros, zeros, zeros))
     share = float((tries.bids(99) == SCALE).mean())
     assert share == pytest.approx(0.25, abs=4.0 * math.sqrt(0.25 * 0.75 / 4000))

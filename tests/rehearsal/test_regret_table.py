@@ -10,7 +10,7 @@ from collections import Counter
 
 import pytest
 
-from service.rehearsal import arena, contest, theory, tree_contest
+from service.rehearsal import contest, theory, tree_contest, worlds
 from service.rehearsal.regret_table import (
     METHODS,
     QUICK,
@@ -46,7 +46,7 @@ def _coins() -> Table:
 
 @pytest.fixture(name="rest", scope="module")
 def _rest() -> Table:
-    markets = tuple(name for name in arena.STAGES if name not in theory.COINS)
+    markets = tuple(name for name in worlds.STAGES if name not in theory.COINS)
     return tabled(CALM, PLAYED, markets)
 
 
@@ -86,7 +86,7 @@ def test_greed_is_linear_and_optimism_is_not(rest: Table, market: str) -> None:
     last = CALM.horizons[-1]
     greedy = rest.cells[market, contest.GREEDY, last]
     # (1 - v) times what never winning loses a round; v / 4 of it where half the prices are below.
-    never = {arena.IID: 0.7 * 0.045, arena.EVEN: 0.7 * 0.075, arena.SMALL: 0.95 * 0.00125}
+    never = {worlds.IID: 0.7 * 0.045, worlds.EVEN: 0.7 * 0.075, worlds.SMALL: 0.95 * 0.00125}
 
     assert greedy.mean >= never[market] * (last - 1) - 4.0 * greedy.error
     for method in (contest.UCBID, contest.KL, contest.BERNSTEIN, contest.THOMPSON):
@@ -97,28 +97,28 @@ def test_greed_is_linear_and_optimism_is_not(rest: Table, market: str) -> None:
 def test_forgetting_beats_the_plain_form_after_a_change(rest: Table, plain: str) -> None:
     """By more than a quarter at 4,000 rounds, one change at half time, in every form."""
     ways = {contest.UCBID: contest.DISCOUNTED_UCBID, contest.KL: contest.DISCOUNTED_KL}
-    kept = rest.means(arena.ABRUPT, plain)[-1]
+    kept = rest.means(worlds.ABRUPT, plain)[-1]
 
-    assert rest.means(arena.ABRUPT, ways[plain])[-1] < 0.75 * kept
+    assert rest.means(worlds.ABRUPT, ways[plain])[-1] < 0.75 * kept
     # And where nothing changes it costs, which the table shows as well.
-    assert rest.means(arena.IID, ways[plain])[-1] > rest.means(arena.IID, plain)[-1]
+    assert rest.means(worlds.IID, ways[plain])[-1] > rest.means(worlds.IID, plain)[-1]
 
 
 def test_a_baseline_that_wins_is_named(rest: Table) -> None:
     """Against one price just above the value, whoever stops bidding first loses least."""
-    assert rest.winner(arena.HOSTILE) == contest.GREEDY
-    assert rest.markets() == [name for name in arena.STAGES if name not in theory.COINS]
+    assert rest.winner(worlds.HOSTILE) == contest.GREEDY
+    assert rest.markets() == [name for name in worlds.STAGES if name not in theory.COINS]
 
 
 def test_what_is_broken_is_said() -> None:
     """A bound passed, a grid as good as a tree, and forgetting in vain are one sentence each."""
     bad = Table(Size((1000,), 2, 2))
     bad.cells = {
-        (arena.IID, contest.UCBID, 1000): Cell(1e6, 1.0),
-        (arena.COIN_WIDE, contest.EXP3, 1000): Cell(100.0, 1.0),
-        (arena.COIN_WIDE, tree_contest.TREE, 1000): Cell(40.0, 1.0),
-        (arena.ABRUPT, contest.KL, 1000): Cell(50.0, 1.0),
-        (arena.ABRUPT, contest.WINDOWED_KL, 1000): Cell(50.0, 1.0),
+        (worlds.IID, contest.UCBID, 1000): Cell(1e6, 1.0),
+        (worlds.COIN_WIDE, contest.EXP3, 1000): Cell(100.0, 1.0),
+        (worlds.COIN_WIDE, tree_contest.TREE, 1000): Cell(40.0, 1.0),
+        (worlds.ABRUPT, contest.KL, 1000): Cell(50.0, 1.0),
+        (worlds.ABRUPT, contest.WINDOWED_KL, 1000): Cell(50.0, 1.0),
     }
 
     said = bad.broken()
@@ -134,14 +134,14 @@ def test_the_jobs_are_every_cell_once() -> None:
     cells = Counter((market, job.method, job.rounds) for job in todo for market in job.markets)
 
     assert set(cells.values()) == {1}
-    assert len(cells) == len(METHODS) * len(arena.STAGES) * len(QUICK.horizons)
+    assert len(cells) == len(METHODS) * len(worlds.STAGES) * len(QUICK.horizons)
     assert [job.rounds for job in todo] == sorted((job.rounds for job in todo), reverse=True)
 
 
 @pytest.mark.parametrize("method", [contest.THOMPSON, contest.EXP3, tree_contest.DOUBLING])
 def test_a_job_comes_out_the_same_every_time(method: str) -> None:
     """Every draw hangs on the seed, so a table can be printed again."""
-    job = Job(method, (arena.COIN_WIDE,), 300, 2, SEED)
+    job = Job(method, (worlds.COIN_WIDE,), 300, 2, SEED)
     one, again, other = (played(each)[0] for each in (job, job, Job(*_fields(job), seed=8)))
 
     assert one.tolist() == again.tolist()

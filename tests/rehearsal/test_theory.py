@@ -6,10 +6,10 @@ import math
 
 import pytest
 
-from service.rehearsal import arena, contest, theory, tree_contest
+from service.rehearsal import contest, theory, tree_contest, worlds
 from service.rehearsal.regret_table import METHODS
 
-MOVING = (arena.DRIFT, arena.ABRUPT, arena.LATE)
+MOVING = (worlds.DRIFT, worlds.ABRUPT, worlds.LATE)
 
 
 @pytest.mark.parametrize("market", MOVING)
@@ -21,7 +21,7 @@ def test_nothing_is_claimed_for_what_moves_or_comes_late(method: str, market: st
 
 
 @pytest.mark.parametrize("method", METHODS)
-@pytest.mark.parametrize("market", sorted(set(arena.STAGES) - set(MOVING)))
+@pytest.mark.parametrize("market", sorted(set(worlds.STAGES) - set(MOVING)))
 def test_a_bound_comes_with_its_growth_and_none_without(method: str, market: str) -> None:
     """Growth without a bound is only that which is a lower bound."""
     bound, growth = theory.bound(method, market, 1000), theory.growth(method, market)
@@ -39,19 +39,19 @@ def test_bounds_are_the_published_figures() -> None:
     twice 2 sqrt((e-1) 11 T ln 11) for EXP3.
     """
     at = 10_000
-    assert theory.bound(contest.UCBID, arena.IID, at) == pytest.approx(1489.768876, abs=1e-6)
-    assert theory.bound(contest.UCBID, arena.HOSTILE, at) == pytest.approx(1489.768876, abs=1e-6)
-    narrow = arena.COIN_NARROW
+    assert theory.bound(contest.UCBID, worlds.IID, at) == pytest.approx(1489.768876, abs=1e-6)
+    assert theory.bound(contest.UCBID, worlds.HOSTILE, at) == pytest.approx(1489.768876, abs=1e-6)
+    narrow = worlds.COIN_NARROW
     tree = theory.bound(tree_contest.TREE, narrow, at)
     assert tree == pytest.approx(1051.304354, abs=1e-6)
     wins = theory.bound(tree_contest.TREE_WINS, narrow, at)
     assert wins == pytest.approx(743.3844378, abs=1e-7)
     grid = 4.0 * math.sqrt((math.e - 1.0) * 11 * at * math.log(11))
-    assert theory.bound(contest.EXP3, arena.IID, at) == pytest.approx(grid, rel=1e-12)
-    assert theory.bound(contest.KL, arena.IID, at) == theory.ORDER_ONLY
+    assert theory.bound(contest.EXP3, worlds.IID, at) == pytest.approx(grid, rel=1e-12)
+    assert theory.bound(contest.KL, worlds.IID, at) == theory.ORDER_ONLY
 
 
-@pytest.mark.parametrize("market", [arena.COIN_WIDE, arena.COIN_NARROW, arena.SMALL])
+@pytest.mark.parametrize("market", [worlds.COIN_WIDE, worlds.COIN_NARROW, worlds.SMALL])
 def test_the_grid_has_no_bound_where_the_best_bid_is_not_on_it(market: str) -> None:
     """Its own bound is against the best bid of the grid."""
     assert theory.bound(contest.EXP3, market, 1000) == theory.NO_BOUND

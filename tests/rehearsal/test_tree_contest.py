@@ -6,10 +6,10 @@ import numpy as np
 import pytest
 
 from service.learner import exptree_bounds as bounds
-from service.rehearsal import arena, tree_contest
-from service.rehearsal.arena import SCALE, STAGES, Arena
+from service.rehearsal import tree_contest, worlds
+from service.rehearsal.worlds import SCALE, STAGES, World
 
-COIN = STAGES[arena.COIN_WIDE]
+COIN = STAGES[worlds.COIN_WIDE]
 
 
 @pytest.mark.parametrize("method", tree_contest.TREES)
@@ -30,9 +30,9 @@ def test_a_tree_is_told_the_rounds_only_where_its_name_says_so(method: str) -> N
 @pytest.mark.parametrize("method", tree_contest.TREES)
 def test_a_tree_loses_less_than_chance_even_when_values_are_late(method: str) -> None:
     """A uniform bid loses the integral of (b - 0.3)^2 / 2 a round, 0.0617 scales."""
-    late = STAGES[arena.LATE]
+    late = STAGES[worlds.LATE]
     rng = np.random.default_rng(6)
-    regret = tree_contest.play_tree(arena.arena([late], 1500, 2, 5), method, late, rng)
+    regret = tree_contest.play_tree(worlds.world([late], 1500, 2, 5), method, late, rng)
 
     assert regret.shape == (2,)
     assert 0.0 < regret.mean() < 0.85 * 1500 * 0.0617
@@ -43,9 +43,9 @@ def test_values_that_never_come_teach_nothing() -> None:
     rounds = 600
     one = np.ones((rounds, 1), np.int32)
     price, worth = one * (SCALE // 2) + 1, one * SCALE
-    told = Arena(price, worth, worth - price, 0 * one)
-    kept = Arena(price, worth, worth - price, one * rounds)
-    stage = STAGES[arena.IID]
+    told = World(price, worth, worth - price, 0 * one)
+    kept = World(price, worth, worth - price, one * rounds)
+    stage = STAGES[worlds.IID]
     regrets = [
         tree_contest.play_tree(each, tree_contest.TREE_WINS, stage, np.random.default_rng(8))
         for each in (told, kept)

@@ -73,7 +73,7 @@ class Stage:
 
 
 @dataclass(frozen=True, slots=True)
-class Arena:
+class World:
     """
     Many runs (columns) of one length (rows), in nanos.
 
@@ -95,8 +95,8 @@ class Arena:
         return double(np.maximum(net, 0) - np.where(won, net, 0))
 
 
-def arena(stages: Sequence[Stage], rounds: int, runs: int, seed: int) -> Arena:
-    """So many runs of each market, one market after the other; run k is the same in any arena."""
+def world(stages: Sequence[Stage], rounds: int, runs: int, seed: int) -> World:
+    """So many runs of each market, one market after the other; run k is the same in any world."""
     drawn = [
         stage.draw(np.random.default_rng([seed, rounds, *stage.name.encode(), run]), rounds)
         for stage in stages
@@ -106,7 +106,7 @@ def arena(stages: Sequence[Stage], rounds: int, runs: int, seed: int) -> Arena:
     worth = np.stack([np.rint(one.worth * SCALE) for one in drawn], axis=1).astype(np.int32)
     hits = np.stack([one.hits for one in drawn], axis=1)
     values = np.where(hits, np.int32(SCALE), np.int32(0))
-    return Arena(prices + 1, values, worth - prices, np.stack([d.delays for d in drawn], axis=1))
+    return World(prices + 1, values, worth - prices, np.stack([d.delays for d in drawn], axis=1))
 
 
 def _independent(
