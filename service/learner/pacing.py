@@ -25,15 +25,20 @@ Form = Literal["euclidean", "entropy", "shifted"]
 UNITS = 2**40  # One, in fixed point.
 FORM = 1
 FORMS: tuple[Form, ...] = ("euclidean", "entropy", "shifted")
+# Of the shifted form: fast enough to mend a bad first multiplier within 10,000 rounds, and slow
+# enough that what it swings by costs about half a per cent (both measured).
+STEP = UNITS // 50
 # The entropy form never reaches 0, and the lower it drifts the longer it takes to come back.
 # Here the bid is within 1.6 % of the value.
 ENTROPY_LEAST = UNITS // 64
 TOP_MAX = 2**20 * UNITS
 STEP_GROWTH = 8  # How much larger than the last step the first may be.
 HALVINGS = 60
+STEADY = 6
+MEMORY_WINS = 256  # Wins that the mean price remembers.
 
-# name, form, kind, step, scale, top, horizon, level, rounds
-_STATE = struct.Struct(">3sBBQQQQqQ")
+# name, form, kind, step, scale, top, horizon, level, rounds, price
+_STATE = struct.Struct(">3sBBQQQQqQQ")
 _SUM = struct.Struct(">I")
 _NAME = b"pac"
 
@@ -53,11 +58,12 @@ class Rules:
             and dual mirror descent. "entropy": it is ln mu, dual mirror descent with h = mu ln
             mu (Balseiro, Lu, Mirrokni, "The Best of Many Worlds", Operations Research 71(1),
             2023; ICML 2020). "shifted": it is ln(1 + mu), the same with 1 + mu in place of mu
-            in h; it reaches 0, and a step moves every bid by the same factor. The last choice
-            is our own.
+            in h; it reaches 0, and a step moves every bid by the same factor. Here the scale
+            follows the mean price of late wins, so that a pace comes to rest after about 1 / (2
+            step) wins whatever prices are. This form and its scale are our own.
         step: How far one scale of money too much moves the level.
-        scale: Money that counts as one, in nanos: the guess of a value, or a usual price. After
-            about (1 + mu) / (2 step) wins at prices of one scale, a euclidean pace is there.
+        scale: Money that counts as one, in nanos: the guess of a value, or a usual price. Of
+            the shifted form it is the least.
         top: Largest multiplier.
         horizon: Rounds remembered by the step, which falls like the root of discounted rounds
             down to `step`; 0 for a step that stays the same.
@@ -76,6 +82,23 @@ class Rules:
 
 
 @dataclass(frozen=True, slots=True)
+class Seen:
+    """
+    What one entry of the stream says.
+
+    Args:
+        rounds: Rounds it ends: 1 for an outcome, more for a tick with its passes under the
+            floor, 0 for a late win whose round a tick has counted.
+        wins: Those of them that were won, or a late win.
+        spent: Nanos paid for these.
+    """
+
+    rounds: int
+    wins: int = 0
+    spent: int = 0
+
+
+@dataclass(frozen=True, slots=True)
 class Pace:
     """
     Where the multiplier stands.
@@ -83,15 +106,17 @@ class Pace:
     Args:
         level: In units of 2^-40; what it means depends on the form.
         rounds: Rounds counted; discounted where the rules have a horizon.
+        price: Mean price of the wins of late, in nanos; a guess at first.
     """
 
     level: int
     rounds: int = 0
+    price: int = 0
 
     @staticmethod
-    def fresh(rules: Rules, multiplier: int = 0) -> Pace:
-        """The pace before the first entry, at a guess of the multiplier."""
-        return Pace(level_of(multiplier, rules))
+    def fresh(rules: Rules, multiplier: int = 0, price: int = 0) -> Pace:
+        """The pace before the first entry, at a guess of the multiplier and of a usual price."""
+        return Pace(level_of(multiplier, rules), 0, price)
 
     def multiplier(self, rules: Rules) -> int:
         """The multiplier mu in units of 2^-40, for snapshot and bid."""
@@ -103,7 +128,7 @@ class Pace:
 
     def to_bytes(self, rules: Rules) -> bytes:
         """Equal paces of equal rules give equal bytes."""
-        body = _STATE.pack(*_head(rules), self.level, self.rounds)
+        body = _STATE.pack(*_head(rules), self.level, self.rounds, self.price)
         return body + _SUM.pack(zlib.crc32(body))
 
     @staticmethod
@@ -119,29 +144,38 @@ class Pace:
             raise UnreadablePace("not the form of pace this release writes")
         if _SUM.pack(zlib.crc32(body)) != tail:
             raise UnreadablePace("damaged")
-        *head, level, rounds = _STATE.unpack(body)
+        *head, level, rounds, price = _STATE.unpack(body)
         if tuple(head) != _head(rules):
             raise UnreadablePace("a pace of other rules")
-        return Pace(level, rounds)
+        return Pace(level, rounds, price)
 
 
-def learn(pace: Pace, rounds: int, spent: int, due: int, rules: Rules) -> Pace:
+def learn(pace: Pace, seen: Seen, due: int, rules: Rules, late: int = 0) -> Pace:
     """
     Count one entry: level + step x (spent - due) / scale, kept between the ends.
 
+    A pace comes to rest in about scale / (2 step) of spend. Where that is less than what is
+    spent before prices are known, it would correct the same error again and again and swing;
+    the shifted form then takes three times that spend instead.
+
     Args:
         pace: So far.
-        rounds: Rounds the entry ends: 1 for an outcome, more for a tick, 0 for a late win whose
-            round a tick has counted.
-        spent: Nanos it says were paid.
+        seen: What the entry says.
         due: Nanos that were to be spent in these rounds or this time; rate x rounds, or what
             a spend profile says.
         rules: How it moves.
+        late: Nanos due at this time of day while a price is on its way.
     """
-    counted = _counted(pace.rounds, rounds, rules.horizon)
-    moved = pace.level + _step(counted, rules) * (spent - due) // rules.scale
+    counted = _counted(pace.rounds, seen.rounds, rules.horizon)
+    price = (MEMORY_WINS * pace.price + seen.spent) // (MEMORY_WINS + seen.wins)
+    step, scale = _step(counted, rules), rules.scale
+    if rules.form == "shifted":
+        # The mean price before this entry: one that holds its own prices shrinks dear entries,
+        # and money runs out before the end.
+        scale = max(scale, pace.price, STEADY * step * late >> 40)
     low, high = rules.ends
-    return Pace(min(max(moved, low), high), counted)
+    moved = pace.level + step * (seen.spent - due) // scale
+    return Pace(min(max(moved, low), high), counted, price)
 
 
 def paced(value: ArrayLike, multiplier: int) -> Numbers:
@@ -202,6 +236,16 @@ def first_by_forecast(unpaced: float, rate: float) -> int:
     if unpaced <= rate:
         return 0
     return round(min(math.sqrt(unpaced / rate) - 1.0, TOP_MAX / UNITS) * UNITS)
+
+
+def usual_price(value: float, multiplier: int) -> int:
+    """A guess of the mean price paid, in nanos: half the bid, as where prices are uniform."""
+    return int(float(paced(value, multiplier)) / 2.0)
+
+
+def carried(pace: Pace, before: Rules, after: Rules) -> Pace:
+    """The same multiplier under other rules, as after an edit of the line item."""
+    return Pace(level_of(pace.multiplier(before), after), pace.rounds, pace.price)
 
 
 def units(number: float) -> int:

@@ -17,7 +17,17 @@ from hypothesis import given
 from hypothesis import strategies as some
 
 from service.learner import pacing
-from service.learner.pacing import FORMS, UNITS, Form, Pace, Rules, UnreadablePace, learn, units
+from service.learner.pacing import (
+    FORMS,
+    UNITS,
+    Form,
+    Pace,
+    Rules,
+    Seen,
+    UnreadablePace,
+    learn,
+    units,
+)
 
 SCALE = 10**9
 GUR = Rules("euclidean", units(0.1), SCALE, top=9 * UNITS)
@@ -31,6 +41,11 @@ def money(share: float) -> int:
 def rules(form: Form, step: float = 0.05, **more: int) -> Rules:
     """Rules of one form, in plain numbers."""
     return Rules(form, units(step), SCALE, **more)
+
+
+def won(price: int) -> Seen:
+    """One round, won where a price was paid."""
+    return Seen(1, int(price > 0), price)
 
 
 @pytest.mark.parametrize("form", FORMS)
@@ -56,7 +71,7 @@ def test_check_values_of_adaptive_pacing() -> None:
         assert bids == pytest.approx(bid, rel=1e-9)
         price = money(rival) if pacing.within(money(bids), left) >= money(rival) else 0
         left -= price
-        pace = learn(pace, 1, price, money(0.1), GUR)
+        pace = learn(pace, won(price), money(0.1), GUR)
         assert pace.multiplier(GUR) / UNITS == pytest.approx(after, rel=1e-10)
     assert left == money(1.05)
     assert pace.rounds == 6
@@ -66,25 +81,42 @@ def test_check_values_of_the_entropy_form() -> None:
     """Three rounds from 1 with rate 0.1 and step 0.1, to nine digits."""
     form, pace = rules("entropy", 0.1), Pace.fresh(rules("entropy", 0.1), UNITS)
     for price, after in [(0.4, 1.030454534), (0.05, 1.025315121), (0.0, 1.015113065)]:
-        pace = learn(pace, 1, money(price), money(0.1), form)
+        pace = learn(pace, won(money(price)), money(0.1), form)
         assert pace.multiplier(form) / UNITS == pytest.approx(after, rel=1e-9)
 
 
 def test_the_shifted_form_moves_every_bid_by_one_factor() -> None:
-    """1 + mu grows by exp(step x overspend), whatever mu is, and mu comes down to 0."""
+    """1 + mu grows by exp(step x overspend / scale), whatever mu is, and mu comes down to 0."""
     form = rules("shifted", 0.1)
     for start in (0.0, 1.0, 30.0):
-        pace = learn(Pace.fresh(form, units(start)), 1, money(0.4), money(0.1), form)
+        pace = learn(Pace.fresh(form, units(start)), won(money(0.4)), money(0.1), form)
         grown = (1.0 + start) * math.exp(0.03)
         assert 1.0 + pace.multiplier(form) / UNITS == pytest.approx(grown, rel=1e-10)
-    assert learn(Pace.fresh(form), 9, 0, money(0.9), form).multiplier(form) == 0
+    assert learn(Pace.fresh(form), Seen(9), money(0.9), form).multiplier(form) == 0
+
+
+def test_the_scale_of_the_shifted_form_follows_prices() -> None:
+    """A market a thousand times cheaper is paced alike; one that gets dearer, soon."""
+    levels = []
+    for unit in (SCALE, SCALE // 1000):
+        form = Rules("shifted", units(0.1), 1)
+        pace = Pace.fresh(form, UNITS, unit // 2)
+        for price in (5, 3, 0, 9):
+            pace = learn(pace, won(price * unit // 10), unit // 4, form)
+        levels.append(pace.level / UNITS)
+    assert levels[0] == pytest.approx(levels[1], rel=1e-6)
+    dear = Pace.fresh(form, UNITS, 10)
+    for _ in range(1500):
+        dear = learn(dear, Seen(1, 1, 4000), 4000, form)
+    assert dear.price == pytest.approx(4000, rel=0.1)
+    assert pacing.usual_price(SCALE, UNITS) == SCALE // 4
 
 
 def test_check_values_of_a_rate_that_changes() -> None:
     """Rates .2, .1, .3, prices .3, 0, .3, step .2, from .5: then .52, .5, .5."""
     form, pace = rules("euclidean", 0.2), Pace.fresh(rules("euclidean", 0.2), units(0.5))
     for due, price, after in [(0.2, 0.3, 0.52), (0.1, 0.0, 0.5), (0.3, 0.3, 0.5)]:
-        pace = learn(pace, 1, money(price), money(due), form)
+        pace = learn(pace, won(money(price)), money(due), form)
         assert pace.multiplier(form) / UNITS == pytest.approx(after, rel=1e-10)
 
 
@@ -130,7 +162,7 @@ def test_a_pace_stays_between_its_ends_and_survives_its_bytes(
     moves = rules(form, top=50 * UNITS, horizon=1000)
     pace = Pace.fresh(moves, UNITS)
     for rounds, spent in entries:
-        pace = learn(pace, rounds, spent, rounds * money(0.1), moves)
+        pace = learn(pace, Seen(rounds, min(rounds, 9), spent), rounds * money(0.1), moves)
         low, high = moves.ends
         assert low <= pace.level <= high
         assert 0 <= pace.multiplier(moves) <= 50 * UNITS * (1 + 1e-9)
@@ -140,7 +172,7 @@ def test_a_pace_stays_between_its_ends_and_survives_its_bytes(
 
 def test_the_bytes_of_other_rules_or_damaged_ones_are_refused() -> None:
     """A level means something only under its rules."""
-    pace = Pace(units(0.3), 17)
+    pace = Pace(units(0.3), 17, 2**60)
     state = pace.to_bytes(GUR)
     others = [
         *(replace(GUR, form="shifted"), replace(GUR, step=GUR.step + 1)),
@@ -153,6 +185,27 @@ def test_the_bytes_of_other_rules_or_damaged_ones_are_refused() -> None:
     for wrong in (*spoilt, state[:-1], b"", b"{}", state + b"\0"):
         with pytest.raises(UnreadablePace):
             Pace.from_bytes(wrong, GUR)
+
+
+def test_an_edit_carries_the_multiplier_over() -> None:
+    """Bids go on where they were, whatever form and step come next."""
+    pace = Pace(units(0.7), 40)
+    for form in FORMS:
+        after = pacing.carried(pace, GUR, rules(form, 0.3))
+        assert after.multiplier(rules(form, 0.3)) / UNITS == pytest.approx(0.7, rel=1e-11)
+        assert after.rounds == 40
+
+
+def test_the_scale_grows_with_the_money_on_its_way() -> None:
+    """Six steps of it, where that is more than a price: 6 x 0.05 x 100 is 30 scales."""
+    form = rules("shifted")
+    start = Pace.fresh(form, UNITS, SCALE)
+    moves = [
+        learn(start, won(SCALE), 0, form, late).level - start.level
+        for late in (0, 3 * SCALE, 100 * SCALE)
+    ]
+    assert moves[0] == moves[1] == units(0.05)
+    assert moves[2] * 30 == pytest.approx(moves[0], rel=1e-9)
 
 
 def test_late_outcomes_cost_a_shift_and_no_more() -> None:
@@ -168,7 +221,7 @@ def test_the_step_falls_to_its_last_and_forgets_what_is_old() -> None:
     moves = rules("euclidean", 0.01, horizon=10_000)
     pace, steps = Pace.fresh(moves, UNITS), []
     for _ in range(40_000):
-        after = learn(pace, 1, money(0.1), 0, moves)
+        after = learn(pace, won(money(0.1)), 0, moves)
         steps.append(after.level - pace.level)
         pace = Pace(UNITS, after.rounds)
     assert steps[0] == pytest.approx(8 * units(0.001), rel=1e-6)
@@ -203,7 +256,7 @@ def _spend(
         bid = float(pacing.paced(value, pace.multiplier(moves)))
         paid.append(money(rival) if bid >= rival else 0)
         due = money(0.1) if ticks_first or at >= delay else 0
-        pace = learn(pace, 1, paid[-1 - delay], due, moves)
+        pace = learn(pace, won(paid[-1 - delay]), due, moves)
     return sum(paid) / SCALE
 
 
@@ -215,8 +268,8 @@ def _wins_above_the_floor(form: Form, passes_count: bool) -> int:
     for at, rival in enumerate(rng.random(6000)):
         floor = 0.6 if at >= 2000 else 0.0
         bid = float(pacing.paced(0.9, pace.multiplier(moves)))
-        won = bid >= max(rival, floor)
-        wins += at >= 2000 and won
+        price = money(max(rival, floor)) if bid >= max(rival, floor) else 0
+        wins += at >= 2000 and price > 0
         if bid >= floor or passes_count:
-            pace = learn(pace, 1, money(max(rival, floor)) if won else 0, money(0.05), moves)
+            pace = learn(pace, won(price), money(0.05), moves)
     return wins
