@@ -76,6 +76,12 @@ def _bench_learn() -> ModuleType:
     return bench_learn
 
 
+def _bench_pacing() -> ModuleType:
+    from service.commands import bench_pacing
+
+    return bench_pacing
+
+
 COMMANDS: dict[str, tuple[str, Load]] = {
     "serve": ("serve bids, outcomes and operators over HTTP", _serve),
     "demo": ("play an invented advertiser's auctions against a real server", _demo),
@@ -89,6 +95,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "rare": ("see in money what each method earns on rare values", _bench_rare),
     "delay": ("see in money what late values cost", _bench_delay),
     "learn": ("time the folding of each method's lessons", _bench_learn),
+    "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
 }
 
 
