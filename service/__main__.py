@@ -82,6 +82,12 @@ def _bench_pacing() -> ModuleType:
     return bench_pacing
 
 
+def _bench_curve() -> ModuleType:
+    from service.commands import bench_curve
+
+    return bench_curve
+
+
 COMMANDS: dict[str, tuple[str, Load]] = {
     "serve": ("serve bids, outcomes and operators over HTTP", _serve),
     "demo": ("play an invented advertiser's auctions against a real server", _demo),
@@ -96,6 +102,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "delay": ("see in money what late values cost", _bench_delay),
     "learn": ("time the folding of each method's lessons", _bench_learn),
     "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
+    "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
 }
 
 

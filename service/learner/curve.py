@@ -96,8 +96,9 @@ def _empirical(columns: list[Numbers], level: float) -> Drawn:
 def _kaplan_meier(columns: list[Numbers], level: float) -> Drawn:
     product = kaplan_meier.kaplan_meier(columns[SEEN], columns[ABOVE])
     low, high = kaplan_meier.log_log_interval(product, level)
-    # Beyond the highest bid that was ever at risk nothing was looked at.
-    unknown = product.at_risk <= 0.0
+    # Beyond the highest bid that was ever at risk nothing was looked at; but once all have won,
+    # higher bids win too.
+    unknown = (product.at_risk <= 0.0) & (product.share > 0.0)
     share, low, high = (np.where(unknown, np.nan, 1.0 - one) for one in (product.share, high, low))
     return share, low, high, "kaplan-meier", "Greenwood, log-log, each price on its own"
 
@@ -108,7 +109,7 @@ def _reverse(columns: list[Numbers], level: float) -> Drawn:
     below = np.append(0.0, columns[BELOW][:-1])
     product = kaplan_meier.reverse_kaplan_meier(columns[SEEN], below)
     low, high = kaplan_meier.log_log_interval(_mirrored(product), level)
-    looked_at = np.cumsum(columns[SEEN] + columns[BELOW]) > 0.0
+    looked_at = (np.cumsum(columns[SEEN] + columns[BELOW]) > 0.0) | (product.share <= 0.0)
     share, low, high = (
         np.where(looked_at, one, np.nan) for one in (product.share, low[::-1], high[::-1])
     )

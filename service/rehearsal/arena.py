@@ -15,9 +15,10 @@ from numpy.typing import NDArray
 
 from service.learner import curve_counts, shading
 from service.learner.arrays import Numbers, double
-from service.learner.curve import curve
-from service.learner.curve_counts import KEPT_WHOLE, LOST, WON, Counts, Feed, Outcome
+from service.learner.curve_counts import KEPT_WHOLE, Counts, Feed
+from service.learner.offers import TRIED, first_price
 from service.learner.partition import Ticks
+from service.rehearsal.telling import outcomes
 
 Nanos = NDArray[np.int64]
 Format = Literal["first", "second"]
@@ -54,54 +55,29 @@ class Arena:
     feed: Feed = "always"
     epoch: int = 200
     kept: int = KEPT_WHOLE * 95 // 100
-    grid: int = 20
+    grid: int = TRIED
 
     def play(self, rng: Generator, auctions: int) -> Play:
         """Play so many auctions, rounded down to whole epochs."""
         learnt = [Counts(Ticks(VALUE_TOP, TICK)) for _ in range(self.bidders)]
         played = []
-        for number in range(auctions // self.epoch):
+        for _ in range(auctions // self.epoch):
             values = rng.integers(0, VALUE_TOP, (self.epoch, self.bidders), endpoint=True)
-            bids = self._bids(learnt, values, number * self.epoch)
+            bids = self._bids(learnt, values)
             least = _least_to_win(bids, rng)
             played.append((values, bids, self._paid(bids, least)))
             for bidder, counts in enumerate(learnt):
-                told = self._outcomes(bids[:, bidder], least[:, bidder])
+                told = outcomes(bids[:, bidder], least[:, bidder], self.feed)
                 kept = curve_counts.discount(counts, self.kept)
                 learnt[bidder] = curve_counts.add(kept, told)
         return Play(*(np.concatenate(parts) for parts in zip(*played, strict=True)))
 
-    def _bids(self, learnt: list[Counts], values: Nanos, before: int) -> Nanos:
+    def _bids(self, learnt: list[Counts], values: Nanos) -> Nanos:
         if self.format == "second":
             return values
         columns = zip(learnt, values.T, strict=True)
-        return np.stack([self._first(counts, of, before) for counts, of in columns], axis=1)
-
-    def _first(self, counts: Counts, values: Nanos, before: int) -> Nanos:
-        cost, chance = self._chances(counts, before)
-        choice = shading.best(cost, chance, values)
-        return np.where(choice.place >= 0, cost[choice.place], 0.0).astype(np.int64)
-
-    def _chances(self, counts: Counts, before: int) -> tuple[Numbers, Numbers]:
-        prices = curve_counts.prices(counts.ticks)
-        if self.feed != "never":
-            # Optimism is needed only where nothing was seen; what was seen is looked at as it is.
-            one = curve(counts, shading.level_at(before + 1))
-            return prices, np.where(one.identified, one.share, one.high)
-        at = shading.exploring_places(counts.ticks.cells, self.grid)
-        wins, losses = (counts.column(which)[at] for which in (WON, LOST))
-        rounds = max(counts.auctions, 1.0)
-        return prices[at], shading.rising_upper(wins, wins + losses, rounds)
-
-    def _outcomes(self, bids: Nanos, least: Nanos) -> list[Outcome]:
-        feed = self.feed
-        pairs = zip(bids.tolist(), least.tolist(), strict=True)
-        told = {"always": (True, True), "on_win": (False, True), "on_loss": (True, False)}
-        lost_too, won_too = told.get(feed, (False, False))
-        return [
-            Outcome(bid, m <= bid, m if (won_too if m <= bid else lost_too) else None, feed)
-            for bid, m in pairs
-        ]
+        bids = [first_price(one, self.feed, double(of), self.grid) for one, of in columns]
+        return np.stack(bids, axis=1).astype(np.int64)
 
     def _paid(self, bids: Nanos, least: Nanos) -> Nanos:
         price = bids if self.format == "first" else np.sort(bids, axis=1)[:, [-2]]

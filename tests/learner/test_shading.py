@@ -7,6 +7,7 @@ solved from the first-order condition. Numbers were computed apart from this cod
 from __future__ import annotations
 
 from collections.abc import Callable
+from functools import cache
 
 import numpy as np
 import pytest
@@ -151,6 +152,7 @@ def test_untried_bids_are_climbed_from_below() -> None:
     assert sorted(set(order)) == list(range(len(firsts)))
 
 
+@cache
 def _share_earned(law: str, way: str, seed: int, rounds: int = 3000) -> tuple[float, float]:
     # Of the best fixed bid in hindsight, and the mean of what was paid over that bid.
     rng = np.random.default_rng(seed)
