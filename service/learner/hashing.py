@@ -1,0 +1,117 @@
+"""Named features become a short vector by a keyed, documented hash, apart from who learns of it.
+
+Weinberger, Dasgupta, Langford, Smola, Attenberg, "Feature hashing for large scale multitask
+learning", ICML 2009: place i holds the sum of sign(j) x_j over tokens j hashed to i. Inner
+products are right on average over keys, with variance 4 / d for two features of 1 each.
+
+The hash: BLAKE2b of 8 bytes under the key, person "features", of the kind (one letter), the
+UTF-8 name, a zero byte, and the UTF-8 value of a category. The first byte modulo 64 is the
+place, the lowest bit of the second the sign. Nothing is listed anywhere, so a category never
+seen before and a feature that is missing are ordinary: the one brings a token, the other none.
+"""
+
+from __future__ import annotations
+
+import math
+import struct
+from collections.abc import Callable, Iterable, Mapping
+from hashlib import blake2b
+
+import numpy as np
+
+from service.learner.arrays import Numbers, double
+
+PLACES = 64
+SIZES = (16, 32, 64)
+# Weights are whole parts, so that equal features give equal bytes in a ticket and in the stream.
+PARTS = 256
+WEIGHT_MAX = 2**15 - 1
+NUMBER_MAX = 20.0  # Of the logarithm; a larger number says no more than this one.
+
+Feature = str | float | bool
+Token = tuple[bytes, float]
+Hashed = tuple[tuple[int, int], ...]
+
+_ENTRY = struct.Struct(">Bh")
+
+
+class BadFeatures(ValueError):
+    """A number that is not finite, or bytes that are no hashed features."""
+
+
+def hashed(features: Mapping[str, Feature], key: bytes) -> Hashed:
+    """
+    Place and weight of what is not nought, ascending by place; weights in parts of 2^-8.
+
+    Args:
+        features: Text and true or false are categories and weigh 1. A number x weighs
+            sign(x) ln(1 + |x|), so that hours and thousands fit one vector; numbers that are
+            really names belong into text.
+        key: At most 64 bytes; whoever knows it can aim two categories at one place.
+
+    Raises:
+        BadFeatures: A number is not finite.
+    """
+    return scattered(tokens(features), lambda token: _aimed(token, key))
+
+
+def tokens(features: Mapping[str, Feature]) -> list[Token]:
+    """The constant, which every impression has, and one token for each feature."""
+    return [(b"c", 1.0), *(_token(name, value) for name, value in sorted(features.items()))]
+
+
+def _token(name: str, value: Feature) -> Token:
+    head = name.encode() + b"\0"
+    if isinstance(value, bool):
+        return b"b" + head + (b"1" if value else b"0"), 1.0
+    if isinstance(value, str):
+        return b"t" + head + value.encode(), 1.0
+    if not math.isfinite(value):
+        raise BadFeatures("a number that is not finite")
+    return b"n" + head, math.copysign(min(math.log1p(abs(value)), NUMBER_MAX), value)
+
+
+def _aimed(token: bytes, key: bytes) -> tuple[int, int]:
+    digest = blake2b(token, digest_size=8, key=key, person=b"features").digest()
+    return digest[0] % PLACES, 1 if digest[1] & 1 else -1
+
+
+def scattered(weighed: Iterable[Token], aim: Callable[[bytes], tuple[int, int]]) -> Hashed:
+    """Add the signed weight of each token at its place."""
+    sums: dict[int, int] = {}
+    for token, weight in weighed:
+        place, sign = aim(token)
+        sums[place] = sums.get(place, 0) + sign * round(weight * PARTS)
+    cut = ((place, max(-WEIGHT_MAX, min(sums[place], WEIGHT_MAX))) for place in sorted(sums))
+    return tuple((place, weight) for place, weight in cut if weight)
+
+
+def dense(features: Hashed, size: int) -> Numbers:
+    """As a vector of 16, 32 or 64 numbers; a smaller one takes each place modulo its size."""
+    vector = np.zeros(size)
+    for place, weight in features:
+        vector[place % size] += weight / PARTS
+    return double(vector)
+
+
+def to_bytes(features: Hashed) -> bytes:
+    """Three bytes for each place that is not nought."""
+    return b"".join(_ENTRY.pack(place, weight) for place, weight in features)
+
+
+def from_bytes(packed: bytes) -> Hashed:
+    """
+    Read what `to_bytes` wrote.
+
+    Raises:
+        BadFeatures: Not whole, or places out of order or out of range.
+    """
+    if len(packed) % _ENTRY.size:
+        raise BadFeatures("not whole")
+    features = tuple(_ENTRY.iter_unpack(packed))
+    places = [place for place, _ in features]
+    if places != sorted(set(places)) or any(place >= PLACES for place in places):
+        raise BadFeatures("places out of order or out of range")
+    if any(weight == 0 for _, weight in features):
+        raise BadFeatures("a weight of nought")
+    return features
