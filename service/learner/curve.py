@@ -16,6 +16,8 @@ from service.learner import isotonic, kaplan_meier, turnbull
 from service.learner.arrays import Numbers, double
 from service.learner.curve_counts import ABOVE, BELOW, LOST, SEEN, WON, Counts, prices
 
+LIKELIHOOD_MISSING = 0.01
+
 Method = Literal["nothing", "empirical", "kaplan-meier", "reverse-kaplan-meier"]
 Mixed = Literal["isotonic", "turnbull"]
 
@@ -141,7 +143,9 @@ def _turnbull(columns: list[Numbers], level: float) -> Drawn:
     above, below = columns[ABOVE] + columns[LOST], columns[BELOW] + columns[WON]
     weight = np.concatenate([columns[SEEN], above, below])
     told = (weight > 0.0) & (low < high)
-    masses = turnbull.turnbull(low[told], high[told], weight[told])
+    # What may be missing from the log-likelihood of all auctions together is next to nothing.
+    tolerance = max(turnbull.TOLERANCE, LIKELIHOOD_MISSING / weight.sum())
+    masses = turnbull.turnbull(low[told], high[told], weight[told], tolerance)
     sure, ended = _summed(masses, size)
     share = np.where(np.abs(ended - sure) < 1e-12, sure, np.nan)
     resolved = np.cumsum(columns[SEEN] + below) + (above + columns[SEEN])[::-1].cumsum()[::-1]

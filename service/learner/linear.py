@@ -96,7 +96,7 @@ class Ridge:
     def width(self, features: ArrayLike) -> Numbers:
         """sqrt(x' V^-1 x), for one vector or one in each row."""
         x = double(features)
-        return np.sqrt(np.maximum((x @ self.inverse * x).sum(axis=-1), 0.0))
+        return double(np.sqrt(np.maximum((x @ self.inverse * x).sum(axis=-1), 0.0)))
 
     def upper(self, features: ArrayLike, noise: float, length: float, delta: float) -> Numbers:
         """The largest value over the ellipsoid: mean + radius times width."""

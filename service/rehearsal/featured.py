@@ -7,6 +7,7 @@ from typing import NamedTuple
 
 import numpy as np
 from numpy.random import Generator
+from numpy.typing import NDArray
 
 from service.learner import bounds, hashing, linear
 from service.learner.arrays import Numbers, double
@@ -66,7 +67,7 @@ class Featured:
         chosen = {name: of[at] for (name, of), at in zip(FEATURES.items(), levels, strict=True)}
         return hashing.dense(hashing.hashed(chosen, self.key), self.dimensions)
 
-    def _linear(self, levels: Numbers, competing: Numbers, values: Numbers) -> Numbers:
+    def _linear(self, levels: NDArray[np.int64], competing: Numbers, values: Numbers) -> Numbers:
         rows = [tuple(row) for row in levels.tolist()]
         vectors = {row: self.vector(row) for row in set(rows)}
         ridge, bids = linear.Ridge.fresh(self.dimensions), np.zeros(len(rows))
