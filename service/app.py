@@ -103,7 +103,7 @@ def _build(
     backlog = Backlog(settings.decision_queue_max)
     bidder = Bidder(catalog, leasing, keys, incarnation, clocks, backlog)
     feedback = Feedback(database, threads, keys, incarnation)
-    operator = Operator(database, threads, catalog, news)
+    operator = Operator(database, threads, catalog, news, settings.checkpoint_entries)
     rhythm = Rhythm(
         settings.change_poll_ms,
         settings.tick_s,

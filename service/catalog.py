@@ -136,8 +136,9 @@ def _load(
 
 def _item(row: line_items.Row, snapshot: learners.Snapshot | None, before: Item | None) -> Item:
     terms = Terms.from_config(row.config)
-    seq, made = _ready(snapshot, terms)
-    if made is None and before is not None:
+    halted = snapshot is not None and snapshot.halted
+    seq, made = (0, None) if halted else _ready(snapshot, terms)
+    if made is None and before is not None and not halted:
         # A state that is not what was published is never used: the last good one goes on.
         seq, made = before.snapshot, before.ready
     return Item(row.id, row.version, limits_of(row), terms, seq, made)

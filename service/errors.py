@@ -11,6 +11,7 @@ BidkeelError
 │   ├── NotOffered          this release does not do that
 │   └── NeedsConfirmation   allowed only with an explicit word
 ├── StoreAway               the database did not answer; the same call may work later
+├── PoisonLesson            one entry of a stream that the fold cannot take
 ├── BrokenPromise           a guard refused a write that the rules had allowed
 └── Unsafe                  a setting or a schema under which we refuse to start
 """
@@ -75,6 +76,20 @@ class NeedsConfirmation(Refusal):
 
 class StoreAway(BidkeelError):
     """The database did not answer; perhaps the write happened, perhaps not."""
+
+
+class PoisonLesson(BidkeelError):
+    """
+    A lesson that cannot be learnt, while those before it can.
+
+    Args:
+        place: Its place among the lessons that were handed in.
+        error: What went wrong, for people.
+    """
+
+    def __init__(self, place: int, error: str) -> None:
+        super().__init__(error)
+        self.place = place
 
 
 class BrokenPromise(BidkeelError):

@@ -1,14 +1,15 @@
 """The fourth story: people give orders (create, change, freeze, thaw, reset), all journalled.
 
 Each order is one transaction with its journal row and its change number, and it answers
-with what was before and what is after.
+with what was before and what is after. Orders that take lessons back, move money or open the
+quarantine are told in files of their own, and reached through here.
 """
 
 from __future__ import annotations
 
 import asyncio
 import time
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
 from typing import Any
 
@@ -25,21 +26,22 @@ from service.configuring import (
 from service.decision.learnability import defaults, learnability
 from service.errors import Malformed, StoreAway
 from service.ledger.entries import Entry
+from service.ordering import Orders, repeat_of
 from service.showing import show
 from service.store import changes, epochs, freezes, learners, line_items, reading, workers
 from service.store.books import Books
 from service.store.database import Database, Writing
-from service.store.journal import note
 from service.store.keys import Key
 from service.store.line_items import Row
-from service.store.repeats import Repeat, once
 from service.teaching import FRESH, lawful
 from service.threads import Threads
+from service.winding import Winding
 
 __all__ = ["Key", "Operator", "View"]
 
 IN_FORCE_S = 1.0
 LOOK_S = 0.02
+CHECKPOINT_ENTRIES = 10_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,10 +62,16 @@ class Operator:
     """Obeys people, for one worker."""
 
     def __init__(
-        self, database: Database, threads: Threads, catalog: Catalog, news: asyncio.Event
+        self,
+        database: Database,
+        threads: Threads,
+        catalog: Catalog,
+        news: asyncio.Event,
+        checkpoint_entries: int = CHECKPOINT_ENTRIES,
     ) -> None:
-        self._database, self._threads, self._catalog = database, threads, catalog
-        self._news = news
+        self._database, self._catalog = database, catalog
+        orders = self._orders = Orders(database, threads, news)
+        self.winding = Winding(orders, checkpoint_entries)
 
     async def key_for(self, bearer: str) -> Key | None:
         """The live key behind a bearer text, or None."""
@@ -93,13 +101,13 @@ class Operator:
             learners.begin(connection, full["id"], FRESH, now)
             if (law := lawful(FRESH, full)) is not None:
                 epochs.keep(connection, full["id"], 0, law)
-            self._note(connection, actor, "create", full["id"], "", {"after": full})
+            self._orders.note(connection, actor, "create", full["id"], "", {"after": full})
             self._take_prior(connection, full, actor)
             changes.announce(connection, "line_item", [full["id"]])
             return asdict(_view(line_items.one(connection, full["id"]), taken))
 
         wish = {"call": "create", "config": dict(config), "confirm": confirm}
-        return View(**await self._order(order, _repeat(actor, idempotency, wish)))
+        return View(**await self._orders.give(order, repeat_of(actor, idempotency, wish)))
 
     async def get(self, line_item: str) -> View:
         """
@@ -108,12 +116,12 @@ class Operator:
         Raises:
             NotFound: There is none.
         """
-        row = await self._read(lambda connection: line_items.one(connection, line_item))
+        row = await self._orders.read(lambda connection: line_items.one(connection, line_item))
         return _view(row, [])
 
     async def list(self, after: str | None, limit: int) -> list[View]:
         """The line items after this id, in the order of ids."""
-        rows = await self._read(lambda connection: line_items.page(connection, after, limit))
+        rows = await self._orders.read(lambda connection: line_items.page(connection, after, limit))
         return [_view(row, []) for row in rows]
 
     async def patch(
@@ -143,7 +151,7 @@ class Operator:
             if drawn_otherwise(before.config, after):
                 epochs.end(connection, line_item)
             detail = {"before": before.config, "after": after}
-            self._note(connection, actor, "patch", line_item, reason or "", detail)
+            self._orders.note(connection, actor, "patch", line_item, reason or "", detail)
             if guessed_otherwise(before.config, after):
                 self._post(connection, line_item, Entry("prior", {}))
             if after.get("kin") != before.config.get("kin"):
@@ -151,7 +159,7 @@ class Operator:
             changes.announce(connection, "line_item", [line_item])
             return asdict(_view(line_items.one(connection, line_item), []))
 
-        return View(**await self._order(order, None))
+        return View(**await self._orders.give(order, None))
 
     async def state(self, line_item: str) -> dict[str, Any]:
         """
@@ -160,7 +168,9 @@ class Operator:
         Raises:
             NotFound: There is none.
         """
-        return show(await self._read(lambda connection: reading.facts(connection, line_item)))
+        return show(
+            await self._orders.read(lambda connection: reading.facts(connection, line_item))
+        )
 
     async def freeze(
         self, line_item: str | None, reason: str, actor: str, idempotency: str | None = None
@@ -174,7 +184,7 @@ class Operator:
             return self._stopped(connection, "freeze", name, before, reason, actor)
 
         wish = {"call": "freeze", "line_item": line_item, "reason": reason}
-        answer = await self._order(order, _repeat(actor, idempotency, wish))
+        answer = await self._orders.give(order, repeat_of(actor, idempotency, wish))
         return await self._in_force(answer)
 
     async def thaw(
@@ -189,7 +199,9 @@ class Operator:
             return self._stopped(connection, "thaw", name, before, reason, actor)
 
         wish = {"call": "thaw", "line_item": line_item, "reason": reason}
-        return await self._in_force(await self._order(order, _repeat(actor, idempotency, wish)))
+        return await self._in_force(
+            await self._orders.give(order, repeat_of(actor, idempotency, wish))
+        )
 
     async def reset(
         self, line_item: str, reason: str, actor: str, idempotency: str | None = None
@@ -202,16 +214,16 @@ class Operator:
             seq = self._post(connection, line_item, Entry("reset", said))
             learners.begin_afresh(connection, line_item, seq)
             detail = {"before": {"seq": seq - 1}, "after": {"seq": seq}}
-            self._note(connection, actor, "reset", line_item, reason, detail)
+            self._orders.note(connection, actor, "reset", line_item, reason, detail)
             return {"line_item": line_item, **detail}
 
         wish = {"call": "reset", "line_item": line_item, "reason": reason}
-        return await self._order(order, _repeat(actor, idempotency, wish))
+        return await self._orders.give(order, repeat_of(actor, idempotency, wish))
 
     async def health(self) -> dict[str, Any]:
         """Whether the database answers; prices leave from slices in hand either way."""
         try:
-            await self._read(changes.latest)
+            await self._orders.read(changes.latest)
         except StoreAway:
             return {"status": "degraded", "database": "away"}
         return {"status": "ok", "database": "here"}
@@ -232,7 +244,7 @@ class Operator:
             return
         self._post(connection, config["id"], entry)
         detail = {"kin": kin, "after": dict(entry.body)}
-        self._note(connection, actor, "prior", config["id"], "what kin have learnt", detail)
+        self._orders.note(connection, actor, "prior", config["id"], "what kin have learnt", detail)
 
     def _post(self, connection: Writing, line_item: str, entry: Entry) -> int:
         """Append one entry to a stream under its lock; returns its seq."""
@@ -240,21 +252,6 @@ class Operator:
         books.post(line_item, entry)
         books.save()
         return books.accounts[line_item].seq
-
-    async def _read(self, work: Callable[[Any], Any]) -> Any:
-        return await self._threads.run(self._database.read, work)
-
-    async def _order(
-        self, order: Callable[[Writing], dict[str, Any]], repeat: Repeat | None
-    ) -> dict[str, Any]:
-        def work(connection: Writing) -> dict[str, Any]:
-            now = self._database.wall_ms()
-            return once(connection, repeat, lambda: order(connection), now)
-
-        answer = await self._threads.run(self._database.write, work)
-        # This worker need not wait for its next look to obey its own order.
-        self._news.set()
-        return answer
 
     def _frozen(
         self, connection: Writing, line_item: str | None
@@ -276,7 +273,7 @@ class Operator:
         after = freezes.on(connection, sorted({name, changes.ALL}))
         left = after[changes.ALL] + (after[name] if name != changes.ALL else [])
         detail = {"before": before, "after": left}
-        self._note(connection, actor, action, name, reason, detail)
+        self._orders.note(connection, actor, action, name, reason, detail)
         by_ms = reading.last_expiry_ms(connection, None if name == changes.ALL else name)
         number = changes.announce(connection, action, [name])
         shown = None if name == changes.ALL else name
@@ -287,33 +284,13 @@ class Operator:
         number, by_ms = answer.pop("change"), answer.pop("by_ms")
         until = time.monotonic() + IN_FORCE_S
         while True:
-            seen = await self._read(workers.live)
+            seen = await self._orders.read(workers.live)
             # A worker that no longer beats holds slices that end by themselves.
             if all(passed >= number for passed in seen.values()):
                 return {**answer, "in_force": True, "by": None}
             if time.monotonic() > until:
                 return {**answer, "in_force": False, "by_ms": by_ms}
             await asyncio.sleep(LOOK_S)
-
-    def _note(
-        self,
-        connection: Writing,
-        actor: str,
-        action: str,
-        line_item: str,
-        reason: str,
-        detail: Mapping[str, Any],
-    ) -> None:
-        now = self._database.wall_ms()
-        note(
-            connection,
-            wall_ms=now,
-            actor=actor,
-            action=action,
-            line_item=line_item,
-            reason=reason,
-            detail=detail,
-        )
 
 
 def _view(row: Row, taken: list[str]) -> View:
@@ -327,7 +304,3 @@ def _view(row: Row, taken: list[str]) -> View:
         learnability(row.config),
         taken,
     )
-
-
-def _repeat(actor: str, key: str | None, wish: Mapping[str, Any]) -> Repeat | None:
-    return None if key is None else Repeat(actor, key, wish)

@@ -41,6 +41,8 @@ def _bid(facts: Facts, learnt: dict[str, Any]) -> dict[str, Any]:
     limits = limits_of(facts.row)
     said = {"method": learnt["method"], "snapshot": facts.snapshot.seq}
     none = {"price_cpm_nanos": None, "set_by": None}
+    if facts.snapshot.halted:
+        return said | none | {"pass": "learner_halted"}
     if learnt["bid_nanos"] is None:
         return said | none | {"pass": learnt["pass"]}
     cleared = clear(learnt["bid_nanos"], learnt["set_by"], limits, 0, limits.cap)
@@ -54,6 +56,7 @@ def _learner(facts: Facts, tally: Tally) -> dict[str, Any]:
     return {
         "snapshot": facts.snapshot.seq,
         "published_ms": facts.snapshot.published_ms,
+        "halted": facts.snapshot.halted,
         "entries_behind": facts.balance["seq"] - facts.learner_seq,
         "rounds": tally.rounds,
         "wins": tally.wins,

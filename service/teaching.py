@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
+from service.errors import PoisonLesson
 from service.learner.exptree_state import UnreadableTree
 from service.learner.fold import Lesson, fold
 from service.learner.growing import law_of, weight
@@ -14,12 +15,45 @@ from service.learner.rules import Rules, tree_rules
 FRESH = Memory.fresh().to_bytes()  # The state of a learner before its first lesson.
 
 
-def lesson(
-    state: bytes, entries: list[tuple[str, Mapping[str, Any], int]], config: Mapping[str, Any]
-) -> bytes:
-    """Fold entries (kind, body, service time) into a state under a line item's rules."""
+# What a damaged entry may raise; anything else is a fault of ours and must be seen.
+POISON = (ValueError, LookupError, ArithmeticError, TypeError, AttributeError)
+Entries = Sequence[tuple[str, Mapping[str, Any], int]]
+
+
+def lesson(state: bytes, entries: Entries, config: Mapping[str, Any]) -> bytes:
+    """
+    Fold entries (kind, body, service time) into a state under a line item's rules.
+
+    Raises:
+        UnreadableMemory, UnreadableTree: The state is damaged, not an entry.
+        PoisonLesson: One entry cannot be read; it names the first such.
+    """
+    try:
+        return _folded(state, entries, config)
+    except (UnreadableMemory, UnreadableTree):
+        raise
+    except POISON as error:
+        place = _first_poison(state, entries, config)
+        raise PoisonLesson(place, f"{type(error).__name__}: {error}") from error
+
+
+def _folded(state: bytes, entries: Entries, config: Mapping[str, Any]) -> bytes:
     lessons = (Lesson(*entry) for entry in entries)
     return fold(Memory.from_bytes(state), lessons, Rules.from_config(config)).to_bytes()
+
+
+def _first_poison(state: bytes, entries: Entries, config: Mapping[str, Any]) -> int:
+    """Halve until one is left: the fold of a prefix fails exactly when it holds a bad entry."""
+    good, bad = 0, len(entries)
+    while bad - good > 1:
+        middle = (good + bad) // 2
+        try:
+            _folded(state, entries[:middle], config)
+        except POISON:
+            bad = middle
+        else:
+            good = middle
+    return bad - 1
 
 
 def lawful(state: bytes, config: Mapping[str, Any]) -> bytes | None:

@@ -190,7 +190,7 @@ async def working(
     backlog = Backlog(queue_max)
     bidder = Bidder(catalog, leasing, keys, here, Clocks(100, 5000), backlog)
     feedback = Feedback(database, threads, keys, here)
-    operator = Operator(database, threads, catalog, news)
+    operator = Operator(database, threads, catalog, news, 10)
     rhythm = Rhythm(250, 10, 200, 2000, 10, 30)
     upkeep = Upkeep(database, threads, worker, catalog, leasing, backlog, news, rhythm)
     await upkeep.start()

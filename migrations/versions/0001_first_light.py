@@ -105,7 +105,18 @@ CREATE TABLE learner (
     snapshot BIG NOT NULL CHECK (snapshot >= 0),
     state BYTES NOT NULL,
     digest TEXT NOT NULL,
-    published_ms BIG NOT NULL
+    published_ms BIG NOT NULL,
+    halted BIG NOT NULL DEFAULT 0 CHECK (halted IN (0, 1)),
+    stuck_seq BIG NOT NULL DEFAULT 0,
+    tries BIG NOT NULL DEFAULT 0
+) STRICTLY;
+CREATE TABLE cancelled (
+    line_item TEXT NOT NULL REFERENCES line_item (id),
+    by_seq BIG NOT NULL,
+    first_seq BIG NOT NULL,
+    last_seq BIG NOT NULL CHECK (first_seq <= last_seq AND last_seq < by_seq),
+    part TEXT NOT NULL CHECK (part IN ('value', 'market', 'both', 'all')),
+    PRIMARY KEY (line_item, by_seq, first_seq)
 ) STRICTLY;
 CREATE TABLE checkpoint (
     line_item TEXT NOT NULL REFERENCES line_item (id),
@@ -140,7 +151,8 @@ CREATE TABLE journal (
 ) STRICTLY;
 CREATE TABLE freezing (
     line_item TEXT NOT NULL,
-    source TEXT NOT NULL CHECK (source IN ('person', 'tripwire', 'audit', 'all')),
+    source TEXT NOT NULL
+        CHECK (source IN ('person', 'tripwire', 'audit', 'all', 'restore', 'closed')),
     at_ms BIG NOT NULL,
     actor TEXT NOT NULL,
     reason TEXT NOT NULL,
@@ -166,7 +178,9 @@ CREATE TABLE quarantine (
     at_ms BIG NOT NULL,
     line_item TEXT NOT NULL,
     error TEXT NOT NULL,
-    body TEXT NOT NULL
+    body TEXT NOT NULL,
+    seq BIG,
+    state TEXT NOT NULL DEFAULT 'waiting' CHECK (state IN ('waiting', 'retried', 'released'))
 ) STRICTLY;
 CREATE TABLE repeat_guard (
     actor TEXT NOT NULL,

@@ -99,12 +99,14 @@ class _Growing:
         )
 
     def won(self, body: Body) -> None:
-        """An impression bought at a price."""
-        self._sums["wins"] += 1
-        self._sums["late"] += bool(body.get("late"))
-        self._sums["paid"] += body["price"]
-        self._rounds(body["round"])
-        if self._rules.paid_by == "won":
+        """An impression bought at a price; of one retracted in part only the rest is read."""
+        only = body.get("only")
+        if only != "value":
+            self._sums["wins"] += 1
+            self._sums["late"] += bool(body.get("late"))
+            self._sums["paid"] += body["price"]
+            self._rounds(body["round"])
+        if only != "market" and self._rules.paid_by == "won":
             self._bought()
 
     def billed(self, body: Body) -> None:

@@ -20,6 +20,8 @@ Body = Mapping[str, Any]
 
 def tree_lesson(kind: str, body: Body) -> Lesson | None:
     """The lesson an entry holds for a tree, but for values; None when it holds none."""
+    if "only" in body:  # Price and value are one lesson here; half of it would mislead.
+        return None
     if kind == "won":
         return Won(body["price"], body.get("chance"), _stage(body), body["round"])
     if kind == "lost":

@@ -24,15 +24,32 @@ def prune(connection: Writing, before_ms: int) -> int:
 
 
 def quarantine(
-    connection: Writing, line_item: str, error: str, body: dict[str, Any], wall_ms: int
+    connection: Writing,
+    line_item: str,
+    error: str,
+    body: dict[str, Any],
+    wall_ms: int,
+    seq: int | None = None,
 ) -> None:
-    """Set an outcome aside that could not be booked alone, with what went wrong."""
+    """
+    Set something aside that failed alone, with what went wrong.
+
+    Args:
+        body: The outcome that could not be booked.
+        seq: The entry that could not be learnt instead.
+    """
     connection.execute(
         text(
-            "INSERT INTO quarantine (at_ms, line_item, error, body)"
-            " VALUES (:now, :line_item, :error, :body)"
+            "INSERT INTO quarantine (at_ms, line_item, error, body, seq)"
+            " VALUES (:now, :line_item, :error, :body, :seq)"
         ),
-        {"now": wall_ms, "line_item": line_item, "error": error, "body": json.dumps(body)},
+        {
+            "now": wall_ms,
+            "line_item": line_item,
+            "error": error,
+            "body": json.dumps(body),
+            "seq": seq,
+        },
     )
 
 

@@ -1,36 +1,49 @@
-"""Learner states as bytes: the current snapshot, checkpoints, and the lessons not yet folded."""
+"""Learner states as bytes: the current snapshot, and the one teacher who moves it on."""
 
 from __future__ import annotations
 
 import hashlib
-import json
 from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
 from sqlalchemy import text
 
-from service.ledger.entries import Body
-from service.store import epochs
+from service.errors import PoisonLesson
+from service.ledger.cancelling import ALL
+from service.ledger.entries import Entry
+from service.store import epochs, lessons
+from service.store.books import Books
 from service.store.changes import announce
 from service.store.database import Database, Reading, Writing, among, locking
+from service.store.decisions import quarantine
+from service.store.journal import note
 from service.store.leases import read_configs
+from service.store.lessons import Lesson
 
-Lesson = tuple[str, Body, int]  # Kind, body and service time.
+__all__ = ["Fold", "Lesson"]
+
 Fold = Callable[[bytes, list[Lesson], dict[str, Any]], bytes]
 Lawful = Callable[[bytes, dict[str, Any]], bytes | None]
 ENTRIES_MAX = 2000
 STATES_MAX = 200  # Read at once; each may be 64 KiB.
+TRIES_MAX = 3  # So often a lesson may fail before it is set aside.
 
 
 @dataclass(frozen=True, slots=True)
 class Snapshot:
-    """A published state: what it is, up to which seq it has read, when it was published."""
+    """
+    A published state: what it is, up to which seq it has read, when it was published.
+
+    Args:
+        halted: Nobody may bid by it any more; one without what was cancelled is being made.
+    """
 
     seq: int
     state: bytes
     digest: str
     published_ms: int
+    halted: bool = False
 
     @property
     def sound(self) -> bool:
@@ -53,7 +66,8 @@ def behind(connection: Reading) -> list[str]:
         text(
             "SELECT b.line_item FROM balance b JOIN learner l ON l.line_item = b.line_item"
             " LEFT JOIN epoch e ON e.line_item = l.line_item AND e.snapshot = l.snapshot"
-            " WHERE b.seq > l.seq AND (e.snapshot IS NULL OR b.seq > l.seq + :bids"
+            " WHERE b.seq > l.seq AND (l.halted = 1 OR e.snapshot IS NULL"
+            " OR b.seq > l.seq + :bids"
             " OR e.service_ms + :epoch <= (SELECT now_ms FROM service_clock))"
             " ORDER BY b.line_item"
         ),
@@ -67,6 +81,16 @@ def lawless(state: bytes, config: dict[str, Any]) -> bytes | None:
     return None
 
 
+@dataclass(frozen=True, slots=True)
+class _Taught:
+    """What one turn of the teacher came to; `poison` is the seq that it could not take."""
+
+    read: int
+    poison: int = 0
+    tries: int = 0
+    error: str = ""
+
+
 def teach(
     database: Database,
     line_item: str,
@@ -77,59 +101,84 @@ def teach(
     """
     Fold the next entries into the one state of a line item; returns how many were read.
 
-    One teacher at a time: the learner's row is locked, and another teacher passes by.
+    One teacher at a time: the learner's row is locked, and another teacher passes by. An
+    entry that fails is set aside after three turns, and teaching goes on behind it.
 
     Args:
         fold: Pure; state, lessons and the line item's configuration in, state out.
         checkpoint_entries: A checkpoint is kept whenever seq passes a multiple of it.
         lawful: State and configuration in, the law that bids are drawn from out, if any.
     """
-
-    def work(connection: Writing) -> int:
-        mine = "SELECT seq, working, digest FROM learner WHERE line_item = :id"
-        statement = locking(connection, mine, skip=True)
-        row = connection.execute(statement, {"id": line_item}).one_or_none()
-        if row is None:
-            return 0
-        lessons = _lessons(connection, line_item, row.seq, ENTRIES_MAX)
-        # Read under the lock, for a change of terms refolds under it too.
-        config = read_configs(connection, [line_item])[line_item]
-        state, seq = fold(bytes(row.working), lessons, config), row.seq + len(lessons)
-        now = database.wall_ms()
-        connection.execute(_LEARN, {"id": line_item, "seq": seq, "state": state})
-        if seq // checkpoint_entries > row.seq // checkpoint_entries:
-            _checkpoint(connection, line_item, seq, state, now)
-        # A state that has not caught up is not published, or a refold would forget in public.
-        if len(lessons) < ENTRIES_MAX and digest_of(state) != row.digest:
-            _publish(connection, line_item, seq, state, now)
-            if (law := lawful(state, config)) is not None:
-                epochs.keep(connection, line_item, seq, law)
-        return len(lessons)
-
-    return database.write(work)
+    taught = database.write(
+        lambda c: _teach(c, line_item, fold, checkpoint_entries, lawful, database.wall_ms())
+    )
+    if taught.tries >= TRIES_MAX:
+        # Apart: the stream is locked before the learner, and here the learner was first.
+        database.write(lambda c: _set_aside(c, line_item, taught, database.wall_ms()))
+    return taught.read
 
 
-def fold_all(connection: Reading, line_item: str, start: bytes, fold: Fold) -> bytes:
-    """The state that the whole stream up to the learner's seq gives, folded from `start`."""
-    end = connection.execute(
-        text("SELECT seq FROM learner WHERE line_item = :id"), {"id": line_item}
-    ).scalar_one()
+def _teach(
+    connection: Writing, line_item: str, fold: Fold, every: int, lawful: Lawful, now: int
+) -> _Taught:
+    row = connection.execute(locking(connection, _MINE, skip=True), {"id": line_item}).one_or_none()
+    if row is None:
+        return _Taught(0)
+    cancelled = lessons.cancellations(connection, line_item)
+    page = lessons.read(connection, line_item, row.seq, ENTRIES_MAX, cancelled)
+    # Read under the lock, for a change of terms refolds under it too.
     config = read_configs(connection, [line_item])[line_item]
-    state, seq = start, 0
-    while lessons := _lessons(connection, line_item, seq, min(ENTRIES_MAX, end - seq)):
-        state = fold(state, lessons, config)
-        seq += len(lessons)
-    return state
+    taught, seq = _Taught(page.read), page.end
+    try:
+        state = fold(bytes(row.working), page.lessons, config)
+    except PoisonLesson as poison:
+        state = fold(bytes(row.working), page.lessons[: poison.place], config)
+        seq = page.seqs[poison.place] - 1
+        tries = row.tries + 1 if row.stuck_seq == seq + 1 else 1
+        taught = _Taught(seq - row.seq, seq + 1, tries, str(poison))
+    stuck = {"stuck": taught.poison, "tries": taught.tries}
+    connection.execute(_LEARN, {"id": line_item, "seq": seq, "state": state, **stuck})
+    if seq // every > row.seq // every:
+        _checkpoint(connection, line_item, seq, state, now)
+    # A state that has not caught up is not published, or a refold would forget in public.
+    caught_up = taught.read < ENTRIES_MAX and not (taught.poison and row.halted)
+    if caught_up and (row.halted or digest_of(state) != row.digest):
+        _publish(connection, line_item, seq, state, now)
+        if (law := lawful(state, config)) is not None:
+            epochs.keep(connection, line_item, seq, law)
+    return taught
+
+
+def _set_aside(connection: Writing, line_item: str, taught: _Taught, now: int) -> None:
+    """Let an entry teach nothing that the fold cannot take; people may try it again."""
+    books = Books(connection, [line_item], now)
+    row = connection.execute(locking(connection, _MINE), {"id": line_item}).one()
+    if (row.stuck_seq, row.tries >= TRIES_MAX) != (taught.poison, True):
+        return
+    body = {"entry": taught.poison, "error": taught.error}
+    books.post(line_item, Entry("quarantine", body))
+    books.save()
+    by_seq = books.accounts[line_item].seq
+    lessons.cancel(connection, line_item, by_seq, [(taught.poison, taught.poison, ALL)])
+    quarantine(connection, line_item, taught.error, {"event": "Lesson"}, now, taught.poison)
+    unstuck = {"seq": row.seq, "state": bytes(row.working), "stuck": 0, "tries": 0}
+    connection.execute(_LEARN, {"id": line_item, **unstuck})
+    note(
+        connection, wall_ms=now, actor="bidkeel", action="quarantine", line_item=line_item,
+        reason="a lesson could not be learnt", detail=body,
+    )  # fmt: skip
 
 
 def snapshots(connection: Reading | Writing, line_items: list[str]) -> dict[str, Snapshot]:
     """The current snapshot of each line item."""
     statement = among(
-        "SELECT line_item, snapshot, state, digest, published_ms FROM learner"
+        "SELECT line_item, snapshot, state, digest, published_ms, halted FROM learner"
         " WHERE line_item IN :ids",
     )
     return {
-        row.line_item: Snapshot(row.snapshot, bytes(row.state), row.digest, row.published_ms)
+        row.line_item: Snapshot(
+            row.snapshot, bytes(row.state), row.digest, row.published_ms, bool(row.halted)
+        )
         for row in connection.execute(statement, {"ids": line_items})
     }
 
@@ -167,7 +216,8 @@ def begin(connection: Writing, line_item: str, state: bytes, wall_ms: int) -> No
 
 def refold(connection: Writing, line_item: str, state: bytes) -> None:
     """Let the teacher read the whole stream again from `state`, after a change of terms."""
-    connection.execute(_LEARN, {"id": line_item, "seq": 0, "state": state})
+    row = {"id": line_item, "seq": 0, "state": state, "stuck": 0, "tries": 0}
+    connection.execute(_LEARN, row)
     # Checkpoints under the old terms would make a later rebuild differ from a fold from zero.
     connection.execute(text("DELETE FROM checkpoint WHERE line_item = :id"), {"id": line_item})
 
@@ -180,17 +230,6 @@ def begin_afresh(connection: Writing, line_item: str, seq: int) -> None:
     )
 
 
-def _lessons(connection: Reading | Writing, line_item: str, seq: int, limit: int) -> list[Lesson]:
-    rows = connection.execute(
-        text(
-            "SELECT kind, body, service_ms FROM stream WHERE line_item = :id AND seq > :seq"
-            " ORDER BY seq LIMIT :limit"
-        ),
-        {"id": line_item, "seq": seq, "limit": limit},
-    )
-    return [(row.kind, json.loads(row.body), row.service_ms) for row in rows]
-
-
 def _publish(connection: Writing, line_item: str, seq: int, state: bytes, now: int) -> None:
     row = {"seq": seq, "state": state, "digest": digest_of(state), "now": now, "id": line_item}
     connection.execute(_PUBLISH, row)
@@ -198,17 +237,23 @@ def _publish(connection: Writing, line_item: str, seq: int, state: bytes, now: i
 
 
 def _checkpoint(connection: Writing, line_item: str, seq: int, state: bytes, now: int) -> None:
+    # A damaged one of the same seq is mended by the way.
     connection.execute(
         text(
             "INSERT INTO checkpoint (line_item, seq, state, digest, at_ms)"
-            " VALUES (:id, :seq, :state, :digest, :now) ON CONFLICT DO NOTHING"
+            " VALUES (:id, :seq, :state, :digest, :now) ON CONFLICT (line_item, seq)"
+            " DO UPDATE SET state = excluded.state, digest = excluded.digest"
         ),
         {"id": line_item, "seq": seq, "state": state, "digest": digest_of(state), "now": now},
     )
 
 
-_LEARN = text("UPDATE learner SET seq = :seq, working = :state WHERE line_item = :id")
-_PUBLISH = text(
-    "UPDATE learner SET snapshot = :seq, state = :state, digest = :digest, published_ms = :now"
+_MINE = "SELECT seq, working, digest, halted, stuck_seq, tries FROM learner WHERE line_item = :id"
+_LEARN = text(
+    "UPDATE learner SET seq = :seq, working = :state, stuck_seq = :stuck, tries = :tries"
     " WHERE line_item = :id"
+)
+_PUBLISH = text(
+    "UPDATE learner SET snapshot = :seq, state = :state, digest = :digest, published_ms = :now,"
+    " halted = 0 WHERE line_item = :id"
 )

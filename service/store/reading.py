@@ -125,4 +125,4 @@ def _passes(connection: Reading, line_item: str) -> dict[str, int]:
     return {row.reason: int(row.n) for row in rows}
 
 
-_QUARANTINED = "SELECT count(*) AS n FROM quarantine WHERE line_item = :id"
+_QUARANTINED = "SELECT count(*) AS n FROM quarantine WHERE line_item = :id AND state = 'waiting'"

@@ -12,7 +12,7 @@ from sqlalchemy import text
 
 from service.learner.memory import Memory
 from service.ledger.entries import Entry
-from service.store import changes, learners
+from service.store import changes, learners, rebuilds
 from service.store.database import Database
 from service.teaching import FRESH, lesson
 from tests.builders import NAME, append, begin, line_item, pass_service_ms, valued, won
@@ -27,7 +27,7 @@ def _snapshot(database: Database) -> learners.Snapshot:
 
 
 def _from_zero(database: Database) -> bytes:
-    return database.read(lambda c: learners.fold_all(c, NAME, FRESH, lesson))
+    return database.read(lambda c: rebuilds.fold_all(c, NAME, FRESH, lesson))
 
 
 def _checkpoints(database: Database) -> list[int]:

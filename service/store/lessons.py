@@ -1,0 +1,166 @@
+"""The stream as a learner reads it: without what is cancelled, apart from whose state it feeds."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterable
+from dataclasses import dataclass
+
+from sqlalchemy import LargeBinary, text
+
+from service.ledger.cancelling import Cancelled, Finder, Span, Told, left, retold
+from service.ledger.entries import Body
+from service.store.database import Reading, Writing, among
+from service.store.leases import read_configs
+
+Lesson = tuple[str, Body, int]  # Kind, body and service time.
+ROWS_MAX = 2000
+
+
+@dataclass(frozen=True, slots=True)
+class Page:
+    """
+    The next entries of a stream.
+
+    Args:
+        lessons: What they teach, those left out that teach no more.
+        seqs: The seq of each lesson.
+        read: How many entries were read.
+        end: The seq of the last of them.
+    """
+
+    lessons: list[Lesson]
+    seqs: list[int]
+    read: int
+    end: int
+
+
+def read(
+    connection: Reading | Writing, line_item: str, seq: int, limit: int, cancelled: Cancelled
+) -> Page:
+    """The entries after `seq`, at most so many."""
+    rows = connection.execute(_AFTER, {"id": line_item, "seq": seq, "limit": limit}).all()
+    again = dict[int, Body | None]()
+    if cancelled:
+        values = [bytes(row.bid) for row in rows if row.kind == "value" and row.bid is not None]
+        again = _values_again(connection, line_item, values, cancelled)
+    kept = list[tuple[int, Lesson]]()
+    for row in rows:
+        body = again.get(row.seq, _body(row.body))
+        rest = None if body is None else left(row.seq, row.kind, body, cancelled)
+        if rest is not None:
+            kept.append((row.seq, (row.kind, rest, row.service_ms)))
+    end = rows[-1].seq if rows else seq
+    return Page([lesson for _, lesson in kept], [n for n, _ in kept], len(rows), end)
+
+
+def cancellations(connection: Reading | Writing, line_item: str) -> Cancelled:
+    """What is cancelled on a stream."""
+    rows = connection.execute(_CANCELLED, {"id": line_item})
+    paid_by = read_configs(connection, [line_item])[line_item]["spend_on"]
+    return Cancelled(((row.first_seq, row.last_seq, row.part) for row in rows), paid_by)
+
+
+def cancel(connection: Writing, line_item: str, by_seq: int, spans: Iterable[Span]) -> None:
+    """Note what an entry of the stream cancels; the entry says the same."""
+    rows = [
+        {"id": line_item, "by": by_seq, "first": first, "last": last, "part": part}
+        for first, last, part in spans
+    ]
+    if rows:
+        connection.execute(_CANCEL, rows)
+
+
+def uncancel(connection: Writing, line_item: str, seq: int) -> None:
+    """Let one entry that was set aside alone teach again."""
+    connection.execute(
+        text(
+            "DELETE FROM cancelled WHERE line_item = :id AND first_seq = :seq"
+            " AND last_seq = :seq AND part = 'all'"
+        ),
+        {"id": line_item, "seq": seq},
+    )
+
+
+def find(connection: Reading | Writing, line_item: str, finder: Finder) -> None:
+    """Let a finder read on to the end of the stream."""
+    seq = finder.read_until
+    while True:
+        row = {"id": line_item, "seq": seq, "limit": ROWS_MAX}
+        rows = connection.execute(_AFTER, row).all()
+        for one in rows:
+            bid = None if one.bid is None else bytes(one.bid)
+            finder.take(one.seq, one.kind, bid, one.at_ms, _body(one.body))
+            seq = one.seq
+        if len(rows) < ROWS_MAX:
+            return
+
+
+def kinds_after(
+    connection: Reading | Writing, line_item: str, seq: int, kinds: list[str]
+) -> list[tuple[int, str]]:
+    """Seq and kind of the entries of these kinds after `seq`, in order."""
+    rows = connection.execute(_KINDS, {"id": line_item, "seq": seq, "kinds": kinds})
+    return [(row.seq, row.kind) for row in rows]
+
+
+def seq_at(connection: Reading | Writing, line_item: str, at_ms: int) -> int:
+    """The last seq stamped at or before a moment of the wall clock; 0 when there is none."""
+    statement = text(
+        "SELECT coalesce(max(seq), 0) FROM stream WHERE line_item = :id AND at_ms <= :at"
+    )
+    return int(connection.execute(statement, {"id": line_item, "at": at_ms}).scalar_one())
+
+
+def last_reset(connection: Reading | Writing, line_item: str, cancelled: Cancelled) -> int:
+    """The seq of the last reset that was not undone, or 0."""
+    statement = text("SELECT seq FROM stream WHERE line_item = :id AND kind = 'reset'")
+    seqs = connection.execute(statement, {"id": line_item}).scalars().all()
+    return max((int(seq) for seq in seqs if cancelled.leaves(seq, "reset")), default=0)
+
+
+def _body(text_of: str) -> Body:
+    """The body of an entry; a damaged one is empty, which the fold then cannot take."""
+    try:
+        body = json.loads(text_of)
+    except ValueError:
+        return {}
+    return body if isinstance(body, dict) else {}
+
+
+def _values_again(
+    connection: Reading | Writing, line_item: str, bids: list[bytes], cancelled: Cancelled
+) -> dict[int, Body | None]:
+    """The values of these bids as they would have been told, where something was cancelled."""
+    of_bid = dict[bytes, list[Told]]()
+    rows = connection.execute(_OF_BIDS, {"ids": sorted(set(bids)), "line_item": line_item})
+    for row in rows:
+        of_bid.setdefault(bytes(row.bid), []).append((row.seq, row.kind, _body(row.body)))
+    told = dict[int, Body | None]()
+    for entries in of_bid.values():
+        if any(cancelled.parts(seq) for seq, _, _ in entries):
+            told |= retold(entries, cancelled)
+    return told
+
+
+_AFTER = text(
+    "SELECT seq, kind, bid, at_ms, service_ms, body FROM stream"
+    " WHERE line_item = :id AND seq > :seq ORDER BY seq LIMIT :limit"
+)
+_OF_BIDS = among(
+    "SELECT seq, kind, bid, body FROM stream WHERE bid IN :ids AND line_item = :line_item"
+    " AND kind IN ('won', 'billed', 'value') ORDER BY seq",
+    of=LargeBinary,
+)
+_KINDS = among(
+    "SELECT seq, kind FROM stream WHERE line_item = :id AND seq > :seq AND kind IN :kinds"
+    " ORDER BY seq",
+    "kinds",
+)
+_CANCELLED = text(
+    "SELECT first_seq, last_seq, part FROM cancelled WHERE line_item = :id ORDER BY by_seq"
+)
+_CANCEL = text(
+    "INSERT INTO cancelled (line_item, by_seq, first_seq, last_seq, part)"
+    " VALUES (:id, :by, :first, :last, :part)"
+)

@@ -1,0 +1,134 @@
+"""Folding again: from zero, from a sound checkpoint, and putting a learner back.
+
+Apart from teaching, which only ever goes forward.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass
+from typing import Any
+
+from sqlalchemy import text
+
+from service.ledger.cancelling import Cancelled, Span
+from service.store import lessons
+from service.store.changes import announce
+from service.store.database import Reading, Writing, locking
+from service.store.learners import ENTRIES_MAX, Fold, Snapshot, digest_of
+from service.store.leases import read_configs
+
+Seen = Callable[[int], None]  # Told the seq that a fold has reached.
+
+
+@dataclass(frozen=True, slots=True)
+class Start:
+    """A state to fold on from, and the seqs of checkpoints that were refused as damaged."""
+
+    seq: int
+    state: bytes
+    refused: tuple[int, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class Standing:
+    """Where a learner stands: its head, what it has folded and what is published."""
+
+    head: int
+    seq: int
+    working: bytes
+    snapshot: Snapshot
+    config: dict[str, Any]
+
+
+def fold_until(
+    connection: Reading | Writing,
+    line_item: str,
+    start: Start,
+    end: int,
+    fold: Fold,
+    cancelled: Cancelled | None = None,
+    seen: Seen = lambda seq: None,
+) -> bytes:
+    """The state at seq `end`, folded on from a start; with other cancellations when given."""
+    if cancelled is None:
+        cancelled = lessons.cancellations(connection, line_item)
+    config = read_configs(connection, [line_item])[line_item]
+    state, seq = start.state, start.seq
+    while seq < end:
+        page = lessons.read(connection, line_item, seq, min(ENTRIES_MAX, end - seq), cancelled)
+        if not page.read:
+            break
+        state, seq = fold(state, page.lessons, config), page.end
+        seen(seq)
+    return state
+
+
+def fold_all(connection: Reading, line_item: str, start: bytes, fold: Fold) -> bytes:
+    """The state that the whole stream up to the learner's seq gives, folded from `start`."""
+    end = standing(connection, line_item).seq
+    return fold_until(connection, line_item, Start(0, start), end, fold)
+
+
+def nearest(connection: Reading | Writing, line_item: str, seq: int, fresh: bytes) -> Start:
+    """The newest checkpoint at or before `seq` whose digest matches, else the beginning."""
+    refused = list[int]()
+    for row in connection.execute(_CHECKPOINTS, {"id": line_item, "seq": seq}):
+        if digest_of(bytes(row.state)) == row.digest:
+            return Start(row.seq, bytes(row.state), tuple(refused))
+        refused.append(row.seq)
+    return Start(0, fresh, tuple(refused))
+
+
+def standing(connection: Reading | Writing, line_item: str) -> Standing:
+    """Where the learner of a line item stands."""
+    row = connection.execute(text(_STANDING), {"id": line_item}).one()
+    snapshot = Snapshot(
+        row.snapshot, bytes(row.state), row.digest, row.published_ms, bool(row.halted)
+    )
+    config = read_configs(connection, [line_item])[line_item]
+    return Standing(row.head, row.seq, bytes(row.working), snapshot, config)
+
+
+def put_back(connection: Writing, line_item: str, spans: Iterable[Span], fresh: bytes) -> Start:
+    """
+    Put a learner back before the first cancelled entry and halt its bids until it is refolded.
+
+    The cancellations stand in their table already; the caller holds the lock of the stream.
+    """
+    first = min(span[0] for span in spans)
+    # The teacher may be at work: it is waited for, so that it cannot publish behind us.
+    row = connection.execute(locking(connection, _WORKING), {"id": line_item}).one()
+    start = Start(row.seq, bytes(row.working))
+    if row.seq >= first:
+        start = nearest(connection, line_item, first - 1, fresh)
+    connection.execute(
+        text("DELETE FROM checkpoint WHERE line_item = :id AND seq >= :first"),
+        {"id": line_item, "first": first},
+    )
+    cancelled = lessons.cancellations(connection, line_item)
+    connection.execute(
+        text(
+            "UPDATE learner SET seq = :seq, working = :state, reset_seq = :reset, halted = 1,"
+            " stuck_seq = 0, tries = 0 WHERE line_item = :id"
+        ),
+        {
+            "id": line_item,
+            "seq": start.seq,
+            "state": start.state,
+            "reset": lessons.last_reset(connection, line_item, cancelled),
+        },
+    )
+    announce(connection, "learner", [line_item])
+    return start
+
+
+_CHECKPOINTS = text(
+    "SELECT seq, state, digest FROM checkpoint WHERE line_item = :id AND seq <= :seq"
+    " ORDER BY seq DESC"
+)
+_STANDING = (
+    "SELECT b.seq AS head, l.seq, l.working, l.snapshot, l.state, l.digest, l.published_ms,"
+    " l.halted FROM learner l JOIN balance b ON b.line_item = l.line_item WHERE l.line_item = :id"
+)
+_WORKING = "SELECT seq, working FROM learner WHERE line_item = :id"
