@@ -20,6 +20,7 @@ from service.store import outcomes
 from service.store.database import Database
 from service.store.decisions import quarantine
 from service.store.outcomes import NO_SNAPSHOT, Booked, Booking
+from service.store.quarantines import written
 from service.teaching import weigh
 from service.threads import Threads
 
@@ -139,7 +140,7 @@ class Feedback:
             return Booked("refused", "quarantined")
 
     def _set_aside(self, row: Booking, error: Exception) -> None:
-        body = {"event": type(row.event).__name__, "ref": ref_of(row.event.bid)}
+        body = {**written(row), "ref": ref_of(row.event.bid)}
         self._database.write(
             lambda connection: quarantine(
                 connection,

@@ -8,7 +8,6 @@ quarantine are told in files of their own, and reached through here.
 from __future__ import annotations
 
 import asyncio
-import time
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
 from typing import Any
@@ -23,12 +22,14 @@ from service.configuring import (
     pooled,
     taught_otherwise,
 )
+from service.correcting import Correcting
 from service.decision.learnability import defaults, learnability
 from service.errors import Malformed, StoreAway
 from service.ledger.entries import Entry
 from service.ordering import Orders, repeat_of
+from service.quarantining import Quarantining
 from service.showing import show
-from service.store import changes, epochs, freezes, learners, line_items, reading, workers
+from service.store import changes, epochs, freezes, learners, line_items, reading
 from service.store.books import Books
 from service.store.database import Database, Writing
 from service.store.keys import Key
@@ -39,8 +40,6 @@ from service.winding import Winding
 
 __all__ = ["Key", "Operator", "View"]
 
-IN_FORCE_S = 1.0
-LOOK_S = 0.02
 CHECKPOINT_ENTRIES = 10_000
 
 
@@ -72,6 +71,8 @@ class Operator:
         self._database, self._catalog = database, catalog
         orders = self._orders = Orders(database, threads, news)
         self.winding = Winding(orders, checkpoint_entries)
+        self.correcting = Correcting(orders)
+        self.quarantine = Quarantining(orders, self.winding)
 
     async def key_for(self, bearer: str) -> Key | None:
         """The live key behind a bearer text, or None."""
@@ -181,11 +182,11 @@ class Operator:
             name, source, before = self._frozen(connection, line_item)
             now = self._database.wall_ms()
             freezes.put(connection, name, source, wall_ms=now, actor=actor, reason=reason)
-            return self._stopped(connection, "freeze", name, before, reason, actor)
+            return self._orders.stopped(connection, "freeze", name, before, reason, actor)
 
         wish = {"call": "freeze", "line_item": line_item, "reason": reason}
         answer = await self._orders.give(order, repeat_of(actor, idempotency, wish))
-        return await self._in_force(answer)
+        return await self._orders.in_force(answer)
 
     async def thaw(
         self, line_item: str | None, reason: str, actor: str, idempotency: str | None = None
@@ -196,10 +197,10 @@ class Operator:
             name, source, before = self._frozen(connection, line_item)
             sources = [source] if line_item is None else ["person", "tripwire", "audit"]
             freezes.lift(connection, name, sources)
-            return self._stopped(connection, "thaw", name, before, reason, actor)
+            return self._orders.stopped(connection, "thaw", name, before, reason, actor)
 
         wish = {"call": "thaw", "line_item": line_item, "reason": reason}
-        return await self._in_force(
+        return await self._orders.in_force(
             await self._orders.give(order, repeat_of(actor, idempotency, wish))
         )
 
@@ -259,38 +260,6 @@ class Operator:
         if line_item is None:
             return changes.ALL, "all", freezes.on(connection, [changes.ALL])[changes.ALL]
         return line_item, "person", line_items.one(connection, line_item).freezes
-
-    def _stopped(
-        self,
-        connection: Writing,
-        action: str,
-        name: str,
-        before: Sequence[dict[str, Any]],
-        reason: str,
-        actor: str,
-    ) -> dict[str, Any]:
-        """The common end of freeze and thaw: journal, change number, before and after."""
-        after = freezes.on(connection, sorted({name, changes.ALL}))
-        left = after[changes.ALL] + (after[name] if name != changes.ALL else [])
-        detail = {"before": before, "after": left}
-        self._orders.note(connection, actor, action, name, reason, detail)
-        by_ms = reading.last_expiry_ms(connection, None if name == changes.ALL else name)
-        number = changes.announce(connection, action, [name])
-        shown = None if name == changes.ALL else name
-        return {"line_item": shown, **detail, "change": number, "by_ms": by_ms}
-
-    async def _in_force(self, answer: dict[str, Any]) -> dict[str, Any]:
-        """Wait a moment until every live worker has passed the change; else say by when."""
-        number, by_ms = answer.pop("change"), answer.pop("by_ms")
-        until = time.monotonic() + IN_FORCE_S
-        while True:
-            seen = await self._orders.read(workers.live)
-            # A worker that no longer beats holds slices that end by themselves.
-            if all(passed >= number for passed in seen.values()):
-                return {**answer, "in_force": True, "by": None}
-            if time.monotonic() > until:
-                return {**answer, "in_force": False, "by_ms": by_ms}
-            await asyncio.sleep(LOOK_S)
 
 
 def _view(row: Row, taken: list[str]) -> View:

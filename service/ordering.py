@@ -6,15 +6,20 @@ Apart from the orders themselves, which several files tell.
 from __future__ import annotations
 
 import asyncio
-from collections.abc import Callable, Mapping
+import time
+from collections.abc import Callable, Mapping, Sequence
 from typing import Any
 
+from service.store import changes, freezes, reading, workers
 from service.store.database import Database, Writing
 from service.store.journal import note
 from service.store.repeats import Repeat, once
 from service.threads import Threads
 
 Order = Callable[[Writing], dict[str, Any]]
+
+IN_FORCE_S = 1.0
+LOOK_S = 0.02
 
 
 class Orders:
@@ -59,6 +64,38 @@ class Orders:
             reason=reason,
             detail=detail,
         )
+
+    def stopped(
+        self,
+        connection: Writing,
+        action: str,
+        name: str,
+        before: Sequence[dict[str, Any]],
+        reason: str,
+        actor: str,
+    ) -> dict[str, Any]:
+        """The common end of what stops or allows bids: journal, change number, before, after."""
+        after = freezes.on(connection, sorted({name, changes.ALL}))
+        left = after[changes.ALL] + (after[name] if name != changes.ALL else [])
+        detail = {"before": before, "after": left}
+        self.note(connection, actor, action, name, reason, detail)
+        by_ms = reading.last_expiry_ms(connection, None if name == changes.ALL else name)
+        number = changes.announce(connection, action, [name])
+        shown = None if name == changes.ALL else name
+        return {"line_item": shown, **detail, "change": number, "by_ms": by_ms}
+
+    async def in_force(self, answer: dict[str, Any]) -> dict[str, Any]:
+        """Wait a moment until every live worker has passed the change; else say by when."""
+        number, by_ms = answer.pop("change"), answer.pop("by_ms")
+        until = time.monotonic() + IN_FORCE_S
+        while True:
+            seen = await self.read(workers.live)
+            # A worker that no longer beats holds slices that end by themselves.
+            if all(passed >= number for passed in seen.values()):
+                return {**answer, "in_force": True, "by": None}
+            if time.monotonic() > until:
+                return {**answer, "in_force": False, "by_ms": by_ms}
+            await asyncio.sleep(LOOK_S)
 
 
 def repeat_of(actor: str, key: str | None, wish: Mapping[str, Any]) -> Repeat | None:

@@ -22,6 +22,7 @@ def show(facts: Facts) -> dict[str, Any]:
     return {
         "line_item": facts.row.id,
         "version": facts.row.version,
+        "status": _status({freeze["source"] for freeze in facts.row.freezes}),
         "currency": facts.row.config["currency"],
         "bid": _bid(facts, learnt),
         "certainty": learnt,
@@ -34,6 +35,15 @@ def show(facts: Facts) -> dict[str, Any]:
         "passes_of_last_1000": facts.passes,
         "freezes": facts.row.freezes,
     }
+
+
+def _status(sources: set[str]) -> str:
+    """In one word: what it waits for, if it may not bid."""
+    if "closed" in sources:
+        return "closed"
+    if "restore" in sources:
+        return "reconcile"
+    return "frozen" if sources else "open"
 
 
 def _bid(facts: Facts, learnt: dict[str, Any]) -> dict[str, Any]:

@@ -115,7 +115,7 @@ class Winding:
 
         call = {"call": "retract", "line_item": line_item, "reason": reason, **asdict(wish)}
         answer = await self._orders.give(order, repeat_of(actor, idempotency, call))
-        return await self._published(line_item, answer)
+        return await self.published(line_item, answer)
 
     async def rewind(
         self,
@@ -147,7 +147,7 @@ class Winding:
 
         call = {"call": "rewind", "line_item": line_item, "reason": reason, "to": to, "at": at_ms}
         answer = await self._orders.give(order, repeat_of(actor, idempotency, call))
-        return await self._published(line_item, answer)
+        return await self.published(line_item, answer)
 
     async def _shown(self, preview: Callable[[Reading], dict[str, Any]]) -> dict[str, Any]:
         return dict(await self._orders.read(preview))
@@ -179,7 +179,7 @@ class Winding:
         start = rebuilds.put_back(connection, line_item, taken.spans, FRESH)
         return {**shown, "seq": seq, "refolds_from": start.seq, "before": before}
 
-    async def _published(self, line_item: str, answer: dict[str, Any]) -> dict[str, Any]:
+    async def published(self, line_item: str, answer: dict[str, Any]) -> dict[str, Any]:
         """Refold here and now as far as time allows, and say what the learner knows after."""
         until = time.monotonic() + REFOLD_S_MAX
         database, run = self._orders.database, self._orders.threads.run

@@ -61,6 +61,10 @@ def _apply(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[st
         books.budget = body["budget"]
     elif kind == "edit":
         _edit(books, body["budget"])
+    elif kind == "reversal":
+        _reverse(books, body)
+    elif kind == "reconcile":
+        _reconcile(books, body["spent"])
     elif kind in ("won", "lost", "void", "billed"):
         _outcome(books, spend_on, kind, bid, body)
     elif kind == "conflict" and "said" in body:
@@ -86,6 +90,24 @@ def _edit(books: Replayed, budget: int) -> None:
     funded = min(books.unfunded, max(0, budget - books.spent - held))
     books.spent, books.unfunded = books.spent + funded, books.unfunded - funded
     books.budget = budget
+
+
+def _reverse(books: Replayed, body: Mapping[str, Any]) -> None:
+    """A refund pays what found no money first, and only then lowers spend and its day."""
+    debt = min(books.unfunded, body["amount"])
+    books.unfunded, rest = books.unfunded - debt, body["amount"] - debt
+    books.spent -= rest
+    if body["slice"] is not None:
+        day = books.days.setdefault(body["day"], [0, 0])
+        day[0] -= min(rest, day[0])
+
+
+def _reconcile(books: Replayed, spent: int) -> None:
+    """What was confirmed beyond the books is spent as far as there is money for it."""
+    held = sum(left + owed for _, left, owed, _ in books.slices.values())
+    missing = spent - books.spent - books.unfunded
+    inside = min(missing, max(0, books.budget - books.spent - held))
+    books.spent, books.unfunded = books.spent + inside, books.unfunded + missing - inside
 
 
 def _outcome(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[str, Any]) -> None:

@@ -54,9 +54,10 @@ STANDING = {
 }
 # All slices and whole streams: asked by the command.
 WHOLE = {
-    "V3 accepted costs = spent + unfunded + disputed": (
+    "V3 accepted costs - reversals = spent + unfunded + disputed": (
         "SELECT b.line_item, b.spent + b.unfunded + b.disputed - coalesce(s.total, 0) AS off"
-        " FROM balance b LEFT JOIN (SELECT line_item, sum(cost) AS total FROM stream"
+        " FROM balance b LEFT JOIN (SELECT line_item,"
+        " sum(CASE kind WHEN 'reversal' THEN -cost ELSE cost END) AS total FROM stream"
         " GROUP BY line_item) s ON s.line_item = b.line_item"
         " WHERE b.spent + b.unfunded + b.disputed <> coalesce(s.total, 0)"
     ),

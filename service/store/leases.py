@@ -76,8 +76,12 @@ def lease(
         books = Books(connection, [r.line_item for r in requests], wall_ms)
         configs = read_configs(connection, list(books.accounts))
         lenders = _Lenders(connection, worker, lease_s * 1000)
+        # Workers that have not heard yet would still ask; here it cannot be missed.
+        ended = _ended(connection, list(configs))
         answers = [
-            lenders.lend(books, configs[r.line_item], r, wall_ms)
+            Denied(r.line_item, "frozen")
+            if r.line_item in ended
+            else lenders.lend(books, configs[r.line_item], r, wall_ms)
             for r in requests
             if r.line_item in configs
         ]
@@ -85,6 +89,14 @@ def lease(
         return answers
 
     return database.write(work)
+
+
+def _ended(connection: Writing, line_items: list[str]) -> set[str]:
+    """Those that were closed, or wait for somebody to confirm their spend after a restore."""
+    statement = among(
+        "SELECT line_item FROM freezing WHERE line_item IN :ids AND source IN ('closed', 'restore')"
+    )
+    return set(connection.execute(statement, {"ids": line_items}).scalars())
 
 
 class _Lenders:
