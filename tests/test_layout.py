@@ -33,7 +33,8 @@ OWN: dict[str, set[str]] = {
     "rehearsal": {"decision", "learner", "guard", "ledger", "money", "errors"},
     **dict.fromkeys(STORIES | SHARED, PURE | SHARED | {"store", "settings"}),
     # Of the store only its named reads, of the decision only the form a bid takes.
-    "api": STORIES | {"errors", "money", "store.reading", "decision.opportunity", "configuring"},
+    "api": STORIES
+    | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from typing import Any
 
 from fastapi import APIRouter, FastAPI
@@ -23,6 +24,9 @@ Send no personal data and no protected traits, in features, ids or reasons; cons
 law come first. Nothing here is legal advice: ask licensed counsel."""
 
 router = APIRouter()
+
+_IN_PATHS = re.compile(r"{([a-z_]+)}")
+_WHOLE = ("limit", "before", "number")
 
 FILES = ("swagger-ui.css", "swagger-ui-bundle.js", "favicon-32x32.png")
 PAGE = """<!doctype html>
@@ -130,12 +134,12 @@ def _parameter(name: str, place: str) -> dict[str, Any]:
         "name": name,
         "in": place,
         "required": name == "If-Match" or place == "path",
-        "schema": {"type": "integer" if name == "limit" else "string"},
+        "schema": {"type": "integer" if name in _WHOLE else "string"},
     }
 
 
 def _name_paths(document: dict[str, Any]) -> None:
     for path, operations in document["paths"].items():
-        if "{line_item_id}" in path:
+        for name in _IN_PATHS.findall(path):
             for operation in operations.values():
-                operation.setdefault("parameters", []).append(_parameter("line_item_id", "path"))
+                operation.setdefault("parameters", []).append(_parameter(name, "path"))

@@ -15,6 +15,7 @@ LIMIT_DEFAULT, LIMIT_MAX = 50, 200
 
 _VERSION = re.compile(r'"([0-9]{1,18})"')
 _LIMIT = re.compile(r"[0-9]{1,4}")
+_NUMBER = re.compile(r"[0-9]{1,15}")
 
 
 def etag(version: int) -> str:
@@ -86,3 +87,21 @@ def page(request: Request) -> tuple[str | None, int]:
     if not _LIMIT.fullmatch(limit) or not 1 <= int(limit) <= LIMIT_MAX:
         raise bad_field("limit", f"It must be a whole number from 1 to {LIMIT_MAX}.")
     return after, int(limit)
+
+
+def numbered_page(request: Request) -> tuple[int | None, int]:
+    """
+    Before which number a list goes on, newest first, and how many it may hold.
+
+    Raises:
+        Malformed: Another parameter, one twice, no number, or a limit outside 1 to 200.
+    """
+    given = request.query_params
+    if set(given) - {"before", "limit"} or len(given.multi_items()) != len(given):
+        raise bad_field("query", "The parameters are before and limit, once each.")
+    before, limit = given.get("before"), given.get("limit", str(LIMIT_DEFAULT))
+    if before is not None and not _NUMBER.fullmatch(before):
+        raise bad_field("before", "It must be the number of a row.")
+    if not _LIMIT.fullmatch(limit) or not 1 <= int(limit) <= LIMIT_MAX:
+        raise bad_field("limit", f"It must be a whole number from 1 to {LIMIT_MAX}.")
+    return None if before is None else int(before), int(limit)

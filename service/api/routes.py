@@ -4,7 +4,16 @@ from __future__ import annotations
 
 from fastapi import FastAPI
 
-from service.api import bids, documentation, health, line_items, orders, outcomes
+from service.api import (
+    bids,
+    corrections,
+    documentation,
+    health,
+    line_items,
+    orders,
+    outcomes,
+    winding,
+)
 from service.api.problems import install_handlers
 
 ROUTERS = (
@@ -12,6 +21,8 @@ ROUTERS = (
     outcomes.router,
     line_items.router,
     orders.router,
+    winding.router,
+    corrections.router,
     health.router,
     documentation.router,
 )

@@ -126,7 +126,9 @@ WRITING = [
     ("POST", "/v1/outcomes"),
     ("POST", "/v1/line-items"),
     ("PATCH", ONE),
-    *(("POST", f"{ONE}/{order}") for order in ("freeze", "thaw", "reset")),
+    *(("POST", f"{ONE}/{order}") for order in ("freeze", "thaw", "reset", "close")),
+    *(("POST", f"{ONE}/{order}") for order in ("retract", "rewind", "reverse", "reconcile")),
+    *(("POST", f"{ONE}/quarantine/1/{order}") for order in ("retry", "release")),
     ("POST", "/v1/freeze"),
     ("POST", "/v1/thaw"),
 ]

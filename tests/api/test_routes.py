@@ -188,6 +188,11 @@ SCOPES = [
     *(("POST", f"/v1/line-items/a/{order}", "operate") for order in ("freeze", "thaw", "reset")),
     ("POST", "/v1/freeze", "operate"),
     ("POST", "/v1/thaw", "operate"),
+    *(
+        ("POST", f"/v1/line-items/a/{order}", "operate")
+        for order in ("retract", "rewind", "reverse", "reconcile", "close")
+    ),
+    ("GET", "/v1/line-items/a/quarantine", "read"),
 ]
 
 

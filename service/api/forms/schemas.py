@@ -10,7 +10,13 @@ from pydantic.json_schema import models_json_schema
 from service.api.forms.bids import BatchForm, BidForm
 from service.api.forms.changes import ChangeForm, FlightChange, ValueChange
 from service.api.forms.line_items import CreateForm
-from service.api.forms.orders import OrderForm
+from service.api.forms.orders import (
+    OrderForm,
+    ReconcileForm,
+    RetractForm,
+    ReverseForm,
+    RewindForm,
+)
 from service.api.forms.outcomes import FORMS, OutcomesForm
 
 _FORMS: tuple[type[BaseModel], ...] = (
@@ -21,6 +27,10 @@ _FORMS: tuple[type[BaseModel], ...] = (
     CreateForm,
     ChangeForm,
     OrderForm,
+    RetractForm,
+    RewindForm,
+    ReverseForm,
+    ReconcileForm,
 )
 _PROBLEM: dict[str, Any] = {
     "type": "object",
