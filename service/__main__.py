@@ -13,7 +13,9 @@ from types import ModuleType
 from service.errors import BidkeelError
 
 Load = Callable[[], ModuleType]
-EXIT_CODES = "exit codes: 0 done, 1 refused or failed, 2 wrong usage, 3 the audit found something"
+EXIT_CODES = (
+    "exit codes: 0 done, 1 refused or failed, 2 wrong usage, 3 audit or rebuild found something"
+)
 
 
 def _serve() -> ModuleType:
@@ -44,6 +46,24 @@ def _audit() -> ModuleType:
     from service.commands import audit
 
     return audit
+
+
+def _rebuild() -> ModuleType:
+    from service.commands import rebuild
+
+    return rebuild
+
+
+def _backup() -> ModuleType:
+    from service.commands import backup
+
+    return backup
+
+
+def _restore() -> ModuleType:
+    from service.commands import restore
+
+    return restore
 
 
 def _bench_real() -> ModuleType:
@@ -94,6 +114,9 @@ COMMANDS: dict[str, tuple[str, Load]] = {
     "migrate": ("bring the database to the schema of this release", _migrate),
     "keys": ("add, list and end access keys", _keys),
     "audit": ("check every promise on the database as it is", _audit),
+    "rebuild": ("fold learners from zero and compare with what is published", _rebuild),
+    "backup": ("write a consistent copy of the database while it is served", _backup),
+    "restore": ("put a backup in place of the database, spend to be confirmed", _restore),
 }
 BENCHES: dict[str, tuple[str, Load]] = {
     "real": ("play real sealed-bid auctions through a real server", _bench_real),

@@ -24,6 +24,7 @@ from service.guard.ticket import TicketKeys
 from service.leasing import Leasing
 from service.operating import Operator
 from service.settings import Settings
+from service.store import incarnations
 from service.store.database import Database
 from service.store.facts import fact
 from service.store.migrate import require_current
@@ -96,7 +97,7 @@ def _build(
     worker = f"{os.getpid()}-{secrets.token_hex(4)}"
     news = asyncio.Event()
     keys = TicketKeys(_ticket_keys(settings, database))
-    incarnation = bytes.fromhex(database.read(lambda c: fact(c, "incarnation")))
+    incarnation = bytes.fromhex(database.write(incarnations.current))
     catalog = Catalog(database, threads)
     leasing = Leasing(database, threads, worker, settings.lease_s)
     clocks = Clocks(settings.deadline_ms, settings.deadline_ms_max)

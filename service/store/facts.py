@@ -4,10 +4,10 @@ from __future__ import annotations
 
 from sqlalchemy import text
 
-from service.store.database import Reading
+from service.store.database import Reading, Writing
 
 
-def fact(connection: Reading, name: str) -> str:
+def fact(connection: Reading | Writing, name: str) -> str:
     """The value of one fact."""
     return str(
         connection.execute(

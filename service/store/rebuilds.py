@@ -90,6 +90,72 @@ def standing(connection: Reading | Writing, line_item: str) -> Standing:
     return Standing(row.head, row.seq, bytes(row.working), snapshot, config)
 
 
+@dataclass(frozen=True, slots=True)
+class Rebuilt:
+    """
+    What folding again came to; digests of the states, and every difference in words.
+
+    Args:
+        seq: Up to where was folded.
+        checkpoint: The seq of the checkpoint that the second fold went on from, or 0.
+        refused: Checkpoints whose digest does not match.
+    """
+
+    line_item: str
+    seq: int
+    checkpoint: int
+    refused: tuple[int, ...]
+    digest: str
+    differences: tuple[str, ...]
+
+
+def rebuild(
+    connection: Reading,
+    line_item: str,
+    to: int | None,
+    fresh: bytes,
+    fold: Fold,
+    seen: Seen = lambda seq: None,
+) -> Rebuilt:
+    """
+    Fold from zero and from the nearest checkpoint, and compare both with what is published.
+
+    Args:
+        to: An earlier seq instead of the learner's; then nothing published is compared.
+    """
+    now = standing(connection, line_item)
+    end = now.seq if to is None else min(to, now.head)
+    cancelled = lessons.cancellations(connection, line_item)
+    first = min(now.snapshot.seq, end) if to is None else 0
+
+    def on(start: Start, until: int) -> bytes:
+        return fold_until(connection, line_item, start, until, fold, cancelled, seen)
+
+    early = on(Start(0, fresh), first)
+    whole = on(Start(first, early), end)
+    start = nearest(connection, line_item, end, fresh)
+    tail = on(start, end)
+    differences = [f"checkpoint {seq} is damaged and was refused" for seq in start.refused]
+    if tail != whole:
+        differences.append(f"checkpoint {start.seq} and what follows differ from the fold")
+    if to is None:
+        differences += _standing_differences(now, early, whole)
+    return Rebuilt(line_item, end, start.seq, start.refused, digest_of(whole), tuple(differences))
+
+
+def _standing_differences(now: Standing, early: bytes, whole: bytes) -> list[str]:
+    found = []
+    if now.working != whole:
+        found.append(f"the learner's state at {now.seq} differs from the fold")
+    if not now.snapshot.sound:
+        found.append(f"the published snapshot {now.snapshot.seq} is damaged")
+    # While it is being refolded what is published is known to be of the past.
+    refolding = now.snapshot.halted or now.seq < now.snapshot.seq
+    if not refolding and now.snapshot.sound and now.snapshot.state != early:
+        found.append(f"the published snapshot {now.snapshot.seq} differs from the fold")
+    return found
+
+
 def put_back(connection: Writing, line_item: str, spans: Iterable[Span], fresh: bytes) -> Start:
     """
     Put a learner back before the first cancelled entry and halt its bids until it is refolded.

@@ -189,3 +189,20 @@ def test_a_stopped_server_gives_its_slices_back(migrated_url: str, tmp_path: Pat
 
     assert bid["bid_cpm"] == 8.0
     assert held == 8_000_000
+
+
+def test_a_backup_is_written_and_restored(run: Run, tmp_path: Path) -> None:
+    """Both say what to do next; a backup overwrites nothing and a served file is not restored."""
+    assert run("migrate").returncode == 0
+    done = run("backup", "copy")
+    assert (done.returncode, "keep it as secret" in done.stdout) == (0, True)
+    assert "overwrites nothing" in run("backup", "copy").stderr
+    done = run("restore", "copy")
+    assert (done.returncode, "/reconcile" in done.stdout) == (0, True)
+    assert "kept as" in done.stdout
+    assert run("restore", "nothing").returncode == 1
+    environment = {"BIDKEEL_DATABASE_URL": f"sqlite:///{tmp_path}/bidkeel.sqlite"}
+    with ServerProcess(tmp_path, environment):
+        refused = run("restore", "copy")
+        assert run("backup", "online").returncode == 0
+    assert (refused.returncode, "Another process" in refused.stderr) == (1, True)
