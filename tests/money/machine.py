@@ -25,7 +25,7 @@ from tests.money.scene import (
 
 TABLES = (
     *("stream", "slice", "local_day", "learner", "checkpoint", "freezing", "journal"),
-    *("change_log", "worker", "quarantine", "balance", "line_item"),
+    *("change_log", "worker", "quarantine", "cancelled", "balance", "line_item"),
 )
 BUDGET = 150
 EXCESS = 3  # How far above its bid a price may lie.
