@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 from typing import Any
 
 import pytest
@@ -262,6 +263,26 @@ async def test_a_damaged_checkpoint_is_refused_and_an_earlier_one_used(migrated_
         head = worker.balance()["seq"]
         start = worker.database.read(lambda c: rebuilds.nearest(c, NAME, head, FRESH))
         assert (start.seq, start.refused) == (head, ())
+
+
+async def test_wins_that_race_an_order_are_before_or_behind_it(migrated_url: str) -> None:
+    """What the stream took before the order is cancelled, what it took after is not."""
+    async with working(migrated_url) as worker:
+        await worker.create(policy=MEAN)
+        await history(worker, 4)
+        bids = [await worker.bid(source="north") for _ in range(30)]
+        reports = [worker.report(Report("won", bid.ticket, clearing=PRICE)) for bid in bids]
+        told, *_ = await asyncio.gather(
+            retract(worker, Retraction("both", source="north")), *reports
+        )
+        wins = seqs(worker, "kind = 'won' AND body LIKE '%north%'")
+        before = {seq for seq in wins if seq < told["seq"]}
+        gone = {n for first, last in told["spans"] for n in range(first, last + 1)}
+        assert told["spans_in_all"] == len(told["spans"])
+        assert before <= gone
+        await worker.learn()
+        assert published(worker).state == never_seen(worker, gone) == from_zero(worker)
+        assert total(published(worker).state).wins == 2 + len(wins - before)
 
 
 async def test_what_cannot_be_ordered_is_refused(migrated_url: str) -> None:
