@@ -175,7 +175,7 @@ class Winding:
         seq = books.accounts[line_item].seq
         detail = {"seq": seq, **said, "counts": taken.counts, "before": before}
         self._orders.note(connection, actor, kind, line_item, reason, detail)
-        lessons.cancel(connection, line_item, seq, taken.spans)
+        lessons.cancel(connection, line_item, seq, said["part"], taken.spans)
         start = rebuilds.put_back(connection, line_item, taken.spans, FRESH)
         return {**shown, "seq": seq, "refolds_from": start.seq, "before": before}
 

@@ -10,7 +10,7 @@ import pytest
 from service.errors import Malformed, NotFound
 from service.feedback import Report
 from service.learner.memory import Memory
-from service.ledger.cancelling import PARTS
+from service.ledger.cancelling import PARTS, Cancelled
 from service.store import learners, lessons, line_items, rebuilds
 from service.store.rebuilds import Start
 from service.teaching import FRESH, lesson
@@ -50,7 +50,7 @@ def never_seen(worker: Worker, seqs: set[int]) -> bytes:
     """A learner over the same stream from which these entries are missing, by hand."""
 
     def fold(connection: Any) -> bytes:
-        page = lessons.read(connection, NAME, 0, 10_000, lessons.Cancelled())
+        page = lessons.read(connection, NAME, 0, 10_000, Cancelled())
         kept = [one for n, one in zip(page.seqs, page.lessons, strict=True) if n not in seqs]
         return lesson(FRESH, kept, line_items.one(connection, NAME).config)
 
@@ -110,7 +110,7 @@ async def test_nobody_bids_until_the_refolded_snapshot_is_out(migrated_url: str)
         def halt(connection: Any) -> None:
             cut = [(2, 6, "all")]
             seq = rebuilds.standing(connection, NAME).head
-            lessons.cancel(connection, NAME, seq, cut)
+            lessons.cancel(connection, NAME, seq, "all", cut)
             rebuilds.put_back(connection, NAME, cut, FRESH)
 
         worker.database.write(halt)

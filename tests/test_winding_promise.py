@@ -9,7 +9,7 @@ import numpy
 import pytest
 
 from service.feedback import Report
-from service.ledger.cancelling import PARTS
+from service.ledger.cancelling import PARTS, Cancelled
 from service.store import learners, lessons, rebuilds
 from service.teaching import FRESH, lesson
 from service.winding import Retraction
@@ -113,7 +113,7 @@ def agree(worker: Worker) -> None:
     snapshot = read(lambda c: learners.snapshots(c, [NAME]))[NAME]
     assert not snapshot.halted
     for seq in worker.column("SELECT seq FROM checkpoint"):
-        before = read(lambda c, seq=seq: rebuilds.rebuild(c, NAME, seq, FRESH, lesson))
+        before = rebuilt_to(worker, seq)
         assert (before.differences, before.checkpoint) == ((), seq)
     # The projection of what is cancelled is what the stream itself says.
     told = read(lambda c: lessons.cancellations(c, NAME))
@@ -125,13 +125,18 @@ def agree(worker: Worker) -> None:
     }
 
 
-def cancelled_by_stream(worker: Worker) -> lessons.Cancelled:
+def rebuilt_to(worker: Worker, seq: int) -> rebuilds.Rebuilt:
+    """The learner as it was at a seq, folded twice."""
+    return worker.database.read(lambda c: rebuilds.rebuild(c, NAME, seq, FRESH, lesson))
+
+
+def cancelled_by_stream(worker: Worker) -> Cancelled:
     """The cancellations as the entries tell them."""
     spans = []
     for body in worker.column("SELECT body FROM stream WHERE kind IN ('retract', 'rewind')"):
         told = json.loads(body)
         spans += [(first, last, told["part"]) for first, last in told["cancels"]]
-    return lessons.Cancelled(spans)
+    return Cancelled(spans)
 
 
 @pytest.mark.parametrize("changes", METHODS, ids=["once", "accrues", "tree", "billed"])

@@ -113,10 +113,9 @@ CREATE TABLE learner (
 CREATE TABLE cancelled (
     line_item TEXT NOT NULL REFERENCES line_item (id),
     by_seq BIG NOT NULL,
-    first_seq BIG NOT NULL,
-    last_seq BIG NOT NULL CHECK (first_seq <= last_seq AND last_seq < by_seq),
     part TEXT NOT NULL CHECK (part IN ('value', 'market', 'both', 'all')),
-    PRIMARY KEY (line_item, by_seq, first_seq)
+    spans TEXT NOT NULL,
+    PRIMARY KEY (line_item, by_seq)
 ) STRICTLY;
 CREATE TABLE checkpoint (
     line_item TEXT NOT NULL REFERENCES line_item (id),

@@ -167,18 +167,20 @@ def retold(rows: Sequence[Told], cancelled: Cancelled) -> dict[int, Body | None]
     return told
 
 
-def _merged(spans: list[Span], part: str) -> list[tuple[int, int]]:
-    runs = list[tuple[int, int]]()
-    for first, last, covered in sorted(spans):
-        if part not in COVERS[covered]:
-            continue
-        if runs and first <= runs[-1][1] + 1:
-            runs[-1] = (runs[-1][0], max(last, runs[-1][1]))
+Runs = tuple[list[int], list[int]]  # First and last seqs of runs that do not touch, in order.
+
+
+def _merged(spans: list[Span], part: str) -> Runs:
+    firsts, lasts = list[int](), list[int]()
+    for first, last, _ in sorted(span for span in spans if part in COVERS[span[2]]):
+        if lasts and first <= lasts[-1] + 1:
+            lasts[-1] = max(last, lasts[-1])
         else:
-            runs.append((first, last))
-    return runs
+            firsts.append(first)
+            lasts.append(last)
+    return firsts, lasts
 
 
-def _inside(runs: list[tuple[int, int]], seq: int) -> bool:
-    at = bisect_right(runs, seq, key=lambda run: run[0])
-    return at > 0 and runs[at - 1][1] >= seq
+def _inside(runs: Runs, seq: int) -> bool:
+    at = bisect_right(runs[0], seq)
+    return at > 0 and runs[1][at - 1] >= seq

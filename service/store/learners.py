@@ -159,7 +159,7 @@ def _set_aside(connection: Writing, line_item: str, taught: _Taught, now: int) -
     books.post(line_item, Entry("quarantine", body))
     books.save()
     by_seq = books.accounts[line_item].seq
-    lessons.cancel(connection, line_item, by_seq, [(taught.poison, taught.poison, ALL)])
+    lessons.cancel(connection, line_item, by_seq, ALL, [(taught.poison, taught.poison, ALL)])
     quarantine(connection, line_item, taught.error, {"event": "Lesson"}, now, taught.poison)
     unstuck = {"seq": row.seq, "state": bytes(row.working), "stuck": 0, "tries": 0}
     connection.execute(_LEARN, {"id": line_item, **unstuck})

@@ -57,28 +57,26 @@ def read(
 def cancellations(connection: Reading | Writing, line_item: str) -> Cancelled:
     """What is cancelled on a stream."""
     rows = connection.execute(_CANCELLED, {"id": line_item})
+    spans = [(first, last, row.part) for row in rows for first, last in json.loads(row.spans)]
     paid_by = read_configs(connection, [line_item])[line_item]["spend_on"]
-    return Cancelled(((row.first_seq, row.last_seq, row.part) for row in rows), paid_by)
+    return Cancelled(spans, paid_by)
 
 
-def cancel(connection: Writing, line_item: str, by_seq: int, spans: Iterable[Span]) -> None:
-    """Note what an entry of the stream cancels; the entry says the same."""
-    rows = [
-        {"id": line_item, "by": by_seq, "first": first, "last": last, "part": part}
-        for first, last, part in spans
-    ]
-    if rows:
-        connection.execute(_CANCEL, rows)
+def cancel(
+    connection: Writing, line_item: str, by_seq: int, part: str, spans: Iterable[Span]
+) -> None:
+    """Note what an entry of the stream cancels of one part; the entry says the same."""
+    # In one row: an order may name ten thousands of spans, and every page of lessons reads them.
+    told = json.dumps([[first, last] for first, last, _ in spans])
+    row = {"id": line_item, "by": by_seq, "part": part, "spans": told}
+    connection.execute(_CANCEL, row)
 
 
 def uncancel(connection: Writing, line_item: str, seq: int) -> None:
     """Let one entry that was set aside alone teach again."""
     connection.execute(
-        text(
-            "DELETE FROM cancelled WHERE line_item = :id AND first_seq = :seq"
-            " AND last_seq = :seq AND part = 'all'"
-        ),
-        {"id": line_item, "seq": seq},
+        text("DELETE FROM cancelled WHERE line_item = :id AND part = 'all' AND spans = :spans"),
+        {"id": line_item, "spans": json.dumps([[seq, seq]])},
     )
 
 
@@ -157,10 +155,7 @@ _KINDS = among(
     " ORDER BY seq",
     "kinds",
 )
-_CANCELLED = text(
-    "SELECT first_seq, last_seq, part FROM cancelled WHERE line_item = :id ORDER BY by_seq"
-)
+_CANCELLED = text("SELECT part, spans FROM cancelled WHERE line_item = :id ORDER BY by_seq")
 _CANCEL = text(
-    "INSERT INTO cancelled (line_item, by_seq, first_seq, last_seq, part)"
-    " VALUES (:id, :by, :first, :last, :part)"
+    "INSERT INTO cancelled (line_item, by_seq, part, spans) VALUES (:id, :by, :part, :spans)"
 )
