@@ -14,7 +14,7 @@ from service.learner.exptree_law import Law
 from service.learner.exptree_state import Tree
 from service.learner.memory import Memory
 from service.learner.rules import tree_rules
-from service.store import epochs, learners
+from service.store import epochs, learners, rebuilds
 from service.teaching import FRESH, lesson
 from tests.builders import CAP, NAME, UNIT, Worker, working
 
@@ -87,7 +87,7 @@ def entries(worker: Worker, kind: str) -> list[dict[str, Any]]:
 
 def check_refolds(worker: Worker) -> None:
     """The published state is that of the whole stream, folded from zero."""
-    again = worker.database.read(lambda c: learners.fold_all(c, NAME, FRESH, lesson))
+    again = worker.database.read(lambda c: rebuilds.fold_all(c, NAME, FRESH, lesson))
     assert again == snapshot(worker).state != FRESH
 
 

@@ -10,7 +10,7 @@ import pytest
 from service.errors import Malformed
 from service.feedback import Report
 from service.learner.memory import Memory, Prior
-from service.store import learners
+from service.store import learners, rebuilds
 from service.teaching import FRESH, lesson
 from tests.builders import CAP, NAME, UNIT, Worker, append, valued, won, working
 
@@ -34,7 +34,7 @@ def memory(worker: Worker, name: str = NAME) -> Memory:
 
 def check_refolds(worker: Worker, name: str = NAME) -> None:
     """The published state is that of the whole stream, folded from zero."""
-    again = worker.database.read(lambda c: learners.fold_all(c, name, FRESH, lesson))
+    again = worker.database.read(lambda c: rebuilds.fold_all(c, name, FRESH, lesson))
     assert again == snapshot(worker, name).state != FRESH
 
 
