@@ -58,6 +58,8 @@ ALTERATIONS = [
     ("UPDATE local_day SET budget = 20, target = 20", "V1"),
     ("UPDATE local_day SET budget = budget + 1", "V1"),
     ("UPDATE balance SET held = held + 1", "V2 V7"),
+    ("UPDATE stream SET body = 'no json' WHERE kind = 'lease'", "V7"),
+    ("UPDATE stream SET body = '{}' WHERE kind = 'won'", "V7"),
     ("UPDATE balance SET held = held - 1, spent = spent + 1", "V2 V3 V7"),
     ("UPDATE local_day SET held = held - 1", "V2"),
     ("UPDATE slice SET remaining = remaining - 1", "V2"),
