@@ -87,6 +87,29 @@ async def test_a_refund_without_a_ref_repeats_by_its_key(migrated_url: str) -> N
         assert (worker.balance()["spent"], worker.audit()) == (0, [])
 
 
+async def test_a_refund_of_debt_lowers_no_spend(migrated_url: str) -> None:
+    """What found no money is taken back first; the stream replayed says the same."""
+    async with working(migrated_url) as worker:
+        await worker.create(budget=8 * PRICE, daily_budget=8 * PRICE)
+        bids = await worker.bids(4)
+        await worker.upkeep.give_back()
+        worker.pass_service_ms(GRACE_MS + 60_000)
+        await worker.upkeep.keep_time()
+        changed = {"budget": PRICE, "bid_cap": PRICE}
+        await worker.operator.patch(NAME, changed, 1, None, "a try", "tester")
+        for bid in bids:
+            await worker.report(Report("won", bid.ticket, clearing=PRICE))
+        money = worker.balance()
+        assert (money["spent"], money["unfunded"]) == (PRICE, 3 * PRICE)
+        await reverse(worker, PRICE, bids[3].ref)
+        await reverse(worker, PRICE * 5 // 2)
+        money = worker.balance()
+        assert (money["spent"], money["unfunded"]) == (PRICE // 2, 0)
+        assert worker.audit() == []
+        await reverse(worker, PRICE // 2, bids[0].ref)
+        assert (worker.balance()["spent"], worker.audit()) == (0, [])
+
+
 async def test_only_a_bid_that_cost_something_is_refunded(migrated_url: str) -> None:
     """No ref, a ref of nobody, a bid that lost."""
     async with working(migrated_url) as worker:
