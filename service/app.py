@@ -18,6 +18,7 @@ from service.api.routes import install
 from service.backlog import Backlog
 from service.bidding import Bidder, Clocks
 from service.catalog import Catalog
+from service.clerk import Clerk, Habits
 from service.connecting import open_database
 from service.feedback import Feedback
 from service.guard.ticket import TicketKeys
@@ -43,12 +44,33 @@ class Stories:
     operator: Operator
 
 
-def create_app(settings: Settings) -> FastAPI:
+@dataclass(frozen=True, slots=True)
+class Post:
+    """
+    The place of one process among those that serve.
+
+    Args:
+        worker: Its id, which no other worker ever had.
+        predecessor: The worker that stood here before and is known to be dead.
+        clerk: Whether the clerk's duties are done here too, and not in a process of their own.
+    """
+
+    worker: str
+    predecessor: str | None = None
+    clerk: bool = True
+
+
+def new_worker() -> str:
+    """An id that no two workers of any hosts share."""
+    return f"{os.getpid()}-{secrets.token_hex(8)}"
+
+
+def create_app(settings: Settings, post: Post | None = None) -> FastAPI:
     """The service under these settings; nothing is opened before its lifespan begins."""
 
     @asynccontextmanager
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
-        async with running(settings) as stories:
+        async with running(settings, post or Post(new_worker())) as stories:
             app.state.stories = stories
             yield
             app.state.stories = None
@@ -62,9 +84,30 @@ def create_app(settings: Settings) -> FastAPI:
 
 
 @asynccontextmanager
-async def running(settings: Settings) -> AsyncIterator[Stories]:
+async def running(settings: Settings, post: Post) -> AsyncIterator[Stories]:
     """
     One worker, from the first connection to the last slice given back.
+
+    Raises:
+        Unsafe: The database is of another schema or may forget what it acknowledged.
+        StoreAway: It does not answer.
+    """
+    async with opened(settings) as (database, threads):
+        stories, upkeep, loops = _build(settings, post, database, threads)
+        await upkeep.start(post.predecessor)
+        if post.clerk:
+            clerk = clerk_of(settings, database, threads)
+            await clerk.start()
+            loops += clerk.duties()
+        async with on_duty(loops):
+            yield stories
+        await upkeep.stop()
+
+
+@asynccontextmanager
+async def opened(settings: Settings) -> AsyncIterator[tuple[Database, Threads]]:
+    """
+    The database, found safe and of our schema, and the threads that talk to it.
 
     Raises:
         Unsafe: The database is of another schema or may forget what it acknowledged.
@@ -76,53 +119,51 @@ async def running(settings: Settings) -> AsyncIterator[Stories]:
         # Better not to start than to promise on a database that forgets, or that we misread.
         database.check_safe()
         require_current(database)
-        stories, upkeep, loops = _build(settings, database, threads)
-        await upkeep.start()
-        tasks = [asyncio.create_task(duty) for duty in loops]
-        for task in tasks:
-            task.add_done_callback(_stop_if_broken)
-        yield stories
-        for task in tasks:
-            task.cancel()
-        await asyncio.gather(*tasks, return_exceptions=True)
-        await upkeep.stop()
+        yield database, threads
     finally:
         threads.close()
         database.close()
 
 
+@asynccontextmanager
+async def on_duty(loops: list[Coroutine[Any, Any, None]]) -> AsyncIterator[None]:
+    """Run the loops beside the block; whatever each has begun is done when this returns."""
+    tasks = [asyncio.create_task(duty) for duty in loops]
+    for task in tasks:
+        task.add_done_callback(_stop_if_broken)
+    yield
+    for task in tasks:
+        task.cancel()
+    await asyncio.gather(*tasks, return_exceptions=True)
+
+
+def clerk_of(settings: Settings, database: Database, threads: Threads) -> Clerk:
+    """The clerk under these settings."""
+    habits = Habits(
+        settings.teach_ms,
+        settings.checkpoint_entries,
+        settings.decision_keep_days,
+    )
+    return Clerk(database, threads, habits)
+
+
 def _build(
-    settings: Settings, database: Database, threads: Threads
+    settings: Settings, post: Post, database: Database, threads: Threads
 ) -> tuple[Stories, Upkeep, list[Coroutine[Any, Any, None]]]:
-    worker = f"{os.getpid()}-{secrets.token_hex(4)}"
     news = asyncio.Event()
     keys = TicketKeys(_ticket_keys(settings, database))
     incarnation = bytes.fromhex(database.write(incarnations.current))
     catalog = Catalog(database, threads)
-    leasing = Leasing(database, threads, worker, settings.lease_s)
+    leasing = Leasing(database, threads, post.worker, settings.lease_s)
     clocks = Clocks(settings.deadline_ms, settings.deadline_ms_max)
     backlog = Backlog(settings.decision_queue_max)
     bidder = Bidder(catalog, leasing, keys, incarnation, clocks, backlog)
     feedback = Feedback(database, threads, keys, incarnation)
     operator = Operator(database, threads, catalog, news, settings.checkpoint_entries)
-    rhythm = Rhythm(
-        settings.change_poll_ms,
-        settings.tick_s,
-        settings.teach_ms,
-        settings.clock_step_ms_max,
-        settings.checkpoint_entries,
-        settings.decision_keep_days,
-    )
-    upkeep = Upkeep(database, threads, worker, catalog, leasing, backlog, news, rhythm)
-    return (
-        Stories(bidder, feedback, operator),
-        upkeep,
-        [
-            leasing.run(),
-            feedback.run(),
-            *upkeep.duties(),
-        ],
-    )
+    rhythm = Rhythm(settings.change_poll_ms, settings.tick_s, settings.clock_step_ms_max)
+    upkeep = Upkeep(database, threads, post.worker, catalog, leasing, backlog, news, rhythm)
+    loops = [leasing.run(), feedback.run(), *upkeep.duties()]
+    return Stories(bidder, feedback, operator), upkeep, loops
 
 
 def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:

@@ -101,6 +101,9 @@ class Leasing:
             return
         try:
             await self._threads.run(leases.retire, self._database, [_report(g) for g in given])
+        except asyncio.CancelledError:
+            self.hand.given = given + self.hand.given
+            raise
         except StoreAway:
             # Perhaps it was freed: retiring again then touches no row.
             self.hand.given = given + self.hand.given
@@ -146,12 +149,18 @@ class Leasing:
             answers = await self._threads.run(
                 leases.lease, self._database, self._worker, requests, self._lease_s
             )
+        except asyncio.CancelledError:
+            self._give_back_unseen(requests)
+            raise
         except StoreAway:
-            # Perhaps a slice was leased and the answer was lost: give it back unseen.
-            self.hand.given += [Given(r.slice_id, r.line_item, 0, 0) for r in requests]
+            self._give_back_unseen(requests)
             answers = [leases.Denied(name, "budget_held") for name in names]
         for answer in answers:
             self._take(answer, asked_at)
+
+    def _give_back_unseen(self, requests: list[leases.LeaseRequest]) -> None:
+        """Perhaps slices were leased and the answer was lost: nothing was bid from them."""
+        self.hand.given += [Given(r.slice_id, r.line_item, 0, 0) for r in requests]
 
     def _request(self, name: str, now: float) -> leases.LeaseRequest:
         before = self._before.get(name, 0)

@@ -1,28 +1,23 @@
-"""The third story, in the background: time, changes, money to give back, lessons, the log.
+"""The third story, in the background of every worker: time, changes, money to give back, the log.
 
-Each duty is a loop of its own; a database that is away makes it wait, a damaged line item
-is frozen, anything else ends the worker, since it is better to stop than to go on in an
-unknown state.
+What need not be done beside bids is the clerk's.
 """
 
 from __future__ import annotations
 
 import asyncio
 import logging
-from collections.abc import Awaitable, Callable, Coroutine
+from collections.abc import Coroutine
 from dataclasses import dataclass
-from functools import partial
 from typing import Any
 
 from service.backlog import Backlog
 from service.catalog import Catalog, Item
-from service.errors import BrokenPromise, StoreAway
-from service.learner.exptree_state import UnreadableTree
-from service.learner.memory import UnreadableMemory
+from service.errors import StoreAway
 from service.leasing import Leasing
-from service.store import audit, clock, decisions, epochs, learners, leases, workers
+from service.patience import Patience
+from service.store import clock, decisions, workers
 from service.store.database import Database, Writing
-from service.teaching import FRESH, lawful, lesson, readable
 from service.threads import Threads
 
 logger = logging.getLogger(__name__)
@@ -31,10 +26,6 @@ DECISIONS_MAX = 2000
 GIVE_BACK_S = 0.2
 LOG_S = 0.5
 CLOCK_S = 1.0
-AWAY_S = 0.5
-AUDIT_S = 10.0
-PRUNE_S = 3600.0
-DAY_MS = 86_400_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,10 +34,7 @@ class Rhythm:
 
     change_poll_ms: int
     tick_s: int
-    teach_ms: int
     clock_step_ms_max: int
-    checkpoint_entries: int
-    decision_keep_days: int
 
 
 class Upkeep:
@@ -66,26 +54,32 @@ class Upkeep:
         self._database, self._threads, self._worker = database, threads, worker
         self._catalog, self._leasing, self._backlog = catalog, leasing, backlog
         self._news, self._rhythm = news, rhythm
+        self._patience = Patience(database, threads)
 
     def duties(self) -> list[Coroutine[Any, Any, None]]:
         """Every loop, to be run until cancelled."""
-        rhythm = self._rhythm
+        every = self._patience.every
         return [
-            self._every(CLOCK_S, self.keep_time),
+            every(CLOCK_S, self.keep_time),
             self._follow_changes(),
-            self._every(GIVE_BACK_S, self.give_back),
-            self._every(rhythm.tick_s, self._leasing.tick),
-            self._every(rhythm.teach_ms / 1000, self.teach),
-            self._every(LOG_S, self.log),
-            self._every(AUDIT_S, self.audit),
-            self._every(PRUNE_S, self.prune),
+            every(GIVE_BACK_S, self.give_back),
+            every(self._rhythm.tick_s, self._leasing.tick),
+            every(LOG_S, self.log),
         ]
 
-    async def start(self) -> None:
-        """Begin reading changes, move time on once, say that this worker lives, mend states."""
+    async def start(self, predecessor: str | None = None) -> None:
+        """
+        Begin reading changes, move time on once and say that this worker lives.
+
+        Args:
+            predecessor: A worker that is known to be dead, so that nobody waits for it.
+        """
         await self._catalog.start()
-        await self._sparing(self.keep_time)
-        await self._read_again()
+        if predecessor is not None:
+            await self._threads.run(
+                self._database.write, lambda connection: workers.leave(connection, predecessor)
+            )
+        await self._patience.sparing(self.keep_time)
 
     async def stop(self) -> None:
         """Give every slice back, write what is left of the log, and leave."""
@@ -101,15 +95,15 @@ class Upkeep:
             logger.warning("the database is away; slices return to their budgets after grace")
 
     async def keep_time(self) -> None:
-        """Move service time on, beat, and close what is over."""
+        """Move service time on, and beat."""
 
         def work(connection: Writing) -> None:
             wall = clock.wall_clock(connection, self._database)
+            # Only workers move time on: while none of them can take an outcome, no grace passes.
             clock.advance(connection, wall, self._rhythm.clock_step_ms_max)
             workers.beat(connection, self._worker, self._catalog.change_seen, wall)
 
         await self._threads.run(self._database.write, work)
-        await self._threads.run(leases.close_due, self._database)
 
     async def follow(self) -> None:
         """Apply what changed, and say how far this worker is."""
@@ -124,12 +118,6 @@ class Upkeep:
         self._leasing.hand.retire_expired(self._leasing.clock())
         await self._leasing.give_back()
 
-    async def teach(self) -> None:
-        """Fold what is new, line item by line item."""
-        for name in await self._threads.run(self._database.read, learners.behind):
-            while await self._teach(name) == learners.ENTRIES_MAX:
-                pass
-
     async def log(self) -> None:
         """Write queued decisions."""
         while rows := self._backlog.drain(DECISIONS_MAX):
@@ -138,44 +126,6 @@ class Upkeep:
             except StoreAway:
                 self._backlog.put_back(rows)
                 return
-
-    async def audit(self) -> None:
-        """Freeze what no longer says what was promised; the command reads the streams too."""
-        await self._freeze_broken()
-
-    async def prune(self) -> None:
-        """Forget old decisions."""
-        before_ms = self._database.wall_ms() - self._rhythm.decision_keep_days * DAY_MS
-        await self._threads.run(
-            self._database.write, lambda connection: decisions.prune(connection, before_ms)
-        )
-        await self._threads.run(self._database.write, epochs.prune)
-
-    async def _teach(self, line_item: str) -> int:
-        every = self._rhythm.checkpoint_entries
-        try:
-            return await self._threads.run(
-                learners.teach, self._database, line_item, lesson, every, lawful
-            )
-        except (UnreadableMemory, UnreadableTree):
-            # Of another release, or damaged; the stream has all that it was made from.
-            logger.exception("a learner's state cannot be read; its stream is read again")
-            await self._refold(line_item)
-            return learners.ENTRIES_MAX
-
-    async def _refold(self, line_item: str) -> None:
-        work = self._database.write
-        await self._threads.run(work, lambda c: learners.refold(c, line_item, FRESH))
-
-    async def _read_again(self) -> None:
-        """Refold what another release has written; where nobody can bid, no new entry would."""
-        after: str | None = ""
-        while after is not None:
-            look = partial(learners.unreadable, after=after, readable=readable)
-            bad, after = await self._threads.run(self._database.read, look)
-            for line_item in bad:
-                logger.warning("the state of %s is of another release; it is made anew", line_item)
-                await self._refold(line_item)
 
     def _apply(self, item: Item) -> None:
         """An edit or a freeze takes effect here: the slice leaves the hand at once."""
@@ -189,36 +139,10 @@ class Upkeep:
 
     async def _follow_changes(self) -> None:
         while True:
-            await self._unless_away(self.follow)
+            await self._patience.unless_away(self.follow)
             try:
                 async with asyncio.timeout(self._rhythm.change_poll_ms / 1000):
                     await self._news.wait()
             except TimeoutError:
                 continue
             self._news.clear()
-
-    async def _every(self, seconds: float, duty: Callable[[], Awaitable[None]]) -> None:
-        while True:
-            await asyncio.sleep(seconds)
-            await self._unless_away(duty)
-
-    async def _freeze_broken(self) -> list[str]:
-        frozen = await self._threads.run(audit.freeze_broken, self._database)
-        for name in frozen:
-            logger.critical("a promise of line item %s is broken; it is frozen", name)
-        return frozen
-
-    async def _sparing(self, duty: Callable[[], Awaitable[None]]) -> None:
-        """Do a duty; one damaged line item in its way is frozen, and must not stop the others."""
-        try:
-            await duty()
-        except BrokenPromise:
-            if not await self._freeze_broken():
-                raise
-
-    async def _unless_away(self, duty: Callable[[], Awaitable[None]]) -> None:
-        try:
-            await self._sparing(duty)
-        except StoreAway:
-            logger.warning("the database is away; trying again")
-            await asyncio.sleep(AWAY_S)

@@ -20,6 +20,7 @@ from sqlalchemy.engine import make_url
 from service.backlog import Backlog
 from service.bidding import Answer, Bidder, Clocks
 from service.catalog import Catalog
+from service.clerk import Clerk, Habits
 from service.decision.opportunity import Opportunity
 from service.feedback import Feedback, Receipt, Report
 from service.guard.ticket import TicketKeys
@@ -102,6 +103,7 @@ class Worker:
     feedback: Feedback
     operator: Operator
     upkeep: Upkeep
+    clerk: Clerk
 
     async def create(self, **changes: Any) -> None:
         """Create the flat line item, or another."""
@@ -125,8 +127,13 @@ class Worker:
 
     async def learn(self) -> None:
         """Fold what is new, and take it up."""
-        await self.upkeep.teach()
+        await self.clerk.teach()
         await self.upkeep.follow()
+
+    async def keep_time(self) -> None:
+        """Let a beat pass, and close what it made due."""
+        await self.upkeep.keep_time()
+        await self.clerk.close()
 
     async def stop(self) -> None:
         """Give everything back, as on SIGTERM."""
@@ -191,14 +198,17 @@ async def working(
     bidder = Bidder(catalog, leasing, keys, here, Clocks(100, 5000), backlog)
     feedback = Feedback(database, threads, keys, here)
     operator = Operator(database, threads, catalog, news, 10)
-    rhythm = Rhythm(250, 10, 200, 2000, 10, 30)
-    upkeep = Upkeep(database, threads, worker, catalog, leasing, backlog, news, rhythm)
+    upkeep = Upkeep(
+        *(database, threads, worker, catalog, leasing, backlog, news, Rhythm(250, 10, 2000))
+    )
+    clerk = Clerk(database, threads, Habits(200, 10, 30))
     await upkeep.start()
+    await clerk.start()
     tasks = [asyncio.create_task(leasing.run()), asyncio.create_task(feedback.run())]
     try:
         yield Worker(
             *(database, threads, clock, catalog, leasing, backlog),
-            *(bidder, feedback, operator, upkeep),
+            *(bidder, feedback, operator, upkeep, clerk),
         )
     finally:
         await _end(tasks)

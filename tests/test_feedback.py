@@ -63,7 +63,7 @@ async def test_each_outcome_gets_its_status(migrated_url: str) -> None:
         assert said(await worker.report(early)) == ["parked"]
         assert said(await worker.report(Report("won", two.ticket))) == ["no_price"]
         worker.pass_service_ms(CLOSED_MS)
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         assert said(await worker.report(won(three.ticket, 7))) == ["late"]
         assert worker.balance() | {"at_ms": 0, "seq": 0} == {
             **{"line_item": NAME, "budget": UNIT, "target": UNIT, "at_ms": 0, "seq": 0},

@@ -11,10 +11,10 @@ import pytest
 
 from tests.house import ROOT, Source, imports, read, tracked
 
-STORIES = {"bidding", "feedback", "upkeep", "operating"}
+STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk"}
 # What several stories need and none of them owns.
 SHARED = {
-    *("backlog", "catalog", "configuring", "connecting", "leasing", "showing"),
+    *("backlog", "catalog", "configuring", "connecting", "leasing", "patience", "showing"),
     *("correcting", "ordering", "quarantining", "teaching", "threads", "winding"),
 }
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "rehearsal"}

@@ -88,7 +88,7 @@ async def test_certainty_grows_with_what_is_known(migrated_url: str) -> None:
             numbers = range(100 * part, 100 * part + 100)
             append(worker.database, *(won(n, 500_000) for n in numbers))
             append(worker.database, *(valued(n, TYPICAL * (n % 2)) for n in numbers))
-            await worker.upkeep.teach()
+            await worker.clerk.teach()
             seen = (await state(worker))["certainty"]
             assert seen["low_nanos"] < seen["mean_nanos"] == TYPICAL // 2 < seen["high_nanos"]
             widths.append(seen["high_nanos"] - seen["low_nanos"])
@@ -125,7 +125,7 @@ async def test_late_cost_without_money_is_shown(migrated_url: str) -> None:
         await worker.create(budget=PRICE)
         (one,) = await worker.bids(1)
         worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS)
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         worker.clock.now += LEASE_S
         await worker.bids(1)
         await worker.report(Report("won", one.ticket, clearing=PRICE))
@@ -150,7 +150,7 @@ async def test_passes_and_feed_are_counted(migrated_url: str) -> None:
         assert seen["passes_of_last_1000"] == {"under_floor": 2}
         assert list(seen["feed"]["last_ms"]) == ["lost"]
         behind = seen["learner"]["entries_behind"]
-        await worker.upkeep.teach()
+        await worker.clerk.teach()
         assert (behind, (await state(worker))["learner"]["entries_behind"]) == (3, 0)
 
 

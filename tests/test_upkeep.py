@@ -40,14 +40,14 @@ async def test_what_one_worker_teaches_others_take_up(migrated_url: str) -> None
         await one.create(policy=MEAN)
         before = await two.bid()
         await win(one, 4, WORTH)
-        await one.upkeep.teach()
+        await one.clerk.teach()
         assert (await two.bid()).snapshot == before.snapshot == 0
         await two.upkeep.follow()
         after = await two.bid()
         assert (after.bid, after.snapshot) == (4_888_888, (await learner(one))["snapshot"])
         announced = "SELECT count(*) FROM change_log WHERE kind = 'snapshot'"
         assert one.one(announced) == 1
-        await two.upkeep.teach()
+        await two.clerk.teach()
         assert one.one(announced) == 1
 
 
@@ -88,7 +88,7 @@ async def test_a_slice_whose_time_is_over_comes_back(migrated_url: str) -> None:
         await worker.upkeep.give_back()
         assert worker.balance()["held"] == 2 * PRICE
         worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS)
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         assert worker.balance()["held"] == 0
         assert worker.audit() == []
 
@@ -100,10 +100,10 @@ async def test_the_slice_of_a_dead_worker_closes_after_grace(migrated_url: str) 
         await dead.bids(1)
     async with working(migrated_url, "two") as worker:
         worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS - 5000)
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         assert worker.balance()["held"] > 0
         worker.pass_service_ms(5000)
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         assert worker.balance()["held"] == 0
         assert worker.column("SELECT state FROM slice") == ["closed"]
 
@@ -113,7 +113,7 @@ async def test_time_moves_by_a_step_at_most(migrated_url: str) -> None:
     async with working(migrated_url) as worker:
         worker.run("UPDATE service_clock SET seen_ms = seen_ms - :day", day=DAY_MS)
         before = worker.one("SELECT now_ms FROM service_clock")
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         assert worker.one("SELECT now_ms FROM service_clock") == before + 2000
 
 
@@ -138,12 +138,12 @@ async def test_the_audit_freezes_what_was_altered(migrated_url: str) -> None:
         for name in (NAME, "meadow"):
             await worker.create(id=name)
             await worker.bids(1, name)
-        await worker.upkeep.audit()
+        await worker.clerk.audit()
         await worker.upkeep.follow()
         assert worker.column("SELECT line_item FROM freezing") == []
         worker.run("UPDATE balance SET held = held + 7 WHERE line_item = :id", id=NAME)
-        await worker.upkeep.audit()
-        await worker.upkeep.audit()
+        await worker.clerk.audit()
+        await worker.clerk.audit()
         await worker.upkeep.follow()
         assert (await worker.bid()).reason == "frozen"
         assert (await worker.bid("meadow")).bid == PRICE
@@ -161,7 +161,7 @@ async def test_cost_without_free_money_is_a_tripwire(migrated_url: str) -> None:
         await worker.upkeep.follow()
         (answer,) = await worker.bids(1)
         worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS)
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         worker.clock.now += LEASE_S
         assert (await worker.bid()).bid == PRICE
         (receipt,) = await worker.report(Report("won", answer.ticket, clearing=PRICE))
@@ -191,7 +191,7 @@ async def test_old_decisions_are_forgotten(migrated_url: str) -> None:
         await worker.bids(2)
         await worker.upkeep.log()
         worker.run("UPDATE decision SET at_ms = at_ms - :age WHERE number = 1", age=31 * DAY_MS)
-        await worker.upkeep.prune()
+        await worker.clerk.prune()
         assert worker.column("SELECT number FROM decision") == [2]
 
 
@@ -216,7 +216,9 @@ async def test_an_outage_loses_no_slice_no_tick_and_no_log(migrated_url: str) ->
 @asynccontextmanager
 async def on_duty(worker: Worker) -> AsyncIterator[list[asyncio.Task[None]]]:
     """Every duty of a worker as the service runs it, until the end of the block."""
-    tasks = [asyncio.create_task(duty) for duty in worker.upkeep.duties()]
+    tasks = [
+        asyncio.create_task(duty) for duty in (*worker.upkeep.duties(), *worker.clerk.duties())
+    ]
     try:
         yield tasks
     finally:

@@ -1,58 +1,62 @@
-"""bidkeel serve: one worker process over HTTP."""
+"""bidkeel serve: one process on SQLite, a crew of workers and a clerk on PostgreSQL."""
 
 from __future__ import annotations
 
 import argparse
 import fcntl
 import logging
+import logging.config
+import os
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
-import uvicorn
-
-from service.app import create_app
+from service.app import Post, new_worker
+from service.commands.child import serve
+from service.commands.crew import Berth, Crew, listen
 from service.commands.logs import log_config
 from service.connecting import open_database
 from service.errors import Unsafe
-from service.settings import Settings, load
+from service.settings import PREFIX, SQLITE, Settings, load
 from service.store import keys
 from service.store.database import Database
-from service.store.migrate import is_empty, migrate
+from service.store.migrate import is_empty, migrate, require_current
 
 logger = logging.getLogger(__name__)
 
-STOP_S = 8
+GIVEN = ("host", "port", "workers")
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
-    """The port may be given here; everything else is a setting."""
+    """What differs from start to start may be given here; everything else is a setting."""
     parser.add_argument("--host", help="address to listen on, instead of BIDKEEL_HOST")
-    parser.add_argument("--port", type=int, help="TCP port, instead of BIDKEEL_PORT")
+    parser.add_argument("--port", help="TCP port, instead of BIDKEEL_PORT")
+    parser.add_argument("--workers", help="serving processes, instead of BIDKEEL_WORKERS")
 
 
 def run(arguments: argparse.Namespace) -> int:
     """Serve until a signal; slices are given back before this returns."""
+    given = {f"{PREFIX}{name.upper()}": getattr(arguments, name) for name in GIVEN}
     # Settings are read here and handed on; nothing below reads the environment.
-    settings = load()
-    if settings.workers > 1:
-        raise Unsafe(
-            "One serve is one worker: on PostgreSQL start as many as you want, each alone."
-        )
+    settings = load(os.environ | {name: text for name, text in given.items() if text is not None})
     with sole_server(settings):
         prepare(settings)
-        uvicorn.run(
-            create_app(settings),
-            host=arguments.host or settings.host,
-            port=arguments.port or settings.port,
-            log_config=log_config(settings.log_format),
-            access_log=False,
-            loop="uvloop",
-            http="httptools",
-            timeout_graceful_shutdown=STOP_S,
-        )
+        if settings.database_kind == SQLITE:
+            serve(settings, Post(new_worker()))
+        else:
+            _command(settings)
     return 0
+
+
+def _command(settings: Settings) -> None:
+    logging.config.dictConfig(log_config(settings.log_format))
+    try:
+        shared = listen(settings.host, settings.port)
+    except OSError as error:
+        raise Unsafe(f"Nothing can listen on port {settings.port}: {error.strerror}.") from error
+    berths = [Berth("worker") for _ in range(settings.workers)]
+    Crew(shared, [*berths, Berth("clerk")]).run()
 
 
 def prepare(settings: Settings) -> None:
@@ -62,6 +66,9 @@ def prepare(settings: Settings) -> None:
         if is_empty(database):
             migrate(settings.database_url.get_secret_value())
             _show_first_key(database)
+        # Found now and told to whoever started us, and not to a log by every child.
+        database.check_safe()
+        require_current(database)
     finally:
         database.close()
 

@@ -73,7 +73,7 @@ async def test_slices_are_summed_by_state(migrated_url: str) -> None:
         assert by_state["open"]["slices"] == 1
         await worker.stop()
         worker.pass_service_ms(10**9)
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         assert read(worker).slices == []
 
 

@@ -1,0 +1,97 @@
+"""One child of the crew, in a process of its own: a worker that serves, or the clerk.
+
+    python -m service.commands.child worker --socket 3 --worker ID --watched 4
+
+Started by the crew only. Connections are opened here, never before the process begins.
+"""
+
+from __future__ import annotations
+
+import argparse
+import asyncio
+import logging
+import logging.config
+import os
+import signal
+import socket
+import sys
+import threading
+
+import uvicorn
+
+from service.app import Post, clerk_of, create_app, on_duty, opened
+from service.commands.logs import log_config
+from service.errors import BidkeelError
+from service.settings import Settings, load
+
+logger = logging.getLogger(__name__)
+
+FINISH_S = 4  # For requests in flight; the rest of the ten seconds is for slices and the log.
+
+
+def main(words: list[str] | None = None) -> int:
+    """Serve or clerk until a signal; returns the exit code."""
+    arguments = _parser().parse_args(words)
+    settings = load()
+    _leave_with(arguments.watched)
+    try:
+        if arguments.role == "clerk":
+            asyncio.run(_clerk(settings))
+        else:
+            post = Post(arguments.worker, arguments.predecessor, clerk=False)
+            serve(settings, post, socket.socket(fileno=arguments.socket))
+    except BidkeelError as error:
+        logger.error("%s cannot work: %s", arguments.role, error)
+        return 1
+    return 0
+
+
+def serve(settings: Settings, post: Post, shared: socket.socket | None = None) -> None:
+    """One serving process, on the crew's socket or on the address of the settings."""
+    config = uvicorn.Config(
+        create_app(settings, post),
+        host=settings.host,
+        port=settings.port,
+        log_config=log_config(settings.log_format),
+        access_log=False,
+        loop="uvloop",
+        http="httptools",
+        timeout_graceful_shutdown=FINISH_S,
+    )
+    uvicorn.Server(config).run(None if shared is None else [shared])
+
+
+async def _clerk(settings: Settings) -> None:
+    logging.config.dictConfig(log_config(settings.log_format))
+    stop, loop = asyncio.Event(), asyncio.get_running_loop()
+    for number in (signal.SIGTERM, signal.SIGINT):
+        loop.add_signal_handler(number, stop.set)
+    async with opened(settings) as (database, threads):
+        clerk = clerk_of(settings, database, threads)
+        await clerk.start()
+        async with on_duty(clerk.duties()):
+            await stop.wait()
+
+
+def _leave_with(watched: int) -> None:
+    """Stop as on SIGTERM when the crew's process is gone, however it went."""
+
+    def wait() -> None:
+        os.read(watched, 1)
+        os.kill(os.getpid(), signal.SIGTERM)
+
+    threading.Thread(target=wait, name="watch", daemon=True).start()
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(prog="bidkeel child", allow_abbrev=False)
+    parser.add_argument("role", choices=("worker", "clerk"))
+    parser.add_argument("--watched", type=int, required=True, help="closes when the crew is gone")
+    parser.add_argument("--socket", type=int, help="the listening socket")
+    parser.add_argument("--worker", help="this worker's id")
+    parser.add_argument("--predecessor", help="the id of the worker that died in this place")
+    return parser
+
+
+if __name__ == "__main__":
+    sys.exit(main())

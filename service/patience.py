@@ -1,0 +1,56 @@
+"""How a background duty is repeated, the same for worker and clerk, and apart from both.
+
+A database that is away makes a duty wait, a damaged line item is frozen, anything else ends
+the process, since it is better to stop than to go on in an unknown state.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import logging
+from collections.abc import Awaitable, Callable
+
+from service.errors import BrokenPromise, StoreAway
+from service.store import audit
+from service.store.database import Database
+from service.threads import Threads
+
+logger = logging.getLogger(__name__)
+
+AWAY_S = 0.5
+
+
+class Patience:
+    """Repeats duties on one database."""
+
+    def __init__(self, database: Database, threads: Threads) -> None:
+        self._database, self._threads = database, threads
+
+    async def every(self, seconds: float, duty: Callable[[], Awaitable[None]]) -> None:
+        """Do a duty again and again, with so much time in between, until cancelled."""
+        while True:
+            await asyncio.sleep(seconds)
+            await self.unless_away(duty)
+
+    async def unless_away(self, duty: Callable[[], Awaitable[None]]) -> None:
+        """Do a duty once; while the database is away, wait a moment instead."""
+        try:
+            await self.sparing(duty)
+        except StoreAway:
+            logger.warning("the database is away; trying again")
+            await asyncio.sleep(AWAY_S)
+
+    async def sparing(self, duty: Callable[[], Awaitable[None]]) -> None:
+        """Do a duty; one damaged line item in its way is frozen, and must not stop the others."""
+        try:
+            await duty()
+        except BrokenPromise:
+            if not await self.freeze_broken():
+                raise
+
+    async def freeze_broken(self) -> list[str]:
+        """Freeze the line items whose standing promises are broken; returns those new to it."""
+        frozen = await self._threads.run(audit.freeze_broken, self._database)
+        for name in frozen:
+            logger.critical("a promise of line item %s is broken; it is frozen", name)
+        return frozen
