@@ -137,7 +137,7 @@ class Bidder:
         reason = self._leasing.denied(item.id)
         if held is not None and held.free > 0:
             return None
-        return reason if reason in ("budget_spent", "day_spent") else None
+        return reason if reason in ("frozen", "budget_spent", "day_spent") else None
 
     def _commit(
         self, item: Item, opportunity: Opportunity, cleared: Cleared, held: SliceInHand | None

@@ -181,6 +181,7 @@ class Operator:
         def order(connection: Writing) -> dict[str, Any]:
             name, source, before = self._frozen(connection, line_item)
             now = self._database.wall_ms()
+            freezes.hold_still(connection, name)
             freezes.put(connection, name, source, wall_ms=now, actor=actor, reason=reason)
             return self._orders.stopped(connection, "freeze", name, before, reason, actor)
 

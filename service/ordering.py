@@ -89,7 +89,7 @@ class Orders:
         number, by_ms = answer.pop("change"), answer.pop("by_ms")
         until = time.monotonic() + IN_FORCE_S
         while True:
-            seen = await self.read(workers.live)
+            seen = await self.read(workers.bound)
             # A worker that no longer beats holds slices that end by themselves.
             if all(passed >= number for passed in seen.values()):
                 return {**answer, "in_force": True, "by": None}

@@ -5,6 +5,7 @@ from __future__ import annotations
 import asyncio
 import threading
 import time
+from contextlib import closing
 from typing import Any
 
 import pytest
@@ -15,7 +16,8 @@ from service.decision.opportunity import Opportunity
 from service.errors import NotFound, Refusal
 from service.feedback import Report
 from service.guard.ticket import Ticket, TicketKeys
-from service.store import changes
+from service.store import changes, freezes
+from service.store.database import Database, Writing
 from tests.builders import CAP, NAME, PRICE, Worker, append, begin, running_beside, won, working
 
 pytestmark = pytest.mark.anyio
@@ -141,23 +143,30 @@ async def test_what_is_in_the_hand_may_be_spent_whatever_the_budget_says(migrate
         assert (await worker.bid()).reason == "budget_spent"
 
 
+def freeze(connection: Writing, name: str) -> None:
+    """Freeze and announce it, as an order of another worker does."""
+    freezes.put(connection, name, "person", wall_ms=1, actor="tester", reason="")
+    changes.announce(connection, "freeze", [name])
+
+
 async def test_a_freeze_that_comes_while_a_bid_waits_is_obeyed(migrated_url: str) -> None:
     """The line item is looked at again after the wait for money."""
     async with working(migrated_url) as worker:
         await worker.create()
         await worker.bid(test=True)
-        worker.run("INSERT INTO freezing VALUES (:id, 'person', 1, 'tester', '')", id=NAME)
-        worker.database.write(lambda c: changes.announce(c, "freeze", [NAME]))
         go, reached = threading.Event(), threading.Event()
 
-        def wait(_connection: object) -> None:
+        def wait(*_: object) -> None:
             if worker.leasing.hand.slices == {} and not reached.is_set():
                 reached.set()
                 go.wait(5)
 
-        event.listen(worker.database.engine, "commit", wait)
+        # The slice is leased, and its answer has not yet come back to the loop.
+        event.listen(worker.database.engine, "checkin", wait)
         asking = asyncio.create_task(worker.bid())
         assert await asyncio.to_thread(reached.wait, 5)
+        with closing(Database(migrated_url)) as other:
+            other.write(lambda c: freeze(c, NAME))
         await worker.catalog.follow()
         go.set()
         assert (await asking).reason == "frozen"

@@ -336,7 +336,7 @@ async def test_old_laws_are_pruned_and_the_audit_stays_content(migrated_url: str
             await learn(worker)
         assert worker.one("SELECT count(*) FROM epoch") == 4
         worker.pass_service_ms(900_000 + epochs.SLACK_MS + 1)
-        await worker.upkeep.prune()
+        await worker.clerk.prune()
         assert worker.column("SELECT snapshot FROM epoch") == [snapshot(worker).seq]
         assert worker.audit() == []
 

@@ -19,7 +19,17 @@ from service.errors import (
 )
 from service.feedback import Report
 from service.ledger.accounts import NO_LIMIT
-from tests.builders import CAP, NAME, PRICE, UNIT, Worker, line_item, running_beside, working
+from tests.builders import (
+    CAP,
+    LEASE_S,
+    NAME,
+    PRICE,
+    UNIT,
+    Worker,
+    line_item,
+    running_beside,
+    working,
+)
 
 pytestmark = pytest.mark.anyio
 
@@ -216,6 +226,25 @@ async def test_a_freeze_that_one_worker_has_not_seen_says_by_when(migrated_url: 
         assert answer["in_force"] is False
         assert 25_000 < answer["by_ms"] - seen <= 30_000
         assert (await asleep.bid()).bid == PRICE
+
+
+async def test_no_slice_is_leased_past_a_freeze(migrated_url: str) -> None:
+    """One that slept past its slice and past `by` bids no more, though it has not read of it."""
+    async with working(migrated_url) as one, working(migrated_url, "two") as asleep:
+        for name in (NAME, "meadow"):
+            await one.create(id=name)
+            await asleep.bid(name)
+        async with running_beside(one):
+            await one.operator.freeze(NAME, "a look", "tester")
+            asleep.clock.now += LEASE_S
+            assert [(await asleep.bid(n)).reason for n in (NAME, "meadow")] == ["frozen", None]
+            await one.operator.freeze(None, "all", "tester")
+            asleep.clock.now += LEASE_S
+            assert (await asleep.bid("meadow")).reason == "frozen"
+            await one.operator.thaw(None, "all", "tester")
+        asleep.clock.now += 1
+        await asleep.upkeep.follow()
+        assert [(await asleep.bid(n)).reason for n in (NAME, "meadow")] == ["frozen", None]
 
 
 async def test_thawing_all_lifts_only_its_own_switch(migrated_url: str) -> None:

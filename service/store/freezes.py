@@ -6,7 +6,8 @@ from typing import Any
 
 from sqlalchemy import text
 
-from service.store.database import Reading, Writing, among
+from service.store.changes import ALL
+from service.store.database import Reading, Writing, among, locking
 
 
 def put(
@@ -42,3 +43,20 @@ def on(connection: Reading | Writing, line_items: list[str]) -> dict[str, list[d
         freeze = dict(row._mapping)
         found[freeze.pop("line_item")].append(freeze)
     return found
+
+
+def frozen(connection: Reading | Writing, line_items: list[str]) -> set[str]:
+    """Those of these line items that are frozen, by themselves or with all."""
+    found = on(connection, sorted({ALL, *line_items}))
+    return {name for name in line_items if found[name] or found[ALL]}
+
+
+def hold_still(connection: Writing, line_item: str) -> None:
+    """
+    Lock what a lease locks first, before a freeze is put.
+
+    Whoever leases at this moment is seen by the freeze, or sees it; no slice comes in between
+    and outlives the moment that the freeze names.
+    """
+    statement = "SELECT line_item FROM balance WHERE :id IN (line_item, :all) ORDER BY line_item"
+    connection.execute(locking(connection, statement), {"id": line_item, "all": ALL})

@@ -15,6 +15,7 @@ from service.ledger.entries import Entry
 from service.ledger.leasing import Wish, slice_amount
 from service.store.books import Books
 from service.store.database import Database, Reading, Writing, among
+from service.store.freezes import frozen
 from service.store.workers import live
 
 NEVER_MS = 2**60
@@ -76,27 +77,17 @@ def lease(
         books = Books(connection, [r.line_item for r in requests], wall_ms)
         configs = read_configs(connection, list(books.accounts))
         lenders = _Lenders(connection, worker, lease_s * 1000)
-        # Workers that have not heard yet would still ask; here it cannot be missed.
-        ended = _ended(connection, list(configs))
-        answers = [
-            Denied(r.line_item, "frozen")
-            if r.line_item in ended
-            else lenders.lend(books, configs[r.line_item], r, wall_ms)
+        answers = lenders.frozen(list(books.accounts))
+        shut = {answer.line_item for answer in answers}
+        answers += [
+            lenders.lend(books, configs[r.line_item], r, wall_ms)
             for r in requests
-            if r.line_item in configs
+            if r.line_item in configs and r.line_item not in shut
         ]
         books.save()
         return answers
 
     return database.write(work)
-
-
-def _ended(connection: Writing, line_items: list[str]) -> set[str]:
-    """Those that were closed, or wait for somebody to confirm their spend after a restore."""
-    statement = among(
-        "SELECT line_item FROM freezing WHERE line_item IN :ids AND source IN ('closed', 'restore')"
-    )
-    return set(connection.execute(statement, {"ids": line_items}).scalars())
 
 
 class _Lenders:
@@ -107,6 +98,14 @@ class _Lenders:
         self._worker = worker
         self._lease_ms = lease_ms
         self._live = set(live(connection)) | {worker}
+
+    def frozen(self, line_items: list[str]) -> list[Leased | Denied]:
+        """
+        The answers for those that are frozen.
+
+        A worker that slept through a freeze must not bid on before it has read of it.
+        """
+        return [Denied(name, "frozen") for name in sorted(frozen(self._connection, line_items))]
 
     def lend(
         self, books: Books, config: dict[str, Any], request: LeaseRequest, wall_ms: int

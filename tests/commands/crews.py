@@ -92,7 +92,7 @@ class Serving:
         until(all_hold)
 
 
-def until(met: Callable[[], T], seconds: float = 30.0) -> T:
+def until(met: Callable[[], T | None], seconds: float = 30.0) -> T:
     """Wait for something to become true; returns it."""
     end = time.monotonic() + seconds
     while not (found := met()):

@@ -5,9 +5,12 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 import pytest
+from sqlalchemy import text
 
 from service.store import clock, workers
 from service.store.database import Database
+from service.store.leases import LeaseRequest, lease
+from tests.builders import NAME, begin
 
 
 @pytest.fixture(name="database")
@@ -47,3 +50,29 @@ def test_a_worker_that_leaves_is_off_the_list(database: Database) -> None:
         database.write(lambda connection, name=name: workers.beat(connection, name, 0, 1))  # type: ignore[misc]
     database.write(lambda connection: workers.leave(connection, "w"))
     assert database.read(workers.live) == {"v": 0}
+
+
+def test_a_silent_worker_with_a_slice_may_still_wake_up(database: Database) -> None:
+    """It is bound by a freeze until its slice is over, or somebody has seen it dead."""
+    begin(database)
+    database.write(lambda connection: workers.beat(connection, "w", 3, 1))
+    lease(database, "w", [LeaseRequest(NAME, bytes(16), 1, 0)], 30)
+    pass_time(database, workers.LIVE_MS)
+    assert (database.read(workers.live), database.read(workers.bound)) == ({}, {"w": 3})
+    pass_time(database, 20_000)
+    assert database.read(workers.bound) == {}
+
+    database.write(lambda connection: workers.beat(connection, "w", 4, 1))
+    assert database.read(workers.bound) == {"w": 4}
+    database.write(lambda connection: workers.leave(connection, "w"))
+    assert database.read(workers.bound) == {}
+
+
+def test_rows_of_workers_long_gone_are_forgotten(database: Database) -> None:
+    """A crash loop leaves a row with each start; a day later they are gone, the live one stays."""
+    database.write(lambda connection: workers.beat(connection, "old", 3, 1))
+    pass_time(database, workers.FORGET_MS + 1)
+    database.write(lambda connection: workers.beat(connection, "new", 3, 1))
+    database.write(workers.prune)
+    rows = database.read(lambda c: c.execute(text("SELECT id FROM worker")).scalars().all())
+    assert rows == ["new"]
