@@ -20,10 +20,11 @@ from service.bidding import Bidder, Clocks
 from service.catalog import Catalog
 from service.clerk import Clerk, Habits
 from service.connecting import open_database
-from service.feedback import Feedback
+from service.feedback import Feedback, Room
 from service.guard.ticket import TicketKeys
 from service.leasing import Leasing
 from service.operating import Operator
+from service.pulse import Pulse
 from service.settings import Settings
 from service.store import incarnations
 from service.store.database import Database
@@ -155,14 +156,18 @@ def _build(
     incarnation = bytes.fromhex(database.write(incarnations.current))
     catalog = Catalog(database, threads)
     leasing = Leasing(database, threads, post.worker, settings.lease_s)
-    clocks = Clocks(settings.deadline_ms, settings.deadline_ms_max)
+    pulse = Pulse()
+    clocks = Clocks(
+        *(settings.deadline_ms, settings.deadline_ms_max, settings.bids_waiting_max, pulse.lag_s)
+    )
     backlog = Backlog(settings.decision_queue_max)
     bidder = Bidder(catalog, leasing, keys, incarnation, clocks, backlog)
-    feedback = Feedback(database, threads, keys, incarnation)
+    room = Room(settings.outcome_calls_max, settings.outcome_rows_waiting_max)
+    feedback = Feedback(database, threads, keys, incarnation, room)
     operator = Operator(database, threads, catalog, news, settings.checkpoint_entries)
     rhythm = Rhythm(settings.change_poll_ms, settings.tick_s, settings.clock_step_ms_max)
     upkeep = Upkeep(database, threads, post.worker, catalog, leasing, backlog, news, rhythm)
-    loops = [leasing.run(), feedback.run(), *upkeep.duties()]
+    loops = [pulse.run(), leasing.run(), feedback.run(), *upkeep.duties()]
     return Stories(bidder, feedback, operator), upkeep, loops
 
 

@@ -6,8 +6,10 @@ that there is no await and no database between the snapshot and the answer.
 
 from __future__ import annotations
 
+import asyncio
 import secrets
 import time
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy
@@ -40,10 +42,17 @@ class Answer:
 
 @dataclass(frozen=True, slots=True)
 class Clocks:
-    """How long a request may take at most, in milliseconds."""
+    """
+    How long a request may take at most, in milliseconds, and how many may wait at once.
+
+    Args:
+        lag_s: How late requests are seen now, in seconds.
+    """
 
     deadline_ms: int
     deadline_ms_max: int
+    waiting_max: int = 200
+    lag_s: Callable[[], float] = float
 
 
 class Bidder:
@@ -60,7 +69,7 @@ class Bidder:
     ) -> None:
         self._catalog, self._leasing = catalog, leasing
         self._keys, self._incarnation = keys, incarnation
-        self._clocks = clocks
+        self._clocks, self._waiting = clocks, 0
         self._generator = numpy.random.default_rng()
         self._backlog = backlog
 
@@ -75,17 +84,19 @@ class Bidder:
             NotFound: No such line item.
             StoreAway: An unknown line item could not be looked up.
         """
-        item = self._catalog.get(opportunity.line_item)
-        if item is None:
-            item = await self._catalog.look_up(opportunity.line_item)
         until = arrived + self._allowed_s(opportunity)
-        if not opportunity.test and shut(item.limits, _wall_ms()) is None:
+        late = self._clocks.lag_s() > until - arrived
+        item = self._catalog.get(opportunity.line_item)
+        if item is None and not late:
+            item = await self._look_up(opportunity.line_item, until)
+        if item is None:
+            reason = "overloaded" if time.monotonic() < until else "past_deadline"
+            return self._logged(_pass(opportunity, reason), opportunity)
+        if not opportunity.test and not late and shut(item.limits, _wall_ms()) is None:
             await self._have_money(item, until)
         # A freeze may have come while we waited.
         item = self._catalog.get(item.id) or item
-        answer = self._answer(item, opportunity, until)
-        self._log(answer, opportunity)
-        return answer
+        return self._logged(self._answer(item, opportunity, until, late=late), opportunity)
 
     async def bid_batch(
         self, opportunities: list[Opportunity], arrived: float
@@ -101,20 +112,43 @@ class Bidder:
                 answers.append(Refusal("store_away", "The line item could not be looked up."))
         return answers
 
+    async def _look_up(self, line_item: str, until: float) -> Item | None:
+        """The line item, or None when too many wait already or it takes too long."""
+        if self._waiting >= self._clocks.waiting_max:
+            return None
+        self._waiting += 1
+        try:
+            async with asyncio.timeout(until - time.monotonic()):
+                return await self._catalog.look_up(line_item)
+        except TimeoutError:
+            return None
+        finally:
+            self._waiting -= 1
+
     async def _have_money(self, item: Item, until: float) -> None:
         held = self._leasing.hand.usable(item.id, self._leasing.clock())
         # Enough for any price this line item may name: nobody waits, the refill comes behind.
         if held is not None and held.free >= item.limits.cap:
             self._leasing.refresh(held)
-        elif self._leasing.denied(item.id) is None:
-            await self._leasing.obtain(item.id, until - time.monotonic())
+        elif self._leasing.denied(item.id) is not None:
+            return
+        elif self._waiting >= self._clocks.waiting_max:
+            self._leasing.wish(item.id)
+        else:
+            self._waiting += 1
+            try:
+                await self._leasing.obtain(item.id, until - time.monotonic())
+            finally:
+                self._waiting -= 1
 
-    def _answer(self, item: Item, opportunity: Opportunity, until: float) -> Answer:
+    def _answer(self, item: Item, opportunity: Opportunity, until: float, *, late: bool) -> Answer:
         wall_ms = _wall_ms()
         held = self._leasing.hand.usable(item.id, self._leasing.clock())
         reason = shut(item.limits, wall_ms) or self._out_of_money(item, held)
         if reason is None and time.monotonic() > until:
             reason = "past_deadline"
+        if reason is None and (late or self._crowded_out(opportunity, held)):
+            reason = "overloaded"
         if reason is not None:
             return _pass(opportunity, reason)
         if item.ready is None:
@@ -130,6 +164,11 @@ class Bidder:
                 passes[item.id] = passes.get(item.id, 0) + 1
             return _pass(opportunity, cleared)
         return self._commit(item, opportunity, cleared, held)
+
+    def _crowded_out(self, opportunity: Opportunity, held: SliceInHand | None) -> bool:
+        """Whether this one needs a slice and too many wait for theirs already."""
+        needs = not opportunity.test and (held is None or held.free == 0)
+        return needs and self._waiting >= self._clocks.waiting_max
 
     def _out_of_money(self, item: Item, held: SliceInHand | None) -> str | None:
         """Spent money is named before anything about the price; held money is named last."""
@@ -177,7 +216,7 @@ class Bidder:
         allowed = self._clocks.deadline_ms if asked is None else asked
         return min(allowed, self._clocks.deadline_ms_max) / 1000
 
-    def _log(self, answer: Answer, opportunity: Opportunity) -> None:
+    def _logged(self, answer: Answer, opportunity: Opportunity) -> Answer:
         self._backlog.add(
             {
                 "at_ms": _wall_ms(),
@@ -193,6 +232,7 @@ class Bidder:
                 "test": int(opportunity.test),
             }
         )
+        return answer
 
 
 def _pass(opportunity: Opportunity, reason: str) -> Answer:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 import logging
 import time
 from dataclasses import dataclass
@@ -43,6 +44,7 @@ class Catalog:
         self._items: dict[str, Item] = {}
         self._keys: dict[str, keys.Key] = {}
         self._misses: dict[str, float] = {}
+        self._looks: dict[str, asyncio.Future[list[Item]]] = {}
         self.change_seen = 0
 
     def get(self, line_item: str) -> Item | None:
@@ -59,7 +61,11 @@ class Catalog:
         """
         if self._missed(f"item {line_item}"):
             raise no_such_line_item()
-        await self.renew([line_item])
+        # All who ask at once share one look, which goes on though one of them stops waiting.
+        if (look := self._looks.get(line_item)) is None:
+            look = self._looks[line_item] = asyncio.ensure_future(self.renew([line_item]))
+            look.add_done_callback(lambda _: self._looks.pop(line_item))
+        await asyncio.shield(look)
         if line_item not in self._items:
             self._miss(f"item {line_item}")
             raise no_such_line_item()

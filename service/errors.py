@@ -12,6 +12,7 @@ BidkeelError
 │   └── NeedsConfirmation   allowed only with an explicit word
 ├── StoreAway               the database did not answer; the same call may work later
 ├── PoisonLesson            one entry of a stream that the fold cannot take
+├── Overloaded              too much at once; nothing was done, the same call may work later
 ├── BrokenPromise           a guard refused a write that the rules had allowed
 └── Unsafe                  a setting or a schema under which we refuse to start
 """
@@ -90,6 +91,10 @@ class PoisonLesson(BidkeelError):
     def __init__(self, place: int, error: str) -> None:
         super().__init__(error)
         self.place = place
+
+
+class Overloaded(BidkeelError):
+    """More came than can be done in time; nothing of this call was done."""
 
 
 class BrokenPromise(BidkeelError):

@@ -9,10 +9,12 @@ from __future__ import annotations
 
 import asyncio
 import logging
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from datetime import date
 
-from service.errors import BrokenPromise, StoreAway
+from service.errors import BrokenPromise, Overloaded, StoreAway
 from service.guard.ticket import BadTicket, Ticket, TicketKeys, bid_of, ref_of
 from service.ledger.settle import Outcome
 from service.ledger.values import Value
@@ -27,6 +29,10 @@ from service.threads import Threads
 logger = logging.getLogger(__name__)
 
 ROWS_MAX = 2000
+THREAD_S = 0.25  # How long a group waits for a thread, and so for a connection.
+ANSWER_S = (
+    6.0  # Longer than a statement may take: after it nobody knows, and the caller asks again.
+)
 PAYING = ("won", "billed")
 # What a single bad row may raise; anything else is a fault of ours and ends the worker's task.
 POISON = (BrokenPromise, ValueError, LookupError, ArithmeticError, TypeError)
@@ -60,6 +66,14 @@ class Receipt:
     detail: str | None = None
 
 
+@dataclass(frozen=True, slots=True)
+class Room:
+    """How many calls may be under way at once, and how many rows may wait to be booked."""
+
+    calls_max: int = 256
+    rows_max: int = 20_000
+
+
 @dataclass(slots=True)
 class _Waiting:
     """The rows of one request and the future its receipt comes through."""
@@ -72,11 +86,33 @@ class Feedback:
     """Settles outcomes for one worker."""
 
     def __init__(
-        self, database: Database, threads: Threads, keys: TicketKeys, incarnation: bytes
+        self,
+        database: Database,
+        threads: Threads,
+        keys: TicketKeys,
+        incarnation: bytes,
+        room: Room | None = None,
     ) -> None:
         self._database, self._threads = database, threads
         self._keys, self._incarnation = keys, incarnation
+        self._room, self._calls, self._rows = room or Room(), 0, 0
         self._queue: asyncio.Queue[_Waiting] = asyncio.Queue()
+
+    @contextmanager
+    def admitted(self) -> Iterator[None]:
+        """
+        Room for one call; asked for before anything of it is read.
+
+        Raises:
+            Overloaded: There is none. Nothing was read, and nothing is lost when it comes again.
+        """
+        if self._calls >= self._room.calls_max or self._rows >= self._room.rows_max:
+            raise Overloaded("too many outcomes wait already")
+        self._calls += 1
+        try:
+            yield
+        finally:
+            self._calls -= 1
 
     async def report(self, reports: list[Report]) -> list[Receipt]:
         """
@@ -84,6 +120,7 @@ class Feedback:
 
         Raises:
             StoreAway: Perhaps recorded; the repeat answers `duplicate`.
+            Overloaded: Not recorded, for nobody had time for it.
         """
         read = [self._read(report) for report in reports]
         read = await self._find_refs(reports, read)
@@ -103,13 +140,24 @@ class Feedback:
     async def _book(self, rows: list[Booking]) -> list[Booked]:
         waiting = _Waiting(rows, asyncio.get_running_loop().create_future())
         await self._queue.put(waiting)
-        return await waiting.done
+        self._rows += len(rows)
+        try:
+            done, _ = await asyncio.wait([waiting.done], timeout=ANSWER_S)
+        finally:
+            self._rows -= len(rows)
+        if not done:
+            # Still in the queue or already durable: only the repeat can tell.
+            waiting.done.cancel()
+            raise StoreAway("the outcomes were not booked in time")
+        return waiting.done.result()
 
     async def _settle(self, group: list[_Waiting]) -> None:
         try:
             rows = [row for waiting in group for row in waiting.rows]
-            booked = await self._threads.run(outcomes.book, self._database, rows, weigh)
-        except StoreAway as error:
+            booked = await self._threads.run_within(
+                THREAD_S, outcomes.book, self._database, rows, weigh
+            )
+        except (StoreAway, Overloaded) as error:
             for waiting in group:
                 _fail(waiting, error)
         except POISON:
@@ -232,7 +280,7 @@ def _receipt(row: Booking, booked: Booked) -> Receipt:
     return Receipt(ref_of(row.event.bid), booked.status, booked.code, booked.clipped)
 
 
-def _fail(waiting: _Waiting, error: StoreAway) -> None:
+def _fail(waiting: _Waiting, error: StoreAway | Overloaded) -> None:
     if not waiting.done.done():
         waiting.done.set_exception(error)
 

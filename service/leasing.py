@@ -20,6 +20,7 @@ logger = logging.getLogger(__name__)
 
 MARGIN_SHARE = 20  # A twentieth of the lease is left unused, against clocks that run unevenly.
 DENIED_S = 0.25
+OVERDUE_S = 0.25  # A batch takes a few milliseconds; one this late hangs.
 BATCH_MAX = 200
 
 
@@ -47,6 +48,7 @@ class Leasing:
         clock: Callable[[], float] = boot_clock,
     ) -> None:
         self.hand = Hand()
+        self._overdue_at = float("inf")
         self.clock = clock
         self._database, self._threads = database, threads
         self._worker, self._lease_s = worker, lease_s
@@ -69,7 +71,10 @@ class Leasing:
 
     async def obtain(self, line_item: str, wait_s: float) -> None:
         """Wait at most `wait_s` seconds for a slice; the caller looks into the hand after."""
-        await asyncio.wait([self.wish(line_item)], timeout=max(0.0, wait_s))
+        wish = self.wish(line_item)
+        # Nobody waits behind a database that hangs, or all who ask would pile up here.
+        if time.monotonic() < self._overdue_at:
+            await asyncio.wait([wish], timeout=max(0.0, wait_s))
 
     def refresh(self, held: SliceInHand) -> None:
         """Ask for the next slice once half of this one, in money or in time, is used."""
@@ -142,7 +147,7 @@ class Leasing:
             self.hand.under_floor[report.line_item] = before + report.under_floor
 
     async def _lease(self, names: list[str]) -> None:
-        asked_at = self.clock()
+        asked_at, self._overdue_at = self.clock(), time.monotonic() + OVERDUE_S
         # The lease is measured from before we asked, so that ours always ends first.
         requests = [self._request(name, asked_at) for name in names]
         try:
@@ -155,6 +160,8 @@ class Leasing:
         except StoreAway:
             self._give_back_unseen(requests)
             answers = [leases.Denied(name, "budget_held") for name in names]
+        finally:
+            self._overdue_at = float("inf")
         for answer in answers:
             self._take(answer, asked_at)
 

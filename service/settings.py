@@ -90,6 +90,20 @@ class Settings(BaseSettings):
         description="Milliseconds a bid may take at most, whatever the caller asks for, so that "
         "waiting requests cannot pile up (our own limit).",
     )
+    bids_waiting_max: Count = Field(
+        200,
+        description="Bids that may wait at once for a slice or for a first look at a line item. "
+        "One more is passed as overloaded at once; what is in hand is bid either way.",
+    )
+    outcome_calls_max: Count = Field(
+        256,
+        description="Calls with outcomes under way at once. One more is told to come again "
+        "before it is read, so that memory is bounded and nothing durable is refused.",
+    )
+    outcome_rows_waiting_max: Count = Field(
+        20_000,
+        description="Outcomes that may wait to be booked; beyond it calls are told to come again.",
+    )
     lease_s: int = Field(
         30,
         ge=1,

@@ -7,6 +7,8 @@ from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from typing import ParamSpec, TypeVar
 
+from service.errors import Overloaded
+
 P = ParamSpec("P")
 T = TypeVar("T")
 
@@ -32,6 +34,23 @@ class Threads:
             # Its result is nobody's any more, but its transaction must not outlive a stop.
             await asyncio.wait([future])
             raise
+
+    async def run_within(
+        self, seconds: float, work: Callable[P, T], *args: P.args, **kwargs: P.kwargs
+    ) -> T:
+        """
+        As run(), but give up when no thread comes free in time.
+
+        Raises:
+            Overloaded: The work was not begun, and never will be.
+        """
+        begun = self._pool.submit(work, *args, **kwargs)
+        future = asyncio.wrap_future(begun)
+        done, _ = await asyncio.wait([future], timeout=seconds)
+        # What runs cannot be cancelled, so this is false once the work has begun.
+        if not done and begun.cancel():
+            raise Overloaded("no thread came free")
+        return await future
 
     def close(self) -> None:
         """Wait for what is running and let the threads go."""

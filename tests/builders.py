@@ -22,7 +22,7 @@ from service.bidding import Answer, Bidder, Clocks
 from service.catalog import Catalog
 from service.clerk import Clerk, Habits
 from service.decision.opportunity import Opportunity
-from service.feedback import Feedback, Receipt, Report
+from service.feedback import Feedback, Receipt, Report, Room
 from service.guard.ticket import TicketKeys
 from service.leasing import Leasing
 from service.ledger.entries import Entry
@@ -186,6 +186,8 @@ async def working(
     lease_s: int = LEASE_S,
     queue_max: int = 1000,
     incarnation: bytes | None = None,
+    waiting_max: int = 200,
+    room: Room | None = None,
 ) -> AsyncIterator[Worker]:
     """A worker on a migrated database; its leasing and feedback run, its upkeep waits for calls."""
     database, threads = Database(url), Threads(6)
@@ -195,8 +197,8 @@ async def working(
     catalog = Catalog(database, threads)
     leasing = Leasing(database, threads, worker, lease_s, clock)
     backlog = Backlog(queue_max)
-    bidder = Bidder(catalog, leasing, keys, here, Clocks(100, 5000), backlog)
-    feedback = Feedback(database, threads, keys, here)
+    bidder = Bidder(catalog, leasing, keys, here, Clocks(100, 5000, waiting_max), backlog)
+    feedback = Feedback(database, threads, keys, here, room)
     operator = Operator(database, threads, catalog, news, 10)
     upkeep = Upkeep(
         *(database, threads, worker, catalog, leasing, backlog, news, Rhythm(250, 10, 2000))

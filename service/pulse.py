@@ -1,0 +1,27 @@
+"""How late the event loop is, since a request waits that long before anybody sees it arrive."""
+
+from __future__ import annotations
+
+import asyncio
+import time
+
+BEAT_S = 0.01
+
+
+class Pulse:
+    """A beat that is late when the loop is; run() must go beside what it measures."""
+
+    def __init__(self) -> None:
+        self._due = float("inf")
+        self._late_s = 0.0
+
+    def lag_s(self) -> float:
+        """Seconds by which the loop is late, or was at its last beat a moment ago."""
+        return max(self._late_s, time.monotonic() - self._due, 0.0)
+
+    async def run(self) -> None:
+        """Beat until cancelled."""
+        while True:
+            self._due = time.monotonic() + BEAT_S
+            await asyncio.sleep(BEAT_S)
+            self._late_s = time.monotonic() - self._due
