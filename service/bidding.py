@@ -87,7 +87,7 @@ class Bidder:
         until = arrived + self._allowed_s(opportunity)
         late = self._clocks.lag_s() > until - arrived
         item = self._catalog.get(opportunity.line_item)
-        if item is None and not late:
+        if item is None:
             item = await self._look_up(opportunity.line_item, until)
         if item is None:
             reason = "overloaded" if time.monotonic() < until else "past_deadline"

@@ -85,8 +85,6 @@ async def test_who_was_seen_too_late_is_passed(migrated_url: str) -> None:
         await worker.bids(1)
         wish, now = Opportunity(NAME, deadline_ms=100), time.monotonic()
         assert (await bidder_with(worker, 0.2).bid(wish, now)).reason == "overloaded"
-        unknown = Opportunity("forest", deadline_ms=100)
-        assert (await bidder_with(worker, 0.2).bid(unknown, now)).reason == "overloaded"
         assert worker.leasing.hand.slices[NAME].bids == 1
         assert (await bidder_with(worker, 0.0).bid(wish, time.monotonic())).bid == PRICE
 

@@ -23,7 +23,9 @@ Counts = dict[str, int]
 @pytest.fixture
 async def app_client(migrated_url: str) -> AsyncIterator[httpx.AsyncClient]:
     """A caller with an admin key before a running service on an empty database."""
-    settings = load({"BIDKEEL_DATABASE_URL": migrated_url})
+    # Many of these bodies take longer to read than an exchange would wait.
+    patient = {"BIDKEEL_DEADLINE_MS": "5000", "BIDKEEL_DEADLINE_MS_MAX": "5000"}
+    settings = load({"BIDKEEL_DATABASE_URL": migrated_url, **patient})
     database = open_database(settings)
     _, bearer = keys.add(database, "tests", ["admin"])
     database.close()
