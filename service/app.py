@@ -144,6 +144,9 @@ def clerk_of(settings: Settings, database: Database, threads: Threads) -> Clerk:
         settings.teach_ms,
         settings.checkpoint_entries,
         settings.decision_keep_days,
+        settings.slice_keep_days,
+        settings.quarantine_keep_days,
+        settings.repeat_keep_days,
     )
     return Clerk(database, threads, habits)
 

@@ -98,12 +98,14 @@ class Catalog:
         )
         if not news:
             return []
-        if any(kind == "keys" for _, kind, _ in news):
+        # Numbers have no gaps: one means that what lay there was forgotten while we slept.
+        missed = news[0][0] != self.change_seen + 1
+        if missed or any(kind == "keys" for _, kind, _ in news):
             self._keys.clear()
         # What this worker never asked for it need not load now.
         names = {name for _, kind, name in news if kind != "keys"}
         known = set(self._items)
-        wanted = known if changes.ALL in names else names & known
+        wanted = known if missed or changes.ALL in names else names & known
         renewed = await self.renew(sorted(wanted))
         self._misses.clear()
         self.change_seen = news[-1][0]

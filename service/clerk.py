@@ -8,7 +8,7 @@ database do no harm: each piece of work takes its lock or changes nothing the se
 from __future__ import annotations
 
 import logging
-from collections.abc import Coroutine
+from collections.abc import Callable, Coroutine
 from dataclasses import dataclass
 from functools import partial
 from typing import Any
@@ -16,8 +16,17 @@ from typing import Any
 from service.learner.exptree_state import UnreadableTree
 from service.learner.memory import UnreadableMemory
 from service.patience import Patience
-from service.store import decisions, epochs, learners, leases
-from service.store.database import Database
+from service.store import (
+    auditing,
+    changes,
+    decisions,
+    epochs,
+    learners,
+    leases,
+    repeats,
+    workers,
+)
+from service.store.database import Database, Writing
 from service.teaching import FRESH, lawful, lesson, readable
 from service.threads import Threads
 
@@ -36,6 +45,9 @@ class Habits:
     teach_ms: int
     checkpoint_entries: int
     decision_keep_days: int
+    slice_keep_days: int
+    quarantine_keep_days: int
+    repeat_keep_days: int
 
 
 class Clerk:
@@ -44,6 +56,7 @@ class Clerk:
     def __init__(self, database: Database, threads: Threads, habits: Habits) -> None:
         self._database, self._threads, self._habits = database, threads, habits
         self._patience = Patience(database, threads)
+        self._sound: dict[str, auditing.Standing] = {}
 
     def duties(self) -> list[Coroutine[Any, Any, None]]:
         """Every loop, to be run until cancelled."""
@@ -71,16 +84,40 @@ class Clerk:
         await self._threads.run(leases.close_due, self._database)
 
     async def audit(self) -> None:
-        """Freeze what no longer says what was promised; the command reads the streams too."""
+        """Freeze what no longer says what was promised, from where the last audit ended."""
         await self._patience.freeze_broken()
+        stands = await self._threads.run(self._database.read, auditing.standings)
+        for name, standing in stands.items():
+            # Nothing has moved since it was found sound, not even by hand.
+            if self._sound.get(name) != standing and await self._audit(name):
+                self._sound[name] = standing
 
     async def prune(self) -> None:
-        """Forget old decisions."""
-        before_ms = self._database.wall_ms() - self._habits.decision_keep_days * DAY_MS
-        await self._threads.run(
-            self._database.write, lambda connection: decisions.prune(connection, before_ms)
+        """Forget what has been kept for long enough, in pieces that hold up nobody."""
+        habits, wall_ms = self._habits, self._database.wall_ms()
+        await self._until_none(decisions.prune, wall_ms - habits.decision_keep_days * DAY_MS)
+        await self._until_none(
+            decisions.prune_quarantine, wall_ms - habits.quarantine_keep_days * DAY_MS
         )
-        await self._threads.run(self._database.write, epochs.prune)
+        await self._until_none(repeats.prune, wall_ms - habits.repeat_keep_days * DAY_MS)
+        await self._until_none(auditing.prune_slices, habits.slice_keep_days * DAY_MS)
+        for forget in (epochs.prune, changes.prune, workers.prune):
+            await self._threads.run(self._database.write, forget)
+
+    async def _audit(self, line_item: str) -> bool:
+        """Audit what is new of one line item, piece by piece; False where it disagrees."""
+        while True:
+            whole, found, frozen = await self._threads.run(
+                auditing.audit_on, self._database, line_item
+            )
+            for name in frozen:
+                logger.critical("the stream of line item %s disagrees; it is frozen", name)
+            if whole or found:
+                return not found
+
+    async def _until_none(self, prune: Callable[[Writing, int], int], bound_ms: int) -> None:
+        while await self._threads.run(self._database.write, lambda c: prune(c, bound_ms)):
+            pass
 
     async def _teach(self, line_item: str) -> int:
         every = self._habits.checkpoint_entries

@@ -156,6 +156,27 @@ class Settings(BaseSettings):
         description="Days that logged decisions are kept; the stream itself is kept for ever.",
     )
 
+    slice_keep_days: int = Field(
+        2,
+        ge=0,
+        le=3650,
+        description="Days that closed slices are kept after their grace, once audited: their "
+        "money is told by the stream, and every worker leaves thousands of them a day.",
+    )
+    quarantine_keep_days: int = Field(
+        90,
+        ge=1,
+        le=3650,
+        description="Days that outcomes which could not be booked are kept for people to look at.",
+    )
+    repeat_keep_days: int = Field(
+        7,
+        ge=1,
+        le=3650,
+        description="Days for which an Idempotency-Key is remembered: nobody sends a call again "
+        "after so long.",
+    )
+
     ticket_keys: SecretStr = Field(
         SecretStr(""),
         description="Secret keys of tickets, comma between them, 32 characters or more each: the "

@@ -203,7 +203,7 @@ async def working(
     upkeep = Upkeep(
         *(database, threads, worker, catalog, leasing, backlog, news, Rhythm(250, 10, 2000))
     )
-    clerk = Clerk(database, threads, Habits(200, 10, 30))
+    clerk = Clerk(database, threads, Habits(200, 10, 30, 2, 90, 7))
     await upkeep.start()
     await clerk.start()
     tasks = [asyncio.create_task(leasing.run()), asyncio.create_task(feedback.run())]

@@ -10,8 +10,9 @@ from contextlib import asynccontextmanager
 import pytest
 
 from service.feedback import Report
-from service.store import learners
-from tests.builders import GRACE_MS, LEASE_S, NAME, PRICE, Worker, outage, working
+from service.store import changes, learners
+from service.store.decisions import quarantine
+from tests.builders import GRACE_MS, LEASE_S, NAME, PRICE, Worker, line_item, outage, working
 
 pytestmark = pytest.mark.anyio
 
@@ -184,15 +185,70 @@ async def test_a_stop_gives_everything_back(migrated_url: str) -> None:
         assert worker.audit() == []
 
 
-async def test_old_decisions_are_forgotten(migrated_url: str) -> None:
-    """What is older than the setting goes, what is younger stays."""
+async def test_what_is_older_than_its_setting_is_forgotten(migrated_url: str) -> None:
+    """Decisions after 30 days, repeat guards after 7, quarantine after 90; younger ones stay."""
     async with working(migrated_url) as worker:
-        await worker.create()
+        await worker.operator.create(line_item(), None, "tester", "once")
         await worker.bids(2)
         await worker.upkeep.log()
-        worker.run("UPDATE decision SET at_ms = at_ms - :age WHERE number = 1", age=31 * DAY_MS)
+        for table, days in (("decision", 30), ("repeat_guard", 7), ("quarantine", 90)):
+            old = worker.database.wall_ms() - days * DAY_MS - 1000
+            if table == "quarantine":
+                worker.database.write(lambda c, at=old: quarantine(c, NAME, "old", {}, at))  # type: ignore[misc]
+                worker.database.write(lambda c, at=old: quarantine(c, NAME, "new", {}, at + 9000))  # type: ignore[misc]
+                continue
+            limit = " AND number = 1" if table == "decision" else ""
+            worker.run(f"UPDATE {table} SET at_ms = :old WHERE 1 = 1{limit}", old=old)  # noqa: S608
         await worker.clerk.prune()
         assert worker.column("SELECT number FROM decision") == [2]
+        assert worker.column("SELECT repeat_key FROM repeat_guard") == []
+        assert worker.column("SELECT error FROM quarantine") == ["new"]
+
+
+async def test_a_closed_slice_is_forgotten_when_it_is_audited(migrated_url: str) -> None:
+    """Two days after its grace; a worker that slept through the changes reads all afresh."""
+    async with working(migrated_url) as worker, working(migrated_url, "two") as asleep:
+        await worker.create()
+        await asleep.bid(test=True)
+        await worker.bids(1)
+        worker.clock.now += LEASE_S
+        await worker.upkeep.give_back()
+        worker.pass_service_ms(LEASE_S * 1000 + GRACE_MS)
+        await worker.keep_time()
+        worker.pass_service_ms(4 * DAY_MS)
+        await worker.bids(1)
+        await worker.clerk.prune()
+        assert worker.one("SELECT count(*) FROM slice") == 2
+        await worker.clerk.audit()
+        await worker.clerk.prune()
+        assert worker.column("SELECT state FROM slice") == ["open"]
+        assert worker.audit() == []
+
+        await worker.operator.freeze(NAME, "a look", "tester")
+        worker.database.write(lambda c: changes.announce(c, "keys", ["a"]))
+        await worker.upkeep.follow()
+        await worker.clerk.prune()
+        assert worker.one("SELECT count(*) FROM change_log") == 1
+        await asleep.upkeep.follow()
+        assert (await asleep.bid()).reason == "frozen"
+
+
+async def test_the_clerk_finds_a_stream_that_disagrees(migrated_url: str) -> None:
+    """A spend moved by hand within one line item freezes it within one look, and no other."""
+    async with working(migrated_url) as worker:
+        for name in (NAME, "meadow"):
+            await worker.create(id=name)
+            await worker.bids(1, name)
+        await worker.clerk.audit()
+        assert worker.column("SELECT line_item FROM freezing") == []
+        moved = (
+            "UPDATE balance SET spent = spent + 7, unfunded = unfunded + 2 WHERE line_item = :id"
+        )
+        worker.run(moved, id="meadow")
+        await worker.clerk.audit()
+        (reason,) = worker.column("SELECT reason FROM freezing WHERE line_item = 'meadow'")
+        assert reason == "V3 accepted costs = spent + unfunded + disputed: off by 9"
+        assert worker.column("SELECT line_item FROM freezing") == ["meadow"]
 
 
 @pytest.mark.parametrize("backend", ["postgresql"], indirect=True)

@@ -125,6 +125,13 @@ CREATE TABLE checkpoint (
     at_ms BIG NOT NULL,
     PRIMARY KEY (line_item, seq)
 ) STRICTLY;
+CREATE TABLE audited (
+    line_item TEXT PRIMARY KEY REFERENCES line_item (id),
+    seq BIG NOT NULL CHECK (seq >= 0),
+    service_ms BIG NOT NULL,
+    cost BIG NOT NULL CHECK (cost >= 0),
+    books TEXT NOT NULL
+) STRICTLY;
 CREATE TABLE epoch (
     line_item TEXT NOT NULL REFERENCES line_item (id),
     snapshot BIG NOT NULL CHECK (snapshot >= 0),

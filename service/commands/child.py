@@ -26,6 +26,7 @@ from service.settings import Settings, load
 
 logger = logging.getLogger(__name__)
 
+SWITCH_S = 0.0002
 FINISH_S = 4  # For requests in flight; the rest of the ten seconds is for slices and the log.
 
 
@@ -48,6 +49,9 @@ def main(words: list[str] | None = None) -> int:
 
 def serve(settings: Settings, post: Post, shared: socket.socket | None = None) -> None:
     """One serving process, on the crew's socket or on the address of the settings."""
+    if post.clerk:
+        # The clerk's threads live here too and would hold a price up for 5 ms at a time.
+        sys.setswitchinterval(SWITCH_S)
     config = uvicorn.Config(
         create_app(settings, post),
         host=settings.host,

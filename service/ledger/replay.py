@@ -17,7 +17,8 @@ class Replayed:
     Balances in nanos as the stream tells them; slices map to [amount, left, owed, closed].
 
     `days` map to what was spent on them: out of slices that are known, and by tickets
-    without one, whose day may not have had a row yet.
+    without one, whose day may not have had a row yet. `owed` maps a bid to its slice and to
+    what it owes; `strange` counts entries about slices that were never leased.
     """
 
     spent: int = 0
@@ -26,23 +27,28 @@ class Replayed:
     disputed: int = 0
     budget: int = 0
     slices: dict[str, list[int]] = field(default_factory=dict)
-    owed: dict[str, int] = field(default_factory=dict)
+    owed: dict[str, tuple[str, int]] = field(default_factory=dict)
     results: dict[str, str] = field(default_factory=dict)
     billed: set[str] = field(default_factory=set)
     paid: set[str] = field(default_factory=set)
     retired: set[str] = field(default_factory=set)
     days: dict[str, list[int]] = field(default_factory=dict)
     place: tuple[str, bool] = ("", False)
+    strange: int = 0
 
 
-def replay(spend_on: str, entries: Sequence[tuple[str, str, Mapping[str, Any]]]) -> Replayed:
+Told = tuple[str, str, Mapping[str, Any]]  # Kind, bid in hex, body.
+
+
+def replay(spend_on: str, entries: Sequence[Told], before: Replayed | None = None) -> Replayed:
     """
-    Replay (kind, bid hex, body) in order of seq.
+    Replay entries in order of seq.
 
     Args:
         spend_on: "won" or "billed".
+        before: The books that the entries before these gave; they are written on.
     """
-    books = Replayed()
+    books = before or Replayed()
     for kind, bid, body in entries:
         _apply(books, spend_on, kind, bid, body)
     books.held = sum(left + owed for _, left, owed, _ in books.slices.values())
@@ -72,17 +78,21 @@ def _apply(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[st
 
 
 def _retire(books: Replayed, body: Mapping[str, Any]) -> None:
+    row = books.slices.get(body["slice"])
+    if row is None:
+        books.strange += 1
     # A slice is put down once; whoever books it again would free money that is not there.
-    if body["slice"] not in books.retired:
+    elif body["slice"] not in books.retired:
         books.retired.add(body["slice"])
-        books.slices[body["slice"]][1] -= body["freed"]
+        row[1] -= body["freed"]
 
 
 def _close(books: Replayed, body: Mapping[str, Any]) -> None:
-    row = books.slices[body["slice"]]
-    if body["released"] or not body["unbilled"]:
-        row[1], row[3] = row[1] - body["released"], 1
-    row[2] -= body["unbilled"]
+    row = books.slices.get(body["slice"])
+    if row is None:
+        books.strange += 1
+        return
+    row[1], row[2], row[3] = row[1] - body["released"], row[2] - body["unbilled"], 1
 
 
 def _edit(books: Replayed, budget: int) -> None:
@@ -126,8 +136,8 @@ def _outcome(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[
     if row is not None and not row[3]:
         row[1] -= hold
         if kind == "won" and spend_on == "billed":
-            books.owed[bid] = min(price, hold)
-            row[2] += books.owed[bid]
+            books.owed[bid] = body["slice"], min(price, hold)
+            row[2] += min(price, hold)
         elif kind == "won":
             _pay(books, min(price, hold), price - hold, funded=True)
     elif kind == "won" and spend_on == "won":
@@ -147,7 +157,7 @@ def _bill(
         return
     if spend_on == "won":
         return
-    owed = books.owed.get(bid, 0)
+    _, owed = books.owed.pop(bid, ("", 0))
     if row is None or row[2] < owed:
         owed = 0
     if row is not None:
@@ -160,18 +170,23 @@ def _bill(
 
 
 def _conflict(books: Replayed, bid: str, body: Mapping[str, Any]) -> None:
-    """A contradiction costs money once: a win after a loss, or billing of what was not won."""
-    unpaid = {"won": ("lost", "void"), "billed": ("lost", "void", "voided")}
-    result = books.results.get(bid)
-    if bid in books.paid or bid in books.billed or result not in unpaid.get(body["said"], ()):
+    if not contradiction_costs(books, bid, body):
         return
     hold, price = body["bid"], body["price"] or 0
     books.paid.add(bid)
     _pay(books, min(price, hold), price - hold, funded=_fits(books, min(price, hold)))
 
 
+def contradiction_costs(books: Replayed, bid: str, body: Mapping[str, Any]) -> bool:
+    """Whether it costs, once: a win after a loss, or billing of what was not won."""
+    unpaid = {"won": ("lost", "void"), "billed": ("lost", "void", "voided")}
+    result = books.results.get(bid)
+    known = bid in books.paid or bid in books.billed
+    return not known and result in unpaid.get(body["said"], ())
+
+
 def _drop_owed(books: Replayed, bid: str, row: list[int] | None) -> None:
-    owed = books.owed.pop(bid, 0)
+    _, owed = books.owed.pop(bid, ("", 0))
     if row is not None and row[2] >= owed:
         row[2] -= owed
 

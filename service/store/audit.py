@@ -8,10 +8,11 @@ from __future__ import annotations
 
 import json
 from dataclasses import asdict, dataclass
+from typing import Self
 
 from sqlalchemy import text
 
-from service.ledger.replay import replay
+from service.ledger.replay import Replayed, replay
 from service.store.changes import announce
 from service.store.database import Database, Reading, Writing
 from service.store.freezes import put
@@ -98,10 +99,11 @@ def freeze_broken(database: Database) -> list[str]:
     found = database.read(lambda connection: _checked(connection, STANDING))
     if not found:
         return []
-    return database.write(lambda connection: _freeze(connection, found, database.wall_ms()))
+    return database.write(lambda connection: freeze_found(connection, found, database.wall_ms()))
 
 
-def _freeze(connection: Writing, found: list[Finding], wall_ms: int) -> list[str]:
+def freeze_found(connection: Writing, found: list[Finding], wall_ms: int) -> list[str]:
+    """Freeze what the findings are about, each with its difference in the journal."""
     reasons = {f.line_item: f"{f.check}: off by {f.off}" for f in reversed(found)}
     frozen = [
         name
@@ -138,34 +140,64 @@ def _line_items(connection: Reading) -> list[str]:
     return [row.line_item for row in connection.execute(text("SELECT line_item FROM balance"))]
 
 
+@dataclass(frozen=True, slots=True)
+class Balance:
+    """A balance row as the replay must find it, and how wins are spent; money in nanos."""
+
+    line_item: str
+    seq: int
+    spent: int
+    held: int
+    unfunded: int
+    disputed: int
+    budget: int
+    spend_on: str
+
+    @classmethod
+    def read(cls, connection: Reading, line_item: str) -> Self:
+        """The balance of one line item."""
+        row = connection.execute(
+            text(
+                "SELECT b.target, b.seq, b.spent, b.held, b.unfunded, b.disputed, i.config"
+                " FROM balance b JOIN line_item i ON i.id = b.line_item WHERE b.line_item = :id"
+            ),
+            {"id": line_item},
+        ).one()
+        sums = (row.seq, row.spent, row.held, row.unfunded, row.disputed, row.target)
+        return cls(line_item, *sums, json.loads(row.config)["spend_on"])
+
+
+def compared(connection: Reading, balance: Balance, books: Replayed) -> list[Finding]:
+    """Where a replay of the whole stream and the balances of its line item differ."""
+    found = [
+        Finding(
+            f"V7 replayed {name} equals {name}",
+            balance.line_item,
+            getattr(balance, name) - getattr(books, name),
+        )
+        for name in ("budget", "spent", "held", "unfunded", "disputed")
+    ]
+    strange = Finding("V7 every slice was leased", balance.line_item, books.strange)
+    found += [strange, *_compared_days(connection, balance.line_item, books.days)]
+    return [finding for finding in found if finding.off]
+
+
 def _replayed(connection: Reading, line_item: str) -> list[Finding]:
-    row = connection.execute(
-        text(
-            "SELECT b.target AS budget, b.spent, b.held, b.unfunded, b.disputed, i.config"
-            " FROM balance b JOIN line_item i ON i.id = b.line_item WHERE b.line_item = :id"
-        ),
-        {"id": line_item},
-    ).one()
+    balance = Balance.read(connection, line_item)
     entries = connection.execute(
         text("SELECT kind, bid, body FROM stream WHERE line_item = :id ORDER BY seq"),
         {"id": line_item},
     )
-    config = json.loads(row.config)
     try:
         told = [(e.kind, bytes(e.bid).hex() if e.bid else "", json.loads(e.body)) for e in entries]
-        books = replay(config["spend_on"], told)
+        books = replay(balance.spend_on, told)
     except (ValueError, LookupError, TypeError, AttributeError):
         # A damaged row must not keep the other line items from being audited.
         return [Finding("V7 the stream can be replayed", line_item, 1)]
-    found = [
-        Finding(f"V7 replayed {name} equals {name}", line_item, getattr(row, name) - said)
-        for name in ("budget", "spent", "held", "unfunded", "disputed")
-        if (said := getattr(books, name)) != getattr(row, name)
-    ]
-    return found + _replayed_days(connection, line_item, books.days)
+    return compared(connection, balance, books)
 
 
-def _replayed_days(
+def _compared_days(
     connection: Reading, line_item: str, told: dict[str, list[int]]
 ) -> list[Finding]:
     rows = connection.execute(

@@ -5,6 +5,7 @@ from __future__ import annotations
 from sqlalchemy import text
 
 from service.store.database import Reading, Writing
+from service.store.workers import bound
 
 ALL = "*"  # The line item of a change that concerns all; no id may contain it.
 
@@ -43,11 +44,19 @@ def since(connection: Reading, number: int) -> list[tuple[int, str, str]]:
     return [(row.number, row.kind, row.line_item) for row in rows]
 
 
-def latest(connection: Reading) -> int:
+def latest(connection: Reading | Writing) -> int:
     """The last number taken."""
     return int(connection.execute(text("SELECT number FROM change_counter")).scalar_one())
 
 
-def prune(connection: Writing, number: int) -> None:
-    """Forget changes up to `number`, which every live worker has passed."""
-    connection.execute(text("DELETE FROM change_log WHERE number <= :n"), {"n": number})
+def prune(connection: Writing) -> None:
+    """
+    Forget changes that all workers have passed from which a price may still leave.
+
+    The newest stays, so that a worker which slept through what is gone sees that it did.
+    """
+    passed = min(bound(connection).values(), default=latest(connection))
+    connection.execute(
+        text("DELETE FROM change_log WHERE number <= :passed AND number < :newest"),
+        {"passed": passed, "newest": latest(connection)},
+    )

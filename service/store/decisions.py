@@ -10,6 +10,7 @@ from sqlalchemy import text
 from service.store.database import Database, Writing
 
 Decision = dict[str, Any]
+PRUNED_MAX = 5000
 
 
 def log(database: Database, decisions: list[Decision]) -> None:
@@ -18,8 +19,13 @@ def log(database: Database, decisions: list[Decision]) -> None:
 
 
 def prune(connection: Writing, before_ms: int) -> int:
-    """Forget decisions made before this wall clock moment."""
-    statement = text("DELETE FROM decision WHERE at_ms < :before")
+    """Forget the oldest decisions made before this wall clock moment; returns how many."""
+    return connection.execute(_PRUNE, {"before": before_ms, "limit": PRUNED_MAX}).rowcount
+
+
+def prune_quarantine(connection: Writing, before_ms: int) -> int:
+    """Forget what was set aside before this wall clock moment; returns how much."""
+    statement = text("DELETE FROM quarantine WHERE at_ms < :before")
     return connection.execute(statement, {"before": before_ms}).rowcount
 
 
@@ -53,6 +59,12 @@ def quarantine(
     )
 
 
+# Rows were numbered as they came, so the oldest are found without an index by time, and few at
+# once are deleted in less than a statement may take.
+_PRUNE = text(
+    "DELETE FROM decision WHERE number IN (SELECT number FROM (SELECT number, at_ms FROM decision"
+    " ORDER BY number LIMIT :limit) AS oldest WHERE at_ms < :before)"
+)
 _INSERT = text(
     "INSERT INTO decision (at_ms, line_item, ref, request_id, source, floor, price,"
     " reason, set_by, snapshot, test) VALUES (:at_ms, :line_item, :ref, :request_id,"

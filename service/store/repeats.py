@@ -53,6 +53,12 @@ def once(
     return answer
 
 
+def prune(connection: Writing, before_ms: int) -> int:
+    """Forget keys used before this wall clock moment: a repeat after it is a new call."""
+    statement = text("DELETE FROM repeat_guard WHERE at_ms < :before")
+    return connection.execute(statement, {"before": before_ms}).rowcount
+
+
 _CLAIM = text(
     "INSERT INTO repeat_guard (actor, repeat_key, digest, answer, at_ms)"
     " VALUES (:actor, :key, :digest, '{}', :now) ON CONFLICT DO NOTHING"

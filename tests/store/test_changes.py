@@ -8,7 +8,7 @@ from concurrent.futures import ThreadPoolExecutor
 
 import pytest
 
-from service.store import changes
+from service.store import changes, workers
 from service.store.database import Database, Reading
 
 WRITERS = 8
@@ -75,9 +75,14 @@ def _numbers_after(connection: Reading, last: int) -> list[int]:
 
 
 def test_what_every_worker_has_passed_may_be_forgotten(database: Database) -> None:
-    """Pruning removes old rows and leaves the counter where it is."""
+    """Pruning removes what all have read, never the newest, and leaves the counter where it is."""
     database.write(lambda connection: changes.announce(connection, "x", ["a", "b", "c"]))
-    database.write(lambda connection: changes.prune(connection, 2))
+    database.write(lambda connection: workers.beat(connection, "fast", 3, 1))
+    database.write(lambda connection: workers.beat(connection, "slow", 1, 1))
+    database.write(changes.prune)
+    assert database.read(lambda c: _numbers_after(c, 0)) == [2, 3]
 
+    database.write(lambda connection: workers.leave(connection, "slow"))
+    database.write(changes.prune)
     assert database.read(lambda connection: changes.since(connection, 0)) == [(3, "x", "c")]
     assert database.write(lambda connection: changes.announce(connection, "x", ["d"])) == 4
