@@ -7,5 +7,5 @@ learner    estimators: what the impressions bought have taught (pure)
 ledger     the rules of money and of the stream (pure, integers)
 store      SQL, and nothing but SQL
 rehearsal  invented markets that run the same decision and learner code
-bidding, feedback, upkeep, operating   the stories that tie them together
+bidding, feedback, upkeep, clerk, operating   the stories that tie them together
 """

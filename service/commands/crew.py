@@ -20,7 +20,7 @@ from service.app import new_worker
 
 logger = logging.getLogger(__name__)
 
-STOP_S = 9.0  # A stop is promised within ten seconds.
+STOP_S = 8.0  # A stop is promised within ten seconds, for whoever stops us kills us after them.
 LOOK_S = 0.05
 BIND_S = 10.0
 QUEUE = 2048  # Connections that may wait while every worker is busy or starting.

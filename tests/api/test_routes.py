@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import AsyncIterator, Iterator
-from contextlib import contextmanager
+from collections.abc import AsyncIterator
+from contextlib import AbstractContextManager, nullcontext
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -16,7 +16,7 @@ from service.api.forms.configs import read_new
 from service.api.routes import install
 from service.bidding import Answer
 from service.decision.opportunity import Opportunity
-from service.errors import Overloaded, Refusal, Stale, StoreAway, no_such_line_item
+from service.errors import Refusal, Stale, StoreAway, no_such_line_item
 from service.feedback import Receipt, Report
 from service.operating import Key, View
 
@@ -64,14 +64,10 @@ class Outcomes:
     """A feedback story that records everything, unless its database is away."""
 
     away: bool = False
-    full: bool = False
 
-    @contextmanager
-    def admitted(self) -> Iterator[None]:
-        """Room, unless it is full."""
-        if self.full:
-            raise Overloaded("full")
-        yield
+    def admitted(self) -> AbstractContextManager[None]:
+        """There is always room."""
+        return nullcontext()
 
     async def report(self, reports: list[Report]) -> list[Receipt]:
         """One receipt each."""
@@ -267,16 +263,6 @@ async def test_outcomes_without_a_database_are_503(
     stories.feedback.away = True
     answer = await client.post("/v1/outcomes", json={"outcomes": [{"kind": "lost", "ticket": "t"}]})
     assert (answer.status_code, answer.headers["retry-after"]) == (503, "1")
-
-
-async def test_outcomes_without_room_are_503_before_they_are_read(
-    client: httpx.AsyncClient, stories: Stories
-) -> None:
-    """Even what is no JSON is told to come again, since nobody looks at it."""
-    stories.feedback.full = True
-    answer = await client.post("/v1/outcomes", content=b"?")
-    assert (answer.status_code, answer.json()["code"]) == (503, "overloaded")
-    assert answer.headers["retry-after"] == "1"
 
 
 async def test_a_new_line_item_is_201_with_its_place_and_version(

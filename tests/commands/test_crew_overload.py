@@ -12,6 +12,7 @@ import httpx
 import numpy
 import pytest
 
+from service.commands.server_process import HOST
 from service.store.audit import audit
 from tests.builders import outage
 from tests.commands.crews import Serving, crew
@@ -82,12 +83,12 @@ def test_a_flood_of_outcomes_is_turned_away_unread(migrated_url: str, tmp_path: 
         serving.create()
         with serving.caller() as client:
             row = {"ticket": serving.bid(client)["ticket"], "kind": "lost"}
-        host, port = serving.server.address.removeprefix("http://").split(":")
+        host, port = HOST, serving.server.port
         body = json.dumps({"outcomes": [row]}).encode()
         head = f"POST /v1/outcomes HTTP/1.1\r\nHost: {host}\r\nContent-Type: application/json\r\n"
         head += f"Authorization: Bearer {serving.server.key}\r\nContent-Length: {len(body)}\r\n\r\n"
         with ThreadPoolExecutor(1) as pool, serving.caller() as client:
-            slow = pool.submit(send_slowly, host, int(port), head.encode(), body)
+            slow = pool.submit(send_slowly, host, port, head.encode(), body)
             time.sleep(0.5)
             refused = client.post("/v1/outcomes", json={"outcomes": [row]})
             assert (refused.status_code, refused.json()["code"]) == (503, "overloaded")
@@ -110,3 +111,23 @@ def send_slowly(host: str, port: int, head: bytes, body: bytes) -> bytes:
         time.sleep(1.5)
         connection.sendall(body)
         return connection.recv(65536)
+
+
+def test_a_stop_takes_less_than_ten_seconds_though_the_database_hangs(
+    migrated_url: str, tmp_path: Path, postgresql: PostgreSQL
+) -> None:
+    """What could not be given back stays held, which is the safe side, and every promise holds."""
+    with crew(migrated_url, tmp_path, 2) as serving:
+        serving.create()
+        serving.everybody(2)
+        children = serving.children("worker") + serving.children("clerk")
+        with postgresql.hanging():
+            began = time.monotonic()
+            assert serving.server.stop() == 0
+            took_s = time.monotonic() - began
+        print(f"stopped beside a hanging database in {took_s:.1f} s")  # noqa: T201
+        assert took_s < 10
+        assert [child.pid for child in children if child.is_running()] == []
+        serving.database.close()
+        assert serving.one("SELECT held FROM balance") > 0
+        assert serving.database.read(audit) == []
