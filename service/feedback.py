@@ -135,16 +135,16 @@ class Feedback:
             group = [await self._queue.get()]
             while not self._queue.empty() and sum(len(w.rows) for w in group) < ROWS_MAX:
                 group.append(self._queue.get_nowait())
-            await self._settle(group)
+            # Who has been told to ask again will; booking his rows now would only take longer.
+            if wanted := [waiting for waiting in group if not waiting.done.done()]:
+                await self._settle(wanted)
+            self._rows -= sum(len(waiting.rows) for waiting in group)
 
     async def _book(self, rows: list[Booking]) -> list[Booked]:
         waiting = _Waiting(rows, asyncio.get_running_loop().create_future())
         await self._queue.put(waiting)
         self._rows += len(rows)
-        try:
-            done, _ = await asyncio.wait([waiting.done], timeout=ANSWER_S)
-        finally:
-            self._rows -= len(rows)
+        done, _ = await asyncio.wait([waiting.done], timeout=ANSWER_S)
         if not done:
             # Still in the queue or already durable: only the repeat can tell.
             waiting.done.cancel()

@@ -3,15 +3,18 @@
 from __future__ import annotations
 
 import asyncio
+import threading
 from collections.abc import Callable
 from typing import TypeVar
 
 import pytest
+from sqlalchemy import event, text
 
 from service.errors import StoreAway
-from service.leasing import DENIED_S, MARGIN_SHARE
-from service.store.database import Writing
-from tests.builders import CAP, LEASE_S, NAME, PRICE, UNIT, Worker, outage, working
+from service.leasing import DENIED_S, MARGIN_SHARE, Leasing
+from service.store.database import Database, Writing
+from service.threads import Threads
+from tests.builders import CAP, LEASE_S, NAME, PRICE, UNIT, Worker, begin, outage, working
 
 pytestmark = pytest.mark.anyio
 
@@ -201,3 +204,30 @@ async def test_an_outage_is_ridden_out_on_the_slice_in_hand(migrated_url: str) -
             assert answers[15].reason == "budget_held"
         worker.clock.now += 1
         assert (await worker.bid()).bid == PRICE
+
+
+async def test_a_stop_in_the_middle_of_a_lease_strands_nothing(migrated_url: str) -> None:
+    """The slice that nobody waited for any more is given back with the others."""
+    database = Database(migrated_url)
+    begin(database, policy={"method": "flat", "price": PRICE})
+    threads = Threads(2)
+    leasing = Leasing(database, threads, "one", LEASE_S)
+    go, reached = threading.Event(), threading.Event()
+
+    def wait(_connection: object) -> None:
+        reached.set()
+        go.wait(5)
+
+    event.listen(database.engine, "commit", wait)
+    leasing.wish(NAME)
+    running = asyncio.create_task(leasing.run())
+    assert await asyncio.to_thread(reached.wait, 5)
+    running.cancel()
+    go.set()
+    await asyncio.gather(running, return_exceptions=True)
+    held = text("SELECT held FROM balance")
+    assert database.read(lambda c: c.execute(held).scalar_one()) > 0
+    await leasing.give_back()
+    assert database.read(lambda c: c.execute(held).scalar_one()) == 0
+    threads.close()
+    database.close()

@@ -10,7 +10,7 @@ import pytest
 
 from service.bidding import Bidder, Clocks
 from service.decision.opportunity import Opportunity
-from service.errors import Overloaded
+from service.errors import Overloaded, StoreAway
 from service.feedback import Report, Room
 from service.guard.ticket import TicketKeys
 from service.pulse import Pulse
@@ -139,6 +139,30 @@ async def test_outcomes_wait_a_moment_for_a_connection(migrated_url: str) -> Non
         assert worker.one("SELECT count(*) FROM stream WHERE kind = 'lost'") == 0
         (receipt,) = await worker.report(Report("lost", answer.ticket))
         assert receipt.status == "recorded"
+
+
+@on_postgresql
+async def test_outcomes_behind_a_hanging_database_are_answered(
+    migrated_url: str, postgresql: PostgreSQL, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Perhaps recorded, says the answer; what still waits keeps its room, and the repeat counts."""
+    monkeypatch.setattr("service.feedback.ANSWER_S", 0.5)
+    async with working(migrated_url, room=Room(10, 2)) as worker:
+        await worker.create()
+        tickets = [answer.ticket for answer in await worker.bids(2)]
+        with postgresql.hanging():
+            told = [worker.report(Report("lost", ticket)) for ticket in tickets]
+            answers = await asyncio.gather(*told, return_exceptions=True)
+            assert {type(answer) for answer in answers} == {StoreAway}
+            with pytest.raises(Overloaded), worker.feedback.admitted():
+                raise AssertionError("rows that wait were forgotten")
+        monkeypatch.undo()
+        for ticket in tickets:
+            (receipt,) = await worker.report(Report("lost", ticket))
+            assert receipt.status in ("recorded", "duplicate")
+        assert worker.one("SELECT count(*) FROM stream WHERE kind = 'lost'") == 2
+        with worker.feedback.admitted():
+            assert worker.audit() == []
 
 
 @on_postgresql

@@ -8,6 +8,7 @@ from concurrent.futures import ThreadPoolExecutor
 
 import pytest
 
+from service.errors import Overloaded
 from service.threads import Threads
 
 pytestmark = pytest.mark.anyio
@@ -97,3 +98,38 @@ async def test_whoever_stops_waiting_does_not_stop_the_work() -> None:
     go.set()
     await asyncio.to_thread(threads.close)
     assert done.is_set()
+
+
+async def test_a_cancelled_caller_leaves_when_the_work_is_over() -> None:
+    """A transaction never outlives the stop that cancelled who waited for it."""
+    threads, go, over = Threads(1), threading.Event(), threading.Event()
+
+    def work() -> None:
+        go.wait(5)
+        over.set()
+
+    waiting = asyncio.create_task(threads.run(work))
+    await asyncio.sleep(0.05)
+    waiting.cancel()
+    await asyncio.sleep(0.05)
+    assert not waiting.done()
+    go.set()
+    with pytest.raises(asyncio.CancelledError):
+        await waiting
+    assert over.is_set()
+    threads.close()
+
+
+async def test_work_that_no_thread_began_in_time_is_never_done() -> None:
+    """What was begun is waited for however long it takes, and its answer comes."""
+    threads, go = Threads(1), threading.Event()
+    busy = asyncio.create_task(threads.run_within(0.05, go.wait, 5))
+    await asyncio.sleep(0.1)
+    done = threading.Event()
+    with pytest.raises(Overloaded):
+        await threads.run_within(0.05, done.set)
+    go.set()
+    assert await busy is True
+    assert await threads.run_within(5, divide, 8, by=2) == 4
+    assert not done.is_set()
+    threads.close()
