@@ -94,7 +94,7 @@ async def test_a_refund_of_debt_lowers_no_spend(migrated_url: str) -> None:
         bids = await worker.bids(4)
         await worker.upkeep.give_back()
         worker.pass_service_ms(GRACE_MS + 60_000)
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         changed = {"budget": PRICE, "bid_cap": PRICE}
         await worker.operator.patch(NAME, changed, 1, None, "a try", "tester")
         for bid in bids:
@@ -166,7 +166,7 @@ async def test_a_closed_line_item_settles_and_leases_no_more(migrated_url: str) 
         assert [receipt.status for receipt in receipts] == ["recorded", "recorded"]
         await worker.upkeep.give_back()
         worker.pass_service_ms(GRACE_MS + 60_000)
-        await worker.upkeep.keep_time()
+        await worker.keep_time()
         assert (worker.balance()["held"], worker.balance()["spent"]) == (0, PRICE)
         again = await worker.operator.correcting.close(NAME, "again", "tester")
         assert again["before"] == again["after"]
@@ -184,7 +184,7 @@ async def test_a_worker_that_has_not_heard_leases_nothing_of_a_closed_one(
         worker.database.write(
             lambda c: freezes.put(c, NAME, "closed", wall_ms=1, actor="a", reason="r")
         )
-        assert (await worker.bid()).reason == "budget_held"
+        assert (await worker.bid()).reason == "frozen"
         assert worker.one("SELECT count(*) FROM slice") == 0
 
 

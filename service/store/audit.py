@@ -182,6 +182,11 @@ def compared(connection: Reading, balance: Balance, books: Replayed) -> list[Fin
     return [finding for finding in found if finding.off]
 
 
+def unreplayable(line_item: str) -> Finding:
+    """What is found of a stream with a row that cannot be read."""
+    return Finding("V7 the stream can be replayed", line_item, 1)
+
+
 def _replayed(connection: Reading, line_item: str) -> list[Finding]:
     balance = Balance.read(connection, line_item)
     entries = connection.execute(
@@ -193,7 +198,7 @@ def _replayed(connection: Reading, line_item: str) -> list[Finding]:
         books = replay(balance.spend_on, told)
     except (ValueError, LookupError, TypeError, AttributeError):
         # A damaged row must not keep the other line items from being audited.
-        return [Finding("V7 the stream can be replayed", line_item, 1)]
+        return [unreplayable(line_item)]
     return compared(connection, balance, books)
 
 

@@ -14,7 +14,7 @@ from sqlalchemy import LargeBinary, text
 
 from service.ledger.replay import Told, replay
 from service.ledger.resuming import packed, recall, unpacked
-from service.store.audit import Balance, Finding, compared, freeze_found
+from service.store.audit import Balance, Finding, compared, freeze_found, unreplayable
 from service.store.clock import now_ms
 from service.store.database import Database, Reading, Writing, among
 
@@ -100,8 +100,12 @@ def _piece(connection: Reading, line_item: str, entries_max: int) -> _Piece:
     if found := _gaps(line_item, balance.seq, was, rows) + _doubles(line_item, [*before, *rows]):
         return _Piece(line_item, found, True, {})
     books = unpacked(json.loads(kept.books) if kept else {})
-    recall(books, _told(before))
-    books = replay(balance.spend_on, _told(rows), books)
+    try:
+        recall(books, _told(before))
+        books = replay(balance.spend_on, _told(rows), books)
+    except (ValueError, LookupError, TypeError, AttributeError):
+        # A damaged row must not keep the other line items from being audited.
+        return _Piece(line_item, [unreplayable(line_item)], True, {})
     cost += sum(row.cost for row in rows)
     seq = was + len(rows)
     if whole := seq == balance.seq:

@@ -3,156 +3,17 @@
 from __future__ import annotations
 
 from collections.abc import AsyncIterator
-from contextlib import AbstractContextManager, nullcontext
-from dataclasses import dataclass, field
-from typing import Any
 
 import httpx
 import pytest
 from fastapi import FastAPI
 
 from service.api.edge import Edge
-from service.api.forms.configs import read_new
 from service.api.routes import install
-from service.bidding import Answer
 from service.decision.opportunity import Opportunity
-from service.errors import Refusal, Stale, StoreAway, no_such_line_item
-from service.feedback import Receipt, Report
-from service.operating import Key, View
+from tests.api.routed import FORM, ORDER, Stories
 
 pytestmark = pytest.mark.anyio
-
-FORM = {
-    "id": "a",
-    "name": "A",
-    "currency": "EUR",
-    "budget": "5.00",
-    "bid_cap_cpm": 8,
-    "value": {"ceiling": "1.00"},
-}
-ORDER = {"reason": "A test."}
-
-
-@dataclass
-class Bids:
-    """A bidder that knows the line item `a` and bids one CPM."""
-
-    asked: list[Opportunity] = field(default_factory=list)
-
-    async def bid(self, opportunity: Opportunity, arrived: float) -> Answer:
-        """One CPM for `a`."""
-        self.asked.append(opportunity)
-        if opportunity.line_item != "a":
-            raise no_such_line_item()
-        return Answer(opportunity.request_id, "a", 1_000_000, None, "t", "r", "flat", "value", 1)
-
-    async def bid_batch(
-        self, opportunities: list[Opportunity], arrived: float
-    ) -> list[Answer | Refusal]:
-        """A refusal in the place of what is unknown."""
-        rows: list[Answer | Refusal] = []
-        for opportunity in opportunities:
-            try:
-                rows.append(await self.bid(opportunity, arrived))
-            except Refusal as refusal:
-                rows.append(refusal)
-        return rows
-
-
-@dataclass
-class Outcomes:
-    """A feedback story that records everything, unless its database is away."""
-
-    away: bool = False
-
-    def admitted(self) -> AbstractContextManager[None]:
-        """There is always room."""
-        return nullcontext()
-
-    async def report(self, reports: list[Report]) -> list[Receipt]:
-        """One receipt each."""
-        if self.away:
-            raise StoreAway("away")
-        return [Receipt(report.ticket, "recorded") for report in reports]
-
-
-@dataclass
-class Orders:
-    """An operator with one line item, at version 3, that writes down what it is told."""
-
-    calls: list[tuple[Any, ...]] = field(default_factory=list)
-    away: bool = False
-
-    async def key_for(self, bearer: str) -> Key | None:
-        """A key whose only scope is its own text; the key `nothing` is unknown."""
-        return None if bearer == "nothing" else Key("k1", "Ann Example", frozenset({bearer}))
-
-    async def create(
-        self,
-        config: dict[str, Any],
-        confirm: str | None,
-        actor: str,
-        idempotency: str | None = None,
-    ) -> View:
-        """The view of what was asked for."""
-        self.calls.append(("create", config["id"], confirm, actor, idempotency))
-        return self._view(1)
-
-    async def get(self, line_item: str) -> View:
-        """The one line item."""
-        if line_item != "a":
-            raise no_such_line_item()
-        return self._view(3)
-
-    async def list(self, after: str | None, limit: int) -> list[View]:
-        """The one line item, as often as the page is long."""
-        self.calls.append(("list", after, limit))
-        return [self._view(3)] if after is None else []
-
-    async def patch(self, *told: object) -> View:
-        """Only version 3 may be changed."""
-        self.calls.append(("patch", *told))
-        if told[2] != 3:
-            raise Stale("stale", "Somebody else changed it.")
-        return self._view(4)
-
-    async def state(self, line_item: str) -> dict[str, Any]:
-        """A little state."""
-        return {"line_item": line_item, "spent_nanos": 10**9}
-
-    async def freeze(self, *told: object, idempotency: str | None = None) -> dict[str, Any]:
-        """Frozen by a moment."""
-        self.calls.append(("freeze", *told, idempotency))
-        return {"in_force": False, "by_ms": 0}
-
-    async def thaw(self, *told: object, idempotency: str | None = None) -> dict[str, Any]:
-        """Thawed."""
-        self.calls.append(("thaw", *told, idempotency))
-        return {"in_force": True, "by": None}
-
-    async def reset(self, *told: object, idempotency: str | None = None) -> dict[str, Any]:
-        """Reset."""
-        self.calls.append(("reset", *told, idempotency))
-        return {"line_item": told[0]}
-
-    async def health(self) -> dict[str, Any]:
-        """Fine, unless the database is away."""
-        if self.away:
-            raise StoreAway("away")
-        return {"status": "ok"}
-
-    def _view(self, version: int) -> View:
-        config, _ = read_new(FORM, 0)
-        return View("a", version, config, 0, 0, [], "words", ["value.typical"])
-
-
-@dataclass
-class Stories:
-    """The three small stories."""
-
-    bidder: Bids = field(default_factory=Bids)
-    feedback: Outcomes = field(default_factory=Outcomes)
-    operator: Orders = field(default_factory=Orders)
 
 
 @pytest.fixture

@@ -47,7 +47,11 @@ def audited(scene: Scene) -> int:
     return int(scene.one("SELECT seq FROM audited"))
 
 
-@pytest.mark.parametrize(("statement", "promises"), ALTERATIONS)
+# The lease was passed by an earlier audit: its row altered is for the command that reads it all.
+LATER = [(what, codes) for what, codes in ALTERATIONS if "kind = 'lease'" not in what]
+
+
+@pytest.mark.parametrize(("statement", "promises"), LATER)
 def test_what_was_altered_after_the_last_audit_is_found(
     scene: Scene, statement: str, promises: str
 ) -> None:
