@@ -13,9 +13,7 @@ from types import ModuleType
 from service.errors import BidkeelError
 
 Load = Callable[[], ModuleType]
-EXIT_CODES = (
-    "exit codes: 0 done, 1 refused or failed, 2 wrong usage, 3 audit or rebuild found something"
-)
+EXIT_CODES = "exit codes: 0 done, 1 refused or failed, 2 wrong usage, 3 a check found something"
 
 
 def _serve() -> ModuleType:
@@ -108,6 +106,12 @@ def _bench_curve() -> ModuleType:
     return bench_curve
 
 
+def _drill_kill() -> ModuleType:
+    from service.commands import drill_kill
+
+    return drill_kill
+
+
 COMMANDS: dict[str, tuple[str, Load]] = {
     "serve": ("serve bids, outcomes and operators over HTTP", _serve),
     "demo": ("play an invented advertiser's auctions against a real server", _demo),
@@ -126,6 +130,9 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "learn": ("time the folding of each method's lessons", _bench_learn),
     "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
+}
+DRILLS: dict[str, tuple[str, Load]] = {
+    "kill": ("kill workers and database under traffic, and check every promise", _drill_kill),
 }
 
 
@@ -151,13 +158,17 @@ def _parser(words: list[str]) -> argparse.ArgumentParser:
         part = parts.add_parser(name, help=text, description=text, epilog=EXIT_CODES)
         if words[:1] == [name]:
             _fill(part, load())
-    text = "measure the service against something outside it"
-    bench = parts.add_parser("bench", help=text, description=text)
-    kinds = bench.add_subparsers(dest="kind", required=True)
-    for name, (text, load) in BENCHES.items():
-        part = kinds.add_parser(name, help=text, description=text, epilog=EXIT_CODES)
-        if words[:2] == ["bench", name]:
-            _fill(part, load())
+    for family, text, members in (
+        ("bench", "measure the service against something outside it", BENCHES),
+        ("drill", "break something on purpose and check what was promised", DRILLS),
+    ):
+        kinds = parts.add_parser(family, help=text, description=text).add_subparsers(
+            dest="kind", required=True
+        )
+        for name, (text, load) in members.items():
+            part = kinds.add_parser(name, help=text, description=text, epilog=EXIT_CODES)
+            if words[:2] == [family, name]:
+                _fill(part, load())
     return parser
 
 

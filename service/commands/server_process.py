@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
+import secrets
 import signal
 import socket
 import subprocess
@@ -20,6 +22,7 @@ from service.commands.wire import Wire
 from service.errors import BidkeelError
 
 HOST = "127.0.0.1"
+PORTS = range(20_000, 32_000)
 READY_S_MAX = 60.0
 STOP_S_MAX = 30.0
 _POLL_S = 0.05
@@ -165,10 +168,15 @@ def is_ready(port: int) -> bool:
 
 
 def free_port() -> int:
-    """A port that nobody listened on a moment ago."""
-    with socket.socket() as probe:
-        probe.bind((HOST, 0))
-        return int(probe.getsockname()[1])
+    """A port that nobody listened on a moment ago, and that no outgoing connection takes."""
+    # Were it one of those the system gives out, a killed server might not find it free again.
+    first = secrets.randbelow(len(PORTS))
+    for place in range(len(PORTS)):
+        port = PORTS[(first + place) % len(PORTS)]
+        with socket.socket() as probe, contextlib.suppress(OSError):
+            probe.bind((HOST, port))
+            return port
+    raise ServerFailed("No port is free.")
 
 
 def database(directory: Path) -> dict[str, str]:
