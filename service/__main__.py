@@ -112,6 +112,12 @@ def _drill_kill() -> ModuleType:
     return drill_kill
 
 
+def _drill_catalogue() -> ModuleType:
+    from service.commands import drill_catalogue
+
+    return drill_catalogue
+
+
 COMMANDS: dict[str, tuple[str, Load]] = {
     "serve": ("serve bids, outcomes and operators over HTTP", _serve),
     "demo": ("play an invented advertiser's auctions against a real server", _demo),
@@ -132,6 +138,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
 }
 DRILLS: dict[str, tuple[str, Load]] = {
+    "catalogue": ("run the test of every known fault and print the table", _drill_catalogue),
     "kill": ("kill workers and database under traffic, and check every promise", _drill_kill),
 }
 
