@@ -118,6 +118,18 @@ def _drill_catalogue() -> ModuleType:
     return drill_catalogue
 
 
+def _drill_outage() -> ModuleType:
+    from service.commands import drill_outage
+
+    return drill_outage
+
+
+def _drill_soak() -> ModuleType:
+    from service.commands import drill_soak
+
+    return drill_soak
+
+
 COMMANDS: dict[str, tuple[str, Load]] = {
     "serve": ("serve bids, outcomes and operators over HTTP", _serve),
     "demo": ("play an invented advertiser's auctions against a real server", _demo),
@@ -140,6 +152,8 @@ BENCHES: dict[str, tuple[str, Load]] = {
 DRILLS: dict[str, tuple[str, Load]] = {
     "catalogue": ("run the test of every known fault and print the table", _drill_catalogue),
     "kill": ("kill workers and database under traffic, and check every promise", _drill_kill),
+    "outage": ("stop the database under load and time the bids", _drill_outage),
+    "soak": ("run even traffic for minutes; nothing may grow", _drill_soak),
 }
 
 
