@@ -15,6 +15,7 @@ from typing import Any
 import numpy as np
 
 from service import money
+from service.commands.caller import Service
 from service.commands.drill_record import (
     FAIL,
     OK,
@@ -26,7 +27,7 @@ from service.commands.drill_record import (
     of_state,
 )
 from service.commands.exchange import Auction
-from service.commands.wire import Reply, Wire
+from service.commands.wire import Reply
 
 ANSWER_S_MAX = 2.0
 AGAIN_S = 0.1
@@ -37,7 +38,7 @@ SHARE_CUT = 0.03  # Calls that the exchange hangs up on before their answer.
 SHARE_FORGOTTEN = 0.3  # Losses that it tells once and never again.
 SHARE_REPEATED = 0.05
 
-Ask = Callable[[Wire], Awaitable[Reply]]
+Ask = Callable[[Service], Awaitable[Reply]]
 
 
 class Traffic:
@@ -52,7 +53,7 @@ class Traffic:
 
     def __init__(
         self,
-        wires: Sequence[Wire],
+        wires: Sequence[Service],
         auctions: Callable[[], Auction],
         generator: np.random.Generator,
         rate: float,

@@ -111,3 +111,6 @@ def test_no_drawn_call_is_an_error_of_ours(server: ServerProcess) -> None:
     assert len(seen) > 10
     met = {label for label, counts in seen.items() if any(s < 300 for s in counts)}
     assert met >= HONEST.keys() | {"POST /v1/outcomes", "POST /v1/bids/batch"}, seen
+    log = server.log_path.read_text()
+    assert "an error nobody expected" not in log
+    assert server.key not in log

@@ -11,6 +11,7 @@ from typing import Any
 import pytest
 from sqlalchemy import event, text
 
+from service.commands.postgresql_process import PostgreSQLProcess
 from service.errors import StoreAway, Unsafe
 from service.feedback import Report
 from service.store import outcomes
@@ -178,3 +179,16 @@ def test_a_migration_that_fails_half_way_leaves_nothing(database_url: str) -> No
     migrate(database_url)
     with closing(Database(database_url)) as database:
         require_current(database)
+
+
+def test_a_postgresql_that_may_forget_is_refused() -> None:
+    """With fsync off a commit is no promise, so nothing starts on it."""
+    with PostgreSQLProcess() as server, closing(Database(server.url)) as database:
+        database.check_safe()
+        with database.engine.connect() as connection:
+            own = connection.execution_options(isolation_level="AUTOCOMMIT")
+            own.execute(text("ALTER SYSTEM SET fsync = off"))
+        server.stop()
+        server.start()
+        with closing(Database(server.url)) as again, pytest.raises(Unsafe):
+            again.check_safe()

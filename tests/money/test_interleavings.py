@@ -8,7 +8,9 @@ from concurrent.futures import ThreadPoolExecutor
 from contextlib import closing
 
 import pytest
+from sqlalchemy import text
 
+from service.errors import BrokenPromise
 from service.store import changes, clock, line_items, outcomes
 from service.store.database import Database, Writing
 from service.store.outcomes import Booking
@@ -173,4 +175,52 @@ def test_a_budget_edit_that_commits_late_holds_back_the_lease(database: Database
         assert leases.result() == 5
     scene.config = lowered
     assert scene.one("SELECT budget FROM balance WHERE line_item = :id", id=NAME) == 5
+    assert scene.faults() == []
+
+
+@pytest.mark.parametrize("spend_on", ["won", "billed"])
+def test_a_bill_before_its_win_pays_once(database: Database, spend_on: str) -> None:
+    """The bill books the cost; the win that follows moves nothing, whatever counts as spend."""
+    scene = Scene(database, spend_on)
+    scene.lease()
+    bid = scene.placed(8)
+    assert scene.tell(bid, "billed", 6) == "recorded"
+    before = scene.balance()
+    assert before["spent"] == 6
+    assert scene.tell(bid, "won", 6) == "recorded"
+    after = scene.balance()
+    assert {**after, "seq": 0, "at_ms": 0} == {**before, "seq": 0, "at_ms": 0}
+    assert scene.faults() == []
+
+
+def test_a_win_after_a_loss_is_booked_late_and_once(database: Database) -> None:
+    """The loss freed the hold; the win is a conflict that takes free money, however often told."""
+    scene = Scene(database)
+    amount = scene.lease()
+    bid = scene.placed(8)
+    assert scene.tell(bid, "lost", 9) == "recorded"
+    assert scene.balance()["held"] == amount - 8
+    assert scene.tell(bid, "won", 6) == "conflict"
+    assert scene.tell(bid, "won", 6) in ("conflict", "duplicate")
+    assert (scene.balance()["spent"], scene.balance()["held"]) == (6, amount - 8)
+    assert scene.faults() == []
+
+
+def test_one_row_that_cannot_be_booked_spoils_no_other(database: Database) -> None:
+    """Its group is undone as a whole and told again without it; the others are there once."""
+    scene = Scene(database)
+    scene.lease()
+    good, bad = scene.placed(8), scene.placed(8)
+    group = [scene.told(good, "won", 7), scene.told(bad, "won", 7)]
+    raise_it = text("UPDATE slice SET remaining = 8, amount = 8")
+    before = scene.one("SELECT remaining FROM slice")
+    database.write(lambda c: c.execute(raise_it))
+    with pytest.raises(BrokenPromise):
+        outcomes.book(database, group)
+    assert scene.balance()["spent"] == 0
+    restore = text("UPDATE slice SET remaining = :was, amount = :was")
+    database.write(lambda c: c.execute(restore, {"was": before}))
+    assert scene.book(group[0]) == ["recorded"]
+    assert scene.book(*group) == ["duplicate", "recorded"]
+    assert scene.balance()["spent"] == 14
     assert scene.faults() == []
