@@ -104,8 +104,11 @@ class Database:
                     connection = connection.execution_options(isolation_level="REPEATABLE READ")
                 with connection.begin():
                     return work(Reading(connection))
-        except (OperationalError, PoolTimeout) as error:
-            raise StoreAway("the database did not answer") from error
+        except (DBAPIError, PoolTimeout) as error:
+            # A reader that idles too long is cut off under a class of error of its own.
+            if isinstance(error, OperationalError | PoolTimeout) or error.connection_invalidated:
+                raise StoreAway("the database did not answer") from error
+            raise
 
     def check_safe(self) -> None:
         """

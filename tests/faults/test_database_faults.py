@@ -15,6 +15,7 @@ from service.commands.postgresql_process import PostgreSQLProcess
 from service.errors import StoreAway, Unsafe
 from service.feedback import Report
 from service.store import outcomes
+from service.store.audit import audit
 from service.store.database import Database
 from service.store.migrate import is_empty, migrate, require_current, upgrade
 from tests.builders import PRICE, working
@@ -192,3 +193,32 @@ def test_a_postgresql_that_may_forget_is_refused() -> None:
         server.start()
         with closing(Database(server.url)) as again, pytest.raises(Unsafe):
             again.check_safe()
+
+
+@only_postgresql
+def test_an_audit_may_take_its_time(migrated_url: str) -> None:
+    """No limit cuts a long replay off; the transactions after it have theirs again."""
+    limits = text(
+        "SELECT name, setting FROM pg_settings WHERE name IN"
+        " ('statement_timeout', 'idle_in_transaction_session_timeout') ORDER BY name"
+    )
+    with closing(Database(migrated_url, pool_size=1)) as database:
+        found, during = database.read(lambda c: (audit(c), c.execute(limits).all()))
+        after = database.read(lambda c: c.execute(limits).all())
+    assert found == []
+    assert [row.setting for row in during] == ["0", "0"]
+    assert [row.setting for row in after] == ["10000", "5000"]
+
+
+@only_postgresql
+def test_a_reader_that_is_cut_off_is_told_that_the_database_is_away(migrated_url: str) -> None:
+    """Whatever class of error the driver has for it."""
+
+    def idle(connection: Any) -> None:
+        connection.execute(text("SET LOCAL idle_in_transaction_session_timeout = 50"))
+        time.sleep(0.5)
+        connection.execute(text("SELECT 1"))
+
+    with closing(Database(migrated_url)) as database:
+        with pytest.raises(StoreAway):
+            database.read(idle)
