@@ -26,10 +26,11 @@ from service.commands.drill_traffic import Traffic
 from service.commands.drill_verdict import held, judge, recovery_s
 from service.commands.exchange import Auction
 from service.commands.postgresql_process import PostgreSQLProcess
+from service.store.audit import unfunded
 from service.store.database import Database
 
 LEASE_S = 2
-GRACE_S = 12
+GRACE_S = 15
 AFTER_S_MAX = 90.0
 PRICE_CPM = 4
 RIVAL_MEDIAN_CPM = 3.0
@@ -52,6 +53,7 @@ class Figures:
     acknowledged: int
     unknown: int
     charged: str
+    unfunded: str
     reads: int
     delay_s_max: float
     recovery_s_max: float
@@ -163,7 +165,7 @@ class _Drill:
         database = Database(self._url)
         violations = judge(history, database, GRACE_S)
         violations += [f"a worker ended by itself: {tail[-500:]}" for tail in nemesis.fallen]
-        left = held(database)
+        left, loose = held(database), database.read(unfunded)
         database.close()
         known = sum(row.acknowledged_s is not None for row in history.sent)
         return Figures(
@@ -177,6 +179,7 @@ class _Drill:
             known,
             len(history.sent) - known,
             money.nanos_text(sum(history.charged.values())),
+            money.nanos_text(loose),
             history.reads,
             round(history.delay_s_max, 2),
             round(max(recovery_s(nemesis.back_s, history.answers_s), default=0.0), 2),
