@@ -52,7 +52,7 @@ def described(server: ServerProcess) -> BaseSchema:
 def nearly_honest(case: Drawn, turn: int) -> None:
     """Aim at the line item that is there, with an honest body but for one drawn field."""
     if case.path_parameters:
-        case.path_parameters = {"line_item_id": LINE_ITEM["id"]}
+        case.path_parameters = {**case.path_parameters, "line_item_id": LINE_ITEM["id"]}
     if case.method == "PATCH":
         case.headers["If-Match"] = '"1"'
     honest = HONEST.get(case.operation.label)
