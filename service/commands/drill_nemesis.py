@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import asyncio
 import signal
+import socket
 import time
 from collections import Counter
 from collections.abc import Callable, Sequence
@@ -13,7 +14,7 @@ from pathlib import Path
 import numpy as np
 
 from service.commands.postgresql_process import NoPostgreSQL, PostgreSQLProcess
-from service.commands.server_process import ServerFailed, ServerProcess
+from service.commands.server_process import HOST, ServerFailed, ServerProcess
 
 KILL_GAP_S = (1.0, 3.0)
 PAUSE_S = (0.5, 5.0)
@@ -21,6 +22,7 @@ DOWN_S = (0.3, 2.0)
 SHARE_PAUSE = 0.25
 SHARE_CUT = 0.25
 START_AGAIN_S = 0.5
+ORPHANS_S_MAX = 10.0
 KILLS_PER_RESTART = 7  # One restart of the database among so many kills.
 
 
@@ -58,9 +60,12 @@ class Fleet:
         self.serving.add(server.port)
 
     def kill_one(self, server: ServerProcess) -> None:
-        """kill -9."""
+        """kill -9, and wait until nobody that it had started answers in its name."""
         self.serving.discard(server.port)
         server.stop(signal.SIGKILL)
+        end = time.monotonic() + ORPHANS_S_MAX
+        while listens(server.port) and time.monotonic() < end:
+            time.sleep(0.02)
 
     def stop(self) -> None:
         """End all that run."""
@@ -74,6 +79,12 @@ class Fleet:
     def fallen(self) -> list[ServerProcess]:
         """Workers that ended although nobody ended them."""
         return [s for s in self.up() if s.child is not None and s.child.poll() is not None]
+
+
+def listens(port: int) -> bool:
+    """Whether somebody takes connections there."""
+    with socket.socket() as probe:
+        return probe.connect_ex((HOST, port)) == 0
 
 
 @dataclass
