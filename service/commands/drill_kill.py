@@ -8,6 +8,7 @@ from __future__ import annotations
 import argparse
 import asyncio
 import json
+import signal
 import sys
 import tempfile
 import time
@@ -80,6 +81,8 @@ def run(arguments: argparse.Namespace) -> int:
     Returns:
         0 when every promise was kept, 3 when one was broken.
     """
+    # Told to end, end like on Ctrl-C, so that no server outlives the drill.
+    signal.signal(signal.SIGTERM, signal.default_int_handler)
     with tempfile.TemporaryDirectory(prefix="bidkeel-drill-") as folder:
         figures = drill(arguments, Path(folder))
     if arguments.json:

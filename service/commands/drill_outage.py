@@ -9,6 +9,7 @@ from __future__ import annotations
 import argparse
 import asyncio
 import json
+import signal
 import sys
 import tempfile
 import time
@@ -69,6 +70,8 @@ def run(arguments: argparse.Namespace) -> int:
     Returns:
         0 when every bid was answered and prices left throughout, else 3.
     """
+    # Told to end, end like on Ctrl-C, so that no server outlives the drill.
+    signal.signal(signal.SIGTERM, signal.default_int_handler)
     with tempfile.TemporaryDirectory(prefix="bidkeel-drill-") as folder:
         with PostgreSQLProcess() as postgresql:
             settings = {

@@ -10,9 +10,10 @@ from alembic.config import Config
 from alembic.runtime.migration import MigrationContext
 from alembic.script import ScriptDirectory
 from sqlalchemy import Connection, text
+from sqlalchemy.exc import OperationalError
 
 import service
-from service.errors import Unsafe
+from service.errors import StoreAway, Unsafe
 from service.store.database import Database
 
 ADVISORY_LOCK = 0x6B65656C  # So that two deployments cannot migrate at once.
@@ -52,9 +53,9 @@ def require_current(database: Database) -> None:
 
     Raises:
         Unsafe: Older or newer.
+        StoreAway: It did not answer.
     """
-    with database.engine.connect() as connection:
-        found = MigrationContext.configure(connection).get_current_revision()
+    found = _revision(database)
     head = ScriptDirectory.from_config(_config()).get_current_head()
     # Newer is refused as well: old code would misread what new code has written.
     if found != head:
@@ -65,8 +66,16 @@ def require_current(database: Database) -> None:
 
 def is_empty(database: Database) -> bool:
     """Whether nothing was ever migrated here."""
-    with database.engine.connect() as connection:
-        return MigrationContext.configure(connection).get_current_revision() is None
+    return _revision(database) is None
+
+
+def _revision(database: Database) -> str | None:
+    # Asked at every start, perhaps of a server that is itself still starting.
+    try:
+        with database.engine.connect() as connection:
+            return MigrationContext.configure(connection).get_current_revision()
+    except OperationalError as error:
+        raise StoreAway("the database did not answer") from error
 
 
 def _config() -> Config:

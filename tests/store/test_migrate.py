@@ -7,10 +7,11 @@ from collections.abc import Iterator
 import pytest
 from sqlalchemy import text
 
-from service.errors import BrokenPromise, Unsafe
+from service.errors import BrokenPromise, StoreAway, Unsafe
 from service.store.database import Database
 from service.store.facts import fact
 from service.store.migrate import is_empty, migrate, require_current
+from tests.builders import outage
 
 ITEM = "INSERT INTO line_item VALUES ('a', '{}', 1, 1, 1)"
 BALANCE = "INSERT INTO balance VALUES ('a', {}, {}, {}, {}, {}, {}, {}, 1)"
@@ -140,3 +141,14 @@ def nullable(database: Database, table: str) -> list[str]:
     )
     rows = database.read(lambda c: c.execute(found, {"table": table}).all())
     return sorted(row.column_name for row in rows)
+
+
+@pytest.mark.parametrize("backend", ["postgresql"], indirect=True)
+def test_a_database_that_does_not_answer_is_away(migrated_url: str) -> None:
+    """A start beside a database that is starting itself gets a sentence, not a trace."""
+    database = Database(migrated_url)
+    with outage(migrated_url), pytest.raises(StoreAway):
+        is_empty(database)
+    with outage(migrated_url), pytest.raises(StoreAway):
+        require_current(database)
+    database.close()
