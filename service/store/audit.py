@@ -108,6 +108,7 @@ def freeze_broken(database: Database) -> list[str]:
 
 def freeze_found(connection: Writing, found: list[Finding], wall_ms: int) -> list[str]:
     """Freeze what the findings are about, each with its difference in the journal."""
+    # Reversed, so that the first finding of a line item is the reason that stays.
     reasons = {f.line_item: f"{f.check}: off by {f.off}" for f in reversed(found)}
     frozen = [
         name
@@ -127,6 +128,7 @@ def freeze_found(connection: Writing, found: list[Finding], wall_ms: int) -> lis
 
 def _checked(connection: Reading, checks: dict[str, str]) -> list[Finding]:
     return [
+        # PostgreSQL gives sums of integers as decimals.
         Finding(name, row.line_item, int(row.off))
         for name, statement in checks.items()
         for row in connection.execute(text(HOLDING + statement))

@@ -57,6 +57,7 @@ def audit_on(
         Whether this was the last piece, what disagrees, and what is newly frozen for it.
     """
     piece = database.read(lambda connection: _piece(connection, line_item, entries_max))
+    # What disagrees is not kept, so every turn finds it again until somebody has mended it.
     if piece.found:
         wall_ms = database.wall_ms()
         frozen = database.write(lambda connection: freeze_found(connection, piece.found, wall_ms))
@@ -108,6 +109,7 @@ def _piece(connection: Reading, line_item: str, entries_max: int) -> _Piece:
         return _Piece(line_item, [unreplayable(line_item)], True, {})
     cost += sum(row.cost for row in rows)
     seq = was + len(rows)
+    # Only where the stream ends must the books be those of the balances.
     if whole := seq == balance.seq:
         found = _costs(balance, cost) + compared(connection, balance, books)
     service_ms = rows[-1].service_ms if rows else 0

@@ -48,6 +48,7 @@ def back_up(url: str, path: Path) -> None:
         raise Unsafe(f"There is a file {path} already; a backup overwrites nothing.") from error
     finally:
         partly.unlink(missing_ok=True)
+    # A new name survives a power cut only once its directory is on the disk too.
     _make_durable(path.parent)
 
 
@@ -78,9 +79,11 @@ def new_life(now_ms: int) -> list[str]:
     detail = f'{{"incarnation": "{fresh}"}}'
     # Built of our own words, hex and integers only.
     said = f"SELECT {now}, 'bidkeel', 'restore', id, '{REASON}', '{detail}' FROM line_item"  # noqa: S608
+    # Without `WHERE true` SQLite would read ON as the condition of a join.
     who = f"SELECT id, 'restore', {now}, 'bidkeel', '{REASON}' FROM line_item WHERE true"  # noqa: S608
     return [
         f"UPDATE fact SET value = '{fresh}' WHERE name = 'incarnation'",  # noqa: S608
+        # By service time, which stood still, the workers of the copy would still seem to live.
         "DELETE FROM worker",
         "INSERT INTO freezing (line_item, source, at_ms, actor, reason)"
         f" {who} ON CONFLICT DO NOTHING",
@@ -98,12 +101,14 @@ def _copy_sqlite(database: Path, path: Path) -> None:
 
 def _replace_sqlite(database: Path, path: Path, now_ms: int) -> Path | None:
     coming = database.with_name(f"{database.name}.restoring")
+    # Beside the database, so that the last step is a rename within one file system.
     shutil.copyfile(path, coming)
     try:
         _begin_life(coming, now_ms)
     except sqlite3.Error as error:
         coming.unlink()
         raise Unsafe(f"This backup is damaged or of another release: {error}.") from error
+    # Whole on the disk before it gets the name, for a power cut may come in between.
     _make_durable(coming)
     kept = _keep_old(database)
     os.replace(coming, database)
@@ -128,6 +133,7 @@ def _keep_old(database: Path) -> Path | None:
     kept = database.with_name(f"{database.name}.before-{secrets.token_hex(4)}")
     try:
         with closing(sqlite3.connect(database)) as connection:
+            # What only its log holds is brought into the file, which is then whole by itself.
             connection.execute("PRAGMA wal_checkpoint(TRUNCATE)").fetchall()
     except sqlite3.Error:
         # Too damaged to be opened: its log goes along, for whoever wants to look.
@@ -136,6 +142,7 @@ def _keep_old(database: Path) -> Path | None:
         beside = database.with_name(database.name + ending)
         if beside.exists():
             beside.rename(kept.with_name(kept.name + ending))
+    # A link, so that the name is never without a file until the new one takes it over.
     os.link(database, kept)
     return kept
 

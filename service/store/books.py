@@ -68,6 +68,7 @@ class Books:
         self.load_days([(line_item, day)])
         if (line_item, day) not in self.days:
             fresh = Day(line_item, day, budget, budget, 0, 0, 0)
+            # The balance is locked, so nobody else can make the same day at this moment.
             self._connection.execute(
                 _INSERT_DAY,
                 {"line_item": line_item, "day": day, "budget": budget},
@@ -146,6 +147,7 @@ class Books:
 
     def _append(self, line_item: str, entry: Entry) -> None:
         account = self.accounts[line_item]
+        # The wall clock may step back, but the stamps of a stream never do.
         at_ms = max(account.at_ms, self._wall_ms)
         self.accounts[line_item] = replace(account, seq=account.seq + 1, at_ms=at_ms)
         self._rows.append(

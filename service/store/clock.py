@@ -9,6 +9,7 @@ from sqlalchemy import text
 
 from service.store.database import Database, Reading, Writing
 
+# Workers tick once a second; what is much longer was an outage, in which nothing ages.
 STEP_MS_MAX = 2000
 
 

@@ -30,6 +30,7 @@ Writing = NewType("Writing", Connection)
 
 T = TypeVar("T")
 TRIES_MAX = 5
+# Serialization failure and deadlock: nothing happened, and the same work may simply run again.
 RETRY_STATES = {"40001", "40P01"}
 
 
@@ -164,6 +165,7 @@ def _prepare_sqlite(connection: object, _record: object) -> None:
     # The driver would begin transactions by itself, deferred, and they then fail at once when
     # somebody else writes; we begin them ourselves.
     connection.isolation_level = None  # type: ignore[attr-defined]
+    # All but the journal mode belong to a connection, so each one must be told anew.
     for pragma in ("journal_mode=WAL", "synchronous=FULL", "foreign_keys=ON", "busy_timeout=5000"):
         cursor.execute(f"PRAGMA {pragma}")
     cursor.close()

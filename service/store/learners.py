@@ -132,8 +132,10 @@ def _teach(
     try:
         state = fold(bytes(row.working), page.lessons, config)
     except PoisonLesson as poison:
+        # The fold is pure, so the part before the bad entry is simply folded again.
         state = fold(bytes(row.working), page.lessons[: poison.place], config)
         seq = page.seqs[poison.place] - 1
+        # Counted for this one entry: the next bad one gets turns of its own.
         tries = row.tries + 1 if row.stuck_seq == seq + 1 else 1
         taught = _Taught(seq - row.seq, seq + 1, tries, str(poison))
     stuck = {"stuck": taught.poison, "tries": taught.tries}
@@ -142,6 +144,7 @@ def _teach(
         _checkpoint(connection, line_item, seq, state, now)
     # A state that has not caught up is not published, or a refold would forget in public.
     caught_up = taught.read < ENTRIES_MAX and not (taught.poison and row.halted)
+    # What has not changed is not published, since every worker would load it for nothing.
     if caught_up and (row.halted or digest_of(state) != row.digest):
         _publish(connection, line_item, seq, state, now)
         if (law := lawful(state, config)) is not None:
@@ -153,6 +156,7 @@ def _set_aside(connection: Writing, line_item: str, taught: _Taught, now: int) -
     """Let an entry teach nothing that the fold cannot take; people may try it again."""
     books = Books(connection, [line_item], now)
     row = connection.execute(locking(connection, _MINE), {"id": line_item}).one()
+    # Another teacher may have got past it since, or set it aside already.
     if (row.stuck_seq, row.tries >= TRIES_MAX) != (taught.poison, True):
         return
     body = {"entry": taught.poison, "error": taught.error}

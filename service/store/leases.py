@@ -18,6 +18,7 @@ from service.store.database import Database, Reading, Writing, among
 from service.store.freezes import frozen
 from service.store.workers import live
 
+# Beyond every clock, and a billing grace on top of it still fits 64 bits.
 NEVER_MS = 2**60
 
 
@@ -75,6 +76,7 @@ def lease(
     def work(connection: Writing) -> list[Leased | Denied]:
         wall_ms = database.wall_ms()
         books = Books(connection, [r.line_item for r in requests], wall_ms)
+        # Read under the lock, so that an edit either is seen here or waits for us.
         configs = read_configs(connection, list(books.accounts))
         lenders = _Lenders(connection, worker, lease_s * 1000)
         answers = lenders.frozen(list(books.accounts))
@@ -97,6 +99,7 @@ class _Lenders:
         self._connection = connection
         self._worker = worker
         self._lease_ms = lease_ms
+        # Whoever asks lives, even if its beat is overdue.
         self._live = set(live(connection)) | {worker}
 
     def frozen(self, line_items: list[str]) -> list[Leased | Denied]:
@@ -199,11 +202,13 @@ def close_due(database: Database) -> int:
         rows = {bytes(row.id): row for row in connection.execute(_DUE)}
         books.load_slices(rows)
         for slice_id, row in rows.items():
+            # One that became due only now is not locked; the next turn closes it.
             if row.line_item in books.accounts:
                 _close(books, books.slices[slice_id], bool(row.bids), bool(row.bills))
         books.save()
         return len(rows)
 
+    # Most often nothing is due, and on SQLite a write would keep every other writer out.
     if not database.read(lambda connection: connection.execute(_DUE).first()):
         return 0
     return database.write(work)
@@ -238,6 +243,7 @@ def _retire(books: Books, report: Report) -> None:
         return
     rounds = _count(books, found, report.bids)
     books.replace_slice(replace(books.slices[found.id], state="retired"))
+    # Not by `remaining`: outcomes that came before have taken their holds out of it.
     freed = found.amount - report.issued
     body = {
         "slice": found.id.hex(),

@@ -41,6 +41,7 @@ def read(
     """The entries after `seq`, at most so many."""
     rows = connection.execute(_AFTER, {"id": line_item, "seq": seq, "limit": limit}).all()
     again = dict[int, Body | None]()
+    # What a value adds depends on what came before it, some of which may be cancelled now.
     if cancelled:
         values = [bytes(row.bid) for row in rows if row.kind == "value" and row.bid is not None]
         again = _values_again(connection, line_item, values, cancelled)
@@ -75,6 +76,7 @@ def cancel(
 def uncancel(connection: Writing, line_item: str, seq: int) -> None:
     """Let one entry that was set aside alone teach again."""
     connection.execute(
+        # Found by its text, which `cancel` writes the same way for an entry set aside alone.
         text("DELETE FROM cancelled WHERE line_item = :id AND part = 'all' AND spans = :spans"),
         {"id": line_item, "spans": json.dumps([[seq, seq]])},
     )

@@ -68,6 +68,7 @@ def last_expiry_ms(connection: Writing, line_item: str | None) -> int:
         ),
         {"id": line_item or ""},
     ).scalar_one()
+    # Leases end by service time, people read the wall clock: what is left is added to it.
     return _wall_ms(connection) + max(0, int(row) - now_ms(connection))
 
 

@@ -126,6 +126,7 @@ def rebuild(
     now = standing(connection, line_item)
     end = now.seq if to is None else min(to, now.head)
     cancelled = lessons.cancellations(connection, line_item)
+    # Halted where the snapshot was made, so that one pass yields both states to compare.
     first = min(now.snapshot.seq, end) if to is None else 0
 
     def on(start: Start, until: int) -> bytes:
@@ -166,8 +167,10 @@ def put_back(connection: Writing, line_item: str, spans: Iterable[Span], fresh: 
     # The teacher may be at work: it is waited for, so that it cannot publish behind us.
     row = connection.execute(locking(connection, _WORKING), {"id": line_item}).one()
     start = Start(row.seq, bytes(row.working))
+    # A learner that has not come so far has learnt none of it, and just reads on.
     if row.seq >= first:
         start = nearest(connection, line_item, first - 1, fresh)
+    # Those behind hold what was cancelled.
     connection.execute(
         text("DELETE FROM checkpoint WHERE line_item = :id AND seq >= :first"),
         {"id": line_item, "first": first},
@@ -182,6 +185,7 @@ def put_back(connection: Writing, line_item: str, spans: Iterable[Span], fresh: 
             "id": line_item,
             "seq": start.seq,
             "state": start.state,
+            # A reset may itself be among what is cancelled.
             "reset": lessons.last_reset(connection, line_item, cancelled),
         },
     )
