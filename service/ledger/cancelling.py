@@ -94,10 +94,12 @@ class Finder:
     def take(self, seq: int, kind: str, bid: bytes | None, at_ms: int, body: Body) -> None:
         """Look at the next entry."""
         self.read_until = seq
+        # Outcomes name their source and values do not, so values are known by their bid.
         if bid is not None and body.get("source") == self._named.source is not None:
             self._of_source.add(bid)
         if not self._means(kind, bid, at_ms, body):
             return
+        # Noted even if it is cancelled already, for its corrections must go with it.
         if kind == "value" and bid is not None:
             self._events.add((bid, str(body.get("event_id"))))
         # What teaches nothing any more is not cancelled twice: so a repeat finds nothing.
@@ -139,6 +141,7 @@ def left(seq: int, kind: str, body: Body, cancelled: Cancelled) -> Body | None:
     rest = cancelled.leaves(seq, kind)
     if not rest:
         return None
+    # There are two parts besides the whole, so what is left is one.
     return body if rest == parts else {**body, "only": min(rest)}
 
 
@@ -160,6 +163,7 @@ def retold(rows: Sequence[Told], cancelled: Cancelled) -> dict[int, Body | None]
             # An impression that counts no more can bring nothing either.
             told[seq] = None
         elif isinstance(body.get("amount"), int):
+            # What a cancelled event said was never said, so its correction stands as a first word.
             was, amount = taught.get(body["corrects"]), body["amount"]
             said = body if whole else {k: v for k, v in body.items() if k != "win"}
             told[seq] = {**said, "was": was, "total_was": total}

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+# A worker that keeps crashing strands its first slice each time, so that one stays small.
 FIRST_BIDS_MAX = 16
 GROWTH_MAX = 2
+# A share, so that slices shrink as the budget ends and no worker holds its tail alone.
 SHARE_OF_FREE = 4
 ORPHANED_SHARE_MAX = 20  # One twentieth of the budget in slices of dead workers trips the breaker.
 

@@ -131,6 +131,7 @@ def _outcome(books: Replayed, spend_on: str, kind: str, bid: str, body: Mapping[
         _drop_owed(books, bid, row)
         return
     books.results[bid] = kind
+    # The bill has paid and taken the hold already.
     if bid in books.billed:
         return
     if row is not None and not row[3]:
@@ -158,6 +159,7 @@ def _bill(
     if spend_on == "won":
         return
     _, owed = books.owed.pop(bid, ("", 0))
+    # Billing grace has dropped what it owed; the rest belongs to other bids of the slice.
     if row is None or row[2] < owed:
         owed = 0
     if row is not None:
@@ -193,6 +195,7 @@ def _drop_owed(books: Replayed, bid: str, row: list[int] | None) -> None:
 
 def _fits(books: Replayed, cost: int) -> bool:
     held = sum(left + owed for _, left, owed, _ in books.slices.values())
+    # `budget` is a target here, and the real bound is never below what is out already.
     return books.spent + held + cost <= max(books.budget, books.spent + held)
 
 

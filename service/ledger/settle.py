@@ -65,6 +65,7 @@ def settle(outcome: Outcome, place: Place) -> Verdict:
     taken = place.slots.get("result")
     if taken is None:
         return _first_result(outcome, place)
+    # A void after an unbilled win fills a slot of its own, and a repeat of either may come.
     if any(_same(place.slots[slot], outcome) for slot in ("result", "void") if slot in place.slots):
         return Verdict("duplicate")
     if outcome.kind == "void" and _unbilled_win(taken, place):
@@ -82,6 +83,7 @@ def _first_result(outcome: Outcome, place: Place) -> Verdict:
         movement = _win(outcome, place) if outcome.kind == "won" else _release(outcome, place)
     rounds = _rounds(outcome, place.slice)
     body = _said(outcome) | {"round": rounds, "late": not place.alive, "owed": movement.owed}
+    # What it owes is kept with the win, for the slice only knows the sum of all its bids.
     entry = Entry(outcome.kind, body, outcome.bid, "result", movement.cost)
     return Verdict("recorded" if place.alive else "late", movement, entry, rounds)
 
@@ -125,6 +127,7 @@ def _billed(outcome: Outcome, place: Place) -> Verdict:
             return Verdict("duplicate")
         return _contradiction(outcome, place, pays=False)
     if result is None:
+        # No win notice has come: the bill proves the win as well.
         movement = _pay(outcome, place)
     elif result[0] != "won" or "void" in place.slots:
         return _contradiction(outcome, place, pays=True)
@@ -133,6 +136,7 @@ def _billed(outcome: Outcome, place: Place) -> Verdict:
     else:
         movement = _billing(outcome, place, result[1])
     status = "recorded" if place.alive or result is not None else "late"
+    # The win or a tick counts the round, and a bill must not count it again.
     body = _said(outcome) | {"late": not place.alive, "round": 0}
     return Verdict(status, movement, Entry("billed", body, outcome.bid, "billed", movement.cost))
 
@@ -149,6 +153,7 @@ def _billing(outcome: Outcome, place: Place, win: Body) -> Movement:
     disputed = Movement(disputed=max(0, price - outcome.hold))
     if not beyond:
         return paid + disputed
+    # The late way decides on the money as it is after the part that was set aside is paid.
     account = place.account.moved(paid)
     day = place.day.moved(paid) if place.day else None
     return paid + disputed + late_cost(account, day, beyond)
@@ -190,6 +195,7 @@ def _paid_by_conflict(slots: Slots) -> bool:
 
 def _rounds(outcome: Outcome, slice_: Slice | None) -> int:
     """One round unless a tick has reported this bid already."""
+    # Bids of a slice are counted from 0, so a tick of n bids has covered those below n.
     return int(slice_ is not None and outcome.counter >= slice_.ticked)
 
 

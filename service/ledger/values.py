@@ -57,6 +57,7 @@ def unparked(slots: Slots, bid: bytes) -> list[Entry]:
     return [
         Entry("value", {**body, "was": None, "parked": True}, bid, f"value:{body['event_id']}")
         for body in parked
+        # A bill may have let them out before the win does, or the other way round.
         if f"value:{body['event_id']}" not in slots
     ]
 
@@ -95,6 +96,7 @@ def _teach(value: Value, slots: Slots, ceiling: int, arrival: str) -> ValueVerdi
         was = int(events[value.corrects]["amount"])
     elif arrival == "once" and events:
         return _beside(value, slots)
+    # In full, beyond the ceiling too: the fold cuts it, and a raised ceiling refolds.
     entry = Entry("value", _said(value) | {"was": was}, value.bid, slot)
     return ValueVerdict("recorded", entry, clipped=value.amount > ceiling)
 
