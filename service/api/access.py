@@ -11,6 +11,7 @@ from service.api.edge import edge
 from service.api.stories import Caller, stories
 from service.errors import Forbidden, Unauthenticated
 
+# Our keys have 43 characters; what is far longer is not worth hashing.
 _BEARER = re.compile(r"bearer +([!-~]{1,256})", re.IGNORECASE)
 
 

@@ -103,6 +103,7 @@ def _seconds(duration_ms: int) -> int:
 
 
 _ENDINGS: tuple[tuple[str, str, Callable[[int], object]], ...] = (
+    # The longer ending first, or the shorter one would take its names.
     ("_cpm_nanos", "_cpm", money.cpm_number),
     ("_nanos", "", money.nanos_text),
 )

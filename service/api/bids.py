@@ -24,6 +24,7 @@ router = APIRouter()
 @router.post("/v1/bids", **described("Ask for a price for one opportunity.", "bid", BidForm))
 async def post_bid(request: Request) -> Response:
     """Answer one opportunity with a bid or a pass."""
+    # Taken before the key is looked up, for the caller's deadline runs meanwhile.
     arrived = time.monotonic()
     await require(request, "bid")
     opportunity, unused = read_bid(await read_object(request, edge(request).body_bytes_max))

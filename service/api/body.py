@@ -54,6 +54,7 @@ def parse_object(body: bytes) -> dict[str, object]:
     """
     try:
         parsed = _DECODER.decode(body.decode("utf-8"))
+    # Brackets nested too deeply end in RecursionError, and odd exponents in InvalidOperation.
     except (ValueError, RecursionError, InvalidOperation) as error:
         raise BadJson("The body is not JSON in UTF-8.") from error
     if not isinstance(parsed, dict):
@@ -65,9 +66,11 @@ def _check_headers(request: Request, bytes_max: int) -> None:
     content_type = request.headers.get("content-type", "")
     if content_type and not _JSON_TYPE.fullmatch(content_type.strip()):
         raise NotJson("not_json", "The content type must be application/json in UTF-8.")
+    # A few encoded bytes may unfold to gigabytes, so nothing encoded is read at all.
     if request.headers.get("content-encoding", "identity").strip().lower() != "identity":
         raise NotJson("encoded_body", "Send the body without a content encoding.")
     announced = request.headers.get("content-length", "")
+    # By its length first, as int() itself refuses thousands of digits with an error.
     if announced.isdecimal() and (len(announced) > 18 or int(announced) > bytes_max):
         raise _too_large(bytes_max)
 
@@ -75,6 +78,7 @@ def _check_headers(request: Request, bytes_max: int) -> None:
 async def _read_bytes(request: Request, bytes_max: int) -> bytes:
     pieces, length = [], 0
     async for piece in request.stream():
+        # Counted as it comes: the announced length may be missing, or a lie.
         length += len(piece)
         if length > bytes_max:
             raise _too_large(bytes_max)
@@ -94,6 +98,7 @@ def _constant(_name: str) -> NoReturn:
 
 def _unique(pairs: list[tuple[str, object]]) -> dict[str, object]:
     members = dict(pairs)
+    # The parser alone would keep the last of two, and nobody knows which one was meant.
     if len(members) != len(pairs):
         raise BadJson("An object has the same key twice.")
     return members

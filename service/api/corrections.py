@@ -30,6 +30,7 @@ Form = TypeVar("Form", bound=OrderForm)
 
 
 async def _order(request: Request, form: type[Form]) -> tuple[str, Form, str, dict[str, str]]:
+    # The key comes before the body, so that strangers cannot make us read one.
     key, once = await require(request, "operate"), idempotency(request)
     body = await read_object(request, edge(request).body_bytes_max)
     return line_item_id(request), read(form, body), actor(key), once

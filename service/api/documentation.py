@@ -42,6 +42,7 @@ START = """SwaggerUIBundle({url: "/openapi.json", dom_id: "#page", validatorUrl:
 """
 POLICY = {
     "Content-Security-Policy": "default-src 'self'; img-src 'self' data:; "
+    # The page sets styles in place; scripts get no such leave.
     "style-src 'self' 'unsafe-inline'; frame-ancestors 'none'"
 }
 
@@ -124,6 +125,7 @@ async def get_start(_request: Request) -> Response:
 async def get_file(request: Request) -> Response:
     """One of the few files that the page is made of, out of the installed package."""
     name = request.path_params["name"]
+    # A name out of a path must never choose a file by itself.
     if name not in FILES:
         raise NotFound("not_found", "Not Found.")
     return FileResponse(swagger_ui_path / name)

@@ -13,6 +13,7 @@ from service.errors import Stale, no_such_line_item
 
 LIMIT_DEFAULT, LIMIT_MAX = 50, 200
 
+# So many digits always fit the 64 bits of the column.
 _VERSION = re.compile(r'"([0-9]{1,18})"')
 _LIMIT = re.compile(r"[0-9]{1,4}")
 _NUMBER = re.compile(r"[0-9]{1,15}")

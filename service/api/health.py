@@ -30,6 +30,7 @@ async def get_ready(request: Request) -> Response:
         return answers.json_answer({"status": "starting"}, 503, {"Retry-After": "1"})
     try:
         health = await stories(request).operator.health()
+    # Prices still leave from what is in hand, so no balancer should take this worker out.
     except StoreAway:
         health = {"status": "degraded"}
     return answers.json_answer(answers.plain(health))

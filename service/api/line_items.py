@@ -73,6 +73,7 @@ async def patch_line_item(request: Request) -> Response:
     key, name = await require(request, "operate"), line_item_id(request)
     version, operator = if_match(request), stories(request).operator
     changes, form = read_changes(await read_object(request, edge(request).body_bytes_max))
+    # Only what is there now can be judged; if it changes before the patch, the version is stale.
     check_consistent(merged((await operator.get(name)).config, changes))
     view = await operator.patch(name, changes, version, form.confirm, form.reason, actor(key))
     return _with_etag(view)

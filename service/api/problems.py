@@ -114,6 +114,7 @@ async def _http(_request: Request, error: Exception) -> Response:
         raise error
     status = HTTPStatus(error.status_code)
     code = status.name.lower()
+    # Not the framework's own detail, which may hold what the caller sent.
     return problem(status, code, f"{status.phrase}.", headers=error.headers)
 
 

@@ -23,6 +23,7 @@ def milliseconds(text: object) -> int:
     Raises:
         ValueError: Another form, no such time, or a year outside 2000 to 2199.
     """
+    # RFC 3339 allows t and z in lower case.
     if not isinstance(text, str) or not _TIME.fullmatch(text.upper()):
         raise ValueError("It must be a time with a zone, such as 2026-12-01T09:00:00Z.")
     try:

@@ -34,6 +34,7 @@ async def post_retract(request: Request) -> Response:
     form, name = read(RetractForm, body), line_item_id(request)
     wish = Retraction(
         form.part,
+        # Sorted, so that a repeat which names them in another order is still the same call.
         tuple(sorted(set(form.refs))),
         tuple(sorted(set(form.event_ids))),
         form.source,
