@@ -85,6 +85,7 @@ def kl_upper(mean: ArrayLike, divergence: ArrayLike) -> Numbers:
     """
     p, d = np.broadcast_arrays(_array(mean), _array(divergence))
     inside = (p > SMALLEST_MEAN) & (p < 1.0)
+    # Both sides of `where` are worked out, so the one not taken gets a harmless number.
     safe_p = np.where(inside, p, 0.5)
     root = p + _kl_distance(safe_p, np.maximum(d, 0.0))
     at_zero = -np.expm1(-np.maximum(d, 0.0))
@@ -94,6 +95,7 @@ def kl_upper(mean: ArrayLike, divergence: ArrayLike) -> Numbers:
 
 def _kl_distance(p: Numbers, d: Numbers) -> Numbers:
     rest = 1.0 - p
+    # Just short of 1, where the divergence is infinite.
     end = rest * (1.0 - 2.0**-52)
     x = np.minimum(_kl_distance_at_most(p, d), end)
     for _ in range(NEWTON_STEPS):

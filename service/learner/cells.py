@@ -38,6 +38,7 @@ class Sums:
 
     def add(self, other: Sums) -> None:
         """Take in a later cell."""
+        # All but the start, which stays that of the earlier cell.
         for name in Cell.__slots__[1:]:
             setattr(self, name, getattr(self, name) + getattr(other, name))
 
@@ -85,6 +86,7 @@ class Cells:
         if won_ms >= self.clock_ms:
             return self.newest()
         at = bisect_right(self._open, won_ms, key=lambda cell: cell.start_ms)
+        # Older than every cell: its values go where the impression itself has gone.
         return self._open[at - 1] if at else self.long_ago
 
     def is_closed(self, won_ms: int) -> bool:
@@ -128,8 +130,10 @@ class Cells:
     def _close(self, at: int) -> None:
         cell, drift = self._open[at], self._rules.drift
         if self._rules.arrival == ACCRUES:
+            # After its window an impression is known, and without a value it was worth nothing.
             cell.known = cell.bought
         if self._rules.ratio is not None and self._changed(cell):
+            # A restart has cut the list of cells, so another cell stands at this place now.
             return
         if drift is None:
             self.long_ago.add(self._open.pop(at))
@@ -194,6 +198,7 @@ class Cells:
     def _changed(self, cell: Sums) -> bool:
         """Step the detector; on an alarm that restarts, forget what came before the change."""
         rules, alarms = self._rules, self.watch.alarms
+        # Rare values are counted, or a single large one would sound the alarm.
         hits = cell.converted if rules.rare else cell.amount / rules.ceiling
         self.watch = step(
             self.watch, cell.known, round(hits * UNITS), cell.start_ms, rules.ratio or 1.0,

@@ -79,6 +79,7 @@ def bernoulli_interval(
         tuned_for: Trials at which to be narrowest, fixed beforehand; right at every other.
     """
     s, n, m = together(successes, trials, bernoulli_weight(tuned_for, alpha))
+    # By Ville's inequality the evidence ever comes so high with chance alpha at most.
     level = math.log(1.0 / alpha)
     return np.exp(_bernoulli_low(s, n, m, level)), -np.expm1(_bernoulli_low(n - s, n, m, level))
 

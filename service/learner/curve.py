@@ -72,7 +72,9 @@ def curve(counts: Counts, level: float = 0.95) -> Curve:
     has = frozenset(which for which, column in enumerate(columns) if column.any())
     draw = _DRAWN.get(has, _turnbull if has else _nothing)
     share, low, high, method, interval = draw(columns, level)
+    # The place beyond the top is no price of ours.
     end = counts.ticks.cells + 1
+    # The curve rises: a lower end holds at all higher prices, an upper end at all lower ones.
     low = np.maximum.accumulate(np.where(np.isfinite(low), low, 0.0))
     high = np.minimum.accumulate(np.where(np.isfinite(high), high, 1.0)[::-1])[::-1]
     parts = (double(share[:end]), double(low[:end]), double(high[:end]))
@@ -111,6 +113,7 @@ def _reverse(columns: list[Numbers], level: float) -> Drawn:
     below = np.append(0.0, columns[BELOW][:-1])
     product = kaplan_meier.reverse_kaplan_meier(columns[SEEN], below)
     low, high = kaplan_meier.log_log_interval(_mirrored(product), level)
+    # Below the lowest bid and the lowest price told nobody has looked.
     looked_at = (np.cumsum(columns[SEEN] + columns[BELOW]) > 0.0) | (product.share <= 0.0)
     share, low, high = (
         np.where(looked_at, one, np.nan) for one in (product.share, low[::-1], high[::-1])
@@ -129,6 +132,7 @@ def _isotonic(columns: list[Numbers], level: float) -> Drawn:
     # Between two prices tried the curve may rise anywhere; the upper end is that of the next.
     tried = trials > 0.0
     high = np.where(tried, high, np.nan)
+    # Above the highest bid tried nobody has looked.
     beyond = np.arange(trials.size) > np.flatnonzero(tried)[-1]
     share = np.where(beyond, np.nan, blocks.rate)
     return share, low, high, "isotonic", "Clopper-Pearson per pooled block, a rough guide"
@@ -147,7 +151,9 @@ def _turnbull(columns: list[Numbers], level: float) -> Drawn:
     tolerance = max(turnbull.TOLERANCE, LIKELIHOOD_MISSING / weight.sum())
     masses = turnbull.turnbull(low[told], high[told], weight[told], tolerance)
     sure, ended = _summed(masses, size)
+    # Where the least and the most agree, it does not matter where the masses lie.
     share = np.where(np.abs(ended - sure) < 1e-12, sure, np.nan)
+    # How many auctions say on which side of a place their competing bid was.
     resolved = np.cumsum(columns[SEEN] + below) + (above + columns[SEEN])[::-1].cumsum()[::-1]
     resolved -= columns[SEEN]
     lower, _ = isotonic.clopper_pearson(sure * resolved, resolved, level)

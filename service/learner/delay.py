@@ -97,6 +97,7 @@ def em_step(
 
 def will_convert(age: ArrayLike, law: Law) -> Numbers:
     """The chance that an impression of this age without conversion still converts."""
+    # The w of `em_step`, written so that no exponential overflows.
     return double(special.expit(special.logit(law.share) - law.rate * double(age)))
 
 
@@ -146,6 +147,7 @@ def _cell_of_the_top(data: Seen, weight: Numbers, prior_mean: Numbers) -> tuple[
     fastest = conversions / np.maximum(waited, conversions * oldest / FASTEST)
     share = np.linspace(0.0, 1.0, PROFILE_POINTS)
     rates = np.exp(np.log(slowest[..., None]) * (1.0 - share) + np.log(fastest[..., None]) * share)
+    # The logarithm of the Gamma prior, but for a constant.
     of_prior = weight[..., None] * (np.log(rates) - rates * prior_mean[..., None])
     top = np.argmax(profile(data, rates) + of_prior, axis=-1)[..., None]
     beside = (np.maximum(top - 1, 0), np.minimum(top + 1, PROFILE_POINTS - 1))
@@ -255,6 +257,7 @@ def poisson_upper(theta: ArrayLike, exposed: ArrayLike, delta: float) -> Numbers
     a, e = doubles(theta, exposed)
     d = np.log(1.0 / delta) / np.where(e > 0.0, e, 1.0)
     some = np.where(a > 0.0, a, 1.0)
+    # Not left of the root, since d(a, a + x) >= x^2 / (2 (a + x)).
     x = d + np.sqrt(d * d + 2.0 * some * d)
     for _ in range(NEWTON_STEPS):
         x = x - (x - some * np.log1p(x / some) - d) * (some + x) / x

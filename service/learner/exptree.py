@@ -47,13 +47,16 @@ def law(tree: Tree, rules: Rules) -> Law:
     """
     stage, cells = tree.stage, rules.ticks.cells
     forced = round(rules.forced_at(stage) * UNITS)
+    # The cells are kept back for the one unit that each of them gets on top.
     free = max(UNITS - forced - cells, 0)
     ends = [*(tick for tick, _ in tree.steps), cells]
     logs = list(accumulate((step for _, step in tree.steps), initial=0))
+    # Only ratios count, and the exponential of a large log-weight would overflow.
     highest = max(logs)
     weights = np.exp(np.array([float(log - highest) for log in logs]) / UNITS)
     share = weights / (weights @ np.diff(ends, prepend=0))
     masses = 1 + np.floor(share * free).astype(np.int64)
+    # Neighbours of one mass are one run, which keeps the law short.
     last = np.flatnonzero(np.append(np.diff(masses) != 0, True)).tolist()
     return Law(
         *(rules.ticks, stage, forced),
@@ -116,6 +119,7 @@ class _Growing:
             return
         self._cut(worth.price, worth.stage)
         if worth.stage == self._stage:
+            # Rounded one by one, so that a correction takes off to the unit what was once added.
             for amount, sign in ((worth.amount, 1), (worth.was, -1)):
                 units = self._rules.of_value(amount, worth.chance, worth.stage)
                 self._add(worth.price, units, sign)
@@ -147,10 +151,12 @@ class _Growing:
         cell, above, bids = self._rules.ticks.place(price)
         within = units * above // bids
         for tick, step in ((cell, within), (cell + 1, units - within)):
+            # A credit to all bids, or to none, moves no ratio and has no cut.
             if tick in self._steps:
                 self._steps[tick] += sign * step
 
     def _reach(self, stage: Stage) -> None:
+        # The larger of each, whichever of two outcomes comes first.
         furthest = (max(self._stage[0], stage[0]), max(self._stage[1], stage[1]))
         if furthest != self._stage:
             self._stage, self._counted = furthest, 0

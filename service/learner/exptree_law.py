@@ -91,6 +91,7 @@ class Law:
             price: In nanos; one below the floor is beaten by all that left.
             floor: The least bid that left, in nanos.
         """
+        # Whatever left was at least the floor, and so above the nano below it.
         above, parts = self._above(max(price, floor - 1, 0))
         reaching, of = self._above(floor - 1) if floor > 0 else (self.total, 1)
         return above * of / (parts * reaching) if reaching else 0.0

@@ -89,6 +89,7 @@ def check(lesson: Lesson) -> None:
 
 
 def _whole(*numbers: int, most: float = math.inf) -> None:
+    # To isinstance True is an int too, and no count of ours.
     if any(type(number) is not int or not 0 <= number <= most for number in numbers):
         raise BadLesson("a count, a price or an amount is not a whole number in its range")
 

@@ -80,6 +80,7 @@ class Rules:
         """
         if self.rate is not None:
             return self.rate
+        # D / (2B) or D / (4B) as a power of two, since both guesses are one.
         doublings_of_width = stage[1] - stage[0] - (1 if self.win_only else 2)
         return min(1.0, math.sqrt(math.ldexp(1.0, doublings_of_width)))
 

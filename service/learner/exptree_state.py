@@ -96,6 +96,7 @@ class Tree:
 
 def _head(rules: Rules) -> bytes:
     ticks = rules.ticks
+    # Nought stands for doubling, since no rate is nought.
     numbers = (ticks.top, ticks.tick, rules.ceiling, rules.win_only, rules.rate or 0.0)
     return _RULES.pack(_NAME, FORM, *numbers)
 

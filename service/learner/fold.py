@@ -67,6 +67,7 @@ class _Growing:
 
     def take(self, lesson: Lesson) -> None:
         """Let time pass up to the lesson, then add what it says."""
+        # Between two moments only, or the order within one would decide what still counts.
         if lesson.at_ms > self._cells.clock_ms:
             self._pass_time(lesson.at_ms)
         teach = LESSONS.get(lesson.kind)
@@ -173,6 +174,7 @@ class _Growing:
     def _hear(self, now_ms: int) -> None:
         """After a silence, what piled up gets as long again to come before windows go on."""
         silence_ms = self._rules.silence_ms
+        # The second comparison says that something was heard before at all.
         if silence_ms is not None and now_ms > self._heard_ms + silence_ms > silence_ms:
             self._ripe_ms = self._heard_ms + silence_ms
             self._ripe_again_ms = now_ms + silence_ms
@@ -183,8 +185,10 @@ class _Growing:
         if won_ms < self._cells.began_ms:
             return True
         late = self._cells.clock_ms - won_ms > self._rules.window_ms
+        # Where one value is all there is, it counts however late it comes.
         if self._rules.arrival != ACCRUES or not late:
             return False
+        # Where windows can stand still, only the cells know which of them have closed.
         return self._rules.silence_ms is None or self._cells.is_closed(won_ms)
 
     def _also(self, lesson: exptree_lessons.Lesson | None) -> None:
@@ -209,6 +213,7 @@ class _Growing:
 
     def _put(self, cell: Sums, before: int, after: int) -> None:
         ceiling = self._rules.ceiling
+        # Both are cut, so that a correction takes off what was once put there.
         cell.put(min(before, ceiling), min(after, ceiling))
         self._sums["clipped"] += (after > ceiling) - (before > ceiling)
 

@@ -61,7 +61,9 @@ def tokens(features: Mapping[str, Feature]) -> list[Token]:
 
 
 def _token(name: str, value: Feature) -> Token:
+    # The zero byte keeps a name ending in x apart from a value that begins with it.
     head = name.encode() + b"\0"
+    # Asked first, since True is a number as well.
     if isinstance(value, bool):
         return b"b" + head + (b"1" if value else b"0"), 1.0
     if isinstance(value, str):

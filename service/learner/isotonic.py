@@ -81,6 +81,7 @@ def clopper_pearson(wins: ArrayLike, trials: ArrayLike, level: float) -> tuple[N
     """
     w, n = doubles(wins, trials)
     tail = (1.0 - level) / 2.0
+    # Where nothing or all was won one end is known, and its Beta distribution does not exist.
     none, all_ = w <= 0.0, w >= n
     low = special.betaincinv(np.where(none, 1.0, w), n - w + 1.0, tail)
     high = special.betaincinv(w + 1.0, np.where(all_, 1.0, n - w), 1.0 - tail)

@@ -44,6 +44,7 @@ def kaplan_meier(seen: ArrayLike, above: ArrayLike) -> Product:
         above: Number known to be above that place and no more.
     """
     d, c = doubles(seen, above)
+    # At risk at a place is all that was seen or censored there or further up.
     return _product(d, np.cumsum((d + c)[::-1])[::-1])
 
 

@@ -220,6 +220,7 @@ def _factored(matrix: Numbers, penalty: float) -> tuple[Numbers, float]:
     half = np.linalg.solve(lower, np.eye(len(matrix)))
     log_det = 2.0 * float(np.log(np.diag(lower)).sum()) - len(matrix) * float(np.log(penalty))
     inverse = half.T @ half
+    # The product is symmetric, but the rounding of its two halves need not be.
     return double(0.5 * (inverse + inverse.T)), log_det
 
 

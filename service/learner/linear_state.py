@@ -45,6 +45,7 @@ def to_bytes(ridge: Ridge) -> bytes:
     )
     half = np.triu_indices(ridge.dimensions)
     numbers = np.concatenate([ridge.matrix[half], ridge.inverse[half], ridge.moment])
+    # In one order of bytes, whatever that of the machine.
     body = head + numbers.astype(">f8").tobytes()
     return body + _SUM.pack(zlib.crc32(body))
 

@@ -139,6 +139,7 @@ class Memory:
             if form != FORM or set(content) != {*_NUMBERS, *_PARTS}:
                 raise UnreadableMemory("not the form of memory this release writes")
             return _read(content)
+        # A ValueError too, but it says more than the one below would.
         except UnreadableMemory:
             raise
         except (ValueError, TypeError) as error:

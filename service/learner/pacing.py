@@ -220,6 +220,7 @@ def first_by_curve(
     for _ in range(HALVINGS):
         middle = 0.5 * (low + high)
         low, high = (middle, high) if spends(middle) > rate else (low, middle)
+    # The upper end, for there the market spends no more than the rate.
     return round(high * UNITS)
 
 
@@ -298,6 +299,7 @@ def _counted(before: int, rounds: int, horizon: int) -> int:
 def _step(rounds: int, rules: Rules) -> int:
     if rules.horizon == 0:
         return rules.step
+    # In whole numbers, so that a fold gives the same bytes on any machine.
     growth = math.isqrt(rules.horizon * UNITS // max(rounds, 1))  # In units of 2^-20.
     return rules.step * min(growth, STEP_GROWTH << 20) >> 20
 

@@ -186,6 +186,7 @@ def _begins(day: date, zone: str, fold: int = 0) -> int:
 def _until(at_ms: int, starts_ms: int, zone: str, weights: tuple[int, ...]) -> int:
     quarter, part_ms = divmod(at_ms - starts_ms, QUARTER_MS)
     sums = _sums(starts_ms, zone, weights)
+    # A day with every quarter there can be has none after its last.
     part = (sums[quarter + 1] - sums[quarter]) * part_ms if part_ms else 0
     return sums[quarter] * QUARTER_MS + part
 

@@ -187,6 +187,7 @@ def rising_upper(wins: ArrayLike, trials: ArrayLike, rounds: float, bound: Bound
         won, made = (np.append(0.0, np.cumsum(one[tried])) for one in (w, n))
         runs_won, runs_made = (one[up_to + 1] - one[from_each] for one in (won, made))
         ends = chance_upper(runs_won, runs_made, rounds, bound)
+        # Unbuffered, since several runs begin at one bid: plain indexing would keep the last.
         np.minimum.at(upper, tried[from_each], ends)
     return double(np.minimum.accumulate(upper[::-1])[::-1])
 

@@ -87,6 +87,7 @@ class _Intervals:
         sums = np.append(0.0, np.cumsum(mass))
         chance = np.maximum(sums[self.last] - sums[self.first], 1e-300)
         pull = self.share / chance
+        # As differences, begun at the first place and ended after the last, then added up.
         steps = np.bincount(self.first, pull, self.size + 1)
         steps -= np.bincount(self.last, pull, self.size + 1)
         return double(np.cumsum(steps)[:-1])

@@ -86,6 +86,7 @@ def step(watch: Watch, trials: int, hits: int, start_ms: int, ratio: float, high
 
 def score(trials: int, hits: int, usual: float, other: float) -> int:
     """The log-likelihood of `other` against `usual`, in units of 2^-40 nats."""
+    # Where nothing or everything has hit, no other rate can be told from the usual one.
     if not 0.0 < usual < 1.0:
         return 0
     share = hits / UNITS
