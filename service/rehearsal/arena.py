@@ -54,6 +54,7 @@ class Arena:
     format: Format = "first"
     feed: Feed = "always"
     epoch: int = 200
+    # The others learn too, so what they did long ago says little of what they do now.
     kept: int = KEPT_WHOLE * 95 // 100
     grid: int = TRIED
 
@@ -68,12 +69,14 @@ class Arena:
             played.append((values, bids, self._paid(bids, least)))
             for bidder, counts in enumerate(learnt):
                 told = outcomes(bids[:, bidder], least[:, bidder], self.feed)
+                # Between two looks, so that what is new counts in full.
                 kept = curve_counts.discount(counts, self.kept)
                 learnt[bidder] = curve_counts.add(kept, told)
         return Play(*(np.concatenate(parts) for parts in zip(*played, strict=True)))
 
     def _bids(self, learnt: list[Counts], values: Nanos) -> Nanos:
         if self.format == "second":
+            # In second price one's value is the best bid whatever the others do.
             return values
         columns = zip(learnt, values.T, strict=True)
         bids = [first_price(one, self.feed, double(of), self.grid) for one, of in columns]

@@ -45,6 +45,7 @@ class Distance:
 
 def full(competing: Nanos, ticks: Ticks) -> Curve:
     """The empirical curve of all competing bids."""
+    # As if we had bid the top each time, since only then every competing bid is seen.
     top = np.full_like(competing, ticks.top)
     return curve(curve_counts.add(Counts(ticks), outcomes(top, competing, "always")))
 

@@ -25,6 +25,7 @@ from service.rehearsal.worlds import DELAY_MAX, SCALE, Shares, World
 GRID_POINTS = 11
 CHANGES = 1  # The number of changes that methods which forget are tuned for.
 TRIES = 25.0  # Epsilon-greedy bids the cap with chance TRIES / t.
+# No value is later than that, so no place is filled for two rounds at once.
 RING = DELAY_MAX + 1
 
 Won = NDArray[np.bool_]
@@ -119,6 +120,7 @@ class Learner:
         self._known[due, runs] += won
         self._hits[due, runs] += won & (world.values[turn] > 0)
         now = turn % RING
+        # Copied, for the window keeps them while the ring writes over its own.
         self._sums.add(self._known[now].copy(), self._hits[now].copy())
         self._known[now] = self._hits[now] = 0.0
 
@@ -139,6 +141,7 @@ class Grid:
 
     def learn(self, turn: int, won: Won, world: World) -> None:
         """Credit what the round gained, between -1 and 1, when it is known."""
+        # The competing bid is the least that wins, a nano above the price.
         gained = np.where(won, world.values[turn] - (world.competing[turn] - 1), 0) / SCALE
         due = np.where(won, turn + world.delays[turn], turn) % RING
         credits = self._exp3.credits(self._arms, (gained + 1.0) / 2.0)

@@ -84,6 +84,7 @@ class Exp3:
 
     def __init__(self, runs: int, arms: int, rate: float, lift: float = 0.0) -> None:
         self._rate, self._lift = rate, lift
+        # EXP3.P steps by a third of the rate, as its authors have it (from memory).
         self._step = rate / arms if lift == 0.0 else rate / (3.0 * arms)
         self._logs = np.zeros((runs, arms))
 
@@ -94,6 +95,7 @@ class Exp3:
 
     def chances(self) -> Shares:
         """The chance of each arm, one row for each run."""
+        # The largest is taken off, which moves no ratio and keeps the exponential in range.
         weights = np.exp(self._logs - self._logs.max(axis=1, keepdims=True))
         even = self._rate / weights.shape[1]
         mixed = (1.0 - self._rate) * weights / weights.sum(axis=1, keepdims=True) + even
@@ -101,6 +103,7 @@ class Exp3:
 
     def draw(self, rng: Generator) -> NDArray[np.int64]:
         """One arm for each run."""
+        # Rounding may leave the last sum short of 1, and then no arm would be drawn.
         below = np.cumsum(self.chances(), axis=1)[:, :-1]
         return np.asarray((rng.random((below.shape[0], 1)) > below).sum(axis=1), dtype=np.int64)
 
@@ -142,5 +145,6 @@ def play_exp3(paths: Sequence[Path], grid: Nanos, scale: int, rng: Generator) ->
         arms = learner.draw(rng)
         earned = np.where(competing[:, turn] <= grid[arms], gains[:, turn], 0)
         surplus += earned
+        # Surplus lies between -1 and 1 scales, the rewards of EXP3 between 0 and 1.
         learner.learn(arms, (earned / scale + 1.0) / 2.0)
     return surplus

@@ -73,6 +73,7 @@ class Featured:
         ridge, bids = linear.Ridge.fresh(self.dimensions), np.zeros(len(rows))
         for at, row in enumerate(rows):
             x = vectors[row]
+            # The noise of a value that is 0 or 1 is half its range.
             bids[at] = min(float(ridge.upper(x, 0.5, self.length, self.delta)), 1.0)
             if competing[at] <= bids[at]:
                 ridge = linear.learn(ridge, [linear.Lesson(x, float(values[at]))])

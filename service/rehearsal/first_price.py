@@ -49,6 +49,7 @@ def replay(competing: Nanos, values: Nanos, feed: Feed, scale: Scale, ticks: Tic
         worth, against = values[part], competing[part]
         asked = worth if scale == "price" else np.full_like(worth, WHOLE)
         offered = first_price(counts, feed, double(asked)).astype(np.int64)
+        # Rounded up, as a share just below it would not have won.
         told = against if scale == "price" else -(-against * WHOLE // np.maximum(worth, 1))
         counts = curve_counts.add(counts, outcomes(offered, told, feed))
         bids[part] = offered if scale == "price" else offered * worth // WHOLE

@@ -72,6 +72,7 @@ def lognormal(
         rivals: Competing bids.
     """
     drawn = mean * np.exp(spread * rng.standard_normal(count) - spread**2 / 2.0)
+    # The chance of an event is at most one, so no mean value is above that of an event.
     expected = np.minimum(np.rint(drawn), event).astype(np.int64)
     events = np.where(rng.random(count) < expected / event, np.int64(event), np.int64(0))
     hinted = np.rint(factor * expected).astype(np.int64)
@@ -89,6 +90,7 @@ def by_hints(offers: Offers, budget: int, rules: pacing.Rules, prior: Prior) -> 
         prior: What is believed of hints.
     """
     rounds, seen = offers.expected.size, Hints()
+    # Half the bid, the mean price where competing bids are uniform.
     pace = Pace.fresh(rules, 0, int(offers.hinted.mean() * prior.ratio / 2.0))
     spent = surplus = 0
     ratio = hints.ratio_quantile(seen, prior, ORDER)
@@ -103,6 +105,7 @@ def by_hints(offers: Offers, budget: int, rules: pacing.Rules, prior: Prior) -> 
         if bid >= rival:
             spent, surplus = spent + rival, surplus + expected - rival
             seen = hints.learn(seen, hint, event)
+        # As differences of whole sums, so that the parts add up to the budget.
         due = budget * (at + 1) // rounds - budget * at // rounds
         pace = pacing.learn(pace, pacing.Seen(1, int(bid >= rival), price), due, rules)
     return Earned(surplus, spent, seen.impressions, hints.ratio(seen, prior))

@@ -99,9 +99,11 @@ def play_hours(
         floor = market.floor if number >= market.floor_from else 0
         for tick, count in enumerate(counts.tolist()):
             bid = float(pacing.paced(market.value, pace.multiplier(rules)))
+            # Prices still on their way are paid all the same, though no lesson has told them yet.
             left = profile.left_today(progress, progress.clock_ms, plan) - sum(
                 money for _, money in on_their_way
             )
+            # A floor competes like a bid: nothing is sold below it.
             prices = np.maximum(market.competing.draw(rng, count), floor)
             prices = prices[prices <= bid]
             paid = prices[np.cumsum(prices) <= left]

@@ -66,6 +66,7 @@ def stretch(rng: Generator, opportunities: int) -> Stretch:
     competing = RIVALS.draw(rng, opportunities)
     hits = SMALL.values.draw(rng, opportunities) > 0
     within = -np.expm1(-WINDOW_MS / DELAY_MEAN_MS)
+    # The inverse of the law of delays, given that they end within the window.
     delays_ms = -DELAY_MEAN_MS * np.log1p(-within * rng.random(opportunities))
     return Stretch(at_ms, competing, hits, np.ceil(delays_ms).astype(np.int64))
 
@@ -84,6 +85,7 @@ def played(job: Job) -> int:
 
 def terms_of(way: str) -> Terms:
     """The line item: the law of delays is told where the way says that it is known."""
+    # A law needs a mean above nothing, so what is told at once has that of a millisecond.
     known = {KNOWN_LAW: DELAY_MEAN_MS, AT_ONCE: 1}.get(way)
     return replace(rare_terms(METHOD, SMALL), window_ms=WINDOW_MS, delay_mean_ms=known)
 
@@ -124,8 +126,10 @@ def _won(market: Stretch, terms: Terms, read: Read) -> NDArray[np.bool_]:
         lessons = due.pop(block, []) + _lessons(market, these, won[these])
         _put_values(market, these, won[these], due, lessons)
         end_ms = (block + 1) * BLOCK_MS
+        # Losses are told in one tick, since they say nothing of values.
         lost = int((~won[these]).sum())
         lessons.append(Lesson("tick", {"rounds": lost, "under_floor": 0}, end_ms))
+        # Values of earlier wins lie between the new wins, and a fold only moves forward in time.
         memory = fold(memory, sorted(lessons, key=lambda lesson: lesson.at_ms), rules)
     return won
 

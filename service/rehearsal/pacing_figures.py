@@ -79,6 +79,7 @@ def known_values(rounds: int, seed: int, guess: float = 1.0) -> Budget:
     """
     values, competing = paced.uniform(default_rng(seed), rounds, SCALE)
     budget = rounds * SCALE // 10
+    # Uniform values and prices, unpaced, spend a sixth of the top price each round.
     first = pacing.first_by_forecast(guess * SCALE / 6.0, SCALE / 10.0)
     start = Pace.fresh(RULES, first, pacing.usual_price(SCALE, first))
     run = paced.play(values, competing, budget, RULES, start, paced.known(values))
@@ -207,5 +208,6 @@ RIVALS: dict[str, Draws] = {
 
 
 def _unpaced(rivals: Draws) -> float:
+    # Of one seed, so that the budget does not change with the market's.
     drawn: Nanos = rivals.draw(default_rng(0), 10_000)
     return float(np.where(drawn <= SCALE, drawn, 0).mean())

@@ -54,6 +54,7 @@ def by_greed(gains: ArrayLike, prices: ArrayLike, budget: float) -> Chosen:
     room = np.where(price[order] > 0.0, price[order], 1.0)
     shares = np.zeros(gain.shape)
     shares[order] = np.clip((budget - before) / room, 0.0, 1.0)
+    # What costs nothing is won whatever the money.
     shares[order[price[order] == 0.0]] = 1.0
     missed = order[shares[order] < 1.0]
     dual = float(per_price[missed[0]]) if missed.size else 0.0

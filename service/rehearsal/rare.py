@@ -188,6 +188,7 @@ def played(job: Job) -> list[int]:
         return [int(one) for one in play_fixed(at_mean, min(case.worth, CAP))]
     method, conversions = ENTRANTS[job.entrant]
     terms = rare_terms(method, case, conversions)
+    # By the seeds of the chunk, so that the process it runs in does not matter.
     rng = np.random.default_rng([job.seeds[0], job.opportunities])
     if not METHODS[method].by_law:
         return [int(one) for one in play_many(paths, terms, BLOCK, rng, case.worth)]
@@ -241,6 +242,7 @@ def _at_mean(path: Path, case: Case) -> Path:
 
 def _row(entrant: str, case: Case, by_seed: dict[int, int], oracle: dict[int, int]) -> Row:
     own = _units([by_seed[seed] for seed in sorted(by_seed)])
+    # Of the same seeds only: trees play fewer of them than the oracle.
     best = _units([oracle[seed] for seed in sorted(by_seed)])
     surplus, behind = _mean(own), _mean(best - own)
     if entrant == ORACLE:

@@ -106,6 +106,7 @@ def _surpluses(
         ]
         own.append(play_many(paths, terms, BLOCK, worth_each=these))
         for path, worth in zip(paths, these.tolist(), strict=True):
+            # The learner has played, and what is won counts at its mean value as in the table.
             path.values[:] = worth
             best.append(play_fixed([path], min(worth, CAP)))
     unit = money.NANOS_PER_UNIT

@@ -61,6 +61,7 @@ def uniform_regret(
         if method.draw is not None:
             value = method.draw(counts, terms, rng)
         bid = np.minimum(value / SCALE, 1.0)
+        # What the bid loses on average, whatever bid competed with it.
         regret += (bid - chance) ** 2 / 2.0
         won = rng.random(runs) <= bid
         counts = _after(counts, won, won & (rng.random(runs) < chance))

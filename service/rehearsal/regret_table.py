@@ -139,6 +139,7 @@ def jobs(
 ) -> list[Job]:
     """Everything to be played, the longest first."""
     found = []
+    # The longest begin first, or one process would work on alone at the end.
     for rounds in reversed(size.horizons):
         for method in methods:
             if method in tree_contest.TREES:
@@ -153,6 +154,7 @@ def played(job: Job) -> list[Shares]:
     """The regret of every run of each of the job's markets, in scales."""
     stages = [STAGES[market] for market in job.markets]
     ground = worlds.world(stages, job.rounds, job.runs, job.seed)
+    # Not by hash(), which is another number in every process.
     rng = np.random.default_rng([job.seed, job.rounds, zlib.crc32(job.method.encode())])
     if job.method in tree_contest.TREES:
         regret = tree_contest.play_tree(ground, job.method, stages[0], rng)

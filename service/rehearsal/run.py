@@ -170,4 +170,5 @@ def _lessons(
             win["chance"] = law.chance_above(rival - 1)
         yield Lesson("won", win, at_ms)
         yield Lesson("value", {"amount": amount, "was": None, "won_ms": at_ms, "win": win}, at_ms)
+    # It teaches nothing, but moves the clock on until every window has closed.
     yield Lesson("lease", {}, at_ms + BLOCK_MS // 2)

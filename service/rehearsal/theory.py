@@ -78,6 +78,7 @@ def bound(method: str, market: str, rounds: int) -> float | str:
     """What a bidder may lose in so many rounds, in scales, or the words that say why not."""
     width = worlds.STAGES[market].width
     if method == contest.UCBID and market in ALIKE:
+        # Every price stands so far above the value, so here the gap of Theorem 1 is known.
         gap = None if market != worlds.HOSTILE else math.sqrt(6.0 * math.log(rounds) / rounds)
         return float(ucbid_regret_bound(rounds, gap))
     if method == tree_contest.TREE and market in FIXED:

@@ -52,6 +52,7 @@ def play_tree(world: World, method: str, stage: Stage, rng: Generator) -> Shares
 
 
 def _wins(world: World, run: int, rules: Rules, epoch: int, rng: Generator) -> Sequence[bool]:
+    # A tree must bid above a price, and `competing` is the least bid that wins.
     prices = (world.competing[:, run] - 1).tolist()
     values, delays = world.values[:, run].tolist(), world.delays[:, run].tolist()
     due, tree, won = defaultdict[int, list[Lesson]](list), Tree.fresh(), list[bool]()

@@ -27,6 +27,7 @@ DELAY_MEAN, DELAY_MAX = 100.0, 1000  # In rounds.
 WIDE, NARROW = (0.525, 0.575), (0.5001, 0.5011)
 
 Shares = NDArray[np.float64]
+# One scale fits 32 bits, which halves what all runs together take.
 Whole = NDArray[np.int32]
 
 
@@ -106,6 +107,7 @@ def world(stages: Sequence[Stage], rounds: int, runs: int, seed: int) -> World:
     worth = np.stack([np.rint(one.worth * SCALE) for one in drawn], axis=1).astype(np.int32)
     hits = np.stack([one.hits for one in drawn], axis=1)
     values = np.where(hits, np.int32(SCALE), np.int32(0))
+    # A bid must be above the price, and bids are whole nanos.
     return World(prices + 1, values, worth - prices, np.stack([d.delays for d in drawn], axis=1))
 
 
