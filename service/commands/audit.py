@@ -24,6 +24,7 @@ def run(arguments: argparse.Namespace) -> int:
     database = open_database(load())
     try:
         require_current(database)
+        # One view, or money that moves between two reads would look like a difference.
         found, loose = database.read(lambda c: (audit(c), unfunded(c)))
     finally:
         database.close()

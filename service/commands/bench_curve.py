@@ -110,6 +110,7 @@ def figures(lots: list[timber.Lot], seed: int) -> Figures:
 def _distances(
     competing: Nanos, values: Nanos, rng: np.random.Generator
 ) -> dict[tuple[str, bool], list[Distance]]:
+    # Of all auctions, so that every size is judged by more than it has seen.
     truth, order = censoring.full(competing, TICKS), rng.permutation(len(competing))
     foreign = censoring.foreign_bids(values[order], TICKS, rng)
     own = censoring.own_bids(values[order], TICKS)

@@ -76,6 +76,7 @@ def read(
     for size in sizes:
         while folded < size:
             lessons = stream.batch(memory)
+            # Of the processor, so that whatever else runs on the machine does not count.
             begun = time.process_time()
             memory = fold(memory, lessons, rules)
             took.append((time.process_time() - begun) / len(lessons))

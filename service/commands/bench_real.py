@@ -112,6 +112,7 @@ async def play(
         await caller.create(wire, BODY)
         exchange = Exchange(wire)
         await exchange.play(auctions, advance)
+        # Where no lot was sound, the exchange has opened no book.
         book = exchange.books.setdefault(LINE_ITEM, Book())
         learnt = await caller.learnt(wire, LINE_ITEM, book.wins)
     return Outcome(auctions, dropped, book, learnt)

@@ -81,6 +81,7 @@ def _leave_with(watched: int) -> None:
     """Stop as on SIGTERM when the crew's process is gone, however it went."""
 
     def wait() -> None:
+        # Nobody ever writes to it: the read returns when the other end is closed.
         os.read(watched, 1)
         os.kill(os.getpid(), signal.SIGTERM)
 

@@ -31,6 +31,7 @@ SOUND_S = 10.0  # A child that lived for so long was no part of a crash loop.
 
 def delay_s(deaths: int) -> float:
     """Seconds until a child is started again after so many quick deaths in a row."""
+    # Cut before the power, which would not fit a float after a thousand deaths.
     return min(RESTART_S_MAX, RESTART_S * float(2 ** min(deaths, 10)))
 
 
@@ -116,10 +117,12 @@ class Crew:
         words = ["--watched", str(watched)]
         passed = [watched]
         if berth.role == "worker":
+            # Who stood here before is dead for certain, so no freeze need wait for it.
             predecessor, berth.worker = berth.worker, new_worker()
             words += ["--socket", str(self.shared.fileno()), "--worker", berth.worker]
             words += ["--predecessor", predecessor] if predecessor else []
             passed.append(self.shared.fileno())
+        # Started anew and never forked, so that no connection to the database is shared.
         berth.child = subprocess.Popen(  # noqa: S603 - Our own fixed command line.
             [sys.executable, "-m", "service.commands.child", berth.role, *words], pass_fds=passed
         )
@@ -132,6 +135,7 @@ class Crew:
         children = [berth.child for berth in self.berths if berth.child is not None]
         for child in children:
             child.send_signal(signal.SIGTERM)
+        # One moment for all of them, or the waits for several slow ones would add up.
         until = time.monotonic() + STOP_S
         for child in children:
             try:

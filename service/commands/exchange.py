@@ -107,17 +107,20 @@ class Exchange:
                 for _ in range(IN_FLIGHT):
                     group.create_task(self._play_each(queue, advance))
         except ExceptionGroup as failures:
+            # Callers handle single errors, and what the others met is most often the same.
             raise failures.exceptions[0] from failures
         await self._report(self._waiting)
         self._waiting = []
 
     async def _play_each(self, queue: Iterator[Auction], advance: Callable[[int], None]) -> None:
+        # All tasks draw from one iterator, so each auction is played once.
         for auction in queue:
             answer = await self._bid(auction)
             self._waiting += self._settle(auction, answer)
             advance(1)
             # A pass may be for money that only our own news sets free.
             if len(self._waiting) >= GROUP_ROWS or (self._waiting and answer["pass"]):
+                # Taken before the await, or another task would report the same rows.
                 ready, self._waiting = self._waiting, []
                 await self._report(ready)
 

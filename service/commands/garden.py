@@ -80,6 +80,7 @@ def _day_ticket() -> Planned:
 
 
 def _season_pass() -> Planned:
+    # Its window is two seconds, or the demo would wait for days until it has learnt.
     value = {"ceiling": "50.00", "typical": "2.00", "arrival": "accrues", "window_s": 2}
     body = _body("season-pass", "Season passes", "40.00", value, "posterior-quantile")
     return Planned(
@@ -109,9 +110,11 @@ def market(planned: list[Planned], count: int, seed: int) -> list[Auction]:
         count: How many auctions in all.
         seed: The same seed gives the same auctions.
     """
+    # Each has a stream of its own, so that its draws do not hang on the others' number.
     order, *streams = np.random.default_rng(seed).spawn(len(planned) + 1)
     drawn: list[Auction] = []
     for number, (item, stream) in enumerate(zip(planned, streams, strict=True)):
+        # The last one takes what the rounding of the others leaves.
         last = number == len(planned) - 1
         size = count - len(drawn) if last else round(item.share * count)
         drawn += _auctions(item, stream, size, len(drawn))

@@ -44,6 +44,7 @@ def run(arguments: argparse.Namespace) -> int:
 
 
 def _name(name: str) -> str:
+    # It is shown in terminals and journals, where control characters would do harm.
     if not 1 <= len(name) <= 100 or not name.isprintable():
         raise Malformed("bad_name", "A key's name has 1 to 100 printable characters.")
     return name

@@ -28,6 +28,7 @@ def log_config(form: str) -> dict[str, Any]:
     text = {"format": "%(asctime)s %(levelname)s %(name)s: %(message)s"}
     return {
         "version": 1,
+        # Most were made at import, before this is read, and would fall silent.
         "disable_existing_loggers": False,
         "formatters": {"text": text, "json": {"()": JsonLines}},
         "handlers": {"stderr": {"class": "logging.StreamHandler", "formatter": form}},

@@ -12,6 +12,7 @@ def count(text: str) -> int:
     Raises:
         argparse.ArgumentTypeError: It is none.
     """
+    # By itself isdigit() also takes superscripts, which int() refuses.
     if not text.isascii() or not text.isdigit() or int(text) < 1:
         raise argparse.ArgumentTypeError("not a whole number above 0")
     return int(text)

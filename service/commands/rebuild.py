@@ -42,6 +42,7 @@ def run(arguments: argparse.Namespace) -> int:
             for name in names:
                 task = None if bar is None else bar.add_task(name, total=None)
 
+                # Bound as a default, or every fold would move the bar of the last line item.
                 def seen(seq: int, task: object = task) -> None:
                     if bar is not None:
                         bar.update(task, completed=seq)  # type: ignore[arg-type]
@@ -59,6 +60,7 @@ def _rebuild(database: Database, name: str, to: str | None, seen: Callable[[int]
         until = None if to is None else _seq(connection, name, to)
         return rebuilds.rebuild(connection, name, until, FRESH, lesson, seen)
 
+    # One view, so that nothing new is learnt between the folds that are compared.
     return database.read(work)
 
 

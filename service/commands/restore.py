@@ -33,6 +33,7 @@ def run(arguments: argparse.Namespace) -> int:
         kept = restore(url, arguments.file, time.time_ns() // 1_000_000)
     if kept is not None:
         sys.stdout.write(f"The database from before is kept as {kept}.\n")
+    # It may be of an older release, and must then be migrated before it is served.
     database = open_database(settings)
     try:
         require_current(database)

@@ -40,6 +40,7 @@ def run(arguments: argparse.Namespace) -> int:
     given = {f"{PREFIX}{name.upper()}": getattr(arguments, name) for name in GIVEN}
     # Settings are read here and handed on; nothing below reads the environment.
     settings = load(os.environ | {name: text for name, text in given.items() if text is not None})
+    # Before the database is touched, so that two first starts cannot both prepare it.
     with sole_server(settings):
         prepare(settings)
         if settings.database_kind == SQLITE:
@@ -52,6 +53,7 @@ def run(arguments: argparse.Namespace) -> int:
 def _command(settings: Settings) -> None:
     logging.config.dictConfig(log_config(settings.log_format))
     try:
+        # Here and not in the workers, so that a taken port is told to whoever started us.
         shared = listen(settings.host, settings.port)
     except OSError as error:
         raise Unsafe(f"Nothing can listen on port {settings.port}: {error.strerror}.") from error
@@ -105,4 +107,5 @@ def _show_first_key(database: Database) -> None:
     sys.stdout.write(
         f"This database was empty. Its admin key ({key.id}) is shown this once:\n\n  {bearer}\n\n"
     )
+    # At once, for the server may end in many ways and the key is never shown again.
     sys.stdout.flush()

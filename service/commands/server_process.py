@@ -86,7 +86,9 @@ class ServerProcess:
             )
         try:
             self._wait_until_ready()
+            # A second start finds the key of the first in its database.
             self.key = self.key or self.new_key("demo", "admin")
+        # Ctrl-C during the start must not leave a server behind either.
         except BaseException:
             self.stop(signal.SIGKILL)
             raise

@@ -100,6 +100,7 @@ def auctions(lots: Iterable[Lot], line_item: str, seed: int) -> tuple[list[Aucti
     dropped: Counter[str] = Counter()
     played: list[Auction] = []
     for number, lot in enumerate(lots):
+        # Drawn for every lot, so that who we are in one does not hang on which are dropped.
         ours = int(generator.integers(max(1, len(lot.bids))))
         reason = fault(lot)
         if reason is None:

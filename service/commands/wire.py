@@ -78,6 +78,7 @@ class Wire:
             connection = await self._kept() or await _Connection.to(self.host, self.port)
             try:
                 reply = await connection.ask(request)
+            # After a failure or a timeout the rest of an old answer may still come on it.
             except BaseException:
                 await connection.close()
                 raise
@@ -113,6 +114,7 @@ class _Connection:
             content = await self.reader.readexactly(_length(head))
         except asyncio.IncompleteReadError:
             raise ConnectionResetError("The server closed before its answer was whole.") from None
+        # The status follows the nine bytes of "HTTP/1.1 ".
         return Reply(int(head[9:12]), content)
 
     async def close(self) -> None:
