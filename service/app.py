@@ -74,8 +74,10 @@ def create_app(settings: Settings, post: Post | None = None) -> FastAPI:
         async with running(settings, post or Post(new_worker())) as stories:
             app.state.stories = stories
             yield
+            # Before the hand is emptied, so that a request which comes now is told to ask again.
             app.state.stories = None
 
+    # Its own pages load scripts from other hosts; ours need no internet.
     app = FastAPI(
         title="Bidkeel", lifespan=lifespan, docs_url=None, redoc_url=None, openapi_url=None
     )
@@ -95,6 +97,7 @@ async def running(settings: Settings, post: Post) -> AsyncIterator[Stories]:
     """
     async with opened(settings) as (database, threads):
         stories, upkeep, loops = _build(settings, post, database, threads)
+        # It is on the list of workers before it leases, for a freeze waits for whoever is on it.
         await upkeep.start(post.predecessor)
         if post.clerk:
             clerk = clerk_of(settings, database, threads)
@@ -102,6 +105,7 @@ async def running(settings: Settings, post: Post) -> AsyncIterator[Stories]:
             loops += clerk.duties()
         async with on_duty(loops):
             yield stories
+        # After the loops have ended, or leasing would fill the hand while it is being emptied.
         await upkeep.stop()
 
 
@@ -115,6 +119,7 @@ async def opened(settings: Settings) -> AsyncIterator[tuple[Database, Threads]]:
         StoreAway: It does not answer.
     """
     database = open_database(settings)
+    # No more threads than connections, so that none of them waits for one.
     threads = Threads(settings.pool_size)
     try:
         # Better not to start than to promise on a database that forgets, or that we misread.
@@ -122,6 +127,7 @@ async def opened(settings: Settings) -> AsyncIterator[tuple[Database, Threads]]:
         require_current(database)
         yield database, threads
     finally:
+        # The threads first, since what they run still needs its connection.
         threads.close()
         database.close()
 
@@ -135,6 +141,7 @@ async def on_duty(loops: list[Coroutine[Any, Any, None]]) -> AsyncIterator[None]
     yield
     for task in tasks:
         task.cancel()
+    # A loop that broke has said so already, and must not keep the slices from being given back.
     await asyncio.gather(*tasks, return_exceptions=True)
 
 
@@ -156,6 +163,7 @@ def _build(
 ) -> tuple[Stories, Upkeep, list[Coroutine[Any, Any, None]]]:
     news = asyncio.Event()
     keys = TicketKeys(_ticket_keys(settings, database))
+    # A write, since on a changed timeline this begins a new life of the database.
     incarnation = bytes.fromhex(database.write(incarnations.current))
     catalog = Catalog(database, threads)
     leasing = Leasing(database, threads, post.worker, settings.lease_s)
@@ -176,6 +184,7 @@ def _build(
 
 def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:
     """The keys of the settings, else the one the database made for itself."""
+    # Their order is kept: the first one signs, and all of them verify.
     given = [key for key in settings.ticket_keys.get_secret_value().split(",") if key.strip()]
     if given:
         return [key.strip().encode() for key in given]
@@ -187,4 +196,5 @@ def _stop_if_broken(task: asyncio.Future[None]) -> None:
     if task.cancelled() or task.exception() is None:
         return
     logger.critical("a background duty failed; stopping", exc_info=task.exception())
+    # As a signal, so that the server stops as it would by hand and gives back what it holds.
     os.kill(os.getpid(), signal.SIGTERM)

@@ -38,6 +38,7 @@ class Backlog:
     def put_back(self, decisions: list[Decision]) -> None:
         """Return decisions that could not be written, the newest of them if room is short."""
         room = max(0, self._count_max - len(self._waiting))
+        # Without the condition a room of 0 would keep them all.
         kept = decisions[-room:] if room else []
         self.dropped += len(decisions) - len(kept)
         # In front of what came meanwhile, so that the log stays in the order of the bids.

@@ -20,6 +20,7 @@ from service.threads import Threads
 logger = logging.getLogger(__name__)
 
 MISS_S = 1.0  # How long an unknown id or key stays unknown before it is looked up again.
+# Whoever guesses ids or keys must not fill the memory with what we do not have.
 MISSES_MAX = 10_000
 
 
@@ -74,6 +75,7 @@ class Catalog:
     async def key_for(self, bearer: str) -> keys.Key | None:
         """The live key behind a bearer text, or None."""
         hashed = keys.hashed(bearer)
+        # A key that was ended is forgotten by `follow`, so this is never older than one poll.
         if hashed in self._keys:
             return self._keys[hashed]
         if self._missed(f"key {hashed}"):
@@ -107,7 +109,9 @@ class Catalog:
         known = set(self._items)
         wanted = known if missed or changes.ALL in names else names & known
         renewed = await self.renew(sorted(wanted))
+        # What was unknown a moment ago may be just what was created.
         self._misses.clear()
+        # Moved on last: if the renewal failed, the next look reads the same news again.
         self.change_seen = news[-1][0]
         return renewed
 
@@ -115,6 +119,7 @@ class Catalog:
         """Load these line items again, all of them in one read."""
         if not names:
             return []
+        # Taken on the loop's thread, since the other one must not look into the copy.
         before = {name: self._items.get(name) for name in names}
         # Made ready in the thread too: where values are late that takes milliseconds.
         renewed = await self._threads.run(
@@ -145,6 +150,7 @@ def _load(
 def _item(row: line_items.Row, snapshot: learners.Snapshot | None, before: Item | None) -> Item:
     terms = Terms.from_config(row.config)
     halted = snapshot is not None and snapshot.halted
+    # Unlike a damaged one, a halted state bars the last good one too: both hold what was cancelled.
     seq, made = (0, None) if halted else _ready(snapshot, terms)
     if made is None and before is not None and not halted:
         # A state that is not what was published is never used: the last good one goes on.

@@ -33,6 +33,7 @@ from service.threads import Threads
 logger = logging.getLogger(__name__)
 
 CLOSE_S = 1.0
+# What somebody has edited by hand is to be found within a minute.
 AUDIT_S = 10.0
 PRUNE_S = 3600.0
 DAY_MS = 86_400_000
@@ -76,6 +77,7 @@ class Clerk:
     async def teach(self) -> None:
         """Fold what is new, line item by line item."""
         for name in await self._threads.run(self._database.read, learners.behind):
+            # A full page says that more may wait behind it.
             while await self._teach(name) == learners.ENTRIES_MAX:
                 pass
 
@@ -85,7 +87,9 @@ class Clerk:
 
     async def audit(self) -> None:
         """Freeze what no longer says what was promised, from where the last audit ended."""
+        # The cheap promises of all come first: the streams behind them may take long.
         await self._patience.freeze_broken()
+        # Read before the audit, so that what moves meanwhile still looks new at the next turn.
         stands = await self._threads.run(self._database.read, auditing.standings)
         for name, standing in stands.items():
             # Nothing has moved since it was found sound, not even by hand.
@@ -100,6 +104,7 @@ class Clerk:
             decisions.prune_quarantine, wall_ms - habits.quarantine_keep_days * DAY_MS
         )
         await self._until_none(repeats.prune, wall_ms - habits.repeat_keep_days * DAY_MS)
+        # A length and not a moment, for slices age by service time and all else by the wall clock.
         await self._until_none(auditing.prune_slices, habits.slice_keep_days * DAY_MS)
         for forget in (epochs.prune, changes.prune, workers.prune):
             await self._threads.run(self._database.write, forget)
@@ -129,6 +134,7 @@ class Clerk:
             # Of another release, or damaged; the stream has all that it was made from.
             logger.exception("a learner's state cannot be read; its stream is read again")
             await self._refold(line_item)
+            # As if a full page had been read, so that the caller begins with the refold at once.
             return learners.ENTRIES_MAX
 
     async def _refold(self, line_item: str) -> None:

@@ -95,6 +95,7 @@ def pooled(kin: Iterable[tuple[Mapping[str, Any], bytes]], ceiling: int) -> Entr
     if not (known > 0.0 and converted > 0.0 and amount > 0.0):
         return None
     body = {
+        # A guess of nothing would never win and never learn, and no value lies above the ceiling.
         "per_impression": min(max(1, round(amount / known)), ceiling),
         "typical": min(max(1, round(amount / converted)), ceiling),
         "impressions": round(known, 3),

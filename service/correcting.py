@@ -48,17 +48,21 @@ class Correcting:
 
         def order(connection: Writing) -> dict[str, Any]:
             row = line_items.one(connection, line_item)
+            # Locked before the cost is read, or two refunds of a bid would both find it untouched.
             books = Books(connection, [line_item], self._orders.database.wall_ms())
             before = books.accounts[line_item]
             cost = None if bid is None else costs.cost_of(connection, line_item, bid)
+            # Callers without an Idempotency-Key are safe too: the ref itself allows one refund.
             if bid is not None and _reversed_already(cost, amount):
                 return {**_moved(line_item, before, before), "duplicate": True}
+            # A ticket without a slice may have found no day to count on, so its refund lowers none.
             day = cost.day if cost is not None and cost.slice is not None else None
             if day is not None:
                 books.load_days([(line_item, day)])
             movement = reversal(before, books.days.get((line_item, day or "")), amount)
             place = {"day": day, "slice": cost.slice if cost else None}
             body = {"amount": amount, **place, "actor": actor, "reason": reason}
+            # Unique in the stream, so the table itself keeps out a second refund of a bid.
             slot = None if bid is None else REVERSAL
             books.post(line_item, Entry(REVERSAL, body, bid, slot, amount), movement, day=day)
             books.save()
@@ -98,6 +102,7 @@ class Correcting:
             body = {"spent": spent, "actor": actor, "reason": reason}
             books.post(line_item, Entry("reconcile", body, cost=movement.cost), movement)
             books.save()
+            # Confirmed spend beyond the budget is like a late win: kept apart, and it freezes.
             if movement.unfunded:
                 why = f"{nanos_text(movement.unfunded)} confirmed spend found no free money"
                 freezes.put(
@@ -125,6 +130,7 @@ class Correcting:
             fresh = freezes.put(
                 connection, line_item, CLOSED, wall_ms=now, actor=actor, reason=reason
             )
+            # Said once: a second close would tell the stream nothing new.
             if fresh:
                 books.post(line_item, Entry(CLOSED, {"actor": actor, "reason": reason}))
                 books.save()

@@ -106,6 +106,7 @@ class Feedback:
         Raises:
             Overloaded: There is none. Nothing was read, and nothing is lost when it comes again.
         """
+        # The rows of a call are unknown until it is read; until then `calls_max` is the bound.
         if self._calls >= self._room.calls_max or self._rows >= self._room.rows_max:
             raise Overloaded("too many outcomes wait already")
         self._calls += 1
@@ -158,6 +159,7 @@ class Feedback:
                 THREAD_S, outcomes.book, self._database, rows, weigh
             )
         except (StoreAway, Overloaded) as error:
+            # No use in trying them apart: each would meet the same database, one after the other.
             for waiting in group:
                 _fail(waiting, error)
         except POISON:
@@ -184,6 +186,7 @@ class Feedback:
         try:
             return (await self._threads.run(outcomes.book, self._database, [row], weigh))[0]
         except POISON as error:
+            # Kept before it is refused, for nobody sends a refused outcome again.
             await self._threads.run(self._set_aside, row, error)
             return Booked("refused", "quarantined")
 
@@ -281,6 +284,7 @@ def _receipt(row: Booking, booked: Booked) -> Receipt:
 
 
 def _fail(waiting: _Waiting, error: StoreAway | Overloaded) -> None:
+    # Whoever waited for too long is gone, and a cancelled future takes no result.
     if not waiting.done.done():
         waiting.done.set_exception(error)
 

@@ -19,6 +19,7 @@ from service.threads import Threads
 logger = logging.getLogger(__name__)
 
 MARGIN_SHARE = 20  # A twentieth of the lease is left unused, against clocks that run unevenly.
+# A line item without money must not ask the database again with every opportunity.
 DENIED_S = 0.25
 OVERDUE_S = 0.25  # A batch takes a few milliseconds; one this late hangs.
 BATCH_MAX = 200
@@ -74,6 +75,7 @@ class Leasing:
         wish = self.wish(line_item)
         # Nobody waits behind a database that hangs, or all who ask would pile up here.
         if time.monotonic() < self._overdue_at:
+            # `wait` and not `wait_for`, which would cancel the wish that others wait for too.
             await asyncio.wait([wish], timeout=max(0.0, wait_s))
 
     def refresh(self, held: SliceInHand) -> None:
@@ -95,24 +97,28 @@ class Leasing:
             names = list(self._wanted)[:BATCH_MAX]
             await self._lease(names)
             for name in names:
+                # Taken off only now: whoever asks while a lease is under way shares its answer.
                 self._wanted.pop(name).set_result(None)
             if self._wanted:
                 self._wake.set()
 
     async def give_back(self) -> None:
         """Tell the database what retired slices never issued; what fails is told again."""
+        # Taken out before the await: what is retired meanwhile goes into the new list.
         given, self.hand.given = self.hand.given, []
         if not given:
             return
         try:
             await self._threads.run(leases.retire, self._database, [_report(g) for g in given])
         except asyncio.CancelledError:
+            # We are stopping; the last call that gives back must still find them.
             self.hand.given = given + self.hand.given
             raise
         except StoreAway:
             # Perhaps it was freed: retiring again then touches no row.
             self.hand.given = given + self.hand.given
         except BrokenPromise:
+            # One broken row must not keep the money of all the others.
             for one in given:
                 await self._give_back_alone(one)
 
@@ -123,6 +129,7 @@ class Leasing:
             leases.Report(s.line_item, s.id, s.bids, passes.pop(s.line_item, 0))
             for s in self.hand.slices.values()
         ]
+        # Passes without a slice in the hand are told under an id that no slice has.
         reports += [leases.Report(name, bytes(16), 0, count) for name, count in passes.items()]
         if not reports:
             return

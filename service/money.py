@@ -106,6 +106,7 @@ def _decimal(amount: object) -> Decimal:
 
 
 def _plain(amount: Decimal) -> Decimal:
+    # It is short to send, but 1e999999 is finite too and stands for a million digits.
     if not amount.is_finite() or abs(amount.adjusted()) > 30:
         raise NotMoney("not a plain decimal")
     if len(amount.as_tuple().digits) > DIGITS_MAX:

@@ -100,11 +100,13 @@ class Operator:
             now = self._database.wall_ms()
             line_items.create(connection, full, now)
             learners.begin(connection, full["id"], FRESH, now)
+            # Bids may leave before the first lesson, and without a law they could not be weighed.
             if (law := lawful(FRESH, full)) is not None:
                 epochs.keep(connection, full["id"], 0, law)
             self._orders.note(connection, actor, "create", full["id"], "", {"after": full})
             self._take_prior(connection, full, actor)
             changes.announce(connection, "line_item", [full["id"]])
+            # A plain dict, because it is kept as JSON and is the answer to a repeat.
             return asdict(_view(line_items.one(connection, full["id"]), taken))
 
         wish = {"call": "create", "config": dict(config), "confirm": confirm}
@@ -154,12 +156,14 @@ class Operator:
             detail = {"before": before.config, "after": after}
             self._orders.note(connection, actor, "patch", line_item, reason or "", detail)
             if guessed_otherwise(before.config, after):
+                # An empty one: what kin once gave must not overrule a guess made since.
                 self._post(connection, line_item, Entry("prior", {}))
             if after.get("kin") != before.config.get("kin"):
                 self._take_prior(connection, after, actor)
             changes.announce(connection, "line_item", [line_item])
             return asdict(_view(line_items.one(connection, line_item), []))
 
+        # No repeat is kept: the version it names makes a second try stale.
         return View(**await self._orders.give(order, None))
 
     async def state(self, line_item: str) -> dict[str, Any]:
@@ -181,6 +185,7 @@ class Operator:
         def order(connection: Writing) -> dict[str, Any]:
             name, source, before = self._frozen(connection, line_item)
             now = self._database.wall_ms()
+            # Under the lock of leases, so that no slice slips in beside the freeze.
             freezes.hold_still(connection, name)
             freezes.put(connection, name, source, wall_ms=now, actor=actor, reason=reason)
             return self._orders.stopped(connection, "freeze", name, before, reason, actor)
@@ -196,6 +201,7 @@ class Operator:
 
         def order(connection: Writing) -> dict[str, Any]:
             name, source, before = self._frozen(connection, line_item)
+            # Not what waits for its spend to be confirmed, and not what is closed for good.
             sources = [source] if line_item is None else ["person", "tripwire", "audit"]
             freezes.lift(connection, name, sources)
             return self._orders.stopped(connection, "thaw", name, before, reason, actor)
@@ -232,6 +238,7 @@ class Operator:
 
     def _take_prior(self, connection: Writing, config: Mapping[str, Any], actor: str) -> None:
         """Let what sibling line items have learnt enter the stream as one lesson."""
+        # Kin that is named twice would count twice.
         kin = sorted(set(config.get("kin") or []))
         if not kin:
             return

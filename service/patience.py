@@ -45,6 +45,7 @@ class Patience:
         try:
             await duty()
         except BrokenPromise:
+            # One that no standing check can see is a fault of ours, and not of one line item.
             if not await self.freeze_broken():
                 raise
 

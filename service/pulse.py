@@ -12,6 +12,7 @@ class Pulse:
     """A beat that is late when the loop is; run() must go beside what it measures."""
 
     def __init__(self) -> None:
+        # Before the first beat nothing can be late.
         self._due = float("inf")
         self._late_s = 0.0
 
@@ -22,6 +23,7 @@ class Pulse:
     async def run(self) -> None:
         """Beat until cancelled."""
         while True:
+            # Set before the sleep: after a stall a request may be seen before the late beat is.
             self._due = time.monotonic() + BEAT_S
             await asyncio.sleep(BEAT_S)
             self._late_s = time.monotonic() - self._due

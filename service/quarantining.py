@@ -53,6 +53,7 @@ class Quarantining:
 
         def order(connection: Writing) -> dict[str, Any]:
             books = Books(connection, [line_item], self._orders.database.wall_ms())
+            # Looked at again under the lock: two people may have pressed the same button.
             found = quarantines.waiting(connection, line_item, number)
             quarantines.mark(connection, number, "retried")
             body = {"entry": found["seq"], "back": True, "actor": actor, "reason": reason}

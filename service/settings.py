@@ -32,6 +32,7 @@ class Settings(BaseSettings):
     Use load() at the command line, which also refuses names that are no setting.
     """
 
+    # Unless inputs are hidden, an error prints the value, and a URL may carry a password.
     model_config = SettingsConfigDict(
         env_prefix=PREFIX, frozen=True, extra="forbid", hide_input_in_errors=True
     )
@@ -195,8 +196,10 @@ class Settings(BaseSettings):
     @classmethod
     def _known_database(cls, url: SecretStr) -> SecretStr:
         text = url.get_secret_value()
+        # Without a named driver SQLAlchemy would look for another one, which we do not install.
         if text.startswith("postgresql://"):
             text = POSTGRESQL + text.removeprefix("postgresql")
+        # In memory every connection would have a database of its own, and money would be forgotten.
         if text.startswith(f"{SQLITE}:///") and text != f"{SQLITE}:///" and ":memory:" not in text:
             return url
         if text.startswith(f"{POSTGRESQL}://"):
@@ -236,6 +239,7 @@ class Settings(BaseSettings):
     def database_shown(self) -> str:
         """Where the data are, for people and logs: without user, password and parameters."""
         parts = urlsplit(self.database_url.get_secret_value())
+        # A password may hold an @ of its own, so the last one counts.
         place = parts.netloc.rpartition("@")[2]
         return f"{parts.scheme}://{place}{parts.path}"
 
@@ -255,9 +259,11 @@ def load(environ: Mapping[str, str] = os.environ) -> Settings:
     """
     texts = {n.removeprefix(PREFIX).lower(): t for n, t in environ.items() if n.startswith(PREFIX)}
     try:
+        # Read from all names with our prefix, since pydantic alone would pass over a misspelt one.
         return Settings.model_validate(texts)
     except ValidationError as error:
         sentences = " ".join(_sentence(e["loc"], e["type"], e["msg"]) for e in error.errors())
+    # Outside the handler, or the error would carry what was sent along into the traceback.
     raise Unsafe(sentences)
 
 

@@ -30,6 +30,7 @@ def lesson(state: bytes, entries: Entries, config: Mapping[str, Any]) -> bytes:
     """
     try:
         return _folded(state, entries, config)
+    # These are ValueErrors too, but the state is at fault: no entry may be set aside for it.
     except (UnreadableMemory, UnreadableTree):
         raise
     except POISON as error:

@@ -110,6 +110,7 @@ class Upkeep:
         before = self._catalog.change_seen
         for item in await self._catalog.follow():
             self._apply(item)
+        # Only after all of it is applied, because a freeze waits for this very number.
         if self._catalog.change_seen != before:
             await self._threads.run(self._database.write, self._beat)
 
@@ -141,6 +142,7 @@ class Upkeep:
         while True:
             await self._patience.unless_away(self.follow)
             try:
+                # Our own orders wake us at once; those of other workers wait for the poll.
                 async with asyncio.timeout(self._rhythm.change_poll_ms / 1000):
                     await self._news.wait()
             except TimeoutError:

@@ -166,6 +166,7 @@ class Winding:
         """The common end of both orders, under the lock of the stream."""
         before = _estimate(connection, line_item)
         shown = _shown(line_item, taken)
+        # Nothing is left to cancel, so a repeat leaves no trace in the stream and halts no bids.
         if not taken.spans:
             return {**shown, "seq": None, "before": before}
         cancels = [[first, last] for first, last, _ in taken.spans]
