@@ -11,7 +11,7 @@ import pytest
 from sqlalchemy import event, text
 
 from service.errors import StoreAway
-from service.leasing import DENIED_S, MARGIN_SHARE, Leasing
+from service.leasing import DENIED_S, MARGIN_SHARE, STEP_S, Leasing
 from service.store.database import Database, Writing
 from service.threads import Threads
 from tests.builders import CAP, LEASE_S, NAME, PRICE, UNIT, Worker, begin, outage, working
@@ -76,7 +76,7 @@ async def test_the_next_slice_is_asked_for_at_half(migrated_url: str) -> None:
         worker.leasing.refresh(first)
         await settled(worker)
         assert worker.leasing.hand.slices[NAME] is first
-        worker.clock.now += LEASE_S * (1 - 1 / MARGIN_SHARE) / 2
+        worker.clock.now += (LEASE_S * (1 - 1 / MARGIN_SHARE) - STEP_S) / 2
         worker.leasing.refresh(first)
         await settled(worker)
         second = worker.leasing.hand.slices[NAME]
@@ -100,7 +100,7 @@ async def test_a_slice_ends_here_before_it_ends_there(migrated_url: str) -> None
         await lease(worker)
         slice_ = worker.leasing.hand.slices[NAME]
         assert slice_.leased_at == worker.clock.now
-        assert slice_.expires_at - slice_.leased_at == pytest.approx(LEASE_S * 0.95)
+        assert slice_.expires_at - slice_.leased_at == pytest.approx(LEASE_S * 0.95 - STEP_S)
         worker.clock.now = slice_.expires_at
         assert worker.leasing.hand.usable(NAME, worker.clock.now) is None
 
