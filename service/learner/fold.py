@@ -7,33 +7,19 @@ does not matter, so a rebuild from zero gives the same bytes as learning piece b
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 from service.learner import exptree_lessons
 from service.learner.cells import Cells, Sums
 from service.learner.growing import earlier_lesson, grow, tree_lesson, value_lesson
+from service.learner.lesson import Lesson as Lesson
 from service.learner.memory import Memory, Prior
+from service.learner.parts import PARTS
 from service.learner.rules import ACCRUES, ONCE, Rules
 from service.learner.tally import NAMES, Tally
 
 Body = Mapping[str, Any]
-
-
-@dataclass(frozen=True, slots=True)
-class Lesson:
-    """
-    One entry of the stream as a learner reads it.
-
-    Args:
-        kind: What happened.
-        body: Its content; money in nanos.
-        at_ms: Service time of the entry, never before that of the entry before it.
-    """
-
-    kind: str
-    body: Body
-    at_ms: int = 0
 
 
 def fold(memory: Memory, lessons: Iterable[Lesson], rules: Rules) -> Memory:
@@ -47,10 +33,18 @@ def fold(memory: Memory, lessons: Iterable[Lesson], rules: Rules) -> Memory:
         lessons: In the order of the stream.
         rules: How they are read.
     """
+    read = list(lessons)
     growing = _Growing(memory, rules)
-    for lesson in lessons:
+    for lesson in read:
         growing.take(lesson)
-    return growing.grown()
+    return _with_parts(growing.grown(), read, rules)
+
+
+def _with_parts(memory: Memory, lessons: list[Lesson], rules: Rules) -> Memory:
+    """Let each part that the configuration wants read the same lessons; others are dropped."""
+    wanted = [name for name, part in PARTS.items() if part.wanted(rules)]
+    parts = ((name, PARTS[name].learn(memory.part(name), lessons, rules)) for name in wanted)
+    return replace(memory, parts=tuple((name, state) for name, state in parts if state))
 
 
 class _Growing:

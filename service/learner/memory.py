@@ -79,6 +79,7 @@ class Memory:
         prior: The guess a lesson brought, if any.
         watch: What the change detector has counted.
         tree: Bytes of the tree of exponential weights, where a method grows one.
+        parts: Name and bytes of every part that the configuration wants, by name.
     """
 
     base: Tally = NOTHING
@@ -94,11 +95,16 @@ class Memory:
     prior: Prior | None = None
     watch: Watch = FIRST
     tree: bytes = b""
+    parts: tuple[tuple[str, bytes], ...] = ()
 
     @staticmethod
     def fresh() -> Memory:
         """The memory before the first lesson."""
         return Memory()
+
+    def part(self, name: str) -> bytes:
+        """The state of a part; no bytes where it has none."""
+        return dict(self.parts).get(name, b"")
 
     @property
     def total(self) -> Tally:
@@ -120,7 +126,8 @@ class Memory:
             "cells": [[getattr(cell, name) for name in Cell.__slots__] for cell in self.cells],
             "prior": [self.prior.per_impression, self.prior.typical] if self.prior else [],
             "watch": list(self.watch),
-            "tree": b64encode(self.tree).decode("ascii"),
+            "tree": _packed(self.tree),
+            "parts": {name: _packed(state) for name, state in self.parts},
             **{name: getattr(self, name) for name in _NUMBERS},
         }
         return json.dumps(content, sort_keys=True, separators=(",", ":")).encode()
@@ -150,12 +157,12 @@ _NUMBERS = (
     *("closed", "clock_ms", "heard_ms", "ripe_ms", "ripe_again_ms", "began_ms"),
     *("delays", "delay_sum_ms"),
 )
-_PARTS = ("base", "cells", "prior", "watch", "tree")
+_PARTS = ("base", "cells", "prior", "watch", "tree", "parts")
 
 
 def _read(content: dict[str, object]) -> Memory:
-    base, cells, prior, watch, tree = (content[name] for name in _PARTS)
-    if not isinstance(tree, str) or not isinstance(cells, list):
+    base, cells, prior, watch, tree, parts = (content[name] for name in _PARTS)
+    if not isinstance(parts, dict) or not isinstance(cells, list):
         raise UnreadableMemory("not a memory")
     numbers = dict(zip(_NUMBERS, _whole([content[name] for name in _NUMBERS], 8), strict=True))
     read = tuple(Cell(*_whole(cell, len(Cell.__slots__))) for cell in cells)
@@ -167,9 +174,20 @@ def _read(content: dict[str, object]) -> Memory:
         cells=read,
         prior=Prior(*_whole(prior, 2)) if prior else None,
         watch=Watch(*_whole(watch, len(FIRST))),
-        tree=b64decode(tree, validate=True),
+        tree=_unpacked(tree),
+        parts=tuple((str(name), _unpacked(parts[name])) for name in sorted(parts)),
         **numbers,
     )
+
+
+def _packed(state: bytes) -> str:
+    return b64encode(state).decode("ascii")
+
+
+def _unpacked(text: object) -> bytes:
+    if not isinstance(text, str):
+        raise UnreadableMemory("a state that is no text")
+    return b64decode(text, validate=True)
 
 
 def _whole(numbers: object, count: int) -> list[int]:

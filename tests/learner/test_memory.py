@@ -29,6 +29,9 @@ memories = some.builds(
     prior=some.none() | some.builds(Prior, whole, whole),
     watch=some.builds(FIRST._replace, trials=whole, up=whole, alarms=whole),
     tree=some.binary(max_size=40),
+    parts=some.dictionaries(some.text(max_size=5), some.binary(max_size=9), max_size=3).map(
+        lambda found: tuple(sorted(found.items()))
+    ),
 )
 FRESH = Memory.fresh().to_bytes()
 
@@ -64,6 +67,8 @@ def test_a_memory_survives_its_bytes(memory: Memory) -> None:
         FRESH.replace(b'"tree":""', b'"tree":"*"'),
         FRESH.replace(b'"tree":""', b'"tree":0'),
         FRESH.replace(b'"prior":[]', b'"prior":[1]'),
+        FRESH.replace(b'"parts":{}', b'"parts":[]'),
+        FRESH.replace(b'"parts":{}', b'"parts":{"pace":7}'),
     ],
 )
 def test_foreign_bytes_are_refused(state: bytes) -> None:

@@ -1,0 +1,31 @@
+"""Parts of a memory that only some configurations want, each a state of its own in bytes.
+
+A part reads the same lessons as the sums do, in the same fold, and knows nothing of them or of
+other parts. So a line item without a budget to pace or features to learn from carries neither.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+from service.learner.lesson import Lesson
+from service.learner.rules import Rules
+
+
+@dataclass(frozen=True, slots=True)
+class Part:
+    """
+    One part.
+
+    Args:
+        wanted: Whether a configuration has it; where not, its state is dropped.
+        learn: State (no bytes before the first lesson), lessons and rules in, state out. Pure;
+            resets come among the lessons.
+    """
+
+    wanted: Callable[[Rules], bool]
+    learn: Callable[[bytes, Sequence[Lesson], Rules], bytes]
+
+
+PARTS: dict[str, Part] = {}
