@@ -16,9 +16,11 @@ import numpy
 
 from service.backlog import Backlog
 from service.catalog import Catalog, Item
+from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
 from service.decision.price import Passed
-from service.errors import Refusal, StoreAway
+from service.decision.rule import FIXED, SECOND, Sale, sale_of
+from service.errors import Malformed, Refusal, StoreAway
 from service.guard.gate import Cleared, clear, shut
 from service.guard.hand import SliceInHand
 from service.guard.ticket import Ticket, TicketKeys
@@ -82,6 +84,7 @@ class Bidder:
 
         Raises:
             NotFound: No such line item.
+            Malformed: A fixed-price sale without its price, or one the method cannot bid in.
             StoreAway: An unknown line item could not be looked up.
         """
         until = arrived + self._allowed_s(opportunity)
@@ -92,6 +95,7 @@ class Bidder:
         if item is None:
             reason = "overloaded" if time.monotonic() < until else "past_deadline"
             return self._logged(_pass(opportunity, reason), opportunity)
+        _check_sale(item, opportunity)
         if not opportunity.test and not late and shut(item.limits, _wall_ms()) is None:
             await self._have_money(item, until)
         # A freeze may have come while we waited.
@@ -157,13 +161,14 @@ class Bidder:
         if isinstance(proposed, Passed):
             return _pass(opportunity, proposed.reason)
         free = item.limits.cap if opportunity.test else held.free if held else 0
-        cleared = clear(proposed.price, proposed.set_by, item.limits, opportunity.floor, free)
+        sale = sale_of(opportunity, item.terms.auction)
+        cleared = clear(proposed.price, proposed.set_by, item.limits, sale.floor, free)
         if isinstance(cleared, str):
             if cleared == "under_floor" and not opportunity.test:
                 passes = self._leasing.hand.under_floor
                 passes[item.id] = passes.get(item.id, 0) + 1
             return _pass(opportunity, cleared)
-        return self._commit(item, opportunity, cleared, held)
+        return self._commit(item, opportunity, sale, cleared, held)
 
     def _crowded_out(self, opportunity: Opportunity, held: SliceInHand | None) -> bool:
         """Whether this one needs a slice and too many wait for theirs already."""
@@ -179,7 +184,12 @@ class Bidder:
         return reason if reason in ("frozen", "budget_spent", "day_spent") else None
 
     def _commit(
-        self, item: Item, opportunity: Opportunity, cleared: Cleared, held: SliceInHand | None
+        self,
+        item: Item,
+        opportunity: Opportunity,
+        sale: Sale,
+        cleared: Cleared,
+        held: SliceInHand | None,
     ) -> Answer:
         """From here the price leaves: it is taken out of the slice, signed and answered."""
         # A test ticket must look like any other, but no slice and no money stand behind it.
@@ -197,7 +207,8 @@ class Bidder:
             day,
             self._incarnation,
             opportunity.test,
-            opportunity.floor,
+            sale.floor,
+            sale.auction,
         )
         return Answer(
             opportunity.request_id,
@@ -233,6 +244,19 @@ class Bidder:
             }
         )
         return answer
+
+
+def _check_sale(item: Item, opportunity: Opportunity) -> None:
+    """Only with the line item at hand is it known which auction one that names none stands for."""
+    sale = sale_of(opportunity, item.terms.auction)
+    if sale.auction == FIXED and opportunity.price is None:
+        raise Malformed("bad_field", "A fixed-price sale needs its price.", {"field": "price_cpm"})
+    if sale.auction != SECOND and METHODS[item.terms.method].by_law:
+        raise Malformed(
+            "auction_not_for_method",
+            "The line item's method draws its bids for a second price; it bids in no other.",
+            {"field": "auction"},
+        )
 
 
 def _pass(opportunity: Opportunity, reason: str) -> Answer:

@@ -212,7 +212,7 @@ class Feedback:
             return Receipt(report.ref, "refused", "bad_ticket")
         if report.ref is not None and report.ref != ticket.ref:
             return Receipt(report.ref, "refused", "ref_of_another_bid")
-        if report.kind in PAYING and report.clearing is None:
+        if report.kind in PAYING and _price(report, ticket) is None:
             return Receipt(ticket.ref, "refused", "no_price")
         # Nothing was held for it, so there is nothing to book and nothing to learn.
         if ticket.test:
@@ -228,10 +228,11 @@ class Feedback:
             ticket.counter,
             ticket.price,
             ticket.source,
-            report.clearing if report.kind in PAYING else None,
+            _price(report, ticket) if report.kind in PAYING else None,
             report.to_win,
             report.why,
             report.at,
+            ticket.auction,
         )
         # A slice of a database before its restore may be gone or be another's: the late way.
         here = ticket.incarnation == self._incarnation
@@ -255,6 +256,13 @@ class Feedback:
         # The win may stand in the same call; if it does not, the value waits for it.
         found |= {row.event.bid: row.line_item for row in bookings if row.line_item}
         return [_placed(row, found, report.ref) for row, report in zip(read, reports, strict=True)]
+
+
+def _price(report: Report, ticket: Ticket) -> int | None:
+    """What was paid; who pays what he bids need not be told."""
+    if report.clearing is None and report.kind == "won" and ticket.auction != "second":
+        return ticket.price
+    return report.clearing
 
 
 def _read_ref(report: Report) -> Booking | Receipt:

@@ -28,7 +28,7 @@ from service.errors import Malformed, StoreAway
 from service.ledger.entries import Entry
 from service.ordering import Orders, repeat_of
 from service.quarantining import Quarantining
-from service.showing import show
+from service.showing import show, show_curve
 from service.store import changes, epochs, freezes, learners, line_items, reading
 from service.store.books import Books
 from service.store.database import Database, Writing
@@ -176,6 +176,19 @@ class Operator:
         return show(
             await self._orders.read(lambda connection: reading.facts(connection, line_item))
         )
+
+    async def curve(self, line_item: str) -> dict[str, Any]:
+        """
+        What is known of competing bids, per source and price.
+
+        Raises:
+            NotFound: There is none.
+        """
+        # Drawn in the thread too: where news of several kinds are mixed it takes a while.
+        shown: dict[str, Any] = await self._orders.read(
+            lambda connection: show_curve(reading.facts(connection, line_item))
+        )
+        return shown
 
     async def freeze(
         self, line_item: str | None, reason: str, actor: str, idempotency: str | None = None

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from service.catalog import limits_of
+from service.decision.curves import curves
 from service.decision.describing import describe
 from service.decision.learnability import learnability
 from service.decision.price import ready
@@ -35,6 +36,13 @@ def show(facts: Facts) -> dict[str, Any]:
         "passes_of_last_1000": facts.passes,
         "freezes": facts.row.freezes,
     }
+
+
+def show_curve(facts: Facts) -> dict[str, Any]:
+    """What is known of competing bids; money in nanos under names that end in `_nanos`."""
+    memory = Memory.from_bytes(facts.snapshot.state)
+    found = curves(ready(memory, Terms.from_config(facts.row.config)))
+    return {"line_item": facts.row.id, "snapshot": facts.snapshot.seq, **found}
 
 
 def _status(sources: set[str]) -> str:

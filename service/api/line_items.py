@@ -87,5 +87,21 @@ async def get_state(request: Request) -> Response:
     return answers.json_answer(answers.plain(state))
 
 
+@router.get(
+    PATH + "/{line_item_id}/curve",
+    **described(
+        "Read what is known of competing bids: per source and price the chance to win, the "
+        "expected cost and the expected surplus, each with its limits; null where the data say "
+        "nothing.",
+        "read",
+    ),
+)
+async def get_curve(request: Request) -> Response:
+    """The curves of up to 16 sources, and of all further ones together."""
+    await require(request, "read")
+    curve = await stories(request).operator.curve(line_item_id(request))
+    return answers.json_answer(answers.plain(curve))
+
+
 def _with_etag(view: View) -> Response:
     return answers.json_answer(answers.line_item(view), 200, {"ETag": etag(view.version)})

@@ -58,7 +58,7 @@ LOOKS = {
 def describe(ready: Ready) -> dict[str, object]:
     """What is known and what is bid; money as ints in nanos under names in `_nanos`."""
     method, total = METHODS[ready.terms.method], ready.memory.total
-    bid = ready.answer if isinstance(ready.answer, Proposal) else None
+    bid = ready.usual if isinstance(ready.usual, Proposal) else None
     return {
         "method": method.name,
         "settings": dict(ready.terms.settings),
@@ -232,6 +232,8 @@ def _guarantee(ready: Ready, total: Tally) -> str:
         ("forgetting the old", ready.terms.drift is not None),
         ("beginning afresh after an alarm", ready.terms.on_change == "restart"),
         ("a learning allowance that holds bids now", ready.most is not None),
+        ("bids shaded for a first price", ready.terms.auction == "first"),
+        ("a price that is taken or left", ready.terms.auction == "fixed"),
     )
     if not strains:
         return said

@@ -22,6 +22,8 @@ class Opportunity:
         value_hint: The caller's own prediction of its value in nanos; not used yet.
         deadline_ms: How long the caller waits, counted from arrival.
         test: Answered and signed, but without a hold or a lesson.
+        auction: Kind of auction; None for the line item's.
+        price: What a fixed-price sale asks, in nanos per impression.
     """
 
     line_item: str
@@ -32,3 +34,5 @@ class Opportunity:
     value_hint: int | None = None
     deadline_ms: int | None = None
     test: bool = False
+    auction: str | None = None
+    price: int | None = None

@@ -15,9 +15,10 @@ from numpy.random import Generator
 
 from service.decision import brakes
 from service.decision.counts import Counts
+from service.decision.market import UNTOLD, Market, market_of
 from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
-from service.decision.rule import RULES
+from service.decision.rule import FIRST, OF_SALE, Sale, sale_of
 from service.decision.terms import Terms
 from service.learner import exptree_rules
 from service.learner.bounds import Numbers
@@ -38,10 +39,16 @@ Offer = Callable[[], Numbers]
 
 @dataclass(frozen=True, slots=True)
 class Proposal:
-    """A price in nanos per impression, rounded down, and what set it: value, cap, allowance."""
+    """
+    A price in nanos per impression, rounded down, and what set it: value, cap, allowance.
+
+    Args:
+        value: What the price was made from, where the cap cut it.
+    """
 
     price: int
     set_by: str
+    value: int | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,6 +71,7 @@ class Ready:
         answer: What every opportunity is told; for a method that draws, at the median.
         draws: Whether a price is drawn afresh for every opportunity.
         law: What prices are drawn from, for methods that bid by a law.
+        market: What may be offered where one pays what one bids.
     """
 
     memory: Memory
@@ -73,6 +81,7 @@ class Ready:
     answer: Proposal | Passed
     draws: bool
     law: Law | None = None
+    market: Market = UNTOLD
 
     def propose(self, opportunity: Opportunity, generator: Generator) -> Proposal | Passed:
         """
@@ -82,6 +91,29 @@ class Ready:
             opportunity: What is for sale; its floor is the guard's business.
             generator: The only source of chance, for methods that draw.
         """
+        return self._sold(self._valued(generator), sale_of(opportunity, self.terms.auction))
+
+    @property
+    def usual(self) -> Proposal | Passed:
+        """What an opportunity without floor, of the default source, is told; at the median."""
+        return self._sold(self.answer, Sale(self.terms.auction, "default", 0))
+
+    def at(self, order: float) -> Proposal | Passed:
+        """The price that a share `order` of the answers stays under; the price if all are alike."""
+        return self._sold(self._valued_at(order), Sale(self.terms.auction, "default", 0))
+
+    def _sold(self, valued: Proposal | Passed, sale: Sale) -> Proposal | Passed:
+        """From the value to the bid; a price that nobody thinks is the value is not shaded."""
+        if isinstance(valued, Passed) or self.law is not None:
+            return valued
+        if sale.auction == FIRST and not METHODS[self.terms.method].learns:
+            return valued
+        value = valued.price if valued.value is None else valued.value
+        price = min(OF_SALE[sale.auction](value, sale, self.terms.cap, self.market), self.terms.cap)
+        cut = valued.set_by != BY_CAP or price == self.terms.cap
+        return Proposal(price, valued.set_by if cut else BY_VALUE)
+
+    def _valued(self, generator: Generator) -> Proposal | Passed:
         if self.law is not None:
             return Proposal(self.law.draw(generator), BY_VALUE)
         draw, counts, terms = METHODS[self.terms.method].draw, self.counts, self.terms
@@ -89,8 +121,7 @@ class Ready:
             return self.answer
         return self._priced(lambda: draw(counts, terms, generator))
 
-    def at(self, order: float) -> Proposal | Passed:
-        """The price that a share `order` of the answers stays under; the price if all are alike."""
+    def _valued_at(self, order: float) -> Proposal | Passed:
         if self.law is not None:
             return Proposal(self.law.quantile(order), BY_VALUE)
         quantile, counts, terms = METHODS[self.terms.method].quantile, self.counts, self.terms
@@ -115,8 +146,9 @@ def ready(memory: Memory, terms: Terms) -> Ready:
     if method.learns and brakes.no_value(total, guided):
         return Ready(memory, guided, counts, most, Passed(NO_VALUE), draws=False)
     bid = _bid(lambda: method.index(counts, guided), guided)
-    draws = method.draw is not None
-    return Ready(memory, guided, counts, most, _proposal(bid, most, guided), draws)
+    answer = _proposal(bid, most, guided)
+    market = market_of(memory, guided, answer.price if isinstance(answer, Proposal) else 0.0)
+    return Ready(memory, guided, counts, most, answer, method.draw is not None, market=market)
 
 
 def _by_law(memory: Memory, terms: Terms, tree: exptree_rules.Rules, counts: Counts) -> Ready:
@@ -136,7 +168,7 @@ def _proposal(bid: float | None, most: float | None, terms: Terms) -> Proposal |
     if most is not None and bid > most:
         bid, set_by = most, BY_ALLOWANCE
     if bid >= terms.cap:
-        return Proposal(terms.cap, BY_CAP if bid > terms.cap else set_by)
+        return Proposal(terms.cap, BY_CAP if bid > terms.cap else set_by, math.floor(bid))
     return Proposal(math.floor(bid), set_by)
 
 
@@ -153,5 +185,5 @@ def _counts(memory: Memory, terms: Terms) -> Counts | None:
 def _bid(offer: Offer, terms: Terms) -> float | None:
     # Nor must a formula outside its range.
     with np.errstate(all="ignore"):
-        bid = float(RULES[terms.auction](offer()))
+        bid = float(offer())
     return bid if math.isfinite(bid) and bid >= 0.0 else None

@@ -49,6 +49,8 @@ def _feedback_fault(config: Mapping[str, Any], method: Method) -> str | None:
             f"{method.name} learns from the competing bid of every loss. Where the exchange "
             'tells it as to_win_cpm, say losses: "priced"; else take exptree-win-only.'
         )
+    if method.by_law and config["auction"] != "second":
+        return f"{method.name} draws its bids for a second price; it is offered for no other."
     if method.by_law and config["bid_cap"] < LAW_CAP_MIN:
         return f"{method.name} needs a bid cap of at least 0.000002 CPM, or it has no choice."
     if method.by_law and config["value"]["ceiling"] > RARE_FROM * config["bid_cap"]:

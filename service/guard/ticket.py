@@ -18,6 +18,7 @@ FORM = 1
 MAC_BYTES = 16
 KEY_ID_BYTES = 4
 TEST = 1
+AUCTIONS = {"second": 0, "first": 2, "fixed": 4}  # Beside TEST among the flags.
 
 # form, key id, incarnation, slice, counter, price, floor, snapshot, day, flags
 # Fixed widths and lengths before texts: a ticket is parsed without guessing, or not at all.
@@ -40,6 +41,7 @@ class Ticket:
         floor: Least price the seller took, in nanos per impression.
         snapshot: The learner's seq the price was made from (the epoch).
         day: Proleptic ordinal of the local day the slice belongs to.
+        auction: Kind of auction the bid was made for, which says what its outcome tells.
     """
 
     line_item: str
@@ -52,6 +54,7 @@ class Ticket:
     incarnation: bytes
     test: bool = False
     floor: int = 0
+    auction: str = "second"
 
     @property
     def bid(self) -> bytes:
@@ -101,7 +104,7 @@ class TicketKeys:
             ticket.floor,
             ticket.snapshot,
             ticket.day,
-            TEST if ticket.test else 0,
+            AUCTIONS[ticket.auction] | (TEST if ticket.test else 0),
         )
         body = head + _packed(ticket.line_item) + _packed(ticket.source)
         return _text(body + _mac(self._keys[self._signing], body))
@@ -129,7 +132,10 @@ def _unpacked(body: bytes) -> Ticket:
     _, _, incarnation, slice_id, counter, price, floor, snapshot, day, flags = fields
     line_item, source = _texts(body[_HEAD.size :])
     place = (line_item, source, slice_id, counter, price, snapshot, day, incarnation)
-    return Ticket(*place, test=bool(flags & TEST), floor=floor)
+    auctions = [name for name, flag in AUCTIONS.items() if flag == flags & ~TEST]
+    if not auctions:
+        raise BadTicket("an unknown kind of auction")
+    return Ticket(*place, bool(flags & TEST), floor, auctions[0])
 
 
 def _texts(packed: bytes) -> tuple[str, str]:

@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
+from service.learner import market_part
 from service.learner.lesson import Lesson
 from service.learner.rules import Rules
 
@@ -28,4 +29,6 @@ class Part:
     learn: Callable[[bytes, Sequence[Lesson], Rules], bytes]
 
 
-PARTS: dict[str, Part] = {}
+PARTS: dict[str, Part] = {
+    market_part.NAME: Part(market_part.wanted, market_part.learn),
+}

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from itertools import count
 from typing import Any
 
 from service.learner import exptree_rules
@@ -52,6 +53,26 @@ class Drift:
 
 
 @dataclass(frozen=True, slots=True)
+class MarketRules:
+    """
+    How news of competing bids is counted.
+
+    Args:
+        top: Largest price counted, in nanos; no cap lies above it.
+        priced: Whether the source tells the competing bid of every loss.
+    """
+
+    top: int
+    priced: bool
+
+    @staticmethod
+    def of(cap: int, *, priced: bool) -> MarketRules:
+        """The top is the next of 1, 2, 5 times a power of ten: most new caps recount nothing."""
+        tops = (step * 10**power for power in count(3) for step in (1, 2, 5))
+        return MarketRules(next(top for top in tops if top >= cap), priced)
+
+
+@dataclass(frozen=True, slots=True)
 class Rules:
     """
     What the fold needs of a configuration; money in nanos, durations in milliseconds.
@@ -82,6 +103,7 @@ class Rules:
     alarm: float = ALARM
     restarts: bool = False
     tree: exptree_rules.Rules | None = None
+    market: MarketRules | None = None
 
     @property
     def cell_ms(self) -> int:
@@ -108,6 +130,7 @@ class Rules:
             looked_for.get("threshold", ALARM),
             looked_for.get("action") == "restart",
             tree_rules(config),
+            MarketRules.of(config["bid_cap"], priced=config.get("losses", "bare") == "priced"),
         )
 
 

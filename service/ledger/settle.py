@@ -29,6 +29,7 @@ class Outcome:
     to_win: int | None = None
     why: str | None = None
     at: str | None = None
+    auction: str = "second"
 
 
 @dataclass(frozen=True, slots=True)
@@ -207,6 +208,7 @@ def _said(outcome: Outcome) -> dict[str, object]:
         "bid": outcome.hold,
         "counter": outcome.counter,
         "source": outcome.source,
+        "auction": outcome.auction,
         "why": outcome.why,
         "at": outcome.at,
     }

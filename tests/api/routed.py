@@ -111,6 +111,10 @@ class Orders:
         """A little state."""
         return {"line_item": line_item, "spent_nanos": 10**9}
 
+    async def curve(self, line_item: str) -> dict[str, Any]:
+        """A curve of no source."""
+        return {"line_item": line_item, "sources": []}
+
     async def freeze(self, *told: object, idempotency: str | None = None) -> dict[str, Any]:
         """Frozen by a moment."""
         self.calls.append(("freeze", *told, idempotency))

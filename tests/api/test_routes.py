@@ -51,6 +51,7 @@ SCOPES = [
     ("GET", "/v1/line-items/a", "read"),
     ("PATCH", "/v1/line-items/a", "operate"),
     ("GET", "/v1/line-items/a/state", "read"),
+    ("GET", "/v1/line-items/a/curve", "read"),
     *(("POST", f"/v1/line-items/a/{order}", "operate") for order in ("freeze", "thaw", "reset")),
     ("POST", "/v1/freeze", "operate"),
     ("POST", "/v1/thaw", "operate"),

@@ -35,6 +35,7 @@ tickets = some.builds(
     day=some.integers(0, 2**32 - 1),
     incarnation=some.binary(min_size=8, max_size=8),
     test=some.booleans(),
+    auction=some.sampled_from(["first", "second", "fixed"]),
 )
 
 HOSTILE = [

@@ -65,7 +65,7 @@ def test_the_entry_keeps_what_was_said() -> None:
     assert verdict.entry.body == {
         "said": "lost", "price": None, "to_win": 12, "bid": 10, "counter": 3, "owed": 0,
         "source": "exchange-a", "why": "outbid", "at": "2026-12-01T10:00:00Z",
-        "round": 1, "late": False,
+        "auction": "second", "round": 1, "late": False,
     }  # fmt: skip
 
 

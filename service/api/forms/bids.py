@@ -5,10 +5,10 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Annotated, Literal
 
-from pydantic import AfterValidator, Field
+from pydantic import Field
 
 from service.api.forms import refused
-from service.api.forms.fields import Features, FloorCpm, LineItemId, Printable, SeenValue
+from service.api.forms.fields import CapCpm, Features, FloorCpm, LineItemId, Printable, SeenValue
 from service.api.forms.reading import OpenForm, at_most, bad_field, read, unknown_fields
 from service.decision.opportunity import Opportunity
 from service.errors import Refusal
@@ -20,13 +20,11 @@ class BidForm(OpenForm):
     """One impression opportunity that asks for a price."""
 
     line_items: refused.LineItems = None
-    price_cpm: refused.FixedPrice = None
+    price_cpm: CapCpm | None = None
     line_item: LineItemId
     request_id: Printable | None = None
     source: Printable = "default"
-    auction: (
-        Annotated[Literal["first", "second", "fixed"], AfterValidator(refused.second_price)] | None
-    ) = None
+    auction: Literal["first", "second", "fixed"] | None = None
     floor_cpm: FloorCpm | None = None
     features: Features | None = None
     value_hint: SeenValue | None = None
@@ -92,6 +90,8 @@ def _opportunity(form: BidForm, deadline_ms: int | None) -> Opportunity:
         value_hint=form.value_hint,
         deadline_ms=deadline_ms,
         test=form.test,
+        auction=form.auction,
+        price=form.price_cpm,
     )
 
 
@@ -99,6 +99,8 @@ def _unused(form: BidForm, members: Mapping[str, object]) -> set[str]:
     names = unknown_fields(BidForm, members)
     if form.value_hint is not None:
         names.add("value_hint")
+    if form.price_cpm is not None and form.auction in ("first", "second"):
+        names.add("price_cpm")
     if form.floor_cpm is not None and form.floor_cpm < 0:
         names.add("floor_cpm")
     return names

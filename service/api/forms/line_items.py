@@ -79,9 +79,7 @@ class CreateForm(NotYetForm):
     budget: Amount
     bid_cap_cpm: CapCpm
     daily_budget: Amount | None = None
-    auction: Annotated[
-        Literal["first", "second", "fixed"], AfterValidator(refused.second_price)
-    ] = "second"
+    auction: Literal["first", "second", "fixed"] = "second"
     flight: FlightForm = FlightForm()
     spend_on: Literal["won", "billed"] = "won"
     grace_s: Grace = 900

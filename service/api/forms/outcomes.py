@@ -14,11 +14,11 @@ from service.feedback import Receipt, Report
 
 
 class WonForm(OpenForm):
-    """The bid won at this clearing price."""
+    """The bid won at this clearing price; left out, it is the bid, but in second price."""
 
     kind: Literal["won"]
     ticket: Ticket
-    clearing_cpm: SeenCpm
+    clearing_cpm: SeenCpm | None = None
     to_win_cpm: SeenCpm | None = None
     at: Instant | None = None
 

@@ -15,13 +15,6 @@ def not_offered(field: str, wish: str | None = None) -> NotOffered:
     return NotOffered("not_offered", sentence, {"field": field})
 
 
-def second_price(auction: str) -> str:
-    """Refuse the auctions of the contract that this release cannot price."""
-    if auction != "second":
-        raise not_offered("auction", "auctions other than second")
-    return auction
-
-
 def no_pacing(method: str) -> str:
     """Refuse the pacing of the contract that this release does not do."""
     if method != "none":
@@ -53,7 +46,6 @@ ReturnTarget = Annotated[None, _absent("return_target"), _NULL]
 Control = Annotated[None, _absent("control"), _NULL]
 Fees = Annotated[None, _absent("fees"), _NULL]
 LineItems = Annotated[None, _absent("line_items"), _NULL]
-FixedPrice = Annotated[None, _absent("price_cpm"), _NULL]
 Profile = Annotated[None, _absent("pacing.profile"), _NULL]
 
 FixedId = Annotated[None, _fixed("id"), _NEVER]

@@ -49,9 +49,7 @@ def test_what_is_not_used_as_sent_is_named() -> None:
     assert unused == {"value_hint", "floor_cpm", "shiny", "(no plain word)"}
 
 
-@pytest.mark.parametrize(
-    "wish", [{"line_items": ["a", "b"]}, {"auction": "first"}, {"price_cpm": "1"}]
-)
+@pytest.mark.parametrize("wish", [{"line_items": ["a", "b"]}])
 def test_kinds_of_bid_that_this_release_lacks_are_refused(wish: dict[str, Any]) -> None:
     """The refusal comes even where another field is missing because of the wish."""
     with pytest.raises(NotOffered):
@@ -65,7 +63,7 @@ def test_a_bad_row_stays_in_its_place_of_a_batch() -> None:
             "opportunities": [
                 {"line_item": "a", "deadline_ms": 5},
                 7,
-                {"line_item": "a", "auction": "first"},
+                {"line_item": "a", "line_items": ["b"]},
                 {"line_item": True},
                 {"line_item": "b", "shiny": 1},
             ],

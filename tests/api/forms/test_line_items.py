@@ -131,8 +131,6 @@ def test_a_bad_field_is_named_by_its_path(change: dict[str, Any], field: str) ->
 @pytest.mark.parametrize(
     "wish",
     [
-        {"auction": "first"},
-        {"auction": "fixed"},
         {"pacing": {"method": "dual"}},
         {"pacing": {"profile": [1, 2]}},
         {"return_target": "2.0"},

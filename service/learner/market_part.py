@@ -1,0 +1,122 @@
+"""The part of a memory that reads outcomes as news of competing bids, apart from its bytes.
+
+In a second-price auction a win tells the highest competing bid; in a first-price auction only
+what the source tells in `to_win` does. The two kinds are counted apart, since rivals bid
+otherwise in each, and a price taken or left tells nothing of rivals. Passes under the floor
+are not counted: their entries name neither source nor bid.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+from service.learner.curve_counts import Feed, Outcome, told
+from service.learner.lesson import Lesson
+from service.learner.market_state import AUCTIONS, MarketState, UnreadableMarket, read
+from service.learner.partition import Ticks
+from service.learner.rules import CELLS, SPANS_KEPT, Drift, Rules
+
+NAME = "market"
+# round(2^32 exp(-SPANS_KEPT / CELLS)), what is left of a count after one piece; a constant, so
+# that every machine forgets alike.
+KEPT_PER_PIECE = 3_451_103_176
+PIECES_MAX = 256
+
+Body = Mapping[str, Any]
+
+
+def wanted(rules: Rules) -> bool:
+    """Whether a configuration has ticks to count on."""
+    return rules.market is not None
+
+
+def learn(state: bytes, lessons: Sequence[Lesson], rules: Rules) -> bytes:
+    """
+    Count what lessons tell; pure, integers only.
+
+    Raises:
+        UnreadableMarket: The state is damaged, or of ticks that the rules do not name.
+    """
+    if rules.market is None:
+        return b""
+    market = read(state) if state else MarketState(rules.market.top)
+    if market.top != rules.market.top:
+        raise UnreadableMarket("counted on other ticks")
+    for lesson in lessons:
+        if lesson.at_ms > market.clock_ms:
+            market.clock_ms = lesson.at_ms
+            _forget(market, rules.drift)
+        market = _taught(market, lesson, priced=rules.market.priced)
+    return market.to_bytes() if market.sources or market.rounds else b""
+
+
+def _taught(market: MarketState, lesson: Lesson, *, priced: bool) -> MarketState:
+    body = lesson.body
+    if lesson.kind == "reset":
+        return MarketState(market.top, clock_ms=market.clock_ms)
+    if lesson.kind in ("tick", "retire"):
+        market.rounds += body["rounds"] + body["under_floor"]
+    elif lesson.kind in ("won", "lost", "void") and body.get("only") != "value":
+        market.rounds += body["round"]
+        auction = body.get("auction", "second")
+        outcome = None
+        # Nothing can be read off an outcome whose bid is not said.
+        if lesson.kind != "void" and auction in AUCTIONS and "bid" in body:
+            outcome = said(lesson.kind == "won", auction, body, market.ticks, priced=priced)
+        if outcome is not None:
+            key = market.key_of(auction, body["source"])
+            market.count(key, *told(outcome, market.ticks))
+    return market
+
+
+def said(won: bool, auction: str, body: Body, ticks: Ticks, *, priced: bool) -> Outcome | None:
+    """
+    What an entry says of the highest competing bid; None where it says nothing.
+
+    Args:
+        won: Whether the bid won.
+        auction: "second" or "first".
+        body: Of the entry: `bid`, `to_win`, and `price` of a win, in nanos.
+        ticks: A bid above their top, made under a larger cap, counts as one at the top.
+        priced: Whether the source tells the competing bid of every loss.
+    """
+    bid, least = body["bid"], body.get("to_win")
+    if least is None and won and auction == "second":
+        least = body["price"]
+    if least is not None and (least <= bid) is not won:
+        # A seller's slip, or a bill above the bid: whichever of the two is wrong, we cannot tell.
+        return None
+    if bid > ticks.top:
+        return _beyond(won, least, ticks)
+    return Outcome(bid, won, least, _feed(won, auction, least, priced=priced))
+
+
+def _feed(won: bool, auction: str, least: int | None, *, priced: bool) -> Feed:
+    if auction == "second":
+        return "always" if priced and least is not None else "on_win"
+    if least is not None:
+        return "always" if priced else "on_win" if won else "never"
+    return "on_loss" if priced and won else "never"
+
+
+def _beyond(won: bool, least: int | None, ticks: Ticks) -> Outcome | None:
+    if won and least is not None:
+        return Outcome(min(ticks.top, max(least, 0)), least <= ticks.top, least, "always")
+    return None if won else Outcome(ticks.top, False, None, "on_win")
+
+
+def _forget(market: MarketState, drift: Drift | None) -> None:
+    """
+    Forget by whole pieces of the drift, and only between moments.
+
+    A window forgets here as a discount of the same memory does, since counts have no age.
+    """
+    if drift is None:
+        return
+    spent = market.rounds if drift.by == "rounds" else market.clock_ms
+    pieces = spent // max(1, drift.size * SPANS_KEPT // CELLS)
+    passed = min(pieces - market.forgotten, PIECES_MAX)
+    market.forgotten = pieces
+    for _ in range(passed if market.sources else 0):
+        market.keep(KEPT_PER_PIECE)
