@@ -44,7 +44,7 @@ def curves(ready: Ready) -> dict[str, object]:
         "currency": ready.terms.currency,
         "unit": "per auction, as CPM",
         "value": {
-            "cpm_nanos": round(value[0]),
+            "estimate_cpm_nanos": round(value[0]),
             "low_cpm_nanos": round(value[1]),
             "high_cpm_nanos": round(value[2]),
             "from": "the mean so far" if learnt.get("mean_nanos") is not None else "the guess",
@@ -88,8 +88,8 @@ def _rows(
 ) -> list[dict[str, object]]:
     columns = {
         "win_probability": (one.share, one.low, one.high),
-        "expected_cost_cpm_nanos": _cost(one, auction),
-        "expected_surplus_cpm_nanos": _surplus(one, auction, value),
+        "expected_cost": _cost(one, auction),
+        "expected_surplus": _surplus(one, auction, value),
     }
     return [
         {
@@ -102,8 +102,8 @@ def _rows(
 
 
 def _said(name: str, numbers: list[float]) -> dict[str, object]:
-    """Estimate and limits, as money where the name says so; null where nothing is identified."""
-    tail = "_cpm_nanos" if name.endswith("_cpm_nanos") else ""
+    """Estimate and limits, in money but for the chance; null where nothing is identified."""
+    tail = "" if name == "win_probability" else "_cpm_nanos"
     write = round if tail else float
     said = [None if math.isnan(one) else write(float(one)) for one in numbers]
     return dict(zip((f"{part}{tail}" for part in ("estimate", "low", "high")), said, strict=True))

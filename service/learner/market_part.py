@@ -87,6 +87,9 @@ def said(won: bool, auction: str, body: Body, ticks: Ticks, *, priced: bool) -> 
     if least is not None and (least <= bid) is not won:
         # A seller's slip, or a bill above the bid: whichever of the two is wrong, we cannot tell.
         return None
+    if not priced and not won:
+        # Who tells only some losses may tell the near ones; a source that tells all says so.
+        least = None
     if bid > ticks.top:
         return _beyond(won, least, ticks)
     return Outcome(bid, won, least, _feed(won, auction, least, priced=priced))

@@ -69,6 +69,7 @@ BID = 100 * TICK + 1  # A little above its tick.
     [
         (BARE, entry("won", BID, auction="second", price=60 * TICK), {SEEN: 60}),
         (BARE, entry("lost", BID, auction="second"), {ABOVE: 100}),
+        (BARE, entry("lost", BID, auction="second", to_win=150 * TICK), {ABOVE: 100}),
         (PRICED, entry("lost", BID, auction="second", to_win=150 * TICK), {SEEN: 150}),
         (BARE, entry("won", BID, price=BID), {WON: 101}),
         (BARE, entry("lost", BID), {LOST: 101}),

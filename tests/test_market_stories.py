@@ -1,0 +1,119 @@
+"""Mixed auctions over a real database: priced, reported, learnt, and shown."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import pytest
+
+from service.errors import Malformed
+from service.feedback import Report
+from tests.builders import CAP, NAME, PRICE, Worker, working
+
+pytestmark = pytest.mark.anyio
+
+MEAN = {"policy": {"method": "mean"}}  # Of a guess of 4 CPM.
+
+
+async def sold(worker: Worker, rivals: list[int], **wish: Any) -> None:
+    """Bid against these competing bids, one by one, and report what an exchange would."""
+    for rival in rivals:
+        answer = await worker.bid(**wish)
+        won = (answer.bid or 0) >= rival
+        clearing = rival if won and wish.get("auction") == "second" else None
+        to_win, kind = (None, "won") if won else (rival, "lost")
+        await worker.report(Report(kind, answer.ticket, clearing=clearing, to_win=to_win))
+
+
+async def test_a_first_price_bid_is_shaded_and_climbs_only_where_it_lost(migrated_url: str) -> None:
+    """Rivals at 2 CPM: the first bid is lost low, the next ones win at little more than 2."""
+    async with working(migrated_url) as worker:
+        await worker.create(auction="first", losses="priced", **MEAN)
+        first = await worker.bid(source="north")
+        assert first.bid is not None
+        assert first.bid < 2_000_000
+        assert first.set_by == "value"
+        for _ in range(4):
+            await sold(worker, [2_000_000] * 2, source="north")
+            await worker.learn()
+        last = await worker.bid(source="north")
+        assert last.bid == 2_000_000
+        assert (await worker.bid(source="south")).bid == first.bid
+
+
+async def test_a_win_pays_its_bid_unless_told_otherwise(migrated_url: str) -> None:
+    """Who pays what he bids need not be told; the same price said again is the same outcome."""
+    async with working(migrated_url) as worker:
+        await worker.create(auction="first", **MEAN)
+        answer = await worker.bid()
+        assert [r.status for r in await worker.report(Report("won", answer.ticket))] == ["recorded"]
+        again = await worker.report(Report("won", answer.ticket, clearing=answer.bid))
+        assert [receipt.status for receipt in again] == ["duplicate"]
+        assert worker.balance()["spent"] == answer.bid
+        body = worker.one("SELECT body FROM stream WHERE kind = 'won'")
+        assert '"first"' in str(body).replace("'", '"')
+        assert worker.audit() == []
+
+
+async def test_a_second_price_win_needs_its_price(migrated_url: str) -> None:
+    """Whatever the line item's usual auction: the ticket remembers which one it was."""
+    async with working(migrated_url) as worker:
+        await worker.create(auction="first", **MEAN)
+        answer = await worker.bid(auction="second")
+        (receipt,) = await worker.report(Report("won", answer.ticket))
+        assert (receipt.status, receipt.code) == ("refused", "no_price")
+
+
+async def test_a_fixed_price_is_taken_or_passed_as_under_a_floor(migrated_url: str) -> None:
+    """The bid is the price, held and paid in full; above the value it counts as a floor."""
+    async with working(migrated_url) as worker:
+        await worker.create(**MEAN)
+        taken = await worker.bid(auction="fixed", price=3_000_000)
+        assert (taken.bid, taken.set_by) == (3_000_000, "value")
+        await worker.report(Report("won", taken.ticket))
+        assert worker.balance()["spent"] == 3_000_000
+        left = await worker.bid(auction="fixed", price=4_000_001)
+        assert (left.bid, left.reason) == (None, "under_floor")
+        with pytest.raises(Malformed):
+            await worker.bid(auction="fixed")
+
+
+async def test_a_method_that_draws_for_a_second_price_bids_in_no_other(migrated_url: str) -> None:
+    """Not as a line item's auction, nor as that of one opportunity."""
+    settings: dict[str, Any] = {
+        "policy": {"method": "exptree-win-only"},
+        "value": {"ceiling": CAP, "typical": CAP, "expected": {"per_impression": CAP // 2}},
+    }
+    settings["value"]["expected"]["conversions"] = 1
+    async with working(migrated_url) as worker:
+        with pytest.raises(Malformed):
+            await worker.create(auction="first", **settings)
+        await worker.create(**settings)
+        assert (await worker.bid()).reason is None
+        with pytest.raises(Malformed) as refused:
+            await worker.bid(auction="first")
+        assert refused.value.code == "auction_not_for_method"
+
+
+async def test_no_theorem_is_claimed_for_shaded_bids(migrated_url: str) -> None:
+    """And the state shows what the default source would be bid."""
+    async with working(migrated_url) as worker:
+        await worker.create(auction="first", **MEAN)
+        state = await worker.operator.state(NAME)
+        assert "No theorem covers" in state["certainty"]["guarantee"]
+        assert "first price" in state["certainty"]["guarantee"]
+        assert state["bid"]["price_cpm_nanos"] == (await worker.bid()).bid
+
+
+async def test_one_line_item_learns_each_auction_apart(migrated_url: str) -> None:
+    """Second-price wins tell prices, first-price ones only that they won, fixed ones nothing."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await sold(worker, [PRICE // 2, PRICE // 4, 2 * PRICE], source="north", auction="second")
+        await sold(worker, [PRICE // 2, 2 * PRICE], source="north", auction="first")
+        await sold(worker, [PRICE], source="north", auction="fixed", price=PRICE)
+        await worker.learn()
+        shown = await worker.operator.curve(NAME)
+        read = {one["auction"]: (one["auctions"], one["method"]) for one in shown["sources"]}
+        assert read == {"second": (3.0, "kaplan-meier"), "first": (2.0, "isotonic")}
+        assert worker.audit() == []
