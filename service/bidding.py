@@ -10,7 +10,7 @@ import asyncio
 import secrets
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy
 
@@ -57,6 +57,22 @@ class Clocks:
     lag_s: Callable[[], float] = float
 
 
+@dataclass(frozen=True, slots=True)
+class _Offer:
+    """
+    A bid that may leave.
+
+    Args:
+        worth: What the line item values the impression at, in nanos.
+    """
+
+    item: Item
+    sale: Sale
+    cleared: Cleared
+    held: SliceInHand | None
+    worth: int
+
+
 class Bidder:
     """Answers opportunities for one worker."""
 
@@ -89,18 +105,63 @@ class Bidder:
         """
         until = arrived + self._allowed_s(opportunity)
         late = self._clocks.lag_s() > until - arrived
+        if opportunity.line_items:
+            return await self._bid_best(opportunity, until, late=late)
+        found = await self._prepared(opportunity, until, late=late)
+        if isinstance(found, Answer):
+            return self._logged(found, opportunity)
+        weighed = self._weighed(found, opportunity, until, late=late)
+        return self._logged(self._answered(weighed, opportunity), opportunity)
+
+    async def _bid_best(self, opportunity: Opportunity, until: float, *, late: bool) -> Answer:
+        """
+        Let line items compete for one opportunity: one of them bids and has a hold, or none does.
+
+        Against the same rivals the one that values it most has most to gain, whatever they bid
+        and whatever the auction; so nothing of what is known of rivals needs comparing.
+        """
+        asked = [replace(opportunity, line_item=name) for name in opportunity.line_items]
+        found = [await self._prepared(one, until, late=late) for one in asked]
+        currencies = {item.terms.currency for item in found if isinstance(item, Item)}
+        if len(currencies) > 1:
+            raise Malformed("bad_field", "They must have one currency.", {"field": "line_items"})
+        # From here there is no await: what is weighed is still so when the best one commits.
+        weighed = [
+            self._weighed(self._catalog.get(item.id) or item, one, until, late=late)
+            if isinstance(item, Item)
+            else item
+            for item, one in zip(found, asked, strict=True)
+        ]
+        offers = [offer for offer in weighed if isinstance(offer, _Offer)]
+        best = max(offers, key=lambda offer: offer.worth, default=None)
+        answers = [
+            _pass(one, "outbid_inside")
+            if isinstance(offer, _Offer) and offer is not best
+            else self._answered(offer, one)
+            for offer, one in zip(weighed, asked, strict=True)
+        ]
+        for answer, one in zip(answers, asked, strict=True):
+            self._logged(answer, one)
+        return next((answer for answer in answers if answer.bid is not None), answers[0])
+
+    async def _prepared(
+        self, opportunity: Opportunity, until: float, *, late: bool
+    ) -> Item | Answer:
+        """The line item with money in hand for it, as far as time allows; else why not."""
         item = self._catalog.get(opportunity.line_item)
         if item is None:
             item = await self._look_up(opportunity.line_item, until)
         if item is None:
             reason = "overloaded" if time.monotonic() < until else "past_deadline"
-            return self._logged(_pass(opportunity, reason), opportunity)
+            return _pass(opportunity, reason)
         _check_sale(item, opportunity)
         if not opportunity.test and not late and shut(item.limits, _wall_ms()) is None:
             await self._have_money(item, until)
         # A freeze may have come while we waited.
-        item = self._catalog.get(item.id) or item
-        return self._logged(self._answer(item, opportunity, until, late=late), opportunity)
+        return self._catalog.get(item.id) or item
+
+    def _answered(self, weighed: _Offer | Answer, opportunity: Opportunity) -> Answer:
+        return self._commit(weighed, opportunity) if isinstance(weighed, _Offer) else weighed
 
     async def bid_batch(
         self, opportunities: list[Opportunity], arrived: float
@@ -145,7 +206,10 @@ class Bidder:
             finally:
                 self._waiting -= 1
 
-    def _answer(self, item: Item, opportunity: Opportunity, until: float, *, late: bool) -> Answer:
+    def _weighed(
+        self, item: Item, opportunity: Opportunity, until: float, *, late: bool
+    ) -> _Offer | Answer:
+        """What this line item would bid, or the pass that it answers."""
         wall_ms = _wall_ms()
         held = self._leasing.hand.usable(item.id, self._leasing.clock())
         reason = shut(item.limits, wall_ms) or self._out_of_money(item, held)
@@ -168,7 +232,8 @@ class Bidder:
                 passes = self._leasing.hand.under_floor
                 passes[item.id] = passes.get(item.id, 0) + 1
             return _pass(opportunity, cleared)
-        return self._commit(item, opportunity, sale, cleared, held)
+        worth = proposed.price if proposed.value is None else proposed.value
+        return _Offer(item, sale, cleared, held, worth)
 
     def _crowded_out(self, opportunity: Opportunity, held: SliceInHand | None) -> bool:
         """Whether this one needs a slice and too many wait for theirs already."""
@@ -183,15 +248,9 @@ class Bidder:
             return None
         return reason if reason in ("frozen", "budget_spent", "day_spent") else None
 
-    def _commit(
-        self,
-        item: Item,
-        opportunity: Opportunity,
-        sale: Sale,
-        cleared: Cleared,
-        held: SliceInHand | None,
-    ) -> Answer:
+    def _commit(self, offer: _Offer, opportunity: Opportunity) -> Answer:
         """From here the price leaves: it is taken out of the slice, signed and answered."""
+        item, sale, cleared, held = offer.item, offer.sale, offer.cleared, offer.held
         # A test ticket must look like any other, but no slice and no money stand behind it.
         if held is None or opportunity.test:
             slice_id, counter, day = secrets.token_bytes(16), 0, 1

@@ -117,3 +117,42 @@ async def test_one_line_item_learns_each_auction_apart(migrated_url: str) -> Non
         read = {one["auction"]: (one["auctions"], one["method"]) for one in shown["sources"]}
         assert read == {"second": (3.0, "kaplan-meier"), "first": (2.0, "isotonic")}
         assert worker.audit() == []
+
+
+async def test_several_line_items_compete_and_one_hold_stands(migrated_url: str) -> None:
+    """The one that values it most bids; the others are logged as outbid inside, holding nothing."""
+    async with working(migrated_url) as worker:
+        for name, price in (("low", PRICE), ("high", 3 * PRICE), ("middle", 2 * PRICE)):
+            await worker.create(id=name, policy={"method": "flat", "price": price})
+        names = ("low", "high", "middle")
+        answer = await worker.bid("low", line_items=names)
+        assert (answer.line_item, answer.bid) == ("high", 3 * PRICE)
+        issued = {name: worker.leasing.hand.slices[name].issued for name in names}
+        assert issued == {"low": 0, "high": 3 * PRICE, "middle": 0}
+        await worker.upkeep.log()
+        reasons = worker.column("SELECT reason FROM decision ORDER BY line_item")
+        assert reasons == [None, "outbid_inside", "outbid_inside"]
+
+
+async def test_who_cannot_bid_leaves_the_opportunity_to_the_next(migrated_url: str) -> None:
+    """The best is frozen, the next is under the floor: each is told its own reason."""
+    async with working(migrated_url) as worker:
+        for name, price in (("low", PRICE), ("high", 3 * PRICE)):
+            await worker.create(id=name, policy={"method": "flat", "price": price})
+        await worker.bid("low")
+        await worker.bid("high")
+        await worker.operator.freeze("high", "a test", "tester")
+        await worker.upkeep.follow()
+        wish = {"line_items": ("high", "low")}
+        assert (await worker.bid("high", **wish)).line_item == "low"
+        none = await worker.bid("high", **wish, floor=2 * PRICE)
+        assert (none.line_item, none.bid, none.reason) == ("high", None, "frozen")
+
+
+async def test_line_items_of_two_currencies_do_not_compete(migrated_url: str) -> None:
+    """Their values cannot be compared."""
+    async with working(migrated_url) as worker:
+        await worker.create(id="a")
+        await worker.create(id="b", currency="CHF")
+        with pytest.raises(Malformed):
+            await worker.bid("a", line_items=("a", "b"))

@@ -14,7 +14,7 @@ class Opportunity:
     What is asked: name a price for this impression.
 
     Args:
-        line_item: Who would buy it.
+        line_item: Who would buy it; the first of `line_items` where several compete.
         request_id: The caller's own name for it, echoed only.
         source: Where it is sold.
         floor: Least price the seller takes, in nanos per impression.
@@ -24,6 +24,7 @@ class Opportunity:
         test: Answered and signed, but without a hold or a lesson.
         auction: Kind of auction; None for the line item's.
         price: What a fixed-price sale asks, in nanos per impression.
+        line_items: Those that compete for it, if several may.
     """
 
     line_item: str
@@ -36,3 +37,4 @@ class Opportunity:
     test: bool = False
     auction: str | None = None
     price: int | None = None
+    line_items: tuple[str, ...] = ()

@@ -7,7 +7,6 @@ from typing import Annotated, Literal
 
 from pydantic import Field
 
-from service.api.forms import refused
 from service.api.forms.fields import CapCpm, Features, FloorCpm, LineItemId, Printable, SeenValue
 from service.api.forms.reading import OpenForm, at_most, bad_field, read, unknown_fields
 from service.decision.opportunity import Opportunity
@@ -15,13 +14,22 @@ from service.errors import Refusal
 
 Deadline = Annotated[int, Field(ge=0, le=60_000, description="Milliseconds from arrival here.")]
 
+Competing = Annotated[
+    list[LineItemId],
+    Field(
+        min_length=1,
+        max_length=20,
+        description="Instead of line_item: the one that values it most bids, with one hold.",
+    ),
+]
+
 
 class BidForm(OpenForm):
     """One impression opportunity that asks for a price."""
 
-    line_items: refused.LineItems = None
+    line_item: LineItemId | None = None
+    line_items: Competing | None = None
     price_cpm: CapCpm | None = None
-    line_item: LineItemId
     request_id: Printable | None = None
     source: Printable = "default"
     auction: Literal["first", "second", "fixed"] | None = None
@@ -81,8 +89,14 @@ def _row(row: object, deadline_ms: int | None, unused: set[str]) -> Opportunity:
 
 
 def _opportunity(form: BidForm, deadline_ms: int | None) -> Opportunity:
+    competing = tuple(form.line_items or ())
+    if (form.line_item is None) is not bool(competing):
+        field = "line_items" if competing else "line_item"
+        raise bad_field(field, "It must name line_item, or line_items, and not both.")
+    if len(set(competing)) < len(competing):
+        raise bad_field("line_items", "No line item may stand in it twice.")
     return Opportunity(
-        line_item=form.line_item,
+        line_item=form.line_item or competing[0],
         request_id=form.request_id,
         source=form.source,
         floor=max(0, form.floor_cpm or 0),
@@ -92,6 +106,7 @@ def _opportunity(form: BidForm, deadline_ms: int | None) -> Opportunity:
         test=form.test,
         auction=form.auction,
         price=form.price_cpm,
+        line_items=competing,
     )
 
 

@@ -15,7 +15,7 @@ from service.api.forms.bids import read_batch, read_bid
 from service.api.forms.features import features
 from service.api.forms.fields import ID
 from service.decision.opportunity import Opportunity
-from service.errors import Malformed, NotOffered, Refusal
+from service.errors import Malformed, Refusal
 from tests.api.anything import ANYTHING
 
 
@@ -49,11 +49,34 @@ def test_what_is_not_used_as_sent_is_named() -> None:
     assert unused == {"value_hint", "floor_cpm", "shiny", "(no plain word)"}
 
 
-@pytest.mark.parametrize("wish", [{"line_items": ["a", "b"]}])
-def test_kinds_of_bid_that_this_release_lacks_are_refused(wish: dict[str, Any]) -> None:
-    """The refusal comes even where another field is missing because of the wish."""
-    with pytest.raises(NotOffered):
-        read_bid({**({} if "line_items" in wish else {"line_item": "a"}), **wish})
+@pytest.mark.parametrize(
+    ("wish", "field"),
+    [
+        ({}, "line_item"),
+        ({"line_item": None}, "line_item"),
+        ({"line_item": "a", "line_items": ["b"]}, "line_items"),
+        ({"line_items": ["a", "a"]}, "line_items"),
+        ({"line_items": []}, "line_items"),
+        ({"line_items": [str(i) for i in range(21)]}, "line_items"),
+        ({"line_item": "a", "auction": "dutch"}, "auction"),
+        ({"line_item": "a", "price_cpm": 0}, "price_cpm"),
+    ],
+)
+def test_a_bid_names_one_line_item_or_several_that_compete(
+    wish: dict[str, Any], field: str
+) -> None:
+    """Never both, nor the same one twice; and an auction and a price are of their form."""
+    with pytest.raises(Malformed) as caught:
+        read_bid(wish)
+    assert caught.value.data == {"field": field}
+
+
+def test_several_line_items_an_auction_and_a_price_are_read() -> None:
+    """A price beside an auction that has none is named as not used."""
+    opportunity, unused = read_bid({"line_items": ["b", "a"], "auction": "fixed", "price_cpm": 2})
+    assert (opportunity.line_item, opportunity.line_items) == ("b", ("b", "a"))
+    assert (opportunity.auction, opportunity.price, unused) == ("fixed", 2_000_000, set())
+    assert read_bid({"line_item": "a", "auction": "first", "price_cpm": 2})[1] == {"price_cpm"}
 
 
 def test_a_bad_row_stays_in_its_place_of_a_batch() -> None:
@@ -72,7 +95,7 @@ def test_a_bad_row_stays_in_its_place_of_a_batch() -> None:
         rows_max=5,
     )
     kinds = [row.code if isinstance(row, Refusal) else row.deadline_ms for row in rows]
-    assert kinds == [80, "bad_field", "not_offered", "bad_field", 80]
+    assert kinds == [80, "bad_field", "bad_field", "bad_field", 80]
     assert unused == {"shiny"}
 
 
