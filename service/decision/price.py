@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.random import Generator
@@ -43,12 +43,12 @@ class Proposal:
     A price in nanos per impression, rounded down, and what set it: value, cap, allowance.
 
     Args:
-        value: What the price was made from, where the cap cut it.
+        value: What the price was made from, where it is another; no part of the answer.
     """
 
     price: int
     set_by: str
-    value: int | None = None
+    value: int | None = field(default=None, compare=False)
 
 
 @dataclass(frozen=True, slots=True)
@@ -111,7 +111,7 @@ class Ready:
         value = valued.price if valued.value is None else valued.value
         price = min(OF_SALE[sale.auction](value, sale, self.terms.cap, self.market), self.terms.cap)
         cut = valued.set_by != BY_CAP or price == self.terms.cap
-        return Proposal(price, valued.set_by if cut else BY_VALUE)
+        return Proposal(price, valued.set_by if cut else BY_VALUE, value)
 
     def _valued(self, generator: Generator) -> Proposal | Passed:
         if self.law is not None:

@@ -100,7 +100,7 @@ def test_a_value_above_the_cap_is_shaded_and_not_cut_first() -> None:
     rich = terms(value={"expected": {"per_impression": 12_000_000, "conversions": 1}})
     answer = ready(UNIFORM, rich).propose(Opportunity("garden", source="north"), default_rng(1))
     assert isinstance(answer, Proposal)
-    assert answer.set_by == "value"
+    assert (answer.set_by, answer.value) == ("value", 12_000_000)
     assert answer.price == pytest.approx(6_000_000, abs=50_000)
 
 
