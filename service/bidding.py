@@ -21,6 +21,7 @@ from service.decision.opportunity import Opportunity
 from service.decision.price import Passed
 from service.decision.rule import FIXED, SECOND, Sale, sale_of
 from service.errors import Malformed, Refusal, StoreAway
+from service.guard.fees import NONE, Fees
 from service.guard.gate import Cleared, clear, shut
 from service.guard.hand import SliceInHand
 from service.guard.ticket import Ticket, TicketKeys
@@ -221,6 +222,7 @@ class Bidder:
             return _pass(opportunity, reason)
         if item.ready is None:
             return _pass(opportunity, "learner_halted")
+        fees, opportunity = item.limits.fees, _gross(opportunity, item.limits.fees)
         proposed = item.ready.propose(opportunity, self._generator)
         if isinstance(proposed, Passed):
             return _pass(opportunity, proposed.reason)
@@ -232,6 +234,10 @@ class Bidder:
                 passes = self._leasing.hand.under_floor
                 passes[item.id] = passes.get(item.id, 0) + 1
             return _pass(opportunity, cleared)
+        net = fees.net(cleared.price)
+        if net <= 0:
+            return _pass(opportunity, "price_rounds_to_zero")
+        cleared = Cleared(fees.gross(net), cleared.set_by)
         worth = proposed.price if proposed.value is None else proposed.value
         return _Offer(item, sale, cleared, held, worth)
 
@@ -268,11 +274,12 @@ class Bidder:
             opportunity.test,
             sale.floor,
             sale.auction,
+            item.limits.fees,
         )
         return Answer(
             opportunity.request_id,
             item.id,
-            cleared.price,
+            item.limits.fees.net(cleared.price),
             None,
             self._keys.sign(ticket),
             ticket.ref,
@@ -303,6 +310,13 @@ class Bidder:
             }
         )
         return answer
+
+
+def _gross(opportunity: Opportunity, fees: Fees) -> Opportunity:
+    """What is for sale, at what it costs."""
+    floor = fees.gross(opportunity.floor) if opportunity.floor else 0
+    price = None if opportunity.price is None else fees.gross(opportunity.price)
+    return opportunity if fees == NONE else replace(opportunity, floor=floor, price=price)
 
 
 def _check_sale(item: Item, opportunity: Opportunity) -> None:

@@ -11,6 +11,7 @@ from typing import Any
 from service.decision.price import Ready, ready
 from service.decision.terms import Terms
 from service.errors import no_such_line_item
+from service.guard.fees import Fees
 from service.guard.gate import Limits
 from service.learner.memory import Memory, UnreadableMemory
 from service.store import changes, keys, learners, line_items
@@ -172,4 +173,6 @@ def _ready(snapshot: learners.Snapshot | None, terms: Terms) -> tuple[int, Ready
 def limits_of(row: line_items.Row) -> Limits:
     """What binds every price of this line item."""
     flight: dict[str, Any] = row.config["flight"]
-    return Limits(row.config["bid_cap"], flight["starts_ms"], flight["ends_ms"], bool(row.freezes))
+    fees = Fees.of(row.config.get("fees"))
+    span = flight["starts_ms"], flight["ends_ms"]
+    return Limits(row.config["bid_cap"], *span, bool(row.freezes), fees)

@@ -229,7 +229,7 @@ class Feedback:
             ticket.price,
             ticket.source,
             _price(report, ticket) if report.kind in PAYING else None,
-            report.to_win,
+            None if report.to_win is None else ticket.fees.gross(report.to_win),
             report.why,
             report.at,
             ticket.auction,
@@ -259,10 +259,10 @@ class Feedback:
 
 
 def _price(report: Report, ticket: Ticket) -> int | None:
-    """What was paid; who pays what he bids need not be told."""
+    """What it cost, fees included; who pays what he bids need not be told."""
     if report.clearing is None and report.kind == "won" and ticket.auction != "second":
         return ticket.price
-    return report.clearing
+    return None if report.clearing is None else ticket.fees.gross(report.clearing)
 
 
 def _read_ref(report: Report) -> Booking | Receipt:

@@ -42,7 +42,9 @@ def show_curve(facts: Facts) -> dict[str, Any]:
     """What is known of competing bids; money in nanos under names that end in `_nanos`."""
     memory = Memory.from_bytes(facts.snapshot.state)
     found = curves(ready(memory, Terms.from_config(facts.row.config)))
-    return {"line_item": facts.row.id, "snapshot": facts.snapshot.seq, **found}
+    fees = facts.row.config.get("fees")
+    prices = "with the line item's fees" if fees else "as bid: the line item has no fees"
+    return {"line_item": facts.row.id, "snapshot": facts.snapshot.seq, "prices": prices, **found}
 
 
 def _status(sources: set[str]) -> str:
@@ -66,7 +68,8 @@ def _bid(facts: Facts, learnt: dict[str, Any]) -> dict[str, Any]:
     cleared = clear(learnt["bid_nanos"], learnt["set_by"], limits, 0, limits.cap)
     if isinstance(cleared, str):
         return said | none | {"pass": cleared}
-    return said | {"price_cpm_nanos": cleared.price, "set_by": cleared.set_by, "pass": None}
+    net = max(0, limits.fees.net(cleared.price))
+    return said | {"price_cpm_nanos": net, "set_by": cleared.set_by, "pass": None}
 
 
 def _learner(facts: Facts, tally: Tally) -> dict[str, Any]:

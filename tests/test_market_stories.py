@@ -156,3 +156,39 @@ async def test_line_items_of_two_currencies_do_not_compete(migrated_url: str) ->
         await worker.create(id="b", currency="CHF")
         with pytest.raises(Malformed):
             await worker.bid("a", line_items=("a", "b"))
+
+
+FEES = {"share": 120_000_000, "cpm": 150_000}  # 12 % and 0.15 CPM.
+
+
+async def test_fees_are_held_and_spent_but_not_bid(migrated_url: str) -> None:
+    """A value of 2.39 CPM bids 2; won at 1 it costs 1.27, and its old fees go with its ticket."""
+    async with working(migrated_url) as worker:
+        await worker.create(fees=FEES, policy={"method": "flat", "price": 2_390_000})
+        answer = await worker.bid()
+        assert answer.bid == 2_000_000
+        assert worker.leasing.hand.slices[NAME].issued == 2_390_000
+        version = worker.one("SELECT version FROM line_item")
+        await worker.operator.patch(NAME, {"fees": None}, version, None, None, "tester")
+        await worker.report(Report("won", answer.ticket, clearing=1_000_000))
+        assert worker.balance()["spent"] == 1_270_000
+        assert worker.audit() == []
+
+
+async def test_a_floor_and_a_fixed_price_are_weighed_with_their_fees(migrated_url: str) -> None:
+    """2 CPM cost 2.39: at that value they are reached, and a nano more is not."""
+    async with working(migrated_url) as worker:
+        await worker.create(fees=FEES, policy={"method": "flat", "price": 2_390_000})
+        assert (await worker.bid(floor=2_000_000)).bid == 2_000_000
+        assert (await worker.bid(floor=2_000_001)).reason == "under_floor"
+        fixed = await worker.bid(auction="fixed", price=2_000_000)
+        await worker.report(Report("won", fixed.ticket))
+        assert (fixed.bid, worker.balance()["spent"]) == (2_000_000, 2_390_000)
+        assert (await worker.bid(auction="fixed", price=2_000_001)).reason == "under_floor"
+
+
+async def test_fees_above_the_value_leave_nothing_to_bid(migrated_url: str) -> None:
+    """No price is left when the fees alone cost what an impression is worth."""
+    async with working(migrated_url) as worker:
+        await worker.create(fees=FEES, policy={"method": "flat", "price": 150_000})
+        assert (await worker.bid()).reason == "price_rounds_to_zero"

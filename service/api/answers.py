@@ -131,6 +131,8 @@ _CONFIG: dict[str, tuple[str, Callable[[int], object]]] = {
     "memory_ms": ("memory_s", _seconds),
     "value_silence_ms": ("value_silence_s", _seconds),
     "allowance": ("allowance", money.nanos_text),
+    "share": ("share", money.nanos_text),
+    "cpm": ("cpm", lambda price_nanos: money.nanos_text(price_nanos * 1000)),
 }
 
 

@@ -4,15 +4,18 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from service.guard.fees import NONE, Fees
+
 
 @dataclass(frozen=True, slots=True)
 class Limits:
-    """What binds every price of one line item; money in nanos, times in wall clock ms."""
+    """What binds every price of one line item; money in nanos and gross, times in wall clock ms."""
 
     cap: int
     starts_ms: int
     ends_ms: int | None
     frozen: bool
+    fees: Fees = NONE
 
 
 @dataclass(frozen=True, slots=True)

@@ -13,6 +13,8 @@ import struct
 from dataclasses import dataclass
 from hashlib import blake2b, sha256
 
+from service.guard.fees import NONE, Fees
+
 TEXT_MAX = 512
 FORM = 1
 MAC_BYTES = 16
@@ -20,9 +22,9 @@ KEY_ID_BYTES = 4
 TEST = 1
 AUCTIONS = {"second": 0, "first": 2, "fixed": 4}  # Beside TEST among the flags.
 
-# form, key id, incarnation, slice, counter, price, floor, snapshot, day, flags
+# form, key id, incarnation, slice, counter, price, floor, snapshot, day, share, flat, flags
 # Fixed widths and lengths before texts: a ticket is parsed without guessing, or not at all.
-_HEAD = struct.Struct(">B4s8s16sIqqqIB")
+_HEAD = struct.Struct(">B4s8s16sIqqqIIqB")
 
 
 class BadTicket(ValueError):
@@ -37,11 +39,12 @@ class Ticket:
     Args:
         slice: 16 random bytes of the slice the price was taken from.
         counter: The bid's place in its slice, from 0.
-        price: The bid, and so its hold, in nanos per impression.
+        price: The cost of the bid with its fees, and so its hold, in nanos per impression.
         floor: Least price the seller took, in nanos per impression.
         snapshot: The learner's seq the price was made from (the epoch).
         day: Proleptic ordinal of the local day the slice belongs to.
         auction: Kind of auction the bid was made for, which says what its outcome tells.
+        fees: Those of when the price left, by which prices that come back are read.
     """
 
     line_item: str
@@ -55,6 +58,7 @@ class Ticket:
     test: bool = False
     floor: int = 0
     auction: str = "second"
+    fees: Fees = NONE
 
     @property
     def bid(self) -> bytes:
@@ -104,6 +108,8 @@ class TicketKeys:
             ticket.floor,
             ticket.snapshot,
             ticket.day,
+            ticket.fees.share,
+            ticket.fees.flat,
             AUCTIONS[ticket.auction] | (TEST if ticket.test else 0),
         )
         body = head + _packed(ticket.line_item) + _packed(ticket.source)
@@ -129,13 +135,13 @@ class TicketKeys:
 
 def _unpacked(body: bytes) -> Ticket:
     fields = _HEAD.unpack_from(body)
-    _, _, incarnation, slice_id, counter, price, floor, snapshot, day, flags = fields
+    _, _, incarnation, slice_id, counter, price, floor, snapshot, day, share, flat, flags = fields
     line_item, source = _texts(body[_HEAD.size :])
     place = (line_item, source, slice_id, counter, price, snapshot, day, incarnation)
     auctions = [name for name, flag in AUCTIONS.items() if flag == flags & ~TEST]
     if not auctions:
         raise BadTicket("an unknown kind of auction")
-    return Ticket(*place, bool(flags & TEST), floor, auctions[0])
+    return Ticket(*place, bool(flags & TEST), floor, auctions[0], Fees(share, flat))
 
 
 def _texts(packed: bytes) -> tuple[str, str]:

@@ -22,6 +22,8 @@ NAME = "market"
 # that every machine forgets alike.
 KEPT_PER_PIECE = 3_451_103_176
 PIECES_MAX = 256
+OUTCOMES = ("won", "lost")
+TELLING = (*OUTCOMES, "reset")
 
 Body = Mapping[str, Any]
 
@@ -40,34 +42,43 @@ def learn(state: bytes, lessons: Sequence[Lesson], rules: Rules) -> bytes:
     """
     if rules.market is None:
         return b""
+    aging = rules.drift is not None
+    if not aging and not any(lesson.kind in TELLING for lesson in lessons):
+        return state
     market = read(state) if state else MarketState(rules.market.top)
     if market.top != rules.market.top:
         raise UnreadableMarket("counted on other ticks")
     for lesson in lessons:
-        if lesson.at_ms > market.clock_ms:
+        if aging and lesson.at_ms > market.clock_ms:
             market.clock_ms = lesson.at_ms
             _forget(market, rules.drift)
-        market = _taught(market, lesson, priced=rules.market.priced)
-    return market.to_bytes() if market.sources or market.rounds else b""
+        if aging:
+            market.rounds += _rounds(lesson)
+        if lesson.kind in TELLING:
+            market = _taught(market, lesson, priced=rules.market.priced)
+    return market.to_bytes() if market.sources or market.rounds or market.clock_ms else b""
 
 
 def _taught(market: MarketState, lesson: Lesson, *, priced: bool) -> MarketState:
     body = lesson.body
     if lesson.kind == "reset":
-        return MarketState(market.top, clock_ms=market.clock_ms)
-    if lesson.kind in ("tick", "retire"):
-        market.rounds += body["rounds"] + body["under_floor"]
-    elif lesson.kind in ("won", "lost", "void") and body.get("only") != "value":
-        market.rounds += body["round"]
-        auction = body.get("auction", "second")
-        outcome = None
-        # Nothing can be read off an outcome whose bid is not said.
-        if lesson.kind != "void" and auction in AUCTIONS and "bid" in body:
-            outcome = said(lesson.kind == "won", auction, body, market.ticks, priced=priced)
+        return MarketState(market.top, 0, market.clock_ms, market.rounds, market.forgotten)
+    auction = body.get("auction", "second")
+    # Nothing can be read off an outcome whose bid is not said.
+    if auction in AUCTIONS and "bid" in body and body.get("only") != "value":
+        outcome = said(lesson.kind == "won", auction, body, market.ticks, priced=priced)
         if outcome is not None:
             key = market.key_of(auction, body["source"])
             market.count(key, *told(outcome, market.ticks))
     return market
+
+
+def _rounds(lesson: Lesson) -> int:
+    body = lesson.body
+    if lesson.kind in ("tick", "retire"):
+        return int(body["rounds"] + body["under_floor"])
+    counted = lesson.kind in (*OUTCOMES, "void") and body.get("only") != "value"
+    return int(body["round"]) if counted else 0
 
 
 def said(won: bool, auction: str, body: Body, ticks: Ticks, *, priced: bool) -> Outcome | None:

@@ -9,6 +9,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as some
 
+from service.guard.fees import Fees
 from service.guard.ticket import TEXT_MAX, BadTicket, Ticket, TicketKeys, bid_of, ref_of
 
 KEYS = TicketKeys([b"first invented key", b"second invented key"])
@@ -36,6 +37,7 @@ tickets = some.builds(
     incarnation=some.binary(min_size=8, max_size=8),
     test=some.booleans(),
     auction=some.sampled_from(["first", "second", "fixed"]),
+    fees=some.builds(Fees, some.integers(0, 10**9), some.integers(0, 2**40)),
 )
 
 HOSTILE = [
@@ -59,7 +61,7 @@ def test_a_ticket_comes_back_as_it_left(ticket: Ticket) -> None:
 def test_the_longest_ids_fit() -> None:
     """Two ids of 64 characters stay far below the limit."""
     longest = replace(TICKET, line_item="x" * 64, source="y" * 64)
-    assert len(KEYS.sign(longest)) == 278
+    assert len(KEYS.sign(longest)) == 294
 
 
 def test_every_changed_byte_is_refused() -> None:

@@ -183,7 +183,8 @@ def test_damage_and_other_ticks_are_seen() -> None:
         with pytest.raises(UnreadableMarket):
             read(wrong)
     with pytest.raises(UnreadableMarket):
-        market_part.learn(state, [], Rules(CAP, market=MarketRules.of(10 * CAP, priced=False)))
+        other = Rules(CAP, market=MarketRules.of(10 * CAP, priced=False))
+        market_part.learn(state, [entry("lost", BID)], other)
 
 
 def test_most_changes_of_a_cap_recount_nothing() -> None:

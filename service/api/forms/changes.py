@@ -12,6 +12,7 @@ from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin, Tripw
 from service.api.forms.line_items import (
     DAY_S,
     ExpectedForm,
+    FeesForm,
     Grace,
     NotYetForm,
     PacingForm,
@@ -64,6 +65,7 @@ class ChangeForm(NotYetForm):
     pacing: PacingForm = PacingForm()
     allowance: Amount | None = None
     kin: Kin | None = None
+    fees: FeesForm | None = None
     losses: Literal["bare", "priced"] = "bare"
     tripwires: TripwiresForm | None = None
     confirm: Printable | None = None

@@ -29,7 +29,7 @@ NAMES = {
 _NOT_KEPT = {*NotYetForm.model_fields, "confirm", "reason", "profile"}
 _MAY_BE_NULL = {
     *("daily_budget", "ends_at", "delay_mean_s", "drift", "change", "rounds", "memory_s"),
-    *("value_silence_s", "allowance", "kin", "tripwires"),
+    *("value_silence_s", "allowance", "kin", "fees", "tripwires"),
 }
 
 

@@ -17,6 +17,7 @@ from service.decision.opportunity import Feature
 
 ID = re.compile(r"[A-Za-z0-9._-]{1,64}")
 PRINTABLE = re.compile(r"[ -~]{1,64}")
+NANOS_PER_WHOLE = 10**9
 _UNSEEN = {"Cc", "Cf", "Cs", "Zl", "Zp"}  # Controls, marks of direction, lone surrogates, breaks.
 _ZONES = zoneinfo.available_timezones() - {"Factory", "localtime"}
 
@@ -52,6 +53,14 @@ def _money(read: Callable[[object], int], least: int | None) -> Callable[[object
         return nanos
 
     return check
+
+
+def _share(given: object) -> int:
+    """Parts of 10^9: read as an amount is, since an amount is kept in such parts too."""
+    parts = money.nanos(given)
+    if parts > NANOS_PER_WHOLE:
+        raise money.NotMoney("a share above 1")
+    return parts
 
 
 def _instant(text: object) -> str:
@@ -135,6 +144,16 @@ CapCpm = Annotated[
     int,
     PlainValidator(_money(money.price, 1)),
     _schema("A CPM price above 0, at most six decimals.", 8.0),
+]
+FeeCpm = Annotated[
+    int,
+    PlainValidator(_money(money.price, 0)),
+    _schema("A CPM price, at most six decimals.", "0.15"),
+]
+Share = Annotated[
+    int,
+    PlainValidator(_money(_share, 0)),
+    _schema("A share of the price from 0 to 1, at most nine decimals.", "0.12"),
 ]
 FloorCpm = Annotated[
     int,

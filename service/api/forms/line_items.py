@@ -11,10 +11,12 @@ from service.api.forms.fields import (
     Amount,
     CapCpm,
     Currency,
+    FeeCpm,
     LineItemId,
     Moment,
     Name,
     Printable,
+    Share,
     TimeZone,
 )
 from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin, TripwiresForm
@@ -62,12 +64,18 @@ class PacingForm(StrictForm):
     profile: refused.Profile = None
 
 
+class FeesForm(StrictForm):
+    """What an impression costs beyond its price; budget, cap and holds include it."""
+
+    share: Share = 0
+    cpm: FeeCpm = 0
+
+
 class NotYetForm(StrictForm):
     """What the contract knows of a line item and this release refuses."""
 
     return_target: refused.ReturnTarget = None
     control: refused.Control = None
-    fees: refused.Fees = None
 
 
 class CreateForm(NotYetForm):
@@ -90,6 +98,7 @@ class CreateForm(NotYetForm):
     pacing: PacingForm = PacingForm()
     allowance: Amount | None = None
     kin: Kin | None = None
+    fees: FeesForm | None = None
     losses: Literal["bare", "priced"] = "bare"
     tripwires: TripwiresForm | None = None
     confirm: Printable | None = None

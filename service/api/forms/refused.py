@@ -44,7 +44,6 @@ _NEVER = WithJsonSchema({"not": {}, "description": "Fixed at creation; leave it 
 
 ReturnTarget = Annotated[None, _absent("return_target"), _NULL]
 Control = Annotated[None, _absent("control"), _NULL]
-Fees = Annotated[None, _absent("fees"), _NULL]
 Profile = Annotated[None, _absent("pacing.profile"), _NULL]
 
 FixedId = Annotated[None, _fixed("id"), _NEVER]

@@ -51,6 +51,7 @@ def test_the_smallest_line_item_takes_the_documented_defaults() -> None:
         "pacing": {"method": "none"},
         "allowance": None,
         "kin": None,
+        "fees": None,
         "losses": "bare",
         "tripwires": None,
     }
@@ -135,7 +136,6 @@ def test_a_bad_field_is_named_by_its_path(change: dict[str, Any], field: str) ->
         {"pacing": {"profile": [1, 2]}},
         {"return_target": "2.0"},
         {"control": {"share": 0.1}},
-        {"fees": {"share": "0.12"}},
     ],
 )
 def test_what_this_release_lacks_is_refused_by_name(wish: dict[str, Any]) -> None:
