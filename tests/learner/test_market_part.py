@@ -182,8 +182,8 @@ def test_damage_and_other_ticks_are_seen() -> None:
     for wrong in (state[:-1], state[:3] + b"\x09" + state[4:], b"", state[:20]):
         with pytest.raises(UnreadableMarket):
             read(wrong)
+    other = Rules(CAP, market=MarketRules.of(10 * CAP, priced=False))
     with pytest.raises(UnreadableMarket):
-        other = Rules(CAP, market=MarketRules.of(10 * CAP, priced=False))
         market_part.learn(state, [entry("lost", BID)], other)
 
 
