@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from time import perf_counter
 
 import numpy as np
 import pytest
 from numpy.random import default_rng
+from numpy.typing import NDArray
 
 from service.decision.market import CELLS_MIXED, Menu, drawable, market_of
 from service.decision.opportunity import Opportunity
@@ -20,6 +22,7 @@ from service.learner.partition import Ticks
 from service.learner.rules import MarketRules, Rules
 from tests.builders import line_item
 
+Nanos = NDArray[np.int64]
 CAP = 8_000_000
 TOP = 10_000_000
 RULES = Rules(CAP, market=MarketRules.of(CAP, priced=True))
@@ -123,6 +126,36 @@ def test_bare_wins_and_losses_find_the_one_price_that_matters() -> None:
         state, bids = market_part.learn(state, [told], bare), [*bids, bid]
     assert np.median(bids[-40:]) == 1_600_000
     assert max(bids) < 3_000_000
+
+
+def earned(rivals: Nanos, value: int, *, priced: bool) -> int:
+    """What shading earns on these competing bids, learning every twenty, in nanos."""
+    rules, state, surplus = Rules(CAP, market=MarketRules.of(CAP, priced=priced)), b"", 0
+    for start in range(0, rivals.size, 20):
+        bid = price(ready(Memory(parts=(("market", state),)), terms()))
+        lessons = [lesson(bid, rival) for rival in rivals[start : start + 20].tolist()]
+        told = [
+            replace(
+                one, body={**one.body, "to_win": one.body["to_win"] if priced and lost else None}
+            )
+            for one in lessons
+            for lost in [one.kind == "lost"]
+        ]
+        surplus += sum(value - bid for one in lessons if one.kind == "won")
+        state = market_part.learn(state, told, rules)
+    return surplus
+
+
+@pytest.mark.parametrize(("priced", "share"), [(True, 0.95), (False, 0.93)])
+def test_shading_earns_most_of_what_the_best_fixed_bid_would_have(
+    priced: bool, share: float
+) -> None:
+    """Lognormal rivals, 5,000 auctions, the bid of hindsight; bidding the value earns nothing."""
+    value = 4_000_000
+    rivals = np.minimum(1.2e6 * default_rng(7).lognormal(0, 0.6, 5000), 2e7).astype(np.int64) + 1
+    bids = np.arange(TOP // 800, value, TOP // 800)
+    best = max(((value - bid) * int((rivals <= bid).sum())) for bid in bids.tolist())
+    assert share * best <= earned(rivals, value, priced=priced) <= best
 
 
 def test_a_source_of_its_own_and_one_unknown_are_bid_for_apart() -> None:
