@@ -172,7 +172,7 @@ def _build(
         *(settings.deadline_ms, settings.deadline_ms_max, settings.bids_waiting_max, pulse.lag_s)
     )
     backlog = Backlog(settings.decision_queue_max)
-    bidder = Bidder(catalog, leasing, keys, incarnation, clocks, backlog)
+    bidder = Bidder(catalog, leasing, keys, incarnation, clocks, backlog, _feature_key(database))
     room = Room(settings.outcome_calls_max, settings.outcome_rows_waiting_max)
     feedback = Feedback(database, threads, keys, incarnation, room)
     operator = Operator(database, threads, catalog, news, settings.checkpoint_entries)
@@ -189,6 +189,11 @@ def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:
     if given:
         return [key.strip().encode() for key in given]
     return [bytes.fromhex(database.read(lambda connection: fact(connection, "ticket_key")))]
+
+
+def _feature_key(database: Database) -> bytes:
+    """What features are hashed under; it stays with what was learnt of them."""
+    return bytes.fromhex(database.read(lambda connection: fact(connection, "feature_key")))
 
 
 def _stop_if_broken(task: asyncio.Future[None]) -> None:

@@ -25,6 +25,8 @@ from service.guard.fees import NONE, Fees
 from service.guard.gate import Cleared, clear, shut
 from service.guard.hand import SliceInHand
 from service.guard.ticket import Ticket, TicketKeys
+from service.learner import hashing
+from service.learner.hashing import Hashed
 from service.leasing import Leasing
 
 
@@ -72,6 +74,7 @@ class _Offer:
     cleared: Cleared
     held: SliceInHand | None
     worth: int
+    hashed: Hashed
 
 
 class Bidder:
@@ -85,12 +88,14 @@ class Bidder:
         incarnation: bytes,
         clocks: Clocks,
         backlog: Backlog,
+        feature_key: bytes,
     ) -> None:
         self._catalog, self._leasing = catalog, leasing
         self._keys, self._incarnation = keys, incarnation
         self._clocks, self._waiting = clocks, 0
         self._generator = numpy.random.default_rng()
         self._backlog = backlog
+        self._feature_key = feature_key
 
     async def bid(self, opportunity: Opportunity, arrived: float) -> Answer:
         """
@@ -223,6 +228,7 @@ class Bidder:
         if item.ready is None:
             return _pass(opportunity, "learner_halted")
         fees, opportunity = item.limits.fees, _gross(opportunity, item.limits.fees)
+        opportunity = self._seen(item, opportunity)
         proposed = item.ready.propose(opportunity, self._generator)
         if isinstance(proposed, Passed):
             return _pass(opportunity, proposed.reason)
@@ -239,7 +245,7 @@ class Bidder:
             return _pass(opportunity, "price_rounds_to_zero")
         cleared = Cleared(fees.gross(net), cleared.set_by)
         worth = proposed.price if proposed.value is None else proposed.value
-        return _Offer(item, sale, cleared, held, worth)
+        return _Offer(item, sale, cleared, held, worth, opportunity.hashed)
 
     def _crowded_out(self, opportunity: Opportunity, held: SliceInHand | None) -> bool:
         """Whether this one needs a slice and too many wait for theirs already."""
@@ -275,6 +281,8 @@ class Bidder:
             sale.floor,
             sale.auction,
             item.limits.fees,
+            hashing.to_bytes(offer.hashed),
+            opportunity.value_hint,
         )
         return Answer(
             opportunity.request_id,
@@ -287,6 +295,13 @@ class Bidder:
             cleared.set_by,
             item.snapshot,
         )
+
+    def _seen(self, item: Item, opportunity: Opportunity) -> Opportunity:
+        """With hashed features, where the line item learns of them; else none are kept."""
+        if not METHODS[item.terms.method].by_features:
+            return opportunity
+        hashed = hashing.hashed(opportunity.features, self._feature_key)
+        return replace(opportunity, hashed=hashed)
 
     def _allowed_s(self, opportunity: Opportunity) -> float:
         asked = opportunity.deadline_ms

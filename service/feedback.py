@@ -240,7 +240,8 @@ class Feedback:
         slice_id = ticket.slice if here else None
         # And the same snapshot may have had another law there.
         snapshot = ticket.snapshot if here else NO_SNAPSHOT
-        return Booking(ticket.line_item, outcome, slice_id, day, snapshot, ticket.floor)
+        place = (slice_id, day, snapshot, ticket.floor)
+        return Booking(ticket.line_item, outcome, *place, ticket.features, ticket.hint)
 
     async def _find_refs(
         self, reports: list[Report], read: list[Booking | Receipt]

@@ -197,7 +197,9 @@ async def working(
     catalog = Catalog(database, threads)
     leasing = Leasing(database, threads, worker, lease_s, clock)
     backlog = Backlog(queue_max)
-    bidder = Bidder(catalog, leasing, keys, here, Clocks(100, 5000, waiting_max), backlog)
+    clocks = Clocks(100, 5000, waiting_max)
+    feature_key = bytes.fromhex(database.read(lambda c: fact(c, "feature_key")))
+    bidder = Bidder(catalog, leasing, keys, here, clocks, backlog, feature_key)
     feedback = Feedback(database, threads, keys, here, room)
     operator = Operator(database, threads, catalog, news, 10)
     upkeep = Upkeep(

@@ -75,7 +75,9 @@ def bidder_with(worker: Worker, lag_s: float) -> Bidder:
     """The worker's bidder on a loop that is so late."""
     clocks = Clocks(100, 5000, lag_s=lambda: lag_s)
     keys = TicketKeys([b"k" * 32])
-    return Bidder(worker.catalog, worker.leasing, keys, bytes(16), clocks, worker.backlog)
+    return Bidder(
+        worker.catalog, worker.leasing, keys, bytes(16), clocks, worker.backlog, b"invented"
+    )
 
 
 async def test_who_was_seen_too_late_is_passed(migrated_url: str) -> None:

@@ -22,6 +22,7 @@ class Setting:
     Args:
         default: Taken when nothing is said; None when it must be said.
         whole: Whether only integers are read.
+        choices: The only numbers it may be; none for all in the range.
     """
 
     default: float | None
@@ -29,12 +30,16 @@ class Setting:
     high: float
     open_ended: bool = True
     whole: bool = False
+    choices: tuple[int, ...] = ()
 
     def fault(self, name: str, given: object) -> str | None:
         """What is wrong with a given number, in one sentence, or None."""
         kinds = (int,) if self.whole else (int, float)
         if isinstance(given, bool) or not isinstance(given, kinds) or not math.isfinite(given):
             return f"{name} must be {'an integer' if self.whole else 'a finite number'}."
+        if self.choices:
+            said = ", ".join(str(choice) for choice in self.choices)
+            return None if given in self.choices else f"{name} must be one of: {said}."
         if self.low < given < self.high:
             return None
         if not self.open_ended and given in (self.low, self.high):
@@ -62,6 +67,8 @@ class Method:
         published_bound: Whether it is an upper confidence index kept as published.
         needs_priced_losses: Whether it must be told the competing bid of every loss.
         by_law: Whether it draws from a law that outcomes move, in place of a value.
+        by_features: Whether it reads what is known of each impression; `index` is then the value
+            of one of which nothing is known.
         draw: For a method that draws its value afresh for every bid; `index` is then the median.
         quantile: The value below which a share of its draws lies, for methods that draw.
     """
@@ -78,5 +85,6 @@ class Method:
     published_bound: bool = False
     needs_priced_losses: bool = False
     by_law: bool = False
+    by_features: bool = False
     draw: Callable[[Counts, Terms, Generator], Numbers] | None = None
     quantile: Callable[[Counts, Terms, float], Numbers] | None = None

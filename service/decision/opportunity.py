@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
+from service.learner.hashing import Hashed
+
 Feature = str | float | bool
 
 
@@ -19,12 +21,13 @@ class Opportunity:
         source: Where it is sold.
         floor: Least price the seller takes, in nanos per impression.
         features: What is known of it.
-        value_hint: The caller's own prediction of its value in nanos; not used yet.
+        value_hint: The caller's own prediction of its value in nanos.
         deadline_ms: How long the caller waits, counted from arrival.
         test: Answered and signed, but without a hold or a lesson.
         auction: Kind of auction; None for the line item's.
         price: What a fixed-price sale asks, in nanos per impression.
         line_items: Those that compete for it, if several may.
+        hashed: The features under the key of the database, where the line item reads them.
     """
 
     line_item: str
@@ -38,3 +41,4 @@ class Opportunity:
     auction: str | None = None
     price: int | None = None
     line_items: tuple[str, ...] = ()
+    hashed: Hashed = ()

@@ -21,6 +21,7 @@ MAC_BYTES = 16
 KEY_ID_BYTES = 4
 TEST = 1
 AUCTIONS = {"second": 0, "first": 2, "fixed": 4}  # Beside TEST among the flags.
+HINT_BYTES = 8
 
 # form, key id, incarnation, slice, counter, price, floor, snapshot, day, share, flat, flags
 # Fixed widths and lengths before texts: a ticket is parsed without guessing, or not at all.
@@ -45,6 +46,8 @@ class Ticket:
         day: Proleptic ordinal of the local day the slice belongs to.
         auction: Kind of auction the bid was made for, which says what its outcome tells.
         fees: Those of when the price left, by which prices that come back are read.
+        features: What is known of the impression, hashed; at most 255 bytes.
+        hint: The caller's own prediction of its value, in nanos.
     """
 
     line_item: str
@@ -59,6 +62,8 @@ class Ticket:
     floor: int = 0
     auction: str = "second"
     fees: Fees = NONE
+    features: bytes = b""
+    hint: int | None = None
 
     @property
     def bid(self) -> bytes:
@@ -112,7 +117,7 @@ class TicketKeys:
             ticket.fees.flat,
             AUCTIONS[ticket.auction] | (TEST if ticket.test else 0),
         )
-        body = head + _packed(ticket.line_item) + _packed(ticket.source)
+        body = head + _packed(ticket.line_item) + _packed(ticket.source) + _facts(ticket)
         return _text(body + _mac(self._keys[self._signing], body))
 
     def verify(self, text: str) -> Ticket:
@@ -123,7 +128,7 @@ class TicketKeys:
             BadTicket: Anything else.
         """
         raw = _bytes(text) if len(text) <= TEXT_MAX else b""
-        if len(raw) < _HEAD.size + 2 + MAC_BYTES or raw[0] != FORM or _text(raw) != text:
+        if len(raw) < _HEAD.size + 4 + MAC_BYTES or raw[0] != FORM or _text(raw) != text:
             raise BadTicket("not a ticket")
         body, mac = raw[:-MAC_BYTES], raw[-MAC_BYTES:]
         key = self._keys.get(body[1 : 1 + KEY_ID_BYTES])
@@ -136,21 +141,36 @@ class TicketKeys:
 def _unpacked(body: bytes) -> Ticket:
     fields = _HEAD.unpack_from(body)
     _, _, incarnation, slice_id, counter, price, floor, snapshot, day, share, flat, flags = fields
-    line_item, source = _texts(body[_HEAD.size :])
-    place = (line_item, source, slice_id, counter, price, snapshot, day, incarnation)
+    line_item, source, features, hint = _pieces(body[_HEAD.size :], 4)
+    texts = line_item.decode("ascii"), source.decode("ascii")
+    place = (*texts, slice_id, counter, price, snapshot, day, incarnation)
     auctions = [name for name, flag in AUCTIONS.items() if flag == flags & ~TEST]
     if not auctions:
         raise BadTicket("an unknown kind of auction")
-    return Ticket(*place, bool(flags & TEST), floor, auctions[0], Fees(share, flat))
+    said = int.from_bytes(hint) if hint else None
+    sold = (auctions[0], Fees(share, flat))
+    return Ticket(*place, bool(flags & TEST), floor, *sold, features, said)
 
 
-def _texts(packed: bytes) -> tuple[str, str]:
-    end = 1 + packed[0]
-    return packed[1:end].decode("ascii"), packed[end + 1 : end + 1 + packed[end]].decode("ascii")
+def _pieces(packed: bytes, count: int) -> list[bytes]:
+    pieces, at = list[bytes](), 0
+    for _ in range(count):
+        end = at + 1 + packed[at]
+        pieces.append(packed[at + 1 : end])
+        at = end
+    return pieces
+
+
+def _facts(ticket: Ticket) -> bytes:
+    hint = b"" if ticket.hint is None else ticket.hint.to_bytes(HINT_BYTES)
+    return _piece(ticket.features) + _piece(hint)
 
 
 def _packed(text: str) -> bytes:
-    raw = text.encode("ascii")
+    return _piece(text.encode("ascii"))
+
+
+def _piece(raw: bytes) -> bytes:
     return bytes([len(raw)]) + raw
 
 

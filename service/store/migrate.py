@@ -36,10 +36,12 @@ def upgrade(connection: Connection) -> None:
     config = _config()
     config.attributes["connection"] = connection
     command.upgrade(config, "head")
-    # Both are made once and stay: a new one would turn every open ticket into a stranger's.
+    # Made once, they stay: a new one would turn every open ticket into a stranger's, and every
+    # lesson on features into one on other features.
     for name, value in (
         ("incarnation", secrets.token_hex(8)),
         ("ticket_key", secrets.token_hex(32)),
+        ("feature_key", secrets.token_hex(32)),
     ):
         connection.execute(
             text("INSERT INTO fact (name, value) VALUES (:name, :value) ON CONFLICT DO NOTHING"),

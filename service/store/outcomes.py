@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from base64 import b64encode
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 from typing import Any
@@ -22,6 +23,7 @@ from service.store.journal import note
 from service.store.leases import read_configs
 
 PAYING = ("won", "billed")
+FACTS = ("features", "hint")  # Of an impression, written into all that is said of it.
 NO_SNAPSHOT = -1  # Of a price made before the database was restored.
 
 Slots = dict[str, tuple[str, dict[str, Any]]]
@@ -37,6 +39,8 @@ class Booking:
         day: The local day its money belongs to.
         snapshot: The learner's state that the price was made from, and so its law, if any.
         floor: Least price the seller took, in nanos per impression.
+        features: What was known of the impression, hashed.
+        hint: What the caller predicted of its value, in nanos.
     """
 
     line_item: str
@@ -45,6 +49,8 @@ class Booking:
     day: str | None = None
     snapshot: int = 0
     floor: int = 0
+    features: bytes = b""
+    hint: int | None = None
 
 
 # Law, kind, competing bid, floor and configuration in; what the entry must carry for the learner.
@@ -144,6 +150,7 @@ class _Group:
             self._books.replace_slice(counted)
         slice_id = slice_.id if slice_ else None
         entry = self._weighed(booking, self._placed(verdict.entry, slice_id, day), slots)
+        entry = _described(booking, entry)
         self._books.post(booking.line_item, entry, verdict.movement, day=day, slice_id=slice_id)
         self._keep(slots, entry)
         if verdict.entry is not None and verdict.entry.kind in PAYING:
@@ -171,9 +178,11 @@ class _Group:
         if entry.kind != "value" or bid not in self._paid_ms:
             return entry
         body = {**entry.body, "won_ms": self._paid_ms[bid], "total_was": brought(slots)}
-        win = slots.get("result", ("", {}))[1]
+        # A bill may come before its win, and proves as much.
+        win = (slots.get("result") or slots.get("billed") or ("", {}))[1]
         if "chance" in win:
             body["win"] = {name: win[name] for name in ("price", "chance", "stage")}
+        body |= {name: win[name] for name in FACTS if name in win}
         won = self._won_seqs.get(bid)
         if won is not None and won <= self._reset_seq(booking.line_item):
             body["before_reset"] = True
@@ -253,6 +262,18 @@ class _Group:
             )  # fmt: skip
         if frozen:
             announce(self._connection, "freeze", frozen)
+
+
+def _described(booking: Booking, entry: Entry | None) -> Entry | None:
+    """The entry of an impression bought, with what was known of it when it was priced."""
+    if entry is None or entry.kind not in PAYING:
+        return entry
+    body = dict(entry.body)
+    if booking.features:
+        body["features"] = b64encode(booking.features).decode("ascii")
+    if booking.hint is not None:
+        body["hint"] = booking.hint
+    return replace(entry, body=body)
 
 
 def _amount(nanos: int, config: dict[str, Any]) -> str:

@@ -60,6 +60,8 @@ def written(booking: Booking) -> dict[str, Any]:
         "day": booking.day,
         "snapshot": booking.snapshot,
         "floor": booking.floor,
+        "features": booking.features.hex(),
+        "hint": booking.hint,
     }
 
 
@@ -76,7 +78,9 @@ def booking_of(line_item: str, body: dict[str, Any]) -> Booking:
     said["bid"] = bytes.fromhex(said["bid"])
     slice_id = bytes.fromhex(body["slice"]) if body["slice"] else None
     event = KINDS[body["event"]](**said)
-    return Booking(line_item, event, slice_id, body["day"], body["snapshot"], body["floor"])
+    place = (slice_id, body["day"], body["snapshot"], body["floor"])
+    features = bytes.fromhex(body.get("features", ""))
+    return Booking(line_item, event, *place, features, body.get("hint"))
 
 
 def _read(found: Any) -> dict[str, Any]:

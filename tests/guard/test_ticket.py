@@ -38,6 +38,9 @@ tickets = some.builds(
     test=some.booleans(),
     auction=some.sampled_from(["first", "second", "fixed"]),
     fees=some.builds(Fees, some.integers(0, 10**9), some.integers(0, 2**40)),
+    floor=some.integers(0, 2**62),
+    features=some.binary(max_size=99),
+    hint=some.none() | some.integers(0, 2**64 - 1),
 )
 
 HOSTILE = [
@@ -59,9 +62,9 @@ def test_a_ticket_comes_back_as_it_left(ticket: Ticket) -> None:
 
 
 def test_the_longest_ids_fit() -> None:
-    """Two ids of 64 characters stay far below the limit."""
-    longest = replace(TICKET, line_item="x" * 64, source="y" * 64)
-    assert len(KEYS.sign(longest)) == 294
+    """Two ids of 64 characters, 32 features and their constant, and a hint stay below the limit."""
+    longest = replace(TICKET, line_item="x" * 64, source="y" * 64, features=b"f" * 99, hint=2**63)
+    assert len(KEYS.sign(longest)) == 439
 
 
 def test_every_changed_byte_is_refused() -> None:

@@ -112,8 +112,6 @@ def _opportunity(form: BidForm, deadline_ms: int | None) -> Opportunity:
 
 def _unused(form: BidForm, members: Mapping[str, object]) -> set[str]:
     names = unknown_fields(BidForm, members)
-    if form.value_hint is not None:
-        names.add("value_hint")
     if form.price_cpm is not None and form.auction in ("first", "second"):
         names.add("price_cpm")
     if form.floor_cpm is not None and form.floor_cpm < 0:

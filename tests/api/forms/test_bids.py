@@ -41,12 +41,12 @@ def test_an_opportunity_is_read_with_its_floor_rounded_up() -> None:
 
 
 def test_what_is_not_used_as_sent_is_named() -> None:
-    """Unknown fields, an unused hint and a floor below zero are warnings, not refusals."""
+    """Unknown fields, and a floor below zero are warnings, not refusals."""
     opportunity, unused = read_bid(
-        {"line_item": "a", "value_hint": "1", "floor_cpm": -1, "shiny": 1, "<b>": 2, "x" * 65: 3}
+        {"line_item": "a", "floor_cpm": -1, "shiny": 1, "<b>": 2, "x" * 65: 3}
     )
     assert opportunity.floor == 0
-    assert unused == {"value_hint", "floor_cpm", "shiny", "(no plain word)"}
+    assert unused == {"floor_cpm", "shiny", "(no plain word)"}
 
 
 @pytest.mark.parametrize(
