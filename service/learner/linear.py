@@ -195,7 +195,7 @@ def learn(ridge: Ridge, lessons: Iterable[Lesson]) -> Ridge:
         log_det += float(np.log(grown))
         count += 1
         if _due(matrix, inverse, count):
-            inverse, log_det = _factored(matrix, ridge.penalty)
+            inverse, log_det = factored(matrix, ridge.penalty)
     return Ridge(ridge.penalty, matrix, inverse, moment, log_det, count)
 
 
@@ -215,7 +215,8 @@ def _due(matrix: Numbers, inverse: Numbers, count: int) -> bool:
     return bool(np.abs(matrix @ inverse - np.eye(len(matrix))).max() > DRIFT_MAX)
 
 
-def _factored(matrix: Numbers, penalty: float) -> tuple[Numbers, float]:
+def factored(matrix: Numbers, penalty: float) -> tuple[Numbers, float]:
+    """The inverse of V, symmetric to the last bit, and ln det V - d ln lambda, by Cholesky."""
     lower = np.linalg.cholesky(matrix)
     half = np.linalg.solve(lower, np.eye(len(matrix)))
     log_det = 2.0 * float(np.log(np.diag(lower)).sum()) - len(matrix) * float(np.log(penalty))
@@ -239,6 +240,6 @@ def discount(ridge: Ridge, gamma: float) -> Ridge:
         raise ValueError("a share is kept, above 0 and at most 1")
     ground = (1.0 - gamma) * ridge.penalty * np.eye(ridge.dimensions)
     matrix = double(gamma * ridge.matrix + ground)
-    inverse, log_det = _factored(matrix, ridge.penalty)
+    inverse, log_det = factored(matrix, ridge.penalty)
     moment = double(gamma * ridge.moment)
     return replace(ridge, matrix=matrix, inverse=inverse, moment=moment, log_det=log_det)

@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
-from service.learner import market_part
+from service.learner import hint_part, linear_part, market_part
 from service.learner.lesson import Lesson
 from service.learner.rules import Rules
 
@@ -30,5 +30,7 @@ class Part:
 
 
 PARTS: dict[str, Part] = {
+    "hints": Part(lambda rules: rules.hints, hint_part.learn),
+    "linear": Part(lambda rules: rules.dimensions > 0, linear_part.learn),
     market_part.NAME: Part(market_part.wanted, market_part.learn),
 }

@@ -22,6 +22,7 @@ KEPT = 50
 RARE_FROM = 20  # Ceilings of more than so many caps are for values that come rarely.
 # Methods that grow a tree, and whether they learn from wins alone.
 TREES = {"exptree": False, "exptree-win-only": True}
+LINEAR = "linear"
 RATIO = 2.0
 ALARM = 8.0  # ln 3,000; by simulation 5,000 hits and more go by between two false alarms.
 
@@ -90,6 +91,8 @@ class Rules:
         alarm: The score that is an alarm, in nats.
         restarts: Whether an alarm makes the learner begin afresh.
         tree: The game of the tree of exponential weights, where a method grows one.
+        dimensions: Length of the vector of features, where a method reads them; else 0.
+        hints: Whether the caller's own predictions are calibrated.
     """
 
     ceiling: int
@@ -104,6 +107,8 @@ class Rules:
     restarts: bool = False
     tree: exptree_rules.Rules | None = None
     market: MarketRules | None = None
+    dimensions: int = 0
+    hints: bool = False
 
     @property
     def cell_ms(self) -> int:
@@ -131,7 +136,14 @@ class Rules:
             looked_for.get("action") == "restart",
             tree_rules(config),
             MarketRules.of(config["bid_cap"], priced=config.get("losses", "bare") == "priced"),
+            dimensions_of(config["policy"]),
+            bool(value.get("hints")),
         )
+
+
+def dimensions_of(policy: Mapping[str, Any]) -> int:
+    """The length of the vector of features; 0 for a method that reads none."""
+    return int(policy["dimensions"]) if policy["method"] == LINEAR else 0
 
 
 def tree_rules(config: Mapping[str, Any]) -> exptree_rules.Rules | None:
