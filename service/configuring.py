@@ -8,7 +8,7 @@ from typing import Any
 from service.decision.counts import Counts
 from service.decision.learnability import defaults, objection
 from service.decision.terms import Terms
-from service.errors import Malformed, NeedsConfirmation, NotOffered
+from service.errors import Malformed, NeedsConfirmation
 from service.learner.memory import Memory
 from service.learner.rules import RARE_FROM, Rules, tree_rules
 from service.ledger.entries import Entry
@@ -44,7 +44,6 @@ def object_to(config: Mapping[str, Any], confirm: str | None) -> None:
 
     Raises:
         Malformed: Settings that the method cannot work with.
-        NotOffered: A method of a later release.
         NeedsConfirmation: Allowed only with the word named in the refusal.
     """
     found = objection(config, confirm)
@@ -52,8 +51,7 @@ def object_to(config: Mapping[str, Any], confirm: str | None) -> None:
         return
     if found.code == "learning_cost":
         raise NeedsConfirmation(found.code, found.detail, {"confirm": found.code})
-    kind = NotOffered if found.code == "not_offered" else Malformed
-    raise kind(found.code, found.detail)
+    raise Malformed(found.code, found.detail)
 
 
 def taught_otherwise(before: Mapping[str, Any], after: Mapping[str, Any]) -> bool:

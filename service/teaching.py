@@ -67,7 +67,8 @@ def readable(state: bytes, config: Mapping[str, Any]) -> bool:
     """Whether this release can go on from a state."""
     try:
         lawful(state, config)
-        Memory.from_bytes(state)
+        # Every part reads its own state, even for no lesson.
+        fold(Memory.from_bytes(state), (), Rules.from_config(config))
     except (UnreadableMemory, UnreadableTree):
         return False
     return True

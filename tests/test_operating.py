@@ -14,7 +14,6 @@ from service.errors import (
     Malformed,
     NeedsConfirmation,
     NotFound,
-    NotOffered,
     Stale,
 )
 from service.feedback import Report
@@ -77,7 +76,6 @@ async def test_a_new_line_item_may_bid_at_once(migrated_url: str) -> None:
 @pytest.mark.parametrize(
     ("changes", "error", "code"),
     [
-        ({"policy": {"method": "linear"}}, NotOffered, "not_offered"),
         ({"policy": {"method": "guess"}}, Malformed, "bad_setting"),
         ({"policy": {"method": "flat", "price": CAP + 1}}, Malformed, "bad_setting"),
         ({"policy": {"method": "kl-ucbid"}, "value": RARE}, NeedsConfirmation, "learning_cost"),

@@ -8,6 +8,7 @@ import numpy as np
 
 from service.decision import brakes
 from service.decision.counts import Counts, delay_mean_ms, waiting
+from service.decision.describing_one import said_of_one
 from service.decision.methods import METHODS
 from service.decision.price import Passed, Proposal, Ready
 from service.decision.terms import Terms
@@ -74,6 +75,7 @@ def describe(ready: Ready) -> dict[str, object]:
         "delay": _delay(ready),
         "change": _change(ready),
         "tree": _tree(ready),
+        **said_of_one(ready),
         "bid_nanos": bid.price if bid else None,
         "set_by": bid.set_by if bid else None,
         "spread": _spread(ready),
@@ -234,6 +236,7 @@ def _guarantee(ready: Ready, total: Tally) -> str:
         ("a learning allowance that holds bids now", ready.most is not None),
         ("bids shaded for a first price", ready.terms.auction == "first"),
         ("a price that is taken or left", ready.terms.auction == "fixed"),
+        ("bidding by hints", ready.terms.hints),
     )
     if not strains:
         return said

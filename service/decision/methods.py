@@ -11,6 +11,7 @@ from service.decision.value import (
     exptree,
     flat,
     kl_ucbid,
+    linear,
     mean,
     posterior_quantile,
     thompson,
@@ -28,13 +29,11 @@ METHODS: dict[str, Method] = {
         bayes_ucb.METHOD,
         thompson.METHOD,
         posterior_quantile.METHOD,
+        linear.METHOD,
         exptree.PUBLISHED,
         exptree.WIN_ONLY,
     )
 }
-
-# Named by the interface, and refused by name until a later release brings them.
-NOT_OFFERED = frozenset({"linear"})
 
 
 def settings_of(name: str) -> Mapping[str, Setting]:

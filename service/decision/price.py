@@ -20,12 +20,13 @@ from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
 from service.decision.rule import FIRST, OF_SALE, Sale, sale_of
 from service.decision.terms import Terms
+from service.decision.valuing import Valuing, valuing_of
 from service.learner import exptree_rules
 from service.learner.bounds import Numbers
 from service.learner.exptree_law import Law
 from service.learner.exptree_state import UnreadableTree
 from service.learner.growing import law_of
-from service.learner.memory import Memory
+from service.learner.memory import Memory, UnreadableMemory
 
 NO_VALUE = "no_value"
 LEARNER_HALTED = "learner_halted"
@@ -72,6 +73,7 @@ class Ready:
         draws: Whether a price is drawn afresh for every opportunity.
         law: What prices are drawn from, for methods that bid by a law.
         market: What may be offered where one pays what one bids.
+        valuing: What single opportunities are worth, where not all are alike.
     """
 
     memory: Memory
@@ -82,6 +84,7 @@ class Ready:
     draws: bool
     law: Law | None = None
     market: Market = UNTOLD
+    valuing: Valuing | None = None
 
     def propose(self, opportunity: Opportunity, generator: Generator) -> Proposal | Passed:
         """
@@ -91,7 +94,9 @@ class Ready:
             opportunity: What is for sale; its floor is the guard's business.
             generator: The only source of chance, for methods that draw.
         """
-        return self._sold(self._valued(generator), sale_of(opportunity, self.terms.auction))
+        return self._sold(
+            self._valued(opportunity, generator), sale_of(opportunity, self.terms.auction)
+        )
 
     @property
     def usual(self) -> Proposal | Passed:
@@ -113,9 +118,15 @@ class Ready:
         cut = valued.set_by != BY_CAP or price == self.terms.cap
         return Proposal(price, valued.set_by if cut else BY_VALUE, value)
 
-    def _valued(self, generator: Generator) -> Proposal | Passed:
+    def _valued(self, opportunity: Opportunity, generator: Generator) -> Proposal | Passed:
         if self.law is not None:
             return Proposal(self.law.draw(generator), BY_VALUE)
+        if self.valuing is not None and isinstance(self.answer, Proposal):
+            own = self.valuing.value(opportunity)
+            if own is not None:
+                most = None if self.most is None else own.mean
+                bid = _bid(lambda: np.asarray(own.value), self.terms)
+                return _proposal(bid, most, self.terms)
         draw, counts, terms = METHODS[self.terms.method].draw, self.counts, self.terms
         if not self.draws or draw is None or counts is None or isinstance(self.answer, Passed):
             return self.answer
@@ -147,8 +158,14 @@ def ready(memory: Memory, terms: Terms) -> Ready:
         return Ready(memory, guided, counts, most, Passed(NO_VALUE), draws=False)
     bid = _bid(lambda: method.index(counts, guided), guided)
     answer = _proposal(bid, most, guided)
+    draws = method.draw is not None
+    try:
+        valuing = valuing_of(memory, guided)
+    except UnreadableMemory:
+        # Learnt in another number of dimensions; a refold is on its way.
+        return Ready(memory, guided, counts, most, Passed(LEARNER_HALTED), draws=False)
     market = market_of(memory, guided, answer.price if isinstance(answer, Proposal) else 0.0)
-    return Ready(memory, guided, counts, most, answer, method.draw is not None, market=market)
+    return Ready(memory, guided, counts, most, answer, draws, market=market, valuing=valuing)
 
 
 def _by_law(memory: Memory, terms: Terms, tree: exptree_rules.Rules, counts: Counts) -> Ready:

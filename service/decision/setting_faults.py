@@ -7,11 +7,10 @@ from dataclasses import dataclass
 from typing import Any
 
 from service.decision.method import Method
-from service.decision.methods import METHODS, NOT_OFFERED, settings_of
+from service.decision.methods import METHODS, settings_of
 from service.learner.rules import RARE_FROM
 
 BAD_SETTING = "bad_setting"
-METHOD_NOT_OFFERED = "not_offered"
 
 PRIOR_CONVERSIONS_MAX = 10**6
 LAW_CAP_MIN = 2  # Nanos per impression; below it there is no price to draw.
@@ -29,13 +28,12 @@ def setting_fault(config: Mapping[str, Any]) -> Objection | None:
     """The first fault of method, settings, typical value or guess; None when all is well."""
     policy, value = config["policy"], config["value"]
     name = policy["method"]
-    if name in NOT_OFFERED:
-        return Objection(METHOD_NOT_OFFERED, "This release does not offer that method.")
     if name not in METHODS:
         known = ", ".join(sorted(METHODS))
         return Objection(BAD_SETTING, f"policy.method must be one of: {known}.")
     sentence = (
         _feedback_fault(config, METHODS[name])
+        or _said_fault(config, METHODS[name])
         or _policy_fault(policy, config["bid_cap"])
         or _value_fault(value, METHODS[name])
     )
@@ -60,6 +58,23 @@ def _feedback_fault(config: Mapping[str, Any], method: Method) -> str | None:
         )
     if method.by_law and (config["value"].get("drift") or config["value"].get("change")):
         return f"{method.name} forgets nothing and restarts by itself; leave drift and change out."
+    return None
+
+
+def _said_fault(config: Mapping[str, Any], method: Method) -> str | None:
+    """Why what is said of single opportunities cannot serve this line item, if it cannot."""
+    value, hints = config["value"], bool(config["value"].get("hints"))
+    restarts = (value.get("change") or {}).get("action") == "restart"
+    if method.by_features and value["ceiling"] > RARE_FROM * config["bid_cap"]:
+        return (
+            f"With a ceiling of more than {RARE_FROM} bid caps, the ellipsoid of {method.name} "
+            "then says nothing: it is wider than the cap for as long as any budget lasts."
+        )
+    if hints and (not method.learns or method.by_law):
+        return f"{method.name} takes no account of values, so value.hints has nothing to calibrate."
+    if (hints or method.by_features) and (value.get("drift") or restarts):
+        what = "value.hints" if hints else method.name
+        return f"{what} forgets nothing; leave drift out, and of change all but the flag."
     return None
 
 

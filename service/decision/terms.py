@@ -35,6 +35,7 @@ class Terms:
         on_change: What a change detector does on an alarm; None where there is none.
         allowance: How much may be lost to learning; None for no limit.
         tree: The game of the tree of exponential weights, where the method grows one.
+        hints: Whether the caller's own predictions are bid by.
     """
 
     currency: str
@@ -53,6 +54,7 @@ class Terms:
     on_change: str | None = None
     allowance: int | None = None
     tree: exptree_rules.Rules | None = None
+    hints: bool = False
 
     @property
     def scale(self) -> float:
@@ -93,4 +95,5 @@ class Terms:
             on_change=(value.get("change") or {}).get("action"),
             allowance=config.get("allowance"),
             tree=tree_rules(config),
+            hints=bool(value.get("hints")),
         )

@@ -157,7 +157,10 @@ WRONG: list[tuple[dict[str, Any], int, str]] = [
         422,
         "bad_setting",
     ),
-    ({"policy": {"method": "linear"}}, 422, "not_offered"),
+    ({"policy": {"method": "linear"}, "value": RARE}, 422, "bad_setting"),
+    ({"policy": {"method": "linear", "dimensions": 33}}, 422, "bad_setting"),
+    ({"policy": {"method": "flat", "price_cpm": 1}, "value": {"hints": True}}, 422, "bad_setting"),
+    ({"value": {"hints": "yes"}}, 422, "bad_field"),
     ({"policy": {"method": "bernstein-ucbid"}, "value": RARE}, 409, "learning_cost"),
     ({"policy": {"method": "thompson"}, "value": RARE}, 409, "learning_cost"),
 ]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import copy
+from base64 import b64encode
 from dataclasses import replace
 from typing import Any
 
@@ -16,9 +17,10 @@ from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
 from service.decision.price import Passed, Proposal, ready
 from service.decision.terms import Terms
+from service.learner import hashing
 from service.learner.fold import Lesson, fold
 from service.learner.memory import Memory, UnreadableMemory
-from service.learner.rules import Drift, Rules
+from service.learner.rules import Drift, Rules, dimensions_of
 from service.learner.tally import Tally
 from tests.decision.invented import CAP, CEILING, terms
 
@@ -26,7 +28,13 @@ every_method = pytest.mark.parametrize("method", sorted(METHODS))
 every_drift = pytest.mark.parametrize(
     "drift", [None, Drift("discount", "rounds", 300), Drift("window", "time", 40_000)]
 )
-OPPORTUNITY = Opportunity("alpine-season-pass", floor=400_000, features={"hour": 13})
+HASHED = hashing.hashed({"device": "phone", "hour": 13}, b"battery")
+OTHER = hashing.hashed({"device": "desk", "place": "top", "returning": True}, b"battery")
+OPPORTUNITY = Opportunity("alpine-season-pass", floor=400_000, hashed=HASHED)
+FACTS = [
+    {"features": b64encode(hashing.to_bytes(hashed)).decode(), "hint": hint}
+    for hashed, hint in ((HASHED, 3_000_000), (OTHER, 5_000_000))
+]
 WINDOW_MS = 6400
 Entry = tuple[str, dict[str, Any]]
 
@@ -34,9 +42,17 @@ Entry = tuple[str, dict[str, Any]]
 def of(method: str, drift: Drift | None = None) -> tuple[Terms, Rules]:
     """Terms of a line item under a method, and the rules its lessons are read by."""
     found = replace(terms(method), window_ms=WINDOW_MS)
-    if found.tree is not None:
+    if found.tree is not None or method == "linear":
         drift = None
-    rules = Rules(CEILING, found.arrival, WINDOW_MS, drift=drift, tree=found.tree)
+    policy = {"method": method, **found.settings}
+    rules = Rules(
+        CEILING,
+        found.arrival,
+        WINDOW_MS,
+        drift=drift,
+        tree=found.tree,
+        dimensions=dimensions_of(policy),
+    )
     return replace(found, drift=drift), rules
 
 
@@ -67,38 +83,24 @@ memories = some.builds(
     some.integers(0, 10**9),
 )
 chances = some.floats(0.01, 1.0)
-wins = some.tuples(
-    some.just("won"),
-    some.fixed_dictionaries(
-        {
-            "price": some.integers(0, CAP),
-            "round": some.integers(0, 1),
-            "chance": chances,
-            "stage": some.just([3, 1]),
-        }
-    ),
-)
-losses = some.tuples(
-    some.just("lost"),
-    some.fixed_dictionaries(
-        {"round": some.just(1), "to_win": some.integers(0, 2 * CAP), "stage": some.just([3, 1])}
-    ),
-)
-values = some.tuples(
-    some.just("value"),
-    some.fixed_dictionaries(
-        {
-            "amount": some.integers(0, 2 * CEILING),
-            "was": some.none(),
-            "win": some.fixed_dictionaries(
-                {
-                    "price": some.integers(0, CAP),
-                    "chance": chances,
-                    "stage": some.just([3, 1]),
-                }
-            ),
-        }
-    ),
+laws = {"chance": chances, "stage": some.just([3, 1])}
+facts = some.sampled_from(FACTS)
+
+
+def entries(kind: str, **members: some.SearchStrategy[Any]) -> some.SearchStrategy[Entry]:
+    """Entries of a kind, with what was known of their impression."""
+    body = some.builds(lambda one, of: one | of, some.fixed_dictionaries(members), facts)
+    return some.tuples(some.just(kind), body)
+
+
+prices = some.integers(0, CAP)
+wins = entries("won", price=prices, round=some.integers(0, 1), **laws)
+losses = entries("lost", round=some.just(1), to_win=some.integers(0, 2 * CAP), **laws)
+values = entries(
+    "value",
+    amount=some.integers(0, 2 * CEILING),
+    was=some.none(),
+    win=some.fixed_dictionaries({"price": prices, **laws}),
 )
 streams = some.lists(wins | losses | values, max_size=40)
 
@@ -197,7 +199,7 @@ def test_the_state_does_not_grow_with_lessons(method: str, drift: Drift | None) 
         rows: list[Entry] = []
         for price in rng.integers(0, CAP, 50).tolist():
             win = {"price": price, "chance": 0.5, "stage": [3, 1], "round": 1}
-            worth = {"amount": int(rng.integers(0, CEILING)), "was": None, "win": win}
+            worth = {"amount": int(rng.integers(0, CEILING)), "was": None, "win": win, **FACTS[1]}
             rows += [("won", win), ("value", worth)]
         memory = fold(memory, lessons(rows, 700 * at), rules)
 

@@ -168,13 +168,30 @@ def test_a_flat_price_must_be_said() -> None:
     assert "policy.price is needed" in found.detail
 
 
-@pytest.mark.parametrize("method", ["linear"])
-def test_methods_of_a_later_release_are_refused_by_name(method: str) -> None:
-    """They are known words, and not offered."""
-    found = objection(defaults({**partial(), "policy": {"method": method}})[0], None)
+@pytest.mark.parametrize(
+    ("method", "settings", "value", "words"),
+    [
+        ("linear", {}, {"ceiling": 21 * CAP}, "the ellipsoid of linear then says nothing"),
+        ("linear", {"dimensions": 24}, {}, "policy.dimensions must be one of: 16, 32, 64."),
+        ("linear", {}, {"drift": {"how": "window", "rounds": 500}}, "linear forgets nothing"),
+        ("linear", {}, {"change": {"action": "restart"}}, "linear forgets nothing"),
+        ("ucbid", {}, {"hints": True, "change": {"action": "restart"}}, "value.hints forgets"),
+        ("flat", {"price": CAP}, {"hints": True}, "flat takes no account of values"),
+        ("exptree", {}, {"hints": True}, "exptree takes no account of values"),
+    ],
+)
+def test_what_single_impressions_cannot_teach_is_refused(
+    method: str, settings: dict[str, float], value: dict[str, Any], words: str
+) -> None:
+    """Features where values are rare, another size of vector, forgetting, a hint nobody reads."""
+    wish = with_value(config(method, **settings), **value)
+    found = objection(wish, "learning_cost")
 
     assert found is not None
-    assert found.code == "not_offered"
+    assert found.code == "bad_setting"
+    assert words in found.detail
+    fine = {"change": {"action": "flag"}, "hints": True}
+    assert objection(with_value(config("linear", dimensions=64), **fine), None) is None
 
 
 @pytest.mark.parametrize(

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Literal
 
-from pydantic import Field
+from pydantic import Field, StrictBool
 
 from service.api.forms import refused
 from service.api.forms.fields import Amount, CapCpm, Moment, Name, Printable, Reason
@@ -43,6 +43,7 @@ class ValueChange(StrictForm):
     expected: ExpectedForm = ExpectedForm()
     drift: DriftForm | None = None
     change: ChangeDetectorForm | None = None
+    hints: StrictBool = False
 
 
 class ChangeForm(NotYetForm):

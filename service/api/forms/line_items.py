@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Annotated, Literal
 
-from pydantic import AfterValidator, Field
+from pydantic import AfterValidator, Field, StrictBool
 
 from service.api.forms import refused
 from service.api.forms.fields import (
@@ -55,6 +55,7 @@ class ValueForm(StrictForm):
     expected: ExpectedForm | None = None
     drift: DriftForm | None = None
     change: ChangeDetectorForm | None = None
+    hints: StrictBool = False
 
 
 class PacingForm(StrictForm):

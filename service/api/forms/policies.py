@@ -26,6 +26,7 @@ _SCHEMA: dict[str, Any] = {
         "price_cpm": {"description": "For flat: the price it always bids.", "example": 2.0},
         "gamma": {"type": "number", "description": "For ucbid and kl-ucbid."},
         "order": {"type": "number", "description": "For posterior-quantile."},
+        "dimensions": {"type": "integer", "description": "For linear: 16, 32 or 64."},
     },
     "additionalProperties": {"type": "number"},
     "example": {"method": "posterior-quantile", "order": 0.75},

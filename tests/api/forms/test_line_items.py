@@ -47,6 +47,7 @@ def test_the_smallest_line_item_takes_the_documented_defaults() -> None:
             "delay_mean_ms": None,
             "drift": None,
             "change": None,
+            "hints": False,
         },
         "pacing": {"method": "none"},
         "allowance": None,
@@ -58,7 +59,7 @@ def test_the_smallest_line_item_takes_the_documented_defaults() -> None:
     assert set(defaults_taken(form)) == {
         *("auction", "flight.starts_at", "flight.time_zone", "spend_on", "grace_s"),
         *("billing_grace_s", "strict", "value.arrival", "value.window_s", "pacing.method"),
-        "losses",
+        *("losses", "value.hints"),
     }
 
 
@@ -79,6 +80,7 @@ def test_every_field_of_a_line_item_reaches_the_config() -> None:
             "window_s": 60,
             "delay_mean_s": 30,
             "expected": {"per_impression": "0.0020", "conversions": 2},
+            "hints": False,
         },
         "policy": {"method": "flat", "price_cpm": "2"},
         "confirm": "learning_cost",

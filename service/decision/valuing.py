@@ -1,0 +1,141 @@
+"""What one opportunity is worth by what is said of it: its features, or the caller's own hint.
+
+Everything that does not depend on the opportunity is worked out once per snapshot.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+
+from service.decision import posterior
+from service.decision.counts import delay_mean_ms
+from service.decision.opportunity import Opportunity
+from service.decision.terms import Terms
+from service.decision.value.linear import DELTA, LENGTH, NOISE, PENALTY
+from service.learner import delay, hashing, hints, linear
+from service.learner.arrays import Numbers
+from service.learner.hint_part import Book
+from service.learner.hints import Hints
+from service.learner.linear_part import Sums
+from service.learner.memory import Memory
+
+
+class Valued(NamedTuple):
+    """What an impression is worth to the bidder, and by the estimate alone; nanos."""
+
+    value: float
+    mean: float
+
+
+@dataclass(frozen=True, slots=True)
+class ByFeatures:
+    """
+    The ridge of a snapshot, ready to price by.
+
+    Args:
+        weights: Estimate of the weights, in ceilings.
+        inverse: Of the matrix of the ellipsoid.
+        radius: How far the true weights may be from the estimate, in its norm.
+        lessons: Impressions behind it.
+        scale: Nanos of one ceiling.
+    """
+
+    weights: Numbers
+    inverse: Numbers
+    radius: float
+    lessons: int
+    scale: float
+
+    @staticmethod
+    def of(memory: Memory, terms: Terms) -> ByFeatures:
+        """
+        The ridge of what is learnt.
+
+        Raises:
+            UnreadableMemory: Learnt in another number of dimensions, or damaged.
+        """
+        sums = Sums.from_bytes(memory.part("linear"), int(terms.settings["dimensions"]))
+        ridge = sums.ridge(PENALTY, terms.scale)
+        radius = linear.ellipsoid_radius(ridge.log_det, PENALTY, NOISE, LENGTH, DELTA)
+        return ByFeatures(ridge.weights, ridge.inverse, float(radius), ridge.lessons, terms.scale)
+
+    def value(self, hashed: hashing.Hashed) -> Valued | None:
+        """Mean plus radius times width; None where features cancel out, and so say nothing."""
+        x = hashing.dense(hashed, len(self.weights))
+        square = float(x @ self.inverse @ x)
+        if square <= 0.0:
+            return None
+        mean = float(x @ self.weights)
+        return Valued(
+            max(mean + self.radius * math.sqrt(square), 0.0) * self.scale,
+            max(mean, 0.0) * self.scale,
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class ByHint:
+    """
+    The ratio of value to hint on a snapshot.
+
+    Args:
+        seen: What it was learnt from.
+        ratio: What hints are multiplied by.
+        mean: The ratio that is believed.
+    """
+
+    seen: Hints
+    ratio: float
+    mean: float
+
+    @staticmethod
+    def of(memory: Memory, terms: Terms) -> ByHint:
+        """The ratio of what is learnt: its quantile where the method bids one, else its mean."""
+        book = Book.from_bytes(memory.part("hints"))
+        seen = book.counted(_shares(book, memory, terms))
+        prior = hints.Prior(terms.typical, max(terms.prior_conversions, posterior.LEAST))
+        mean = hints.ratio(seen, prior)
+        order = terms.settings.get("order")
+        ratio = mean if order is None else hints.ratio_quantile(seen, prior, order)
+        return ByHint(seen, ratio, mean)
+
+
+def _shares(book: Book, memory: Memory, terms: Terms) -> list[float]:
+    if not book.cells:
+        return []
+    starts = np.asarray([float(cell.start_ms) for cell in book.cells])
+    ends = np.append(starts[1:], float(memory.clock_ms))
+    ages = memory.clock_ms - (starts + np.maximum(ends, starts)) / 2.0
+    mean_ms = delay_mean_ms(memory, terms)
+    shares: list[float] = delay.arrived_share(ages, mean_ms, terms.window_ms).tolist()
+    return shares
+
+
+@dataclass(frozen=True, slots=True)
+class Valuing:
+    """What a snapshot says of single opportunities; a hint comes before features."""
+
+    by_features: ByFeatures | None = None
+    by_hint: ByHint | None = None
+
+    def value(self, opportunity: Opportunity) -> Valued | None:
+        """What this one is worth; None where only what all are worth is known."""
+        hint = opportunity.value_hint
+        if self.by_hint is not None and hint is not None:
+            return Valued(hint * self.by_hint.ratio, hint * self.by_hint.mean)
+        return self.by_features.value(opportunity.hashed) if self.by_features is not None else None
+
+
+def valuing_of(memory: Memory, terms: Terms) -> Valuing | None:
+    """
+    What a snapshot says of single opportunities; None where all are alike.
+
+    Raises:
+        UnreadableMemory: See `ByFeatures.of`.
+    """
+    by_features = ByFeatures.of(memory, terms) if "dimensions" in terms.settings else None
+    by_hint = ByHint.of(memory, terms) if terms.hints else None
+    return Valuing(by_features, by_hint) if by_features or by_hint else None
