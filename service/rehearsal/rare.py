@@ -162,8 +162,9 @@ def rare_paths(seeds: Sequence[int]) -> list[Path]:
 
 
 def offered(entrant: str, case: Case) -> bool:
-    """Whether the service offers it: no tree where one value is worth many caps."""
-    return not METHODS[ENTRANTS[entrant][0]].by_law or case.ceiling <= RARE_FROM * CAP
+    """Whether the service offers it: no tree and no ellipsoid where one value is many caps."""
+    method = METHODS[ENTRANTS[entrant][0]]
+    return not (method.by_law or method.by_features) or case.ceiling <= RARE_FROM * CAP
 
 
 def jobs(

@@ -51,6 +51,9 @@ def by_formula(method: str, t: int, known: int, amount: int) -> float:
         return min(1.0, mean + bonus)
     if method == "bernstein-ucbid":
         return 1.0
+    if method == "linear":  # Nothing is known of an impression: its vector is the constant 1.
+        radius = 0.5 * math.sqrt(math.log(1.0 + known) + 2.0 * math.log(20.0)) + 1.0
+        return min(1.0, amount / SCALE / (1.0 + known) + radius / math.sqrt(1.0 + known))
     conversions = 1.0 + amount / SCALE
     if method == "bayes-ucb":
         failures = 1.0 + known - amount / SCALE
