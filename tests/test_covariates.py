@@ -28,6 +28,7 @@ ONE = {"ceiling": CAP, "typical": CAP // 2}
 PHONE: dict[str, Feature] = {"device": "phone", "hour": 13}
 DESK: dict[str, Feature] = {"device": "desk", "hour": 9}
 HINT = 3_000_000
+WINDOW_MS = 60_000
 
 
 def memory(worker: Worker) -> Memory:
@@ -67,6 +68,9 @@ async def test_features_travel_from_the_bid_to_the_price(migrated_url: str, arri
         for turn in range(40):
             for features, worth in ((PHONE, CAP // 2), (DESK, 0)):
                 await settled(worker, await worker.bid(features=features), worth, str(turn))
+        # Where values accrue, nothing is worthless before its window is over.
+        worker.pass_service_ms(2 * WINDOW_MS)
+        await worker.report(Report("lost", ticket=(await worker.bid()).ticket))
         await worker.learn()
         sums = Sums.from_bytes(memory(worker).part("linear"), 32)
         assert sums.lessons == 80

@@ -12,7 +12,7 @@ from typing import NamedTuple
 import numpy as np
 
 from service.decision import posterior
-from service.decision.counts import delay_mean_ms
+from service.decision.counts import delay_mean_ms, exposure
 from service.decision.opportunity import Opportunity
 from service.decision.terms import Terms
 from service.decision.value.linear import DELTA, LENGTH, NOISE, PENALTY
@@ -22,6 +22,7 @@ from service.learner.hint_part import Book
 from service.learner.hints import Hints
 from service.learner.linear_part import Sums
 from service.learner.memory import Memory
+from service.learner.rules import ACCRUES
 
 
 class Valued(NamedTuple):
@@ -59,7 +60,7 @@ class ByFeatures:
             UnreadableMemory: Learnt in another number of dimensions, or damaged.
         """
         sums = Sums.from_bytes(memory.part("linear"), int(terms.settings["dimensions"]))
-        ridge = sums.ridge(PENALTY, terms.scale)
+        ridge = sums.ridge(PENALTY, terms.scale, _arrived(memory, terms))
         radius = linear.ellipsoid_radius(ridge.log_det, PENALTY, NOISE, LENGTH, DELTA)
         return ByFeatures(ridge.weights, ridge.inverse, float(radius), ridge.lessons, terms.scale)
 
@@ -101,6 +102,16 @@ class ByHint:
         order = terms.settings.get("order")
         ratio = mean if order is None else hints.ratio_quantile(seen, prior, order)
         return ByHint(seen, ratio, mean)
+
+
+def _arrived(memory: Memory, terms: Terms) -> float:
+    """How much of all values of what was bought can have come by now, by the delay law."""
+    if terms.arrival != ACCRUES:
+        return 1.0
+    closed, still_open = memory.cells[: memory.closed], memory.cells[memory.closed :]
+    bought = memory.base.known + sum(cell.known for cell in closed)
+    bought += sum(cell.bought for cell in still_open)
+    return float(exposure(memory, terms).sum()) / bought if bought > 0 else 1.0
 
 
 def _shares(book: Book, memory: Memory, terms: Terms) -> list[float]:

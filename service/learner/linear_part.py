@@ -95,14 +95,19 @@ class Sums:
         moment = tuple(int.from_bytes(body[at : at + _WIDE], signed=True) for at in places)
         return Sums(square, moment, lessons)
 
-    def ridge(self, penalty: float, scale: float) -> linear.Ridge:
+    def ridge(self, penalty: float, scale: float, share: float = 1.0) -> linear.Ridge:
         """
-        The ridge estimate that these sums give, with values in units of `scale` nanos.
+        The ridge estimate that these sums give.
+
+        Args:
+            penalty: The ridge, lambda.
+            scale: Unit of the values, in nanos.
+            share: Of their value, how much impressions have had time to bring; each counts so far.
 
         Raises:
             UnreadableSums: Sums of squares that no impressions can have.
         """
-        matrix = self.square / float(PARTS**2) + penalty * np.eye(self.dimensions)
+        matrix = self.square * (share / PARTS**2) + penalty * np.eye(self.dimensions)
         moment = double([float(one) / (PARTS * scale) for one in self.moment])
         try:
             inverse, log_det = linear.factored(matrix, penalty)
@@ -116,8 +121,8 @@ def learn(state: bytes, lessons: Sequence[Lesson], rules: Rules) -> bytes:
     Add what impressions with features were worth; the part `linear` of a memory.
 
     An impression that was priced without features, by another method, teaches nothing here.
-    Where values accrue it counts from the moment it is bought, with what it has brought so far:
-    a mean that is low while windows are open.
+    Where values accrue it counts from the moment it is bought, with what it has brought so far;
+    how much of that can have come by now is known to who reads the sums.
     """
     reset, rest = begun_afresh(lessons)
     sums = Sums.from_bytes(b"" if reset else state, rules.dimensions)

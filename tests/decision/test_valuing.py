@@ -169,6 +169,30 @@ def _played(method: str) -> float:
     return total
 
 
+def test_open_windows_count_by_the_share_that_had_time_to_come() -> None:
+    """Half of all values due by now: the ridge of half of every impression, values in full."""
+    lessons = bought(PHONE, [EVENT // 2] * 400, won_ms=0)
+    said = {"arrival": "accrues", "window_ms": 10**9, "delay_mean_ms": 10**8}
+    # One delay law's median later; its cell began at 0 and still goes on, so its middle is half.
+    lessons.append(Lesson("tick", _TICK, round(2 * 10**8 * np.log(2.0))))
+    snapshot = made("linear", lessons, **said)
+    sums = Sums.from_bytes(snapshot.memory.part("linear"), 32)
+    x = hashing.dense(hashing.hashed(PHONE, KEY), 32)
+    expected = sums.ridge(1.0, CEILING, 0.5).upper(x, 0.5, 1.0, 0.05)
+    in_full = sums.ridge(1.0, CEILING).upper(x, 0.5, 1.0, 0.05)
+
+    assert priced(snapshot, PHONE) == pytest.approx(min(float(expected), 1.0) * CEILING, rel=0.02)
+    assert float(in_full) < 0.8 * float(expected)
+
+
+def test_nothing_is_taken_for_worthless_while_its_window_is_open() -> None:
+    """Impressions bought a moment ago, of which nothing was heard, leave the bid at the cap."""
+    won = [lesson for lesson in bought(PHONE, [0] * 900) if lesson.kind == "won"]
+
+    assert priced(made("linear", won, arrival="accrues"), PHONE) == CAP
+    assert priced(made("linear", bought(PHONE, [0] * 900)), PHONE) < CAP // 5
+
+
 def test_open_hints_do_not_pull_the_ratio_down() -> None:
     """Hints bought a moment ago count for as little as their values had time to come."""
     old = bought(PHONE, [EVENT // 2] * 200, hint=EVENT, won_ms=0)

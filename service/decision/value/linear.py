@@ -4,8 +4,9 @@ Abbasi-Yadkori, Pál, Szepesvári, "Improved algorithms for linear stochastic ba
 2011, Theorem 2: mean + radius x width, values in ceilings, so the noise is 1/2-sub-Gaussian;
 penalty 1, chance 0.05 to be outside, weights assumed no longer than 1 ceiling. It learns from
 wins alone. Analysed with a budget, and bids on a win of this kind, by Flajolet, Jaillet,
-"Real-time bidding with side information", NeurIPS 2017 (from memory). Values that come late,
-and open windows, are in neither.
+"Real-time bidding with side information", NeurIPS 2017 (from memory). Values that come late
+are in neither: while windows are open, all impressions count by the share of their values that
+had time to come, the same for all.
 """
 
 from __future__ import annotations
@@ -68,8 +69,8 @@ METHOD = Method(
     "NeurIPS 2011, Theorem 2, on features hashed after Weinberger et al., ICML 2009.",
     assumes="Second price; the mean value of an impression is linear in its hashed features, "
     "with weights no longer than one ceiling, and does not change; every value is known before "
-    "the next bid. Here values come late, and an impression counts with what it has brought so "
-    "far, so that means are low while windows are open.",
+    "the next bid. Here values come late: while windows are open, all impressions count by one "
+    "share, that of the values that had time to come.",
     guarantee=guarantee,
     settings={"dimensions": Setting(default=32, low=16, high=64, choices=SIZES)},
     published_bound=True,
