@@ -14,7 +14,7 @@ from service.learner.rules import RARE_FROM, Rules, tree_rules
 from service.ledger.entries import Entry
 
 # Their settings belong together: what is not said anew is not kept from before.
-AS_A_WHOLE = frozenset({"policy", "drift", "change"})
+AS_A_WHOLE = frozenset({"policy", "drift", "change", "return_target"})
 
 
 def filled(config: Mapping[str, Any]) -> tuple[dict[str, Any], list[str]]:

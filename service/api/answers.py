@@ -102,6 +102,12 @@ def _seconds(duration_ms: int) -> int:
     return duration_ms // 1000
 
 
+def _millionths(number: int) -> str:
+    """A plain decimal without needless zeros."""
+    whole, part = divmod(number, 10**6)
+    return f"{whole}.{part:06d}".rstrip("0").rstrip(".")
+
+
 _ENDINGS: tuple[tuple[str, str, Callable[[int], object]], ...] = (
     # The longer ending first, or the shorter one would take its names.
     ("_cpm_nanos", "_cpm", money.cpm_number),
@@ -133,6 +139,7 @@ _CONFIG: dict[str, tuple[str, Callable[[int], object]]] = {
     "allowance": ("allowance", money.nanos_text),
     "share": ("share", money.nanos_text),
     "cpm": ("cpm", lambda price_nanos: money.nanos_text(price_nanos * 1000)),
+    "value_per_unit": ("value_per_unit", _millionths),
 }
 
 

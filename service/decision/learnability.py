@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 
 from service import money
+from service.decision import spending
 from service.decision.counts import nothing
 from service.decision.method import Method
 from service.decision.methods import METHODS, settings_of
@@ -56,6 +57,10 @@ def defaults(partial: Mapping[str, Any]) -> tuple[dict[str, Any], list[str]]:
     value["expected"] = expected
     filled = {**partial, "value": value, "policy": policy}
     if "budget" in partial:
+        pacing = dict(partial.get("pacing") or {})
+        _fill(pacing, "method", spending.usual_pacing(filled), "pacing.method", taken)
+        filled["pacing"] = {"profile": None, **pacing}
+        filled.setdefault("return_target", None)
         allowance = max(1, min(value["typical"], partial["budget"] // ALLOWANCE_SHARE))
         _fill(filled, "allowance", allowance, "allowance", taken)
     return filled, taken

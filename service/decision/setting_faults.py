@@ -8,6 +8,7 @@ from typing import Any
 
 from service.decision.method import Method
 from service.decision.methods import METHODS, settings_of
+from service.decision.spending import spending_fault
 from service.learner.rules import RARE_FROM
 
 BAD_SETTING = "bad_setting"
@@ -36,6 +37,7 @@ def setting_fault(config: Mapping[str, Any]) -> Objection | None:
         or _said_fault(config, METHODS[name])
         or _policy_fault(policy, config["bid_cap"])
         or _value_fault(value, METHODS[name])
+        or spending_fault(config, METHODS[name])
     )
     return Objection(BAD_SETTING, sentence) if sentence else None
 

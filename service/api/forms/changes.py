@@ -15,11 +15,11 @@ from service.api.forms.line_items import (
     FeesForm,
     Grace,
     NotYetForm,
-    PacingForm,
     Window,
 )
 from service.api.forms.policies import Policy
 from service.api.forms.reading import StrictForm
+from service.api.forms.spending import PacingForm, ReturnTargetForm
 
 # The defaults below are never read: only the fields that came are changed.
 
@@ -64,6 +64,7 @@ class ChangeForm(NotYetForm):
     value: ValueChange = ValueChange()
     policy: Policy = Field(default_factory=dict)
     pacing: PacingForm = PacingForm()
+    return_target: ReturnTargetForm | None = None
     allowance: Amount | None = None
     kin: Kin | None = None
     fees: FeesForm | None = None

@@ -26,10 +26,10 @@ NAMES = {
     "memory_s": ("memory_ms", MS_PER_S),
     "value_silence_s": ("value_silence_ms", MS_PER_S),
 }
-_NOT_KEPT = {*NotYetForm.model_fields, "confirm", "reason", "profile"}
+_NOT_KEPT = {*NotYetForm.model_fields, "confirm", "reason"}
 _MAY_BE_NULL = {
     *("daily_budget", "ends_at", "delay_mean_s", "drift", "change", "rounds", "memory_s"),
-    *("value_silence_s", "allowance", "kin", "fees", "tripwires"),
+    *("value_silence_s", "allowance", "kin", "fees", "tripwires", "profile", "return_target"),
 }
 
 
@@ -114,6 +114,8 @@ def _named(form: ChangeForm) -> dict[str, Any]:
     said, full = form.model_dump(exclude_unset=True), form.model_dump()
     for name in AS_A_WHOLE & set(said.get("value") or {}):
         said["value"][name] = full["value"][name]
+    for name in AS_A_WHOLE & set(said):
+        said[name] = full[name]
     return said
 
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Annotated, Literal
 
-from pydantic import AfterValidator, Field, StrictBool
+from pydantic import Field, StrictBool
 
 from service.api.forms import refused
 from service.api.forms.fields import (
@@ -22,6 +22,7 @@ from service.api.forms.fields import (
 from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin, TripwiresForm
 from service.api.forms.policies import Policy
 from service.api.forms.reading import StrictForm
+from service.api.forms.spending import PacingForm, ReturnTargetForm
 
 DAY_S = 86_400
 
@@ -58,13 +59,6 @@ class ValueForm(StrictForm):
     hints: StrictBool = False
 
 
-class PacingForm(StrictForm):
-    """How the budget is spread; this release offers none."""
-
-    method: Annotated[Literal["none", "dual"], AfterValidator(refused.no_pacing)] = "none"
-    profile: refused.Profile = None
-
-
 class FeesForm(StrictForm):
     """What an impression costs beyond its price; budget, cap and holds include it."""
 
@@ -75,7 +69,6 @@ class FeesForm(StrictForm):
 class NotYetForm(StrictForm):
     """What the contract knows of a line item and this release refuses."""
 
-    return_target: refused.ReturnTarget = None
     control: refused.Control = None
 
 
@@ -97,6 +90,7 @@ class CreateForm(NotYetForm):
     value: ValueForm = ValueForm()
     policy: Policy | None = None
     pacing: PacingForm = PacingForm()
+    return_target: ReturnTargetForm | None = None
     allowance: Amount | None = None
     kin: Kin | None = None
     fees: FeesForm | None = None

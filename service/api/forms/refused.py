@@ -15,13 +15,6 @@ def not_offered(field: str, wish: str | None = None) -> NotOffered:
     return NotOffered("not_offered", sentence, {"field": field})
 
 
-def no_pacing(method: str) -> str:
-    """Refuse the pacing of the contract that this release does not do."""
-    if method != "none":
-        raise not_offered("pacing.method", "pacing other than none")
-    return method
-
-
 def _absent(field: str) -> BeforeValidator:
     def check(wish: object) -> None:
         if wish is not None and wish != {} and wish != []:
@@ -42,9 +35,7 @@ def _fixed(field: str) -> BeforeValidator:
 _NULL = WithJsonSchema({"nullable": True, "description": "Not offered in this release."})
 _NEVER = WithJsonSchema({"not": {}, "description": "Fixed at creation; leave it out."})
 
-ReturnTarget = Annotated[None, _absent("return_target"), _NULL]
 Control = Annotated[None, _absent("control"), _NULL]
-Profile = Annotated[None, _absent("pacing.profile"), _NULL]
 
 FixedId = Annotated[None, _fixed("id"), _NEVER]
 FixedCurrency = Annotated[None, _fixed("currency"), _NEVER]

@@ -49,7 +49,8 @@ def test_the_smallest_line_item_takes_the_documented_defaults() -> None:
             "change": None,
             "hints": False,
         },
-        "pacing": {"method": "none"},
+        "pacing": {"profile": None},
+        "return_target": None,
         "allowance": None,
         "kin": None,
         "fees": None,
@@ -58,7 +59,7 @@ def test_the_smallest_line_item_takes_the_documented_defaults() -> None:
     }
     assert set(defaults_taken(form)) == {
         *("auction", "flight.starts_at", "flight.time_zone", "spend_on", "grace_s"),
-        *("billing_grace_s", "strict", "value.arrival", "value.window_s", "pacing.method"),
+        *("billing_grace_s", "strict", "value.arrival", "value.window_s"),
         *("losses", "value.hints"),
     }
 
@@ -134,9 +135,6 @@ def test_a_bad_field_is_named_by_its_path(change: dict[str, Any], field: str) ->
 @pytest.mark.parametrize(
     "wish",
     [
-        {"pacing": {"method": "dual"}},
-        {"pacing": {"profile": [1, 2]}},
-        {"return_target": "2.0"},
         {"control": {"share": 0.1}},
     ],
 )
