@@ -17,12 +17,12 @@ FRESH = Memory.fresh().to_bytes()  # The state of a learner before its first les
 
 # What a damaged entry may raise; anything else is a fault of ours and must be seen.
 POISON = (ValueError, LookupError, ArithmeticError, TypeError, AttributeError)
-Entries = Sequence[tuple[str, Mapping[str, Any], int]]
+Entries = Sequence[tuple[str, Mapping[str, Any], *tuple[int, ...]]]
 
 
 def lesson(state: bytes, entries: Entries, config: Mapping[str, Any]) -> bytes:
     """
-    Fold entries (kind, body, service time) into a state under a line item's rules.
+    Fold entries (kind, body, service time, wall clock, cost) into a state under its rules.
 
     Raises:
         UnreadableMemory, UnreadableTree: The state is damaged, not an entry.

@@ -13,6 +13,7 @@ from typing import Any
 from service.learner import exptree_lessons
 from service.learner.cells import Cells, Sums
 from service.learner.growing import earlier_lesson, grow, tree_lesson, value_lesson
+from service.learner.lesson import SPENT
 from service.learner.lesson import Lesson as Lesson
 from service.learner.memory import Memory, Prior
 from service.learner.parts import PARTS
@@ -36,7 +37,9 @@ def fold(memory: Memory, lessons: Iterable[Lesson], rules: Rules) -> Memory:
     read = list(lessons)
     growing = _Growing(memory, rules)
     for lesson in read:
-        growing.take(lesson)
+        # What teaches no more moves no clock either, as if it had never been said.
+        if lesson.kind != SPENT:
+            growing.take(lesson)
     return _with_parts(growing.grown(), read, rules)
 
 

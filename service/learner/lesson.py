@@ -6,6 +6,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
+SPENT = "spent"
+
 
 @dataclass(frozen=True, slots=True)
 class Lesson:
@@ -16,8 +18,13 @@ class Lesson:
         kind: What happened.
         body: Its content; money in nanos.
         at_ms: Service time of the entry, never before that of the entry before it.
+        wall_ms: The same on the wall clock, for what goes by days; as little going back.
+        cost: Nanos that it turned into cost. Money is spent whatever is retracted: of an entry
+            that teaches no more this is left, under the kind `SPENT`.
     """
 
     kind: str
     body: Mapping[str, Any]
     at_ms: int = 0
+    wall_ms: int = 0
+    cost: int = 0

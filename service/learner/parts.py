@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
-from service.learner import hint_part, linear_part, market_part
+from service.learner import hint_part, linear_part, market_part, pace_part, return_part
 from service.learner.lesson import Lesson
 from service.learner.rules import Rules
 
@@ -29,8 +29,12 @@ class Part:
     learn: Callable[[bytes, Sequence[Lesson], Rules], bytes]
 
 
+PACE, RETURN = "pace", "return"
+# By name, in the order in which a memory keeps them.
 PARTS: dict[str, Part] = {
     "hints": Part(lambda rules: rules.hints, hint_part.learn),
     "linear": Part(lambda rules: rules.dimensions > 0, linear_part.learn),
     market_part.NAME: Part(market_part.wanted, market_part.learn),
+    PACE: Part(lambda rules: rules.paced, lambda state, said, _: pace_part.learn(state, said)),
+    RETURN: Part(lambda rules: rules.returning is not None, return_part.learn),
 }

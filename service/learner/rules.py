@@ -7,7 +7,8 @@ from dataclasses import dataclass
 from itertools import count
 from typing import Any
 
-from service.learner import exptree_rules
+from service.learner import exptree_rules, return_target
+from service.learner.pacing import STEP
 from service.learner.partition import Ticks
 
 ONCE = "once"
@@ -93,6 +94,8 @@ class Rules:
         tree: The game of the tree of exponential weights, where a method grows one.
         dimensions: Length of the vector of features, where a method reads them; else 0.
         hints: Whether the caller's own predictions are calibrated.
+        paced: Whether a multiplier holds spend to a rate; which one, the stream says.
+        returning: The return target and how its multiplier moves; None for no target.
     """
 
     ceiling: int
@@ -109,6 +112,8 @@ class Rules:
     market: MarketRules | None = None
     dimensions: int = 0
     hints: bool = False
+    paced: bool = False
+    returning: return_target.Rules | None = None
 
     @property
     def cell_ms(self) -> int:
@@ -138,6 +143,8 @@ class Rules:
             MarketRules.of(config["bid_cap"], priced=config.get("losses", "bare") == "priced"),
             dimensions_of(config["policy"]),
             bool(value.get("hints")),
+            is_paced(config),
+            return_rules(config),
         )
 
 
@@ -153,6 +160,19 @@ def tree_rules(config: Mapping[str, Any]) -> exptree_rules.Rules | None:
         return None
     ticks = Ticks.fitting(config["bid_cap"])
     return exptree_rules.Rules(ticks, config["value"]["ceiling"], win_only=TREES[method])
+
+
+def is_paced(config: Mapping[str, Any]) -> bool:
+    """Whether a line item names a method of pacing."""
+    return bool((config.get("pacing") or {}).get("method", "none") != "none")
+
+
+def return_rules(config: Mapping[str, Any]) -> return_target.Rules | None:
+    """The return target of a line item; one usual event of value moves lambda by one step."""
+    wish = config.get("return_target")
+    if wish is None:
+        return None
+    return return_target.Rules(wish["value_per_unit"], STEP, config["value"]["typical"])
 
 
 def drift_of(said: Mapping[str, Any] | None) -> Drift | None:

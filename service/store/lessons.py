@@ -13,7 +13,9 @@ from service.ledger.entries import Body
 from service.store.database import Reading, Writing, among
 from service.store.leases import read_configs
 
-Lesson = tuple[str, Body, int]  # Kind, body and service time.
+# Kind, body, service time, wall clock and cost.
+Lesson = tuple[str, Body, int, int, int]
+SPENT = "spent"  # The kind of an entry of which only the cost is left.
 ROWS_MAX = 2000
 
 
@@ -49,8 +51,11 @@ def read(
     for row in rows:
         body = again.get(row.seq, _body(row.body))
         rest = None if body is None else left(row.seq, row.kind, body, cancelled)
+        times = (row.service_ms, row.at_ms, row.cost)
         if rest is not None:
-            kept.append((row.seq, (row.kind, rest, row.service_ms)))
+            kept.append((row.seq, (row.kind, rest, *times)))
+        elif row.cost:
+            kept.append((row.seq, (SPENT, {}, *times)))
     end = rows[-1].seq if rows else seq
     return Page([lesson for _, lesson in kept], [n for n, _ in kept], len(rows), end)
 
@@ -144,7 +149,7 @@ def _values_again(
 
 
 _AFTER = text(
-    "SELECT seq, kind, bid, at_ms, service_ms, body FROM stream"
+    "SELECT seq, kind, bid, at_ms, service_ms, cost, body FROM stream"
     " WHERE line_item = :id AND seq > :seq ORDER BY seq LIMIT :limit"
 )
 _OF_BIDS = among(

@@ -57,7 +57,7 @@ def create(connection: Writing, config: Mapping[str, Any], wall_ms: int) -> None
         {"id": config["id"], "budget": config["budget"], "now": wall_ms},
     )
     books = Books(connection, [config["id"]], wall_ms)
-    books.post(config["id"], Entry("create", {"budget": config["budget"]}))
+    books.post(config["id"], Entry("create", _money(config)))
     books.save()
 
 
@@ -96,8 +96,7 @@ def change(connection: Writing, config: Mapping[str, Any], version: int, wall_ms
     if today in books.days:
         limit = config["daily_budget"] or NO_LIMIT
         books.replace_day(set_day_budget(books.days[today], limit))
-    money = {"budget": config["budget"], "daily_budget": config["daily_budget"]}
-    books.post(name, Entry("edit", {"version": version + 1, **money}))
+    books.post(name, Entry("edit", {"version": version + 1, **_money(config)}))
     books.save()
 
 
@@ -123,6 +122,19 @@ def one(connection: Reading | Writing, line_item: str) -> Row:
     if line_item not in found:
         raise no_such_line_item()
     return found[line_item]
+
+
+def _money(config: Mapping[str, Any]) -> dict[str, Any]:
+    """What of a configuration says how money may be spent, so that a fold knows it by then."""
+    return {
+        "budget": config["budget"],
+        "daily_budget": config["daily_budget"],
+        "ends_ms": config["flight"]["ends_ms"],
+        "zone": config["flight"]["time_zone"],
+        "pacing": config.get("pacing"),
+        "guess": config["value"]["expected"]["per_impression"],
+        "grace_ms": config["grace_ms"],
+    }
 
 
 _BY_ID = among(

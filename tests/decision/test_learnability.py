@@ -57,6 +57,7 @@ def test_the_default_guess_is_half_the_cap_weighed_as_one_conversion() -> None:
         "value.expected.per_impression",
         "value.expected.conversions",
         "allowance",
+        "pacing.method",
     }
     assert filled["allowance"] == 2 * EUR
     assert "expected" not in given["value"]

@@ -45,7 +45,7 @@ def test_entries_are_folded_in_the_order_of_seq(migrated_url: str) -> None:
     begin(database)
 
     def fold(state: bytes, lessons: list[learners.Lesson], _: dict[str, Any]) -> bytes:
-        read.extend(body["n"] for kind, body, _ in lessons if kind == "mark")
+        read.extend(body["n"] for kind, body, *_ in lessons if kind == "mark")
         return state
 
     for n in range(10):
