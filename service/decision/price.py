@@ -74,6 +74,7 @@ class Ready:
         law: What prices are drawn from, for methods that bid by a law.
         market: What may be offered where one pays what one bids.
         valuing: What single opportunities are worth, where not all are alike.
+        hold: What budget and return target make of a value.
     """
 
     memory: Memory
@@ -85,6 +86,7 @@ class Ready:
     law: Law | None = None
     market: Market = UNTOLD
     valuing: Valuing | None = None
+    hold: brakes.Brakes = brakes.NO_BRAKES
 
     def propose(self, opportunity: Opportunity, generator: Generator) -> Proposal | Passed:
         """
@@ -125,8 +127,8 @@ class Ready:
             own = self.valuing.value(opportunity)
             if own is not None:
                 most = None if self.most is None else own.mean
-                bid = _bid(lambda: np.asarray(own.value), self.terms)
-                return _proposal(bid, most, self.terms)
+                bid = _bid(lambda: self.hold.bid(np.asarray(own.value)), self.terms)
+                return _proposal(bid, most, self.terms, self.hold)
         draw, counts, terms = METHODS[self.terms.method].draw, self.counts, self.terms
         if not self.draws or draw is None or counts is None or isinstance(self.answer, Passed):
             return self.answer
@@ -141,7 +143,8 @@ class Ready:
         return self._priced(lambda: quantile(counts, terms, order))
 
     def _priced(self, offer: Offer) -> Proposal | Passed:
-        return _proposal(_bid(offer, self.terms), self.most, self.terms)
+        bid = _bid(lambda: self.hold.bid(offer()), self.terms)
+        return _proposal(bid, self.most, self.terms, self.hold)
 
 
 def ready(memory: Memory, terms: Terms) -> Ready:
@@ -156,16 +159,19 @@ def ready(memory: Memory, terms: Terms) -> Ready:
     most = brakes.allowance_bid(total, counts, guided) if method.learns else None
     if method.learns and brakes.no_value(total, guided):
         return Ready(memory, guided, counts, most, Passed(NO_VALUE), draws=False)
-    bid = _bid(lambda: method.index(counts, guided), guided)
-    answer = _proposal(bid, most, guided)
-    draws = method.draw is not None
     try:
+        hold = brakes.brakes_of(memory, counts, guided)
         valuing = valuing_of(memory, guided)
     except UnreadableMemory:
-        # Learnt in another number of dimensions; a refold is on its way.
+        # Learnt under another target or in other dimensions; a refold is on its way.
         return Ready(memory, guided, counts, most, Passed(LEARNER_HALTED), draws=False)
+    bid = _bid(lambda: hold.bid(method.index(counts, guided)), guided)
+    answer = _proposal(bid, most, guided, hold)
     market = market_of(memory, guided, answer.price if isinstance(answer, Proposal) else 0.0)
-    return Ready(memory, guided, counts, most, answer, draws, market=market, valuing=valuing)
+    draws = method.draw is not None
+    return Ready(
+        *(memory, guided, counts, most, answer, draws), market=market, valuing=valuing, hold=hold
+    )
 
 
 def _by_law(memory: Memory, terms: Terms, tree: exptree_rules.Rules, counts: Counts) -> Ready:
@@ -178,10 +184,12 @@ def _by_law(memory: Memory, terms: Terms, tree: exptree_rules.Rules, counts: Cou
     return Ready(memory, terms, counts, None, median, draws=True, law=law)
 
 
-def _proposal(bid: float | None, most: float | None, terms: Terms) -> Proposal | Passed:
+def _proposal(
+    bid: float | None, most: float | None, terms: Terms, hold: brakes.Brakes
+) -> Proposal | Passed:
     if bid is None:
         return Passed(LEARNER_HALTED)
-    set_by = BY_VALUE
+    set_by = hold.set_by or BY_VALUE
     if most is not None and bid > most:
         bid, set_by = most, BY_ALLOWANCE
     if bid >= terms.cap:

@@ -6,9 +6,9 @@ from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from typing import Any
 
-from service.learner import exptree_rules
+from service.learner import exptree_rules, return_target
 from service.learner.memory import Prior
-from service.learner.rules import Drift, drift_of, tree_rules
+from service.learner.rules import Drift, drift_of, is_paced, return_rules, tree_rules
 
 WINDOW_MS = 604_800_000
 
@@ -36,6 +36,9 @@ class Terms:
         allowance: How much may be lost to learning; None for no limit.
         tree: The game of the tree of exponential weights, where the method grows one.
         hints: Whether the caller's own predictions are bid by.
+        paced: Whether a multiplier holds spend to a rate.
+        returning: The return target; None for none.
+        strict_return: Whether it may not be missed on the way.
     """
 
     currency: str
@@ -55,6 +58,9 @@ class Terms:
     allowance: int | None = None
     tree: exptree_rules.Rules | None = None
     hints: bool = False
+    paced: bool = False
+    returning: return_target.Rules | None = None
+    strict_return: bool = False
 
     @property
     def scale(self) -> float:
@@ -96,4 +102,7 @@ class Terms:
             allowance=config.get("allowance"),
             tree=tree_rules(config),
             hints=bool(value.get("hints")),
+            paced=is_paced(config),
+            returning=return_rules(config),
+            strict_return=bool((config.get("return_target") or {}).get("strict")),
         )
