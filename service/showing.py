@@ -13,6 +13,7 @@ from service.decision.terms import Terms
 from service.guard.gate import clear
 from service.learner.memory import Memory
 from service.learner.tally import Tally
+from service.spending import show_spending
 from service.store.reading import Facts
 
 
@@ -30,7 +31,7 @@ def show(facts: Facts) -> dict[str, Any]:
         "learner": _learner(facts, memory.total),
         "money": _money(facts),
         "day": _day(facts),
-        "pacing": {"method": "none"},
+        "pacing": show_spending(facts, memory),
         "learnability": learnability(facts.row.config),
         "feed": {"last_ms": facts.feed, "quarantined": facts.quarantined},
         "passes_of_last_1000": facts.passes,

@@ -15,7 +15,8 @@ STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk"}
 # What several stories need and none of them owns.
 SHARED = {
     *("backlog", "catalog", "configuring", "connecting", "leasing", "patience", "showing"),
-    *("correcting", "ordering", "pulse", "quarantining", "teaching", "threads", "winding"),
+    *("correcting", "ordering", "pulse", "quarantining", "spending", "teaching", "threads"),
+    "winding",
 }
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "rehearsal"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}

@@ -119,6 +119,7 @@ _MOMENTS = {
     "by_ms": "by",
     "last_ms": "last",
     "published_ms": "published_at",
+    "money_ends_ms": "money_ends_at",
 }
 _CONFIG: dict[str, tuple[str, Callable[[int], object]]] = {
     "budget": ("budget", money.nanos_text),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from itertools import count
@@ -168,11 +169,18 @@ def is_paced(config: Mapping[str, Any]) -> bool:
 
 
 def return_rules(config: Mapping[str, Any]) -> return_target.Rules | None:
-    """The return target of a line item; one usual event of value moves lambda by one step."""
+    """
+    The return target of a line item, with the scale of what a win does to it.
+
+    By the guess, values of impressions spread by the root of usual value times mean value: with
+    that for a scale a win moves ln lambda by about one step of chance, however rare values are.
+    """
     wish = config.get("return_target")
     if wish is None:
         return None
-    return return_target.Rules(wish["value_per_unit"], STEP, config["value"]["typical"])
+    value = config["value"]
+    scale = math.isqrt(value["typical"] * value["expected"]["per_impression"])
+    return return_target.Rules(wish["value_per_unit"], STEP, max(scale, 1))
 
 
 def drift_of(said: Mapping[str, Any] | None) -> Drift | None:
