@@ -50,6 +50,20 @@ async def test_pacing_is_the_default_where_there_is_a_rate(app_client: httpx.Asy
         assert "pacing.method" in created["defaults"]
 
 
+async def test_the_state_tells_pacing_and_return_in_words_and_numbers(
+    app_client: httpx.AsyncClient,
+) -> None:
+    """Over HTTP, without an int of ours: money as text, the target as it is meant."""
+    target = {"value_per_unit": "2.5", "strict": True}
+    await create(app_client, daily_budget="1.00", return_target=target)
+    block = (await app_client.get("/v1/line-items/a/state")).json()["pacing"]
+    assert (block["method"], block["profile"]) == ("dual", None)
+    assert block["return_target"]["value_per_unit"] == 2.5
+    assert "published results differ" in block["return_target"]["says"]
+    assert "no theorem covers" in block["guarantee"]
+    assert not [name for name in block if name.endswith(("_nanos", "_ms"))]
+
+
 @pytest.mark.parametrize(
     "wish",
     [
