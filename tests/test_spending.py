@@ -90,6 +90,22 @@ async def test_an_edit_of_the_budget_reaches_the_plan_and_a_rebuild_agrees(
         assert (await spending(worker))["return_target"]["paid_nanos"] == 3 * PRICE
 
 
+async def test_another_target_passes_until_the_stream_is_read_by_it(migrated_url: str) -> None:
+    """No bid is made by a multiplier of the target before."""
+    async with working(migrated_url) as worker:
+        target = {"value_per_unit": 2_000_000, "strict": False}
+        await worker.create(policy=MEAN, return_target=target)
+        await worker.learn()
+        assert (await worker.bid()).set_by == "return_target"
+        change = {"return_target": {**target, "value_per_unit": 3_000_000}}
+        await worker.operator.patch(NAME, change, 1, None, None, "tester")
+        await worker.upkeep.follow()
+        assert (await worker.bid()).reason == "learner_halted"
+        assert (await spending(worker))["return_target"]["so_far"] is None
+        await worker.learn()
+        assert (await worker.bid()).set_by == "return_target"
+
+
 async def test_a_retracted_win_has_still_cost_its_money(migrated_url: str) -> None:
     """The day's spend keeps it, the return forgets it, and a fold from zero agrees."""
     async with working(migrated_url) as worker:

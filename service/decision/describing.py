@@ -237,6 +237,8 @@ def _guarantee(ready: Ready, total: Tally) -> str:
         ("bids shaded for a first price", ready.terms.auction == "first"),
         ("a price that is taken or left", ready.terms.auction == "fixed"),
         ("bidding by hints", ready.terms.hints),
+        ("pacing that lowers bids now", ready.hold.mu > 0),
+        ("a return target", ready.hold.target is not None),
     )
     if not strains:
         return said

@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 
 from service.decision.brakes import NO_BRAKES, Brakes
+from service.decision.describing import describe
 from service.decision.learnability import defaults
 from service.decision.opportunity import Opportunity
 from service.decision.price import Passed, Proposal, ready
@@ -125,6 +126,15 @@ def test_a_state_of_another_target_passes_until_it_is_folded_again() -> None:
     assert ready(returned(other, 0), terms).answer == Passed("learner_halted")
     damaged = Memory(base=KNOWN, parts=((PACE, b"{"),))
     assert ready(damaged, made({})).answer == Passed("learner_halted")
+
+
+def test_a_brake_that_works_is_named_beside_the_guarantee() -> None:
+    """A theorem without budget or target is not shown as if it held with them."""
+    words = str(describe(ready(paced(UNITS), made({})))["guarantee"])
+    assert words.startswith("No theorem covers this method together with pacing")
+    assert "No theorem" not in str(describe(ready(paced(0), made({})))["guarantee"])
+    held = made(target(3))
+    assert "a return target" in str(describe(ready(returned(held, 0), held))["guarantee"])
 
 
 def test_no_brakes_give_the_value_back() -> None:
