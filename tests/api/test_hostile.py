@@ -43,7 +43,7 @@ LINE_ITEM = {
     "losses": "bare",
     "tripwires": {"value_silence_s": 60},
     "policy": {"method": "flat", "price_cpm": 2.0},
-    "pacing": {"method": "none"},
+    "pacing": {"method": "none", "profile": None},
     "confirm": "learning_cost",
 }
 CREATE_FIELDS = {
@@ -85,6 +85,8 @@ CREATE_FIELDS = {
     "policy.price_cpm": "money",
     "pacing": "object",
     "pacing.method": "choice",
+    "pacing.profile": "object",
+    "return_target": "object",
     "confirm": "ascii",
 }
 FIXED = {"id", "currency", "auction", "flight.time_zone", "spend_on", "value.arrival"}
