@@ -82,9 +82,11 @@ CASES = {case.name: case for case in (CAP_BINDS, BASKETS, RAREST, SMALL, OFTEN)}
 RARE = Market(RIVALS, BASKETS.values)
 
 WITHOUT = ", no prior"
+# A price that somebody sets learns nothing, and these markets have no features to read.
+LEFT_OUT = {"flat", "linear"}
 # Every value method as it is by default, and those that take a prior also without one.
 ENTRANTS: dict[str, tuple[str, float]] = {
-    **{name: (name, 1.0) for name, method in METHODS.items() if name != "flat"},
+    **{name: (name, 1.0) for name in METHODS if name not in LEFT_OUT},
     **{
         name + WITHOUT: (name, 0.0)
         for name, method in METHODS.items()
