@@ -6,7 +6,7 @@ from typing import Any
 
 import pytest
 
-from service.learner.rules import CELLS, Drift, Rules, drift_of, tree_rules
+from service.learner.rules import CELLS, Drift, MarketRules, Rules, drift_of, tree_rules
 from tests.decision.invented import CAP, CEILING, config, with_value
 
 DAY_MS = 86_400_000
@@ -16,7 +16,8 @@ def test_a_configuration_without_wishes() -> None:
     """No forgetting, no detector, no tree, and windows that never stand still."""
     rules = Rules.from_config(config("ucbid"))
 
-    assert rules == Rules(CEILING, "once", 604_800_000, "won")
+    market = MarketRules.of(CAP, priced=True)
+    assert rules == Rules(CEILING, "once", 604_800_000, "won", market=market)
 
 
 def test_every_wish_is_read() -> None:
