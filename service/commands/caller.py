@@ -28,12 +28,16 @@ class Learnt:
     """What a line item's state says at the end; money in nanos, values per impression.
 
     Attributes:
-        known: Wins whose value is known; with none of them the mean is nothing.
+        known: Wins whose value is known.
+        awaited: Wins whose window is still open; they count by their age.
+        behind: Entries of the stream that are not taught yet.
     """
 
     budget: int
     spent: int
     known: int
+    awaited: int
+    behind: int
     mean: int
     low: int
     high: int
@@ -77,12 +81,14 @@ async def create(service: Service, body: Mapping[str, object]) -> None:
 
 async def learnt(service: Service, line_item: str, wins: int) -> Learnt:
     """
-    Wait until the values of all wins are taught, then say what was learnt.
+    Wait until all wins and values are taught, then say what was learnt.
+
+    Windows may still be open: they close with the next entry, and no traffic brings one.
 
     Args:
         service: With a key that may read.
         line_item: Its id.
-        wins: How many wins must have become known.
+        wins: How many wins must have been taught.
 
     Raises:
         Unanswered: They were not taught within `TAUGHT_S_MAX` seconds.
@@ -90,10 +96,11 @@ async def learnt(service: Service, line_item: str, wins: int) -> Learnt:
     end = time.monotonic() + TAUGHT_S_MAX
     while True:
         seen = from_state(read(await service.get(f"/v1/line-items/{line_item}/state")))
-        if seen.known == wins:
+        taught = seen.known + seen.awaited
+        if taught == wins and not seen.behind:
             return seen
         if time.monotonic() > end:
-            raise Unanswered(f"{line_item} knows {seen.known} of {wins} wins, and no more came.")
+            raise Unanswered(f"{line_item} was taught {taught} of {wins} wins, and no more came.")
         await asyncio.sleep(_POLL_S)
 
 
@@ -104,6 +111,8 @@ def from_state(state: Mapping[str, Any]) -> Learnt:
         budget=money.nanos(books["budget"]),
         spent=money.nanos(books["spent"]),
         known=certainty["known"],
+        awaited=certainty["awaited"],
+        behind=state["learner"]["entries_behind"],
         mean=money.nanos(certainty["mean"] or 0),
         low=money.nanos(certainty["low"]),
         high=money.nanos(certainty["high"]),
