@@ -80,7 +80,7 @@ def _day_ticket() -> Planned:
 
 
 def _season_pass() -> Planned:
-    # Its window is two seconds, or the demo would wait for days until it has learnt.
+    # Its window is two seconds, or nearly all of it would be open when the table is made.
     value = {"ceiling": "50.00", "typical": "2.00", "arrival": "accrues", "window_s": 2}
     body = _body("season-pass", "Season passes", "40.00", value, "posterior-quantile")
     return Planned(

@@ -8,9 +8,10 @@ from __future__ import annotations
 
 from bisect import bisect_right
 
+from service.learner.change import UNITS_PER_NAT
 from service.learner.memory import Cell, Memory
 from service.learner.rules import ACCRUES, KEPT, Drift, Rules
-from service.learner.watch import UNITS, Watch, step
+from service.learner.watch import Watch, step
 
 KEPT_PIECE = KEPT // 8  # What is kept beyond the horizon lies in at most some sixteen cells.
 
@@ -201,7 +202,7 @@ class Cells:
         # Rare values are counted, or a single large one would sound the alarm.
         hits = cell.converted if rules.rare else cell.amount / rules.ceiling
         self.watch = step(
-            self.watch, cell.known, round(hits * UNITS), cell.start_ms, rules.ratio or 1.0,
+            self.watch, cell.known, round(hits * UNITS_PER_NAT), cell.start_ms, rules.ratio or 1.0,
             rules.alarm,
         )  # fmt: skip
         if self.watch.alarms == alarms or not rules.restarts:

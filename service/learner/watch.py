@@ -9,10 +9,10 @@ step, and learning the usual rate from all cells before it, are our own.
 
 from __future__ import annotations
 
-import math
 from typing import NamedTuple
 
-UNITS = 2**40  # Scores and hits are kept in whole parts of it.
+from service.learner.change import UNITS_PER_NAT, bernoulli_increments
+
 REFERENCE_HITS = 20  # Below that nobody can say what is usual.
 
 
@@ -61,9 +61,9 @@ def step(watch: Watch, trials: int, hits: int, start_ms: int, ratio: float, high
     """
     if trials <= 0:
         return watch
-    if watch.hits < REFERENCE_HITS * UNITS:
+    if watch.hits < REFERENCE_HITS * UNITS_PER_NAT:
         return watch._replace(trials=watch.trials + trials, hits=watch.hits + hits)
-    usual = watch.hits / (watch.trials * UNITS)
+    usual = watch.hits / (watch.trials * UNITS_PER_NAT)
     # Both rates stay away from 0 and 1, where one impression would decide alone.
     often, seldom = min(usual * ratio, (1.0 + usual) / 2.0), usual / ratio
     up = max(0, watch.up + score(trials, hits, usual, often))
@@ -78,7 +78,7 @@ def step(watch: Watch, trials: int, hits: int, start_ms: int, ratio: float, high
         up_ms=start_ms if watch.up == 0 else watch.up_ms,
         down_ms=start_ms if watch.down == 0 else watch.down_ms,
     )
-    if max(up, down) < high * UNITS:
+    if max(up, down) < high * UNITS_PER_NAT:
         return seen
     changed_ms = seen.up_ms if up >= down else seen.down_ms
     return FIRST._replace(alarms=watch.alarms + 1, changed_ms=changed_ms)
@@ -89,7 +89,5 @@ def score(trials: int, hits: int, usual: float, other: float) -> int:
     # Where nothing or everything has hit, no other rate can be told from the usual one.
     if not 0.0 < usual < 1.0:
         return 0
-    share = hits / UNITS
-    misses = max(trials - share, 0.0)
-    nats = share * math.log(other / usual) + misses * math.log((1.0 - other) / (1.0 - usual))
-    return round(nats * UNITS)
+    success, failure = bernoulli_increments(usual, other)
+    return (hits * success + max(trials * UNITS_PER_NAT - hits, 0) * failure) // UNITS_PER_NAT

@@ -7,7 +7,8 @@ import math
 import numpy as np
 import pytest
 
-from service.learner.watch import FIRST, REFERENCE_HITS, UNITS, Watch, score, step
+from service.learner.change import UNITS_PER_NAT
+from service.learner.watch import FIRST, REFERENCE_HITS, Watch, score, step
 
 HIGH = 8.0
 
@@ -16,7 +17,7 @@ def watched(hits: list[int], trials: int, ratio: float, start: Watch = FIRST) ->
     """The watch after each cell of so many trials."""
     seen, watch = list[Watch](), start
     for at, count in enumerate(hits):
-        watch = step(watch, trials, count * UNITS, at, ratio, HIGH)
+        watch = step(watch, trials, count * UNITS_PER_NAT, at, ratio, HIGH)
         seen.append(watch)
     return seen
 
@@ -25,19 +26,21 @@ def test_a_score_is_the_log_likelihood_ratio() -> None:
     """3 of 50 at 0.04 against 0.02: 3 ln 2 + 47 ln(0.96 / 0.98) by the formula of Bernoulli."""
     exact = 3 * math.log(2.0) + 47 * math.log(0.96 / 0.98)
 
-    assert score(50, 3 * UNITS, 0.02, 0.04) / UNITS == pytest.approx(exact, rel=1e-11)
+    assert score(50, 3 * UNITS_PER_NAT, 0.02, 0.04) / UNITS_PER_NAT == pytest.approx(
+        exact, rel=1e-11
+    )
     assert score(50, 0, 0.0, 0.0) == 0
 
 
 def test_one_step_by_hand() -> None:
     """Where the usual is 20 of 1,000, four in fifty score ln-likelihoods of twice and half it."""
-    usual = FIRST._replace(trials=1000, hits=20 * UNITS)
-    seen = step(usual, 50, 4 * UNITS, 7, 2.0, HIGH)
+    usual = FIRST._replace(trials=1000, hits=20 * UNITS_PER_NAT)
+    seen = step(usual, 50, 4 * UNITS_PER_NAT, 7, 2.0, HIGH)
     up = 4 * math.log(2.0) + 46 * math.log(0.96 / 0.98)
 
-    assert seen.up / UNITS == pytest.approx(up, rel=1e-11)
+    assert seen.up / UNITS_PER_NAT == pytest.approx(up, rel=1e-11)
     assert (seen.down, seen.up_ms, seen.alarms) == (0, 7, 0)
-    assert (seen.trials, seen.hits) == (1050, 24 * UNITS)
+    assert (seen.trials, seen.hits) == (1050, 24 * UNITS_PER_NAT)
 
 
 def test_nothing_is_looked_for_before_the_usual_is_known() -> None:
@@ -75,7 +78,7 @@ def test_a_change_is_found_soon_and_dated(after: float) -> None:
 
 def test_an_alarm_begins_anew() -> None:
     """What was usual is forgotten; only the count of alarms and the date are kept."""
-    usual = FIRST._replace(trials=10_000, hits=100 * UNITS)
+    usual = FIRST._replace(trials=10_000, hits=100 * UNITS_PER_NAT)
     seen = watched([9, 9, 9], 10, 2.0, usual)
     alarm = next(watch for watch in seen if watch.alarms)
 
@@ -84,7 +87,7 @@ def test_an_alarm_begins_anew() -> None:
 
 def test_shares_of_the_scale_count_like_hits() -> None:
     """Half a hit twice is one hit, so bounded values are watched by the same formula."""
-    usual = FIRST._replace(trials=100, hits=30 * UNITS)
-    halves = step(usual, 2, UNITS // 2 + UNITS // 2, 1, 2.0, HIGH)
+    usual = FIRST._replace(trials=100, hits=30 * UNITS_PER_NAT)
+    halves = step(usual, 2, UNITS_PER_NAT // 2 + UNITS_PER_NAT // 2, 1, 2.0, HIGH)
 
-    assert halves == step(usual, 2, UNITS, 1, 2.0, HIGH)
+    assert halves == step(usual, 2, UNITS_PER_NAT, 1, 2.0, HIGH)
