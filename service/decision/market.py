@@ -92,25 +92,26 @@ def market_of(memory: Memory, terms: Terms, value: float) -> Market:
     Args:
         value: What a bid is made for now, in nanos: it says how finely to try.
     """
-    counted = state_of(memory, terms)
+    counted = state_of(memory, terms, first_only=True)
     tried = _tried(counted.top, value)
     menus = {
         source: _menu(counted.counts((auction, source)), tried)
         for auction, source in counted.sources
-        if auction == "first"
     }
     return Market(menus, _untold(counted.top, tried))
 
 
-def state_of(memory: Memory, terms: Terms) -> MarketState:
+def state_of(memory: Memory, terms: Terms, first_only: bool = False) -> MarketState:
     """
-    The counts of a memory; empty ones where it has none.
+    The counts of a memory, perhaps of first-price auctions only; empty ones where it has none.
 
     Raises:
         UnreadableMarket: They are damaged.
     """
     part = memory.part(NAME)
-    return read(part) if part else MarketState(MarketRules.of(terms.cap, priced=False).top)
+    return (
+        read(part, first_only) if part else MarketState(MarketRules.of(terms.cap, priced=False).top)
+    )
 
 
 def drawable(counts: Counts) -> Counts:

@@ -127,9 +127,14 @@ def joined(counts: Counts, cells_max: int) -> Counts:
     return Counts(ticks, tuple((p, (a, b, c, d, e)) for p, (a, b, c, d, e) in kept))
 
 
-def read(state: bytes) -> MarketState:
+def read(state: bytes, first_only: bool = False) -> MarketState:
     """
     Read what `to_bytes` wrote.
+
+    Args:
+        state: From there.
+        first_only: Leave out what is not of first-price auctions. It comes later in the bytes,
+            so a line item that never shades reads nothing with each snapshot.
 
     Raises:
         UnreadableMarket: Another form, or not whole.
@@ -141,17 +146,19 @@ def read(state: bytes) -> MarketState:
     if (name, form) != (_NAME, FORM):
         raise UnreadableMarket("another form")
     try:
-        found = _sources(body, sources)
+        found = _sources(body, sources, first_only)
     except (struct.error, IndexError, UnicodeDecodeError) as error:
         raise UnreadableMarket("cut short") from error
     return MarketState(top, level, clock_ms, rounds, forgotten, found)
 
 
-def _sources(body: bytes, sources: int) -> dict[Key, Rows]:
+def _sources(body: bytes, sources: int, first_only: bool) -> dict[Key, Rows]:
     found: dict[Key, Rows] = {}
     at = _HEAD.size
     for _ in range(sources):
         auction, length, places = _SOURCE.unpack_from(body, at)
+        if first_only and AUCTIONS[auction] != "first":
+            break
         at += _SOURCE.size + length
         rows: Rows = {}
         for _ in range(places):

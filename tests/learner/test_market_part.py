@@ -191,3 +191,17 @@ def test_most_changes_of_a_cap_recount_nothing() -> None:
     """Tops go in steps, and the smallest still has ticks."""
     assert MarketRules.of(5_000_001, priced=True) == MarketRules.of(CAP, priced=True)
     assert MarketState(MarketRules.of(1, priced=True).top).ticks.cells == 500
+
+
+def test_first_price_sources_are_read_alone() -> None:
+    """Without the others the counts are those of a whole reading, whatever came in between."""
+    auctions, rng = ("first", "second"), np.random.default_rng(7)
+    lessons = [
+        entry("lost", int(bid), auction=auctions[at % 2], source=f"s{at % 5}")
+        for at, bid in enumerate(rng.integers(TICK, CAP, 200))
+    ]
+    state = market_part.learn(b"", lessons, BARE)
+    whole, alone = read(state), read(state, first_only=True)
+
+    assert {key for key in whole.sources if key[0] == "first"} == set(alone.sources) != set()
+    assert all(alone.counts(key) == whole.counts(key) for key in alone.sources)
