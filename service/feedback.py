@@ -16,6 +16,7 @@ from datetime import date
 
 from service.errors import BrokenPromise, Overloaded, StoreAway
 from service.guard.ticket import BadTicket, Ticket, TicketKeys, bid_of, ref_of
+from service.ledger.entries import PAYING
 from service.ledger.settle import Outcome
 from service.ledger.values import Value
 from service.store import outcomes
@@ -33,7 +34,6 @@ THREAD_S = 0.25  # How long a group waits for a thread, and so for a connection.
 ANSWER_S = (
     6.0  # Longer than a statement may take: after it nobody knows, and the caller asks again.
 )
-PAYING = ("won", "billed")
 # What a single bad row may raise; anything else is a fault of ours and ends the worker's task.
 POISON = (BrokenPromise, ValueError, LookupError, ArithmeticError, TypeError)
 

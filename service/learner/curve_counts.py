@@ -11,7 +11,6 @@ cell below the bid would be seen and the part above it not, which bends the curv
 from __future__ import annotations
 
 import struct
-import zlib
 from collections.abc import Iterable
 from dataclasses import dataclass
 from itertools import count, pairwise
@@ -21,6 +20,7 @@ import numpy as np
 
 from service.learner.arrays import Numbers, double
 from service.learner.partition import Ticks
+from service.learner.sealed import sealed, unsealed
 
 FORM = 1
 CELLS_MAX = 1_500  # With every tick visited a state stays under 64 KiB.
@@ -36,7 +36,6 @@ Feed = Literal["always", "on_win", "on_loss", "never"]
 
 _HEAD = struct.Struct(">3sBQQ")
 _ROW = struct.Struct(">H5q")
-_SUM = struct.Struct(">I")
 _NAME = b"crv"
 
 
@@ -101,7 +100,7 @@ class Counts:
         """Equal counts give equal bytes; 42 for each place visited and 24 more."""
         head = _HEAD.pack(_NAME, FORM, self.ticks.top, self.ticks.tick)
         body = head + b"".join(_ROW.pack(place, *row) for place, row in self.rows)
-        return body + _SUM.pack(zlib.crc32(body))
+        return sealed(body)
 
     @staticmethod
     def from_bytes(state: bytes, ticks: Ticks) -> Counts:
@@ -111,9 +110,9 @@ class Counts:
         Raises:
             UnreadableCurve: Another form, other ticks, or not whole.
         """
-        body, tail = state[: -_SUM.size], state[-_SUM.size :]
+        body, sound = unsealed(state)
         rest = len(body) - _HEAD.size
-        if rest < 0 or rest % _ROW.size or _SUM.pack(zlib.crc32(body)) != tail:
+        if rest < 0 or rest % _ROW.size or not sound:
             raise UnreadableCurve("not whole")
         if body[: _HEAD.size] != _HEAD.pack(_NAME, FORM, ticks.top, ticks.tick):
             raise UnreadableCurve("another form, or other ticks")

@@ -7,7 +7,6 @@ the price is read here and written beside the outcome, so folding never needs a 
 from __future__ import annotations
 
 import struct
-import zlib
 from bisect import bisect_right
 from dataclasses import dataclass, field
 from itertools import accumulate, pairwise
@@ -17,13 +16,13 @@ from numpy.random import Generator
 from service.learner.exptree_bounds import UNITS
 from service.learner.exptree_rules import DOUBLINGS_MAX, Stage
 from service.learner.partition import BadTicks, Ticks
+from service.learner.sealed import sealed, unsealed
 
 FORM = 1
 
 # name, form, top, tick, stage, forced, number of runs
 _HEAD = struct.Struct(">3sBQQBBQH")
 _RUN = struct.Struct(">HQ")
-_SUM = struct.Struct(">I")
 _TOTAL_MAX = 2 * UNITS  # All masses together are near one; more could not be drawn from.
 _NAME = b"xpl"
 
@@ -110,7 +109,7 @@ class Law:
             *(*self.stage, self.forced, len(self.ends)),
         )
         runs = (_RUN.pack(*run) for run in zip(self.ends, self.masses, strict=True))
-        return _signed(head + b"".join(runs))
+        return sealed(head + b"".join(runs))
 
     @staticmethod
     def from_bytes(state: bytes) -> Law:
@@ -150,14 +149,10 @@ class Law:
         return beyond * bids + self.masses[run] * above, bids
 
 
-def _signed(body: bytes) -> bytes:
-    return body + _SUM.pack(zlib.crc32(body))
-
-
 def _checked(state: bytes) -> bytes:
-    body, tail = state[: -_SUM.size], state[-_SUM.size :]
+    body, sound = unsealed(state)
     if len(body) < _HEAD.size or body[:3] != _NAME or body[3] != FORM:
         raise UnreadableLaw("not the form of law this release writes")
-    if _SUM.pack(zlib.crc32(body)) != tail:
+    if not sound:
         raise UnreadableLaw("damaged")
     return body

@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import struct
-import zlib
 from collections.abc import Iterable
 from dataclasses import dataclass
 from itertools import pairwise
 
 from service.learner.exptree_rules import DOUBLINGS_MAX, FIRST, Rules, Stage
 from service.learner.partition import narrowest
+from service.learner.sealed import sealed, unsealed
 
 FORM = 1
 
@@ -18,7 +18,6 @@ _RULES = struct.Struct(">3sBQQQ?d")
 # rounds, stage, lessons, counted, beyond, unweighed, number of cuts
 _COUNTS = struct.Struct(">QBBQQQQH")
 _CUT = struct.Struct(">H16s")
-_SUM = struct.Struct(">I")
 _NAME = b"xpt"
 
 
@@ -71,7 +70,7 @@ class Tree:
         )
         cuts = (_CUT.pack(tick, step.to_bytes(16, signed=True)) for tick, step in self.steps)
         body = _head(rules) + counts + b"".join(cuts)
-        return body + _SUM.pack(zlib.crc32(body))
+        return sealed(body)
 
     @staticmethod
     def from_bytes(state: bytes, rules: Rules) -> Tree:
@@ -102,10 +101,10 @@ def _head(rules: Rules) -> bytes:
 
 
 def _checked(state: bytes, head: bytes) -> bytes:
-    body, tail = state[: -_SUM.size], state[-_SUM.size :]
+    body, sound = unsealed(state)
     if len(body) < len(head) + _COUNTS.size or body[:4] != head[:4]:
         raise UnreadableTree("not the form of tree this release writes")
-    if _SUM.pack(zlib.crc32(body)) != tail:
+    if not sound:
         raise UnreadableTree("damaged")
     if body[: len(head)] != head:
         raise UnreadableTree("a tree of other rules")

@@ -8,7 +8,6 @@ over the impressions whose value is known, so that hints on their way do not pul
 from __future__ import annotations
 
 import struct
-import zlib
 from dataclasses import dataclass
 
 import numpy as np
@@ -16,12 +15,12 @@ from numpy.typing import ArrayLike
 
 from service.learner.arrays import Numbers, double
 from service.learner.bounds import gamma_quantile
+from service.learner.sealed import sealed, unsealed
 
 FORM = 1
 
 # name, form, impressions, hinted, amount, square of amounts
 _STATE = struct.Struct(">3sBQ16s16s16s")
-_SUM = struct.Struct(">I")
 _NAME = b"hnt"
 
 
@@ -51,7 +50,7 @@ class Hints:
         sums = (self.hinted, self.amount, self.amount_square)
         wide = (one.to_bytes(16, signed=True) for one in sums)
         body = _STATE.pack(_NAME, FORM, self.impressions, *wide)
-        return body + _SUM.pack(zlib.crc32(body))
+        return sealed(body)
 
     @staticmethod
     def from_bytes(state: bytes) -> Hints:
@@ -61,10 +60,10 @@ class Hints:
         Raises:
             UnreadableHints: Another form, or not whole.
         """
-        body, tail = state[: -_SUM.size], state[-_SUM.size :]
+        body, sound = unsealed(state)
         if len(body) != _STATE.size or body[:4] != _NAME + bytes([FORM]):
             raise UnreadableHints("not the form of hints this release writes")
-        if _SUM.pack(zlib.crc32(body)) != tail:
+        if not sound:
             raise UnreadableHints("damaged")
         _, _, impressions, *wide = _STATE.unpack(body)
         return Hints(impressions, *(int.from_bytes(one, signed=True) for one in wide))

@@ -8,7 +8,6 @@ every processor and library; what is inverted is inverted afresh from them for e
 from __future__ import annotations
 
 import struct
-import zlib
 from base64 import b64decode
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -23,11 +22,11 @@ from service.learner.impressions import begun_afresh, said
 from service.learner.lesson import Lesson
 from service.learner.memory import UnreadableMemory
 from service.learner.rules import Rules
+from service.learner.sealed import sealed, unsealed
 
 FORM = 1
 
 _HEAD = struct.Struct(">3sBBQ")
-_SUM = struct.Struct(">I")
 _NAME = b"lin"
 _WIDE = 16  # Bytes of a sum of value times weight.
 
@@ -68,7 +67,7 @@ class Sums:
         half = self.square[np.triu_indices(self.dimensions)].astype(">i8").tobytes()
         moment = b"".join(one.to_bytes(_WIDE, signed=True) for one in self.moment)
         body = _HEAD.pack(_NAME, FORM, self.dimensions, self.lessons) + half + moment
-        return body + _SUM.pack(zlib.crc32(body))
+        return sealed(body)
 
     @staticmethod
     def from_bytes(state: bytes, dimensions: int) -> Sums:
@@ -80,11 +79,11 @@ class Sums:
         """
         if not state:
             return Sums.fresh(dimensions)
-        body, tail = state[: -_SUM.size], state[-_SUM.size :]
+        body, sound = unsealed(state)
         upper = np.triu_indices(dimensions)
         end = _HEAD.size + 8 * len(upper[0])
         whole = len(body) == end + _WIDE * dimensions
-        if not whole or _SUM.pack(zlib.crc32(body)) != tail:
+        if not whole or not sound:
             raise UnreadableSums("not whole, or of another number of dimensions")
         name, form, size, lessons = _HEAD.unpack_from(body)
         if (name, form, size) != (_NAME, FORM, dimensions):

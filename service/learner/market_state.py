@@ -7,12 +7,12 @@ counts are those that coarser ticks would have given, but for a bid near its own
 from __future__ import annotations
 
 import struct
-import zlib
 from dataclasses import dataclass, field
 
 from service.learner.curve_counts import ABOVE, COLUMNS, KEPT_WHOLE, PARTS, Counts
 from service.learner.memory import UnreadableMemory
 from service.learner.partition import Ticks
+from service.learner.sealed import sealed, unsealed
 
 FORM = 1
 BYTES_MAX = 65_536
@@ -27,7 +27,6 @@ _HEAD = struct.Struct(">3sBQBQQQH")
 _SOURCE = struct.Struct(">BBH")
 _ROW = struct.Struct(">HB")
 _COUNT = struct.Struct(">Q")
-_SUM = struct.Struct(">I")
 _NAME = b"mkt"
 AUCTIONS = ("second", "first")
 
@@ -108,7 +107,7 @@ class MarketState:
             parts += [_SOURCE.pack(AUCTIONS.index(auction), len(name), len(rows)), name]
             parts += [_packed(place, row) for place, row in sorted(rows.items())]
         body = b"".join(parts)
-        return body + _SUM.pack(zlib.crc32(body))
+        return sealed(body)
 
     def _join(self) -> None:
         fine, self.level = self.ticks, self.level + 1
@@ -139,8 +138,8 @@ def read(state: bytes, first_only: bool = False) -> MarketState:
     Raises:
         UnreadableMarket: Another form, or not whole.
     """
-    body, tail = state[: -_SUM.size], state[-_SUM.size :]
-    if len(body) < _HEAD.size or _SUM.pack(zlib.crc32(body)) != tail:
+    body, sound = unsealed(state)
+    if len(body) < _HEAD.size or not sound:
         raise UnreadableMarket("not whole")
     name, form, top, level, clock_ms, rounds, forgotten, sources = _HEAD.unpack_from(body)
     if (name, form) != (_NAME, FORM):

@@ -11,7 +11,6 @@ from __future__ import annotations
 
 import math
 import struct
-import zlib
 from dataclasses import dataclass
 from typing import Literal
 
@@ -19,6 +18,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from service.learner.arrays import Numbers, double, doubles
+from service.learner.sealed import sealed, unsealed
 
 Form = Literal["euclidean", "entropy", "shifted"]
 
@@ -39,7 +39,6 @@ MEMORY_WINS = 256  # Wins that the mean price remembers.
 
 # name, form, kind, step, scale, top, horizon, level, rounds, price
 _STATE = struct.Struct(">3sBBQQQQqQQ")
-_SUM = struct.Struct(">I")
 _NAME = b"pac"
 
 
@@ -129,7 +128,7 @@ class Pace:
     def to_bytes(self, rules: Rules) -> bytes:
         """Equal paces of equal rules give equal bytes."""
         body = _STATE.pack(*_head(rules), self.level, self.rounds, self.price)
-        return body + _SUM.pack(zlib.crc32(body))
+        return sealed(body)
 
     @staticmethod
     def from_bytes(state: bytes, rules: Rules) -> Pace:
@@ -139,10 +138,10 @@ class Pace:
         Raises:
             UnreadablePace: Another form, other rules, or not whole.
         """
-        body, tail = state[: -_SUM.size], state[-_SUM.size :]
+        body, sound = unsealed(state)
         if len(body) != _STATE.size or body[:4] != _NAME + bytes([FORM]):
             raise UnreadablePace("not the form of pace this release writes")
-        if _SUM.pack(zlib.crc32(body)) != tail:
+        if not sound:
             raise UnreadablePace("damaged")
         *head, level, rounds, price = _STATE.unpack(body)
         if tuple(head) != _head(rules):

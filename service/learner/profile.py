@@ -8,12 +8,13 @@ every entry: what was not spent is due later, and what was overspent is taken of
 from __future__ import annotations
 
 import struct
-import zlib
 from dataclasses import dataclass
 from datetime import UTC, date, datetime, timedelta
 from functools import lru_cache
 from itertools import accumulate
 from zoneinfo import ZoneInfo
+
+from service.learner.sealed import sealed, unsealed
 
 HOURS = 24
 FLAT = (1,) * HOURS
@@ -29,7 +30,6 @@ FORM = 1
 _EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 # name, form, clock, spent today, spent in all
 _STATE = struct.Struct(">3sBqqq")
-_SUM = struct.Struct(">I")
 _NAME = b"pln"
 
 
@@ -93,7 +93,7 @@ class Progress:
     def to_bytes(self) -> bytes:
         """Equal progress gives equal bytes."""
         body = _STATE.pack(_NAME, FORM, self.clock_ms, self.today, self.total)
-        return body + _SUM.pack(zlib.crc32(body))
+        return sealed(body)
 
     @staticmethod
     def from_bytes(state: bytes) -> Progress:
@@ -103,10 +103,10 @@ class Progress:
         Raises:
             UnreadableProgress: Another form, or not whole.
         """
-        body, tail = state[: -_SUM.size], state[-_SUM.size :]
+        body, sound = unsealed(state)
         if len(body) != _STATE.size or body[:4] != _NAME + bytes([FORM]):
             raise UnreadableProgress("not the form of progress this release writes")
-        if _SUM.pack(zlib.crc32(body)) != tail:
+        if not sound:
             raise UnreadableProgress("damaged")
         return Progress(*_STATE.unpack(body)[2:])
 

@@ -14,13 +14,13 @@ from __future__ import annotations
 
 import math
 import struct
-import zlib
 from dataclasses import dataclass
 
 from numpy.typing import ArrayLike
 
 from service.learner.arrays import Numbers, double
 from service.learner.pacing import UNITS
+from service.learner.sealed import sealed, unsealed
 
 FORM = 1
 MILLION = 10**6
@@ -31,7 +31,6 @@ LEVEL_MIN = -7 * UNITS
 
 # name, form, target, step, scale, level, valued, paid
 _STATE = struct.Struct(">3sBQQQqQQ")
-_SUM = struct.Struct(">I")
 _NAME = b"rtn"
 
 
@@ -87,7 +86,7 @@ class Return:
     def to_bytes(self, rules: Rules) -> bytes:
         """Equal returns of equal rules give equal bytes."""
         body = _STATE.pack(*_head(rules), self.level, self.valued, self.paid)
-        return body + _SUM.pack(zlib.crc32(body))
+        return sealed(body)
 
     @staticmethod
     def from_bytes(state: bytes, rules: Rules) -> Return:
@@ -97,10 +96,10 @@ class Return:
         Raises:
             UnreadableReturn: Another form, other rules, or not whole.
         """
-        body, tail = state[: -_SUM.size], state[-_SUM.size :]
+        body, sound = unsealed(state)
         if len(body) != _STATE.size or body[:4] != _NAME + bytes([FORM]):
             raise UnreadableReturn("not the form of return this release writes")
-        if _SUM.pack(zlib.crc32(body)) != tail:
+        if not sound:
             raise UnreadableReturn("damaged")
         *head, level, valued, paid = _STATE.unpack(body)
         if tuple(head) != _head(rules):

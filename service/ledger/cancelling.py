@@ -11,6 +11,8 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
+from service.ledger.entries import PAYING
+
 VALUE, MARKET, ALL = "value", "market", "all"
 COVERS = {VALUE: {VALUE}, MARKET: {MARKET}, "both": {VALUE, MARKET}, ALL: {VALUE, MARKET, ALL}}
 # What an entry teaches; a reset and a prior are undone by a rewind only.
@@ -25,7 +27,6 @@ PARTS: dict[str, frozenset[str]] = {
     "prior": frozenset({ALL}),
     "reset": frozenset({ALL}),
 }
-PAYING = ("won", "billed")
 
 Body = Mapping[str, Any]
 Span = tuple[int, int, str]  # First seq, last seq and the part that teaches no more.

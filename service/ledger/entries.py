@@ -9,6 +9,7 @@ from dataclasses import dataclass
 from typing import Any
 
 Body = Mapping[str, Any]
+PAYING = ("won", "billed")  # Kinds of outcome that name a price to be paid.
 
 
 @dataclass(frozen=True, slots=True)

@@ -10,7 +10,7 @@ from typing import Any
 
 from sqlalchemy import LargeBinary, text
 
-from service.ledger.entries import Entry
+from service.ledger.entries import PAYING, Entry
 from service.ledger.settle import Outcome, Place, settle
 from service.ledger.values import Value, brought, judge, unparked
 from service.money import nanos_text
@@ -22,7 +22,6 @@ from service.store.freezes import put
 from service.store.journal import note
 from service.store.leases import read_configs
 
-PAYING = ("won", "billed")
 FACTS = ("features", "hint")  # Of an impression, written into all that is said of it.
 NO_SNAPSHOT = -1  # Of a price made before the database was restored.
 
