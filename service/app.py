@@ -14,6 +14,7 @@ from typing import Any
 
 from fastapi import FastAPI
 
+from service.admitting import FLUSH_S
 from service.api.routes import install
 from service.backlog import Backlog
 from service.bidding import Bidder, Clocks
@@ -24,6 +25,7 @@ from service.feedback import Feedback, Room
 from service.guard.ticket import TicketKeys
 from service.leasing import Leasing
 from service.operating import Operator
+from service.patience import Patience
 from service.pulse import Pulse
 from service.settings import Settings
 from service.store import incarnations
@@ -107,6 +109,7 @@ async def running(settings: Settings, post: Post) -> AsyncIterator[Stories]:
             yield stories
         # After the loops have ended, or leasing would fill the hand while it is being emptied.
         await upkeep.stop()
+        await stories.operator.admitting.stop()
 
 
 @asynccontextmanager
@@ -178,7 +181,8 @@ def _build(
     operator = Operator(database, threads, catalog, news, settings.checkpoint_entries)
     rhythm = Rhythm(settings.change_poll_ms, settings.tick_s, settings.clock_step_ms_max)
     upkeep = Upkeep(database, threads, post.worker, catalog, leasing, backlog, news, rhythm)
-    loops = [pulse.run(), leasing.run(), feedback.run(), *upkeep.duties()]
+    counting = Patience(database, threads).every(FLUSH_S, operator.admitting.flush)
+    loops = [pulse.run(), leasing.run(), feedback.run(), counting, *upkeep.duties()]
     return Stories(bidder, feedback, operator), upkeep, loops
 
 

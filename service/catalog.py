@@ -45,6 +45,7 @@ class Catalog:
         self._threads = threads
         self._items: dict[str, Item] = {}
         self._keys: dict[str, keys.Key] = {}
+        self._keys_used: set[str] = set()
         self._misses: dict[str, float] = {}
         self._looks: dict[str, asyncio.Future[list[Item]]] = {}
         self.change_seen = 0
@@ -78,7 +79,7 @@ class Catalog:
         hashed = keys.hashed(bearer)
         # A key that was ended is forgotten by `follow`, so this is never older than one poll.
         if hashed in self._keys:
-            return self._keys[hashed]
+            return self._admitted(self._keys[hashed])
         if self._missed(f"key {hashed}"):
             return None
         found = await self._threads.run(
@@ -86,9 +87,14 @@ class Catalog:
         )
         if found is None:
             self._miss(f"key {hashed}")
-        else:
-            self._keys[hashed] = found
-        return found
+            return None
+        self._keys[hashed] = found
+        return self._admitted(found)
+
+    def keys_used(self) -> set[str]:
+        """The ids of keys that were used since the last time somebody asked."""
+        used, self._keys_used = self._keys_used, set()
+        return used
 
     async def start(self) -> None:
         """Begin reading the changes at the newest: nothing is cached yet."""
@@ -129,6 +135,13 @@ class Catalog:
         )
         self._items.update({item.id: item for item in renewed})
         return renewed
+
+    def _admitted(self, key: keys.Key) -> keys.Key | None:
+        # Ends come by the clock and not by a change, so they are looked at with every call.
+        if key.until_ms is not None and key.until_ms <= self._database.wall_ms():
+            return None
+        self._keys_used.add(key.id)
+        return key
 
     def _missed(self, what: str) -> bool:
         return time.monotonic() - self._misses.get(what, -MISS_S) < MISS_S

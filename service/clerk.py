@@ -23,6 +23,7 @@ from service.store import (
     epochs,
     learners,
     leases,
+    refusals,
     repeats,
     workers,
 )
@@ -37,6 +38,7 @@ CLOSE_S = 1.0
 AUDIT_S = 10.0
 PRUNE_S = 3600.0
 DAY_MS = 86_400_000
+REFUSAL_KEEP_DAYS = 90  # A quarter: long enough to look back at who tried what.
 
 
 @dataclass(frozen=True, slots=True)
@@ -103,6 +105,7 @@ class Clerk:
         await self._until_none(
             decisions.prune_quarantine, wall_ms - habits.quarantine_keep_days * DAY_MS
         )
+        await self._until_none(refusals.prune, wall_ms - REFUSAL_KEEP_DAYS * DAY_MS)
         await self._until_none(repeats.prune, wall_ms - habits.repeat_keep_days * DAY_MS)
         # A length and not a moment, for slices age by service time and all else by the wall clock.
         await self._until_none(auditing.prune_slices, habits.slice_keep_days * DAY_MS)

@@ -12,7 +12,11 @@ from service.errors import Malformed, NeedsConfirmation
 from service.learner.memory import Memory
 from service.learner.rules import RARE_FROM, Rules, tree_rules
 from service.ledger.entries import Entry
+from service.money import nanos_text
 
+LEARNING_COST = "learning_cost"
+# What is confirmed when it is raised to so many times what it was, and whether it is a CPM.
+DANGEROUS = (("budget", 10, False), ("daily_budget", 10, False), ("bid_cap", 3, True))
 # Their settings belong together: what is not said anew is not kept from before.
 AS_A_WHOLE = frozenset({"policy", "drift", "change", "return_target"})
 
@@ -49,9 +53,57 @@ def object_to(config: Mapping[str, Any], confirm: str | None) -> None:
     found = objection(config, confirm)
     if found is None:
         return
-    if found.code == "learning_cost":
+    if found.code == LEARNING_COST:
         raise NeedsConfirmation(found.code, found.detail, {"confirm": found.code})
     raise Malformed(found.code, found.detail)
+
+
+def object_to_change(
+    before: Mapping[str, Any], after: Mapping[str, Any], confirm: str | None, reason: str | None
+) -> None:
+    """
+    Refuse a change that cannot work, or that may cost a lot and is not confirmed by its values.
+
+    Raises:
+        Malformed: Settings that the method cannot work with.
+        NeedsConfirmation: With the exact value that `confirm` must carry.
+    """
+    said = set((confirm or "").split())
+    object_to(after, LEARNING_COST if LEARNING_COST in said else confirm)
+    wanted = dangers(before, after)
+    if not wanted:
+        return
+    # What was confirmed of the cost of learning is confirmed still.
+    words = " ".join([*sorted(said & {LEARNING_COST}), *wanted])
+    if not set(wanted) <= said:
+        detail = f"This change may cost a lot of money: {'; '.join(wanted.values())}."
+        detail += " Send confirm as named here, with a reason."
+        raise NeedsConfirmation("needs_confirmation", detail, {"confirm": words})
+    if reason is None:
+        raise Malformed("reason_missing", "A change that may cost a lot of money needs a reason.")
+
+
+def dangers(before: Mapping[str, Any], after: Mapping[str, Any]) -> dict[str, str]:
+    """
+    What of a change may cost a lot of money: the value that confirms each, and a sentence.
+
+    The value carries the new amount, so that a word kept from yesterday confirms nothing else.
+    """
+    found = {}
+    for name, times, in_cpm in DANGEROUS:
+        old, new = before.get(name), after.get(name)
+        # Without a daily budget a day may spend all there is.
+        if old is None or (after["budget"] if new is None else new) < times * old:
+            continue
+        label = f"{name}_cpm" if in_cpm else name
+        if new is None:
+            found[f"{label}=none"] = f"{label} is taken away"
+        else:
+            amount = nanos_text(new * 1000 if in_cpm else new)
+            found[f"{label}={amount}"] = f"{label} is raised to {amount}, {times} times or more"
+    if before.get("strict") and not after.get("strict"):
+        found["strict=false"] = "strict is turned off, so silent holds are freed"
+    return found
 
 
 def taught_otherwise(before: Mapping[str, Any], after: Mapping[str, Any]) -> bool:

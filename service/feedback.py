@@ -56,7 +56,12 @@ class Report:
 
 @dataclass(frozen=True, slots=True)
 class Receipt:
-    """What became of one report; `code` says why when it is refused."""
+    """
+    What became of one report; `code` says why when it is refused.
+
+    Args:
+        foreign: Refused because the line item does not exist for the caller's key.
+    """
 
     ref: str | None
     status: str
@@ -64,6 +69,7 @@ class Receipt:
     clipped: bool = False
     test: bool = False
     detail: str | None = None
+    foreign: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -115,16 +121,21 @@ class Feedback:
         finally:
             self._calls -= 1
 
-    async def report(self, reports: list[Report]) -> list[Receipt]:
+    async def report(
+        self, reports: list[Report], only: frozenset[str] | None = None
+    ) -> list[Receipt]:
         """
         Settle outcomes and values; when this returns they are durable.
+
+        Args:
+            only: The line items that exist for the caller; None for all.
 
         Raises:
             StoreAway: Perhaps recorded; the repeat answers `duplicate`.
             Overloaded: Not recorded, for nobody had time for it.
         """
-        read = [self._read(report) for report in reports]
-        read = await self._find_refs(reports, read)
+        read = [self._read(report, only) for report in reports]
+        read = await self._find_refs(reports, read, only)
         rows = [row for row in read if isinstance(row, Booking)]
         booked = iter(await self._book(rows) if rows else [])
         return [row if isinstance(row, Receipt) else _receipt(row, next(booked)) for row in read]
@@ -202,7 +213,7 @@ class Feedback:
             )
         )
 
-    def _read(self, report: Report) -> Booking | Receipt:
+    def _read(self, report: Report, only: frozenset[str] | None = None) -> Booking | Receipt:
         """The booking a report asks for, or the receipt that refuses it."""
         if report.ticket is None:
             return _read_ref(report)
@@ -210,6 +221,8 @@ class Feedback:
             ticket = self._keys.verify(report.ticket)
         except BadTicket:
             return Receipt(report.ref, "refused", "bad_ticket")
+        if only is not None and ticket.line_item not in only:
+            return Receipt(report.ref, "refused", "no_such_line_item", foreign=True)
         if report.ref is not None and report.ref != ticket.ref:
             return Receipt(report.ref, "refused", "ref_of_another_bid")
         if report.kind in PAYING and _price(report, ticket) is None:
@@ -244,7 +257,10 @@ class Feedback:
         return Booking(ticket.line_item, outcome, *place, ticket.features, ticket.hint)
 
     async def _find_refs(
-        self, reports: list[Report], read: list[Booking | Receipt]
+        self,
+        reports: list[Report],
+        read: list[Booking | Receipt],
+        only: frozenset[str] | None,
     ) -> list[Booking | Receipt]:
         """Give values that came by ref the line item of their settled win."""
         bookings = [row for row in read if isinstance(row, Booking)]
@@ -256,7 +272,8 @@ class Feedback:
         )
         # The win may stand in the same call; if it does not, the value waits for it.
         found |= {row.event.bid: row.line_item for row in bookings if row.line_item}
-        return [_placed(row, found, report.ref) for row, report in zip(read, reports, strict=True)]
+        pairs = zip(read, reports, strict=True)
+        return [_placed(row, found, report.ref, only) for row, report in pairs]
 
 
 def _price(report: Report, ticket: Ticket) -> int | None:
@@ -276,11 +293,18 @@ def _read_ref(report: Report) -> Booking | Receipt:
         return Receipt(None, "refused", "bad_ref")
 
 
-def _placed(row: Booking | Receipt, found: dict[bytes, str], ref: str | None) -> Booking | Receipt:
+def _placed(
+    row: Booking | Receipt,
+    found: dict[bytes, str],
+    ref: str | None,
+    only: frozenset[str] | None,
+) -> Booking | Receipt:
     if isinstance(row, Receipt) or row.line_item:
         return row
-    if row.event.bid not in found:
-        return Receipt(ref, "refused", "no_such_ref")
+    known = row.event.bid in found
+    # Answered as a ref that nobody has, or a guesser would learn which are taken.
+    if not known or (only is not None and found[row.event.bid] not in only):
+        return Receipt(ref, "refused", "no_such_ref", foreign=known)
     return Booking(found[row.event.bid], row.event)
 
 

@@ -8,10 +8,11 @@ quarantine are told in files of their own, and reached through here.
 from __future__ import annotations
 
 import asyncio
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import asdict, dataclass
 from typing import Any
 
+from service.admitting import Admitting
 from service.catalog import Catalog
 from service.configuring import (
     drawn_otherwise,
@@ -19,6 +20,7 @@ from service.configuring import (
     guessed_otherwise,
     merged,
     object_to,
+    object_to_change,
     pooled,
     taught_otherwise,
 )
@@ -41,6 +43,7 @@ from service.winding import Winding
 __all__ = ["Key", "Operator", "View"]
 
 CHECKPOINT_ENTRIES = 10_000
+NEW = "a new line item"  # Why it was created, when nobody says.
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,6 +76,7 @@ class Operator:
         self.winding = Winding(orders, checkpoint_entries)
         self.correcting = Correcting(orders)
         self.quarantine = Quarantining(orders, self.winding)
+        self.admitting = Admitting(orders, catalog)
 
     async def key_for(self, bearer: str) -> Key | None:
         """The live key behind a bearer text, or None."""
@@ -84,6 +88,7 @@ class Operator:
         confirm: str | None,
         actor: str,
         idempotency: str | None = None,
+        reason: str | None = None,
     ) -> View:
         """
         Create a line item; it may bid as soon as this returns.
@@ -103,13 +108,16 @@ class Operator:
             # Bids may leave before the first lesson, and without a law they could not be weighed.
             if (law := lawful(FRESH, full)) is not None:
                 epochs.keep(connection, full["id"], 0, law)
-            self._orders.note(connection, actor, "create", full["id"], "", {"after": full})
+            self._orders.note(
+                connection, actor, "create", full["id"], reason or NEW, {"after": full}
+            )
             self._take_prior(connection, full, actor)
             changes.announce(connection, "line_item", [full["id"]])
             # A plain dict, because it is kept as JSON and is the answer to a repeat.
             return asdict(_view(line_items.one(connection, full["id"]), taken))
 
         wish = {"call": "create", "config": dict(config), "confirm": confirm}
+        wish |= {} if reason is None else {"reason": reason}
         return View(**await self._orders.give(order, repeat_of(actor, idempotency, wish)))
 
     async def get(self, line_item: str) -> View:
@@ -122,9 +130,11 @@ class Operator:
         row = await self._orders.read(lambda connection: line_items.one(connection, line_item))
         return _view(row, [])
 
-    async def list(self, after: str | None, limit: int) -> list[View]:
-        """The line items after this id, in the order of ids."""
-        rows = await self._orders.read(lambda connection: line_items.page(connection, after, limit))
+    async def list(
+        self, after: str | None, limit: int, only: Collection[str] | None = None
+    ) -> list[View]:
+        """The line items after this id, in the order of ids; of `only` these when it is given."""
+        rows = await self._orders.read(lambda c: line_items.page(c, after, limit, only))
         return [_view(row, []) for row in rows]
 
     async def patch(
@@ -141,20 +151,22 @@ class Operator:
 
         Raises:
             Stale: Somebody has.
+            NeedsConfirmation: It may cost a lot, and the value that confirms it did not come.
             Conflict: The budget would fall below what is spent.
         """
 
         def order(connection: Writing) -> dict[str, Any]:
             before = line_items.one(connection, line_item)
             after, _ = defaults(merged(before.config, changed))
-            object_to(after, confirm)
+            object_to_change(before.config, after, confirm, reason)
             line_items.change(connection, after, version, self._database.wall_ms())
             if taught_otherwise(before.config, after):
                 learners.refold(connection, line_item, FRESH)
             if drawn_otherwise(before.config, after):
                 epochs.end(connection, line_item)
             detail = {"before": before.config, "after": after}
-            self._orders.note(connection, actor, "patch", line_item, reason or "", detail)
+            why = reason or f"no reason given; changed: {', '.join(sorted(changed))}"
+            self._orders.note(connection, actor, "patch", line_item, why, detail)
             if guessed_otherwise(before.config, after):
                 # An empty one: what kin once gave must not overrule a guess made since.
                 self._post(connection, line_item, Entry("prior", {}))

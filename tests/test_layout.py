@@ -14,7 +14,16 @@ from tests.house import ROOT, Source, imports, read, tracked
 STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk"}
 # What several stories need and none of them owns.
 SHARED = {
-    *("backlog", "catalog", "configuring", "connecting", "leasing", "patience", "showing"),
+    *(
+        "admitting",
+        "backlog",
+        "catalog",
+        "configuring",
+        "connecting",
+        "leasing",
+        "patience",
+        "showing",
+    ),
     *("correcting", "ordering", "pulse", "quarantining", "spending", "teaching", "threads"),
     "winding",
 }
@@ -35,7 +44,8 @@ OWN: dict[str, set[str]] = {
     **dict.fromkeys(STORIES | SHARED, PURE | SHARED | {"store", "settings"}),
     # Of the store only its named reads, of the decision only the form a bid takes.
     "api": STORIES
-    | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"},
+    | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
+    | {"admitting"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 

@@ -69,7 +69,7 @@ async def test_a_new_line_item_may_bid_at_once(migrated_url: str) -> None:
         assert view.config["policy"]["method"] == "kl-ucbid"
         assert "conversions at break-even" in view.learnability
         assert (await worker.bid()).bid is not None
-        assert journal(worker) == [("create", NAME, "tester", "")]
+        assert journal(worker) == [("create", NAME, "tester", "a new line item")]
         assert detail(worker) == {"after": view.config}
 
 

@@ -9,7 +9,7 @@ from starlette.requests import Request
 from starlette.responses import Response
 
 from service.api import answers
-from service.api.access import require
+from service.api.access import out_of_reach, reach, require
 from service.api.body import read_object
 from service.api.documentation import described
 from service.api.edge import edge
@@ -28,6 +28,7 @@ async def post_bid(request: Request) -> Response:
     arrived = time.monotonic()
     await require(request, "bid")
     opportunity, unused = read_bid(await read_object(request, edge(request).body_bytes_max))
+    reach(request, opportunity.line_item, *opportunity.line_items)
     answer = await stories(request).bidder.bid(opportunity, arrived)
     return answers.json_answer(answers.with_warnings(answers.bid(answer), unused))
 
@@ -36,9 +37,11 @@ async def post_bid(request: Request) -> Response:
 async def post_batch(request: Request) -> Response:
     """Answer each opportunity in its place; a bad row is an error in its place."""
     arrived = time.monotonic()
-    await require(request, "bid")
+    key = await require(request, "bid")
     members = await read_object(request, edge(request).batch_bytes_max)
     rows, unused = read_batch(members, edge(request).batch_rows_max)
+    if key.line_items is not None:
+        rows = [_within_reach(request, row) for row in rows]
     good = [row for row in rows if isinstance(row, Opportunity)]
     priced = iter(await stories(request).bidder.bid_batch(good, arrived) if good else [])
     results = [next(priced) if isinstance(row, Opportunity) else row for row in rows]
@@ -47,3 +50,12 @@ async def post_batch(request: Request) -> Response:
         for result in results
     ]
     return answers.json_answer(answers.with_warnings({"answers": written}, unused))
+
+
+def _within_reach(request: Request, row: Opportunity | Refusal) -> Opportunity | Refusal:
+    """The row, or the refusal in its place when the key is limited to other line items."""
+    if isinstance(row, Refusal):
+        return row
+    named = (row.line_item, *row.line_items)
+    found = (out_of_reach(request, name) for name in named)
+    return next((refusal for refusal in found if refusal is not None), row)

@@ -6,6 +6,7 @@ import re
 
 from starlette.requests import Request
 
+from service.api.access import reach
 from service.api.forms.fields import ID, PRINTABLE
 from service.api.forms.reading import bad_field
 from service.api.problems import PreconditionMissing
@@ -59,15 +60,16 @@ def idempotency(request: Request) -> dict[str, str]:
 
 def line_item_id(request: Request) -> str:
     """
-    The line item that the path names.
+    The line item that the path names, if it exists for the caller's key.
 
     Raises:
-        NotFound: No line item can have this id.
+        NotFound: No line item can have this id, or the key is limited to others.
     """
     # An impossible id is answered like an unknown one and never reaches the database.
     name = str(request.path_params["line_item_id"])
     if not ID.fullmatch(name):
         raise no_such_line_item()
+    reach(request, name)
     return name
 
 

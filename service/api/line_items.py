@@ -7,7 +7,7 @@ from starlette.requests import Request
 from starlette.responses import Response
 
 from service.api import answers
-from service.api.access import actor, require
+from service.api.access import actor, reach, require
 from service.api.body import read_object
 from service.api.documentation import described
 from service.api.edge import edge
@@ -41,7 +41,10 @@ async def post_line_item(request: Request) -> Response:
     config, form = read_new(
         await read_object(request, edge(request).body_bytes_max), start_of_today_ms()
     )
-    view = await stories(request).operator.create(config, form.confirm, actor(key), **once)
+    reach(request, config["id"], *(config.get("kin") or ()))
+    view = await stories(request).operator.create(
+        config, form.confirm, actor(key), reason=form.reason, **once
+    )
     headers = {"Location": f"{PATH}/{view.id}", "ETag": etag(view.version)}
     return answers.json_answer(answers.line_item(view, defaults_taken(form)), 201, headers)
 
@@ -49,9 +52,9 @@ async def post_line_item(request: Request) -> Response:
 @router.get(PATH, **described("List line items by id.", "read", query=("after", "limit")))
 async def get_line_items(request: Request) -> Response:
     """A page of line items, and the id after which the next page goes on."""
-    await require(request, "read")
+    key = await require(request, "read")
     after, limit = page(request)
-    views = await stories(request).operator.list(after, limit)
+    views = await stories(request).operator.list(after, limit, key.line_items)
     further = views[-1].id if len(views) == limit else None
     rows = [answers.line_item(view) for view in views]
     return answers.json_answer({"line_items": rows, "next": further})
@@ -73,6 +76,7 @@ async def patch_line_item(request: Request) -> Response:
     key, name = await require(request, "operate"), line_item_id(request)
     version, operator = if_match(request), stories(request).operator
     changes, form = read_changes(await read_object(request, edge(request).body_bytes_max))
+    reach(request, *(changes.get("kin") or ()))
     # Only what is there now can be judged; if it changes before the patch, the version is stale.
     check_consistent(merged((await operator.get(name)).config, changes))
     view = await operator.patch(name, changes, version, form.confirm, form.reason, actor(key))

@@ -22,8 +22,8 @@ PATH = "/v1/line-items/{line_item_id}"
 _ONCE = ("Idempotency-Key",)
 
 
-async def _order(request: Request) -> tuple[str, str, dict[str, str]]:
-    key, once = await require(request, "operate"), idempotency(request)
+async def _order(request: Request, *, of_all: bool = False) -> tuple[str, str, dict[str, str]]:
+    key, once = await require(request, "operate", of_all=of_all), idempotency(request)
     form = read(OrderForm, await read_object(request, edge(request).body_bytes_max))
     return form.reason, actor(key), once
 
@@ -61,7 +61,7 @@ async def post_reset(request: Request) -> Response:
 @router.post("/v1/freeze", **described("Stop everything.", "operate", OrderForm, headers=_ONCE))
 async def post_freeze_all(request: Request) -> Response:
     """Throw the one switch that stops all line items."""
-    reason, actor, once = await _order(request)
+    reason, actor, once = await _order(request, of_all=True)
     done = await stories(request).operator.freeze(None, reason, actor, **once)
     return answers.json_answer(answers.plain(done))
 
@@ -71,6 +71,6 @@ async def post_freeze_all(request: Request) -> Response:
 )
 async def post_thaw_all(request: Request) -> Response:
     """Lift the switch over all line items; their own freezes stay."""
-    reason, actor, once = await _order(request)
+    reason, actor, once = await _order(request, of_all=True)
     done = await stories(request).operator.thaw(None, reason, actor, **once)
     return answers.json_answer(answers.plain(done))

@@ -7,7 +7,7 @@ from starlette.requests import Request
 from starlette.responses import Response
 
 from service.api import answers
-from service.api.access import require
+from service.api.access import FOREIGN, note_refusal, require
 from service.api.body import read_object
 from service.api.documentation import described
 from service.api.edge import edge
@@ -21,13 +21,16 @@ router = APIRouter()
 @router.post("/v1/outcomes", **described("Report up to 1,000 outcomes.", "report", OutcomesForm))
 async def post_outcomes(request: Request) -> Response:
     """Answer each outcome in its place, once it is durable; a bad row spoils no other."""
-    await require(request, "report")
+    key = await require(request, "report")
     feedback = stories(request).feedback
     with feedback.admitted():
         members = await read_object(request, edge(request).batch_bytes_max)
         rows, unused = read_outcomes(members, edge(request).outcome_rows_max)
         good = [row for row in rows if isinstance(row, Report)]
-        recorded = iter(await feedback.report(good) if good else [])
+        recorded = iter(await feedback.report(good, key.line_items) if good else [])
     results = [next(recorded) if isinstance(row, Report) else row for row in rows]
+    for result in results:
+        if result.foreign:
+            note_refusal(request, key, FOREIGN)
     written: dict[str, object] = {"results": [answers.receipt(result) for result in results]}
     return answers.json_answer(answers.with_warnings(written, unused))

@@ -9,6 +9,7 @@ from service.api import (
     corrections,
     documentation,
     health,
+    keys,
     line_items,
     orders,
     outcomes,
@@ -23,6 +24,7 @@ ROUTERS = (
     orders.router,
     winding.router,
     corrections.router,
+    keys.router,
     health.router,
     documentation.router,
 )

@@ -21,6 +21,9 @@ class Caller(Protocol):
     @property
     def name(self) -> str: ...
 
+    @property
+    def line_items(self) -> frozenset[str] | None: ...
+
     def allows(self, scope: str) -> bool: ...
 
 

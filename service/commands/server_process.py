@@ -146,7 +146,7 @@ class ServerProcess:
         while time.monotonic() < end:
             if self.child is None or self.child.poll() is not None:
                 raise ServerFailed(f"The server ended while starting. {self.tail()}")
-            if is_ready(self.port):
+            if is_ready(self.port, self.environment.get("BIDKEEL_HEALTH_KEY")):
                 return
             time.sleep(_POLL_S)
         raise ServerFailed(f"The server was not ready in {READY_S_MAX:.0f} s. {self.tail()}")
@@ -157,11 +157,12 @@ def command(*words: str) -> list[str]:
     return [sys.executable, "-m", "service", *words]
 
 
-def is_ready(port: int) -> bool:
+def is_ready(port: int, health_key: str | None = None) -> bool:
     """Whether a server on the port of this machine answers that it is ready."""
+    headers = {} if health_key is None else {"Authorization": f"Bearer {health_key}"}
     connection = HTTPConnection(HOST, port, timeout=_ASK_S_MAX)
     try:
-        connection.request("GET", "/health/ready")
+        connection.request("GET", "/health/ready", headers=headers)
         return connection.getresponse().status == 200
     except (OSError, HTTPException):
         return False

@@ -24,6 +24,11 @@ from service.store.database import Database, Reading
 SQLITE_HEAD = b"SQLite format 3\0"
 DUMP_HEAD = b"--\n-- PostgreSQL database dump"
 REASON = "restored from a backup: confirm what was spent"
+# Adopts the rows of the restore with the next row that is sealed; see `chain`.
+OPEN = "UPDATE journal_head SET elders = '[\"restore\"]' WHERE id = 1"
+# A backup of a release that had no chain is restored too, and sealed when it is migrated.
+_CHAINED = "SELECT 1 FROM sqlite_master WHERE name = 'journal_head'"
+_OPEN_IF = f"DO $$ BEGIN IF to_regclass('journal_head') IS NOT NULL THEN {OPEN}; END IF; END $$"
 
 
 def back_up(url: str, path: Path) -> None:
@@ -73,8 +78,13 @@ def restore(url: str, path: Path, now_ms: int) -> Path | None:
     return None
 
 
-def new_life(now_ms: int) -> list[str]:
-    """The statements that make a restored copy safe; without parameters, for psql takes none."""
+def new_life(now_ms: int, *, sealed: str) -> list[str]:
+    """
+    The statements that make a restored copy safe; without parameters, for psql takes none.
+
+    Args:
+        sealed: Opens the chain of the journal for the rows that stand here, where there is one.
+    """
     fresh, now = secrets.token_hex(8), int(now_ms)
     detail = f'{{"incarnation": "{fresh}"}}'
     # Built of our own words, hex and integers only.
@@ -88,6 +98,7 @@ def new_life(now_ms: int) -> list[str]:
         "INSERT INTO freezing (line_item, source, at_ms, actor, reason)"
         f" {who} ON CONFLICT DO NOTHING",
         f"INSERT INTO journal (at_ms, actor, action, line_item, reason, detail) {said}",
+        sealed,
     ]
 
 
@@ -122,7 +133,8 @@ def _begin_life(coming: Path, now_ms: int) -> None:
         if said != "ok":
             raise sqlite3.DatabaseError(said)
         with connection:
-            for statement in new_life(now_ms):
+            chained = connection.execute(_CHAINED).fetchone()
+            for statement in new_life(now_ms, sealed=OPEN if chained else "SELECT 1"):
                 connection.execute(statement)
 
 
@@ -156,7 +168,7 @@ def _load_dump(url: str, path: Path, now_ms: int) -> None:
     _refuse_company(url)
     with tempfile.NamedTemporaryFile("w", suffix=".sql") as after:
         # The dump leaves the search path empty.
-        after.write(";\n".join(["RESET search_path", *new_life(now_ms)]) + ";\n")
+        after.write(";\n".join(["RESET search_path", *new_life(now_ms, sealed=_OPEN_IF)]) + ";\n")
         after.flush()
         # One transaction: either all of it is the restored database, or nothing has changed.
         words = ["--no-psqlrc", "--quiet", "--single-transaction", "--set=ON_ERROR_STOP=1"]

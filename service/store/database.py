@@ -32,6 +32,7 @@ T = TypeVar("T")
 TRIES_MAX = 5
 # Serialization failure and deadlock: nothing happened, and the same work may simply run again.
 RETRY_STATES = {"40001", "40P01"}
+_LAST = "bidkeel.last"
 
 
 class Database:
@@ -82,7 +83,12 @@ class Database:
         for attempt in range(TRIES_MAX):
             try:
                 with self._transaction() as connection:
-                    return work(Writing(connection))
+                    # What a try that failed left there belongs to no later transaction.
+                    connection.info.pop(_LAST, None)
+                    done = work(Writing(connection))
+                    for last in connection.info.pop(_LAST, ()):
+                        last(Writing(connection))
+                    return done
             # Half a transaction is never repeated: locks and reads of the failed try are void.
             except (DBAPIError, PoolTimeout) as error:
                 _raise_unless_retried(error, attempt)
@@ -138,6 +144,12 @@ class Database:
         # SQLite lets one writer in at a time and is unfair about whom; our lock is fairer.
         with self._writer, self.engine.begin() as connection:
             yield connection
+
+
+def at_the_end(connection: Writing, work: Callable[[Writing], None]) -> None:
+    """Let `work` run once, last in this transaction, after every other lock is taken."""
+    # A dict for its order: what was asked for first runs first, and nothing runs twice.
+    connection.info.setdefault(_LAST, {})[work] = None
 
 
 def among(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -105,8 +105,13 @@ def load(connection: Reading | Writing, ids: list[str]) -> dict[str, Row]:
     return _rows(connection, connection.execute(_BY_ID, {"ids": ids}))
 
 
-def page(connection: Reading, after: str | None, limit: int) -> list[Row]:
-    """The next line items in the order of their ids."""
+def page(
+    connection: Reading, after: str | None, limit: int, only: Collection[str] | None = None
+) -> list[Row]:
+    """The next line items in the order of their ids; of `only` these when it is given."""
+    if only is not None:
+        named = load(connection, sorted(name for name in only if name > (after or "")))
+        return [named[name] for name in sorted(named)][:limit]
     found = connection.execute(_AFTER, {"after": after or "", "limit": limit})
     return list(_rows(connection, found).values())
 

@@ -60,11 +60,24 @@ class Outcomes:
         """There is always room."""
         return nullcontext()
 
-    async def report(self, reports: list[Report]) -> list[Receipt]:
+    async def report(
+        self, reports: list[Report], only: frozenset[str] | None = None
+    ) -> list[Receipt]:
         """One receipt each."""
         if self.away:
             raise StoreAway("away")
         return [Receipt(report.ticket, "recorded") for report in reports]
+
+
+@dataclass
+class Refused:
+    """Who was not let in, as routes tell it."""
+
+    told: list[tuple[str, str, str]] = field(default_factory=list)
+
+    def refused(self, key_id: str, route: str, code: str) -> None:
+        """Write it down."""
+        self.told.append((key_id, route, code))
 
 
 @dataclass
@@ -73,6 +86,7 @@ class Orders:
 
     calls: list[tuple[Any, ...]] = field(default_factory=list)
     away: bool = False
+    admitting: Refused = field(default_factory=Refused)
 
     async def key_for(self, bearer: str) -> Key | None:
         """A key whose only scope is its own text; the key `nothing` is unknown."""
@@ -84,6 +98,7 @@ class Orders:
         confirm: str | None,
         actor: str,
         idempotency: str | None = None,
+        reason: str | None = None,
     ) -> View:
         """The view of what was asked for."""
         self.calls.append(("create", config["id"], confirm, actor, idempotency))
@@ -95,7 +110,9 @@ class Orders:
             raise no_such_line_item()
         return self._view(3)
 
-    async def list(self, after: str | None, limit: int) -> list[View]:
+    async def list(
+        self, after: str | None, limit: int, only: frozenset[str] | None = None
+    ) -> list[View]:
         """The one line item, as often as the page is long."""
         self.calls.append(("list", after, limit))
         return [self._view(3)] if after is None else []

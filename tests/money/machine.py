@@ -24,7 +24,7 @@ from tests.money.scene import (
 )
 
 TABLES = (
-    *("stream", "slice", "local_day", "learner", "checkpoint", "freezing", "journal"),
+    *("stream", "slice", "local_day", "learner", "checkpoint", "freezing"),
     *("change_log", "worker", "quarantine", "cancelled", "balance", "line_item"),
 )
 BUDGET = 150

@@ -16,6 +16,7 @@ from sqlalchemy import text
 from service.errors import Unsafe
 from service.feedback import Report
 from service.store import backups, incarnations
+from service.store.chain import verify
 from service.store.database import Database
 from service.store.facts import fact
 from tests.builders import NAME, PRICE, UNIT, Worker, working
@@ -187,3 +188,24 @@ async def test_another_timeline_is_another_life(migrated_url: str) -> None:
     noted = database.read(lambda c: c.execute(text("SELECT action FROM journal")).scalars().all())
     assert list(noted) == ([] if database.is_sqlite else ["renew"])
     database.close()
+
+
+async def test_a_restored_journal_goes_on(migrated_url: str, tmp_path: Path) -> None:
+    """Its chain is whole, the rows of the restore are adopted; a head from after it is missed."""
+    file, heads = tmp_path / "copy", []
+    async with working(migrated_url) as worker:
+        await worker.create()
+        heads.append(worker.database.read(verify).head)
+        backups.back_up(migrated_url, file)
+        await worker.operator.freeze(NAME, "a look", "tester")
+        heads.append(worker.database.read(verify).head)
+        await worker.stop()
+    backups.restore(migrated_url, file, NOW_MS)
+    async with working(migrated_url, "two") as worker:
+        waiting = worker.database.read(lambda c: verify(c, heads[0]))
+        assert (waiting.unsealed, waiting.broken) == (1, None)
+        await worker.operator.correcting.reconcile(NAME, 0, "books", "tester")
+        sealed = worker.database.read(lambda c: verify(c, heads[0]))
+        assert (sealed.rows, sealed.adopted, sealed.unsealed, sealed.broken) == (4, 1, 0, None)
+        lost = worker.database.read(lambda c: verify(c, heads[1]))
+        assert "remembered" in str(lost.broken)

@@ -7,7 +7,7 @@ from typing import Literal
 from pydantic import Field, StrictBool
 
 from service.api.forms import refused
-from service.api.forms.fields import Amount, CapCpm, Moment, Name, Printable, Reason
+from service.api.forms.fields import Amount, CapCpm, Confirm, Moment, Name, Reason
 from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin, TripwiresForm
 from service.api.forms.line_items import (
     DAY_S,
@@ -70,5 +70,5 @@ class ChangeForm(NotYetForm):
     fees: FeesForm | None = None
     losses: Literal["bare", "priced"] = "bare"
     tripwires: TripwiresForm | None = None
-    confirm: Printable | None = None
+    confirm: Confirm | None = None
     reason: Reason | None = None

@@ -100,6 +100,11 @@ Printable = Annotated[
     AfterValidator(_shape(PRINTABLE, "It must be 1 to 64 printable ASCII characters.")),
     WithJsonSchema({"type": "string", "pattern": f"^{PRINTABLE.pattern}$"}),
 ]
+Confirm = Annotated[
+    str,
+    AfterValidator(_shape(re.compile(r"[ -~]{1,256}"), "It must be up to 256 printable ASCII.")),
+    WithJsonSchema({"type": "string", "minLength": 1, "maxLength": 256}),
+]
 Ticket = Annotated[
     str,
     AfterValidator(_shape(re.compile(r"[!-~]{1,512}"), "It is no ticket of ours.")),

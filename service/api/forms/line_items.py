@@ -16,6 +16,7 @@ from service.api.forms.fields import (
     Moment,
     Name,
     Printable,
+    Reason,
     Share,
     TimeZone,
 )
@@ -97,3 +98,4 @@ class CreateForm(NotYetForm):
     losses: Literal["bare", "priced"] = "bare"
     tripwires: TripwiresForm | None = None
     confirm: Printable | None = None
+    reason: Reason | None = None

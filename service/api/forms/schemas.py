@@ -9,6 +9,7 @@ from pydantic.json_schema import models_json_schema
 
 from service.api.forms.bids import BatchForm, BidForm
 from service.api.forms.changes import ChangeForm, FlightChange, ValueChange
+from service.api.forms.keys import KeyForm, RotateForm
 from service.api.forms.line_items import CreateForm
 from service.api.forms.orders import (
     OrderForm,
@@ -31,6 +32,8 @@ _FORMS: tuple[type[BaseModel], ...] = (
     RewindForm,
     ReverseForm,
     ReconcileForm,
+    KeyForm,
+    RotateForm,
 )
 _PROBLEM: dict[str, Any] = {
     "type": "object",
