@@ -6,12 +6,21 @@ from typing import Any
 
 import pytest
 
-from service.configuring import drawn_otherwise, guessed_otherwise, merged, pooled, taught_otherwise
+from service.configuring import (
+    dangers,
+    drawn_otherwise,
+    guessed_otherwise,
+    merged,
+    object_to_change,
+    pooled,
+    taught_otherwise,
+)
+from service.errors import NeedsConfirmation
 from service.learner.fold import Lesson, fold
 from service.learner.memory import Cell, Memory, Prior
 from service.learner.rules import Rules
 from service.learner.tally import Tally
-from tests.builders import CAP, line_item
+from tests.builders import CAP, UNIT, line_item
 
 EXPTREE = {"policy": {"method": "exptree"}, "losses": "priced"}
 
@@ -153,3 +162,40 @@ def test_the_lesson_of_kin_is_the_guess_until_it_is_taken_back() -> None:
 
     assert fold(Memory.fresh(), [taken], rules).prior == Prior(1_000_000, 10_000_000)
     assert fold(Memory.fresh(), [taken, back], rules).prior is None
+
+
+@pytest.mark.parametrize(
+    ("before", "after", "words"),
+    [
+        ({}, {"budget": 10 * UNIT - 1}, []),
+        ({}, {"budget": 10 * UNIT}, ["budget=10.00"]),
+        ({}, {"bid_cap": 3 * CAP - 1}, []),
+        ({}, {"bid_cap": 3 * CAP}, ["bid_cap_cpm=24.00"]),
+        ({}, {"daily_budget": UNIT}, []),
+        ({"daily_budget": UNIT // 10}, {"daily_budget": UNIT}, ["daily_budget=1.00"]),
+        ({"daily_budget": UNIT // 10}, {"daily_budget": None}, ["daily_budget=none"]),
+        ({"daily_budget": UNIT // 9}, {"daily_budget": None}, []),
+        ({"strict": True}, {"strict": False}, ["strict=false"]),
+        ({"strict": False}, {"strict": True}, []),
+        ({}, {"budget": UNIT // 2, "bid_cap": CAP // 2}, []),
+    ],
+)
+def test_what_may_cost_a_lot_is_named(
+    before: dict[str, Any], after: dict[str, Any], words: list[str]
+) -> None:
+    """Ten times a budget, three times a cap, a daily budget that is gone, strict off."""
+    old = line_item(**before)
+    assert list(dangers(old, merged(old, after))) == words
+
+
+def test_learning_cost_and_a_dear_change_are_confirmed_together() -> None:
+    """One value holds both words; neither alone does."""
+    old = line_item(policy={"method": "ucbid", "gamma": 1.0}, value={"ceiling": UNIT})
+    new = merged(old, {"budget": 10 * UNIT})
+    with pytest.raises(NeedsConfirmation) as first:
+        object_to_change(old, new, None, "a try")
+    assert first.value.data["confirm"] == "learning_cost"
+    with pytest.raises(NeedsConfirmation) as second:
+        object_to_change(old, new, "learning_cost", "a try")
+    assert second.value.data["confirm"] == "learning_cost budget=10.00"
+    object_to_change(old, new, str(second.value.data["confirm"]), "a try")

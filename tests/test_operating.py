@@ -183,6 +183,26 @@ async def test_a_lowered_budget_is_a_target(migrated_url: str) -> None:
         assert worker.audit() == []
 
 
+async def test_a_change_that_may_cost_a_lot_is_confirmed_by_its_value(migrated_url: str) -> None:
+    """The refusal names the value; yesterday's value, a reason alone or no reason do not do."""
+    async with working(migrated_url) as worker:
+        await worker.create(daily_budget=UNIT // 20)
+        raised = {"budget": 10 * UNIT, "bid_cap": 3 * CAP}
+        words = "budget=10.00 bid_cap_cpm=24.00"
+        for said in (None, "yes", "budget=10.00", "budget=10.00 bid_cap_cpm=32.00"):
+            with pytest.raises(NeedsConfirmation) as refused:
+                await worker.operator.patch(NAME, raised, 1, said, "a try", "tester")
+            assert refused.value.data["confirm"] == words
+        with pytest.raises(Malformed, match="reason"):
+            await worker.operator.patch(NAME, raised, 1, words, None, "tester")
+        assert worker.one("SELECT version FROM line_item") == 1
+        view = await worker.operator.patch(NAME, raised, 1, words, "a try", "tester")
+        assert (view.version, view.config["budget"]) == (2, 10 * UNIT)
+        less = {"budget": 2 * UNIT, "bid_cap": CAP}
+        await worker.operator.patch(NAME, less, 2, None, None, "tester")
+        assert journal(worker)[-1][3] == "no reason given; changed: bid_cap, budget"
+
+
 async def test_a_new_ceiling_is_taught_from_the_beginning(migrated_url: str) -> None:
     """Nothing learnt is lost: lessons keep what was said, and are read again."""
     async with working(migrated_url) as worker:

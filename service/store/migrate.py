@@ -29,13 +29,13 @@ def migrate(url: str) -> None:
         database.close()
 
 
-def upgrade(connection: Connection) -> None:
-    """Run the missing migrations inside the caller's transaction."""
+def upgrade(connection: Connection, revision: str = "head") -> None:
+    """Run the missing migrations inside the caller's transaction, up to a revision."""
     if connection.dialect.name == "postgresql":
         connection.execute(text("SELECT pg_advisory_xact_lock(:lock)"), {"lock": ADVISORY_LOCK})
     config = _config()
     config.attributes["connection"] = connection
-    command.upgrade(config, "head")
+    command.upgrade(config, revision)
     # Made once, they stay: a new one would turn every open ticket into a stranger's, and every
     # lesson on features into one on other features.
     for name, value in (

@@ -95,6 +95,57 @@ def test_a_bad_key_is_refused_in_a_sentence(run: Run, name: str, scopes: str) ->
     assert run("keys", "list").stdout == "No keys yet.\n"
 
 
+def test_a_key_is_limited_renewed_and_says_why(run: Run) -> None:
+    """Limits, expiry, overlap and reason are options; what is nonsense is told in a sentence."""
+    run("migrate")
+    limits = ("--line-items", "b,a", "--expires", "2100-01-01T00:00:00Z", "--reason", "a new desk")
+    made = json.loads(
+        run("keys", "add", "--name", "desk", "--scopes", "read", *limits, "--json").stdout
+    )
+    turned = json.loads(run("keys", "rotate", made["id"], "--overlap", "60", "--json").stdout)
+    (row,) = json.loads(run("keys", "list", "--json").stdout)["keys"]
+
+    assert (made["line_items"], made["expires_ms"]) == (["a", "b"], 4_102_444_800_000)
+    assert turned["key"] != made["key"]
+    assert (row["state"], row["old_text_until_ms"]) == ("live", turned["old_text_until_ms"])
+    listed = run("keys", "list").stdout
+    assert f"{made['id']}  live   read  desk  only a, b  until 2100-01-01T00:00:00+00:00" in listed
+    assert "shown this once" in run("keys", "rotate", made["id"]).stdout
+    assert run("keys", "end", made["id"], "--reason", "gone").returncode == 0
+    for words, said in (
+        (("rotate", made["id"]), "no live key"),
+        (("add", "--name", "a", "--scopes", "admin", "--line-items", "a"), "cannot be limited"),
+        (("add", "--name", "a", "--scopes", "bid", "--expires", "2100-01-01"), "with its zone"),
+        (("add", "--name", "a", "--scopes", "bid", "--expires", "soon"), "with its zone"),
+        (("add", "--name", "a", "--scopes", "bid", "--reason", " "), "A reason"),
+    ):
+        done = run("keys", *words)
+        assert (done.returncode, said in done.stderr) == (1, True), words
+
+
+def test_the_audit_names_the_first_broken_row_of_the_journal(run: Run, tmp_path: Path) -> None:
+    """It shows the head to be kept, and says what was done to which row since."""
+    run("migrate")
+    for name in ("one", "two", "three"):
+        run("keys", "add", "--name", name, "--scopes", "bid")
+    told = json.loads(run("audit", "--json").stdout)["journal"]
+    head = told["head"]
+    assert (told["rows"], told["broken"]) == (3, None)
+    assert run("audit", "--journal-head", head).returncode == 0
+    assert run("audit", "--journal-head", "x").returncode == 1
+    database = Database(f"sqlite:///{tmp_path}/bidkeel.sqlite")
+    for statement in (
+        "DROP TRIGGER journal_keeps",
+        "UPDATE journal SET actor = 'nobody' WHERE number = 2",
+    ):
+        database.write(lambda c, s=statement: c.execute(text(s)))  # type: ignore[misc]
+    database.close()
+    broken = run("audit")
+    assert broken.returncode == 3
+    assert "Journal row 2: altered: what it says is not what was sealed." in broken.stdout
+    assert run("audit", "--journal-head", head).returncode == 3
+
+
 def test_migrating_twice_is_harmless(run: Run) -> None:
     """The second run finds nothing to do and says the same."""
     assert run("migrate").stdout == run("migrate").stdout

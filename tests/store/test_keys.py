@@ -104,7 +104,7 @@ def test_a_limited_key_comes_back_with_its_limits(database: Database) -> None:
 
     found = database.read(lambda connection: keys.by_bearer(connection, bearer))
     assert found == limited
-    assert (found.line_items, found.until_ms) == ({"a", "b"}, 2**50)
+    assert (found.line_items, found.until_ms) == (frozenset({"a", "b"}), 2**50)
     assert [found.reaches(name) for name in ("a", "b", "c")] == [True, True, False]
     assert keys.Key("k", "name", frozenset()).reaches("c")
 

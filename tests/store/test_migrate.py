@@ -8,9 +8,11 @@ import pytest
 from sqlalchemy import text
 
 from service.errors import BrokenPromise, StoreAway, Unsafe
+from service.store import keys
+from service.store.chain import verify
 from service.store.database import Database
 from service.store.facts import fact
-from service.store.migrate import is_empty, migrate, require_current
+from service.store.migrate import is_empty, migrate, require_current, upgrade
 from tests.builders import outage
 
 ITEM = "INSERT INTO line_item VALUES ('a', '{}', 1, 1, 1)"
@@ -152,3 +154,40 @@ def test_a_database_that_does_not_answer_is_away(migrated_url: str) -> None:
     with outage(migrated_url), pytest.raises(StoreAway):
         require_current(database)
     database.close()
+
+
+def test_a_database_of_the_first_release_is_brought_along(
+    empty: Database, database_url: str
+) -> None:
+    """Its keys still open, its journal is sealed and guarded, its workers may write on beside."""
+    noted = (
+        "INSERT INTO journal (at_ms, actor, action, line_item, reason, detail)"
+        " VALUES (7, 'tester', 'freeze', 'a', 'a look', '{}')"
+    )
+    with empty.engine.begin() as connection:
+        upgrade(connection, "0001")
+        for statement in (
+            noted,
+            noted,
+            "INSERT INTO worker (id, started_ms, beat_ms, change_seen) VALUES ('old', 1, 1, 1)",
+        ):
+            connection.execute(text(statement))
+        connection.execute(
+            text(
+                "INSERT INTO access_key (id, name, hash, scopes, created_ms)"
+                " VALUES ('k', 'desk', :hash, 'bid read', 1)"
+            ),
+            {"hash": keys.hashed("a text")},
+        )
+    migrate(database_url)
+
+    sealed = empty.read(verify)
+    assert (sealed.rows, sealed.adopted, sealed.broken) == (2, 2, None)
+    found = empty.read(lambda c: keys.by_bearer(c, "a text"))
+    assert found == keys.Key("k", "desk", frozenset({"bid", "read"}))
+    refused(empty, "DELETE FROM journal", "a journal with a row less")
+    empty.write(lambda c: c.execute(text(noted)))
+    waiting = empty.read(verify)
+    assert (waiting.unsealed, waiting.broken) == (1, None)
+    keys.end(empty, "k")
+    assert (empty.read(verify).adopted, empty.read(verify).rows) == (3, 4)
