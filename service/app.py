@@ -157,6 +157,7 @@ def clerk_of(settings: Settings, database: Database, threads: Threads) -> Clerk:
         settings.slice_keep_days,
         settings.quarantine_keep_days,
         settings.repeat_keep_days,
+        settings.chart_keep_days,
     )
     return Clerk(database, threads, habits)
 

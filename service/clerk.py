@@ -19,6 +19,7 @@ from service.patience import Patience
 from service.store import (
     auditing,
     changes,
+    charting,
     decisions,
     epochs,
     learners,
@@ -37,6 +38,7 @@ CLOSE_S = 1.0
 # What somebody has edited by hand is to be found within a minute.
 AUDIT_S = 10.0
 PRUNE_S = 3600.0
+CHART_S = 2.0
 DAY_MS = 86_400_000
 REFUSAL_KEEP_DAYS = 90  # A quarter: long enough to look back at who tried what.
 
@@ -51,6 +53,7 @@ class Habits:
     slice_keep_days: int
     quarantine_keep_days: int
     repeat_keep_days: int
+    chart_keep_days: int = 400
 
 
 class Clerk:
@@ -69,6 +72,7 @@ class Clerk:
             every(CLOSE_S, self.close),
             every(AUDIT_S, self.audit),
             every(PRUNE_S, self.prune),
+            every(CHART_S, self.chart),
         ]
 
     async def start(self) -> None:
@@ -98,6 +102,11 @@ class Clerk:
             if self._sound.get(name) != standing and await self._audit(name):
                 self._sound[name] = standing
 
+    async def chart(self) -> None:
+        """Count what is new for charts."""
+        while await self._threads.run(charting.roll, self._database) >= charting.ENTRIES_MAX:
+            pass
+
     async def prune(self) -> None:
         """Forget what has been kept for long enough, in pieces that hold up nobody."""
         habits, wall_ms = self._habits, self._database.wall_ms()
@@ -107,6 +116,7 @@ class Clerk:
         )
         await self._until_none(refusals.prune, wall_ms - REFUSAL_KEEP_DAYS * DAY_MS)
         await self._until_none(repeats.prune, wall_ms - habits.repeat_keep_days * DAY_MS)
+        await self._until_none(charting.prune, wall_ms - habits.chart_keep_days * DAY_MS)
         # A length and not a moment, for slices age by service time and all else by the wall clock.
         await self._until_none(auditing.prune_slices, habits.slice_keep_days * DAY_MS)
         for forget in (epochs.prune, changes.prune, workers.prune):

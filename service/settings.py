@@ -156,7 +156,13 @@ class Settings(BaseSettings):
         le=3650,
         description="Days that logged decisions are kept; the stream itself is kept for ever.",
     )
-
+    chart_keep_days: int = Field(
+        400,
+        ge=1,
+        le=3650,
+        description="Days that counts for charts are kept: a year and a month, so that a season "
+        "can be laid beside the one before.",
+    )
     slice_keep_days: int = Field(
         2,
         ge=0,

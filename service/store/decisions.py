@@ -7,6 +7,7 @@ from typing import Any
 
 from sqlalchemy import text
 
+from service.store import charting
 from service.store.database import Database, Writing
 
 Decision = dict[str, Any]
@@ -15,7 +16,13 @@ PRUNED_MAX = 5000
 
 def log(database: Database, decisions: list[Decision]) -> None:
     """Append decisions; losing some in a crash loses no money, since tickets carry it."""
-    database.write(lambda connection: connection.execute(_INSERT, decisions))
+
+    def work(connection: Writing) -> None:
+        connection.execute(_INSERT, decisions)
+        # In the same transaction, so that a chart counts each logged decision once.
+        charting.add(connection, charting.of_decisions(decisions))
+
+    database.write(work)
 
 
 def prune(connection: Writing, before_ms: int) -> int:

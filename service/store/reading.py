@@ -118,7 +118,8 @@ def _passes(connection: Reading, line_item: str) -> dict[str, int]:
     rows = connection.execute(
         text(
             "SELECT reason, count(*) AS n FROM (SELECT reason FROM decision"
-            " WHERE line_item = :id AND test = 0 ORDER BY number DESC LIMIT 1000) latest"
+            " WHERE line_item = :id AND test = 0 ORDER BY at_ms DESC, number DESC LIMIT 1000)"
+            " latest"
             " WHERE reason IS NOT NULL GROUP BY reason ORDER BY reason"
         ),
         {"id": line_item},

@@ -1,0 +1,294 @@
+"""Counts for charts, kept per five minutes, so that a chart of a week reads no single decision.
+
+Decisions are counted in the transaction that logs them, entries of the stream by the clerk,
+each once. Prices are kept by bins of a quarter of a doubling: quantiles are within 9 %.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+from collections import Counter
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from sqlalchemy import text
+
+from service.store.database import Database, Reading, Writing
+
+FIVE_MINUTES_MS = 300_000
+ENTRIES_MAX = 2000
+BUCKETS_MAX = 300
+BINS_PER_DOUBLING = 4
+NOTHING_BIN = -1  # Of a price of 0, which has no logarithm.
+MINUTE_MS = 60_000
+# Steps at which people read a clock; beyond the last, whole days.
+STEPS_MS = tuple(m * MINUTE_MS for m in (5, 10, 15, 20, 30, 60, 120, 180, 240, 360, 720, 1440))
+REFUNDED = "reversal"  # The kind of entry whose cost was taken back.
+OUTCOMES = ("won", "lost", "void", "billed", "value")
+
+Row = dict[str, Any]
+Key = tuple[str, int, str, str]  # Line item, start of the five minutes, what, name.
+
+
+@dataclass(frozen=True, slots=True)
+class Quantiles:
+    """Prices in nanos per impression, each the middle of a bin, so at most 9 % off."""
+
+    low: int
+    median: int
+    high: int
+    count: int
+
+
+@dataclass(slots=True)
+class Bucket:
+    """
+    What happened in one step of a chart; money in nanos.
+
+    Args:
+        at_ms: When it begins, on the wall clock.
+        cost: Costs booked less refunds: what was spent, was unfunded or is disputed.
+        counts: By kind of outcome, and "bid" for bids that left.
+        value: What impressions brought, corrections included.
+        passes: How many decisions passed, by reason.
+        set_by: How many bids each part set.
+        bids: The 10, 50 and 90 % quantile of bids that left.
+        clearing: The same of clearing prices of wins.
+    """
+
+    at_ms: int
+    cost: int = 0
+    value: int = 0
+    counts: dict[str, int] = field(default_factory=dict)
+    passes: dict[str, int] = field(default_factory=dict)
+    set_by: dict[str, int] = field(default_factory=dict)
+    bids: Quantiles | None = None
+    clearing: Quantiles | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Chart:
+    """
+    Steps of one length, none left out.
+
+    Args:
+        behind: Entries of the stream that are not counted yet; the clerk is at it.
+    """
+
+    line_item: str
+    from_ms: int
+    until_ms: int
+    step_ms: int
+    behind: int
+    buckets: list[Bucket]
+
+
+def chart(
+    connection: Reading,
+    line_item: str,
+    from_ms: int,
+    until_ms: int,
+    buckets_max: int = BUCKETS_MAX,
+) -> Chart:
+    """What happened between two moments, in at most so many steps; begins on a whole step."""
+    step_ms = _step_ms(until_ms - from_ms, buckets_max)
+    begin_ms = from_ms - from_ms % step_ms
+    row = {"id": line_item, "from": begin_ms, "until": until_ms, "step": step_ms}
+    places = range(max(1, -(-(until_ms - begin_ms) // step_ms)))
+    buckets = [Bucket(begin_ms + place * step_ms) for place in places]
+    bids, clearing = [Counter[int]() for _ in places], [Counter[int]() for _ in places]
+    for found in connection.execute(_CHART, row):
+        place, n, nanos = int(found.place), int(found.n), int(found.nanos)
+        if found.what in ("bid", "won"):
+            (bids if found.what == "bid" else clearing)[place][int(found.name)] += n
+        _fill(buckets[place], found.what, found.name, n, nanos)
+    for place, bucket in enumerate(buckets):
+        bucket.bids, bucket.clearing = _quantiles(bids[place]), _quantiles(clearing[place])
+    behind = int(connection.execute(_BEHIND, row).scalar_one_or_none() or 0)
+    return Chart(line_item, begin_ms, until_ms, step_ms, behind, buckets)
+
+
+def delays(
+    connection: Reading, line_item: str, from_ms: int, until_ms: int
+) -> list[tuple[int, int, int]]:
+    """First values by how long after their win they came: from ms, until ms, how many."""
+    rows = connection.execute(_DELAYS, {"id": line_item, "from": from_ms, "until": until_ms})
+    found = {int(row.name): int(row.n) for row in rows}
+    bins = range(min(found, default=0), max(found, default=-1) + 1)
+    return [(2**at if at else 0, 2 ** (at + 1), found.get(at, 0)) for at in bins]
+
+
+def add(connection: Writing, counted: Mapping[Key, tuple[int, int]]) -> None:
+    """Add counts and nanos to what is there."""
+    # In one order for everybody, or two who add at once could wait for each other.
+    rows = [
+        {"id": key[0], "at": key[1], "what": key[2], "name": key[3], "n": n, "nanos": nanos}
+        for key, (n, nanos) in sorted(counted.items())
+    ]
+    if rows:
+        connection.execute(_ADD, rows)
+
+
+def of_decisions(decisions: Iterable[Row]) -> dict[Key, tuple[int, int]]:
+    """What decisions add; tests cost nobody anything and count for nothing."""
+    counted = dict[Key, tuple[int, int]]()
+    for one in decisions:
+        if one["test"]:
+            continue
+        place = one["line_item"], _five(one["at_ms"])
+        if one["price"] is None:
+            _count(counted, (*place, "pass", one["reason"]))
+            continue
+        _count(counted, (*place, "bid", _bin(one["price"])), 1, one["price"])
+        _count(counted, (*place, "set_by", one["set_by"] or ""))
+    return counted
+
+
+def roll(database: Database, entries_max: int = ENTRIES_MAX) -> int:
+    """Count what is new in every stream, a piece of each; returns how many entries that were."""
+    behind = database.read(lambda connection: connection.execute(_ALL_BEHIND).all())
+    return sum(_roll(database, row.line_item, row.seq, entries_max) for row in behind)
+
+
+def prune(connection: Writing, before_ms: int) -> int:
+    """Forget counts from before this wall clock moment; returns how many rows went."""
+    names = connection.execute(text("SELECT line_item FROM charted")).scalars().all()
+    rows = [{"id": name, "before": before_ms} for name in names]
+    return sum(connection.execute(_PRUNE, row).rowcount for row in rows)
+
+
+def _roll(database: Database, line_item: str, was: int, entries_max: int) -> int:
+    wanted = {"id": line_item, "was": was, "limit": entries_max}
+    # Read outside of the write, for parsing is slow and SQLite lets one writer in at a time.
+    rows = database.read(lambda connection: connection.execute(_NEXT, wanted).all())
+    counted = _of_entries(line_item, rows)
+    kept = wanted | {"seq": rows[-1].seq if rows else was}
+
+    def work(connection: Writing) -> None:
+        # Another clerk may have counted this piece since; whose guard fails adds nothing.
+        if rows and connection.execute(_KEEP, kept).rowcount == 1:
+            add(connection, counted)
+
+    database.write(work)
+    return len(rows)
+
+
+def _of_entries(line_item: str, rows: Iterable[Any]) -> dict[Key, tuple[int, int]]:
+    counted = dict[Key, tuple[int, int]]()
+    for row in rows:
+        place = line_item, _five(row.at_ms)
+        if row.cost:
+            cost = -row.cost if row.kind == REFUNDED else row.cost
+            _count(counted, (*place, "cost", ""), 1, cost)
+        if row.kind in OUTCOMES:
+            _count_outcome(counted, place, row)
+    return counted
+
+
+def _count_outcome(counted: dict[Key, tuple[int, int]], place: tuple[str, int], row: Any) -> None:
+    body = _body(row.body)
+    price, amount, was = body.get("price"), body.get("amount"), body.get("was")
+    if row.kind == "won":
+        # One that names no price we can read is still a win.
+        nanos = price if isinstance(price, int) else 0
+        _count(counted, (*place, "won", _bin(nanos)), 1, nanos)
+    elif row.kind != "value":
+        _count(counted, (*place, row.kind, ""))
+    elif isinstance(amount, int):
+        first = was is None
+        _count(counted, (*place, "value", ""), int(first), amount - (was or 0))
+        # What waited for its win came no sooner than the win, but nobody knows when.
+        if first and amount and isinstance(body.get("won_ms"), int) and not body.get("parked"):
+            late_ms = max(1, row.service_ms - body["won_ms"])
+            _count(counted, (*place, "delay", str(late_ms.bit_length() - 1)))
+
+
+def _count(counted: dict[Key, tuple[int, int]], key: Key, n: int = 1, nanos: int = 0) -> None:
+    before = counted.get(key, (0, 0))
+    counted[key] = before[0] + n, before[1] + nanos
+
+
+def _fill(bucket: Bucket, what: str, name: str, n: int, nanos: int) -> None:
+    if what == "cost":
+        bucket.cost += nanos
+    elif what in ("pass", "set_by"):
+        (bucket.passes if what == "pass" else bucket.set_by)[name] = n
+    elif what != "delay":
+        bucket.counts[what] = bucket.counts.get(what, 0) + n
+        bucket.value += nanos if what == "value" else 0
+
+
+def _quantiles(bins: Counter[int]) -> Quantiles | None:
+    count = bins.total()
+    if not count:
+        return None
+    low, median, high = (_quantile(bins, count, share) for share in (0.1, 0.5, 0.9))
+    return Quantiles(low, median, high, count)
+
+
+def _quantile(bins: Counter[int], count: int, share: float) -> int:
+    left = max(1, math.ceil(share * count))
+    for at in sorted(bins):
+        left -= bins[at]
+        if left <= 0:
+            return 0 if at == NOTHING_BIN else round(2 ** ((at + 0.5) / BINS_PER_DOUBLING))
+    return 0
+
+
+def _bin(price: int) -> str:
+    return str(math.floor(BINS_PER_DOUBLING * math.log2(price)) if price > 0 else NOTHING_BIN)
+
+
+def _five(at_ms: int) -> int:
+    return int(at_ms - at_ms % FIVE_MINUTES_MS)
+
+
+def _step_ms(span_ms: int, buckets_max: int) -> int:
+    # One less, since the first step may begin before the moment asked for.
+    least = max(1, span_ms) / max(1, buckets_max - 1)
+    days = math.ceil(least / STEPS_MS[-1])
+    return next((step for step in STEPS_MS if step >= least), days * STEPS_MS[-1])
+
+
+def _body(told: str) -> dict[str, Any]:
+    """The body of an entry; a damaged one is empty: the audit will find it, not a chart."""
+    try:
+        body = json.loads(told)
+    except ValueError:
+        return {}
+    return body if isinstance(body, dict) else {}
+
+
+_CHART = text(
+    "SELECT (at_ms - :from) / :step AS place, what, name, sum(n) AS n, sum(nanos) AS nanos"
+    " FROM chart_count WHERE line_item = :id AND at_ms >= :from AND at_ms < :until"
+    " GROUP BY place, what, name"
+)
+_DELAYS = text(
+    "SELECT name, sum(n) AS n FROM chart_count WHERE line_item = :id AND at_ms >= :from"
+    " AND at_ms < :until AND what = 'delay' GROUP BY name"
+)
+_ADD = text(
+    "INSERT INTO chart_count (line_item, at_ms, what, name, n, nanos)"
+    " VALUES (:id, :at, :what, :name, :n, :nanos) ON CONFLICT (line_item, at_ms, what, name)"
+    " DO UPDATE SET n = chart_count.n + excluded.n, nanos = chart_count.nanos + excluded.nanos"
+)
+_NEXT = text(
+    "SELECT seq, kind, at_ms, service_ms, cost, body FROM stream"
+    " WHERE line_item = :id AND seq > :was ORDER BY seq LIMIT :limit"
+)
+_KEEP = text(
+    "INSERT INTO charted (line_item, seq) VALUES (:id, :seq) ON CONFLICT (line_item)"
+    " DO UPDATE SET seq = excluded.seq WHERE charted.seq = :was"
+)
+_BEHIND = text(
+    "SELECT b.seq - coalesce(c.seq, 0) FROM balance b LEFT JOIN charted c"
+    " ON c.line_item = b.line_item WHERE b.line_item = :id"
+)
+_ALL_BEHIND = text(
+    "SELECT b.line_item, coalesce(c.seq, 0) AS seq FROM balance b LEFT JOIN charted c"
+    " ON c.line_item = b.line_item WHERE b.seq > coalesce(c.seq, 0) ORDER BY b.line_item"
+)
+_PRUNE = text("DELETE FROM chart_count WHERE line_item = :id AND at_ms < :before")
