@@ -30,6 +30,7 @@ from service.errors import Malformed, StoreAway
 from service.ledger.entries import Entry
 from service.ordering import Orders, repeat_of
 from service.quarantining import Quarantining
+from service.records import Records
 from service.showing import show, show_curve
 from service.store import changes, epochs, freezes, learners, line_items, reading
 from service.store.books import Books
@@ -77,6 +78,7 @@ class Operator:
         self.correcting = Correcting(orders)
         self.quarantine = Quarantining(orders, self.winding)
         self.admitting = Admitting(orders, catalog)
+        self.records = Records(database, threads)
 
     async def key_for(self, bearer: str) -> Key | None:
         """The live key behind a bearer text, or None."""

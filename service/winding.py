@@ -21,7 +21,7 @@ from service.learner.memory import Memory
 from service.ledger.cancelling import ALL, PARTS, Finder, Named, Span
 from service.ledger.entries import Entry
 from service.ordering import Orders, repeat_of
-from service.store import learners, lessons, line_items, rebuilds
+from service.store import learners, lessons, line_items, rebuilds, records
 from service.store.books import Books
 from service.store.database import Reading, Writing
 from service.teaching import FRESH, lawful, lesson
@@ -234,7 +234,7 @@ def _after(
     """Every lesson behind a moment that still teaches, as one span, and the seq of the moment."""
     line_items.one(connection, line_item)
     head = rebuilds.standing(connection, line_item).head
-    seq = to if at_ms is None else lessons.seq_at(connection, line_item, at_ms)
+    seq = to if at_ms is None else records.seq_before(connection, line_item, at_ms + 1)
     if seq > head:
         raise Malformed("not_so_far", "The stream of this line item has not come so far.")
     cancelled = lessons.cancellations(connection, line_item)

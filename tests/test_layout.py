@@ -25,7 +25,7 @@ SHARED = {
         "showing",
     ),
     *("correcting", "ordering", "pulse", "quarantining", "spending", "teaching", "threads"),
-    "winding",
+    *("records", "recounting", "previewing", "winding"),
 }
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "rehearsal"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}
@@ -45,7 +45,7 @@ OWN: dict[str, set[str]] = {
     # Of the store only its named reads, of the decision only the form a bid takes.
     "api": STORIES
     | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
-    | {"admitting"},
+    | {"admitting", "records", "recounting"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 

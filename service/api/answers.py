@@ -98,6 +98,11 @@ def plain(members: Any) -> Any:
     return members
 
 
+def journal(rows: Iterable[Mapping[str, Any]]) -> list[Any]:
+    """Rows of the journal; what they say of configurations is written as configurations are."""
+    return [plain({**row, "detail": _config(row["detail"])}) for row in rows]
+
+
 def _seconds(duration_ms: int) -> int:
     return duration_ms // 1000
 
@@ -120,6 +125,12 @@ _MOMENTS = {
     "last_ms": "last",
     "published_ms": "published_at",
     "money_ends_ms": "money_ends_at",
+    "flight_ends_ms": "flight_ends_at",
+    "expires_ms": "expires_at",
+    "close_ms": "closes_at",
+    "billing_close_ms": "billing_closes_at",
+    "first_at_ms": "first_at",
+    "last_at_ms": "last_at",
 }
 _CONFIG: dict[str, tuple[str, Callable[[int], object]]] = {
     "budget": ("budget", money.nanos_text),
@@ -168,4 +179,4 @@ def _config_member(name: str, value: Any) -> tuple[str, Any]:
     if isinstance(value, Mapping):
         return name, _config(value)
     renamed, write = _CONFIG.get(name, (name, None))
-    return renamed, value if write is None or value is None else write(value)
+    return renamed, write(value) if write is not None and isinstance(value, int) else value

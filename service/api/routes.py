@@ -13,6 +13,7 @@ from service.api import (
     line_items,
     orders,
     outcomes,
+    records,
     winding,
 )
 from service.api.problems import install_handlers
@@ -25,6 +26,7 @@ ROUTERS = (
     winding.router,
     corrections.router,
     keys.router,
+    records.router,
     health.router,
     documentation.router,
 )

@@ -14,7 +14,7 @@ from service.commands.report import progress
 from service.connecting import open_database
 from service.errors import Malformed
 from service.settings import load
-from service.store import lessons, line_items, rebuilds
+from service.store import line_items, rebuilds, records
 from service.store.database import Database, Reading
 from service.store.migrate import require_current
 from service.store.rebuilds import Rebuilt
@@ -68,7 +68,7 @@ def _seq(connection: Reading, name: str, to: str) -> int:
     if to.isascii() and to.isdigit():
         return int(to)
     try:
-        return lessons.seq_at(connection, name, milliseconds(to))
+        return records.seq_before(connection, name, milliseconds(to) + 1)
     except ValueError as error:
         raise Malformed("bad_time", f"--to: {error}") from error
 

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 from sqlalchemy import LargeBinary, text
 
@@ -42,15 +43,10 @@ def read(
 ) -> Page:
     """The entries after `seq`, at most so many."""
     rows = connection.execute(_AFTER, {"id": line_item, "seq": seq, "limit": limit}).all()
-    again = dict[int, Body | None]()
-    # What a value adds depends on what came before it, some of which may be cancelled now.
-    if cancelled:
-        values = [bytes(row.bid) for row in rows if row.kind == "value" and row.bid is not None]
-        again = _values_again(connection, line_item, values, cancelled)
+    rests = left_of(connection, line_item, rows, cancelled)
     kept = list[tuple[int, Lesson]]()
     for row in rows:
-        body = again.get(row.seq, _body(row.body))
-        rest = None if body is None else left(row.seq, row.kind, body, cancelled)
+        rest = rests[row.seq]
         times = (row.service_ms, row.at_ms, row.cost)
         if rest is not None:
             kept.append((row.seq, (row.kind, rest, *times)))
@@ -58,6 +54,22 @@ def read(
             kept.append((row.seq, (SPENT, {}, *times)))
     end = rows[-1].seq if rows else seq
     return Page([lesson for _, lesson in kept], [n for n, _ in kept], len(rows), end)
+
+
+def left_of(
+    connection: Reading | Writing, line_item: str, rows: Sequence[Any], cancelled: Cancelled
+) -> dict[int, Body | None]:
+    """What is left of each of these entries, by seq; None where it teaches no more."""
+    again = dict[int, Body | None]()
+    # What a value adds depends on what came before it, some of which may be cancelled now.
+    if cancelled:
+        values = [bytes(row.bid) for row in rows if row.kind == "value" and row.bid is not None]
+        again = _values_again(connection, line_item, values, cancelled)
+    rests = dict[int, Body | None]()
+    for row in rows:
+        body = again.get(row.seq, _body(row.body))
+        rests[row.seq] = None if body is None else left(row.seq, row.kind, body, cancelled)
+    return rests
 
 
 def cancellations(connection: Reading | Writing, line_item: str) -> Cancelled:
@@ -107,14 +119,6 @@ def kinds_after(
     """Seq and kind of the entries of these kinds after `seq`, in order."""
     rows = connection.execute(_KINDS, {"id": line_item, "seq": seq, "kinds": kinds})
     return [(row.seq, row.kind) for row in rows]
-
-
-def seq_at(connection: Reading | Writing, line_item: str, at_ms: int) -> int:
-    """The last seq stamped at or before a moment of the wall clock; 0 when there is none."""
-    statement = text(
-        "SELECT coalesce(max(seq), 0) FROM stream WHERE line_item = :id AND at_ms <= :at"
-    )
-    return int(connection.execute(statement, {"id": line_item, "at": at_ms}).scalar_one())
 
 
 def last_reset(connection: Reading | Writing, line_item: str, cancelled: Cancelled) -> int:

@@ -60,6 +60,11 @@ SCOPES = [
         for order in ("retract", "rewind", "reverse", "reconcile", "close")
     ),
     ("GET", "/v1/line-items/a/quarantine", "read"),
+    *(
+        ("GET", f"/v1/line-items/a/{name}", "read")
+        for name in ("stream", "ledger", "lessons", "decisions", "journal")
+    ),
+    ("GET", "/v1/journal", "read"),
 ]
 
 
