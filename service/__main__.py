@@ -106,6 +106,12 @@ def _bench_curve() -> ModuleType:
     return bench_curve
 
 
+def _bench_reads() -> ModuleType:
+    from service.commands import bench_reads
+
+    return bench_reads
+
+
 def _drill_kill() -> ModuleType:
     from service.commands import drill_kill
 
@@ -148,6 +154,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "learn": ("time the folding of each method's lessons", _bench_learn),
     "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
+    "reads": ("time pages, tables and charts of a large log over HTTP", _bench_reads),
 }
 DRILLS: dict[str, tuple[str, Load]] = {
     "catalogue": ("run the test of every known fault and print the table", _drill_catalogue),

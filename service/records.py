@@ -15,13 +15,14 @@ from service.errors import Overloaded
 from service.recounting import (
     LESSON_KINDS,
     MONEY_KINDS,
+    chart_told,
     decision_row,
     entry_row,
     journal_row,
     lesson_row,
     money_row,
 )
-from service.store import lessons, line_items, records
+from service.store import charting, lessons, line_items, records
 from service.store.database import Database, Reading
 from service.store.records import FIRST, LAST, Logged
 from service.threads import Threads
@@ -101,6 +102,20 @@ class Records:
             rows, rest = _read(connection, wish, config, span, limit, newest_first=True)
             summary = _summary(connection, wish, config)
             return Page(rows, rest.before if rest else None, summary)
+
+        return await self._threads.run(self._database.read, work)
+
+    async def chart(self, line_item: str, from_ms: int, until_ms: int) -> dict[str, Any]:
+        """
+        What happened between two moments, in at most 300 steps.
+
+        Raises:
+            NotFound: There is no such line item.
+        """
+
+        def work(connection: Reading) -> dict[str, Any]:
+            line_items.one(connection, line_item)
+            return chart_told(charting.chart(connection, line_item, from_ms, until_ms))
 
         return await self._threads.run(self._database.read, work)
 

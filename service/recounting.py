@@ -11,6 +11,7 @@ from typing import Any
 
 from service.guard.ticket import ref_of
 from service.ledger.cancelling import PARTS, Cancelled
+from service.store.charting import Chart, Quantiles
 
 KINDS = (
     *("create", "edit", "lease", "retire", "close", "closed", "tick", "won", "lost", "void"),
@@ -115,6 +116,29 @@ def journal_row(row: Any) -> dict[str, Any]:
     }
 
 
+def chart_told(chart: Chart) -> dict[str, Any]:
+    """A chart step by step; prices are middles of bins, so their quantiles are within 9 %."""
+    return {
+        "line_item": chart.line_item,
+        "step_s": chart.step_ms // 1000,
+        "entries_not_counted_yet": chart.behind,
+        "prices_within": "9 %",
+        "steps": [
+            {
+                "at_ms": bucket.at_ms,
+                "cost_nanos": bucket.cost,
+                "value_nanos": bucket.value,
+                "counts": bucket.counts,
+                "passes": bucket.passes,
+                "set_by": bucket.set_by,
+                "bid": _quantiles(bucket.bids),
+                "clearing": _quantiles(bucket.clearing),
+            }
+            for bucket in chart.buckets
+        ],
+    }
+
+
 def said(told: str) -> dict[str, Any]:
     """The members of a body; none where it is damaged, which the audit will say."""
     try:
@@ -122,6 +146,13 @@ def said(told: str) -> dict[str, Any]:
     except ValueError:
         return {}
     return body if isinstance(body, dict) else {}
+
+
+def _quantiles(prices: Quantiles | None) -> dict[str, int] | None:
+    if prices is None:
+        return None
+    of = (("p10", prices.low), ("median", prices.median), ("p90", prices.high))
+    return {f"{name}_cpm_nanos": price for name, price in of}
 
 
 def _named(body: Mapping[str, Any], kind: str) -> dict[str, Any]:

@@ -13,7 +13,7 @@ from starlette.requests import Request
 from service.api.forms.fields import PRINTABLE
 from service.api.forms.reading import bad_field
 from service.api.headers import LIMIT_DEFAULT, LIMIT_MAX
-from service.api.times import milliseconds
+from service.api.times import DAY_MS, milliseconds
 from service.errors import Malformed
 from service.records import KINDS_OF, LOGS, Place, Wish
 from service.recounting import KINDS
@@ -21,6 +21,7 @@ from service.recounting import KINDS
 SHARED = ("from", "until", "kind", "cursor", "limit", "format")
 OF_DECISIONS = ("reason", "set_by", "source")
 NUMBER_MAX = 2**63 - 1
+CHART_DAYS_MAX = 62  # Of counts kept every five minutes: as many as are read in one look.
 
 _WORD = re.compile(r"[a-z_]{1,32}")
 _LIMIT = re.compile(r"[0-9]{1,4}")
@@ -63,6 +64,23 @@ def asked(request: Request, name: str, line_item: str | None) -> Asked:
     cursor = given.get("cursor")
     before = None if cursor is None else _place(cursor, name)
     return Asked(_wish(given, name, line_item), before, _limit(given), as_csv)
+
+
+def span_of(request: Request, now_ms: int) -> tuple[int, int]:
+    """
+    The moments between which a chart is asked for; the last day when none is named.
+
+    Raises:
+        Malformed: Another parameter, one twice, no time, or too long a span.
+    """
+    given = request.query_params
+    if set(given) - {"from", "until"} or len(given.multi_items()) != len(given):
+        raise bad_field("query", "The parameters are from and until, once each.")
+    until_ms = _moment(given, "until") or now_ms
+    from_ms = _moment(given, "from") or until_ms - DAY_MS
+    if not from_ms < until_ms <= from_ms + CHART_DAYS_MAX * DAY_MS:
+        raise bad_field("until", f"It must be after from, by at most {CHART_DAYS_MAX} days.")
+    return from_ms, until_ms
 
 
 def cursor_of(name: str, place: Place | None) -> str | None:

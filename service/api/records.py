@@ -14,8 +14,9 @@ from service.api import answers, tables
 from service.api.access import require
 from service.api.documentation import described
 from service.api.headers import line_item_id
-from service.api.paging import Asked, asked, cursor_of, parameters
+from service.api.paging import Asked, asked, cursor_of, parameters, span_of
 from service.api.stories import stories
+from service.api.times import now_ms
 from service.records import Export
 
 router = APIRouter()
@@ -111,6 +112,23 @@ async def get_decisions(request: Request) -> Response:
     """Bids and passes with what set them."""
     await require(request, "read")
     return await _answer(request, "decisions", line_item_id(request))
+
+
+@router.get(
+    PATH + "/chart",
+    **described(
+        "Read what happened in at most 300 steps of at least five minutes: money, outcomes, passes "
+        "and quantiles of prices. The last day, or from (included) until (not), at most 62 days.",
+        "read",
+        query=("from", "until"),
+    ),
+)
+async def get_chart(request: Request) -> Response:
+    """Sums per step, counted as things happened."""
+    await require(request, "read")
+    name, (from_ms, until_ms) = line_item_id(request), span_of(request, now_ms())
+    chart = await stories(request).operator.records.chart(name, from_ms, until_ms)
+    return answers.json_answer(answers.plain(chart))
 
 
 @router.get(PATH + "/journal", **_told("journal", "Read who did what to a line item, and why."))

@@ -35,10 +35,15 @@ def milliseconds(text: object) -> int:
     return (moment - _EPOCH) // _MILLISECOND
 
 
+def now_ms() -> int:
+    """The wall clock in milliseconds since 1970."""
+    return time.time_ns() // 1_000_000
+
+
 def start_of_today_ms() -> int:
     """When today began, in UTC."""
-    now_ms = time.time_ns() // 1_000_000
-    return now_ms - now_ms % DAY_MS
+    now = now_ms()
+    return now - now % DAY_MS
 
 
 def time_text(moment_ms: int) -> str:

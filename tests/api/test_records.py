@@ -258,3 +258,34 @@ async def test_an_unknown_line_item_has_no_list(app_client: httpx.AsyncClient, q
     for path in list(LISTS)[:-1]:
         answer = await app_client.get(path.replace("/a/", "/b/") + query)
         assert (answer.status_code, answer.json()["code"]) == (404, "no_such_line_item"), path
+
+
+async def test_a_chart_tells_steps_of_five_minutes(
+    app_client: httpx.AsyncClient, migrated_url: str
+) -> None:
+    """Counts and prices of a day by itself, of a span when one is named."""
+    await wins(app_client, 0)
+    log(migrated_url, BID, PASS, BID)
+    span = {"from": DAY.format(0), "until": "2026-12-01T00:10:00Z"}
+    told = await read(app_client, f"{ONE}/chart", **span)
+    assert (told["step_s"], len(told["steps"])) == (300, 2)
+    first, second = told["steps"]
+    assert (first["at"], first["counts"], first["passes"]) == (
+        *(DAY.format(0), {"bid": 2}, {"frozen": 1}),
+    )
+    assert first["bid"]["median_cpm"] == pytest.approx(1.234567, rel=0.095)
+    assert (second["counts"], second["bid"], second["cost"]) == ({}, None, "0.00")
+    assert len((await read(app_client, f"{ONE}/chart"))["steps"]) in (288, 289)
+
+
+@pytest.mark.parametrize(
+    "query", ["from=x", "step=5", "until=2026-12-01T00:00:00Z&from=2026-12-02T00:00:00Z"]
+)
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
+async def test_a_chart_of_no_span_is_refused(app_client: httpx.AsyncClient, query: str) -> None:
+    """Backwards, no time, or a word we do not read; and of more days than one look reads."""
+    await wins(app_client, 0)
+    for bad in (query, "from=2026-09-01T00:00:00Z&until=2026-12-01T00:00:00Z"):
+        answer = await app_client.get(f"{ONE}/chart?{bad}")
+        assert (answer.status_code, answer.json()["code"]) == (422, "bad_field")
+    assert (await app_client.get("/v1/line-items/b/chart")).status_code == 404

@@ -62,7 +62,7 @@ SCOPES = [
     ("GET", "/v1/line-items/a/quarantine", "read"),
     *(
         ("GET", f"/v1/line-items/a/{name}", "read")
-        for name in ("stream", "ledger", "lessons", "decisions", "journal")
+        for name in ("stream", "ledger", "lessons", "decisions", "journal", "chart")
     ),
     ("GET", "/v1/journal", "read"),
 ]
