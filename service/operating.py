@@ -239,21 +239,18 @@ class Operator:
         )
 
     async def reset(
-        self, line_item: str, reason: str, actor: str, idempotency: str | None = None
+        self,
+        line_item: str,
+        reason: str,
+        actor: str,
+        idempotency: str | None = None,
+        *,
+        preview: bool = False,
     ) -> dict[str, Any]:
         """Let the learner begin afresh; money and the stream before it stay as they are."""
-
-        def order(connection: Writing) -> dict[str, Any]:
-            line_items.one(connection, line_item)
-            said = {"actor": actor, "reason": reason}
-            seq = self._post(connection, line_item, Entry("reset", said))
-            learners.begin_afresh(connection, line_item, seq)
-            detail = {"before": {"seq": seq - 1}, "after": {"seq": seq}}
-            self._orders.note(connection, actor, "reset", line_item, reason, detail)
-            return {"line_item": line_item, **detail}
-
-        wish = {"call": "reset", "line_item": line_item, "reason": reason}
-        return await self._orders.give(order, repeat_of(actor, idempotency, wish))
+        return await self.winding.reset(
+            line_item, reason, actor, preview=preview, idempotency=idempotency
+        )
 
     async def health(self) -> dict[str, Any]:
         """Whether the database answers; prices leave from slices in hand either way."""

@@ -12,27 +12,32 @@ from collections.abc import Callable, Mapping
 from dataclasses import asdict, dataclass
 from typing import Any
 
-from service.decision.describing import describe
-from service.decision.price import ready
-from service.decision.terms import Terms
 from service.errors import Malformed
 from service.guard.ticket import BadTicket, bid_of
-from service.learner.memory import Memory
-from service.ledger.cancelling import ALL, PARTS, Finder, Named, Span
+from service.ledger.cancelling import ALL, Finder, Named
 from service.ledger.entries import Entry
 from service.ordering import Orders, repeat_of
-from service.store import learners, lessons, line_items, rebuilds, records
+from service.previewing import (
+    GoesOn,
+    Taken,
+    after,
+    begun,
+    estimate,
+    finder,
+    found,
+    preview_reset,
+    shown,
+)
+from service.previewing import preview as preview_of
+from service.store import learners, lessons, rebuilds
 from service.store.books import Books
 from service.store.database import Reading, Writing
+from service.store.learners import digest_of
 from service.teaching import FRESH, lawful, lesson
 
 LOOK_S = 0.02
 REFOLD_S_MAX = 5.0  # After so long the answer goes out, and upkeep goes on with the fold.
-SPANS_SHOWN_MAX = 20
-SHOWN = (
-    *("method", "wins", "known", "converted", "set_by", "pass"),
-    *("mean_nanos", "low_nanos", "high_nanos"),
-)
+PREVIEW_S_MAX = 5.0  # After so long a preview says how far it came.
 
 
 @dataclass(frozen=True, slots=True)
@@ -71,14 +76,6 @@ class Retraction:
         return Named(self.part, bids, frozenset(self.event_ids), *wide_of)
 
 
-@dataclass(frozen=True, slots=True)
-class _Taken:
-    """What an order takes back: spans of the stream and how many lessons of each kind."""
-
-    spans: list[Span]
-    counts: dict[str, int]
-
-
 class Winding:
     """
     Takes lessons back for one worker.
@@ -89,6 +86,7 @@ class Winding:
 
     def __init__(self, orders: Orders, checkpoint_entries: int) -> None:
         self._orders, self._every = orders, checkpoint_entries
+        self.preview_s_max = PREVIEW_S_MAX
 
     async def retract(
         self,
@@ -103,13 +101,15 @@ class Winding:
         """Cancel what the named outcomes taught; a repeat finds nothing left to cancel."""
         named = wish.named()
         if preview:
-            return await self._shown(lambda c: _preview(c, line_item, _found(c, line_item, named)))
+            return await self._previewed(
+                line_item, "retract", lambda c, goes_on: found(c, line_item, named, goes_on)
+            )
         # Read outside the lock first: a long stream must not hold up the money of its line item.
-        finder = await self._orders.read(lambda c: _finder(c, line_item, named))
+        looked, _ = await self._orders.read(lambda c: finder(c, line_item, named))
 
         def order(connection: Writing) -> dict[str, Any]:
             books = Books(connection, [line_item], self._orders.database.wall_ms())
-            again = _again(connection, line_item, named, finder)
+            again = _again(connection, line_item, named, looked)
             said = {"part": wish.part, "named": asdict(wish)}
             return self._take(connection, books, line_item, "retract", again, said, reason, actor)
 
@@ -135,13 +135,13 @@ class Winding:
             Malformed: The stream has not come so far.
         """
         if preview:
-            return await self._shown(
-                lambda c: _preview(c, line_item, _after(c, line_item, to, at_ms)[1])
+            return await self._previewed(
+                line_item, "rewind", lambda c, _: after(c, line_item, to, at_ms)[1]
             )
 
         def order(connection: Writing) -> dict[str, Any]:
             books = Books(connection, [line_item], self._orders.database.wall_ms())
-            seq, taken = _after(connection, line_item, to, at_ms)
+            seq, taken = after(connection, line_item, to, at_ms)
             said = {"part": ALL, "to": seq}
             return self._take(connection, books, line_item, "rewind", taken, said, reason, actor)
 
@@ -149,8 +149,51 @@ class Winding:
         answer = await self._orders.give(order, repeat_of(actor, idempotency, call))
         return await self.published(line_item, answer)
 
-    async def _shown(self, preview: Callable[[Reading], dict[str, Any]]) -> dict[str, Any]:
-        return dict(await self._orders.read(preview))
+    async def reset(
+        self,
+        line_item: str,
+        reason: str,
+        actor: str,
+        *,
+        preview: bool = False,
+        idempotency: str | None = None,
+    ) -> dict[str, Any]:
+        """Let the learner begin afresh; money and the stream before it stay as they are."""
+        database, goes_on = self._orders.database, self._time()
+        if preview:
+            told: dict[str, Any] = await self._orders.read(
+                lambda c: preview_reset(c, line_item, database.wall_ms(), goes_on)
+            )
+            return told
+
+        def order(connection: Writing) -> dict[str, Any]:
+            books = Books(connection, [line_item], database.wall_ms())
+            before = estimate(connection, line_item)
+            books.post(line_item, Entry("reset", {"actor": actor, "reason": reason}))
+            books.save()
+            seq = books.accounts[line_item].seq
+            learners.begin_afresh(connection, line_item, seq)
+            detail = {"before": {"seq": seq - 1, **before}, "after": {"seq": seq}}
+            self._orders.note(connection, actor, "reset", line_item, reason, detail)
+            return {"line_item": line_item, "seq": seq, **detail}
+
+        call = {"call": "reset", "line_item": line_item, "reason": reason}
+        answer = await self._orders.give(order, repeat_of(actor, idempotency, call))
+        published = await self.published(line_item, answer, answer["seq"])
+        # The seq of the order stays beside what the learner knows after it.
+        return {**published, "after": {**answer["after"], **(published["after"] or {})}}
+
+    async def _previewed(
+        self, line_item: str, kind: str, find: Callable[[Reading, GoesOn], Taken]
+    ) -> dict[str, Any]:
+        goes_on, wall_ms = self._time(), self._orders.database.wall_ms()
+
+        def work(connection: Reading) -> dict[str, Any]:
+            taken = find(connection, goes_on)
+            return preview_of(connection, line_item, taken, kind, wall_ms, goes_on)
+
+        told: dict[str, Any] = await self._orders.read(work)
+        return told
 
     def _take(
         self,
@@ -158,17 +201,17 @@ class Winding:
         books: Books,
         line_item: str,
         kind: str,
-        taken: _Taken,
+        taken: Taken,
         said: Mapping[str, Any],
         reason: str,
         actor: str,
     ) -> dict[str, Any]:
         """The common end of both orders, under the lock of the stream."""
-        before = _estimate(connection, line_item)
-        shown = _shown(line_item, taken)
+        before = estimate(connection, line_item)
+        told = shown(line_item, taken)
         # Nothing is left to cancel, so a repeat leaves no trace in the stream and halts no bids.
         if not taken.spans:
-            return {**shown, "seq": None, "before": before}
+            return {**told, "seq": None, "before": before}
         cancels = [[first, last] for first, last, _ in taken.spans]
         body = {**said, "cancels": cancels, "counts": taken.counts}
         books.post(line_item, Entry(kind, {**body, "actor": actor, "reason": reason}))
@@ -178,94 +221,44 @@ class Winding:
         self._orders.note(connection, actor, kind, line_item, reason, detail)
         lessons.cancel(connection, line_item, seq, said["part"], taken.spans)
         start = rebuilds.put_back(connection, line_item, taken.spans, FRESH)
-        return {**shown, "seq": seq, "refolds_from": start.seq, "before": before}
+        return {**told, "seq": seq, "refolds_from": start.seq, "before": before}
 
-    async def published(self, line_item: str, answer: dict[str, Any]) -> dict[str, Any]:
-        """Refold here and now as far as time allows, and say what the learner knows after."""
+    async def published(
+        self, line_item: str, answer: dict[str, Any], seq: int = 0
+    ) -> dict[str, Any]:
+        """
+        Refold here and now as far as time allows, and say what the learner knows after.
+
+        Args:
+            seq: Where the learner must have come to, beside bidding by what it knows.
+        """
         until = time.monotonic() + REFOLD_S_MAX
         database, run = self._orders.database, self._orders.threads.run
-        while await self._orders.read(lambda c: _halted(c, line_item)):
+        while await self._orders.read(lambda c: _pending(c, line_item, seq)):
             if time.monotonic() > until:
                 return {**answer, "published": False, "after": None}
             if not await run(learners.teach, database, line_item, lesson, self._every, lawful):
                 await asyncio.sleep(LOOK_S)  # Another teacher is at it.
-        after = await self._orders.read(lambda c: _estimate(c, line_item))
-        return {**answer, "published": True, "after": after}
+        known = await self._orders.read(lambda c: estimate(c, line_item))
+        return {**answer, "published": True, "after": known}
+
+    def _time(self) -> GoesOn:
+        """Whether a preview may go on; it stops in time for its answer to go out."""
+        until = time.monotonic() + self.preview_s_max
+        return lambda: time.monotonic() < until
 
 
-def _preview(connection: Reading, line_item: str, taken: _Taken) -> dict[str, Any]:
-    """What an order would do, without doing it."""
-    shown = {**_shown(line_item, taken), "preview": True}
-    now = rebuilds.standing(connection, line_item)
-    shown["before"] = _estimate(connection, line_item)
-    if not taken.spans:
-        return {**shown, "after": shown["before"]}
-    cancelled = lessons.cancellations(connection, line_item).and_also(taken.spans)
-    first = min(span[0] for span in taken.spans)
-    start = rebuilds.nearest(connection, line_item, first - 1, FRESH)
-    state = rebuilds.fold_until(connection, line_item, start, now.head, lesson, cancelled=cancelled)
-    return {**shown, "after": _told(state, now.config)}
-
-
-def _finder(connection: Reading | Writing, line_item: str, named: Named) -> Finder:
-    line_items.one(connection, line_item)
-    finder = Finder(named, lessons.cancellations(connection, line_item))
-    lessons.find(connection, line_item, finder)
-    return finder
-
-
-def _found(connection: Reading, line_item: str, named: Named) -> _Taken:
-    finder = _finder(connection, line_item, named)
-    return _Taken(finder.spans, finder.counts)
-
-
-def _again(connection: Writing, line_item: str, named: Named, finder: Finder) -> _Taken:
+def _again(connection: Writing, line_item: str, named: Named, looked: Finder) -> Taken:
     """What was found, read on under the lock; anew when others have cancelled meanwhile."""
     now = lessons.cancellations(connection, line_item)
-    if now.spans != finder.cancelled.spans:
-        finder = Finder(named, now)
-    lessons.find(connection, line_item, finder)
-    return _Taken(finder.spans, finder.counts)
+    if now.spans != looked.cancelled.spans:
+        looked = begun(connection, line_item, named, now)
+    lessons.find(connection, line_item, looked)
+    return Taken(looked.spans, looked.counts)
 
 
-def _after(
-    connection: Reading | Writing, line_item: str, to: int, at_ms: int | None
-) -> tuple[int, _Taken]:
-    """Every lesson behind a moment that still teaches, as one span, and the seq of the moment."""
-    line_items.one(connection, line_item)
-    head = rebuilds.standing(connection, line_item).head
-    seq = to if at_ms is None else records.seq_before(connection, line_item, at_ms + 1)
-    if seq > head:
-        raise Malformed("not_so_far", "The stream of this line item has not come so far.")
-    cancelled = lessons.cancellations(connection, line_item)
-    counts = dict[str, int]()
-    for n, kind in lessons.kinds_after(connection, line_item, seq, sorted(PARTS)):
-        if cancelled.leaves(n, kind):
-            counts[kind] = counts.get(kind, 0) + 1
-    return seq, _Taken([(seq + 1, head, ALL)] if counts else [], counts)
-
-
-def _halted(connection: Reading, line_item: str) -> bool:
-    return learners.snapshots(connection, [line_item])[line_item].halted
-
-
-def _estimate(connection: Reading | Writing, line_item: str) -> dict[str, Any]:
-    """What the published snapshot knows and bids."""
-    row = line_items.one(connection, line_item)
-    return _told(learners.snapshots(connection, [line_item])[line_item].state, row.config)
-
-
-def _told(state: bytes, config: Mapping[str, Any]) -> dict[str, Any]:
-    told = describe(ready(Memory.from_bytes(state), Terms.from_config(config)))
-    return {name: told[name] for name in SHOWN} | {"bid_cpm_nanos": told["bid_nanos"]}
-
-
-def _shown(line_item: str, taken: _Taken) -> dict[str, Any]:
-    spans = [[first, last] for first, last, _ in taken.spans[:SPANS_SHOWN_MAX]]
-    return {
-        "line_item": line_item,
-        "cancelled": sum(taken.counts.values()),
-        "counts": taken.counts,
-        "spans": spans,
-        "spans_in_all": len(taken.spans),
-    }
+def _pending(connection: Reading, line_item: str, seq: int) -> bool:
+    """Whether the learner is still being refolded, or has not published what it knows at a seq."""
+    now = rebuilds.standing(connection, line_item)
+    behind = seq and (now.seq < seq or digest_of(now.working) != now.snapshot.digest)
+    return now.snapshot.halted or bool(behind)

@@ -11,7 +11,7 @@ from service.api.access import actor, require
 from service.api.body import read_object
 from service.api.documentation import described
 from service.api.edge import edge
-from service.api.forms.orders import OrderForm
+from service.api.forms.orders import OrderForm, ResetForm
 from service.api.forms.reading import read
 from service.api.headers import idempotency, line_item_id
 from service.api.stories import stories
@@ -49,12 +49,23 @@ async def post_thaw(request: Request) -> Response:
 
 
 @router.post(
-    PATH + "/reset", **described("Begin the learner afresh.", "operate", OrderForm, headers=_ONCE)
+    PATH + "/reset",
+    **described(
+        "Begin the learner afresh, or with preview say what that would change.",
+        "operate",
+        ResetForm,
+        headers=_ONCE,
+    ),
 )
 async def post_reset(request: Request) -> Response:
     """Begin one line item's learner afresh; money stays as it is."""
-    reason, actor, once = await _order(request)
-    done = await stories(request).operator.reset(line_item_id(request), reason, actor, **once)
+    key, once = await require(request, "operate"), idempotency(request)
+    form = read(ResetForm, await read_object(request, edge(request).body_bytes_max))
+    name, operator, who = line_item_id(request), stories(request).operator, actor(key)
+    if form.preview:
+        done = await operator.reset(name, form.reason, who, preview=True)
+    else:
+        done = await operator.reset(name, form.reason, who, once.get("idempotency"))
     return answers.json_answer(answers.plain(done))
 
 

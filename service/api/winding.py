@@ -25,7 +25,13 @@ _ONCE = ("Idempotency-Key",)
 
 @router.post(
     PATH + "/retract",
-    **described("Cancel what outcomes taught.", "operate", RetractForm, headers=_ONCE),
+    **described(
+        "Cancel what outcomes taught, or with preview say what that would change; its digest is "
+        "that of the learner after the order, if nothing comes between.",
+        "operate",
+        RetractForm,
+        headers=_ONCE,
+    ),
 )
 async def post_retract(request: Request) -> Response:
     """Cancel what the named outcomes taught, or say what that would change."""
@@ -48,7 +54,12 @@ async def post_retract(request: Request) -> Response:
 
 @router.post(
     PATH + "/rewind",
-    **described("Put the learner back.", "operate", RewindForm, headers=_ONCE),
+    **described(
+        "Put the learner back, or with preview say what that would change.",
+        "operate",
+        RewindForm,
+        headers=_ONCE,
+    ),
 )
 async def post_rewind(request: Request) -> Response:
     """Put the learner back to an earlier moment, or say what that would change."""

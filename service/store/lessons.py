@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -99,10 +99,15 @@ def uncancel(connection: Writing, line_item: str, seq: int) -> None:
     )
 
 
-def find(connection: Reading | Writing, line_item: str, finder: Finder) -> None:
-    """Let a finder read on to the end of the stream."""
+def find(
+    connection: Reading | Writing,
+    line_item: str,
+    finder: Finder,
+    goes_on: Callable[[], bool] = lambda: True,
+) -> bool:
+    """Let a finder read on to the end of the stream while there is time; whether it got there."""
     seq = finder.read_until
-    while True:
+    while goes_on():
         row = {"id": line_item, "seq": seq, "limit": ROWS_MAX}
         rows = connection.execute(_AFTER, row).all()
         for one in rows:
@@ -110,15 +115,32 @@ def find(connection: Reading | Writing, line_item: str, finder: Finder) -> None:
             finder.take(one.seq, one.kind, bid, one.at_ms, _body(one.body))
             seq = one.seq
         if len(rows) < ROWS_MAX:
-            return
+            return True
+    return False
 
 
-def kinds_after(
-    connection: Reading | Writing, line_item: str, seq: int, kinds: list[str]
-) -> list[tuple[int, str]]:
-    """Seq and kind of the entries of these kinds after `seq`, in order."""
-    rows = connection.execute(_KINDS, {"id": line_item, "seq": seq, "kinds": kinds})
-    return [(row.seq, row.kind) for row in rows]
+def first_of(connection: Reading | Writing, line_item: str, bids: Iterable[bytes]) -> int:
+    """The first seq that speaks of any of these bids, or 1."""
+    row = {"ids": sorted(bids), "line_item": line_item}
+    return int(connection.execute(_FIRST_OF, row).scalar_one_or_none() or 1)
+
+
+def counts_after(
+    connection: Reading | Writing, line_item: str, seq: int, kinds: list[str], cancelled: Cancelled
+) -> dict[str, int]:
+    """How many entries of each of these kinds after `seq` still teach something."""
+    counts = dict[str, int]()
+    for kind in kinds:
+        row = {"id": line_item, "seq": seq, "kind": kind}
+        counts[kind] = int(connection.execute(_COUNT, row).scalar_one())
+    # Only where something is cancelled is each entry looked at: all of them may be millions.
+    seen = seq
+    for first, last, _ in sorted(cancelled.spans):
+        row = {"id": line_item, "after": max(seen, first - 1), "last": last, "kinds": kinds}
+        for one in connection.execute(_KINDS, row):
+            counts[one.kind] -= not cancelled.leaves(one.seq, one.kind)
+        seen = max(seen, last)
+    return {kind: count for kind, count in counts.items() if count}
 
 
 def last_reset(connection: Reading | Writing, line_item: str, cancelled: Cancelled) -> int:
@@ -162,9 +184,13 @@ _OF_BIDS = among(
     of=LargeBinary,
 )
 _KINDS = among(
-    "SELECT seq, kind FROM stream WHERE line_item = :id AND seq > :seq AND kind IN :kinds"
-    " ORDER BY seq",
+    "SELECT seq, kind FROM stream WHERE line_item = :id AND seq > :after AND seq <= :last"
+    " AND kind IN :kinds ORDER BY seq",
     "kinds",
+)
+_COUNT = text("SELECT count(*) FROM stream WHERE line_item = :id AND kind = :kind AND seq > :seq")
+_FIRST_OF = among(
+    "SELECT min(seq) FROM stream WHERE bid IN :ids AND line_item = :line_item", of=LargeBinary
 )
 _CANCELLED = text("SELECT part, spans FROM cancelled WHERE line_item = :id ORDER BY by_seq")
 _CANCEL = text(

@@ -142,9 +142,9 @@ class Orders:
         self.calls.append(("thaw", *told, idempotency))
         return {"in_force": True, "by": None}
 
-    async def reset(self, *told: object, idempotency: str | None = None) -> dict[str, Any]:
+    async def reset(self, *told: object, preview: bool = False) -> dict[str, Any]:
         """Reset."""
-        self.calls.append(("reset", *told, idempotency))
+        self.calls.append(("reset", *told))
         return {"line_item": told[0]}
 
     async def health(self) -> dict[str, Any]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 from collections.abc import Callable
 from typing import Any
 
@@ -59,6 +60,28 @@ async def test_a_preview_and_then_the_order(app_client: httpx.AsyncClient) -> No
     assert back["seq"] is None or back["cancelled"] > 0
     state = (await app_client.get(f"{ONE}/state")).json()
     assert (state["money"]["spent"], state["learner"]["wins"]) == ("0.003", 0)
+
+
+async def test_each_order_can_be_previewed(
+    app_client: httpx.AsyncClient, written: Callable[[], dict[str, int]]
+) -> None:
+    """Sums as money, moments as times, the learner before and after; nothing is written."""
+    refs = await wins(app_client, 2)
+    for _ in range(200):  # Until the teacher, who looks five times a second, has published both.
+        if (await app_client.get(f"{ONE}/state")).json()["learner"]["wins"] == 2:
+            break
+        await asyncio.sleep(0.05)
+    before = written()
+    for order, wish in (("retract", {"refs": refs}), ("rewind", {"to": 0}), ("reset", {})):
+        told = await ordered(app_client, order, preview=True, **wish)
+        assert (told["value"], told["cost"], told["complete"]) == ("0.04", "0.002", True), order
+        assert told["first_at"] <= told["last_at"]
+        assert told["last_at"].endswith("Z")
+        assert told["by_part"]["value"] == {"won": 2, "value": 2}
+        assert (told["before"]["wins"], told["after"]["wins"]) == (2, 0)
+        assert told["before"]["digest"] != told["after"]["digest"]
+        assert told["after"]["bid_cpm"] > 0
+    assert written() == before
 
 
 async def test_money_is_corrected_with_authority(app_client: httpx.AsyncClient) -> None:

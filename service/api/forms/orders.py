@@ -20,6 +20,12 @@ class OrderForm(StrictForm):
     reason: Reason
 
 
+class ResetForm(OrderForm):
+    """Why a learner begins afresh; with preview nothing changes."""
+
+    preview: bool = False
+
+
 class RetractForm(OrderForm):
     """Which outcomes teach no more: by refs and event ids, or by a source and a span of time."""
 

@@ -14,6 +14,7 @@ from service.api.forms.line_items import CreateForm
 from service.api.forms.orders import (
     OrderForm,
     ReconcileForm,
+    ResetForm,
     RetractForm,
     ReverseForm,
     RewindForm,
@@ -28,6 +29,7 @@ _FORMS: tuple[type[BaseModel], ...] = (
     CreateForm,
     ChangeForm,
     OrderForm,
+    ResetForm,
     RetractForm,
     RewindForm,
     ReverseForm,
