@@ -6,6 +6,7 @@ from typing import Any
 
 from sqlalchemy import text
 
+from service.store import outbox
 from service.store.changes import ALL
 from service.store.database import Reading, Writing, among, locking
 
@@ -21,6 +22,8 @@ def put(
         ),
         {"id": line_item, "source": source, "at_ms": wall_ms, "actor": actor, "reason": reason},
     )
+    if done.rowcount == 1:
+        outbox.put(connection, "freeze", line_item, {"source": source}, wall_ms)
     return done.rowcount == 1
 
 
@@ -29,7 +32,12 @@ def lift(connection: Writing, line_item: str, sources: list[str]) -> int:
     statement = among(
         "DELETE FROM freezing WHERE line_item = :id AND source IN :sources", "sources"
     )
-    return connection.execute(statement, {"id": line_item, "sources": sources}).rowcount
+    lifted = connection.execute(statement, {"id": line_item, "sources": sources}).rowcount
+    if lifted:
+        # As service time saw the wall clock last, since whoever lifts need not know it.
+        now = connection.execute(text("SELECT seen_ms FROM service_clock")).scalar_one()
+        outbox.put(connection, "thaw", line_item, {"sources": sorted(sources)}, int(now))
+    return lifted
 
 
 def on(connection: Reading | Writing, line_items: list[str]) -> dict[str, list[dict[str, Any]]]:

@@ -143,6 +143,12 @@ def counts_after(
     return {kind: count for kind, count in counts.items() if count}
 
 
+def began_ms(connection: Reading, line_item: str) -> int:
+    """The service time at which a stream began."""
+    statement = text("SELECT service_ms FROM stream WHERE line_item = :id AND seq = 1")
+    return int(connection.execute(statement, {"id": line_item}).scalar_one())
+
+
 def last_reset(connection: Reading | Writing, line_item: str, cancelled: Cancelled) -> int:
     """The seq of the last reset that was not undone, or 0."""
     statement = text("SELECT seq FROM stream WHERE line_item = :id AND kind = 'reset'")

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 from sqlalchemy import text
@@ -11,6 +11,7 @@ from service.errors import no_such_line_item
 from service.ledger.days import local_day
 from service.store.clock import now_ms
 from service.store.database import Reading, Writing
+from service.store.findings import Kept, still_open
 from service.store.learners import Snapshot, snapshots
 from service.store.line_items import Row, load
 
@@ -31,6 +32,7 @@ class Facts:
     passes: dict[str, int]
     quarantined: int
     wall_ms: int
+    findings: list[Kept] = field(default_factory=list)
 
 
 def facts(connection: Reading, line_item: str) -> Facts:
@@ -56,6 +58,7 @@ def facts(connection: Reading, line_item: str) -> Facts:
         _passes(connection, line_item),
         int(_one(connection, _QUARANTINED, line_item)["n"]),
         wall_ms,
+        list(still_open(connection, line_item).values()),
     )
 
 
