@@ -26,6 +26,7 @@ from service.guard.ticket import TicketKeys
 from service.leasing import Leasing
 from service.operating import Operator
 from service.patience import Patience
+from service.posting import Receiver
 from service.pulse import Pulse
 from service.settings import Settings
 from service.store import incarnations
@@ -36,6 +37,8 @@ from service.threads import Threads
 from service.upkeep import Rhythm, Upkeep
 
 logger = logging.getLogger(__name__)
+
+REFUSALS_S = 5.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -158,8 +161,16 @@ def clerk_of(settings: Settings, database: Database, threads: Threads) -> Clerk:
         settings.quarantine_keep_days,
         settings.repeat_keep_days,
         settings.chart_keep_days,
+        settings.tripwire_s,
+        settings.tripwire_minute_s * 1000,
+        settings.tripwire_quiet_s * 1000,
+        settings.tripwire_keep_days,
     )
-    return Clerk(database, threads, habits)
+    secret = settings.webhook_secret.get_secret_value().encode()
+    receiver = Receiver(
+        settings.webhook_url, secret, settings.webhook_timeout_s, settings.webhook_tries
+    )
+    return Clerk(database, threads, habits, receiver)
 
 
 def _build(
@@ -179,11 +190,13 @@ def _build(
     bidder = Bidder(catalog, leasing, keys, incarnation, clocks, backlog, _feature_key(database))
     room = Room(settings.outcome_calls_max, settings.outcome_rows_waiting_max)
     feedback = Feedback(database, threads, keys, incarnation, room)
-    operator = Operator(database, threads, catalog, news, settings.checkpoint_entries)
+    minute_ms = settings.tripwire_minute_s * 1000
+    operator = Operator(database, threads, catalog, news, settings.checkpoint_entries, minute_ms)
     rhythm = Rhythm(settings.change_poll_ms, settings.tick_s, settings.clock_step_ms_max)
     upkeep = Upkeep(database, threads, post.worker, catalog, leasing, backlog, news, rhythm)
     counting = Patience(database, threads).every(FLUSH_S, operator.admitting.flush)
-    loops = [pulse.run(), leasing.run(), feedback.run(), counting, *upkeep.duties()]
+    refusals = Patience(database, threads).every(REFUSALS_S, feedback.keep_refusals)
+    loops = [pulse.run(), leasing.run(), feedback.run(), counting, refusals, *upkeep.duties()]
     return Stories(bidder, feedback, operator), upkeep, loops
 
 

@@ -16,6 +16,7 @@ from typing import Any
 from service.learner.exptree_state import UnreadableTree
 from service.learner.memory import UnreadableMemory
 from service.patience import Patience
+from service.posting import Posting, Receiver
 from service.store import (
     auditing,
     changes,
@@ -24,13 +25,16 @@ from service.store import (
     epochs,
     learners,
     leases,
+    outbox,
     refusals,
     repeats,
+    tripwires,
     workers,
 )
 from service.store.database import Database, Writing
 from service.teaching import FRESH, lawful, lesson, readable
 from service.threads import Threads
+from service.tripwiring import BUCKET_MS, QUIET_MS, Tending, Widths
 
 logger = logging.getLogger(__name__)
 
@@ -41,6 +45,9 @@ PRUNE_S = 3600.0
 CHART_S = 2.0
 DAY_MS = 86_400_000
 REFUSAL_KEEP_DAYS = 90  # A quarter: long enough to look back at who tried what.
+POST_S = 1.0
+HOURS_KEEP_DAYS = 40  # A little longer than tripwires look back.
+NEWS_KEEP_DAYS = 30
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,14 +61,27 @@ class Habits:
     quarantine_keep_days: int
     repeat_keep_days: int
     chart_keep_days: int = 400
+    tripwire_s: float = 5.0
+    tripwire_minute_ms: int = BUCKET_MS
+    tripwire_quiet_ms: int = QUIET_MS
+    tripwire_keep_days: int = 3
 
 
 class Clerk:
     """The duties of one clerk."""
 
-    def __init__(self, database: Database, threads: Threads, habits: Habits) -> None:
+    def __init__(
+        self,
+        database: Database,
+        threads: Threads,
+        habits: Habits,
+        receiver: Receiver | None = None,
+    ) -> None:
         self._database, self._threads, self._habits = database, threads, habits
         self._patience = Patience(database, threads)
+        widths = Widths(habits.tripwire_minute_ms)
+        self._tending = Tending(database, widths, habits.tripwire_quiet_ms)
+        self._posting = Posting(database, threads, receiver or Receiver())
         self._sound: dict[str, auditing.Standing] = {}
 
     def duties(self) -> list[Coroutine[Any, Any, None]]:
@@ -73,6 +93,8 @@ class Clerk:
             every(AUDIT_S, self.audit),
             every(PRUNE_S, self.prune),
             every(CHART_S, self.chart),
+            every(self._habits.tripwire_s, self.watch),
+            every(POST_S, self.tell),
         ]
 
     async def start(self) -> None:
@@ -107,6 +129,18 @@ class Clerk:
         while await self._threads.run(charting.roll, self._database) >= charting.ENTRIES_MAX:
             pass
 
+    async def watch(self) -> None:
+        """Look at every line item whose tripwires are due."""
+        after = ""
+        while page := await self._threads.run(self._tending.due, after):
+            for standing in page:
+                await self._threads.run(self._tending.look, standing)
+            after = page[-1].line_item
+
+    async def tell(self) -> None:
+        """Tell the receiver of news what waits for it."""
+        await self._posting.post()
+
     async def prune(self) -> None:
         """Forget what has been kept for long enough, in pieces that hold up nobody."""
         habits, wall_ms = self._habits, self._database.wall_ms()
@@ -119,6 +153,14 @@ class Clerk:
         await self._until_none(charting.prune, wall_ms - habits.chart_keep_days * DAY_MS)
         # A length and not a moment, for slices age by service time and all else by the wall clock.
         await self._until_none(auditing.prune_slices, habits.slice_keep_days * DAY_MS)
+        await self._until_none(outbox.prune, wall_ms - NEWS_KEEP_DAYS * DAY_MS)
+        for width, days in (
+            (tripwires.MINUTES, habits.tripwire_keep_days),
+            (tripwires.HOURS, HOURS_KEEP_DAYS),
+            (tripwires.DAYS, HOURS_KEEP_DAYS),
+        ):
+            while await self._threads.run(self._tending.prune, width, days):
+                pass
         for forget in (epochs.prune, changes.prune, workers.prune):
             await self._threads.run(self._database.write, forget)
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import asyncio
 import logging
+from collections import Counter
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -19,7 +20,7 @@ from service.guard.ticket import BadTicket, Ticket, TicketKeys, bid_of, ref_of
 from service.ledger.entries import PAYING
 from service.ledger.settle import Outcome
 from service.ledger.values import Value
-from service.store import outcomes
+from service.store import outcomes, tripwires
 from service.store.database import Database
 from service.store.decisions import quarantine
 from service.store.outcomes import NO_SNAPSHOT, Booked, Booking
@@ -70,6 +71,7 @@ class Receipt:
     test: bool = False
     detail: str | None = None
     foreign: bool = False
+    line_item: str | None = None  # As far as a ticket or a ref has named it.
 
 
 @dataclass(frozen=True, slots=True)
@@ -103,6 +105,8 @@ class Feedback:
         self._keys, self._incarnation = keys, incarnation
         self._room, self._calls, self._rows = room or Room(), 0, 0
         self._queue: asyncio.Queue[_Waiting] = asyncio.Queue()
+        # Of line items that our own tickets name, so that nobody can make it grow.
+        self._refused: Counter[str] = Counter()
 
     @contextmanager
     def admitted(self) -> Iterator[None]:
@@ -138,7 +142,21 @@ class Feedback:
         read = await self._find_refs(reports, read, only)
         rows = [row for row in read if isinstance(row, Booking)]
         booked = iter(await self._book(rows) if rows else [])
-        return [row if isinstance(row, Receipt) else _receipt(row, next(booked)) for row in read]
+        receipts = [
+            row if isinstance(row, Receipt) else _receipt(row, next(booked)) for row in read
+        ]
+        self._refused.update(
+            receipt.line_item
+            for receipt in receipts
+            if receipt.status == "refused" and receipt.line_item
+        )
+        return receipts
+
+    async def keep_refusals(self) -> None:
+        """Count what was refused since the last time, for the tripwire on it."""
+        if self._refused:
+            taken, self._refused = self._refused, Counter()
+            await self._threads.run(self._database.write, lambda c: tripwires.refuse(c, taken))
 
     async def run(self) -> None:
         """Book what waits, group by group, until cancelled."""
@@ -224,9 +242,9 @@ class Feedback:
         if only is not None and ticket.line_item not in only:
             return Receipt(report.ref, "refused", "no_such_line_item", foreign=True)
         if report.ref is not None and report.ref != ticket.ref:
-            return Receipt(report.ref, "refused", "ref_of_another_bid")
+            return Receipt(report.ref, "refused", "ref_of_another_bid", line_item=ticket.line_item)
         if report.kind in PAYING and _price(report, ticket) is None:
-            return Receipt(ticket.ref, "refused", "no_price")
+            return Receipt(ticket.ref, "refused", "no_price", line_item=ticket.line_item)
         # Nothing was held for it, so there is nothing to book and nothing to learn.
         if ticket.test:
             return Receipt(ticket.ref, "recorded", test=True)
@@ -313,7 +331,9 @@ def _value(report: Report, bid: bytes) -> Value:
 
 
 def _receipt(row: Booking, booked: Booked) -> Receipt:
-    return Receipt(ref_of(row.event.bid), booked.status, booked.code, booked.clipped)
+    return Receipt(
+        ref_of(row.event.bid), booked.status, booked.code, booked.clipped, line_item=row.line_item
+    )
 
 
 def _fail(waiting: _Waiting, error: StoreAway | Overloaded) -> None:

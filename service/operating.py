@@ -27,6 +27,7 @@ from service.configuring import (
 from service.correcting import Correcting
 from service.decision.learnability import defaults, learnability
 from service.errors import Malformed, StoreAway
+from service.foreseeing import Foreseeing
 from service.ledger.entries import Entry
 from service.ordering import Orders, repeat_of
 from service.quarantining import Quarantining
@@ -39,6 +40,7 @@ from service.store.keys import Key
 from service.store.line_items import Row
 from service.teaching import FRESH, lawful
 from service.threads import Threads
+from service.tripwiring import BUCKET_MS, Widths
 from service.winding import Winding
 
 __all__ = ["Key", "Operator", "View"]
@@ -71,11 +73,13 @@ class Operator:
         catalog: Catalog,
         news: asyncio.Event,
         checkpoint_entries: int = CHECKPOINT_ENTRIES,
+        tripwire_minute_ms: int = BUCKET_MS,
     ) -> None:
         self._database, self._catalog = database, catalog
         orders = self._orders = Orders(database, threads, news)
         self.winding = Winding(orders, checkpoint_entries)
         self.correcting = Correcting(orders)
+        self.tripwires = Foreseeing(orders, Widths(tripwire_minute_ms))
         self.quarantine = Quarantining(orders, self.winding)
         self.admitting = Admitting(orders, catalog)
         self.records = Records(database, threads)

@@ -10,6 +10,7 @@ from service.decision.describing import describe
 from service.decision.learnability import learnability
 from service.decision.price import ready
 from service.decision.terms import Terms
+from service.foreseeing import summary
 from service.guard.gate import clear
 from service.learner.memory import Memory
 from service.learner.tally import Tally
@@ -36,6 +37,7 @@ def show(facts: Facts) -> dict[str, Any]:
         "feed": {"last_ms": facts.feed, "quarantined": facts.quarantined},
         "passes_of_last_1000": facts.passes,
         "freezes": facts.row.freezes,
+        "tripwires": summary(facts.row.config, facts.findings),
     }
 
 

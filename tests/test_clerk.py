@@ -164,3 +164,26 @@ async def test_the_slice_of_a_dead_worker_closes_after_grace(migrated_url: str) 
         await worker.keep_time()
         assert worker.balance()["held"] == 0
         assert worker.column("SELECT state FROM slice") == ["closed"]
+
+
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
+async def test_the_clerk_watches_every_line_item_once_a_minute(migrated_url: str) -> None:
+    """Those with news of any kind, page after page; one that is quiet costs nothing."""
+    async with working(migrated_url) as worker:
+        for name in (NAME, "meadow"):
+            await worker.create(id=name)
+            await worker.bids(1, name)
+        await worker.clerk.watch()
+        marks = worker.column("SELECT line_item FROM tripwire_mark ORDER BY line_item")
+        assert marks == [NAME, "meadow"]
+        await worker.bids(1)
+        await worker.leasing.tick()
+        await worker.clerk.watch()
+        assert worker.one("SELECT coalesce(sum(bids), 0) FROM tripwire_bucket") == 0
+        worker.run("UPDATE tripwire_mark SET looked_ms = looked_ms - 60000")
+        worker.run("UPDATE balance SET unfunded = 5 WHERE line_item = 'meadow'")
+        await worker.clerk.watch()
+        assert worker.one("SELECT sum(bids) FROM tripwire_bucket WHERE width = 0") == 3
+        assert worker.column("SELECT rule FROM tripwire_finding") == ["unfunded"]
+        await worker.clerk.tell()
+        assert worker.column("SELECT id FROM outbox") == []

@@ -3,7 +3,7 @@
 from alembic import op
 
 revision = "0003"
-down_revision = "0001"
+down_revision = "0002"
 
 # IF NOT EXISTS, so that a large PostgreSQL may be given its indexes beforehand, concurrently.
 # The release before this one reads by the index that goes only for its table of passes, which

@@ -131,6 +131,14 @@ _MOMENTS = {
     "billing_close_ms": "billing_closes_at",
     "first_at_ms": "first_at",
     "last_at_ms": "last_at",
+    "since_ms": "since",
+    "from_ms": "from",
+    "until_ms": "until",
+    "raised_ms": "raised_at",
+    "seen_ms": "seen_at",
+    "froze_ms": "froze_at",
+    "thawed_ms": "thawed_at",
+    "cleared_ms": "cleared_at",
 }
 _CONFIG: dict[str, tuple[str, Callable[[int], object]]] = {
     "budget": ("budget", money.nanos_text),

@@ -14,6 +14,7 @@ from service.api import (
     orders,
     outcomes,
     records,
+    tripwires,
     winding,
 )
 from service.api.problems import install_handlers
@@ -27,6 +28,7 @@ ROUTERS = (
     corrections.router,
     keys.router,
     records.router,
+    tripwires.router,
     health.router,
     documentation.router,
 )

@@ -8,7 +8,7 @@ from pydantic import Field, StrictBool
 
 from service.api.forms import refused
 from service.api.forms.fields import Amount, CapCpm, Confirm, Moment, Name, Reason
-from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin, TripwiresForm
+from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin
 from service.api.forms.line_items import (
     DAY_S,
     ExpectedForm,
@@ -20,6 +20,7 @@ from service.api.forms.line_items import (
 from service.api.forms.policies import Policy
 from service.api.forms.reading import StrictForm
 from service.api.forms.spending import PacingForm, ReturnTargetForm
+from service.api.forms.tripwires import TripwiresForm
 
 # The defaults below are never read: only the fields that came are changed.
 

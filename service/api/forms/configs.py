@@ -10,6 +10,7 @@ from pydantic import BaseModel
 from service.api.forms.changes import ChangeForm
 from service.api.forms.line_items import CreateForm, NotYetForm
 from service.api.forms.reading import bad_field, read
+from service.api.forms.tripwires import CandidateForm
 from service.configuring import AS_A_WHOLE
 
 MS_PER_S = 1000
@@ -67,6 +68,17 @@ def read_changes(members: Mapping[str, object]) -> tuple[dict[str, Any], ChangeF
     if not changes:
         raise bad_field("", "The body names nothing to change.")
     return changes, form
+
+
+def read_candidate(members: Mapping[str, object]) -> dict[str, Any]:
+    """
+    Read a setting of tripwires that is to be tried, as the part of the config it would be.
+
+    Raises:
+        Malformed: A field is bad.
+    """
+    form = read(CandidateForm, members)
+    return dict(_config(form.tripwires.model_dump(exclude_unset=True)))
 
 
 def check_consistent(config: Mapping[str, Any]) -> None:

@@ -47,9 +47,3 @@ class ChangeDetectorForm(StrictForm):
     action: Literal["flag", "restart"]
     ratio: Ratio = 2.0
     threshold: Threshold = 8.0
-
-
-class TripwiresForm(StrictForm):
-    """How long the source of values may be silent before windows stand still."""
-
-    value_silence_s: Seconds | None = None

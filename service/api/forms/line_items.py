@@ -20,10 +20,11 @@ from service.api.forms.fields import (
     Share,
     TimeZone,
 )
-from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin, TripwiresForm
+from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin
 from service.api.forms.policies import Policy
 from service.api.forms.reading import StrictForm
 from service.api.forms.spending import PacingForm, ReturnTargetForm
+from service.api.forms.tripwires import TripwiresForm
 
 DAY_S = 86_400
 

@@ -20,6 +20,7 @@ from service.api.forms.orders import (
     RewindForm,
 )
 from service.api.forms.outcomes import FORMS, OutcomesForm
+from service.api.forms.tripwires import CandidateForm
 
 _FORMS: tuple[type[BaseModel], ...] = (
     BidForm,
@@ -36,6 +37,7 @@ _FORMS: tuple[type[BaseModel], ...] = (
     ReconcileForm,
     KeyForm,
     RotateForm,
+    CandidateForm,
 )
 _PROBLEM: dict[str, Any] = {
     "type": "object",
