@@ -136,6 +136,18 @@ def _drill_soak() -> ModuleType:
     return drill_soak
 
 
+def _drill_night() -> ModuleType:
+    from service.commands import drill_night
+
+    return drill_night
+
+
+def _tripwires_try() -> ModuleType:
+    from service.commands import tripwires_try
+
+    return tripwires_try
+
+
 COMMANDS: dict[str, tuple[str, Load]] = {
     "serve": ("serve bids, outcomes and operators over HTTP", _serve),
     "demo": ("play an invented advertiser's auctions against a real server", _demo),
@@ -158,9 +170,13 @@ BENCHES: dict[str, tuple[str, Load]] = {
 }
 DRILLS: dict[str, tuple[str, Load]] = {
     "catalogue": ("run the test of every known fault and print the table", _drill_catalogue),
+    "night": ("let a value feed go wrong at night, and undo it byte for byte", _drill_night),
     "kill": ("kill workers and database under traffic, and check every promise", _drill_kill),
     "outage": ("stop the database under load and time the bids", _drill_outage),
     "soak": ("run even traffic for minutes; nothing may grow", _drill_soak),
+}
+TRIPWIRES: dict[str, tuple[str, Load]] = {
+    "try": ("when rules would have fired on recorded history; changes nothing", _tripwires_try),
 }
 
 
@@ -189,6 +205,7 @@ def _parser(words: list[str]) -> argparse.ArgumentParser:
     for family, text, members in (
         ("bench", "measure the service against something outside it", BENCHES),
         ("drill", "break something on purpose and check what was promised", DRILLS),
+        ("tripwires", "rules that freeze or warn by themselves", TRIPWIRES),
     ):
         kinds = parts.add_parser(family, help=text, description=text).add_subparsers(
             dest="kind", required=True
