@@ -3,7 +3,7 @@
 from alembic import op
 
 revision = "0004"
-down_revision = "0001"
+down_revision = "0003"
 
 # Sums of whole numbers, moved by signed steps; the rules say what each of them means.
 COUNTS = (
