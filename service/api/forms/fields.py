@@ -17,6 +17,10 @@ from service.decision.opportunity import Feature
 
 ID = re.compile(r"[A-Za-z0-9._-]{1,64}")
 PRINTABLE = re.compile(r"[ -~]{1,64}")
+# Any short text as ever; longer only what several dear changes ask for together.
+_CONFIRM = re.compile(
+    r"[ -~]{1,64}|[a-z_]{1,20}(=[a-z0-9.]{1,24})?( [a-z_]{1,20}=[a-z0-9.]{1,24}){0,4}"
+)
 NANOS_PER_WHOLE = 10**9
 _UNSEEN = {"Cc", "Cf", "Cs", "Zl", "Zp"}  # Controls, marks of direction, lone surrogates, breaks.
 _ZONES = zoneinfo.available_timezones() - {"Factory", "localtime"}
@@ -102,7 +106,7 @@ Printable = Annotated[
 ]
 Confirm = Annotated[
     str,
-    AfterValidator(_shape(re.compile(r"[ -~]{1,256}"), "It must be up to 256 printable ASCII.")),
+    AfterValidator(_shape(_CONFIRM, "It must be a word, or the values that a refusal has named.")),
     WithJsonSchema({"type": "string", "minLength": 1, "maxLength": 256}),
 ]
 Ticket = Annotated[
