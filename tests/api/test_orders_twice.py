@@ -28,26 +28,23 @@ ORDERS: dict[str, tuple[str, dict[str, Any]]] = {
 }
 
 
-@pytest.mark.parametrize("name", ORDERS)
 @pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
 async def test_an_order_is_done_once_per_key(
-    app_client: httpx.AsyncClient, written: Callable[[], dict[str, int]], name: str
+    app_client: httpx.AsyncClient, written: Callable[[], dict[str, int]]
 ) -> None:
     """The repeat answers the same and writes nothing; the key cannot be used for another wish."""
     await wins(app_client, 2)
-    path, wish = ORDERS[name]
-    body, headers = {"reason": "A test.", **wish}, {"Idempotency-Key": "once"}
-    first = await app_client.post(path, json=body, headers=headers)
-    assert first.status_code == 200, first.text
-    assert {"before", "after"} <= first.json().keys()
-    once = written()
-    again = await app_client.post(path, json=body, headers=headers)
-    assert again.status_code == 200
-    assert again.json() == {**first.json(), "after": again.json()["after"]}
-    assert written() == once
-    other = await app_client.post(path, json={**body, "reason": "Another."}, headers=headers)
-    assert (other.status_code, other.json()["code"]) == (409, "idempotency_key_reused")
-    assert written() == once
+    for name, (path, wish) in ORDERS.items():
+        body, headers = {"reason": "A test.", **wish}, {"Idempotency-Key": name}
+        first = await app_client.post(path, json=body, headers=headers)
+        assert first.status_code == 200, (name, first.text)
+        assert {"before", "after"} <= first.json().keys(), name
+        once = written()
+        again = await app_client.post(path, json=body, headers=headers)
+        assert again.json() == {**first.json(), "after": again.json()["after"]}, name
+        other = await app_client.post(path, json={**body, "reason": "Another."}, headers=headers)
+        assert (other.status_code, other.json()["code"]) == (409, "idempotency_key_reused"), name
+        assert written() == once, name
 
 
 @pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
