@@ -100,9 +100,14 @@ class Tending:
     def _count(self, standing: Standing) -> int | None:
         name, now = standing.line_item, self._database.wall_ms()
         read, seq = self._database.read(lambda c: tripwires.entries(c, name, standing.seq))
-        sums = dict[tuple[int, int], Counts]()
+        minutes = dict[int, Counts]()
         for at_ms, kind, slot, body, cost in read:
-            self._add(sums, at_ms, _counted(kind, slot, body, cost))
+            start = at_ms - at_ms % self._widths.minute_ms
+            more = _counted(kind, slot, body, cost)
+            minutes[start] = plus(minutes[start], more) if start in minutes else more
+        sums = dict[tuple[int, int], Counts]()
+        for start, counts in minutes.items():
+            self._add(sums, start, counts)
 
         def work(connection: Writing) -> bool:
             moved = [a - b for a, b in zip(standing.gauges, standing.gauges_seen, strict=True)]

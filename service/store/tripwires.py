@@ -137,7 +137,7 @@ def buckets(
     every_ms, day_ms, *places = phases or (from_ms, 1, 0, 0)
     row = {"id": line_item, "width": width, "start": from_ms, "every": every_ms, "day": day_ms}
     found = connection.execute(_BUCKETS, row | {"one": places[0], "two": places[1]})
-    return [(one[0], tuple(one[1:])) for one in found]
+    return [(start, tuple(sums)) for start, *sums in found]
 
 
 def prune(connection: Writing, width: int, before_ms: int) -> int:

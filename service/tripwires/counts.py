@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 from bisect import bisect_left
 from collections.abc import Iterable, Mapping
+from functools import cached_property
 from itertools import accumulate
 from operator import add, sub
 from typing import Any, NamedTuple
@@ -108,7 +109,11 @@ class Series:
         rows = sorted(buckets)
         self.starts = [start for start, _ in rows]
         self.buckets = [counts for _, counts in rows]
-        self._sums = list(accumulate(self.buckets, plus, initial=NOTHING))
+
+    @cached_property
+    def _sums(self) -> list[Counts]:
+        # Only when somebody asks for a stretch: most look at single hours and days.
+        return list(accumulate(self.buckets, plus, initial=NOTHING))
 
     def between(self, from_ms: int, until_ms: int) -> Counts:
         """The sums of the buckets that begin in this stretch."""
