@@ -110,6 +110,10 @@ def _bench_reads() -> ModuleType:
     from service.commands import bench_reads
 
     return bench_reads
+def _bench_hindsight() -> ModuleType:
+    from service.commands import bench_hindsight
+
+    return bench_hindsight
 
 
 def _drill_kill() -> ModuleType:
@@ -167,6 +171,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
     "reads": ("time pages, tables and charts of a large log over HTTP", _bench_reads),
+    "hindsight": ("see whether hindsight's intervals hold a known truth", _bench_hindsight),
 }
 DRILLS: dict[str, tuple[str, Load]] = {
     "catalogue": ("run the test of every known fault and print the table", _drill_catalogue),
