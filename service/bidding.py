@@ -20,7 +20,9 @@ from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
 from service.decision.price import Passed
 from service.decision.rule import FIXED, SECOND, Sale, sale_of
+from service.drawing import NOTHING, Draw, drawn, odds_below, odds_of
 from service.errors import Malformed, Refusal, StoreAway
+from service.guard.control import CONTROL, MAIN
 from service.guard.fees import NONE, Fees
 from service.guard.gate import Cleared, clear, shut
 from service.guard.hand import SliceInHand
@@ -32,7 +34,13 @@ from service.leasing import Leasing
 
 @dataclass(frozen=True, slots=True)
 class Answer:
-    """A bid (nanos per impression, with its ticket) or a pass with its reason."""
+    """
+    A bid (nanos per impression, with its ticket) or a pass with its reason.
+
+    Args:
+        held: The bid with its fees, and so its hold.
+        draw: Which rule answered, and with what chances; None where none was asked.
+    """
 
     request_id: str | None
     line_item: str
@@ -43,6 +51,8 @@ class Answer:
     method: str | None = None
     set_by: str | None = None
     snapshot: int | None = None
+    held: int | None = None
+    draw: Draw | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,6 +85,7 @@ class _Offer:
     held: SliceInHand | None
     worth: int
     hashed: Hashed
+    draw: Draw
 
 
 class Bidder:
@@ -229,23 +240,30 @@ class Bidder:
             return _pass(opportunity, "learner_halted")
         fees, opportunity = item.limits.fees, _gross(opportunity, item.limits.fees)
         opportunity = self._seen(item, opportunity)
-        proposed = item.ready.propose(opportunity, self._generator)
+        plain, draw = drawn(item, opportunity, self._leasing.hand, self._feature_key)
+        rule = item.ready if plain is None else plain.ready
+        proposed = rule.propose(opportunity, self._generator)
         if isinstance(proposed, Passed):
-            return _pass(opportunity, proposed.reason)
+            return replace(_pass(opportunity, proposed.reason), draw=draw)
         free = item.limits.cap if opportunity.test else held.free if held else 0
         sale = sale_of(opportunity, item.terms.auction)
-        cleared = clear(proposed.price, proposed.set_by, item.limits, sale.floor, free)
+        set_by = proposed.set_by if plain is None else CONTROL
+        cleared = clear(proposed.price, set_by, item.limits, sale.floor, free)
         if isinstance(cleared, str):
             if cleared == "under_floor" and not opportunity.test:
                 passes = self._leasing.hand.under_floor
                 passes[item.id] = passes.get(item.id, 0) + 1
-            return _pass(opportunity, cleared)
+            draw = replace(draw, odds=odds_below(rule, sale.floor))
+            return replace(_pass(opportunity, cleared), draw=draw)
         net = fees.net(cleared.price)
         if net <= 0:
             return _pass(opportunity, "price_rounds_to_zero")
         cleared = Cleared(fees.gross(net), cleared.set_by)
         worth = proposed.price if proposed.value is None else proposed.value
-        return _Offer(item, sale, cleared, held, worth, opportunity.hashed)
+        # Of a price that the money cut nobody knows which one was drawn.
+        if cleared.price == proposed.price:
+            draw = replace(draw, odds=odds_of(rule, cleared.price))
+        return _Offer(item, sale, cleared, held, worth, opportunity.hashed, draw)
 
     def _crowded_out(self, opportunity: Opportunity, held: SliceInHand | None) -> bool:
         """Whether this one needs a slice and too many wait for theirs already."""
@@ -268,6 +286,8 @@ class Bidder:
             slice_id, counter, day = secrets.token_bytes(16), 0, 1
         else:
             slice_id, counter, day = held.id, held.take(cleared.price), held.day
+            if offer.draw.arm == CONTROL:
+                self._leasing.hand.by_control(item.id, cleared.price)
         ticket = Ticket(
             item.id,
             opportunity.source,
@@ -283,6 +303,7 @@ class Bidder:
             item.limits.fees,
             hashing.to_bytes(offer.hashed),
             opportunity.value_hint,
+            offer.draw.arm,
         )
         return Answer(
             opportunity.request_id,
@@ -291,9 +312,11 @@ class Bidder:
             None,
             self._keys.sign(ticket),
             ticket.ref,
-            item.terms.method,
+            item.terms.method if offer.draw.arm == MAIN else "flat",
             cleared.set_by,
             item.snapshot,
+            cleared.price,
+            offer.draw,
         )
 
     def _seen(self, item: Item, opportunity: Opportunity) -> Opportunity:
@@ -308,9 +331,23 @@ class Bidder:
         allowed = self._clocks.deadline_ms if asked is None else asked
         return min(allowed, self._clocks.deadline_ms_max) / 1000
 
+    def _for_sale(self, line_item: str, opportunity: Opportunity) -> dict[str, object]:
+        """What was for sale, with its fees; hindsight reads it when they may have changed."""
+        item = self._catalog.get(line_item)
+        if item is None:
+            return {"auction": opportunity.auction or "", "floor_held": None}
+        sale = sale_of(_gross(opportunity, item.limits.fees), item.terms.auction)
+        return {"auction": sale.auction, "floor_held": sale.floor}
+
     def _logged(self, answer: Answer, opportunity: Opportunity) -> Answer:
+        draw = answer.draw or NOTHING
         self._backlog.add(
             {
+                **self._for_sale(answer.line_item, opportunity),
+                "arm": draw.arm,
+                "held": answer.held,
+                "arm_odds": draw.arm_odds,
+                "odds": draw.odds,
                 "at_ms": _wall_ms(),
                 "line_item": answer.line_item,
                 "ref": answer.ref,

@@ -11,8 +11,10 @@ from typing import Any
 from service.decision.price import Ready, ready
 from service.decision.terms import Terms
 from service.errors import no_such_line_item
+from service.guard.control import Control
 from service.guard.fees import Fees
 from service.guard.gate import Limits
+from service.learner import arm_part
 from service.learner.memory import Memory, UnreadableMemory
 from service.store import changes, keys, learners, line_items
 from service.store.database import Database, Reading
@@ -26,6 +28,22 @@ MISSES_MAX = 10_000
 
 
 @dataclass(frozen=True, slots=True)
+class PlainRule:
+    """
+    The plain rule of a control share, ready to bid.
+
+    Args:
+        control: Which requests are its own, and with how much money.
+        ready: What it answers.
+        open: Whether it has money of the budget left, as of the snapshot.
+    """
+
+    control: Control
+    ready: Ready
+    open: bool
+
+
+@dataclass(frozen=True, slots=True)
 class Item:
     """A line item as a price needs it; `ready` is None while there is no good snapshot."""
 
@@ -35,6 +53,7 @@ class Item:
     terms: Terms
     snapshot: int
     ready: Ready | None
+    plain: PlainRule | None = None
 
 
 class Catalog:
@@ -169,7 +188,8 @@ def _item(row: line_items.Row, snapshot: learners.Snapshot | None, before: Item 
     if made is None and before is not None and not halted:
         # A state that is not what was published is never used: the last good one goes on.
         seq, made = before.snapshot, before.ready
-    return Item(row.id, row.version, limits_of(row), terms, seq, made)
+    plain = None if made is None else plain_rule(row.config, made.memory)
+    return Item(row.id, row.version, limits_of(row), terms, seq, made, plain)
 
 
 def _ready(snapshot: learners.Snapshot | None, terms: Terms) -> tuple[int, Ready | None]:
@@ -181,6 +201,20 @@ def _ready(snapshot: learners.Snapshot | None, terms: Terms) -> tuple[int, Ready
     except UnreadableMemory:
         logger.exception("the snapshot of a line item cannot be read by this release")
         return 0, None
+
+
+def plain_rule(config: dict[str, Any], memory: Memory) -> PlainRule | None:
+    """The plain rule of a line item that has one; it reads nothing that was learnt."""
+    control = Control.of(config.get("control"))
+    if control is None:
+        return None
+    flat = {"method": "flat", "price": control.price}
+    value = {**config["value"], "hints": False, "drift": None, "change": None}
+    unbraked = {"pacing": None, "return_target": None, "allowance": None, "value": value}
+    made = ready(Memory.fresh(), Terms.from_config({**config, **unbraked, "policy": flat}))
+    arms = arm_part.read(memory.part(arm_part.NAME))
+    spent = arms.all_of(arm_part.CONTROL, arm_part.PAID)
+    return PlainRule(control, made, control.open(config["budget"], spent))
 
 
 def limits_of(row: line_items.Row) -> Limits:

@@ -18,7 +18,7 @@ LEARNING_COST = "learning_cost"
 # What is confirmed when it is raised to so many times what it was, and whether it is a CPM.
 DANGEROUS = (("budget", 10, False), ("daily_budget", 10, False), ("bid_cap", 3, True))
 # Their settings belong together: what is not said anew is not kept from before.
-AS_A_WHOLE = frozenset({"policy", "drift", "change", "return_target"})
+AS_A_WHOLE = frozenset({"policy", "drift", "change", "return_target", "control"})
 
 
 def filled(config: Mapping[str, Any]) -> tuple[dict[str, Any], list[str]]:

@@ -272,7 +272,8 @@ class Feedback:
         # And the same snapshot may have had another law there.
         snapshot = ticket.snapshot if here else NO_SNAPSHOT
         place = (slice_id, day, snapshot, ticket.floor)
-        return Booking(ticket.line_item, outcome, *place, ticket.features, ticket.hint)
+        seen = (ticket.features, ticket.hint, ticket.arm)
+        return Booking(ticket.line_item, outcome, *place, *seen)
 
     async def _find_refs(
         self,

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from service.catalog import limits_of
+from service.decision.comparing import show_control
 from service.decision.curves import curves
 from service.decision.describing import describe
 from service.decision.learnability import learnability
@@ -33,6 +34,7 @@ def show(facts: Facts) -> dict[str, Any]:
         "money": _money(facts),
         "day": _day(facts),
         "pacing": show_spending(facts, memory),
+        "control": show_control(facts.row.config, memory),
         "learnability": learnability(facts.row.config),
         "feed": {"last_ms": facts.feed, "quarantined": facts.quarantined},
         "passes_of_last_1000": facts.passes,

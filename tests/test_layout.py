@@ -27,6 +27,7 @@ SHARED = {
     *("correcting", "ordering", "pulse", "quarantining", "spending", "teaching", "threads"),
     *("records", "recounting", "previewing", "winding"),
     *("winding", "tripwiring", "foreseeing", "posting"),
+    *("winding", "drawing", "hindsights"),
 }
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "tripwires", "rehearsal"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}

@@ -157,8 +157,9 @@ _CONFIG: dict[str, tuple[str, Callable[[int], object]]] = {
     "memory_ms": ("memory_s", _seconds),
     "value_silence_ms": ("value_silence_s", _seconds),
     "allowance": ("allowance", money.nanos_text),
-    "share": ("share", money.nanos_text),
-    "cpm": ("cpm", lambda price_nanos: money.nanos_text(price_nanos * 1000)),
+    "fees.share": ("share", money.nanos_text),
+    "control.share": ("share", lambda parts: parts / money.NANOS_PER_UNIT),
+    "fees.cpm": ("cpm", lambda price_nanos: money.nanos_text(price_nanos * 1000)),
     "value_per_unit": ("value_per_unit", _millionths),
 }
 
@@ -180,11 +181,12 @@ def _moments(value: Any) -> Any:
 
 
 def _config(config: Mapping[str, Any]) -> dict[str, Any]:
-    return dict(_config_member(name, value) for name, value in config.items())
+    return dict(_config_member("", name, value) for name, value in config.items())
 
 
-def _config_member(name: str, value: Any) -> tuple[str, Any]:
+def _config_member(within: str, name: str, value: Any) -> tuple[str, Any]:
     if isinstance(value, Mapping):
-        return name, _config(value)
-    renamed, write = _CONFIG.get(name, (name, None))
+        return name, dict(_config_member(name, inner, of) for inner, of in value.items())
+    # A name may mean another thing in another object.
+    renamed, write = _CONFIG.get(f"{within}.{name}", _CONFIG.get(name, (name, None)))
     return renamed, write(value) if write is not None and isinstance(value, int) else value

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 
+from service.guard.control import Control
+
 COUNTER_MAX = 2**32 - 1
 
 
@@ -54,12 +56,31 @@ class Given:
 
 
 @dataclass(slots=True)
+class Issued:
+    """What a worker has issued for one line item since it began; amounts in nanos."""
+
+    before: int = 0
+    by_control: int = 0
+
+
+@dataclass(slots=True)
 class Hand:
     """At most one slice per line item; retired ones wait here until the database knows."""
 
     slices: dict[str, SliceInHand] = field(default_factory=dict)
     under_floor: dict[str, int] = field(default_factory=dict)
     given: list[Given] = field(default_factory=list)
+    issued: dict[str, Issued] = field(default_factory=dict)
+
+    def has_room(self, line_item: str, control: Control) -> bool:
+        """Whether the control arm may bid out of what was leased to this worker."""
+        held, issued = self.slices.get(line_item), self.issued.get(line_item, Issued())
+        leased = issued.before + (held.amount if held is not None else 0)
+        return control.has_room(leased, issued.by_control)
+
+    def by_control(self, line_item: str, price: int) -> None:
+        """Note that the control arm took `price` nanos out of the slice in hand."""
+        self.issued.setdefault(line_item, Issued()).by_control += price
 
     def usable(self, line_item: str, now: float) -> SliceInHand | None:
         """The slice to bid from, or None when there is none or its time is over."""
@@ -82,6 +103,7 @@ class Hand:
         if old is not None:
             passed = self.under_floor.pop(line_item, 0)
             self.given.append(Given(old.id, line_item, old.issued, old.bids, passed))
+            self.issued.setdefault(line_item, Issued()).before += old.issued
 
     def retire_expired(self, now: float) -> None:
         """Retire every slice whose time is over."""

@@ -13,14 +13,15 @@ import struct
 from dataclasses import dataclass
 from hashlib import blake2b, sha256
 
+from service.guard.control import CONTROL, MAIN
 from service.guard.fees import NONE, Fees
 
 TEXT_MAX = 512
 FORM = 1
 MAC_BYTES = 16
 KEY_ID_BYTES = 4
-TEST = 1
-AUCTIONS = {"second": 0, "first": 2, "fixed": 4}  # Beside TEST among the flags.
+TEST, OF_CONTROL = 1, 8
+AUCTIONS = {"second": 0, "first": 2, "fixed": 4}  # Beside the others among the flags.
 HINT_BYTES = 8
 
 # form, key id, incarnation, slice, counter, price, floor, snapshot, day, share, flat, flags
@@ -48,6 +49,7 @@ class Ticket:
         fees: Those of when the price left, by which prices that come back are read.
         features: What is known of the impression, hashed; at most 255 bytes.
         hint: The caller's own prediction of its value, in nanos.
+        arm: Of a control share: which rule bid.
     """
 
     line_item: str
@@ -64,6 +66,7 @@ class Ticket:
     fees: Fees = NONE
     features: bytes = b""
     hint: int | None = None
+    arm: str = MAIN
 
     @property
     def bid(self) -> bytes:
@@ -115,7 +118,9 @@ class TicketKeys:
             ticket.day,
             ticket.fees.share,
             ticket.fees.flat,
-            AUCTIONS[ticket.auction] | (TEST if ticket.test else 0),
+            AUCTIONS[ticket.auction]
+            | (TEST if ticket.test else 0)
+            | (OF_CONTROL if ticket.arm == CONTROL else 0),
         )
         body = head + _packed(ticket.line_item) + _packed(ticket.source) + _facts(ticket)
         return _text(body + _mac(self._keys[self._signing], body))
@@ -144,12 +149,13 @@ def _unpacked(body: bytes) -> Ticket:
     line_item, source, features, hint = _pieces(body[_HEAD.size :], 4)
     texts = line_item.decode("ascii"), source.decode("ascii")
     place = (*texts, slice_id, counter, price, snapshot, day, incarnation)
-    auctions = [name for name, flag in AUCTIONS.items() if flag == flags & ~TEST]
+    auctions = [name for name, flag in AUCTIONS.items() if flag == flags & ~(TEST | OF_CONTROL)]
     if not auctions:
         raise BadTicket("an unknown kind of auction")
     said = int.from_bytes(hint) if hint else None
     sold = (auctions[0], Fees(share, flat))
-    return Ticket(*place, bool(flags & TEST), floor, *sold, features, said)
+    arm = CONTROL if flags & OF_CONTROL else MAIN
+    return Ticket(*place, bool(flags & TEST), floor, *sold, features, said, arm)
 
 
 def _pieces(packed: bytes, count: int) -> list[bytes]:

@@ -95,6 +95,18 @@ class Law:
         reaching, of = self._above(floor - 1) if floor > 0 else (self.total, 1)
         return above * of / (parts * reaching) if reaching else 0.0
 
+    def chance_of(self, bid: int) -> float:
+        """The chance that exactly this bid is drawn; 0 of what never is."""
+        if bid == self.ticks.top:
+            return self.forced / self.total
+        if not 0 < bid < self.ticks.top:
+            return 0.0
+        cell, _, _ = self.ticks.place(bid)
+        start, end = self.ticks.edges(cell)
+        if not start < bid < end:
+            return 0.0
+        return self.masses[bisect_right(self.ends, cell)] / (self.total * (end - start - 1))
+
     def quantile(self, order: float) -> int:
         """The bid in nanos, up to one tick, that a share `order` of all bids stays under."""
         at = min(int(order * self.total), self.total - 1)

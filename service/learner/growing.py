@@ -22,6 +22,12 @@ def tree_lesson(kind: str, body: Body) -> Lesson | None:
     """The lesson an entry holds for a tree, but for values; None when it holds none."""
     if "only" in body:  # Price and value are one lesson here; half of it would mislead.
         return None
+    if body.get("arm") and kind in (
+        "won",
+        "lost",
+        "void",
+    ):  # Not drawn from the law, so nothing of it can be weighed by the law.
+        return Passed(body["round"])
     if kind == "won":
         return Won(body["price"], body.get("chance"), _stage(body), body["round"])
     if kind == "lost":

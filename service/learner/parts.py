@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
-from service.learner import hint_part, linear_part, market_part, pace_part, return_part
+from service.learner import arm_part, hint_part, linear_part, market_part, pace_part, return_part
 from service.learner.lesson import Lesson
 from service.learner.rules import Rules
 
@@ -32,6 +32,7 @@ class Part:
 PACE, RETURN = "pace", "return"
 # By name, in the order in which a memory keeps them.
 PARTS: dict[str, Part] = {
+    arm_part.NAME: Part(arm_part.wanted, arm_part.learn),
     "hints": Part(lambda rules: rules.hints, hint_part.learn),
     "linear": Part(lambda rules: rules.dimensions > 0, linear_part.learn),
     market_part.NAME: Part(market_part.wanted, market_part.learn),

@@ -97,6 +97,7 @@ class Rules:
         hints: Whether the caller's own predictions are calibrated.
         paced: Whether a multiplier holds spend to a rate; which one, the stream says.
         returning: The return target and how its multiplier moves; None for no target.
+        control: Whether a share of traffic is kept on a plain rule; which one, the stream says.
     """
 
     ceiling: int
@@ -115,6 +116,7 @@ class Rules:
     hints: bool = False
     paced: bool = False
     returning: return_target.Rules | None = None
+    control: bool = False
 
     @property
     def cell_ms(self) -> int:
@@ -146,6 +148,7 @@ class Rules:
             bool(value.get("hints")),
             is_paced(config),
             return_rules(config),
+            config.get("control") is not None,
         )
 
 

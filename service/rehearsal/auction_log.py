@@ -35,8 +35,10 @@ class Logged:
         high: Most it may bring; equal to `low` once its value is known.
         reason: Why it passed.
         set_by: What set the bid.
-        odds: Chance with which what was done was drawn: a price among all, or a pass under the
-            floor; None where nothing was drawn or the chance was not kept.
+        arm: Which rule of a control share bid.
+        arm_odds: The chance that it was this one; None where nobody chose, or nobody kept it.
+        odds: The chance of just this price, or of one under the floor; None where prices were
+            not drawn, or the chance was not kept.
     """
 
     auction: str
@@ -54,6 +56,7 @@ class Logged:
     at_ms: int = 0
     day: str = ""
     arm: str = ""
+    arm_odds: float | None = None
     odds: float | None = None
 
     @property

@@ -198,7 +198,8 @@ def _look_drawn(rng: Generator, auctions: int, found: dict[str, Held]) -> None:
         hidden = _hidden(
             world, rng, one.rival, one.value, price if mine else one.bid, 0, priced=False
         )
-        row = replace(hidden.told, arm="control" if mine else "", odds=share if mine else 1 - share)
+        arm, odds = ("control", share) if mine else ("", 1.0 - share)
+        row = replace(hidden.told, arm=arm, arm_odds=odds)
         rows.append(replace(row, low=one.value, high=one.value) if row.result == "won" else row)
     answer = hindsight_drawn.estimates(rows, price)
     if not isinstance(answer, hindsight_drawn.Refused):

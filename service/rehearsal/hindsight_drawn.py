@@ -74,12 +74,14 @@ def ripe(rows: Sequence[Logged]) -> list[Logged]:
 
 def drawn(rows: Sequence[Logged], price: int) -> Drawn | None:
     """The weights of a flat price; None where nothing near it was drawn."""
-    known = [row for row in ripe(rows) if row.odds is not None]
-    arm = [row for row in known if row.arm == CONTROL and row.bid in (0, price)]
-    if any(row.bid for row in arm):
-        # Where the control arm was certain not to bid, it tells nothing.
-        return _of_arm([row for row in known if row.arm == CONTROL or (row.odds or 1.0) < 1.0])
-    return _of_band([row for row in known if row.arm != CONTROL], price)
+    known = ripe(rows)
+    # Where the arm was certain not to bid, what was done tells nothing of it.
+    chosen = [row for row in known if row.arm_odds is not None and row.arm_odds < 1.0]
+    if any(row.arm == CONTROL and row.bid == price for row in chosen):
+        # Bids of the plain rule of before, at another price, are no draws of this one.
+        mine = [row for row in chosen if row.arm != CONTROL or row.bid in (0, price)]
+        return _of_arm(mine)
+    return _of_band([row for row in known if row.arm != CONTROL and row.odds is not None], price)
 
 
 def estimates(rows: Sequence[Logged], price: int) -> dict[str, Estimate] | Refused:
@@ -100,7 +102,8 @@ def estimates(rows: Sequence[Logged], price: int) -> dict[str, Estimate] | Refus
 
 def _of_arm(rows: Sequence[Logged]) -> Drawn:
     mine = [row.arm == CONTROL for row in rows]
-    weights = [1.0 / (row.odds or 1.0) if own else 0.0 for row, own in zip(rows, mine, strict=True)]
+    # No chance below 1 is none at all: it would not have come to pass.
+    weights = [own / (row.arm_odds or 1.0) for row, own in zip(rows, mine, strict=True)]
     cells = [int(own) for own in mine]
     words = "the control arm on all traffic, exactly"
     return Drawn(double(weights), _rewards(rows), cells, [1] * len(rows), words)

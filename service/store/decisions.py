@@ -16,9 +16,10 @@ PRUNED_MAX = 5000
 
 def log(database: Database, decisions: list[Decision]) -> None:
     """Append decisions; losing some in a crash loses no money, since tickets carry it."""
+    rows = [{**_UNKEPT, **decision} for decision in decisions]
 
     def work(connection: Writing) -> None:
-        connection.execute(_INSERT, decisions)
+        connection.execute(_INSERT, rows)
         # In the same transaction, so that a chart counts each logged decision once.
         charting.add(connection, charting.of_decisions(decisions))
 
@@ -74,6 +75,12 @@ _PRUNE = text(
 )
 _INSERT = text(
     "INSERT INTO decision (at_ms, line_item, ref, request_id, source, floor, price,"
-    " reason, set_by, snapshot, test) VALUES (:at_ms, :line_item, :ref, :request_id,"
-    " :source, :floor, :price, :reason, :set_by, :snapshot, :test)"
+    " reason, set_by, snapshot, test, auction, arm, held, floor_held, arm_odds, odds) VALUES"
+    " (:at_ms, :line_item, :ref, :request_id, :source, :floor, :price, :reason, :set_by,"
+    " :snapshot, :test, :auction, :arm, :held, :floor_held, :arm_odds, :odds)"
 )
+# What a decision that was never weighed has nothing to say of.
+_UNKEPT: Decision = {
+    **{"auction": "", "arm": ""},
+    **dict.fromkeys(("held", "floor_held", "arm_odds", "odds")),
+}

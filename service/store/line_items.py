@@ -139,6 +139,7 @@ def _money(config: Mapping[str, Any]) -> dict[str, Any]:
         "pacing": config.get("pacing"),
         "guess": config["value"]["expected"]["per_impression"],
         "grace_ms": config["grace_ms"],
+        "control": config.get("control"),
     }
 
 

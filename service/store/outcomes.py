@@ -22,7 +22,7 @@ from service.store.freezes import put
 from service.store.journal import note
 from service.store.leases import read_configs
 
-FACTS = ("features", "hint")  # Of an impression, written into all that is said of it.
+FACTS = ("features", "hint", "arm")  # Of an impression, written into all that is said of it.
 NO_SNAPSHOT = -1  # Of a price made before the database was restored.
 
 Slots = dict[str, tuple[str, dict[str, Any]]]
@@ -40,6 +40,7 @@ class Booking:
         floor: Least price the seller took, in nanos per impression.
         features: What was known of the impression, hashed.
         hint: What the caller predicted of its value, in nanos.
+        arm: Which rule bid, where there is a control share.
     """
 
     line_item: str
@@ -50,6 +51,7 @@ class Booking:
     floor: int = 0
     features: bytes = b""
     hint: int | None = None
+    arm: str = ""
 
 
 # Law, kind, competing bid, floor and configuration in; what the entry must carry for the learner.
@@ -204,7 +206,8 @@ class _Group:
 
     def _weighed(self, booking: Booking, entry: Entry | None, slots: Slots) -> Entry | None:
         """The entry with what its bid was likely to beat, where bids are drawn from a law."""
-        if entry is None or entry.kind not in ("won", "lost"):
+        # The plain rule draws nothing, whatever the law of the moment was.
+        if entry is None or entry.kind not in ("won", "lost") or booking.arm:
             return entry
         law = self._law(booking.line_item, booking.snapshot)
         if law is None:
@@ -264,10 +267,12 @@ class _Group:
 
 
 def _described(booking: Booking, entry: Entry | None) -> Entry | None:
-    """The entry of an impression bought, with what was known of it when it was priced."""
-    if entry is None or entry.kind not in PAYING:
+    """The entry with its arm; of an impression bought, with what was known when it was priced."""
+    if entry is None:
         return entry
-    body = dict(entry.body)
+    body = {**entry.body, "arm": booking.arm} if booking.arm else dict(entry.body)
+    if entry.kind not in PAYING:
+        return replace(entry, body=body)
     if booking.features:
         body["features"] = b64encode(booking.features).decode("ascii")
     if booking.hint is not None:

@@ -62,6 +62,7 @@ def written(booking: Booking) -> dict[str, Any]:
         "floor": booking.floor,
         "features": booking.features.hex(),
         "hint": booking.hint,
+        "arm": booking.arm,
     }
 
 
@@ -80,7 +81,8 @@ def booking_of(line_item: str, body: dict[str, Any]) -> Booking:
     event = KINDS[body["event"]](**said)
     place = (slice_id, body["day"], body["snapshot"], body["floor"])
     features = bytes.fromhex(body.get("features", ""))
-    return Booking(line_item, event, *place, features, body.get("hint"))
+    seen = (features, body.get("hint"), body.get("arm", ""))
+    return Booking(line_item, event, *place, *seen)
 
 
 def _read(found: Any) -> dict[str, Any]:

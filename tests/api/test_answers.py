@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from decimal import Decimal
 
 from service.api import answers
 from service.api.forms.configs import read_new
@@ -55,6 +56,16 @@ def test_a_receipt_says_only_what_there_is_to_say() -> None:
         "clipped": True,
         "test": True,
     }
+
+
+def test_a_share_of_traffic_is_no_fee() -> None:
+    """Names that two objects share are written as each one's own."""
+    control = {"share": Decimal("0.1"), "method": "flat", "price_cpm": 3}
+    fees = {"share": "0.12", "cpm": "0.15"}
+    config, _ = read_new({**FORM, "control": control, "fees": fees}, 0)
+    read = answers.line_item(View("a", 1, config, 0, 0, [], "words", []))
+    assert read["control"] == {"share": 0.1, "method": "flat", "price_cpm": 3.0}
+    assert read["fees"] == fees
 
 
 def test_a_line_item_comes_back_in_the_form_in_which_it_was_created() -> None:

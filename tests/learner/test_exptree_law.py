@@ -43,6 +43,14 @@ def test_chances_are_sums_over_single_bids(price: int, floor: int) -> None:
     assert SMALL.chance_above(price, floor) == (float(above / left) if left else 0.0)
 
 
+def test_the_chance_of_one_bid_is_that_of_its_draw() -> None:
+    """Every nano from outside the range through it; all of them together are certain."""
+    found = [SMALL.chance_of(bid) for bid in range(-3, 60)]
+    drawn = [float(exact(bid)) if 0 < bid <= 55 else 0.0 for bid in range(-3, 60)]
+    assert found == pytest.approx(drawn)
+    assert sum(found) == pytest.approx(1.0)
+
+
 def test_all_bids_are_above_nothing_and_none_above_the_top() -> None:
     """The ends of the range, and prices outside it."""
     assert SMALL.total == 20

@@ -19,9 +19,9 @@ def won(bid: int, value: int, price: int, **facts: object) -> Logged:
 def test_a_control_arm_weighs_by_its_share() -> None:
     """One over the share for the arm, nothing for the rest, and rows without a draw left out."""
     rows = [
-        won(PRICE, 900, 400, arm="control", odds=0.1),
-        Logged("second", 700, "lost", 5000, odds=0.9),
-        won(700, 500, 300, odds=1.0),
+        won(PRICE, 900, 400, arm="control", arm_odds=0.1),
+        Logged("second", 700, "lost", 5000, arm_odds=0.9),
+        won(700, 500, 300, arm_odds=1.0),
         Logged("second", 700, "lost", 5000),
     ]
     found = drawn(rows, PRICE)
@@ -55,7 +55,7 @@ def test_bids_that_were_not_drawn_are_refused() -> None:
 
 def test_under_thirty_effective_auctions_there_is_no_verdict() -> None:
     """Twenty-nine are refused with their number; thirty are not."""
-    rows = [won(PRICE, 900, 400, arm="control", odds=0.5) for _ in range(29)]
+    rows = [won(PRICE, 900, 400, arm="control", arm_odds=0.5) for _ in range(29)]
     found = estimates(rows, PRICE)
     assert isinstance(found, Refused)
     assert found.code == TOO_FEW
@@ -65,9 +65,9 @@ def test_under_thirty_effective_auctions_there_is_no_verdict() -> None:
 
 def test_what_is_younger_than_an_open_window_is_left_out() -> None:
     """Wins that may still bring something and all after them, and bids of which no word came."""
-    rows = [won(PRICE, 900, 400, arm="control", odds=0.5, at_ms=at) for at in range(40)]
-    rows.append(Logged("second", PRICE, "won", 900, 0, price=400, at_ms=35, odds=0.5))
-    rows.append(Logged("second", PRICE, "silent", 900, at_ms=1, arm="control", odds=0.5))
+    rows = [won(PRICE, 900, 400, arm="control", arm_odds=0.5, at_ms=at) for at in range(40)]
+    rows.append(Logged("second", PRICE, "won", 900, 0, price=400, at_ms=35, arm_odds=0.5))
+    rows.append(Logged("second", PRICE, "silent", 900, at_ms=1, arm="control", arm_odds=0.5))
     found = drawn(rows, PRICE)
     assert found is not None
     assert found.weights.size == 35

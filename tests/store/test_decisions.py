@@ -28,6 +28,12 @@ BID = {
     "set_by": "value",
     "snapshot": 812,
     "test": 0,
+    "auction": "second",
+    "arm": "control",
+    "held": 1_300_000,
+    "floor_held": 450_000,
+    "arm_odds": 0.1,
+    "odds": 2.5e-7,
 }
 PASS = {**BID, "at_ms": 2000, "ref": None, "price": None, "reason": "frozen", "set_by": None}
 
@@ -55,6 +61,15 @@ def test_bids_and_passes_are_kept_in_order(database: Database) -> None:
         {"number": 2, **PASS},
         {"number": 3, **BID, "request_id": None},
     ]
+
+
+def test_a_decision_that_nobody_weighed_has_no_chances(database: Database) -> None:
+    """A line of a release before this one, or a pass before any price: empty, not invented."""
+    bare = {name: BID[name] for name in list(BID)[: list(BID).index("auction")]}
+    decisions.log(database, [bare])
+    (row,) = rows(database, "decision")
+    assert (row["auction"], row["arm"]) == ("", "")
+    assert [row[name] for name in ("held", "floor_held", "arm_odds", "odds")] == [None] * 4
 
 
 def test_old_decisions_are_forgotten(database: Database) -> None:

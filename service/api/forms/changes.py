@@ -7,6 +7,7 @@ from typing import Literal
 from pydantic import Field, StrictBool
 
 from service.api.forms import refused
+from service.api.forms.control import ControlForm
 from service.api.forms.fields import Amount, CapCpm, Confirm, Moment, Name, Reason
 from service.api.forms.learning import ChangeDetectorForm, DriftForm, Kin
 from service.api.forms.line_items import (
@@ -14,7 +15,6 @@ from service.api.forms.line_items import (
     ExpectedForm,
     FeesForm,
     Grace,
-    NotYetForm,
     Window,
 )
 from service.api.forms.policies import Policy
@@ -47,7 +47,7 @@ class ValueChange(StrictForm):
     hints: StrictBool = False
 
 
-class ChangeForm(NotYetForm):
+class ChangeForm(StrictForm):
     """What may change: all but id, currency, auction, zone, spend_on and arrival."""
 
     id: refused.FixedId = None
@@ -67,6 +67,7 @@ class ChangeForm(NotYetForm):
     pacing: PacingForm = PacingForm()
     return_target: ReturnTargetForm | None = None
     allowance: Amount | None = None
+    control: ControlForm | None = None
     kin: Kin | None = None
     fees: FeesForm | None = None
     losses: Literal["bare", "priced"] = "bare"

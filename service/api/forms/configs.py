@@ -8,7 +8,7 @@ from typing import Any
 from pydantic import BaseModel
 
 from service.api.forms.changes import ChangeForm
-from service.api.forms.line_items import CreateForm, NotYetForm
+from service.api.forms.line_items import CreateForm
 from service.api.forms.reading import bad_field, read
 from service.api.forms.tripwires import CandidateForm
 from service.configuring import AS_A_WHOLE
@@ -27,10 +27,11 @@ NAMES = {
     "memory_s": ("memory_ms", MS_PER_S),
     "value_silence_s": ("value_silence_ms", MS_PER_S),
 }
-_NOT_KEPT = {*NotYetForm.model_fields, "confirm", "reason"}
+_NOT_KEPT = {"confirm", "reason"}
 _MAY_BE_NULL = {
     *("daily_budget", "ends_at", "delay_mean_s", "drift", "change", "rounds", "memory_s"),
     *("value_silence_s", "allowance", "kin", "fees", "tripwires", "profile", "return_target"),
+    "control",
 }
 
 
@@ -105,6 +106,16 @@ def check_consistent(config: Mapping[str, Any]) -> None:
         raise bad_field("kin", "A line item is no kin of its own.")
     if _above(policy.get("price"), config["bid_cap"]):
         raise bad_field("policy.price_cpm", "The flat price must not exceed the cap.")
+    _check_control(config.get("control"), config["bid_cap"], policy)
+
+
+def _check_control(control: Mapping[str, Any] | None, cap: int, policy: Mapping[str, Any]) -> None:
+    if control is None:
+        return
+    if control["price"] > cap:
+        raise bad_field("control.price_cpm", "The price of the control share exceeds the cap.")
+    if policy.get("method") == "flat" and policy.get("price") == control["price"]:
+        raise bad_field("control.price_cpm", "It is the line item's own price: nothing differs.")
 
 
 def defaults_taken(form: BaseModel, path: str = "") -> list[str]:

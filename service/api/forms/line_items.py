@@ -6,7 +6,7 @@ from typing import Annotated, Literal
 
 from pydantic import Field, StrictBool
 
-from service.api.forms import refused
+from service.api.forms.control import ControlForm
 from service.api.forms.fields import (
     Amount,
     CapCpm,
@@ -68,13 +68,7 @@ class FeesForm(StrictForm):
     cpm: FeeCpm = 0
 
 
-class NotYetForm(StrictForm):
-    """What the contract knows of a line item and this release refuses."""
-
-    control: refused.Control = None
-
-
-class CreateForm(NotYetForm):
+class CreateForm(StrictForm):
     """A new line item; everything after the cap has a default."""
 
     id: LineItemId
@@ -94,6 +88,7 @@ class CreateForm(NotYetForm):
     pacing: PacingForm = PacingForm()
     return_target: ReturnTargetForm | None = None
     allowance: Amount | None = None
+    control: ControlForm | None = None
     kin: Kin | None = None
     fees: FeesForm | None = None
     losses: Literal["bare", "priced"] = "bare"

@@ -1,4 +1,4 @@
-"""Wishes that are refused: what this release lacks, and what is fixed once a line item exists."""
+"""Wishes that are refused: what is fixed once a line item exists."""
 
 from __future__ import annotations
 
@@ -6,21 +6,7 @@ from typing import Annotated
 
 from pydantic import BeforeValidator, WithJsonSchema
 
-from service.errors import Malformed, NotOffered
-
-
-def not_offered(field: str, wish: str | None = None) -> NotOffered:
-    """The refusal of a wish that the contract knows and this release does not fulfil."""
-    sentence = f"This release does not offer {wish or field}."
-    return NotOffered("not_offered", sentence, {"field": field})
-
-
-def _absent(field: str) -> BeforeValidator:
-    def check(wish: object) -> None:
-        if wish is not None and wish != {} and wish != []:
-            raise not_offered(field)
-
-    return BeforeValidator(check)
+from service.errors import Malformed
 
 
 def _fixed(field: str) -> BeforeValidator:
@@ -32,10 +18,7 @@ def _fixed(field: str) -> BeforeValidator:
     return BeforeValidator(check)
 
 
-_NULL = WithJsonSchema({"nullable": True, "description": "Not offered in this release."})
 _NEVER = WithJsonSchema({"not": {}, "description": "Fixed at creation; leave it out."})
-
-Control = Annotated[None, _absent("control"), _NULL]
 
 FixedId = Annotated[None, _fixed("id"), _NEVER]
 FixedCurrency = Annotated[None, _fixed("currency"), _NEVER]

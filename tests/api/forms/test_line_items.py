@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 from service.api.forms.configs import defaults_taken, read_changes, read_new
 from service.api.times import milliseconds
 from service.configuring import merged
-from service.errors import Malformed, NotOffered, Refusal
+from service.errors import Malformed, Refusal
 from tests.api.anything import ANYTHING
 
 TODAY_MS = 1_767_225_600_000
@@ -52,6 +52,7 @@ def test_the_smallest_line_item_takes_the_documented_defaults() -> None:
         "pacing": {"profile": None},
         "return_target": None,
         "allowance": None,
+        "control": None,
         "kin": None,
         "fees": None,
         "losses": "bare",
@@ -133,16 +134,42 @@ def test_a_bad_field_is_named_by_its_path(change: dict[str, Any], field: str) ->
 
 
 @pytest.mark.parametrize(
-    "wish",
+    ("control", "field"),
     [
-        {"control": {"share": 0.1}},
+        ({"share": 0.1}, "control.price_cpm"),
+        ({"price_cpm": 2.0}, "control.share"),
+        ({"share": 0, "price_cpm": 2.0}, "control.share"),
+        ({"share": -0.1, "price_cpm": 2.0}, "control.share"),
+        ({"share": 0.51, "price_cpm": 2.0}, "control.share"),
+        ({"share": True, "price_cpm": 2.0}, "control.share"),
+        ({"share": 0.1, "price_cpm": 0}, "control.price_cpm"),
+        ({"share": 0.1, "price_cpm": 8.1}, "control.price_cpm"),
+        ({"share": 0.1, "method": "kl-ucbid", "price_cpm": 2.0}, "control.method"),
+        ({"share": 0.1, "price_cpm": 2.0, "shiny": 1}, "control"),
     ],
 )
-def test_what_this_release_lacks_is_refused_by_name(wish: dict[str, Any]) -> None:
-    """A wish of the contract is never ignored silently."""
-    with pytest.raises(NotOffered) as caught:
-        read_new({**SMALLEST, **wish}, TODAY_MS)
-    assert caught.value.code == "not_offered"
+def test_a_control_share_that_makes_no_sense_is_refused(
+    control: dict[str, Any], field: str
+) -> None:
+    """Above 0 and at most a half, a plain rule, a price within the cap."""
+    with pytest.raises(Malformed) as caught:
+        read_new({**SMALLEST, "control": _decimals(control)}, TODAY_MS)
+    assert caught.value.data == {"field": field}
+
+
+def _decimals(members: dict[str, Any]) -> dict[str, Any]:
+    """Fractions as the edge reads them."""
+    return {k: Decimal(str(v)) if isinstance(v, float) else v for k, v in members.items()}
+
+
+def test_a_control_share_is_kept_in_parts_and_nanos() -> None:
+    """As money is; a flat main method may be compared with another flat price, not its own."""
+    control = {"share": Decimal("0.1"), "method": "flat", "price_cpm": 2}
+    config, _ = read_new({**SMALLEST, "control": control}, TODAY_MS)
+    assert config["control"] == {"share": 10**8, "method": "flat", "price": 2_000_000}
+    read_new({**SMALLEST, "control": control, "policy": {"method": "flat", "price_cpm": 1}}, 0)
+    with pytest.raises(Malformed, match="nothing differs"):
+        read_new({**SMALLEST, "control": control, "policy": {"method": "flat", "price_cpm": 2}}, 0)
 
 
 def test_wishes_left_empty_are_no_wishes() -> None:
