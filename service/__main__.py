@@ -52,6 +52,12 @@ def _rebuild() -> ModuleType:
     return rebuild
 
 
+def _hindsight() -> ModuleType:
+    from service.commands import hindsight
+
+    return hindsight
+
+
 def _backup() -> ModuleType:
     from service.commands import backup
 
@@ -159,6 +165,7 @@ COMMANDS: dict[str, tuple[str, Load]] = {
     "keys": ("add, list and end access keys", _keys),
     "audit": ("check every promise on the database as it is", _audit),
     "rebuild": ("fold learners from zero and compare with what is published", _rebuild),
+    "hindsight": ("see what another cap, price, floor or method would have done", _hindsight),
     "backup": ("write a consistent copy of the database while it is served", _backup),
     "restore": ("put a backup in place of the database, spend to be confirmed", _restore),
 }

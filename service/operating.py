@@ -28,6 +28,7 @@ from service.correcting import Correcting
 from service.decision.learnability import defaults, learnability
 from service.errors import Malformed, StoreAway
 from service.foreseeing import Foreseeing
+from service.hindsights import Hindsights
 from service.ledger.entries import Entry
 from service.ordering import Orders, repeat_of
 from service.quarantining import Quarantining
@@ -83,6 +84,7 @@ class Operator:
         self.quarantine = Quarantining(orders, self.winding)
         self.admitting = Admitting(orders, catalog)
         self.records = Records(database, threads)
+        self.hindsights = Hindsights(orders)
 
     async def key_for(self, bearer: str) -> Key | None:
         """The live key behind a bearer text, or None."""

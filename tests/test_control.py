@@ -16,9 +16,9 @@ PLAIN = PRICE // 2
 HALF: dict[str, Any] = {"share": 5 * 10**8, "method": "flat", "price": PLAIN}
 
 
-async def played(worker: Worker, many: int) -> list[Any]:
+async def played(worker: Worker, many: int, name: str = "op") -> list[Any]:
     """So many bids under names of their own."""
-    return [await worker.bid(request_id=f"op-{n}") for n in range(many)]
+    return [await worker.bid(request_id=f"{name}-{n}") for n in range(many)]
 
 
 async def test_a_share_of_requests_is_bid_for_by_the_plain_rule(migrated_url: str) -> None:
@@ -79,7 +79,8 @@ async def test_outcomes_count_for_their_arm_and_the_state_compares_them(
         main, control = block["arms"]
         assert (main["impressions"], control["impressions"]) == (40 - len(reports), len(reports))
         assert control["value_nanos"] == len(reports) * 10_000_000
-        assert control["spent_nanos"] == len(reports) * PRICE
+        # A price above the bid is disputed, and the books count it as little as the arms do.
+        assert control["spent_nanos"] == len(reports) * PLAIN
         assert main["value_nanos"] == 0
         assert "cannot tell yet" in block["says"]
         # All of them teach the one learner of the line item.
@@ -91,8 +92,9 @@ async def test_the_arm_ends_with_its_share_of_the_budget(migrated_url: str) -> N
     async with working(migrated_url) as worker:
         wish = {"share": 10**8, "method": "flat", "price": PLAIN}
         await worker.create(budget=UNIT // 50, control=wish)
-        for _ in range(6):
-            answers = [answer for answer in await played(worker, 60) if answer.ticket]
+        for batch in range(20):
+            asked = await played(worker, 10, f"batch-{batch}")
+            answers = [answer for answer in asked if answer.ticket]
             await worker.report(
                 *(
                     Report("won", a.ticket, clearing=PLAIN)
@@ -106,7 +108,8 @@ async def test_the_arm_ends_with_its_share_of_the_budget(migrated_url: str) -> N
         assert item is not None
         assert item.plain is not None
         assert not item.plain.open
-        assert worker.balance()["spent"] <= UNIT // 50 // 10
+        # It is known with the next snapshot, so what left before it may lie above the share.
+        assert worker.balance()["spent"] <= UNIT // 50 // 10 + 10 * PLAIN
         assert {a.bid for a in await played(worker, 60)} <= {PRICE, None}
 
 

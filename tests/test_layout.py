@@ -49,6 +49,7 @@ OWN: dict[str, set[str]] = {
     "api": STORIES
     | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
     | {"admitting", "records", "recounting"},
+    | {"hindsights"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 

@@ -9,6 +9,7 @@ from service.api import (
     corrections,
     documentation,
     health,
+    hindsights,
     keys,
     line_items,
     orders,
@@ -29,6 +30,7 @@ ROUTERS = (
     keys.router,
     records.router,
     tripwires.router,
+    hindsights.router,
     health.router,
     documentation.router,
 )

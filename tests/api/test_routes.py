@@ -65,6 +65,8 @@ SCOPES = [
         for name in ("stream", "ledger", "lessons", "decisions", "journal", "chart")
     ),
     ("GET", "/v1/journal", "read"),
+    ("POST", "/v1/line-items/a/hindsight", "read"),
+    ("GET", "/v1/line-items/a/evidence", "read"),
 ]
 
 

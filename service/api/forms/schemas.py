@@ -9,6 +9,7 @@ from pydantic.json_schema import models_json_schema
 
 from service.api.forms.bids import BatchForm, BidForm
 from service.api.forms.changes import ChangeForm, FlightChange, ValueChange
+from service.api.forms.hindsights import HindsightForm
 from service.api.forms.keys import KeyForm, RotateForm
 from service.api.forms.line_items import CreateForm
 from service.api.forms.orders import (
@@ -38,6 +39,7 @@ _FORMS: tuple[type[BaseModel], ...] = (
     KeyForm,
     RotateForm,
     CandidateForm,
+    HindsightForm,
 )
 _PROBLEM: dict[str, Any] = {
     "type": "object",
