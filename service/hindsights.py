@@ -8,7 +8,7 @@ never wait for it.
 from __future__ import annotations
 
 import asyncio
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass
 from multiprocessing import get_context
@@ -27,9 +27,10 @@ from service.store import hindsights, reading
 from service.store.database import Reading
 from service.store.hindsights import Line, Span
 
-ROWS_MAX = 100_000  # About ten seconds of another process, and 50 MiB of its memory.
+ROWS_MAX = 100_000  # About a second of another process, and 100 MiB of its memory.
 ROWS_HERE_MAX = 2_000  # A thread works so many out in the time that a process needs to start.
 WAITING_MAX = 4
+Seen = Callable[[int], None]
 LEFT_OUT = (
     "test bids, and decisions that were never logged or are pruned by now; refunds lower no cost "
     "here"
@@ -71,9 +72,16 @@ class Hindsights:
         self._orders = orders
         self._one, self._waiting = asyncio.Semaphore(1), 0
 
-    async def look(self, line_item: str, question: Question) -> dict[str, Any]:
+    async def look(
+        self, line_item: str, question: Question, seen: Seen = lambda lines: None
+    ) -> dict[str, Any]:
         """
         What the log tells of an alternative; money in nanos under names in `_nanos`.
+
+        Args:
+            line_item: Whose log.
+            question: The alternative and the span.
+            seen: Told how many lines are read, page by page.
 
         Raises:
             NotFound: No such line item.
@@ -85,7 +93,7 @@ class Hindsights:
         self._waiting += 1
         try:
             async with self._one:
-                return await self._look(line_item, question)
+                return await self._look(line_item, question, seen)
         finally:
             self._waiting -= 1
 
@@ -105,7 +113,7 @@ class Hindsights:
         found: dict[str, Any] = await self._orders.read(read)
         return {"line_item": line_item, **found}
 
-    async def _look(self, line_item: str, question: Question) -> dict[str, Any]:
+    async def _look(self, line_item: str, question: Question, seen: Seen) -> dict[str, Any]:
         facts = await self._orders.read(lambda connection: reading.facts(connection, line_item))
         config = facts.row.config
         span = _span(question, facts.row.created_ms, self._orders.database.wall_ms())
@@ -116,7 +124,7 @@ class Hindsights:
             return first, hindsights.spent_before(connection, line_item, span.from_ms)
 
         after, spent = await self._orders.read(start)
-        log = await self._read(config, span, after)
+        log = await self._read(config, span, after, seen)
         worth = Worth(
             config["value"]["ceiling"],
             config["bid_cap"],
@@ -139,9 +147,11 @@ class Hindsights:
             **await _worked_out(log.rows, ask),
         }
 
-    async def _read(self, config: Mapping[str, Any], span: Span, after: int | None) -> _Log:
+    async def _read(
+        self, config: Mapping[str, Any], span: Span, after: int | None, seen: Seen
+    ) -> _Log:
         """The log of the span, a page at a time; cut at a limit."""
-        log = _Log([], {"retracted": 0, "late_values": 0})
+        log = _Log([], dict.fromkeys(hindsights.NOTES, 0))
         while after is not None and not log.cut:
             at = after
 
@@ -156,6 +166,7 @@ class Hindsights:
                 for note in line.said.notes:
                     log.notes[note] += 1
             after, log.cut = page.end, len(log.rows) >= ROWS_MAX
+            seen(len(log.rows))
         return log
 
 

@@ -50,7 +50,7 @@ async def test_what_is_known_of_each_bid_is_counted(migrated_url: str) -> None:
         assert found["log"] == {
             **{"auctions": 5, "passes_that_no_price_would_have_changed": 0},
             **{"bids_without_word": 1, "wins_whose_value_is_still_open": 1},
-            **{"retracted": 0, "late_values": 0, "test_bids": 1},
+            **{"retracted": 0, "late_values": 0, "contradicted": 0, "test_bids": 1},
         }
         # The pass under the floor stays one at this price, so it is exact too.
         assert sure["exact"]["auctions"] == 4
@@ -80,6 +80,18 @@ async def test_retracted_words_are_not_believed_and_named(migrated_url: str) -> 
         for end, sign in (("low_nanos", 1), ("high_nanos", -1)):
             ends = [found["without_model"]["surplus"][end] for found in (before, after)]
             assert sign * ends[1] < sign * ends[0]
+
+
+async def test_two_words_of_one_auction_are_both_doubted(migrated_url: str) -> None:
+    """Lost and then won: booked late, and bounded here, since one of the two is wrong."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        (one,) = await worker.bids(1)
+        await worker.report(Report("lost", one.ticket))
+        await worker.report(Report("won", one.ticket, clearing=CLEARING))
+        found = await look(worker)
+        assert found["log"]["contradicted"] == found["log"]["bids_without_word"] == 1
+        assert found["without_model"]["bounded"]["auctions"] == 1
 
 
 async def test_values_after_the_window_count_for_nothing_and_are_named(

@@ -6,6 +6,7 @@ import argparse
 import asyncio
 import json
 from collections.abc import Mapping
+from contextlib import ExitStack
 from typing import Any
 
 from rich.console import Console
@@ -16,7 +17,7 @@ from service.api.forms.hindsights import HindsightForm
 from service.api.forms.reading import read
 from service.commands import report
 from service.connecting import open_database
-from service.hindsights import Hindsights, Question
+from service.hindsights import Hindsights, Question, Seen
 from service.ordering import Orders
 from service.settings import load
 from service.store.migrate import require_current
@@ -41,7 +42,15 @@ def run(arguments: argparse.Namespace) -> int:
     names = HindsightForm.model_fields
     given = {name: getattr(arguments, name) for name in names}
     form = read(HindsightForm, {name: one for name, one in given.items() if one is not None})
-    found = asyncio.run(_look(arguments.line_item, form.question))
+    with ExitStack() as stack:
+        bar = None if arguments.json else stack.enter_context(report.progress())
+        task = None if bar is None else bar.add_task("Lines of the log", total=None)
+
+        def seen(lines: int) -> None:
+            if bar is not None and task is not None:
+                bar.update(task, completed=lines)
+
+        found = asyncio.run(_look(arguments.line_item, form.question, seen))
     if arguments.json:
         Console().print_json(json.dumps(answers.plain(found)))
     else:
@@ -49,13 +58,12 @@ def run(arguments: argparse.Namespace) -> int:
     return 0
 
 
-async def _look(line_item: str, question: Question) -> dict[str, Any]:
+async def _look(line_item: str, question: Question, seen: Seen) -> dict[str, Any]:
     database, threads = open_database(load()), Threads(1)
     try:
         require_current(database)
-        return await Hindsights(Orders(database, threads, asyncio.Event())).look(
-            line_item, question
-        )
+        looked = Hindsights(Orders(database, threads, asyncio.Event()))
+        return await looked.look(line_item, question, seen)
     finally:
         threads.close()
         database.close()

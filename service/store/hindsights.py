@@ -25,6 +25,7 @@ from service.store.lessons import cancellations
 PAGE_ROWS = 1000
 ORDER_SLACK_MS = 60_000  # Workers log in batches, so lines stand a little out of order.
 RECENT = 2000
+RETRACTED, LATE, CONTRADICTED = NOTES = ("retracted", "late_values", "contradicted")
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,7 +40,7 @@ class Said:
         amount: What it has brought, as far as it counts.
         valued: Whether any value has come.
         paid_ms: Service time at which it was paid for; None where it was not.
-        notes: What is to be counted of it: "retracted", "late_values".
+        notes: What is to be counted of it, by names of `NOTES`.
     """
 
     result: str = "silent"
@@ -158,7 +159,11 @@ def _told(rows: list[Any], config: Mapping[str, Any], cancelled: Cancelled) -> S
         for row in rows
         if row.kind in ("won", "lost")
     ):
-        notes.add("retracted")
+        notes.add(RETRACTED)
+        result = "silent"
+    if any(row.kind == "conflict" and "said" in bodies[row.slot] for row in rows):
+        # Two words of one auction: whichever is wrong, we cannot tell.
+        notes.add(CONTRADICTED)
         result = "silent"
     paid_ms = min((row.service_ms for row in paying), default=None)
     paid = bodies.get("billed") or bodies.get("result") or {}
@@ -171,12 +176,12 @@ def _told(rows: list[Any], config: Mapping[str, Any], cancelled: Cancelled) -> S
             if VALUE not in cancelled.leaves(row.seq, row.kind):
                 untold = True
             elif paid_ms is not None and row.service_ms - paid_ms > config["value"]["window_ms"]:
-                notes.add("late_values")
+                notes.add(LATE)
             else:
                 amount, valued = amount + body["amount"] - (body["was"] or 0), True
     if untold or any(VALUE not in cancelled.leaves(r.seq, r.kind) for r in paying):
         # Somebody said that what it brought is not to be believed: it may be anything.
-        notes.add("retracted")
+        notes.add(RETRACTED)
         return Said(result, told, price, 0, False, None, tuple(sorted(notes)))
     return Said(result, told, price, amount, valued, paid_ms, tuple(sorted(notes)))
 
@@ -199,7 +204,8 @@ _PAGE = text(
 )
 _OF_BIDS = among(
     "SELECT bid, seq, slot, kind, service_ms, body FROM stream WHERE bid IN :ids"
-    " AND line_item = :line_item AND kind IN ('won', 'lost', 'void', 'billed', 'value')"
+    " AND line_item = :line_item"
+    " AND kind IN ('won', 'lost', 'void', 'billed', 'value', 'conflict')"
     " ORDER BY seq",
     of=LargeBinary,
 )

@@ -71,6 +71,18 @@ def test_no_whole_choice_earns_more_and_a_part_more_is_at_most_one(
     assert int(((best.shares > 0.0) & (best.shares < 1.0)).sum()) <= 1
 
 
+@pytest.mark.parametrize("share", [0.02, 0.2])
+def test_for_value_alone_greed_and_the_solver_agree_to_ten_digits(share: float) -> None:
+    """Whoever counts value and no cost until money ends: the dual is then value per price."""
+    rng = np.random.default_rng(17)
+    values, prices = rng.random(3000), rng.random(3000)
+    greed = programme.by_greed(values, prices, share * 3000)
+    solver = programme.by_solver(values, prices, share * 3000)
+    for one, other in ((greed.earned, solver.earned), (greed.spent, solver.spent)):
+        assert one == pytest.approx(other, rel=1e-10)
+    assert greed.dual == pytest.approx(solver.dual, rel=1e-8)
+
+
 @pytest.mark.parametrize("seed", range(3))
 @pytest.mark.parametrize("share", [0.01, 0.1, 0.5])
 def test_greed_and_the_solver_agree_to_ten_digits(seed: int, share: float) -> None:
