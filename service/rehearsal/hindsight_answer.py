@@ -13,6 +13,7 @@ from service.rehearsal.alternatives import SAYS, Alternative
 from service.rehearsal.auction_log import SILENT, Logged
 from service.rehearsal.hindsight_assumed import Line, Worth
 from service.rehearsal.hindsight_bounds import Account, Purse, Sums, shown
+from service.rehearsal.hindsight_rivals import rivals_alike
 
 WITHOUT_MODEL = (
     "holds whatever rivals and values are, if the log is true: each auction is exact where what "
@@ -81,7 +82,7 @@ def _assumed(rows: Sequence[Logged], ask: Ask, sums: Sums) -> list[dict[str, obj
     first = _line(hindsight_assumed.values_alike(rows, ask.other, ask.worth), sums.auctions)
     if ask.other.kind != "flat":
         return [first, _refused("rivals_alike", NOT_FLAT, NOT_FLAT_SAYS)]
-    joint = hindsight_assumed.rivals_alike(rows, ask.other.price, ask.worth)
+    joint = rivals_alike(rows, ask.other.price, ask.worth)
     if joint is None:
         return [first, _refused("rivals_alike", NO_AUCTIONS, "no auction told anything of rivals")]
     return [first, _line(joint, sums.auctions)]

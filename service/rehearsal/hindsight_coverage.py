@@ -17,6 +17,7 @@ from service.rehearsal.alternatives import Alternative
 from service.rehearsal.auction_log import Logged
 from service.rehearsal.hindsight_assumed import Worth
 from service.rehearsal.hindsight_bounds import Purse, summed
+from service.rehearsal.hindsight_rivals import rivals_alike
 
 CEILING, CAP, TOP = 1_000_000, 900_000, 1_000_000
 SHARE_MIN, SHARE_MAX = 0.2, 0.8
@@ -56,6 +57,10 @@ class World:
     power: float
     mean: float
     alike: bool
+
+    def share(self, price: int) -> float:
+        """The chance that a price wins."""
+        return float(min(1.0, price / TOP) ** self.power)
 
     def expected(self, price: int) -> float:
         """What a flat price earns per auction on average, in nanos."""
@@ -179,13 +184,25 @@ def _look_labelled(rng: Generator, world: World, log: list[Hidden], found: dict[
     ]
     held = found.setdefault("values alike, 95 %", Held())
     held.look(line.low, truth(known, other, [price] * len(log), 2**62), line.high)
-    joint = hindsight_assumed.rivals_alike(rows, price, worth)
+    joint = rivals_alike(rows, price, worth)
     if joint is not None:
-        rest = [one for one in known if one.told.result == "silent"]
-        sure = truth(rest, other, [price] * len(rest), 2**62)
         kind = "rivals alike, 95 %" if joint.level else "rivals alike, rough guide"
-        expected = (len(log) - len(rest)) * world.expected(price) + sure
+        expected = sum(_expected(one, world, price) for one in known)
         found.setdefault(kind, Held()).look(joint.low, expected, joint.high)
+
+
+def _expected(one: Hidden, world: World, price: int) -> float:
+    """What a flat price earns on average, given what was told of the auction."""
+    row = one.told
+    first = world.auction == "first"
+    if row.result == "lost" and price > row.bid:
+        beyond = world.expected(price) - world.expected(row.bid)
+        if first:
+            beyond = (world.mean - price) * (world.share(price) - world.share(row.bid))
+        return beyond / (1.0 - world.share(row.bid))
+    if row.result == "won" and first and price < row.bid:
+        return (one.value - price) * world.share(price) / world.share(row.bid)
+    return float(truth([one], Alternative("flat", price), [price], 2**62))
 
 
 def _look_drawn(rng: Generator, auctions: int, found: dict[str, Held]) -> None:

@@ -7,13 +7,12 @@ import pytest
 from service.rehearsal.alternatives import Alternative
 from service.rehearsal.auction_log import Logged
 from service.rehearsal.hindsight_assumed import (
-    RIVALS,
     Worth,
     mean_value,
-    rivals_alike,
     values_alike,
 )
 from service.rehearsal.hindsight_bounds import summed
+from service.rehearsal.hindsight_rivals import RIVALS, rivals_alike
 
 WORTH = Worth(1_000_000, 900_000, 1_000_000)
 
@@ -58,15 +57,40 @@ def test_rare_values_are_counted() -> None:
     assert "own error is not in it" in line.assumes
 
 
-def test_a_lower_second_price_needs_no_assumption_and_the_line_agrees() -> None:
-    """A flat quarter: on this grid it earns (1/2 - 1/8) / 4 per auction, and both say so."""
+def test_what_is_exact_needs_no_assumption() -> None:
+    """A flat quarter in second price: on this grid it earns (1/2 - 1/8) / 4, or nearly, surely."""
     rows = played("second")
     exact = summed(rows, Alternative("flat", 250_000))
     line = rivals_alike(rows, 250_000, WORTH)
     assert line is not None
-    assert exact.low == exact.high
-    assert line.low < 400 * 93_750 < line.high
-    assert line.low < exact.low < line.high
+    assert line.low == line.high == exact.low == exact.high
+    assert exact.low == pytest.approx(400 * 93_750, rel=0.05)
+
+
+def varied(many: int = 400) -> list[Logged]:
+    """The same rivals against bids of a half and of nine tenths in turn."""
+    rows = []
+    for at in range(many):
+        rival = (at * 997 % many + 1) * 1_000_000 // many
+        bid = (500_000, 900_000)[at // 2 % 2]
+        value = 1_000_000 * (at % 2)
+        won = Logged("second", bid, "won", value, value, price=rival)
+        rows.append(won if rival <= bid else Logged("second", bid, "lost", 1_000_000))
+    return rows
+
+
+def test_the_curve_beyond_a_losing_bid_narrows_what_it_would_have_won() -> None:
+    """By the higher bids it is known how often 700,000 wins what a half lost, and at what cost."""
+    rows, other = varied(), Alternative("flat", 700_000)
+    free, alike = summed(rows, other), values_alike(rows, other, WORTH)
+    line = rivals_alike(rows, 700_000, WORTH)
+    assert line is not None
+    assert free.low < alike.low < line.low < line.high < alike.high < free.high
+    # Of a hundred rivals above a half two fifths are won at 600,000 on average, for values of a
+    # half: nothing much is earned or lost by it.
+    lost = sum(row.result == "lost" and row.bid == 500_000 for row in rows)
+    exact = summed([row for row in rows if row.result == "won"], other).low
+    assert line.low < exact + lost * 0.4 * (500_000 - 600_000) < line.high
     assert RIVALS["kaplan-meier"] in line.assumes
     assert line.level == 0.95
 
@@ -95,9 +119,9 @@ def test_without_auctions_that_told_something_there_is_no_line() -> None:
 
 def test_every_source_has_its_own_curve_and_its_part_of_the_risk() -> None:
     """Two sources are no narrower together than one."""
-    rows = played("second")
-    mixed = [Logged(*_fields(row), source=("a", "b")[at % 2]) for at, row in enumerate(rows)]
-    one, two = rivals_alike(rows, 600_000, WORTH), rivals_alike(mixed, 600_000, WORTH)
+    rows = varied()
+    mixed = [Logged(*_fields(row), source=("a", "b")[at // 4 % 2]) for at, row in enumerate(rows)]
+    one, two = rivals_alike(rows, 700_000, WORTH), rivals_alike(mixed, 700_000, WORTH)
     assert one is not None
     assert two is not None
     assert two.high - two.low > one.high - one.low
