@@ -48,8 +48,7 @@ OWN: dict[str, set[str]] = {
     # Of the store only its named reads, of the decision only the form a bid takes.
     "api": STORIES
     | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
-    | {"admitting", "records", "recounting"},
-    | {"hindsights"},
+    | {"admitting", "hindsights", "records", "recounting"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 
