@@ -116,6 +116,8 @@ def _bench_reads() -> ModuleType:
     from service.commands import bench_reads
 
     return bench_reads
+
+
 def _bench_hindsight() -> ModuleType:
     from service.commands import bench_hindsight
 

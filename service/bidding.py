@@ -16,6 +16,7 @@ import numpy
 
 from service.backlog import Backlog
 from service.catalog import Catalog, Item
+from service.currencies import inside, leaving
 from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
 from service.decision.price import Passed
@@ -26,6 +27,7 @@ from service.guard.control import CONTROL, MAIN
 from service.guard.fees import NONE, Fees
 from service.guard.gate import Cleared, clear, shut
 from service.guard.hand import SliceInHand
+from service.guard.scale import Scale
 from service.guard.ticket import Ticket, TicketKeys
 from service.learner import hashing
 from service.learner.hashing import Hashed
@@ -40,6 +42,7 @@ class Answer:
     Args:
         held: The bid with its fees, and so its hold.
         draw: Which rule answered, and with what chances; None where none was asked.
+        currency: Of the bid; empty where it is the line item's own.
     """
 
     request_id: str | None
@@ -53,6 +56,7 @@ class Answer:
     snapshot: int | None = None
     held: int | None = None
     draw: Draw | None = None
+    currency: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,6 +81,7 @@ class _Offer:
 
     Args:
         worth: What the line item values the impression at, in nanos.
+        sent: The price that would leave, per impression and in nanos of the scale's currency.
     """
 
     item: Item
@@ -86,6 +91,8 @@ class _Offer:
     worth: int
     hashed: Hashed
     draw: Draw
+    scale: Scale
+    sent: int
 
 
 class Bidder:
@@ -238,6 +245,11 @@ class Bidder:
             return _pass(opportunity, reason)
         if item.ready is None:
             return _pass(opportunity, "learner_halted")
+        put = inside(opportunity, item.terms.currency, self._catalog.rates, wall_ms)
+        if put is None:
+            return _pass(opportunity, "no_rate")
+        asked, (opportunity, scale) = opportunity, put
+        least = opportunity.floor
         fees, opportunity = item.limits.fees, _gross(opportunity, item.limits.fees)
         opportunity = self._seen(item, opportunity)
         plain, draw = drawn(item, opportunity, self._leasing.hand, self._feature_key)
@@ -250,20 +262,26 @@ class Bidder:
         set_by = proposed.set_by if plain is None else CONTROL
         cleared = clear(proposed.price, set_by, item.limits, sale.floor, free)
         if isinstance(cleared, str):
-            if cleared == "under_floor" and not opportunity.test:
-                passes = self._leasing.hand.under_floor
-                passes[item.id] = passes.get(item.id, 0) + 1
             draw = replace(draw, odds=odds_below(rule, sale.floor))
-            return replace(_pass(opportunity, cleared), draw=draw)
-        net = fees.net(cleared.price)
-        if net <= 0:
+            return replace(self._refused(item, opportunity, cleared), draw=draw)
+        sent = leaving(scale, fees.net(cleared.price), asked, fixed=sale.auction == FIXED)
+        if sent <= 0:
             return _pass(opportunity, "price_rounds_to_zero")
-        cleared = Cleared(fees.gross(net), cleared.set_by)
+        # Between two currencies a bid at the floor may round to just below it.
+        if scale.worth(sent) < least:
+            return self._refused(item, opportunity, "under_floor")
+        cleared = Cleared(fees.gross(scale.held(sent)), cleared.set_by)
         worth = proposed.price if proposed.value is None else proposed.value
         # Of a price that the money cut nobody knows which one was drawn.
         if cleared.price == proposed.price:
             draw = replace(draw, odds=odds_of(rule, cleared.price))
-        return _Offer(item, sale, cleared, held, worth, opportunity.hashed, draw)
+        return _Offer(item, sale, cleared, held, worth, opportunity.hashed, draw, scale, sent)
+
+    def _refused(self, item: Item, opportunity: Opportunity, reason: str) -> Answer:
+        if reason == "under_floor" and not opportunity.test:
+            passes = self._leasing.hand.under_floor
+            passes[item.id] = passes.get(item.id, 0) + 1
+        return _pass(opportunity, reason)
 
     def _crowded_out(self, opportunity: Opportunity, held: SliceInHand | None) -> bool:
         """Whether this one needs a slice and too many wait for theirs already."""
@@ -304,11 +322,12 @@ class Bidder:
             hashing.to_bytes(offer.hashed),
             opportunity.value_hint,
             offer.draw.arm,
+            offer.scale,
         )
         return Answer(
             opportunity.request_id,
             item.id,
-            item.limits.fees.net(cleared.price),
+            offer.sent,
             None,
             self._keys.sign(ticket),
             ticket.ref,
@@ -317,6 +336,7 @@ class Bidder:
             item.snapshot,
             cleared.price,
             offer.draw,
+            offer.scale.currency,
         )
 
     def _seen(self, item: Item, opportunity: Opportunity) -> Opportunity:

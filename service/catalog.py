@@ -14,9 +14,10 @@ from service.errors import no_such_line_item
 from service.guard.control import Control
 from service.guard.fees import Fees
 from service.guard.gate import Limits
+from service.guard.scale import Rate, Rates
 from service.learner import arm_part
 from service.learner.memory import Memory, UnreadableMemory
-from service.store import changes, keys, learners, line_items
+from service.store import changes, keys, learners, line_items, rates
 from service.store.database import Database, Reading
 from service.threads import Threads
 
@@ -25,6 +26,7 @@ logger = logging.getLogger(__name__)
 MISS_S = 1.0  # How long an unknown id or key stays unknown before it is looked up again.
 # Whoever guesses ids or keys must not fill the memory with what we do not have.
 MISSES_MAX = 10_000
+_RATE = ("number", "currency", "into", "rate", "from_ms", "until_ms")
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,6 +69,7 @@ class Catalog:
         self._keys_used: set[str] = set()
         self._misses: dict[str, float] = {}
         self._looks: dict[str, asyncio.Future[list[Item]]] = {}
+        self.rates = Rates()
         self.change_seen = 0
 
     def get(self, line_item: str) -> Item | None:
@@ -116,8 +119,10 @@ class Catalog:
         return used
 
     async def start(self) -> None:
-        """Begin reading the changes at the newest: nothing is cached yet."""
+        """Begin reading the changes at the newest: nothing is cached yet but the rates."""
         self.change_seen = await self._threads.run(self._database.read, changes.latest)
+        # Read after the number, so that none posted in between is missed.
+        await self._renew_rates()
 
     async def follow(self) -> list[Item]:
         """Apply what changed since the last look; returns the line items renewed."""
@@ -131,7 +136,9 @@ class Catalog:
         if missed or any(kind == "keys" for _, kind, _ in news):
             self._keys.clear()
         # What this worker never asked for it need not load now.
-        names = {name for _, kind, name in news if kind != "keys"}
+        names = {name for _, kind, name in news if kind not in ("keys", rates.KIND)}
+        if missed or any(kind == rates.KIND for _, kind, _ in news):
+            await self._renew_rates()
         known = set(self._items)
         wanted = known if missed or changes.ALL in names else names & known
         renewed = await self.renew(sorted(wanted))
@@ -161,6 +168,13 @@ class Catalog:
             return None
         self._keys_used.add(key.id)
         return key
+
+    async def _renew_rates(self) -> None:
+        wall_ms = self._database.wall_ms()
+        rows = await self._threads.run(
+            self._database.read, lambda connection: rates.current(connection, wall_ms)
+        )
+        self.rates = Rates(Rate(**{name: row[name] for name in _RATE}) for row in rows)
 
     def _missed(self, what: str) -> bool:
         return time.monotonic() - self._misses.get(what, -MISS_S) < MISS_S

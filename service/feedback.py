@@ -20,6 +20,7 @@ from service.guard.ticket import BadTicket, Ticket, TicketKeys, bid_of, ref_of
 from service.ledger.entries import PAYING
 from service.ledger.settle import Outcome
 from service.ledger.values import Value
+from service.money import PRICE_NANOS_MAX
 from service.store import outcomes, tripwires
 from service.store.database import Database
 from service.store.decisions import quarantine
@@ -31,6 +32,7 @@ from service.threads import Threads
 logger = logging.getLogger(__name__)
 
 ROWS_MAX = 2000
+COST_MAX = 4 * PRICE_NANOS_MAX  # Beyond any bid: a currency or a unit was mistaken.
 THREAD_S = 0.25  # How long a group waits for a thread, and so for a connection.
 ANSWER_S = (
     6.0  # Longer than a statement may take: after it nobody knows, and the caller asks again.
@@ -41,7 +43,14 @@ POISON = (BrokenPromise, ValueError, LookupError, ArithmeticError, TypeError)
 
 @dataclass(frozen=True, slots=True)
 class Report:
-    """One reported outcome; prices in nanos per impression, values in nanos."""
+    """
+    One reported outcome; prices in nanos per impression, values in nanos.
+
+    Args:
+        currency: Of the prices, where the reporter names it.
+        delivered: Impressions that came of the sale, in parts of 10^9, if they were told.
+        at_the_bid: The price is not told at all: the most it can be is booked.
+    """
 
     kind: str
     ticket: str | None = None
@@ -53,6 +62,9 @@ class Report:
     corrects: str | None = None
     why: str | None = None
     at: str | None = None
+    currency: str | None = None
+    delivered: int | None = None
+    at_the_bid: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -243,8 +255,12 @@ class Feedback:
             return Receipt(report.ref, "refused", "no_such_line_item", foreign=True)
         if report.ref is not None and report.ref != ticket.ref:
             return Receipt(report.ref, "refused", "ref_of_another_bid", line_item=ticket.line_item)
-        if report.kind in PAYING and _price(report, ticket) is None:
+        if report.currency is not None and report.currency != ticket.scale.currency:
+            return Receipt(ticket.ref, "refused", "other_currency", line_item=ticket.line_item)
+        if report.kind in PAYING and (price := _price(report, ticket)) is None:
             return Receipt(ticket.ref, "refused", "no_price", line_item=ticket.line_item)
+        if report.kind in PAYING and price is not None and price > COST_MAX:
+            return Receipt(ticket.ref, "refused", "bad_price", line_item=ticket.line_item)
         # Nothing was held for it, so there is nothing to book and nothing to learn.
         if ticket.test:
             return Receipt(ticket.ref, "recorded", test=True)
@@ -260,7 +276,7 @@ class Feedback:
             ticket.price,
             ticket.source,
             _price(report, ticket) if report.kind in PAYING else None,
-            None if report.to_win is None else ticket.fees.gross(report.to_win),
+            _to_win(report, ticket),
             report.why,
             report.at,
             ticket.auction,
@@ -297,9 +313,20 @@ class Feedback:
 
 def _price(report: Report, ticket: Ticket) -> int | None:
     """What it cost, fees included; who pays what he bids need not be told."""
-    if report.clearing is None and report.kind == "won" and ticket.auction != "second":
+    bid_is_paid = report.kind == "won" and ticket.auction != "second"
+    if report.clearing is None and (bid_is_paid or report.at_the_bid):
         return ticket.price
-    return None if report.clearing is None else ticket.fees.gross(report.clearing)
+    if report.clearing is None:
+        return None
+    return ticket.fees.gross(ticket.scale.paid(report.clearing, report.delivered))
+
+
+def _to_win(report: Report, ticket: Ticket) -> int | None:
+    """The least cost that would have won; what no ledger can hold says nothing."""
+    if report.to_win is None:
+        return None
+    cost = ticket.fees.gross(ticket.scale.paid(report.to_win))
+    return cost if cost <= COST_MAX else None
 
 
 def _read_ref(report: Report) -> Booking | Receipt:

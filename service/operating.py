@@ -32,6 +32,7 @@ from service.hindsights import Hindsights
 from service.ledger.entries import Entry
 from service.ordering import Orders, repeat_of
 from service.quarantining import Quarantining
+from service.rating import Rating
 from service.records import Records
 from service.showing import show, show_curve
 from service.store import changes, epochs, freezes, learners, line_items, reading
@@ -85,6 +86,7 @@ class Operator:
         self.admitting = Admitting(orders, catalog)
         self.records = Records(database, threads)
         self.hindsights = Hindsights(orders)
+        self.rating = Rating(orders)
 
     async def key_for(self, bearer: str) -> Key | None:
         """The live key behind a bearer text, or None."""

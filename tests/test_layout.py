@@ -20,6 +20,7 @@ SHARED = {
         "catalog",
         "configuring",
         "connecting",
+        "currencies",
         "leasing",
         "patience",
         "showing",
@@ -28,6 +29,17 @@ SHARED = {
     *("records", "recounting", "previewing", "winding"),
     *("winding", "tripwiring", "foreseeing", "posting"),
     *("winding", "drawing", "hindsights"),
+    *(
+        "correcting",
+        "ordering",
+        "pulse",
+        "quarantining",
+        "rating",
+        "spending",
+        "teaching",
+        "threads",
+    ),
+    "winding",
 }
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "tripwires", "rehearsal"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}

@@ -14,6 +14,7 @@ from service.api import (
     line_items,
     orders,
     outcomes,
+    rates,
     records,
     tripwires,
     winding,
@@ -31,6 +32,7 @@ ROUTERS = (
     records.router,
     tripwires.router,
     hindsights.router,
+    rates.router,
     health.router,
     documentation.router,
 )

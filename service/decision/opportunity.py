@@ -27,6 +27,9 @@ class Opportunity:
         auction: Kind of auction; None for the line item's.
         price: What a fixed-price sale asks, in nanos per impression.
         line_items: Those that compete for it, if several may.
+        currencies: In which the price may be named, the dearest wish first; empty where it is
+            the line item's own. Floor and price are then in `floor_currency`.
+        multiplier: Impressions that the sale is expected to bring, in parts of 10^9.
         hashed: The features under the key of the database, where the line item reads them.
     """
 
@@ -41,4 +44,7 @@ class Opportunity:
     auction: str | None = None
     price: int | None = None
     line_items: tuple[str, ...] = ()
+    currencies: tuple[str, ...] = ()
+    floor_currency: str = ""
+    multiplier: int = 10**9
     hashed: Hashed = ()

@@ -15,9 +15,11 @@ from hashlib import blake2b, sha256
 
 from service.guard.control import CONTROL, MAIN
 from service.guard.fees import NONE, Fees
+from service.guard.scale import PLAIN, Scale
 
 TEXT_MAX = 512
 FORM = 1
+SCALED_FORM = 2  # With a scale at its end; all others stay as they always were.
 MAC_BYTES = 16
 KEY_ID_BYTES = 4
 TEST, OF_CONTROL = 1, 8
@@ -27,6 +29,7 @@ HINT_BYTES = 8
 # form, key id, incarnation, slice, counter, price, floor, snapshot, day, share, flat, flags
 # Fixed widths and lengths before texts: a ticket is parsed without guessing, or not at all.
 _HEAD = struct.Struct(">B4s8s16sIqqqIIqB")
+_SCALE = struct.Struct(">3sqq")
 
 
 class BadTicket(ValueError):
@@ -50,6 +53,7 @@ class Ticket:
         features: What is known of the impression, hashed; at most 255 bytes.
         hint: The caller's own prediction of its value, in nanos.
         arm: Of a control share: which rule bid.
+        scale: By which prices that come back become costs.
     """
 
     line_item: str
@@ -67,6 +71,7 @@ class Ticket:
     features: bytes = b""
     hint: int | None = None
     arm: str = MAIN
+    scale: Scale = PLAIN
 
     @property
     def bid(self) -> bytes:
@@ -107,7 +112,7 @@ class TicketKeys:
     def sign(self, ticket: Ticket) -> str:
         """The text of a ticket."""
         head = _HEAD.pack(
-            FORM,
+            FORM if ticket.scale == PLAIN else SCALED_FORM,
             self._signing,
             ticket.incarnation,
             ticket.slice,
@@ -133,7 +138,8 @@ class TicketKeys:
             BadTicket: Anything else.
         """
         raw = _bytes(text) if len(text) <= TEXT_MAX else b""
-        if len(raw) < _HEAD.size + 4 + MAC_BYTES or raw[0] != FORM or _text(raw) != text:
+        known = len(raw) >= _HEAD.size + 4 + MAC_BYTES and raw[0] in (FORM, SCALED_FORM)
+        if not known or _text(raw) != text:
             raise BadTicket("not a ticket")
         body, mac = raw[:-MAC_BYTES], raw[-MAC_BYTES:]
         key = self._keys.get(body[1 : 1 + KEY_ID_BYTES])
@@ -145,8 +151,11 @@ class TicketKeys:
 
 def _unpacked(body: bytes) -> Ticket:
     fields = _HEAD.unpack_from(body)
-    _, _, incarnation, slice_id, counter, price, floor, snapshot, day, share, flat, flags = fields
-    line_item, source, features, hint = _pieces(body[_HEAD.size :], 4)
+    form, _, incarnation, slice_id, counter, price, floor, snapshot, day, share, flat, flags = (
+        fields
+    )
+    pieces = _pieces(body[_HEAD.size :], 5 if form == SCALED_FORM else 4)
+    line_item, source, features, hint = pieces[:4]
     texts = line_item.decode("ascii"), source.decode("ascii")
     place = (*texts, slice_id, counter, price, snapshot, day, incarnation)
     auctions = [name for name, flag in AUCTIONS.items() if flag == flags & ~(TEST | OF_CONTROL)]
@@ -155,7 +164,13 @@ def _unpacked(body: bytes) -> Ticket:
     said = int.from_bytes(hint) if hint else None
     sold = (auctions[0], Fees(share, flat))
     arm = CONTROL if flags & OF_CONTROL else MAIN
-    return Ticket(*place, bool(flags & TEST), floor, *sold, features, said, arm)
+    scale = _scale(pieces[4]) if form == SCALED_FORM else PLAIN
+    return Ticket(*place, bool(flags & TEST), floor, *sold, features, said, arm, scale)
+
+
+def _scale(packed: bytes) -> Scale:
+    currency, rate, multiplier = _SCALE.unpack(packed)
+    return Scale(currency.rstrip(b"\0").decode("ascii"), rate, multiplier)
 
 
 def _pieces(packed: bytes, count: int) -> list[bytes]:
@@ -169,7 +184,12 @@ def _pieces(packed: bytes, count: int) -> list[bytes]:
 
 def _facts(ticket: Ticket) -> bytes:
     hint = b"" if ticket.hint is None else ticket.hint.to_bytes(HINT_BYTES)
-    return _piece(ticket.features) + _piece(hint)
+    facts = _piece(ticket.features) + _piece(hint)
+    if ticket.scale == PLAIN:
+        return facts
+    scale = ticket.scale
+    packed = _SCALE.pack(scale.currency.encode("ascii"), scale.rate, scale.multiplier)
+    return facts + _piece(packed)
 
 
 def _packed(text: str) -> bytes:

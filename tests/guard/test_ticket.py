@@ -10,6 +10,7 @@ from hypothesis import given
 from hypothesis import strategies as some
 
 from service.guard.fees import Fees
+from service.guard.scale import PLAIN, Scale
 from service.guard.ticket import TEXT_MAX, BadTicket, Ticket, TicketKeys, bid_of, ref_of
 
 KEYS = TicketKeys([b"first invented key", b"second invented key"])
@@ -41,6 +42,13 @@ tickets = some.builds(
     floor=some.integers(0, 2**62),
     features=some.binary(max_size=99),
     hint=some.none() | some.integers(0, 2**64 - 1),
+    scale=some.just(PLAIN)
+    | some.builds(
+        Scale,
+        some.sampled_from(["", "EUR", "USD"]),
+        some.integers(1, 2**62),
+        some.integers(1, 2**62),
+    ),
 )
 
 HOSTILE = [
@@ -196,3 +204,16 @@ def test_every_field_is_signed() -> None:
     signatures = {KEYS.sign(ticket)[-21:] for ticket in [TICKET, *others]}
 
     assert len(signatures) == len(others) + 1
+
+
+# Signed by the release before scales, under the first invented key; no field was left out.
+OF_THE_FIRST_RELEASE = (
+    "AXZJi-xpbmNhcm5hdAABAgMEBQYHCAkKCwwNDg8AAAAHAAAAAAAS1ocAAAAAAAAAAAAAAAAAAAMsAAtK"
+    "bwAAAAAAAAAAAAAAAAASYWxwaW5lLXNlYXNvbi1wYXNzB2RlZmF1bHQAAIReokOzKR3pgWDa9wRGSPI"
+)
+
+
+def test_a_ticket_of_the_first_release_still_verifies() -> None:
+    """Bids that were open during an upgrade settle, and a plain ticket has not changed a byte."""
+    assert KEYS.verify(OF_THE_FIRST_RELEASE) == TICKET
+    assert KEYS.sign(TICKET) == OF_THE_FIRST_RELEASE

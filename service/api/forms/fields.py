@@ -67,6 +67,14 @@ def _share(given: object) -> int:
     return parts
 
 
+def _rate(given: object) -> int:
+    """Parts of 10^9 too; beyond a thousand million it is a slip of the pen."""
+    parts = money.nanos(given)
+    if parts > 10**18:
+        raise money.NotMoney("out of range")
+    return parts
+
+
 def _instant(text: object) -> str:
     return time_text(milliseconds(text))
 
@@ -158,6 +166,11 @@ FeeCpm = Annotated[
     int,
     PlainValidator(_money(money.price, 0)),
     _schema("A CPM price, at most six decimals.", "0.15"),
+]
+Rate = Annotated[
+    int,
+    PlainValidator(_money(_rate, 1)),
+    _schema("What one unit costs, above 0 and at most 10^9, at most nine decimals.", "0.92"),
 ]
 Share = Annotated[
     int,

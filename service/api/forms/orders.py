@@ -6,7 +6,16 @@ from typing import Annotated, Literal
 
 from pydantic import Field, PlainValidator, WithJsonSchema, model_validator
 
-from service.api.forms.fields import Amount, Moment, Printable, Reason, Ref, SeenValue
+from service.api.forms.fields import (
+    Amount,
+    Currency,
+    Moment,
+    Printable,
+    Rate,
+    Reason,
+    Ref,
+    SeenValue,
+)
 from service.api.forms.reading import StrictForm
 from service.api.times import milliseconds
 
@@ -87,3 +96,13 @@ class ReconcileForm(OrderForm):
     """What was spent in all, by the books of those who were paid."""
 
     spent: SeenValue
+
+
+class RateForm(OrderForm):
+    """What one unit of a currency costs in another, from a moment on or at once."""
+
+    currency: Currency
+    into: Currency
+    rate: Rate
+    from_at: Moment | None = None
+    until_at: Moment | None = None

@@ -14,6 +14,7 @@ from service.api.forms.keys import KeyForm, RotateForm
 from service.api.forms.line_items import CreateForm
 from service.api.forms.orders import (
     OrderForm,
+    RateForm,
     ReconcileForm,
     ResetForm,
     RetractForm,
@@ -40,6 +41,7 @@ _FORMS: tuple[type[BaseModel], ...] = (
     RotateForm,
     CandidateForm,
     HindsightForm,
+    RateForm,
 )
 _PROBLEM: dict[str, Any] = {
     "type": "object",
