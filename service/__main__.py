@@ -158,6 +158,10 @@ def _tripwires_try() -> ModuleType:
     from service.commands import tripwires_try
 
     return tripwires_try
+def _openrtb_explain() -> ModuleType:
+    from service.commands import openrtb_explain
+
+    return openrtb_explain
 
 
 COMMANDS: dict[str, tuple[str, Load]] = {
@@ -191,6 +195,8 @@ DRILLS: dict[str, tuple[str, Load]] = {
 }
 TRIPWIRES: dict[str, tuple[str, Load]] = {
     "try": ("when rules would have fired on recorded history; changes nothing", _tripwires_try),
+OPENRTB: dict[str, tuple[str, Load]] = {
+    "explain": ("say step by step what a mapping makes of a bid request", _openrtb_explain),
 }
 
 
@@ -220,6 +226,7 @@ def _parser(words: list[str]) -> argparse.ArgumentParser:
         ("bench", "measure the service against something outside it", BENCHES),
         ("drill", "break something on purpose and check what was promised", DRILLS),
         ("tripwires", "rules that freeze or warn by themselves", TRIPWIRES),
+        ("openrtb", "try a mapping of OpenRTB requests without a server", OPENRTB),
     ):
         kinds = parts.add_parser(family, help=text, description=text).add_subparsers(
             dest="kind", required=True

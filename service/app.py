@@ -21,9 +21,11 @@ from service.bidding import Bidder, Clocks
 from service.catalog import Catalog
 from service.clerk import Clerk, Habits
 from service.connecting import open_database
+from service.exchanging import Exchanging
 from service.feedback import Feedback, Room
 from service.guard.ticket import TicketKeys
 from service.leasing import Leasing
+from service.openrtb import mapping
 from service.operating import Operator
 from service.patience import Patience
 from service.posting import Receiver
@@ -48,6 +50,7 @@ class Stories:
     bidder: Bidder
     feedback: Feedback
     operator: Operator
+    exchange: Exchanging
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,6 +90,7 @@ def create_app(settings: Settings, post: Post | None = None) -> FastAPI:
         title="Bidkeel", lifespan=lifespan, docs_url=None, redoc_url=None, openapi_url=None
     )
     app.state.settings = settings
+    app.state.sources = sources_of(settings)
     install(app)
     return app
 
@@ -151,6 +155,16 @@ async def on_duty(loops: list[Coroutine[Any, Any, None]]) -> AsyncIterator[None]
     await asyncio.gather(*tasks, return_exceptions=True)
 
 
+def sources_of(settings: Settings) -> mapping.Sources:
+    """
+    The exchanges that speak the open standard, by name.
+
+    Raises:
+        Unsafe: Their mapping cannot be read or has faults.
+    """
+    return {} if settings.openrtb_mapping is None else mapping.load(settings.openrtb_mapping)
+
+
 def clerk_of(settings: Settings, database: Database, threads: Threads) -> Clerk:
     """The clerk under these settings."""
     habits = Habits(
@@ -197,7 +211,8 @@ def _build(
     counting = Patience(database, threads).every(FLUSH_S, operator.admitting.flush)
     refusals = Patience(database, threads).every(REFUSALS_S, feedback.keep_refusals)
     loops = [pulse.run(), leasing.run(), feedback.run(), counting, refusals, *upkeep.duties()]
-    return Stories(bidder, feedback, operator), upkeep, loops
+    exchange = Exchanging(bidder, feedback)
+    return Stories(bidder, feedback, operator, exchange), upkeep, loops
 
 
 def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:

@@ -8,6 +8,7 @@ from __future__ import annotations
 import difflib
 import os
 from collections.abc import Mapping
+from pathlib import Path
 from typing import Annotated, Literal, Self
 from urllib.parse import urlsplit
 
@@ -232,6 +233,11 @@ class Settings(BaseSettings):
         "up to an hour, 12 of them take about two hours.",
     )
 
+    openrtb_mapping: Path | None = Field(
+        None,
+        description="TOML or JSON file that says what the bid requests of each OpenRTB exchange "
+        "mean. Read at start and checked whole. Empty: no exchange is spoken with.",
+    )
     ticket_keys: SecretStr = Field(
         SecretStr(""),
         description="Secret keys of tickets, comma between them, 32 characters or more each: the "

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import pytest
 
 from service import money
@@ -12,7 +14,7 @@ from tests.builders import PRICE, Worker, working
 pytestmark = pytest.mark.anyio
 
 ALWAYS = (0, None)
-USD = {"currencies": ("USD",), "floor_currency": "USD", "source": "north"}
+USD: dict[str, Any] = {"currencies": ("USD",), "floor_currency": "USD", "source": "north"}
 
 
 async def post(worker: Worker, rate: str, currency: str = "USD", **key: str) -> None:
@@ -130,7 +132,7 @@ async def test_several_impressions_are_held_together(migrated_url: str) -> None:
     async with working(migrated_url) as worker:
         await worker.create()
         four = 4 * 10**9
-        wish = {"currencies": ("EUR",), "floor_currency": "EUR", "multiplier": four}
+        wish: dict[str, Any] = {"currencies": ("EUR",), "floor_currency": "EUR", "multiplier": four}
         answer = await worker.bid(**wish, floor=PRICE // 4)
         assert answer.bid == PRICE // 4
         assert (await worker.bid(**wish, floor=PRICE // 4 + 1)).reason == "under_floor"

@@ -42,7 +42,7 @@ async def read_object(request: Request, bytes_max: int) -> dict[str, object]:
         BadJson: Not JSON, a key twice, NaN or Infinity, or no object at the top.
     """
     _check_headers(request, bytes_max)
-    return parse_object(await _read_bytes(request, bytes_max))
+    return parse_object(await read_bytes(request, bytes_max))
 
 
 def parse_object(body: bytes) -> dict[str, object]:
@@ -75,7 +75,13 @@ def _check_headers(request: Request, bytes_max: int) -> None:
         raise _too_large(bytes_max)
 
 
-async def _read_bytes(request: Request, bytes_max: int) -> bytes:
+async def read_bytes(request: Request, bytes_max: int) -> bytes:
+    """
+    The bytes of a body as they came.
+
+    Raises:
+        TooLarge: More than `bytes_max` of them.
+    """
     pieces, length = [], 0
     async for piece in request.stream():
         # Counted as it comes: the announced length may be missing, or a lie.

@@ -12,6 +12,7 @@ from service.api import (
     hindsights,
     keys,
     line_items,
+    openrtb,
     orders,
     outcomes,
     rates,
@@ -33,6 +34,7 @@ ROUTERS = (
     tripwires.router,
     hindsights.router,
     rates.router,
+    openrtb.router,
     health.router,
     documentation.router,
 )

@@ -8,6 +8,7 @@ from starlette.requests import Request
 
 from service.bidding import Bidder
 from service.errors import StoreAway
+from service.exchanging import Exchanging
 from service.feedback import Feedback
 from service.operating import Operator
 
@@ -38,6 +39,9 @@ class Stories(Protocol):
 
     @property
     def operator(self) -> Operator: ...
+
+    @property
+    def exchange(self) -> Exchanging: ...
 
 
 def started(request: Request) -> bool:

@@ -12,7 +12,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
-from service.app import Post, new_worker
+from service.app import Post, new_worker, sources_of
 from service.commands.child import serve
 from service.commands.crew import Berth, Crew, listen
 from service.commands.logs import log_config
@@ -63,6 +63,8 @@ def _command(settings: Settings) -> None:
 
 def prepare(settings: Settings) -> None:
     """On an empty database: migrate, make an admin key and show it, this once."""
+    # Before anything is made, since whoever started us is there to mend it.
+    sources_of(settings)
     database = open_database(settings)
     try:
         if is_empty(database):

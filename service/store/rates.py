@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 from sqlalchemy import text
 
 from service.store.database import Reading, Writing
@@ -43,7 +45,7 @@ def add(
     )
 
 
-def current(connection: Reading | Writing, wall_ms: int) -> list[dict[str, object]]:
+def current(connection: Reading | Writing, wall_ms: int) -> list[dict[str, Any]]:
     """Of each pair the rate that counts now and those that are still to come."""
     # One that another has followed counts no more, whatever its own end; nothing is deleted.
     rows = connection.execute(

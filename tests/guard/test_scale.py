@@ -59,7 +59,7 @@ def test_costs_round_half_to_even(price_nanos: int, rate: int, multiplier: int, 
 
 
 def test_only_what_was_asked_for_is_paid() -> None:
-    """Fewer impressions than expected cost less; more, none or fewer than none were never bought."""
+    """Fewer impressions than expected cost less; more or none at all were never bought."""
     scale = Scale("USD", WHOLE, 10 * WHOLE)
     told = (4 * WHOLE, 10 * WHOLE, 11 * WHOLE, 0, -1, None)
     assert [scale.paid(100, count) for count in told] == [400, 1000, 1000, 1000, 1000, 1000]
