@@ -61,8 +61,11 @@ def multiplier_of(imp: dict[str, Any]) -> int:
     count = _decimal(found)
     if not 0 < count <= MULTIPLIER_MAX:
         raise BadFloor("no multiplier")
-    # Up, since the hold goes by it.
-    return money.nanos_rounded(count, money.UP)
+    try:
+        # Up, since the hold goes by it.
+        return money.nanos_rounded(count, money.UP)
+    except money.NotMoney as error:
+        raise BadFloor("no multiplier") from error
 
 
 def _by_time(place: object, duration_s: int | None) -> int | None:
