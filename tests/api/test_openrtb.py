@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 import gzip
 import json
 import logging
@@ -79,6 +80,14 @@ async def one_bid(client: httpx.AsyncClient, body: dict[str, Any]) -> dict[str, 
     assert faults(answer.json(), body) == []
     (bid,) = bids_of(answer.json())
     return dict(bid)
+
+
+async def rated(client: httpx.AsyncClient, body: dict[str, Any]) -> httpx.Response:
+    """The answer once the rate has reached the worker; a loop that is kept busy hears late."""
+    async with asyncio.timeout(20):
+        while (answer := await client.post(BIDS, json=body)).status_code == 204:
+            await asyncio.sleep(0.02)
+    return answer
 
 
 def filled(url: str, **macros: str) -> str:
@@ -274,10 +283,7 @@ async def test_a_rate_opens_another_currency(migrated_url: str, tmp_path: Path) 
         assert (answer.status_code, answer.json()["rate"]) == (201, "0.80")
         (rate,) = (await client.get("/v1/rates")).json()["rates"]
         assert (rate["currency"], rate["into"], rate["until_at"]) == ("USD", "EUR", None)
-        for _ in range(200):
-            got = await client.post(BIDS, json=dollars)
-            if got.status_code == 200:
-                break
+        got = await rated(client, dollars)
         (bid,) = bids_of(got.json())
         assert (bid["price"], got.json()["cur"]) == (2.5, "USD")
         await client.get(filled(bid["nurl"], PRICE="1.25", CURRENCY="USD"))
@@ -288,7 +294,7 @@ async def test_a_rate_opens_another_currency(migrated_url: str, tmp_path: Path) 
 
 
 async def test_several_imps_share_one_currency(migrated_url: str, tmp_path: Path) -> None:
-    """The first bid decides; what cannot be bid in it is left alone, and every imp has its own id."""
+    """The first bid decides, and what cannot be bid in it is left alone."""
     lines = ({"when": {"imp.tagid": "a"}}, {"line_item": "other", "when": {"imp.tagid": "b"}})
     async with serving(migrated_url, tmp_path, *lines) as client:
         other = GARDEN | {"id": "other", "currency": "USD"}
@@ -346,7 +352,7 @@ def personal() -> dict[str, Any]:
     }
     body["regs"] = {"gdpr": 1, "us_privacy": CANARY, "gpp": CANARY, "ext": {"x": CANARY}}
     body["site"] |= {"page": f"https://x.example/?who={CANARY}", "ref": CANARY, "search": CANARY}
-    body["imp"][0] |= {"tagid": "slot", "ext": {"id": CANARY}}
+    body["imp"][0] |= {"tagid": "slot", "bidfloor": 0, "ext": {"id": CANARY}}
     body["ext"] = {CANARY: CANARY}
     return dict(body)
 
@@ -415,10 +421,9 @@ async def test_no_spoilt_request_is_an_error_of_ours(migrated_url: str, tmp_path
     features = {str(n): name for n, name in enumerate(["imp.size", "site.cat", "app.ver", "at"])}
     generator, statuses = np.random.default_rng(8), set()
     async with serving(migrated_url, tmp_path, *lines, features=features) as client:
-        await client.post(
-            "/v1/rates",
-            json={"currency": "USD", "into": "EUR", "rate": "0.9", "reason": "A test."},
-        )
+        wish = {"currency": "USD", "into": "EUR", "rate": "0.9", "reason": "A test."}
+        assert (await client.post("/v1/rates", json=wish)).status_code == 201
+        await rated(client, published.APP | {"tmax": 4000})
         for turn in range(400):
             kinds = list(published.REQUESTS.values())
             body = spoil(kinds[turn % len(kinds)] | {"tmax": 4000}, generator)
