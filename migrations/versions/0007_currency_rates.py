@@ -3,7 +3,7 @@
 from alembic import op
 
 revision = "0007"
-down_revision = "0001"
+down_revision = "0006"
 
 TABLES = """
 CREATE TABLE currency_rate (

@@ -2,107 +2,31 @@
 
 from __future__ import annotations
 
-import asyncio
 import gzip
 import json
-import logging
-from collections.abc import AsyncIterator
-from contextlib import asynccontextmanager
 from pathlib import Path
 from typing import Any
 from urllib.parse import urlsplit
 
-import httpx
-import numpy as np
 import pytest
-from sqlalchemy import create_engine, inspect, text
 
-from service.app import create_app
-from service.connecting import open_database
-from service.settings import load
-from service.store import keys
-from service.store.audit import audit
+from tests.api.exchanged import BIDS, EUROS, GARDEN, filled, one_bid, rated, serving, spent
 from tests.openrtb import published
-from tests.openrtb.sources import LINE, SOURCE, request
+from tests.openrtb.sources import request
 from tests.openrtb.standard import bids_of, faults
 
 pytestmark = pytest.mark.anyio
 
-BIDS = "/openrtb/north/bids"
-GARDEN: dict[str, Any] = {
-    "id": "garden",
-    "name": "An invented garden",
-    "currency": "EUR",
-    "budget": "5.00",
-    "bid_cap_cpm": 8,
-    "value": {"ceiling": "0.10", "arrival": "once"},
-    "policy": {"method": "flat", "price_cpm": 2},
-}
-EUROS = {"cur": ["EUR"], "tmax": 5000}
-
-
-@asynccontextmanager
-async def serving(
-    url: str, directory: Path, *lines: dict[str, Any], **source: Any
-) -> AsyncIterator[httpx.AsyncClient]:
-    """The service with one line item and a mapping, before a caller who may do everything."""
-    built = [LINE | line for line in lines or ({},)]
-    told = {"sources": {"north": SOURCE | source | {"line_items": built}}}
-    file = directory / "mapping.json"
-    file.write_text(json.dumps(told), "utf-8")
-    patient = {"BIDKEEL_DEADLINE_MS": "5000", "BIDKEEL_DEADLINE_MS_MAX": "5000"}
-    quick = {"BIDKEEL_CHANGE_POLL_MS": "20", "BIDKEEL_TICK_S": "1"}
-    named = {"BIDKEEL_DATABASE_URL": url, "BIDKEEL_OPENRTB_MAPPING": str(file)}
-    settings = load({**named, **patient, **quick})
-    database = open_database(settings)
-    _, bearer = keys.add(database, "tests", ["admin"])
-    database.close()
-    app = create_app(settings)
-    transport = httpx.ASGITransport(app=app, raise_app_exceptions=False)
-    headers = {"Authorization": f"Bearer {bearer}"}
-    async with (
-        app.router.lifespan_context(app),
-        httpx.AsyncClient(transport=transport, base_url="http://test", headers=headers) as client,
-    ):
-        assert (await client.post("/v1/line-items", json=GARDEN)).status_code == 201
-        yield client
-
-
-async def spent(client: httpx.AsyncClient, name: str = "garden") -> str:
-    """What a line item has spent, as people read it."""
-    return str((await client.get(f"/v1/line-items/{name}/state")).json()["money"]["spent"])
-
-
-async def one_bid(client: httpx.AsyncClient, body: dict[str, Any]) -> dict[str, Any]:
-    """The one bid on a request."""
-    answer = await client.post(BIDS, json=body)
-    assert answer.status_code == 200, answer.text
-    assert faults(answer.json(), body) == []
-    (bid,) = bids_of(answer.json())
-    return dict(bid)
-
-
-async def rated(client: httpx.AsyncClient, body: dict[str, Any]) -> httpx.Response:
-    """The answer once the rate has reached the worker; a loop that is kept busy hears late."""
-    async with asyncio.timeout(20):
-        while (answer := await client.post(BIDS, json=body)).status_code == 204:
-            await asyncio.sleep(0.02)
-    return answer
-
-
-def filled(url: str, **macros: str) -> str:
-    """A notice's address below our own host, with its macros replaced and the rest empty."""
-    for name, value in macros.items():
-        url = url.replace(f"${{AUCTION_{name}}}", value)
-    while "${" in url:
-        url = url[: url.index("${")] + url[url.index("}") + 1 :]
-    parts = urlsplit(url)
-    return f"{parts.path}?{parts.query}"
-
 
 async def test_an_answer_is_what_the_standard_asks(migrated_url: str, tmp_path: Path) -> None:
     """Every member that the mapping knows, our notices with their macros, and no other."""
-    line = {"sizes": ["300x250"], "cid": "c1", "cat": ["IAB3"], "attr": [1], "exp_s": 60}
+    line: dict[str, Any] = {
+        "sizes": ["300x250"],
+        "cid": "c1",
+        "cat": ["IAB3"],
+        "attr": [1],
+        "exp_s": 60,
+    }
     line |= {"adm": "<img src='[[billed_url]]'>", "deals": "any"}
     async with serving(migrated_url, tmp_path, line, seat="s1") as client:
         body = request({"pmp": {"deals": [{"id": "d1", "bidfloorcur": "EUR"}]}}, **EUROS)
@@ -295,7 +219,10 @@ async def test_a_rate_opens_another_currency(migrated_url: str, tmp_path: Path) 
 
 async def test_several_imps_share_one_currency(migrated_url: str, tmp_path: Path) -> None:
     """The first bid decides, and what cannot be bid in it is left alone."""
-    lines = ({"when": {"imp.tagid": "a"}}, {"line_item": "other", "when": {"imp.tagid": "b"}})
+    lines: tuple[dict[str, Any], ...] = (
+        {"when": {"imp.tagid": "a"}},
+        {"line_item": "other", "when": {"imp.tagid": "b"}},
+    )
     async with serving(migrated_url, tmp_path, *lines) as client:
         other = GARDEN | {"id": "other", "currency": "USD"}
         assert (await client.post("/v1/line-items", json=other)).status_code == 201
@@ -310,7 +237,7 @@ async def test_several_imps_share_one_currency(migrated_url: str, tmp_path: Path
 @pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
 async def test_the_best_of_several_line_items_bids(migrated_url: str, tmp_path: Path) -> None:
     """One bid and one hold; the one that is worth less stands back."""
-    lines = ({}, {"line_item": "rich", "crid": "creative-2"})
+    lines: tuple[dict[str, Any], ...] = ({}, {"line_item": "rich", "crid": "creative-2"})
     async with serving(migrated_url, tmp_path, *lines) as client:
         rich = GARDEN | {"id": "rich", "policy": {"method": "flat", "price_cpm": 3}}
         await client.post("/v1/line-items", json=rich)
@@ -328,116 +255,3 @@ async def test_a_line_item_that_is_not_there_is_said_once(
             assert (await client.post(BIDS, json=request(**EUROS))).status_code == 204
     told = [r.getMessage() for r in caplog.records if "no_such_line_item" in r.getMessage()]
     assert told == ["the mapping of north cannot be kept to: no_such_line_item"]
-
-
-CANARY = "canary-7d21"
-
-
-def personal() -> dict[str, Any]:
-    """A request with something to betray in every personal place, and in the private ones."""
-    body = json.loads(json.dumps(published.EXPANDABLE)) | EUROS
-    body["user"] = {
-        **{name: CANARY for name in ("id", "buyeruid", "keywords", "gender", "consent")},
-        "yob": 1990,
-        "data": [{"id": CANARY, "segment": [{"id": CANARY, "value": CANARY}]}],
-        "eids": [{"source": CANARY, "uids": [{"id": CANARY}]}],
-        "ext": {"consent": CANARY, "eids": [{"source": CANARY}]},
-        "geo": {"lat": 47.1234567, "lon": 8.7654321, "zip": CANARY, "city": CANARY},
-    }
-    body["device"] = {
-        **{name: CANARY for name in ("ua", "ip", "ipv6", "ifa", "didsha1", "dpidmd5", "macsha1")},
-        "geo": {"lat": 47.1234567, "lon": 8.7654321, "zip": CANARY, "city": CANARY},
-        "devicetype": 4,
-        "ext": {"id": CANARY},
-    }
-    body["regs"] = {"gdpr": 1, "us_privacy": CANARY, "gpp": CANARY, "ext": {"x": CANARY}}
-    body["site"] |= {"page": f"https://x.example/?who={CANARY}", "ref": CANARY, "search": CANARY}
-    body["imp"][0] |= {"tagid": "slot", "bidfloor": 0, "ext": {"id": CANARY}}
-    body["ext"] = {CANARY: CANARY}
-    return dict(body)
-
-
-async def test_nothing_personal_is_kept_or_said(
-    migrated_url: str, tmp_path: Path, caplog: pytest.LogCaptureFixture
-) -> None:
-    """Not in the answer, the explanation, the log or any column, from the bid to its billing."""
-    caplog.set_level(logging.DEBUG)
-    async with serving(migrated_url, tmp_path) as client:
-        answers = [
-            await client.post("/openrtb/north/explain", json=personal()),
-            await client.post(BIDS, json=personal()),
-            await client.post(BIDS, content=json.dumps(personal()).encode()[:-1]),
-            await client.post(BIDS, json=personal() | {"imp": CANARY}),
-        ]
-        (bid,) = bids_of(answers[1].json())
-        for url in (filled(bid["nurl"], PRICE="1"), filled(bid["burl"], PRICE="1")):
-            answers.append(await client.get(f"{url}&who={CANARY}", headers={"X-Device-IP": CANARY}))
-        answers.append(await client.get(f"/openrtb/win/{CANARY}?price={CANARY}"))
-    assert [a.status_code for a in answers] == [200, 200, 400, 400, 204, 204, 400]
-    said = "".join(answer.text for answer in answers)
-    # The tests' own client logs the addresses that it calls.
-    logged = "".join(r.getMessage() for r in caplog.records if r.name.startswith("service"))
-    kept = _everything(migrated_url)
-    assert "garden" in kept
-    for trace in (CANARY, "47.1234567", "8.7654321"):
-        assert trace not in said + logged + kept
-
-
-def _everything(url: str) -> str:
-    """Every column of every table as text."""
-    engine = create_engine(url)
-    with engine.connect() as connection:
-        # The names come from the database itself.
-        found = [
-            str(connection.execute(text(f"SELECT * FROM {table}")).all())  # noqa: S608
-            for table in inspect(engine).get_table_names()
-        ]
-    engine.dispose()
-    return "".join(found)
-
-
-ODD = [None, True, -1, 0, 999, 1.5, 1e300, "", "x" * 3000, [], [None, 7, {}], {}, {"a": {"b": 1}}]
-
-
-def spoil(body: Any, generator: np.random.Generator, depth: int = 0) -> Any:
-    """A request with a few odd values anywhere in it, unknown codes and wrong types among them."""
-    if depth and generator.random() < 0.06:
-        return ODD[generator.integers(len(ODD))]
-    if isinstance(body, dict):
-        return {name: spoil(value, generator, depth + 1) for name, value in body.items()}
-    if isinstance(body, list):
-        return [spoil(value, generator, depth + 1) for value in body]
-    return body
-
-
-@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
-async def test_no_spoilt_request_is_an_error_of_ours(migrated_url: str, tmp_path: Path) -> None:
-    """Drawn from the published ones: a bid by the standard, none, or 400; and the books stand."""
-    lines = (
-        {"deals": "any", "when": {"device.dnt": [0, 1]}},
-        {"type": "video", "duration_s": 15, "cat": ["IAB3"], "language": "de"},
-        {"attr": [3], "sizes": ["300x250"], "deals": "any"},
-    )
-    features = {str(n): name for n, name in enumerate(["imp.size", "site.cat", "app.ver", "at"])}
-    generator, statuses = np.random.default_rng(8), set()
-    async with serving(migrated_url, tmp_path, *lines, features=features) as client:
-        wish = {"currency": "USD", "into": "EUR", "rate": "0.9", "reason": "A test."}
-        assert (await client.post("/v1/rates", json=wish)).status_code == 201
-        await rated(client, published.APP | {"tmax": 4000})
-        for turn in range(400):
-            kinds = list(published.REQUESTS.values())
-            body = spoil(kinds[turn % len(kinds)] | {"tmax": 4000}, generator)
-            answer = await client.post(BIDS, json=body)
-            statuses.add(answer.status_code)
-            assert answer.status_code in (200, 204, 400), (turn, body, answer.text)
-            found = bids_of(answer.json()) if answer.status_code == 200 else []
-            assert all(bid["price"] <= 8 and bid["impid"] for bid in found)
-            told = await client.post("/openrtb/north/explain", json=body)
-            assert told.status_code == 200, (turn, body, told.text)
-            for bid in found:
-                reply = await client.get(filled(bid["nurl"], PRICE=str(bid["price"])))
-                assert reply.status_code == 204
-    assert statuses == {200, 204, 400}
-    database = open_database(load({"BIDKEEL_DATABASE_URL": migrated_url}))
-    assert database.read(audit) == []
-    database.close()

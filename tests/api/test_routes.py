@@ -67,10 +67,17 @@ SCOPES = [
     ("GET", "/v1/journal", "read"),
     ("POST", "/v1/line-items/a/hindsight", "read"),
     ("GET", "/v1/line-items/a/evidence", "read"),
+    ("POST", "/v1/rates", "operate"),
+    ("GET", "/v1/rates", "read"),
+]
+# What has no form of ours: its body is the standard's.
+STANDARD = [
+    ("POST", "/openrtb/a/bids", "bid"),
+    ("POST", "/openrtb/a/explain", "read"),
 ]
 
 
-@pytest.mark.parametrize(("method", "path", "scope"), SCOPES)
+@pytest.mark.parametrize(("method", "path", "scope"), [*SCOPES, *STANDARD])
 async def test_each_route_opens_to_its_scope_alone(
     client: httpx.AsyncClient, method: str, path: str, scope: str
 ) -> None:
