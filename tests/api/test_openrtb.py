@@ -9,7 +9,12 @@ from typing import Any
 from urllib.parse import urlsplit
 
 import pytest
+from sqlalchemy import text
 
+from service.app import create_app
+from service.connecting import open_database
+from service.errors import Unsafe
+from service.settings import load
 from tests.api.exchanged import BIDS, EUROS, GARDEN, filled, one_bid, rated, serving, spent
 from tests.openrtb import published
 from tests.openrtb.sources import request
@@ -255,3 +260,28 @@ async def test_a_line_item_that_is_not_there_is_said_once(
             assert (await client.post(BIDS, json=request(**EUROS))).status_code == 204
     told = [r.getMessage() for r in caplog.records if "no_such_line_item" in r.getMessage()]
     assert told == ["the mapping of north cannot be kept to: no_such_line_item"]
+
+
+async def test_what_a_loss_tells_reaches_the_stream(migrated_url: str, tmp_path: Path) -> None:
+    """Beaten: a loss with the minimum to win. Filtered: a void with its reason and no price."""
+    async with serving(migrated_url, tmp_path) as client:
+        for reason in ("102", "203"):
+            bid = await one_bid(client, request(**EUROS))
+            url = filled(bid["lurl"], LOSS=reason, MIN_TO_WIN="3.25", CURRENCY="EUR")
+            assert (await client.get(url)).status_code == 204
+    database = open_database(load({"BIDKEEL_DATABASE_URL": migrated_url}))
+    statement = text("SELECT kind, body FROM stream WHERE kind IN ('lost', 'void') ORDER BY seq")
+    rows = database.read(lambda connection: connection.execute(statement).all())
+    database.close()
+    (lost, void) = ((row.kind, json.loads(row.body)) for row in rows)
+    assert (lost[0], lost[1]["to_win"], lost[1]["source"]) == ("lost", 3_250_000, "north")
+    assert (void[0], void[1]["to_win"], void[1]["why"]) == ("void", None, "203 size not allowed")
+
+
+def test_a_mapping_with_faults_starts_no_service(tmp_path: Path) -> None:
+    """Told to whoever starts it, before anything is opened."""
+    file = tmp_path / "mapping.json"
+    file.write_text('{"sources": {"north": {}}}', "utf-8")
+    settings = load({"BIDKEEL_OPENRTB_MAPPING": str(file)})
+    with pytest.raises(Unsafe, match=r"sources\.north\.notice_url"):
+        create_app(settings)
