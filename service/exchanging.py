@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import logging
 import secrets
+import time
 from collections.abc import Mapping
 from typing import Any
 
@@ -52,6 +53,9 @@ class Exchanging:
             return asked
         made: list[Made] = []
         for imp in asked.imps:
+            # Late bids are worth nothing, and to judge the rest would hold up other requests.
+            if asked.deadline_ms is not None and _gone_ms(arrived) > asked.deadline_ms:
+                break
             # A response has one currency, so the first bid decides for all that follow.
             currencies = (made[0].currency,) if made else asked.currencies
             try:
@@ -124,6 +128,10 @@ class Exchanging:
                 self._told.add(fault)
                 logger.warning("the mapping of %s cannot be kept to: %s", *fault)
             return None
+
+
+def _gone_ms(arrived: float) -> float:
+    return (time.monotonic() - arrived) * 1000
 
 
 def written(
