@@ -158,6 +158,8 @@ def _tripwires_try() -> ModuleType:
     from service.commands import tripwires_try
 
     return tripwires_try
+
+
 def _openrtb_explain() -> ModuleType:
     from service.commands import openrtb_explain
 
@@ -195,6 +197,7 @@ DRILLS: dict[str, tuple[str, Load]] = {
 }
 TRIPWIRES: dict[str, tuple[str, Load]] = {
     "try": ("when rules would have fired on recorded history; changes nothing", _tripwires_try),
+}
 OPENRTB: dict[str, tuple[str, Load]] = {
     "explain": ("say step by step what a mapping makes of a bid request", _openrtb_explain),
 }

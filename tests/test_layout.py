@@ -13,36 +13,15 @@ from tests.house import ROOT, Source, imports, read, tracked
 
 STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk", "exchanging"}
 # What several stories need and none of them owns.
-SHARED = {
-    *(
-        "admitting",
-        "backlog",
-        "catalog",
-        "configuring",
-        "connecting",
-        "currencies",
-        "leasing",
-        "patience",
-        "showing",
-    ),
-    *("correcting", "ordering", "pulse", "quarantining", "spending", "teaching", "threads"),
-    *("records", "recounting", "previewing", "winding"),
-    *("winding", "tripwiring", "foreseeing", "posting"),
-    *("winding", "drawing", "hindsights"),
-    *(
-        "correcting",
-        "ordering",
-        "pulse",
-        "quarantining",
-        "rating",
-        "spending",
-        "teaching",
-        "threads",
-    ),
-    "winding",
-}
+SHARED = set(
+    """
+    admitting backlog catalog configuring connecting correcting currencies drawing foreseeing
+    hindsights leasing ordering patience posting previewing pulse quarantining rating records
+    recounting showing spending teaching threads tripwiring winding
+    """.split()
+)
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "tripwires", "rehearsal"}
-PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "rehearsal", "openrtb"}
+PURE |= {"openrtb"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}
 
 # What each place may import of our own, besides itself.
@@ -64,16 +43,7 @@ OWN: dict[str, set[str]] = {
     # Of the store only its named reads, of the decision only the form a bid takes.
     "api": STORIES
     | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
-    | {"admitting", "hindsights", "records", "recounting"},
-    | {
-        "errors",
-        "money",
-        "store.reading",
-        "decision.opportunity",
-        "configuring",
-        "openrtb",
-        "winding",
-    },
+    | {"admitting", "hindsights", "openrtb", "records", "recounting"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 
