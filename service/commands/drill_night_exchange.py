@@ -37,7 +37,6 @@ class Told:
     wins: int = 0
     values: int = 0
     zeros: int = 0
-    statuses: Counter[str] = field(default_factory=Counter)
     passes: Counter[str] = field(default_factory=Counter)
 
 
