@@ -50,11 +50,14 @@ class Facts:
 
     def window(self, window_ms: int) -> Counts:
         """What happened in the window that ends now."""
-        start, end = self.start_ms(window_ms), self.now_ms + 1
-        if window_ms < LONG_HOURS * self.hours.span_ms:
-            return self.minutes.between(start, end)
-        hour = self.hours.floor(self.now_ms)
-        return plus(self.hours.between(start, hour), self.minutes.between(hour, end))
+        return self.until(self.start_ms(window_ms), self.now_ms + 1)
+
+    def until(self, start_ms: int, end_ms: int) -> Counts:
+        """What happened in a stretch that begins where a window does."""
+        if self.now_ms - start_ms < LONG_HOURS * self.hours.span_ms:
+            return self.minutes.between(start_ms, end_ms)
+        hour = self.hours.floor(min(self.now_ms, end_ms))
+        return plus(self.hours.between(start_ms, hour), self.minutes.between(hour, end_ms))
 
 
 @dataclass(frozen=True, slots=True)

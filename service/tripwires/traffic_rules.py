@@ -17,7 +17,7 @@ NO_HISTORY_FACTOR = 5  # Without a past, so many times the least count are wante
 def no_outcomes(facts: Facts, setup: Setup) -> Saw | None:
     """Bids went out for a whole window and nothing came back, though it usually does."""
     window_ms, least, alpha = setup.window_ms or 0, setup.count_min or 1, setup.alpha or 0.0
-    now = facts.window(window_ms)
+    now = _answerable(facts, window_ms, 0.5)
     if now.bids < least or now.results:
         return None
     before = past(facts, window_ms)
@@ -29,7 +29,8 @@ def no_outcomes(facts: Facts, setup: Setup) -> Saw | None:
         return None
     held_against = f"usually {share(usual)} of bids get one" if pairs else "none ever came"
     return Saw(
-        f"{now.bids} bids in {duration(window_ms)} and not one outcome; {held_against}",
+        f"{now.bids} bids, the newest {duration(window_ms // 2)} old, and not one outcome in"
+        f" {duration(window_ms)}; {held_against}",
         {"bids": now.bids, "outcomes": 0, "usual_share": round(usual, 6)},
         facts.start_ms(window_ms),
     )
@@ -42,7 +43,8 @@ def win_rate(facts: Facts, setup: Setup) -> Saw | None:
 
 def silent_bids(facts: Facts, setup: Setup) -> Saw | None:
     """More bids than usual get no outcome at all."""
-    return _more("bids got no outcome", facts, setup, _silent, lambda c: c.bids)
+    now = _answerable(facts, setup.window_ms or 0, 0.75)
+    return _more("bids got no outcome", facts, setup, _silent, lambda c: c.bids, now=now)
 
 
 def voids(facts: Facts, setup: Setup) -> Saw | None:
@@ -65,10 +67,18 @@ def refused_outcomes(facts: Facts, setup: Setup) -> Saw | None:
 
 
 def _more(
-    said: str, facts: Facts, setup: Setup, count: Count, of: Count, *, alone: bool = False
+    said: str,
+    facts: Facts,
+    setup: Setup,
+    count: Count,
+    of: Count,
+    *,
+    alone: bool = False,
+    now: Counts | None = None,
 ) -> Saw | None:
     """A share that has grown, and is worth a word; `alone` where it is wrong without a past too."""
-    window_ms, now = setup.window_ms or 0, facts.window(setup.window_ms or 0)
+    window_ms = setup.window_ms or 0
+    now = now or facts.window(window_ms)
     trials = of(now)
     if trials < (setup.count_min or 1) or count(now) < (setup.share_min or 0.0) * trials:
         return None
@@ -110,6 +120,13 @@ def _judged(
 def _share(pairs: list[Pair]) -> float:
     trials = sum(of for _, of in pairs)
     return sum(count for count, _ in pairs) / trials if trials else 0.0
+
+
+def _answerable(facts: Facts, window_ms: int, part: float) -> Counts:
+    """The window with only the bids of its first part: the newest had no time for an outcome."""
+    start = facts.start_ms(window_ms)
+    early = facts.until(start, start + int(part * window_ms))
+    return facts.window(window_ms)._replace(bids=early.bids)
 
 
 def _silent(counts: Counts) -> int:

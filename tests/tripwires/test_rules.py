@@ -12,7 +12,7 @@ from service.tripwires.money_rules import far_off
 from service.tripwires.runbooks import RUNBOOKS
 from service.tripwires.saying import amount, chance, duration, share
 from service.tripwires.setups import DEFAULTS, FREEZE, setups_of
-from tests.tripwires.recorded import LOG, USUAL, alone, facts, found
+from tests.tripwires.recorded import LOG, USUAL, Minute, alone, facts, found
 
 HOURS = 8 * 60
 WON = Counts(1, 1, late=1, paid=7, spent=5)
@@ -40,8 +40,8 @@ def test_a_usual_record_is_silent() -> None:
 
 @pytest.mark.parametrize("rule", sorted(BAD))
 def test_its_fault_is_found_and_said_with_units(rule: str) -> None:
-    """Three quarters of an hour of it are enough, and the sentence names numbers and time."""
-    spoilt = facts(HOURS, last=lambda _: BAD[rule], of_last=45)
+    """Fifty minutes of it are enough, and the sentence names numbers and time."""
+    spoilt = facts(HOURS, last=lambda _: BAD[rule], of_last=50)
     finding = found(spoilt)[rule]
     assert re.search(r"\d+.* in (5|15|60) minutes", finding.saw.sentence)
     assert 0 <= finding.saw.since_ms <= spoilt.now_ms
@@ -104,6 +104,22 @@ def test_wins_without_their_word_are_unknown() -> None:
     parked = USUAL._replace(words=1, zeros=0, parked=9)
     late = facts(days, last=lambda _: parked, of_last=24 * 60, arrival="accrues")
     assert found(late)["unknown_values"].saw.numbers["unknown"] == 9 * 24 * 60
+
+
+def test_bids_that_have_just_gone_out_are_not_silent_yet() -> None:
+    """After a pause, or at the start, outcomes get half of the window to come; then it fires."""
+    idle = [facts(HOURS, lambda _: USUAL, last=_resumed(at), of_last=120) for at in (6, 14)]
+    assert [set(found(one)) & {"no_outcomes", "silent_bids"} for one in idle] == [
+        set(), {"no_outcomes"},
+    ]  # fmt: skip
+    assert "no_outcomes" not in found(
+        facts(6, usual=lambda _: BAD["no_outcomes"]._replace(bids=99))
+    )
+
+
+def _resumed(minutes: int) -> Minute:
+    """Nothing for two hours but bids in the last minutes, which nobody has answered yet."""
+    return lambda number: Counts(bids=20) if number >= HOURS - minutes else NOTHING
 
 
 def test_bare_facts_are_told_with_their_amount() -> None:
