@@ -18,9 +18,10 @@ from service.decision.evidence import evidence
 from service.decision.methods import METHODS
 from service.errors import Malformed, Overloaded
 from service.guard.fees import Fees
+from service.learner.memory import Memory
 from service.ordering import Orders
 from service.rehearsal.alternatives import Alternative, Kind
-from service.rehearsal.auction_log import PASSED, WON, Logged
+from service.rehearsal.auction_log import NEVER, PASSED, WON, Logged
 from service.rehearsal.hindsight_answer import Ask, answer, counted
 from service.rehearsal.hindsight_assumed import Worth
 from service.store import hindsights, reading
@@ -124,7 +125,7 @@ class Hindsights:
             return first, hindsights.spent_before(connection, line_item, span.from_ms)
 
         after, spent = await self._orders.read(start)
-        log = await self._read(config, span, after, seen)
+        log = await self._read(config, span, after, seen, _closes_until(facts))
         worth = Worth(
             config["value"]["ceiling"],
             config["bid_cap"],
@@ -148,7 +149,12 @@ class Hindsights:
         }
 
     async def _read(
-        self, config: Mapping[str, Any], span: Span, after: int | None, seen: Seen
+        self,
+        config: Mapping[str, Any],
+        span: Span,
+        after: int | None,
+        seen: Seen,
+        closes_until_ms: int,
     ) -> _Log:
         """The log of the span, a page at a time; cut at a limit."""
         log = _Log([], dict.fromkeys(hindsights.NOTES, 0))
@@ -157,7 +163,8 @@ class Hindsights:
 
             def read(connection: Reading, at: int = at) -> tuple[list[Logged], hindsights.Page]:
                 page = hindsights.page(connection, config, at, span)
-                return [logged(line, config, page.service_ms) for line in page.lines], page
+                now_ms = min(page.service_ms, closes_until_ms)
+                return [logged(line, config, now_ms) for line in page.lines], page
 
             rows, page = await self._orders.read(read)
             log.rows += rows
@@ -210,6 +217,14 @@ def _worth(line: Line, config: Mapping[str, Any], service_ms: int) -> tuple[int,
         return (amount, amount) if said.valued else (0, ceiling)
     closed = service_ms - said.paid_ms > value["window_ms"]
     return amount, amount if closed else ceiling
+
+
+def _closes_until(facts: reading.Facts) -> int:
+    """The service time up to which windows close: they stand still while values are silent."""
+    silence_ms = (facts.row.config.get("tripwires") or {}).get("value_silence_ms")
+    if silence_ms is None:
+        return NEVER
+    return Memory.from_bytes(facts.snapshot.state).heard_ms + int(silence_ms)
 
 
 def _span(question: Question, created_ms: int, now_ms: int) -> Span:

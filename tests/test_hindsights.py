@@ -111,6 +111,22 @@ async def test_values_after_the_window_count_for_nothing_and_are_named(
         assert surplus == {"low_nanos": -CLEARING, "high_nanos": -CLEARING}
 
 
+@pytest.mark.parametrize(("silence_ms", "still_open"), [(50_000, 1), (70_000, 0), (None, 0)])
+async def test_windows_stand_still_while_values_are_silent(
+    migrated_url: str, silence_ms: int | None, still_open: int
+) -> None:
+    """As the learner keeps them open, hindsight does: a silent source proves nothing worthless."""
+    async with working(migrated_url) as worker:
+        tripwires = {"value_silence_ms": silence_ms}
+        await worker.create(value={"arrival": "accrues"}, tripwires=tripwires)
+        (one,) = await worker.bids(1)
+        await worker.report(Report("won", one.ticket, clearing=CLEARING))
+        await worker.learn()
+        worker.pass_service_ms(60_001)
+        found = await look(worker)
+        assert found["log"]["wins_whose_value_is_still_open"] == still_open
+
+
 async def test_an_alternative_without_enough_money_is_not_believed_to_go_on(
     migrated_url: str,
 ) -> None:
