@@ -9,7 +9,9 @@ import secrets
 import signal
 from collections.abc import AsyncIterator, Coroutine
 from contextlib import asynccontextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, field
+from functools import partial
+from importlib.metadata import PackageNotFoundError, version
 from typing import Any
 
 from fastapi import FastAPI
@@ -25,16 +27,20 @@ from service.exchanging import Exchanging
 from service.feedback import Feedback, Room
 from service.guard.ticket import TicketKeys
 from service.leasing import Leasing
+from service.metrics.board import Board
+from service.metrics.exposition import MEDIA_TYPE, Exposition
+from service.metrics.tally import Tally
 from service.openrtb import mapping
 from service.operating import Operator
 from service.patience import Patience
 from service.posting import Receiver
 from service.pulse import Pulse
+from service.sampling import sample
 from service.settings import Settings
 from service.store import incarnations
 from service.store.database import Database
 from service.store.facts import fact
-from service.store.migrate import require_current
+from service.store.migrate import newest, require_current
 from service.threads import Threads
 from service.upkeep import Rhythm, Upkeep
 
@@ -62,11 +68,20 @@ class Post:
         worker: Its id, which no other worker ever had.
         predecessor: The worker that stood here before and is known to be dead.
         clerk: Whether the clerk's duties are done here too, and not in a process of their own.
+        board: The memory that the crew counts in.
+        place: Which row of it is ours.
     """
 
     worker: str
     predecessor: str | None = None
     clerk: bool = True
+    board: Board = field(default_factory=Board.alone)
+    place: int = 0
+
+    @property
+    def tally(self) -> Tally:
+        """Our own numbers."""
+        return self.board.tally(self.place)
 
 
 def new_worker() -> str:
@@ -74,12 +89,21 @@ def new_worker() -> str:
     return f"{os.getpid()}-{secrets.token_hex(8)}"
 
 
+def release() -> str:
+    """The version installed; a checkout that was never installed has none."""
+    try:
+        return version("bidkeel")
+    except PackageNotFoundError:
+        return "unknown"
+
+
 def create_app(settings: Settings, post: Post | None = None) -> FastAPI:
     """The service under these settings; nothing is opened before its lifespan begins."""
+    here = post or Post(new_worker())
 
     @asynccontextmanager
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
-        async with running(settings, post or Post(new_worker())) as stories:
+        async with running(settings, here) as stories:
             app.state.stories = stories
             yield
             # Before the hand is emptied, so that a request which comes now is told to ask again.
@@ -90,8 +114,10 @@ def create_app(settings: Settings, post: Post | None = None) -> FastAPI:
         title="Bidkeel", lifespan=lifespan, docs_url=None, redoc_url=None, openapi_url=None
     )
     app.state.settings = settings
+    told = Exposition(here.board, {"version": release(), "schema": newest()})
+    app.state.metrics = lambda: (told.text(), MEDIA_TYPE)
     app.state.sources = sources_of(settings)
-    install(app)
+    install(app, partial(_answered, here.tally))
     return app
 
 
@@ -104,12 +130,12 @@ async def running(settings: Settings, post: Post) -> AsyncIterator[Stories]:
         Unsafe: The database is of another schema or may forget what it acknowledged.
         StoreAway: It does not answer.
     """
-    async with opened(settings) as (database, threads):
+    async with opened(settings, post.tally) as (database, threads):
         stories, upkeep, loops = _build(settings, post, database, threads)
         # It is on the list of workers before it leases, for a freeze waits for whoever is on it.
         await upkeep.start(post.predecessor)
         if post.clerk:
-            clerk = clerk_of(settings, database, threads)
+            clerk = clerk_of(settings, database, threads, post.board, post.tally)
             await clerk.start()
             loops += clerk.duties()
         async with on_duty(loops):
@@ -120,7 +146,9 @@ async def running(settings: Settings, post: Post) -> AsyncIterator[Stories]:
 
 
 @asynccontextmanager
-async def opened(settings: Settings) -> AsyncIterator[tuple[Database, Threads]]:
+async def opened(
+    settings: Settings, tally: Tally | None = None
+) -> AsyncIterator[tuple[Database, Threads]]:
     """
     The database, found safe and of our schema, and the threads that talk to it.
 
@@ -130,7 +158,7 @@ async def opened(settings: Settings) -> AsyncIterator[tuple[Database, Threads]]:
     """
     database = open_database(settings)
     # No more threads than connections, so that none of them waits for one.
-    threads = Threads(settings.pool_size)
+    threads = Threads(settings.pool_size, tally)
     try:
         # Better not to start than to promise on a database that forgets, or that we misread.
         database.check_safe()
@@ -165,7 +193,13 @@ def sources_of(settings: Settings) -> mapping.Sources:
     return {} if settings.openrtb_mapping is None else mapping.load(settings.openrtb_mapping)
 
 
-def clerk_of(settings: Settings, database: Database, threads: Threads) -> Clerk:
+def clerk_of(
+    settings: Settings,
+    database: Database,
+    threads: Threads,
+    board: Board | None = None,
+    tally: Tally | None = None,
+) -> Clerk:
     """The clerk under these settings."""
     habits = Habits(
         settings.teach_ms,
@@ -184,7 +218,7 @@ def clerk_of(settings: Settings, database: Database, threads: Threads) -> Clerk:
     receiver = Receiver(
         settings.webhook_url, secret, settings.webhook_timeout_s, settings.webhook_tries
     )
-    return Clerk(database, threads, habits, receiver)
+    return Clerk(database, threads, habits, receiver, board, tally)
 
 
 def _build(
@@ -195,24 +229,36 @@ def _build(
     # A write, since on a changed timeline this begins a new life of the database.
     incarnation = bytes.fromhex(database.write(incarnations.current))
     catalog = Catalog(database, threads)
-    leasing = Leasing(database, threads, post.worker, settings.lease_s)
+    tally = post.tally
+    leasing = Leasing(database, threads, post.worker, settings.lease_s, tally=tally)
     pulse = Pulse()
     clocks = Clocks(
         *(settings.deadline_ms, settings.deadline_ms_max, settings.bids_waiting_max, pulse.lag_s)
     )
     backlog = Backlog(settings.decision_queue_max)
-    bidder = Bidder(catalog, leasing, keys, incarnation, clocks, backlog, _feature_key(database))
+    feature_key = _feature_key(database)
+    bidder = Bidder(catalog, leasing, keys, incarnation, clocks, backlog, feature_key, tally)
     room = Room(settings.outcome_calls_max, settings.outcome_rows_waiting_max)
-    feedback = Feedback(database, threads, keys, incarnation, room)
+    feedback = Feedback(database, threads, keys, incarnation, room, tally)
     minute_ms = settings.tripwire_minute_s * 1000
     operator = Operator(database, threads, catalog, news, settings.checkpoint_entries, minute_ms)
     rhythm = Rhythm(settings.change_poll_ms, settings.tick_s, settings.clock_step_ms_max)
-    upkeep = Upkeep(database, threads, post.worker, catalog, leasing, backlog, news, rhythm)
+    place = (database, threads, post.worker, catalog, leasing, backlog, news, rhythm)
+    upkeep = Upkeep(*place, tally)
+    levels = {
+        "loop_lag_seconds": lambda: int(pulse.worst_s() * 1e6),
+        "waiting_bids": bidder.waiting,
+        "waiting_outcomes": feedback.waiting,
+        "waiting_decisions": lambda: len(backlog),
+        "slices_in_hand": lambda: len(leasing.hand.slices),
+        "change_number": lambda: catalog.change_seen,
+    }
+    measured = sample(tally, levels, {"dropped_decisions": lambda: backlog.dropped})
     counting = Patience(database, threads).every(FLUSH_S, operator.admitting.flush)
     refusals = Patience(database, threads).every(REFUSALS_S, feedback.keep_refusals)
-    loops = [pulse.run(), leasing.run(), feedback.run(), counting, refusals, *upkeep.duties()]
+    loops = [pulse.run(), leasing.run(), feedback.run(), measured, counting, refusals]
     exchange = Exchanging(bidder, feedback)
-    return Stories(bidder, feedback, operator, exchange), upkeep, loops
+    return Stories(bidder, feedback, operator, exchange), upkeep, [*loops, *upkeep.duties()]
 
 
 def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:
@@ -227,6 +273,10 @@ def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:
 def _feature_key(database: Database) -> bytes:
     """What features are hashed under; it stays with what was learnt of them."""
     return bytes.fromhex(database.read(lambda connection: fact(connection, "feature_key")))
+
+
+def _answered(tally: Tally, status: int) -> None:
+    tally.add("http_answers", f"{status // 100}xx")
 
 
 def _stop_if_broken(task: asyncio.Future[None]) -> None:

@@ -23,6 +23,9 @@ class Backlog:
         self._count_max = count_max
         self.dropped = 0
 
+    def __len__(self) -> int:
+        return len(self._waiting)
+
     def add(self, decision: Decision) -> None:
         """Queue one decision, unless there is no room."""
         if len(self._waiting) >= self._count_max:

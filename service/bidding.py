@@ -14,6 +14,7 @@ from dataclasses import dataclass, replace
 
 import numpy
 
+from service import spans
 from service.backlog import Backlog
 from service.catalog import Catalog, Item
 from service.currencies import inside, leaving
@@ -32,6 +33,7 @@ from service.guard.ticket import Ticket, TicketKeys
 from service.learner import hashing
 from service.learner.hashing import Hashed
 from service.leasing import Leasing
+from service.metrics.tally import Tally
 
 
 @dataclass(frozen=True, slots=True)
@@ -107,13 +109,19 @@ class Bidder:
         clocks: Clocks,
         backlog: Backlog,
         feature_key: bytes,
+        tally: Tally | None = None,
     ) -> None:
+        self._tally = tally or Tally()
         self._catalog, self._leasing = catalog, leasing
         self._keys, self._incarnation = keys, incarnation
         self._clocks, self._waiting = clocks, 0
         self._generator = numpy.random.default_rng()
         self._backlog = backlog
         self._feature_key = feature_key
+
+    def waiting(self) -> int:
+        """Bids that wait for a slice or a first look at a line item."""
+        return self._waiting
 
     async def bid(self, opportunity: Opportunity, arrived: float) -> Answer:
         """
@@ -127,6 +135,13 @@ class Bidder:
             Malformed: A fixed-price sale without its price, or one the method cannot bid in.
             StoreAway: An unknown line item could not be looked up.
         """
+        with spans.span("bid") as span:
+            answer = await self._answer(opportunity, arrived)
+            spans.note(span, method=answer.method, set_by=answer.set_by, reason=answer.reason)
+        self._tally.took(time.monotonic() - arrived)
+        return answer
+
+    async def _answer(self, opportunity: Opportunity, arrived: float) -> Answer:
         until = arrived + self._allowed_s(opportunity)
         late = self._clocks.lag_s() > until - arrived
         if opportunity.line_items:
@@ -360,6 +375,12 @@ class Bidder:
         return {"auction": sale.auction, "floor_held": sale.floor}
 
     def _logged(self, answer: Answer, opportunity: Opportunity) -> Answer:
+        if opportunity.test:
+            self._tally.add("test_answers")
+        elif answer.reason is not None:
+            self._tally.add("passes", answer.reason)
+        else:
+            self._tally.add("bids")
         draw = answer.draw or NOTHING
         self._backlog.add(
             {

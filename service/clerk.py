@@ -15,6 +15,8 @@ from typing import Any
 
 from service.learner.exptree_state import UnreadableTree
 from service.learner.memory import UnreadableMemory
+from service.metrics.board import Board
+from service.metrics.tally import Tally
 from service.patience import Patience
 from service.posting import Posting, Receiver
 from service.store import (
@@ -23,6 +25,7 @@ from service.store import (
     charting,
     decisions,
     epochs,
+    gauges,
     learners,
     leases,
     outbox,
@@ -41,6 +44,8 @@ logger = logging.getLogger(__name__)
 CLOSE_S = 1.0
 # What somebody has edited by hand is to be found within a minute.
 AUDIT_S = 10.0
+# Often enough for a scrape every fifteen seconds, which is common practice.
+MEASURE_S = 5.0
 PRUNE_S = 3600.0
 CHART_S = 2.0
 DAY_MS = 86_400_000
@@ -76,9 +81,12 @@ class Clerk:
         threads: Threads,
         habits: Habits,
         receiver: Receiver | None = None,
+        board: Board | None = None,
+        tally: Tally | None = None,
     ) -> None:
         self._database, self._threads, self._habits = database, threads, habits
-        self._patience = Patience(database, threads)
+        self._board = board or Board.alone()
+        self._patience = Patience(database, threads, tally)
         widths = Widths(habits.tripwire_minute_ms)
         self._tending = Tending(database, widths, habits.tripwire_quiet_ms)
         self._posting = Posting(database, threads, receiver or Receiver())
@@ -95,12 +103,15 @@ class Clerk:
             every(CHART_S, self.chart),
             every(self._habits.tripwire_s, self.watch),
             every(POST_S, self.tell),
+            every(MEASURE_S, self.measure),
         ]
 
     async def start(self) -> None:
         """Close what became due while nobody was here, and mend states of another release."""
         await self._patience.sparing(self.close)
         await self._read_again()
+        # The first scrape finds more than nothing; it can wait if the database is away.
+        await self._patience.unless_away(self.measure)
 
     async def teach(self) -> None:
         """Fold what is new, line item by line item."""
@@ -140,6 +151,12 @@ class Clerk:
     async def tell(self) -> None:
         """Tell the receiver of news what waits for it."""
         await self._posting.post()
+
+    async def measure(self) -> None:
+        """Read what only the database can tell and put it where the metrics are told from."""
+        wall_ms = self._database.wall_ms()
+        look = partial(gauges.measure, wall_ms=wall_ms)
+        self._board.post(await self._threads.run(self._database.read, look))
 
     async def prune(self) -> None:
         """Forget what has been kept for long enough, in pieces that hold up nobody."""

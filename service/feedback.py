@@ -15,11 +15,14 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from datetime import date
 
+from service import spans
 from service.errors import BrokenPromise, Overloaded, StoreAway
 from service.guard.ticket import BadTicket, Ticket, TicketKeys, bid_of, ref_of
 from service.ledger.entries import PAYING
 from service.ledger.settle import Outcome
 from service.ledger.values import Value
+from service.metrics.series import OTHER
+from service.metrics.tally import Tally
 from service.money import PRICE_NANOS_MAX
 from service.store import outcomes, tripwires
 from service.store.database import Database
@@ -112,13 +115,19 @@ class Feedback:
         keys: TicketKeys,
         incarnation: bytes,
         room: Room | None = None,
+        tally: Tally | None = None,
     ) -> None:
+        self._tally = tally or Tally()
         self._database, self._threads = database, threads
         self._keys, self._incarnation = keys, incarnation
         self._room, self._calls, self._rows = room or Room(), 0, 0
         self._queue: asyncio.Queue[_Waiting] = asyncio.Queue()
         # Of line items that our own tickets name, so that nobody can make it grow.
         self._refused: Counter[str] = Counter()
+
+    def waiting(self) -> int:
+        """Outcomes that wait to be booked."""
+        return self._rows
 
     @contextmanager
     def admitted(self) -> Iterator[None]:
@@ -130,6 +139,7 @@ class Feedback:
         """
         # The rows of a call are unknown until it is read; until then `calls_max` is the bound.
         if self._calls >= self._room.calls_max or self._rows >= self._room.rows_max:
+            self._tally.add("outcome_calls_shed")
             raise Overloaded("too many outcomes wait already")
         self._calls += 1
         try:
@@ -150,6 +160,18 @@ class Feedback:
             StoreAway: Perhaps recorded; the repeat answers `duplicate`.
             Overloaded: Not recorded, for nobody had time for it.
         """
+        with spans.span("outcomes") as span:
+            spans.note(span, rows=len(reports))
+            receipts = await self._receipts(reports, only)
+        for report, row in zip(reports, receipts, strict=True):
+            self._tally.add("outcomes", report.kind, row.status)
+            if row.status == "refused":
+                self._tally.add("refused_outcomes", row.code or OTHER)
+        return receipts
+
+    async def _receipts(
+        self, reports: list[Report], only: frozenset[str] | None
+    ) -> list[Receipt]:
         read = [self._read(report, only) for report in reports]
         read = await self._find_refs(reports, read, only)
         rows = [row for row in read if isinstance(row, Booking)]
@@ -196,9 +218,11 @@ class Feedback:
     async def _settle(self, group: list[_Waiting]) -> None:
         try:
             rows = [row for waiting in group for row in waiting.rows]
-            booked = await self._threads.run_within(
-                THREAD_S, outcomes.book, self._database, rows, weigh
-            )
+            with spans.span("commit") as span:
+                spans.note(span, rows=len(rows))
+                booked = await self._threads.run_within(
+                    THREAD_S, outcomes.book, self._database, rows, weigh
+                )
         except (StoreAway, Overloaded) as error:
             # No use in trying them apart: each would meet the same database, one after the other.
             for waiting in group:

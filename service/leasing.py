@@ -9,8 +9,10 @@ import time
 from collections.abc import Callable
 from datetime import date
 
+from service import spans
 from service.errors import BrokenPromise, StoreAway
 from service.guard.hand import Given, Hand, SliceInHand
+from service.metrics.tally import Tally
 from service.money import NANOS_MAX
 from service.store import leases
 from service.store.database import Database
@@ -50,7 +52,9 @@ class Leasing:
         worker: str,
         lease_s: int,
         clock: Callable[[], float] = boot_clock,
+        tally: Tally | None = None,
     ) -> None:
+        self._tally = tally or Tally()
         self.hand = Hand()
         self._overdue_at = float("inf")
         self.clock = clock
@@ -113,6 +117,7 @@ class Leasing:
             return
         try:
             await self._threads.run(leases.retire, self._database, [_report(g) for g in given])
+            self._tally.add("slices_given_back", count=len(given))
         except asyncio.CancelledError:
             # We are stopping; the last call that gives back must still find them.
             self.hand.given = given + self.hand.given
@@ -161,9 +166,11 @@ class Leasing:
         # The lease is measured from before we asked, so that ours always ends first.
         requests = [self._request(name, asked_at) for name in names]
         try:
-            answers = await self._threads.run(
-                leases.lease, self._database, self._worker, requests, self._lease_s
-            )
+            with spans.span("lease") as span:
+                spans.note(span, line_items=len(names))
+                answers = await self._threads.run(
+                    leases.lease, self._database, self._worker, requests, self._lease_s
+                )
         except asyncio.CancelledError:
             self._give_back_unseen(requests)
             raise
@@ -190,6 +197,8 @@ class Leasing:
         return leases.LeaseRequest(name, secrets.token_bytes(16), forecast, before)
 
     def _take(self, answer: leases.Leased | leases.Denied, asked_at: float) -> None:
+        denied = isinstance(answer, leases.Denied)
+        self._tally.add("leases", "denied" if denied else "leased")
         if isinstance(answer, leases.Denied):
             self._denied[answer.line_item] = (answer.reason, self.clock() + DENIED_S)
             return

@@ -8,9 +8,12 @@ from __future__ import annotations
 
 import asyncio
 import logging
+import time
 from collections.abc import Awaitable, Callable
 
 from service.errors import BrokenPromise, StoreAway
+from service.metrics.series import OTHER
+from service.metrics.tally import Tally
 from service.store import audit
 from service.store.database import Database
 from service.threads import Threads
@@ -23,8 +26,9 @@ AWAY_S = 0.5
 class Patience:
     """Repeats duties on one database."""
 
-    def __init__(self, database: Database, threads: Threads) -> None:
+    def __init__(self, database: Database, threads: Threads, tally: Tally | None = None) -> None:
         self._database, self._threads = database, threads
+        self._tally = tally or Tally()
 
     async def every(self, seconds: float, duty: Callable[[], Awaitable[None]]) -> None:
         """Do a duty again and again, with so much time in between, until cancelled."""
@@ -36,6 +40,7 @@ class Patience:
         """Do a duty once; while the database is away, wait a moment instead."""
         try:
             await self.sparing(duty)
+            self._done(duty)
         except StoreAway:
             logger.warning("the database is away; trying again")
             await asyncio.sleep(AWAY_S)
@@ -48,6 +53,11 @@ class Patience:
             # One that no standing check can see is a fault of ours, and not of one line item.
             if not await self.freeze_broken():
                 raise
+
+    def _done(self, duty: Callable[[], Awaitable[None]]) -> None:
+        name = getattr(duty, "__name__", OTHER)
+        now_ms = time.time_ns() // 1_000_000
+        self._tally.set("duty_success_timestamp_seconds", name, value=now_ms)
 
     async def freeze_broken(self) -> list[str]:
         """Freeze the line items whose standing promises are broken; returns those new to it."""

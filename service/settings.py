@@ -248,6 +248,23 @@ class Settings(BaseSettings):
         description="Secret bearer key of health and metrics, 32 characters or more without a "
         "comma, where the listener is not private. Empty: open to whoever reaches the port.",
     )
+    metrics_host: str = Field(
+        "127.0.0.1",
+        min_length=1,
+        description="Address of the listener for metrics, where they have one of their own.",
+    )
+    metrics_port: int = Field(
+        0,
+        ge=0,
+        le=65535,
+        description="TCP port for metrics alone, so that whoever reaches the other port cannot "
+        "read them. 0: they are at /metrics beside everything else.",
+    )
+    traces_endpoint: str = Field(
+        "",
+        description="Where spans go, as an OTLP address over HTTP; needs the extra traces. "
+        "Empty: no traces.",
+    )
     log_format: Literal["text", "json"] = Field(
         "text", description="Log lines for people (text) or for programs (json)."
     )
@@ -298,6 +315,8 @@ class Settings(BaseSettings):
             raise ValueError("BIDKEEL_DEADLINE_MS is above BIDKEEL_DEADLINE_MS_MAX")
         if self.body_bytes_max > self.batch_bytes_max:
             raise ValueError("BIDKEEL_BODY_BYTES_MAX is above BIDKEEL_BATCH_BYTES_MAX")
+        if self.metrics_port == self.port:
+            raise ValueError("BIDKEEL_METRICS_PORT must differ from BIDKEEL_PORT")
         return self
 
     @property

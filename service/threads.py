@@ -5,9 +5,11 @@ from __future__ import annotations
 import asyncio
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
+from contextvars import copy_context
 from typing import ParamSpec, TypeVar
 
-from service.errors import Overloaded
+from service.errors import Overloaded, StoreAway
+from service.metrics.tally import Tally
 
 P = ParamSpec("P")
 T = TypeVar("T")
@@ -16,7 +18,8 @@ T = TypeVar("T")
 class Threads:
     """A bounded pool; one per worker process."""
 
-    def __init__(self, count: int) -> None:
+    def __init__(self, count: int, tally: Tally | None = None) -> None:
+        self._tally = tally or Tally()
         self._pool = ThreadPoolExecutor(count, thread_name_prefix="store")
 
     async def run(self, work: Callable[P, T], *args: P.args, **kwargs: P.kwargs) -> T:
@@ -25,14 +28,18 @@ class Threads:
 
         A caller that is cancelled leaves when the work is over: whatever it does next comes after.
         """
-        # Wrapped, because an executor hands on no keyword arguments.
-        loop = asyncio.get_running_loop()
-        future = loop.run_in_executor(self._pool, lambda: work(*args, **kwargs))
+        # Wrapped, because an executor hands on no keyword arguments; with the id of the request.
+        loop, context = asyncio.get_running_loop(), copy_context()
+        future = loop.run_in_executor(self._pool, lambda: context.run(work, *args, **kwargs))
         try:
             return await asyncio.shield(future)
         except asyncio.CancelledError:
             # Its result is nobody's any more, but its transaction must not outlive a stop.
             await asyncio.wait([future])
+            raise
+        except StoreAway:
+            # Everything that asks the database comes through here, on the loop's own thread.
+            self._tally.add("database_failures")
             raise
 
     async def run_within(
@@ -44,13 +51,18 @@ class Threads:
         Raises:
             Overloaded: The work was not begun, and never will be.
         """
-        begun = self._pool.submit(work, *args, **kwargs)
+        context = copy_context()
+        begun = self._pool.submit(lambda: context.run(work, *args, **kwargs))
         future = asyncio.wrap_future(begun)
         done, _ = await asyncio.wait([future], timeout=seconds)
         # What runs cannot be cancelled, so this is false once the work has begun.
         if not done and begun.cancel():
             raise Overloaded("no thread came free")
-        return await future
+        try:
+            return await future
+        except StoreAway:
+            self._tally.add("database_failures")
+            raise
 
     def close(self) -> None:
         """Wait for what is running and let the threads go."""

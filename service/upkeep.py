@@ -15,6 +15,7 @@ from service.backlog import Backlog
 from service.catalog import Catalog, Item
 from service.errors import StoreAway
 from service.leasing import Leasing
+from service.metrics.tally import Tally
 from service.patience import Patience
 from service.store import clock, decisions, workers
 from service.store.database import Database, Writing
@@ -50,11 +51,12 @@ class Upkeep:
         backlog: Backlog,
         news: asyncio.Event,
         rhythm: Rhythm,
+        tally: Tally | None = None,
     ) -> None:
         self._database, self._threads, self._worker = database, threads, worker
         self._catalog, self._leasing, self._backlog = catalog, leasing, backlog
         self._news, self._rhythm = news, rhythm
-        self._patience = Patience(database, threads)
+        self._patience = Patience(database, threads, tally)
 
     def duties(self) -> list[Coroutine[Any, Any, None]]:
         """Every loop, to be run until cancelled."""

@@ -22,7 +22,14 @@ SHARED = set(
 )
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "tripwires", "rehearsal"}
 PURE |= {"openrtb"}
+SHARED = {
+    *("backlog", "catalog", "configuring", "connecting", "leasing", "patience", "showing"),
+    *("correcting", "ordering", "pulse", "quarantining", "spending", "teaching", "threads"),
+    *("sampling", "spans", "winding"),
+}
+PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "rehearsal"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}
+EVERYTHING |= {"metrics", "request_ids"}
 
 # What each place may import of our own, besides itself.
 OWN: dict[str, set[str]] = {
@@ -44,11 +51,19 @@ OWN: dict[str, set[str]] = {
     "api": STORIES
     | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
     | {"admitting", "hindsights", "openrtb", "records", "recounting"},
+    "metrics": set(),
+    "request_ids": set(),
+    **dict.fromkeys(STORIES | SHARED, PURE | SHARED | {"metrics", "store", "settings"}),
+    # Of the store only its named reads, of the decision only the form a bid takes.
+    "api": STORIES
+    | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
+    | {"request_ids"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 
 INSTALLED = {
     *("alembic", "fastapi", "httpx", "numpy", "psycopg", "pydantic", "pydantic_settings"),
+    "prometheus_client",
     *("rich", "scipy", "sqlalchemy", "starlette", "swagger_ui_bundle", "uvicorn", "uvloop"),
 }
 
@@ -68,6 +83,11 @@ OTHERS: dict[str, set[str]] = {
     **{story: {"numpy", "scipy"} for story in STORIES | SHARED},
     # Alone talks to somebody else's server.
     "posting": {"httpx"},
+    "metrics": {"prometheus_client"},
+    "request_ids": set(),
+    **{story: {"numpy", "scipy"} for story in STORIES | SHARED},
+    # Only where the settings ask for traces, and then inside the function that needs them.
+    "spans": {"opentelemetry"},
     "api": {"fastapi", "starlette", "pydantic", "pydantic_core", "swagger_ui_bundle"},
     **dict.fromkeys(("app", "commands", "__main__"), INSTALLED),
 }

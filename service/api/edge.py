@@ -27,6 +27,9 @@ class EdgeSettings(Protocol):
     @property
     def health_key(self) -> SecretStr | None: ...
 
+    @property
+    def metrics_port(self) -> int: ...
+
 
 @dataclass(frozen=True, slots=True)
 class Edge:
@@ -37,6 +40,7 @@ class Edge:
     batch_rows_max: int = 500
     outcome_rows_max: int = 1000
     health_key: SecretStr | None = None
+    metrics_port: int = 0
 
 
 def edge(request: Request) -> EdgeSettings:

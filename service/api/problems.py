@@ -12,7 +12,7 @@ from starlette.exceptions import HTTPException
 from starlette.requests import ClientDisconnect, Request
 from starlette.responses import Response
 
-from service import errors
+from service import errors, request_ids
 from service.api.body import BadJson, NotJson, TooLarge
 
 MEDIA_TYPE = "application/problem+json"
@@ -68,11 +68,16 @@ def problem(
         "code": code,
         "detail": detail,
     }
+    name = request_ids.current()
+    # In the header here too: what the outermost handler answers passes no layer of ours.
+    named = {} if name is None else {request_ids.HEADER: name}
+    if name is not None:
+        members["request_id"] = name
     return Response(
         json.dumps(members, separators=(",", ":"), allow_nan=False),
         status_code=status.value,
         media_type=MEDIA_TYPE,
-        headers={**HEADERS.get(status, {}), **(headers or {})},
+        headers={**HEADERS.get(status, {}), **(headers or {}), **named},
     )
 
 

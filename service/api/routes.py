@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 from fastapi import FastAPI
 
 from service.api import (
@@ -12,6 +14,7 @@ from service.api import (
     hindsights,
     keys,
     line_items,
+    metrics,
     openrtb,
     orders,
     outcomes,
@@ -20,6 +23,7 @@ from service.api import (
     tripwires,
     winding,
 )
+from service.api.envelope import Envelope
 from service.api.problems import install_handlers
 
 ROUTERS = (
@@ -36,14 +40,16 @@ ROUTERS = (
     rates.router,
     openrtb.router,
     health.router,
+    metrics.router,
     documentation.router,
 )
 
 
-def install(app: FastAPI) -> None:
+def install(app: FastAPI, answered: Callable[[int], None] = lambda _status: None) -> None:
     """Add every route and every error handler; a path with a slash too many is not found."""
     # A redirect would drop the body of a POST at many a client, and lose an outcome with it.
     app.router.redirect_slashes = False
     for router in ROUTERS:
         app.include_router(router)
     install_handlers(app)
+    app.add_middleware(Envelope, answered=answered)

@@ -49,6 +49,12 @@ def started(request: Request) -> bool:
     return getattr(request.app.state, "stories", None) is not None
 
 
+def metrics(request: Request) -> tuple[bytes, str]:
+    """The metrics as text, and their media type, of the app that this request came to."""
+    told: tuple[bytes, str] = request.app.state.metrics()
+    return told
+
+
 def stories(request: Request) -> Stories:
     """
     The stories of the app that this request came to.

@@ -1,6 +1,6 @@
 """One child of the crew, in a process of its own: a worker that serves, or the clerk.
 
-    python -m service.commands.child worker --socket 3 --worker ID --watched 4
+    python -m service.commands.child worker --socket 3 --worker ID --watched 4 --board 5 --place 0
 
 Started by the crew only. Connections are opened here, never before the process begins.
 """
@@ -19,9 +19,12 @@ import threading
 
 import uvicorn
 
+from service import spans
 from service.app import Post, clerk_of, create_app, on_duty, opened
 from service.commands.logs import log_config
 from service.errors import BidkeelError
+from service.metrics.board import Board
+from service.sampling import sample
 from service.settings import Settings, load
 
 logger = logging.getLogger(__name__)
@@ -35,20 +38,22 @@ def main(words: list[str] | None = None) -> int:
     arguments = _parser().parse_args(words)
     settings = load()
     _leave_with(arguments.watched)
+    board = Board.inherited(arguments.board)
     try:
         if arguments.role == "clerk":
-            asyncio.run(_clerk(settings))
+            asyncio.run(_clerk(settings, board, arguments.place))
         else:
-            post = Post(arguments.worker, arguments.predecessor, clerk=False)
-            serve(settings, post, socket.socket(fileno=arguments.socket))
+            ids = (arguments.worker, arguments.predecessor)
+            post = Post(*ids, clerk=False, board=board, place=arguments.place)
+            serve(settings, post, [socket.socket(fileno=one) for one in arguments.socket])
     except BidkeelError as error:
         logger.error("%s cannot work: %s", arguments.role, error)
         return 1
     return 0
 
 
-def serve(settings: Settings, post: Post, shared: socket.socket | None = None) -> None:
-    """One serving process, on the crew's socket or on the address of the settings."""
+def serve(settings: Settings, post: Post, shared: list[socket.socket]) -> None:
+    """One serving process, on sockets that listen already."""
     if post.clerk:
         # The clerk's threads live here too and would hold a price up for 5 ms at a time.
         sys.setswitchinterval(SWITCH_S)
@@ -62,18 +67,20 @@ def serve(settings: Settings, post: Post, shared: socket.socket | None = None) -
         http="httptools",
         timeout_graceful_shutdown=FINISH_S,
     )
-    uvicorn.Server(config).run(None if shared is None else [shared])
+    with spans.exported(settings.traces_endpoint):
+        uvicorn.Server(config).run(shared)
 
 
-async def _clerk(settings: Settings) -> None:
+async def _clerk(settings: Settings, board: Board, place: int) -> None:
     logging.config.dictConfig(log_config(settings.log_format))
     stop, loop = asyncio.Event(), asyncio.get_running_loop()
     for number in (signal.SIGTERM, signal.SIGINT):
         loop.add_signal_handler(number, stop.set)
-    async with opened(settings) as (database, threads):
-        clerk = clerk_of(settings, database, threads)
+    tally = board.tally(place)
+    async with opened(settings, tally) as (database, threads):
+        clerk = clerk_of(settings, database, threads, board, tally)
         await clerk.start()
-        async with on_duty(clerk.duties()):
+        async with on_duty([sample(tally, {}, {}), *clerk.duties()]):
             await stop.wait()
 
 
@@ -92,7 +99,9 @@ def _parser() -> argparse.ArgumentParser:
     parser = argparse.ArgumentParser(prog="bidkeel child", allow_abbrev=False)
     parser.add_argument("role", choices=("worker", "clerk"))
     parser.add_argument("--watched", type=int, required=True, help="closes when the crew is gone")
-    parser.add_argument("--socket", type=int, help="the listening socket")
+    parser.add_argument("--socket", type=int, action="append", help="a listening socket")
+    parser.add_argument("--board", type=int, help="the memory that the crew counts in")
+    parser.add_argument("--place", type=int, default=0, help="the row of it that is ours")
     parser.add_argument("--worker", help="this worker's id")
     parser.add_argument("--predecessor", help="the id of the worker that died in this place")
     return parser

@@ -17,6 +17,7 @@ import time
 from dataclasses import dataclass, field
 
 from service.app import new_worker
+from service.metrics.board import Board
 
 logger = logging.getLogger(__name__)
 
@@ -57,11 +58,22 @@ def listen(host: str, port: int) -> socket.socket:
         time.sleep(LOOK_S)
 
 
+def listen_on(places: list[tuple[str, int]]) -> list[socket.socket]:
+    """
+    A socket for each address.
+
+    Raises:
+        OSError: A port is taken by somebody else.
+    """
+    return [listen(host, port) for host, port in places]
+
+
 @dataclass(slots=True)
 class Berth:
     """The place of one child: who is in it, and when the next one may come."""
 
     role: str
+    place: int
     child: subprocess.Popen[bytes] | None = None
     worker: str = ""
     started_at: float = 0.0
@@ -81,13 +93,14 @@ class Crew:
     Children that are started again when they die, until a stop.
 
     Args:
-        shared: The listening socket, inherited by the workers.
+        shared: The listening sockets, inherited by the workers.
         berths: One for each child.
     """
 
-    shared: socket.socket
+    shared: list[socket.socket]
     berths: list[Berth]
     stopping: threading.Event = field(default_factory=threading.Event)
+    board: int = -1
 
     def run(self) -> None:
         """Keep everybody at work until SIGTERM or SIGINT, then let them finish and leave."""
@@ -95,6 +108,8 @@ class Crew:
             signal.signal(number, lambda *_: self.stopping.set())
         # Its other end is held by nobody else: children see it close when this process is gone.
         watched, held = os.pipe()
+        # Made before the children and outliving each of them, so that no count begins again.
+        self.board = Board.shared(len(self.berths))[1]
         try:
             while not self.stopping.is_set():
                 for berth in self.berths:
@@ -104,6 +119,7 @@ class Crew:
             self._stop()
             os.close(held)
             os.close(watched)
+            os.close(self.board)
 
     def _look(self, berth: Berth, watched: int) -> None:
         now = time.monotonic()
@@ -114,14 +130,17 @@ class Crew:
             self._start(berth, watched, now)
 
     def _start(self, berth: Berth, watched: int, now: float) -> None:
-        words = ["--watched", str(watched)]
-        passed = [watched]
+        words = ["--watched", str(watched), "--board", str(self.board)]
+        words += ["--place", str(berth.place)]
+        passed = [watched, self.board]
         if berth.role == "worker":
             # Who stood here before is dead for certain, so no freeze need wait for it.
             predecessor, berth.worker = berth.worker, new_worker()
-            words += ["--socket", str(self.shared.fileno()), "--worker", berth.worker]
+            words += ["--worker", berth.worker]
             words += ["--predecessor", predecessor] if predecessor else []
-            passed.append(self.shared.fileno())
+            for listener in self.shared:
+                words += ["--socket", str(listener.fileno())]
+                passed.append(listener.fileno())
         # Started anew and never forked, so that no connection to the database is shared.
         berth.child = subprocess.Popen(  # noqa: S603 - Our own fixed command line.
             [sys.executable, "-m", "service.commands.child", berth.role, *words], pass_fds=passed
@@ -131,7 +150,8 @@ class Crew:
 
     def _stop(self) -> None:
         # Nobody who comes now is served by a worker that is about to leave.
-        self.shared.close()
+        for listener in self.shared:
+            listener.close()
         children = [berth.child for berth in self.berths if berth.child is not None]
         for child in children:
             child.send_signal(signal.SIGTERM)

@@ -6,6 +6,8 @@ import json
 import logging
 from typing import Any
 
+from service import request_ids
+
 
 class JsonLines(logging.Formatter):
     """One JSON object a line; control characters are escaped by JSON itself."""
@@ -18,6 +20,8 @@ class JsonLines(logging.Formatter):
             "logger": record.name,
             "message": record.getMessage(),
         }
+        if (name := request_ids.current()) is not None:
+            line["request_id"] = name
         if record.exc_info:
             line["exception"] = self.formatException(record.exc_info)
         return json.dumps(line)

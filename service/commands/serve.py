@@ -7,6 +7,7 @@ import fcntl
 import logging
 import logging.config
 import os
+import socket
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -14,7 +15,7 @@ from pathlib import Path
 
 from service.app import Post, new_worker, sources_of
 from service.commands.child import serve
-from service.commands.crew import Berth, Crew, listen
+from service.commands.crew import Berth, Crew, listen_on
 from service.commands.logs import log_config
 from service.connecting import open_database
 from service.errors import Unsafe
@@ -44,7 +45,7 @@ def run(arguments: argparse.Namespace) -> int:
     with sole_server(settings):
         prepare(settings)
         if settings.database_kind == SQLITE:
-            serve(settings, Post(new_worker()))
+            serve(settings, Post(new_worker()), _listening(settings))
         else:
             _command(settings)
     return 0
@@ -52,13 +53,21 @@ def run(arguments: argparse.Namespace) -> int:
 
 def _command(settings: Settings) -> None:
     logging.config.dictConfig(log_config(settings.log_format))
+    # Here and not in the workers, so that a taken port is told to whoever started us.
+    shared = _listening(settings)
+    berths = [Berth("worker", place) for place in range(settings.workers)]
+    Crew(shared, [*berths, Berth("clerk", settings.workers)]).run()
+
+
+def _listening(settings: Settings) -> list[socket.socket]:
+    places = [(settings.host, settings.port)]
+    if settings.metrics_port:
+        places.append((settings.metrics_host, settings.metrics_port))
     try:
-        # Here and not in the workers, so that a taken port is told to whoever started us.
-        shared = listen(settings.host, settings.port)
+        return listen_on(places)
     except OSError as error:
-        raise Unsafe(f"Nothing can listen on port {settings.port}: {error.strerror}.") from error
-    berths = [Berth("worker") for _ in range(settings.workers)]
-    Crew(shared, [*berths, Berth("clerk")]).run()
+        ports = " or ".join(str(port) for _, port in places)
+        raise Unsafe(f"Nothing can listen on port {ports}: {error.strerror}.") from error
 
 
 def prepare(settings: Settings) -> None:

@@ -58,12 +58,17 @@ def require_current(database: Database) -> None:
         StoreAway: It did not answer.
     """
     found = _revision(database)
-    head = ScriptDirectory.from_config(_config()).get_current_head()
+    head = newest()
     # Newer is refused as well: old code would misread what new code has written.
     if found != head:
         raise Unsafe(
             f"The database is at schema {found}, this code at {head}: run bidkeel migrate."
         )
+
+
+def newest() -> str:
+    """The schema that this code wants."""
+    return str(ScriptDirectory.from_config(_config()).get_current_head())
 
 
 def is_empty(database: Database) -> bool:

@@ -120,7 +120,7 @@ def test_more_than_one_worker_is_refused_on_sqlite() -> None:
 
 def test_a_child_that_dies_young_is_waited_for_longer_each_time() -> None:
     """From a tenth of a second to five; one that lived for long is replaced at once."""
-    berth = Berth("worker", started_at=100.0)
+    berth = Berth("worker", 0, started_at=100.0)
     waits = []
     for _ in range(8):
         berth.died(101.0)

@@ -1,0 +1,1 @@
+"""What is counted for machines: plain integers in memory that a crew shares, told as Prometheus."""
