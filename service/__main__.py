@@ -142,6 +142,12 @@ def _drill_outage() -> ModuleType:
     return drill_outage
 
 
+def _drill_rolling() -> ModuleType:
+    from service.commands import drill_rolling
+
+    return drill_rolling
+
+
 def _drill_soak() -> ModuleType:
     from service.commands import drill_soak
 
@@ -193,6 +199,7 @@ DRILLS: dict[str, tuple[str, Load]] = {
     "night": ("let a value feed go wrong at night, and undo it byte for byte", _drill_night),
     "kill": ("kill workers and database under traffic, and check every promise", _drill_kill),
     "outage": ("stop the database under load and time the bids", _drill_outage),
+    "rolling": ("restart servers one by one under load; nobody may notice", _drill_rolling),
     "soak": ("run even traffic for minutes; nothing may grow", _drill_soak),
 }
 TRIPWIRES: dict[str, tuple[str, Load]] = {

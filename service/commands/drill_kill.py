@@ -22,7 +22,7 @@ import uvloop
 
 from service import money
 from service.commands import caller, options, report
-from service.commands.drill_nemesis import Fleet, Nemesis
+from service.commands.drill_nemesis import Fleet, Nemesis, running
 from service.commands.drill_traffic import Traffic
 from service.commands.drill_verdict import held, judge, recovery_s
 from service.commands.exchange import Auction
@@ -102,7 +102,7 @@ def drill(arguments: argparse.Namespace, folder: Path) -> Figures:
             postgresql = stack.enter_context(PostgreSQLProcess())
             url, workers = postgresql.url, arguments.workers
         settings = {"BIDKEEL_DATABASE_URL": url, "BIDKEEL_LEASE_S": str(LEASE_S)}
-        fleet = stack.enter_context(_running(Fleet(folder, workers, settings)))
+        fleet = stack.enter_context(running(Fleet(folder, workers, settings)))
         advance = stack.enter_context(_progress(arguments.kills))
         run = _Drill(arguments, fleet, postgresql, url, advance)
         return uvloop.run(run.run())
@@ -217,15 +217,6 @@ def line_items(bids: int) -> list[dict[str, object]]:
     plenty = f"{max(10, half * 8 / 1000):.6f}"
     wide = {"id": WIDE, "name": "Learns", "budget": plenty, "policy": {"method": "ucbid"}}
     return [{**shared, **tight}, {**shared, **wide}]
-
-
-@contextmanager
-def _running(fleet: Fleet) -> Iterator[Fleet]:
-    try:
-        fleet.start()
-        yield fleet
-    finally:
-        fleet.stop()
 
 
 @contextmanager

@@ -7,7 +7,8 @@ import signal
 import socket
 import time
 from collections import Counter
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -79,6 +80,16 @@ class Fleet:
     def fallen(self) -> list[ServerProcess]:
         """Workers that ended although nobody ended them."""
         return [s for s in self.up() if s.child is not None and s.child.poll() is not None]
+
+
+@contextmanager
+def running(fleet: Fleet) -> Iterator[Fleet]:
+    """Start all of a fleet, and end whoever still runs after the block."""
+    try:
+        fleet.start()
+        yield fleet
+    finally:
+        fleet.stop()
 
 
 def listens(port: int) -> bool:

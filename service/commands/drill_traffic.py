@@ -94,9 +94,15 @@ class Traffic:
         self.history.look(Read(line_item, budget, spent, held, cost, before, charged))
         return True
 
-    async def tell_again(self) -> None:
-        """Repeat, at the end, everything that was never acknowledged but for what is forgotten."""
-        rows = [row for row in self.history.sent if row.acknowledged_s is None and row.price]
+    async def tell_again(self, *, every: bool = False) -> None:
+        """
+        Repeat, at the end, what was never acknowledged.
+
+        Args:
+            every: What was forgotten on purpose too.
+        """
+        sent = self.history.sent
+        rows = [row for row in sent if row.acknowledged_s is None and (row.price or every)]
         for row in rows:
             await self._report([row], forget=False)
 
