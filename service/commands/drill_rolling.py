@@ -36,7 +36,7 @@ from service.store.database import Database
 # Far longer than the drill, so that a slice which is not given back shows as money still held.
 LEASE_S = 120
 GRACE_S = 600
-SETTLE_S = 1.0
+SETTLE_S = 0.5
 MONEY_FACTOR = 4000  # Three hands full of slices must leave no wish for money open.
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import contextlib
 from collections.abc import AsyncIterator, Awaitable, Callable
 from contextlib import asynccontextmanager
 
@@ -17,9 +18,13 @@ Handle = Callable[[asyncio.StreamReader, asyncio.StreamWriter], Awaitable[None]]
 
 
 async def answers(reader: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:
-    """Say 503, which is an answer."""
-    await reader.readuntil(b"\r\n\r\n")
-    writer.write(b"HTTP/1.1 503 Service Unavailable\r\nContent-Length: 2\r\n\r\nno")
+    """Say 503, which is an answer, as long as somebody asks."""
+    with contextlib.suppress(asyncio.IncompleteReadError):
+        while True:
+            head = await reader.readuntil(b"\r\n\r\n")
+            if head.startswith(b"POST"):
+                await reader.readexactly(len(b"{}"))
+            writer.write(b"HTTP/1.1 503 Service Unavailable\r\nContent-Length: 2\r\n\r\nno")
     writer.close()
 
 

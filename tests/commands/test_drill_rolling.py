@@ -1,4 +1,4 @@
-"""Three servers restarted one by one under load: no bid fails, no outcome is lost, no slice kept."""
+"""Servers restarted one by one under load: no bid fails, no outcome is lost, no slice kept."""
 
 from __future__ import annotations
 
