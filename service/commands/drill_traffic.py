@@ -49,6 +49,7 @@ class Traffic:
         wires: One per worker.
         auctions: Draws the next auction.
         rate: Bids a second.
+        answer_s: How long an answer is waited for.
     """
 
     def __init__(
@@ -57,10 +58,11 @@ class Traffic:
         auctions: Callable[[], Auction],
         generator: np.random.Generator,
         rate: float,
+        answer_s: float = ANSWER_S_MAX,
     ) -> None:
         self.history = History()
         self._wires, self._auctions, self._generator = wires, auctions, generator
-        self._gap_s = 1 / rate
+        self._gap_s, self._answer_s = 1 / rate, answer_s
         self._tasks: set[asyncio.Task[None]] = set()
 
     async def play(self, over: asyncio.Event) -> None:
@@ -141,7 +143,7 @@ class Traffic:
     async def _tell(self, rows: list[Sent]) -> bool:
         body = {"outcomes": [row.body for row in rows]}
         cut = self._generator.random() < SHARE_CUT
-        wait_s = self._generator.uniform(0, 0.02) if cut else ANSWER_S_MAX
+        wait_s = self._generator.uniform(0, 0.02) if cut else self._answer_s
         for row in rows:
             row.tries += 1
         reply = await self._call("outcome", lambda wire: wire.post("/v1/outcomes", body), wait_s)
@@ -152,11 +154,11 @@ class Traffic:
         self.history.answers_s.append(time.monotonic())
         return True
 
-    async def _call(self, what: str, ask: Ask, wait_s: float = ANSWER_S_MAX) -> Reply | None:
+    async def _call(self, what: str, ask: Ask, wait_s: float | None = None) -> Reply | None:
         """One call to any worker; None unless it was answered well."""
         wire = self._wires[int(self._generator.integers(len(self._wires)))]
         try:
-            async with asyncio.timeout(wait_s):
+            async with asyncio.timeout(self._answer_s if wait_s is None else wait_s):
                 reply = await ask(wire)
         except ConnectionRefusedError:
             self.history.ended(what, FAIL)
