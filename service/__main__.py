@@ -70,6 +70,12 @@ def _restore() -> ModuleType:
     return restore
 
 
+def _settings() -> ModuleType:
+    from service.commands import settings_table
+
+    return settings_table
+
+
 def _bench_real() -> ModuleType:
     from service.commands import bench_real
 
@@ -177,6 +183,7 @@ COMMANDS: dict[str, tuple[str, Load]] = {
     "demo": ("play an invented advertiser's auctions against a real server", _demo),
     "migrate": ("bring the database to the schema of this release", _migrate),
     "keys": ("add, list and end access keys", _keys),
+    "settings": ("print every setting with its default and reason", _settings),
     "audit": ("check every promise on the database as it is", _audit),
     "rebuild": ("fold learners from zero and compare with what is published", _rebuild),
     "hindsight": ("see what another cap, price, floor or method would have done", _hindsight),

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import secrets
+import time
 from pathlib import Path
 
 from alembic import command
@@ -16,6 +17,9 @@ import service
 from service.errors import StoreAway, Unsafe
 from service.store.database import Database
 
+TRIES_MAX = 20
+AGAIN_S = 0.25
+CROWDED = {"55P03", "40P01"}  # A lock that did not come in time, and a deadlock.
 ADVISORY_LOCK = 0x6B65656C  # So that two deployments cannot migrate at once.
 
 
@@ -23,8 +27,18 @@ def migrate(url: str) -> None:
     """Bring the database at `url` to the newest schema; harmless when it already is."""
     database = Database(url)
     try:
-        with database.engine.begin() as connection:
-            upgrade(connection)
+        for attempt in range(TRIES_MAX):
+            try:
+                with database.engine.begin() as connection:
+                    upgrade(connection)
+                    return
+            except OperationalError as error:
+                # Under traffic a lock may not come in time, or two may wait for one another.
+                # Nothing has happened then, and a moment later the same may succeed.
+                state = getattr(error.orig, "sqlstate", None)
+                if state not in CROWDED or attempt + 1 == TRIES_MAX:
+                    raise
+            time.sleep(AGAIN_S)
     finally:
         database.close()
 

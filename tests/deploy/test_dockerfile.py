@@ -71,7 +71,7 @@ def said(installed: Path, environment: dict[str, str], *words: str) -> str:
 
 
 def test_its_steps_install_the_service(tmp_path: Path) -> None:
-    """In a clean environment; what the service depends on is borrowed, which the long form is not."""
+    """In a clean environment; what the service depends on is borrowed, unlike in the long form."""
     # Without what it depends on, and with a build tool from here, nothing is fetched.
     installed = performed(tmp_path, {"PIP_NO_DEPS": "1", "PIP_NO_BUILD_ISOLATION": "1"})
     assert not list(installed.glob("lib/*/site-packages/pip"))

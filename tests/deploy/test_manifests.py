@@ -128,7 +128,7 @@ def test_the_compose_file_fits_the_service() -> None:
 
 
 def test_the_unit_stops_in_order_and_is_shut_in() -> None:
-    """SIGTERM first and time enough after it; systemd's own check finds nothing where it is here."""
+    """SIGTERM first, time enough after it; systemd's own check finds nothing where there is one."""
     unit = configparser.ConfigParser(strict=False, interpolation=None)
     unit.optionxform = str  # type: ignore[assignment, method-assign]
     path = DEPLOY / "systemd" / "bidkeel.service"

@@ -33,7 +33,7 @@ from service.store.migrate import migrate, require_current
 from tests.upgrade.first_release import server, unpack
 
 pytestmark = pytest.mark.anyio
-RATE = 40
+RATE = 20
 ANSWER_S = 10.0
 FILL_BIDS = 500
 GRACE_S = 600
