@@ -5,12 +5,13 @@ A plain ASGI layer, since one that waits for whole answers would cost each bid a
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Awaitable, Callable, Iterable
 
-from starlette.datastructures import Headers, MutableHeaders
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from service import request_ids
+
+_HEADER = request_ids.HEADER.lower().encode()
 
 
 class Envelope:
@@ -29,12 +30,23 @@ class Envelope:
         if scope["type"] != "http":
             await self._app(scope, receive, send)
             return
-        name = request_ids.begin(Headers(scope=scope).get(request_ids.HEADER))
+        name = request_ids.begin(_offered(scope["headers"]))
+        answered = self._answered
 
-        async def send_named(message: Message) -> None:
+        def send_named(message: Message) -> Awaitable[None]:
             if message["type"] == "http.response.start":
-                MutableHeaders(scope=message)[request_ids.HEADER] = name
-                self._answered(message["status"])
-            await send(message)
+                # A problem names it by itself.
+                kept = [pair for pair in message["headers"] if pair[0] != _HEADER]
+                message["headers"] = [*kept, (_HEADER, name.encode())]
+                answered(message["status"])
+            return send(message)
 
         await self._app(scope, receive, send_named)
+
+
+def _offered(headers: Iterable[tuple[bytes, bytes]]) -> str | None:
+    """The id that the request came with; read from the bytes, since every bid passes here."""
+    for name, value in headers:
+        if name == _HEADER:
+            return value.decode("latin-1")
+    return None
