@@ -169,9 +169,7 @@ class Feedback:
                 self._tally.add("refused_outcomes", row.code or OTHER)
         return receipts
 
-    async def _receipts(
-        self, reports: list[Report], only: frozenset[str] | None
-    ) -> list[Receipt]:
+    async def _receipts(self, reports: list[Report], only: frozenset[str] | None) -> list[Receipt]:
         read = [self._read(report, only) for report in reports]
         read = await self._find_refs(reports, read, only)
         rows = [row for row in read if isinstance(row, Booking)]
