@@ -11,22 +11,21 @@ import secrets
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from typing import NamedTuple
 
 import numpy
 
 from service import spans
 from service.backlog import Backlog
 from service.catalog import Catalog, Item
-from service.currencies import inside, leaving
+from service.currencies import inside
 from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
-from service.decision.price import Passed
-from service.decision.rule import FIXED, SECOND, Sale, sale_of
+from service.decision.rule import FIXED, SECOND, sale_of
 from service.drawing import NOTHING, Draw, drawn, odds_below, odds_of
 from service.errors import Malformed, Refusal, StoreAway
 from service.guard.control import CONTROL, MAIN
-from service.guard.fees import NONE, Fees
-from service.guard.gate import Cleared, clear, shut
+from service.guard.gate import shut
 from service.guard.hand import SliceInHand
 from service.guard.scale import Scale
 from service.guard.ticket import Ticket, TicketKeys
@@ -34,6 +33,7 @@ from service.learner import hashing
 from service.learner.hashing import Hashed
 from service.leasing import Leasing
 from service.metrics.tally import Tally
+from service.pricing import Priced, Put, gross, priced
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,25 +76,21 @@ class Clocks:
     lag_s: Callable[[], float] = float
 
 
-@dataclass(frozen=True, slots=True)
-class _Offer:
+class _Offer(NamedTuple):
     """
     A bid that may leave.
 
     Args:
-        worth: What the line item values the impression at, in nanos.
-        sent: The price that would leave, per impression and in nanos of the scale's currency.
+        priced: Its price, what set it and what the impression is worth.
+        scale: By which its price became one in another currency.
     """
 
     item: Item
-    sale: Sale
-    cleared: Cleared
+    priced: Priced
     held: SliceInHand | None
-    worth: int
     hashed: Hashed
     draw: Draw
     scale: Scale
-    sent: int
 
 
 class Bidder:
@@ -159,7 +155,7 @@ class Bidder:
         Against the same rivals the one that values it most has most to gain, whatever they bid
         and whatever the auction; so nothing of what is known of rivals needs comparing.
         """
-        asked = [replace(opportunity, line_item=name) for name in opportunity.line_items]
+        asked = [opportunity._replace(line_item=name) for name in opportunity.line_items]
         found = [await self._prepared(one, until, late=late) for one in asked]
         currencies = {item.terms.currency for item in found if isinstance(item, Item)}
         if len(currencies) > 1:
@@ -172,7 +168,7 @@ class Bidder:
             for item, one in zip(found, asked, strict=True)
         ]
         offers = [offer for offer in weighed if isinstance(offer, _Offer)]
-        best = max(offers, key=lambda offer: offer.worth, default=None)
+        best = max(offers, key=lambda offer: offer.priced.worth, default=None)
         answers = [
             _pass(one, "outbid_inside")
             if isinstance(offer, _Offer) and offer is not best
@@ -263,34 +259,20 @@ class Bidder:
         put = inside(opportunity, item.terms.currency, self._catalog.rates, wall_ms)
         if put is None:
             return _pass(opportunity, "no_rate")
-        asked, (opportunity, scale) = opportunity, put
-        least = opportunity.floor
-        fees, opportunity = item.limits.fees, _gross(opportunity, item.limits.fees)
-        opportunity = self._seen(item, opportunity)
-        plain, draw = drawn(item, opportunity, self._leasing.hand, self._feature_key)
-        rule = item.ready if plain is None else plain.ready
-        proposed = rule.propose(opportunity, self._generator)
-        if isinstance(proposed, Passed):
-            return replace(_pass(opportunity, proposed.reason), draw=draw)
+        seen = self._seen(item, put[0])
+        plain, draw = drawn(item, seen, self._leasing.hand, self._feature_key)
+        rule, set_by = (item.ready, None) if plain is None else (plain.ready, CONTROL)
         free = item.limits.cap if opportunity.test else held.free if held else 0
-        sale = sale_of(opportunity, item.terms.auction)
-        set_by = proposed.set_by if plain is None else CONTROL
-        cleared = clear(proposed.price, set_by, item.limits, sale.floor, free)
-        if isinstance(cleared, str):
-            draw = replace(draw, odds=odds_below(rule, sale.floor))
-            return replace(self._refused(item, opportunity, cleared), draw=draw)
-        sent = leaving(scale, fees.net(cleared.price), asked, fixed=sale.auction == FIXED)
-        if sent <= 0:
-            return _pass(opportunity, "price_rounds_to_zero")
-        # Between two currencies a bid at the floor may round to just below it.
-        if scale.worth(sent) < least:
-            return self._refused(item, opportunity, "under_floor")
-        cleared = Cleared(fees.gross(scale.held(sent)), cleared.set_by)
-        worth = proposed.price if proposed.value is None else proposed.value
+        sold = Put(seen, opportunity, put[1])
+        found = priced(rule, item.limits, sold, free, self._generator, set_by)
+        if not isinstance(found, Priced):
+            if found.cut:
+                draw = replace(draw, odds=odds_below(rule, found.sale.floor))
+            return replace(self._refused(item, opportunity, found.reason), draw=draw)
         # Of a price that the money cut nobody knows which one was drawn.
-        if cleared.price == proposed.price:
-            draw = replace(draw, odds=odds_of(rule, cleared.price))
-        return _Offer(item, sale, cleared, held, worth, opportunity.hashed, draw, scale, sent)
+        if found.cleared.price == found.proposed:
+            draw = replace(draw, odds=odds_of(rule, found.cleared.price))
+        return _Offer(item, found, held, seen.hashed, draw, sold.scale)
 
     def _refused(self, item: Item, opportunity: Opportunity, reason: str) -> Answer:
         if reason == "under_floor" and not opportunity.test:
@@ -313,7 +295,8 @@ class Bidder:
 
     def _commit(self, offer: _Offer, opportunity: Opportunity) -> Answer:
         """From here the price leaves: it is taken out of the slice, signed and answered."""
-        item, sale, cleared, held = offer.item, offer.sale, offer.cleared, offer.held
+        item, held = offer.item, offer.held
+        sale, cleared = offer.priced.sale, offer.priced.cleared
         # A test ticket must look like any other, but no slice and no money stand behind it.
         if held is None or opportunity.test:
             slice_id, counter, day = secrets.token_bytes(16), 0, 1
@@ -342,7 +325,7 @@ class Bidder:
         return Answer(
             opportunity.request_id,
             item.id,
-            offer.sent,
+            offer.priced.sent,
             None,
             self._keys.sign(ticket),
             ticket.ref,
@@ -359,7 +342,7 @@ class Bidder:
         if not METHODS[item.terms.method].by_features:
             return opportunity
         hashed = hashing.hashed(opportunity.features, self._feature_key)
-        return replace(opportunity, hashed=hashed)
+        return opportunity._replace(hashed=hashed)
 
     def _allowed_s(self, opportunity: Opportunity) -> float:
         asked = opportunity.deadline_ms
@@ -371,7 +354,7 @@ class Bidder:
         item = self._catalog.get(line_item)
         if item is None:
             return {"auction": opportunity.auction or "", "floor_held": None}
-        sale = sale_of(_gross(opportunity, item.limits.fees), item.terms.auction)
+        sale = sale_of(gross(opportunity, item.limits.fees), item.terms.auction)
         return {"auction": sale.auction, "floor_held": sale.floor}
 
     def _logged(self, answer: Answer, opportunity: Opportunity) -> Answer:
@@ -403,13 +386,6 @@ class Bidder:
             }
         )
         return answer
-
-
-def _gross(opportunity: Opportunity, fees: Fees) -> Opportunity:
-    """What is for sale, at what it costs."""
-    floor = fees.gross(opportunity.floor) if opportunity.floor else 0
-    price = None if opportunity.price is None else fees.gross(opportunity.price)
-    return opportunity if fees == NONE else replace(opportunity, floor=floor, price=price)
 
 
 def _check_sale(item: Item, opportunity: Opportunity) -> None:

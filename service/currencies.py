@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 from service.decision.opportunity import Opportunity
 from service.guard.scale import PLAIN, WHOLE, Rates, Scale
 
@@ -32,7 +30,7 @@ def inside(
         return None
     asked = Scale(opportunity.floor_currency or own, floor_rate, opportunity.multiplier)
     price = None if opportunity.price is None else asked.worth(opportunity.price)
-    put = replace(opportunity, floor=asked.worth(opportunity.floor), price=price)
+    put = opportunity._replace(floor=asked.worth(opportunity.floor), price=price)
     return put, Scale(currency, rate, opportunity.multiplier)
 
 

@@ -27,7 +27,7 @@ SHARED = {
     *("correcting", "ordering", "pulse", "quarantining", "spending", "teaching", "threads"),
     *("sampling", "spans", "winding"),
 }
-PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "rehearsal"}
+PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "pricing", "rehearsal"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}
 EVERYTHING |= {"metrics", "request_ids"}
 
@@ -44,6 +44,10 @@ OWN: dict[str, set[str]] = {
     "store": {"ledger", "money", "errors"},
     "rehearsal": {"decision", "learner", "guard", "ledger", "money", "errors"},
     "openrtb": {"decision.opportunity", "money", "errors"},
+    # The pure middle of a bid, which bidding and rehearsals share.
+    "pricing": {"decision", "guard"},
+    "store": {"ledger", "money", "errors"},
+    "rehearsal": {"decision", "learner", "guard", "ledger", "money", "errors", "pricing"},
     **dict.fromkeys(STORIES | SHARED, PURE | SHARED | {"store", "settings"}),
     # Made of the two stories that every caller comes to.
     "exchanging": {"bidding", "feedback", "openrtb", "decision.opportunity", "errors"},
@@ -77,6 +81,7 @@ OTHERS: dict[str, set[str]] = {
     "ledger": set(),
     "guard": set(),
     "tripwires": {"scipy.special"},
+    "pricing": {"numpy"},
     "store": {"sqlalchemy", "alembic"},
     "rehearsal": {"numpy", "scipy"},
     "openrtb": {"pydantic", "pydantic_core"},

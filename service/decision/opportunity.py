@@ -3,15 +3,18 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from types import MappingProxyType
+from typing import NamedTuple
 
 from service.learner.hashing import Hashed
 
 Feature = str | float | bool
 
 
-@dataclass(frozen=True, slots=True)
-class Opportunity:
+NONE_SAID: Mapping[str, Feature] = MappingProxyType({})
+
+
+class Opportunity(NamedTuple):
     """
     What is asked: name a price for this impression.
 
@@ -37,7 +40,7 @@ class Opportunity:
     request_id: str | None = None
     source: str = "default"
     floor: int = 0
-    features: Mapping[str, Feature] = field(default_factory=dict)
+    features: Mapping[str, Feature] = NONE_SAID
     value_hint: int | None = None
     deadline_ms: int | None = None
     test: bool = False
