@@ -32,9 +32,11 @@ from service.metrics.exposition import MEDIA_TYPE, Exposition
 from service.metrics.tally import Tally
 from service.openrtb import mapping
 from service.operating import Operator
+from service.ordering import Orders
 from service.patience import Patience
 from service.posting import Receiver
 from service.pulse import Pulse
+from service.rehearsing import Rehearsals, Stalls
 from service.sampling import sample
 from service.settings import Settings
 from service.store import incarnations
@@ -57,6 +59,7 @@ class Stories:
     feedback: Feedback
     operator: Operator
     exchange: Exchanging
+    rehearsals: Rehearsals
 
 
 @dataclass(frozen=True, slots=True)
@@ -138,8 +141,12 @@ async def running(settings: Settings, post: Post) -> AsyncIterator[Stories]:
             clerk = clerk_of(settings, database, threads, post.board, post.tally)
             await clerk.start()
             loops += clerk.duties()
-        async with on_duty(loops):
-            yield stories
+        try:
+            async with on_duty(loops):
+                yield stories
+        finally:
+            # First of all, since what waits for nobody must not hold up the stop.
+            await asyncio.to_thread(stories.rehearsals.close)
         # After the loops have ended, or leasing would fill the hand while it is being emptied.
         await upkeep.stop()
         await stories.operator.admitting.stop()
@@ -213,6 +220,7 @@ def clerk_of(
         settings.tripwire_minute_s * 1000,
         settings.tripwire_quiet_s * 1000,
         settings.tripwire_keep_days,
+        settings.rehearsal_keep_days,
     )
     secret = settings.webhook_secret.get_secret_value().encode()
     receiver = Receiver(
@@ -257,8 +265,10 @@ def _build(
     counting = Patience(database, threads).every(FLUSH_S, operator.admitting.flush)
     refusals = Patience(database, threads).every(REFUSALS_S, feedback.keep_refusals)
     loops = [pulse.run(), leasing.run(), feedback.run(), measured, counting, refusals]
-    exchange = Exchanging(bidder, feedback)
-    return Stories(bidder, feedback, operator, exchange), upkeep, [*loops, *upkeep.duties()]
+    stalls = Stalls(settings.rehearsal_processes, settings.rehearsals_waiting_max)
+    rehearsals = Rehearsals(Orders(database, threads, news), post.worker, stalls)
+    stories = Stories(bidder, feedback, operator, Exchanging(bidder, feedback), rehearsals)
+    return stories, upkeep, [*loops, *upkeep.duties()]
 
 
 def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:

@@ -30,6 +30,7 @@ from service.store import (
     leases,
     outbox,
     refusals,
+    rehearsals,
     repeats,
     tripwires,
     workers,
@@ -70,6 +71,7 @@ class Habits:
     tripwire_minute_ms: int = BUCKET_MS
     tripwire_quiet_ms: int = QUIET_MS
     tripwire_keep_days: int = 3
+    rehearsal_keep_days: int = 90
 
 
 class Clerk:
@@ -168,6 +170,8 @@ class Clerk:
         await self._until_none(refusals.prune, wall_ms - REFUSAL_KEEP_DAYS * DAY_MS)
         await self._until_none(repeats.prune, wall_ms - habits.repeat_keep_days * DAY_MS)
         await self._until_none(charting.prune, wall_ms - habits.chart_keep_days * DAY_MS)
+        await self._threads.run(self._database.write, lambda c: rehearsals.lose(c, wall_ms))
+        await self._until_none(rehearsals.prune, wall_ms - habits.rehearsal_keep_days * DAY_MS)
         # A length and not a moment, for slices age by service time and all else by the wall clock.
         await self._until_none(auditing.prune_slices, habits.slice_keep_days * DAY_MS)
         await self._until_none(outbox.prune, wall_ms - NEWS_KEEP_DAYS * DAY_MS)

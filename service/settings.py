@@ -238,6 +238,24 @@ class Settings(BaseSettings):
         description="TOML or JSON file that says what the bid requests of each OpenRTB exchange "
         "mean. Read at start and checked whole. Empty: no exchange is spoken with.",
     )
+    rehearsal_keep_days: int = Field(
+        90,
+        ge=1,
+        le=3650,
+        description="Days that rehearsals and what they came to are kept.",
+    )
+
+    rehearsal_processes: int = Field(
+        1,
+        ge=1,
+        le=16,
+        description="Rehearsals that each worker plays at once, in nice processes of their own; "
+        "they share the cores with the bids.",
+    )
+    rehearsals_waiting_max: Count = Field(
+        8, description="Rehearsals that may wait at each worker; one more is refused."
+    )
+
     ticket_keys: SecretStr = Field(
         SecretStr(""),
         description="Secret keys of tickets, comma between them, 32 characters or more each: the "

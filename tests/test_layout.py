@@ -12,6 +12,7 @@ import pytest
 from tests.house import ROOT, Source, imports, read, tracked
 
 STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk", "exchanging"}
+STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk", "rehearsing"}
 # What several stories need and none of them owns.
 SHARED = set(
     """
@@ -26,6 +27,8 @@ SHARED = {
     *("backlog", "catalog", "configuring", "connecting", "leasing", "patience", "showing"),
     *("correcting", "ordering", "pulse", "quarantining", "spending", "teaching", "threads"),
     *("sampling", "spans", "winding"),
+    "winding",
+    "rehearsal_orders",
 }
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "pricing", "rehearsal"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}

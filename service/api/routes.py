@@ -20,6 +20,7 @@ from service.api import (
     outcomes,
     rates,
     records,
+    rehearsals,
     tripwires,
     winding,
 )
@@ -39,6 +40,7 @@ ROUTERS = (
     hindsights.router,
     rates.router,
     openrtb.router,
+    rehearsals.router,
     health.router,
     metrics.router,
     documentation.router,

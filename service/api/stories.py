@@ -11,6 +11,7 @@ from service.errors import StoreAway
 from service.exchanging import Exchanging
 from service.feedback import Feedback
 from service.operating import Operator
+from service.rehearsing import Rehearsals
 
 
 class Caller(Protocol):
@@ -42,6 +43,9 @@ class Stories(Protocol):
 
     @property
     def exchange(self) -> Exchanging: ...
+
+    @property
+    def rehearsals(self) -> Rehearsals: ...
 
 
 def started(request: Request) -> bool:

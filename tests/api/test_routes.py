@@ -74,6 +74,10 @@ SCOPES = [
 STANDARD = [
     ("POST", "/openrtb/a/bids", "bid"),
     ("POST", "/openrtb/a/explain", "read"),
+    ("POST", "/v1/rehearsals", "operate"),
+    ("GET", "/v1/rehearsals", "read"),
+    ("GET", "/v1/rehearsals/7", "read"),
+    ("POST", "/v1/rehearsals/7/cancel", "operate"),
 ]
 
 
@@ -271,9 +275,13 @@ async def test_the_description_has_every_route_and_form(client: httpx.AsyncClien
     answer = await client.get("/openapi.json")
     document = answer.json()
     for method, path, scope in SCOPES:
-        operation = document["paths"][path.replace("/a", "/{line_item_id}")][method.lower()]
+        operation = document["paths"][_template(path)][method.lower()]
         assert operation["summary"].endswith(f"Scope: {scope}.")
         assert ("requestBody" in operation) == (method != "GET")
     names = {piece.partition('"')[0] for piece in answer.text.split("#/components/schemas/")[1:]}
     assert names <= document["components"]["schemas"].keys()
     assert '"type":"null"' not in answer.text
+
+
+def _template(path: str) -> str:
+    return path.replace("/a", "/{line_item_id}").replace("/7", "/{rehearsal_id}")

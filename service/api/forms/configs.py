@@ -49,11 +49,21 @@ def read_new(members: Mapping[str, object], today_ms: int) -> tuple[dict[str, An
         NotOffered: A field asks for what this release does not do.
     """
     form = read(CreateForm, members)
+    return new_config(form, today_ms), form
+
+
+def new_config(form: CreateForm, today_ms: int) -> dict[str, Any]:
+    """
+    The config of a new line item's form; what the story defaults stays absent.
+
+    Raises:
+        Malformed: Two fields contradict each other.
+    """
     config = _config(form.model_dump())
     if config["flight"].get("starts_ms") is None:
         config["flight"]["starts_ms"] = today_ms
     check_consistent(config)
-    return config, form
+    return config
 
 
 def read_changes(members: Mapping[str, object]) -> tuple[dict[str, Any], ChangeForm]:
@@ -65,7 +75,7 @@ def read_changes(members: Mapping[str, object]) -> tuple[dict[str, Any], ChangeF
         NotOffered: A field asks for what this release does not do.
     """
     form = read(ChangeForm, members)
-    changes = _config(_named(form))
+    changes = changes_of(form)
     if not changes:
         raise bad_field("", "The body names nothing to change.")
     return changes, form
@@ -80,6 +90,11 @@ def read_candidate(members: Mapping[str, object]) -> dict[str, Any]:
     """
     form = read(CandidateForm, members)
     return dict(_config(form.tripwires.model_dump(exclude_unset=True)))
+
+
+def changes_of(form: ChangeForm) -> dict[str, Any]:
+    """The part of a config that the form of a change names."""
+    return _config(_named(form))
 
 
 def check_consistent(config: Mapping[str, Any]) -> None:

@@ -18,7 +18,9 @@ Rounds = Annotated[int, Field(ge=100, le=ROUNDS_MAX, description="Rounds.")]
 Kin = Annotated[list[LineItemId], Field(max_length=20, description="Line items of one prior.")]
 
 
-def _between(low: float, high: float) -> PlainValidator:
+def between(low: float, high: float) -> PlainValidator:
+    """A number from `low` to `high`, read as a float."""
+
     def check(number: object) -> float:
         if isinstance(number, bool) or not isinstance(number, int | Decimal):
             raise ValueError("It must be a number.")
@@ -29,8 +31,8 @@ def _between(low: float, high: float) -> PlainValidator:
     return PlainValidator(check)
 
 
-Ratio = Annotated[float, _between(1.05, 100.0), WithJsonSchema({"type": "number"})]
-Threshold = Annotated[float, _between(1.0, 100.0), WithJsonSchema({"type": "number"})]
+Ratio = Annotated[float, between(1.05, 100.0), WithJsonSchema({"type": "number"})]
+Threshold = Annotated[float, between(1.0, 100.0), WithJsonSchema({"type": "number"})]
 
 
 class DriftForm(StrictForm):

@@ -22,6 +22,7 @@ from service.api.forms.orders import (
     RewindForm,
 )
 from service.api.forms.outcomes import FORMS, OutcomesForm
+from service.api.forms.rehearsals import RehearsalForm
 from service.api.forms.tripwires import CandidateForm
 
 _FORMS: tuple[type[BaseModel], ...] = (
@@ -42,6 +43,7 @@ _FORMS: tuple[type[BaseModel], ...] = (
     CandidateForm,
     HindsightForm,
     RateForm,
+    RehearsalForm,
 )
 _PROBLEM: dict[str, Any] = {
     "type": "object",
