@@ -74,6 +74,16 @@ def _settings() -> ModuleType:
     from service.commands import settings_table
 
     return settings_table
+def _rehearse() -> ModuleType:
+    from service.commands import rehearse
+
+    return rehearse
+
+
+def _bench_rehearse() -> ModuleType:
+    from service.commands import bench_rehearse
+
+    return bench_rehearse
 
 
 def _bench_real() -> ModuleType:
@@ -184,6 +194,7 @@ COMMANDS: dict[str, tuple[str, Load]] = {
     "migrate": ("bring the database to the schema of this release", _migrate),
     "keys": ("add, list and end access keys", _keys),
     "settings": ("print every setting with its default and reason", _settings),
+    "rehearse": ("try policies on a market, a log or a file of auctions", _rehearse),
     "audit": ("check every promise on the database as it is", _audit),
     "rebuild": ("fold learners from zero and compare with what is published", _rebuild),
     "hindsight": ("see what another cap, price, floor or method would have done", _hindsight),
@@ -197,6 +208,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "delay": ("see in money what late values cost", _bench_delay),
     "learn": ("time the folding of each method's lessons", _bench_learn),
     "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
+    "rehearse": ("time simulated auctions, and bids beside a rehearsal", _bench_rehearse),
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
     "reads": ("time pages, tables and charts of a large log over HTTP", _bench_reads),
     "hindsight": ("see whether hindsight's intervals hold a known truth", _bench_hindsight),

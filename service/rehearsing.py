@@ -68,7 +68,7 @@ class Rehearsals:
             Conflict: Too many wait already.
         """
         begun = list[tuple[int, Mapping[str, Any]]]()
-        order = await self._orders.read(lambda connection: _order(connection, wish))
+        order = await self._orders.read(lambda connection: order_from(connection, wish))
 
         def give(connection: Writing) -> dict[str, Any]:
             begun.clear()
@@ -252,8 +252,15 @@ def _auctions(order: Mapping[str, Any]) -> int:
     return auctions_of(order) if log is None else len(log)
 
 
-def _order(connection: Reading, wish: Mapping[str, Any]) -> dict[str, Any]:
-    """The order for a wish, with what only the database knows."""
+def order_from(connection: Reading, wish: Mapping[str, Any]) -> dict[str, Any]:
+    """
+    The order for a wish, with what only the database knows.
+
+    Raises:
+        NotFound: There is no such line item.
+        Malformed: A policy that cannot work, or a market that does not fit.
+        Conflict: The log is empty.
+    """
     if wish["line_item"] is None:
         return dict(order_of(wish, wish["config"]))
     config, kind = line_item_row(connection, wish["line_item"]).config, wish["market"]["kind"]

@@ -69,6 +69,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the command's options."""
     parser.add_argument("--seed", type=options.seed, default=7, help="chooses which bidder is us")
     parser.add_argument("--limit", type=options.count, default=None, help="only the first auctions")
+    parser.add_argument(
+        "--csv", type=Path, help="only write the auctions, for `bidkeel rehearse --csv`"
+    )
     parser.add_argument("--json", action="store_true", help="print figures for a program")
 
 
@@ -85,6 +88,8 @@ def run(arguments: argparse.Namespace) -> int:
     except timber.DataMissing as missing:
         Console(stderr=True).print(str(missing), highlight=False)
         return 2
+    if arguments.csv is not None:
+        return _write(lots, arguments.seed, arguments.csv)
     with tempfile.TemporaryDirectory(prefix="bidkeel-bench-") as directory:
         with ServerProcess(Path(directory)) as server, report.progress() as bar:
             task = bar.add_task("Real auctions over HTTP", total=len(lots))
@@ -92,6 +97,15 @@ def run(arguments: argparse.Namespace) -> int:
             outcome = uvloop.run(played)
     _show(outcome, arguments.json)
     return 0 if outcome.kept else 1
+
+
+def _write(lots: list[timber.Lot], seed: int, path: Path) -> int:
+    auctions, dropped = timber.auctions(lots, LINE_ITEM, seed)
+    count = timber.write_csv(auctions, path)
+    Console(stderr=True).print(
+        f"{count:,} auctions in {path}; left out: {report.reasons(dropped)}", highlight=False
+    )
+    return 0
 
 
 async def play(

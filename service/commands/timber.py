@@ -35,6 +35,7 @@ CITATION = (
 RATIO_MAX = 20.0
 # One times the advertised value is one unit of CPM, so a ratio has six exact decimals.
 CPM_PER_RATIO = 1
+CPM_PER_PRICE = 1000  # A price per impression as CPM.
 
 
 class DataMissing(BidkeelError):
@@ -108,6 +109,19 @@ def auctions(lots: Iterable[Lot], line_item: str, seed: int) -> tuple[list[Aucti
         else:
             dropped[reason] += 1
     return played, dropped
+
+
+def write_csv(played: Iterable[Auction], path: Path) -> int:
+    """Write auctions in the columns that `bidkeel rehearse --csv` reads; returns how many."""
+    count = 0
+    with path.open("w", encoding="utf-8", newline="") as file:
+        writer = csv.writer(file)
+        writer.writerow(["highest_competing_cpm", "value", "source"])
+        for auction in played:
+            rival = money.nanos_text(auction.rival * CPM_PER_PRICE)
+            writer.writerow([rival, money.nanos_text(auction.value or 0), DISTRIBUTION])
+            count += 1
+    return count
 
 
 def _auction(lot: Lot, ours: int, line_item: str, number: int) -> Auction:

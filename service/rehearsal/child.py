@@ -27,28 +27,11 @@ def main() -> int:
     order: dict[str, Any] = json.loads(sys.stdin.readline())
     threading.Thread(target=_leave_with_the_other_end, daemon=True).start()
     telling = _Telling()
-    result = _played(order, telling)
-    telling.line({"result": result})
-    return 0
-
-
-def _played(order: Mapping[str, Any], telling: _Telling) -> dict[str, Any]:
     # Read only now, so that it is nice already while it loads.
-    from service.guard.fees import Fees
-    from service.rehearsal import own_log
-    from service.rehearsal.csv_auctions import pieces
-    from service.rehearsal.rehearse import rehearse, replay
+    from service.rehearsal.playing import played
 
-    log = order.get("log")
-    if log is None:
-        return rehearse(order, telling.advance)
-    rows = [own_log.Logged(**row) for row in log]
-    found = own_log.auctions(rows, Fees.of(order["log_fees"]))
-    starts_ms = found[0].at_ms if found else 0
-    parts = pieces(found, order["block"])
-    told = replay(order, parts, telling.advance, starts_ms)
-    said = own_log.says(rows)
-    return {**told, "exact": said["exact"], "assumed": [*said["assumed"], *told["assumed"]]}
+    telling.line({"result": played(order, telling.advance)})
+    return 0
 
 
 class _Telling:
