@@ -71,6 +71,7 @@ OWN: dict[str, set[str]] = {
 INSTALLED = {
     *("alembic", "fastapi", "httpx", "numpy", "psycopg", "pydantic", "pydantic_settings"),
     "prometheus_client",
+    *("matplotlib", "plotly"),
     *("rich", "scipy", "sqlalchemy", "starlette", "swagger_ui_bundle", "uvicorn", "uvloop"),
 }
 

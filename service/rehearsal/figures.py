@@ -46,12 +46,17 @@ class Run:
     unknown: int
     bounded: int
     best: FixedBid | None
+    untold: int = 0
+    untold_paid: int = 0
 
 
-def run_of(columns: Columns, config: Mapping[str, Any], auction: str) -> Run:
-    """Sum one run up."""
+def run_of(
+    columns: Columns, config: Mapping[str, Any], auction: str, untold: tuple[int, int] = (0, 0)
+) -> Run:
+    """Sum one run up; of outcomes that nobody reported, their number and cost."""
     rounds = columns.least.size
-    ends = np.unique(np.linspace(0, rounds, POINTS + 1).astype(np.int64)[1:])
+    # Of a short run every auction is a point, and none lies before the first.
+    ends = np.unique(np.linspace(0, rounds, POINTS + 1).astype(np.int64))[1:]
     worth = np.where(columns.won, columns.worth, 0)
     gained = worth - columns.paid
     made = columns.bid != PASSED
@@ -71,6 +76,7 @@ def run_of(columns: Columns, config: Mapping[str, Any], auction: str) -> Run:
         int(columns.unknown.sum()),
         bounded,
         None if bounded or not columns.valued.all() else _best(columns, config, auction),
+        *untold,
     )
 
 
@@ -89,11 +95,14 @@ def policy_figures(
         "value": money_figure([run.value for run in runs]),
         "wins": figure([run.wins for run in runs]),
         "bids": figure([run.bids for run in runs]),
-        "budget_share": figure([part / budget for part in spend]),
+        "budget_share": figure(
+            [(part - run.untold_paid) / budget for part, run in zip(spend, runs, strict=True)]
+        ),
         "budget_nanos": budget,
         "cap_cpm_nanos": int(config["bid_cap"]),
         **_regret(runs, surplus),
         **_replayed(runs),
+        **_untold(runs),
         "passes": {reason: count / len(runs) for reason, count in sorted(passes.items())},
         "curve": _curve(runs),
     }
@@ -147,6 +156,16 @@ def _replayed(runs: Sequence[Run]) -> dict[str, Any]:
         "wins_of_unknown_value": figure([run.unvalued for run in runs]),
         "auctions_of_unknown_outcome": figure([run.unknown for run in runs]),
         "auctions_of_bounded_price": figure([run.bounded for run in runs]),
+    }
+
+
+def _untold(runs: Sequence[Run]) -> dict[str, Any]:
+    """What nobody reported: it is in the spend, but no budget knows of it."""
+    if not any(run.untold for run in runs):
+        return {}
+    return {
+        "outcomes_never_told": figure([run.untold for run in runs]),
+        "spend_never_told": money_figure([run.untold_paid for run in runs]),
     }
 
 

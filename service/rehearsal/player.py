@@ -117,9 +117,16 @@ class Player:
         config: A line item's internal configuration, defaults filled in.
         stage: What it plays on.
         generator: The only source of chance.
+        memory: What it has learnt before; None for nothing.
     """
 
-    def __init__(self, config: Mapping[str, Any], stage: Stage, generator: Generator) -> None:
+    def __init__(
+        self,
+        config: Mapping[str, Any],
+        stage: Stage,
+        generator: Generator,
+        memory: Memory | None = None,
+    ) -> None:
         full = staged(config, stage)
         self.terms, self._rules = Terms.from_config(full), Rules.from_config(full)
         self._stage, self._generator = stage, generator
@@ -132,7 +139,8 @@ class Player:
         self._due: list[tuple[int, int, Lesson, int, str]] = []
         self._lessons = list[Lesson]()
         self.taken, self.passes = Taken(), Counter[str]()
-        self.memory = fold(Memory.fresh(), [_created(full, stage.starts_ms)], self._rules)
+        begun = [] if memory is not None else [_created(full, stage.starts_ms)]
+        self.memory = fold(memory or Memory.fresh(), begun, self._rules)
         self.snapshot = ready(self.memory, self.terms)
 
     def play(self, auction: Auction) -> int:

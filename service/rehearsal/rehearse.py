@@ -132,7 +132,7 @@ def _on_ground(
     for seed in range(order["seeds"]):
         player = Player(config, stage, rng_of(order, seed, at))
         _play_all(player, grounds(order, [seed])[0].auctions(), order["block"], advance)
-        runs.append(run_of(player.taken.columns, config, stage.auction))
+        runs += _runs([player], config, stage)
         passes += player.passes
     return runs, passes
 
@@ -261,7 +261,10 @@ def _brakes(policies: Sequence[Mapping[str, Any]]) -> list[str]:
 
 
 def _runs(players: Sequence[Player], config: Mapping[str, Any], stage: Stage) -> list[Run]:
-    return [run_of(player.taken.columns, config, stage.auction) for player in players]
+    taken = [player.taken for player in players]
+    return [
+        run_of(one.columns, config, stage.auction, (one.untold, one.untold_paid)) for one in taken
+    ]
 
 
 def _passes(players: Sequence[Player]) -> Counter[str]:

@@ -31,12 +31,12 @@ CASES: list[dict[str, Any]] = [
 @pytest.mark.parametrize("case", range(len(CASES)))
 @pytest.mark.parametrize("block", [1, 7])
 def test_every_bid_is_the_same(method: str, case: int, block: int) -> None:
-    """Bids, wins, costs and passes of 3 seeds over 250 auctions, with budgets and a floor."""
+    """Bids, wins, costs and passes of 2 seeds over 120 auctions, with budgets and a floor."""
     own = config(method, **{"pacing": {"method": "none"}, **CASES[case]})
-    said = order(own, market=market(floor=SCALE // 4), rounds=250, seeds=3, block=block)
+    said = order(own, market=market(floor=SCALE // 4), rounds=120, seeds=2, block=block)
     stage = stage_of(said["market"])
     assert fits(own, stage)
-    together = play_many(own, stage, grounds(said, range(3)), block, lambda count: None)
+    together = play_many(own, stage, grounds(said, range(2)), block, lambda count: None)
     passes = Counter[str]()
     for seed, columns in enumerate(together.columns):
         player = Player(own, stage, rng_of(said, seed, 0))
