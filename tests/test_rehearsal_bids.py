@@ -73,10 +73,8 @@ def stage(auction: str) -> Stage:
 async def differences(worker: Worker, case: str, count: int) -> list[tuple[Any, ...]]:
     """So many opportunities of one case, answered by both; what they disagree in."""
     own, rng = built(case), np.random.default_rng(len(case))
-    memory, key = (
-        taught(own, rng),
-        bytes.fromhex(worker.database.read(lambda c: fact(c, "feature_key"))),
-    )
+    key = bytes.fromhex(worker.database.read(lambda c: fact(c, "feature_key")))
+    memory = taught(own, rng, key)
     worker.database.write(lambda c: line_items.create(c, own, 1))
     worker.database.write(lambda c: learners.begin(c, own["id"], memory.to_bytes(), 1))
     worker.bidder._generator, mirrored = np.random.default_rng(5), np.random.default_rng(5)
@@ -94,7 +92,7 @@ async def differences(worker: Worker, case: str, count: int) -> list[tuple[Any, 
         }
         wish = {
             "source": SOURCES[int(rng.integers(3))],
-            "floor": int(rng.integers(0, SCALE)) if rng.random() < 0.5 else 0,
+            "floor": int(rng.integers(0, 6 * SCALE // 5)) if rng.random() < 0.5 else 0,
             "value_hint": int(rng.integers(1, SCALE)) if rng.random() < 0.5 else None,
         }
         answer = await worker.bid(own["id"], auction=kind, features=features, **wish)
@@ -103,7 +101,7 @@ async def differences(worker: Worker, case: str, count: int) -> list[tuple[Any, 
         if bid != said(answer):
             found.append((case, number, bid, said(answer)))
     # Or nothing would be compared: at least the floor makes passes and the auctions two bids.
-    assert "under_floor" in seen
+    assert "under_floor" in seen, case
     assert len(seen) >= (2 if case == "flat" else 3), case
     return found
 
