@@ -20,6 +20,7 @@ from functools import partial
 from typing import Any
 
 from service.errors import Conflict, StoreAway
+from service.learner.rules import ACCRUES
 from service.ordering import Orders, repeat_of
 from service.rehearsal.rehearse import auctions_of
 from service.rehearsal_orders import CURVE_ASSUMED, order_of, own_law
@@ -271,7 +272,10 @@ def order_from(connection: Reading, wish: Mapping[str, Any]) -> dict[str, Any]:
     order = dict(order_of(wish, config))
     if kind != "own_log":
         return order
-    rows = past_decisions.past_decisions(connection, wish["line_item"], DECISIONS_MAX)
+    rows = past_decisions.past_decisions(
+        *(connection, wish["line_item"], DECISIONS_MAX),
+        accrues=config["value"]["arrival"] == ACCRUES,
+    )
     if not rows:
         raise Conflict("nothing_logged", "The line item has made no decision that is still kept.")
     span_ms = max(rows[-1]["at_ms"] - rows[0]["at_ms"] + 1, 1)

@@ -75,7 +75,9 @@ async def differences(worker: Worker, case: str, count: int) -> list[tuple[Any, 
     own, rng = built(case), np.random.default_rng(len(case))
     key = bytes.fromhex(worker.database.read(lambda c: fact(c, "feature_key")))
     memory = taught(own, rng, key)
-    worker.database.write(lambda c: line_items.create(c, own, 1))
+    # Paced as it was taught to be, but with money for every bid: production keeps holds.
+    kept = {**own, "daily_budget": PLENTY if own["daily_budget"] else None}
+    worker.database.write(lambda c: line_items.create(c, kept, 1))
     worker.database.write(lambda c: learners.begin(c, own["id"], memory.to_bytes(), 1))
     worker.bidder._generator, mirrored = np.random.default_rng(5), np.random.default_rng(5)
     # A budget that never binds: production bids out of slices, a rehearsal out of all there is.

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import asyncio
 import os
+import signal
 import time
 from collections.abc import AsyncIterator
 from contextlib import asynccontextmanager
@@ -12,6 +13,7 @@ from typing import Any
 import pytest
 
 from service.errors import Conflict, Malformed, NotFound
+from service.feedback import Report
 from service.ordering import Orders
 from service.rehearsing import Rehearsals, Stalls
 from tests.builders import NAME, UNIT, Worker, working
@@ -173,3 +175,66 @@ async def test_what_cannot_be_rehearsed_is_refused(migrated_url: str) -> None:
         with pytest.raises(NotFound):
             await story.one(7)
         assert worker.column("SELECT number FROM rehearsal") == []
+
+
+async def played_log(worker: Worker) -> None:
+    """Ten bids of one CPM: five won at half of it, one of them worth something, four lost."""
+    answers = await worker.bids(10)
+    for number, answer in enumerate(answers[:9]):
+        won = number < 5
+        price = {"clearing": 500_000 + number} if won else {"to_win": 2_000_000}
+        kind = "won" if won else "lost"
+        receipts = await worker.report(Report(kind, ticket=answer.ticket, **price))
+        assert receipts[0].status == "recorded"
+    await worker.report(Report("value", ref=answers[0].ref, value=2_000_000, event_id="a"))
+    await worker.upkeep.log()
+    await worker.learn()
+
+
+async def test_a_log_is_replayed_as_it_was(migrated_url: str) -> None:
+    """The flat policy wins again what it won, at the same cost, and a dearer one the losses too."""
+    async with rehearsing(migrated_url) as (worker, story):
+        await played_log(worker)
+        dear = {"policy": {"method": "flat", "price": 3_000_000}}
+        named = [{"name": "as it was", "changes": {}}, {"name": "dear", "changes": dear}]
+        asked = await story.ask(wish(policies=named, market={"kind": "own_log"}, seeds=1), "Ann")
+        shown = await until(story, asked["id"], *ENDED)
+        assert (shown["state"], shown["error"], shown["progress"]) == ("done", None, 1.0)
+        same, more = shown["result"]["policies"]
+        assert (same["wins"]["mean"], same["bids"]["mean"]) == (5.0, 10.0)
+        assert same["spend"]["mean_nanos"] == 5 * 500_000 + 10
+        # One win has had its word; of the others nobody knows, and the mean stands in for them.
+        assert same["value"]["mean_nanos"] == 2_000_000
+        assert same["wins_of_unknown_value"]["mean"] == 4
+        assert same["surplus_exact"]["mean_nanos"] == 2_000_000 - 500_000
+        assert same["surplus"]["mean_nanos"] == 10_000_000 - same["spend"]["mean_nanos"]
+        # The tenth was never answered: nobody knows what would have won it.
+        assert same["auctions_of_unknown_outcome"]["mean"] == 1
+        # At 3 CPM it wins the four lost ones too: what would have won them was told.
+        assert more["wins"]["mean"] == 9
+        assert shown["result"]["exact"]
+
+
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
+async def test_the_own_curve_is_a_market(migrated_url: str) -> None:
+    """Competing bids are drawn from what was learnt of them; what it assumes is said."""
+    async with rehearsing(migrated_url) as (worker, story):
+        await played_log(worker)
+        asked = await story.ask(wish(market={"kind": "own_curve"}), "Ann")
+        shown = await until(story, asked["id"], *ENDED)
+        assert (shown["state"], shown["error"]) == ("done", None)
+        flat = shown["result"]["policies"][0]
+        # Five of nine were won at half a CPM; the rest of the curve is beyond the bid.
+        assert 0.4 < flat["wins"]["mean"] / 200 < 0.7
+        assert any("win curve" in line for line in shown["result"]["assumed"])
+
+
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
+async def test_a_process_that_dies_is_a_failure_with_its_words(migrated_url: str) -> None:
+    """Killed by somebody else it neither hangs nor counts as done."""
+    async with rehearsing(migrated_url) as (_, story):
+        asked = await story.ask(wish(**LONG), "Ann")
+        os.kill(await process_of(story, int(asked["id"])), signal.SIGKILL)
+        shown = await until(story, asked["id"], *ENDED)
+        assert shown["state"] == "failed"
+        assert "-9" in shown["error"]

@@ -14,19 +14,23 @@ PAGE = 500  # References in one look, well below what a statement may carry.
 REF_PADDING = "=="
 
 
-def past_decisions(connection: Reading, line_item: str, newest: int) -> list[dict[str, Any]]:
+def past_decisions(
+    connection: Reading, line_item: str, newest: int, *, accrues: bool
+) -> list[dict[str, Any]]:
     """
     The newest decisions, oldest first, test bids left out.
 
     Each has `at_ms`, `source`, `floor`, `bid` (gross as the stream has it), `kind`, `price`,
     `to_win`, `auction`, `told_ms`, `value` and `valued_ms`; see `rehearsal.own_log.Logged`.
+    Where values accrue, a win of which nothing came has brought nothing so far; where each win
+    has its one word, one without it is not known.
     """
     rows = connection.execute(_NEWEST, {"id": line_item, "limit": newest}).all()
     found = list[dict[str, Any]]()
     for start in range(0, len(rows), PAGE):
         these = rows[start : start + PAGE]
         bids = [_bid(row.ref) for row in these if row.ref is not None]
-        said = _outcomes(connection, line_item, bids)
+        said = _outcomes(connection, line_item, bids, accrues)
         for row in these:
             plain = {"at_ms": row.at_ms, "source": row.source, "floor": row.floor}
             found.append({**plain, **said.get(_bid(row.ref) if row.ref else b"", {})})
@@ -38,7 +42,7 @@ def _bid(ref: str) -> bytes:
 
 
 def _outcomes(
-    connection: Reading, line_item: str, bids: list[bytes]
+    connection: Reading, line_item: str, bids: list[bytes], accrues: bool
 ) -> dict[bytes, dict[str, Any]]:
     if not bids:
         return {}
@@ -48,7 +52,7 @@ def _outcomes(
         if row.slot == "result":
             names = ("bid", "price", "to_win", "auction")
             one |= {"kind": row.kind, "told_ms": row.at_ms, **{n: body[n] for n in names}}
-            if row.kind == "won":
+            if row.kind == "won" and accrues:
                 one.setdefault("value", 0)
         elif row.kind == "value":
             one["value"] = one.get("value", 0) + body["amount"] - (body["was"] or 0)
