@@ -182,9 +182,12 @@ async def played_log(worker: Worker) -> None:
     answers = await worker.bids(10)
     for number, answer in enumerate(answers[:9]):
         won = number < 5
-        price = {"clearing": 500_000 + number} if won else {"to_win": 2_000_000}
-        kind = "won" if won else "lost"
-        receipts = await worker.report(Report(kind, ticket=answer.ticket, **price))
+        report = (
+            Report("won", ticket=answer.ticket, clearing=500_000 + number)
+            if won
+            else Report("lost", ticket=answer.ticket, to_win=2_000_000)
+        )
+        receipts = await worker.report(report)
         assert receipts[0].status == "recorded"
     await worker.report(Report("value", ref=answers[0].ref, value=2_000_000, event_id="a"))
     await worker.upkeep.log()

@@ -139,6 +139,9 @@ _MOMENTS = {
     "froze_ms": "froze_at",
     "thawed_ms": "thawed_at",
     "cleared_ms": "cleared_at",
+    "created_ms": "created_at",
+    "started_ms": "started_at",
+    "ended_ms": "ended_at",
 }
 _CONFIG: dict[str, tuple[str, Callable[[int], object]]] = {
     "budget": ("budget", money.nanos_text),

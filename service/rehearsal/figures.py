@@ -131,6 +131,12 @@ def money_figure(numbers: Sequence[float] | Numbers) -> dict[str, Any]:
     return {f"{name}_nanos": None if n is None else round(n) for name, n in found.items()}
 
 
+def price_figure(numbers: Sequence[float] | Numbers) -> dict[str, Any]:
+    """The same of prices per impression, which people read as CPM."""
+    found = figure(numbers)
+    return {f"{name}_cpm_nanos": None if n is None else round(n) for name, n in found.items()}
+
+
 def _regret(runs: Sequence[Run], surplus: Sequence[float]) -> dict[str, Any]:
     best = [run.best for run in runs]
     known = [one for one in best if one is not None]

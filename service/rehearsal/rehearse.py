@@ -23,6 +23,7 @@ from service.rehearsal.figures import (
     figure,
     money_figure,
     policy_figures,
+    price_figure,
     run_of,
 )
 from service.rehearsal.grounds import Ground, ground, is_at_once
@@ -166,7 +167,7 @@ def _before_seller(
         revenue.append(_sell(player, seller, auctions, np.sort(rivals, axis=1), order, advance))
         floors.append(seller.floor)
         players.append(player)
-    sold.append({"revenue": money_figure(revenue), "floor_at_end_cpm": money_figure(floors)})
+    sold.append({"revenue": money_figure(revenue), "floor_at_end": price_figure(floors)})
     return _runs(players, config, stage), _passes(players)
 
 
@@ -215,8 +216,8 @@ def _arena_told(found: list[dict[str, Any]], why: str | None) -> dict[str, Any]:
     late = [one for one in settled if one is not None]
     said: dict[str, Any] = {
         "revenue": money_figure([one["revenue"] for one in found]),
-        "revenue_per_auction_late_cpm": money_figure([one["revenue_late"] for one in found]),
-        "floor_at_end_cpm": money_figure([one["floor_late"] for one in found]),
+        "revenue_per_auction_late": price_figure([one["revenue_late"] for one in found]),
+        "floor_at_end": price_figure([one["floor_late"] for one in found]),
         "seeds_settled": len(late),
         "settled_at_auction": figure(late) if late else None,
     }

@@ -9,7 +9,7 @@ from typing import Any
 from service.api.forms.configs import read_new
 from service.bidding import Answer
 from service.decision.opportunity import Opportunity
-from service.errors import Refusal, Stale, StoreAway, no_such_line_item
+from service.errors import NotFound, Refusal, Stale, StoreAway, no_such_line_item
 from service.feedback import Receipt, Report
 from service.operating import Key, View
 
@@ -159,9 +159,42 @@ class Orders:
 
 
 @dataclass
+class Plays:
+    """Rehearsals of which there is the one of number 7, playing."""
+
+    calls: list[tuple[Any, ...]] = field(default_factory=list)
+
+    async def ask(
+        self, wish: dict[str, Any], actor: str, idempotency: str | None = None
+    ) -> dict[str, Any]:
+        """The rehearsal, queued."""
+        self.calls.append(("ask", wish["name"], len(wish["policies"]), actor, idempotency))
+        return {"id": "7", "state": "queued", "created_ms": 0}
+
+    async def one(self, number: int) -> dict[str, Any]:
+        """The rehearsal, half played."""
+        if number != 7:
+            raise NotFound("no_such_rehearsal", "There is no rehearsal with this id.")
+        spend = {"mean_nanos": 10**9, "error_nanos": None}
+        result = {"policies": [{"spend": spend}]}
+        return {"id": "7", "state": "done", "progress": 0.5, "result": result}
+
+    async def page(self, before: int | None, limit: int) -> list[dict[str, Any]]:
+        """As many as asked for, all of them the same."""
+        self.calls.append(("page", before, limit))
+        return [{"id": "7"}] * limit if before is None else []
+
+    async def cancel(self, number: int, reason: str, actor: str) -> dict[str, Any]:
+        """Cancelled."""
+        self.calls.append(("cancel", number, reason, actor))
+        return {"id": str(number), "state": "cancelled"}
+
+
+@dataclass
 class Stories:
-    """The three small stories."""
+    """The small stories."""
 
     bidder: Bids = field(default_factory=Bids)
     feedback: Outcomes = field(default_factory=Outcomes)
     operator: Orders = field(default_factory=Orders)
+    rehearsals: Plays = field(default_factory=Plays)
