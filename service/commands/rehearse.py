@@ -250,6 +250,10 @@ def _extra(result: Mapping[str, Any]) -> list[str]:
             f"{one['policy']} earned {difference} {result['currency']} more than {one['than']} "
             "on the same auctions"
         )
+    for policy, sold in zip(result["policies"], result.get("sellers", []), strict=False):
+        floor = report.cpm(sold["floor_at_end"]["mean_cpm_nanos"])
+        earned = f"{_amount(sold['revenue'])} {result['currency']}"
+        lines.append(f"before {policy['name']} the seller earned {earned}, last floor {floor} CPM")
     arena = result.get("arena")
     if arena is None:
         return lines

@@ -26,6 +26,7 @@ Said = Mapping[str, Any]
 
 WINDOWS = 20
 SETTLED_WITHIN = 0.05  # Of its last mean bid, for every bidder in every later window.
+LUCK = 3.0  # Standard errors.
 SETTLED_BY = 16  # Of the windows; later than that is no settling.
 
 
@@ -107,10 +108,17 @@ def arena_figures(played: Played, market: Said, auction: str) -> dict[str, Any]:
 
 
 def settled_at(bids: Nanos) -> int | None:
-    """The first auction from which every bidder's mean bid stays within 5 % of its last one."""
+    """
+    The first auction from which every bidder's mean bid stays within 5 % of its last one.
+
+    Three standard errors are allowed beside, or the luck of values would look like moving.
+    """
     windows = np.array_split(bids, WINDOWS) if len(bids) >= WINDOWS else [bids]
     means = np.stack([window.mean(axis=0) for window in windows])
-    near = (np.abs(means - means[-1]) <= SETTLED_WITHIN * np.maximum(means[-1], 1.0)).all(axis=1)
+    variances = np.stack([window.var(axis=0) / len(window) for window in windows])
+    luck = LUCK * np.sqrt(variances + variances[-1])
+    allowed = SETTLED_WITHIN * np.maximum(means[-1], 1.0) + luck
+    near = (np.abs(means - means[-1]) <= allowed).all(axis=1)
     far = np.flatnonzero(~near)
     first = int(far[-1]) + 1 if far.size else 0
     return int(sum(len(one) for one in windows[:first])) if first <= SETTLED_BY else None
