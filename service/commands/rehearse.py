@@ -130,7 +130,9 @@ def _replayed(wish: Mapping[str, Any], path: Path, auction: str) -> dict[str, An
         rows = csv_auctions.auctions(file, csv_auctions.Told())
         pieces = csv_auctions.pieces(rows, order["block"])
         result = replay(order, pieces, lambda n: bar.advance(task, n), first_ms)
-    return {**result, "file": told.plain()}
+    assumed = [*csv_auctions.ASSUMED, *result["assumed"]]
+    exact = list(csv_auctions.EXACT)
+    return {**result, "exact": exact, "assumed": assumed, "file": told.plain()}
 
 
 def _members(arguments: argparse.Namespace) -> dict[str, object]:
@@ -196,10 +198,10 @@ def _rows(result: Mapping[str, Any]) -> dict[str, list[str]]:
         "bids (count)": lambda one: _count(one["bids"]),
         "wins (count)": lambda one: _count(one["wins"]),
         f"spend ({currency})": lambda one: _amount(one["spend"]),
-        "share of budget (%)": lambda one: f"{100 * one['budget_share']['mean']:.2f}",
+        "share of budget (%)": lambda one: _per_cent(one["budget_share"]),
         f"value won ({currency})": lambda one: _amount(one["value"]),
         f"surplus ({currency})": lambda one: _amount(one["surplus"]),
-        f"best fixed bid in hindsight ({currency} CPM)": _best,
+        f"best fixed bid in hindsight, median ({currency} CPM)": _best,
         f"regret to it ({currency})": lambda one: _amount(one["regret"]),
         "passes (count per seed)": _passes,
     }
@@ -229,6 +231,11 @@ def _amount(figure: Mapping[str, Any] | None) -> str:
     mean, error = figure["mean_nanos"], figure["error_nanos"]
     units = f"{mean / money.NANOS_PER_UNIT:,.4f}"
     return units if error is None else f"{units} ± {error / money.NANOS_PER_UNIT:,.4f}"
+
+
+def _per_cent(figure: Mapping[str, Any]) -> str:
+    error = "" if figure["error"] is None else f" ± {100 * figure['error']:.2f}"
+    return f"{100 * figure['mean']:.2f}{error}"
 
 
 def _best(policy: Mapping[str, Any]) -> str:

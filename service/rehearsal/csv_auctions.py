@@ -31,6 +31,11 @@ TEXT_MAX = 64
 TOLD_MAX = 20
 STEP_MS = 1000
 HASH_KEY = b"rehearsal"
+EXACT = ("every outcome and cost: the least bid that wins is known of every auction read",)
+ASSUMED = (
+    "competing bids, floors and what came up for sale do not answer to other bids",
+    "a win of unknown value counts as bringing nothing, and teaches its price only",
+)
 
 
 class NoAuctions(ValueError):
