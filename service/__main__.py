@@ -74,6 +74,8 @@ def _settings() -> ModuleType:
     from service.commands import settings_table
 
     return settings_table
+
+
 def _rehearse() -> ModuleType:
     from service.commands import rehearse
 

@@ -11,26 +11,17 @@ import pytest
 
 from tests.house import ROOT, Source, imports, read, tracked
 
-STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk", "exchanging"}
-STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk", "rehearsing"}
+STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk", "exchanging", "rehearsing"}
 # What several stories need and none of them owns.
 SHARED = set(
     """
-    admitting backlog catalog configuring connecting correcting currencies drawing foreseeing
+    admitting backlog catalog configuring connecting correcting drawing foreseeing
     hindsights leasing ordering patience posting previewing pulse quarantining rating records
-    recounting showing spending teaching threads tripwiring winding
+    recounting rehearsal_orders sampling showing spans spending teaching threads tripwiring winding
     """.split()
 )
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "tripwires", "rehearsal"}
-PURE |= {"openrtb"}
-SHARED = {
-    *("backlog", "catalog", "configuring", "connecting", "leasing", "patience", "showing"),
-    *("correcting", "ordering", "pulse", "quarantining", "spending", "teaching", "threads"),
-    *("sampling", "spans", "winding"),
-    "winding",
-    "rehearsal_orders",
-}
-PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "pricing", "rehearsal"}
+PURE |= {"openrtb", "currencies", "pricing"}
 EVERYTHING = PURE | STORIES | SHARED | {"settings", "store", "api", "app", "commands", "__main__"}
 EVERYTHING |= {"metrics", "request_ids"}
 
@@ -38,33 +29,27 @@ EVERYTHING |= {"metrics", "request_ids"}
 OWN: dict[str, set[str]] = {
     "money": set(),
     "errors": set(),
+    "metrics": set(),
+    "request_ids": set(),
     "settings": {"errors"},
     "learner": {"errors"},
     "decision": {"learner", "money", "errors"},
     "ledger": {"money", "errors"},
     "guard": {"ledger", "money", "errors"},
     "tripwires": {"money", "errors"},
-    "store": {"ledger", "money", "errors"},
-    "rehearsal": {"decision", "learner", "guard", "ledger", "money", "errors"},
     "openrtb": {"decision.opportunity", "money", "errors"},
+    "currencies": {"decision.opportunity", "guard"},
     # The pure middle of a bid, which bidding and rehearsals share.
-    "pricing": {"decision", "guard"},
+    "pricing": {"currencies", "decision", "guard"},
     "store": {"ledger", "money", "errors"},
     "rehearsal": {"decision", "learner", "guard", "ledger", "money", "errors", "pricing"},
-    **dict.fromkeys(STORIES | SHARED, PURE | SHARED | {"store", "settings"}),
+    **dict.fromkeys(STORIES | SHARED, PURE | SHARED | {"metrics", "store", "settings"}),
     # Made of the two stories that every caller comes to.
     "exchanging": {"bidding", "feedback", "openrtb", "decision.opportunity", "errors"},
     # Of the store only its named reads, of the decision only the form a bid takes.
     "api": STORIES
     | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
-    | {"admitting", "hindsights", "openrtb", "records", "recounting"},
-    "metrics": set(),
-    "request_ids": set(),
-    **dict.fromkeys(STORIES | SHARED, PURE | SHARED | {"metrics", "store", "settings"}),
-    # Of the store only its named reads, of the decision only the form a bid takes.
-    "api": STORIES
-    | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
-    | {"request_ids"},
+    | {"admitting", "hindsights", "openrtb", "records", "recounting", "request_ids"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 

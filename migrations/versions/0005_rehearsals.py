@@ -3,7 +3,7 @@
 from alembic import op
 
 revision = "0005"
-down_revision = "0001"
+down_revision = "0004"
 
 TABLES = """
 CREATE TABLE rehearsal (

@@ -3,7 +3,7 @@
 from alembic import op
 
 revision = "0006"
-down_revision = "0004"
+down_revision = "0005"
 
 # An empty text or no number means that nobody kept it: lines of before, and of a release that
 # still runs beside this one.

@@ -27,7 +27,7 @@ from service.learner.growing import weight
 from service.learner.memory import Memory
 from service.learner.rules import ONCE, Rules
 from service.ledger.days import local_day
-from service.pricing import Priced, priced
+from service.pricing import Priced, Put, priced
 from service.rehearsal.taken import PASSED, Taken
 
 AT_ONCE_MS = 1  # The window of values that come with their win.
@@ -164,11 +164,12 @@ class Player:
         if free <= 0:
             self.passes["budget_spent" if not self._purse.held else "budget_held"] += 1
             return PASSED
-        found = priced(self.snapshot, self.limits, opportunity, free, self._generator)
+        put = Put(opportunity, opportunity)
+        found = priced(self.snapshot, self.limits, put, free, self._generator)
         if isinstance(found, Priced):
-            return self.limits.fees.net(found.cleared.price)
-        self.passes[found] += 1
-        if found == "under_floor":
+            return found.sent
+        self.passes[found.reason] += 1
+        if found.reason == "under_floor":
             body = {"rounds": 0, "under_floor": 1}
             self._tell(Lesson("tick", body, self._now(auction.at_ms)))
         return PASSED
