@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from contextlib import closing
+from inspect import getcoroutinelocals
 from pathlib import Path
 
 from service.app import clerk_of
@@ -17,7 +18,7 @@ def test_each_duty_of_the_clerk_is_named(tmp_path: Path) -> None:
     threads = Threads(1)
     with closing(Database(f"sqlite:///{tmp_path / 'bidkeel.db'}")) as database:
         duties = clerk_of(load({}), database, threads).duties()
-        names = [one.cr_frame.f_locals["duty"].__name__ for one in duties]
+        names = [getcoroutinelocals(one)["duty"].__name__ for one in duties]
         for one in duties:
             one.close()
     threads.close()
