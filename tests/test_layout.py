@@ -70,16 +70,16 @@ OTHERS: dict[str, set[str]] = {
     "ledger": set(),
     "guard": set(),
     "tripwires": {"scipy.special"},
+    "currencies": set(),
     "pricing": {"numpy"},
     "store": {"sqlalchemy", "alembic"},
     "rehearsal": {"numpy", "scipy"},
     "openrtb": {"pydantic", "pydantic_core"},
-    **{story: {"numpy", "scipy"} for story in STORIES | SHARED},
-    # Alone talks to somebody else's server.
-    "posting": {"httpx"},
     "metrics": {"prometheus_client"},
     "request_ids": set(),
     **{story: {"numpy", "scipy"} for story in STORIES | SHARED},
+    # Alone talks to somebody else's server.
+    "posting": {"httpx"},
     # Only where the settings ask for traces, and then inside the function that needs them.
     "spans": {"opentelemetry"},
     "api": {"fastapi", "starlette", "pydantic", "pydantic_core", "swagger_ui_bundle"},

@@ -36,6 +36,7 @@ def measure(connection: Reading, wall_ms: int) -> dict[str, Any]:
         "quarantined_outcomes": _one(
             connection, "SELECT count(*) FROM quarantine WHERE state = 'waiting'"
         ),
+        "tripwires_firing": _firing(connection),
         "service_clock_seconds": now,
         "ledger_read_timestamp_seconds": wall_ms,
         "incarnation": fact(connection, "incarnation"),
@@ -63,6 +64,17 @@ def _money(connection: Reading) -> dict[str, dict[str, str]]:
         }
         for row in rows
     }
+
+
+def _firing(connection: Reading) -> dict[str, int]:
+    """Open findings by rule."""
+    rows = connection.execute(
+        text(
+            "SELECT rule, count(*) AS findings FROM tripwire_finding"
+            " WHERE cleared_ms IS NULL GROUP BY rule"
+        )
+    )
+    return {row.rule: int(row.findings) for row in rows}
 
 
 def _unread(connection: Reading) -> tuple[int, int | None]:
