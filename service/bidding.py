@@ -22,7 +22,7 @@ from service.currencies import inside
 from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
 from service.decision.rule import FIXED, SECOND, sale_of
-from service.drawing import NOTHING, Draw, drawn, odds_below, odds_of
+from service.choosing import NOTHING, Draw, drawn, odds_below, odds_of
 from service.errors import Malformed, Refusal, StoreAway
 from service.guard.control import CONTROL, MAIN
 from service.guard.gate import shut

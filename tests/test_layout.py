@@ -15,7 +15,7 @@ STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk", "exchanging", 
 # What several stories need and none of them owns.
 SHARED = set(
     """
-    admitting backlog catalog configuring connecting correcting drawing foreseeing
+    admitting backlog catalog configuring choosing connecting correcting drawing foreseeing
     hindsights leasing ordering patience posting previewing pulse quarantining rating records
     recounting rehearsal_orders sampling showing spans spending teaching threads tripwiring winding
     """.split()
