@@ -45,6 +45,8 @@ from service.store.facts import fact
 from service.store.migrate import newest, require_current
 from service.threads import Threads
 from service.upkeep import Rhythm, Upkeep
+from service.watch import routes as watch
+from service.watching import Watching
 
 logger = logging.getLogger(__name__)
 
@@ -60,6 +62,8 @@ class Stories:
     operator: Operator
     exchange: Exchanging
     rehearsals: Rehearsals
+    watching: Watching
+    watch_secret: bytes
 
 
 @dataclass(frozen=True, slots=True)
@@ -121,6 +125,7 @@ def create_app(settings: Settings, post: Post | None = None) -> FastAPI:
     app.state.metrics = lambda: (told.text(), MEDIA_TYPE)
     app.state.sources = sources_of(settings)
     install(app, partial(_answered, here.tally))
+    app.include_router(watch.router)
     return app
 
 
@@ -267,7 +272,9 @@ def _build(
     loops = [pulse.run(), leasing.run(), feedback.run(), measured, counting, refusals]
     stalls = Stalls(settings.rehearsal_processes, settings.rehearsals_waiting_max)
     rehearsals = Rehearsals(Orders(database, threads, news), post.worker, stalls)
-    stories = Stories(bidder, feedback, operator, Exchanging(bidder, feedback), rehearsals)
+    watching = Watching(database, threads), _watch_secret(database)
+    exchange = Exchanging(bidder, feedback)
+    stories = Stories(bidder, feedback, operator, exchange, rehearsals, *watching)
     return stories, upkeep, [*loops, *upkeep.duties()]
 
 
@@ -278,6 +285,11 @@ def _ticket_keys(settings: Settings, database: Database) -> list[bytes]:
     if given:
         return [key.strip().encode() for key in given]
     return [bytes.fromhex(database.read(lambda connection: fact(connection, "ticket_key")))]
+
+
+def _watch_secret(database: Database) -> bytes:
+    """What sign-ins are sealed under; of the database, so that all workers know it."""
+    return bytes.fromhex(database.read(lambda connection: fact(connection, "ticket_key")))
 
 
 def _feature_key(database: Database) -> bytes:

@@ -19,6 +19,7 @@ from packaging.utils import canonicalize_name
 
 from tests.house import ROOT
 
+CARRIED = {".py", ".mako", ".html", ".css", ".js", ".svg"}
 NEEDED = ("pyproject.toml", "README.md", "LICENSE", "service", "migrations")
 
 
@@ -47,7 +48,7 @@ def wheel(tmp_path_factory: pytest.TempPathFactory) -> ZipFile:
 
 def installed_paths(folder: str, inside: str) -> set[str]:
     """Where the files of a folder of the checkout belong once installed."""
-    files = [p for p in (ROOT / folder).rglob("*") if p.suffix in {".py", ".mako"}]
+    files = [p for p in (ROOT / folder).rglob("*") if p.suffix in CARRIED]
     return {(Path(inside) / p.relative_to(ROOT / folder)).as_posix() for p in files}
 
 

@@ -207,11 +207,13 @@ def by_bearer(connection: Reading, bearer: str) -> Key | None:
     """The key behind a bearer text unless somebody ended it; its caller minds `until_ms`."""
     # Looked up by hash through an index, so no comparison of secrets can be timed.
     row = connection.execute(_FIND, {"hash": hashed(bearer)}).one_or_none()
-    if row is None:
-        return None
-    named = None if row.line_items is None else frozenset(json.loads(row.line_items))
-    ends = [moment for moment in (row.expires_ms, row.until_ms) if moment is not None]
-    return Key(row.id, row.name, frozenset(row.scopes.split()), named, min(ends, default=None))
+    return None if row is None else _key(row)
+
+
+def by_id(connection: Reading, key_id: str) -> Key | None:
+    """The key of this id unless somebody ended it; its caller minds `until_ms`."""
+    row = connection.execute(_BY_ID, {"id": key_id}).one_or_none()
+    return None if row is None else _key(row)
 
 
 def listed(connection: Reading) -> list[dict[str, Any]]:
@@ -228,6 +230,12 @@ def used(connection: Writing, key_ids: list[str], now_ms: int) -> None:
     rows = [{"id": key_id, "now": now_ms} for key_id in sorted(key_ids)]
     if rows:
         connection.execute(_USED, rows)
+
+
+def _key(row: Any) -> Key:
+    named = None if row.line_items is None else frozenset(json.loads(row.line_items))
+    ends = [moment for moment in (row.expires_ms, row.until_ms) if moment is not None]
+    return Key(row.id, row.name, frozenset(row.scopes.split()), named, min(ends, default=None))
 
 
 def _live(connection: Writing, key_id: str) -> Any:
@@ -265,6 +273,10 @@ _USED = text("UPDATE access_key SET used_ms = :now WHERE id = :id AND coalesce(u
 _FIND = text(
     "SELECT k.id, k.name, k.scopes, k.line_items, k.expires_ms, t.until_ms FROM key_text t"
     " JOIN access_key k ON k.id = t.key_id WHERE t.hash = :hash AND k.ended_ms IS NULL"
+)
+_BY_ID = text(
+    "SELECT id, name, scopes, line_items, expires_ms, NULL AS until_ms FROM access_key"
+    " WHERE id = :id AND ended_ms IS NULL"
 )
 _LISTED = text(
     "SELECT id, name, scopes, created_ms, ended_ms, line_items, expires_ms, used_ms,"

@@ -1,0 +1,274 @@
+"""Named reads of the watch page: a fixed number of queries, however many line items there are."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from sqlalchemy import text
+
+from service.ledger.days import local_day
+from service.store.database import Reading, among
+from service.store.freezes import on
+
+DAY_MS = 86_400_000
+FEED_KINDS = ("won", "lost", "billed", "value")
+# Bounds of what is read per line item shown, so that a page costs the same on a busy day.
+ENTRIES_MAX = 2000
+DECISIONS_MAX = 200
+JOURNAL_ROWS = 12
+
+Config = dict[str, Any]
+
+
+@dataclass(frozen=True, slots=True)
+class Standing:
+    """What the overview knows of one line item; money in nanos, moments in wall clock ms."""
+
+    id: str
+    config: Config
+    created_ms: int
+    balance: dict[str, int]
+    halted: bool
+    stuck: bool
+    day: dict[str, int] | None
+    waiting: int = 0
+    freezes: tuple[dict[str, Any], ...] = ()
+    open_holds: int = 0
+    holds_end_ms: int | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Overview:
+    """All line items at one moment, and the switch over all."""
+
+    wall_ms: int
+    standings: list[Standing]
+    all_freezes: list[dict[str, Any]]
+
+
+@dataclass(frozen=True, slots=True)
+class Latest:
+    """What one line item shown has done of late; prices in nanos per impression."""
+
+    feed: dict[str, int] = field(default_factory=dict)
+    feed_since_ms: int | None = None
+    bids: int = 0
+    bids_at_cap: int = 0
+    set_by: str | None = None
+    passes: int = 0
+    top_pass: str | None = None
+    price: int | None = None
+    price_ms: int | None = None
+    price_hour_ago: int | None = None
+
+
+def versions(connection: Reading) -> dict[str, int]:
+    """The version of every line item, by which a reader knows what it must read again."""
+    found = connection.execute(text("SELECT id, version FROM line_item ORDER BY id"))
+    return {row.id: int(row.version) for row in found}
+
+
+def configs(connection: Reading, ids: Iterable[str] | None) -> dict[str, tuple[Config, int]]:
+    """The configurations of these line items, or of all, each with when it was created."""
+    statement = "SELECT id, config, created_ms FROM line_item"
+    if ids is None:
+        found = connection.execute(text(statement))
+    else:
+        found = connection.execute(among(f"{statement} WHERE id IN :ids"), {"ids": list(ids)})
+    return {row.id: (json.loads(row.config), int(row.created_ms)) for row in found}
+
+
+def overview(connection: Reading, known: Mapping[str, tuple[Config, int]]) -> Overview:
+    """
+    Every line item that is known, with its money, holds and freezes.
+
+    Args:
+        known: Configurations by id, as `configs` read them.
+    """
+    clock = connection.execute(text("SELECT now_ms, seen_ms FROM service_clock")).one()
+    wall_ms, service_ms = int(clock.seen_ms), int(clock.now_ms)
+    days, slices = _days(connection, wall_ms), _slices(connection, wall_ms - service_ms)
+    waiting = _counts(connection, _WAITING)
+    frozen = _frozen(connection)
+    standings = []
+    for row in connection.execute(text(_BALANCES)):
+        if row.line_item not in known:
+            continue
+        config, created_ms = known[row.line_item]
+        day = local_day(wall_ms, config["flight"]["time_zone"])
+        standings.append(
+            Standing(
+                row.line_item,
+                config,
+                created_ms,
+                {name: int(getattr(row, name)) for name in _MONEY},
+                bool(row.halted),
+                row.stuck_seq > 0,
+                days.get((row.line_item, day)),
+                waiting.get(row.line_item, 0),
+                tuple(frozen.get(row.line_item, ())),
+                *slices.get(row.line_item, (0, None)),
+            )
+        )
+    return Overview(wall_ms, standings, list(frozen.get("*", ())))
+
+
+def latest(connection: Reading, ids: list[str], wall_ms: int) -> dict[str, Latest]:
+    """What these few line items have done of late, in five queries for all of them."""
+    found: dict[str, dict[str, Any]] = {name: {} for name in ids}
+    for row in connection.execute(_SPAN, {"ids": ids}):
+        found[row.line_item]["feed_since_ms"] = int(row.at_ms)
+    for row in connection.execute(_FEED, {"ids": ids}):
+        found[row.line_item].setdefault("feed", {})[row.kind] = int(row.at_ms)
+    within = {"ids": ids, "beyond": DECISIONS_MAX}
+    outcomes: dict[str, list[Any]] = {name: [] for name in ids}
+    for row in connection.execute(_DECIDED, {"ids": ids, "beyond": DECISIONS_MAX - 1}):
+        outcomes[row.line_item].append(row)
+    for name, rows in outcomes.items():
+        found[name].update(_decided(rows))
+    for row in connection.execute(_LAST_PRICE, {**within, "before": _NUMBER_MAX}):
+        found[row.line_item].update(price=int(row.price), price_ms=int(row.at_ms))
+    before = number_at(connection, wall_ms - 3_600_000)
+    for row in connection.execute(_LAST_PRICE, {**within, "before": before}):
+        found[row.line_item]["price_hour_ago"] = int(row.price)
+    return {name: Latest(**one) for name, one in found.items()}
+
+
+def journal(connection: Reading, ids: list[str] | None, limit: int) -> list[dict[str, Any]]:
+    """The newest rows of the journal, of these line items and the switch over all, or of all."""
+    columns = "SELECT number, at_ms, actor, action, line_item, reason FROM journal"
+    tail = " ORDER BY number DESC LIMIT :n"
+    if ids is None:
+        rows = connection.execute(text(columns + tail), {"n": limit})
+    else:
+        statement = among(f"{columns} WHERE line_item IN :ids{tail}")
+        rows = connection.execute(statement, {"ids": [*ids, "*"], "n": limit})
+    return [dict(row._mapping) for row in rows]
+
+
+def entries(connection: Reading, line_item: str, limit: int) -> list[dict[str, Any]]:
+    """The newest entries of a stream, newest first."""
+    rows = connection.execute(
+        text(
+            "SELECT seq, kind, at_ms, cost, body FROM stream WHERE line_item = :id"
+            " ORDER BY seq DESC LIMIT :n"
+        ),
+        {"id": line_item, "n": limit},
+    )
+    return [{**row._mapping, "body": json.loads(row.body)} for row in rows]
+
+
+def number_at(connection: Reading, at_ms: int) -> int:
+    """The last number of the decision log at or before a moment, found by halving; 0 for none."""
+    # Numbers are given as decisions come, so their times rise but for the queues of workers.
+    row = connection.execute(
+        text(
+            "SELECT coalesce(min(number), 0) AS low, coalesce(max(number), 0) AS high FROM decision"
+        )
+    ).one()
+    low, high = int(row.low) - 1, int(row.high)
+    while low < high:
+        middle = (low + high + 1) // 2
+        found = connection.execute(_NEXT, {"number": middle}).one_or_none()
+        if found is not None and found.at_ms <= at_ms:
+            low = middle
+        else:
+            high = middle - 1
+    return max(low, 0)
+
+
+def _days(connection: Reading, wall_ms: int) -> dict[tuple[str, str], dict[str, int]]:
+    """The rows of the days that it may be now in some zone."""
+    around = [local_day(wall_ms + step * DAY_MS, "UTC") for step in (-1, 0, 1)]
+    found = connection.execute(among(_DAYS, "days"), {"days": around})
+    names = ("target", "spent", "held", "over_spent")
+    return {(r.line_item, r.day): {name: int(getattr(r, name)) for name in names} for r in found}
+
+
+def _slices(connection: Reading, apart_ms: int) -> dict[str, tuple[int, int]]:
+    """What open bids may still cost, and until when by the wall clock."""
+    return {
+        row.line_item: (int(row.held), int(row.ends_ms) + apart_ms)
+        for row in connection.execute(text(_SLICES))
+    }
+
+
+def _counts(connection: Reading, statement: str) -> dict[str, int]:
+    return {row.line_item: int(row.n) for row in connection.execute(text(statement))}
+
+
+def _frozen(connection: Reading) -> dict[str, list[dict[str, Any]]]:
+    names = connection.execute(text("SELECT DISTINCT line_item FROM freezing")).scalars().all()
+    return on(connection, list(names))
+
+
+def _decided(rows: list[Any]) -> dict[str, Any]:
+    """Shares of the newest decisions, counted by what set the price or why there was none."""
+    bids = [row for row in rows if row.reason is None]
+    passes = [row for row in rows if row.reason is not None]
+    at_cap = sum(int(row.n) for row in bids if row.set_by == "cap")
+    return {
+        "bids": sum(int(row.n) for row in bids),
+        "bids_at_cap": at_cap,
+        "set_by": _most(bids, "set_by"),
+        "passes": sum(int(row.n) for row in passes),
+        "top_pass": _most(passes, "reason"),
+    }
+
+
+def _most(rows: list[Any], name: str) -> str | None:
+    top = max(rows, key=lambda row: (int(row.n), str(getattr(row, name))), default=None)
+    return None if top is None else str(getattr(top, name))
+
+
+_NUMBER_MAX = 2**62
+_NUMBERS = "SELECT coalesce(min(number), 0) AS low, coalesce(max(number), 0) AS high FROM decision"
+_MONEY = ("budget", "target", "spent", "held", "unfunded", "disputed", "seq", "at_ms")
+_BALANCES = (
+    "SELECT b.line_item, b.budget, b.target, b.spent, b.held, b.unfunded, b.disputed, b.seq,"
+    " b.at_ms, l.halted, l.stuck_seq FROM balance b JOIN learner l ON l.line_item = b.line_item"
+    " ORDER BY b.line_item"
+)
+# By the key of the day for each line item: one with years of days behind it costs no more.
+_DAYS = (
+    "SELECT d.line_item, d.day, d.target, d.spent, d.held, d.over_spent FROM line_item l"
+    " JOIN local_day d ON d.line_item = l.id AND d.day IN :days"
+)
+# What a slice owes may outlive its closing, until billing grace ends.
+_SLICES = (
+    "SELECT line_item, sum(held) AS held, max(ends_ms) AS ends_ms FROM ("
+    "SELECT line_item, remaining AS held, close_ms AS ends_ms FROM slice"
+    " WHERE state <> 'closed' AND remaining > 0"
+    " UNION ALL SELECT line_item, owed, billing_close_ms FROM slice WHERE owed > 0"
+    ") AS holding GROUP BY line_item"
+)
+_WAITING = (
+    "SELECT line_item, count(*) AS n FROM quarantine WHERE state = 'waiting' GROUP BY line_item"
+)
+_NEWEST = (
+    " FROM balance b JOIN stream s ON s.line_item = b.line_item"
+    f" AND s.seq > b.seq - {ENTRIES_MAX} WHERE b.line_item IN :ids"
+)
+_SPAN = among(f"SELECT b.line_item, min(s.at_ms) AS at_ms{_NEWEST} GROUP BY b.line_item")
+_KINDS = ", ".join(f"'{kind}'" for kind in FEED_KINDS)
+_FEED = among(
+    f"SELECT b.line_item, s.kind, max(s.at_ms) AS at_ms{_NEWEST} AND s.kind IN ({_KINDS})"
+    " GROUP BY b.line_item, s.kind"
+)
+_DECIDED = among(
+    "SELECT d.line_item, d.reason, d.set_by, count(*) AS n FROM line_item l JOIN decision d"
+    " ON d.line_item = l.id AND d.number >= coalesce((SELECT e.number FROM decision e"
+    " WHERE e.line_item = l.id ORDER BY e.number DESC LIMIT 1 OFFSET :beyond), 0)"
+    " WHERE l.id IN :ids AND d.test = 0 GROUP BY d.line_item, d.reason, d.set_by"
+)
+_LAST_PRICE = among(
+    "SELECT d.line_item, d.price, d.at_ms FROM line_item l JOIN decision d ON d.number ="
+    " (SELECT max(e.number) FROM decision e WHERE e.line_item = l.id AND e.number <= :before"
+    " AND e.number > coalesce((SELECT f.number FROM decision f WHERE f.line_item = l.id"
+    " AND f.number <= :before ORDER BY f.number DESC LIMIT 1 OFFSET :beyond), 0)"
+    " AND e.price IS NOT NULL AND e.test = 0) WHERE l.id IN :ids"
+)
+_NEXT = text("SELECT at_ms FROM decision WHERE number >= :number ORDER BY number LIMIT 1")

@@ -1,0 +1,1 @@
+"""The page for people who watch: rendered here, styled by us, with no other host involved."""
