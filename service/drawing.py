@@ -72,10 +72,12 @@ def spend(config: Mapping[str, Any], series: Series, created_ms: int) -> Chart:
         config["daily_budget"],
     )
     starts_ms, ends_ms = day_of(series.wall_ms, zone)
-    starts_ms = min(max(starts_ms, created_ms), series.wall_ms)
+    # The clock of the service may be a second behind the newest entry.
+    now_ms = max([series.wall_ms, *(at for at, _ in series.costs[-1:])])
+    starts_ms = min(max(starts_ms, created_ms), now_ms)
     today = [(at, cost) for at, cost in series.costs if at >= starts_ms]
     before = max(0, series.day_spent - sum(cost for _, cost in today))
-    edges = np.linspace(starts_ms, series.wall_ms, BUCKETS + 1).astype(np.int64)
+    edges = np.linspace(starts_ms, now_ms, BUCKETS + 1).astype(np.int64)
     spent = before + _cumulated(today, edges)
     traces = [_line("spent", _times(edges, zone), spent / NANOS, "accent", shape="hv")]
     plan: list[int] = []

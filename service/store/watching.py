@@ -13,7 +13,7 @@ from service.ledger.days import local_day
 from service.store.database import Reading, among
 from service.store.freezes import on
 
-DAY_MS = 86_400_000
+HOUR_MS, DAY_MS = 3_600_000, 86_400_000
 FEED_KINDS = ("won", "lost", "billed", "value")
 # Bounds of what is read per line item shown, so that a page costs the same on a busy day.
 ENTRIES_MAX = 2000
@@ -123,16 +123,15 @@ def latest(connection: Reading, ids: list[str], wall_ms: int) -> dict[str, Lates
         found[row.line_item]["feed_since_ms"] = int(row.at_ms)
     for row in connection.execute(_FEED, {"ids": ids}):
         found[row.line_item].setdefault("feed", {})[row.kind] = int(row.at_ms)
-    within = {"ids": ids, "beyond": DECISIONS_MAX}
+    within = {"ids": ids, "most": DECISIONS_MAX}
     outcomes: dict[str, list[Any]] = {name: [] for name in ids}
     for row in connection.execute(_DECIDED, {"ids": ids, "beyond": DECISIONS_MAX - 1}):
         outcomes[row.line_item].append(row)
     for name, rows in outcomes.items():
         found[name].update(_decided(rows))
-    for row in connection.execute(_LAST_PRICE, {**within, "before": _NUMBER_MAX}):
+    for row in connection.execute(_LAST_PRICE, {**within, "before": wall_ms + DAY_MS}):
         found[row.line_item].update(price=int(row.price), price_ms=int(row.at_ms))
-    before = number_at(connection, wall_ms - 3_600_000)
-    for row in connection.execute(_LAST_PRICE, {**within, "before": before}):
+    for row in connection.execute(_LAST_PRICE, {**within, "before": wall_ms - HOUR_MS}):
         found[row.line_item]["price_hour_ago"] = int(row.price)
     return {name: Latest(**one) for name, one in found.items()}
 
@@ -159,25 +158,6 @@ def entries(connection: Reading, line_item: str, limit: int) -> list[dict[str, A
         {"id": line_item, "n": limit},
     )
     return [{**row._mapping, "body": json.loads(row.body)} for row in rows]
-
-
-def number_at(connection: Reading, at_ms: int) -> int:
-    """The last number of the decision log at or before a moment, found by halving; 0 for none."""
-    # Numbers are given as decisions come, so their times rise but for the queues of workers.
-    row = connection.execute(
-        text(
-            "SELECT coalesce(min(number), 0) AS low, coalesce(max(number), 0) AS high FROM decision"
-        )
-    ).one()
-    low, high = int(row.low) - 1, int(row.high)
-    while low < high:
-        middle = (low + high + 1) // 2
-        found = connection.execute(_NEXT, {"number": middle}).one_or_none()
-        if found is not None and found.at_ms <= at_ms:
-            low = middle
-        else:
-            high = middle - 1
-    return max(low, 0)
 
 
 def _days(connection: Reading, wall_ms: int) -> dict[tuple[str, str], dict[str, int]]:
@@ -224,8 +204,6 @@ def _most(rows: list[Any], name: str) -> str | None:
     return None if top is None else str(getattr(top, name))
 
 
-_NUMBER_MAX = 2**62
-_NUMBERS = "SELECT coalesce(min(number), 0) AS low, coalesce(max(number), 0) AS high FROM decision"
 _MONEY = ("budget", "target", "spent", "held", "unfunded", "disputed", "seq", "at_ms")
 _BALANCES = (
     "SELECT b.line_item, b.budget, b.target, b.spent, b.held, b.unfunded, b.disputed, b.seq,"
@@ -258,17 +236,18 @@ _FEED = among(
     f"SELECT b.line_item, s.kind, max(s.at_ms) AS at_ms{_NEWEST} AND s.kind IN ({_KINDS})"
     " GROUP BY b.line_item, s.kind"
 )
+# By time, since that is how the log is read; a few more than the newest when moments are equal.
 _DECIDED = among(
     "SELECT d.line_item, d.reason, d.set_by, count(*) AS n FROM line_item l JOIN decision d"
-    " ON d.line_item = l.id AND d.number >= coalesce((SELECT e.number FROM decision e"
-    " WHERE e.line_item = l.id ORDER BY e.number DESC LIMIT 1 OFFSET :beyond), 0)"
+    " ON d.line_item = l.id AND d.at_ms >= coalesce((SELECT e.at_ms FROM decision e WHERE"
+    " e.line_item = l.id ORDER BY e.at_ms DESC, e.number DESC LIMIT 1 OFFSET :beyond), 0)"
     " WHERE l.id IN :ids AND d.test = 0 GROUP BY d.line_item, d.reason, d.set_by"
 )
+# Among so many only: a line item that passes all day must not be read back to the morning.
 _LAST_PRICE = among(
     "SELECT d.line_item, d.price, d.at_ms FROM line_item l JOIN decision d ON d.number ="
-    " (SELECT max(e.number) FROM decision e WHERE e.line_item = l.id AND e.number <= :before"
-    " AND e.number > coalesce((SELECT f.number FROM decision f WHERE f.line_item = l.id"
-    " AND f.number <= :before ORDER BY f.number DESC LIMIT 1 OFFSET :beyond), 0)"
-    " AND e.price IS NOT NULL AND e.test = 0) WHERE l.id IN :ids"
+    " (SELECT e.number FROM (SELECT number, at_ms, price, test FROM decision"
+    " WHERE line_item = l.id AND at_ms <= :before ORDER BY at_ms DESC, number DESC LIMIT :most) e"
+    " WHERE e.price IS NOT NULL AND e.test = 0 ORDER BY e.at_ms DESC, e.number DESC LIMIT 1)"
+    " WHERE l.id IN :ids"
 )
-_NEXT = text("SELECT at_ms FROM decision WHERE number >= :number ORDER BY number LIMIT 1")

@@ -85,7 +85,7 @@ _ENTRIES = text(
 )
 _BIDS = text(
     "SELECT at_ms, price, set_by FROM decision WHERE line_item = :id AND price IS NOT NULL"
-    " AND test = 0 ORDER BY number DESC LIMIT :limit"
+    " AND test = 0 ORDER BY at_ms DESC, number DESC LIMIT :limit"
 )
 _DELAYS = text(
     "SELECT v.at_ms - w.at_ms AS delay FROM stream v JOIN stream w ON w.bid = v.bid"

@@ -98,7 +98,7 @@ def sentence(alarm: Alarm) -> str:
     """What somebody must know in the first ten seconds, as one sentence."""
     if alarm.total == 0:
         return "There are no line items yet."
-    items = "line item needs" if alarm.needing == 1 else "line items need"
+    items = "line items needs" if alarm.needing == 1 else "line items need"
     if alarm.needing == 0:
         said = f"None of {alarm.total:,} line items needs you"
     elif alarm.total == 1:
