@@ -19,7 +19,7 @@ from packaging.utils import canonicalize_name
 
 from tests.house import ROOT
 
-CARRIED = {".py", ".mako", ".html", ".css", ".js", ".svg"}
+CARRIED = {".py", ".mako", ".html", ".css", ".js", ".png"}
 NEEDED = ("pyproject.toml", "README.md", "LICENSE", "service", "migrations")
 
 

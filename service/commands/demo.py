@@ -61,11 +61,14 @@ def run(arguments: argparse.Namespace) -> int:
     signal.signal(signal.SIGTERM, signal.default_int_handler)
     with tempfile.TemporaryDirectory(prefix="bidkeel-demo-") as directory:
         with ServerProcess(Path(directory)) as server:
+            _say_where(server)
             started = time.monotonic()
             figures = _played(server, arguments.auctions, arguments.seed)
             _show(figures, time.monotonic() - started, arguments.json)
             if arguments.keep_serving:
                 _keep_serving(server)
+            else:
+                _say_how_to_keep()
     return 0 if all(of_one.kept for of_one in figures) else 1
 
 
@@ -193,10 +196,26 @@ def _data_of(of_one: Figures) -> dict[str, object]:
     }
 
 
+def _say_where(server: ServerProcess) -> None:
+    """Where people can watch while it plays; on the error output, as the progress is."""
+    console = Console(stderr=True, soft_wrap=True)
+    console.print(f"Watch page, while the demo runs: {server.address}/watch", highlight=False)
+    console.print(f"Sign in with the key {server.key}", highlight=False)
+
+
+def _say_how_to_keep() -> None:
+    Console(stderr=True).print(
+        "The demo's server and its watch page have ended. `bidkeel demo --keep-serving` leaves "
+        "them running; `bidkeel serve` starts a server of your own.",
+        style="dim",
+    )
+
+
 def _keep_serving(server: ServerProcess) -> None:
-    console = Console(stderr=True)
-    console.print(f"Serving at {server.address}, interactive API page {server.address}/docs")
-    console.print(f"Admin key: {server.key}   (Ctrl-C ends the server and deletes its data.)")
+    console = Console(stderr=True, soft_wrap=True)
+    console.print(f"Watch page at {server.address}/watch, key {server.key}", highlight=False)
+    console.print(f"Interactive API page at {server.address}/docs", highlight=False)
+    console.print("Ctrl-C ends the server and deletes its data.")
     try:
         server.wait()
     except KeyboardInterrupt:

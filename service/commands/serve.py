@@ -44,6 +44,7 @@ def run(arguments: argparse.Namespace) -> int:
     # Before the database is touched, so that two first starts cannot both prepare it.
     with sole_server(settings):
         prepare(settings)
+        _say_where(settings)
         if settings.database_kind == SQLITE:
             serve(settings, Post(new_worker()), _listening(settings))
         else:
@@ -68,6 +69,14 @@ def _listening(settings: Settings) -> list[socket.socket]:
     except OSError as error:
         ports = " or ".join(str(port) for _, port in places)
         raise Unsafe(f"Nothing can listen on port {ports}: {error.strerror}.") from error
+
+
+def _say_where(settings: Settings) -> None:
+    # Programs that read the log as JSON would stumble over a sentence.
+    if settings.log_format == "text":
+        host = f"[{settings.host}]" if ":" in settings.host else settings.host
+        sys.stdout.write(f"Watch page: http://{host}:{settings.port}/watch\n")
+        sys.stdout.flush()
 
 
 def prepare(settings: Settings) -> None:

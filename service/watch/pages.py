@@ -35,8 +35,8 @@ HEADERS = {
 PRIVATE = {**HEADERS, "Cache-Control": "no-store"}
 # Every address of a file carries the version of what is in it, so it may be kept for a year.
 KEPT = {**HEADERS, "Cache-Control": "public, max-age=31536000, immutable"}
-TYPES = {"css": "text/css", "js": "text/javascript", "svg": "image/svg+xml"}
-OURS = ("watch.css", "charts.css", "watch.js", "charts.js", "mark.svg")
+TYPES = {"css": "text/css", "js": "text/javascript", "png": "image/png"}
+OURS = ("watch.css", "charts.css", "watch.js", "charts.js", "mark.png")
 LIBRARY = "plotly.min.js"
 
 

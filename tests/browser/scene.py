@@ -127,7 +127,7 @@ def chromium() -> str:
 
 def axe() -> str:
     """The script that looks for what keeps people out: AXE_PATH names another place."""
-    installed = ROOT / ".venv" / "axe" / "node_modules" / "axe-core" / "axe.min.js"
+    installed = ROOT / ".venv/node/axe-core/node_modules/axe-core/axe.min.js"
     return Path(os.environ.get("AXE_PATH") or installed).read_text("utf-8")
 
 

@@ -37,7 +37,9 @@ def look(page: Page, name: str, folder: Path, script: str) -> None:
     assert page.evaluate("document.documentElement.scrollWidth <= window.innerWidth"), name
     assert page.evaluate(BEYOND) == [], name
     page.evaluate(script)
-    found: list[dict[str, Any]] = page.evaluate("axe.run({resultTypes: ['violations']})")["violations"]
+    found: list[dict[str, Any]] = page.evaluate("axe.run({resultTypes: ['violations']})")[
+        "violations"
+    ]
     grave = [one for one in found if one["impact"] in ("serious", "critical")]
     assert [(one["id"], one["nodes"][0]["html"]) for one in grave] == [], name
 

@@ -195,6 +195,7 @@ def test_the_first_start_shows_a_key_that_works(tmp_path: Path) -> None:
 
     assert answer.status_code == 200
     assert again.count("admin key") == log.count("admin key") == 1
+    assert f"Watch page: http://127.0.0.1:{server.port}/watch" in log
 
 
 def test_a_second_server_on_one_file_is_refused(tmp_path: Path) -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import asyncio
 import io
 import json
+import re
 import subprocess
 from collections.abc import Iterator
 from dataclasses import replace
@@ -111,6 +112,8 @@ def test_the_command_ends_well_and_prints_figures_for_a_program() -> None:
         check=True,
         text=True,
     )
+    assert re.search(r"Watch page, while the demo runs: http://127.0.0.1:[0-9]+/watch", done.stderr)
+    assert "--keep-serving" in done.stderr
     figures = json.loads(done.stdout)
     assert [one["line_item"] for one in figures["line_items"]] == [
         planned.id for planned in garden.line_items()
