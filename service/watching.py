@@ -24,8 +24,8 @@ T = TypeVar("T")
 ROWS = 25
 JOURNAL_ROWS = 12
 ENTRIES = 20
-FRESH_S = 1.5
-# Looking at ten thousand line items takes a while; it may take a twentieth of the time at most.
+FRESH_S, FRESH_S_MAX = 1.5, 10.0
+# Looking at ten thousand line items is work; it may take a twentieth of the time, as a rule.
 REST_SHARE = 20.0
 CHARTS_FRESH_S = 5.0
 Sees = Callable[[str], bool]
@@ -127,7 +127,7 @@ class Watching:
             known = watching.configs(connection, [line_item])
             if line_item not in known:
                 raise no_such_line_item()
-            overview = watching.overview(connection, known)
+            overview = watching.overview(connection, known, line_item)
             return Sheet(
                 judge(overview)[0],
                 watching.latest(connection, [line_item], overview.wall_ms)[line_item],
@@ -170,10 +170,8 @@ class Watching:
         async with self._turn:
             kept = self._kept
             if kept.overview is None or time.monotonic() >= kept.until_s:
-                began_s = time.monotonic()
-                overview, judged = await self._read(self._judged)
-                took_s = time.monotonic() - began_s
-                fresh_s = max(FRESH_S, REST_SHARE * took_s)
+                overview, judged, took_s = await self._read(self._judged)
+                fresh_s = min(max(FRESH_S, REST_SHARE * took_s), FRESH_S_MAX)
                 kept = self._kept = _Kept(time.monotonic() + fresh_s, judged, overview)
             # Set together with the rest above; the type cannot say so.
             return kept.overview or Overview(0, [], []), kept.judged
@@ -182,8 +180,13 @@ class Watching:
         """Read anew at the next look, as after an order."""
         self._kept = _Kept()
 
-    def _judged(self, connection: Reading) -> tuple[Overview, list[Judged]]:
-        """In one view; configurations are parsed again only where their version has changed."""
+    def _judged(self, connection: Reading) -> tuple[Overview, list[Judged], float]:
+        """
+        In one view, with the seconds of work that it took.
+
+        Configurations are parsed again only where their version has changed.
+        """
+        began_s = time.thread_time()
         now = watching.versions(connection)
         changed = [name for name, version in now.items() if self._versions.get(name) != version]
         if changed:
@@ -192,7 +195,8 @@ class Watching:
             self._configs = {**self._configs, **watching.configs(connection, some)}
         self._versions = now
         overview = watching.overview(connection, self._configs)
-        return overview, judge(overview)
+        judged = judge(overview)
+        return overview, judged, time.thread_time() - began_s
 
     async def _read(self, work: Callable[[Reading], T]) -> T:
         return await self._threads.run(self._database.read, work)

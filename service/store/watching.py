@@ -81,30 +81,35 @@ def configs(connection: Reading, ids: Iterable[str] | None) -> dict[str, tuple[C
     return {row.id: (json.loads(row.config), int(row.created_ms)) for row in found}
 
 
-def overview(connection: Reading, known: Mapping[str, tuple[Config, int]]) -> Overview:
+def overview(
+    connection: Reading, known: Mapping[str, tuple[Config, int]], only: str | None = None
+) -> Overview:
     """
     Every line item that is known, with its money, holds and freezes.
 
     Args:
         known: Configurations by id, as `configs` read them.
+        only: The one line item that is wanted, instead of all.
     """
     clock = connection.execute(text("SELECT now_ms, seen_ms FROM service_clock")).one()
     wall_ms, service_ms = int(clock.seen_ms), int(clock.now_ms)
-    days, slices = _days(connection, wall_ms), _slices(connection, wall_ms - service_ms)
-    waiting = _counts(connection, _WAITING)
-    frozen = _frozen(connection)
+    days = _days(connection, wall_ms, only)
+    slices = _slices(connection, wall_ms - service_ms, only)
+    waiting, frozen = _waiting(connection, only), _frozen(connection)
+    # There are few zones and many line items.
+    day_in = {zone: local_day(wall_ms, zone) for zone in _zones(known)}
     standings = []
-    for row in connection.execute(text(_BALANCES)):
+    for row in _of(connection, _BALANCES, only):
         if row.line_item not in known:
             continue
         config, created_ms = known[row.line_item]
-        day = local_day(wall_ms, config["flight"]["time_zone"])
+        day = day_in[config["flight"]["time_zone"]]
         standings.append(
             Standing(
                 row.line_item,
                 config,
                 created_ms,
-                {name: int(getattr(row, name)) for name in _MONEY},
+                dict(zip(_MONEY, row[:8], strict=True)),
                 bool(row.halted),
                 row.stuck_seq > 0,
                 days.get((row.line_item, day)),
@@ -160,24 +165,41 @@ def entries(connection: Reading, line_item: str, limit: int) -> list[dict[str, A
     return [{**row._mapping, "body": json.loads(row.body)} for row in rows]
 
 
-def _days(connection: Reading, wall_ms: int) -> dict[tuple[str, str], dict[str, int]]:
+def _of(connection: Reading, statement: str, only: str | None, **values: Any) -> Any:
+    """Run a statement for all line items, or for one: its place in the text is marked."""
+    given = values if only is None else {**values, "only": only}
+    for name in ("l.id", "b.line_item", "line_item"):
+        wanted = "" if only is None else f" AND {name} = :only"
+        statement = statement.replace(f" AND_ONLY({name})", wanted)
+    return connection.execute(
+        among(statement, "days") if "days" in values else text(statement), given
+    )
+
+
+def _zones(known: Mapping[str, tuple[Config, int]]) -> set[str]:
+    return {config["flight"]["time_zone"] for config, _ in known.values()}
+
+
+def _days(
+    connection: Reading, wall_ms: int, only: str | None
+) -> dict[tuple[str, str], dict[str, int]]:
     """The rows of the days that it may be now in some zone."""
     around = [local_day(wall_ms + step * DAY_MS, "UTC") for step in (-1, 0, 1)]
-    found = connection.execute(among(_DAYS, "days"), {"days": around})
+    found = _of(connection, _DAYS, only, days=around)
     names = ("target", "spent", "held", "over_spent")
     return {(r.line_item, r.day): {name: int(getattr(r, name)) for name in names} for r in found}
 
 
-def _slices(connection: Reading, apart_ms: int) -> dict[str, tuple[int, int]]:
+def _slices(connection: Reading, apart_ms: int, only: str | None) -> dict[str, tuple[int, int]]:
     """What open bids may still cost, and until when by the wall clock."""
     return {
         row.line_item: (int(row.held), int(row.ends_ms) + apart_ms)
-        for row in connection.execute(text(_SLICES))
+        for row in _of(connection, _SLICES, only)
     }
 
 
-def _counts(connection: Reading, statement: str) -> dict[str, int]:
-    return {row.line_item: int(row.n) for row in connection.execute(text(statement))}
+def _waiting(connection: Reading, only: str | None) -> dict[str, int]:
+    return {row.line_item: int(row.n) for row in _of(connection, _WAITING, only)}
 
 
 def _frozen(connection: Reading) -> dict[str, list[dict[str, Any]]]:
@@ -206,25 +228,27 @@ def _most(rows: list[Any], name: str) -> str | None:
 
 _MONEY = ("budget", "target", "spent", "held", "unfunded", "disputed", "seq", "at_ms")
 _BALANCES = (
-    "SELECT b.line_item, b.budget, b.target, b.spent, b.held, b.unfunded, b.disputed, b.seq,"
-    " b.at_ms, l.halted, l.stuck_seq FROM balance b JOIN learner l ON l.line_item = b.line_item"
-    " ORDER BY b.line_item"
+    "SELECT b.budget, b.target, b.spent, b.held, b.unfunded, b.disputed, b.seq, b.at_ms,"
+    " b.line_item, l.halted, l.stuck_seq FROM balance b JOIN learner l ON l.line_item = b.line_item"
+    " WHERE 1 = 1 AND_ONLY(b.line_item) ORDER BY b.line_item"
 )
 # By the key of the day for each line item: one with years of days behind it costs no more.
 _DAYS = (
     "SELECT d.line_item, d.day, d.target, d.spent, d.held, d.over_spent FROM line_item l"
-    " JOIN local_day d ON d.line_item = l.id AND d.day IN :days"
+    " JOIN local_day d ON d.line_item = l.id AND d.day IN :days AND_ONLY(l.id)"
 )
 # What a slice owes may outlive its closing, until billing grace ends.
 _SLICES = (
     "SELECT line_item, sum(held) AS held, max(ends_ms) AS ends_ms FROM ("
     "SELECT line_item, remaining AS held, close_ms AS ends_ms FROM slice"
-    " WHERE state <> 'closed' AND remaining > 0"
+    " WHERE state <> 'closed' AND remaining > 0 AND_ONLY(line_item)"
     " UNION ALL SELECT line_item, owed, billing_close_ms FROM slice WHERE owed > 0"
+    " AND_ONLY(line_item)"
     ") AS holding GROUP BY line_item"
 )
 _WAITING = (
-    "SELECT line_item, count(*) AS n FROM quarantine WHERE state = 'waiting' GROUP BY line_item"
+    "SELECT line_item, count(*) AS n FROM quarantine WHERE state = 'waiting' AND_ONLY(line_item)"
+    " GROUP BY line_item"
 )
 _NEWEST = (
     " FROM balance b JOIN stream s ON s.line_item = b.line_item"

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import time
 from typing import Any
 
 from fastapi import APIRouter
@@ -45,7 +46,8 @@ async def get_front(request: Request) -> Response:
 @shown
 async def get_front_now(request: Request) -> Response:
     """The part of the front page that is renewed every few seconds."""
-    return page("board_now.html", **await _board(request, await viewer(request)))
+    shown = await _board(request, await viewer(request))
+    return _aged(page("board_now.html", **shown), shown["board"].wall_ms)
 
 
 @router.get("/watch/line-items/{line_item_id}")
@@ -64,7 +66,13 @@ async def get_line_item_now(request: Request) -> Response:
     """The part of a line item's page that is renewed every few seconds."""
     who = await viewer(request)
     sheet = await stories(request).watching.sheet(line_item_of(request, who))
-    return page("sheet_now.html", sheet=sheet, who=who)
+    return _aged(page("sheet_now.html", sheet=sheet, who=who), sheet.wall_ms)
+
+
+def _aged(answer: Response, wall_ms: int) -> Response:
+    """Say how old it is by the clocks of this side: those of a phone may be wrong."""
+    answer.headers["X-Age-Ms"] = str(max(0, time.time_ns() // 1_000_000 - wall_ms))
+    return answer
 
 
 @router.get("/watch/line-items/{line_item_id}/charts")

@@ -59,7 +59,7 @@
       if (!answer.ok) throw new Error(String(answer.status));
       const text = await answer.text();
       if (!held) put(text);
-      at = Date.now();
+      at = Date.now() - Number(answer.headers.get("X-Age-Ms") || 0);
       failures = 0;
       say("");
       document.dispatchEvent(new Event("renewed"));
