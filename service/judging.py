@@ -167,6 +167,7 @@ def _alarming(one: Standing, sources: set[str]) -> tuple[str, ...]:
         ("prices above the bid are in dispute", one.balance["disputed"] > 0),
         (f"{one.waiting} outcomes are set aside in quarantine", one.waiting > 0),
     )
+    said += [f"tripwire, {finding}" for finding in one.findings]
     # Whoever closed a line item has seen what was left of it.
     return () if "closed" in sources else (*said, *(text for text, holds in cases if holds))
 

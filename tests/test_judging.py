@@ -68,6 +68,7 @@ def test_stopped_only_open_bids_are_at_risk() -> None:
         ({"freezes": (FREEZE, FREEZE | {"source": "closed"})}, "closed", False),
         ({"halted": True}, "halted", True),
         ({"stuck": True}, "bids", True),
+        ({"findings": ("value rate: 80 where 16 are usual",)}, "bids", True),
         ({"waiting": 3}, "bids", True),
         ({"balance": {"unfunded": 1}}, "bids", True),
         ({"balance": {"disputed": 1}}, "bids", True),

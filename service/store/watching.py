@@ -7,7 +7,7 @@ from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
-from sqlalchemy import text
+from sqlalchemy import inspect, text
 
 from service.ledger.days import local_day
 from service.store.database import Reading, among
@@ -38,6 +38,7 @@ class Standing:
     freezes: tuple[dict[str, Any], ...] = ()
     open_holds: int = 0
     holds_end_ms: int | None = None
+    findings: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -96,6 +97,7 @@ def overview(
     days = _days(connection, wall_ms, only)
     slices = _slices(connection, wall_ms - service_ms, only)
     waiting, frozen = _waiting(connection, only), _frozen(connection)
+    findings = _findings(connection, only)
     # There are few zones and many line items.
     day_in = {zone: local_day(wall_ms, zone) for zone in _zones(known)}
     standings = []
@@ -116,6 +118,7 @@ def overview(
                 waiting.get(row.line_item, 0),
                 tuple(frozen.get(row.line_item, ())),
                 *slices.get(row.line_item, (0, None)),
+                tuple(findings.get(row.line_item, ())),
             )
         )
     return Overview(wall_ms, standings, list(frozen.get("*", ())))
@@ -202,6 +205,16 @@ def _waiting(connection: Reading, only: str | None) -> dict[str, int]:
     return {row.line_item: int(row.n) for row in _of(connection, _WAITING, only)}
 
 
+def _findings(connection: Reading, only: str | None) -> dict[str, list[str]]:
+    """What tripwires see now, in their own words, the oldest first."""
+    found: dict[str, list[str]] = {}
+    # A database that no tripwire has watched yet has no such table.
+    if inspect(connection).has_table("tripwire_finding"):
+        for row in _of(connection, _FINDINGS, only):
+            found.setdefault(row.line_item, []).append(f"{row.rule.replace('_', ' ')}: {row.saw}")
+    return found
+
+
 def _frozen(connection: Reading) -> dict[str, list[dict[str, Any]]]:
     names = connection.execute(text("SELECT DISTINCT line_item FROM freezing")).scalars().all()
     return on(connection, list(names))
@@ -249,6 +262,10 @@ _SLICES = (
 _WAITING = (
     "SELECT line_item, count(*) AS n FROM quarantine WHERE state = 'waiting' AND_ONLY(line_item)"
     " GROUP BY line_item"
+)
+_FINDINGS = (
+    "SELECT line_item, rule, saw FROM tripwire_finding WHERE cleared_ms IS NULL"
+    " AND_ONLY(line_item) ORDER BY raised_ms, number"
 )
 _NEWEST = (
     " FROM balance b JOIN stream s ON s.line_item = b.line_item"
