@@ -36,9 +36,9 @@ class Standing:
     day: dict[str, int] | None
     waiting: int = 0
     freezes: tuple[dict[str, Any], ...] = ()
+    findings: tuple[str, ...] = ()
     open_holds: int = 0
     holds_end_ms: int | None = None
-    findings: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -117,8 +117,8 @@ def overview(
                 days.get((row.line_item, day)),
                 waiting.get(row.line_item, 0),
                 tuple(frozen.get(row.line_item, ())),
-                *slices.get(row.line_item, (0, None)),
                 tuple(findings.get(row.line_item, ())),
+                *slices.get(row.line_item, (0, None)),
             )
         )
     return Overview(wall_ms, standings, list(frozen.get("*", ())))
