@@ -23,7 +23,7 @@ BUCKETS = 48
 ROWS_MAX = 12
 CPM = 10**6
 NANOS = 10**9
-DELAY_UNITS = ((86_400_000, "days"), (3_600_000, "hours"), (60_000, "minutes"), (1000, "seconds"))
+DELAY_UNITS = ((86_400_000, "d"), (3_600_000, "h"), (60_000, "min"), (1000, "s"))
 _EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 
 Whole = NDArray[np.int64]
@@ -111,24 +111,26 @@ def spend(config: Mapping[str, Any], series: Series, created_ms: int) -> Chart:
 def prices(config: Mapping[str, Any], series: Series) -> Chart:
     """Mean bid and mean clearing price over the newest hours."""
     zone, currency = config["flight"]["time_zone"], config["currency"]
-    bids = [(at, price) for at, price, _ in series.bids]
-    moments = [at for at, _ in (*bids, *series.clearing)]
-    columns = (f"Time ({zone})", f"Mean bid ({currency} CPM)", f"Mean price ({currency} CPM)")
+    moments = [at for at, _ in (*series.bids, *series.clearing)]
+    kind = "mean" if series.step_ms is None else "median"
+    columns = tuple(f"{kind.capitalize()} {of} ({currency} CPM)" for of in ("bid", "price"))
+    columns = (f"Time ({zone})", *columns)
     title = "Bids and clearing prices"
     if not moments:
         return Chart("prices", title, "No bid and no win yet.", columns, (), {})
     edges = np.linspace(min(moments), max(moments) + 1, BUCKETS + 1).astype(np.int64)
-    bid, paid = _means(bids, edges), _means(series.clearing, edges)
+    bid, paid = _means(series.bids, edges), _means(series.clearing, edges)
     times = _times((edges[:-1] + edges[1:]) // 2, zone)
     cap = config["bid_cap"] / CPM
     traces = [
-        _line("mean bid", times, bid / CPM, "accent", markers=True),
-        _line("mean clearing price", times, paid / CPM, "second", markers=True),
+        _line(f"{kind} bid", times, bid / CPM, "accent", markers=True),
+        _line(f"{kind} clearing price", times, paid / CPM, "second", markers=True),
         _line("cap", [times[0], times[-1]], np.array([cap, cap]), "quiet", dash="dot"),
     ]
-    capped = sum(capped for _, _, capped in series.bids)
-    says = f"{len(bids):,} newest bids, {capped:,} of them at the cap of {cap:g} {currency} CPM; "
-    says += f"{len(series.clearing):,} newest wins."
+    says = f"In the last day {series.bids_counted:,} bids, {series.capped:,} of them at the cap "
+    says += f"of {cap:g} {currency} CPM, and {series.wins_counted:,} wins."
+    if series.step_ms is not None:
+        says += f" Medians of {series.step_ms // 60_000} minutes, within 9 %."
     rows = [
         (_clock(int(at), zone), _said(one / CPM), _said(other / CPM))
         for at, one, other in zip(edges[:-1], bid, paid, strict=True)
@@ -195,30 +197,26 @@ def wins(config: Mapping[str, Any], curve: Mapping[str, Any]) -> Chart:
 
 
 def delays(series: Series) -> Chart:
-    """How long after their win values came."""
-    title, spans = "How long values take", np.array(series.delays_ms, dtype=np.float64)
-    if not spans.size:
-        return Chart("delays", title, "No value has come yet.", ("Delay", "Values"), (), {})
-    size, unit = next((one for one in DELAY_UNITS if spans.max() >= 2 * one[0]), DELAY_UNITS[-1])
-    most = max(float(spans.max()) / size, 1.0)
-    counts, edges = np.histogram(spans / size, bins=20, range=(0.0, most))
-    middles = ((edges[:-1] + edges[1:]) / 2).tolist()
-    trace = {
-        **{"type": "bar", "x": middles, "y": counts.tolist(), "name": "values"},
-        **{"width": float(edges[1] - edges[0]), "meta": "accent"},
-    }
-    half, nine_tenths = np.quantile(spans / size, [0.5, 0.9])
-    says = f"{spans.size:,} newest values: half within {half:.3g} {unit}, "
-    says += f"nine tenths within {nine_tenths:.3g}."
-    rows = [
-        (f"{edges[n]:.3g} to {edges[n + 1]:.3g}", f"{count:,}")
-        for n, count in enumerate(counts.tolist())
-        if count
-    ]
-    columns = (f"Delay ({unit})", "Values (count)")
-    return Chart(
-        "delays", title, says, columns, tuple(rows), _figure([trace], columns[0], "values")
-    )
+    """How long after their win first values came in the last day, by doublings."""
+    title, told = "How long values take", series.delays
+    columns = ("Delay", "Values (count)")
+    total = sum(count for _, _, count in told)
+    if not total:
+        return Chart("delays", title, "No value has come in the last day.", columns, (), {})
+    names = [f"{_span(low)} to {_span(high)}" for low, high, _ in told]
+    counts = [count for _, _, count in told]
+    trace = {"type": "bar", "x": names, "y": counts, "name": "values", "meta": "accent"}
+    place = int(np.searchsorted(np.cumsum(counts), total / 2))
+    says = f"{total:,} first values in the last day, half of them within {_span(told[place][1])}."
+    rows = [(name, f"{count:,}") for name, count in zip(names, counts, strict=True) if count]
+    figure = _figure([trace], columns[0], "values")
+    return Chart("delays", title, says, columns, tuple(rows), figure)
+
+
+def _span(span_ms: int) -> str:
+    """A duration in the largest unit that leaves at least one."""
+    size, unit = next((one for one in DELAY_UNITS if span_ms >= one[0]), (1, "ms"))
+    return f"{span_ms / size:.3g} {unit}"
 
 
 def _cumulated(costs: Sequence[tuple[int, int]], edges: Whole) -> Whole:

@@ -12,6 +12,7 @@ from service.drawing import Chart, charts
 from service.errors import no_such_line_item
 from service.estimates import estimates
 from service.judging import Alarm, Judged, alarm, found, judge
+from service.learner.profile import day_of
 from service.ledger.days import local_day
 from service.showing import show, show_curve
 from service.store import keys, reading, watching, watching_series
@@ -21,6 +22,7 @@ from service.store.watching import Latest, Overview
 from service.threads import Threads
 
 T = TypeVar("T")
+DAY_MS = 86_400_000
 ROWS = 25
 JOURNAL_ROWS = 12
 ENTRIES = 20
@@ -155,7 +157,9 @@ class Watching:
             facts = reading.facts(connection, line_item)
             config = facts.row.config
             day = local_day(facts.wall_ms, config["flight"]["time_zone"])
-            series = watching_series.series(connection, line_item, facts.wall_ms, day)
+            starts_ms, _ = day_of(facts.wall_ms, config["flight"]["time_zone"])
+            from_ms = min(starts_ms, facts.wall_ms - DAY_MS)
+            series = watching_series.series(connection, line_item, from_ms, facts.wall_ms, day)
             known = estimates(connection, line_item, config)
             return charts(config, series, known, show_curve(facts), facts.row.created_ms)
 

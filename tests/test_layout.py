@@ -59,6 +59,7 @@ OWN: dict[str, set[str]] = {
     | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
     | {"admitting", "hindsights", "openrtb", "records", "recounting", "request_ids"},
     | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"},
+    | {"records", "recounting"},
     # An order is read as the API reads it, so that both refuse the same.
     "watch": {"operating", "watching", "judging", "winding", "errors", "money", "api"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),

@@ -1,4 +1,4 @@
-"""Named reads behind the charts of a line item: the newest rows, so ten million cost no more."""
+"""Named reads behind the charts of a line item, bounded: ten million decisions cost no more."""
 
 from __future__ import annotations
 
@@ -8,13 +8,12 @@ from typing import Any
 
 from sqlalchemy import text
 
+from service.store import charting
 from service.store.database import Reading
 
 ENTRIES_MAX = 10_000
 DECISIONS_MAX = 5000
-DELAYS_MAX = 5000
 CHECKPOINTS_MAX = 16
-OUTCOMES = ("won", "billed", "conflict", "lost")
 
 
 @dataclass(frozen=True, slots=True)
@@ -23,39 +22,76 @@ class Series:
     What charts are drawn of, oldest first; money in nanos, moments in wall clock ms.
 
     Args:
-        bids: When, at what price, and whether the cap set it.
-        costs: When and how much was booked as spent.
-        clearing: When and at what price per impression an auction was won.
-        delays_ms: From a win to each of its values.
-        day_spent: Booked on the local day so far, also by entries that are not among `costs`.
-        whole: Whether `costs` and `clearing` go back to the first entry of the stream.
+        bids: When and at what price bids left: each one, or the median of each step.
+        bids_counted: How many bids that is; `capped` of them were set by the cap.
+        costs: When and how much was booked.
+        clearing: When and at what price auctions were won: each, or the median of each step.
+        wins_counted: How many wins that is.
+        delays: First values by how long after their win they came: from ms, until ms, how many.
+        day_spent: Booked on the local day so far.
+        step_ms: The length of a step, or None where every row is shown.
     """
 
     wall_ms: int
-    bids: list[tuple[int, int, bool]]
+    bids: list[tuple[int, int]]
+    bids_counted: int
+    capped: int
     costs: list[tuple[int, int]]
     clearing: list[tuple[int, int]]
-    delays_ms: list[int]
+    wins_counted: int
+    delays: list[tuple[int, int, int]]
     day_spent: int
-    whole: bool
+    step_ms: int | None
 
 
-def series(connection: Reading, line_item: str, wall_ms: int, day: str) -> Series:
-    """Read it all, in four queries."""
-    entries = list(connection.execute(_ENTRIES, {"id": line_item, "limit": ENTRIES_MAX}))
-    decided = list(connection.execute(_BIDS, {"id": line_item, "limit": DECISIONS_MAX}))
-    delays = connection.execute(_DELAYS, {"id": line_item, "limit": DELAYS_MAX}).scalars().all()
+def series(connection: Reading, line_item: str, from_ms: int, wall_ms: int, day: str) -> Series:
+    """What happened since a moment: row by row where there are few, else by steps of a clock."""
+    wanted = {"id": line_item, "from": from_ms}
+    entries = list(connection.execute(_ENTRIES, {**wanted, "limit": ENTRIES_MAX}))
+    decided = list(connection.execute(_BIDS, {**wanted, "limit": DECISIONS_MAX}))
     spent = connection.execute(_DAY, {"id": line_item, "day": day}).scalar_one_or_none()
+    delays = charting.delays(connection, line_item, from_ms, wall_ms + 1)
+    if len(entries) == ENTRIES_MAX or len(decided) == DECISIONS_MAX:
+        return _by_steps(connection, line_item, from_ms, wall_ms, delays, int(spent or 0))
     entries.reverse()
     decided.reverse()
+    wins = [(int(row.at_ms), price) for row in entries if (price := _price(row)) is not None]
     return Series(
         wall_ms,
-        [(int(row.at_ms), int(row.price), row.set_by == "cap") for row in decided],
+        [(int(row.at_ms), int(row.price)) for row in decided],
+        len(decided),
+        sum(row.set_by == "cap" for row in decided),
         [(int(row.at_ms), int(row.cost)) for row in entries if row.cost],
-        [(int(row.at_ms), price) for row in entries if (price := _price(row)) is not None],
-        [max(0, int(delay)) for delay in delays],
+        wins,
+        len(wins),
+        delays,
         int(spent or 0),
-        len(entries) < ENTRIES_MAX,
+        None,
+    )
+
+
+def _by_steps(
+    connection: Reading,
+    line_item: str,
+    from_ms: int,
+    wall_ms: int,
+    delays: list[tuple[int, int, int]],
+    day_spent: int,
+) -> Series:
+    chart = charting.chart(connection, line_item, from_ms, wall_ms + 1)
+    buckets, middle = chart.buckets, chart.step_ms // 2
+    return Series(
+        wall_ms,
+        [(one.at_ms + middle, one.bids.median) for one in buckets if one.bids],
+        sum(one.counts.get("bid", 0) for one in buckets),
+        sum(one.set_by.get("cap", 0) for one in buckets),
+        # Booked when its step ends, so that a chart never shows money before it went.
+        [(min(one.at_ms + chart.step_ms, wall_ms), one.cost) for one in buckets if one.cost],
+        [(one.at_ms + middle, one.clearing.median) for one in buckets if one.clearing],
+        sum(one.counts.get("won", 0) for one in buckets),
+        delays,
+        day_spent,
+        chart.step_ms,
     )
 
 
@@ -80,18 +116,12 @@ def _price(row: Any) -> int | None:
 
 
 _ENTRIES = text(
-    "SELECT kind, at_ms, cost, body FROM stream WHERE line_item = :id"
+    "SELECT kind, at_ms, cost, body FROM stream WHERE line_item = :id AND at_ms >= :from"
     " AND seq > (SELECT seq FROM balance WHERE line_item = :id) - :limit ORDER BY seq DESC"
 )
 _BIDS = text(
     "SELECT at_ms, price, set_by FROM decision WHERE line_item = :id AND price IS NOT NULL"
-    " AND test = 0 ORDER BY at_ms DESC, number DESC LIMIT :limit"
-)
-_DELAYS = text(
-    "SELECT v.at_ms - w.at_ms AS delay FROM stream v JOIN stream w ON w.bid = v.bid"
-    " AND w.slot = 'result' WHERE v.line_item = :id AND v.kind = 'value'"
-    " AND v.seq > (SELECT seq FROM balance WHERE line_item = :id) - 10000"
-    " ORDER BY v.seq DESC LIMIT :limit"
+    " AND test = 0 AND at_ms >= :from ORDER BY at_ms DESC, number DESC LIMIT :limit"
 )
 _DAY = text("SELECT spent + over_spent FROM local_day WHERE line_item = :id AND day = :day")
 _CHECKPOINTS = text(

@@ -54,6 +54,7 @@ KINDS = {
         Kind(
             *("reset", "Reset the learner", "Reset now"),
             "The learner begins afresh. Money stays as it is; a rewind brings back what it knew.",
+            True,
         ),
         Kind(
             *("rewind", "Rewind the learner", "Rewind now"),
@@ -176,7 +177,9 @@ async def _given(
         )
         given = {"preview": preview, "idempotency": once}
         return await orders.winding.retract(name, retraction, wish.reason, actor, **given)
-    give = {"freeze": orders.freeze, "thaw": orders.thaw, "reset": orders.reset}[kind.name]
+    if kind.name == "reset":
+        return await orders.reset(name, wish.reason, actor, once, preview=preview)
+    give = orders.freeze if kind.name == "freeze" else orders.thaw
     return await give(name, wish.reason, actor, once)
 
 

@@ -135,4 +135,5 @@ def _number(number: float) -> str:
         return f"{number:,.2f}"
     # Three digits that say something: a price of 0.00 CPM would be a lie.
     text = f"{number:.3g}"
-    return f"{number:.9f}".rstrip("0") if "e" in text else text
+    text = f"{number:.9f}".rstrip("0") if "e" in text else text
+    return text.ljust(4 if number > 0 else 5, "0")

@@ -179,7 +179,7 @@ def test_it_works_without_scripts(browser: Browser, scene: Scene) -> None:
     context = browser.new_context(java_script_enabled=False)
     page = sign_in(context, scene, ITEM)
     expect(page.locator("#chart-prices details")).to_have_count(1)
-    expect(page.locator("#chart-prices .says")).to_contain_text("newest bids")
+    expect(page.locator("#chart-prices .says")).to_contain_text("bids")
     page.locator("#freeze").click()
     give(page, "no scripts here")
     expect(page.locator("#answer")).to_contain_text("In force")

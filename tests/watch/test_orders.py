@@ -80,7 +80,8 @@ async def test_a_thaw_lists_what_it_lifts(signed_in: Visitor) -> None:
 async def test_sent_twice_an_order_counts_once(signed_in: Visitor) -> None:
     """An impatient hand sends the same form again and gets the first answer."""
     path = f"{ITEM}/reset"
-    fields = hidden((await signed_in.client.get(path)).text, path) | {"reason": "begin again"}
+    fields = hidden((await signed_in.client.get(path)).text, path)
+    fields |= {"reason": "begin again", "step": "do"}
     first = await signed_in.client.post(path, data=fields)
     second = await signed_in.client.post(path, data=fields)
     assert first.text == second.text
@@ -141,6 +142,7 @@ async def test_a_rewind_is_previewed_and_then_done(signed_in: Visitor) -> None:
     preview = await signed_in.client.post(f"{ITEM}/rewind", data=fields | {"step": "preview"})
     assert "lessons would be cancelled" in preview.text
     assert "a bad night" in preview.text
+    assert "values of 0.10 EUR and costs of 0.002 EUR" in preview.text
     assert journal(signed_in) == []
     fields |= hidden(preview.text, f"{ITEM}/rewind")
     done = await signed_in.client.post(f"{ITEM}/rewind", data=fields | {"step": "do"})
@@ -148,6 +150,17 @@ async def test_a_rewind_is_previewed_and_then_done(signed_in: Visitor) -> None:
     assert "published at seq" in done.text
     assert [row.action for row in journal(signed_in)] == ["rewind"]
     assert (await state(signed_in))["learner"]["wins"] == 0
+
+
+async def test_a_reset_is_previewed_too(signed_in: Visitor) -> None:
+    """What would be forgotten is told first; nothing is, until the second press."""
+    await won(signed_in, "0.01")
+    preview = await signed_in.send(f"{ITEM}/reset", reason="begin again")
+    assert "Forgotten would be values of 0.01 EUR" in preview.text
+    assert journal(signed_in) == []
+    done = await signed_in.send(f"{ITEM}/reset", reason="begin again", step="do")
+    assert "begins afresh at seq" in done.text
+    assert [row.action for row in journal(signed_in)] == ["reset"]
 
 
 async def test_lessons_of_a_source_are_retracted(signed_in: Visitor) -> None:
