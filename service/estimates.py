@@ -15,7 +15,10 @@ from service.store.database import Reading
 from service.teaching import FRESH, lesson
 
 STEPS = 12
-TAIL_MAX = 10_000  # As many entries as lie between two checkpoints unless the settings differ.
+# Steps begin so far back at least, or just after a checkpoint there would be none.
+TAIL_MIN = 5000
+# And so far back at most: ten thousand entries lie between two checkpoints, unless set otherwise.
+TAIL_MAX = 15_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,11 +35,16 @@ def estimates(connection: Reading, line_item: str, config: Mapping[str, Any]) ->
     """The estimate at each kept checkpoint and at some moments since, oldest first."""
     terms = Terms.from_config(dict(config))
     kept = watching_series.checkpoints(connection, line_item)
-    found = [_estimate(state, at_ms, terms) for _, state, at_ms in kept]
     head = rebuilds.standing(connection, line_item).seq
-    start = rebuilds.nearest(connection, line_item, head, FRESH)
+    start = rebuilds.nearest(connection, line_item, max(0, head - TAIL_MIN), FRESH)
+    stepped = head - start.seq <= TAIL_MAX
+    found = [
+        _estimate(state, at_ms, terms)
+        for seq, state, at_ms in kept
+        if seq <= start.seq or not stepped
+    ]
     # Without checkpoints near enough the steps would take longer than anybody waits.
-    if head - start.seq > TAIL_MAX:
+    if not stepped:
         return [one for one in found if one is not None]
     seqs = sorted({start.seq + (head - start.seq) * step // STEPS for step in range(1, STEPS + 1)})
     seqs = [seq for seq in seqs if seq > start.seq]
