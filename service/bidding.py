@@ -18,11 +18,11 @@ import numpy
 from service import spans
 from service.backlog import Backlog
 from service.catalog import Catalog, Item
+from service.choosing import NOTHING, Draw, drawn, odds_below, odds_of
 from service.currencies import inside
 from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
 from service.decision.rule import FIXED, SECOND, sale_of
-from service.choosing import NOTHING, Draw, drawn, odds_below, odds_of
 from service.errors import Malformed, Refusal, StoreAway
 from service.guard.control import CONTROL, MAIN
 from service.guard.gate import shut
