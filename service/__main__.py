@@ -140,6 +140,10 @@ def _bench_hindsight() -> ModuleType:
     from service.commands import bench_hindsight
 
     return bench_hindsight
+def _bench_http() -> ModuleType:
+    from service.commands import bench_http
+
+    return bench_http
 
 
 def _drill_kill() -> ModuleType:
@@ -211,6 +215,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "learn": ("time the folding of each method's lessons", _bench_learn),
     "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
     "rehearse": ("time simulated auctions, and bids beside a rehearsal", _bench_rehearse),
+    "http": ("put one load on the service and on bare endpoints", _bench_http),
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
     "reads": ("time pages, tables and charts of a large log over HTTP", _bench_reads),
     "hindsight": ("see whether hindsight's intervals hold a known truth", _bench_hindsight),

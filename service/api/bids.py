@@ -4,13 +4,13 @@ from __future__ import annotations
 
 import time
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
 from service.api import answers
 from service.api.access import out_of_reach, reach, require
 from service.api.body import read_object
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.forms.bids import BatchForm, BidForm, read_batch, read_bid
@@ -18,7 +18,7 @@ from service.api.stories import stories
 from service.decision.opportunity import Opportunity
 from service.errors import Refusal
 
-router = APIRouter()
+router = direct_router()
 
 
 @router.post("/v1/bids", **described("Ask for a price for one opportunity.", "bid", BidForm))

@@ -5,13 +5,13 @@ from __future__ import annotations
 import re
 from typing import TypeVar
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
 from service.api import answers
 from service.api.access import actor, require
 from service.api.body import read_object
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.forms.orders import OrderForm, ReconcileForm, ReverseForm
@@ -20,7 +20,7 @@ from service.api.headers import idempotency, line_item_id, numbered_page
 from service.api.stories import stories
 from service.errors import NotFound
 
-router = APIRouter()
+router = direct_router()
 
 PATH = "/v1/line-items/{line_item_id}"
 _ONCE = ("Idempotency-Key",)

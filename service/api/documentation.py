@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from typing import Any
 
-from fastapi import APIRouter, FastAPI
+from fastapi import FastAPI
 from fastapi.openapi.utils import get_openapi
 from pydantic import BaseModel
 from starlette.requests import Request
@@ -13,6 +13,7 @@ from starlette.responses import FileResponse, HTMLResponse, Response
 from swagger_ui_bundle import swagger_ui_path
 
 from service.api import answers
+from service.api.direct import direct_router
 from service.api.forms.schemas import COMPONENTS
 from service.api.problems import MEDIA_TYPE
 from service.errors import NotFound
@@ -23,7 +24,7 @@ Rehearse before money rides on it: `"test": true` answers without setting money 
 Send no personal data and no protected traits, in features, ids or reasons; consent and local
 law come first. Nothing here is legal advice: ask licensed counsel."""
 
-router = APIRouter()
+router = direct_router()
 
 _IN_PATHS = re.compile(r"{([a-z_]+)}")
 _WHOLE = ("limit", "before", "number")

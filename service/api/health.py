@@ -2,17 +2,17 @@
 
 from __future__ import annotations
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
 from service.api import answers
 from service.api.access import require_health_key
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.stories import started, stories
 from service.errors import StoreAway
 
-router = APIRouter()
+router = direct_router()
 
 
 @router.get("/health/live", **described("Is the process alive?"))

@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
 from service.api import answers
 from service.api.access import actor, reach, require
 from service.api.body import read_object
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.forms.changes import ChangeForm
@@ -25,7 +25,7 @@ from service.api.times import start_of_today_ms
 from service.configuring import merged
 from service.operating import View
 
-router = APIRouter()
+router = direct_router()
 
 PATH = "/v1/line-items"
 

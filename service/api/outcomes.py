@@ -2,20 +2,20 @@
 
 from __future__ import annotations
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
 from service.api import answers
 from service.api.access import FOREIGN, note_refusal, require
 from service.api.body import read_object
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.forms.outcomes import OutcomesForm, read_outcomes
 from service.api.stories import stories
 from service.feedback import Report
 
-router = APIRouter()
+router = direct_router()
 
 
 @router.post("/v1/outcomes", **described("Report up to 1,000 outcomes.", "report", OutcomesForm))

@@ -67,6 +67,7 @@ def stories(request: Request) -> Stories:
         StoreAway: The service is still starting.
     """
     # The socket may listen before the database has answered; asking again will then help.
-    if not started(request):
+    found = getattr(request.app.state, "stories", None)
+    if found is None:
         raise StoreAway("the service is still starting")
-    return cast(Stories, request.app.state.stories)
+    return cast(Stories, found)

@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
 from service.api import answers
 from service.api.access import actor, require
 from service.api.body import read_object
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.forms.orders import RetractForm, RewindForm
@@ -17,7 +17,7 @@ from service.api.headers import idempotency, line_item_id
 from service.api.stories import stories
 from service.winding import Retraction
 
-router = APIRouter()
+router = direct_router()
 
 PATH = "/v1/line-items/{line_item_id}"
 _ONCE = ("Idempotency-Key",)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from functools import cache
 from typing import TypeVar
 
 from pydantic import BaseModel, ConfigDict, ValidationError
@@ -82,12 +83,21 @@ def at_most(rows_max: int, path: str, rows: list[object]) -> None:
 
 def unknown_fields(form: type[BaseModel], members: Mapping[str, object]) -> set[str]:
     """The names of fields that the form does not know, as far as they are plain words."""
-    return {_plain_word(name) for name in members if name not in form.model_fields}
+    names = _names(form)
+    # Nearly always there are none, which one comparison tells.
+    if members.keys() <= names:
+        return set()
+    return {_plain_word(name) for name in members if name not in names}
 
 
 def warnings(names: set[str]) -> list[str]:
     """At most 16 names, in order."""
     return sorted(names)[:WARNINGS_MAX]
+
+
+@cache
+def _names(form: type[BaseModel]) -> frozenset[str]:
+    return frozenset(form.model_fields)
 
 
 def _plain_word(name: str) -> str:
