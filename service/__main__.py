@@ -140,6 +140,12 @@ def _bench_hindsight() -> ModuleType:
     from service.commands import bench_hindsight
 
     return bench_hindsight
+def _bench_decide() -> ModuleType:
+    from service.commands import bench_decide
+
+    return bench_decide
+
+
 def _bench_http() -> ModuleType:
     from service.commands import bench_http
 
@@ -215,6 +221,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "learn": ("time the folding of each method's lessons", _bench_learn),
     "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
     "rehearse": ("time simulated auctions, and bids beside a rehearsal", _bench_rehearse),
+    "decide": ("time one price of each method, and the steps around it", _bench_decide),
     "http": ("put one load on the service and on bare endpoints", _bench_http),
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
     "reads": ("time pages, tables and charts of a large log over HTTP", _bench_reads),
