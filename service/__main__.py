@@ -146,6 +146,12 @@ def _bench_decide() -> ModuleType:
     return bench_decide
 
 
+def _bench_growth() -> ModuleType:
+    from service.commands import bench_growth
+
+    return bench_growth
+
+
 def _bench_http() -> ModuleType:
     from service.commands import bench_http
 
@@ -222,6 +228,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
     "rehearse": ("time simulated auctions, and bids beside a rehearsal", _bench_rehearse),
     "decide": ("time one price of each method, and the steps around it", _bench_decide),
+    "growth": ("see whether bids stay quick as line items and log grow", _bench_growth),
     "http": ("put one load on the service and on bare endpoints", _bench_http),
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
     "reads": ("time pages, tables and charts of a large log over HTTP", _bench_reads),

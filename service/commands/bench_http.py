@@ -11,6 +11,7 @@ import sys
 import tempfile
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from contextlib import contextmanager
+from functools import partial
 from pathlib import Path
 
 from rich.console import Console
@@ -85,9 +86,7 @@ async def _played(
     contests = []
     for name, (call, count, rows) in calls.items():
         contest = Contest(name, rows)
-        await _rounds(
-            pair, contest, lambda c=call, n=count: itertools.repeat(c, n), arguments, on_round
-        )
+        await _rounds(pair, contest, partial(itertools.repeat, call, count), arguments, on_round)
         contests.append(contest)
     single = statistics.median(side.rate for side in contests[0].ours)
     half = Contest(HALF)
@@ -127,7 +126,7 @@ async def _outcomes(
             bodies.outcomes(pair.server.key, tickets[at : at + bodies.BATCH_ROWS])
             for at in range(0, len(tickets), bodies.BATCH_ROWS)
         ]
-        await pair.round(contest if number else Contest("warm"), lambda c=calls: c)
+        await pair.round(contest if number else Contest("warm"), partial(iter, calls))
         on_round()
 
 
@@ -164,7 +163,8 @@ def _show(contests: Sequence[Contest], arguments: argparse.Namespace) -> None:
 
 
 def _median(contest: Contest, member: str, side: str) -> float:
-    return statistics.median(getattr(one, member) for one in getattr(contest, side))
+    found: list[float] = [getattr(one, member) for one in getattr(contest, side)]
+    return statistics.median(found)
 
 
 def _waits(contest: Contest, side: str) -> str:

@@ -10,7 +10,13 @@ from service.commands.load import post
 
 BATCH_ROWS = 100
 PASSED = b'"ticket":null'
-FEATURES = {"device": "phone", "hour": 13, "place": "lake", "format": "wide", "fold": "above"}
+FEATURES: dict[str, str | float | bool] = {
+    "device": "phone",
+    "hour": 13,
+    "place": "lake",
+    "format": "wide",
+    "fold": "above",
+}
 
 
 def line_item(name: str, method: str, **others: Any) -> dict[str, Any]:

@@ -143,7 +143,7 @@ class Pair:
         trace: TracebackType | None,
     ) -> None:
         for load in self.loads.values():
-            load.close()
+            await load.close()
         self.server.stop()
         self.bare.__exit__(kind, error, trace)
 
@@ -154,7 +154,8 @@ class Pair:
         Raises:
             ServerFailed: It was refused.
         """
-        reply = await self.server.wire().post("/v1/line-items", members)
+        async with self.server.wire() as wire:
+            reply = await wire.post("/v1/line-items", members)
         if reply.status != 201:
             raise ServerFailed(f"A line item was refused: {reply.content[:300]!r}")
 
@@ -167,7 +168,7 @@ class Pair:
                 1, (count - len(found)) // bodies.BATCH_ROWS
             )
             found += bodies.tickets_of((await load.closed_loop(calls)).bodies)
-        load.close()
+        await load.close()
         return found[:count]
 
     async def round(

@@ -59,12 +59,14 @@ class _Connection(asyncio.Protocol):
         self._load = load
         self._partial = b""
         self._due = 0.0
+        self.gone = asyncio.Event()
 
     def connection_made(self, transport: asyncio.BaseTransport) -> None:
         self.transport = cast(asyncio.Transport, transport)
         self._load.idle.append(self)
 
     def connection_lost(self, exc: Exception | None) -> None:
+        self.gone.set()
         self._load.lost()
 
     def send(self, request: bytes, due: float) -> None:
@@ -116,11 +118,11 @@ class Load:
             )
             self._all.append(made)
 
-    def close(self) -> None:
+    async def close(self) -> None:
         """Close every connection."""
-        self._done.set()
         for connection in self._all:
             connection.transport.abort()
+        await asyncio.gather(*(connection.gone.wait() for connection in self._all))
 
     async def closed_loop(self, requests: Iterable[bytes]) -> Seen:
         """
