@@ -7,7 +7,7 @@ A price is kept per impression, so a CPM of 0.000001 is exactly one nano.
 from __future__ import annotations
 
 import re
-from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Context, Decimal
+from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Context, Decimal, Inexact
 
 NANOS_PER_UNIT = 10**9
 NANOS_PER_CPM = 10**6
@@ -23,6 +23,9 @@ DOWN, UP, HALF_EVEN = ROUND_FLOOR, ROUND_CEILING, ROUND_HALF_EVEN
 _TEXT = re.compile(r"-?(0|[1-9][0-9]{0,18})(\.[0-9]{1,30})?")
 # The default precision of 28 digits would round a long amount without a word.
 _EXACT = Context(prec=80)
+# Tells too many digits at a fraction of what counting them would cost.
+_SHORT = Context(prec=DIGITS_MAX, traps=[Inexact])
+_SCALES = {scale: Decimal(scale) for scale in (NANOS_PER_UNIT, NANOS_PER_CPM)}
 
 
 class NotMoney(ValueError):
@@ -81,7 +84,7 @@ def cpm_number(price_nanos: int) -> float:
 
 
 def _scaled(amount: object, scale: int, rounding: str | None) -> int:
-    exact = _EXACT.multiply(_decimal(amount), Decimal(scale))
+    exact = _EXACT.multiply(_decimal(amount), _SCALES[scale])
     whole = exact.to_integral_value(rounding or ROUND_FLOOR, context=_EXACT)
     if rounding is None and whole != exact:
         raise NotMoney("more decimals than this field can hold")
@@ -109,6 +112,8 @@ def _plain(amount: Decimal) -> Decimal:
     # It is short to send, but 1e999999 is finite too and stands for a million digits.
     if not amount.is_finite() or abs(amount.adjusted()) > 30:
         raise NotMoney("not a plain decimal")
-    if len(amount.as_tuple().digits) > DIGITS_MAX:
-        raise NotMoney("more digits than an amount can have")
+    try:
+        _SHORT.plus(amount)
+    except Inexact as error:
+        raise NotMoney("more digits than an amount can have") from error
     return amount

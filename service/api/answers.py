@@ -7,6 +7,7 @@ import math
 from collections.abc import Callable, Iterable, Mapping
 from typing import Any
 
+import orjson
 from starlette.responses import Response
 
 from service import money
@@ -28,6 +29,11 @@ def json_answer(
         media_type="application/json",
         headers=dict(headers or {}),
     )
+
+
+def quick_answer(members: object) -> Response:
+    """As `json_answer`, a few times as fast, for answers of our own small numbers and texts."""
+    return Response(orjson.dumps(members), media_type="application/json")
 
 
 def bid(answer: Answer) -> dict[str, object]:

@@ -30,7 +30,7 @@ async def post_bid(request: Request) -> Response:
     opportunity, unused = read_bid(await read_object(request, edge(request).body_bytes_max))
     reach(request, opportunity.line_item, *opportunity.line_items)
     answer = await stories(request).bidder.bid(opportunity, arrived)
-    return answers.json_answer(answers.with_warnings(answers.bid(answer), unused))
+    return answers.quick_answer(answers.with_warnings(answers.bid(answer), unused))
 
 
 @router.post("/v1/bids/batch", **described("Ask for up to 500 prices.", "bid", BatchForm))
@@ -49,7 +49,7 @@ async def post_batch(request: Request) -> Response:
         answers.bad_row(result) if isinstance(result, Refusal) else answers.bid(result)
         for result in results
     ]
-    return answers.json_answer(answers.with_warnings({"answers": written}, unused))
+    return answers.quick_answer(answers.with_warnings({"answers": written}, unused))
 
 
 def _within_reach(request: Request, row: Opportunity | Refusal) -> Opportunity | Refusal:

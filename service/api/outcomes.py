@@ -33,4 +33,4 @@ async def post_outcomes(request: Request) -> Response:
         if result.foreign:
             note_refusal(request, key, FOREIGN)
     written: dict[str, object] = {"results": [answers.receipt(result) for result in results]}
-    return answers.json_answer(answers.with_warnings(written, unused))
+    return answers.quick_answer(answers.with_warnings(written, unused))
