@@ -21,11 +21,8 @@ DOWN, UP, HALF_EVEN = ROUND_FLOOR, ROUND_CEILING, ROUND_HALF_EVEN
 # Only plain decimals: Decimal itself would also take NaN, Infinity, 1e9, blanks and digits of
 # other scripts, each of which some caller means differently.
 _TEXT = re.compile(r"-?(0|[1-9][0-9]{0,18})(\.[0-9]{1,30})?")
-# The default precision of 28 digits would round a long amount without a word.
-_EXACT = Context(prec=80)
 # Tells too many digits at a fraction of what counting them would cost.
 _SHORT = Context(prec=DIGITS_MAX, traps=[Inexact])
-_SCALES = {scale: Decimal(scale) for scale in (NANOS_PER_UNIT, NANOS_PER_CPM)}
 
 
 class NotMoney(ValueError):
@@ -84,27 +81,37 @@ def cpm_number(price_nanos: int) -> float:
 
 
 def _scaled(amount: object, scale: int, rounding: str | None) -> int:
-    exact = _EXACT.multiply(_decimal(amount), _SCALES[scale])
-    whole = exact.to_integral_value(rounding or ROUND_FLOOR, context=_EXACT)
-    if rounding is None and whole != exact:
-        raise NotMoney("more decimals than this field can hold")
-    if abs(whole) > NANOS_MAX:
+    over, under = _ratio(amount)
+    whole, rest = divmod(over * scale, under)
+    if rest:
+        if rounding is None:
+            raise NotMoney("more decimals than this field can hold")
+        whole += _rounds_up(whole, 2 * rest - under, rounding)
+    if not -NANOS_MAX <= whole <= NANOS_MAX:
         raise NotMoney("out of range")
-    return int(whole)
+    return whole
 
 
-def _decimal(amount: object) -> Decimal:
+def _rounds_up(whole: int, beyond_half: int, rounding: str) -> bool:
+    """Whether a number with a part after the point goes up from its whole part."""
+    if rounding == HALF_EVEN:
+        return beyond_half > 0 or (beyond_half == 0 and whole % 2 == 1)
+    return rounding == UP
+
+
+def _ratio(amount: object) -> tuple[int, int]:
+    """The amount as a whole number over another one, which is exact and quick."""
     # In Python True is the int 1, and would buy something.
     if isinstance(amount, bool):
         raise NotMoney("a truth value is no amount")
     if isinstance(amount, Decimal):
-        return _plain(amount)
+        return _plain(amount).as_integer_ratio()
     if isinstance(amount, int):
         if abs(amount) > NANOS_MAX:
             raise NotMoney("out of range")
-        return Decimal(amount)
+        return amount, 1
     if isinstance(amount, str) and _TEXT.fullmatch(amount):
-        return Decimal(amount)
+        return Decimal(amount).as_integer_ratio()
     raise NotMoney("not a plain decimal")
 
 

@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
+from service.api.direct import direct_router
 from service.api import answers
 from service.api.access import require
 from service.api.body import read_object
@@ -16,7 +16,7 @@ from service.api.forms.reading import read
 from service.api.headers import line_item_id
 from service.api.stories import stories
 
-router = APIRouter()
+router = direct_router()
 
 PATH = "/v1/line-items/{line_item_id}"
 

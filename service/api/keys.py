@@ -5,11 +5,11 @@ from __future__ import annotations
 import re
 from typing import Any
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
 from service.admitting import Wish
+from service.api.direct import direct_router
 from service.api import answers
 from service.api.access import actor, require
 from service.api.body import read_object
@@ -23,7 +23,7 @@ from service.api.stories import stories
 from service.api.times import time_text
 from service.errors import NotFound
 
-router = APIRouter()
+router = direct_router()
 
 PATH = "/v1/keys"
 _ONCE = ("Idempotency-Key",)

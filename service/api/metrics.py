@@ -2,17 +2,17 @@
 
 from __future__ import annotations
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
+from service.api.direct import direct_router
 from service.api.access import require_health_key
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.stories import metrics
 from service.errors import NotFound
 
-router = APIRouter()
+router = direct_router()
 
 
 @router.get("/metrics", **described("Metrics in the text form of Prometheus."))

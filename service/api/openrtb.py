@@ -9,10 +9,10 @@ import zlib
 from http import HTTPStatus
 from typing import Any
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
+from service.api.direct import direct_router
 from service.api import answers
 from service.api.access import require
 from service.api.body import TooLarge, read_bytes
@@ -28,7 +28,7 @@ from service.openrtb.explaining import explain
 from service.openrtb.mapping import Source
 from service.openrtb.requests import BadRequest
 
-router = APIRouter()
+router = direct_router()
 
 VERSION = {"x-openrtb-version": "2.6"}
 GZIP_BYTES_MIN = 1024  # A shorter answer fits one packet as it is.

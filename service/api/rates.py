@@ -5,11 +5,11 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
 from service import money
+from service.api.direct import direct_router
 from service.api import answers
 from service.api.access import actor, require
 from service.api.body import read_object
@@ -21,7 +21,7 @@ from service.api.headers import idempotency
 from service.api.stories import stories
 from service.api.times import time_text
 
-router = APIRouter()
+router = direct_router()
 
 
 @router.post(

@@ -5,11 +5,11 @@ from __future__ import annotations
 from collections.abc import AsyncIterator, Callable
 from typing import Any
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response, StreamingResponse
 from starlette.types import Receive, Scope, Send
 
+from service.api.direct import direct_router
 from service.api import answers, tables
 from service.api.access import require
 from service.api.documentation import described
@@ -19,7 +19,7 @@ from service.api.stories import stories
 from service.api.times import now_ms
 from service.records import Export
 
-router = APIRouter()
+router = direct_router()
 
 PATH = "/v1/line-items/{line_item_id}"
 PAGED = (

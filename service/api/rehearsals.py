@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import re
 
-from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import Response
 
+from service.api.direct import direct_router
 from service.api import answers
 from service.api.access import actor, require
 from service.api.body import read_object
@@ -21,7 +21,7 @@ from service.api.stories import stories
 from service.api.times import start_of_today_ms
 from service.errors import NotFound
 
-router = APIRouter()
+router = direct_router()
 
 PATH = "/v1/rehearsals"
 _NUMBER = re.compile(r"[0-9]{1,15}")

@@ -9,7 +9,7 @@ from pydantic import Field
 
 from service.api.forms.fields import CapCpm, Features, FloorCpm, LineItemId, Printable, SeenValue
 from service.api.forms.reading import OpenForm, at_most, bad_field, read, unknown_fields
-from service.decision.opportunity import Opportunity
+from service.decision.opportunity import NONE_SAID, Opportunity
 from service.errors import Refusal
 
 Deadline = Annotated[int, Field(ge=0, le=60_000, description="Milliseconds from arrival here.")]
@@ -89,18 +89,18 @@ def _row(row: object, deadline_ms: int | None, unused: set[str]) -> Opportunity:
 
 
 def _opportunity(form: BidForm, deadline_ms: int | None) -> Opportunity:
-    competing = tuple(form.line_items or ())
-    if (form.line_item is None) is not bool(competing):
+    named, competing = form.line_item, tuple(form.line_items or ())
+    if (named is None) is not bool(competing):
         field = "line_items" if competing else "line_item"
         raise bad_field(field, "It must name line_item, or line_items, and not both.")
-    if len(set(competing)) < len(competing):
+    if competing and len(set(competing)) < len(competing):
         raise bad_field("line_items", "No line item may stand in it twice.")
     return Opportunity(
-        line_item=form.line_item or competing[0],
+        line_item=named or competing[0],
         request_id=form.request_id,
         source=form.source,
         floor=max(0, form.floor_cpm or 0),
-        features=form.features or {},
+        features=form.features or NONE_SAID,
         value_hint=form.value_hint,
         deadline_ms=deadline_ms,
         test=form.test,

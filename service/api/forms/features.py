@@ -38,10 +38,11 @@ def features(members: object) -> dict[str, Feature]:
 
 
 def _value(value: object) -> Feature:
-    if isinstance(value, bool):
-        return value
     if isinstance(value, str):
         return _text(value)
+    # Asked before numbers, since True is one.
+    if isinstance(value, bool):
+        return value
     if isinstance(value, int | float | Decimal):
         return _finite(value)
     raise ValueError("A feature must be text, a number or true or false.")
