@@ -140,6 +140,8 @@ def _bench_hindsight() -> ModuleType:
     from service.commands import bench_hindsight
 
     return bench_hindsight
+
+
 def _bench_decide() -> ModuleType:
     from service.commands import bench_decide
 

@@ -5,8 +5,8 @@ from __future__ import annotations
 from starlette.requests import Request
 from starlette.responses import Response
 
-from service.api.direct import direct_router
 from service.api.access import require_health_key
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.stories import metrics

@@ -12,10 +12,10 @@ from typing import Any
 from starlette.requests import Request
 from starlette.responses import Response
 
-from service.api.direct import direct_router
 from service.api import answers
 from service.api.access import require
 from service.api.body import TooLarge, read_bytes
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.problems import problem

@@ -9,10 +9,10 @@ from starlette.requests import Request
 from starlette.responses import Response
 
 from service import money
-from service.api.direct import direct_router
 from service.api import answers
 from service.api.access import actor, require
 from service.api.body import read_object
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.forms.orders import RateForm

@@ -9,9 +9,9 @@ from starlette.requests import Request
 from starlette.responses import Response, StreamingResponse
 from starlette.types import Receive, Scope, Send
 
-from service.api.direct import direct_router
 from service.api import answers, tables
 from service.api.access import require
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.headers import line_item_id
 from service.api.paging import Asked, asked, cursor_of, parameters, span_of

@@ -5,10 +5,10 @@ from __future__ import annotations
 from starlette.requests import Request
 from starlette.responses import Response
 
-from service.api.direct import direct_router
 from service.api import answers
 from service.api.access import require
 from service.api.body import read_object
+from service.api.direct import direct_router
 from service.api.documentation import described
 from service.api.edge import edge
 from service.api.forms.configs import read_candidate
