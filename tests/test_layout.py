@@ -59,7 +59,7 @@ OWN: dict[str, set[str]] = {
 
 INSTALLED = set(
     """
-    alembic fastapi httpx jinja2 matplotlib numpy plotly prometheus_client psycopg pydantic
+    alembic fastapi httpx jinja2 jiter matplotlib numpy orjson plotly prometheus_client psycopg pydantic
     pydantic_settings rich scipy sqlalchemy starlette swagger_ui_bundle uvicorn uvloop
     """.split()
 )
@@ -86,7 +86,10 @@ OTHERS: dict[str, set[str]] = {
     "posting": {"httpx"},
     # Only where the settings ask for traces, and then inside the function that needs them.
     "spans": {"opentelemetry"},
-    "api": {"fastapi", "starlette", "pydantic", "pydantic_core", "swagger_ui_bundle"},
+    "api": {
+        *("fastapi", "jiter", "orjson", "pydantic", "pydantic_core", "starlette"),
+        "swagger_ui_bundle",
+    },
     "watch": {"fastapi", "starlette", "jinja2"},
     **dict.fromkeys(("app", "commands", "__main__"), INSTALLED),
 }
