@@ -10,7 +10,7 @@ import asyncio
 import secrets
 import time
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy
@@ -22,7 +22,7 @@ from service.choosing import NOTHING, Draw, drawn, odds_below, odds_of
 from service.currencies import inside
 from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
-from service.decision.rule import FIXED, SECOND, sale_of
+from service.decision.rule import FIXED, SECOND, Sale, sale_of
 from service.errors import Malformed, Refusal, StoreAway
 from service.guard.control import CONTROL, MAIN
 from service.guard.gate import shut
@@ -36,8 +36,7 @@ from service.metrics.tally import Tally
 from service.pricing import Priced, Put, gross, priced
 
 
-@dataclass(frozen=True, slots=True)
-class Answer:
+class Answer(NamedTuple):
     """
     A bid (nanos per impression, with its ticket) or a pass with its reason.
 
@@ -45,6 +44,7 @@ class Answer:
         held: The bid with its fees, and so its hold.
         draw: Which rule answered, and with what chances; None where none was asked.
         currency: Of the bid; empty where it is the line item's own.
+        sale: What was for sale, with its fees; None where nobody looked.
     """
 
     request_id: str | None
@@ -59,6 +59,7 @@ class Answer:
     held: int | None = None
     draw: Draw | None = None
     currency: str = ""
+    sale: Sale | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -142,10 +143,12 @@ class Bidder:
         late = self._clocks.lag_s() > until - arrived
         if opportunity.line_items:
             return await self._bid_best(opportunity, until, late=late)
-        found = await self._prepared(opportunity, until, late=late)
-        if isinstance(found, Answer):
-            return self._logged(found, opportunity)
-        weighed = self._weighed(found, opportunity, until, late=late)
+        weighed = self._at_once(opportunity, until, late=late)
+        if weighed is None:
+            found = await self._prepared(opportunity, until, late=late)
+            if isinstance(found, Answer):
+                return self._logged(found, opportunity)
+            weighed = self._weighed(found, opportunity, until, late=late)
         return self._logged(self._answered(weighed, opportunity), opportunity)
 
     async def _bid_best(self, opportunity: Opportunity, until: float, *, late: bool) -> Answer:
@@ -178,6 +181,20 @@ class Bidder:
         for answer, one in zip(answers, asked, strict=True):
             self._logged(answer, one)
         return next((answer for answer in answers if answer.bid is not None), answers[0])
+
+    def _at_once(
+        self, opportunity: Opportunity, until: float, *, late: bool
+    ) -> _Offer | Answer | None:
+        """What is answered where nothing needs waiting for: most bids find money for any price."""
+        item = self._catalog.get(opportunity.line_item)
+        if item is None or opportunity.test or late or time.monotonic() > until:
+            return None
+        held, wall_ms = self._leasing.hand.usable(item.id, self._leasing.clock()), _wall_ms()
+        if held is None or held.free < item.limits.cap or shut(item.limits, wall_ms) is not None:
+            return None
+        _check_sale(item, opportunity)
+        self._leasing.refresh(held)
+        return self._offered(item, opportunity, held, wall_ms)
 
     async def _prepared(
         self, opportunity: Opportunity, until: float, *, late: bool
@@ -254,6 +271,12 @@ class Bidder:
             reason = "overloaded"
         if reason is not None:
             return _pass(opportunity, reason)
+        return self._offered(item, opportunity, held, wall_ms)
+
+    def _offered(
+        self, item: Item, opportunity: Opportunity, held: SliceInHand | None, wall_ms: int
+    ) -> _Offer | Answer:
+        """What a line item that may bid names, or the pass that it answers."""
         if item.ready is None:
             return _pass(opportunity, "learner_halted")
         put = inside(opportunity, item.terms.currency, self._catalog.rates, wall_ms)
@@ -267,11 +290,11 @@ class Bidder:
         found = priced(rule, item.limits, sold, free, self._generator, set_by)
         if not isinstance(found, Priced):
             if found.cut:
-                draw = replace(draw, odds=odds_below(rule, found.sale.floor))
-            return replace(self._refused(item, opportunity, found.reason), draw=draw)
+                draw = draw._replace(odds=odds_below(rule, found.sale.floor))
+            return self._refused(item, opportunity, found.reason)._replace(draw=draw)
         # Of a price that the money cut nobody knows which one was drawn.
-        if found.cleared.price == found.proposed:
-            draw = replace(draw, odds=odds_of(rule, found.cleared.price))
+        if rule.law is not None and found.cleared.price == found.proposed:
+            draw = draw._replace(odds=odds_of(rule, found.cleared.price))
         return _Offer(item, found, held, seen.hashed, draw, sold.scale)
 
     def _refused(self, item: Item, opportunity: Opportunity, reason: str) -> Answer:
@@ -335,6 +358,7 @@ class Bidder:
             cleared.price,
             offer.draw,
             offer.scale.currency,
+            sale,
         )
 
     def _seen(self, item: Item, opportunity: Opportunity) -> Opportunity:
@@ -349,13 +373,12 @@ class Bidder:
         allowed = self._clocks.deadline_ms if asked is None else asked
         return min(allowed, self._clocks.deadline_ms_max) / 1000
 
-    def _for_sale(self, line_item: str, opportunity: Opportunity) -> dict[str, object]:
-        """What was for sale, with its fees; hindsight reads it when they may have changed."""
+    def _sale(self, line_item: str, opportunity: Opportunity) -> Sale | None:
+        """What was for sale, with its fees, for an answer that does not say."""
         item = self._catalog.get(line_item)
         if item is None:
-            return {"auction": opportunity.auction or "", "floor_held": None}
-        sale = sale_of(gross(opportunity, item.limits.fees), item.terms.auction)
-        return {"auction": sale.auction, "floor_held": sale.floor}
+            return None
+        return sale_of(gross(opportunity, item.limits.fees), item.terms.auction)
 
     def _logged(self, answer: Answer, opportunity: Opportunity) -> Answer:
         if opportunity.test:
@@ -365,9 +388,12 @@ class Bidder:
         else:
             self._tally.add("bids")
         draw = answer.draw or NOTHING
+        # Hindsight reads what was for sale when the fees may have changed.
+        sale = answer.sale or self._sale(answer.line_item, opportunity)
         self._backlog.add(
             {
-                **self._for_sale(answer.line_item, opportunity),
+                "auction": (opportunity.auction or "") if sale is None else sale.auction,
+                "floor_held": None if sale is None else sale.floor,
                 "arm": draw.arm,
                 "held": answer.held,
                 "arm_odds": draw.arm_odds,
@@ -390,10 +416,10 @@ class Bidder:
 
 def _check_sale(item: Item, opportunity: Opportunity) -> None:
     """Only with the line item at hand is it known which auction one that names none stands for."""
-    sale = sale_of(opportunity, item.terms.auction)
-    if sale.auction == FIXED and opportunity.price is None:
+    auction = opportunity.auction or item.terms.auction
+    if auction == FIXED and opportunity.price is None:
         raise Malformed("bad_field", "A fixed-price sale needs its price.", {"field": "price_cpm"})
-    if sale.auction != SECOND and METHODS[item.terms.method].by_law:
+    if auction != SECOND and METHODS[item.terms.method].by_law:
         raise Malformed(
             "auction_not_for_method",
             "The line item's method draws its bids for a second price; it bids in no other.",

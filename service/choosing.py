@@ -7,7 +7,7 @@ was drawn, an arm or a price, is logged with its chance, for nobody can work it 
 from __future__ import annotations
 
 import secrets
-from dataclasses import dataclass
+from typing import NamedTuple
 
 from service.catalog import Item, PlainRule
 from service.decision.opportunity import Opportunity
@@ -16,8 +16,7 @@ from service.guard.control import CONTROL, MAIN
 from service.guard.hand import Hand
 
 
-@dataclass(frozen=True, slots=True)
-class Draw:
+class Draw(NamedTuple):
     """
     How it came that this rule bid, and this price.
 

@@ -109,7 +109,7 @@ def priced(
 
 def gross(opportunity: Opportunity, fees: Fees) -> Opportunity:
     """What is for sale, at what it costs."""
-    if fees == NONE:
+    if fees is NONE:
         return opportunity
     floor = fees.gross(opportunity.floor) if opportunity.floor else 0
     price = None if opportunity.price is None else fees.gross(opportunity.price)

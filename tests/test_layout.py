@@ -59,8 +59,8 @@ OWN: dict[str, set[str]] = {
 
 INSTALLED = set(
     """
-    alembic fastapi httpx jinja2 jiter matplotlib numpy orjson plotly prometheus_client psycopg pydantic
-    pydantic_settings rich scipy sqlalchemy starlette swagger_ui_bundle uvicorn uvloop
+    alembic fastapi httpx jinja2 jiter matplotlib numpy orjson plotly prometheus_client psycopg
+    pydantic pydantic_settings rich scipy sqlalchemy starlette swagger_ui_bundle uvicorn uvloop
     """.split()
 )
 

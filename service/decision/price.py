@@ -18,7 +18,7 @@ from service.decision.counts import Counts
 from service.decision.market import UNTOLD, Market, market_of
 from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
-from service.decision.rule import FIRST, OF_SALE, Sale, sale_of
+from service.decision.rule import FIRST, OF_SALE, SECOND, Sale, sale_of
 from service.decision.terms import Terms
 from service.decision.valuing import Valuing, valuing_of
 from service.learner import exptree_rules
@@ -112,6 +112,9 @@ class Ready:
     def _sold(self, valued: Proposal | Passed, sale: Sale) -> Proposal | Passed:
         """From the value to the bid; a price that nobody thinks is the value is not shaded."""
         if isinstance(valued, Passed) or self.law is not None:
+            return valued
+        # What is bid for a second price decides only whether it is won: the value is the price.
+        if sale.auction == SECOND:
             return valued
         if sale.auction == FIRST and not METHODS[self.terms.method].learns:
             return valued

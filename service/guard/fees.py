@@ -33,10 +33,15 @@ class Fees:
 
     def gross(self, net: int) -> int:
         """The cost of a price, rounded up: a hold must never fall short."""
+        # Most line items have none, and every bid asks.
+        if self is NONE:
+            return net
         return net + -(-net * self.share // WHOLE) + self.flat
 
     def net(self, gross: int) -> int:
         """The largest price whose cost is within this; below 0 where the fees alone are more."""
+        if self is NONE:
+            return gross
         return (gross - self.flat) * WHOLE // (WHOLE + self.share)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import NamedTuple
 
 from service.guard.fees import NONE, Fees
 
@@ -18,8 +19,7 @@ class Limits:
     fees: Fees = NONE
 
 
-@dataclass(frozen=True, slots=True)
-class Cleared:
+class Cleared(NamedTuple):
     """A price that may leave, in nanos per impression, and what set it."""
 
     price: int

@@ -29,15 +29,21 @@ class Scale:
 
     def sent(self, net: int) -> int:
         """The largest price for one impression whose cost is within `net` nanos."""
+        if self is PLAIN:
+            return net
         return net * _SQUARE // (self.rate * max(self.multiplier, WHOLE))
 
     def worth(self, price: int) -> int:
         """What `net` must reach for this price to leave, rounded up."""
+        if self is PLAIN:
+            return price
         # Where less than one impression is expected, a cap for one still binds the price of one.
         return -(-price * self.rate * max(self.multiplier, WHOLE) // _SQUARE)
 
     def held(self, price: int) -> int:
         """The most that this price may cost, rounded up."""
+        if self is PLAIN:
+            return price
         return -(-price * self.rate * self.multiplier // _SQUARE)
 
     def paid(self, price: int, delivered: int | None = None) -> int:

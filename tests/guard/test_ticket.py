@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import base64
-from dataclasses import replace
 
 import pytest
 from hypothesis import given
 from hypothesis import strategies as some
 
+from service.guard.control import CONTROL, MAIN
 from service.guard.fees import Fees
 from service.guard.scale import PLAIN, Scale
 from service.guard.ticket import TEXT_MAX, BadTicket, Ticket, TicketKeys, bid_of, ref_of
@@ -42,6 +42,7 @@ tickets = some.builds(
     floor=some.integers(0, 2**62),
     features=some.binary(max_size=99),
     hint=some.none() | some.integers(0, 2**64 - 1),
+    arm=some.sampled_from([MAIN, CONTROL]),
     scale=some.just(PLAIN)
     | some.builds(
         Scale,
@@ -71,7 +72,7 @@ def test_a_ticket_comes_back_as_it_left(ticket: Ticket) -> None:
 
 def test_the_longest_ids_fit() -> None:
     """Two ids of 64 characters, 32 features and their constant, and a hint stay below the limit."""
-    longest = replace(TICKET, line_item="x" * 64, source="y" * 64, features=b"f" * 99, hint=2**63)
+    longest = TICKET._replace(line_item="x" * 64, source="y" * 64, features=b"f" * 99, hint=2**63)
     assert len(KEYS.sign(longest)) == 439
 
 
@@ -89,7 +90,7 @@ def test_every_changed_byte_is_refused() -> None:
 def test_every_changed_character_is_refused() -> None:
     """A ticket has one spelling: not even bits that carry nothing may differ."""
     for fill in range(3):  # All three ways in which base64 can end.
-        text = KEYS.sign(replace(TICKET, source="d" * (7 + fill)))
+        text = KEYS.sign(TICKET._replace(source="d" * (7 + fill)))
         for place, old in enumerate(text):
             for new in "AQgwBf_-+/=":
                 if new != old:
@@ -99,7 +100,7 @@ def test_every_changed_character_is_refused() -> None:
 
 def test_another_spelling_of_the_same_bytes_is_refused() -> None:
     """The plain alphabet of base64 and its padding are not ours."""
-    text = next(t for n in range(100) if "-" in (t := KEYS.sign(replace(TICKET, counter=n))))
+    text = next(t for n in range(100) if "-" in (t := KEYS.sign(TICKET._replace(counter=n))))
     for other in (text.replace("-", "+"), text + "=", text + "==", text + "\n", " " + text):
         with pytest.raises(BadTicket):
             KEYS.verify(other)
@@ -178,28 +179,28 @@ def test_a_ref_has_one_spelling() -> None:
 
 def test_no_two_bids_of_a_slice_share_an_id() -> None:
     """The id is slice + counter, also where that passes the end of 128 bits."""
-    last = replace(TICKET, slice=b"\xff" * 16)
-    ids = {replace(last, counter=n).bid for n in range(1000)}
+    last = TICKET._replace(slice=b"\xff" * 16)
+    ids = {last._replace(counter=n).bid for n in range(1000)}
 
     assert len(ids) == 1000
-    assert replace(last, counter=0).bid == b"\xff" * 16
-    assert replace(last, counter=1).bid == bytes(16)
+    assert last._replace(counter=0).bid == b"\xff" * 16
+    assert last._replace(counter=1).bid == bytes(16)
     assert all(len(bid) == 16 for bid in ids)
 
 
 def test_every_field_is_signed() -> None:
     """A ticket for one line item, slice or price cannot be used for another."""
     others = [
-        replace(TICKET, line_item="alpine-season-pasT"),
-        replace(TICKET, source="defaulu"),
-        replace(TICKET, line_item="alpine-season-passd", source="efault"),
-        replace(TICKET, slice=bytes(16)),
-        replace(TICKET, counter=8),
-        replace(TICKET, price=1_234_568),
-        replace(TICKET, snapshot=813),
-        replace(TICKET, day=739_952),
-        replace(TICKET, incarnation=b"incarnas"),
-        replace(TICKET, test=True),
+        TICKET._replace(line_item="alpine-season-pasT"),
+        TICKET._replace(source="defaulu"),
+        TICKET._replace(line_item="alpine-season-passd", source="efault"),
+        TICKET._replace(slice=bytes(16)),
+        TICKET._replace(counter=8),
+        TICKET._replace(price=1_234_568),
+        TICKET._replace(snapshot=813),
+        TICKET._replace(day=739_952),
+        TICKET._replace(incarnation=b"incarnas"),
+        TICKET._replace(test=True),
     ]
     signatures = {KEYS.sign(ticket)[-21:] for ticket in [TICKET, *others]}
 
