@@ -9,16 +9,15 @@ from __future__ import annotations
 import asyncio
 import secrets
 import time
-from collections.abc import Callable
-from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy
 
 from service import spans
+from service.answer import Answer, Clocks, decision
 from service.backlog import Backlog
 from service.catalog import Catalog, Item
-from service.choosing import NOTHING, Draw, drawn, odds_below, odds_of
+from service.choosing import Draw, drawn, odds_below, odds_of
 from service.currencies import inside
 from service.decision.methods import METHODS
 from service.decision.opportunity import Opportunity
@@ -35,46 +34,7 @@ from service.leasing import Leasing
 from service.metrics.tally import Tally
 from service.pricing import Priced, Put, gross, priced
 
-
-class Answer(NamedTuple):
-    """
-    A bid (nanos per impression, with its ticket) or a pass with its reason.
-
-    Args:
-        held: The bid with its fees, and so its hold.
-        draw: Which rule answered, and with what chances; None where none was asked.
-        currency: Of the bid; empty where it is the line item's own.
-        sale: What was for sale, with its fees; None where nobody looked.
-    """
-
-    request_id: str | None
-    line_item: str
-    bid: int | None
-    reason: str | None
-    ticket: str | None = None
-    ref: str | None = None
-    method: str | None = None
-    set_by: str | None = None
-    snapshot: int | None = None
-    held: int | None = None
-    draw: Draw | None = None
-    currency: str = ""
-    sale: Sale | None = None
-
-
-@dataclass(frozen=True, slots=True)
-class Clocks:
-    """
-    How long a request may take at most, in milliseconds, and how many may wait at once.
-
-    Args:
-        lag_s: How late requests are seen now, in seconds.
-    """
-
-    deadline_ms: int
-    deadline_ms_max: int
-    waiting_max: int = 200
-    lag_s: Callable[[], float] = float
+__all__ = ["Answer", "Bidder", "Clocks"]
 
 
 class _Offer(NamedTuple):
@@ -387,30 +347,9 @@ class Bidder:
             self._tally.add("passes", answer.reason)
         else:
             self._tally.add("bids")
-        draw = answer.draw or NOTHING
         # Hindsight reads what was for sale when the fees may have changed.
         sale = answer.sale or self._sale(answer.line_item, opportunity)
-        self._backlog.add(
-            {
-                "auction": (opportunity.auction or "") if sale is None else sale.auction,
-                "floor_held": None if sale is None else sale.floor,
-                "arm": draw.arm,
-                "held": answer.held,
-                "arm_odds": draw.arm_odds,
-                "odds": draw.odds,
-                "at_ms": _wall_ms(),
-                "line_item": answer.line_item,
-                "ref": answer.ref,
-                "request_id": answer.request_id,
-                "source": opportunity.source,
-                "floor": opportunity.floor,
-                "price": answer.bid,
-                "reason": answer.reason,
-                "set_by": answer.set_by,
-                "snapshot": answer.snapshot or 0,
-                "test": int(opportunity.test),
-            }
-        )
+        self._backlog.add(decision(answer, opportunity, sale, _wall_ms()))
         return answer
 
 

@@ -15,7 +15,7 @@ STORIES = {"bidding", "feedback", "upkeep", "operating", "clerk", "exchanging", 
 # What several stories need and none of them owns.
 SHARED = set(
     """
-    admitting backlog catalog choosing configuring connecting correcting drawing estimates
+    admitting answer backlog catalog choosing configuring connecting correcting drawing estimates
     foreseeing hindsights judging leasing ordering patience posting previewing pulse quarantining
     rating records recounting rehearsal_orders sampling showing spans spending teaching threads
     tripwiring watching winding
