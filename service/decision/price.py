@@ -130,12 +130,18 @@ class Ready:
             own = self.valuing.value(opportunity)
             if own is not None:
                 most = None if self.most is None else own.mean
-                bid = _bid(lambda: self.hold.bid(np.asarray(own.value)), self.terms)
-                return _proposal(bid, most, self.terms, self.hold)
+                return _proposal(self._held_back(own.value), most, self.terms, self.hold)
         draw, counts, terms = METHODS[self.terms.method].draw, self.counts, self.terms
         if not self.draws or draw is None or counts is None or isinstance(self.answer, Passed):
             return self.answer
-        return self._priced(lambda: draw(counts, terms, generator))
+        value = float(draw(counts, terms, generator))
+        return _proposal(self._held_back(value), self.most, self.terms, self.hold)
+
+    def _held_back(self, value: float) -> float | None:
+        """What budget and return target leave of a value; as it is where nothing brakes."""
+        if self.hold.set_by is None:
+            return value if math.isfinite(value) and value >= 0.0 else None
+        return _bid(lambda: self.hold.bid(np.asarray(value)), self.terms)
 
     def _valued_at(self, order: float) -> Proposal | Passed:
         if self.law is not None:
