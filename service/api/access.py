@@ -8,6 +8,7 @@ import re
 from starlette.requests import Request
 
 from service.api.edge import edge
+from service.api.raw import header
 from service.api.stories import Caller, started, stories
 from service.errors import Forbidden, NotFound, Unauthenticated, no_such_line_item
 
@@ -104,7 +105,7 @@ def actor(caller: Caller) -> str:
 
 
 def _bearer(request: Request) -> str:
-    matched = _BEARER.fullmatch(request.headers.get("authorization", ""))
+    matched = _BEARER.fullmatch(header(request, b"authorization") or "")
     if matched is None:
         raise Unauthenticated("no_key", "Send a key as Authorization: Bearer.")
     return matched.group(1)

@@ -7,6 +7,7 @@ import re
 import jiter
 from starlette.requests import Request
 
+from service.api.raw import header
 from service.errors import Malformed, Refusal
 
 _JSON_TYPE = re.compile(
@@ -64,13 +65,14 @@ def parse_object(body: bytes) -> dict[str, object]:
 
 
 def _check_headers(request: Request, bytes_max: int) -> None:
-    content_type = request.headers.get("content-type", "")
-    if content_type and not _JSON_TYPE.fullmatch(content_type.strip()):
+    content_type = header(request, b"content-type") or ""
+    plain = content_type in ("", "application/json")
+    if not plain and not _JSON_TYPE.fullmatch(content_type.strip()):
         raise NotJson("not_json", "The content type must be application/json in UTF-8.")
     # A few encoded bytes may unfold to gigabytes, so nothing encoded is read at all.
-    if request.headers.get("content-encoding", "identity").strip().lower() != "identity":
+    if (header(request, b"content-encoding") or "identity").strip().lower() != "identity":
         raise NotJson("encoded_body", "Send the body without a content encoding.")
-    announced = request.headers.get("content-length", "")
+    announced = header(request, b"content-length") or ""
     # By its length first, as int() itself refuses thousands of digits with an error.
     if announced.isdecimal() and (len(announced) > 18 or int(announced) > bytes_max):
         raise _too_large(bytes_max)
