@@ -49,7 +49,8 @@ class _Malformed(ValueError):
 async def post_bids(request: Request) -> Response:
     """Bids as an OpenRTB response, or one of the standard's ways not to bid."""
     arrived = time.monotonic()
-    await require(request, "bid")
+    # Which line items bid is the mapping's choice, not the request's.
+    await require(request, "bid", of_all=True)
     name, source = _source(request)
     try:
         body = await _body(request)
@@ -68,7 +69,7 @@ async def post_bids(request: Request) -> Response:
 )
 async def post_explain(request: Request) -> Response:
     """What the mapping makes of one request; no price is made and nothing is kept."""
-    await require(request, "read")
+    await require(request, "read", of_all=True)
     name, source = _source(request)
     try:
         body = await _body(request)

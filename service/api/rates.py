@@ -31,7 +31,7 @@ router = direct_router()
 )
 async def post_rate(request: Request) -> Response:
     """Let a rate count; open bids settle by the rate they left with."""
-    key, once = await require(request, "operate"), idempotency(request)
+    key, once = await require(request, "operate", of_all=True), idempotency(request)
     form = read(RateForm, await read_object(request, edge(request).body_bytes_max))
     span = (form.from_at, form.until_at)
     rating = stories(request).operator.rating

@@ -141,5 +141,5 @@ async def get_journal(request: Request) -> Response:
 @router.get("/v1/journal", **_told("journal", "Read who did what anywhere, and why."))
 async def get_journal_of_all(request: Request) -> Response:
     """Rows of the journal of all line items and of none."""
-    await require(request, "read")
+    await require(request, "read", of_all=True)
     return await _answer(request, "journal", None)

@@ -47,7 +47,7 @@ def _id(request: Request) -> int:
 )
 async def post_rehearsal(request: Request) -> Response:
     """Put a rehearsal in the queue; its place says where to read how it goes."""
-    key, once = await require(request, "operate"), idempotency(request)
+    key, once = await require(request, "operate", of_all=True), idempotency(request)
     members = await read_object(request, edge(request).body_bytes_max)
     wish = read_rehearsal(members, start_of_today_ms())
     shown = await stories(request).rehearsals.ask(wish, actor(key), **once)
@@ -58,7 +58,7 @@ async def post_rehearsal(request: Request) -> Response:
 @router.get(PATH, **described("List rehearsals, newest first.", "read", query=("before", "limit")))
 async def get_rehearsals(request: Request) -> Response:
     """A page of rehearsals without their results, and where the next page goes on."""
-    await require(request, "read")
+    await require(request, "read", of_all=True)
     before, limit = numbered_page(request)
     rows = await stories(request).rehearsals.page(before, limit)
     further = int(rows[-1]["id"]) if len(rows) == limit else None
@@ -71,7 +71,7 @@ async def get_rehearsals(request: Request) -> Response:
 )
 async def get_rehearsal(request: Request) -> Response:
     """One rehearsal; `result` is null until it is done."""
-    await require(request, "read")
+    await require(request, "read", of_all=True)
     return answers.json_answer(answers.plain(await stories(request).rehearsals.one(_id(request))))
 
 
@@ -80,7 +80,7 @@ async def get_rehearsal(request: Request) -> Response:
 )
 async def post_cancel(request: Request) -> Response:
     """Stop one that waits or plays; one that has ended stays as it is."""
-    key = await require(request, "operate")
+    key = await require(request, "operate", of_all=True)
     form = read(OrderForm, await read_object(request, edge(request).body_bytes_max))
     shown = await stories(request).rehearsals.cancel(_id(request), form.reason, actor(key))
     return answers.json_answer(answers.plain(shown))
