@@ -21,7 +21,11 @@ from tests.builders import outage
 
 CANARY = "canary-0123456789-abcdefghij-0123456789"
 # One for each secret setting; the address of the database carries its own as a password.
-CANARIES = {"ticket_keys": f"{CANARY}-ticket,{CANARY}-older", "health_key": f"{CANARY}-health"}
+CANARIES = {
+    "ticket_keys": f"{CANARY}-ticket,{CANARY}-older",
+    "health_key": f"{CANARY}-health",
+    "webhook_secret": f"{CANARY}-webhook",
+}
 
 
 def secret_settings() -> set[str]:

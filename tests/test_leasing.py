@@ -115,7 +115,7 @@ async def test_no_money_is_asked_for_once_a_moment(migrated_url: str) -> None:
         worker.clock.now += DENIED_S
         assert worker.leasing.denied(NAME) is None
         await worker.bid()
-        await worker.operator.patch(NAME, {"budget": UNIT}, 1, None, None, "tester")
+        await worker.operator.patch(NAME, {"budget": 9 * PRICE}, 1, None, None, "tester")
         await worker.upkeep.follow()
         assert worker.leasing.denied(NAME) is None
         assert (await worker.bid()).bid == PRICE

@@ -20,11 +20,11 @@ STATUSES = ("recorded", "duplicate", "conflict", "late", "parked", "refused", OT
 CODES = (
     *("bad_ticket", "bad_ref", "bad_field", "no_ticket", "no_price", "no_such_ref"),
     *("no_such_line_item", "no_such_event", "not_won", "ref_of_another_bid", "quarantined"),
-    *("value_out_of_range", OTHER),
+    *("value_out_of_range", "other_currency", "bad_price", OTHER),
 )
 DUTIES = (
     *("keep_time", "follow", "give_back", "tick", "log"),
-    *("teach", "close", "audit", "prune", "measure", OTHER),
+    *("teach", "close", "audit", "prune", "measure", "chart", "watch", "tell", OTHER),
 )
 ANSWERS = ("2xx", "3xx", "4xx", "5xx")
 
