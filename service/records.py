@@ -12,6 +12,7 @@ from functools import partial
 from typing import Any
 
 from service.errors import Overloaded
+from service.ledger.accounts import NO_LIMIT
 from service.recounting import (
     LESSON_KINDS,
     MONEY_KINDS,
@@ -288,7 +289,7 @@ def _summary(connection: Reading, wish: Wish, config: dict[str, Any]) -> dict[st
         return {}
     sums = records.balance(connection, name)
     free = max(0, sums["target"] - sums["spent"] - sums["held"])
-    days = records.days(connection, name)
+    days = [_limited(day) for day in records.days(connection, name)]
     slices = records.open_slices(connection, name)
     return {
         "line_item": name,
@@ -300,6 +301,10 @@ def _summary(connection: Reading, wish: Wish, config: dict[str, Any]) -> dict[st
             for one in slices
         ],
     }
+
+
+def _limited(day: dict[str, Any]) -> dict[str, Any]:
+    return {**day, "target": None if day["target"] == NO_LIMIT else day["target"]}
 
 
 def _in_nanos(row: dict[str, Any], names: tuple[str, ...]) -> dict[str, Any]:

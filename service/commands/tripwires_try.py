@@ -58,10 +58,10 @@ def _setting(words: str | None) -> Any:
 
 def _tell(shown: dict[str, Any]) -> None:
     out = sys.stdout.write
-    out(f"{shown['line_item']}: {shown['looks']} moments from {shown['from']} on\n")
+    out(f"{shown['line_item']}: {shown['looks']} moments from {shown['from_at']} on\n")
     for name, rule in shown["rules"].items():
         action, fired = rule["setup"]["action"], rule["fired"]
         out(f"  {name:17} {action:6} fired {fired} times, {rule['per_week']:g} a week\n")
         for one in rule["episodes"]:
-            out(f"    {one['from']}  {one['saw']}\n")
+            out(f"    {one['from_at']}  {one['saw']}\n")
     out(f"It would have frozen {shown['would_freeze_in_all']} times. Nothing was changed.\n")

@@ -13,7 +13,7 @@ OTHER = "other"  # What no list below names; a label that grows here wants a pla
 PASSES = (
     *("frozen", "out_of_flight", "budget_spent", "day_spent", "past_deadline", "overloaded"),
     *("learner_halted", "no_value", "price_rounds_to_zero", "under_floor", "outbid_inside"),
-    *("budget_held", OTHER),
+    *("budget_held", "no_rate", OTHER),
 )
 KINDS = ("won", "lost", "void", "billed", "value")
 STATUSES = ("recorded", "duplicate", "conflict", "late", "parked", "refused", OTHER)
@@ -24,7 +24,7 @@ CODES = (
 )
 DUTIES = (
     *("keep_time", "follow", "give_back", "tick", "log"),
-    *("teach", "close", "audit", "prune", "measure", "chart", "watch", "tell", OTHER),
+    *("teach", "close", "audit", "prune", "chart", "watch", "tell", "measure", OTHER),
 )
 ANSWERS = ("2xx", "3xx", "4xx", "5xx")
 

@@ -43,6 +43,7 @@ PASSES = {
     "under_floor": "under the floor",
     "outbid_inside": "another line item bid",
     "budget_held": "budget held by open bids",
+    "no_rate": "no rate for its currency",
 }
 
 
