@@ -83,7 +83,12 @@ class Watching:
 
     async def key(self, key_id: str) -> Key | None:
         """The live key of this id, or None; asked with every page, so a session ends with it."""
-        return await self._read(lambda connection: keys.by_id(connection, key_id))
+        key = await self._read(lambda connection: keys.by_id(connection, key_id))
+        # It may have come to its end without anybody ending it.
+        ended = key is None or (
+            key.until_ms is not None and key.until_ms <= self._database.wall_ms()
+        )
+        return None if ended else key
 
     async def board(self, sees: Sees, wanted: str, page: int, *, all_of_them: bool) -> Board:
         """

@@ -53,7 +53,8 @@ OWN: dict[str, set[str]] = {
     | {"errors", "money", "store.reading", "decision.opportunity", "configuring", "winding"}
     | {"admitting", "hindsights", "openrtb", "records", "recounting", "request_ids"},
     # An order is read as the API reads it, so that both refuse the same.
-    "watch": {"operating", "watching", "judging", "winding", "errors", "money", "api"},
+    "watch": {"operating", "rehearsing", "watching", "judging", "winding", "errors", "money", "api"}
+    | {"drawing", "hindsights", "decision.methods"},
     **dict.fromkeys(("app", "commands", "__main__"), EVERYTHING),
 }
 

@@ -7,7 +7,7 @@ from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
-from sqlalchemy import inspect, text
+from sqlalchemy import text
 
 from service.ledger.days import local_day
 from service.store.database import Reading, among
@@ -145,14 +145,21 @@ def latest(connection: Reading, ids: list[str], wall_ms: int) -> dict[str, Lates
 
 
 def journal(connection: Reading, ids: list[str] | None, limit: int) -> list[dict[str, Any]]:
-    """The newest rows of the journal, of these line items and the switch over all, or of all."""
+    """
+    The newest rows of the journal.
+
+    Args:
+        ids: Only those of these line items, and of the switch over all, which stops them too.
+    """
     columns = "SELECT number, at_ms, actor, action, line_item, reason FROM journal"
     tail = " ORDER BY number DESC LIMIT :n"
     if ids is None:
         rows = connection.execute(text(columns + tail), {"n": limit})
     else:
-        statement = among(f"{columns} WHERE line_item IN :ids{tail}")
-        rows = connection.execute(statement, {"ids": [*ids, "*"], "n": limit})
+        # Under the mark of all stands also what was done to keys, which is no line item's.
+        switch = "(line_item = '*' AND action IN ('freeze', 'thaw'))"
+        statement = among(f"{columns} WHERE line_item IN :ids OR {switch}{tail}")
+        rows = connection.execute(statement, {"ids": ids, "n": limit})
     return [dict(row._mapping) for row in rows]
 
 
@@ -208,10 +215,8 @@ def _waiting(connection: Reading, only: str | None) -> dict[str, int]:
 def _findings(connection: Reading, only: str | None) -> dict[str, list[str]]:
     """What tripwires see now, in their own words, the oldest first."""
     found: dict[str, list[str]] = {}
-    # A database that no tripwire has watched yet has no such table.
-    if inspect(connection).has_table("tripwire_finding"):
-        for row in _of(connection, _FINDINGS, only):
-            found.setdefault(row.line_item, []).append(f"{row.rule.replace('_', ' ')}: {row.saw}")
+    for row in _of(connection, _FINDINGS, only):
+        found.setdefault(row.line_item, []).append(f"{row.rule.replace('_', ' ')}: {row.saw}")
     return found
 
 

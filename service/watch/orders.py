@@ -12,13 +12,14 @@ from starlette.responses import Response
 
 from service.api.forms.orders import OrderForm, RetractForm, RewindForm
 from service.api.forms.reading import StrictForm, read
-from service.errors import Forbidden, Refusal
+from service.errors import Refusal
 from service.operating import Operator
 from service.watch.door import (
     Viewer,
     line_item_of,
     missing,
     operator,
+    require_all,
     require_operate,
     shown,
     stories,
@@ -106,7 +107,7 @@ async def post_order(request: Request) -> Response:
 async def get_order_for_all(request: Request) -> Response:
     """The form that stops or starts everything."""
     who = await viewer(request)
-    _require_all(who)
+    require_all(who)
     return await _form_for_all(request, who, _kind(request, FOR_ALL), "")
 
 
@@ -114,7 +115,7 @@ async def get_order_for_all(request: Request) -> Response:
 async def post_order_for_all(request: Request) -> Response:
     """Throw or lift the switch over all line items."""
     who, form = await operator(request)
-    _require_all(who)
+    require_all(who)
     kind, once = _kind(request, FOR_ALL), form.pop("once", "") or None
     try:
         reason = read(OrderForm, {"reason": form.get("reason", "").strip()}).reason
@@ -125,12 +126,6 @@ async def post_order_for_all(request: Request) -> Response:
     done = await give(None, reason, who.actor, once)
     stories(request).watching.forget()
     return page("done.html", kind=kind, name=None, done=done, who=who)
-
-
-def _require_all(who: Viewer) -> None:
-    require_operate(who)
-    if not who.sees_all:
-        raise Forbidden("limited_key", "This key is limited to some line items.")
 
 
 def _kind(request: Request, among: tuple[str, ...] = tuple(KINDS)) -> Kind:

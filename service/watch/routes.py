@@ -10,7 +10,7 @@ from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import RedirectResponse, Response
 
-from service.watch import door, orders
+from service.watch import orders, signing
 from service.watch.door import Viewer, line_item_of, shown, stories, viewer
 from service.watch.pages import PRIVATE, file, page
 from service.watch.words import sentence
@@ -93,9 +93,9 @@ async def get_file(request: Request) -> Response:
     return file(request, str(request.path_params["name"]))
 
 
-router.add_api_route("/watch/sign-in", door.get_sign_in, methods=["GET"])
-router.add_api_route("/watch/sign-in", door.post_sign_in, methods=["POST"])
-router.add_api_route("/watch/sign-out", door.post_sign_out, methods=["POST"])
+router.add_api_route("/watch/sign-in", signing.get_sign_in, methods=["GET"])
+router.add_api_route("/watch/sign-in", signing.post_sign_in, methods=["POST"])
+router.add_api_route("/watch/sign-out", signing.post_sign_out, methods=["POST"])
 router.add_api_route("/watch/all/{order}", orders.get_order_for_all, methods=["GET"])
 router.add_api_route("/watch/all/{order}", orders.post_order_for_all, methods=["POST"])
 ORDER = "/watch/line-items/{line_item_id}/{order}"

@@ -11,8 +11,6 @@ import re
 import secrets
 from dataclasses import dataclass
 
-from service.operating import Key
-
 SESSION_S = 12 * 3600  # A shift and a bit: whoever comes later signs in again.
 _SESSION = re.compile(r"([0-9a-f]{1,32})\.([0-9]{1,12})\.([0-9a-f]{32})")
 
@@ -69,26 +67,16 @@ class Seal:
         return hmac.compare_digest(expected.encode(), signature.encode("utf-8", "replace"))
 
 
-def begin(key_id: str, now_s: int) -> Session:
-    """A new session of a key."""
-    return Session(key_id, now_s + SESSION_S, secrets.token_hex(16))
+def begin(key_id: str, now_s: int, until_ms: int | None = None) -> Session:
+    """
+    A new session of a key.
 
-
-def sees(key: Key, line_item: str) -> bool:
-    """Whether a key may look at a line item: the one place where keys are limited to some."""
-    names = _limited_to(key)
-    return names is None or line_item in names
-
-
-def sees_all(key: Key) -> bool:
-    """Whether a key is limited to no line items, and may throw the switch over all."""
-    return _limited_to(key) is None
-
-
-def _limited_to(key: Key) -> frozenset[str] | None:
-    # Keys of the first release know no limit.
-    names = getattr(key, "line_items", None)
-    return None if names is None else frozenset(names)
+    Args:
+        until_ms: When the text that was handed in ends; no session outlives it.
+    """
+    ends_s = now_s + SESSION_S
+    ends_s = ends_s if until_ms is None else min(ends_s, until_ms // 1000)
+    return Session(key_id, ends_s, secrets.token_hex(16))
 
 
 class Attempts:

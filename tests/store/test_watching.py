@@ -67,9 +67,6 @@ def test_a_line_item_stands_with_its_money_and_freezes(database: Database) -> No
     assert found.wall_ms == NOW_MS
 
 
-FINDING = """CREATE TABLE IF NOT EXISTS tripwire_finding (number INTEGER, line_item TEXT,
-    rule TEXT, action TEXT, saw TEXT, numbers TEXT, since_ms BIGINT, raised_ms BIGINT,
-    seen_ms BIGINT, froze_ms BIGINT, thawed_ms BIGINT, cleared_ms BIGINT)"""
 FOUND = """INSERT INTO tripwire_finding (line_item, rule, action, saw, numbers, since_ms, raised_ms,
     seen_ms, cleared_ms) VALUES ('garden', 'value_rate', 'warn', :saw, '{}', 1, 1, 1, :cleared)"""
 
@@ -77,7 +74,6 @@ FOUND = """INSERT INTO tripwire_finding (line_item, rule, action, saw, numbers, 
 def test_what_tripwires_see_now_is_told(database: Database) -> None:
     """Open findings in their own words; what has passed is history."""
     begin(database)
-    database.write(lambda c: c.execute(text(FINDING)))
     for said, cleared in (("80 where 16 are usual", None), ("long ago", 2)):
         row = {"saw": said, "cleared": cleared}
         database.write(lambda c, row=row: c.execute(text(FOUND), row))  # type: ignore[misc]

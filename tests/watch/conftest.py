@@ -11,6 +11,7 @@ from typing import Any
 
 import httpx
 import pytest
+from fastapi import FastAPI
 
 from service.app import create_app
 from service.connecting import open_database
@@ -37,14 +38,27 @@ _FIELD = re.compile(r'<input type="hidden" name="([a-z]+)" value="([^"]*)">')
 class Visitor:
     """Somebody before the page, and the service behind it."""
 
+    app: FastAPI
     client: httpx.AsyncClient
     database: Database
     admin: str
 
-    def key(self, *scopes: str) -> tuple[str, str]:
+    def key(
+        self, *scopes: str, line_items: list[str] | None = None, expires_ms: int | None = None
+    ) -> tuple[str, str]:
         """A new key: its id and its text."""
-        made, bearer = keys.add(self.database, "anna", list(scopes))
+        made, bearer = keys.add(
+            self.database, "anna", list(scopes), line_items=line_items, expires_ms=expires_ms
+        )
         return made.id, bearer
+
+    async def refused(self) -> list[tuple[str, str, str]]:
+        """What was counted: key, route and code of each refusal, through the API."""
+        # Of the running app: its count is in its memory until it is written down.
+        await self.app.state.stories.operator.admitting.flush()
+        headers = {"Authorization": f"Bearer {self.admin}"}
+        rows = (await self.client.get("/v1/refusals", headers=headers)).json()["refusals"]
+        return [(row["key_id"], row["route"], row["code"]) for row in reversed(rows)]
 
     async def api(self, path: str, body: dict[str, Any]) -> dict[str, Any]:
         """Call the API with the admin key."""
@@ -83,7 +97,7 @@ async def visiting(url: str, scheme: str = "http") -> AsyncIterator[Visitor]:
         app.router.lifespan_context(app),
         httpx.AsyncClient(transport=transport, base_url=f"{scheme}://test") as client,
     ):
-        visitor = Visitor(client, database, bearer)
+        visitor = Visitor(app, client, database, bearer)
         await visitor.api("line-items", GARDEN)
         yield visitor
     database.close()

@@ -24,8 +24,8 @@ async def signed_in(visitor: Visitor) -> Visitor:
 
 
 def journal(visitor: Visitor) -> list[Any]:
-    """What was journalled since the line item was made."""
-    rows = text("SELECT * FROM journal WHERE action <> 'create' ORDER BY number")
+    """What was journalled since line item and key were made."""
+    rows = text("SELECT * FROM journal WHERE action NOT IN ('create', 'key_add') ORDER BY number")
     return list(visitor.database.read(lambda c: c.execute(rows).all()))
 
 

@@ -2,12 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import pytest
 
-from service.operating import Key
-from service.watch import sessions
 from service.watch.sessions import SESSION_S, Attempts, Seal, Session, begin
 
 NOW_S = 1_764_600_000
@@ -82,20 +78,7 @@ def test_old_failures_are_forgotten() -> None:
     assert list(attempts._failed) == ["here"]
 
 
-@dataclass(frozen=True, slots=True)
-class Limited(Key):
-    """A key that is limited to some line items."""
-
-    line_items: frozenset[str] | None = None
-
-
-def test_a_limited_key_sees_its_own() -> None:
-    """A key without a limit sees everything; one limited to nothing sees nothing."""
-    free = Key("a", "anna", frozenset({"read"}))
-    some = Limited("a", "anna", frozenset({"read"}), frozenset({"garden"}))
-    nothing = Limited("a", "anna", frozenset({"read"}), frozenset())
-    assert sessions.sees(free, "garden")
-    assert sessions.sees_all(free)
-    assert (sessions.sees(some, "garden"), sessions.sees(some, "other")) == (True, False)
-    assert not sessions.sees_all(some)
-    assert not sessions.sees(nothing, "garden")
+def test_a_session_does_not_outlive_the_text_of_its_key() -> None:
+    """An old text of a renewed key opens the page only as long as it is good itself."""
+    assert begin("abc123", NOW_S, (NOW_S + 60) * 1000).ends_s == NOW_S + 60
+    assert begin("abc123", NOW_S, (NOW_S + 2 * SESSION_S) * 1000).ends_s == NOW_S + SESSION_S
