@@ -13,7 +13,7 @@ import subprocess
 import sys
 import threading
 import time
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from functools import partial
@@ -111,9 +111,11 @@ class Rehearsals:
         row = await self._orders.read(lambda connection: rehearsals.one(connection, number))
         return show(row, self._orders.database.wall_ms())
 
-    async def page(self, before: int | None, limit: int) -> list[dict[str, Any]]:
-        """The newest rehearsals before a number, without their results."""
-        rows = await self._orders.read(lambda c: rehearsals.page(c, before, limit))
+    async def page(
+        self, before: int | None, limit: int, only: Collection[str] | None = None
+    ) -> list[dict[str, Any]]:
+        """The newest rehearsals before a number, without their results; of `only` these."""
+        rows = await self._orders.read(lambda c: rehearsals.page(c, before, limit, only))
         now_ms = self._orders.database.wall_ms()
         return [show(row, now_ms) for row in rows]
 

@@ -6,13 +6,13 @@ The row says who plays it. A rehearsal whose worker is gone is lost: nothing of 
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from typing import Any
 
 from sqlalchemy import text
 
 from service.errors import NotFound
-from service.store.database import Reading, Writing
+from service.store.database import Reading, Writing, among
 from service.store.workers import live
 
 OPEN = ("queued", "running")
@@ -109,11 +109,21 @@ def one(connection: Reading | Writing, number: int) -> Row:
     return {**row, "result": json.loads(found.result) if found.result else None}
 
 
-def page(connection: Reading, before: int | None, limit: int) -> list[Row]:
-    """The newest rehearsals before a number, newest first, without their results."""
+def page(
+    connection: Reading, before: int | None, limit: int, only: Collection[str] | None = None
+) -> list[Row]:
+    """
+    The newest rehearsals before a number, newest first, without their results.
+
+    Args:
+        only: Those that start from these line items; None for all there are.
+    """
     last = 2**62 if before is None else before
-    alive = live(connection)
-    rows = connection.execute(_PAGE, {"before": last, "limit": limit})
+    alive, said = live(connection), {"before": last, "limit": limit}
+    if only is None:
+        rows = connection.execute(_PAGE, said)
+    else:
+        rows = connection.execute(_PAGE_OF, {**said, "only": sorted(only)})
     return [_read(dict(row._mapping), alive) for row in rows]
 
 
@@ -158,6 +168,11 @@ _ONE = text(f"SELECT {_COLUMNS}, result FROM rehearsal WHERE number = :number") 
 _PAGE = text(
     f"SELECT {_COLUMNS} FROM rehearsal WHERE number < :before"  # noqa: S608
     " ORDER BY number DESC LIMIT :limit"
+)
+_PAGE_OF = among(
+    f"SELECT {_COLUMNS} FROM rehearsal WHERE number < :before"  # noqa: S608
+    " AND line_item IN :only ORDER BY number DESC LIMIT :limit",
+    "only",
 )
 _OPEN = text("SELECT number, worker FROM rehearsal WHERE state IN ('queued', 'running')")
 _CREATE = text(

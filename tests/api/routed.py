@@ -177,11 +177,16 @@ class Plays:
             raise NotFound("no_such_rehearsal", "There is no rehearsal with this id.")
         spend = {"mean_nanos": 10**9, "error_nanos": None}
         result = {"policies": [{"spend": spend}]}
-        return {"id": "7", "state": "done", "progress": 0.5, "result": result}
+        return {
+            **{"id": "7", "line_item": "garden", "state": "done", "progress": 0.5},
+            "result": result,
+        }
 
-    async def page(self, before: int | None, limit: int) -> list[dict[str, Any]]:
+    async def page(
+        self, before: int | None, limit: int, only: frozenset[str] | None = None
+    ) -> list[dict[str, Any]]:
         """As many as asked for, all of them the same."""
-        self.calls.append(("page", before, limit))
+        self.calls.append(("page", before, limit, only))
         return [{"id": "7"}] * limit if before is None else []
 
     async def cancel(self, number: int, reason: str, actor: str) -> dict[str, Any]:

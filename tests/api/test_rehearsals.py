@@ -9,7 +9,8 @@ import pytest
 from fastapi import FastAPI
 
 from service.api.routes import install
-from tests.api.routed import FORM, ORDER, Stories
+from service.operating import Key
+from tests.api.routed import FORM, ORDER, Orders, Stories
 
 pytestmark = pytest.mark.anyio
 
@@ -74,7 +75,7 @@ async def test_a_page_says_where_the_next_one_begins(
     assert (len(full["rehearsals"]), full["next"]) == (2, 7)
     last = (await client.get("/v1/rehearsals?limit=2&before=7")).json()
     assert (last["rehearsals"], last["next"]) == ([], None)
-    assert stories.rehearsals.calls == [("page", None, 2), ("page", 7, 2)]
+    assert stories.rehearsals.calls == [("page", None, 2, None), ("page", 7, 2, None)]
 
 
 async def test_a_cancel_carries_who_and_why(client: httpx.AsyncClient, stories: Stories) -> None:
@@ -82,3 +83,29 @@ async def test_a_cancel_carries_who_and_why(client: httpx.AsyncClient, stories: 
     answer = await client.post("/v1/rehearsals/7/cancel", json=ORDER)
     assert answer.json() == {"id": "7", "state": "cancelled"}
     assert stories.rehearsals.calls == [("cancel", 7, "A test.", "Ann Example (k1)")]
+
+
+class OfTheOrchard(Orders):
+    """Every key may do all, but only to the orchard."""
+
+    async def key_for(self, bearer: str) -> Key | None:
+        """A key limited to one line item."""
+        return Key("k2", "Ann Example", frozenset({"read", "operate"}), frozenset({"orchard"}))
+
+
+async def test_a_limited_key_rehearses_only_its_own(
+    client: httpx.AsyncClient, stories: Stories
+) -> None:
+    """Others are neither asked for, read, cancelled nor listed, and the tries are counted."""
+    stories.operator = OfTheOrchard()
+    of = {**BODY, "line_item": "garden"}
+    del of["config"]
+    for body, status in ((of, 404), (BODY, 403), ({**of, "line_item": "orchard"}, 202)):
+        assert (await client.post("/v1/rehearsals", json=body)).status_code == status
+    assert (await client.get("/v1/rehearsals/7")).status_code == 404
+    assert (await client.post("/v1/rehearsals/7/cancel", json=ORDER)).status_code == 404
+    await client.get("/v1/rehearsals?limit=1")
+    asked, page = stories.rehearsals.calls
+    assert (asked[0], page) == ("ask", ("page", None, 1, frozenset({"orchard"})))
+    counted = [code for _, _, code in stories.operator.admitting.told]
+    assert counted == ["foreign_line_item", "key_is_limited", *["foreign_line_item"] * 2]

@@ -23,14 +23,14 @@ def database(migrated_url: str) -> Iterator[Database]:
     one.close()
 
 
-def begin(database: Database, name: str = "one", worker: str = WORKER) -> int:
+def begin(database: Database, name: str = "one", worker: str = WORKER, line_item: str = "") -> int:
     """Put a rehearsal of a hundred auctions in the queue."""
     return database.write(
         lambda c: rehearsals.create(
             c,
             name=name,
             actor="Ann",
-            line_item="",
+            line_item=line_item,
             worker=worker,
             total=100,
             asked={"rounds": 100},
@@ -102,6 +102,15 @@ def test_pages_go_back_in_time(database: Database) -> None:
     assert "result" not in first[0]
     rest = database.read(lambda c: rehearsals.page(c, numbers[1], 2))
     assert [row["name"] for row in rest] == ["one"]
+
+
+def test_a_page_holds_only_what_a_key_reaches(database: Database) -> None:
+    """Those of the line items named; of none named none, nor what starts from no line item."""
+    for name in ("garden", "orchard", ""):
+        begin(database, name, line_item=name)
+    for only, names in ((["garden"], ["garden"]), ([], []), (None, ["", "orchard", "garden"])):
+        rows = database.read(lambda c, only=only: rehearsals.page(c, None, 9, only))  # type: ignore[misc]
+        assert [row["name"] for row in rows] == names
 
 
 def test_only_what_has_ended_is_forgotten(database: Database) -> None:
