@@ -14,7 +14,7 @@ from service.errors import StoreAway
 from service.leasing import DENIED_S, MARGIN_SHARE, STEP_S, Leasing
 from service.store.database import Database, Writing
 from service.threads import Threads
-from tests.builders import CAP, LEASE_S, NAME, PRICE, UNIT, Worker, begin, outage, working
+from tests.builders import CAP, LEASE_S, NAME, PRICE, Worker, begin, outage, working
 
 pytestmark = pytest.mark.anyio
 
