@@ -12,6 +12,7 @@ from pydantic import AfterValidator, PlainValidator, WithJsonSchema
 
 from service import money
 from service.api.forms.features import FEATURES_SCHEMA, features
+from service.api.forms.reading import shaped
 from service.api.times import milliseconds, time_text
 from service.decision.opportunity import Feature
 
@@ -24,15 +25,6 @@ _CONFIRM = re.compile(
 NANOS_PER_WHOLE = 10**9
 _UNSEEN = {"Cc", "Cf", "Cs", "Zl", "Zp"}  # Controls, marks of direction, lone surrogates, breaks.
 _ZONES = zoneinfo.available_timezones() - {"Factory", "localtime"}
-
-
-def _shape(pattern: re.Pattern[str], sentence: str) -> Callable[[str], str]:
-    def check(text: str) -> str:
-        if not pattern.fullmatch(text):
-            raise ValueError(sentence)
-        return text
-
-    return check
 
 
 def _words(characters_max: int) -> Callable[[str], str]:
@@ -104,32 +96,32 @@ def _schema(description: str, example: object) -> WithJsonSchema:
 
 LineItemId = Annotated[
     str,
-    AfterValidator(_shape(ID, "It must be 1 to 64 letters, digits, dots, dashes or underlines.")),
+    shaped(ID, "It must be 1 to 64 letters, digits, dots, dashes or underlines."),
     WithJsonSchema({"type": "string", "pattern": f"^{ID.pattern}$"}),
 ]
 Printable = Annotated[
     str,
-    AfterValidator(_shape(PRINTABLE, "It must be 1 to 64 printable ASCII characters.")),
+    shaped(PRINTABLE, "It must be 1 to 64 printable ASCII characters."),
     WithJsonSchema({"type": "string", "pattern": f"^{PRINTABLE.pattern}$"}),
 ]
 Confirm = Annotated[
     str,
-    AfterValidator(_shape(_CONFIRM, "It must be a word, or the values that a refusal has named.")),
+    shaped(_CONFIRM, "It must be a word, or the values that a refusal has named."),
     WithJsonSchema({"type": "string", "minLength": 1, "maxLength": 256}),
 ]
 Ticket = Annotated[
     str,
-    AfterValidator(_shape(re.compile(r"[!-~]{1,512}"), "It is no ticket of ours.")),
+    shaped(re.compile(r"[!-~]{1,512}"), "It is no ticket of ours."),
     WithJsonSchema({"type": "string", "maxLength": 512}),
 ]
 Ref = Annotated[
     str,
-    AfterValidator(_shape(re.compile(r"[A-Za-z0-9_-]{22}"), "It is no ref of ours.")),
+    shaped(re.compile(r"[A-Za-z0-9_-]{22}"), "It is no ref of ours."),
     WithJsonSchema({"type": "string", "pattern": "^[A-Za-z0-9_-]{22}$"}),
 ]
 Currency = Annotated[
     str,
-    AfterValidator(_shape(re.compile(r"[A-Z]{3}"), "It must be three capital letters.")),
+    shaped(re.compile(r"[A-Z]{3}"), "It must be three capital letters."),
     WithJsonSchema({"type": "string", "pattern": "^[A-Z]{3}$", "example": "EUR"}),
 ]
 TimeZone = Annotated[

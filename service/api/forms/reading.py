@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping
 from functools import cache
 from typing import TypeVar
 
-from pydantic import BaseModel, ConfigDict, ValidationError
+from pydantic import BaseModel, ConfigDict, StringConstraints, ValidationError
 from pydantic_core import ErrorDetails
 
 from service.errors import Malformed
@@ -48,6 +49,17 @@ _LIMITS = {
     "too_short": ("min_length", "It must have at least {} members."),
     "literal_error": ("expected", "It must be {}."),
 }
+
+
+# By pattern, since an error tells no more of a text than which one it does not match.
+_SHAPES: dict[str, str] = {}
+
+
+def shaped(pattern: re.Pattern[str], sentence: str) -> StringConstraints:
+    """A text that matches as a whole, and the sentence for one that does not."""
+    whole = f"^(?:{pattern.pattern})$"
+    _SHAPES[whole] = sentence
+    return StringConstraints(pattern=whole)
 
 
 def read(form: type[Form], members: Mapping[str, object]) -> Form:
@@ -114,6 +126,8 @@ def _sentence(error: ErrorDetails) -> str:
     context = error.get("ctx", {})
     if error["type"] == "value_error":
         return str(context["error"])
+    if error["type"] == "string_pattern_mismatch":
+        return _SHAPES[context["pattern"]]
     if error["type"] in _LIMITS:
         name, sentence = _LIMITS[error["type"]]
         return sentence.format(context[name])
