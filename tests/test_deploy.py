@@ -59,7 +59,7 @@ def test_without_a_browser_its_tests_are_left_out_and_named(checkout: Path) -> N
     """Nobody but root may install; the rest runs, and the last line has the command."""
     lines = run(checkout)
     asked = [line for line in lines if line.startswith("asked:")]
-    assert len(asked) == 2
+    assert len(asked) == 3
     assert any("--ignore=tests/browser" in line.split() for line in asked)
     assert "; left out tests/browser" in lines[-1]
     assert "`apt-get install chromium` adds" in lines[-1]
