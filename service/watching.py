@@ -11,11 +11,12 @@ from typing import Any, TypeVar
 from service.drawing import Chart, charts
 from service.errors import no_such_line_item
 from service.estimates import estimates
+from service.foreseeing import told
 from service.judging import Alarm, Judged, alarm, found, judge
 from service.learner.profile import day_of
 from service.ledger.days import local_day
 from service.showing import show, show_curve
-from service.store import keys, reading, watching, watching_series
+from service.store import findings, keys, reading, watching, watching_series
 from service.store.database import Database, Reading
 from service.store.keys import Key
 from service.store.watching import Latest, Overview
@@ -51,12 +52,18 @@ class Board:
 
 @dataclass(frozen=True, slots=True)
 class Sheet:
-    """The page of one line item: its row, its state, its journal and the tail of its stream."""
+    """
+    The page of one line item: its row, its state, its journal and the tail of its stream.
+
+    Args:
+        findings: What its tripwires see now, the oldest first, each with its runbook.
+    """
 
     judged: Judged
     latest: Latest
     state: dict[str, Any]
     all_freezes: list[dict[str, Any]]
+    findings: list[dict[str, Any]]
     journal: list[dict[str, Any]]
     entries: list[dict[str, Any]]
     wall_ms: int
@@ -140,6 +147,7 @@ class Watching:
                 watching.latest(connection, [line_item], overview.wall_ms)[line_item],
                 show(reading.facts(connection, line_item)),
                 overview.all_freezes,
+                [told(kept) for kept in findings.still_open(connection, line_item).values()],
                 watching.journal(connection, [line_item], JOURNAL_ROWS),
                 watching.entries(connection, line_item, ENTRIES),
                 overview.wall_ms,

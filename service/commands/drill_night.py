@@ -120,20 +120,20 @@ async def _night(
     story, window_s = Story(), arguments.window_s
     async with server.wire() as wire:
         action = "warn" if arguments.only_warn else "freeze"
-        await _begin(wire, database, story, lambda name: _body(name, window_s, action))
+        await begin_pair(wire, database, story, lambda name: pair_body(name, window_s, action))
         exchange = Exchange(wire, arguments.seed)
         story.note(f"01:00  both line items get the same traffic; an 'hour' lasts {window_s} s")
         await exchange.play([story.night, story.twin], (1 + WINDOWS_BEFORE) * window_s + 2)
-        await _caught_up(wire, story.night)
+        await caught_up(wire, story.night)
         usual = await _bid_cpm(wire, story.night)
-        story.want(not await _open(wire, story.night), "a tripwire fired before anything was wrong")
-        from_at = _now()
+        story.want(not await open_findings(wire, story.night), "a tripwire fired before anything was wrong")
+        from_at = moment_now()
         story.note(f"02:00  values x 5 and no zeros on '{story.night}'; it bids {usual:.4f} CPM")
         await _go_wrong(wire, exchange, story, frozen=not arguments.only_warn)
         await _mend(wire, story, from_at, usual)
         await exchange.play([story.night, story.twin], window_s + 1)
         for name in (story.night, story.twin):
-            await _caught_up(wire, name)
+            await caught_up(wire, name)
         state = await _get(wire, story.night, "state")
         story.want(state["status"] == "open", f"it is {state['status']} again after the thaw")
         story.note(
@@ -145,7 +145,7 @@ async def _night(
     return story
 
 
-async def _begin(
+async def begin_pair(
     wire: Wire, database: Database, story: Story, body: Callable[[str], dict[str, object]]
 ) -> None:
     """
@@ -169,16 +169,16 @@ async def _go_wrong(wire: Wire, exchange: Exchange, story: Story, *, frozen: boo
     while time.monotonic() < end:
         await exchange.call([story.night], wrong=True)
         await asyncio.sleep(LOOK_S / 2)
-        found = await _open(wire, story.night)
+        found = await open_findings(wire, story.night)
         sources = {
             freeze["source"] for freeze in (await _get(wire, story.night, "state"))["freezes"]
         }
         if found and (not frozen or "tripwire" in sources):
             break
-    for finding in await _open(wire, story.night):
+    for finding in await open_findings(wire, story.night):
         story.note(f"02:..  {finding['rule']}: {finding['saw']}")
         story.note(f"       runbook: {finding['runbook']['do']}")
-    rules = {finding["rule"] for finding in await _open(wire, story.night)}
+    rules = {finding["rule"] for finding in await open_findings(wire, story.night)}
     story.want(bool(rules & {"value_size", "zero_values"}), "no tripwire on values fired")
     if not frozen:
         order = {"reason": "the values of one feed look wrong"}
@@ -191,8 +191,8 @@ async def _go_wrong(wire: Wire, exchange: Exchange, story: Story, *, frozen: boo
 
 async def _mend(wire: Wire, story: Story, from_at: str, usual: float) -> None:
     """What on-call does: look, preview, retract, rewind, thaw."""
-    await _caught_up(wire, story.night)
-    until_at, wrong = _now(), await _bid_cpm(wire, story.night)
+    await caught_up(wire, story.night)
+    until_at, wrong = moment_now(), await _bid_cpm(wire, story.night)
     story.note(f"03:00  the feed is mended; by what it was taught it would bid {wrong:.4f} CPM")
     story.want(wrong > usual, "the wrong values moved no price, so nothing was tried")
     span = {"from_at": from_at, "until_at": until_at, "part": "both"}
@@ -248,7 +248,8 @@ def _began_ms(connection: Reading, names: list[str]) -> set[int]:
     return {lessons.began_ms(connection, name) for name in names}
 
 
-async def _caught_up(wire: Wire, name: str) -> None:
+async def caught_up(wire: Wire, name: str) -> None:
+    """Wait until a learner has learnt all that its stream holds."""
     end = time.monotonic() + CAUGHT_UP_S_MAX
     while (await _get(wire, name, "state"))["learner"]["entries_behind"]:
         if time.monotonic() > end:
@@ -260,7 +261,8 @@ async def _get(wire: Wire, name: str, what: str) -> dict[str, Any]:
     return read(await wire.get(f"/v1/line-items/{name}/{what}"))
 
 
-async def _open(wire: Wire, name: str) -> list[dict[str, Any]]:
+async def open_findings(wire: Wire, name: str) -> list[dict[str, Any]]:
+    """What the tripwires of a line item see now."""
     return list((await _get(wire, name, "tripwires"))["open"])
 
 
@@ -274,11 +276,13 @@ def _from_to(done: dict[str, Any]) -> str:
     return f"bid {before} -> {after} CPM"
 
 
-def _now() -> str:
+def moment_now() -> str:
+    """This moment, as orders take it."""
     return datetime.now(UTC).isoformat(timespec="milliseconds").replace("+00:00", "Z")
 
 
-def _body(name: str, window_s: int, action: str) -> dict[str, object]:
+def pair_body(name: str, window_s: int, action: str) -> dict[str, object]:
+    """How both line items are set up."""
     rule = {"action": action, "window_s": window_s}
     return {
         "id": name,

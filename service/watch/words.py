@@ -95,6 +95,11 @@ def moment(at_ms: int | None, zone: str, now_ms: int | None = None) -> str:
     return f"{local:{form}} {zone.rpartition('/')[2].replace('_', ' ')} ({at:%H:%M:%S} UTC)"
 
 
+def typed(at_ms: int) -> str:
+    """A moment as the forms of orders take it."""
+    return (_EPOCH + timedelta(milliseconds=at_ms)).isoformat(timespec="milliseconds")[:-6] + "Z"
+
+
 def sentence(alarm: Alarm) -> str:
     """What somebody must know in the first ten seconds, as one sentence."""
     if alarm.total == 0:
@@ -113,6 +118,11 @@ def sentence(alarm: Alarm) -> str:
     return said + "."
 
 
+def sentences(said: str) -> str:
+    """Words of a tripwire as they begin and end a sentence."""
+    return said[:1].upper() + said[1:].rstrip(".") + "."
+
+
 def amounts(by_currency: Mapping[str, int]) -> str:
     """Amounts of several currencies side by side, never added."""
     said = [amount(nanos, currency) for currency, nanos in by_currency.items()]
@@ -124,6 +134,7 @@ def filters() -> dict[str, Any]:
     return {
         **{"amount": amount, "cpm": cpm, "share": share, "age": age, "moment": moment},
         "amounts": amounts,
+        **{"typed": typed, "sentences": sentences},
         "cpm_plain": cpm_plain,
         "status": lambda status: STATUS.get(status, status),
         "set_by": lambda name: SET_BY.get(name, name or "nothing yet"),
