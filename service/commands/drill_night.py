@@ -126,7 +126,9 @@ async def _night(
         await exchange.play([story.night, story.twin], (1 + WINDOWS_BEFORE) * window_s + 2)
         await caught_up(wire, story.night)
         usual = await _bid_cpm(wire, story.night)
-        story.want(not await open_findings(wire, story.night), "a tripwire fired before anything was wrong")
+        story.want(
+            not await open_findings(wire, story.night), "a tripwire fired before anything was wrong"
+        )
         from_at = moment_now()
         story.note(f"02:00  values x 5 and no zeros on '{story.night}'; it bids {usual:.4f} CPM")
         await _go_wrong(wire, exchange, story, frozen=not arguments.only_warn)

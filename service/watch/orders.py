@@ -195,7 +195,7 @@ async def _form(
         name=name,
         sheet=sheet,
         given={field: given.get(field, "") for field in ("reason", *kind.fields)},
-        problem=_sentence(refusal),
+        problem=sentence_of(refusal),
         done=done,
         # Drawn with the form: sent twice by an impatient hand, the order is given once.
         once=secrets.token_hex(16),
@@ -214,7 +214,8 @@ async def _form_for_all(request: Request, who: Viewer, kind: Kind, problem: str)
     )
 
 
-def _sentence(refusal: Refusal | None) -> str:
+def sentence_of(refusal: Refusal | None) -> str:
+    """What was wrong, with the field that it was about."""
     if refusal is None:
         return ""
     field = refusal.data.get("field")

@@ -10,7 +10,7 @@ from fastapi import APIRouter
 from starlette.requests import Request
 from starlette.responses import RedirectResponse, Response
 
-from service.watch import orders, signing
+from service.watch import hindsight, orders, rehearsals, signing
 from service.watch.door import Viewer, line_item_of, shown, stories, viewer
 from service.watch.pages import PRIVATE, file, page
 from service.watch.words import sentence
@@ -98,6 +98,17 @@ router.add_api_route("/watch/sign-in", signing.post_sign_in, methods=["POST"])
 router.add_api_route("/watch/sign-out", signing.post_sign_out, methods=["POST"])
 router.add_api_route("/watch/all/{order}", orders.get_order_for_all, methods=["GET"])
 router.add_api_route("/watch/all/{order}", orders.post_order_for_all, methods=["POST"])
+REHEARSALS = "/watch/rehearsals"
+REHEARSAL = REHEARSALS + "/{rehearsal_id}"
+router.add_api_route(REHEARSALS, rehearsals.get_rehearsals, methods=["GET"])
+router.add_api_route(REHEARSALS, rehearsals.post_rehearsals, methods=["POST"])
+router.add_api_route(REHEARSALS + "/now", rehearsals.get_rehearsals_now, methods=["GET"])
+router.add_api_route(REHEARSAL, rehearsals.get_rehearsal, methods=["GET"])
+router.add_api_route(REHEARSAL + "/now", rehearsals.get_rehearsal_now, methods=["GET"])
+router.add_api_route(REHEARSAL + "/charts", rehearsals.get_rehearsal_charts, methods=["GET"])
+router.add_api_route(REHEARSAL + "/cancel", rehearsals.post_cancel, methods=["POST"])
+LOOK_BACK = "/watch/line-items/{line_item_id}/hindsight"
+router.add_api_route(LOOK_BACK, hindsight.get_hindsight, methods=["GET"])
 ORDER = "/watch/line-items/{line_item_id}/{order}"
 router.add_api_route(ORDER, orders.get_order, methods=["GET"])
 router.add_api_route(ORDER, orders.post_order, methods=["POST"])

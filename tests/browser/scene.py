@@ -9,10 +9,17 @@ from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
-from urllib.parse import urlsplit
+from urllib.parse import urljoin, urlsplit
 
 import httpx
-from playwright.sync_api import Browser, BrowserContext, ConsoleMessage, Page, sync_playwright
+from playwright.sync_api import (
+    Browser,
+    BrowserContext,
+    ConsoleMessage,
+    Page,
+    expect,
+    sync_playwright,
+)
 
 from service.commands.server_process import ServerProcess
 from tests.house import ROOT
@@ -154,3 +161,17 @@ def sign_in(context: BrowserContext, scene: Scene, path: str = "/watch") -> Page
     page.get_by_role("button", name="Sign in").click()
     page.wait_for_url("**" + path)
     return page
+
+
+def rehearse(page: Page, rounds: int = 300) -> None:
+    """From a line item's page by the form to the charts of what a rehearsal came to."""
+    page.goto(urljoin(page.url, ITEM))
+    page.locator("#rehearse").click()
+    page.get_by_label("Name of the rehearsal").fill("two methods")
+    page.get_by_label("mean", exact=True).check()
+    page.get_by_label("Auctions a seed").fill(f"{rounds}")
+    page.get_by_label("Market", exact=True).select_option("own_curve")
+    page.locator("#begin").click()
+    expect(page.locator("#state")).to_have_text("done", timeout=30_000)
+    for name in ("surplus", "spend", "bid"):
+        expect(page.locator(f"[data-plot={name}] .main-svg").first).to_be_visible()

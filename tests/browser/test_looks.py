@@ -8,7 +8,7 @@ from typing import Any
 import pytest
 from playwright.sync_api import Browser, BrowserContext, Page, expect
 
-from tests.browser.scene import ITEM, Scene, Seen, axe, sign_in
+from tests.browser.scene import ITEM, NAME, Scene, Seen, axe, rehearse, sign_in
 
 PAGES = {
     "front": "/watch",
@@ -19,6 +19,8 @@ PAGES = {
     "retract": f"{ITEM}/retract",
     "reset": f"{ITEM}/reset",
     "freeze-all": "/watch/all/freeze",
+    "rehearsals": f"/watch/rehearsals?line_item={NAME}",
+    "hindsight": f"{ITEM}/hindsight?other=bid_cap_cpm&price=2.5",
     "nowhere": "/watch/line-items/none",
 }
 # Elements that reach beyond the window; what is hidden on purpose is one pixel small.
@@ -68,12 +70,14 @@ def test_every_page_is_whole_and_open_to_all(
     page.get_by_label("Reason (for the journal)").fill("a look")
     page.locator("#confirm").click()
     look(page, "done", tmp_path, script)
+    rehearse(page)
+    look(page, "rehearsal", tmp_path, script)
     context.close()
     scene.thaw()
     assert seen.foreign == []
     # The page that is not there says 404, and the browser says so too.
     assert [said for said in seen.complaints if "404" not in said] == []
-    assert len(list(tmp_path.glob("*.png"))) == len(PAGES) + 2
+    assert len(list(tmp_path.glob("*.png"))) == len(PAGES) + 3
 
 
 def test_the_charts_are_drawn(context: BrowserContext, scene: Scene) -> None:

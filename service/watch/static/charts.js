@@ -9,7 +9,7 @@
 
   function colours() {
     const style = getComputedStyle(document.documentElement);
-    return Object.fromEntries(["ink", "quiet", "rule", "accent", "second", "band", "sheet"].map((name) => [name, style.getPropertyValue("--" + name).trim()]));
+    return Object.fromEntries(["ink", "quiet", "rule", "accent", "second", "band", "sheet", "good", "stop", "warn"].map((name) => [name, style.getPropertyValue("--" + name).trim()]));
   }
 
   function coloured(trace, paint) {

@@ -36,6 +36,8 @@
 
   function put(text) {
     const parts = new DOMParser().parseFromString(text, "text/html").querySelectorAll("[data-for]");
+    // What has come to its end is drawn anew as a whole, with what it came to.
+    if ([...parts].some((part) => "ended" in part.dataset)) return location.reload();
     for (const part of parts) {
       const place = document.getElementById(part.dataset.for);
       // What did not change is left alone: a reader is not told twice, a selection stays.
