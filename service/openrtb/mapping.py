@@ -24,7 +24,7 @@ _ADDRESS = re.compile(r"https?://[A-Za-z0-9.-]{1,253}(:[0-9]{1,5})?(/[A-Za-z0-9.
 def _allowed(name: object) -> Path:
     found = path(name) if isinstance(name, str) else None
     if found is None:
-        raise ValueError("a request's field that may not be read; see the list in the README")
+        raise ValueError("a request's field that may not be read; see the list in deploy/README.md")
     return found
 
 
