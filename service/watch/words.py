@@ -29,6 +29,7 @@ SET_BY = {
     "allowance": "the allowance",
     "money_in_hand": "money in hand",
     "return_target": "the return target",
+    "control": "the control share",
 }
 PASSES = {
     "frozen": "frozen",
