@@ -154,6 +154,12 @@ def _bench_growth() -> ModuleType:
     return bench_growth
 
 
+def _bench_store() -> ModuleType:
+    from service.commands import bench_store
+
+    return bench_store
+
+
 def _bench_http() -> ModuleType:
     from service.commands import bench_http
 
@@ -231,6 +237,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "rehearse": ("time simulated auctions, and bids beside a rehearsal", _bench_rehearse),
     "decide": ("time one price of each method, and the steps around it", _bench_decide),
     "growth": ("see whether bids stay quick as line items and log grow", _bench_growth),
+    "store": ("time what a bid's life costs in the database", _bench_store),
     "http": ("put one load on the service and on bare endpoints", _bench_http),
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
     "reads": ("time pages, tables and charts of a large log over HTTP", _bench_reads),
