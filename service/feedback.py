@@ -14,6 +14,8 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
 from datetime import date
+from functools import lru_cache
+from typing import NamedTuple
 
 from service import spans
 from service.errors import BrokenPromise, Overloaded, StoreAway
@@ -37,15 +39,12 @@ logger = logging.getLogger(__name__)
 ROWS_MAX = 2000
 COST_MAX = 4 * PRICE_NANOS_MAX  # Beyond any bid: a currency or a unit was mistaken.
 THREAD_S = 0.25  # How long a group waits for a thread, and so for a connection.
-ANSWER_S = (
-    6.0  # Longer than a statement may take: after it nobody knows, and the caller asks again.
-)
+ANSWER_S = 6.0  # Longer than a statement may take: then nobody knows, and the caller asks again.
 # What a single bad row may raise; anything else is a fault of ours and ends the worker's task.
 POISON = (BrokenPromise, ValueError, LookupError, ArithmeticError, TypeError)
 
 
-@dataclass(frozen=True, slots=True)
-class Report:
+class Report(NamedTuple):
     """
     One reported outcome; prices in nanos per impression, values in nanos.
 
@@ -70,8 +69,7 @@ class Report:
     at_the_bid: bool = False
 
 
-@dataclass(frozen=True, slots=True)
-class Receipt:
+class Receipt(NamedTuple):
     """
     What became of one report; `code` says why when it is refused.
 
@@ -163,20 +161,20 @@ class Feedback:
         with spans.span("outcomes") as span:
             spans.note(span, rows=len(reports))
             receipts = await self._receipts(reports, only)
-        for report, row in zip(reports, receipts, strict=True):
-            self._tally.add("outcomes", report.kind, row.status)
-            if row.status == "refused":
-                self._tally.add("refused_outcomes", row.code or OTHER)
+        pairs = zip(reports, receipts, strict=True)
+        codes = (row.code or OTHER for row in receipts if row.status == "refused")
+        for labels, count in Counter((said.kind, row.status) for said, row in pairs).items():
+            self._tally.add("outcomes", *labels, count=count)
+        for code, count in Counter(codes).items():
+            self._tally.add("refused_outcomes", code, count=count)
         return receipts
 
     async def _receipts(self, reports: list[Report], only: frozenset[str] | None) -> list[Receipt]:
         read = [self._read(report, only) for report in reports]
         read = await self._find_refs(reports, read, only)
         rows = [row for row in read if isinstance(row, Booking)]
-        booked = iter(await self._book(rows) if rows else [])
-        receipts = [
-            row if isinstance(row, Receipt) else _receipt(row, next(booked)) for row in read
-        ]
+        done = iter(await self._book(rows) if rows else [])
+        receipts = [row if isinstance(row, Receipt) else _receipt(row, next(done)) for row in read]
         self._refused.update(
             receipt.line_item
             for receipt in receipts
@@ -279,16 +277,16 @@ class Feedback:
             return Receipt(report.ref, "refused", "ref_of_another_bid", line_item=ticket.line_item)
         if report.currency is not None and report.currency != ticket.scale.currency:
             return Receipt(ticket.ref, "refused", "other_currency", line_item=ticket.line_item)
-        if report.kind in PAYING and (price := _price(report, ticket)) is None:
-            return Receipt(ticket.ref, "refused", "no_price", line_item=ticket.line_item)
-        if report.kind in PAYING and price is not None and price > COST_MAX:
-            return Receipt(ticket.ref, "refused", "bad_price", line_item=ticket.line_item)
+        price = _price(report, ticket) if report.kind in PAYING else 0
+        if price is None or price > COST_MAX:
+            code = "no_price" if price is None else "bad_price"
+            return Receipt(ticket.ref, "refused", code, line_item=ticket.line_item)
         # Nothing was held for it, so there is nothing to book and nothing to learn.
         if ticket.test:
             return Receipt(ticket.ref, "recorded", test=True)
-        return self._booking(report, ticket)
+        return self._booking(report, ticket, price)
 
-    def _booking(self, report: Report, ticket: Ticket) -> Booking:
+    def _booking(self, report: Report, ticket: Ticket, price: int) -> Booking:
         if report.kind == "value":
             return Booking(ticket.line_item, _value(report, ticket.bid))
         outcome = Outcome(
@@ -297,7 +295,7 @@ class Feedback:
             ticket.counter,
             ticket.price,
             ticket.source,
-            _price(report, ticket) if report.kind in PAYING else None,
+            price if report.kind in PAYING else None,
             _to_win(report, ticket),
             report.why,
             report.at,
@@ -305,13 +303,12 @@ class Feedback:
         )
         # A slice of a database before its restore may be gone or be another's: the late way.
         here = ticket.incarnation == self._incarnation
-        day = date.fromordinal(ticket.day).isoformat()
+        day = _day(ticket.day)
         slice_id = ticket.slice if here else None
         # And the same snapshot may have had another law there.
         snapshot = ticket.snapshot if here else NO_SNAPSHOT
         place = (slice_id, day, snapshot, ticket.floor)
-        seen = (ticket.features, ticket.hint, ticket.arm)
-        return Booking(ticket.line_item, outcome, *place, *seen)
+        return Booking(ticket.line_item, outcome, *place, ticket.features, ticket.hint, ticket.arm)
 
     async def _find_refs(
         self,
@@ -331,6 +328,12 @@ class Feedback:
         found |= {row.event.bid: row.line_item for row in bookings if row.line_item}
         pairs = zip(read, reports, strict=True)
         return [_placed(row, found, report.ref, only) for row, report in pairs]
+
+
+@lru_cache(maxsize=64)
+def _day(ordinal: int) -> str:
+    """The date of a ticket's day; all tickets of an hour name one or two of them."""
+    return date.fromordinal(ordinal).isoformat()
 
 
 def _price(report: Report, ticket: Ticket) -> int | None:

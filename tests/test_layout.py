@@ -77,7 +77,7 @@ OTHERS: dict[str, set[str]] = {
     "tripwires": {"scipy.special"},
     "currencies": set(),
     "pricing": {"numpy"},
-    "store": {"sqlalchemy", "alembic"},
+    "store": {"sqlalchemy", "alembic", "jiter", "orjson"},
     "rehearsal": {"numpy", "scipy"},
     "openrtb": {"pydantic", "pydantic_core"},
     "metrics": {"prometheus_client"},

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
 from typing import Any
 
 import pytest
@@ -56,7 +55,7 @@ async def test_fast_spend_lowers_bids_and_the_state_says_so(migrated_url: str) -
         await worker.learn()
         fresh = await worker.bid()
         assert (await spending(worker))["share_of_value_bid"] == 1.0
-        append(worker.database, *(replace(won(n), cost=PRICE) for n in range(1, 41)))
+        append(worker.database, *(won(n)._replace(cost=PRICE) for n in range(1, 41)))
         append(worker.database, *(valued(n, 4_000_000) for n in range(1, 41)))
         await worker.learn()
         held, seen = await worker.bid(), await spending(worker)

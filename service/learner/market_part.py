@@ -66,10 +66,11 @@ def _taught(market: MarketState, lesson: Lesson, *, priced: bool) -> MarketState
     auction = body.get("auction", "second")
     # Nothing can be read off an outcome whose bid is not said.
     if auction in AUCTIONS and "bid" in body and body.get("only") != "value":
-        outcome = said(lesson.kind == "won", auction, body, market.ticks, priced=priced)
+        ticks = market.ticks
+        outcome = said(lesson.kind == "won", auction, body, ticks, priced=priced)
         if outcome is not None:
             key = market.key_of(auction, body["source"])
-            market.count(key, *told(outcome, market.ticks))
+            market.count(key, *told(outcome, ticks))
     return market
 
 

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
+from typing import NamedTuple
 
 NO_LIMIT = 2**61  # Stands in a day's budget when a line item has no daily budget.
 
@@ -42,8 +43,7 @@ class Movement:
 NOTHING = Movement()
 
 
-@dataclass(frozen=True, slots=True)
-class Account:
+class Account(NamedTuple):
     """
     A line item's balance in nanos; spent + held <= budget always holds.
 
@@ -71,18 +71,20 @@ class Account:
         """This account after the movement; a lowered budget follows its target down."""
         # The bound may only fall as far as what is out already, or the promise would break.
         spent, held = self.spent + movement.spent, self.held + movement.held
-        return replace(
-            self,
-            budget=max(self.target, spent + held) if self.budget > self.target else self.budget,
-            spent=spent,
-            held=held,
-            unfunded=self.unfunded + movement.unfunded,
-            disputed=self.disputed + movement.disputed,
+        return Account(
+            self.line_item,
+            max(self.target, spent + held) if self.budget > self.target else self.budget,
+            self.target,
+            spent,
+            held,
+            self.unfunded + movement.unfunded,
+            self.disputed + movement.disputed,
+            self.seq,
+            self.at_ms,
         )
 
 
-@dataclass(frozen=True, slots=True)
-class Day:
+class Day(NamedTuple):
     """One local day's share of a line item's money, in nanos, with a limit of its own."""
 
     line_item: str
@@ -106,17 +108,18 @@ class Day:
     def moved(self, movement: Movement) -> Day:
         """This day after the movement."""
         spent, held = self.spent + movement.day_spent, self.held + movement.held
-        return replace(
-            self,
-            budget=max(self.target, spent + held) if self.budget > self.target else self.budget,
-            spent=spent,
-            held=held,
-            over_spent=self.over_spent + movement.day_over_spent,
+        return Day(
+            self.line_item,
+            self.day,
+            max(self.target, spent + held) if self.budget > self.target else self.budget,
+            self.target,
+            spent,
+            held,
+            self.over_spent + movement.day_over_spent,
         )
 
 
-@dataclass(frozen=True, slots=True)
-class Slice:
+class Slice(NamedTuple):
     """
     The part of a budget that one worker may commit; amounts in nanos, times in service ms.
 
@@ -139,8 +142,17 @@ class Slice:
         """Whether bids out of this slice still have their hold."""
         return self.state != "closed"
 
-    def moved(self, movement: Movement) -> Slice:
-        """This slice after the movement."""
-        return replace(
-            self, remaining=self.remaining + movement.remaining, owed=self.owed + movement.owed
+    def moved(self, movement: Movement, rounds: int = 0) -> Slice:
+        """This slice after the movement, and after so many rounds more were taught."""
+        return Slice(
+            self.id,
+            self.line_item,
+            self.worker,
+            self.day,
+            self.amount,
+            self.remaining + movement.remaining,
+            self.owed + movement.owed,
+            self.ticked,
+            self.counted + rounds,
+            self.state,
         )

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 from service.errors import Conflict
 from service.ledger.accounts import Account, Day
 from service.money import nanos_text
@@ -26,8 +24,7 @@ def set_budget(account: Account, budget: int) -> Account:
     bound = max(budget, account.spent + account.held)
     # Late costs that found no money are the oldest debt, so new money goes to them first.
     funded = min(account.unfunded, max(0, budget - account.spent - account.held))
-    return replace(
-        account,
+    return account._replace(
         budget=bound,
         target=budget,
         spent=account.spent + funded,
@@ -37,4 +34,4 @@ def set_budget(account: Account, budget: int) -> Account:
 
 def set_day_budget(day: Day, budget: int) -> Day:
     """The day after the operator names a new daily budget in nanos; it never undoes spend."""
-    return replace(day, budget=max(budget, day.spent + day.held), target=budget)
+    return day._replace(budget=max(budget, day.spent + day.held), target=budget)

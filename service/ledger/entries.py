@@ -5,15 +5,13 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Mapping
-from dataclasses import dataclass
-from typing import Any
+from typing import Any, NamedTuple
 
 Body = Mapping[str, Any]
 PAYING = ("won", "billed")  # Kinds of outcome that name a price to be paid.
 
 
-@dataclass(frozen=True, slots=True)
-class Entry:
+class Entry(NamedTuple):
     """
     One event of a line item.
 

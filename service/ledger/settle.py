@@ -7,7 +7,7 @@ the first content of a slot stands, other content is a conflict kept beside it.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from typing import NamedTuple
 
 from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
 from service.ledger.entries import Body, Entry, conflict
@@ -16,8 +16,7 @@ from service.ledger.late import late_cost
 Slots = Mapping[str, tuple[str, Body]]  # slot -> (kind, body) of what is already there
 
 
-@dataclass(frozen=True, slots=True)
-class Outcome:
+class Outcome(NamedTuple):
     """One reported event of one bid; prices in nanos per impression."""
 
     kind: str
@@ -32,8 +31,7 @@ class Outcome:
     auction: str = "second"
 
 
-@dataclass(frozen=True, slots=True)
-class Place:
+class Place(NamedTuple):
     """Where an outcome lands; `slice` is None when it is unknown or of another incarnation."""
 
     account: Account
@@ -48,8 +46,7 @@ class Place:
         return self.slice is not None and self.slice.alive
 
 
-@dataclass(frozen=True, slots=True)
-class Verdict:
+class Verdict(NamedTuple):
     """The receipt's status, the money that moves, the entry to append, rounds newly counted."""
 
     status: str

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from typing import NamedTuple
 
 from service.ledger.entries import Entry, conflict
 from service.ledger.settle import Slots
@@ -10,8 +10,7 @@ from service.ledger.settle import Slots
 CEILINGS_MAX = 100  # A value of more than so many ceilings is an error of unit, not a value.
 
 
-@dataclass(frozen=True, slots=True)
-class Value:
+class Value(NamedTuple):
     """One reported value of one bid, in nanos."""
 
     bid: bytes
@@ -21,8 +20,7 @@ class Value:
     at: str | None = None
 
 
-@dataclass(frozen=True, slots=True)
-class ValueVerdict:
+class ValueVerdict(NamedTuple):
     """The receipt's status (and code when refused) and what to append."""
 
     status: str

@@ -14,6 +14,7 @@ from sqlalchemy import LargeBinary, text
 
 from service.ledger.replay import Told, replay
 from service.ledger.resuming import packed, recall, unpacked
+from service.store import bodies
 from service.store.audit import Balance, Finding, compared, freeze_found, unreplayable
 from service.store.clock import now_ms
 from service.store.database import Database, Reading, Writing, among
@@ -127,7 +128,7 @@ def _before(connection: Reading, line_item: str, was: int, bids: set[bytes]) -> 
 
 
 def _told(rows: list[Any]) -> list[Told]:
-    return [(r.kind, bytes(r.bid).hex() if r.bid else "", json.loads(r.body)) for r in rows]
+    return [(r.kind, bytes(r.bid).hex() if r.bid else "", bodies.parsed(r.body)) for r in rows]
 
 
 def _gaps(line_item: str, last: int, was: int, rows: list[Any]) -> list[Finding]:

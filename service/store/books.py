@@ -5,9 +5,7 @@ Pure ledger code decides on the copies; the guarded updates here are the net ben
 
 from __future__ import annotations
 
-import json
 from collections.abc import Iterable
-from dataclasses import replace
 from typing import Any
 
 from sqlalchemy import LargeBinary, text
@@ -15,8 +13,9 @@ from sqlalchemy import LargeBinary, text
 from service.errors import BrokenPromise
 from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
 from service.ledger.entries import Entry
+from service.store import bodies
 from service.store.clock import now_ms
-from service.store.database import Writing, among, locking
+from service.store.database import Writing, among, insert_many, locking
 
 
 class Books:
@@ -41,7 +40,7 @@ class Books:
         self._accounts_before = dict(self.accounts)
         self._days_before: dict[tuple[str, str], Day] = {}
         self._slices_before: dict[bytes, Slice] = {}
-        self._rows: list[dict[str, Any]] = []
+        self._rows: list[tuple[Any, ...]] = []
 
     def load_slices(self, ids: Iterable[bytes]) -> None:
         """Read these slices and the days they belong to."""
@@ -78,7 +77,7 @@ class Books:
 
     def new_slice(self, fresh: Slice, times_ms: dict[str, int]) -> None:
         """Insert a slice; its money is counted as held by the movement posted with it."""
-        row = {name: getattr(fresh, name) for name in fresh.__slots__} | times_ms
+        row = {name: getattr(fresh, name) for name in fresh._fields} | times_ms
         self._connection.execute(_INSERT_SLICE, row)
         self._keep_slice(fresh)
 
@@ -90,13 +89,19 @@ class Books:
         *,
         day: str | None = None,
         slice_id: bytes | None = None,
+        rounds: int = 0,
     ) -> None:
-        """Apply a movement to the working copies and append the entry behind it."""
+        """
+        Apply a movement to the working copies and append the entry behind it.
+
+        Args:
+            rounds: Of the slice, newly counted.
+        """
         self.accounts[line_item] = self.accounts[line_item].moved(movement)
         if day is not None and (line_item, day) in self.days:
             self.days[line_item, day] = self.days[line_item, day].moved(movement)
         if slice_id is not None and slice_id in self.slices:
-            self.slices[slice_id] = self.slices[slice_id].moved(movement)
+            self.slices[slice_id] = self.slices[slice_id].moved(movement, rounds)
         if entry is not None:
             self._append(line_item, entry)
 
@@ -130,11 +135,8 @@ class Books:
         for key, day in self.days.items():
             if day != self._days_before[key]:
                 self._save_day(self._days_before[key], day)
-        for slice_id, changed in self.slices.items():
-            if changed != self._slices_before[slice_id]:
-                self._save_slice(self._slices_before[slice_id], changed)
-        if self._rows:
-            self._connection.execute(_INSERT_ENTRY, self._rows)
+        self._save_slices()
+        insert_many(self._connection, _INSERT_ENTRY, self._rows)
 
     def _lock(self, line_items: list[str]) -> dict[str, Account]:
         rows = self._connection.execute(
@@ -149,20 +151,10 @@ class Books:
         account = self.accounts[line_item]
         # The wall clock may step back, but the stamps of a stream never do.
         at_ms = max(account.at_ms, self._wall_ms)
-        self.accounts[line_item] = replace(account, seq=account.seq + 1, at_ms=at_ms)
-        self._rows.append(
-            {
-                "line_item": line_item,
-                "seq": account.seq + 1,
-                "kind": entry.kind,
-                "at_ms": at_ms,
-                "service_ms": self.service_ms,
-                "bid": entry.bid,
-                "slot": entry.slot,
-                "cost": entry.cost,
-                "body": json.dumps(entry.body, separators=(",", ":")),
-            }
-        )
+        self.accounts[line_item] = account._replace(seq=account.seq + 1, at_ms=at_ms)
+        stamps = (account.seq + 1, entry.kind, at_ms, self.service_ms)
+        said = (entry.bid, entry.slot, entry.cost, bodies.written(entry.body))
+        self._rows.append((line_item, *stamps, *said))
 
     def _save_account(self, before: Account, after: Account) -> None:
         self._guarded(_UPDATE_BALANCE, "balance", _differences(before, after, _BALANCE_SUMS))
@@ -170,13 +162,20 @@ class Books:
     def _save_day(self, before: Day, after: Day) -> None:
         self._guarded(_UPDATE_DAY, "day", _differences(before, after, _DAY_SUMS))
 
-    def _save_slice(self, before: Slice, after: Slice) -> None:
-        row = _differences(before, after, ("remaining", "owed"))
-        self._guarded(_UPDATE_SLICE, "slice", row | {"was": before.state})
+    def _save_slices(self) -> None:
+        """All at once, for one group may speak of bids out of many slices."""
+        pairs = [(self._slices_before[after.id], after) for after in self.slices.values()]
+        rows = [
+            _differences(before, after, ("remaining", "owed")) | {"was": before.state}
+            for before, after in pairs
+            if before != after
+        ]
+        if rows:
+            self._guarded(_UPDATE_SLICE, "slice", *rows)
 
-    def _guarded(self, statement: Any, what: str, row: dict[str, Any]) -> None:
+    def _guarded(self, statement: Any, what: str, *rows: dict[str, Any]) -> None:
         # Reached only when the rules and the guard disagree, so it must never pass in silence.
-        if self._connection.execute(statement, row).rowcount != 1:
+        if self._connection.execute(statement, list(rows)).rowcount != len(rows):
             raise BrokenPromise(f"the guard of a {what} refused a write")
 
 
@@ -186,7 +185,7 @@ _DAY_SUMS = ("spent", "held", "over_spent")
 
 def _differences(before: Any, after: Any, sums: tuple[str, ...]) -> dict[str, Any]:
     """The row to write: sums as what to add, everything else as it is now."""
-    row = {name: getattr(after, name) for name in after.__slots__}
+    row = {name: getattr(after, name) for name in after._fields}
     return row | {name: row[name] - getattr(before, name) for name in sums}
 
 
@@ -225,7 +224,7 @@ _UPDATE_SLICE = text(
     " ticked = :ticked, counted = :counted, state = :state"
     " WHERE id = :id AND state = :was AND remaining + :remaining >= 0 AND owed + :owed >= 0"
 )
-_INSERT_ENTRY = text(
+_INSERT_ENTRY = (
     "INSERT INTO stream (line_item, seq, kind, at_ms, service_ms, bid, slot, cost, body)"
-    " VALUES (:line_item, :seq, :kind, :at_ms, :service_ms, :bid, :slot, :cost, :body)"
+    " VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?)"
 )

@@ -6,7 +6,6 @@ each once. Prices are kept by bins of a quarter of a doubling: quantiles are wit
 
 from __future__ import annotations
 
-import json
 import math
 from collections import Counter
 from collections.abc import Iterable, Mapping
@@ -15,6 +14,7 @@ from typing import Any
 
 from sqlalchemy import text
 
+from service.store import bodies
 from service.store.database import Database, Reading, Writing
 
 FIVE_MINUTES_MS = 300_000
@@ -177,31 +177,36 @@ def _roll(database: Database, line_item: str, was: int, entries_max: int) -> int
 
 def _of_entries(line_item: str, rows: Iterable[Any]) -> dict[Key, tuple[int, int]]:
     counted = dict[Key, tuple[int, int]]()
-    for row in rows:
-        place = line_item, _five(row.at_ms)
-        if row.cost:
-            cost = -row.cost if row.kind == REFUNDED else row.cost
-            _count(counted, (*place, "cost", ""), 1, cost)
-        if row.kind in OUTCOMES:
-            _count_outcome(counted, place, row)
+    for _, kind, at_ms, service_ms, cost, body in rows:
+        place = line_item, _five(at_ms)
+        if cost:
+            _count(counted, (*place, "cost", ""), 1, -cost if kind == REFUNDED else cost)
+        if kind in ("won", "value"):
+            _count_said(counted, place, kind, service_ms, _body(body))
+        elif kind in OUTCOMES:
+            _count(counted, (*place, kind, ""))
     return counted
 
 
-def _count_outcome(counted: dict[Key, tuple[int, int]], place: tuple[str, int], row: Any) -> None:
-    body = _body(row.body)
+def _count_said(
+    counted: dict[Key, tuple[int, int]],
+    place: tuple[str, int],
+    kind: str,
+    service_ms: int,
+    body: dict[str, Any],
+) -> None:
+    """Wins and values, of which more is counted than that they were told."""
     price, amount, was = body.get("price"), body.get("amount"), body.get("was")
-    if row.kind == "won":
+    if kind == "won":
         # One that names no price we can read is still a win.
         nanos = price if isinstance(price, int) else 0
         _count(counted, (*place, "won", _bin(nanos)), 1, nanos)
-    elif row.kind != "value":
-        _count(counted, (*place, row.kind, ""))
     elif isinstance(amount, int):
         first = was is None
         _count(counted, (*place, "value", ""), int(first), amount - (was or 0))
         # What waited for its win came no sooner than the win, but nobody knows when.
         if first and amount and isinstance(body.get("won_ms"), int) and not body.get("parked"):
-            late_ms = max(1, row.service_ms - body["won_ms"])
+            late_ms = max(1, service_ms - body["won_ms"])
             _count(counted, (*place, "delay", str(late_ms.bit_length() - 1)))
 
 
@@ -255,7 +260,7 @@ def _step_ms(span_ms: int, buckets_max: int) -> int:
 def _body(told: str) -> dict[str, Any]:
     """The body of an entry; a damaged one is empty: the audit will find it, not a chart."""
     try:
-        body = json.loads(told)
+        body = bodies.parsed(told)
     except ValueError:
         return {}
     return body if isinstance(body, dict) else {}

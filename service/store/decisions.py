@@ -8,18 +8,24 @@ from typing import Any
 from sqlalchemy import text
 
 from service.store import charting
-from service.store.database import Database, Writing
+from service.store.database import Database, Writing, insert_many
 
 Decision = dict[str, Any]
 PRUNED_MAX = 5000
+# In the order in which the statement names them.
+COLUMNS = (
+    *("at_ms", "line_item", "ref", "request_id", "source", "floor", "price", "reason", "set_by"),
+    *("snapshot", "test", "auction", "arm", "held", "floor_held", "arm_odds", "odds"),
+)
 
 
 def log(database: Database, decisions: list[Decision]) -> None:
     """Append decisions; losing some in a crash loses no money, since tickets carry it."""
-    rows = [{**_UNKEPT, **decision} for decision in decisions]
+    kept = [{**_UNKEPT, **decision} for decision in decisions]
+    rows = [tuple(row[name] for name in COLUMNS) for row in kept]
 
     def work(connection: Writing) -> None:
-        connection.execute(_INSERT, rows)
+        insert_many(connection, _INSERT, rows)
         # In the same transaction, so that a chart counts each logged decision once.
         charting.add(connection, charting.of_decisions(decisions))
 
@@ -73,11 +79,10 @@ _PRUNE = text(
     "DELETE FROM decision WHERE number IN (SELECT number FROM (SELECT number, at_ms FROM decision"
     " ORDER BY number LIMIT :limit) AS oldest WHERE at_ms < :before)"
 )
-_INSERT = text(
-    "INSERT INTO decision (at_ms, line_item, ref, request_id, source, floor, price,"
-    " reason, set_by, snapshot, test, auction, arm, held, floor_held, arm_odds, odds) VALUES"
-    " (:at_ms, :line_item, :ref, :request_id, :source, :floor, :price, :reason, :set_by,"
-    " :snapshot, :test, :auction, :arm, :held, :floor_held, :arm_odds, :odds)"
+_INSERT = (
+    "INSERT INTO decision (at_ms, line_item, ref, request_id, source, floor, price, reason,"
+    " set_by, snapshot, test, auction, arm, held, floor_held, arm_odds, odds)"
+    " VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)"
 )
 # What a decision that was never weighed has nothing to say of.
 _UNKEPT: Decision = {

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Iterable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any
 
 from sqlalchemy import text
@@ -242,7 +242,7 @@ def _retire(books: Books, report: Report) -> None:
     if found is None or found.state != "open":
         return
     rounds = _count(books, found, report.bids)
-    books.replace_slice(replace(books.slices[found.id], state="retired"))
+    books.replace_slice(books.slices[found.id]._replace(state="retired"))
     # Not by `remaining`: outcomes that came before have taken their holds out of it.
     freed = found.amount - report.issued
     body = {
@@ -259,7 +259,7 @@ def _count(books: Books, found: Slice, bids: int) -> int:
     """Rounds that a report adds: bids it covers that no outcome has counted before."""
     # Outcomes that came before this tick have counted their own rounds.
     rounds = max(0, bids - found.counted)
-    changed = replace(found, ticked=max(bids, found.ticked), counted=found.counted + rounds)
+    changed = found._replace(ticked=max(bids, found.ticked), counted=found.counted + rounds)
     books.replace_slice(changed)
     return rounds
 
@@ -268,7 +268,7 @@ def _close(books: Books, found: Slice, bids: bool, bills: bool) -> None:
     released = found.remaining if bids else 0
     unbilled = found.owed if bills else 0
     if bids:
-        books.replace_slice(replace(found, state="closed"))
+        books.replace_slice(found._replace(state="closed"))
     body = {"slice": found.id.hex(), "released": released, "unbilled": unbilled}
     movement = Movement(held=-released - unbilled, remaining=-released, owed=-unbilled)
     entry = Entry("close", body)

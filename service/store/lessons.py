@@ -11,6 +11,7 @@ from sqlalchemy import LargeBinary, text
 
 from service.ledger.cancelling import Cancelled, Finder, Span, Told, left, retold
 from service.ledger.entries import Body
+from service.store import bodies
 from service.store.database import Reading, Writing, among
 from service.store.leases import read_configs
 
@@ -44,27 +45,27 @@ def read(
     """The entries after `seq`, at most so many."""
     rows = connection.execute(_AFTER, {"id": line_item, "seq": seq, "limit": limit}).all()
     rests = left_of(connection, line_item, rows, cancelled)
-    kept = list[tuple[int, Lesson]]()
-    for row in rows:
-        rest = rests[row.seq]
-        times = (row.service_ms, row.at_ms, row.cost)
-        if rest is not None:
-            kept.append((row.seq, (row.kind, rest, *times)))
-        elif row.cost:
-            kept.append((row.seq, (SPENT, {}, *times)))
+    page, seqs = list[Lesson](), list[int]()
+    for number, kind, _, at_ms, service_ms, cost, _ in rows:
+        rest = rests[number]
+        if rest is not None or cost:
+            said = (SPENT, {}) if rest is None else (kind, rest)
+            page.append((*said, service_ms, at_ms, cost))
+            seqs.append(number)
     end = rows[-1].seq if rows else seq
-    return Page([lesson for _, lesson in kept], [n for n, _ in kept], len(rows), end)
+    return Page(page, seqs, len(rows), end)
 
 
 def left_of(
     connection: Reading | Writing, line_item: str, rows: Sequence[Any], cancelled: Cancelled
 ) -> dict[int, Body | None]:
     """What is left of each of these entries, by seq; None where it teaches no more."""
-    again = dict[int, Body | None]()
+    # Nearly always nothing is cancelled, and then all of each entry is left.
+    if not cancelled:
+        return {row.seq: _body(row.body) for row in rows}
     # What a value adds depends on what came before it, some of which may be cancelled now.
-    if cancelled:
-        values = [bytes(row.bid) for row in rows if row.kind == "value" and row.bid is not None]
-        again = _values_again(connection, line_item, values, cancelled)
+    values = [bytes(row.bid) for row in rows if row.kind == "value" and row.bid is not None]
+    again = _values_again(connection, line_item, values, cancelled)
     rests = dict[int, Body | None]()
     for row in rows:
         body = again.get(row.seq, _body(row.body))
@@ -159,7 +160,7 @@ def last_reset(connection: Reading | Writing, line_item: str, cancelled: Cancell
 def _body(text_of: str) -> Body:
     """The body of an entry; a damaged one is empty, which the fold then cannot take."""
     try:
-        body = json.loads(text_of)
+        body = bodies.parsed(text_of)
     except ValueError:
         return {}
     return body if isinstance(body, dict) else {}

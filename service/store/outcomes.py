@@ -2,22 +2,20 @@
 
 from __future__ import annotations
 
-import json
 from base64 import b64encode
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass, replace
-from typing import Any
+from typing import Any, NamedTuple
 
-from sqlalchemy import LargeBinary, text
+from sqlalchemy import text
 
-from service.ledger.entries import PAYING, Entry
+from service.ledger.entries import PAYING, Body, Entry
 from service.ledger.settle import Outcome, Place, settle
 from service.ledger.values import Value, brought, judge, unparked
 from service.money import nanos_text
-from service.store import epochs
+from service.store import bodies, epochs
 from service.store.books import Books
 from service.store.changes import announce
-from service.store.database import Database, Reading, Writing, among
+from service.store.database import Database, Reading, Writing, of_bids
 from service.store.freezes import put
 from service.store.journal import note
 from service.store.leases import read_configs
@@ -25,11 +23,10 @@ from service.store.leases import read_configs
 FACTS = ("features", "hint", "arm")  # Of an impression, written into all that is said of it.
 NO_SNAPSHOT = -1  # Of a price made before the database was restored.
 
-Slots = dict[str, tuple[str, dict[str, Any]]]
+Slots = dict[str, tuple[str, Body]]
 
 
-@dataclass(frozen=True, slots=True)
-class Booking:
+class Booking(NamedTuple):
     """
     One outcome or value with the place its ticket names.
 
@@ -63,8 +60,7 @@ def weightless(*_: object) -> dict[str, Any]:
     return {}
 
 
-@dataclass(frozen=True, slots=True)
-class Booked:
+class Booked(NamedTuple):
     """What became of one booking."""
 
     status: str
@@ -89,13 +85,8 @@ def book(database: Database, group: list[Booking], weigh: Weigh = weightless) ->
 
 def find_wins(connection: Reading, bids: Iterable[bytes]) -> dict[bytes, str]:
     """The line items of these bids, as far as their win or billing is known."""
-    statement = among(
-        "SELECT bid, line_item FROM stream WHERE bid IN :bids AND slot IN ('result', 'billed')",
-        "bids",
-        LargeBinary,
-    )
-    rows = connection.execute(statement, {"bids": sorted(set(bids))})
-    return {bytes(row.bid): row.line_item for row in rows}
+    rows = of_bids(connection, _WINS, set(bids))
+    return {bytes(bid): line_item for bid, line_item in rows}
 
 
 class _Group:
@@ -146,18 +137,18 @@ class _Group:
                 self._configs[booking.line_item]["spend_on"],
             ),
         )
-        if slice_ is not None and verdict.rounds:
-            counted = replace(slice_, counted=slice_.counted + verdict.rounds)
-            self._books.replace_slice(counted)
         slice_id = slice_.id if slice_ else None
-        entry = self._weighed(booking, self._placed(verdict.entry, slice_id, day), slots)
-        entry = _described(booking, entry)
-        self._books.post(booking.line_item, entry, verdict.movement, day=day, slice_id=slice_id)
+        entry = verdict.entry
+        if entry is not None:
+            body = self._told(booking, entry, (slice_id, day), slots)
+            entry = Entry(entry.kind, body, entry.bid, entry.slot, entry.cost)
+        name, rounds = booking.line_item, verdict.rounds
+        self._books.post(name, entry, verdict.movement, day=day, slice_id=slice_id, rounds=rounds)
         self._keep(slots, entry)
-        if verdict.entry is not None and verdict.entry.kind in PAYING:
+        if entry is not None and entry.kind in PAYING:
             self._paid_ms.setdefault(outcome.bid, self._books.service_ms)
             for lesson in unparked(slots, outcome.bid):
-                self._append(booking.line_item, slots, self._dated(lesson, slots, booking))
+                self._append(name, slots, self._dated(lesson, slots, booking))
         return Booked(verdict.status)
 
     def _value(self, booking: Booking, value: Value) -> Booked:
@@ -187,7 +178,7 @@ class _Group:
         won = self._won_seqs.get(bid)
         if won is not None and won <= self._reset_seq(booking.line_item):
             body["before_reset"] = True
-        return replace(entry, body=body)
+        return entry._replace(body=body)
 
     def _reset_seq(self, line_item: str) -> int:
         statement = text("SELECT reset_seq FROM learner WHERE line_item = :id")
@@ -197,28 +188,34 @@ class _Group:
         self._books.post(line_item, entry)
         self._keep(slots, entry)
 
-    def _placed(self, entry: Entry | None, slice_id: bytes | None, day: str | None) -> Entry | None:
-        """The entry with its slice and day in it, so that the stream can be replayed alone."""
-        if entry is None:
-            return None
-        place = {"slice": slice_id.hex() if slice_id else None, "day": day}
-        return replace(entry, body={**entry.body, **place})
+    def _told(
+        self, booking: Booking, entry: Entry, place: tuple[bytes | None, str | None], slots: Slots
+    ) -> Body:
+        """The body with all that the stream must hold, so that it can be replayed alone."""
+        slice_id, day = place
+        return {
+            **entry.body,
+            "slice": slice_id.hex() if slice_id else None,
+            "day": day,
+            **self._weighed(booking, entry, slots),
+            **_seen(booking, entry.kind),
+        }
 
-    def _weighed(self, booking: Booking, entry: Entry | None, slots: Slots) -> Entry | None:
-        """The entry with what its bid was likely to beat, where bids are drawn from a law."""
+    def _weighed(self, booking: Booking, entry: Entry, slots: Slots) -> Body:
+        """What the bid was likely to beat, where bids are drawn from a law."""
         # The plain rule draws nothing, whatever the law of the moment was.
-        if entry is None or entry.kind not in ("won", "lost") or booking.arm:
-            return entry
+        if entry.kind not in ("won", "lost") or booking.arm:
+            return {}
         law = self._law(booking.line_item, booking.snapshot)
         if law is None:
-            return entry
+            return {}
         price = entry.body["price"] if entry.kind == "won" else entry.body["to_win"]
         config = self._configs[booking.line_item]
         said = self._weigh(law, entry.kind, price, booking.floor, config)
         # A bill may come first, and values on it, when nobody knew by what law it was won.
         if entry.kind == "won" and (before := brought(slots)):
-            said = {**said, "brought": before}
-        return replace(entry, body={**entry.body, **said})
+            return {**said, "brought": before}
+        return said
 
     def _law(self, line_item: str, snapshot: int) -> bytes | None:
         key = (line_item, snapshot)
@@ -228,21 +225,16 @@ class _Group:
 
     def _keep(self, slots: Slots, entry: Entry | None) -> None:
         if entry is not None and entry.slot is not None:
-            slots[entry.slot] = (entry.kind, dict(entry.body))
+            slots[entry.slot] = (entry.kind, entry.body)
 
     def _read_slots(self, bids: set[bytes]) -> dict[bytes, Slots]:
-        statement = among(
-            "SELECT bid, seq, service_ms, slot, kind, body FROM stream WHERE bid IN :ids"
-            " ORDER BY seq",
-            of=LargeBinary,
-        )
         found: dict[bytes, Slots] = {}
-        for row in self._connection.execute(statement, {"ids": sorted(bids)}):
-            if row.slot == "result":
-                self._won_seqs[bytes(row.bid)] = row.seq
-            if row.kind in PAYING:
-                self._paid_ms.setdefault(bytes(row.bid), row.service_ms)
-            found.setdefault(bytes(row.bid), {})[row.slot] = (row.kind, json.loads(row.body))
+        for bid, seq, service_ms, slot, kind, body in of_bids(self._connection, _OF_BIDS, bids):
+            if slot == "result":
+                self._won_seqs[bytes(bid)] = seq
+            if kind in PAYING:
+                self._paid_ms.setdefault(bytes(bid), service_ms)
+            found.setdefault(bytes(bid), {})[slot] = (kind, bodies.parsed(body))
         return found
 
     def _freeze_unfunded(self) -> None:
@@ -266,18 +258,20 @@ class _Group:
             announce(self._connection, "freeze", frozen)
 
 
-def _described(booking: Booking, entry: Entry | None) -> Entry | None:
-    """The entry with its arm; of an impression bought, with what was known when it was priced."""
-    if entry is None:
-        return entry
-    body = {**entry.body, "arm": booking.arm} if booking.arm else dict(entry.body)
-    if entry.kind not in PAYING:
-        return replace(entry, body=body)
+def _seen(booking: Booking, kind: str) -> Body:
+    """The arm of a bid; of an impression bought, what was known when it was priced."""
+    seen: dict[str, Any] = {"arm": booking.arm} if booking.arm else {}
+    if kind not in PAYING:
+        return seen
     if booking.features:
-        body["features"] = b64encode(booking.features).decode("ascii")
+        seen["features"] = b64encode(booking.features).decode("ascii")
     if booking.hint is not None:
-        body["hint"] = booking.hint
-    return replace(entry, body=body)
+        seen["hint"] = booking.hint
+    return seen
+
+
+_OF_BIDS = "SELECT bid, seq, service_ms, slot, kind, body FROM stream WHERE bid IN (?) ORDER BY seq"
+_WINS = "SELECT bid, line_item FROM stream WHERE bid IN (?) AND slot IN ('result', 'billed')"
 
 
 def _amount(nanos: int, config: dict[str, Any]) -> str:

@@ -6,7 +6,6 @@ An outcome is kept whole, so that it can be booked later; a lesson stands in the
 from __future__ import annotations
 
 import json
-from dataclasses import asdict
 from typing import Any
 
 from sqlalchemy import text
@@ -52,7 +51,7 @@ def mark(connection: Writing, number: int, state: str) -> bool:
 
 def written(booking: Booking) -> dict[str, Any]:
     """A booking as it is kept."""
-    event = {k: v.hex() if isinstance(v, bytes) else v for k, v in asdict(booking.event).items()}
+    event = {k: v.hex() if isinstance(v, bytes) else v for k, v in booking.event._asdict().items()}
     return {
         "event": type(booking.event).__name__,
         "said": event,

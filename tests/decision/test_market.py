@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
 from time import perf_counter
 
 import numpy as np
@@ -135,8 +134,8 @@ def earned(rivals: Nanos, value: int, *, priced: bool) -> int:
         bid = price(ready(Memory(parts=(("market", state),)), terms()))
         lessons = [lesson(bid, rival) for rival in rivals[start : start + 20].tolist()]
         told = [
-            replace(
-                one, body={**one.body, "to_win": one.body["to_win"] if priced and lost else None}
+            one._replace(
+                body={**one.body, "to_win": one.body["to_win"] if priced and lost else None}
             )
             for one in lessons
             for lost in [one.kind == "lost"]

@@ -98,7 +98,7 @@ def test_a_reset_forgets_what_came_before(one: Any, two: Any, rules: Rules) -> N
     """Only what follows the last reset counts; the clock and the guess stay."""
     before, after = told(one), told(two)
     reset = Lesson("reset", {}, before[-1].at_ms if before else 0)
-    moved = [replace(lesson, at_ms=lesson.at_ms + reset.at_ms) for lesson in after]
+    moved = [lesson._replace(at_ms=lesson.at_ms + reset.at_ms) for lesson in after]
     began = Memory(clock_ms=reset.at_ms, began_ms=folded(before, rules).began_ms)
 
     assert folded([*before, reset, *moved], rules) == folded(moved, rules, began)
@@ -110,7 +110,7 @@ def test_memory_does_not_grow_with_lessons(history: Any, rules: Rules) -> None:
     rows, memory = told(history), Memory.fresh()
     for turn in range(50):
         later_ms = turn * 20_000
-        moved = [replace(lesson, at_ms=lesson.at_ms + later_ms) for lesson in rows]
+        moved = [lesson._replace(at_ms=lesson.at_ms + later_ms) for lesson in rows]
         memory = folded(moved, rules, memory)
 
     assert len(memory.cells) <= 64 + 1 + 2 * 64

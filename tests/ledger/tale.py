@@ -5,7 +5,6 @@ A line is `event -> status name=amount …`; balances that a line does not name 
 
 from __future__ import annotations
 
-from dataclasses import replace
 from typing import Any
 
 from service.ledger.accounts import NO_LIMIT, Account, Day, Movement, Slice
@@ -101,14 +100,14 @@ class Tale:
 
     def _retire(self, name: str) -> None:
         freed = self.slices[name].amount - sum(self.issued[name])
-        self.slices[name] = replace(self.slices[name], state="retired")
+        self.slices[name] = self.slices[name]._replace(state="retired")
         self._move(Movement(held=-freed, remaining=-freed), name)
         self.entries.append(("retire", "", {"slice": name, "freed": freed}))
 
     def _close(self, name: str, *and_bills: str) -> None:
         released = self.slices[name].remaining
         unbilled = self.slices[name].owed if and_bills else 0
-        self.slices[name] = replace(self.slices[name], state="closed")
+        self.slices[name] = self.slices[name]._replace(state="closed")
         gone = Movement(held=-released - unbilled, remaining=-released, owed=-unbilled)
         self._move(gone, name)
         body = {"slice": name, "released": released, "unbilled": unbilled}

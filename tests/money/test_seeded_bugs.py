@@ -102,7 +102,7 @@ BUGS = [
     Bug("closing releases all that was leased", leases, "_close",
         "found.remaining if bids", "found.amount if bids", plays.a_usual_hour, "guard"),
     Bug("a closed slice is used again", leases, "_close",
-        'replace(found, state="closed")', "found", plays.a_win_after_grace, "guard"),
+        'found._replace(state="closed")', "found", plays.a_win_after_grace, "guard"),
     Bug("billing grace is grace", leases, "_times_ms",
         'close + config["billing_grace_ms"]', "close", plays.a_bill_at_the_last_moment, "play"),
     Bug("service time jumps", clock, "advance",

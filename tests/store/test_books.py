@@ -5,7 +5,6 @@ from __future__ import annotations
 import threading
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import replace
 from typing import Any
 
 import pytest
@@ -184,7 +183,7 @@ def test_a_slice_in_another_state_than_was_read_is_not_written(database: Databas
         books = Books(connection, [NAME], 1)
         books.load_slices([ID])
         connection.execute(text("UPDATE slice SET state = 'retired'"))
-        books.replace_slice(replace(books.slices[ID], state="closed"))
+        books.replace_slice(books.slices[ID]._replace(state="closed"))
         books.save()
 
     with pytest.raises(BrokenPromise, match="the guard of a slice"):
@@ -206,8 +205,8 @@ def test_what_is_no_sum_is_replaced(database: Database) -> None:
     """State and rounds of a slice, and the bounds of a balance and of a day."""
 
     def edit(books: Books) -> None:
-        books.replace_slice(replace(books.slices[ID], state="retired", ticked=5, counted=4))
-        books.replace_account(replace(books.accounts[NAME], budget=90, target=80))
+        books.replace_slice(books.slices[ID]._replace(state="retired", ticked=5, counted=4))
+        books.replace_account(books.accounts[NAME]._replace(budget=90, target=80))
         books.replace_day(Day(NAME, DAY, 50, 45, 0, 40, 0))
 
     keep(database, edit)

@@ -22,6 +22,11 @@ class WonForm(OpenForm):
     to_win_cpm: SeenCpm | None = None
     at: Instant | None = None
 
+    def report(self) -> Report:
+        """What it says, as a report."""
+        prices = (self.clearing_cpm, self.to_win_cpm)
+        return Report("won", self.ticket, None, *prices, at=self.at)
+
 
 class LostForm(OpenForm):
     """The bid was beaten on price."""
@@ -30,6 +35,10 @@ class LostForm(OpenForm):
     ticket: Ticket
     to_win_cpm: SeenCpm | None = None
     at: Instant | None = None
+
+    def report(self) -> Report:
+        """What it says, as a report."""
+        return Report("lost", self.ticket, to_win=self.to_win_cpm, at=self.at)
 
 
 class VoidForm(OpenForm):
@@ -40,6 +49,10 @@ class VoidForm(OpenForm):
     why: Name | None = None
     at: Instant | None = None
 
+    def report(self) -> Report:
+        """What it says, as a report."""
+        return Report("void", self.ticket, why=self.why, at=self.at)
+
 
 class BilledForm(OpenForm):
     """The win was billed at this price."""
@@ -48,6 +61,10 @@ class BilledForm(OpenForm):
     ticket: Ticket
     clearing_cpm: SeenCpm
     at: Instant | None = None
+
+    def report(self) -> Report:
+        """What it says, as a report."""
+        return Report("billed", self.ticket, clearing=self.clearing_cpm, at=self.at)
 
 
 class ValuedForm(OpenForm):
@@ -60,6 +77,23 @@ class ValuedForm(OpenForm):
     event_id: Printable
     corrects: Printable | None = None
     at: Instant | None = None
+
+    def report(self) -> Report:
+        """
+        What it says, as a report.
+
+        Raises:
+            Malformed: It names no bid.
+        """
+        if self.ticket is None and self.ref is None:
+            raise bad_field("", "A value needs the ref or the ticket of its bid.")
+        return Report(
+            *("value", self.ticket, self.ref),
+            value=self.value,
+            event_id=self.event_id,
+            corrects=self.corrects,
+            at=self.at,
+        )
 
 
 class OutcomesForm(OpenForm):
@@ -121,11 +155,4 @@ def _report(row: object, unused: set[str]) -> Report:
     if form is None:
         raise bad_field("kind", "It must be won, lost, void, billed or value.")
     unused |= unknown_fields(form, row)
-    return _as_report(read(form, row))
-
-
-def _as_report(form: OutcomeForm) -> Report:
-    if isinstance(form, ValuedForm) and form.ticket is None and form.ref is None:
-        raise bad_field("", "A value needs the ref or the ticket of its bid.")
-    names = {"clearing_cpm": "clearing", "to_win_cpm": "to_win"}
-    return Report(**{names.get(name, name): value for name, value in form})
+    return read(form, row).report()
