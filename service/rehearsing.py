@@ -15,6 +15,7 @@ import threading
 import time
 from collections.abc import Collection, Mapping
 from concurrent.futures import ThreadPoolExecutor
+from contextlib import suppress
 from dataclasses import dataclass
 from functools import partial
 from typing import Any
@@ -287,13 +288,17 @@ def order_from(connection: Reading, wish: Mapping[str, Any]) -> dict[str, Any]:
 
 def _hand_over(child: subprocess.Popen[str], order: Mapping[str, Any]) -> None:
     """Write the order on a thread, since the pipe holds less than a long log."""
+    if child.stdin is None:
+        return
     try:
-        if child.stdin is not None:
-            child.stdin.write(json.dumps(order) + "\n")
-            # Left open: when this end closes, the child ends.
-            child.stdin.flush()
+        child.stdin.write(json.dumps(order) + "\n")
+        # Left open: when this end closes, the child ends.
+        child.stdin.flush()
     except BrokenPipeError:
         logger.info("a rehearsal ended before it had read its order")
+        # What it has not read is still held, and leaving the pipe open would try to write it again.
+        with suppress(BrokenPipeError):
+            child.stdin.close()
 
 
 def _tail(child: subprocess.Popen[str]) -> str:

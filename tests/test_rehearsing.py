@@ -5,6 +5,8 @@ from __future__ import annotations
 import asyncio
 import os
 import signal
+import subprocess
+import sys
 import time
 from collections.abc import AsyncIterator
 from contextlib import asynccontextmanager
@@ -15,7 +17,7 @@ import pytest
 from service.errors import Conflict, Malformed, NotFound
 from service.feedback import Report
 from service.ordering import Orders
-from service.rehearsing import Rehearsals, Stalls
+from service.rehearsing import Rehearsals, Stalls, _hand_over
 from tests.builders import NAME, UNIT, Worker, working
 
 pytestmark = pytest.mark.anyio
@@ -241,3 +243,12 @@ async def test_a_process_that_dies_is_a_failure_with_its_words(migrated_url: str
         shown = await until(story, asked["id"], *ENDED)
         assert shown["state"] == "failed"
         assert "-9" in shown["error"]
+
+
+def test_a_process_that_is_killed_before_it_has_read_leaves_no_error() -> None:
+    """Its order is lost and its pipes close; an error here would leave the rehearsal open."""
+    child = subprocess.Popen([sys.executable, "-c", ""], stdin=subprocess.PIPE, text=True)
+    with child:
+        child.wait(20)
+        _hand_over(child, {"name": "x" * 100_000})
+    assert child.returncode == 0
