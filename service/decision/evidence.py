@@ -151,8 +151,9 @@ def _cost(method: Method, terms: Terms) -> dict[str, Any]:
             "bids to the estimate once so much is lost"
         )
     )
+    known = f"{wins:,} wins are known, all of them worthless" if wins > 1 else "a win is known"
     says = (
-        f"until {wins:,} wins are known, all of them worthless, it may bid the cap, which costs up "
+        f"until {known}, it may bid the cap, which costs up "
         f"to {money.nanos_text(most)} {terms.currency}; with values it takes longer and costs less"
         f"{limited}"
     )

@@ -23,10 +23,12 @@ PAGES = {
     "hindsight": f"{ITEM}/hindsight?other=bid_cap_cpm&price=2.5",
     "nowhere": "/watch/line-items/none",
 }
-# Elements that reach beyond the window; what is hidden on purpose is one pixel small.
+# Elements that reach beyond the window; what is hidden on purpose is one pixel small, and a wide
+# table scrolls in a box of its own.
 BEYOND = """() => [...document.querySelectorAll('main *')].filter((one) => {
   const box = one.getBoundingClientRect();
-  return box.width > 1 && box.height > 1 && box.right > window.innerWidth + 1;
+  return !one.closest('.wide')
+    && box.width > 1 && box.height > 1 && box.right > window.innerWidth + 1;
 }).map((one) => one.outerHTML.slice(0, 120))"""
 
 STROKES = """() => [...document.querySelectorAll('[data-plot=wins] .js-line')]

@@ -52,5 +52,5 @@ def test_hindsight_keeps_apart_what_is_certain(context: BrowserContext, scene: S
     page.locator("#look").click()
     expect(page.locator("#certain")).to_contain_text("Known for certain")
     expect(page.locator("#bounded")).to_contain_text("worst")
-    expect(page.locator("#assumed-values_alike")).to_contain_text("Assumed:")
+    expect(page.locator("#assumed-values_alike")).to_contain_text("Assumes that")
     expect(page.locator("#evidence")).to_contain_text("kl-ucbid")
