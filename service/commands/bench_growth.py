@@ -44,8 +44,10 @@ class Finding:
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the command's options."""
-    parser.add_argument("--line-items", type=options.count, default=10_000)
-    parser.add_argument("--decisions", type=options.count, default=10_000_000)
+    parser.add_argument("--line-items", type=options.count, default=10_000, help="to grow to")
+    parser.add_argument(
+        "--decisions", type=options.count, default=10_000_000, help="in the log, to grow to"
+    )
     parser.add_argument("--rate", type=options.count, default=1000, help="bids a second")
     parser.add_argument("--bids", type=options.count, default=10_000, help="for each figure")
     parser.add_argument("--probes", type=options.count, default=100, help="of freshness")

@@ -32,7 +32,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the command's options."""
     parser.add_argument("--rounds", type=options.count, default=7, help="of each side, by turns")
     parser.add_argument("--requests", type=options.count, default=8000, help="single bids a round")
-    parser.add_argument("--database", choices=("sqlite", "postgresql"), default="sqlite")
+    kinds = ("sqlite", "postgresql")
+    parser.add_argument("--database", choices=kinds, default="sqlite", help="that the bids use")
     parser.add_argument("--workers", type=options.count, default=1, help="processes that serve")
     parser.add_argument("--json", action="store_true", help="print figures for a program")
 

@@ -42,13 +42,15 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--csv", type=Path, help=f"auctions to replay; columns: {COLUMNS}")
     parser.add_argument("--line-item", help="start from this line item of the database")
     parser.add_argument("--market", default="iid", help="iid, own_curve, own_log, drift, abrupt, …")
-    parser.add_argument("--auction", choices=("second", "first"), default="second")
+    kinds = ("second", "first")
+    parser.add_argument("--auction", choices=kinds, default="second", help="kind of auction")
     parser.add_argument(
         "--policy", action="append", help="METHOD or METHOD:SETTING=NUMBER,…; once for each policy"
     )
     for name, usual, text in _MONEY:
         parser.add_argument(f"--{name}", default=usual, help=text)
-    parser.add_argument("--arrival", choices=("once", "accrues"), default="once")
+    arrivals = ("once", "accrues")
+    parser.add_argument("--arrival", choices=arrivals, default="once", help="how values come")
     parser.add_argument("--currency", default="EUR", help="code of the currency")
     parser.add_argument("--rounds", type=options.count, default=10_000, help="auctions per seed")
     parser.add_argument("--seeds", type=options.count, help="usually 20, of a replay 1")
