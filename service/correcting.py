@@ -94,7 +94,7 @@ class Correcting:
             row = line_items.one(connection, line_item)
             now = self._orders.database.wall_ms()
             books = Books(connection, [line_item], now)
-            if not freezes.lift(connection, line_item, [RESTORE]):
+            if not freezes.lift(connection, line_item, [RESTORE], wall_ms=now):
                 detail = "This line item waits for nobody to confirm its spend."
                 raise Conflict("nothing_to_reconcile", detail)
             before = books.accounts[line_item]

@@ -95,7 +95,8 @@ def foreseen(
     return {
         "line_item": line_item,
         "preview": True,
-        "from_ms": done.from_ms,
+        # Of a history too short for one whole step nothing was looked at.
+        "from_ms": min(done.from_ms, done.until_ms),
         "until_ms": done.until_ms,
         "looks": done.looks,
         "would_freeze": stops,

@@ -238,7 +238,7 @@ class Operator:
             name, source, before = self._frozen(connection, line_item)
             # Not what waits for its spend to be confirmed, and not what is closed for good.
             sources = [source] if line_item is None else ["person", "tripwire", "audit"]
-            freezes.lift(connection, name, sources)
+            freezes.lift(connection, name, sources, wall_ms=self._database.wall_ms())
             return self._orders.stopped(connection, "thaw", name, before, reason, actor)
 
         wish = {"call": "thaw", "line_item": line_item, "reason": reason}

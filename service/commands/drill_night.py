@@ -61,12 +61,15 @@ class Story:
     began: float = field(default_factory=time.monotonic)
     night: str = ""
     twin: str = ""
+    quiet: bool = False
 
     def note(self, what: str) -> None:
         """Add a moment, and say it as it happens."""
         after = f"{time.monotonic() - self.began:6.1f} s"
         self.moments.append((after, what))
-        sys.stderr.write(f"{after}  {what}\n")
+        if not self.quiet:
+            sys.stdout.write(f"{after}  {what}\n")
+            sys.stdout.flush()
 
     def want(self, holds: bool, otherwise: str) -> None:
         """Keep as a fault what does not hold."""
@@ -117,7 +120,7 @@ def run(arguments: argparse.Namespace) -> int:
 async def _night(
     arguments: argparse.Namespace, server: ServerProcess, database: Database, pager: Pager
 ) -> Story:
-    story, window_s = Story(), arguments.window_s
+    story, window_s = Story(quiet=arguments.json), arguments.window_s
     async with server.wire() as wire:
         action = "warn" if arguments.only_warn else "freeze"
         await begin_pair(wire, database, story, lambda name: pair_body(name, window_s, action))
@@ -302,8 +305,6 @@ def _tell(story: Story, *, as_json: bool) -> None:
         said = {name: getattr(story, name) for name in ("moments", "faults", "digests", "told")}
         sys.stdout.write(json.dumps(said) + "\n")
         return
-    for after, what in story.moments:
-        sys.stdout.write(f"{after}  {what}\n")
     sys.stdout.write(
         "Compared: the value part of both published snapshots (sums, cells of impressions and"
         " values, delays, prior, detector), without rounds, prices and the clock of the market.\n"

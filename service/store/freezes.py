@@ -27,17 +27,17 @@ def put(
     return done.rowcount == 1
 
 
-def lift(connection: Writing, line_item: str, sources: list[str]) -> int:
+def lift(connection: Writing, line_item: str, sources: list[str], *, wall_ms: int) -> int:
     """Remove the freezes of these sources; returns how many there were."""
     statement = among(
-        "DELETE FROM freezing WHERE line_item = :id AND source IN :sources", "sources"
+        "DELETE FROM freezing WHERE line_item = :id AND source IN :sources RETURNING source",
+        "sources",
     )
-    lifted = connection.execute(statement, {"id": line_item, "sources": sources}).rowcount
+    rows = connection.execute(statement, {"id": line_item, "sources": sources})
+    lifted = sorted(row.source for row in rows)
     if lifted:
-        # As service time saw the wall clock last, since whoever lifts need not know it.
-        now = connection.execute(text("SELECT seen_ms FROM service_clock")).scalar_one()
-        outbox.put(connection, "thaw", line_item, {"sources": sorted(sources)}, int(now))
-    return lifted
+        outbox.put(connection, "thaw", line_item, {"sources": lifted}, wall_ms)
+    return len(lifted)
 
 
 def on(connection: Reading | Writing, line_items: list[str]) -> dict[str, list[dict[str, Any]]]:

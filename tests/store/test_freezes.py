@@ -52,13 +52,13 @@ def test_sources_freeze_and_thaw_apart(database: Database) -> None:
     for source in ("person", "tripwire", "audit"):
         put(database, "a", source)
 
-    assert database.write(lambda c: freezes.lift(c, "a", ["person", "audit"])) == 2
+    assert database.write(lambda c: freezes.lift(c, "a", ["person", "audit"], wall_ms=2)) == 2
     assert [freeze["source"] for freeze in on(database, "a")["a"]] == ["tripwire"]
 
 
 def test_the_switch_over_all_has_a_name_no_line_item_can_have(database: Database) -> None:
     """It is a row of its own, and thawing a line item does not touch it."""
     put(database, "*", "all")
-    database.write(lambda connection: freezes.lift(connection, "a", ["person", "all"]))
+    database.write(lambda connection: freezes.lift(connection, "a", ["person", "all"], wall_ms=2))
 
     assert [freeze["source"] for freeze in on(database, "*")["*"]] == ["all"]
