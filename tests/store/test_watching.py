@@ -145,16 +145,16 @@ def test_more_line_items_cost_no_more_queries(database: Database) -> None:
 
 
 def test_the_journal_of_some_line_items_hides_the_others(database: Database) -> None:
-    """A limited reader sees its own rows and those about everything, newest first."""
-    for name in ("a", "b", "*"):
-        said = {"wall_ms": NOW_MS, "actor": "tester", "action": "freeze", "reason": "odd"}
+    """A limited reader sees its own rows and the switch over all, newest first, but no keys."""
+    for name, action in (("a", "freeze"), ("b", "freeze"), ("*", "freeze"), ("*", "key_add")):
+        said = {"wall_ms": NOW_MS, "actor": "tester", "action": action, "reason": "odd"}
         database.write(
             lambda c, name=name, said=said: journal.note(c, line_item=name, detail={}, **said)  # type: ignore[misc]
         )
     mine = database.read(lambda c: watching.journal(c, ["a"], 10))
     everything = database.read(lambda c: watching.journal(c, None, 10))
     assert [row["line_item"] for row in mine] == ["*", "a"]
-    assert [row["line_item"] for row in everything] == ["*", "b", "a"]
+    assert [row["line_item"] for row in everything] == ["*", "*", "b", "a"]
 
 
 def test_the_tail_of_a_stream_is_newest_first(database: Database) -> None:

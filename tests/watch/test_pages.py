@@ -6,6 +6,7 @@ import json
 import re
 
 import pytest
+from sqlalchemy import text
 
 from service.watch.pages import KEPT, POLICY, PRIVATE
 from tests.watch.conftest import GARDEN, Visitor
@@ -20,6 +21,7 @@ PAGES = (
     *("/watch", "/watch/now", "/watch/line-items/garden", "/watch/line-items/garden/now"),
     *(f"/watch/line-items/garden/{order}" for order in ("freeze", "thaw", "reset", "rewind")),
     *("/watch/line-items/garden/retract", "/watch/all/freeze", "/watch/all/thaw"),
+    *("/watch/rehearsals", "/watch/rehearsals/now", "/watch/line-items/garden/hindsight"),
 )
 
 
@@ -64,6 +66,32 @@ async def test_the_page_of_a_line_item_has_every_chart_as_text(signed_in: Visito
         assert one["says"]
     assert told["spend"]["figure"]["data"][0]["y"][-1] == 0.0025
     assert shown.count("as a table</summary>") >= 2
+
+
+FINDING = """INSERT INTO tripwire_finding (line_item, rule, action, saw, numbers, since_ms,
+    raised_ms, seen_ms, froze_ms, thawed_ms) VALUES
+    ('garden', 'value_size', 'freeze', :saw, '{}', :since, :since, :since, :froze, :thawed)"""
+
+
+@ON_SQLITE
+async def test_what_a_tripwire_saw_stands_above_with_its_runbook(signed_in: Visitor) -> None:
+    """What it saw, whether it froze, what to do; and the way to retract has the moment filled in."""
+    row = {"saw": "values <b>5</b> times as large", "since": 1_764_600_000_000}
+    row |= {"froze": 1, "thawed": None}
+    signed_in.database.write(lambda c: c.execute(text(FINDING), row))
+    for path in ("/watch/line-items/garden", "/watch/line-items/garden/now"):
+        shown = (await signed_in.client.get(path)).text
+        told = shown.split('id="tripwire-value_size"', 1)[1].split("</article>", 1)[0]
+        assert "Values &lt;b&gt;5&lt;/b&gt; times as large." in told
+        assert "froze it" in told
+        assert "Repair the sender" in told
+        assert shown.index("tripwire-value_size") < shown.index("figures-title")
+        assert "from_at=2025-12-01T14%3A40%3A00.000Z" in told
+    front = (await signed_in.client.get("/watch")).text
+    assert "tripwire, value size: values &lt;b&gt;5&lt;/b&gt; times as large" in front
+    cleared = text("UPDATE tripwire_finding SET cleared_ms = 2")
+    signed_in.database.write(lambda c: c.execute(cleared))
+    assert 'id="tripwires"' not in (await signed_in.client.get("/watch/line-items/garden")).text
 
 
 @ON_SQLITE

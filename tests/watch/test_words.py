@@ -93,3 +93,15 @@ def test_shares_say_of_what() -> None:
     """Five per cent of nothing is no share."""
     assert words.share(3, 200) == "2 % of 200"
     assert words.share(0, 0) == "no bids"
+
+
+def test_a_moment_goes_into_a_form_as_the_form_takes_it() -> None:
+    """With its zone and to the millisecond, so that nothing beside it is named."""
+    assert words.typed(NOW_MS + 7) == "2025-12-01T14:40:00.007Z"
+
+
+def test_what_a_tripwire_says_is_a_sentence() -> None:
+    """It begins with a capital and ends with one full stop, and is otherwise left as it is."""
+    assert words.sentences("7 values are large") == "7 values are large."
+    assert words.sentences("the kl-ucbid learner is halted.") == "The kl-ucbid learner is halted."
+    assert words.sentences("") == "."
