@@ -7,6 +7,7 @@ does is done in the page. Time is compressed: an "hour" is as long as the tripwi
 from __future__ import annotations
 
 import asyncio
+import re
 import threading
 from collections.abc import Coroutine, Iterator
 from contextlib import contextmanager
@@ -39,6 +40,11 @@ SETTINGS = {
     **{"BIDKEEL_DEADLINE_MS": "5000", "BIDKEEL_DEADLINE_MS_MAX": "5000"},
 }
 FOUND_MS = 20_000
+# A second pair is made where the first did not begin at one moment.
+CALM, ALARM = (
+    re.compile(r"None of [24] line items needs you"),
+    re.compile(r"1 of [24] line items needs"),
+)
 PHONE = {"width": 375, "height": 812}
 T = TypeVar("T")
 
@@ -105,7 +111,7 @@ class Hand:
         self.page.goto(server.address + "/watch")
         self.page.get_by_label("Access key").fill(server.new_key("on-call", "read,operate"))
         self.page.get_by_role("button", name="Sign in").click()
-        expect(self.page.locator("#sentence")).to_contain_text("None of 2 line items needs you")
+        expect(self.page.locator("#sentence")).to_contain_text(CALM)
 
     def say_why(self, reason: str) -> None:
         """Fill in the reason."""
@@ -118,7 +124,7 @@ class Hand:
         expect(first).to_contain_text("zero values", timeout=FOUND_MS)
         expect(first).to_contain_text("value size", timeout=FOUND_MS)
         expect(first).to_have_id(f"row-{name}")
-        expect(page.locator("#sentence")).to_contain_text("1 of 2 line items needs you")
+        expect(page.locator("#sentence")).to_contain_text(ALARM)
         self.look("front")
         first.get_by_role("link", name="An invented line item of the night", exact=True).click()
         for rule, saw in (("value_size", "times as large as usual"), ("zero_values", "are zero")):

@@ -75,7 +75,7 @@ FINDING = """INSERT INTO tripwire_finding (line_item, rule, action, saw, numbers
 
 @ON_SQLITE
 async def test_what_a_tripwire_saw_stands_above_with_its_runbook(signed_in: Visitor) -> None:
-    """What it saw, whether it froze, what to do; and the way to retract has the moment filled in."""
+    """What it saw, whether it froze, what to do; the way to retract has its moment filled in."""
     row = {"saw": "values <b>5</b> times as large", "since": 1_764_600_000_000}
     row |= {"froze": 1, "thawed": None}
     signed_in.database.write(lambda c: c.execute(text(FINDING), row))
@@ -102,8 +102,8 @@ async def test_every_page_is_private_and_runs_nothing_of_others(
     """Nobody keeps it, nobody frames it, and neither script nor style stands in it."""
     answer = await signed_in.client.get(path)
     assert answer.status_code == 200
-    for name, text in PRIVATE.items():
-        assert answer.headers[name] == text
+    for name, said in PRIVATE.items():
+        assert answer.headers[name] == said
     assert "unsafe" not in POLICY
     assert INLINE.findall(answer.text) == []
     links = re.findall(r'(?:href|src|action)="([^"]*)"', answer.text)
