@@ -15,7 +15,7 @@ class Runbook:
     undo: str
 
 
-_THAW = "Thaw (…/thaw) with a reason; the finding stays listed until it clears, and does not freeze"
+_THAW = "Thaw with a reason; the finding stays listed until it clears, and does not freeze"
 _THAW += " again before that or before the quiet period is over."
 _SETTING = "PATCH the line item's tripwires, after trying the new setting with …/preview."
 
