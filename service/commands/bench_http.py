@@ -56,7 +56,8 @@ def run(arguments: argparse.Namespace) -> int:
 
 @contextmanager
 def _settings(arguments: argparse.Namespace) -> Iterator[dict[str, str]]:
-    settings = {"BIDKEEL_WORKERS": str(arguments.workers)}
+    patience = {"BIDKEEL_DEADLINE_MS_MAX": str(bodies.PATIENT_MS)}
+    settings = {"BIDKEEL_WORKERS": str(arguments.workers), **patience}
     if arguments.database == "sqlite":
         yield settings
         return
