@@ -6,6 +6,7 @@ Apart from what is sent and from how it is shown.
 from __future__ import annotations
 
 import json
+import socket
 import statistics
 import subprocess
 import sys
@@ -100,22 +101,19 @@ class Bare:
             self._child.kill()
             self._child.wait()
 
-    async def connected(self) -> Load:
+    def wait(self) -> None:
         """
-        Connections to it, as soon as it listens.
+        Wait until it listens.
 
         Raises:
             ServerFailed: It did not listen in time.
         """
         end = time.monotonic() + _BARE_S_MAX
         while time.monotonic() < end:
-            load = Load(HOST, self.port)
-            try:
-                await load.connect(CONNECTIONS)
-            except OSError:
-                time.sleep(0.05)
-            else:
-                return load
+            with socket.socket() as probe:
+                if probe.connect_ex((HOST, self.port)) == 0:
+                    return
+            time.sleep(0.05)
         raise ServerFailed("The bare endpoint did not start.")
 
 
@@ -125,15 +123,12 @@ class Pair:
     def __init__(self, directory: Path, settings: Mapping[str, str] | None = None) -> None:
         self.server = ServerProcess(directory, settings)
         self.bare = Bare()
-        self.loads: dict[str, Load] = {}
 
     async def __aenter__(self) -> Self:
         with pinning.on(SERVING):
             self.bare.__enter__()
             self.server.start()
-        self.loads["bare"] = await self.bare.connected()
-        self.loads["ours"] = Load(HOST, self.server.port, bodies.PASSED)
-        await self.loads["ours"].connect(CONNECTIONS)
+        self.bare.wait()
         return self
 
     async def __aexit__(
@@ -142,8 +137,6 @@ class Pair:
         error: BaseException | None,
         trace: TracebackType | None,
     ) -> None:
-        for load in self.loads.values():
-            await load.close()
         self.server.stop()
         self.bare.__exit__(kind, error, trace)
 
@@ -176,25 +169,28 @@ class Pair:
         contest: Contest,
         requests: Callable[[], Iterable[bytes]],
         rate: float | None = None,
-        bare_requests: Callable[[], Iterable[bytes]] | None = None,
     ) -> None:
         """
         One round of each side, the bare one first.
 
         Args:
-            requests: Makes what our side is asked.
+            requests: Makes what both are asked.
             rate: Requests per second; None for as fast as either answers.
-            bare_requests: What the other side is asked, if something else.
         """
-        contest.bare.append(await self._side("bare", (bare_requests or requests)(), rate))
+        contest.bare.append(await self._side("bare", requests(), rate))
         contest.ours.append(await self._side("ours", requests(), rate))
 
     async def _side(self, which: str, requests: Iterable[bytes], rate: float | None) -> Side:
-        load = self.loads[which]
-        pid = self.bare.pid if which == "bare" else self._pid
+        pid, port = (
+            (self.bare.pid, self.bare.port) if which == "bare" else (self._pid, self.server.port)
+        )
+        # Opened anew: a server closes what lay idle while the other side had its turn.
+        load = Load(HOST, port, bodies.PASSED)
+        await load.connect(CONNECTIONS)
         began_s = pinning.processor_s(pid)
         with pinning.on(ASKING):
             seen = await (load.open_loop(requests, rate) if rate else load.closed_loop(requests))
+        await load.close()
         return _side(seen, pinning.processor_s(pid) - began_s)
 
     @property
