@@ -17,6 +17,7 @@ from typing import Any
 from fastapi import FastAPI
 
 from service.admitting import FLUSH_S
+from service.api.express import Service
 from service.api.routes import install
 from service.backlog import Backlog
 from service.bidding import Bidder, Clocks
@@ -117,7 +118,7 @@ def create_app(settings: Settings, post: Post | None = None) -> FastAPI:
             app.state.stories = None
 
     # Its own pages load scripts from other hosts; ours need no internet.
-    app = FastAPI(
+    app = Service(
         title="Bidkeel", lifespan=lifespan, docs_url=None, redoc_url=None, openapi_url=None
     )
     app.state.settings = settings

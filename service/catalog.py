@@ -98,10 +98,11 @@ class Catalog:
 
     async def key_for(self, bearer: str) -> keys.Key | None:
         """The live key behind a bearer text, or None."""
-        hashed = keys.hashed(bearer)
         # A key that was ended is forgotten by `follow`, so this is never older than one poll.
-        if hashed in self._keys:
-            return self._admitted(self._keys[hashed])
+        if bearer in self._keys:
+            return self._admitted(self._keys[bearer])
+        # By its hash, since what somebody guessed or mistyped is nothing to remember.
+        hashed = keys.hashed(bearer)
         if self._missed(f"key {hashed}"):
             return None
         found = await self._threads.run(
@@ -110,7 +111,7 @@ class Catalog:
         if found is None:
             self._miss(f"key {hashed}")
             return None
-        self._keys[hashed] = found
+        self._keys[bearer] = found
         return self._admitted(found)
 
     def keys_used(self) -> set[str]:

@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Callable
 
-from fastapi import FastAPI
-
 from service.api import (
     bids,
     corrections,
@@ -25,6 +23,7 @@ from service.api import (
     winding,
 )
 from service.api.envelope import Envelope
+from service.api.express import Service, hang
 from service.api.problems import install_handlers
 
 ROUTERS = (
@@ -47,7 +46,7 @@ ROUTERS = (
 )
 
 
-def install(app: FastAPI, answered: Callable[[int], None] = lambda _status: None) -> None:
+def install(app: Service, answered: Callable[[int], None] = lambda _status: None) -> None:
     """Add every route and every error handler; a path with a slash too many is not found."""
     # A redirect would drop the body of a POST at many a client, and lose an outcome with it.
     app.router.redirect_slashes = False
@@ -56,3 +55,4 @@ def install(app: FastAPI, answered: Callable[[int], None] = lambda _status: None
         app.router.routes.extend(router.routes)
     install_handlers(app)
     app.add_middleware(Envelope, answered=answered)
+    hang(app, answered)

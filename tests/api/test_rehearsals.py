@@ -6,7 +6,6 @@ from collections.abc import AsyncIterator
 
 import httpx
 import pytest
-from fastapi import FastAPI
 
 from service.api.routes import install
 from service.operating import Key

@@ -6,7 +6,6 @@ from collections.abc import AsyncIterator
 
 import httpx
 import pytest
-from fastapi import FastAPI
 
 from service.api.edge import Edge
 from service.api.routes import install
