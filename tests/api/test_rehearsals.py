@@ -7,6 +7,7 @@ from collections.abc import AsyncIterator
 import httpx
 import pytest
 
+from service.api.express import Service
 from service.api.routes import install
 from service.operating import Key
 from tests.api.routed import FORM, ORDER, Orders, Stories
@@ -25,7 +26,7 @@ def stories() -> Stories:
 @pytest.fixture
 async def client(stories: Stories) -> AsyncIterator[httpx.AsyncClient]:
     """A caller with the scope admin."""
-    app = FastAPI(docs_url=None, redoc_url=None, openapi_url=None)
+    app = Service(docs_url=None, redoc_url=None, openapi_url=None)
     app.state.stories = stories
     install(app)
     headers = {"Authorization": "Bearer admin"}

@@ -8,6 +8,7 @@ import httpx
 import pytest
 
 from service.api.edge import Edge
+from service.api.express import Service
 from service.api.routes import install
 from service.decision.opportunity import Opportunity
 from tests.api.routed import FORM, ORDER, Stories
@@ -22,16 +23,16 @@ def stories() -> Stories:
 
 
 @pytest.fixture
-def app(stories: Stories) -> FastAPI:
+def app(stories: Stories) -> Service:
     """An app of these stories alone."""
-    app = FastAPI(docs_url=None, redoc_url=None, openapi_url=None)
+    app = Service(docs_url=None, redoc_url=None, openapi_url=None)
     app.state.stories = stories
     install(app)
     return app
 
 
 @pytest.fixture
-async def client(app: FastAPI) -> AsyncIterator[httpx.AsyncClient]:
+async def client(app: Service) -> AsyncIterator[httpx.AsyncClient]:
     """A caller with the scope admin."""
     headers = {"Authorization": "Bearer admin"}
     transport = httpx.ASGITransport(app=app, raise_app_exceptions=False)
@@ -223,7 +224,7 @@ async def test_orders_carry_reason_actor_and_key(
         assert stories.operator.calls[-1] == (*told, "A test.", "Ann Example (k1)", once)
 
 
-async def test_ready_follows_the_service(app: FastAPI, client: httpx.AsyncClient) -> None:
+async def test_ready_follows_the_service(app: Service, client: httpx.AsyncClient) -> None:
     """503 while starting, ok when all is well, degraded but 200 without a database."""
     stories = app.state.stories
     assert (await client.get("/health/ready")).json() == {"status": "ok"}
@@ -236,7 +237,7 @@ async def test_ready_follows_the_service(app: FastAPI, client: httpx.AsyncClient
     assert (await client.post("/v1/bids", json={"line_item": "a"})).status_code == 503
 
 
-async def test_health_may_ask_for_a_key_of_its_own(app: FastAPI, client: httpx.AsyncClient) -> None:
+async def test_health_may_ask_for_a_key_of_its_own(app: Service, client: httpx.AsyncClient) -> None:
     """With the setting, only its key opens health, and no other key does."""
     from pydantic import SecretStr
 
@@ -246,7 +247,7 @@ async def test_health_may_ask_for_a_key_of_its_own(app: FastAPI, client: httpx.A
     assert answer.status_code == 200
 
 
-async def test_the_settings_limit_bodies_and_rows(app: FastAPI, client: httpx.AsyncClient) -> None:
+async def test_the_settings_limit_bodies_and_rows(app: Service, client: httpx.AsyncClient) -> None:
     """Limits come from the settings of the app."""
     app.state.settings = Edge(body_bytes_max=50, batch_bytes_max=200, batch_rows_max=1)
     long = {"line_item": "a", "request_id": "x" * 50}
