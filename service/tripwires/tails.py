@@ -56,20 +56,27 @@ def binomial_limits(count: float, trials: float, alpha: float) -> Pair:
 
 def spread_of_rates(history: Sequence[Pair]) -> float:
     """By what factor counts vary more than Poisson counts of one rate would; at least 1."""
-    total, exposure = sum(k for k, _ in history), sum(n for _, n in history)
-    if len(history) < 2 or total <= 0:
-        return 1.0
-    rate = total / exposure
-    squares = sum((k - n * rate) ** 2 / (n * rate) for k, n in history if n > 0)
-    return max(1.0, squares / (len(history) - 1))
+    return max(1.0, _variance_ratio(history))
 
 
 def spread_of_shares(history: Sequence[Pair]) -> float:
     """By what factor counts vary more than binomial counts of one share would; at least 1."""
     total, trials = sum(k for k, _ in history), sum(n for _, n in history)
-    if len(history) < 2 or not 0 < total < trials:
+    if not 0 < total < trials:
         return 1.0
-    return max(1.0, spread_of_rates(history) / (1 - total / trials))
+    # Bounded only here: binomial counts vary less than Poisson counts, the more so the larger
+    # their share, and a bound before the division would make them look wild.
+    return max(1.0, _variance_ratio(history) / (1 - total / trials))
+
+
+def _variance_ratio(history: Sequence[Pair]) -> float:
+    """Pearson's chi-square over its degrees of freedom; 0 where there is nothing to compare."""
+    total, exposure = sum(k for k, _ in history), sum(n for _, n in history)
+    if len(history) < 2 or total <= 0:
+        return 0.0
+    rate = total / exposure
+    squares = sum((k - n * rate) ** 2 / (n * rate) for k, n in history if n > 0)
+    return squares / (len(history) - 1)
 
 
 def rates_tail(now: Pair, history: Sequence[Pair], *, upper: bool) -> float:

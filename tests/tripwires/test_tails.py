@@ -70,3 +70,13 @@ def test_counts_that_vary_more_weigh_less() -> None:
     shares = [(1.0, 10.0), (9.0, 10.0)] * 3
     assert tails.spread_of_shares(shares) == pytest.approx(6 * 16 / 5 / 0.5 / 5)
     assert tails.spread_of_shares([(0.0, 10.0)] * 4) == 1.0
+
+
+@pytest.mark.parametrize("share", [0.1, 0.5, 0.8])
+def test_plain_binomial_counts_are_not_taken_for_wild(share: float) -> None:
+    """Large shares vary less than Poisson counts of their mean, and are measured by their own."""
+    even = [(100 * share, 100.0)] * 6
+    assert tails.spread_of_shares(even) == 1.0
+    tail = tails.shares_tail((100.0, 100.0), even, upper=True)
+    high = tails.binomial_limits(600 * share, 600, tails.LIMITS)[1]
+    assert tail == pytest.approx(stats.binom(100, high).sf(99), rel=1e-9)
