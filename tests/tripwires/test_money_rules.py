@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import pytest
 
 from service.tripwires.counts import NOTHING, Counts, Series
@@ -128,8 +130,10 @@ def test_no_bids_are_no_slow_spending() -> None:
 )
 def test_bare_money_is_told_since_it_last_grew(rule: str, said: str) -> None:
     """By minutes where they show it, else by hours, else by days, else since now."""
-    grown = Counts(bids=1, **{rule: 1000})  # type: ignore[arg-type]
-    known = facts(HOURS, last=lambda n: grown if n == 400 else USUAL, of_last=100, **{rule: 1000})
+    grown = Counts(bids=1, **{rule: 1000})
+    last = lambda n: grown if n == 400 else USUAL  # noqa: E731
+    bare: dict[str, Any] = {rule: 1000}
+    known = facts(HOURS, last=last, of_last=100, **bare)
     found = saw(known, rule)
     assert found == Saw(said, {f"{rule}_nanos": 1000}, 400 * MINUTE_MS)
     widths = [(known.minutes, 360 * MINUTE_MS), (known.hours, 0), (known.days, known.now_ms)]
@@ -144,7 +148,8 @@ def test_bare_money_is_told_since_it_last_grew(rule: str, said: str) -> None:
 @pytest.mark.parametrize("nanos", [0, -5])
 def test_no_bare_money_is_no_finding(rule: str, nanos: int) -> None:
     """Nor is less than none, as a replay may reckon back."""
-    assert saw(facts(60, **{rule: nanos}), rule) is None
+    bare: dict[str, Any] = {rule: nanos}
+    assert saw(facts(60, **bare), rule) is None
 
 
 @pytest.mark.parametrize(
