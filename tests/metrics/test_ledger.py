@@ -41,7 +41,7 @@ def test_money_has_the_parts_that_the_database_sums() -> None:
 )
 def test_nanos_become_units(nanos: str, units: float) -> None:
     """Beyond 64 bits too, since sums over line items may be; an over-held sum is negative."""
-    page = {"money": {"EUR": {**EMPTY, "held": nanos}, "JPY": EMPTY}}
+    page: dict[str, object] = {"money": {"EUR": {**EMPTY, "held": nanos}, "JPY": EMPTY}}
     found = samples(page)
     assert found[("b_money_held", ("EUR",))] == units
     assert found[("b_money_held", ("JPY",))] == 0.0
@@ -64,7 +64,7 @@ def test_plain_numbers_are_told_in_their_unit(name: str, told: int, value: float
 
 def test_labels_are_those_of_the_page() -> None:
     """Freezes by source, slices by state, findings by rule, and the life of the database."""
-    page = {
+    page: dict[str, object] = {
         "freezes": {"person": 2, "all": 0}, "slices": {"open": 5}, "tripwires_firing": {"voids": 1},
         "incarnation": "ab", "something of next year": 4,
     }  # fmt: skip
