@@ -63,6 +63,7 @@ def test_an_empty_log_is_one_empty_page(database: Database) -> None:
     assert database.read(lambda c: hindsights.first_number(c, 5)) <= 0
 
 
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
 @pytest.mark.parametrize(
     ("entries", "wanted"),
     [
@@ -149,6 +150,7 @@ def test_pages_go_on_from_a_number(database: Database, monkeypatch: pytest.Monke
     assert seen == [1, 2, 3, 4, 5]
 
 
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
 @pytest.mark.parametrize(
     ("from_ms", "number"), [(0, 0), (60_000, 0), (60_001, 1), (61_000, 1), (10**9, 4)]
 )

@@ -50,6 +50,7 @@ def test_a_rate_is_read_as_it_was_posted(database: Database) -> None:
     ]
 
 
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
 @pytest.mark.parametrize(
     ("at_ms", "current"),
     [(5, [1, 2, 3]), (10, [1, 2, 3]), (19, [1, 2, 3]), (20, [2, 3]), (30, [3])],

@@ -50,6 +50,7 @@ def test_what_several_workers_count_is_added_up(database: Database) -> None:
     assert sorted((row["code"], row["count"]) for row in found) == [("c", 7), ("d", 4)]
 
 
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
 @pytest.mark.parametrize(
     "other", [place(2), place(key_id="x"), place(route="GET /b"), place(code="d")]
 )

@@ -71,6 +71,7 @@ def test_line_items_are_walked_by_id(database: Database, monkeypatch: pytest.Mon
     assert active(database, after="z") == []
 
 
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
 @pytest.mark.parametrize(
     ("looked_ms", "due_ms", "due"),
     [(100, 99, False), (100, 100, True), (NOW_MS, 99, False), (NOW_MS + 1, 99, True)],
@@ -84,6 +85,7 @@ def test_nobody_is_looked_at_twice_within_a_bucket(
     assert active(database, due_ms) == ([NAME] if due else [])
 
 
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
 @pytest.mark.parametrize(
     ("statement", "due"),
     [
