@@ -48,6 +48,7 @@ class Admitting:
 
     async def flush(self) -> None:
         """Write what was counted, and which keys were used, at most once a minute for each."""
+        # Taken at once: whoever is refused while we write belongs to the next flush.
         counted, self._refused = self._refused, {}
         now_ms = self._orders.database.wall_ms()
         minute = now_ms // MINUTE_MS

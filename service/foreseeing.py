@@ -86,6 +86,7 @@ def foreseen(
 ) -> dict[str, Any]:
     """What a candidate setting would have done on the recorded history of a line item."""
     config = line_items.one(connection, line_item).config
+    # As a PATCH would merge it, so that a preview is of the very setting it would make.
     after = merged(config, {"tripwires": {**(candidate or {})}})
     setups = setups_of(after)
     gauges = tripwires.gauges(connection, line_item)

@@ -74,6 +74,7 @@ class Posting:
             await asyncio.gather(*(self._tell(client, news) for news in due))
 
     async def _tell(self, client: httpx.AsyncClient, news: News) -> None:
+        # Longer than one try can take, so that nothing is due again while it is on its way.
         until = self._database.wall_ms() + int(2 * self._receiver.timeout_s * MS) + MS
         write = self._database.write
         if not await self._threads.run(write, lambda c: outbox.claim(c, news, until)):
@@ -99,6 +100,8 @@ class Posting:
             SIGNATURE: proof(self._receiver.secret, stamp, body),
         }
         try:
+            # Over the whole try: the client's own limit is for each read, and a slow drip never
+            # ends.
             async with asyncio.timeout(self._receiver.timeout_s):
                 url = self._receiver.url
                 # Streamed and never read: an endless answer costs nothing.

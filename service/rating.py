@@ -61,8 +61,10 @@ class Rating:
             changes.announce(connection, rates.KIND, [changes.ALL])
             return after | {"set_ms": now, "actor": actor, "reason": reason}
 
+        # Before the transaction, so that no key of a repeat is spent on what can never be.
         if currency == into:
             raise Malformed("bad_field", "It must be another currency.", {"field": "into"})
+        # What was asked, not what it came to: from now on is the same wish a second later.
         wish = {"call": "rate", "pair": [currency, into], "rate": rate, "span": list(span)}
         return await self._orders.give(order, repeat_of(actor, idempotency, wish))
 

@@ -24,6 +24,7 @@ async def sample(
         totals: Sums since this process began; the row of its place in the crew goes on.
     """
     tally.set("start_timestamp_seconds", value=time.time_ns() // 1_000_000)
+    # From nought: what grew before the first look has happened in this process, too.
     before = dict.fromkeys(totals, 0)
     while True:
         before = once(tally, levels, totals, before)

@@ -54,6 +54,7 @@ def tracing(tracer: Tracer) -> Iterator[None]:
     try:
         yield
     finally:
+        # Not the last one: two blocks may end in another order than they began in.
         _chosen.remove(tracer)
 
 

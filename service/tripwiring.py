@@ -87,6 +87,7 @@ class Tending:
             seq = self._count(standing)
             if seq is None:
                 return
+            # Judged only when all is counted: half of a page would look like a fault.
             if seq >= standing.head:
                 self._judge(standing)
                 return
@@ -99,6 +100,7 @@ class Tending:
 
     def _count(self, standing: Standing) -> int | None:
         name, now = standing.line_item, self._database.wall_ms()
+        # Read and summed outside of the write: parsing is slow, and SQLite has one writer.
         read, seq = self._database.read(lambda c: tripwires.entries(c, name, standing.seq))
         minutes = dict[int, Counts]()
         for at_ms, kind, slot, body, cost in read:
@@ -238,6 +240,7 @@ def facts_of(
     )  # fmt: skip
     windows = [setup.window_ms or 0 for setup in setups.values()]
     short = [one for one in windows if one < LONG_HOURS * hour] or [0]
+    # An hour more than any short window reaches, so that its first bucket is whole.
     back = max(*short, hour) + hour
     if not hours or hours[0][0] > now - LONG_HOURS * hour:
         # Too young for hours to be held against: the windows just before have to do.

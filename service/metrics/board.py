@@ -74,6 +74,7 @@ class Board:
         if len(page) > PAGE_BYTES:
             return
         self._memory[_HEAD_BYTES : _HEAD_BYTES + len(page)] = page
+        # After the page: whoever reads in between finds that they do not fit, and reads again.
         self._words[1], self._words[2] = len(page), zlib.crc32(page)
 
     def page(self) -> dict[str, Any] | None:

@@ -63,6 +63,7 @@ class Exposition(Collector):
 
 def process_names(rows: int) -> list[str]:
     """What the rows of a board belong to: workers in their places, and the clerk if apart."""
+    # Alone, one process does everything, the clerk's work included.
     if rows == 1:
         return ["worker-0"]
     return [*(f"worker-{place}" for place in range(rows - 1)), "clerk"]

@@ -29,6 +29,7 @@ class Tally:
     def add(self, name: str, *labels: str, count: int = 1) -> None:
         """Count; a label that the list does not name counts as other."""
         place = PLACES.get((name, *labels))
+        # The slow way is only for labels that no list has: a mistake, or a newer release.
         self._words[place if place is not None else _nearest(name, labels)] += count
 
     def set(self, name: str, *labels: str, value: int) -> None:
@@ -39,6 +40,7 @@ class Tally:
     def took(self, seconds: float) -> None:
         """Count one bid by how long it took."""
         self._words[_FIRST_BUCKET + bisect_left(BOUNDS_S, seconds)] += 1
+        # Whole nanoseconds, so that rows of many processes add up without rounding.
         self._words[_SUM] += int(seconds * NANOS)
 
     def value(self, name: str, *labels: str) -> int:

@@ -96,6 +96,7 @@ def verify(connection: Reading, remembered: str | None = None) -> Verdict:
 
 
 def _broken(row: Any, link: int, last: str) -> str | None:
+    # Its own words first: a row that was altered breaks the place of those behind it, too.
     if link_hash(row.previous or "", row.link, row, adopted=bool(row.adopted)) != row.hash:
         return "altered: what it says is not what was sealed"
     if row.link != link + 1:
@@ -118,6 +119,7 @@ _HEAD = "SELECT link, hash, elders FROM journal_head WHERE id = 1"
 _UNSEALED = text(
     f"SELECT {_COLUMNS}, hash FROM journal WHERE link IS NULL ORDER BY number"  # noqa: S608
 )
+# A bound against rows forged in bulk; one of them is enough to say so.
 _WAITING = text("SELECT number, hash FROM journal WHERE link IS NULL ORDER BY number LIMIT 1000")
 _NEXT = text(
     f"SELECT {_COLUMNS}, link, previous, hash, adopted FROM journal"  # noqa: S608

@@ -17,9 +17,11 @@ from sqlalchemy import text
 from service.store import bodies
 from service.store.database import Database, Reading, Writing
 
+# The finest step that is kept; coarser ones are summed when a chart is read.
 FIVE_MINUTES_MS = 300_000
 ENTRIES_MAX = 2000
 BUCKETS_MAX = 300
+# Bins add up over minutes and processes, which kept quantiles would not.
 BINS_PER_DOUBLING = 4
 NOTHING_BIN = -1  # Of a price of 0, which has no logarithm.
 MINUTE_MS = 60_000
@@ -135,6 +137,7 @@ def of_decisions(decisions: Iterable[Row]) -> dict[Key, tuple[int, int]]:
     """What decisions add; tests cost nobody anything and count for nothing."""
     counted = dict[Key, tuple[int, int]]()
     for one in decisions:
+        # A chart that counted tests would show bids that could never win.
         if one["test"]:
             continue
         place = one["line_item"], _five(one["at_ms"])
@@ -154,6 +157,7 @@ def roll(database: Database, entries_max: int = ENTRIES_MAX) -> int:
 
 def prune(connection: Writing, before_ms: int) -> int:
     """Forget counts from before this wall clock moment; returns how many rows went."""
+    # By line item, with which the key of the counts begins: no scan of the whole table.
     names = connection.execute(text("SELECT line_item FROM charted")).scalars().all()
     rows = [{"id": name, "before": before_ms} for name in names]
     return sum(connection.execute(_PRUNE, row).rowcount for row in rows)
@@ -275,6 +279,7 @@ _DELAYS = text(
     "SELECT name, sum(n) AS n FROM chart_count WHERE line_item = :id AND at_ms >= :from"
     " AND at_ms < :until AND what = 'delay' GROUP BY name"
 )
+# Added to, not replaced: decisions and entries of one five minutes come in many pieces.
 _ADD = text(
     "INSERT INTO chart_count (line_item, at_ms, what, name, n, nanos)"
     " VALUES (:id, :at, :what, :name, :n, :nanos) ON CONFLICT (line_item, at_ms, what, name)"

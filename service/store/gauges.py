@@ -27,6 +27,7 @@ def measure(connection: Reading, wall_ms: int) -> dict[str, Any]:
         "slices": _counts(connection, _SLICES, STATES),
         "line_items": _one(connection, "SELECT count(*) FROM line_item"),
         "learner_lag_entries": entries,
+        # Milliseconds, as everywhere in the store; the exposition scales them to what it says.
         "learner_lag_seconds": 0 if oldest_ms is None else max(0, now - oldest_ms),
         "halted_learners": _one(
             connection, "SELECT count(*) FROM learner WHERE halted = 1 OR tries > 0"
@@ -91,6 +92,7 @@ def _unread(connection: Reading) -> tuple[int, int | None]:
 
 
 def _behind(connection: Reading) -> int:
+    # Without a live worker nobody is behind; that there is none is told by its own gauge.
     seen = live(connection).values()
     return max(0, latest(connection) - min(seen)) if seen else 0
 

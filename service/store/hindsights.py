@@ -115,6 +115,7 @@ def page(connection: Reading, config: Mapping[str, Any], after: int, span: Span)
         else Line(one, local_day(one["at_ms"], zone), Said())
         for one in real
     ]
+    # Beyond the slack nothing of the span can follow, though the log goes on.
     over = len(found) < PAGE_ROWS or found[-1]["at_ms"] >= span.until_ms + ORDER_SLACK_MS
     end = None if over else int(found[-1]["number"])
     return Page(lines, len(inside) - len(real), end, now_ms(connection))
@@ -123,6 +124,7 @@ def page(connection: Reading, config: Mapping[str, Any], after: int, span: Span)
 def spent_before(connection: Reading, line_item: str, from_ms: int) -> int:
     """What the line item had spent before a moment, refunds taken off, in nanos."""
     spent, low, high = connection.execute(_HEAD, {"id": line_item}).one()
+    # One beyond the head: the moment may lie after all that was booked.
     high += 1
     while low < high:
         # The stream has no gaps and its times never fall, so the moment is found by halves.
@@ -175,6 +177,7 @@ def _told(rows: list[Any], config: Mapping[str, Any], cancelled: Cancelled) -> S
             body = bodies[row.slot]
             if VALUE not in cancelled.leaves(row.seq, row.kind):
                 untold = True
+            # By service time, in which an outage lets no window run out.
             elif paid_ms is not None and row.service_ms - paid_ms > config["value"]["window_ms"]:
                 notes.add(LATE)
             else:
@@ -194,6 +197,7 @@ def _result(kinds: Mapping[str, str]) -> str:
 
 
 def _bid(ref: str) -> bytes:
+    # Refs are written without the padding that 16 bytes take.
     return urlsafe_b64decode(ref + "==")
 
 

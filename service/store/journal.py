@@ -35,6 +35,7 @@ def note(
             "action": action,
             "line_item": line_item,
             "reason": reason,
+            # Sorted, so that the same detail is the same text and has the same hash.
             "detail": json.dumps(detail, sort_keys=True),
         },
     )

@@ -264,11 +264,13 @@ _MAKE = text(
 _TEXT = text("INSERT INTO key_text (hash, key_id, made_ms) VALUES (:hash, :id, :now)")
 _LIVE = "SELECT id, hash FROM access_key WHERE id = :id AND ended_ms IS NULL"
 _END = text("UPDATE access_key SET ended_ms = :now WHERE id = :id AND ended_ms IS NULL")
+# Only ever shortened: a second turn must not bring an older text back to life.
 _OUTDATE = text(
     "UPDATE key_text SET until_ms = :until"
     " WHERE key_id = :id AND (until_ms IS NULL OR until_ms > :until)"
 )
 _REPLACE = text("UPDATE access_key SET hash = :hash WHERE id = :id")
+# Never back: workers write in any order, and the newest use is what people ask for.
 _USED = text("UPDATE access_key SET used_ms = :now WHERE id = :id AND coalesce(used_ms, 0) < :now")
 _FIND = text(
     "SELECT k.id, k.name, k.scopes, k.line_items, k.expires_ms, t.until_ms FROM key_text t"

@@ -15,6 +15,7 @@ from sqlalchemy import text
 
 from service.store.database import Reading, Writing
 
+# So many calls may be open at once to the one receiver.
 DUE_MAX = 50
 PRUNED_MAX = 5000
 
@@ -43,6 +44,7 @@ def put(
     connection: Writing, kind: str, line_item: str, body: Mapping[str, Any], wall_ms: int
 ) -> None:
     """Keep one piece of news."""
+    # Not our number, which a restored backup counts again: new news would look like a repeat.
     row = {"id": secrets.token_hex(16), "kind": kind, "line_item": line_item, "now": wall_ms}
     connection.execute(_PUT, row | {"body": json.dumps(dict(body), sort_keys=True)})
 
@@ -99,6 +101,7 @@ _DUE = text(
     "SELECT number, id, kind, line_item, body, at_ms, tries, next_ms FROM outbox"
     " WHERE state = 'waiting' AND next_ms <= :now ORDER BY next_ms, number LIMIT :limit"
 )
+# By the moment that was seen and that every claim moves: the second clerk finds it moved.
 _CLAIM = text(
     "UPDATE outbox SET next_ms = :until, tries = tries + 1"
     " WHERE number = :number AND state = 'waiting' AND next_ms = :seen"
@@ -109,6 +112,7 @@ _COUNTS = text("SELECT state, count(*) AS n FROM outbox WHERE line_item = :id GR
 _LAST_ERROR = text(
     "SELECT error FROM outbox WHERE line_item = :id AND error <> '' ORDER BY number DESC LIMIT 1"
 )
+# Never what waits, however old: it is told or given up first.
 _PRUNE = text(
     "DELETE FROM outbox WHERE number IN (SELECT number FROM outbox"
     " WHERE state <> 'waiting' AND at_ms < :before ORDER BY number LIMIT :limit)"

@@ -34,6 +34,7 @@ def past_decisions(
         for row in these:
             plain = {"at_ms": row.at_ms, "source": row.source, "floor": row.floor}
             found.append({**plain, **said.get(_bid(row.ref) if row.ref else b"", {})})
+    # Read newest first, so that the bound cuts the oldest; told in the order of time.
     return found[::-1]
 
 
@@ -52,10 +53,13 @@ def _outcomes(
         if row.slot == "result":
             names = ("bid", "price", "to_win", "auction")
             one |= {"kind": row.kind, "told_ms": row.at_ms, **{n: body[n] for n in names}}
+            # Where values accrue, silence is how a feed says that nothing was earned.
             if row.kind == "won" and accrues:
                 one.setdefault("value", 0)
         elif row.kind == "value":
+            # The change counts: a correction names the amount that it replaces.
             one["value"] = one.get("value", 0) + body["amount"] - (body["was"] or 0)
+            # The first word is the one that a learner would have waited for.
             one.setdefault("valued_ms", row.at_ms)
     return found
 

@@ -19,6 +19,7 @@ from service.store.clock import now_ms
 from service.store.database import Reading, Writing, among
 from service.store.leases import NEVER_MS
 
+# Beyond any moment or number, and still within 64 bits on both databases.
 FIRST, LAST = 0, 2**62
 LOOKED_AT_MAX = 20_000  # Rows that one page may pass over while it looks for those that fit.
 SLICES_MAX = 200
@@ -56,6 +57,7 @@ def logged(
     after so many that were looked at.
     """
     names = tuple(name for name, _ in wish.filters)
+    # One row more than wanted tells whether there is a further page, without counting.
     row = _bounds(wish) | dict(wish.filters) | {"limit": limit + 1, "look": LOOKED_AT_MAX}
     statement = _logged(wish.table, wish.line_item is None, names, newest_first)
     found = list(connection.execute(statement, row))
@@ -63,6 +65,7 @@ def logged(
         return found[:limit], (found[limit - 1].at_ms, found[limit - 1].number)
     if not names:
         return found, None
+    # Few rows fit, perhaps because the look ended: go on behind the last one looked at.
     seen = _last_seen(wish.table, wish.line_item is None, newest_first)
     last = connection.execute(seen, row).one_or_none()
     return found, None if last is None else (last.at_ms, last.number)
@@ -84,6 +87,7 @@ def entries(
         return list(connection.execute(_STREAM[newest_first], row))
     # Kind by kind, so that a rare one is found without reading all that lies between.
     found = [connection.execute(_OF_KIND[newest_first], row | {"kind": k}) for k in kinds]
+    # Each kind comes in order of its seqs already, so that nothing is sorted again.
     merged = merge(*found, key=lambda entry: int(entry.seq), reverse=newest_first)
     return list(islice(merged, limit))
 
@@ -149,6 +153,7 @@ def open_slices(connection: Reading, line_item: str) -> list[dict[str, Any]]:
     return found
 
 
+# Named one by one: a column that a later release adds must not change what is told.
 COLUMNS = {
     "decision": "number, at_ms, line_item, ref, request_id, source, floor, price, reason, set_by,"
     " snapshot, test",
@@ -174,12 +179,14 @@ def _bounds(wish: Logged) -> dict[str, object]:
     }
 
 
+# There are few combinations, and a statement that is the same object is compiled once.
 @functools.cache
 def _logged(table: str, of_all: bool, names: tuple[str, ...], newest_first: bool) -> TextClause:
     rows, order = _rows(table, of_all), _order(newest_first)
     if not names:
         return text(" ".join(("SELECT", COLUMNS[table], rows, order, "LIMIT :limit")))
     fits = " AND ".join(FILTERS[name] for name in names)
+    # Cut before it is filtered: a reason that never occurs must not read the whole log.
     looked_at = " ".join(("(SELECT", COLUMNS[table], rows, order, "LIMIT :look) looked_at"))
     words = ("SELECT", COLUMNS[table], "FROM", looked_at, "WHERE", fits, order, "LIMIT :limit")
     statement = " ".join(words)
@@ -194,6 +201,7 @@ def _last_seen(table: str, of_all: bool, newest_first: bool) -> TextClause:
 
 def _rows(table: str, of_all: bool) -> str:
     mine = "" if of_all else "line_item = :id AND"
+    # Pairs are compared as a whole, which both databases answer from the index by time.
     between = "(at_ms, number) > (:after_ms, :after) AND (at_ms, number) < (:before_ms, :before)"
     return " ".join(("FROM", table, "WHERE", mine, between))
 

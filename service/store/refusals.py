@@ -45,6 +45,7 @@ _COUNT = text(
     " ON CONFLICT (minute_ms, key_id, route, code) DO UPDATE"
     " SET count = refusal.count + excluded.count"
 )
+# Named as the key is now; a refusal itself keeps an id and no name.
 _PAGE = text(
     "SELECT r.number, r.minute_ms, r.key_id, k.name AS key_name, r.route, r.code, r.count"
     " FROM refusal r LEFT JOIN access_key k ON k.id = r.key_id"

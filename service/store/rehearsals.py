@@ -73,6 +73,7 @@ def end(
     error: str | None = None,
 ) -> None:
     """Close a rehearsal that is still open; one that is closed stays as it is."""
+    # A figure that is no number is no JSON; let it fail here and not at whoever reads it.
     told = None if result is None else json.dumps(result, allow_nan=False)
     row = {"number": number, "state": state, "now": wall_ms, "result": told, "error": error}
     connection.execute(_END, row)
@@ -90,6 +91,7 @@ def stop(connection: Writing, number: int, wall_ms: int) -> Row:
         " WHERE number = :number AND state = 'queued'"
     )
     playing = text("UPDATE rehearsal SET stopping = 1 WHERE number = :number AND state = 'running'")
+    # Both, whatever it was seen as: between a look and this it may have begun to play.
     connection.execute(waiting, {"number": number, "now": wall_ms})
     connection.execute(playing, {"number": number})
     return one(connection, number)
@@ -147,6 +149,7 @@ def lose(connection: Writing, wall_ms: int) -> int:
 
 def prune(connection: Writing, before_ms: int) -> int:
     """Forget rehearsals made before this wall clock moment; returns how many."""
+    # Never what is open, however old: its worker ends it, or it is lost with its worker.
     statement = text("DELETE FROM rehearsal WHERE created_ms < :before AND ended_ms IS NOT NULL")
     return connection.execute(statement, {"before": before_ms}).rowcount
 
@@ -179,6 +182,7 @@ _CREATE = text(
     "INSERT INTO rehearsal (name, actor, line_item, worker, total, asked, created_ms)"
     " VALUES (:name, :actor, :line_item, :worker, :total, :asked, :now) RETURNING number"
 )
+# Steps are told now and then only, so what is done says itself that it played them all.
 _END = text(
     "UPDATE rehearsal SET state = :state, ended_ms = :now, result = :result, error = :error,"
     " done = CASE WHEN :state = 'done' THEN total ELSE done END"

@@ -14,11 +14,13 @@ from sqlalchemy import text
 
 from service.store.database import Reading, Writing
 
+# Numbers that are kept in rows: in another order old buckets would change their width.
 MINUTES, HOURS, DAYS = 0, 1, 2
 COUNTS = (
     *("bids", "wins", "losses", "voids", "late", "paid", "spent", "words", "zeros"),
     *("parked", "unparked", "logs", "log_squares", "refused", "unfunded", "disputed", "halted"),
 )
+# Bounds of one statement; a night without a clerk is caught up page by page.
 ACTIVE_MAX = 200
 ENTRIES_MAX = 5000
 PRUNED_MAX = 5000
@@ -134,6 +136,7 @@ def buckets(
         phases: A moment from which every bucket is wanted, the length of a day and two places in
             it; of the buckets before that moment only those at these places are read.
     """
+    # Without phases every bucket lies behind the moment, so that the places never matter.
     every_ms, day_ms, *places = phases or (from_ms, 1, 0, 0)
     row = {"id": line_item, "width": width, "start": from_ms, "every": every_ms, "day": day_ms}
     found = connection.execute(_BUCKETS, row | {"one": places[0], "two": places[1]})
@@ -154,6 +157,7 @@ def _body(text_of: str) -> dict[str, Any]:
     return body if isinstance(body, dict) else {}
 
 
+# By keys alone and without the stream, since it runs every few seconds over all line items.
 _ACTIVE = text(
     "SELECT b.line_item, b.seq AS head, coalesce(m.seq, 0) AS seq, b.unfunded, b.disputed,"
     " l.halted, coalesce(m.unfunded, 0) AS unfunded_seen,"
@@ -181,6 +185,7 @@ _ADVANCE = text(
     "UPDATE tripwire_mark SET seq = :seq, looked_ms = :now, unfunded = :unfunded,"
     " disputed = :disputed, halted = :halted WHERE line_item = :id AND seq = :was"
 )
+# Only for a standing that was read without a mark: one that has counted must find its own.
 _BEGIN = text(
     "INSERT INTO tripwire_mark (line_item, seq, looked_ms, unfunded, disputed, halted)"
     " SELECT :id, :seq, :now, :unfunded, :disputed, :halted"
@@ -197,11 +202,13 @@ _BUCKETS = text(
     " WHERE line_item = :id AND width = :width AND start_ms >= :start"
     " AND (start_ms >= :every OR start_ms % :day IN (:one, :two)) ORDER BY start_ms"
 )
+# Selected from what we have, so that an id out of a forged ticket makes no row.
 _REFUSE = text(
     "INSERT INTO refused_outcomes (line_item, refusals)"
     " SELECT id, :n FROM line_item WHERE id = :id ON CONFLICT (line_item)"
     " DO UPDATE SET refusals = refused_outcomes.refusals + excluded.refusals"
 )
+# In pieces, since SQLite lets one writer in at a time and money waits meanwhile.
 _PRUNE = text(
     "DELETE FROM tripwire_bucket WHERE (line_item, width, start_ms) IN"
     " (SELECT line_item, width, start_ms FROM tripwire_bucket"

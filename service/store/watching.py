@@ -92,6 +92,7 @@ def overview(
         known: Configurations by id, as `configs` read them.
         only: The one line item that is wanted, instead of all.
     """
+    # The moment of the last beat, not of now: service time is only known together with it.
     clock = connection.execute(text("SELECT now_ms, seen_ms FROM service_clock")).one()
     wall_ms, service_ms = int(clock.seen_ms), int(clock.now_ms)
     days = _days(connection, wall_ms, only)
@@ -102,6 +103,7 @@ def overview(
     day_in = {zone: local_day(wall_ms, zone) for zone in _zones(known)}
     standings = []
     for row in _of(connection, _BALANCES, only):
+        # Made since the configurations were read; the next look knows it.
         if row.line_item not in known:
             continue
         config, created_ms = known[row.line_item]
@@ -194,6 +196,7 @@ def _days(
     connection: Reading, wall_ms: int, only: str | None
 ) -> dict[tuple[str, str], dict[str, int]]:
     """The rows of the days that it may be now in some zone."""
+    # From the first islands to the last it is at most three dates at once.
     around = [local_day(wall_ms + step * DAY_MS, "UTC") for step in (-1, 0, 1)]
     found = _of(connection, _DAYS, only, days=around)
     names = ("target", "spent", "held", "over_spent")
@@ -240,6 +243,7 @@ def _decided(rows: list[Any]) -> dict[str, Any]:
 
 
 def _most(rows: list[Any], name: str) -> str | None:
+    # By name where numbers are equal, or two databases would tell different reasons.
     top = max(rows, key=lambda row: (int(row.n), str(getattr(row, name))), default=None)
     return None if top is None else str(getattr(top, name))
 

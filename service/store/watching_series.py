@@ -11,6 +11,7 @@ from sqlalchemy import text
 from service.store import charting
 from service.store.database import Reading
 
+# What a chart can show row by row; beyond it nobody would see single rows anyway.
 ENTRIES_MAX = 10_000
 DECISIONS_MAX = 5000
 CHECKPOINTS_MAX = 16
@@ -51,8 +52,10 @@ def series(connection: Reading, line_item: str, from_ms: int, wall_ms: int, day:
     decided = list(connection.execute(_BIDS, {**wanted, "limit": DECISIONS_MAX}))
     spent = connection.execute(_DAY, {"id": line_item, "day": day}).scalar_one_or_none()
     delays = charting.delays(connection, line_item, from_ms, wall_ms + 1)
+    # A bound that is met may have cut something off, and a part must not look like the whole.
     if len(entries) == ENTRIES_MAX or len(decided) == DECISIONS_MAX:
         return _by_steps(connection, line_item, from_ms, wall_ms, delays, int(spent or 0))
+    # Read newest first, so that a bound cuts the oldest; drawn oldest first.
     entries.reverse()
     decided.reverse()
     wins = [(int(row.at_ms), price) for row in entries if (price := _price(row)) is not None]

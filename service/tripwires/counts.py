@@ -15,6 +15,7 @@ from operator import add, sub
 from typing import Any, NamedTuple
 
 RESULT = "result"
+# Far finer than values vary, and squares still add up in 64 bits for billions of values.
 LOG_UNITS = 1000
 
 
@@ -78,6 +79,7 @@ def minus(one: Counts, other: Counts) -> Counts:
 
 def counted(kind: str, slot: str | None, body: Mapping[str, Any], cost: int) -> Counts:
     """What one entry of the stream adds; a kind that no rule looks at adds nothing."""
+    # A bid is counted by its outcome or by a report, never by both; the entry says which.
     rounds, late = int(body.get("round") or 0), int(bool(body.get("late")))
     if kind == "won" and slot == RESULT:
         return Counts(rounds, wins=1, late=late, paid=int(body["price"]), spent=cost)
@@ -87,6 +89,7 @@ def counted(kind: str, slot: str | None, body: Mapping[str, Any], cost: int) -> 
         return Counts(rounds, voids=1, late=late)
     if kind in ("tick", "retire"):
         return Counts(int(body["rounds"]))
+    # A correction is no further value, and sizes are judged by what was said first.
     if kind == "value" and body.get("was") is None:
         return _word(int(body["amount"]), bool(body.get("parked")))
     if kind == "parked":

@@ -76,6 +76,7 @@ def past(facts: Facts, window_ms: int) -> Past | None:
     """What a window is held against; None while there is too little of it."""
     start = facts.start_ms(window_ms)
     days = facts.days
+    # Half a day has busy and quiet hours in it, so that only whole days are its like.
     if window_ms >= days.span_ms // 2:
         return _enough(_buckets(days, start - days.span_ms, DAYS_MAX), days.span_ms, STRETCHES_MIN)
     hours = facts.hours
@@ -104,6 +105,7 @@ def _same_hours(facts: Facts, start_ms: int, window_ms: int) -> list[Counts]:
     if not hours.starts:
         return []
     day_ms = HOURS_A_DAY * hours.span_ms
+    # The hour of the window's middle: at 14:05 an hour's window is nearly all of 13 o'clock.
     newest = hours.floor(facts.now_ms - min(window_ms, hours.span_ms) // 2)
     starts = [newest - number * day_ms for number in range(1, DAYS_MAX + 1)]
     last, first = start_ms - hours.span_ms, hours.starts[0]

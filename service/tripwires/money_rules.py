@@ -22,6 +22,7 @@ def clearing_price(facts: Facts, setup: Setup) -> Saw | None:
     now, before = facts.window(window_ms), past(facts, window_ms)
     if before is None or now.wins < least:
         return None
+    # A mean of each stretch, so that one busy hour weighs no more than a quiet one.
     usual = [one.paid / one.wins for one in before.stretches if one.wins > 0]
     price = now.paid / now.wins
     if not far_off(price, usual, setup.ratio or 1.0):
@@ -97,6 +98,7 @@ def far_off(seen: float, usual: Sequence[float], ratio: float) -> bool:
 
 def _since_ms(facts: Facts, name: str) -> int:
     """When it last grew, as far as buckets tell."""
+    # The finest that still shows it: minutes are forgotten first.
     for series in (facts.minutes, facts.hours, facts.days):
         grown = [
             start

@@ -76,6 +76,7 @@ def _moments(facts: Facts) -> list[int]:
     from_ms = minutes.starts[0] if minutes.starts else facts.now_ms
     before = [start + hours.span_ms - 1 for start in hours.starts]
     moments = [moment for moment in before if moment < from_ms]
+    # People wait for a preview, and few findings last for less than a stride.
     stride = 1 + len(minutes.starts) // MOMENTS_MAX
     return moments + [start + minutes.span_ms - 1 for start in minutes.starts[::stride]]
 
@@ -95,6 +96,7 @@ def _then(facts: Facts, moment: int) -> Facts:
 
 def _moved(facts: Facts, moment: int) -> Counts:
     series = facts.minutes
+    # Where minutes are gone, hours still hold what has moved since.
     if not series.starts or moment < series.starts[0]:
         series = facts.hours
     return series.between(moment + 1, facts.now_ms + 1)

@@ -50,10 +50,12 @@ def duration(milliseconds: int) -> str:
 
 def amount(nanos: float, currency: str) -> str:
     """An amount of money, cut to six decimals unless nothing would be left of it."""
+    # A few nanos are said to the last one, or a finding would speak of nothing.
     step = 1000 if abs(nanos) >= 1000 else 1
     return f"{nanos_text(round(nanos / step) * step)} {currency}"
 
 
 def chance(tail: float) -> str:
     """How unlikely it is, in words."""
+    # Below this a tail is the rounding of floats, and digits would promise too much.
     return f"1 in {1 / tail:,.0f}" if tail > 1e-12 else "less than 1 in 10^12"

@@ -21,6 +21,7 @@ def no_outcomes(facts: Facts, setup: Setup) -> Saw | None:
     if now.bids < least or now.results:
         return None
     before = past(facts, window_ms)
+    # Outcomes of an earlier stretch's bids would make shares above one.
     pairs = before.pairs(lambda c: min(c.results, c.bids), lambda c: c.bids) if before else []
     if not pairs and now.bids < NO_HISTORY_FACTOR * least:
         return None
@@ -60,6 +61,7 @@ def late_outcomes(facts: Facts, setup: Setup) -> Saw | None:
 
 def refused_outcomes(facts: Facts, setup: Setup) -> Saw | None:
     """More reports than usual were refused; none of them is kept."""
+    # By refusals alone: the outcomes beside them must not make a single one enough.
     if facts.window(setup.window_ms or 0).refused < (setup.count_min or 1):
         return None
     said = "reports were refused"

@@ -156,6 +156,7 @@ def _homeless(facts: Facts, setup: Setup) -> Saw | None:
     usual = sum(k for k, _ in pairs) / sum(n for _, n in pairs)
     waiting, heard = _waiting(now), _heard(now)
     tail = shares_tail((waiting, heard), pairs, upper=True)
+    # Half at least, however unlikely less is: values may run ahead of their wins for a while.
     if waiting < ratio * usual * heard or 2 * waiting < heard or tail > (setup.alpha or 0.0):
         return None
     return Saw(
