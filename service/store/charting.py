@@ -163,6 +163,15 @@ def prune(connection: Writing, before_ms: int) -> int:
     return sum(connection.execute(_PRUNE, row).rowcount for row in rows)
 
 
+def readable(told: str) -> dict[str, Any]:
+    """The body of an entry; a damaged one is empty: the audit will find it, not a chart."""
+    try:
+        body = bodies.parsed(told)
+    except ValueError:
+        return {}
+    return body if isinstance(body, dict) else {}
+
+
 def _roll(database: Database, line_item: str, was: int, entries_max: int) -> int:
     wanted = {"id": line_item, "was": was, "limit": entries_max}
     # Read outside of the write, for parsing is slow and SQLite lets one writer in at a time.
@@ -186,7 +195,7 @@ def _of_entries(line_item: str, rows: Iterable[Any]) -> dict[Key, tuple[int, int
         if cost:
             _count(counted, (*place, "cost", ""), 1, -cost if kind == REFUNDED else cost)
         if kind in ("won", "value"):
-            _count_said(counted, place, kind, service_ms, _body(body))
+            _count_said(counted, place, kind, service_ms, readable(body))
         elif kind in OUTCOMES:
             _count(counted, (*place, kind, ""))
     return counted
@@ -259,15 +268,6 @@ def _step_ms(span_ms: int, buckets_max: int) -> int:
     least = max(1, span_ms) / max(1, buckets_max - 1)
     days = math.ceil(least / STEPS_MS[-1])
     return next((step for step in STEPS_MS if step >= least), days * STEPS_MS[-1])
-
-
-def _body(told: str) -> dict[str, Any]:
-    """The body of an entry; a damaged one is empty: the audit will find it, not a chart."""
-    try:
-        body = bodies.parsed(told)
-    except ValueError:
-        return {}
-    return body if isinstance(body, dict) else {}
 
 
 _CHART = text(

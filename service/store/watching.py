@@ -10,6 +10,7 @@ from typing import Any
 from sqlalchemy import text
 
 from service.ledger.days import local_day
+from service.store.charting import readable
 from service.store.database import Reading, among
 from service.store.freezes import on
 
@@ -174,7 +175,7 @@ def entries(connection: Reading, line_item: str, limit: int) -> list[dict[str, A
         ),
         {"id": line_item, "n": limit},
     )
-    return [{**row._mapping, "body": json.loads(row.body)} for row in rows]
+    return [{**row._mapping, "body": readable(row.body)} for row in rows]
 
 
 def _of(connection: Reading, statement: str, only: str | None, **values: Any) -> Any:

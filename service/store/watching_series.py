@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from dataclasses import dataclass
 from typing import Any
 
@@ -114,7 +113,7 @@ def moments(connection: Reading, line_item: str, seqs: list[int]) -> list[int]:
 def _price(row: Any) -> int | None:
     if row.kind != "won":
         return None
-    price = json.loads(row.body).get("price")
+    price = charting.readable(row.body).get("price")
     return price if isinstance(price, int) else None
 
 

@@ -8,7 +8,7 @@ from typing import Any
 import pytest
 from sqlalchemy import text
 
-from service.store import decisions, freezes, watching
+from service.store import decisions, freezes, watching, watching_series
 from service.store.database import Database
 from service.store.watching import Latest, Overview
 from tests.builders import NAME, append, begin, line_item, valued, won
@@ -154,3 +154,17 @@ def test_line_items_do_not_tell_of_each_other(database: Database) -> None:
     assert (set(found["a"].feed), found["a"].bids) == ({"won", "value"}, 0)
     assert (found["b"].feed, found["b"].bids, found["b"].bids_at_cap) == ({}, 1, 1)
     assert found["b"].feed_since_ms is not None
+
+
+@pytest.mark.parametrize("damaged", ["{", "[1]", "7"])
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
+def test_a_damaged_entry_blinds_nobody(database: Database, damaged: str) -> None:
+    """The page is wanted most when something is wrong; the audit names the entry."""
+    begin(database)
+    append(database, won(1, 600), won(2, 700))
+    spoil = text("UPDATE stream SET body = :body WHERE seq = 2")
+    database.write(lambda c: c.execute(spoil, {"body": damaged}))
+    rows = database.read(lambda c: watching.entries(c, NAME, 5))
+    assert [bool(row["body"]) for row in rows] == [True, False, True]
+    found = database.read(lambda c: watching_series.series(c, NAME, 0, NOW_MS, "2025-12-01"))
+    assert [price for _, price in found.clearing] == [700]
