@@ -246,7 +246,9 @@ def facts_of(
         # Too young for hours to be held against: the windows just before have to do.
         back += (STRETCHES_MAX + 1) * max([one for one in short if one < hour] or [0])
     minutes = tripwires.buckets(connection, name, MINUTES, now - back)
-    days = tripwires.buckets(connection, name, DAYS, now - (DAYS_MAX + 2) * day)
+    # Behind the longest window, and one more than is looked at, for the first is left out.
+    oldest = now - (DAYS_MAX + 2) * day - max([0, *windows])
+    days = tripwires.buckets(connection, name, DAYS, oldest)
     return _facts(config, widths, now, gauges, (minutes, hours, days))
 
 

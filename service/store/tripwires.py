@@ -134,7 +134,7 @@ def buckets(
 
     Args:
         phases: A moment from which every bucket is wanted, the length of a day and two places in
-            it; of the buckets before that moment only those at these places are read.
+            it; of the buckets before it only those at these places are read, and the first.
     """
     # Without phases every bucket lies behind the moment, so that the places never matter.
     every_ms, day_ms, *places = phases or (from_ms, 1, 0, 0)
@@ -200,7 +200,10 @@ _ADD = text(
 _BUCKETS = text(
     f"SELECT start_ms, {', '.join(COUNTS)} FROM tripwire_bucket"  # noqa: S608
     " WHERE line_item = :id AND width = :width AND start_ms >= :start"
-    " AND (start_ms >= :every OR start_ms % :day IN (:one, :two)) ORDER BY start_ms"
+    " AND (start_ms >= :every OR start_ms % :day IN (:one, :two)"
+    # The first, which may be a part of one, or another would be taken for it and left out.
+    " OR start_ms = (SELECT min(start_ms) FROM tripwire_bucket WHERE line_item = :id"
+    " AND width = :width AND start_ms >= :start)) ORDER BY start_ms"
 )
 # Selected from what we have, so that an id out of a forged ticket makes no row.
 _REFUSE = text(

@@ -159,13 +159,13 @@ def test_entries_come_in_pages_and_damage_is_empty(
 
 
 def test_only_the_hours_that_rules_look_at_are_read(database: Database) -> None:
-    """All from a moment on, and before it those at two places of each day."""
+    """All from a moment on, and before it those at two places of each day and the first of all."""
     day, at = 240, range(0, 960, 10)
     sums = {(HOURS, start): Counts(bids=1) for start in at}
     advance(database, standing(database), 1, sums)
     found = database.read(lambda c: tripwires.buckets(c, NAME, HOURS, 100, (900, day, 30, 200)))
     assert [start for start, _ in found] == [
-        200, 270, 440, 510, 680, 750, *range(900, 960, 10)
+        100, 200, 270, 440, 510, 680, 750, *range(900, 960, 10)
     ]  # fmt: skip
     assert buckets(database, HOURS, 900) == list(range(900, 960, 10))
 
