@@ -110,3 +110,16 @@ async def test_a_line_of_no_request_has_no_id(lines: list[dict[str, str]]) -> No
     logging.getLogger("service.clerk").warning("a duty")
     (line,) = [line for line in lines if line["message"] == "a duty"]
     assert "request_id" not in line
+
+
+@pytest.mark.parametrize(
+    ("offered", "taken"),
+    [("a", True), ("A.b_c:d-9", True), ("x" * 64, True), ("x" * 65, False), ("", False),
+     (None, False), ("a\n", False), ("a b", False), ("\u0661", False)],
+)  # fmt: skip
+def test_an_id_is_taken_only_when_no_line_could_break(offered: str | None, taken: bool) -> None:
+    """Letters, digits and four signs, at most 64; digits of other scripts are no digits."""
+    name = request_ids.begin(offered)
+    assert (name == offered) is taken
+    assert taken or MADE.fullmatch(name)
+    assert request_ids.current() == name

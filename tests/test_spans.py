@@ -125,3 +125,38 @@ except Unsafe as error:
     sys.exit(0 if "the extra traces" in str(error) else 2)
 """
     assert subprocess.run([sys.executable, "-c", program]).returncode == 0
+
+
+def recording() -> tuple[InMemorySpanExporter, TracerProvider]:
+    """Spans that a test can look at."""
+    exporter, provider = InMemorySpanExporter(), TracerProvider()
+    provider.add_span_processor(SimpleSpanProcessor(exporter))
+    return exporter, provider
+
+
+def test_the_innermost_tracer_makes_the_spans() -> None:
+    """And when its block is left by an error, the one before makes them again."""
+    outer, inner = recording(), recording()
+    with spans.tracing(outer[1].get_tracer("outer")):
+        with pytest.raises(ValueError, match="ours"), spans.tracing(inner[1].get_tracer("inner")):
+            with spans.span("bid"):
+                raise ValueError("ours")
+        with spans.span("lease"):
+            pass
+    names = [
+        [span.name for span in exporter.get_finished_spans()] for exporter, _ in (inner, outer)
+    ]
+    assert names == [["bidkeel.bid"], ["bidkeel.lease"]]
+    with spans.span("bid") as nothing:
+        assert nothing is None
+
+
+def test_what_is_not_known_is_not_said_of_a_span() -> None:
+    """None is left out; nought and false are said."""
+    exporter, provider = recording()
+    with spans.tracing(provider.get_tracer("tests")), spans.span("bid") as span:
+        spans.note(span, reason=None, rows=0, test=False, method="flat")
+    (seen,) = exporter.get_finished_spans()
+    assert dict(seen.attributes or {}) == {
+        "bidkeel.rows": 0, "bidkeel.test": False, "bidkeel.method": "flat"
+    }  # fmt: skip
