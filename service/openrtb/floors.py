@@ -100,10 +100,13 @@ def _price(found: object) -> int:
 
 def _decimal(found: object) -> Decimal:
     if isinstance(found, Decimal):
+        # What is no number cannot even be compared, so it must not get as far as a limit.
+        if not found.is_finite():
+            raise BadFloor("not a number")
         return found
     if isinstance(found, bool) or not isinstance(found, int | float):
         raise BadFloor("not a number")
     # The shortest text that means this float is what the seller wrote.
-    if abs(found) > 2**62:
+    if not abs(found) <= 2**62:  # Said so that NaN, too, is out of range.
         raise BadFloor("out of range")
     return Decimal(repr(found))
