@@ -73,6 +73,7 @@ def decision(
         "price": answer.bid,
         "reason": answer.reason,
         "set_by": answer.set_by,
+        # A pass before any snapshot was read comes from none; the column takes no null.
         "snapshot": answer.snapshot or 0,
         "test": int(opportunity.test),
     }

@@ -19,6 +19,7 @@ from service.judging import planned_at
 from service.learner.profile import day_of
 from service.store.watching_series import Series
 
+# About half an hour each over a whole day: finer steps only show the noise of single bids.
 BUCKETS = 48
 ROWS_MAX = 12
 CPM = 10**6
@@ -175,6 +176,7 @@ def wins(config: Mapping[str, Any], curve: Mapping[str, Any]) -> Chart:
     if not sources:
         return Chart("wins", title, "No auction has told anything yet.", columns, (), {})
     most = max(sources, key=lambda source: float(source["auctions"]))
+    # A price of which nothing is known would be drawn as a chance of nought.
     told = [row for row in most["prices"] if row["win_probability"]["estimate"] is not None]
     price = [row["price_cpm_nanos"] / CPM for row in told]
     chance, low, high = (
@@ -206,6 +208,7 @@ def delays(series: Series) -> Chart:
     names = [f"{_span(low)} to {_span(high)}" for low, high, _ in told]
     counts = [count for _, _, count in told]
     trace = {"type": "bar", "x": names, "y": counts, "name": "values", "meta": "accent"}
+    # Doublings tell a median only to its bin, so the bin's end is named.
     place = int(np.searchsorted(np.cumsum(counts), total / 2))
     says = f"{total:,} first values in the last day, half of them within {_span(told[place][1])}."
     rows = [(name, f"{count:,}") for name, count in zip(names, counts, strict=True) if count]

@@ -126,6 +126,7 @@ def _judged(one: Standing, overview: Overview, today: tuple[int, int]) -> Judged
     spent = one.day["spent"] + one.day["over_spent"] if one.day else 0
     starts_ms, day_ends_ms = today
     began_ms = min(max(starts_ms, one.created_ms, config["flight"]["starts_ms"]), wall_ms)
+    # In its first minute a line item has no speed yet, only a first price.
     speed = spent * HOUR_MS // max(wall_ms - began_ms, 60_000)
     left = _left(one, daily, spent)
     bids = status == "bids"
@@ -154,6 +155,7 @@ def _status(one: Standing, sources: set[str], wall_ms: int) -> str:
         ("resting", wall_ms < flight["starts_ms"] or over),
         ("spent", one.balance["spent"] + one.balance["held"] >= one.balance["target"]),
     )
+    # The gravest of several is said, in the order of the cases.
     return next((name for name, holds in cases if holds), "bids")
 
 
@@ -186,6 +188,7 @@ def _quiet(one: Standing, overview: Overview, status: str) -> tuple[str, ...]:
 
 def _left(one: Standing, daily: int | None, spent: int) -> int:
     """Money that may still go out today."""
+    # A budget may have been lowered below what is spent; that is no money owed to us.
     free = max(0, one.balance["target"] - one.balance["spent"])
     return free if daily is None else max(0, min(free, daily - spent))
 

@@ -72,6 +72,7 @@ class Sums:
         if self.first_ms is None:
             self.first_ms = row.at_ms
         self.last_ms = row.at_ms
+        # Money stays spent whatever is taken back; it is told, not returned.
         self.cost += row.cost
         if row.kind == "value":
             body = said(row.body)
@@ -254,6 +255,7 @@ def _summed(
     goes_on: GoesOn,
     parts_of: Callable[[Any], Iterable[str]],
 ) -> Sums:
+    # Page by page, so that a long stream neither fills memory nor outlasts the caller.
     sums = Sums()
     for first, last in runs:
         seq = first - 1

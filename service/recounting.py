@@ -75,6 +75,7 @@ def lesson_row(
         left: What is left of its body where something was cancelled; None: it teaches no more.
         ceiling: The largest value of one event that is taught, in nanos.
     """
+    # Kinds of later releases teach this one nothing, and must not break a page.
     parts = PARTS.get(row.kind, frozenset())
     rest = cancelled.leaves(row.seq, row.kind) if left is not None else frozenset[str]()
     told = entry_row(row)
@@ -175,6 +176,7 @@ def _held(kind: str, slot: str | None, body: Mapping[str, Any]) -> int | None:
         return -_whole(body, "freed")
     if kind == "close":
         return -_whole(body, "released") - _whole(body, "unbilled")
+    # What these free hangs on the entry they follow, which is not in the row.
     if kind == "billed" or slot == "void":
         return None
     if kind in ("won", "lost", "void") and not body.get("late"):
@@ -210,4 +212,5 @@ def _taught(
 
 def _whole(body: Mapping[str, Any], name: str) -> int:
     value = body.get(name)
+    # A damaged body is the audit's to report; a page still has to be shown.
     return value if isinstance(value, int) else 0

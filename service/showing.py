@@ -54,6 +54,7 @@ def show_curve(facts: Facts) -> dict[str, Any]:
 
 def _status(sources: set[str]) -> str:
     """In one word: what it waits for, if it may not bid."""
+    # Closed is for good, so no other reason matters any more.
     if "closed" in sources:
         return "closed"
     if "restore" in sources:
@@ -73,6 +74,7 @@ def _bid(facts: Facts, learnt: dict[str, Any]) -> dict[str, Any]:
     cleared = clear(learnt["bid_nanos"], learnt["set_by"], limits, 0, limits.cap)
     if isinstance(cleared, str):
         return said | none | {"pass": cleared}
+    # Fees alone may be more than the price; what leaves is never below nothing.
     net = max(0, limits.fees.net(cleared.price))
     return said | {"price_cpm_nanos": net, "set_by": cleared.set_by, "pass": None}
 
@@ -102,6 +104,7 @@ def _money(facts: Facts) -> dict[str, Any]:
         "target_nanos": balance["target"],
         "spent_nanos": balance["spent"],
         "held_nanos": balance["held"],
+        # A target lowered below what is spent leaves nothing free, not less than nothing.
         "free_nanos": max(0, balance["target"] - balance["spent"] - balance["held"]),
         "unfunded_nanos": balance["unfunded"],
         "disputed_nanos": balance["disputed"],

@@ -29,6 +29,7 @@ from service.rehearsal.lesson_stream import LEARNERS, Stream
 LESSONS, QUICK_LESSONS = 20_000, 2000
 REPEATS = 7
 CALLS, QUICK_CALLS = 20_000, 1000
+# Any key will do: hashing costs the same under each.
 FEATURE_KEY = b"bench"
 PROFILED_LINES = 25
 TIMED = sorted(name for name, method in METHODS.items() if method.learns)
@@ -73,6 +74,7 @@ def learnt(method: str, lessons: int, seed: int) -> Ready:
     learner = LEARNERS[method]
     stream, memory = Stream(learner.rules, seed), Memory.fresh()
     folded = 0
+    # By what it has learnt so far, as a worker's next batch is.
     while folded < lessons:
         batch = stream.batch(memory)
         memory = fold(memory, batch, learner.rules)
@@ -129,6 +131,7 @@ def _show(found: dict[str, list[float]], arguments: argparse.Namespace) -> None:
         return
     rows = {
         name: (
+            # The least is what the code costs; whatever is above it is the machine's.
             f"{1e6 * min(took):.2f}",
             f"{1e6 * statistics.median(took):.2f}",
             f"{1e6 * max(took):.2f}",

@@ -15,6 +15,7 @@ from service.rehearsal.processes import spread
 
 PER_DAY, RUNS = 50_000, 12
 QUICK_PER_DAY, QUICK_RUNS = 50_000 // DAYS, 4
+# Asked of corrected counting only; closed windows alone are held to no share.
 SHARE_MIN = 0.85
 CORRECTED = (KNOWN_LAW, FITTED)
 NOTES = (
@@ -64,6 +65,7 @@ def play_all(
     todo: list[Job], processes: int, advance: Callable[[], object]
 ) -> dict[str, list[int]]:
     """The surplus of each way on each fortnight, in nanos, in the order of the seeds."""
+    # Processes end in any order, and ways are compared fortnight by fortnight.
     earned: dict[str, dict[int, int]] = {way: {} for way in WAYS}
     for job, surplus in spread(late.played, todo, processes):
         earned[job.way][job.seed] = surplus

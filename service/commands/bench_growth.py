@@ -25,6 +25,7 @@ from service.store import decisions
 from service.store.database import Database
 
 CONNECTIONS, CROWD = 16, 32
+# Few enough for one statement, many enough that its overhead does not count.
 LOGGED_AT_ONCE = 10_000
 FRESH_S_MAX = 20.0
 POLL_S = 0.005
@@ -78,10 +79,12 @@ async def _grown(server: ServerProcess, arguments: argparse.Namespace) -> list[F
         def step(text: str) -> None:
             bar.update(task, advance=1, description=text)
 
+        # One line item first, so that the same server is its own measure of before.
         await _create(server, names[:1])
         alone = await _paced(server, names[:1], arguments)
         step("Line items")
         await _create(server, names[1:])
+        # Before anybody asked for them, as a worker reads a line item only when it is asked.
         idle_kib = _memory_kib(server)
         await _asked_once(server, names)
         known_kib = (_memory_kib(server) - idle_kib) / len(names)
@@ -114,6 +117,7 @@ def _findings(
         first, last = (seen.wait_ms(0.5) for seen in pair)
         return Finding(f"{name}, bid p50 (ms)", last, first, 1.2, last <= 1.2 * first)
 
+    # A price that moves late costs money, so the slow ones count and not the mean.
     late_ms = 1000.0 * sorted(fresh)[int(0.99 * len(fresh))]
     return [
         flat(f"1 to {arguments.line_items:,} line items", items),
@@ -172,6 +176,7 @@ async def _freshness(
     server: ServerProcess, names: Sequence[str], arguments: argparse.Namespace
 ) -> list[float]:
     """Seconds from each receipt until the line item bids from a newer snapshot, under load."""
+    # Under load, for an idle worker publishes sooner than a busy one.
     stop, waits = asyncio.Event(), list[float]()
     traffic = asyncio.create_task(_background(server, names, arguments.rate, stop))
     async with server.wire() as wire:

@@ -10,6 +10,7 @@ from service.commands.load import post
 
 BATCH_ROWS = 100
 PATIENT_MS = 5000
+# Counted as bytes, since to parse each answer would slow the load it measures.
 PASSED = b'"ticket":null'
 FEATURES: dict[str, str | float | bool] = {
     "device": "phone",
@@ -22,6 +23,7 @@ FEATURES: dict[str, str | float | bool] = {
 
 def line_item(name: str, method: str, **others: Any) -> dict[str, Any]:
     """A line item of an invented garden that has money for every bid of a bench."""
+    # Any other method would refuse a setting that it does not take.
     dimensions = {"dimensions": 32} if method == "linear" else {}
     return {
         "id": name,
@@ -77,4 +79,5 @@ def tickets_of(answers: Iterable[bytes]) -> list[str]:
 
 
 def _written(members: Mapping[str, Any]) -> bytes:
+    # Without blanks, as programs write it.
     return json.dumps(members, separators=(",", ":")).encode()

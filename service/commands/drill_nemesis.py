@@ -144,6 +144,7 @@ class Nemesis:
 
     async def _kill(self) -> None:
         self.note_fallen()
+        # One that is paused is left until it goes on: to be stopped is a fault of its own.
         ready = [s for s in self.fleet.up() if s.port not in self._paused]
         if not ready:
             return
@@ -183,6 +184,7 @@ class Nemesis:
         self._paused.discard(server.port)
 
     async def _restart(self, postgresql: PostgreSQLProcess) -> None:
+        # By turns and not by lot, so that the shortest drill has seen all three.
         ways: Sequence[str] = ("fast", "immediate", "kill -9")
         way = ways[self.done["restart"] % len(ways)]
         if way == "kill -9":

@@ -49,9 +49,11 @@ class Pager:
 
     def take(self, identity: str, stamp: str, said: str, body: bytes) -> bool:
         """Keep news whose proof is sound."""
+        # In constant time, or the answer's delay would tell how much of a proof was right.
         if not hmac.compare_digest(proof(self._secret, stamp, body), said):
             self.unsound += 1
             return False
+        # Senders try again when an answer is lost; the same news must not page twice.
         self._heard.setdefault(identity, json.loads(body))
         return True
 

@@ -55,8 +55,10 @@ class Read:
 
     def fault(self) -> str | None:
         """Which promise this read breaks, if any."""
+        # The promise to the advertiser comes first: nothing beyond the budget, even held.
         if self.spent + self.held > self.budget:
             return f"V1: spent {self.spent} + held {self.held} > budget {self.budget}"
+        # Calls run on during a look, so the books are held against both ends of it.
         if self.cost < self.acknowledged_before:
             return f"lost: {self.cost} booked, {self.acknowledged_before} was acknowledged"
         if self.cost > self.charged_after:
@@ -90,6 +92,7 @@ class History:
         """Take note of a receipt; one that settles nothing is a fault."""
         if status not in SETTLED:
             self.faults.append(f"an outcome was {status}: {code}")
+        # A repeat is answered again, and must not be counted twice.
         elif row.acknowledged_s is None:
             row.acknowledged_s = time.monotonic()
             self.acknowledged[row.line_item] += row.price

@@ -169,6 +169,7 @@ class _Rolling:
         history, left = traffic.history, held(self._database)
         violations = judge(history, self._database, GRACE_S)
         bids = {name: n for name, n in history.calls.items() if name.startswith("bid ")}
+        # A pass is an answer too; only a call without one has failed.
         failed = sum(bids.values()) - bids.get(f"bid {OK}", 0)
         lost = [row for row in history.sent if row.acknowledged_s is None]
         lost_count = len(lost) + sum(fault.startswith("lost:") for fault in violations)

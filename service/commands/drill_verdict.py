@@ -41,6 +41,7 @@ def recovery_s(back_s: Sequence[float], answers_s: list[float]) -> list[float]:
 
 
 def _of_outcomes(history: History, booked: Counter[Slot]) -> list[str]:
+    # By place in the stream, as one bid may have a result and many values.
     sent = {(bid_of(row.ref), row.slot): row for row in history.sent}
     lost = [r for slot, r in sent.items() if r.acknowledged_s is not None and booked[slot] != 1]
     often = [row for slot, row in sent.items() if booked[slot] > 1]
@@ -62,6 +63,7 @@ def _of_money(history: History, balances: dict[str, dict[str, int]], grace_s: fl
         )
         if cost != charged:
             faults.append(f"{name}: the exchange charged {charged}, we booked {cost}")
+        # After grace a slice may be closed, and a win that comes then has no money waiting.
         if books["unfunded"] and history.delay_s_max < grace_s:
             faults.append(f"{name}: {books['unfunded']} is unfunded though nothing was late")
         if books["held"]:

@@ -21,6 +21,7 @@ from service.commands import bodies, pinning
 from service.commands.load import Load, Seen
 from service.commands.server_process import HOST, ServerFailed, ServerProcess, free_port, inherited
 
+# Enough that neither server waits for the load, few enough to share one processor.
 CONNECTIONS = 16
 SERVING, ASKING = 0, 1
 _BARE_S_MAX = 20.0
@@ -156,6 +157,7 @@ class Pair:
         """So many tickets of bids that left."""
         load, found = Load(HOST, self.server.port, keep=True), list[str]()
         await load.connect(4)
+        # A batch may hold passes, so it is asked on until there are enough.
         while len(found) < count:
             calls = [bodies.batch(self.server.key, name)] * max(
                 1, (count - len(found)) // bodies.BATCH_ROWS
@@ -187,6 +189,7 @@ class Pair:
         # Opened anew: a server closes what lay idle while the other side had its turn.
         load = Load(HOST, port, bodies.PASSED)
         await load.connect(CONNECTIONS)
+        # Read before and after, so that only this round's processor time counts.
         began_s = pinning.processor_s(pid)
         with pinning.on(ASKING):
             seen = await (load.open_loop(requests, rate) if rate else load.closed_loop(requests))

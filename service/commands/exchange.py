@@ -136,6 +136,7 @@ class Exchange:
             return []
         bid = money.price(answer["bid_cpm"])
         book.bid_max = max(book.bid_max, bid)
+        # The rule of ties is the seller's; losing them is the careful guess.
         if bid <= auction.rival:
             book.losses += 1
             return [Row(auction.line_item, {"ticket": answer["ticket"], "kind": "lost"})]
@@ -148,6 +149,7 @@ class Exchange:
             return
         answer = await self._post("/v1/outcomes", {"outcomes": [row.body for row in rows]})
         results = answer["results"]
+        # Results have no names of their own, so a missing one would shift all after it.
         if not isinstance(results, list) or len(results) != len(rows):
             raise Unanswered("The service did not answer every outcome.")
         for row, result in zip(rows, results, strict=True):

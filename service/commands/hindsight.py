@@ -40,6 +40,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(arguments: argparse.Namespace) -> int:
     """Exit code 0 when the log could be read, whatever it says."""
     names = HindsightForm.model_fields
+    # The form of the API judges them, so both refuse in the same words.
     given = {name: getattr(arguments, name) for name in names}
     form = read(HindsightForm, {name: one for name, one in given.items() if one is not None})
     with ExitStack() as stack:
@@ -94,6 +95,7 @@ def _words(found: Mapping[str, Any], log: str) -> list[str]:
     cut = ["The log was cut at its limit of lines."] if found["log_is_cut"] else []
     return [
         f"Without a model: {found['without_model']['says']}.",
+        # Lines often share an assumption; each is said once, in order.
         *dict.fromkeys(said),
         f"Budget: {found['budget']['says']}.",
         f"Log: {log}. Left out: {found['left_out']}.",

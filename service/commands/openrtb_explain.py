@@ -25,6 +25,7 @@ def run(arguments: argparse.Namespace) -> int:
     """Exit code 0 when the request would be priced, 3 when nobody would be asked."""
     sources = mapping.load(arguments.mapping)
     name = arguments.source or next(iter(sources))
+    # To guess one of several would explain a request by the wrong exchange's rules.
     if name not in sources or (arguments.source is None and len(sources) > 1):
         raise Malformed("no_such_source", f"Name one source of {', '.join(sorted(sources))}.")
     told = explain(name, sources[name], _read(arguments.request))

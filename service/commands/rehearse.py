@@ -121,6 +121,7 @@ def _replayed(wish: Mapping[str, Any], path: Path, auction: str) -> dict[str, An
             first_ms, last_ms = (row.at_ms if count == 1 else first_ms), row.at_ms
     if not count:
         raise BadRequest("The file has no row that can be read." + _first_fault(told))
+    # The order is checked as for a drawn market, and then given the file's.
     order = dict(_order({**wish, "market": {**wish["market"], "kind": "iid"}}))
     market = {**order["market"], "kind": "csv", "values": RECORDED, "auction": auction}
     order["market"] = {**market, "span_ms": max(last_ms - first_ms + 1, 1)}
@@ -172,6 +173,7 @@ def _policy(text: str) -> dict[str, object]:
     for setting in filter(None, settings.split(",")):
         name, _, number = setting.partition("=")
         try:
+            # By the parser of the API, so that a number means the same in both places.
             policy[name] = parse_object(f'{{"it": {number}}}'.encode())["it"]
         except Refusal:
             raise BadRequest(f"{setting} is no SETTING=NUMBER") from None
@@ -223,6 +225,7 @@ def _counted(name: str) -> Callable[[Mapping[str, Any]], str]:
 def _count(figure: Mapping[str, Any] | None) -> str:
     if figure is None:
         return "none"
+    # One seed has no error; a nought would claim certainty.
     error = "" if figure["error"] is None else f" ± {figure['error']:,.1f}"
     return f"{figure['mean']:,.1f}{error}" if error else f"{figure['mean']:,.0f}"
 

@@ -26,6 +26,7 @@ def progress() -> Progress:
 
 def table(title: str, heads: Sequence[str], rows: Mapping[str, Sequence[str]]) -> Table:
     """One row per quantity, its unit in its name; one column per thing compared."""
+    # Narrow, so that a table of many columns still fits a terminal of eighty.
     grid = Table(title=title, title_justify="left", box=box.SIMPLE_HEAD, padding=(0, 1, 0, 0))
     grid.add_column("", no_wrap=True)
     for head in heads:

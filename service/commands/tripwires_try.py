@@ -30,6 +30,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(arguments: argparse.Namespace) -> int:
     """Exit code 0 when nothing would have frozen, 3 when something would; changes nothing."""
     settings = load()
+    # Before the database is opened, as most mistakes are in what was typed.
     candidate = read_candidate({"tripwires": _setting(arguments.setting)})
     database = open_database(settings)
     try:

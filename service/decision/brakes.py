@@ -112,6 +112,7 @@ def brakes_of(memory: Memory, counts: Counts, terms: Terms) -> Brakes:
     Raises:
         UnreadableMemory: A part is damaged, or of another target: a refold is on its way.
     """
+    # A part that was kept from before pacing was turned off must not go on pressing.
     mu = multiplier_of(memory) if terms.paced else 0
     target = terms.returning
     if target is None:
@@ -141,4 +142,5 @@ def _strict(tally: Tally, counts: Counts, terms: Terms, target: return_target.Ru
     slack = target.worth(tally.wins * mean) - tally.paid
     if slack < 0:
         mean, slack = mean // EARNS_BACK, 0
+    # The wish is boundless here, so that what comes back is the limit alone.
     return return_target.strict_bid(2**62, mean, slack // OPEN_BIDS, 0, target)

@@ -72,6 +72,7 @@ class Counts:
 
     def mean_share(self, terms: Terms) -> Numbers:
         """Mean of the known values as a share of the scale; 0 while none is known."""
+        # With part of one impression known, its value must not count many times over.
         share = self.amount / (np.maximum(self.known, 1.0) * terms.scale)
         return np.asarray(np.minimum(share, 1.0), dtype=np.float64)
 
@@ -101,6 +102,7 @@ def delay_mean_ms(memory: Memory, terms: Terms) -> float:
 def waiting(memory: Memory, terms: Terms) -> delay.Seen:
     """The delays that were timed, and the ages in milliseconds of what has brought nothing."""
     ages = np.append(np.minimum(_ages_ms(memory), terms.window_ms), terms.window_ms)
+    # Only what has brought nothing is still waited for.
     counts = [max(cell.bought - cell.converted, 0) for cell in memory.cells]
     old = max(memory.base.known - memory.base.converted, 0)
     return delay.seen(memory.delays, memory.delay_sum_ms, ages, [*counts, old])

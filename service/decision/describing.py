@@ -89,6 +89,7 @@ def describe(ready: Ready) -> dict[str, object]:
 def mean_interval(counts: Counts, terms: Terms) -> tuple[float, float, str]:
     """Limits of the mean value in nanos and what they are; 0 to the ceiling before the first."""
     known, converted = float(counts.known), float(counts.converted)
+    # An interval for shares is wide where single values dwarf the mean; counts are not.
     if terms.ceiling <= RARE_FROM * terms.cap:
         hits = min(float(counts.amount) / terms.scale, known)
         low, high = count_sequences.bernoulli_interval(hits, known, RISK, NARROWEST)
@@ -167,6 +168,7 @@ def _costs(ready: Ready, total: Tally) -> dict[str, object]:
 
 def _win_rate(total: Tally) -> dict[str, object]:
     rounds = max(total.rounds, total.wins, 0)
+    # Corrections may leave a sum of part of a stream below nothing.
     low, high = count_sequences.bernoulli_interval(max(total.wins, 0), rounds, RISK, NARROWEST)
     return {
         "share": total.wins / rounds if rounds else None,
@@ -185,6 +187,7 @@ def _delay(ready: Ready) -> dict[str, object] | None:
         words = DELAY_KNOWN
     else:
         data = waiting(memory, terms)
+        # One delay alone says too little of a mean to call it fitted.
         found = memory.delays > 1 and bool(delay.identified(data))
         words = DELAY_FITTED if found else DELAY_UNKNOWN
     return {"mean_s": round(delay_mean_ms(memory, terms) / 1000.0, 3), "says": words}

@@ -53,6 +53,7 @@ def _feedback(
     config: Mapping[str, Any], told: Sequence[tuple[str, Mapping[str, Any]]]
 ) -> dict[str, Any]:
     losses = [body for kind, body in told if kind == "lost"]
+    # Told is not the same as nought: a competing bid of 0 is news as well.
     priced = sum(body.get("to_win") is not None for body in losses)
     enough = len(losses) >= LOSSES_FEW
     return {
@@ -86,8 +87,10 @@ def _method(
     method: Method, config: Mapping[str, Any], feedback: Mapping[str, Any]
 ) -> dict[str, Any]:
     losses = _losses(config, feedback)
+    # Asked as a change of method would be, so that evidence and refusal never differ.
     wished = {**config, "policy": _policy(method, config), "losses": losses}
     against = objection(wished, None)
+    # What only costs money can be confirmed, so it is a reason and no misfit.
     refused = against is not None and against.code != "learning_cost"
     return {
         "method": method.name,
@@ -140,6 +143,7 @@ def _cost(method: Method, terms: Terms) -> dict[str, Any]:
     if not method.learns or method.by_law or method.draw is not None:
         free = not method.learns and not method.by_law
         return {"at_most_nanos": 0 if free else None, "wins": None, "says": _free(free)}
+    # The dearest start there is: nothing converts, and every win costs the cap.
     wins = wins_at_cap(terms)
     most = wins * terms.cap
     allowed = terms.allowance

@@ -51,6 +51,7 @@ def defaults(partial: Mapping[str, Any]) -> tuple[dict[str, Any], list[str]]:
     typical = max(ceiling // 10, min(ceiling, RARE_FROM * cap))
     _fill(value, "typical", typical, "value.typical", taken)
     expected = dict(value.get("expected") or {})
+    # Half the cap wins often enough to learn, and leaves room to be wrong upwards.
     guess = max(1, min(cap // 2, ceiling))
     _fill(expected, "per_impression", guess, "value.expected.per_impression", taken)
     _fill(expected, "conversions", 1, "value.expected.conversions", taken)
@@ -116,6 +117,7 @@ def wins_at_cap(terms: Terms) -> int:
     With values, or with rounds lost in between, it takes more.
     """
     method = METHODS[terms.method]
+    # Doubling first: the answer spans from a handful to beyond any budget.
     few, many = 0, 1
     while many < WINS_MAX and not _left_cap(method, terms, many):
         few, many = many, 2 * many

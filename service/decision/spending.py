@@ -20,6 +20,7 @@ def usual_pacing(config: Mapping[str, Any]) -> str:
     """
     ends = (config.get("flight") or {}).get("ends_ms")
     method = METHODS.get(config["policy"]["method"])
+    # An unknown method is refused elsewhere, with a sentence; here it is only not paced.
     moved = method is not None and method.learns and not method.by_law
     return DUAL if moved and (config.get("daily_budget") or ends) else NONE
 

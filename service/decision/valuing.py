@@ -66,12 +66,14 @@ class ByFeatures:
 
     def value(self, hashed: hashing.Hashed) -> Valued | None:
         """Mean plus radius times width; None where features cancel out, and so say nothing."""
+        # Features that share a dimension with opposite signs may leave a vector of nothing.
         x = hashing.dense(hashed, len(self.weights))
         square = float(x @ self.inverse @ x)
         if square <= 0.0:
             return None
         mean = float(x @ self.weights)
         return Valued(
+            # A ridge knows no bounds, but no impression is worth less than nothing.
             max(mean + self.radius * math.sqrt(square), 0.0) * self.scale,
             max(mean, 0.0) * self.scale,
         )
@@ -97,6 +99,7 @@ class ByHint:
         """The ratio of what is learnt: its quantile where the method bids one, else its mean."""
         book = Book.from_bytes(memory.part("hints"))
         seen = book.counted(_shares(book, memory, terms))
+        # Without any weight of the guess a ratio of no hints would be nought over nought.
         prior = hints.Prior(terms.typical, max(terms.prior_conversions, posterior.LEAST))
         mean = hints.ratio(seen, prior)
         order = terms.settings.get("order")
@@ -135,6 +138,7 @@ class Valuing:
     def value(self, opportunity: Opportunity) -> Valued | None:
         """What this one is worth; None where only what all are worth is known."""
         hint = opportunity.value_hint
+        # Whoever sends a hint has seen more of this impression than its features say.
         if self.by_hint is not None and hint is not None:
             return Valued(hint * self.by_hint.ratio, hint * self.by_hint.mean)
         return self.by_features.value(opportunity.hashed) if self.by_features is not None else None

@@ -50,9 +50,11 @@ class Control:
             unit: The request's own name.
             key: Secret of the database, so that no caller can choose an arm.
         """
+        # Keyed, or a caller could pick names that land in the arm it likes.
         digest = blake2b(
             f"{line_item}\n{unit}".encode(), key=key[:64], digest_size=_HASH_BYTES, person=_PERSON
         ).digest()
+        # In whole numbers, so that every machine draws the line at the same hash.
         return int.from_bytes(digest) * WHOLE < self.share << (8 * _HASH_BYTES)
 
     def has_room(self, leased: int, issued: int) -> bool:
@@ -63,6 +65,7 @@ class Control:
             leased: What this worker has issued of earlier slices and holds in this one, in nanos.
             issued: What of it the arm has issued.
         """
+        # With the bid itself counted in, or the last one would overshoot the share.
         return (issued + self.price) * WHOLE <= self.share * leased
 
     def open(self, budget: int, spent: int) -> bool:

@@ -31,6 +31,7 @@ class Scale:
         """The largest price for one impression whose cost is within `net` nanos."""
         if self is PLAIN:
             return net
+        # Down, as a nano more would cost more than was set aside.
         return net * _SQUARE // (self.rate * max(self.multiplier, WHOLE))
 
     def worth(self, price: int) -> int:

@@ -117,6 +117,7 @@ def learn(state: bytes, lessons: Sequence[Lesson], rules: Rules) -> bytes:
 
 
 def _ruled(arms: Arms, said: Mapping[str, Any] | None, rules: Rules) -> Arms:
+    # The share is left out: more or less traffic makes no other rule.
     rule = "" if said is None else f"{said['method']} {said['price']}"
     if rule == arms.rule:
         return arms
@@ -138,12 +139,14 @@ def _take(arms: Arms, lesson: Lesson, rules: Rules) -> None:
     body, kind = lesson.body, lesson.kind
     arm = body.get("arm") or MAIN
     if kind == rules.paid_by and body.get("only") != "market":
+        # What is charged above the bid is in dispute, and is no price of either arm.
         paid = min(body["price"], body.get("bid", body["price"]))
         _put(arms, arm, lesson.at_ms, [1, paid, 0, 0])
     elif kind == "value" and not body.get("before_reset"):
         before, after = _told(body, rules)
         ceiling = rules.ceiling
         amount = min(after, ceiling) - min(before, ceiling)
+        # By the time of the win, or arms with slower values would look the poorer.
         won_ms = body.get("won_ms", lesson.at_ms)
         _put(arms, arm, won_ms, [0, 0, (after > 0) - (before > 0), amount])
 

@@ -80,6 +80,7 @@ def step(watch: Watch, trials: int, hits: int, start_ms: int, ratio: float, high
     )
     if max(up, down) < high * UNITS_PER_NAT:
         return seen
+    # Where both are high the stronger evidence says when it began.
     changed_ms = seen.up_ms if up >= down else seen.down_ms
     return FIRST._replace(alarms=watch.alarms + 1, changed_ms=changed_ms)
 

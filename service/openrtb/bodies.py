@@ -31,11 +31,13 @@ def unpacked(raw: bytes, bytes_max: int) -> bytes:
     """
     stream = zlib.decompressobj(GZIP)
     try:
+        # One byte more than is taken tells too long from just long enough.
         body = stream.decompress(raw, bytes_max + 1)
     except zlib.error as error:
         raise BadBody("not gzip") from error
     if len(body) > bytes_max:
         raise TooLong("unfolds to too much")
+    # Cut short or followed by more: either way not what the sender meant.
     if not stream.eof or stream.unused_data:
         raise BadBody("not one whole gzip stream")
     return body

@@ -58,6 +58,7 @@ def _imp(source: Source, asked: Asked, imp: dict[str, Any]) -> dict[str, Any]:
         "line_items": [
             {"line_item": line.line_item, "type": line.type, **_judged(judged)}
             for line in source.line_items
+            # By the function that prices go by, or an explanation could differ from the answer.
             for judged in [judge(line, imp, asked, source)]
         ],
         "asks": [
@@ -80,6 +81,7 @@ def _terms(terms: Terms) -> dict[str, Any]:
         "floor_cpm": money.cpm_number(terms.floor),
         "floor_currency": terms.currency,
     }
+    # One impression is what everybody expects, so only another number is said.
     many = terms.multiplier != money.NANOS_PER_UNIT
     return shown | ({"multiplier": money.nanos_text(terms.multiplier)} if many else {})
 

@@ -16,6 +16,7 @@ from service.openrtb.paths import Path, path, word
 
 FEATURES_MAX = 32
 NOTICES = ("win", "billed", "loss")
+# Markup of two hundred creatives fits; a log file named by mistake does not.
 BYTES_MAX = 4 * 2**20
 _ID = r"^[A-Za-z0-9._-]{1,64}$"
 _ADDRESS = re.compile(r"https?://[A-Za-z0-9.-]{1,253}(:[0-9]{1,5})?(/[A-Za-z0-9._~/-]{0,100})?")
@@ -29,6 +30,7 @@ def _allowed(name: object) -> Path:
 
 
 def _address(text: str) -> str:
+    # Addresses are put together by adding to it, and two slashes are another path.
     if not _ADDRESS.fullmatch(text) or text.endswith("/"):
         raise ValueError("not an http or https address without a slash at its end")
     return text
@@ -102,6 +104,7 @@ class Source(_Strict):
 
 
 def _named(name: str) -> str:
+    # Sources and notices share one level of the path, so their names must differ.
     if name in NOTICES or not re.fullmatch(_ID, name):
         raise ValueError(f"not a name of a source, or one of {', '.join(NOTICES)}")
     return name

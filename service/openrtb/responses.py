@@ -45,6 +45,7 @@ def response(source: Source, asked: Asked, bid_id: str, bids: list[Made]) -> dic
 
 def _bid(source: Source, made: Made) -> dict[str, Any]:
     line, urls = made.line, {k: notice_url(source, k, made.ticket) for k in _URLS}
+    # The public name of the bid, never its ticket, which is proof of being the exchange.
     bid: dict[str, Any] = {
         "id": made.ref,
         "impid": made.imp["id"],
