@@ -74,7 +74,7 @@ def tree(worker: Worker) -> Tree:
 
 def law(worker: Worker, seq: int) -> Law:
     """The law of that snapshot."""
-    kept = worker.database.read(lambda c: epochs.law(c, NAME, seq))
+    kept = worker.database.read(lambda c: epochs.laws(c, {(NAME, seq)})).get((NAME, seq))
     assert kept is not None
     return Law.from_bytes(kept)
 

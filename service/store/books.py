@@ -8,7 +8,7 @@ from __future__ import annotations
 from collections.abc import Iterable
 from typing import Any
 
-from sqlalchemy import LargeBinary, text
+from sqlalchemy import LargeBinary, TextClause, text
 
 from service.errors import BrokenPromise
 from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
@@ -40,27 +40,26 @@ class Books:
         self._accounts_before = dict(self.accounts)
         self._days_before: dict[tuple[str, str], Day] = {}
         self._slices_before: dict[bytes, Slice] = {}
+        self._new_slices: list[dict[str, Any]] = []
         self._rows: list[tuple[Any, ...]] = []
 
     def load_slices(self, ids: Iterable[bytes]) -> None:
         """Read these slices and the days they belong to."""
         for row in self._connection.execute(_SELECT_SLICES, {"ids": sorted(set(ids))}):
-            self._keep_slice(Slice(**{**row._mapping, "id": bytes(row.id)}))
+            self._keep_slice(Slice(bytes(row.id), *row[1:]))
         self.load_days({(s.line_item, s.day) for s in self.slices.values()})
 
     def load_days(self, wanted: Iterable[tuple[str, str]]) -> None:
         """Read these days where they exist."""
-        statement = text(
-            "SELECT line_item, day, budget, target, spent, held, over_spent FROM local_day"
-            " WHERE line_item = :line_item AND day = :day"
-        )
-        for line_item, day in sorted(set(wanted) - set(self.days)):
-            row = self._connection.execute(statement, {"line_item": line_item, "day": day})
-            found = row.one_or_none()
-            if found is not None:
-                self.days[line_item, day] = self._days_before[line_item, day] = Day(
-                    **found._mapping
-                )
+        missing = set(wanted) - set(self.days)
+        if not missing:
+            return
+        names, days = zip(*missing, strict=True)
+        row = {"ids": sorted(set(names)), "days": sorted(set(days))}
+        for found in self._connection.execute(_SELECT_DAYS, row):
+            # All line items are asked for all days; few of them have a day that is another's.
+            if (key := (found.line_item, found.day)) in missing:
+                self.days[key] = self._days_before[key] = Day(*found)
 
     def open_day(self, line_item: str, day: str, budget: int) -> Day:
         """The day's row, made with this budget when it is the first use of the day."""
@@ -77,8 +76,7 @@ class Books:
 
     def new_slice(self, fresh: Slice, times_ms: dict[str, int]) -> None:
         """Insert a slice; its money is counted as held by the movement posted with it."""
-        row = {name: getattr(fresh, name) for name in fresh._fields} | times_ms
-        self._connection.execute(_INSERT_SLICE, row)
+        self._new_slices.append(fresh._asdict() | times_ms)
         self._keep_slice(fresh)
 
     def post(
@@ -129,20 +127,21 @@ class Books:
         Raises:
             BrokenPromise: A guard said no although the rules had allowed it.
         """
-        for name, account in self.accounts.items():
-            if account != self._accounts_before[name]:
-                self._save_account(self._accounts_before[name], account)
-        for key, day in self.days.items():
-            if day != self._days_before[key]:
-                self._save_day(self._days_before[key], day)
-        self._save_slices()
+        if self._new_slices:
+            self._connection.execute(_INSERT_SLICE, self._new_slices)
+        accounts = [(self._accounts_before[name], row) for name, row in self.accounts.items()]
+        self._write(_UPDATE_BALANCE, "balance", accounts, _BALANCE_SUMS)
+        days = [(self._days_before[key], row) for key, row in self.days.items()]
+        self._write(_UPDATE_DAY, "day", days, _DAY_SUMS)
+        slices = [(self._slices_before[key], row) for key, row in self.slices.items()]
+        self._write(_UPDATE_SLICE, "slice", slices, _SLICE_SUMS)
         insert_many(self._connection, _INSERT_ENTRY, self._rows)
 
     def _lock(self, line_items: list[str]) -> dict[str, Account]:
         rows = self._connection.execute(
             locking(self._connection, _SELECT_BALANCES), {"ids": line_items}
         )
-        return {row.line_item: Account(**row._mapping) for row in rows}
+        return {row.line_item: Account(*row) for row in rows}
 
     def _keep_slice(self, found: Slice) -> None:
         self.slices[found.id] = self._slices_before[found.id] = found
@@ -156,37 +155,30 @@ class Books:
         said = (entry.bid, entry.slot, entry.cost, bodies.written(entry.body))
         self._rows.append((line_item, *stamps, *said))
 
-    def _save_account(self, before: Account, after: Account) -> None:
-        self._guarded(_UPDATE_BALANCE, "balance", _differences(before, after, _BALANCE_SUMS))
-
-    def _save_day(self, before: Day, after: Day) -> None:
-        self._guarded(_UPDATE_DAY, "day", _differences(before, after, _DAY_SUMS))
-
-    def _save_slices(self) -> None:
-        """All at once, for one group may speak of bids out of many slices."""
-        pairs = [(self._slices_before[after.id], after) for after in self.slices.values()]
-        rows = [
-            _differences(before, after, ("remaining", "owed")) | {"was": before.state}
-            for before, after in pairs
-            if before != after
-        ]
-        if rows:
-            self._guarded(_UPDATE_SLICE, "slice", *rows)
-
-    def _guarded(self, statement: Any, what: str, *rows: dict[str, Any]) -> None:
+    def _write(
+        self,
+        statement: TextClause,
+        what: str,
+        pairs: Iterable[tuple[Any, Any]],
+        sums: tuple[str, ...],
+    ) -> None:
+        """Write what has changed of one kind, all rows at once: a group may touch hundreds."""
+        rows = [_differences(before, after, sums) for before, after in pairs if before != after]
         # Reached only when the rules and the guard disagree, so it must never pass in silence.
-        if self._connection.execute(statement, list(rows)).rowcount != len(rows):
+        if rows and self._connection.execute(statement, rows).rowcount != len(rows):
             raise BrokenPromise(f"the guard of a {what} refused a write")
 
 
 _BALANCE_SUMS = ("spent", "held", "unfunded", "disputed", "seq")
 _DAY_SUMS = ("spent", "held", "over_spent")
+_SLICE_SUMS = ("remaining", "owed")
 
 
 def _differences(before: Any, after: Any, sums: tuple[str, ...]) -> dict[str, Any]:
-    """The row to write: sums as what to add, everything else as it is now."""
-    row = {name: getattr(after, name) for name in after._fields}
-    return row | {name: row[name] - getattr(before, name) for name in sums}
+    """The row to write: sums as what to add, everything else as it is now; and what state was."""
+    row: dict[str, Any] = after._asdict()
+    row |= {name: row[name] - getattr(before, name) for name in sums}
+    return row | {"was": getattr(before, "state", None)}
 
 
 _SELECT_BALANCES = (
@@ -197,6 +189,13 @@ _SELECT_SLICES = among(
     "SELECT id, line_item, worker, day, amount, remaining, owed, ticked, counted, state"
     " FROM slice WHERE id IN :ids",
     of=LargeBinary,
+)
+_SELECT_DAYS = among(
+    among(
+        "SELECT line_item, day, budget, target, spent, held, over_spent FROM local_day"
+        " WHERE line_item IN :ids AND day IN :days"
+    ),
+    "days",
 )
 _INSERT_SLICE = text(
     "INSERT INTO slice (id, line_item, worker, day, amount, remaining, owed, ticked, counted,"

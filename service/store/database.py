@@ -10,6 +10,7 @@ from contextlib import contextmanager
 from typing import Any, NewType, TypeVar
 
 from sqlalchemy import (
+    BigInteger,
     Connection,
     LargeBinary,
     Text,
@@ -153,11 +154,14 @@ def at_the_end(connection: Writing, work: Callable[[Writing], None]) -> None:
 
 
 def among(
-    statement: str, name: str = "ids", of: type[Text] | type[LargeBinary] = Text
+    statement: str | TextClause,
+    name: str = "ids",
+    of: type[Text] | type[LargeBinary] | type[BigInteger] = Text,
 ) -> TextClause:
     """A statement whose `IN :ids` (or the name given) takes a list, perhaps an empty one."""
+    clause = text(statement) if isinstance(statement, str) else statement
     # Without a type PostgreSQL would compare an empty list as one of integers, and refuse.
-    return text(statement).bindparams(bindparam(name, type_=of(), expanding=True))
+    return clause.bindparams(bindparam(name, type_=of(), expanding=True))
 
 
 def insert_many(connection: Writing, statement: str, rows: Sequence[tuple[Any, ...]]) -> None:

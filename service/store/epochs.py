@@ -6,10 +6,12 @@ is then read from the law of the snapshot that its ticket names.
 
 from __future__ import annotations
 
-from sqlalchemy import text
+from collections.abc import Collection
+
+from sqlalchemy import BigInteger, text
 
 from service.store.clock import now_ms
-from service.store.database import Reading, Writing
+from service.store.database import Reading, Writing, among
 from service.store.leases import read_configs
 
 BIDS_MAX = 100  # A new law at the latest after so many entries,
@@ -30,15 +32,16 @@ def keep(connection: Writing, line_item: str, snapshot: int, law: bytes) -> None
     )
 
 
-def law(connection: Reading | Writing, line_item: str, snapshot: int) -> bytes | None:
-    """The law of a snapshot, or None when it is gone, never was, or is from before a reset."""
-    statement = text(
-        "SELECT law FROM epoch WHERE line_item = :id AND snapshot = :snapshot"
-        " AND snapshot >= (SELECT reset_seq FROM learner WHERE line_item = :id)"
-    )
-    found = connection.execute(statement, {"id": line_item, "snapshot": snapshot})
-    kept = found.scalar_one_or_none()
-    return None if kept is None else bytes(kept)
+def laws(
+    connection: Reading | Writing, wanted: Collection[tuple[str, int]]
+) -> dict[tuple[str, int], bytes]:
+    """The laws of these snapshots; none where it is gone, never was, or is from before a reset."""
+    if not wanted:
+        return {}
+    names, snapshots = zip(*wanted, strict=True)
+    row = {"ids": sorted(set(names)), "snapshots": sorted(set(snapshots))}
+    rows = connection.execute(_LAWS, row)
+    return {(line_item, snapshot): bytes(law) for line_item, snapshot, law in rows}
 
 
 def end(connection: Writing, line_item: str) -> None:
@@ -65,6 +68,15 @@ def prune(connection: Writing) -> None:
         connection.execute(_PRUNE, row)
 
 
+_LAWS = among(
+    among(
+        "SELECT e.line_item, e.snapshot, e.law FROM epoch e JOIN learner l"
+        " ON l.line_item = e.line_item WHERE e.line_item IN :ids AND e.snapshot IN :snapshots"
+        " AND e.snapshot >= l.reset_seq"
+    ),
+    "snapshots",
+    BigInteger,
+)
 _PRUNE = text(
     "DELETE FROM epoch WHERE line_item = :id AND service_ms < :before"
     " AND snapshot <> (SELECT snapshot FROM learner WHERE line_item = :id)"

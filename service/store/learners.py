@@ -124,10 +124,10 @@ def _teach(
     row = connection.execute(locking(connection, _MINE, skip=True), {"id": line_item}).one_or_none()
     if row is None:
         return _Taught(0)
-    cancelled = lessons.cancellations(connection, line_item)
-    page = lessons.read(connection, line_item, row.seq, ENTRIES_MAX, cancelled)
     # Read under the lock, for a change of terms refolds under it too.
     config = read_configs(connection, [line_item])[line_item]
+    cancelled = lessons.cancellations(connection, line_item, config["spend_on"])
+    page = lessons.read(connection, line_item, row.seq, ENTRIES_MAX, cancelled)
     taught, seq = _Taught(page.read), page.end
     try:
         state = fold(bytes(row.working), page.lessons, config)

@@ -78,9 +78,12 @@ def lease(
         books = Books(connection, [r.line_item for r in requests], wall_ms)
         # Read under the lock, so that an edit either is seen here or waits for us.
         configs = read_configs(connection, list(books.accounts))
-        lenders = _Lenders(connection, worker, lease_s * 1000)
+        lenders = _Lenders(connection, worker, lease_s * 1000, list(books.accounts))
         answers = lenders.frozen(list(books.accounts))
         shut = {answer.line_item for answer in answers}
+        zones = {name: config["flight"]["time_zone"] for name, config in configs.items()}
+        # Of all at once; what is not there yet is opened one by one.
+        books.load_days((name, local_day(wall_ms, zone)) for name, zone in zones.items())
         answers += [
             lenders.lend(books, configs[r.line_item], r, wall_ms)
             for r in requests
@@ -95,12 +98,15 @@ def lease(
 class _Lenders:
     """One leasing transaction: who lives, and what the dead still hold."""
 
-    def __init__(self, connection: Writing, worker: str, lease_ms: int) -> None:
+    def __init__(
+        self, connection: Writing, worker: str, lease_ms: int, line_items: list[str]
+    ) -> None:
         self._connection = connection
         self._worker = worker
         self._lease_ms = lease_ms
         # Whoever asks lives, even if its beat is overdue.
         self._live = set(live(connection)) | {worker}
+        self._dead = self._orphaned(line_items)
 
     def frozen(self, line_items: list[str]) -> list[Leased | Denied]:
         """
@@ -115,10 +121,8 @@ class _Lenders:
     ) -> Leased | Denied:
         """Hold money for one slice, or say which limit leaves none."""
         account = books.accounts[request.line_item]
-        zone = config["flight"]["time_zone"]
-        day = books.open_day(
-            account.line_item, local_day(wall_ms, zone), config["daily_budget"] or NO_LIMIT
-        )
+        today = local_day(wall_ms, config["flight"]["time_zone"])
+        day = books.open_day(account.line_item, today, config["daily_budget"] or NO_LIMIT)
         # Decided on rows that this transaction has locked, so nobody else can lease them too.
         amount = self._amount(account, day, config, request)
         lease_ms = _lease_ms(config, wall_ms, self._lease_ms)
@@ -146,18 +150,19 @@ class _Lenders:
         self, account: Account, day: Day, config: dict[str, Any], request: LeaseRequest
     ) -> int:
         wish = Wish(config["bid_cap"], request.forecast, request.before)
-        orphaned = self._orphaned(account.line_item)
+        orphaned = self._dead.get(account.line_item, 0)
         free = min(account.free, day.free)
         return slice_amount(wish, free, account.budget, len(self._live), orphaned)
 
-    def _orphaned(self, line_item: str) -> int:
+    def _orphaned(self, line_items: list[str]) -> dict[str, int]:
+        """What slices of dead workers hold of each of these line items, where they hold any."""
         statement = among(
-            "SELECT coalesce(sum(remaining), 0) FROM slice WHERE line_item = :id"
-            " AND state = 'open' AND worker NOT IN :live",
-            "live",
+            "SELECT line_item, sum(remaining) FROM slice WHERE line_item IN :ids"
+            " AND state = 'open' AND worker NOT IN :live GROUP BY line_item"
         )
-        row = {"id": line_item, "live": sorted(self._live)}
-        return int(self._connection.execute(statement, row).scalar_one())
+        statement = among(statement, "live")
+        row = {"ids": line_items, "live": sorted(self._live)}
+        return {name: int(held) for name, held in self._connection.execute(statement, row)}
 
 
 def retire(database: Database, reports: list[Report]) -> None:

@@ -73,11 +73,14 @@ def left_of(
     return rests
 
 
-def cancellations(connection: Reading | Writing, line_item: str) -> Cancelled:
-    """What is cancelled on a stream."""
+def cancellations(
+    connection: Reading | Writing, line_item: str, paid_by: str | None = None
+) -> Cancelled:
+    """What is cancelled on a stream; who knows by what its impressions are paid may say so."""
     rows = connection.execute(_CANCELLED, {"id": line_item})
     spans = [(first, last, row.part) for row in rows for first, last in json.loads(row.spans)]
-    paid_by = read_configs(connection, [line_item])[line_item]["spend_on"]
+    if paid_by is None:
+        paid_by = read_configs(connection, [line_item])[line_item]["spend_on"]
     return Cancelled(spans, paid_by)
 
 

@@ -96,13 +96,15 @@ class _Group:
         self, connection: Writing, wall_ms: int, group: list[Booking], weigh: Weigh
     ) -> None:
         self._connection = connection
-        self._weigh, self._laws = weigh, dict[tuple[str, int], bytes | None]()
+        self._weigh = weigh
         self._wall_ms = wall_ms
         self._group = group
         self._books = Books(connection, [b.line_item for b in group], wall_ms)
         self._books.load_slices(b.slice_id for b in group if b.slice_id)
         self._books.load_days({(b.line_item, b.day) for b in group if b.day})
         self._configs = read_configs(connection, list(self._books.accounts))
+        drawn = {(b.line_item, b.snapshot) for b in group if not isinstance(b.event, Value)}
+        self._laws = epochs.laws(connection, drawn)
         self._won_seqs: dict[bytes, int] = {}
         self._paid_ms: dict[bytes, int] = {}
         self._slots = self._read_slots({b.event.bid for b in group})
@@ -206,7 +208,7 @@ class _Group:
         # The plain rule draws nothing, whatever the law of the moment was.
         if entry.kind not in ("won", "lost") or booking.arm:
             return {}
-        law = self._law(booking.line_item, booking.snapshot)
+        law = self._laws.get((booking.line_item, booking.snapshot))
         if law is None:
             return {}
         price = entry.body["price"] if entry.kind == "won" else entry.body["to_win"]
@@ -216,12 +218,6 @@ class _Group:
         if entry.kind == "won" and (before := brought(slots)):
             return {**said, "brought": before}
         return said
-
-    def _law(self, line_item: str, snapshot: int) -> bytes | None:
-        key = (line_item, snapshot)
-        if key not in self._laws:
-            self._laws[key] = epochs.law(self._connection, line_item, snapshot)
-        return self._laws[key]
 
     def _keep(self, slots: Slots, entry: Entry | None) -> None:
         if entry is not None and entry.slot is not None:

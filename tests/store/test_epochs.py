@@ -18,7 +18,7 @@ def snapshot(database: Database) -> int:
 
 def law(database: Database, of: int) -> bytes | None:
     """The law kept for a snapshot."""
-    return database.read(lambda c: epochs.law(c, NAME, of))
+    return database.read(lambda c: epochs.laws(c, {(NAME, of)})).get((NAME, of))
 
 
 def test_a_law_is_kept_for_eachsnapshot_and_serves_its_whole_epoch(migrated_url: str) -> None:
@@ -35,13 +35,13 @@ def test_a_law_is_kept_for_eachsnapshot_and_serves_its_whole_epoch(migrated_url:
     append(database, won(1))
     taught()
     seq = snapshot(database)
-    assert database.read(lambda c: epochs.law(c, NAME, seq)) == b"law of 1"
+    assert law(database, seq) == b"law of 1"
     append(database, won(2))
     assert database.read(learners.behind) == []
     pass_service_ms(database, epochs.EPOCH_MS)
     assert database.read(learners.behind) == [NAME]
     taught()
-    assert database.read(lambda c: epochs.law(c, NAME, seq)) == b"law of 1"
+    assert law(database, seq) == b"law of 1"
     append(database, *(won(number) for number in range(3, 4 + epochs.BIDS_MAX)))
     assert database.read(learners.behind) == [NAME]
     database.close()
@@ -55,11 +55,11 @@ def test_laws_are_forgotten_after_grace_but_never_the_current(migrated_url: str)
     database.write(lambda c: epochs.keep(c, NAME, 7, b"old"))
     pass_service_ms(database, GRACE_MS + epochs.SLACK_MS)
     database.write(epochs.prune)
-    assert database.read(lambda c: epochs.law(c, NAME, 7)) == b"old"
+    assert law(database, 7) == b"old"
     pass_service_ms(database, 1)
     database.write(epochs.prune)
-    assert database.read(lambda c: epochs.law(c, NAME, 7)) is None
-    assert database.read(lambda c: epochs.law(c, NAME, 0)) == b"current"
+    assert law(database, 7) is None
+    assert law(database, 0) == b"current"
     database.close()
 
 
@@ -71,7 +71,7 @@ def test_a_law_is_of_one_line_item_and_snapshot(migrated_url: str) -> None:
     database.write(lambda c: epochs.keep(c, NAME, 3, bytes(range(256))))
     assert law(database, 3) == bytes(range(256))
     assert law(database, 4) is None
-    assert database.read(lambda c: epochs.law(c, "nobody", 3)) is None
+    assert database.read(lambda c: epochs.laws(c, {("nobody", 3)})) == {}
     database.close()
 
 
