@@ -49,6 +49,7 @@ AUDIT_S = 10.0
 MEASURE_S = 5.0
 PRUNE_S = 3600.0
 CHART_S = 2.0
+TOGETHER = 16  # Line items taught in one transaction.
 DAY_MS = 86_400_000
 REFUSAL_KEEP_DAYS = 90  # A quarter: long enough to look back at who tried what.
 POST_S = 1.0
@@ -117,10 +118,13 @@ class Clerk:
 
     async def teach(self) -> None:
         """Fold what is new, line item by line item."""
-        for name in await self._threads.run(self._database.read, learners.behind):
-            # A full page says that more may wait behind it.
-            while await self._teach(name) == learners.ENTRIES_MAX:
-                pass
+        behind = await self._threads.run(self._database.read, learners.behind)
+        for at in range(0, len(behind), TOGETHER):
+            names = behind[at : at + TOGETHER]
+            for name in await self._unfinished(names):
+                # A full page says that more may wait behind it.
+                while await self._teach(name) == learners.ENTRIES_MAX:
+                    pass
 
     async def close(self) -> None:
         """Close the slices whose grace is over."""
@@ -199,6 +203,18 @@ class Clerk:
     async def _until_none(self, prune: Callable[[Writing, int], int], bound_ms: int) -> None:
         while await self._threads.run(self._database.write, lambda c: prune(c, bound_ms)):
             pass
+
+    async def _unfinished(self, names: list[str]) -> list[str]:
+        """Teach some line items together; returns those that must go on alone."""
+        every = self._habits.checkpoint_entries
+        try:
+            read = await self._threads.run(
+                learners.teach_together, self._database, names, lesson, every, lawful
+            )
+        except (UnreadableMemory, UnreadableTree):
+            # Nothing was taught; alone, the one that is damaged is told from the others.
+            return names
+        return [name for name, count in read.items() if count >= learners.share_of(len(names))]
 
     async def _teach(self, line_item: str) -> int:
         every = self._habits.checkpoint_entries

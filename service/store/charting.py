@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections import Counter
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -20,6 +20,7 @@ from service.store.database import Database, Reading, Writing
 # The finest step that is kept; coarser ones are summed when a chart is read.
 FIVE_MINUTES_MS = 300_000
 ENTRIES_MAX = 2000
+TOGETHER = 20  # Line items counted in one transaction.
 BUCKETS_MAX = 300
 # Bins add up over minutes and processes, which kept quantiles would not.
 BINS_PER_DOUBLING = 4
@@ -152,7 +153,8 @@ def of_decisions(decisions: Iterable[Row]) -> dict[Key, tuple[int, int]]:
 def roll(database: Database, entries_max: int = ENTRIES_MAX) -> int:
     """Count what is new in every stream, a piece of each; returns how many entries that were."""
     behind = database.read(lambda connection: connection.execute(_ALL_BEHIND).all())
-    return sum(_roll(database, row.line_item, row.seq, entries_max) for row in behind)
+    pieces = range(0, len(behind), TOGETHER)
+    return sum(_roll(database, behind[at : at + TOGETHER], entries_max) for at in pieces)
 
 
 def prune(connection: Writing, before_ms: int) -> int:
@@ -172,20 +174,27 @@ def readable(told: str) -> dict[str, Any]:
     return body if isinstance(body, dict) else {}
 
 
-def _roll(database: Database, line_item: str, was: int, entries_max: int) -> int:
-    wanted = {"id": line_item, "was": was, "limit": entries_max}
+def _roll(database: Database, behind: Sequence[Any], entries_max: int) -> int:
+    """Count some line items in one transaction: a commit for each would hold up all writers."""
+    limit = max(1, entries_max // len(behind))
+    wanted = [{"id": one.line_item, "was": one.seq, "limit": limit} for one in behind]
     # Read outside of the write, for parsing is slow and SQLite lets one writer in at a time.
-    rows = database.read(lambda connection: connection.execute(_NEXT, wanted).all())
-    counted = _of_entries(line_item, rows)
-    kept = wanted | {"seq": rows[-1].seq if rows else was}
+    pages = database.read(lambda c: [c.execute(_NEXT, row).all() for row in wanted])
+    pairs = [(row, rows) for row, rows in zip(wanted, pages, strict=True) if rows]
+    pieces = [
+        (row | {"seq": rows[-1].seq}, _of_entries(str(row["id"]), rows)) for row, rows in pairs
+    ]
 
     def work(connection: Writing) -> None:
-        # Another clerk may have counted this piece since; whose guard fails adds nothing.
-        if rows and connection.execute(_KEEP, kept).rowcount == 1:
-            add(connection, counted)
+        counted = dict[Key, tuple[int, int]]()
+        for kept, found in pieces:
+            # Another clerk may have counted this piece since; whose guard fails adds nothing.
+            if connection.execute(_KEEP, kept).rowcount == 1:
+                counted |= found
+        add(connection, counted)
 
     database.write(work)
-    return len(rows)
+    return sum(map(len, pages))
 
 
 def _of_entries(line_item: str, rows: Iterable[Any]) -> dict[Key, tuple[int, int]]:

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
+from functools import partial
 from typing import Any
 
 from sqlalchemy import text
@@ -86,6 +87,7 @@ class _Taught:
     """What one turn of the teacher came to; `poison` is the seq that it could not take."""
 
     read: int
+    published: bool = False
     poison: int = 0
     tries: int = 0
     error: str = ""
@@ -98,28 +100,61 @@ def teach(
     checkpoint_entries: int,
     lawful: Lawful = lawless,
 ) -> int:
-    """
-    Fold the next entries into the one state of a line item; returns how many were read.
+    """Fold the next entries of one line item; returns how many were read."""
+    return teach_together(database, [line_item], fold, checkpoint_entries, lawful)[line_item]
 
-    One teacher at a time: the learner's row is locked, and another teacher passes by. An
-    entry that fails is set aside after three turns, and teaching goes on behind it.
+
+def teach_together(
+    database: Database,
+    line_items: Sequence[str],
+    fold: Fold,
+    checkpoint_entries: int,
+    lawful: Lawful = lawless,
+) -> dict[str, int]:
+    """
+    Fold the next entries of each line item into its one state; returns how many were read of each.
+
+    In one transaction, for a commit costs more than a short lesson; together they read no more
+    than one may alone. One teacher at a time: a learner's row is locked, and another teacher
+    passes by. An entry that fails is set aside after three turns, and teaching goes on behind it.
 
     Args:
         fold: Pure; state, lessons and the line item's configuration in, state out.
         checkpoint_entries: A checkpoint is kept whenever seq passes a multiple of it.
         lawful: State and configuration in, the law that bids are drawn from out, if any.
     """
-    taught = database.write(
-        lambda c: _teach(c, line_item, fold, checkpoint_entries, lawful, database.wall_ms())
-    )
-    if taught.tries >= TRIES_MAX:
-        # Apart: the stream is locked before the learner, and here the learner was first.
-        database.write(lambda c: _set_aside(c, line_item, taught, database.wall_ms()))
-    return taught.read
+    limit = share_of(len(line_items))
+
+    def work(connection: Writing) -> dict[str, _Taught]:
+        rules = (fold, checkpoint_entries, lawful, limit, database.wall_ms())
+        found = {name: _teach(connection, name, *rules) for name in sorted(line_items)}
+        # The change number last: its one row is what every writer waits for.
+        if published := [name for name, taught in found.items() if taught.published]:
+            announce(connection, "snapshot", published)
+        return found
+
+    taught = database.write(work)
+    for name, one in taught.items():
+        if one.tries >= TRIES_MAX:
+            # Apart: the stream is locked before the learner, and here the learner was first.
+            aside = partial(_set_aside, line_item=name, taught=one, now=database.wall_ms())
+            database.write(aside)
+    return {name: one.read for name, one in taught.items()}
+
+
+def share_of(line_items: int) -> int:
+    """How many entries are read of each of so many line items taught together."""
+    return max(1, ENTRIES_MAX // line_items)
 
 
 def _teach(
-    connection: Writing, line_item: str, fold: Fold, every: int, lawful: Lawful, now: int
+    connection: Writing,
+    line_item: str,
+    fold: Fold,
+    every: int,
+    lawful: Lawful,
+    limit: int,
+    now: int,
 ) -> _Taught:
     row = connection.execute(locking(connection, _MINE, skip=True), {"id": line_item}).one_or_none()
     if row is None:
@@ -127,7 +162,7 @@ def _teach(
     # Read under the lock, for a change of terms refolds under it too.
     config = read_configs(connection, [line_item])[line_item]
     cancelled = lessons.cancellations(connection, line_item, config["spend_on"])
-    page = lessons.read(connection, line_item, row.seq, ENTRIES_MAX, cancelled)
+    page = lessons.read(connection, line_item, row.seq, limit, cancelled)
     taught, seq = _Taught(page.read), page.end
     try:
         state = fold(bytes(row.working), page.lessons, config)
@@ -137,18 +172,19 @@ def _teach(
         seq = page.seqs[poison.place] - 1
         # Counted for this one entry: the next bad one gets turns of its own.
         tries = row.tries + 1 if row.stuck_seq == seq + 1 else 1
-        taught = _Taught(seq - row.seq, seq + 1, tries, str(poison))
+        taught = _Taught(seq - row.seq, False, seq + 1, tries, str(poison))
     stuck = {"stuck": taught.poison, "tries": taught.tries}
     connection.execute(_LEARN, {"id": line_item, "seq": seq, "state": state, **stuck})
     if seq // every > row.seq // every:
         _checkpoint(connection, line_item, seq, state, now)
     # A state that has not caught up is not published, or a refold would forget in public.
-    caught_up = taught.read < ENTRIES_MAX and not (taught.poison and row.halted)
+    caught_up = taught.read < limit and not (taught.poison and row.halted)
     # What has not changed is not published, since every worker would load it for nothing.
     if caught_up and (row.halted or digest_of(state) != row.digest):
         _publish(connection, line_item, seq, state, now)
         if (law := lawful(state, config)) is not None:
             epochs.keep(connection, line_item, seq, law)
+        return replace(taught, published=True)
     return taught
 
 
@@ -237,7 +273,6 @@ def begin_afresh(connection: Writing, line_item: str, seq: int) -> None:
 def _publish(connection: Writing, line_item: str, seq: int, state: bytes, now: int) -> None:
     row = {"seq": seq, "state": state, "digest": digest_of(state), "now": now, "id": line_item}
     connection.execute(_PUBLISH, row)
-    announce(connection, "snapshot", [line_item])
 
 
 def _checkpoint(connection: Writing, line_item: str, seq: int, state: bytes, now: int) -> None:

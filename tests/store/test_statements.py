@@ -16,7 +16,7 @@ import pytest
 from sqlalchemy import event
 
 from service.ledger.settle import Outcome
-from service.store import charting, learners, leases, outcomes
+from service.store import changes, charting, learners, leases, outcomes
 from service.store.database import Database
 from service.store.leases import Leased, LeaseRequest
 from service.store.outcomes import Booking
@@ -125,3 +125,21 @@ def test_counting_for_charts_takes_few_statements(database: Database) -> None:
     outcomes.book(database, wins(held, 100))
     # BEGIN stands before each of the three on SQLite.
     assert Statements(database).of(partial(charting.roll, database)) <= 7
+
+
+def test_lessons_of_many_line_items_share_a_commit(database: Database) -> None:
+    """Each publishes its own state, and the change numbers are taken once for all of them."""
+    names, statements = LINE_ITEMS[:8], Statements(database)
+    for held in lease(database, names):
+        outcomes.book(database, wins(held, 1))
+    read = dict[str, int]()
+
+    def work() -> None:
+        read.update(learners.teach_together(database, names, lesson, 10_000, lawful))
+
+    # Lock, configuration, cancelled, page, state and publishing of each; then the numbers.
+    assert statements.of(work) <= 6 * len(names) + 3
+    assert set(read.values()) == {3}
+    found = database.read(lambda c: learners.snapshots(c, names))
+    assert {one.seq for one in found.values()} == {3}
+    assert len(database.read(lambda c: changes.since(c, 0))) == len(names)
