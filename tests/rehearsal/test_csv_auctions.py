@@ -96,3 +96,99 @@ def test_pieces_hold_all_rows_in_order() -> None:
     parts = list(pieces(rows, 3))
     assert [len(part) for part in parts] == [3, 3, 1]
     assert [one for part in parts for one in part] == rows
+
+
+@pytest.mark.parametrize(
+    ("cpm", "least"),
+    [
+        ("0", 0),
+        ("0.000001", 1),
+        ("0.0000011", 2),  # A part of a nano less would not win.
+        ("1.5", 1_500_000),
+        (" 2 ", 2_000_000),
+    ],
+)
+def test_a_competing_bid_rounds_up(cpm: str, least: int) -> None:
+    """To whole nanos per impression, so that a bid of it is enough."""
+    rows, told = read("highest_competing_cpm", cpm)
+    assert ([one.least for one in rows], told.bad) == ([least], 0)
+
+
+@pytest.mark.parametrize(("competing", "floor", "least"), [("1", "2", 2), ("2", "1", 2)])
+def test_the_higher_of_rival_and_floor_must_be_beaten(
+    competing: str, floor: str, least: int
+) -> None:
+    """The floor stays what it is all the same."""
+    rows, _ = read("highest_competing_cpm,floor_cpm", f"{competing},{floor}")
+    assert (rows[0].least, rows[0].floor) == (least * 10**6, int(floor) * 10**6)
+
+
+@pytest.mark.parametrize(
+    ("text", "feature"),
+    [
+        ("phone", "phone"),
+        ("13", 13.0),
+        ("1.30e1", 13.0),
+        ("true", True),
+        ("True", "True"),
+        ("nan", "nan"),
+        ("inf", "inf"),
+        ("x" * 70, "x" * 64),
+    ],
+)
+def test_a_feature_is_text_number_or_truth(text: str, feature: str | float | bool) -> None:
+    """A number that is none stays text, and long text is cut as in a bid."""
+    rows, _ = read("highest_competing_cpm,feature.a", f"1,{text}")
+    assert rows[0].hashed == hashing.hashed({"a": feature}, HASH_KEY)
+
+
+def test_an_empty_feature_is_no_feature() -> None:
+    """Nor are those beyond the thirty-second, which are named as unread."""
+    rows, told = read("highest_competing_cpm,feature.a", "1,")
+    assert (rows[0].hashed, told.features) == ((), ["a"])
+    names = [f"feature.f{at}" for at in range(34)]
+    _, told = read(",".join(["highest_competing_cpm", *names]), "1" + ",x" * 34)
+    assert len(told.features) == 32
+    assert told.unknown_columns == ["feature.f32", "feature.f33"]
+
+
+def test_offsets_are_read_and_rows_without_a_time_follow() -> None:
+    """Nine in the morning an hour ahead is eight; the next row comes a second later."""
+    rows, _ = read("at,highest_competing_cpm", "2026-12-01T09:00:00+01:00,1", ",2", ",3")
+    first = rows[0].at_ms
+    assert first == 1_796_115_600_000 - 3_600_000
+    assert [one.at_ms - first for one in rows] == [0, 1000, 2000]
+
+
+def test_a_bad_row_does_not_move_the_clock() -> None:
+    """Its time is not read, so the row after it is not moved."""
+    head, bad = "at,highest_competing_cpm", "2027-01-01T00:00:00Z,dear"
+    rows, told = read(head, "2026-12-01T09:00:00Z,1", bad, "2026-12-01T09:00:01Z,2")
+    assert (told.bad, told.moved) == (1, 0)
+    assert rows[1].at_ms - rows[0].at_ms == 1000
+
+
+def test_order_of_columns_does_not_matter() -> None:
+    """They go by their names."""
+    first, _ = read("highest_competing_cpm,value,floor_cpm", "1,2,3")
+    other, _ = read("floor_cpm,highest_competing_cpm,value", "3,1,2")
+    assert first == other
+
+
+@pytest.mark.parametrize("size", [1, 2, 5, 100])
+def test_pieces_of_nothing_are_none(size: int) -> None:
+    """And never is a piece empty."""
+    assert list(pieces([], size)) == []
+    rows, _ = read("highest_competing_cpm", *["1"] * 5)
+    assert all(0 < len(part) <= size for part in pieces(rows, size))
+
+
+def test_what_is_told_is_plain_data() -> None:
+    """A count of good rows can be taken from it, and each bad one has its line and fault."""
+    _, told = read("highest_competing_cpm,colour", "1,red", "dear,blue")
+    plain = told.plain()
+    assert (plain["rows"], plain["bad_rows"]) == (2, 1)
+    assert plain["unknown_columns"] == ["colour"]
+    (bad,) = told.first_bad
+    assert plain["first_bad_rows"] == [{"line": bad[0], "fault": bad[1]}]
+    assert "dear" not in bad[1]

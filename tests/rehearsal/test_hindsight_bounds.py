@@ -8,7 +8,18 @@ from hypothesis import strategies as some
 
 from service.rehearsal.alternatives import Alternative
 from service.rehearsal.auction_log import Logged
-from service.rehearsal.hindsight_bounds import BOUNDED, EXACT, OPEN, Purse, bounded, shown, summed
+from service.rehearsal.hindsight_bounds import (
+    BOUNDED,
+    EXACT,
+    NOTHING,
+    OPEN,
+    Bound,
+    Purse,
+    Sums,
+    bounded,
+    shown,
+    summed,
+)
 
 UNIT = 100  # The worked tables are in hundredths of the ceiling.
 # Bid, price (None for a loss) and value.
@@ -170,3 +181,96 @@ def test_the_answer_names_units_and_counts() -> None:
     assert shown(summed([], Alternative("flat", 60)))["exact"] == {
         **{"auctions": 0, "share": None, "of_which_value_still_open": 0, "surplus_nanos": 0}
     }
+
+
+@pytest.mark.parametrize("bids", [(0, 0), (10, 20), (50, 50)])
+def test_a_bid_that_loses_for_sure_is_nothing(bids: tuple[int, int]) -> None:
+    """Up to the bid that lost, and exactly so."""
+    assert bounded(Logged("second", 50, "lost", UNIT), bids) == NOTHING
+
+
+@pytest.mark.parametrize(
+    ("row", "bids", "bound"),
+    [
+        (
+            Logged("second", 50, "won", 80, 80, price=30),
+            (40, 60),
+            Bound(EXACT, 50, 50, 30, 30, 1, 1),
+        ),
+        (
+            Logged("second", 50, "won", 80, 10, price=30),
+            (40, 60),
+            Bound(OPEN, -20, 50, 30, 30, 1, 1),
+        ),
+        (
+            Logged("second", 50, "won", 80, 80, price=30),
+            (20, 60),
+            Bound(BOUNDED, 0, 50, 0, 30, 0, 1),
+        ),
+        (
+            Logged("second", 50, "won", 20, 20, price=30),
+            (20, 60),
+            Bound(BOUNDED, -10, 0, 0, 30, 0, 1),
+        ),
+        (Logged("second", 50, "lost", UNIT), (60, 60), Bound(BOUNDED, -60, 50, 0, 60, 0, 1)),
+        (
+            Logged("second", 50, "lost", UNIT, least=55),
+            (60, 60),
+            Bound(BOUNDED, -55, 45, 55, 55, 1, 1),
+        ),
+        (Logged("first", 50, "lost", UNIT), (60, 60), Bound(BOUNDED, -60, 40, 0, 60, 0, 1)),
+        (
+            Logged("first", 50, "won", 80, 80, price=50),
+            (60, 60),
+            Bound(EXACT, 20, 20, 60, 60, 1, 1),
+        ),
+    ],
+)
+def test_one_opportunity_by_hand(row: Logged, bids: tuple[int, int], bound: Bound) -> None:
+    """Surplus, cost and win, each with its least and its most."""
+    assert bounded(row, bids) == bound
+
+
+def test_a_purse_knows_when_money_may_have_ended() -> None:
+    """60 and 40 are there of 100; one nano more, or a third of one, may not be."""
+    row = Logged("second", 50, "lost", UNIT, day="one")
+    purse = Purse(100)
+    assert [purse.may_be_out(row, cost) for cost in (60, 40, 0, 1, 0)] == [
+        *(False, False, False),
+        *(True, True),
+    ]
+
+
+def test_a_day_has_a_purse_of_its_own() -> None:
+    """What may be spent on one day takes nothing from the next but from all of them."""
+    one, two = (Logged("second", 50, "lost", UNIT, day=day) for day in ("one", "two"))
+    purse = Purse(100, daily=50)
+    assert not purse.may_be_out(one, 50)
+    assert purse.may_be_out(one, 1)
+    assert not purse.may_be_out(two, 49)
+    assert purse.left == 0
+
+
+@given(some.lists(some.tuples(prices, prices), min_size=1, max_size=12))
+def test_parts_of_a_log_add_up(pairs: list[tuple[int, int]]) -> None:
+    """Without a limit of money two halves of a log come to what the whole does."""
+    rows = [
+        Logged("second", bid, "won", 12, 12, price=rival)
+        if rival < bid
+        else Logged("second", bid, "lost", 12)
+        for bid, rival in pairs
+    ]
+    other, half = Alternative("flat", 7), len(pairs) // 2
+    whole = summed(rows, other)
+    parts = summed(rows[:half], other), summed(rows[half:], other)
+    for name in ("low", "high", "exact", "auctions"):
+        assert getattr(whole, name) == sum(getattr(part, name) for part in parts)
+    assert whole.low <= whole.exact + sum(one.low - one.exact for one in parts) <= whole.high
+
+
+def test_sums_of_nothing_have_no_share() -> None:
+    """None of none is no share, and neither is there a mean."""
+    sums = Sums()
+    assert (sums.auctions, sums.exact_share) == (0, None)
+    sums.add(Bound(BOUNDED, -5, 5), out=False)
+    assert sums.exact_share == 0.0

@@ -6,6 +6,8 @@ import math
 
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as some
 
 from service.rehearsal import off_policy
 
@@ -92,3 +94,64 @@ def test_no_row_is_its_own_witness() -> None:
     done, other = off_policy.folded_means([1.0, 3.0, 5.0, 7.0], [0, 0, 0, 1], [1, 1, 0, 2])
     assert done.tolist() == [3.0, 3.0, 3.0, 0.0]
     assert other.tolist() == [7.0, 0.0, 3.0, 0.0]
+
+
+rewards = some.lists(some.floats(-100, 100), min_size=2, max_size=20)
+weights = some.floats(0.01, 50)
+
+
+@given(rewards, weights)
+def test_alike_weights_tell_as_much_as_their_number(reward: list[float], weight: float) -> None:
+    """Kish's number is that of the rows where all weigh the same, whatever they weigh."""
+    alike = [weight] * len(reward)
+    assert off_policy.effective(alike) == pytest.approx(len(reward))
+    assert off_policy.snips(alike, reward).mean == pytest.approx(float(np.mean(reward)), abs=1e-9)
+
+
+@given(some.lists(weights, min_size=1, max_size=20), some.floats(0.1, 9))
+def test_the_effective_number_lies_between_one_and_all(each: list[float], factor: float) -> None:
+    """By the inequality of Cauchy and Schwarz; a common factor changes nothing."""
+    found = off_policy.effective(each)
+    assert 1.0 - 1e-9 <= found <= len(each) + 1e-9
+    assert off_policy.effective([factor * one for one in each]) == pytest.approx(found)
+
+
+@given(rewards, some.floats(-50, 50))
+def test_a_shift_of_rewards_shifts_the_self_normalized(reward: list[float], shift: float) -> None:
+    """By just as much; the plain estimate is shifted by the mean weight times it."""
+    each = [0.5 + at % 3 for at in range(len(reward))]
+    moved = [one + shift for one in reward]
+    plain, other = off_policy.snips(each, reward), off_policy.snips(each, moved)
+    assert other.mean - plain.mean == pytest.approx(shift, abs=1e-9)
+    assert other.error == pytest.approx(plain.error, abs=1e-9)
+    gap = off_policy.ips(each, moved).mean - off_policy.ips(each, reward).mean
+    assert gap == pytest.approx(shift * float(np.mean(each)), abs=1e-9)
+
+
+@given(rewards)
+def test_a_model_of_nothing_leaves_the_plain_estimate(reward: list[float]) -> None:
+    """Doubly robust with guesses of 0 is inverse propensity weighting."""
+    each = [0.5 + at % 3 for at in range(len(reward))]
+    none = [0.0] * len(reward)
+    assert off_policy.doubly_robust(each, reward, none, none) == off_policy.ips(each, reward)
+
+
+@given(rewards, some.floats(0.1, 3))
+def test_cutting_weights_lowers_rewards_above_nothing(reward: list[float], most: float) -> None:
+    """Never raises them, and a cut above all weights changes nothing."""
+    gains = [abs(one) for one in reward]
+    each = [0.5 + at % 3 for at in range(len(reward))]
+    assert off_policy.ips(each, gains, most).mean <= off_policy.ips(each, gains).mean + 1e-9
+    assert off_policy.ips(each, gains, 3.0) == off_policy.ips(each, gains)
+
+
+def test_limits_are_those_of_the_normal_law() -> None:
+    """The mean and 1.96 standard errors to either side."""
+    low, high = off_policy.Estimate(10.0, 2.0).limits
+    assert (low, high) == pytest.approx((10 - 3.919928, 10 + 3.919928))
+
+
+def test_one_row_has_no_error_that_could_be_believed() -> None:
+    """Its limits are the whole line."""
+    found = off_policy.ips([2.0], [3.0])
+    assert (found.mean, found.error) == (6.0, float("inf"))

@@ -9,7 +9,13 @@ import pytest
 
 from service.learner.shading import equilibrium_revenue
 from service.rehearsal.rehearse import rehearse, stage_of
-from service.rehearsal.ring import Played, arena_figures, play, settled_at
+from service.rehearsal.ring import (
+    Played,
+    arena_figures,
+    equilibrium_unknown,
+    play,
+    settled_at,
+)
 from tests.rehearsal.orders import PLENTY, SCALE, config, market, order
 
 KNOWN: dict[str, Any] = {
@@ -123,3 +129,70 @@ def test_the_distance_is_nothing_in_equilibrium() -> None:
     assert found["bid_off"] == pytest.approx(0.0, abs=1e-6)
     assert found["revenue_off"] == pytest.approx(0.0, abs=0.01)
     assert found["revenue_due"] == pytest.approx(float(equilibrium_revenue(2)) * SCALE)
+
+
+@pytest.mark.parametrize(
+    ("changes", "bidders", "passes", "cap", "words"),
+    [
+        ({}, 2, 0, SCALE, None),
+        ({"floor": SCALE // 2}, 3, 0, SCALE, None),
+        ({"auction": "first", "floor": SCALE // 2}, 2, 0, SCALE, None),
+        ({"auction": "first", "floor": SCALE // 2}, 3, 0, SCALE, "two bidders only"),
+        ({"seller": "learns"}, 2, 0, SCALE, "move the floor"),
+        ({"values": {"law": "even", "low": 1, "high": SCALE}}, 2, 0, SCALE, "uniform from 0"),
+        ({"values": {"law": "events", "chance": 1, "amount": 1}}, 2, 0, SCALE, "do not know"),
+        ({}, 2, 1, SCALE, "a budget ran out"),
+        ({}, 2, 0, SCALE - 1, "a cap lies below"),
+    ],
+)
+def test_why_no_equilibrium_is_known(
+    changes: dict[str, Any], bidders: int, passes: int, cap: int, words: str | None
+) -> None:
+    """Each reason in words, and none where theory has an answer."""
+    said = {**private(), **changes}
+    found = equilibrium_unknown(said, [config("mean", bid_cap=cap)] * bidders, passes)
+    assert (found is None) if words is None else (words in (found or ""))
+
+
+def test_rivals_beside_the_learners_have_no_equilibrium() -> None:
+    """Theory knows of bidders that are alike, and these are not."""
+    said = {**private(), "rivals": {"law": "uniform", "low": 0, "high": SCALE}}
+    assert "others bid" in (equilibrium_unknown(said, [config("mean")] * 2, 0) or "")
+
+
+@pytest.mark.parametrize("auction", ["second", "first"])
+@pytest.mark.parametrize("rivals", [None, {"law": "uniform", "low": 0, "high": SCALE}])
+def test_an_arena_is_played_again_from_its_seeds(
+    auction: str, rivals: dict[str, Any] | None
+) -> None:
+    """Bids, floors and revenue to the nano, and progress adds up to all auctions."""
+    said = {**private(auction=auction), "rivals": rivals}
+    found, counted = [], list[int]()
+    for _ in range(2):
+        rngs = [np.random.default_rng(seed) for seed in range(3)]
+        configs = [config("mean", **KNOWN), config("flat", **KNOWN)]
+        found.append(play(said, configs, stage_of(said), 70, 20, rngs, counted.append))
+    assert np.array_equal(found[0].bids, found[1].bids)
+    assert np.array_equal(found[0].revenue, found[1].revenue)
+    assert counted == [20, 20, 20, 10] * 2
+    won = np.sum([one.taken.columns.won for one in found[0].players], axis=0)
+    assert won.max() == 1
+    paid = np.sum([one.taken.columns.paid for one in found[0].players], axis=0)
+    # What a rival outside pays is the seller's too, and no bidder's cost.
+    assert (paid <= found[0].revenue).all()
+
+
+def test_nobody_is_sold_to_below_the_floor() -> None:
+    """Two flat bids of a half under a floor above it: no bids, no revenue, all passes."""
+    said = private(floor=SCALE // 2 + 1)
+    rngs = [np.random.default_rng(seed) for seed in range(3)]
+    flat = config("flat", pacing={"method": "none"})
+    played = play(said, [flat, flat], stage_of(said), 30, 10, rngs, lambda count: None)
+    assert (played.revenue.sum(), played.bids.sum()) == (0, 0)
+    assert [dict(one.passes) for one in played.players] == [{"under_floor": 30}] * 2
+
+
+@pytest.mark.parametrize("rounds", [1, 5, 19])
+def test_a_short_arena_is_one_window(rounds: int) -> None:
+    """Too few auctions to split are settled from the first one."""
+    assert settled_at(np.full((rounds, 2), SCALE)) == 0

@@ -10,6 +10,9 @@ from functools import lru_cache
 
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import settings as limits
+from hypothesis import strategies as some
 
 from service.learner.shading import equilibrium_revenue
 from service.rehearsal.seller import LearningSeller
@@ -68,3 +71,54 @@ def test_it_hears_nothing_below_its_own_floor() -> None:
         sellers[0].saw(second)
         sellers[1].saw(second if second > floor else 0)
     assert sellers[0].floor == sellers[1].floor > 0
+
+
+def test_a_new_seller_asks_for_nothing() -> None:
+    """It has to see what bids are before it may ask for more than 0."""
+    seller = LearningSeller(2, 1000, TOP)
+    assert (seller.floor, seller.best) == (0, 0)
+
+
+@pytest.mark.parametrize("rounds", [0, 1, 2])
+def test_a_season_too_short_to_learn_keeps_its_floor(rounds: int) -> None:
+    """Without a whole stage before the last nothing is ever decided."""
+    seller = LearningSeller(2, rounds, TOP)
+    for _ in range(5):
+        seller.saw(TOP)
+    assert seller.floor <= TOP
+
+
+@limits(max_examples=25)
+@given(
+    bidders=some.integers(2, 6),
+    bids=some.lists(some.integers(0, 2 * TOP), min_size=1, max_size=120),
+)
+def test_a_floor_never_falls_and_never_passes_the_top(bidders: int, bids: list[int]) -> None:
+    """Whatever is bid, also above the top it reckons with."""
+    seller, before = LearningSeller(bidders, len(bids), TOP), 0
+    for bid in bids:
+        seller.saw(bid)
+        assert before <= seller.floor <= TOP
+        assert seller.floor <= seller.best <= TOP or seller.best == 0
+        before = seller.floor
+
+
+@given(bids=some.lists(some.integers(0, TOP), min_size=40, max_size=40))
+def test_within_a_stage_order_does_not_matter(bids: list[int]) -> None:
+    """The first stage of 900 auctions is 30 long, and only the law of what was seen counts."""
+    first, other = LearningSeller(2, 900, TOP), LearningSeller(2, 900, TOP)
+    stage = bids[:30]
+    for bid in stage:
+        first.saw(bid)
+    for bid in sorted(stage, reverse=True):
+        other.saw(bid)
+    assert (first.floor, first.best) == (other.floor, other.best)
+
+
+def test_where_all_bid_alike_no_floor_is_needed() -> None:
+    """The second bid already pays 0.7 of the top, so a floor of nothing stays among the best."""
+    seller = LearningSeller(2, 20_000, TOP)
+    for _ in range(20_000):
+        seller.saw(7 * TOP // 10)
+    assert seller.floor == 0
+    assert seller.best <= 7 * TOP // 10
