@@ -20,6 +20,7 @@ def inside(
     """
     if not opportunity.currencies:
         return opportunity, PLAIN
+    # Without a floor or a price nothing is asked of its currency, so no rate may be missing.
     floored = opportunity.floor > 0 or opportunity.price is not None
     floor_rate = rates.at(opportunity.floor_currency or own, own, wall_ms) if floored else WHOLE
     # Its own currency needs no rate, so no rate can be wrong.
@@ -28,6 +29,7 @@ def inside(
     currency, rate = next(((c, r) for c, r in known if r is not None), ("", None))
     if rate is None or floor_rate is None:
         return None
+    # The floor may be in another currency than the bid: each has its own rate.
     asked = Scale(opportunity.floor_currency or own, floor_rate, opportunity.multiplier)
     price = None if opportunity.price is None else asked.worth(opportunity.price)
     put = opportunity._replace(floor=asked.worth(opportunity.floor), price=price)

@@ -89,6 +89,7 @@ class Hindsights:
             Malformed: The alternative makes no sense for this line item, or the span is empty.
             Overloaded: Too many ask already.
         """
+        # Each that waits holds a connection of a client open: better a clear no.
         if self._waiting >= WAITING_MAX:
             raise Overloaded("too many questions of hindsight wait already")
         self._waiting += 1
@@ -132,6 +133,7 @@ class Hindsights:
             config["value"]["typical"],
             config.get("losses", "bare") == "priced",
         )
+        # Of the money there was at the start of the span, what was spent before it is gone.
         left = max(0, facts.balance["target"] - spent)
         other = Alternative(question.kind, question.price, config["bid_cap"])
         ask = Ask(other, worth, left, config["daily_budget"])
@@ -184,6 +186,7 @@ def logged(line: Line, config: Mapping[str, Any], service_ms: int) -> Logged:
     floor, held = decision["floor_held"], decision["held"]
     if floor is None:
         floor = fees.gross(decision["floor"]) if decision["floor"] else 0
+    # Where no hold was kept with the decision, it is worked out from what was sent.
     if held is None and not passed:
         held = said.body.get("bid") or fees.gross(decision["price"])
     low, high = _worth(line, config, service_ms)
@@ -215,6 +218,7 @@ def _worth(line: Line, config: Mapping[str, Any], service_ms: int) -> tuple[int,
     amount = min(max(0, said.amount), ceiling)
     if value["arrival"] == "once":
         return (amount, amount) if said.valued else (0, ceiling)
+    # By service time, which stands still with the service, as the windows do.
     closed = service_ms - said.paid_ms > value["window_ms"]
     return amount, amount if closed else ceiling
 

@@ -97,12 +97,15 @@ def priced(
     if isinstance(cleared, str):
         return Unpriced(cleared, sale, cut=True)
     sent = leaving(scale, fees.net(cleared.price), asked, fixed=sale.auction == FIXED)
+    # A nano here may be less than the least price of another currency.
     if sent <= 0:
         return Unpriced("price_rounds_to_zero", sale)
     # Between two currencies a bid at the floor may round to just below it.
     if scale.worth(sent) < opportunity.floor:
         return Unpriced("under_floor", sale)
+    # Shaded prices are below what the impression is worth; comparisons need the latter.
     worth = proposed.price if proposed.value is None else proposed.value
+    # Held is what leaves, turned back: rounding has made it a little less than was cleared.
     held = Cleared(fees.gross(scale.held(sent)), cleared.set_by)
     return Priced(sale, held, worth, proposed.price, sent)
 

@@ -39,6 +39,7 @@ def order_of(wish: Mapping[str, Any], config: Config, curve: Config | None = Non
     Raises:
         Malformed: A policy that cannot work, or a market that does not fit it.
     """
+    # Defaults are filled in before the changes, so a change never meets a missing part.
     base, _ = filled(config)
     policies = [
         {"name": one["name"], "config": _policy(base, one["changes"])} for one in wish["policies"]
@@ -64,6 +65,7 @@ def own_law(state: bytes, config: Config, auction: str) -> dict[str, Any]:
         raise Malformed("nothing_known", "No auction has told anything of competing bids yet.")
     # The source that told most, since one law stands for all.
     best = max(sources, key=lambda one: float(one["auctions"]))
+    # From nothing, so that a chance that falls by luck of its cell is kept level.
     prices, chances = [0], [0.0]
     for row in best["prices"]:
         chance = row["win_probability"]["estimate"]
@@ -71,6 +73,7 @@ def own_law(state: bytes, config: Config, auction: str) -> dict[str, Any]:
             prices.append(row["price_cpm_nanos"])
             chances.append(max(chances[-1], float(chance)))
     beyond = 2 * int(config["bid_cap"]) + 1
+    # Beyond what the line item could bid, with room for policies of a higher cap.
     rivals = {"law": "empirical", "prices": prices[1:], "chances": chances[1:], "beyond": beyond}
     if len(prices) < 2:
         raise Malformed("nothing_known", "The curve says nothing of any price yet.")
@@ -117,5 +120,6 @@ def _events(config: Config, learnt: object) -> dict[str, Any]:
     if isinstance(learnt, Mapping) and learnt.get("estimate_cpm_nanos"):
         mean = learnt["estimate_cpm_nanos"]
     amount = max(int(value["typical"]), 1)
+    # A mean above the usual amount cannot be reached by events of it, only come close.
     chance = min(float(mean) / amount, 1.0)
     return {"law": "events", "chance": chance, "amount": amount}

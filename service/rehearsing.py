@@ -73,6 +73,7 @@ class Rehearsals:
         order = await self._orders.read(lambda connection: order_from(connection, wish))
 
         def give(connection: Writing) -> dict[str, Any]:
+            # A transaction that is tried again must not begin its rehearsal twice.
             begun.clear()
             most = self._stalls.processes + self._stalls.waiting_max
             if rehearsals.open_of(connection, self._worker) >= most:
@@ -98,6 +99,7 @@ class Rehearsals:
         answer = await self._orders.give(
             give, repeat_of(actor, idempotency, {"call": "rehearse", "wish": dict(wish)})
         )
+        # Only after the commit, or a thread would look for a row that is not there yet.
         for number, found in begun:
             self._pool.submit(self._play, number, found)
         return answer
@@ -186,6 +188,7 @@ class Rehearsals:
                     self._children.pop(number, None)
                 child.kill()
                 handing.join()
+        # Another worker may have stopped it, which only the database knows.
         row = database.read(lambda c: rehearsals.one(c, number))
         if self._closed:
             state, why = "lost", "the worker that played it has stopped"
@@ -281,6 +284,7 @@ def order_from(connection: Reading, wish: Mapping[str, Any]) -> dict[str, Any]:
     )
     if not rows:
         raise Conflict("nothing_logged", "The line item has made no decision that is still kept.")
+    # A log of one decision lasts a moment, and a span of nothing could not be divided.
     span_ms = max(rows[-1]["at_ms"] - rows[0]["at_ms"] + 1, 1)
     market = {**order["market"], "span_ms": span_ms, "outcome_delay_ms": 1}
     return {**order, "market": market, "log": rows, "log_fees": config.get("fees")}
@@ -303,4 +307,5 @@ def _hand_over(child: subprocess.Popen[str], order: Mapping[str, Any]) -> None:
 
 def _tail(child: subprocess.Popen[str]) -> str:
     said = child.stderr.read() if child.stderr is not None else ""
+    # The last line of a traceback names the fault; the rest is for the log of its author.
     return said[-TAIL_CHARACTERS:].strip().rpartition("\n")[2]

@@ -25,6 +25,7 @@ def main() -> int:
     """Play the order that stands on the first line; returns the exit code."""
     os.nice(NICE)
     order: dict[str, Any] = json.loads(sys.stdin.readline())
+    # A daemon, so that it keeps nobody here once the result is written.
     threading.Thread(target=_leave_with_the_other_end, daemon=True).start()
     telling = _Telling()
     # Read only now, so that it is nice already while it loads.
@@ -55,6 +56,7 @@ class _Telling:
 def _leave_with_the_other_end() -> None:
     # Nobody writes to it after the order: the read returns when the other end is closed.
     sys.stdin.read()
+    # At once and without clean-up: the other thread may be deep in a long computation.
     os._exit(GONE)
 
 

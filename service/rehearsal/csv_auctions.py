@@ -30,6 +30,7 @@ FEATURES_MAX = 32
 TEXT_MAX = 64
 TOLD_MAX = 20
 STEP_MS = 1000
+# Fixed, so that a file is rehearsed alike on every machine and needs no database.
 HASH_KEY = b"rehearsal"
 EXACT = ("every outcome and cost: the least bid that wins is known of every auction read",)
 ASSUMED = (
@@ -135,6 +136,7 @@ def _next(reader: csv.DictReader[str], told: Told) -> Mapping[str | None, object
     """The next row, what is wrong with it, or None at the end."""
     try:
         row = next(reader, None)
+    # One field without end must not take the rest of a long file with it.
     except csv.Error as error:
         told.rows += 1
         return f"not a row of CSV: {error}"
@@ -186,6 +188,7 @@ def _numbers(said: Mapping[str, str]) -> tuple[int, int | None, int, int | None]
 
 def _price(text: str) -> int | None:
     try:
+        # Rounded up, a bid of just this price is enough; rounded down it might lose.
         price = money.price(text, money.UP)
     except money.NotMoney:
         return None
@@ -207,6 +210,7 @@ def _moment(text: str, before_ms: int | None) -> int | None:
         at = datetime.fromisoformat(text)
     except ValueError:
         return None
+    # Without an offset nobody knows which day the money of a day belongs to.
     return None if at.tzinfo is None else round(at.timestamp() * 1000)
 
 
@@ -222,4 +226,5 @@ def _feature(text: str) -> Feature:
         number = float(text)
     except ValueError:
         return text[:TEXT_MAX]
+    # Not a number and infinity are text to a hash, as they equal nothing or everything.
     return number if number == number and abs(number) != float("inf") else text[:TEXT_MAX]

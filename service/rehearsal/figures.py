@@ -59,6 +59,7 @@ def run_of(
     ends = np.unique(np.linspace(0, rounds, POINTS + 1).astype(np.int64))[1:]
     worth = np.where(columns.won, columns.worth, 0)
     gained = worth - columns.paid
+    # A pass is kept out of the mean bid, or frugal pacing would look like bidding low.
     made = columns.bid != PASSED
     bids = _between(np.where(made, columns.bid, 0), ends), _between(made, ends)
     bounded = int((~columns.told).sum())
@@ -75,6 +76,7 @@ def run_of(
         int((columns.won & ~columns.valued).sum()),
         int(columns.unknown.sum()),
         bounded,
+        # One unknown price or value leaves every sum over all auctions unknown.
         None if bounded or not columns.valued.all() else _best(columns, config, auction),
         *untold,
     )
@@ -95,6 +97,7 @@ def policy_figures(
         "value": money_figure([run.value for run in runs]),
         "wins": figure([run.wins for run in runs]),
         "bids": figure([run.bids for run in runs]),
+        # What nobody reported no budget knows of, so it fills none.
         "budget_share": figure(
             [(part - run.untold_paid) / budget for part, run in zip(spend, runs, strict=True)]
         ),
@@ -110,6 +113,7 @@ def policy_figures(
 
 def differences(names: Sequence[str], runs: Sequence[Sequence[Run]]) -> list[dict[str, Any]]:
     """What each further policy earned more than the first one, seed by seed."""
+    # In pairs, as policies meet the same auctions: luck that both share cancels.
     final = [double([run.surplus[-1] if run.rounds else 0.0 for run in of]) for of in runs]
     return [
         {"policy": name, "than": names[0], "surplus": money_figure(one - final[0])}
@@ -120,6 +124,7 @@ def differences(names: Sequence[str], runs: Sequence[Sequence[Run]]) -> list[dic
 def figure(numbers: Sequence[float] | Numbers) -> dict[str, Any]:
     """Mean over the seeds, its standard error, and the span that holds 80 % of them."""
     each = double(numbers)
+    # One seed says nothing of its own luck: no error rather than one of 0.
     error = float(each.std(ddof=1) / np.sqrt(each.size)) if each.size > 1 else None
     low, high = np.percentile(each, [LOW, HIGH])
     return {"mean": float(each.mean()), "error": error, "low": float(low), "high": float(high)}
@@ -146,6 +151,7 @@ def _regret(runs: Sequence[Run], surplus: Sequence[float]) -> dict[str, Any]:
     regrets = [one.surplus - own for one, own in zip(known, surplus, strict=True)]
     return {
         "regret": money_figure(regrets),
+        # The median is a bid that some seed would have made; a mean may be none at all.
         "best_fixed": {
             "bid_cpm_nanos": round(float(np.median([one.bid for one in known]))),
             "surplus": money_figure([one.surplus for one in known]),
@@ -192,6 +198,7 @@ def _curve(runs: Sequence[Run]) -> list[dict[str, Any]]:
 
 def _best(columns: Columns, config: Mapping[str, Any], auction: str) -> FixedBid:
     fees, least = Fees.of(config.get("fees")), columns.least
+    # The best bid pays fees as well; without them it would beat any policy too easily.
     if fees != NONE:
         least = np.array([fees.gross(one) for one in least.tolist()], dtype=np.int64)
     limits = int(config["bid_cap"]), int(config["budget"])

@@ -75,6 +75,7 @@ def ground(market: Said, rng: Generator, rounds: int) -> Ground:
 
 def moments(market: Said, rounds: int) -> Nanos:
     """When auctions come: evenly over the span, in milliseconds."""
+    # None at either end: a flight that is just beginning or over would take no bid.
     at_ms = np.arange(1, rounds + 1, dtype=np.int64) * int(market["span_ms"]) // (rounds + 1)
     return np.asarray(at_ms, dtype=np.int64)
 
@@ -109,6 +110,7 @@ def _moving(course: Callable[[float, int], Numbers]) -> Callable[[Said, Generato
     def draw(market: Said, rng: Generator, rounds: int) -> Drawn:
         factor = course(float(market["change"]), rounds)
         most = float(factor.max())
+        # A chance above 1 is certain and no more, so a change may be cut short by it.
         # Drawn at the highest rate and thinned, so that amounts keep their law.
         raised = {**market["values"], "chance": min(market["values"]["chance"] * most, 1.0)}
         full, rate = values_of(raised), double(factor / most)
@@ -137,6 +139,7 @@ def _coin_flip(market: Said, rng: Generator, rounds: int) -> Drawn:
     """
     amount = int(market["values"]["amount"])
     low, high = ((0.5 + part * market["gap"]) * amount for part in (0.5, 1.5))
+    # One coin for both price and value: that what is dear is worthless is the trap.
     good: NDArray[np.bool_] = rng.random(rounds) < 0.5
     competing = np.where(good, math.ceil(low), math.ceil(high)).astype(np.int64)
     values = np.where(good, amount, 0).astype(np.int64)
@@ -171,12 +174,14 @@ def delays(mean_ms: int, rng: Generator, rounds: int) -> list[int]:
     """How late each value comes, in milliseconds."""
     if not mean_ms:
         return [0] * rounds
+    # Rounded up, for no value comes at the very moment of its win here.
     late: list[int] = np.ceil(rng.exponential(mean_ms, rounds)).astype(np.int64).tolist()
     return late
 
 
 def told(market: Said, rng: Generator, rounds: int) -> list[int | None]:
     """How late each outcome is told, in milliseconds; None for never."""
+    # Chance is drawn only where it is needed, so that adding one kind of lateness moves no other.
     delay_ms, lost_share = int(market["outcome_delay_ms"]), float(market["lost_share"])
     if not lost_share:
         return [delay_ms] * rounds

@@ -71,6 +71,7 @@ def mean_value(rows: Sequence[Logged], worth: Worth, risk: float = RISK) -> tupl
     """Limits of the mean value of an impression bought whose value is known, in nanos."""
     values = [row.low for row in rows if row.result == WON and not row.open]
     total, known = float(sum(values)), float(len(values))
+    # Of values far above the cap hardly any is seen, and a bound by their range says nothing.
     if worth.ceiling <= RARE_FROM * worth.cap:
         hits = min(total / worth.ceiling, known)
         low, high = count_sequences.bernoulli_interval(hits, known, risk, NARROWEST)

@@ -56,6 +56,7 @@ def bounded(row: Logged, bids: tuple[int, int], unseen: tuple[int, int] | None =
     low_bid, high_bid = bids
     if high_bid <= row.loses_to or high_bid <= 0:
         return NOTHING
+    # Between the two prices it may go either way, and winning may be worse than losing.
     sure = low_bid >= row.wins_from
     pays_low, pays_high = row.pays(low_bid, high_bid)
     bought = row.result == WON
@@ -88,6 +89,7 @@ class Purse:
         if not cost_high:
             return self._out(row.day, 0)
         out = self._out(row.day, cost_high)
+        # The dearest course, for money that lasts through that one lasts through all.
         self.left -= cost_high
         self.days[row.day] = self.days.get(row.day, 0) + cost_high
         return out

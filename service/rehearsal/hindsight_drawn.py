@@ -64,6 +64,7 @@ class Refused:
 
 def ripe(rows: Sequence[Logged]) -> list[Logged]:
     """What came before the first impression whose window is open, and of which word has come."""
+    # Leaving out open windows alone would keep what converts fast, which is not chosen by chance.
     opens = min((row.at_ms for row in rows if row.open), default=None)
     return [
         row
@@ -110,6 +111,7 @@ def _of_arm(rows: Sequence[Logged]) -> Drawn:
 
 
 def _of_band(rows: Sequence[Logged], price: int) -> Drawn | None:
+    # A law over many prices hardly ever draws just this one: a band is what it can speak of.
     reach = price // BAND_SHARE
     low, high = max(1, price - reach), price + reach
     # The chance of a pass under the floor is that of all bids below it, in law and band alike.

@@ -31,6 +31,7 @@ class ExponentialBids:
 
     def draw(self, rng: Generator, count: int) -> Nanos:
         """So many independent competing bids, rounded up."""
+        # Rounded down, a bid a fraction too low would win.
         return np.asarray(np.ceil(rng.exponential(self.mean, count)), dtype=np.int64)
 
 
@@ -51,6 +52,7 @@ class EmpiricalBids:
 
     def draw(self, rng: Generator, count: int) -> Nanos:
         """So many independent competing bids, each a price of the curve."""
+        # The curve turned around: the least price whose chance reaches an even draw.
         places = np.searchsorted(self.chances, rng.random(count), side="left")
         return np.append(self.prices, self.beyond)[places]
 

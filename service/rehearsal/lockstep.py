@@ -89,6 +89,7 @@ class _Table:
         """Play the auctions of one block on one snapshot, then learn from them."""
         price, under_floor = self._prices(), np.zeros(self._free.size)
         for turn in range(start, end):
+            # The snapshot stands for a block, but money is looked at before every bid.
             bid = np.minimum(price, self._free)
             made = (bid > 0) & (bid >= self._floor)
             if not made.all():
@@ -102,6 +103,7 @@ class _Table:
     def columns(self, seed: int, ground: Ground) -> Columns:
         """What one seed did."""
         won = np.ascontiguousarray(self._won[:, seed])
+        # In a drawn market everything is known of every auction.
         every = np.ones(won.size, np.bool_)
         paid = np.where(won, ground.least, 0)
         bids = np.ascontiguousarray(self._bids[:, seed])

@@ -58,6 +58,7 @@ def snips(weights: ArrayLike, rewards: ArrayLike) -> Estimate:
     """sum(w r) / sum(w), which a shift of all rewards moves by itself alone; slightly biased."""
     w, r = doubles(weights, rewards)
     total = float(w.sum())
+    # No row was likely under the alternative: there is nothing to take a mean of.
     if total <= 0.0:
         return Estimate(math.nan, math.nan)
     mean = float(w @ r) / total
@@ -94,6 +95,7 @@ def folded_means(rewards: ArrayLike, cells: ArrayLike, other: ArrayLike) -> tupl
     """
     (r,) = doubles(rewards)
     done, wish = np.asarray(cells, np.int64), np.asarray(other, np.int64)
+    # Every other row, so that both halves see all times of the log.
     half = np.arange(r.size) % 2
     size = int(max(done.max(initial=0), wish.max(initial=0))) + 1
     guess = np.zeros((2, size))
@@ -105,6 +107,7 @@ def folded_means(rewards: ArrayLike, cells: ArrayLike, other: ArrayLike) -> tupl
 
 
 def _mean(terms: Numbers) -> Estimate:
+    # One row tells nothing of its own error, and an interval without end says so.
     if terms.size < 2:
         return Estimate(float(terms.mean()) if terms.size else math.nan, math.inf)
     return Estimate(float(terms.mean()), float(terms.std(ddof=1)) / math.sqrt(terms.size))

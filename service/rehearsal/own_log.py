@@ -78,7 +78,9 @@ def auctions(rows: Sequence[Logged], fees: Fees) -> list[Auction]:
 
 def _auction(row: Logged, at_ms: int, mean: int, fees: Fees) -> Auction:
     least, most_lost, least_won = _known(row, fees)
+    # A value that comes without its win is a mistake of whoever reported it.
     value = row.value if row.kind == "won" else None
+    # Clocks of two machines differ, and news cannot come before its auction.
     told_ms = 0 if row.told_ms is None else max(0, row.told_ms - at_ms)
     late_ms = 0 if row.valued_ms is None else max(0, row.valued_ms - at_ms)
     worth = mean if value is None else value
@@ -90,6 +92,7 @@ def _auction(row: Logged, at_ms: int, mean: int, fees: Fees) -> Auction:
 
 def _known(row: Logged, fees: Fees) -> tuple[int, int | None, int | None]:
     """The least bid that wins, and the limits of it where it was not told; net."""
+    # Only in second price is what a win cost the bid of somebody else.
     told = row.price if row.kind == "won" and row.auction == "second" else row.to_win
     if told is not None:
         return fees.net(told), None, None

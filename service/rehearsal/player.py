@@ -30,6 +30,7 @@ from service.ledger.days import local_day
 from service.pricing import Priced, Put, priced
 from service.rehearsal.taken import PASSED, Taken
 
+# Windows close strictly after their length, so two milliseconds on this one is over.
 AT_ONCE_MS = 1  # The window of values that come with their win.
 ONE_BLOCK_MS = 2
 
@@ -100,11 +101,13 @@ class Stage:
 
 def staged(config: Mapping[str, Any], stage: Stage) -> dict[str, Any]:
     """A line item's configuration as it is rehearsed: its flight is the rehearsal."""
+    # A flight of weeks would pace the money of weeks over one rehearsed day.
     flight = {**config["flight"], "starts_ms": stage.starts_ms}
     flight["ends_ms"] = stage.starts_ms + stage.span_ms if flight.get("ends_ms") else None
     value = dict(config["value"])
     if stage.at_once:
         value["window_ms"] = AT_ONCE_MS
+    # Nobody watches a rehearsal, so no tripwire may stop it halfway and spoil its figures.
     changed = {"flight": flight, "value": value, "auction": stage.auction, "tripwires": None}
     return {**config, **changed, "spend_on": "won", "kin": None}
 
@@ -139,6 +142,7 @@ class Player:
         self._due: list[tuple[int, int, Lesson, int, str]] = []
         self._lessons = list[Lesson]()
         self.taken, self.passes = Taken(), Counter[str]()
+        # The lesson of creation carries the guess; a memory that is handed on has had it.
         begun = [] if memory is not None else [_created(full, stage.starts_ms)]
         self.memory = fold(memory or Memory.fresh(), begun, self._rules)
         self.snapshot = ready(self.memory, self.terms)
@@ -164,11 +168,13 @@ class Player:
         if free <= 0:
             self.passes["budget_spent" if not self._purse.held else "budget_held"] += 1
             return PASSED
+        # Recorded prices are in its own currency and net of fees already: nothing is turned.
         put = Put(opportunity, opportunity)
         found = priced(self.snapshot, self.limits, put, free, self._generator)
         if isinstance(found, Priced):
             return found.sent
         self.passes[found.reason] += 1
+        # Such a pass is a round all the same, which confidence bounds count by.
         if found.reason == "under_floor":
             body = {"rounds": 0, "under_floor": 1}
             self._tell(Lesson("tick", body, self._now(auction.at_ms)))
@@ -176,8 +182,10 @@ class Player:
 
     def settle(self, auction: Auction, bid: int) -> None:
         """Take in what became of a bid: the money at once, the news when it comes."""
+        # Of a bid of -1 it may be unknown whether it wins; a pass has lost for sure.
         outcome = False if bid == PASSED else auction.won_by(bid)
         won, unknown = outcome is True, outcome is None
+        # The market is net and the budget gross, as with an exchange.
         net = 0 if not won else bid if self._stage.auction == "first" else auction.least
         fees = self.limits.fees
         paid = fees.gross(net) if won else 0
@@ -203,6 +211,7 @@ class Player:
         self.snapshot = ready(self.memory, self.terms)
 
     def _now(self, at_ms: int) -> int:
+        # The first lesson of a block sets the moment that all of it shares.
         # Where all is told at once, a block is one moment, as its order within teaches nothing.
         if self._stage.at_once and self._lessons:
             return self._clock_ms
@@ -229,6 +238,7 @@ class Player:
             self._later(Lesson("value", body, heard_ms, heard_ms), 0, day, 0)
 
     def _outcome(self, auction: Auction, hold: int, paid: int | None, at_ms: int) -> Lesson:
+        # Lessons are gross, so that a curve of rivals is one of what they would cost us.
         least = self.limits.fees.gross(auction.least)
         told = least if self._priced_losses and auction.told else None
         kind = "lost" if paid is None else "won"
@@ -240,6 +250,7 @@ class Player:
             body["features"] = b64encode(hashing.to_bytes(auction.hashed)).decode("ascii")
         if auction.hint is not None:
             body["hint"] = auction.hint
+        # An unknown value is no value of nothing, which would drag the mean down.
         if paid is not None and auction.value is None:
             body["only"] = "market"
         law, tree = self.snapshot.law, self.terms.tree
@@ -253,6 +264,7 @@ class Player:
             self._lessons.append(lesson)
             self._purse.release(hold, day, paid)
             return
+        # Of news of one moment the first sent comes first: lessons themselves do not compare.
         self._order += 1
         entry = (lesson.at_ms, self._order, lesson, hold, day)
         heapq.heappush(self._due, entry)
@@ -261,6 +273,7 @@ class Player:
         self._lessons.append(lesson)
 
     def _hear(self, now_ms: int) -> None:
+        # Heard before the bid is made, since money that came back may be bid at once.
         while self._due and self._due[0][0] <= now_ms:
             _, _, lesson, hold, day = heapq.heappop(self._due)
             self._lessons.append(lesson)
@@ -297,6 +310,7 @@ class _Purse:
         return self._of_day[self._day(at_ms)]
 
     def _day(self, at_ms: int) -> str:
+        # Without a limit by day the zone is never looked up, which every bid would pay for.
         return "" if self._daily is None else local_day(at_ms, self._zone)
 
 

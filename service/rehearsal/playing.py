@@ -25,6 +25,7 @@ def played(order: Mapping[str, Any], advance: Callable[[int], None]) -> dict[str
         return {**told, "assumed": [*more, *told["assumed"]]}
     rows = [own_log.Logged(**row) for row in log]
     found = own_log.auctions(rows, Fees.of(order["log_fees"]))
+    # Days and flights are those of the log, so its own clock is the clock.
     starts_ms = found[0].at_ms if found else 0
     told = replay(order, pieces(found, order["block"]), advance, starts_ms)
     said = own_log.says(rows)

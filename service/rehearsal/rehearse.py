@@ -96,6 +96,7 @@ def replay(
         [Player(one["config"], stage, rng_of(order, seed, at)) for seed in range(order["seeds"])]
         for at, one in enumerate(policies)
     ]
+    # The log may be read once only, so all players go through it side by side.
     for piece in auctions:
         for player in (player for table in tables for player in table):
             for auction in piece:
@@ -109,6 +110,7 @@ def replay(
 
 def rng_of(order: Order, seed: int, policy: int | None = None) -> Generator:
     """The chance of a market's seed, or that of a policy on it."""
+    # A list of numbers seeds streams apart; a sum of them would have some coincide.
     return np.random.default_rng([order["seed"], seed, 0 if policy is None else 1 + policy])
 
 
@@ -122,6 +124,7 @@ def _on_ground(
 ) -> tuple[list[Run], Counter[str]]:
     stage, rounds = stage_of(order["market"]), order["rounds"]
     runs, passes = list[Run](), Counter[str]()
+    # Much faster, and held to the same bids by a test.
     if lockstep.fits(config, stage):
         size = max(1, TOGETHER // rounds)
         for first in range(0, order["seeds"], size):
@@ -160,6 +163,7 @@ def _before_seller(
     for seed in range(order["seeds"]):
         rng = rng_of(order, seed)
         auctions = ground({**market, "kind": "iid"}, rng, rounds).auctions()
+        # Each rival is drawn apart, for the seller needs the second bid and not only the highest.
         others = market["bidders"] - 1
         rivals = bids_of(market["rivals"]).draw(rng, rounds * others).reshape(rounds, others)
         player = Player(config, stage, rng_of(order, seed, at))
@@ -182,11 +186,13 @@ def _sell(
     revenue, block = 0, order["block"]
     for turn, (auction, bids) in enumerate(zip(auctions, rivals.tolist(), strict=True), start=1):
         floor = max(seller.floor, auction.floor)
+        # Nobody may see the least winning bid before bidding, so the floor stands in for it.
         bid = player.bid(auction._replace(floor=floor, least=floor))
         player.settle(auction._replace(floor=floor, least=max(floor, bids[-1])), bid)
         highest, second = sorted([max(bid, 0), *bids], reverse=True)[:2]
         if highest >= floor:
             revenue += max(second, floor) if order["market"]["auction"] == "second" else highest
+        # It sees the second bid of all, as its method wants, and cuts it at its floor itself.
         seller.saw(second)
         if turn % block == 0 or turn == len(auctions):
             player.end_block()
@@ -206,6 +212,7 @@ def _arena(order: Order, advance: Advance) -> dict[str, Any]:
     by_policy = [[table[at] for table in tables] for at in range(len(configs))]
     runs = [_runs(of, config, stage) for of, config in zip(by_policy, configs, strict=True)]
     passes = [_passes(of) for of in by_policy]
+    # Theory knows of no budgets: one auction passed for want of money is outside of it.
     poor = sum(one["budget_spent"] + one["budget_held"] for one in passes)
     why = ring.equilibrium_unknown(market, configs, poor)
     return {**_told(order, runs, passes), "arena": _arena_told(found, why)}

@@ -79,6 +79,7 @@ def play(
     for turn in range(rounds):
         floor = int(market["floor"]) if seller is None else seller.floor
         sold = [drawn.auction(turn, one, floor) for one in range(len(players))]
+        # All bid before anything is settled: the bids are sealed.
         made = [player.bid(one) for player, one in zip(players, sold, strict=True)]
         rival = int(drawn.rivals[turn])
         least = _least(made, rival, floor, drawn.lots[turn])
@@ -97,6 +98,7 @@ def play(
 
 def arena_figures(played: Played, market: Said, auction: str) -> dict[str, Any]:
     """Revenue, whether the bidders settled, and how far from equilibrium they ended."""
+    # The first half is for learning; theory speaks of where they end.
     half = len(played.revenue) // 2
     return {
         "revenue": float(played.revenue.sum()),
@@ -119,6 +121,7 @@ def settled_at(bids: Nanos) -> int | None:
     luck = LUCK * np.sqrt(variances + variances[-1])
     allowed = SETTLED_WITHIN * np.maximum(means[-1], 1.0) + luck
     near = (np.abs(means - means[-1]) <= allowed).all(axis=1)
+    # The last window that is far off counts, for passing by on the way is no settling.
     far = np.flatnonzero(~near)
     first = int(far[-1]) + 1 if far.size else 0
     return int(sum(len(one) for one in windows[:first])) if first <= SETTLED_BY else None
@@ -134,6 +137,7 @@ def equilibrium_unknown(market: Said, configs: Sequence[Said], passes: int) -> s
         return "a floor in first price is solved here for two bidders only"
     if passes:
         return "a budget ran out"
+    # A cap that binds keeps the highest values from being bid at all.
     caps = [one["bid_cap"] for one in configs]
     return "a cap lies below the highest value" if min(caps) < market["values"]["high"] else None
 
@@ -212,6 +216,7 @@ def _seller(
 ) -> LearningSeller | None:
     if market.get("seller") != "learns":
         return None
+    # Its law needs two bidders at least, or there is no second bid to learn from.
     bidders = players + bool(market.get("rivals"))
     return LearningSeller(max(2, bidders), rounds, max(one["bid_cap"] for one in configs))
 
@@ -220,6 +225,7 @@ def _least(made: list[int], rival: int, floor: int, lot: Nanos) -> list[int]:
     found = []
     for own in range(len(made)):
         others = [
+            # An equal bid ahead in the lot needs one nano more to be beaten.
             bid + int(bid == made[own] and lot[at] < lot[own])
             for at, bid in enumerate(made)
             if at != own and bid != PASSED
@@ -230,6 +236,7 @@ def _least(made: list[int], rival: int, floor: int, lot: Nanos) -> list[int]:
 
 def _paid(made: list[int], rival: int, floor: int, auction: str) -> int:
     bids = sorted([bid for bid in made if bid != PASSED] + ([rival] if rival else []))
+    # Below the floor nothing is sold, however many bid.
     if not bids or bids[-1] < floor:
         return 0
     if auction == "first":

@@ -61,6 +61,7 @@ class LearningSeller:
         Args:
             second: The second highest bid; below the floor it looks like no bid at all.
         """
+        # Rounded up: a bid must not count as lying below a floor that it reaches.
         cell = min(CELLS, -(-second * CELLS // self._top))
         self._second[max(cell, self._floor_cell)] += 1.0
         self._seen, self._heard = self._seen + 1, self._heard + 1
@@ -76,6 +77,7 @@ class LearningSeller:
         candidates = revenue >= revenue[best] - 2.0 * width[best] - 2.0 * width
         self._best_cell = self._floor_cell + best
         self._floor_cell += int(np.flatnonzero(candidates)[0])
+        # A floor hides bids below it, so what was seen under another one is not mixed in.
         self._second, self._seen = np.zeros(CELLS + 1), 0
 
     def _revenue(self, prices: Numbers, second: Numbers) -> Numbers:
@@ -86,6 +88,7 @@ class LearningSeller:
 
     def _width(self, prices: Numbers, second: Numbers) -> Numbers:
         log = math.log(6.0 * self._stages / DELTA)
+        # Where no sale was ever seen the width would be without end.
         some = np.maximum(1.0 - second, 1.0 / self._seen) * self._seen
         return double(prices * np.sqrt(2.0 * log / some))
 

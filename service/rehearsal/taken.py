@@ -63,12 +63,14 @@ class Taken:
     """The columns while they grow; eight bytes a number, so that long replays fit."""
 
     def __init__(self) -> None:
+        # Lists of Python numbers would take several times the memory of a long replay.
         self._money = [array("q") for _ in range(5)]
         self._flags = [bytearray() for _ in range(4)]
         self.untold, self.untold_paid = 0, 0
 
     def add(self, auction: Sold, bid: int, paid: int, won: bool, unknown: bool) -> None:
         """Note one auction."""
+        # An unknown value stands as 0, and only its flag says that nobody knows it.
         money = (auction.least, auction.value or 0, auction.worth, bid, paid)
         for column, number in zip(self._money, money, strict=True):
             column.append(number)
@@ -84,6 +86,7 @@ class Taken:
     @property
     def columns(self) -> Columns:
         """What it has come to so far."""
+        # Copies, since an array that is looked at could not grow any more.
         least, value, worth, bid, paid = (np.array(one, dtype=np.int64) for one in self._money)
         won, unknown, valued, told = (np.array(one, dtype=np.bool_) for one in self._flags)
         return Columns(least, value, worth, bid, paid, won, unknown, valued, told)

@@ -14,6 +14,7 @@ ALTERNATIVES = ("bid_cap_cpm", "flat_price_cpm", "floor_cpm", "method")
 
 
 def _method(name: str) -> str:
+    # Whether there is such a method is said by the story, with a code of its own.
     if not 1 <= len(name) <= 40:
         raise ValueError("The method must be the name of a published method.")
     return name

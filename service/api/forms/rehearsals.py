@@ -154,6 +154,7 @@ def _check(form: RehearsalForm) -> None:
     names = [one.name for one in form.policies]
     if len(set(names)) != len(names):
         raise bad_field("policies", "Their names must differ.")
+    # What one field cannot know of another is looked at here, each by the field to change.
     kind = form.market.kind
     if kind == "arena" and len(names) < 2:
         raise bad_field("policies", "An arena needs at least two.")
@@ -163,6 +164,7 @@ def _check(form: RehearsalForm) -> None:
         raise bad_field(
             "rounds", f"Rounds times seeds times policies may be at most {AUCTIONS_MAX:,}."
         )
+    # Told at once, a block takes two milliseconds of the clock beside its auctions.
     if form.market.span_s * MS_PER_S < 4 * form.rounds:
         raise bad_field("market.span_s", "Two auctions must lie at least 4 ms apart.")
     for path, law in (("market.rivals", form.market.rivals), ("market.values", form.market.values)):
@@ -178,6 +180,7 @@ def _check_values(market: MarketForm) -> None:
         raise bad_field("market.rivals.low_cpm", "It must not exceed high_cpm.")
     if values and values.high is not None and (values.low or 0) > values.high:
         raise bad_field("market.values.low", "It must not exceed high.")
+    # Their course changes how often values come, which only events have a chance for.
     moving = market.kind in ("drift", "abrupt", "coin_flip", "above_value")
     if moving and values and values.law != "events":
         raise bad_field("market.values.law", "This market needs events.")
