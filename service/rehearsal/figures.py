@@ -151,7 +151,7 @@ def _regret(runs: Sequence[Run], surplus: Sequence[float]) -> dict[str, Any]:
     regrets = [one.surplus - own for one, own in zip(known, surplus, strict=True)]
     return {
         "regret": money_figure(regrets),
-        # The median is a bid that some seed would have made; a mean may be none at all.
+        # The median, since one odd seed whose best bid lies far off would move a mean.
         "best_fixed": {
             "bid_cpm_nanos": round(float(np.median([one.bid for one in known]))),
             "surplus": money_figure([one.surplus for one in known]),

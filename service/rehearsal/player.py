@@ -166,7 +166,7 @@ class Player:
         )
         free = self._purse.free(auction.at_ms)
         if free <= 0:
-            self.passes["budget_spent" if not self._purse.held else "budget_held"] += 1
+            self.passes[self._purse.why_none(auction.at_ms)] += 1
             return PASSED
         # Recorded prices are in its own currency and net of fees already: nothing is turned.
         put = Put(opportunity, opportunity)
@@ -286,12 +286,19 @@ class _Purse:
     def __init__(self, budget: int, daily: int | None, zone: str) -> None:
         self._budget, self._daily, self._zone = budget, daily, zone
         self.spent = self.held = 0
-        self._of_day = Counter[str]()
+        self._of_day, self._spent_of_day = Counter[str](), Counter[str]()
 
     def free(self, at_ms: int) -> int:
         """What may still be bid."""
         free = self._budget - self.spent - self.held
         return free if self._daily is None else min(free, self._daily - self._today(at_ms))
+
+    def why_none(self, at_ms: int) -> str:
+        """Why nothing may be bid now, in the order in which production looks for a reason."""
+        if self._budget <= self.spent:
+            return "budget_spent"
+        spent = self._daily is not None and self._daily <= self._spent_of_day[self._day(at_ms)]
+        return "day_spent" if spent else "budget_held"
 
     def hold(self, at_ms: int, amount: int) -> str:
         """Set an amount aside; returns the day it belongs to."""
@@ -305,6 +312,7 @@ class _Purse:
         self.held -= hold
         self.spent += paid
         self._of_day[day] += paid - hold
+        self._spent_of_day[day] += paid
 
     def _today(self, at_ms: int) -> int:
         return self._of_day[self._day(at_ms)]

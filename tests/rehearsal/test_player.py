@@ -158,6 +158,18 @@ def test_a_day_has_its_own_money() -> None:
     assert one.play(sold(DAY_MS, HALF)) == HALF
 
 
+def test_the_reason_of_a_pass_is_that_of_production() -> None:
+    """A spent day says so; a day that is only held, or all the money, has another word."""
+    one = player(at_once=False, daily_budget=HALF, budget=SCALE)
+    one.play(sold(1, HALF, told_delay_ms=10))
+    assert one.play(sold(5, 0)) == PASSED
+    assert one.play(sold(11, 0)) == PASSED
+    assert dict(one.passes) == {"budget_held": 1, "day_spent": 1}
+    one.play(sold(DAY_MS, HALF))
+    assert one.play(sold(DAY_MS + 1, 0)) == PASSED
+    assert one.passes["budget_spent"] == 1
+
+
 def test_a_day_begins_in_the_zone_of_the_line_item() -> None:
     """In Auckland, thirteen hours ahead in January, midnight is at 11 in the morning of UTC."""
     zone = {"starts_ms": 0, "ends_ms": None, "time_zone": "Pacific/Auckland"}
