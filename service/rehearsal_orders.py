@@ -45,6 +45,11 @@ def order_of(wish: Mapping[str, Any], config: Config, curve: Config | None = Non
         {"name": one["name"], "config": _policy(base, one["changes"])} for one in wish["policies"]
     ]
     market = _market(wish["market"], policies[0]["config"], curve)
+    if curve is not None:
+        # Where the curve says nothing no policy may win, so not one whose cap was raised either.
+        beyond = max(int(one["config"]["bid_cap"]) for one in policies) + 1
+        rivals = market["rivals"]
+        market["rivals"] = {**rivals, "beyond": max(int(rivals["beyond"]), beyond)}
     for at, policy in enumerate(policies):
         _check(policy["config"], market, at)
     sizes = {name: wish[name] for name in ("rounds", "seeds", "seed", "block")}

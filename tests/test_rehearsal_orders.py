@@ -97,6 +97,17 @@ def test_a_method_of_one_auction_plays_in_no_other() -> None:
     assert refused(asked, config("mean")).code == "auction_not_for_method"
 
 
+@pytest.mark.parametrize(("cap", "beyond"), [(SCALE, 2 * SCALE + 1), (5 * SCALE, 5 * SCALE + 1)])
+def test_no_policy_wins_where_its_curve_says_nothing(cap: int, beyond: int) -> None:
+    """What competes beyond the curve is more than any policy bids, however high its cap."""
+    rivals = {"law": "empirical", "prices": [5], "chances": [0.5], "beyond": 2 * SCALE + 1}
+    curve = {"rivals": rivals, "values": {"law": "events", "chance": 0.5, "amount": 9}}
+    asked = wish({}, {"bid_cap": cap}, kind="own_curve")
+    found = order_of(asked, config("mean"), curve)["market"]
+    assert found["rivals"] == {**rivals, "beyond": beyond}
+    assert rivals["beyond"] == 2 * SCALE + 1
+
+
 @pytest.mark.parametrize("auction", ["second", "first"])
 def test_a_curve_of_nothing_is_no_market(auction: str) -> None:
     """Where no auction has told anything there is nothing to draw from."""
