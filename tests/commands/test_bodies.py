@@ -39,7 +39,10 @@ def test_a_batch_has_as_many_rows_as_asked(rows: int) -> None:
     """All alike, in one call."""
     first, _, body = taken_apart(bodies.batch(KEY, "b", rows))
     assert first[1] == "/v1/bids/batch"
-    assert body == {"opportunities": [bodies.opportunity("b")] * rows}
+    assert body == {
+        "opportunities": [bodies.opportunity("b")] * rows,
+        "deadline_ms": bodies.PATIENT_MS,
+    }
     assert len(read(BatchForm, body).opportunities) == rows
 
 

@@ -229,10 +229,10 @@ def test_a_setting_that_is_no_json_is_refused_by_code(words: str) -> None:
 def test_what_would_have_fired_is_told_a_week(capsys: pytest.CaptureFixture[str]) -> None:
     """With action, counts and moments, and that nothing was changed."""
     rule = {"setup": {"action": "freeze"}, "fired": 2, "per_week": 0.5}
-    episode = {"from": "2026-01-01T00:00:00Z", "saw": "80 where 16 are usual"}
+    episode = {"from_at": "2026-01-01T00:00:00Z", "saw": "80 where 16 are usual"}
     tripwires_try._tell(
         {
-            **{"line_item": "garden", "looks": 12, "from": "2026-01-01T00:00:00Z"},
+            **{"line_item": "garden", "looks": 12, "from_at": "2026-01-01T00:00:00Z"},
             **{"rules": {"value_rate": {**rule, "episodes": [episode]}}},
             "would_freeze_in_all": 2,
         }
