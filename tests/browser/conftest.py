@@ -5,9 +5,14 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 import pytest
-from playwright.sync_api import Browser, BrowserContext
+from playwright.sync_api import Browser, BrowserContext, expect
 
 from tests.browser.scene import Scene, Seen, browsing, serving
+
+# A machine that runs other tests beside these may take long; what fails for another reason fails
+# just the same, only later.
+PATIENCE_MS = 45_000
+expect.set_options(timeout=PATIENCE_MS)
 
 
 @pytest.fixture(scope="session")
@@ -30,7 +35,7 @@ def context(browser: Browser, scene: Scene) -> Iterator[BrowserContext]:
     """A fresh profile; whatever test used it, no other host was asked and nothing complained."""
     seen = Seen(scene.server.address)
     opened = browser.new_context(viewport={"width": 1440, "height": 900})
-    opened.set_default_timeout(15_000)
+    opened.set_default_timeout(PATIENCE_MS)
     opened.on("page", seen.watch)
     yield opened
     opened.close()
