@@ -258,7 +258,7 @@ def _build(
     operator = Operator(database, threads, catalog, news, settings.checkpoint_entries, minute_ms)
     rhythm = Rhythm(settings.change_poll_ms, settings.tick_s, settings.clock_step_ms_max)
     place = (database, threads, post.worker, catalog, leasing, backlog, news, rhythm)
-    upkeep = Upkeep(*place, tally)
+    upkeep = Upkeep(*place, tally, post.board.rings)
     levels = {
         "loop_lag_seconds": lambda: int(pulse.worst_s() * 1e6),
         "waiting_bids": bidder.waiting,

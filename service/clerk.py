@@ -1,8 +1,7 @@
 """The clerk: lessons, closing, audit and pruning, which no price waits for.
 
-On PostgreSQL it is a process of its own on each host, so that a long lesson never delays a
-price; on SQLite it lives in the threads of the one serving process. Several clerks on one
-database do no harm: each piece of work takes its lock or changes nothing the second time.
+A process of its own on each host, so that a long lesson never delays a price. Several clerks on
+one database do no harm: each piece of work takes its lock or changes nothing the second time.
 """
 
 from __future__ import annotations
@@ -32,6 +31,7 @@ from service.store import (
     refusals,
     rehearsals,
     repeats,
+    teachers,
     tripwires,
     workers,
 )
@@ -49,7 +49,9 @@ AUDIT_S = 10.0
 MEASURE_S = 5.0
 PRUNE_S = 3600.0
 CHART_S = 2.0
-TOGETHER = 16  # Line items taught in one transaction.
+TOGETHER = 32  # Line items taught or audited in one transaction.
+# Of what prices do not wait for: so many times as long as it took nothing is done.
+REST = 2.0
 DAY_MS = 86_400_000
 REFUSAL_KEEP_DAYS = 90  # A quarter: long enough to look back at who tried what.
 POST_S = 1.0
@@ -101,10 +103,10 @@ class Clerk:
         return [
             every(self._habits.teach_ms / 1000, self.teach),
             every(CLOSE_S, self.close),
-            every(AUDIT_S, self.audit),
+            every(AUDIT_S, self.audit, REST),
             every(PRUNE_S, self.prune),
-            every(CHART_S, self.chart),
-            every(self._habits.tripwire_s, self.watch),
+            every(CHART_S, self.chart, REST),
+            every(self._habits.tripwire_s, self.watch, REST),
             every(POST_S, self.tell),
             every(MEASURE_S, self.measure),
         ]
@@ -123,7 +125,7 @@ class Clerk:
             names = behind[at : at + TOGETHER]
             for name in await self._unfinished(names):
                 # A full page says that more may wait behind it.
-                while await self._teach(name) == learners.ENTRIES_MAX:
+                while await self._teach(name) == teachers.ENTRIES_MAX:
                     pass
 
     async def close(self) -> None:
@@ -136,10 +138,15 @@ class Clerk:
         await self._patience.freeze_broken()
         # Read before the audit, so that what moves meanwhile still looks new at the next turn.
         stands = await self._threads.run(self._database.read, auditing.standings)
-        for name, standing in stands.items():
-            # Nothing has moved since it was found sound, not even by hand.
-            if self._sound.get(name) != standing and await self._audit(name):
-                self._sound[name] = standing
+        # Where nothing has moved since it was found sound, not even by hand, it still is.
+        moved = [name for name, stand in stands.items() if self._sound.get(name) != stand]
+        for at in range(0, len(moved), TOGETHER):
+            for piece in await self._audit(moved[at : at + TOGETHER]):
+                # The piece was short among many: the rest of a long stream is read alone.
+                while not (piece.whole or piece.found):
+                    (piece,) = await self._audit([piece.line_item])
+                if not piece.found:
+                    self._sound[piece.line_item] = stands[piece.line_item]
 
     async def chart(self) -> None:
         """Count what is new for charts."""
@@ -189,16 +196,11 @@ class Clerk:
         for forget in (epochs.prune, changes.prune, workers.prune):
             await self._threads.run(self._database.write, forget)
 
-    async def _audit(self, line_item: str) -> bool:
-        """Audit what is new of one line item, piece by piece; False where it disagrees."""
-        while True:
-            whole, found, frozen = await self._threads.run(
-                auditing.audit_on, self._database, line_item
-            )
-            for name in frozen:
-                logger.critical("the stream of line item %s disagrees; it is frozen", name)
-            if whole or found:
-                return not found
+    async def _audit(self, line_items: list[str]) -> list[auditing.Piece]:
+        pieces, frozen = await self._threads.run(auditing.audit_on, self._database, line_items)
+        for name in frozen:
+            logger.critical("the stream of line item %s disagrees; it is frozen", name)
+        return pieces
 
     async def _until_none(self, prune: Callable[[Writing, int], int], bound_ms: int) -> None:
         while await self._threads.run(self._database.write, lambda c: prune(c, bound_ms)):
@@ -209,25 +211,28 @@ class Clerk:
         every = self._habits.checkpoint_entries
         try:
             read = await self._threads.run(
-                learners.teach_together, self._database, names, lesson, every, lawful
+                teachers.teach_together, self._database, names, lesson, every, lawful
             )
         except (UnreadableMemory, UnreadableTree):
             # Nothing was taught; alone, the one that is damaged is told from the others.
             return names
-        return [name for name, count in read.items() if count >= learners.share_of(len(names))]
+        self._board.ring()
+        return [name for name, count in read.items() if count >= teachers.share_of(len(names))]
 
     async def _teach(self, line_item: str) -> int:
         every = self._habits.checkpoint_entries
         try:
-            return await self._threads.run(
-                learners.teach, self._database, line_item, lesson, every, lawful
+            read = await self._threads.run(
+                teachers.teach, self._database, line_item, lesson, every, lawful
             )
         except (UnreadableMemory, UnreadableTree):
             # Of another release, or damaged; the stream has all that it was made from.
             logger.exception("a learner's state cannot be read; its stream is read again")
             await self._refold(line_item)
             # As if a full page had been read, so that the caller begins with the refold at once.
-            return learners.ENTRIES_MAX
+            return teachers.ENTRIES_MAX
+        self._board.ring()
+        return read
 
     async def _refold(self, line_item: str) -> None:
         work = self._database.write

@@ -28,6 +28,8 @@ STEP_S = 2.0
 DENIED_S = 0.25
 OVERDUE_S = 0.25  # A batch takes a few milliseconds; one this late hangs.
 BATCH_MAX = 200
+# Of all slices at once, thousands would keep every other writer waiting for a quarter second.
+TOLD_MAX = 100
 
 
 def boot_clock() -> float:
@@ -111,20 +113,25 @@ class Leasing:
 
     async def give_back(self) -> None:
         """Tell the database what retired slices never issued; what fails is told again."""
-        # Taken out before the await: what is retired meanwhile goes into the new list.
-        given, self.hand.given = self.hand.given, []
-        if not given:
-            return
+        for _ in range(0, len(self.hand.given), TOLD_MAX):
+            # Taken out before the await: what is retired meanwhile goes behind the rest.
+            given = self.hand.given[:TOLD_MAX]
+            del self.hand.given[:TOLD_MAX]
+            try:
+                await self._give_back(given)
+            except asyncio.CancelledError:
+                # We are stopping; the last call that gives back must still find them.
+                self.hand.given = given + self.hand.given
+                raise
+            except StoreAway:
+                # Perhaps it was freed: retiring again then touches no row.
+                self.hand.given = given + self.hand.given
+                return
+
+    async def _give_back(self, given: list[Given]) -> None:
         try:
             await self._threads.run(leases.retire, self._database, [_report(g) for g in given])
             self._tally.add("slices_given_back", count=len(given))
-        except asyncio.CancelledError:
-            # We are stopping; the last call that gives back must still find them.
-            self.hand.given = given + self.hand.given
-            raise
-        except StoreAway:
-            # Perhaps it was freed: retiring again then touches no row.
-            self.hand.given = given + self.hand.given
         except BrokenPromise:
             # One broken row must not keep the money of all the others.
             for one in given:
@@ -139,13 +146,13 @@ class Leasing:
         ]
         # Passes without a slice in the hand are told under an id that no slice has.
         reports += [leases.Report(name, bytes(16), 0, count) for name, count in passes.items()]
-        if not reports:
-            return
-        try:
-            await self._threads.run(leases.tick, self._database, reports)
-        except StoreAway:
-            for report in reports:
-                self._pass_again(report)
+        for at in range(0, len(reports), TOLD_MAX):
+            try:
+                await self._threads.run(leases.tick, self._database, reports[at : at + TOLD_MAX])
+            except StoreAway:
+                for report in reports[at:]:
+                    self._pass_again(report)
+                return
 
     async def _give_back_alone(self, one: Given) -> None:
         try:

@@ -30,11 +30,21 @@ class Patience:
         self._database, self._threads = database, threads
         self._tally = tally or Tally()
 
-    async def every(self, seconds: float, duty: Callable[[], Awaitable[None]]) -> None:
-        """Do a duty again and again, with so much time in between, until cancelled."""
+    async def every(
+        self, seconds: float, duty: Callable[[], Awaitable[None]], rest: float = 0.0
+    ) -> None:
+        """
+        Do a duty again and again, with so much time in between, until cancelled.
+
+        Args:
+            rest: How many times as long as it took the time in between must be at least.
+        """
+        took_s = 0.0
         while True:
-            await asyncio.sleep(seconds)
+            await asyncio.sleep(max(seconds, rest * took_s))
+            began = time.monotonic()
             await self.unless_away(duty)
+            took_s = time.monotonic() - began
 
     async def unless_away(self, duty: Callable[[], Awaitable[None]]) -> None:
         """Do a duty once; while the database is away, wait a moment instead."""

@@ -20,8 +20,9 @@ from service.recounting import said
 from service.store import learners, lessons, line_items, rebuilds, records
 from service.store.clock import now_ms
 from service.store.database import Reading, Writing
-from service.store.learners import ENTRIES_MAX, digest_of
+from service.store.learners import digest_of
 from service.store.rebuilds import Standing, Start
+from service.store.teachers import ENTRIES_MAX
 from service.teaching import FRESH, lesson
 
 SPANS_SHOWN_MAX = 20

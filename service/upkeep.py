@@ -6,8 +6,10 @@ What need not be done beside bids is the clerk's.
 from __future__ import annotations
 
 import asyncio
+import contextlib
 import logging
-from collections.abc import Coroutine
+import time
+from collections.abc import Callable, Coroutine
 from dataclasses import dataclass
 from typing import Any
 
@@ -27,6 +29,8 @@ DECISIONS_MAX = 2000
 GIVE_BACK_S = 0.2
 LOG_S = 0.5
 CLOCK_S = 1.0
+# The bell is a number in memory: to look at it costs less than a hundredth of a bid.
+BELL_S = 0.01
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,10 +56,11 @@ class Upkeep:
         news: asyncio.Event,
         rhythm: Rhythm,
         tally: Tally | None = None,
+        bell: Callable[[], int] = int,
     ) -> None:
         self._database, self._threads, self._worker = database, threads, worker
         self._catalog, self._leasing, self._backlog = catalog, leasing, backlog
-        self._news, self._rhythm = news, rhythm
+        self._news, self._rhythm, self._bell = news, rhythm, bell
         self._patience = Patience(database, threads, tally)
 
     def duties(self) -> list[Coroutine[Any, Any, None]]:
@@ -123,7 +128,10 @@ class Upkeep:
 
     async def log(self) -> None:
         """Write queued decisions."""
-        while rows := self._backlog.drain(DECISIONS_MAX):
+        full = True
+        # What came meanwhile waits for the next turn, or a commit would be made for every few.
+        while full and (rows := self._backlog.drain(DECISIONS_MAX)):
+            full = len(rows) == DECISIONS_MAX
             try:
                 await self._threads.run(decisions.log, self._database, rows)
             except StoreAway:
@@ -142,11 +150,17 @@ class Upkeep:
 
     async def _follow_changes(self) -> None:
         while True:
+            heard = self._bell()
             await self._patience.unless_away(self.follow)
-            try:
-                # Our own orders wake us at once; those of other workers wait for the poll.
-                async with asyncio.timeout(self._rhythm.change_poll_ms / 1000):
-                    await self._news.wait()
-            except TimeoutError:
-                continue
+            await self._until_news(heard)
             self._news.clear()
+
+    async def _until_news(self, heard: int) -> None:
+        """Our own orders wake us at once, the clerk's bell soon; other hosts' wait for the poll."""
+        until = time.monotonic() + self._rhythm.change_poll_ms / 1000
+        while not self._news.is_set() and self._bell() == heard:
+            if (left_s := until - time.monotonic()) <= 0:
+                return
+            with contextlib.suppress(TimeoutError):
+                async with asyncio.timeout(min(BELL_S, left_s)):
+                    await self._news.wait()

@@ -29,7 +29,7 @@ from service.previewing import (
     shown,
 )
 from service.previewing import preview as preview_of
-from service.store import learners, lessons, rebuilds
+from service.store import learners, lessons, rebuilds, teachers
 from service.store.books import Books
 from service.store.database import Reading, Writing
 from service.store.learners import digest_of
@@ -237,7 +237,7 @@ class Winding:
         while await self._orders.read(lambda c: _pending(c, line_item, seq)):
             if time.monotonic() > until:
                 return {**answer, "published": False, "after": None}
-            if not await run(learners.teach, database, line_item, lesson, self._every, lawful):
+            if not await run(teachers.teach, database, line_item, lesson, self._every, lawful):
                 await asyncio.sleep(LOOK_S)  # Another teacher is at it.
         known = await self._orders.read(lambda c: estimate(c, line_item))
         return {**answer, "published": True, "after": known}

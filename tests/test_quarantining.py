@@ -10,7 +10,7 @@ from service.errors import BrokenPromise, Conflict, NotFound
 from service.feedback import Report
 from service.learner.memory import Memory
 from service.ledger.entries import Entry
-from service.store import learners, rebuilds
+from service.store import learners, rebuilds, teachers
 from service.teaching import FRESH, lesson
 from tests.builders import NAME, PRICE, Worker, append, won, working
 
@@ -138,5 +138,5 @@ async def test_an_error_of_ours_is_not_mistaken_for_a_bad_row(migrated_url: str)
 
         for _ in range(4):
             with pytest.raises(BrokenPromise):
-                learners.teach(worker.database, NAME, fold, 10)
+                teachers.teach(worker.database, NAME, fold, 10)
         assert worker.column("SELECT seq FROM quarantine") == []

@@ -24,7 +24,16 @@ from service.commands import options, report
 from service.commands.postgresql_process import PostgreSQLProcess
 from service.errors import BrokenPromise
 from service.ledger.settle import Outcome
-from service.store import auditing, charting, decisions, learners, leases, line_items, outcomes
+from service.store import (
+    auditing,
+    charting,
+    decisions,
+    learners,
+    leases,
+    line_items,
+    outcomes,
+    teachers,
+)
 from service.store.audit import Balance
 from service.store.database import Database, Writing
 from service.store.leases import Denied, Leased, LeaseRequest
@@ -157,7 +166,7 @@ def _decisions(name: str, count: int) -> list[decisions.Decision]:
 
 
 def _teach(database: Database, names: list[str]) -> int:
-    fold = partial(learners.teach, fold=lesson, lawful=lawful)
+    fold = partial(teachers.teach, fold=lesson, lawful=lawful)
     return sum(fold(database, name, checkpoint_entries=CHECKPOINT_ENTRIES) for name in names)
 
 
@@ -170,10 +179,10 @@ def _audited(database: Database, name: str, advance: Callable[[int], object]) ->
 
 
 def _more_to_audit(database: Database, name: str) -> int:
-    whole, found, _ = auditing.audit_on(database, name)
-    if found:
-        raise BrokenPromise(f"the bench broke a promise: {found}")
-    return 0 if whole else auditing.ENTRIES_MAX
+    (piece,), _ = auditing.audit_on(database, [name])
+    if piece.found:
+        raise BrokenPromise(f"the bench broke a promise: {piece.found}")
+    return 0 if piece.whole else auditing.ENTRIES_MAX
 
 
 def _begin(connection: Writing, config: Mapping[str, Any], now: int) -> None:

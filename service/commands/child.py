@@ -58,9 +58,8 @@ def main(words: list[str] | None = None) -> int:
 
 def serve(settings: Settings, post: Post, shared: list[socket.socket]) -> None:
     """One serving process, on sockets that listen already."""
-    if post.clerk:
-        # The clerk's threads live here too and would hold a price up for 5 ms at a time.
-        sys.setswitchinterval(SWITCH_S)
+    # Threads that book outcomes would hold a price up for 5 ms at a time.
+    sys.setswitchinterval(SWITCH_S)
     config = uvicorn.Config(
         create_app(settings, post),
         host=settings.host,

@@ -1,4 +1,4 @@
-"""The crew of one host on PostgreSQL: workers that share a port, a clerk, and who restarts them.
+"""The crew of one host: workers that share a port, a clerk, and who restarts them.
 
 The crew's own process opens no database and serves nothing, so hardly anything can end it.
 """

@@ -1,4 +1,4 @@
-"""bidkeel serve: one process on SQLite, a crew of workers and a clerk on PostgreSQL."""
+"""bidkeel serve: a crew of workers and a clerk, on SQLite with one worker."""
 
 from __future__ import annotations
 
@@ -13,13 +13,12 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
-from service.app import Post, new_worker, sources_of
-from service.commands.child import serve
+from service.app import sources_of
 from service.commands.crew import Berth, Crew, listen_on
 from service.commands.logs import log_config
 from service.connecting import open_database
 from service.errors import Unsafe
-from service.settings import PREFIX, SQLITE, Settings, load
+from service.settings import PREFIX, Settings, load
 from service.store import keys
 from service.store.database import Database
 from service.store.migrate import is_empty, migrate, require_current
@@ -45,10 +44,7 @@ def run(arguments: argparse.Namespace) -> int:
     with sole_server(settings):
         prepare(settings)
         _say_where(settings)
-        if settings.database_kind == SQLITE:
-            serve(settings, Post(new_worker()), _listening(settings))
-        else:
-            _command(settings)
+        _command(settings)
     return 0
 
 

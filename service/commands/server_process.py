@@ -18,6 +18,7 @@ from types import TracebackType
 from typing import Self
 
 import service
+from service.commands import pinning
 from service.commands.wire import Wire
 from service.errors import BidkeelError
 
@@ -97,13 +98,19 @@ class ServerProcess:
         """
         End the server and return its exit code, None when none was running.
 
+        By SIGKILL the whole crew ends at once, as when a machine loses power.
+
         Raises:
             ServerFailed: It did not end within `STOP_S_MAX` seconds and was killed.
         """
         child, self.child = self.child, None
         if child is None:
             return None
+        crew = pinning.children(child.pid) if how == signal.SIGKILL else []
         child.send_signal(how)
+        for one in crew:
+            with contextlib.suppress(ProcessLookupError):
+                os.kill(one, how)
         try:
             return child.wait(STOP_S_MAX)
         except subprocess.TimeoutExpired:

@@ -1,4 +1,4 @@
-"""The memory that the processes of one crew share to count in, and the one page the clerk writes.
+"""The memory that the processes of one crew share: to count in, the clerk's page and its bell.
 
 Each process owns one row of 64-bit integers and adds in place, so that counting costs no lock
 and no call, nothing is lost when a process is killed, and a row counts on for its successor.
@@ -18,8 +18,10 @@ from service.metrics.tally import Tally
 PAGE_BYTES = 64 * 1024
 _WORD = 8
 _ROW_BYTES = len(PLACES) * _WORD
-_HEAD_BYTES = 3 * _WORD  # The digest of the layout, then length and checksum of the page.
+# The digest of the layout, length and checksum of the page, and how often the bell rang.
+_HEAD_BYTES = 4 * _WORD
 _FRONT_BYTES = _HEAD_BYTES + PAGE_BYTES
+_LAYOUT = DIGEST + _HEAD_BYTES  # Who expects another head or other rows keeps away.
 _READS_MAX = 3  # A page that is being written is read again.
 
 
@@ -54,7 +56,7 @@ class Board:
         if descriptor is None:
             return cls.alone()
         board = cls(mmap.mmap(descriptor, os.fstat(descriptor).st_size))
-        return board if board._words[0] == DIGEST else cls.alone()
+        return board if board._words[0] == _LAYOUT else cls.alone()
 
     def tally(self, row: int) -> Tally:
         """The row of one process, to count in."""
@@ -77,6 +79,14 @@ class Board:
         # After the page: whoever reads in between finds that they do not fit, and reads again.
         self._words[1], self._words[2] = len(page), zlib.crc32(page)
 
+    def ring(self) -> None:
+        """Let every worker of the crew look for news now; the clerk's alone, for it adds."""
+        self._words[3] += 1
+
+    def rings(self) -> int:
+        """How often the bell has rung."""
+        return int(self._words[3])
+
     def page(self) -> dict[str, Any] | None:
         """The clerk's page; None before the first, or while it is never found whole."""
         for _ in range(_READS_MAX):
@@ -89,7 +99,7 @@ class Board:
     @classmethod
     def _fresh(cls, memory: mmap.mmap) -> Self:
         board = cls(memory)
-        board._words[0] = DIGEST
+        board._words[0] = _LAYOUT
         return board
 
 

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import json
 from collections import Counter
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -26,8 +27,15 @@ Standing = tuple[Any, ...]
 
 
 @dataclass(frozen=True, slots=True)
-class _Piece:
-    """What one piece found, and how far it came; `whole` when it came to the end."""
+class Piece:
+    """
+    What one piece of a stream told.
+
+    Args:
+        found: What disagrees.
+        whole: Whether it came to the end of the stream.
+        row: How far it came, to be kept.
+    """
 
     line_item: str
     found: list[Finding]
@@ -49,23 +57,28 @@ def standings(connection: Reading) -> dict[str, Standing]:
 
 
 def audit_on(
-    database: Database, line_item: str, entries_max: int = ENTRIES_MAX
-) -> tuple[bool, list[Finding], list[str]]:
+    database: Database, line_items: Sequence[str], entries_max: int = ENTRIES_MAX
+) -> tuple[list[Piece], list[str]]:
     """
-    Audit the next piece of a stream (V3, V4, V5 and V7), and freeze what disagrees.
+    Audit the next piece of each of these streams (V3, V4, V5 and V7), and freeze what disagrees.
+
+    Kept in one transaction, for a commit costs more than a short piece; together they read no
+    more entries than one may alone.
 
     Returns:
-        Whether this was the last piece, what disagrees, and what is newly frozen for it.
+        What each piece told, and what is newly frozen for it.
     """
-    piece = database.read(lambda connection: _piece(connection, line_item, entries_max))
+    limit = max(1, entries_max // len(line_items))
+    pieces = database.read(lambda c: [_piece(c, name, limit) for name in line_items])
     # What disagrees is not kept, so every turn finds it again until somebody has mended it.
-    if piece.found:
-        wall_ms = database.wall_ms()
-        frozen = database.write(lambda connection: freeze_found(connection, piece.found, wall_ms))
-        return piece.whole, piece.found, frozen
-    if piece.row["seq"] > piece.row["was"]:
-        database.write(lambda connection: connection.execute(_KEEP, piece.row))
-    return piece.whole, [], []
+    sound = [piece.row for piece in pieces if not piece.found]
+    if moved := [row for row in sound if row["seq"] > row["was"]]:
+        database.write(lambda connection: connection.execute(_KEEP, moved))
+    found = [finding for piece in pieces for finding in piece.found]
+    if not found:
+        return pieces, []
+    wall_ms = database.wall_ms()
+    return pieces, database.write(lambda connection: freeze_found(connection, found, wall_ms))
 
 
 def prune_slices(connection: Writing, keep_ms: int) -> int:
@@ -91,7 +104,7 @@ def prune_slices(connection: Writing, keep_ms: int) -> int:
     )
 
 
-def _piece(connection: Reading, line_item: str, entries_max: int) -> _Piece:
+def _piece(connection: Reading, line_item: str, entries_max: int) -> Piece:
     kept = connection.execute(_KEPT, {"id": line_item}).one_or_none()
     was, cost = (kept.seq, kept.cost) if kept else (0, 0)
     balance = Balance.read(connection, line_item)
@@ -100,14 +113,14 @@ def _piece(connection: Reading, line_item: str, entries_max: int) -> _Piece:
     before = _before(connection, line_item, was, {bytes(row.bid) for row in rows if row.bid})
     # Of a stream that is not whole a replay would tell nothing.
     if found := _gaps(line_item, balance.seq, was, rows) + _doubles(line_item, [*before, *rows]):
-        return _Piece(line_item, found, True, {})
+        return Piece(line_item, found, True, {})
     books = unpacked(json.loads(kept.books) if kept else {})
     try:
         recall(books, _told(before))
         books = replay(balance.spend_on, _told(rows), books)
     except (ValueError, LookupError, TypeError, AttributeError):
         # A damaged row must not keep the other line items from being audited.
-        return _Piece(line_item, [unreplayable(line_item)], True, {})
+        return Piece(line_item, [unreplayable(line_item)], True, {})
     cost += sum(row.cost for row in rows)
     seq = was + len(rows)
     # Only where the stream ends must the books be those of the balances.
@@ -116,7 +129,7 @@ def _piece(connection: Reading, line_item: str, entries_max: int) -> _Piece:
     service_ms = rows[-1].service_ms if rows else 0
     kept_books = json.dumps(packed(books), separators=(",", ":"))
     row = {"id": line_item, "was": was, "seq": seq, "service_ms": service_ms}
-    return _Piece(line_item, found, whole, row | {"cost": cost, "books": kept_books})
+    return Piece(line_item, found, whole, row | {"cost": cost, "books": kept_books})
 
 
 def _before(connection: Reading, line_item: str, was: int, bids: set[bytes]) -> list[Any]:

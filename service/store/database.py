@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import secrets
+import sqlite3
 import threading
 import time
 from collections.abc import Callable, Collection, Iterable, Iterator, Sequence
@@ -20,6 +21,7 @@ from sqlalchemy import (
     event,
     text,
 )
+from sqlalchemy.engine.interfaces import DBAPICursor
 from sqlalchemy.exc import DBAPIError, OperationalError
 from sqlalchemy.exc import TimeoutError as PoolTimeout
 
@@ -31,6 +33,8 @@ Writing = NewType("Writing", Connection)
 
 T = TypeVar("T")
 TRIES_MAX = 5
+BUSY_S = 5
+TURN_S = 0.0003
 # Serialization failure and deadlock: nothing happened, and the same work may simply run again.
 RETRY_STATES = {"40001", "40P01"}
 _LAST = "bidkeel.last"
@@ -59,7 +63,7 @@ class Database:
         self.is_sqlite = url.startswith("sqlite")
         self._writer = threading.Lock()
         if self.is_sqlite:
-            self.engine = create_engine(url, pool_size=pool_size, connect_args={"timeout": 5})
+            self.engine = create_engine(url, pool_size=pool_size, connect_args={"timeout": BUSY_S})
             event.listen(self.engine, "connect", _prepare_sqlite)
             event.listen(self.engine, "begin", _begin_sqlite)
         else:
@@ -206,14 +210,34 @@ def _prepare_sqlite(connection: object, _record: object) -> None:
     # somebody else writes; we begin them ourselves.
     connection.isolation_level = None  # type: ignore[attr-defined]
     # All but the journal mode belong to a connection, so each one must be told anew.
-    for pragma in ("journal_mode=WAL", "synchronous=FULL", "foreign_keys=ON", "busy_timeout=5000"):
+    for pragma in ("journal_mode=WAL", "synchronous=FULL", "foreign_keys=ON"):
         cursor.execute(f"PRAGMA {pragma}")
     cursor.close()
 
 
 def _begin_sqlite(connection: Connection) -> None:
-    reading = connection.get_execution_options().get("reading")
-    connection.exec_driver_sql("BEGIN" if reading else "BEGIN IMMEDIATE")
+    if connection.get_execution_options().get("reading"):
+        connection.exec_driver_sql("BEGIN")
+        return
+    cursor = connection.connection.cursor()
+    # SQLite waits for another process in steps of up to 100 ms, in which a third one slips past.
+    cursor.execute("PRAGMA busy_timeout=0")
+    until = time.monotonic() + BUSY_S
+    while not (began := _began(cursor)) and time.monotonic() < until:
+        time.sleep(TURN_S)
+    cursor.execute(f"PRAGMA busy_timeout={BUSY_S * 1000}")
+    cursor.close()
+    if not began:
+        # Once more, by the layer that says what is wrong.
+        connection.exec_driver_sql("BEGIN IMMEDIATE")
+
+
+def _began(cursor: DBAPICursor) -> bool:
+    try:
+        cursor.execute("BEGIN IMMEDIATE")
+    except sqlite3.OperationalError:
+        return False
+    return True
 
 
 def _sqlite_settings(connection: Reading) -> tuple[str, int]:

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
+from itertools import groupby
+from operator import attrgetter
 from typing import Any
 
 from sqlalchemy import LargeBinary, text
@@ -44,16 +46,30 @@ def read(
 ) -> Page:
     """The entries after `seq`, at most so many."""
     rows = connection.execute(_AFTER, {"id": line_item, "seq": seq, "limit": limit}).all()
+    return _page(connection, line_item, rows, cancelled) if rows else Page([], [], 0, seq)
+
+
+def next_pages(
+    connection: Reading | Writing, limit: int, cancelled: Mapping[str, Cancelled]
+) -> dict[str, Page]:
+    """The next entries of each learner of these line items; of one that has read all, none."""
+    row = {"ids": list(cancelled), "limit": limit}
+    by_name = groupby(connection.execute(_NEXT, row), attrgetter("line_item"))
+    return {name: _page(connection, name, list(rows), cancelled[name]) for name, rows in by_name}
+
+
+def _page(
+    connection: Reading | Writing, line_item: str, rows: Sequence[Any], cancelled: Cancelled
+) -> Page:
     rests = left_of(connection, line_item, rows, cancelled)
     page, seqs = list[Lesson](), list[int]()
-    for number, kind, _, at_ms, service_ms, cost, _ in rows:
+    for number, kind, _, at_ms, service_ms, cost, *_ in rows:
         rest = rests[number]
         if rest is not None or cost:
             said = (SPENT, {}) if rest is None else (kind, rest)
             page.append((*said, service_ms, at_ms, cost))
             seqs.append(number)
-    end = rows[-1].seq if rows else seq
-    return Page(page, seqs, len(rows), end)
+    return Page(page, seqs, len(rows), rows[-1].seq)
 
 
 def left_of(
@@ -77,11 +93,19 @@ def cancellations(
     connection: Reading | Writing, line_item: str, paid_by: str | None = None
 ) -> Cancelled:
     """What is cancelled on a stream; who knows by what its impressions are paid may say so."""
-    rows = connection.execute(_CANCELLED, {"id": line_item})
-    spans = [(first, last, row.part) for row in rows for first, last in json.loads(row.spans)]
     if paid_by is None:
         paid_by = read_configs(connection, [line_item])[line_item]["spend_on"]
-    return Cancelled(spans, paid_by)
+    return cancellations_of(connection, {line_item: paid_by})[line_item]
+
+
+def cancellations_of(
+    connection: Reading | Writing, paid_by: Mapping[str, str]
+) -> dict[str, Cancelled]:
+    """What is cancelled on each of these streams, by what their impressions are paid by."""
+    spans: dict[str, list[Span]] = {name: [] for name in paid_by}
+    for name, part, told in connection.execute(_CANCELLED, {"ids": list(paid_by)}):
+        spans[name] += [(first, last, part) for first, last in json.loads(told)]
+    return {name: Cancelled(spans[name], paid) for name, paid in paid_by.items()}
 
 
 def cancel(
@@ -188,6 +212,12 @@ _AFTER = text(
     "SELECT seq, kind, bid, at_ms, service_ms, cost, body FROM stream"
     " WHERE line_item = :id AND seq > :seq ORDER BY seq LIMIT :limit"
 )
+# Seqs have no gaps, so that the next so many lie up to a number that is known.
+_NEXT = among(
+    "SELECT s.seq, s.kind, s.bid, s.at_ms, s.service_ms, s.cost, s.body, s.line_item"
+    " FROM learner l JOIN stream s ON s.line_item = l.line_item AND s.seq > l.seq"
+    " AND s.seq <= l.seq + :limit WHERE l.line_item IN :ids ORDER BY s.line_item, s.seq"
+)
 _OF_BIDS = among(
     "SELECT seq, kind, bid, body FROM stream WHERE bid IN :ids AND line_item = :line_item"
     " AND kind IN ('won', 'billed', 'value') ORDER BY seq",
@@ -202,7 +232,10 @@ _COUNT = text("SELECT count(*) FROM stream WHERE line_item = :id AND kind = :kin
 _FIRST_OF = among(
     "SELECT min(seq) FROM stream WHERE bid IN :ids AND line_item = :line_item", of=LargeBinary
 )
-_CANCELLED = text("SELECT part, spans FROM cancelled WHERE line_item = :id ORDER BY by_seq")
+_CANCELLED = among(
+    "SELECT line_item, part, spans FROM cancelled WHERE line_item IN :ids"
+    " ORDER BY line_item, by_seq"
+)
 _CANCEL = text(
     "INSERT INTO cancelled (line_item, by_seq, part, spans) VALUES (:id, :by, :part, :spans)"
 )

@@ -15,8 +15,9 @@ from service.ledger.cancelling import Cancelled, Span
 from service.store import lessons
 from service.store.changes import announce
 from service.store.database import Reading, Writing, locking
-from service.store.learners import ENTRIES_MAX, Fold, Snapshot, digest_of
+from service.store.learners import Snapshot, digest_of
 from service.store.leases import read_configs
+from service.store.teachers import ENTRIES_MAX, Fold
 
 Seen = Callable[[int], None]  # Told the seq that a fold has reached.
 

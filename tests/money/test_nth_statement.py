@@ -8,7 +8,7 @@ from contextlib import closing
 import pytest
 
 from service.errors import StoreAway
-from service.store import learners, leases, outcomes
+from service.store import leases, outcomes, teachers
 from service.store.database import TRIES_MAX, Database
 from service.store.leases import LeaseRequest, Report
 from service.teaching import lawful, lesson
@@ -71,7 +71,7 @@ def close(scene: Scene) -> tuple[Act, str]:
 def teach(scene: Scene) -> tuple[Act, str]:
     """Fold what is new; seen by the learner's row, not by an entry."""
     settle(scene)[0]()
-    return lambda: learners.teach(scene.database, NAME, lesson, 1, lawful), "taught"
+    return lambda: teachers.teach(scene.database, NAME, lesson, 1, lawful), "taught"
 
 
 PLAYS: list[Play] = [lease, settle, retire, close, teach]

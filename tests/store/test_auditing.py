@@ -37,9 +37,9 @@ def _scene(migrated_url: str) -> Iterator[Scene]:
 def through(scene: Scene, entries_max: int = 2) -> list[str]:
     """Audit to the end in small pieces; the promises that are found broken."""
     while True:
-        whole, found, _ = audit_on(scene.database, NAME, entries_max)
-        if whole or found:
-            return sorted({finding.check.split()[0] for finding in found})
+        (piece,), _ = audit_on(scene.database, [NAME], entries_max)
+        if piece.whole or piece.found:
+            return sorted({finding.check.split()[0] for finding in piece.found})
 
 
 def audited(scene: Scene) -> int:
@@ -98,8 +98,9 @@ def test_two_clerks_keep_a_piece_once(scene: Scene) -> None:
     """Whoever comes second finds nothing to do, and sums are not counted twice."""
     with closing(Database(scene.database.engine.url.render_as_string(False))) as other:
         while True:
-            audit_on(other, NAME, 1)
-            if audit_on(scene.database, NAME, 1)[0]:
+            audit_on(other, [NAME], 1)
+            (piece,), _ = audit_on(scene.database, [NAME], 1)
+            if piece.whole:
                 break
     assert through(scene) == []
     assert scene.one("SELECT cost FROM audited") == scene.one("SELECT sum(cost) FROM stream")

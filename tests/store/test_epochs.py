@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from service.learner.memory import Memory
-from service.store import epochs, learners
+from service.store import epochs, learners, teachers
 from service.store.database import Database
 from service.teaching import lesson
 from tests.builders import GRACE_MS, NAME, append, begin, pass_service_ms, won
@@ -30,7 +30,7 @@ def test_a_law_is_kept_for_eachsnapshot_and_serves_its_whole_epoch(migrated_url:
         return b"law of %d" % Memory.from_bytes(state).total.wins
 
     def taught() -> None:
-        learners.teach(database, NAME, lesson, 1000, law_of)
+        teachers.teach(database, NAME, lesson, 1000, law_of)
 
     append(database, won(1))
     taught()

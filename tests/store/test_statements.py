@@ -16,7 +16,7 @@ import pytest
 from sqlalchemy import event
 
 from service.ledger.settle import Outcome
-from service.store import changes, charting, learners, leases, outcomes
+from service.store import changes, charting, learners, leases, outcomes, teachers
 from service.store.database import Database
 from service.store.leases import Leased, LeaseRequest
 from service.store.outcomes import Booking
@@ -114,7 +114,7 @@ def test_a_lesson_takes_few_statements_and_a_page_as_few(database: Database) -> 
     statements = Statements(database)
     for group in (wins(held, 1), wins(held, 99, first=1)):
         outcomes.book(database, group)
-        teach = partial(learners.teach, database, held.line_item, lesson, 10_000, lawful)
+        teach = partial(teachers.teach, database, held.line_item, lesson, 10_000, lawful)
         assert statements.of(teach) <= TEACHING_MAX
 
 
@@ -135,7 +135,7 @@ def test_lessons_of_many_line_items_share_a_commit(database: Database) -> None:
     read = dict[str, int]()
 
     def work() -> None:
-        read.update(learners.teach_together(database, names, lesson, 10_000, lawful))
+        read.update(teachers.teach_together(database, names, lesson, 10_000, lawful))
 
     # Lock, configuration, cancelled, page, state and publishing of each; then the numbers.
     assert statements.of(work) <= 6 * len(names) + 3

@@ -12,14 +12,15 @@ from sqlalchemy import text
 
 from service.learner.memory import Memory
 from service.ledger.entries import Entry
-from service.store import changes, learners, rebuilds
+from service.store import changes, learners, rebuilds, teachers
 from service.store.database import Database
+from service.store.lessons import Lesson
 from service.teaching import FRESH, lesson
 from tests.builders import NAME, append, begin, line_item, pass_service_ms, valued, won
 
 
-def _teach(database: Database, every: int = 1000, fold: learners.Fold = lesson) -> int:
-    return learners.teach(database, NAME, fold, every)
+def _teach(database: Database, every: int = 1000, fold: teachers.Fold = lesson) -> int:
+    return teachers.teach(database, NAME, fold, every)
 
 
 def _snapshot(database: Database) -> learners.Snapshot:
@@ -44,7 +45,7 @@ def test_entries_are_folded_in_the_order_of_seq(migrated_url: str) -> None:
     database, read = Database(migrated_url), list[int]()
     begin(database)
 
-    def fold(state: bytes, lessons: list[learners.Lesson], _: dict[str, Any]) -> bytes:
+    def fold(state: bytes, lessons: list[Lesson], _: dict[str, Any]) -> bytes:
         read.extend(body["n"] for kind, body, *_ in lessons if kind == "mark")
         return state
 
@@ -110,7 +111,7 @@ def test_learning_piece_by_piece_equals_a_fold_from_zero(migrated_url: str) -> N
 
 def test_a_long_stream_is_published_only_when_caught_up(migrated_url: str) -> None:
     """Half a refold is never public, and the last full piece is published without another entry."""
-    database, most = Database(migrated_url), learners.ENTRIES_MAX
+    database, most = Database(migrated_url), teachers.ENTRIES_MAX
     begin(database)
     append(database, *(won(number) for number in range(1, most)))
     assert _teach(database) == most
