@@ -95,10 +95,12 @@ class Crew:
     Args:
         shared: The listening sockets, inherited by the workers.
         berths: One for each child.
+        kept: Descriptors that stay open until the last child has gone.
     """
 
     shared: list[socket.socket]
     berths: list[Berth]
+    kept: list[int] = field(default_factory=list)
     stopping: threading.Event = field(default_factory=threading.Event)
     board: int = -1
 
@@ -132,7 +134,7 @@ class Crew:
     def _start(self, berth: Berth, watched: int, now: float) -> None:
         words = ["--watched", str(watched), "--board", str(self.board)]
         words += ["--place", str(berth.place)]
-        passed = [watched, self.board]
+        passed = [watched, self.board, *self.kept]
         if berth.role == "worker":
             # Who stood here before is dead for certain, so no freeze need wait for it.
             predecessor, berth.worker = berth.worker, new_worker()

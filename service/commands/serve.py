@@ -9,12 +9,14 @@ import logging.config
 import os
 import socket
 import sys
+import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
+from typing import IO
 
 from service.app import sources_of
-from service.commands.crew import Berth, Crew, listen_on
+from service.commands.crew import LOOK_S, Berth, Crew, listen_on
 from service.commands.logs import log_config
 from service.connecting import open_database
 from service.errors import Unsafe
@@ -25,6 +27,7 @@ from service.store.migrate import is_empty, migrate, require_current
 
 logger = logging.getLogger(__name__)
 
+LEAVE_S = 3.0
 GIVEN = ("host", "port", "workers")
 
 
@@ -41,19 +44,19 @@ def run(arguments: argparse.Namespace) -> int:
     # Settings are read here and handed on; nothing below reads the environment.
     settings = load(os.environ | {name: text for name, text in given.items() if text is not None})
     # Before the database is touched, so that two first starts cannot both prepare it.
-    with sole_server(settings):
+    with sole_server(settings) as lock:
         prepare(settings)
         _say_where(settings)
-        _command(settings)
+        _command(settings, [] if lock is None else [lock])
     return 0
 
 
-def _command(settings: Settings) -> None:
+def _command(settings: Settings, kept: list[int]) -> None:
     logging.config.dictConfig(log_config(settings.log_format))
     # Here and not in the workers, so that a taken port is told to whoever started us.
     shared = _listening(settings)
     berths = [Berth("worker", place) for place in range(settings.workers)]
-    Crew(shared, [*berths, Berth("clerk", settings.workers)]).run()
+    Crew(shared, [*berths, Berth("clerk", settings.workers)], kept).run()
 
 
 def _listening(settings: Settings) -> list[socket.socket]:
@@ -92,24 +95,34 @@ def prepare(settings: Settings) -> None:
 
 
 @contextmanager
-def sole_server(settings: Settings) -> Iterator[None]:
+def sole_server(settings: Settings) -> Iterator[int | None]:
     """
-    Hold the lock that keeps a second process from serving one SQLite file.
+    Hold the lock that keeps a second crew from serving one SQLite file; its descriptor, if any.
 
     Raises:
         Unsafe: Another process holds it.
     """
     path = sqlite_path(settings)
     if path is None:
-        yield
+        yield None
         return
     with path.with_name(path.name + ".serving").open("w") as lock:
-        try:
-            fcntl.flock(lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except OSError as error:
-            text = "Another process serves this SQLite file; use PostgreSQL for more than one."
-            raise Unsafe(text) from error
-        yield
+        # The children of a crew that was killed may still be putting down their slices.
+        until = time.monotonic() + LEAVE_S
+        while not _locked(lock):
+            if time.monotonic() > until:
+                text = "Another process serves this SQLite file; use PostgreSQL for more than one."
+                raise Unsafe(text)
+            time.sleep(LOOK_S)
+        yield lock.fileno()
+
+
+def _locked(lock: IO[str]) -> bool:
+    try:
+        fcntl.flock(lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except BlockingIOError:
+        return False
+    return True
 
 
 def sqlite_path(settings: Settings) -> Path | None:
