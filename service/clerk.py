@@ -7,6 +7,7 @@ one database do no harm: each piece of work takes its lock or changes nothing th
 from __future__ import annotations
 
 import logging
+import time
 from collections.abc import Callable, Coroutine
 from dataclasses import dataclass
 from functools import partial
@@ -91,7 +92,8 @@ class Clerk:
     ) -> None:
         self._database, self._threads, self._habits = database, threads, habits
         self._board = board or Board.alone()
-        self._patience = Patience(database, threads, tally)
+        self._tally, self._taught_ms = tally or Tally(), 0
+        self._patience = Patience(database, threads, self._tally)
         widths = Widths(habits.tripwire_minute_ms)
         self._tending = Tending(database, widths, habits.tripwire_quiet_ms)
         self._posting = Posting(database, threads, receiver or Receiver())
@@ -120,6 +122,9 @@ class Clerk:
 
     async def teach(self) -> None:
         """Fold what is new, line item by line item."""
+        now_ms = time.monotonic_ns() // 1_000_000
+        self._tally.set("teaching_seconds", value=now_ms - (self._taught_ms or now_ms))
+        self._taught_ms = now_ms
         behind = await self._threads.run(self._database.read, learners.behind)
         for at in range(0, len(behind), TOGETHER):
             names = behind[at : at + TOGETHER]

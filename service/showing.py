@@ -86,6 +86,8 @@ def _learner(facts: Facts, tally: Tally) -> dict[str, Any]:
         "published_ms": facts.snapshot.published_ms,
         "halted": facts.snapshot.halted,
         "entries_behind": facts.balance["seq"] - facts.learner_seq,
+        # With more line items at work than the clerk can teach at once, each waits longer.
+        "behind_ms": 0 if facts.unread_ms is None else max(0, facts.wall_ms - facts.unread_ms),
         "rounds": tally.rounds,
         "wins": tally.wins,
         "losses": tally.losses,

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 import pytest
+from sqlalchemy import text
 
 from service.api.answers import plain
 from service.errors import NotFound
@@ -149,9 +150,24 @@ async def test_passes_and_feed_are_counted(migrated_url: str) -> None:
         seen = await state(worker)
         assert seen["passes_of_last_1000"] == {"under_floor": 2}
         assert list(seen["feed"]["last_ms"]) == ["lost"]
-        behind = seen["learner"]["entries_behind"]
+        assert seen["learner"]["entries_behind"] == 3
         await worker.clerk.teach()
-        assert (behind, (await state(worker))["learner"]["entries_behind"]) == (3, 0)
+        assert (await state(worker))["learner"]["entries_behind"] == 0
+
+
+async def test_the_state_says_how_long_an_entry_has_waited_for_the_learner(
+    migrated_url: str,
+) -> None:
+    """Counted from the oldest that was not read; nothing waits once all is read."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(1)
+        later = text("UPDATE service_clock SET seen_ms = seen_ms + 90000")
+        worker.database.write(lambda c: c.execute(later))
+        seen = (await state(worker))["learner"]
+        assert 90_000 <= seen["behind_ms"] < 100_000
+        await worker.clerk.teach()
+        assert (await state(worker))["learner"]["behind_ms"] == 0
 
 
 async def test_every_freeze_is_shown_with_who_and_why(migrated_url: str) -> None:

@@ -77,6 +77,10 @@ GAUGES = (
     Series("waiting_decisions", "Decisions that wait to be logged."),
     Series("slices_in_hand", "Slices that this process may bid from."),
     Series("change_number", "The last change that this process has applied."),
+    Series(
+        *("teaching_seconds", "How far apart the clerk's last two rounds of lessons began."),
+        *((), 1e-3),
+    ),
     Series("memory_bytes", "Resident memory of the process."),
     Series("start_timestamp_seconds", "When the process started.", (), 1e-3),
 )

@@ -32,6 +32,7 @@ class Facts:
     passes: dict[str, int]
     quarantined: int
     wall_ms: int
+    unread_ms: int | None = None
     findings: list[Kept] = field(default_factory=list)
 
 
@@ -53,11 +54,12 @@ def facts(connection: Reading, line_item: str) -> Facts:
         _today(connection, row, wall_ms),
         _slices(connection, line_item),
         snapshots(connection, [line_item])[line_item],
-        int(_one(connection, "SELECT seq FROM learner WHERE line_item = :id", line_item)["seq"]),
+        learner_seq := _scalar(connection, _LEARNER_SEQ, line_item),
         _feed(connection, line_item),
         _passes(connection, line_item),
-        int(_one(connection, _QUARANTINED, line_item)["n"]),
+        _scalar(connection, _QUARANTINED, line_item),
         wall_ms,
+        _unread_ms(connection, line_item, learner_seq),
         list(still_open(connection, line_item).values()),
     )
 
@@ -82,6 +84,17 @@ def _wall_ms(connection: Reading | Writing) -> int:
 
 def _one(connection: Reading, statement: str, line_item: str) -> dict[str, Any]:
     return dict(connection.execute(text(statement), {"id": line_item}).one()._mapping)
+
+
+def _scalar(connection: Reading, statement: str, line_item: str) -> int:
+    return int(connection.execute(text(statement), {"id": line_item}).scalar_one())
+
+
+def _unread_ms(connection: Reading, line_item: str, learner_seq: int) -> int | None:
+    """When the oldest entry came that the learner has not read; None where it has read all."""
+    statement = text("SELECT at_ms FROM stream WHERE line_item = :id AND seq = :next")
+    row = {"id": line_item, "next": learner_seq + 1}
+    return connection.execute(statement, row).scalar_one_or_none()
 
 
 def _today(connection: Reading, row: Row, wall_ms: int) -> dict[str, Any] | None:
@@ -130,4 +143,5 @@ def _passes(connection: Reading, line_item: str) -> dict[str, int]:
     return {row.reason: int(row.n) for row in rows}
 
 
-_QUARANTINED = "SELECT count(*) AS n FROM quarantine WHERE line_item = :id AND state = 'waiting'"
+_LEARNER_SEQ = "SELECT seq FROM learner WHERE line_item = :id"
+_QUARANTINED = "SELECT count(*) FROM quarantine WHERE line_item = :id AND state = 'waiting'"
