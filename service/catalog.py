@@ -125,13 +125,13 @@ class Catalog:
         # Read after the number, so that none posted in between is missed.
         await self._renew_rates()
 
-    async def follow(self) -> list[Item]:
-        """Apply what changed since the last look; returns the line items renewed."""
+    async def follow(self) -> tuple[list[Item], bool]:
+        """Apply what changed since the last look: what was renewed, and whether any was ordered."""
         news = await self._threads.run(
             self._database.read, lambda connection: changes.since(connection, self.change_seen)
         )
         if not news:
-            return []
+            return [], False
         # Numbers have no gaps: one means that what lay there was forgotten while we slept.
         missed = news[0][0] != self.change_seen + 1
         if missed or any(kind == "keys" for _, kind, _ in news):
@@ -147,7 +147,7 @@ class Catalog:
         self._misses.clear()
         # Moved on last: if the renewal failed, the next look reads the same news again.
         self.change_seen = news[-1][0]
-        return renewed
+        return renewed, any(kind != changes.SNAPSHOT for _, kind, _ in news)
 
     async def renew(self, names: list[str]) -> list[Item]:
         """Load these line items again, all of them in one read."""

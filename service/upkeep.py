@@ -114,11 +114,12 @@ class Upkeep:
 
     async def follow(self) -> None:
         """Apply what changed, and say how far this worker is."""
-        before = self._catalog.change_seen
-        for item in await self._catalog.follow():
+        renewed, ordered = await self._catalog.follow()
+        for item in renewed:
             self._apply(item)
-        # Only after all of it is applied, because a freeze waits for this very number.
-        if self._catalog.change_seen != before:
+        # Only after all of it is applied, because a freeze waits for this very number. Of a
+        # snapshot nobody waits to hear, and the next beat tells of it.
+        if ordered:
             await self._threads.run(self._database.write, self._beat)
 
     async def give_back(self) -> None:

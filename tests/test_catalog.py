@@ -71,7 +71,7 @@ async def test_a_change_ends_every_miss(migrated_url: str) -> None:
             await worker.catalog.look_up(NAME)
         begin(worker.database)
         announce(worker, "line_item", NAME)
-        assert await worker.catalog.follow() == []
+        assert await worker.catalog.follow() == ([], True)
         assert (await worker.catalog.look_up(NAME)).id == NAME
 
 
@@ -84,11 +84,11 @@ async def test_only_what_is_known_is_renewed(migrated_url: str) -> None:
             await worker.catalog.look_up(name)
         announce(worker, "line_item", "forest")
         announce(worker, "line_item", NAME)
-        assert [item.id for item in await worker.catalog.follow()] == [NAME]
+        assert [item.id for item in (await worker.catalog.follow())[0]] == [NAME]
         announce(worker, "freeze", changes.ALL)
-        assert [item.id for item in await worker.catalog.follow()] == [NAME, "meadow"]
+        assert [item.id for item in (await worker.catalog.follow())[0]] == [NAME, "meadow"]
         assert worker.catalog.get("forest") is None
-        assert await worker.catalog.follow() == []
+        assert await worker.catalog.follow() == ([], False)
 
 
 async def test_following_goes_on_from_the_last_number(migrated_url: str) -> None:
@@ -125,7 +125,8 @@ async def test_a_freeze_of_all_is_a_limit_of_each(migrated_url: str) -> None:
         assert not (await worker.catalog.look_up(NAME)).limits.frozen
         worker.run("INSERT INTO freezing VALUES ('*', 'all', 1, 'tester', 'a look')")
         announce(worker, "freeze", changes.ALL)
-        (item,) = await worker.catalog.follow()
+        (item,), ordered = await worker.catalog.follow()
+        assert ordered
         assert item.limits.frozen
 
 

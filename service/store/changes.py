@@ -7,6 +7,7 @@ from sqlalchemy import text
 from service.store.database import Reading, Writing
 from service.store.workers import bound
 
+SNAPSHOT = "snapshot"  # The kind of change that nobody waits to see applied.
 ALL = "*"  # The line item of a change that concerns all; no id may contain it.
 
 

@@ -14,7 +14,7 @@ from service.ledger.cancelling import ALL
 from service.ledger.entries import Entry
 from service.store import epochs, lessons
 from service.store.books import Books
-from service.store.changes import announce
+from service.store.changes import SNAPSHOT, announce
 from service.store.database import Database, Writing, insert_many, locking
 from service.store.decisions import quarantine
 from service.store.journal import note
@@ -169,7 +169,7 @@ def _keep(connection: Writing, taught: Mapping[str, _Taught], now_ms: int) -> No
     insert_many(connection, _PUBLISH, published)
     # The change number last: its one row is what every writer waits for.
     if published:
-        announce(connection, "snapshot", [row[-1] for row in published])
+        announce(connection, SNAPSHOT, [row[-1] for row in published])
 
 
 def _set_aside(connection: Writing, line_item: str, taught: _Taught, now: int) -> None:
