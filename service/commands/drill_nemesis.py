@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import asyncio
+import contextlib
+import os
 import signal
 import socket
 import time
@@ -14,6 +16,7 @@ from pathlib import Path
 
 import numpy as np
 
+from service.commands import pinning
 from service.commands.postgresql_process import NoPostgreSQL, PostgreSQLProcess
 from service.commands.server_process import HOST, ServerFailed, ServerProcess
 
@@ -177,10 +180,12 @@ class Nemesis:
         if child is None or child.poll() is not None:
             return
         self._paused.add(server.port)
-        child.send_signal(signal.SIGSTOP)
+        # All at once: who keeps the crew has nothing to do with prices, its children have.
+        crew = [child.pid, *pinning.children(child.pid)]
+        _signal(crew, signal.SIGSTOP)
         self.done["pause"] += 1
         await asyncio.sleep(pause_s)
-        child.send_signal(signal.SIGCONT)
+        _signal(crew, signal.SIGCONT)
         self._paused.discard(server.port)
 
     async def _restart(self, postgresql: PostgreSQLProcess) -> None:
@@ -213,3 +218,10 @@ async def _start_again(postgresql: PostgreSQLProcess) -> None:
         else:
             return
     raise NoPostgreSQL("PostgreSQL did not come back after it was killed.")
+
+
+def _signal(processes: Sequence[int], what: signal.Signals) -> None:
+    """Signal those that still live."""
+    for one in processes:
+        with contextlib.suppress(ProcessLookupError):
+            os.kill(one, what)

@@ -20,6 +20,7 @@ import uvloop
 from service.commands import caller, options
 from service.commands.drill_kill import TIGHT, WIDE, Market, line_items
 from service.commands.drill_traffic import Traffic
+from service.commands.memory_of import family
 from service.commands.server_process import ServerProcess
 
 PAGE_BYTES = os.sysconf("SC_PAGE_SIZE")
@@ -105,15 +106,16 @@ async def _soak(arguments: argparse.Namespace, server: ServerProcess) -> Figures
 
 
 def look(server: ServerProcess) -> Look:
-    """What the server's process uses now, as the kernel counts it."""
+    """What the server's crew uses now, as the kernel counts it."""
     child = server.child
     if child is None:
         return Look(0, 0, 0)
-    place = Path(f"/proc/{child.pid}")
-    pages = int((place / "statm").read_text().split()[1])
+    places = [Path(f"/proc/{one}") for one in family(child.pid)]
+    pages = sum(int((place / "statm").read_text().split()[1]) for place in places)
+    open_now = sum(len(list((place / "fd").iterdir())) for place in places)
     wal = server.directory / "bidkeel.sqlite-wal"
     log = wal.stat().st_size if wal.exists() else 0
-    return Look(pages * PAGE_BYTES / MIB, len(list((place / "fd").iterdir())), log / MIB)
+    return Look(pages * PAGE_BYTES / MIB, open_now, log / MIB)
 
 
 def judge(
