@@ -7,9 +7,17 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from service.decision.counts import Counts, delay_mean_ms, exposure, nothing
+from service.decision.counts import (
+    DELAY_HALVINGS,
+    Counts,
+    delay_mean_ms,
+    exposure,
+    nothing,
+    waiting,
+)
 from service.decision.price import Proposal, ready
 from service.decision.terms import Terms
+from service.learner import delay
 from service.learner.fold import Lesson, fold
 from service.learner.memory import Cell, Memory
 from service.learner.rules import KEPT, Rules
@@ -152,3 +160,37 @@ def test_mean_and_variance_are_shares_of_the_scale() -> None:
 
     assert float(counts.mean_share(of)) == pytest.approx(0.1, rel=1e-12)
     assert float(counts.variance_share(of)) == pytest.approx(0.04, rel=1e-12)
+
+
+def columns(memory: Memory, of: Terms) -> np.ndarray[tuple[int, int], np.dtype[np.float64]]:
+    """Rounds, known, converted, amount and its square of each cell, by arrays throughout."""
+    base, ages = memory.base, waiting(memory, of).ages
+    bought = np.asarray([cell.bought for cell in memory.cells], dtype=np.float64)
+    mean_ms = 1.0 / delay.fit(waiting(memory, of), 1.0, of.window_ms / 4, DELAY_HALVINGS).rate
+    share = delay.arrived_share(ages[:-1], np.full(len(bought), mean_ms), of.window_ms)
+    closed = np.arange(len(bought)) < memory.closed
+    known = np.where(closed, [cell.known for cell in memory.cells], bought * share)
+    sums = [[c.rounds, c.converted, c.amount, c.amount_square] for c in memory.cells]
+    long_ago = base.rounds - sum(cell.rounds for cell in memory.cells)
+    first = [long_ago, base.converted, base.amount, base.amount_square]
+    return np.insert(np.asarray([first, *sums], dtype=np.float64), 1, [base.known, *known], axis=1)
+
+
+@pytest.mark.parametrize("span", [1, 5, 64])
+@pytest.mark.parametrize("values", [0.0, 0.02, 0.5])
+def test_a_snapshot_has_the_counts_that_arrays_give(span: int, values: float) -> None:
+    """To the last bit, however many cells are open and values have come."""
+    of, rng = terms(), np.random.default_rng(span)
+    rules = Rules.from_config(with_value(config("ucbid"), arrival="accrues"))
+    memory, at_ms = Memory.fresh(), 0
+    for _ in range(span):
+        at_ms += WINDOW_MS // 64
+        wins = [Lesson("won", {"price": 1, "round": 1}, at_ms)] * int(rng.integers(1, 40))
+        brought = [
+            Lesson("value", {"amount": 777, "was": None, "won_ms": at_ms}, at_ms + ms)
+            for ms in sorted(rng.integers(1, 9_000_000, rng.binomial(len(wins), values)).tolist())
+        ]
+        memory = fold(memory, [*wins, *brought], rules)
+    many = np.maximum(columns(memory, of).sum(axis=0), 0.0)
+
+    assert [float(one) for one in Counts.of(memory, of).all] == many.tolist()
