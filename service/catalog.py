@@ -196,7 +196,9 @@ def _load(
 
 
 def _item(row: line_items.Row, snapshot: learners.Snapshot | None, before: Item | None) -> Item:
-    terms = Terms.from_config(row.config)
+    # A change of the configuration is a new version.
+    known = before is not None and before.version == row.version
+    terms = before.terms if before is not None and known else Terms.from_config(row.config)
     halted = snapshot is not None and snapshot.halted
     # Unlike a damaged one, a halted state bars the last good one too: both hold what was cancelled.
     seq, made = (0, None) if halted else _ready(snapshot, terms)

@@ -6,7 +6,7 @@ import numpy as np
 
 from service.decision.counts import Counts
 from service.decision.terms import Terms
-from service.learner.bounds import Numbers
+from service.learner.arrays import Numbers, double
 
 # A posterior needs both of its numbers above 0, also where a guess sits at the ceiling.
 LEAST = 1e-6
@@ -20,6 +20,8 @@ def mean(counts: Counts, terms: Terms) -> Numbers:
     """
     impressions = terms.prior_impressions + counts.known
     amount = terms.prior_conversions * terms.typical + counts.amount
+    if impressions.ndim == 0:
+        return double(amount / impressions if impressions > 0.0 else terms.expected)
     some = np.where(impressions > 0.0, impressions, 1.0)
     return np.where(impressions > 0.0, amount / some, float(terms.expected))
 

@@ -213,7 +213,7 @@ def _counts(memory: Memory, terms: Terms) -> Counts | None:
             counts = Counts.of(memory, terms)
     except OverflowError:
         return None
-    return counts if all(np.isfinite(one) for one in counts.all) else None
+    return counts if all(map(math.isfinite, counts.all)) else None
 
 
 def _bid(offer: Offer, terms: Terms) -> float | None:

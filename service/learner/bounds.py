@@ -7,6 +7,8 @@ docstring says otherwise. `ln` below is the natural logarithm.
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy import special
@@ -64,9 +66,12 @@ def kl_ucbid_index(mean: ArrayLike, rounds: ArrayLike, known: ArrayLike, gamma: 
     Achddou, Cappé, Garivier, "Efficient Algorithms for Stochastic Repeated Second-price
     Auctions", ALT 2021 (klUCBid). Arguments as for `ucbid_index`.
     """
-    some = np.maximum(_array(known), 1.0)
-    index = kl_upper(mean, gamma * np.log(_array(rounds)) / some)
-    return np.where(_array(known) > 0.0, index, 1.0)
+    p, t, n = _array(mean), _array(rounds), _array(known)
+    if p.ndim == t.ndim == n.ndim == 0:
+        level = gamma * float(np.log(t)) / max(float(n), 1.0)
+        return _array(kl_upper_single(float(p), level) if n > 0.0 else 1.0)
+    index = kl_upper(p, gamma * np.log(t) / np.maximum(n, 1.0))
+    return np.where(n > 0.0, index, 1.0)
 
 
 def kl(p: ArrayLike, q: ArrayLike) -> Numbers:
@@ -91,6 +96,37 @@ def kl_upper(mean: ArrayLike, divergence: ArrayLike) -> Numbers:
     at_zero = -np.expm1(-np.maximum(d, 0.0))
     index = np.where(p >= 1.0, 1.0, np.where(p <= SMALLEST_MEAN, at_zero, root))
     return np.clip(index, p, 1.0)
+
+
+def kl_upper_single(mean: float, divergence: float) -> float:
+    """
+    `kl_upper` of one number: the same steps without an array for each, to the last bit.
+
+    Logarithms and exponentials stay those of numpy, which may differ from the C library's.
+    """
+    d = max(divergence, 0.0)
+    if mean >= 1.0:
+        root = 1.0
+    elif mean <= SMALLEST_MEAN:
+        root = -float(np.expm1(-d))
+    else:
+        root = mean + _kl_distance_single(mean, d)
+    return min(max(root, mean), 1.0)
+
+
+def _kl_distance_single(p: float, d: float) -> float:
+    rest = 1.0 - p
+    end = rest * (1.0 - 2.0**-52)
+    near_one = -rest * float(np.expm1(-(d - p * float(np.log(p))) / rest))
+    x = min(math.sqrt(d / 2.0), d + math.sqrt(d * d + 2.0 * p * d), near_one, end)
+    for _ in range(NEWTON_STEPS):
+        excess = -p * float(np.log1p(x / p)) - rest * float(np.log1p(-x / rest)) - d
+        slope = max(x, 1e-300) / ((p + x) * (rest - x))
+        before, x = x, min(max(x - excess / slope, 0.0), end)
+        # From here on every step would be this one again.
+        if x == before:
+            break
+    return x
 
 
 def _kl_distance(p: Numbers, d: Numbers) -> Numbers:

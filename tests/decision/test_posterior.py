@@ -39,6 +39,21 @@ def test_without_weight_the_mean_is_plain_and_at_first_the_guess() -> None:
     assert float(posterior.mean(counts(4, CEILING), plain)) == CEILING / 4
 
 
+@pytest.mark.parametrize("conversions", [0, 1, 3])
+def test_one_line_item_and_many_runs_have_the_same_mean(conversions: int) -> None:
+    """To the last bit, also before anything is known."""
+    guess = {"per_impression": CEILING // 7, "conversions": conversions}
+    terms = Terms.from_config(with_value(config("mean"), expected=guess))
+    rng = np.random.default_rng(8)
+    known = np.where(rng.random(200) < 0.2, 0.0, 1e3 * rng.random(200))
+    many = Counts(known, known, known, known * CEILING * rng.random(200), known)
+    single = [Counts(*(one[run] for one in many.all)) for run in range(200)]
+
+    means = [float(posterior.mean(counts, terms)) for counts in single]
+
+    assert means == posterior.mean(many, terms).tolist()
+
+
 def test_a_value_adds_its_share_to_a_beta() -> None:
     """x / scale to the first and the rest of one to the second, with the guess's mean before."""
     first, second = posterior.beta(counts(10, 2.5 * CEILING), GUESSED)

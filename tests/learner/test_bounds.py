@@ -186,3 +186,31 @@ def test_gamma_quantile_of_shape_one(order: float, rate: float) -> None:
     quantile = float(bounds.gamma_quantile(1.0, rate, order))
 
     assert quantile == pytest.approx(-math.log1p(-order) / rate, rel=1e-12)
+
+
+def test_one_number_gives_the_bits_that_many_give() -> None:
+    """Over means from nought to one and divergences from nothing to far beyond the ceiling."""
+    edges = [0.0, 1e-300, 1e-200, 1e-12, 0.5, 1.0 - 1e-12, 1.0 - 2.0**-53, 1.0, 1.5]
+    rng = np.random.default_rng(5)
+    means = [*edges, *rng.random(150), *10.0 ** rng.uniform(-15, 0, 100)]
+    divergences = [-1.0, 0.0, 1e-300, 1e-16, 700.0, 1e300, *10.0 ** rng.uniform(-9, 3, 40)]
+    p, d = (one.ravel() for one in np.meshgrid(means, divergences))
+    with np.errstate(all="ignore"):
+        many = bounds.kl_upper(p, d).tolist()
+        single = [
+            bounds.kl_upper_single(*pair) for pair in zip(p.tolist(), d.tolist(), strict=True)
+        ]
+
+    assert single == many
+
+
+def test_one_line_item_gets_the_index_that_a_row_of_runs_gets() -> None:
+    """Also before the first value, and with a part of one known."""
+    rng = np.random.default_rng(6)
+    means, rounds = rng.random(500), 1.0 + rng.integers(0, 10**6, 500)
+    known = np.where(rng.random(500) < 0.2, 0.0, rounds * rng.random(500))
+    many = bounds.kl_ucbid_index(means, rounds, known, 1.01).tolist()
+    rows = zip(means, rounds, known, strict=True)
+    single = [float(bounds.kl_ucbid_index(*row, 1.01)) for row in rows]
+
+    assert single == many
