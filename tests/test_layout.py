@@ -70,7 +70,7 @@ OTHERS: dict[str, set[str]] = {
     "money": set(),
     "errors": set(),
     "settings": {"pydantic_settings", "pydantic"},
-    "learner": {"numpy", "scipy.special"},
+    "learner": {"numpy", "scipy.special", "jiter", "orjson"},
     "decision": {"numpy", "scipy.special"},
     "ledger": set(),
     "guard": set(),

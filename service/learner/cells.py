@@ -7,6 +7,7 @@ forgets, kept and thinned until they are too old to count.
 from __future__ import annotations
 
 from bisect import bisect_right
+from operator import attrgetter
 
 from service.learner.change import UNITS_PER_NAT
 from service.learner.memory import Cell, Memory
@@ -14,6 +15,9 @@ from service.learner.rules import ACCRUES, KEPT, Drift, Rules
 from service.learner.watch import Watch, step
 
 KEPT_PIECE = KEPT // 8  # What is kept beyond the horizon lies in at most some sixteen cells.
+
+
+_OF_CELL = attrgetter(*Cell.__slots__)
 
 
 class Sums:
@@ -30,12 +34,14 @@ class Sums:
     amount_square: int
 
     def __init__(self, cell: Cell) -> None:
-        for name in Cell.__slots__:
-            setattr(self, name, getattr(cell, name))
+        # Written out, since every cell is opened and closed again for every lesson.
+        self.start_ms, self.rounds = cell.start_ms, cell.rounds
+        self.bought, self.known, self.converted = cell.bought, cell.known, cell.converted
+        self.amount, self.amount_square = cell.amount, cell.amount_square
 
     def cell(self) -> Cell:
         """The cell it has become."""
-        return Cell(*(getattr(self, name) for name in Cell.__slots__))
+        return Cell(*_OF_CELL(self))
 
     def add(self, other: Sums) -> None:
         """Take in a later cell."""

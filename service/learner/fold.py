@@ -7,7 +7,7 @@ does not matter, so a rebuild from zero gives the same bytes as learning piece b
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
-from dataclasses import replace
+from operator import attrgetter
 from typing import Any
 
 from service.learner import exptree_lessons
@@ -21,6 +21,8 @@ from service.learner.rules import ACCRUES, ONCE, Rules
 from service.learner.tally import NAMES, Tally
 
 Body = Mapping[str, Any]
+VALUES = ("known", "converted", "amount", "amount_square")
+_SUMS, _VALUES = attrgetter(*NAMES), attrgetter(*VALUES)
 
 
 def fold(memory: Memory, lessons: Iterable[Lesson], rules: Rules) -> Memory:
@@ -40,22 +42,23 @@ def fold(memory: Memory, lessons: Iterable[Lesson], rules: Rules) -> Memory:
         # What teaches no more moves no clock either, as if it had never been said.
         if lesson.kind != SPENT:
             growing.take(lesson)
-    return _with_parts(growing.grown(), read, rules)
+    tree = growing.grown_tree()
+    return growing.grown(tree, _parts(memory, read, rules))
 
 
-def _with_parts(memory: Memory, lessons: list[Lesson], rules: Rules) -> Memory:
+def _parts(memory: Memory, lessons: list[Lesson], rules: Rules) -> tuple[tuple[str, bytes], ...]:
     """Let each part that the configuration wants read the same lessons; others are dropped."""
     wanted = [name for name, part in PARTS.items() if part.wanted(rules)]
     parts = ((name, PARTS[name].learn(memory.part(name), lessons, rules)) for name in wanted)
-    return replace(memory, parts=tuple((name, state) for name, state in parts if state))
+    return tuple((name, state) for name, state in parts if state)
 
 
 class _Growing:
     """A memory that is being added to; every lesson is O(log cells)."""
 
     def __init__(self, memory: Memory, rules: Rules) -> None:
-        self._memory, self._rules = memory, rules
-        self._sums = {name: getattr(memory.base, name) for name in NAMES}
+        self._rules = rules
+        self._sums = dict(zip(NAMES, _SUMS(memory.base), strict=True))
         self._cells = Cells(memory, rules)
         self._heard_ms, self._prior = memory.heard_ms, memory.prior
         self._ripe_ms, self._ripe_again_ms = memory.ripe_ms, memory.ripe_again_ms
@@ -74,14 +77,12 @@ class _Growing:
             self._also(tree_lesson(lesson.kind, lesson.body))
             self._also(earlier_lesson(lesson.kind, lesson.body))
 
-    def grown(self) -> Memory:
-        """What it came to."""
+    def grown(self, tree: bytes, parts: tuple[tuple[str, bytes], ...]) -> Memory:
+        """What it came to, with what its tree and its parts came to."""
         cells, closed = self._cells.state
-        old = self._cells.long_ago
-        values = {name: getattr(old, name) for name in VALUES}
-        return replace(
-            self._memory,
-            base=Tally(**{**self._sums, **values}),
+        values = zip(VALUES, _VALUES(self._cells.long_ago), strict=True)
+        return Memory(
+            base=Tally(**{**self._sums, **dict(values)}),
             cells=cells,
             closed=closed,
             clock_ms=self._cells.clock_ms,
@@ -93,7 +94,8 @@ class _Growing:
             delay_sum_ms=self._delay_sum_ms,
             prior=self._prior,
             watch=self._cells.watch,
-            tree=self._grown_tree(),
+            tree=tree,
+            parts=parts,
         )
 
     def won(self, body: Body) -> None:
@@ -192,7 +194,8 @@ class _Growing:
         if lesson is not None and self._rules.tree is not None:
             self._of_tree.append(lesson)
 
-    def _grown_tree(self) -> bytes:
+    def grown_tree(self) -> bytes:
+        """What the tree came to."""
         # All at once, since a tree is unpacked and packed again for it.
         if self._rules.tree is None or not self._of_tree:
             return self._tree
@@ -215,7 +218,6 @@ class _Growing:
         self._sums["clipped"] += (after > ceiling) - (before > ceiling)
 
 
-VALUES = ("known", "converted", "amount", "amount_square")
 LESSONS: dict[str, Callable[[_Growing, Body], None]] = {
     "won": _Growing.won,
     "billed": _Growing.billed,

@@ -27,6 +27,15 @@ _HEAD = struct.Struct(">3sBQBQQQH")
 _SOURCE = struct.Struct(">BBH")
 _ROW = struct.Struct(">HB")
 _COUNT = struct.Struct(">Q")
+_BITS = tuple(1 << column for column in range(COLUMNS))
+# The columns that a mask names, and how their counts are packed: all of a row at once.
+_MASKED = [
+    (columns, struct.Struct(f">{len(columns)}Q"))
+    for columns in (
+        tuple(column for column, bit in enumerate(_BITS) if mask & bit)
+        for mask in range(1 << COLUMNS)
+    )
+]
 _NAME = b"mkt"
 AUCTIONS = ("second", "first")
 
@@ -162,24 +171,24 @@ def _sources(body: bytes, sources: int, first_only: bool) -> dict[Key, Rows]:
         rows: Rows = {}
         for _ in range(places):
             place, mask = _ROW.unpack_from(body, at)
-            at += _ROW.size
-            rows[place] = [0] * COLUMNS
-            for column in range(COLUMNS):
-                if mask >> column & 1:
-                    (rows[place][column],) = _COUNT.unpack_from(body, at)
-                    at += _COUNT.size
+            columns, counts = _MASKED[mask % len(_MASKED)]
+            rows[place] = row = [0] * COLUMNS
+            for column, one in zip(columns, counts.unpack_from(body, at + _ROW.size), strict=True):
+                row[column] = one
+            at += _ROW.size + counts.size
         start = at - _size(rows) - length
         found[AUCTIONS[auction], body[start : start + length].decode()] = rows
     return found
 
 
 def _size(rows: Rows) -> int:
-    return sum(_ROW.size + _COUNT.size * sum(map(bool, row)) for row in rows.values())
+    empty = sum(row.count(0) for row in rows.values())
+    return len(rows) * (_ROW.size + _COUNT.size * COLUMNS) - _COUNT.size * empty
 
 
 def _packed(place: int, row: list[int]) -> bytes:
-    mask = sum(bool(one) << column for column, one in enumerate(row))
-    return _ROW.pack(place, mask) + b"".join(_COUNT.pack(one) for one in row if one)
+    mask = sum(bit for bit, one in zip(_BITS, row, strict=True) if one)
+    return _ROW.pack(place, mask) + _MASKED[mask][1].pack(*filter(None, row))
 
 
 def _joined(rows: Rows, fine: int, coarse: int) -> Rows:

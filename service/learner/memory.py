@@ -10,6 +10,10 @@ from __future__ import annotations
 import json
 from base64 import b64decode, b64encode
 from dataclasses import dataclass, replace
+from operator import attrgetter
+
+import jiter
+import orjson
 
 from service.learner.tally import NAMES, Tally
 from service.learner.watch import FIRST, Watch
@@ -122,15 +126,19 @@ class Memory:
         """Canonical JSON: equal memories give equal bytes."""
         content = {
             "form": FORM,
-            "base": [getattr(self.base, name) for name in NAMES],
-            "cells": [[getattr(cell, name) for name in Cell.__slots__] for cell in self.cells],
+            "base": _BASE(self.base),
+            "cells": [*map(_CELL, self.cells)],
             "prior": [self.prior.per_impression, self.prior.typical] if self.prior else [],
             "watch": list(self.watch),
             "tree": _packed(self.tree),
             "parts": {name: _packed(state) for name, state in self.parts},
-            **{name: getattr(self, name) for name in _NUMBERS},
+            **dict(zip(_NUMBERS, _OWN(self), strict=True)),
         }
-        return json.dumps(content, sort_keys=True, separators=(",", ":")).encode()
+        try:
+            return orjson.dumps(content, option=orjson.OPT_SORT_KEYS)
+        # It takes no whole number beyond 64 bits, and sums of squares grow beyond.
+        except TypeError:
+            return json.dumps(content, sort_keys=True, separators=(",", ":")).encode()
 
     @staticmethod
     def from_bytes(state: bytes) -> Memory:
@@ -141,9 +149,9 @@ class Memory:
             UnreadableMemory: Not JSON, another form, or not exactly our integers.
         """
         try:
-            content = json.loads(state)
+            content = jiter.from_json(state)
             form = content.pop("form", None) if isinstance(content, dict) else None
-            if form != FORM or set(content) != {*_NUMBERS, *_PARTS}:
+            if form != FORM or content.keys() != _MEMBERS:
                 raise UnreadableMemory("not the form of memory this release writes")
             return _read(content)
         # A ValueError too, but it says more than the one below would.
@@ -158,6 +166,9 @@ _NUMBERS = (
     *("delays", "delay_sum_ms"),
 )
 _PARTS = ("base", "cells", "prior", "watch", "tree", "parts")
+_ONLY_INTEGERS = frozenset((int,))
+_MEMBERS = {*_NUMBERS, *_PARTS}
+_BASE, _CELL, _OWN = attrgetter(*NAMES), attrgetter(*Cell.__slots__), attrgetter(*_NUMBERS)
 
 
 def _read(content: dict[str, object]) -> Memory:
@@ -193,6 +204,7 @@ def _unpacked(text: object) -> bytes:
 def _whole(numbers: object, count: int) -> list[int]:
     if not isinstance(numbers, list) or len(numbers) != count:
         raise UnreadableMemory("a part has another length")
-    if any(type(number) is not int for number in numbers):
+    # To isinstance True is an int too, and no count of ours.
+    if not _ONLY_INTEGERS.issuperset(map(type, numbers)):
         raise UnreadableMemory("a memory holds integers only")
     return numbers

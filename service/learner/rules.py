@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import lru_cache
 from itertools import count
 from typing import Any
 
@@ -71,8 +72,13 @@ class MarketRules:
     @staticmethod
     def of(cap: int, *, priced: bool) -> MarketRules:
         """The top is the next of 1, 2, 5 times a power of ten: most new caps recount nothing."""
-        tops = (step * 10**power for power in count(3) for step in (1, 2, 5))
-        return MarketRules(next(top for top in tops if top >= cap), priced)
+        return MarketRules(_top(cap), priced)
+
+
+@lru_cache(maxsize=256)
+def _top(cap: int) -> int:
+    tops = (step * 10**power for power in count(3) for step in (1, 2, 5))
+    return int(next(top for top in tops if top >= cap))
 
 
 @dataclass(frozen=True, slots=True)

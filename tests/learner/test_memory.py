@@ -94,6 +94,17 @@ def test_the_bytes_are_canonical_json() -> None:
     assert content["base"][NAMES.index("amount")] == 10**30
 
 
+@pytest.mark.parametrize("square", [2**63 - 1, 2**64 - 1, 2**64, 10**40])
+def test_sums_beyond_64_bits_are_written_and_read_whole(square: int) -> None:
+    """By whatever writes the JSON, in the same canonical form."""
+    memory = Memory(Tally(amount_square=square), (Cell(7, amount_square=-square),), tree=b"a tree")
+    state = memory.to_bytes()
+    again = json.dumps(json.loads(state), sort_keys=True, separators=(",", ":")).encode()
+
+    assert state == again
+    assert Memory.from_bytes(state) == memory
+
+
 def test_the_total_adds_what_is_in_cells() -> None:
     """Values in open cells are in the sums, but their impressions are not known yet."""
     memory = Memory(
