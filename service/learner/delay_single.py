@@ -23,7 +23,7 @@ ROUNDING = 1e-12  # Of a log-likelihood, as a part of the most its terms can com
 LOGARITHM_MAX = 60.0  # Of a share, rate or chance in range none is larger.
 NEAR_ONE = 1e-13  # Of what is left of a share, by rounding; the nearer to 1 the more it matters.
 NEARLY = 1e-4  # After so small a step no height is off by more than its rounding.
-SETTLED = 1e-8  # So small a step of Newton's is the last one that counts.
+SETTLED = 1e-6  # So small a step of Newton's is the last one that counts.
 WHOLE_MAX = 2.0**52  # Sums of halves are exact up to here, in any order.
 
 _UP = np.linspace(0.0, 1.0, PROFILE_POINTS)
@@ -120,14 +120,15 @@ class _Profile:
         ages, counts = double([age for age, _ in self._buckets]), double(self._counts)
         come = -np.expm1(-rates[:, np.newaxis] * ages)
         still, came = 1.0 - come, come * counts
-        over = np.full_like(rates, self._silent / self._converted)
-        for taken in range(NEWTON_STEPS):
+        # As if all buckets were of one age, which is not far off and never beyond the root.
+        mean = came.sum(axis=1) / max(self._silent, 1)
+        over = np.maximum(mean * (1.0 + self._silent / self._converted) - 1.0, CLOSEST)
+        for _ in range(NEWTON_STEPS):
             apart = 1.0 / (over[:, np.newaxis] + still)
             total, square = np.vecdot(came, apart), np.vecdot(came * apart, apart)
             step = total * (1.0 - total / self._converted) / np.maximum(square, SMALLEST)
             before, over = over, np.maximum(over - step, CLOSEST)
-            # Fewer are seldom enough, and to ask costs half a step.
-            if taken > 1 and (np.abs(over - before) <= NEARLY * over).all():
+            if (np.abs(over - before) <= NEARLY * over).all():
                 break
         else:
             raise TooClose

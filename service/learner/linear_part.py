@@ -11,6 +11,7 @@ import struct
 from base64 import b64decode
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -29,6 +30,13 @@ FORM = 1
 _HEAD = struct.Struct(">3sBBQ")
 _NAME = b"lin"
 _WIDE = 16  # Bytes of a sum of value times weight.
+
+
+@cache
+def _upper(dimensions: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """The places of a matrix from its diagonal on; there are only a few sizes."""
+    rows, columns = np.triu_indices(dimensions)
+    return rows, columns
 
 
 class UnreadableSums(UnreadableMemory):
@@ -64,7 +72,7 @@ class Sums:
         """At most 18 KiB, half of the matrix; nothing before the first lesson."""
         if not self.lessons and not any(self.moment):
             return b""
-        half = self.square[np.triu_indices(self.dimensions)].astype(">i8").tobytes()
+        half = self.square[_upper(self.dimensions)].astype(">i8").tobytes()
         moment = b"".join(one.to_bytes(_WIDE, signed=True) for one in self.moment)
         body = _HEAD.pack(_NAME, FORM, self.dimensions, self.lessons) + half + moment
         return sealed(body)
@@ -80,7 +88,7 @@ class Sums:
         if not state:
             return Sums.fresh(dimensions)
         body, sound = unsealed(state)
-        upper = np.triu_indices(dimensions)
+        upper = _upper(dimensions)
         end = _HEAD.size + 8 * len(upper[0])
         whole = len(body) == end + _WIDE * dimensions
         if not whole or not sound:

@@ -13,9 +13,10 @@ from typing import Any
 
 from service.learner.curve_counts import Feed, Outcome, told
 from service.learner.lesson import Lesson
-from service.learner.market_state import AUCTIONS, MarketState, UnreadableMarket, read
+from service.learner.market_in_place import MarketBytes
+from service.learner.market_state import AUCTIONS, Key, MarketState, UnreadableMarket, read
 from service.learner.partition import Ticks
-from service.learner.rules import CELLS, SPANS_KEPT, Drift, Rules
+from service.learner.rules import CELLS, SPANS_KEPT, Drift, MarketRules, Rules
 
 NAME = "market"
 # round(2^32 exp(-SPANS_KEPT / CELLS)), what is left of a count after one piece; a constant, so
@@ -24,6 +25,7 @@ KEPT_PER_PIECE = 3_451_103_176
 PIECES_MAX = 256
 OUTCOMES = ("won", "lost")
 TELLING = (*OUTCOMES, "reset")
+FEW = 4  # So many outcomes are counted in the bytes; for more all of them are read.
 
 Body = Mapping[str, Any]
 
@@ -45,6 +47,11 @@ def learn(state: bytes, lessons: Sequence[Lesson], rules: Rules) -> bytes:
     aging = rules.drift is not None
     if not aging and not any(lesson.kind in TELLING for lesson in lessons):
         return state
+    telling = [lesson for lesson in lessons if lesson.kind in TELLING]
+    if not aging and state and len(telling) <= FEW:
+        added = _in_place(state, telling, rules.market)
+        if added is not None:
+            return added
     market = read(state) if state else MarketState(rules.market.top)
     if market.top != rules.market.top:
         raise UnreadableMarket("counted on other ticks")
@@ -59,19 +66,39 @@ def learn(state: bytes, lessons: Sequence[Lesson], rules: Rules) -> bytes:
     return market.to_bytes() if market.sources or market.rounds or market.clock_ms else b""
 
 
+def _in_place(state: bytes, lessons: Sequence[Lesson], rules: MarketRules) -> bytes | None:
+    """The state with some outcomes counted; None where one of them is new to it."""
+    market = MarketBytes(state)
+    if not market.sound:
+        return None
+    empty = market.empty
+    if empty.top != rules.top or any(lesson.kind == "reset" for lesson in lessons):
+        return None
+    for lesson in lessons:
+        heard = _heard(lesson, empty.ticks, priced=rules.priced)
+        if heard is not None and not market.count(*heard):
+            return None
+    return market.to_bytes()
+
+
 def _taught(market: MarketState, lesson: Lesson, *, priced: bool) -> MarketState:
-    body = lesson.body
     if lesson.kind == "reset":
         return MarketState(market.top, 0, market.clock_ms, market.rounds, market.forgotten)
-    auction = body.get("auction", "second")
-    # Nothing can be read off an outcome whose bid is not said.
-    if auction in AUCTIONS and "bid" in body and body.get("only") != "value":
-        ticks = market.ticks
-        outcome = said(lesson.kind == "won", auction, body, ticks, priced=priced)
-        if outcome is not None:
-            key = market.key_of(auction, body["source"])
-            market.count(key, *told(outcome, ticks))
+    heard = _heard(lesson, market.ticks, priced=priced)
+    if heard is not None:
+        key, place, column = heard
+        market.count(market.key_of(*key), place, column)
     return market
+
+
+def _heard(lesson: Lesson, ticks: Ticks, *, priced: bool) -> tuple[Key, int, int] | None:
+    """The source, the place and the column in which an outcome counts; None where in none."""
+    body, auction = lesson.body, lesson.body.get("auction", "second")
+    # Nothing can be read off an outcome whose bid is not said.
+    if auction not in AUCTIONS or "bid" not in body or body.get("only") == "value":
+        return None
+    outcome = said(lesson.kind == "won", auction, body, ticks, priced=priced)
+    return None if outcome is None else ((auction, body["source"]), *told(outcome, ticks))
 
 
 def _rounds(lesson: Lesson) -> int:

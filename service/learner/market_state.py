@@ -23,10 +23,10 @@ TICK_MIN = 2
 # Room for every row, whatever the names: the heads of all sources, and what stands before them.
 ROWS_BYTES_MAX = BYTES_MAX - 128 - 4 * (NAMED + 1) - NAMED * 70
 
-_HEAD = struct.Struct(">3sBQBQQQH")
-_SOURCE = struct.Struct(">BBH")
-_ROW = struct.Struct(">HB")
-_COUNT = struct.Struct(">Q")
+HEAD = struct.Struct(">3sBQBQQQH")
+SOURCE = struct.Struct(">BBH")
+ROW = struct.Struct(">HB")
+COUNT = struct.Struct(">Q")
 _BITS = tuple(1 << column for column in range(COLUMNS))
 # The columns that a mask names, and how their counts are packed: all of a row at once.
 _MASKED = [
@@ -36,7 +36,7 @@ _MASKED = [
         for mask in range(1 << COLUMNS)
     )
 ]
-_NAME = b"mkt"
+NAME = b"mkt"
 AUCTIONS = ("second", "first")
 
 Key = tuple[str, str]
@@ -91,7 +91,7 @@ class MarketState:
         fresh = not row[column]
         row[column] += PARTS
         if fresh:
-            self.used += _COUNT.size + (0 if sum(map(bool, row)) > 1 else _ROW.size)
+            self.used += COUNT.size + (0 if sum(map(bool, row)) > 1 else ROW.size)
             while self.used > ROWS_BYTES_MAX and self.ticks.cells > 1:
                 self._join()
 
@@ -110,10 +110,10 @@ class MarketState:
     def to_bytes(self) -> bytes:
         """Equal states give equal bytes; 11 for most places visited, at most 43."""
         numbers = self.top, self.level, self.clock_ms, self.rounds, self.forgotten
-        parts = [_HEAD.pack(_NAME, FORM, *numbers, len(self.sources))]
+        parts = [HEAD.pack(NAME, FORM, *numbers, len(self.sources))]
         for (auction, source), rows in sorted(self.sources.items()):
             name = source.encode()
-            parts += [_SOURCE.pack(AUCTIONS.index(auction), len(name), len(rows)), name]
+            parts += [SOURCE.pack(AUCTIONS.index(auction), len(name), len(rows)), name]
             parts += [_packed(place, row) for place, row in sorted(rows.items())]
         body = b"".join(parts)
         return sealed(body)
@@ -148,10 +148,10 @@ def read(state: bytes, first_only: bool = False) -> MarketState:
         UnreadableMarket: Another form, or not whole.
     """
     body, sound = unsealed(state)
-    if len(body) < _HEAD.size or not sound:
+    if len(body) < HEAD.size or not sound:
         raise UnreadableMarket("not whole")
-    name, form, top, level, clock_ms, rounds, forgotten, sources = _HEAD.unpack_from(body)
-    if (name, form) != (_NAME, FORM):
+    name, form, top, level, clock_ms, rounds, forgotten, sources = HEAD.unpack_from(body)
+    if (name, form) != (NAME, FORM):
         raise UnreadableMarket("another form")
     try:
         found = _sources(body, sources, first_only)
@@ -162,20 +162,20 @@ def read(state: bytes, first_only: bool = False) -> MarketState:
 
 def _sources(body: bytes, sources: int, first_only: bool) -> dict[Key, Rows]:
     found: dict[Key, Rows] = {}
-    at = _HEAD.size
+    at = HEAD.size
     for _ in range(sources):
-        auction, length, places = _SOURCE.unpack_from(body, at)
+        auction, length, places = SOURCE.unpack_from(body, at)
         if first_only and AUCTIONS[auction] != "first":
             break
-        at += _SOURCE.size + length
+        at += SOURCE.size + length
         rows: Rows = {}
         for _ in range(places):
-            place, mask = _ROW.unpack_from(body, at)
+            place, mask = ROW.unpack_from(body, at)
             columns, counts = _MASKED[mask % len(_MASKED)]
             rows[place] = row = [0] * COLUMNS
-            for column, one in zip(columns, counts.unpack_from(body, at + _ROW.size), strict=True):
+            for column, one in zip(columns, counts.unpack_from(body, at + ROW.size), strict=True):
                 row[column] = one
-            at += _ROW.size + counts.size
+            at += ROW.size + counts.size
         start = at - _size(rows) - length
         found[AUCTIONS[auction], body[start : start + length].decode()] = rows
     return found
@@ -183,12 +183,12 @@ def _sources(body: bytes, sources: int, first_only: bool) -> dict[Key, Rows]:
 
 def _size(rows: Rows) -> int:
     empty = sum(row.count(0) for row in rows.values())
-    return len(rows) * (_ROW.size + _COUNT.size * COLUMNS) - _COUNT.size * empty
+    return len(rows) * (ROW.size + COUNT.size * COLUMNS) - COUNT.size * empty
 
 
 def _packed(place: int, row: list[int]) -> bytes:
     mask = sum(bit for bit, one in zip(_BITS, row, strict=True) if one)
-    return _ROW.pack(place, mask) + _MASKED[mask][1].pack(*filter(None, row))
+    return ROW.pack(place, mask) + _MASKED[mask][1].pack(*filter(None, row))
 
 
 def _joined(rows: Rows, fine: int, coarse: int) -> Rows:
