@@ -51,7 +51,7 @@ class Counts:
         """
         rows = _rows(memory)
         if terms.arrival == ACCRUES:
-            known = exposure(memory, terms).tolist()
+            known = _exposed(memory, terms)
             rows = [(row[0], one, *row[2:]) for row, one in zip(rows, known, strict=True)]
         cells = np.asarray(rows, dtype=np.float64)
         if terms.drift is not None:
@@ -140,8 +140,12 @@ def _silent(memory: Memory, terms: Terms) -> tuple[list[float], list[int]]:
 
 def exposure(memory: Memory, terms: Terms) -> Numbers:
     """How many impressions of the long ago and of each cell count as known, where values accrue."""
+    return double(_exposed(memory, terms))
+
+
+def _exposed(memory: Memory, terms: Terms) -> list[float]:
     cells, closed = memory.cells, memory.closed
-    known = [float(memory.base.known), *(float(cell.known) for cell in cells)]
+    known = [float(memory.base.known), *[float(cell.known) for cell in cells]]
     bought = [cell.bought for cell in cells[closed:]]
     # Where nothing is open nothing hangs on how long values take, and that is dear to know.
     if any(bought):
@@ -150,7 +154,7 @@ def exposure(memory: Memory, terms: Terms) -> Numbers:
         known[1 + closed :] = (share * bought).tolist()
     elif any(cell.bought for cell in cells):
         known[1 + closed :] = [0.0] * len(bought)
-    return double(known)
+    return known
 
 
 def _rows(memory: Memory) -> list[tuple[float, ...]]:

@@ -209,9 +209,9 @@ def arrived_share(age: ArrayLike, mean_delay: ArrayLike, window: float = np.inf)
     end they come evenly, a / window.
     """
     a, m = doubles(np.minimum(age, window), mean_delay)
-    ends = np.isfinite(m)
-    if ends.all():
+    if m.ndim == 0 and m < np.inf:
         return double(np.expm1(-a / m) / np.expm1(-window / m))
+    ends = np.isfinite(m)
     finite = np.where(ends, m, 1.0)
     share = np.expm1(-a / finite) / np.expm1(-window / finite)
     return np.where(ends, share, a / window)

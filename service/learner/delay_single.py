@@ -9,6 +9,7 @@ apart from their rounding is left to `delay.fit`, so the rate is the same to the
 from __future__ import annotations
 
 import math
+from math import expm1
 from typing import NamedTuple
 
 import numpy as np
@@ -82,6 +83,7 @@ class _Profile:
         self._conversions = self._converted + weight
         self._waited = waiting.delay_sum + weight * mean
         self._counts = [count for _, count in waiting.buckets]
+        self._whole = [(age, count, age * count) for age, count in waiting.buckets]
         self._silent = sum(self._counts)
         self._rising, self._falling = 0.0, math.inf
 
@@ -100,7 +102,7 @@ class _Profile:
 
     def _grid(self) -> Numbers:
         # By numpy, whose logarithms and exponentials are not always those of the C library.
-        ages = sum(age * count for age, count in self._buckets)
+        ages = sum(waited for *_, waited in self._whole)
         if ages > WHOLE_MAX:
             raise TooClose
         conversions = max(self._conversions, 1.0)
@@ -153,9 +155,9 @@ class _Profile:
     def _level(self, rate: float) -> tuple[float, float]:
         """The level at a rate, and how far from it the rate must be to be surely beside it."""
         parts = []
-        for age, count in self._buckets:
-            come = -math.expm1(-rate * age)
-            parts.append((count * come, 1.0 - come, count * age))
+        for age, count, waited in self._whole:
+            kept = expm1(-rate * age)
+            parts.append((-count * kept, 1.0 + kept, waited))
         (over, apart), later = self._over(parts), 0.0
         for _, left, waited in parts:
             later += waited * left / (over + left)
@@ -169,10 +171,12 @@ class _Profile:
             total = square = 0.0
             for came, left, _ in parts:
                 apart = over + left
-                total += came / apart
-                square += came / (apart * apart)
+                share = came / apart
+                total += share
+                square += share / apart
             before = over
-            over -= total * (1.0 - total / converted) / max(square, SMALLEST)
+            if square > 0.0:
+                over -= total * (1.0 - total / converted) / square
             over = max(over, CLOSEST)
             if abs(over - before) <= SETTLED * over:
                 # At its largest a share is the same in every order of sums, if it surely is.
