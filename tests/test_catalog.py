@@ -130,6 +130,26 @@ async def test_a_freeze_of_all_is_a_limit_of_each(migrated_url: str) -> None:
         assert item.limits.frozen
 
 
+async def test_terms_are_read_again_when_the_configuration_changes(migrated_url: str) -> None:
+    """A snapshot of the same version keeps them, and a new version has its own."""
+    async with working(migrated_url) as worker:
+        begin(worker.database)
+        before = await worker.catalog.look_up(NAME)
+        append(worker.database, won(1))
+        await worker.learn()
+        learnt = worker.catalog.get(NAME)
+        assert learnt is not None
+        assert (learnt.snapshot > before.snapshot, learnt.terms is before.terms) == (True, True)
+
+        await worker.operator.patch(NAME, {"bid_cap": CAP // 2}, 1, None, None, "tester")
+        await worker.upkeep.follow()
+        changed = worker.catalog.get(NAME)
+        assert changed is not None
+        assert (changed.version, changed.terms.cap) == (2, CAP // 2)
+        assert changed.ready is not None
+        assert changed.ready.terms.cap == CAP // 2
+
+
 async def test_a_key_opens_until_it_ends(migrated_url: str) -> None:
     """It is read once, and forgotten when the change says so; unknown ones are misses."""
     async with working(migrated_url) as worker:

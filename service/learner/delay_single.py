@@ -23,7 +23,7 @@ APART = 1e-9
 ROUNDING = 1e-12  # Of a log-likelihood, as a part of the most its terms can come to.
 LOGARITHM_MAX = 60.0  # Of a share, rate or chance in range none is larger.
 NEAR_ONE = 1e-13  # Of what is left of a share, by rounding; the nearer to 1 the more it matters.
-NEARLY = 1e-4  # After so small a step no height is off by more than its rounding.
+NEARLY = 3e-6  # So far a share may miss what it must explain, as a part of it.
 SETTLED = 1e-6  # So small a step of Newton's is the last one that counts.
 WHOLE_MAX = 2.0**52  # Sums of halves are exact up to here, in any order.
 
@@ -127,11 +127,13 @@ class _Profile:
         over = np.maximum(mean * (1.0 + self._silent / self._converted) - 1.0, CLOSEST)
         for _ in range(NEWTON_STEPS):
             apart = 1.0 / (over[:, np.newaxis] + still)
-            total, square = np.vecdot(came, apart), np.vecdot(came * apart, apart)
-            step = total * (1.0 - total / self._converted) / np.maximum(square, SMALLEST)
-            before, over = over, np.maximum(over - step, CLOSEST)
-            if (np.abs(over - before) <= NEARLY * over).all():
+            total = np.vecdot(came, apart)
+            gap = total / self._converted - 1.0
+            # The likelihood is off by no more than the square of this, times the conversions.
+            if ((np.abs(gap) <= NEARLY) | ((gap < 0.0) & (over == CLOSEST))).all():
                 break
+            square = np.vecdot(came * apart, apart)
+            over = np.maximum(over + total * gap / np.maximum(square, SMALLEST), CLOSEST)
         else:
             raise TooClose
         told = np.log(over[:, np.newaxis] + still) @ counts
