@@ -2,14 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import NamedTuple
 
 NO_LIMIT = 2**61  # Stands in a day's budget when a line item has no daily budget.
 
 
-@dataclass(frozen=True, slots=True)
-class Movement:
+class Movement(NamedTuple):
     """What one event adds to the money rows, in nanos; only differences, never totals."""
 
     spent: int = 0
@@ -22,7 +20,7 @@ class Movement:
     day_over_spent: int = 0
 
     # Written out and not looped over: this is the one sum that all money goes through.
-    def __add__(self, other: Movement) -> Movement:
+    def __add__(self, other: Movement) -> Movement:  # type: ignore[override]
         return Movement(
             self.spent + other.spent,
             self.held + other.held,

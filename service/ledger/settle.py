@@ -10,7 +10,7 @@ from collections.abc import Mapping
 from typing import NamedTuple
 
 from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
-from service.ledger.entries import Body, Entry, conflict
+from service.ledger.entries import PAYING, Body, Entry, conflict
 from service.ledger.late import late_cost
 
 Slots = Mapping[str, tuple[str, Body]]  # slot -> (kind, body) of what is already there
@@ -76,46 +76,45 @@ def _first_result(outcome: Outcome, place: Place) -> Verdict:
     billed_before = "billed" in place.slots
     if billed_before and outcome.kind != "won":
         return _contradiction(outcome, place, pays=False)
-    movement = NOTHING
-    if not billed_before:
-        movement = _win(outcome, place) if outcome.kind == "won" else _release(outcome, place)
-    rounds = _rounds(outcome, place.slice)
-    body = _said(outcome) | {"round": rounds, "late": not place.alive, "owed": movement.owed}
-    # What it owes is kept with the win, for the slice only knows the sum of all its bids.
+    movement = NOTHING if billed_before else _first_movement(outcome, place)
+    rounds = counted(outcome, place.slice)
+    body = result_body(outcome, rounds, movement.owed, late=not place.alive)
     entry = Entry(outcome.kind, body, outcome.bid, "result", movement.cost)
     return Verdict("recorded" if place.alive else "late", movement, entry, rounds)
 
 
-def _win(outcome: Outcome, place: Place) -> Movement:
-    price = outcome.price or 0
-    if place.spend_on == "billed":
-        # Its hold is gone, and a win alone is not spend here: the bill will take the late way.
-        if not place.alive:
-            return NOTHING
-        owed = min(price, outcome.hold)
-        return Movement(held=owed - outcome.hold, remaining=-outcome.hold, owed=owed)
+def _first_movement(outcome: Outcome, place: Place) -> Movement:
+    if place.alive:
+        return of_open(outcome.hold, *shares(outcome, place.spend_on))
+    # Its hold is gone, and a win alone is not spend here: the bill will take the late way.
+    if outcome.kind != "won" or place.spend_on == "billed":
+        return NOTHING
     return _pay(outcome, place)
+
+
+def shares(outcome: Outcome, spend_on: str) -> tuple[int, int, int]:
+    """What a hold turns into: its cost, what it owes, and what the price asks beyond the bid."""
+    if outcome.kind not in PAYING:
+        return 0, 0, 0
+    price, hold = outcome.price or 0, outcome.hold
+    if spend_on == "billed":
+        return 0, min(price, hold), 0
+    return min(price, hold), 0, max(0, price - hold)
+
+
+def of_open(hold: int, cost: int, owed: int, excess: int) -> Movement:
+    """What bids with a hold move: it becomes cost, or owed, or free; an excess is disputed."""
+    return Movement(
+        spent=cost, held=owed - hold, remaining=-hold, owed=owed, day_spent=cost, disputed=excess
+    )
 
 
 def _pay(outcome: Outcome, place: Place) -> Movement:
     """Turn a hold into spend; what the price asks beyond the bid is disputed."""
-    price = outcome.price or 0
-    cost, excess = min(price, outcome.hold), max(0, price - outcome.hold)
+    cost, _, excess = shares(outcome, "won")
     if not place.alive:
         return late_cost(place.account, place.day, cost) + Movement(disputed=excess)
-    return Movement(
-        spent=cost,
-        held=-outcome.hold,
-        remaining=-outcome.hold,
-        day_spent=cost,
-        disputed=excess,
-    )
-
-
-def _release(outcome: Outcome, place: Place) -> Movement:
-    if not place.alive:
-        return NOTHING
-    return Movement(held=-outcome.hold, remaining=-outcome.hold)
+    return of_open(outcome.hold, cost, 0, excess)
 
 
 def _billed(outcome: Outcome, place: Place) -> Verdict:
@@ -191,7 +190,7 @@ def _paid_by_conflict(slots: Slots) -> bool:
     return any(kind == "conflict" and body.get("pays") for kind, body in slots.values())
 
 
-def _rounds(outcome: Outcome, slice_: Slice | None) -> int:
+def counted(outcome: Outcome, slice_: Slice | None) -> int:
     """One round unless a tick has reported this bid already."""
     # Bids of a slice are counted from 0, so a tick of n bids has covered those below n.
     return int(slice_ is not None and outcome.counter >= slice_.ticked)
@@ -209,6 +208,14 @@ def _said(outcome: Outcome) -> dict[str, object]:
         "why": outcome.why,
         "at": outcome.at,
     }
+
+
+def result_body(outcome: Outcome, rounds: int, owed: int, *, late: bool) -> dict[str, object]:
+    """What is kept of a first result."""
+    body = _said(outcome)
+    # What it owes is kept with the win, for the slice only knows the sum of all its bids.
+    body["round"], body["late"], body["owed"] = rounds, late, owed
+    return body
 
 
 def _same(taken: tuple[str, Body], outcome: Outcome) -> bool:

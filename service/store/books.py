@@ -8,14 +8,15 @@ from __future__ import annotations
 from collections.abc import Iterable
 from typing import Any
 
-from sqlalchemy import LargeBinary, TextClause, text
+from sqlalchemy import text
 
 from service.errors import BrokenPromise
 from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
 from service.ledger.entries import Entry
 from service.store import bodies
 from service.store.clock import now_ms
-from service.store.database import Writing, among, insert_many, locking
+from service.store.database import Writing, among
+from service.store.driver import insert_many, select_among, update_many
 
 
 class Books:
@@ -42,12 +43,16 @@ class Books:
         self._slices_before: dict[bytes, Slice] = {}
         self._new_slices: list[dict[str, Any]] = []
         self._rows: list[tuple[Any, ...]] = []
+        self._seqs: dict[str, int] = {}
 
     def load_slices(self, ids: Iterable[bytes]) -> None:
         """Read these slices and the days they belong to."""
-        for row in self._connection.execute(_SELECT_SLICES, {"ids": sorted(set(ids))}):
-            self._keep_slice(Slice(bytes(row.id), *row[1:]))
-        self.load_days({(s.line_item, s.day) for s in self.slices.values()})
+        for row in select_among(self._connection, _SELECT_SLICES, set(ids)):
+            self._keep_slice(Slice(bytes(row[0]), *row[1:_SLICE_COLUMNS]))
+            line_item, day, sums = row[1], row[3], row[_SLICE_COLUMNS:]
+            # Many slices share a day, and one that this transaction has moved already stays.
+            if sums[0] is not None and (line_item, day) not in self.days:
+                self._keep_day(Day(line_item, day, *sums))
 
     def load_days(self, wanted: Iterable[tuple[str, str]]) -> None:
         """Read these days where they exist."""
@@ -58,8 +63,8 @@ class Books:
         row = {"ids": sorted(set(names)), "days": sorted(set(days))}
         for found in self._connection.execute(_SELECT_DAYS, row):
             # All line items are asked for all days; few of them have a day that is another's.
-            if (key := (found.line_item, found.day)) in missing:
-                self.days[key] = self._days_before[key] = Day(*found)
+            if (found.line_item, found.day) in missing:
+                self._keep_day(Day(*found))
 
     def open_day(self, line_item: str, day: str, budget: int) -> Day:
         """The day's row, made with this budget when it is the first use of the day."""
@@ -71,7 +76,7 @@ class Books:
                 _INSERT_DAY,
                 {"line_item": line_item, "day": day, "budget": budget},
             )
-            self.days[line_item, day] = self._days_before[line_item, day] = fresh
+            self._keep_day(fresh)
         return self.days[line_item, day]
 
     def new_slice(self, fresh: Slice, times_ms: dict[str, int]) -> None:
@@ -101,7 +106,15 @@ class Books:
         if slice_id is not None and slice_id in self.slices:
             self.slices[slice_id] = self.slices[slice_id].moved(movement, rounds)
         if entry is not None:
-            self._append(line_item, entry)
+            self.append(line_item, entry)
+
+    def append(self, line_item: str, entry: Entry) -> None:
+        """Append an entry that moves nothing by itself; its seq shows in the balance once saved."""
+        account = self.accounts[line_item]
+        seq = self._seqs[line_item] = self._seqs.get(line_item, account.seq) + 1
+        stamps = (seq, entry.kind, self._at_ms(account), self.service_ms)
+        said = (entry.bid, entry.slot, entry.cost, bodies.written(entry.body))
+        self._rows.append((line_item, *stamps, *said))
 
     def replace_slice(self, changed: Slice) -> None:
         """Set what is not money: state, ticked and counted."""
@@ -129,6 +142,9 @@ class Books:
         """
         if self._new_slices:
             self._connection.execute(_INSERT_SLICE, self._new_slices)
+        for name, seq in self._seqs.items():
+            account = self.accounts[name]
+            self.accounts[name] = account._replace(seq=seq, at_ms=self._at_ms(account))
         accounts = [(self._accounts_before[name], row) for name, row in self.accounts.items()]
         self._write(_UPDATE_BALANCE, "balance", accounts, _BALANCE_SUMS)
         days = [(self._days_before[key], row) for key, row in self.days.items()]
@@ -138,26 +154,23 @@ class Books:
         insert_many(self._connection, _INSERT_ENTRY, self._rows)
 
     def _lock(self, line_items: list[str]) -> dict[str, Account]:
-        rows = self._connection.execute(
-            locking(self._connection, _SELECT_BALANCES), {"ids": line_items}
-        )
+        rows = select_among(self._connection, _SELECT_BALANCES, line_items, lock=True)
         return {row.line_item: Account(*row) for row in rows}
 
     def _keep_slice(self, found: Slice) -> None:
         self.slices[found.id] = self._slices_before[found.id] = found
 
-    def _append(self, line_item: str, entry: Entry) -> None:
-        account = self.accounts[line_item]
+    def _keep_day(self, found: Day) -> None:
+        key = (found.line_item, found.day)
+        self.days[key] = self._days_before[key] = found
+
+    def _at_ms(self, account: Account) -> int:
         # The wall clock may step back, but the stamps of a stream never do.
-        at_ms = max(account.at_ms, self._wall_ms)
-        self.accounts[line_item] = account._replace(seq=account.seq + 1, at_ms=at_ms)
-        stamps = (account.seq + 1, entry.kind, at_ms, self.service_ms)
-        said = (entry.bid, entry.slot, entry.cost, bodies.written(entry.body))
-        self._rows.append((line_item, *stamps, *said))
+        return max(account.at_ms, self._wall_ms)
 
     def _write(
         self,
-        statement: TextClause,
+        statement: str,
         what: str,
         pairs: Iterable[tuple[Any, Any]],
         sums: tuple[str, ...],
@@ -165,7 +178,7 @@ class Books:
         """Write what has changed of one kind, all rows at once: a group may touch hundreds."""
         rows = [_differences(before, after, sums) for before, after in pairs if before != after]
         # Reached only when the rules and the guard disagree, so it must never pass in silence.
-        if rows and self._connection.execute(statement, rows).rowcount != len(rows):
+        if rows and update_many(self._connection, statement, rows) != len(rows):
             raise BrokenPromise(f"the guard of a {what} refused a write")
 
 
@@ -183,13 +196,15 @@ def _differences(before: Any, after: Any, sums: tuple[str, ...]) -> dict[str, An
 
 _SELECT_BALANCES = (
     "SELECT line_item, budget, target, spent, held, unfunded, disputed, seq, at_ms"
-    " FROM balance WHERE line_item IN :ids ORDER BY line_item"
+    " FROM balance WHERE line_item IN (?) ORDER BY line_item"
 )
-_SELECT_SLICES = among(
-    "SELECT id, line_item, worker, day, amount, remaining, owed, ticked, counted, state"
-    " FROM slice WHERE id IN :ids",
-    of=LargeBinary,
+# With the day of each, so that nobody has to ask again.
+_SELECT_SLICES = (
+    "SELECT s.id, s.line_item, s.worker, s.day, s.amount, s.remaining, s.owed, s.ticked, s.counted,"
+    " s.state, d.budget, d.target, d.spent, d.held, d.over_spent FROM slice s"
+    " LEFT JOIN local_day d ON d.line_item = s.line_item AND d.day = s.day WHERE s.id IN (?)"
 )
+_SLICE_COLUMNS = len(Slice._fields)
 _SELECT_DAYS = among(
     among(
         "SELECT line_item, day, budget, target, spent, held, over_spent FROM local_day"
@@ -207,18 +222,18 @@ _INSERT_DAY = text(
     "INSERT INTO local_day (line_item, day, budget, target, spent, held, over_spent)"
     " VALUES (:line_item, :day, :budget, :budget, 0, 0, 0)"
 )
-_UPDATE_BALANCE = text(
+_UPDATE_BALANCE = (
     "UPDATE balance SET budget = :budget, target = :target, spent = spent + :spent,"
     " held = held + :held, unfunded = unfunded + :unfunded, disputed = disputed + :disputed,"
     " seq = seq + :seq, at_ms = :at_ms"
     " WHERE line_item = :line_item AND spent + :spent + held + :held <= :budget"
 )
-_UPDATE_DAY = text(
+_UPDATE_DAY = (
     "UPDATE local_day SET budget = :budget, target = :target, spent = spent + :spent,"
     " held = held + :held, over_spent = over_spent + :over_spent"
     " WHERE line_item = :line_item AND day = :day AND spent + :spent + held + :held <= :budget"
 )
-_UPDATE_SLICE = text(
+_UPDATE_SLICE = (
     "UPDATE slice SET remaining = remaining + :remaining, owed = owed + :owed,"
     " ticked = :ticked, counted = :counted, state = :state"
     " WHERE id = :id AND state = :was AND remaining + :remaining >= 0 AND owed + :owed >= 0"

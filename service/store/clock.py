@@ -41,4 +41,4 @@ def wall_clock(connection: Writing, database: Database) -> int:
 
 def now_ms(connection: Reading | Writing) -> int:
     """Service time in milliseconds."""
-    return int(connection.execute(text("SELECT now_ms FROM service_clock")).scalar_one())
+    return int(connection.exec_driver_sql("SELECT now_ms FROM service_clock").scalar_one())

@@ -6,9 +6,9 @@ import secrets
 import sqlite3
 import threading
 import time
-from collections.abc import Callable, Collection, Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from typing import Any, NewType, TypeVar
+from typing import NewType, TypeVar
 
 from sqlalchemy import (
     BigInteger,
@@ -166,30 +166,6 @@ def among(
     clause = text(statement) if isinstance(statement, str) else statement
     # Without a type PostgreSQL would compare an empty list as one of integers, and refuse.
     return clause.bindparams(bindparam(name, type_=of(), expanding=True))
-
-
-def insert_many(connection: Writing, statement: str, rows: Sequence[tuple[Any, ...]]) -> None:
-    """Run a statement with a `?` for each value once for each row; rows go to the driver as is."""
-    if rows:
-        connection.exec_driver_sql(_marked(connection, statement), list(rows))
-
-
-def of_bids(
-    connection: Reading | Writing, statement: str, bids: Collection[bytes]
-) -> Iterable[Any]:
-    """The rows of a SELECT with `bid IN (?)`, for all of these bids at once."""
-    if not bids:
-        return ()
-    if connection.dialect.name == "sqlite":
-        marks = ",".join("?" * len(bids))
-        return connection.exec_driver_sql(statement.replace("(?)", f"({marks})"), tuple(bids))
-    # One text for any number of bids, which PostgreSQL then plans once and not each time.
-    marked = _marked(connection, statement.replace("IN (?)", "= ANY(?)"))
-    return connection.exec_driver_sql(marked, (list(bids),))
-
-
-def _marked(connection: Connection, statement: str) -> str:
-    return statement if connection.dialect.name == "sqlite" else statement.replace("?", "%s")
 
 
 def locking(connection: Connection, statement: str, *, skip: bool = False) -> TextClause:

@@ -8,7 +8,8 @@ from typing import Any
 from sqlalchemy import text
 
 from service.store import charting
-from service.store.database import Database, Writing, insert_many
+from service.store.database import Database, Writing
+from service.store.driver import insert_many
 
 Decision = dict[str, Any]
 PRUNED_MAX = 5000

@@ -9,16 +9,17 @@ from typing import Any, NamedTuple
 from sqlalchemy import text
 
 from service.ledger.entries import PAYING, Body, Entry
+from service.ledger.runs import Run
 from service.ledger.settle import Outcome, Place, settle
 from service.ledger.values import Value, brought, judge, unparked
 from service.money import nanos_text
 from service.store import bodies, epochs
 from service.store.books import Books
 from service.store.changes import announce
-from service.store.database import Database, Reading, Writing, of_bids
+from service.store.database import Database, Reading, Writing
+from service.store.driver import select_among
 from service.store.freezes import put
 from service.store.journal import note
-from service.store.leases import read_configs
 
 FACTS = ("features", "hint", "arm")  # Of an impression, written into all that is said of it.
 NO_SNAPSHOT = -1  # Of a price made before the database was restored.
@@ -85,7 +86,7 @@ def book(database: Database, group: list[Booking], weigh: Weigh = weightless) ->
 
 def find_wins(connection: Reading, bids: Iterable[bytes]) -> dict[bytes, str]:
     """The line items of these bids, as far as their win or billing is known."""
-    rows = of_bids(connection, _WINS, set(bids))
+    rows = select_among(connection, _WINS, set(bids))
     return {bytes(bid): line_item for bid, line_item in rows}
 
 
@@ -102,31 +103,82 @@ class _Group:
         self._books = Books(connection, [b.line_item for b in group], wall_ms)
         self._books.load_slices(b.slice_id for b in group if b.slice_id)
         self._books.load_days({(b.line_item, b.day) for b in group if b.day})
-        self._configs = read_configs(connection, list(self._books.accounts))
-        drawn = {(b.line_item, b.snapshot) for b in group if not isinstance(b.event, Value)}
-        self._laws = epochs.laws(connection, drawn)
+        self._configs: dict[str, dict[str, Any]] = {}
+        self._laws: dict[tuple[str, int], bytes] = {}
+        self._read_terms()
         self._won_seqs: dict[bytes, int] = {}
         self._paid_ms: dict[bytes, int] = {}
         self._slots = self._read_slots({b.event.bid for b in group})
+        self._runs: dict[bytes, Run] = {}
 
     def book(self) -> list[Booked]:
         """Decide every row in order, write once."""
         booked = [self._one(booking) for booking in self._group]
+        self._post_runs()
         self._books.save()
         # The change number is taken last: its one row is what every writer waits for.
         self._freeze_unfunded()
         return booked
 
+    def _read_terms(self) -> None:
+        """The configurations, and the laws that bids of this group were drawn from, if any."""
+        found = select_among(self._connection, _TERMS, list(self._books.accounts))
+        rows = [(name, bodies.parsed(config), drawn) for name, config, drawn in found]
+        self._configs = {name: config for name, config, _ in rows}
+        # Of most line items no law was ever kept, and then nobody need look for one.
+        if names := {name for name, _, drawn in rows if drawn}:
+            drawn = {(b.line_item, b.snapshot) for b in self._group if b.line_item in names}
+            self._laws = epochs.laws(self._connection, drawn)
+
     def _one(self, booking: Booking) -> Booked:
         # A sound ticket of a line item we do not have: a database restored from before it.
         if booking.line_item not in self._configs:
             return Booked("refused", "no_such_line_item")
-        if isinstance(booking.event, Value):
-            return self._value(booking, booking.event)
-        return self._outcome(booking, booking.event)
+        event = booking.event
+        if isinstance(event, Value):
+            return self._value(booking, event)
+        slots = self._slots.setdefault(event.bid, {})
+        # Nothing is known of the bid and its hold is there: so it is of nearly all.
+        if not slots and event.kind != "billed" and (run := self._run(booking)) is not None:
+            return self._first(booking, event, run, slots)
+        # All others are decided on balances.
+        self._post_runs()
+        return self._outcome(booking, event, slots)
 
-    def _outcome(self, booking: Booking, outcome: Outcome) -> Booked:
-        slots = self._slots.setdefault(outcome.bid, {})
+    def _first(self, booking: Booking, outcome: Outcome, run: Run, slots: Slots) -> Booked:
+        """The first result of a bid whose slice is open."""
+        body, cost = run.take(outcome)
+        entry = Entry(outcome.kind, body, outcome.bid, "result", cost)
+        body |= self._weighed(booking, entry, slots)
+        body |= _seen(booking, entry.kind)
+        self._append(booking.line_item, slots, entry)
+        if entry.kind in PAYING:
+            self._paid_ms[outcome.bid] = self._books.service_ms
+        return _RECORDED
+
+    def _run(self, booking: Booking) -> Run | None:
+        """The run of the bid's slice, if the slice is open."""
+        if booking.slice_id is None:
+            return None
+        if (run := self._runs.get(booking.slice_id)) is not None:
+            return run
+        slice_ = self._books.slices.get(booking.slice_id)
+        if slice_ is None or not slice_.alive or slice_.line_item != booking.line_item:
+            return None
+        run = Run(slice_, self._configs[booking.line_item]["spend_on"])
+        self._runs[slice_.id] = run
+        return run
+
+    def _post_runs(self) -> None:
+        """Book what the first results up to here have moved, slice by slice."""
+        for run in self._runs.values():
+            name, day, slice_id = run.slice.line_item, run.slice.day, run.slice.id
+            self._books.post(
+                name, None, run.movement, day=day, slice_id=slice_id, rounds=run.rounds
+            )
+        self._runs = {}
+
+    def _outcome(self, booking: Booking, outcome: Outcome, slots: Slots) -> Booked:
         slice_ = self._books.slices.get(booking.slice_id) if booking.slice_id else None
         day = slice_.day if slice_ else booking.day
         verdict = settle(
@@ -187,7 +239,7 @@ class _Group:
         return int(self._connection.execute(statement, {"id": line_item}).scalar_one())
 
     def _append(self, line_item: str, slots: Slots, entry: Entry) -> None:
-        self._books.post(line_item, entry)
+        self._books.append(line_item, entry)
         self._keep(slots, entry)
 
     def _told(
@@ -206,7 +258,7 @@ class _Group:
     def _weighed(self, booking: Booking, entry: Entry, slots: Slots) -> Body:
         """What the bid was likely to beat, where bids are drawn from a law."""
         # The plain rule draws nothing, whatever the law of the moment was.
-        if entry.kind not in ("won", "lost") or booking.arm:
+        if not self._laws or entry.kind not in ("won", "lost") or booking.arm:
             return {}
         law = self._laws.get((booking.line_item, booking.snapshot))
         if law is None:
@@ -225,7 +277,9 @@ class _Group:
 
     def _read_slots(self, bids: set[bytes]) -> dict[bytes, Slots]:
         found: dict[bytes, Slots] = {}
-        for bid, seq, service_ms, slot, kind, body in of_bids(self._connection, _OF_BIDS, bids):
+        for bid, seq, service_ms, slot, kind, body in select_among(
+            self._connection, _OF_BIDS, bids
+        ):
             if slot == "result":
                 self._won_seqs[bytes(bid)] = seq
             if kind in PAYING:
@@ -266,6 +320,11 @@ def _seen(booking: Booking, kind: str) -> Body:
     return seen
 
 
+_RECORDED = Booked("recorded")
+_TERMS = (
+    "SELECT id, config, EXISTS (SELECT 1 FROM epoch e WHERE e.line_item = line_item.id)"
+    " FROM line_item WHERE id IN (?)"
+)
 _OF_BIDS = "SELECT bid, seq, service_ms, slot, kind, body FROM stream WHERE bid IN (?) ORDER BY seq"
 _WINS = "SELECT bid, line_item FROM stream WHERE bid IN (?) AND slot IN ('result', 'billed')"
 

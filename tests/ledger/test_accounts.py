@@ -2,15 +2,13 @@
 
 from __future__ import annotations
 
-from dataclasses import fields
-
 import pytest
 from hypothesis import given
 from hypothesis import strategies as some
 
 from service.ledger.accounts import NOTHING, Account, Day, Movement, Slice
 
-movements = some.builds(Movement, *[some.integers(-100, 100) for _ in fields(Movement)])
+movements = some.builds(Movement, *[some.integers(-100, 100) for _ in Movement._fields])
 
 
 def account(budget: int, target: int, spent: int, held: int) -> Account:

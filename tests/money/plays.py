@@ -161,6 +161,26 @@ def a_bill_before_its_win(stage: Stage) -> Scene:
     return scene
 
 
+def a_loss_with_an_early_value(stage: Stage) -> Scene:
+    """A value waits for the win that never was; its bid still gives its hold back."""
+    scene = stage()
+    scene.lease()
+    bid = scene.placed(8)
+    insist(scene.value(bid, "a", 5), "parked")
+    insist(scene.tell(bid, "lost", 9), "recorded")
+    return scene
+
+
+def a_win_and_its_bill_at_once(stage: Stage) -> Scene:
+    """One group tells of a win, of its bill and of another win; all else is leased by then."""
+    scene = stage("billed", budget=100)
+    scene.lease()
+    one, two = scene.placed(8), scene.placed(8)
+    scene.lease_everything()
+    scene.book(scene.told(one, "won", 6), scene.told(one, "billed", 6), scene.told(two, "won", 5))
+    return scene
+
+
 def a_win_called_off(stage: Stage) -> Scene:
     """A win that nobody billed yet is void after all."""
     scene = stage("billed")

@@ -26,9 +26,9 @@ from tests.builders import begin
 T = TypeVar("T")
 LINE_ITEMS = [f"garden-{number}" for number in range(20)]
 BID = 1_000_000
-# Lock, service time, slices, days, configurations, what bids have said, laws; then balances,
+# Lock, service time, slices with their days, configurations, what bids have said; then balances,
 # days, slices and entries, once each however many rows there are. SQLite also says BEGIN.
-BOOKING_MAX = 12
+BOOKING_MAX = 10
 # Lock, service time, configurations, days, who lives (twice: the time, then the workers), freezes,
 # what the dead hold; then slices, balances, days and entries.
 LEASING_MAX = 13
