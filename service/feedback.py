@@ -161,26 +161,26 @@ class Feedback:
         with spans.span("outcomes") as span:
             spans.note(span, rows=len(reports))
             receipts = await self._receipts(reports, only)
-        pairs = zip(reports, receipts, strict=True)
-        codes = (row.code or OTHER for row in receipts if row.status == "refused")
-        for labels, count in Counter((said.kind, row.status) for said, row in pairs).items():
-            self._tally.add("outcomes", *labels, count=count)
-        for code, count in Counter(codes).items():
-            self._tally.add("refused_outcomes", code, count=count)
+        self._count(reports, receipts)
         return receipts
+
+    def _count(self, reports: list[Report], receipts: list[Receipt]) -> None:
+        kinds, statuses = [said.kind for said in reports], [row.status for row in receipts]
+        for labels, count in Counter(zip(kinds, statuses, strict=True)).items():
+            self._tally.add("outcomes", *labels, count=count)
+        refused = [row for row in receipts if row.status == "refused"]
+        for code, count in Counter(row.code or OTHER for row in refused).items():
+            self._tally.add("refused_outcomes", code, count=count)
+        self._refused.update(row.line_item for row in refused if row.line_item)
 
     async def _receipts(self, reports: list[Report], only: frozenset[str] | None) -> list[Receipt]:
         read = [self._read(report, only) for report in reports]
-        read = await self._find_refs(reports, read, only)
+        # A bid that is named by its ref alone has to be looked up.
+        if any(report.ticket is None for report in reports):
+            read = await self._find_refs(reports, read, only)
         rows = [row for row in read if isinstance(row, Booking)]
         done = iter(await self._book(rows) if rows else [])
-        receipts = [row if isinstance(row, Receipt) else _receipt(row, next(done)) for row in read]
-        self._refused.update(
-            receipt.line_item
-            for receipt in receipts
-            if receipt.status == "refused" and receipt.line_item
-        )
-        return receipts
+        return [row if isinstance(row, Receipt) else _receipt(row, next(done)) for row in read]
 
     async def keep_refusals(self) -> None:
         """Count what was refused since the last time, for the tripwire on it."""
@@ -277,16 +277,17 @@ class Feedback:
             return Receipt(report.ref, "refused", "ref_of_another_bid", line_item=ticket.line_item)
         if report.currency is not None and report.currency != ticket.scale.currency:
             return Receipt(ticket.ref, "refused", "other_currency", line_item=ticket.line_item)
-        price = _price(report, ticket) if report.kind in PAYING else 0
+        pays = report.kind in PAYING
+        price = _price(report, ticket) if pays else 0
         if price is None or price > COST_MAX:
             code = "no_price" if price is None else "bad_price"
             return Receipt(ticket.ref, "refused", code, line_item=ticket.line_item)
         # Nothing was held for it, so there is nothing to book and nothing to learn.
         if ticket.test:
             return Receipt(ticket.ref, "recorded", test=True)
-        return self._booking(report, ticket, price)
+        return self._booking(report, ticket, price if pays else None)
 
-    def _booking(self, report: Report, ticket: Ticket, price: int) -> Booking:
+    def _booking(self, report: Report, ticket: Ticket, price: int | None) -> Booking:
         if report.kind == "value":
             return Booking(ticket.line_item, _value(report, ticket.bid))
         outcome = Outcome(
@@ -295,20 +296,26 @@ class Feedback:
             ticket.counter,
             ticket.price,
             ticket.source,
-            price if report.kind in PAYING else None,
-            _to_win(report, ticket),
+            price,
+            None if report.to_win is None else _to_win(report.to_win, ticket),
             report.why,
             report.at,
             ticket.auction,
         )
         # A slice of a database before its restore may be gone or be another's: the late way.
         here = ticket.incarnation == self._incarnation
-        day = _day(ticket.day)
-        slice_id = ticket.slice if here else None
-        # And the same snapshot may have had another law there.
-        snapshot = ticket.snapshot if here else NO_SNAPSHOT
-        place = (slice_id, day, snapshot, ticket.floor)
-        return Booking(ticket.line_item, outcome, *place, ticket.features, ticket.hint, ticket.arm)
+        return Booking(
+            ticket.line_item,
+            outcome,
+            ticket.slice if here else None,
+            _day(ticket.day),
+            # And the same snapshot may have had another law there.
+            ticket.snapshot if here else NO_SNAPSHOT,
+            ticket.floor,
+            ticket.features,
+            ticket.hint,
+            ticket.arm,
+        )
 
     async def _find_refs(
         self,
@@ -338,19 +345,15 @@ def _day(ordinal: int) -> str:
 
 def _price(report: Report, ticket: Ticket) -> int | None:
     """What it cost, fees included; who pays what he bids need not be told."""
+    if report.clearing is not None:
+        return ticket.fees.gross(ticket.scale.paid(report.clearing, report.delivered))
     bid_is_paid = report.kind == "won" and ticket.auction != "second"
-    if report.clearing is None and (bid_is_paid or report.at_the_bid):
-        return ticket.price
-    if report.clearing is None:
-        return None
-    return ticket.fees.gross(ticket.scale.paid(report.clearing, report.delivered))
+    return ticket.price if bid_is_paid or report.at_the_bid else None
 
 
-def _to_win(report: Report, ticket: Ticket) -> int | None:
+def _to_win(price: int, ticket: Ticket) -> int | None:
     """The least cost that would have won; what no ledger can hold says nothing."""
-    if report.to_win is None:
-        return None
-    cost = ticket.fees.gross(ticket.scale.paid(report.to_win))
+    cost = ticket.fees.gross(ticket.scale.paid(price))
     return cost if cost <= COST_MAX else None
 
 
@@ -384,9 +387,8 @@ def _value(report: Report, bid: bytes) -> Value:
 
 
 def _receipt(row: Booking, booked: Booked) -> Receipt:
-    return Receipt(
-        ref_of(row.event.bid), booked.status, booked.code, booked.clipped, line_item=row.line_item
-    )
+    ref, name = ref_of(row.event.bid), row.line_item
+    return Receipt(ref, booked.status, booked.code, booked.clipped, line_item=name)
 
 
 def _fail(waiting: _Waiting, error: StoreAway | Overloaded) -> None:

@@ -55,6 +55,9 @@ class Scale:
             delivered: Impressions that came of it, in parts of 10^9, if it was told; what is
                 beyond the number asked for was never bought.
         """
+        # As a whole it is worth itself, and every outcome asks.
+        if self is PLAIN and delivered is None:
+            return price
         told = delivered is not None and 0 < delivered <= self.multiplier
         count = delivered if told and delivered is not None else self.multiplier
         whole, rest = divmod(price * self.rate * count, _SQUARE)

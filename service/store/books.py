@@ -16,7 +16,7 @@ from service.ledger.entries import Entry
 from service.store import bodies
 from service.store.clock import now_ms
 from service.store.database import Writing, among
-from service.store.driver import insert_many, select_among, update_many
+from service.store.driver import Insert, select_among, update_many
 
 
 class Books:
@@ -151,7 +151,7 @@ class Books:
         self._write(_UPDATE_DAY, "day", days, _DAY_SUMS)
         slices = [(self._slices_before[key], row) for key, row in self.slices.items()]
         self._write(_UPDATE_SLICE, "slice", slices, _SLICE_SUMS)
-        insert_many(self._connection, _INSERT_ENTRY, self._rows)
+        _ENTRIES.run(self._connection, self._rows)
 
     def _lock(self, line_items: list[str]) -> dict[str, Account]:
         rows = select_among(self._connection, _SELECT_BALANCES, line_items, lock=True)
@@ -238,7 +238,15 @@ _UPDATE_SLICE = (
     " ticked = :ticked, counted = :counted, state = :state"
     " WHERE id = :id AND state = :was AND remaining + :remaining >= 0 AND owed + :owed >= 0"
 )
-_INSERT_ENTRY = (
-    "INSERT INTO stream (line_item, seq, kind, at_ms, service_ms, bid, slot, cost, body)"
-    " VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?)"
+_ENTRIES = Insert(
+    "stream",
+    line_item="TEXT",
+    seq="BIGINT",
+    kind="TEXT",
+    at_ms="BIGINT",
+    service_ms="BIGINT",
+    bid="BYTES",
+    slot="TEXT",
+    cost="BIGINT",
+    body="TEXT",
 )

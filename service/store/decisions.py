@@ -9,15 +9,16 @@ from sqlalchemy import text
 
 from service.store import charting
 from service.store.database import Database, Writing
-from service.store.driver import insert_many
+from service.store.driver import Insert
 
 Decision = dict[str, Any]
 PRUNED_MAX = 5000
-# In the order in which the statement names them.
-COLUMNS = (
-    *("at_ms", "line_item", "ref", "request_id", "source", "floor", "price", "reason", "set_by"),
-    *("snapshot", "test", "auction", "arm", "held", "floor_held", "arm_odds", "odds"),
-)
+COLUMNS = {
+    **{"at_ms": "BIGINT", "line_item": "TEXT", "ref": "TEXT", "request_id": "TEXT"},
+    **{"source": "TEXT", "floor": "BIGINT", "price": "BIGINT", "reason": "TEXT", "set_by": "TEXT"},
+    **{"snapshot": "BIGINT", "test": "BIGINT", "auction": "TEXT", "arm": "TEXT", "held": "BIGINT"},
+    **{"floor_held": "BIGINT", "arm_odds": "FLOAT", "odds": "FLOAT"},
+}
 
 
 def log(database: Database, decisions: list[Decision]) -> None:
@@ -26,7 +27,7 @@ def log(database: Database, decisions: list[Decision]) -> None:
     rows = [tuple(row[name] for name in COLUMNS) for row in kept]
 
     def work(connection: Writing) -> None:
-        insert_many(connection, _INSERT, rows)
+        _LOG.run(connection, rows)
         # In the same transaction, so that a chart counts each logged decision once.
         charting.add(connection, charting.of_decisions(decisions))
 
@@ -80,11 +81,7 @@ _PRUNE = text(
     "DELETE FROM decision WHERE number IN (SELECT number FROM (SELECT number, at_ms FROM decision"
     " ORDER BY number LIMIT :limit) AS oldest WHERE at_ms < :before)"
 )
-_INSERT = (
-    "INSERT INTO decision (at_ms, line_item, ref, request_id, source, floor, price, reason,"
-    " set_by, snapshot, test, auction, arm, held, floor_held, arm_odds, odds)"
-    " VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)"
-)
+_LOG = Insert("decision", **COLUMNS)
 # What a decision that was never weighed has nothing to say of.
 _UNKEPT: Decision = {
     **{"auction": "", "arm": ""},

@@ -1,7 +1,6 @@
 """Statements that go to the driver as they are, apart because every outcome waits for several.
 
 The layer that compiles statements costs more than most of them; only its errors are needed here.
-Values stand as `?` for one that is a list or a tuple, as `:name` for one that is a dict.
 """
 
 from __future__ import annotations
@@ -11,20 +10,43 @@ from collections.abc import Collection, Iterable, Mapping, Sequence
 from functools import lru_cache
 from typing import Any
 
+import orjson
 from sqlalchemy import Connection
 
 from service.store.database import Reading, Writing
 
 
-def insert_many(connection: Writing, statement: str, rows: Sequence[tuple[Any, ...]]) -> None:
-    """Run a statement with a `?` for each value once for each row."""
-    if rows:
-        connection.exec_driver_sql(_marked(statement, _is_sqlite(connection)), list(rows))
+class Insert:
+    """
+    How rows get into a table.
+
+    Args:
+        of: The type of each column, in the order in which rows name their values.
+    """
+
+    def __init__(self, table: str, **of: str) -> None:
+        names, marks = ", ".join(of), ", ".join("?" * len(of))
+        reads = ", ".join(_READ[kind].format(place) for place, kind in enumerate(of.values()))
+        into = f"INSERT INTO {table} ({names})"
+        self._each = f"{into} VALUES ({marks})"
+        # Names and types of ours; whatever came stands in the one value.
+        self._all = f"{into} SELECT {reads} FROM jsonb_array_elements(%s::jsonb) AS given"  # noqa: S608
+
+    def run(self, connection: Writing, rows: Sequence[tuple[Any, ...]]) -> None:
+        """Insert these rows in their order."""
+        if not rows:
+            return
+        if _is_sqlite(connection):
+            connection.exec_driver_sql(self._each, list(rows))
+            return
+        # One text for all of them: a message for each row costs both sides several times as much.
+        told = orjson.dumps(rows, default=bytes.hex, option=orjson.OPT_SERIALIZE_NUMPY)
+        connection.exec_driver_sql(self._all, (told.decode(),))
 
 
 def update_many(connection: Writing, statement: str, rows: Sequence[Mapping[str, Any]]) -> int:
     """Run a statement with names once for each row; returns how many rows it has changed."""
-    marked = _marked(statement, _is_sqlite(connection))
+    marked = statement if _is_sqlite(connection) else _renamed(statement)
     # One alone is spared what many cost to be sent together.
     given: Any = rows[0] if len(rows) == 1 else list(rows)
     return connection.exec_driver_sql(marked, given).rowcount
@@ -45,9 +67,9 @@ def select_among(
         marks = ",".join("?" * len(wanted))
         return connection.exec_driver_sql(statement.replace("(?)", f"({marks})"), tuple(wanted))
     # One text for any number of them, which PostgreSQL then plans once and not each time.
-    marked = _marked(statement.replace("IN (?)", "= ANY(?)"), False)
+    among = statement.replace("IN (?)", "= ANY(%b)")
     return connection.exec_driver_sql(
-        marked + (" FOR NO KEY UPDATE" if lock else ""), (list(wanted),)
+        among + (" FOR NO KEY UPDATE" if lock else ""), (list(wanted),)
     )
 
 
@@ -55,12 +77,15 @@ def _is_sqlite(connection: Connection) -> bool:
     return connection.dialect.name == "sqlite"
 
 
-@lru_cache(maxsize=256)
-def _marked(statement: str, is_sqlite: bool) -> str:
-    """The statement with the marks of the driver for its values."""
-    if is_sqlite:
-        return statement
-    return _NAMED.sub(r"%(\1)s", statement).replace("?", "%s")
+@lru_cache(maxsize=64)
+def _renamed(statement: str) -> str:
+    return re.sub(r":(\w+)", r"%(\1)s", statement)
 
 
-_NAMED = re.compile(r":(\w+)")
+# From a text in JSON, in which bytes stand as hex.
+_READ = {
+    "TEXT": "given ->> {}",
+    "BIGINT": "(given ->> {})::bigint",
+    "FLOAT": "(given ->> {})::double precision",
+    "BYTES": "decode(given ->> {}, 'hex')",
+}

@@ -18,6 +18,7 @@ from service.decision.opportunity import Feature
 
 ID = re.compile(r"[A-Za-z0-9._-]{1,64}")
 PRINTABLE = re.compile(r"[ -~]{1,64}")
+TICKET = re.compile(r"[!-~]{1,512}")
 # Any short text as ever; longer only what several dear changes ask for together.
 _CONFIRM = re.compile(
     r"[ -~]{1,64}|[a-z_]{1,20}(=[a-z0-9.]{1,24})?( [a-z_]{1,20}=[a-z0-9.]{1,24}){0,4}"
@@ -111,7 +112,7 @@ Confirm = Annotated[
 ]
 Ticket = Annotated[
     str,
-    shaped(re.compile(r"[!-~]{1,512}"), "It is no ticket of ours."),
+    shaped(TICKET, "It is no ticket of ours."),
     WithJsonSchema({"type": "string", "maxLength": 512}),
 ]
 Ref = Annotated[
