@@ -27,9 +27,9 @@ from service.metrics.series import OTHER
 from service.metrics.tally import Tally
 from service.money import PRICE_NANOS_MAX
 from service.store import outcomes, tripwires
+from service.store.bookings import NO_SNAPSHOT, Booked, Booking
 from service.store.database import Database
 from service.store.decisions import quarantine
-from service.store.outcomes import NO_SNAPSHOT, Booked, Booking
 from service.store.quarantines import written
 from service.teaching import weigh
 from service.threads import Threads

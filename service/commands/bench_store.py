@@ -35,10 +35,10 @@ from service.store import (
     teachers,
 )
 from service.store.audit import Balance
+from service.store.bookings import Booking
 from service.store.database import Database, Writing
 from service.store.leases import Denied, Leased, LeaseRequest
 from service.store.migrate import migrate
-from service.store.outcomes import Booking
 from service.teaching import FRESH, lawful, lesson, weigh
 
 UNIT, BID, PAID = 10**9, 1_000_000, 410_000  # Nanos: one unit of currency, 1 CPM, 0.41 CPM.

@@ -6,6 +6,7 @@ Pure ledger code decides on the copies; the guarded updates here are the net ben
 from __future__ import annotations
 
 from collections.abc import Iterable
+from functools import cached_property
 from typing import Any
 
 from sqlalchemy import text
@@ -31,11 +32,8 @@ class Books:
     def __init__(self, connection: Writing, line_items: Iterable[str], wall_ms: int) -> None:
         self._connection = connection
         self._wall_ms = wall_ms
-        self.service_ms = 0
         # The lock comes first in every such transaction; taking it later deadlocked in trials.
         self.accounts = self._lock(sorted(set(line_items)))
-        # Read after the lock, or a waiter would stamp an older moment than its forerunner.
-        self.service_ms = now_ms(connection)
         self.days: dict[tuple[str, str], Day] = {}
         self.slices: dict[bytes, Slice] = {}
         self._accounts_before = dict(self.accounts)
@@ -44,6 +42,12 @@ class Books:
         self._new_slices: list[dict[str, Any]] = []
         self._rows: list[tuple[Any, ...]] = []
         self._seqs: dict[str, int] = {}
+
+    @cached_property
+    def service_ms(self) -> int:
+        """Service time, which stamps entries; read when it is asked for, unless it was told."""
+        # After the lock, or a waiter would stamp an older moment than its forerunner.
+        return now_ms(self._connection)
 
     def load_slices(self, ids: Iterable[bytes]) -> None:
         """Read these slices and the days they belong to."""
@@ -112,9 +116,10 @@ class Books:
         """Append an entry that moves nothing by itself; its seq shows in the balance once saved."""
         account = self.accounts[line_item]
         seq = self._seqs[line_item] = self._seqs.get(line_item, account.seq) + 1
-        stamps = (seq, entry.kind, self._at_ms(account), self.service_ms)
-        said = (entry.bid, entry.slot, entry.cost, bodies.written(entry.body))
-        self._rows.append((line_item, *stamps, *said))
+        at_ms, service_ms = max(account.at_ms, self._wall_ms), self.service_ms
+        kind, body, bid, slot, cost = entry
+        text = bodies.written(body)
+        self._rows.append((line_item, seq, kind, at_ms, service_ms, bid, slot, cost, text))
 
     def replace_slice(self, changed: Slice) -> None:
         """Set what is not money: state, ticked and counted."""
@@ -144,7 +149,9 @@ class Books:
             self._connection.execute(_INSERT_SLICE, self._new_slices)
         for name, seq in self._seqs.items():
             account = self.accounts[name]
-            self.accounts[name] = account._replace(seq=seq, at_ms=self._at_ms(account))
+            # The wall clock may step back, but the stamps of a stream never do.
+            at_ms = max(account.at_ms, self._wall_ms)
+            self.accounts[name] = account._replace(seq=seq, at_ms=at_ms)
         accounts = [(self._accounts_before[name], row) for name, row in self.accounts.items()]
         self._write(_UPDATE_BALANCE, "balance", accounts, _BALANCE_SUMS)
         days = [(self._days_before[key], row) for key, row in self.days.items()]
@@ -163,10 +170,6 @@ class Books:
     def _keep_day(self, found: Day) -> None:
         key = (found.line_item, found.day)
         self.days[key] = self._days_before[key] = found
-
-    def _at_ms(self, account: Account) -> int:
-        # The wall clock may step back, but the stamps of a stream never do.
-        return max(account.at_ms, self._wall_ms)
 
     def _write(
         self,

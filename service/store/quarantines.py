@@ -13,8 +13,8 @@ from sqlalchemy import text
 from service.errors import Conflict, NotFound
 from service.ledger.settle import Outcome
 from service.ledger.values import Value
+from service.store.bookings import Booking
 from service.store.database import Reading, Writing
-from service.store.outcomes import Booking
 
 KINDS = {"Outcome": Outcome, "Value": Value}
 

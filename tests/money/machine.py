@@ -9,8 +9,8 @@ from hypothesis.stateful import RuleBasedStateMachine, invariant, precondition, 
 from sqlalchemy import text
 
 from service.errors import Conflict
+from service.store.bookings import Booking
 from service.store.database import Database, Writing
-from service.store.outcomes import Booking
 from tests.money.exchange import KeptWord
 from tests.money.scene import (
     ALL,

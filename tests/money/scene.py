@@ -14,9 +14,9 @@ from service.ledger.settle import Outcome
 from service.ledger.values import Value
 from service.store import leases, line_items, outcomes, workers
 from service.store.audit import audit
+from service.store.bookings import Booked, Booking
 from service.store.database import Database, Reading, Writing
 from service.store.leases import Leased, LeaseRequest
-from service.store.outcomes import Booked, Booking
 from tests.builders import NAME as NAME
 from tests.builders import begin, line_item
 from tests.money.exchange import Exchange

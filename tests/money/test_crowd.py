@@ -18,10 +18,10 @@ from service.guard.hand import SliceInHand
 from service.ledger.settle import Outcome
 from service.store import leases, line_items, outcomes, workers
 from service.store.audit import audit
+from service.store.bookings import Booking
 from service.store.database import Database, Reading, Writing
 from service.store.learners import begin
 from service.store.leases import Leased, LeaseRequest, Report
-from service.store.outcomes import Booking
 from tests.builders import FLAT, UNIT
 
 THREADS = 8

@@ -12,8 +12,8 @@ from sqlalchemy import text
 
 from service.errors import BrokenPromise
 from service.store import changes, clock, line_items, outcomes
+from service.store.bookings import Booking
 from service.store.database import Database, Writing
-from service.store.outcomes import Booking
 from tests.builders import begin
 from tests.money.scene import GRACE_MS, LEASE_MS, NAME, Bid, Scene
 

@@ -21,6 +21,7 @@ from service.ledger.runs import Run
 from service.store import clock, leases, line_items, outcomes
 from service.store.books import Books
 from service.store.database import Database
+from service.store.known import Known
 from tests.money import plays
 from tests.money.plays import Play, Stage, Unkept
 from tests.money.scene import Scene
@@ -144,8 +145,8 @@ BUGS = [
         " - self.over_spent", "", plays.a_win_after_grace_on_a_full_day, "play"),
     Bug("a repeat is booked again", outcomes, "settle",
         'place.slots.get("result")', "None", plays.a_group_sent_twice, "guard"),
-    Bug("a group does not know its own rows", outcomes._Group, "_keep",
-        "entry is not None and", "False and", plays.a_group_sent_twice, "guard"),
+    Bug("a group does not know its own rows", Known, "keep",
+        "if entry.slot is not None:", "if False:", plays.a_group_sent_twice, "guard"),
     Bug("a bill and its win both cost", settle, "_first_result",
         "NOTHING if billed_before else", "", plays.a_bill_before_its_win, "V7 exchange"),
     Bug("a void leaves what a win owed", settle, "_void_of_win",

@@ -14,9 +14,10 @@ from service.errors import BrokenPromise
 from service.ledger.settle import Outcome
 from service.store import leases, workers
 from service.store.audit import audit
+from service.store.bookings import Booking
 from service.store.database import Database, Writing
 from service.store.leases import Denied, Leased, LeaseRequest, Report
-from service.store.outcomes import Booking, book
+from service.store.outcomes import book
 from tests.builders import NAME, begin, pass_service_ms
 
 CAP = 10

@@ -15,8 +15,9 @@ from service.ledger.settle import Outcome
 from service.ledger.values import Value
 from service.store import changes, freezes, journal, learners
 from service.store.audit import audit
+from service.store.bookings import Booked, Booking
 from service.store.database import Database, Reading
-from service.store.outcomes import Booked, Booking, book, find_wins
+from service.store.outcomes import book, find_wins
 from tests.builders import NAME, begin
 from tests.money.scene import GRACE_MS, LEASE_MS, Bid, Scene
 

@@ -17,18 +17,18 @@ from sqlalchemy import event
 
 from service.ledger.settle import Outcome
 from service.store import changes, charting, learners, leases, outcomes, teachers
+from service.store.bookings import Booking
 from service.store.database import Database
 from service.store.leases import Leased, LeaseRequest
-from service.store.outcomes import Booking
 from service.teaching import lawful, lesson
 from tests.builders import begin
 
 T = TypeVar("T")
 LINE_ITEMS = [f"garden-{number}" for number in range(20)]
 BID = 1_000_000
-# Lock, service time, slices with their days, configurations, what bids have said; then balances,
+# Lock, slices with their days, configurations with the time, what bids have said; then balances,
 # days, slices and entries, once each however many rows there are. SQLite also says BEGIN.
-BOOKING_MAX = 10
+BOOKING_MAX = 9
 # Lock, service time, configurations, days, who lives (twice: the time, then the workers), freezes,
 # what the dead hold; then slices, balances, days and entries.
 LEASING_MAX = 13
