@@ -227,9 +227,9 @@ class Feedback:
             logger.exception("a group of outcomes could not be booked; trying it apart")
             await self._settle_apart(group)
         else:
-            parts = iter(booked)
+            at = 0
             for waiting in group:
-                _finish(waiting, [next(parts) for _ in waiting.rows])
+                _finish(waiting, booked[at : (at := at + len(waiting.rows))])
 
     async def _settle_apart(self, group: list[_Waiting]) -> None:
         if len(group) > 1:
@@ -387,8 +387,8 @@ def _value(report: Report, bid: bytes) -> Value:
 
 
 def _receipt(row: Booking, booked: Booked) -> Receipt:
-    ref, name = ref_of(row.event.bid), row.line_item
-    return Receipt(ref, booked.status, booked.code, booked.clipped, line_item=name)
+    status, code, clipped = booked
+    return Receipt(ref_of(row.event.bid), status, code, clipped, line_item=row.line_item)
 
 
 def _fail(waiting: _Waiting, error: StoreAway | Overloaded) -> None:
