@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from operator import itemgetter
 from typing import Any
 
 from sqlalchemy import text
@@ -23,8 +24,7 @@ COLUMNS = {
 
 def log(database: Database, decisions: list[Decision]) -> None:
     """Append decisions; losing some in a crash loses no money, since tickets carry it."""
-    kept = [{**_UNKEPT, **decision} for decision in decisions]
-    rows = [tuple(row[name] for name in COLUMNS) for row in kept]
+    rows = [_values({**_UNKEPT, **decision}) for decision in decisions]
 
     def work(connection: Writing) -> None:
         _LOG.run(connection, rows)
@@ -82,6 +82,7 @@ _PRUNE = text(
     " ORDER BY number LIMIT :limit) AS oldest WHERE at_ms < :before)"
 )
 _LOG = Insert("decision", **COLUMNS)
+_values = itemgetter(*COLUMNS)
 # What a decision that was never weighed has nothing to say of.
 _UNKEPT: Decision = {
     **{"auction": "", "arm": ""},

@@ -121,14 +121,17 @@ class _Group:
                 self._known.configs[booking.line_item]["spend_on"],
             ),
         )
+        entry = verdict.entry
+        # It was told before, and moved what it had to move then.
+        if entry is None:
+            return Booked(verdict.status)
         slice_id = slice_.id if slice_ else None
         name, rounds = booking.line_item, verdict.rounds
         self._books.post(name, None, verdict.movement, day=day, slice_id=slice_id, rounds=rounds)
-        if verdict.entry is not None:
-            self._append(name, slots, self._told(booking, verdict.entry, (slice_id, day), slots))
-            if verdict.entry.kind in PAYING:
-                for lesson in unparked(slots, outcome.bid):
-                    self._append(name, slots, self._known.dated(lesson, slots, booking))
+        self._append(name, slots, self._told(booking, entry, (slice_id, day), slots))
+        if entry.kind in PAYING:
+            for lesson in unparked(slots, outcome.bid):
+                self._append(name, slots, self._known.dated(lesson, slots, booking))
         return Booked(verdict.status)
 
     def _value(self, booking: Booking, value: Value, slots: Slots) -> Booked:

@@ -6,8 +6,10 @@ from decimal import Decimal
 from typing import Any
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as some
 
-from service.api.forms.outcomes import read_outcomes
+from service.api.forms.outcomes import FORMS, _plain, _report, read_outcomes
 from service.feedback import Receipt, Report
 
 
@@ -102,3 +104,37 @@ def test_a_bad_outcome_spoils_no_other() -> None:
     )
     assert [type(row) for row in rows] == [Report, Receipt, Report]
     assert unused == {"shiny"}
+
+
+NUMBERS: list[object] = [
+    *(0, 1, -1, 2**70, True, None, 1.5, "0.41", "1e3", "", " 1", "-0.5", "${AUCTION_PRICE}"),
+    *(Decimal("0.41"), Decimal("0.0000005"), Decimal("-0.41"), Decimal("1E+40"), Decimal("NaN")),
+]
+TICKETS: list[object] = ["t", "A-_z" * 40, "", "x" * 513, "two words", "\u00e4", "\ud800", None, 7]
+plain_rows = some.fixed_dictionaries(
+    {"kind": some.sampled_from([*FORMS, "beaten", None, ["won"], 1])},
+    optional={
+        "ticket": some.sampled_from(TICKETS),
+        "clearing_cpm": some.sampled_from(NUMBERS),
+        "to_win_cpm": some.sampled_from(NUMBERS),
+        "at": some.sampled_from(["2026-12-01T10:00:00Z", "noon"]),
+        "why": some.just("outbid"),
+        "shiny": some.just(1),
+    },
+)
+
+
+@given(plain_rows)
+@settings(max_examples=500)
+def test_what_is_read_without_its_form_is_what_the_form_reads(row: dict[str, object]) -> None:
+    """The quick way says the same or nothing, and never takes what the form refuses."""
+    quick = _plain(row)
+    if quick is not None:
+        unused: set[str] = set()
+        assert (_report(row, unused), unused) == (quick, set())
+
+
+@pytest.mark.parametrize("row", [row for row, _ in OUTCOMES[2:3] + OUTCOMES[5:6]])
+def test_plain_outcomes_are_read_without_their_form(row: dict[str, object]) -> None:
+    """Or the test above would say nothing."""
+    assert _plain(row) is not None
