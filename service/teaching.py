@@ -10,7 +10,7 @@ from service.learner.exptree_state import UnreadableTree
 from service.learner.fold import Lesson, fold
 from service.learner.growing import law_of, weight
 from service.learner.memory import Memory, UnreadableMemory
-from service.learner.rules import Rules, tree_rules
+from service.learner.rules import TREES, Rules, tree_rules
 
 FRESH = Memory.fresh().to_bytes()  # The state of a learner before its first lesson.
 
@@ -78,5 +78,5 @@ def weigh(
     law: bytes, kind: str, price: int | None, floor: int, config: Mapping[str, Any]
 ) -> dict[str, Any]:
     """What an outcome of a bid drawn from a law carries; nothing once the method is another."""
-    tree = tree_rules(config)
-    return {} if tree is None else weight(law, kind, price, floor, tree.win_only)
+    win_only = TREES.get(config["policy"]["method"])
+    return {} if win_only is None else weight(law, kind, price, floor, win_only)

@@ -15,16 +15,16 @@ import pytest
 from service.api.body import parse_object
 from service.api.forms.outcomes import read_outcomes
 from service.feedback import Report
+from service.learner.exptree_lessons import Won
+from service.learner.growing import grow, law_of
+from service.learner.rules import tree_rules
 from service.store import outcomes
 from service.store.bookings import Booking
 from service.teaching import weigh
-from tests.builders import Worker, working
+from tests.builders import CAP, Worker, line_item, working
 from tests.test_bid_work import calls
 
-pytestmark = [
-    pytest.mark.anyio,
-    pytest.mark.parametrize("backend", ["sqlite"], indirect=True),
-]
+on_sqlite = pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
 FEW, MANY = 10, 60
 KINDS = ("won", "lost", "billed")
 
@@ -59,6 +59,8 @@ async def tickets(worker: Worker, count: int) -> list[str | None]:
     return [answer.ticket for answer in await worker.bids(count)]
 
 
+@pytest.mark.anyio
+@on_sqlite
 @pytest.mark.parametrize("kind", KINDS)
 async def test_reading_an_outcome_is_few_calls(migrated_url: str, kind: str) -> None:
     """From the bytes that came to what is asked of the books, with its ticket verified."""
@@ -73,6 +75,8 @@ async def test_reading_an_outcome_is_few_calls(migrated_url: str, kind: str) -> 
         assert for_a_row(work) <= 72
 
 
+@pytest.mark.anyio
+@on_sqlite
 @pytest.mark.parametrize(("kind", "calls_max"), [("won", 31), ("lost", 28), ("billed", 70)])
 async def test_booking_an_outcome_is_few_calls(
     migrated_url: str, kind: str, calls_max: int
@@ -90,3 +94,13 @@ async def test_booking_an_outcome_is_few_calls(
             assert {one.status for one in booked} == {"recorded"}
 
         assert for_a_row(work) <= calls_max
+
+
+def test_a_law_is_read_once_for_all_its_outcomes() -> None:
+    """What an outcome carries of the law of its bid costs the same however many steps that has."""
+    config = line_item(policy={"method": "exptree"})
+    rules = tree_rules(config)
+    assert rules is not None
+    lessons = [Won(price, 0.5, (0, 0), 1) for price in range(100_000, CAP, 100_000)]
+    law = law_of(grow(b"", lessons, rules), rules).to_bytes()
+    assert calls(lambda: weigh(law, "won", CAP // 2, CAP // 4, config)) <= 27

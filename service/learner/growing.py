@@ -7,6 +7,7 @@ from the law of its epoch; here it is only read.
 from __future__ import annotations
 
 from collections.abc import Mapping
+from functools import lru_cache
 from typing import Any
 
 from service.learner import exptree
@@ -90,11 +91,17 @@ def weight(law: bytes, kind: str, price: int | None, floor: int, win_only: bool)
         floor: Least price the seller took, in nanos.
         win_only: Whether nothing is learnt from a loss.
     """
-    drawn = Law.from_bytes(law)
+    drawn = _read(law)
     said: dict[str, Any] = {"stage": list(drawn.stage)}
     if kind == "won" and price is not None:
         said["chance"] = drawn.chance_above(price, 0 if win_only else floor)
     return said
+
+
+@lru_cache(maxsize=64)
+def _read(law: bytes) -> Law:
+    """The law of these bytes; outcomes come by the hundred for each, and it has many steps."""
+    return Law.from_bytes(law)
 
 
 def _stage(body: Body) -> Stage | None:
