@@ -15,7 +15,7 @@ import pytest
 from service.api.body import parse_object
 from service.api.forms.outcomes import read_outcomes
 from service.feedback import Report
-from service.learner.exptree_lessons import Won
+from service.learner.exptree_lessons import Lesson, Won
 from service.learner.growing import grow, law_of
 from service.learner.rules import tree_rules
 from service.store import outcomes
@@ -101,6 +101,6 @@ def test_a_law_is_read_once_for_all_its_outcomes() -> None:
     config = line_item(policy={"method": "exptree"})
     rules = tree_rules(config)
     assert rules is not None
-    lessons = [Won(price, 0.5, (0, 0), 1) for price in range(100_000, CAP, 100_000)]
+    lessons: list[Lesson] = [Won(price, 0.5, (0, 0), 1) for price in range(100_000, CAP, 100_000)]
     law = law_of(grow(b"", lessons, rules), rules).to_bytes()
     assert calls(lambda: weigh(law, "won", CAP // 2, CAP // 4, config)) <= 27
