@@ -135,7 +135,8 @@ class Known:
 
 _TERMS = (
     "SELECT l.id, l.config, coalesce(n.reset_seq, 0),"
-    " EXISTS (SELECT 1 FROM epoch e WHERE e.line_item = l.id), service_clock.now_ms FROM line_item l"
-    " CROSS JOIN service_clock LEFT JOIN learner n ON n.line_item = l.id WHERE l.id IN (?)"
+    " EXISTS (SELECT 1 FROM epoch e WHERE e.line_item = l.id), service_clock.now_ms"
+    " FROM line_item l CROSS JOIN service_clock LEFT JOIN learner n ON n.line_item = l.id"
+    " WHERE l.id IN (?)"
 )
 _OF_BIDS = "SELECT bid, seq, service_ms, slot, kind, body FROM stream WHERE bid IN (?) ORDER BY seq"
