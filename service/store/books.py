@@ -104,11 +104,12 @@ class Books:
         Args:
             rounds: Of the slice, newly counted.
         """
-        self.accounts[line_item] = self.accounts[line_item].moved(movement)
-        if day is not None and (line_item, day) in self.days:
-            self.days[line_item, day] = self.days[line_item, day].moved(movement)
-        if slice_id is not None and slice_id in self.slices:
-            self.slices[slice_id] = self.slices[slice_id].moved(movement, rounds)
+        if movement is not NOTHING or rounds:
+            self.accounts[line_item] = self.accounts[line_item].moved(movement)
+            if day is not None and (line_item, day) in self.days:
+                self.days[line_item, day] = self.days[line_item, day].moved(movement)
+            if slice_id is not None and slice_id in self.slices:
+                self.slices[slice_id] = self.slices[slice_id].moved(movement, rounds)
         if entry is not None:
             self.append(line_item, entry)
 

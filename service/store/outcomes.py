@@ -153,7 +153,7 @@ class _Group:
         slice_id, day = place
         body = {**entry.body, "slice": slice_id.hex() if slice_id else None, "day": day}
         self._known.describe(body, booking, entry.kind, slots)
-        return entry._replace(body=body)
+        return Entry(entry.kind, body, entry.bid, entry.slot, entry.cost)
 
     def _freeze_unfunded(self) -> None:
         """A cost that found no free money stops the line item, and says so."""

@@ -16,6 +16,7 @@ import pytest
 from sqlalchemy import event
 
 from service.ledger.settle import Outcome
+from service.ledger.values import Value
 from service.store import changes, charting, learners, leases, outcomes, teachers
 from service.store.bookings import Booking
 from service.store.database import Database
@@ -29,6 +30,8 @@ BID = 1_000_000
 # Lock, slices with their days, configurations with the time, what bids have said; then balances,
 # days, slices and entries, once each however many rows there are. SQLite also says BEGIN.
 BOOKING_MAX = 9
+# Lock, configurations with the time, what bids have said; then balances and entries.
+VALUING_MAX = 6
 # Lock, service time, configurations, days, who lives (twice: the time, then the workers), freezes,
 # what the dead hold; then slices, balances, days and entries.
 LEASING_MAX = 13
@@ -98,6 +101,19 @@ def test_a_group_takes_no_more_statements_than_one_outcome(database: Database) -
     ]
     for group in groups:
         assert statements.of(partial(outcomes.book, database, group)) <= BOOKING_MAX
+
+
+def test_values_of_a_group_take_no_more_statements_than_one(database: Database) -> None:
+    """Whatever each needs of its win and of the last reset is read for all of them at once."""
+    held = lease(database, LINE_ITEMS[:1])[0]
+    won = wins(held, 50)
+    outcomes.book(database, won)
+    values = [
+        Booking(held.line_item, Value(win.event.bid, event, 5)) for win in won for event in "ab"
+    ]
+    statements = Statements(database)
+    for group in (values[:1], values[1:]):
+        assert statements.of(partial(outcomes.book, database, group)) <= VALUING_MAX
 
 
 def test_twenty_leases_take_no_more_statements_than_one(database: Database) -> None:
