@@ -13,21 +13,15 @@ from collections import Counter
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
-from datetime import date
-from functools import lru_cache
-from typing import NamedTuple
 
 from service import spans
 from service.errors import BrokenPromise, Overloaded, StoreAway
-from service.guard.ticket import BadTicket, Ticket, TicketKeys, bid_of, ref_of
-from service.ledger.entries import PAYING
-from service.ledger.settle import Outcome
-from service.ledger.values import Value
+from service.guard.ticket import TicketKeys, ref_of
 from service.metrics.series import OTHER
 from service.metrics.tally import Tally
-from service.money import PRICE_NANOS_MAX
+from service.reporting import Reader, Receipt, Report, placed, receipt
 from service.store import outcomes, tripwires
-from service.store.bookings import NO_SNAPSHOT, Booked, Booking
+from service.store.bookings import Booked, Booking
 from service.store.database import Database
 from service.store.decisions import quarantine
 from service.store.quarantines import written
@@ -36,55 +30,12 @@ from service.threads import Threads
 
 logger = logging.getLogger(__name__)
 
+__all__ = ["ANSWER_S", "Feedback", "Receipt", "Report", "Room"]
 ROWS_MAX = 2000
-COST_MAX = 4 * PRICE_NANOS_MAX  # Beyond any bid: a currency or a unit was mistaken.
 THREAD_S = 0.25  # How long a group waits for a thread, and so for a connection.
 ANSWER_S = 6.0  # Longer than a statement may take: then nobody knows, and the caller asks again.
 # What a single bad row may raise; anything else is a fault of ours and ends the worker's task.
 POISON = (BrokenPromise, ValueError, LookupError, ArithmeticError, TypeError)
-
-
-class Report(NamedTuple):
-    """
-    One reported outcome; prices in nanos per impression, values in nanos.
-
-    Args:
-        currency: Of the prices, where the reporter names it.
-        delivered: Impressions that came of the sale, in parts of 10^9, if they were told.
-        at_the_bid: The price is not told at all: the most it can be is booked.
-    """
-
-    kind: str
-    ticket: str | None = None
-    ref: str | None = None
-    clearing: int | None = None
-    to_win: int | None = None
-    value: int | None = None
-    event_id: str | None = None
-    corrects: str | None = None
-    why: str | None = None
-    at: str | None = None
-    currency: str | None = None
-    delivered: int | None = None
-    at_the_bid: bool = False
-
-
-class Receipt(NamedTuple):
-    """
-    What became of one report; `code` says why when it is refused.
-
-    Args:
-        foreign: Refused because the line item does not exist for the caller's key.
-    """
-
-    ref: str | None
-    status: str
-    code: str | None = None
-    clipped: bool = False
-    test: bool = False
-    detail: str | None = None
-    foreign: bool = False
-    line_item: str | None = None  # As far as a ticket or a ref has named it.
 
 
 @dataclass(frozen=True, slots=True)
@@ -117,7 +68,7 @@ class Feedback:
     ) -> None:
         self._tally = tally or Tally()
         self._database, self._threads = database, threads
-        self._keys, self._incarnation = keys, incarnation
+        self._reader = Reader(keys, incarnation)
         self._room, self._calls, self._rows = room or Room(), 0, 0
         self._queue: asyncio.Queue[_Waiting] = asyncio.Queue()
         # Of line items that our own tickets name, so that nobody can make it grow.
@@ -174,13 +125,13 @@ class Feedback:
         self._refused.update(row.line_item for row in refused if row.line_item)
 
     async def _receipts(self, reports: list[Report], only: frozenset[str] | None) -> list[Receipt]:
-        read = [self._read(report, only) for report in reports]
+        read = [self._reader.read(report, only) for report in reports]
         # A bid that is named by its ref alone has to be looked up.
         if any(report.ticket is None for report in reports):
             read = await self._find_refs(reports, read, only)
         rows = [row for row in read if isinstance(row, Booking)]
         done = iter(await self._book(rows) if rows else [])
-        return [row if isinstance(row, Receipt) else _receipt(row, next(done)) for row in read]
+        return [row if isinstance(row, Receipt) else receipt(row, next(done)) for row in read]
 
     async def keep_refusals(self) -> None:
         """Count what was refused since the last time, for the tripwire on it."""
@@ -263,60 +214,6 @@ class Feedback:
             )
         )
 
-    def _read(self, report: Report, only: frozenset[str] | None = None) -> Booking | Receipt:
-        """The booking a report asks for, or the receipt that refuses it."""
-        if report.ticket is None:
-            return _read_ref(report)
-        try:
-            ticket = self._keys.verify(report.ticket)
-        except BadTicket:
-            return Receipt(report.ref, "refused", "bad_ticket")
-        if only is not None and ticket.line_item not in only:
-            return Receipt(report.ref, "refused", "no_such_line_item", foreign=True)
-        if report.ref is not None and report.ref != ticket.ref:
-            return Receipt(report.ref, "refused", "ref_of_another_bid", line_item=ticket.line_item)
-        if report.currency is not None and report.currency != ticket.scale.currency:
-            return Receipt(ticket.ref, "refused", "other_currency", line_item=ticket.line_item)
-        pays = report.kind in PAYING
-        price = _price(report, ticket) if pays else 0
-        if price is None or price > COST_MAX:
-            code = "no_price" if price is None else "bad_price"
-            return Receipt(ticket.ref, "refused", code, line_item=ticket.line_item)
-        # Nothing was held for it, so there is nothing to book and nothing to learn.
-        if ticket.test:
-            return Receipt(ticket.ref, "recorded", test=True)
-        return self._booking(report, ticket, price if pays else None)
-
-    def _booking(self, report: Report, ticket: Ticket, price: int | None) -> Booking:
-        if report.kind == "value":
-            return Booking(ticket.line_item, _value(report, ticket.bid))
-        outcome = Outcome(
-            report.kind,
-            ticket.bid,
-            ticket.counter,
-            ticket.price,
-            ticket.source,
-            price,
-            None if report.to_win is None else _to_win(report.to_win, ticket),
-            report.why,
-            report.at,
-            ticket.auction,
-        )
-        # A slice of a database before its restore may be gone or be another's: the late way.
-        here = ticket.incarnation == self._incarnation
-        return Booking(
-            ticket.line_item,
-            outcome,
-            ticket.slice if here else None,
-            _day(ticket.day),
-            # And the same snapshot may have had another law there.
-            ticket.snapshot if here else NO_SNAPSHOT,
-            ticket.floor,
-            ticket.features,
-            ticket.hint,
-            ticket.arm,
-        )
-
     async def _find_refs(
         self,
         reports: list[Report],
@@ -334,61 +231,7 @@ class Feedback:
         # The win may stand in the same call; if it does not, the value waits for it.
         found |= {row.event.bid: row.line_item for row in bookings if row.line_item}
         pairs = zip(read, reports, strict=True)
-        return [_placed(row, found, report.ref, only) for row, report in pairs]
-
-
-@lru_cache(maxsize=64)
-def _day(ordinal: int) -> str:
-    """The date of a ticket's day; all tickets of an hour name one or two of them."""
-    return date.fromordinal(ordinal).isoformat()
-
-
-def _price(report: Report, ticket: Ticket) -> int | None:
-    """What it cost, fees included; who pays what he bids need not be told."""
-    if report.clearing is not None:
-        return ticket.fees.gross(ticket.scale.paid(report.clearing, report.delivered))
-    bid_is_paid = report.kind == "won" and ticket.auction != "second"
-    return ticket.price if bid_is_paid or report.at_the_bid else None
-
-
-def _to_win(price: int, ticket: Ticket) -> int | None:
-    """The least cost that would have won; what no ledger can hold says nothing."""
-    cost = ticket.fees.gross(ticket.scale.paid(price))
-    return cost if cost <= COST_MAX else None
-
-
-def _read_ref(report: Report) -> Booking | Receipt:
-    """A value may come by ref alone; its line item is looked up after."""
-    if report.kind != "value" or report.ref is None:
-        return Receipt(report.ref, "refused", "no_ticket")
-    try:
-        return Booking("", _value(report, bid_of(report.ref)))
-    except BadTicket:
-        return Receipt(None, "refused", "bad_ref")
-
-
-def _placed(
-    row: Booking | Receipt,
-    found: dict[bytes, str],
-    ref: str | None,
-    only: frozenset[str] | None,
-) -> Booking | Receipt:
-    if isinstance(row, Receipt) or row.line_item:
-        return row
-    known = row.event.bid in found
-    # Answered as a ref that nobody has, or a guesser would learn which are taken.
-    if not known or (only is not None and found[row.event.bid] not in only):
-        return Receipt(ref, "refused", "no_such_ref", foreign=known)
-    return Booking(found[row.event.bid], row.event)
-
-
-def _value(report: Report, bid: bytes) -> Value:
-    return Value(bid, report.event_id or "", report.value or 0, report.corrects, report.at)
-
-
-def _receipt(row: Booking, booked: Booked) -> Receipt:
-    status, code, clipped = booked
-    return Receipt(ref_of(row.event.bid), status, code, clipped, line_item=row.line_item)
+        return [placed(row, found, report.ref, only) for row, report in pairs]
 
 
 def _fail(waiting: _Waiting, error: StoreAway | Overloaded) -> None:

@@ -192,7 +192,7 @@ async def test_an_outcome_set_aside_keeps_what_its_ticket_carried(migrated_url: 
     async with working(migrated_url) as worker:
         await worker.create(policy=LINEAR, value=ONE)
         answer = await worker.bid(features=PHONE, value_hint=HINT)
-        booking = worker.feedback._read(Report("won", ticket=answer.ticket, clearing=5))
+        booking = worker.feedback._reader.read(Report("won", ticket=answer.ticket, clearing=5))
         assert not hasattr(booking, "status")
         kept = json.loads(json.dumps(written(booking)))
         assert booking_of(NAME, kept) == booking

@@ -17,8 +17,8 @@ SHARED = set(
     """
     admitting answer backlog catalog choosing configuring connecting correcting drawing estimates
     foreseeing hindsights judging leasing ordering patience posting previewing pulse quarantining
-    rating records recounting rehearsal_orders sampling showing spans spending teaching threads
-    tripwiring watching winding
+    rating records recounting rehearsal_orders reporting sampling showing spans spending teaching
+    threads tripwiring watching winding
     """.split()
 )
 PURE = {"money", "errors", "learner", "decision", "ledger", "guard", "tripwires", "rehearsal"}

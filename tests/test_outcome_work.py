@@ -45,7 +45,7 @@ def reports(body: bytes) -> list[Report]:
 
 def read(worker: Worker, body: bytes) -> list[Booking]:
     """What a call asks of the books."""
-    rows = [worker.feedback._read(report) for report in reports(body)]
+    rows = [worker.feedback._reader.read(report) for report in reports(body)]
     return [row for row in rows if isinstance(row, Booking)]
 
 
