@@ -51,3 +51,8 @@ class Opportunity(NamedTuple):
     floor_currency: str = ""
     multiplier: int = 10**9
     hashed: Hashed = ()
+
+    def seen_as(self, hashed: Hashed) -> Opportunity:
+        """The same with its features hashed."""
+        # By place, which takes a third of the time of a replacement by name.
+        return Opportunity(*self[:-1], hashed)

@@ -17,7 +17,6 @@ from service.decision.opportunity import Opportunity
 from service.decision.terms import Terms
 from service.decision.value.linear import DELTA, LENGTH, NOISE, PENALTY
 from service.learner import delay, hashing, hints, linear
-from service.learner.arrays import Numbers
 from service.learner.hint_part import Book
 from service.learner.hints import Hints
 from service.learner.linear_part import Sums
@@ -39,14 +38,14 @@ class ByFeatures:
 
     Args:
         weights: Estimate of the weights, in ceilings.
-        inverse: Of the matrix of the ellipsoid.
+        inverse: Of the matrix of the ellipsoid, row by row; symmetric.
         radius: How far the true weights may be from the estimate, in its norm.
         lessons: Impressions behind it.
         scale: Nanos of one ceiling.
     """
 
-    weights: Numbers
-    inverse: Numbers
+    weights: list[float]
+    inverse: list[list[float]]
     radius: float
     lessons: int
     scale: float
@@ -62,16 +61,25 @@ class ByFeatures:
         sums = Sums.from_bytes(memory.part("linear"), int(terms.settings["dimensions"]))
         ridge = sums.ridge(PENALTY, terms.scale, _arrived(memory, terms))
         radius = linear.ellipsoid_radius(ridge.log_det, PENALTY, NOISE, LENGTH, DELTA)
-        return ByFeatures(ridge.weights, ridge.inverse, float(radius), ridge.lessons, terms.scale)
+        known = ridge.weights.tolist(), ridge.inverse.tolist()
+        return ByFeatures(*known, float(radius), ridge.lessons, terms.scale)
 
     def value(self, hashed: hashing.Hashed) -> Valued | None:
         """Mean plus radius times width; None where features cancel out, and so say nothing."""
+        entries = hashing.folded(hashed, len(self.weights))
+        mean = square = 0.0
+        # Few places are not nought: their sums cost less than products of whole matrices.
+        for count, (place, weight) in enumerate(entries):
+            row = self.inverse[place]
+            # Every pair once and twice as much, for the matrix is symmetric.
+            crossed = 0.0
+            for other, by in entries[:count]:
+                crossed += row[other] * by
+            square += weight * (row[place] * weight + 2.0 * crossed)
+            mean += self.weights[place] * weight
         # Features that share a dimension with opposite signs may leave a vector of nothing.
-        x = hashing.dense(hashed, len(self.weights))
-        square = float(x @ self.inverse @ x)
         if square <= 0.0:
             return None
-        mean = float(x @ self.weights)
         return Valued(
             # A ridge knows no bounds, but no impression is worth less than nothing.
             max(mean + self.radius * math.sqrt(square), 0.0) * self.scale,

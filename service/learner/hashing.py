@@ -14,9 +14,10 @@ from __future__ import annotations
 
 import math
 import struct
-from collections.abc import Callable, Iterable, Mapping
-from functools import lru_cache
+from collections.abc import Iterable, Mapping
+from functools import cache, lru_cache
 from hashlib import blake2b
+from itertools import chain
 
 import numpy as np
 
@@ -30,7 +31,7 @@ WEIGHT_MAX = 2**15 - 1
 NUMBER_MAX = 20.0  # Of the logarithm; a larger number says no more than this one.
 
 Feature = str | float | bool
-Token = tuple[bytes, float]
+Placed = tuple[int, int]
 Hashed = tuple[tuple[int, int], ...]
 
 _ENTRY = struct.Struct(">Bh")
@@ -53,55 +54,79 @@ def hashed(features: Mapping[str, Feature], key: bytes) -> Hashed:
     Raises:
         BadFeatures: A number is not finite.
     """
-    return scattered(tokens(features), lambda token: _aimed(token, key))
+    placed = [_placed(name, value, key) for name, value in features.items()]
+    # The constant, which every impression has.
+    return summed([_aimed(b"c", PARTS, key), *placed])
 
 
-def tokens(features: Mapping[str, Feature]) -> list[Token]:
-    """The constant, which every impression has, and one token for each feature."""
-    return [(b"c", 1.0), *(_token(name, value) for name, value in sorted(features.items()))]
-
-
-def _token(name: str, value: Feature) -> Token:
+# The same few words come with nearly every bid; what is counted on is the hash, not the memory.
+# By type as well, since True equals 1 and is another feature.
+@lru_cache(maxsize=16_384, typed=True)
+def _placed(name: str, value: Feature, key: bytes) -> Placed:
+    """Where one feature goes, and with what signed weight."""
     # The zero byte keeps a name ending in x apart from a value that begins with it.
     head = name.encode() + b"\0"
     # Asked first, since True is a number as well.
     if isinstance(value, bool):
-        return b"b" + head + (b"1" if value else b"0"), 1.0
+        return _aimed(b"b" + head + (b"1" if value else b"0"), PARTS, key)
     if isinstance(value, str):
-        return b"t" + head + value.encode(), 1.0
+        return _aimed(b"t" + head + value.encode(), PARTS, key)
     if not math.isfinite(value):
         raise BadFeatures("a number that is not finite")
-    return b"n" + head, math.copysign(min(math.log1p(abs(value)), NUMBER_MAX), value)
+    weight = math.copysign(min(math.log1p(abs(value)), NUMBER_MAX), value)
+    return _aimed(b"n" + head, round(weight * PARTS), key)
 
 
-# The same few words come with nearly every bid; what is counted on is the hash, not the memory.
+def _aimed(token: bytes, parts: int, key: bytes) -> Placed:
+    place, sign = _aim(token, key)
+    return place, sign * parts
+
+
+# Apart from the memory of features: numbers are many, their names few.
 @lru_cache(maxsize=16_384)
-def _aimed(token: bytes, key: bytes) -> tuple[int, int]:
+def _aim(token: bytes, key: bytes) -> tuple[int, int]:
     digest = blake2b(token, digest_size=8, key=key, person=b"features").digest()
     return digest[0] % PLACES, 1 if digest[1] & 1 else -1
 
 
-def scattered(weighed: Iterable[Token], aim: Callable[[bytes], tuple[int, int]]) -> Hashed:
-    """Add the signed weight of each token at its place."""
+def summed(placed: Iterable[Placed]) -> Hashed:
+    """Add the signed weights at each place; whole numbers, so their order is all one."""
     sums: dict[int, int] = {}
-    for token, weight in weighed:
-        place, sign = aim(token)
-        sums[place] = sums.get(place, 0) + sign * round(weight * PARTS)
-    cut = ((place, max(-WEIGHT_MAX, min(sums[place], WEIGHT_MAX))) for place in sorted(sums))
-    return tuple((place, weight) for place, weight in cut if weight)
+    for place, parts in placed:
+        sums[place] = sums.get(place, 0) + parts
+    return tuple(
+        [
+            (place, max(-WEIGHT_MAX, min(parts, WEIGHT_MAX)))
+            for place, parts in sorted(sums.items())
+            if parts
+        ]
+    )
+
+
+def folded(features: Hashed, size: int) -> list[tuple[int, float]]:
+    """What is not nought of 16, 32 or 64 numbers; a smaller size takes places modulo itself."""
+    sums: dict[int, int] = {}
+    for place, parts in features:
+        sums[place % size] = sums.get(place % size, 0) + parts
+    return [(place, parts / PARTS) for place, parts in sums.items() if parts]
 
 
 def dense(features: Hashed, size: int) -> Numbers:
-    """As a vector of 16, 32 or 64 numbers; a smaller one takes each place modulo its size."""
+    """As a vector of 16, 32 or 64 numbers."""
     vector = np.zeros(size)
-    for place, weight in features:
-        vector[place % size] += weight / PARTS
+    for place, weight in folded(features, size):
+        vector[place] = weight
     return double(vector)
 
 
 def to_bytes(features: Hashed) -> bytes:
     """Three bytes for each place that is not nought."""
-    return b"".join(_ENTRY.pack(place, weight) for place, weight in features)
+    return _entries(len(features)).pack(*chain.from_iterable(features))
+
+
+@cache
+def _entries(count: int) -> struct.Struct:
+    return struct.Struct(">" + count * "Bh")
 
 
 def from_bytes(packed: bytes) -> Hashed:

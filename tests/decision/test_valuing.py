@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import time
 from base64 import b64encode
 from dataclasses import replace
@@ -67,6 +68,29 @@ def test_the_price_is_the_top_of_the_ellipsoid() -> None:
     assert priced(snapshot, PHONE) == pytest.approx(expected, abs=2)
     assert EVENT < priced(snapshot, PHONE) < EVENT + CAP // 5
     assert priced(snapshot, DESK) < CAP // 5
+
+
+@pytest.mark.parametrize("size", [16, 32, 64])
+def test_few_sums_are_the_products_of_whole_matrices(size: int) -> None:
+    """To the last bits, also where places fall together; and the prices are equal nanos."""
+    rng = np.random.default_rng(size)
+    sums = Sums.from_bytes(made("linear", [], {"dimensions": size}).memory.part("linear"), size)
+    ridge = linear.learn(
+        sums.ridge(1.0, CEILING),
+        [linear.Lesson(rng.normal(size=size), rng.random()) for _ in range(300)],
+    )
+    known = ridge.weights.tolist(), ridge.inverse.tolist()
+    features = ByFeatures(*known, 1.75, ridge.lessons, float(CEILING))
+    for _ in range(500):
+        places = sorted(rng.choice(64, size=rng.integers(1, 33), replace=False).tolist())
+        hashed = tuple((place, int(rng.integers(-900, 900)) or 1) for place in places)
+        x = hashing.dense(hashed, size)
+        mean, width = float(x @ ridge.weights), math.sqrt(float(x @ ridge.inverse @ x))
+        value, believed = features.value(hashed) or (-1.0, -1.0)
+
+        assert value == pytest.approx(max(mean + 1.75 * width, 0.0) * CEILING, rel=1e-11)
+        assert believed == pytest.approx(max(mean, 0.0) * CEILING, rel=1e-11, abs=1e-6)
+        assert math.floor(value) == math.floor(max(mean + 1.75 * width, 0.0) * CEILING)
 
 
 def test_unknown_missing_and_no_features_are_ordinary() -> None:
@@ -230,7 +254,7 @@ def test_nothing_learnt_is_the_ellipsoid_before_the_first_lesson() -> None:
     found = ByFeatures.of(Memory.fresh(), made("linear", []).terms)
 
     assert found.radius == pytest.approx(0.5 * np.sqrt(2 * np.log(20)) + 1.0, rel=1e-12)
-    assert not found.weights.any()
+    assert not any(found.weights)
 
 
 _TICK = {"rounds": 0, "under_floor": 0}

@@ -7,6 +7,8 @@ hash and sign functions, here as well.
 
 from __future__ import annotations
 
+import math
+from collections import Counter
 from hashlib import blake2b
 from itertools import product
 
@@ -31,11 +33,10 @@ FEATURES = some.dictionaries(
 @pytest.mark.parametrize(("size", "variance"), [(2, 2.0), (4, 1.0)])
 def test_all_hash_and_sign_functions(size: int, variance: float) -> None:
     """x = x' = (1, 1): the mean of the inner product is 2, its variance 4 / m."""
-    tokens, found = [(b"a", 1.0), (b"b", 1.0)], []
+    found = []
     for places in product(range(size), repeat=2):
-        for signs in product((1, -1), repeat=2):
-            aims = dict(zip((b"a", b"b"), zip(places, signs, strict=True), strict=True))
-            vector = hashing.dense(hashing.scattered(tokens, aims.__getitem__), 16)
+        for signs in product((PARTS, -PARTS), repeat=2):
+            vector = hashing.dense(hashing.summed(zip(places, signs, strict=True)), 16)
             found.append(float(vector @ vector))
     assert float(np.mean(found)) == 2.0
     assert float(np.var(found)) == variance
@@ -67,6 +68,27 @@ def test_the_hash_is_the_documented_one() -> None:
             digest = blake2b(one, digest_size=8, key=KEY, person=b"features").digest()
             expected[digest[0] % 64] += (1 if digest[1] & 1 else -1) * round(weighs * PARTS) / PARTS
         assert hashing.dense(hashing.hashed(features, KEY), 64) == pytest.approx(expected, abs=0)
+
+
+@given(FEATURES)
+def test_hashing_is_the_sum_over_tokens_in_any_order(features: dict[str, Feature]) -> None:
+    """Token by token from the text, without a memory, in the order of names."""
+    tokens = [(b"c", 1.0)]
+    for name, value in sorted(features.items()):
+        if isinstance(value, bool):
+            tokens.append((b"b" + name.encode() + b"\0" + str(int(value)).encode(), 1.0))
+        elif isinstance(value, str):
+            tokens.append((b"t" + name.encode() + b"\0" + value.encode(), 1.0))
+        else:
+            weight = math.copysign(min(math.log1p(abs(value)), hashing.NUMBER_MAX), value)
+            tokens.append((b"n" + name.encode() + b"\0", weight))
+    sums = Counter[int]()
+    for token, weight in tokens:
+        digest = blake2b(token, digest_size=8, key=KEY, person=b"features").digest()
+        sums[digest[0] % 64] += (1 if digest[1] & 1 else -1) * round(weight * PARTS)
+    most = hashing.WEIGHT_MAX
+    expected = [(place, min(max(sums[place], -most), most)) for place in sorted(sums)]
+    assert hashing.hashed(features, KEY) == tuple(pair for pair in expected if pair[1])
 
 
 def test_the_hash_never_changes() -> None:
