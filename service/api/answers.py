@@ -18,6 +18,16 @@ from service.errors import Refusal
 from service.feedback import Receipt
 from service.operating import View
 
+_JSON = (b"content-type", b"application/json")
+
+
+class _Quick(Response):
+    """Bytes of JSON; its two headers are written here, which the framework does in many steps."""
+
+    def __init__(self, body: bytes) -> None:
+        self.status_code, self.background, self.body = 200, None, body
+        self.raw_headers = [(b"content-length", b"%d" % len(body)), _JSON]
+
 
 def json_answer(
     members: object, status_code: int = 200, headers: Mapping[str, str] | None = None
@@ -33,7 +43,7 @@ def json_answer(
 
 def quick_answer(members: object) -> Response:
     """As `json_answer`, a few times as fast, for answers of our own small numbers and texts."""
-    return Response(orjson.dumps(members), media_type="application/json")
+    return _Quick(orjson.dumps(members))
 
 
 def bid(answer: Answer) -> dict[str, object]:

@@ -26,9 +26,10 @@ async def post_bid(request: Request) -> Response:
     """Answer one opportunity with a bid or a pass."""
     # Taken before the key is looked up, for the caller's deadline runs meanwhile.
     arrived = time.monotonic()
-    await require(request, "bid")
+    key = await require(request, "bid")
     opportunity, unused = read_bid(await read_object(request, edge(request).body_bytes_max))
-    reach(request, opportunity.line_item, *opportunity.line_items)
+    if key.line_items is not None:
+        reach(request, opportunity.line_item, *opportunity.line_items)
     answer = await stories(request).bidder.bid(opportunity, arrived)
     return answers.quick_answer(answers.with_warnings(answers.bid(answer), unused))
 

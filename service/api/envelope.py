@@ -11,6 +11,8 @@ from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from service import request_ids
 
+Pair = tuple[bytes, bytes]
+
 _HEADER = request_ids.HEADER.lower().encode()
 
 
@@ -30,23 +32,28 @@ class Envelope:
         if scope["type"] != "http":
             await self._app(scope, receive, send)
             return
-        name = request_ids.begin(_offered(scope["headers"]))
+        name = begun(scope["headers"])
         answered = self._answered
 
         def send_named(message: Message) -> Awaitable[None]:
             if message["type"] == "http.response.start":
-                # A problem names it by itself.
-                kept = [pair for pair in message["headers"] if pair[0] != _HEADER]
-                message["headers"] = [*kept, (_HEADER, name.encode())]
+                message["headers"] = named(message["headers"], name)
                 answered(message["status"])
             return send(message)
 
         await self._app(scope, receive, send_named)
 
 
-def _offered(headers: Iterable[tuple[bytes, bytes]]) -> str | None:
-    """The id that the request came with; read from the bytes, since every bid passes here."""
+def begun(headers: Iterable[Pair]) -> bytes:
+    """Name the request at hand: as its headers offer, if that is sane, else anew."""
+    # Read from the bytes, since every bid passes here.
     for name, value in headers:
         if name == _HEADER:
-            return value.decode("latin-1")
-    return None
+            return request_ids.begin(value.decode("latin-1")).encode()
+    return request_ids.begin(None).encode()
+
+
+def named(headers: Iterable[Pair], name: bytes) -> list[Pair]:
+    """The headers of an answer with the name of its request."""
+    # A problem names it by itself.
+    return [*[pair for pair in headers if pair[0] != _HEADER], (_HEADER, name)]

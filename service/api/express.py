@@ -7,16 +7,18 @@ framework's own way.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Awaitable, Callable
 
 from fastapi import FastAPI
 from starlette.middleware.errors import ServerErrorMiddleware
-from starlette.middleware.exceptions import ExceptionMiddleware
 from starlette.requests import Request
+from starlette.responses import Response
 from starlette.types import ASGIApp, Receive, Scope, Send
 
 from service.api.direct import Direct
-from service.api.envelope import Envelope
+from service.api.envelope import begun, named
+
+Handler = Callable[[Request, Exception], Awaitable[Response]]
 
 PATHS = ("/v1/bids", "/v1/bids/batch", "/v1/outcomes")
 
@@ -40,24 +42,36 @@ class Service(FastAPI):
 
 def hang(app: Service, answered: Callable[[int], None]) -> None:
     """Give the app its express routes, once its routes and its handlers of errors are there."""
-    handlers = dict(app.exception_handlers)
+    handlers: dict[type[Exception], Handler] = dict(app.exception_handlers)
     unexpected = handlers.pop(Exception, None)
     app.express = {
-        route.path: ServerErrorMiddleware(
-            Envelope(ExceptionMiddleware(_leaf(route), handlers=handlers), answered=answered),
-            handler=unexpected,
-        )
+        route.path: ServerErrorMiddleware(_leaf(route, handlers, answered), handler=unexpected)
         for route in app.routes
         if isinstance(route, Direct) and route.path in PATHS
     }
 
 
-def _leaf(route: Direct) -> ASGIApp:
+def _leaf(
+    route: Direct, handlers: dict[type[Exception], Handler], answered: Callable[[int], None]
+) -> ASGIApp:
+    foreseen = tuple(handlers)
+
     async def leaf(scope: Scope, receive: Receive, send: Send) -> None:
         # Refusals are counted under the route as it is written.
         scope["route"] = route
-        scope["path_params"] = {}
-        response = await route.endpoint(Request(scope, receive, send))
-        await response(scope, receive, send)
+        name = begun(scope["headers"])
+        request = Request(scope, receive)
+        try:
+            response = await route.endpoint(request)
+        except foreseen as error:
+            handler = next(handlers[kind] for kind in type(error).__mro__ if kind in handlers)
+            response = await handler(request, error)
+        headers = named(response.raw_headers, name)
+        answered(response.status_code)
+        # Told by hand, as these answers are whole: they neither stream nor leave work behind.
+        await send(
+            {"type": "http.response.start", "status": response.status_code, "headers": headers}
+        )
+        await send({"type": "http.response.body", "body": response.body})
 
     return leaf

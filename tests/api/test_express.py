@@ -103,6 +103,42 @@ async def test_every_express_path_is_there(
     assert set(app.express) == set(PATHS)
 
 
+async def test_pieces_and_a_hang_up_end_alike(
+    both: tuple[httpx.AsyncClient, httpx.AsyncClient],
+) -> None:
+    """A body in two pieces is one body; one that ends early is told to be so."""
+    half, rest = b'{"line_item": "nob', b'ody"}'
+    gone = {"type": "http.disconnect"}
+    whole = [_piece(half, more=True), _piece(rest, more=False)]
+    for client in both:
+        transport = client._transport
+        assert isinstance(transport, httpx.ASGITransport)
+        bearer = client.headers["Authorization"]
+        assert await told(transport.app, bearer, whole) == 404
+        assert await told(transport.app, bearer, [whole[0], gone]) == 400
+
+
+def _piece(body: bytes, *, more: bool) -> dict[str, Any]:
+    return {"type": "http.request", "body": body, "more_body": more}
+
+
+async def told(app: Any, bearer: str, messages: list[dict[str, Any]]) -> int:
+    """The status after these messages from the socket."""
+    coming, answers = iter(messages), list[dict[str, Any]]()
+
+    async def receive() -> dict[str, Any]:
+        return next(coming)
+
+    async def send(message: dict[str, Any]) -> None:
+        answers.append(message)
+
+    names = {"method": "POST", "path": "/v1/bids", "raw_path": b"/v1/bids", "root_path": ""}
+    headers = [(b"authorization", bearer.encode())]
+    scope = {"type": "http", "query_string": b"", "headers": headers, **names}
+    await app(scope, receive, send)
+    return int(answers[0]["status"])
+
+
 async def test_an_error_nobody_expected_is_a_problem_too(
     both: tuple[httpx.AsyncClient, httpx.AsyncClient], monkeypatch: pytest.MonkeyPatch
 ) -> None:
