@@ -92,24 +92,25 @@ class Bidder:
             Malformed: A fixed-price sale without its price, or one the method cannot bid in.
             StoreAway: An unknown line item could not be looked up.
         """
+        until = arrived + self._allowed_s(opportunity)
+        late = self._clocks.lag_s() > until - arrived
         with spans.span("bid") as span:
-            answer = await self._answer(opportunity, arrived)
-            spans.note(span, method=answer.method, set_by=answer.set_by, reason=answer.reason)
+            answer = self._at_once(opportunity, until, late=late)
+            if answer is None:
+                answer = await self._in_time(opportunity, until, late=late)
+            if span is not None:
+                spans.note(span, method=answer.method, set_by=answer.set_by, reason=answer.reason)
         self._tally.took(time.monotonic() - arrived)
         return answer
 
-    async def _answer(self, opportunity: Opportunity, arrived: float) -> Answer:
-        until = arrived + self._allowed_s(opportunity)
-        late = self._clocks.lag_s() > until - arrived
+    async def _in_time(self, opportunity: Opportunity, until: float, *, late: bool) -> Answer:
+        """The answer to one that may have to wait."""
         if opportunity.line_items:
             return await self._bid_best(opportunity, until, late=late)
-        weighed = self._at_once(opportunity, until, late=late)
-        if weighed is None:
-            found = await self._prepared(opportunity, until, late=late)
-            if isinstance(found, Answer):
-                return self._logged(found, opportunity)
-            weighed = self._weighed(found, opportunity, until, late=late)
-        return self._logged(self._answered(weighed, opportunity), opportunity)
+        found = await self._prepared(opportunity, until, late=late)
+        if isinstance(found, Item):
+            found = self._answered(self._weighed(found, opportunity, until, late=late), opportunity)
+        return self._logged(found, opportunity)
 
     async def _bid_best(self, opportunity: Opportunity, until: float, *, late: bool) -> Answer:
         """
@@ -142,19 +143,20 @@ class Bidder:
             self._logged(answer, one)
         return next((answer for answer in answers if answer.bid is not None), answers[0])
 
-    def _at_once(
-        self, opportunity: Opportunity, until: float, *, late: bool
-    ) -> _Offer | Answer | None:
-        """What is answered where nothing needs waiting for: most bids find money for any price."""
+    def _at_once(self, opportunity: Opportunity, until: float, *, late: bool) -> Answer | None:
+        """The answer where nothing needs waiting for: most bids find money for any price."""
         item = self._catalog.get(opportunity.line_item)
-        if item is None or opportunity.test or late or time.monotonic() > until:
+        if item is None or opportunity.test or opportunity.line_items or late:
+            return None
+        if time.monotonic() > until:
             return None
         held, wall_ms = self._leasing.hand.usable(item.id, self._leasing.clock()), _wall_ms()
         if held is None or held.free < item.limits.cap or shut(item.limits, wall_ms) is not None:
             return None
         _check_sale(item, opportunity)
         self._leasing.refresh(held)
-        return self._offered(item, opportunity, held, wall_ms)
+        offer = self._offered(item, opportunity, held, wall_ms)
+        return self._logged(self._answered(offer, opportunity), opportunity)
 
     async def _prepared(
         self, opportunity: Opportunity, until: float, *, late: bool
@@ -325,8 +327,7 @@ class Bidder:
         """With hashed features, where the line item learns of them; else none are kept."""
         if not METHODS[item.terms.method].by_features:
             return opportunity
-        hashed = hashing.hashed(opportunity.features, self._feature_key)
-        return opportunity._replace(hashed=hashed)
+        return opportunity.seen_as(hashing.hashed(opportunity.features, self._feature_key))
 
     def _allowed_s(self, opportunity: Opportunity) -> float:
         asked = opportunity.deadline_ms

@@ -89,13 +89,17 @@ def priced(
     fees, (opportunity, asked, scale) = limits.fees, put
     offered = gross(opportunity, fees)
     sale = sale_of(offered, rule.terms.auction)
-    proposed = rule.propose(offered, generator)
+    proposed = rule.propose(offered, generator, sale)
     if isinstance(proposed, Passed):
         return Unpriced(proposed.reason, sale)
     said = proposed.set_by if set_by is None else set_by
     cleared = clear(proposed.price, said, limits, sale.floor, free)
     if isinstance(cleared, str):
         return Unpriced(cleared, sale, cut=True)
+    # Shaded prices are below what the impression is worth; comparisons need the latter.
+    worth = proposed.price if proposed.value is None else proposed.value
+    if scale is PLAIN and fees is NONE:
+        return Priced(sale, cleared, worth, proposed.price, cleared.price)
     sent = leaving(scale, fees.net(cleared.price), asked, fixed=sale.auction == FIXED)
     # A nano here may be less than the least price of another currency.
     if sent <= 0:
@@ -103,8 +107,6 @@ def priced(
     # Between two currencies a bid at the floor may round to just below it.
     if scale.worth(sent) < opportunity.floor:
         return Unpriced("under_floor", sale)
-    # Shaded prices are below what the impression is worth; comparisons need the latter.
-    worth = proposed.price if proposed.value is None else proposed.value
     # Held is what leaves, turned back: rounding has made it a little less than was cleared.
     held = Cleared(fees.gross(scale.held(sent)), cleared.set_by)
     return Priced(sale, held, worth, proposed.price, sent)

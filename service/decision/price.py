@@ -88,17 +88,19 @@ class Ready:
     valuing: Valuing | None = None
     hold: brakes.Brakes = brakes.NO_BRAKES
 
-    def propose(self, opportunity: Opportunity, generator: Generator) -> Proposal | Passed:
+    def propose(
+        self, opportunity: Opportunity, generator: Generator, sale: Sale | None = None
+    ) -> Proposal | Passed:
         """
         Name a price for one opportunity.
 
         Args:
             opportunity: What is for sale; its floor is the guard's business.
             generator: The only source of chance, for methods that draw.
+            sale: What the opportunity stands for, where the caller knows it already.
         """
-        return self._sold(
-            self._valued(opportunity, generator), sale_of(opportunity, self.terms.auction)
-        )
+        sale = sale or sale_of(opportunity, self.terms.auction)
+        return self._sold(self._valued(opportunity, generator), sale)
 
     @property
     def usual(self) -> Proposal | Passed:
