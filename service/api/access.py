@@ -46,7 +46,7 @@ async def require(request: Request, scope: str, *, of_all: bool = False) -> Call
         note_refusal(request, key, "key_is_limited")
         raise Forbidden("key_is_limited", "The key is limited to some line items.")
     # Whoever reads a line item's name later holds it against this key.
-    request.state.caller = key
+    request.scope.setdefault("state", {})["caller"] = key
     return key
 
 

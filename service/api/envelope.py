@@ -10,6 +10,7 @@ from collections.abc import Awaitable, Callable, Iterable
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from service import request_ids
+from service.api.raw import headers
 
 Pair = tuple[bytes, bytes]
 
@@ -32,7 +33,7 @@ class Envelope:
         if scope["type"] != "http":
             await self._app(scope, receive, send)
             return
-        name = begun(scope["headers"])
+        name = begun(scope)
         answered = self._answered
 
         def send_named(message: Message) -> Awaitable[None]:
@@ -44,16 +45,13 @@ class Envelope:
         await self._app(scope, receive, send_named)
 
 
-def begun(headers: Iterable[Pair]) -> bytes:
+def begun(scope: Scope) -> bytes:
     """Name the request at hand: as its headers offer, if that is sane, else anew."""
-    # Read from the bytes, since every bid passes here.
-    for name, value in headers:
-        if name == _HEADER:
-            return request_ids.begin(value.decode("latin-1")).encode()
-    return request_ids.begin(None).encode()
+    offered = headers(scope).get(_HEADER)
+    return request_ids.begin(None if offered is None else offered.decode("latin-1")).encode()
 
 
-def named(headers: Iterable[Pair], name: bytes) -> list[Pair]:
+def named(pairs: Iterable[Pair], name: bytes) -> list[Pair]:
     """The headers of an answer with the name of its request."""
     # A problem names it by itself.
-    return [*[pair for pair in headers if pair[0] != _HEADER], (_HEADER, name)]
+    return [*[pair for pair in pairs if pair[0] != _HEADER], (_HEADER, name)]

@@ -59,19 +59,17 @@ def _leaf(
     async def leaf(scope: Scope, receive: Receive, send: Send) -> None:
         # Refusals are counted under the route as it is written.
         scope["route"] = route
-        name = begun(scope["headers"])
+        name = begun(scope)
         request = Request(scope, receive)
         try:
             response = await route.endpoint(request)
         except foreseen as error:
             handler = next(handlers[kind] for kind in type(error).__mro__ if kind in handlers)
             response = await handler(request, error)
-        headers = named(response.raw_headers, name)
-        answered(response.status_code)
+        status, headers = response.status_code, named(response.raw_headers, name)
+        answered(status)
         # Told by hand, as these answers are whole: they neither stream nor leave work behind.
-        await send(
-            {"type": "http.response.start", "status": response.status_code, "headers": headers}
-        )
+        await send({"type": "http.response.start", "status": status, "headers": headers})
         await send({"type": "http.response.body", "body": response.body})
 
     return leaf

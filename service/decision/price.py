@@ -133,8 +133,10 @@ class Ready:
             if own is not None:
                 most = None if self.most is None else own.mean
                 return _proposal(self._held_back(own.value), most, self.terms, self.hold)
+        if not self.draws:
+            return self.answer
         draw, counts, terms = METHODS[self.terms.method].draw, self.counts, self.terms
-        if not self.draws or draw is None or counts is None or isinstance(self.answer, Passed):
+        if draw is None or counts is None or isinstance(self.answer, Passed):
             return self.answer
         value = float(draw(counts, terms, generator))
         return _proposal(self._held_back(value), self.most, self.terms, self.hold)

@@ -108,13 +108,17 @@ class TicketKeys:
     """The first key signs, all verify; a key is known by the first bytes of its hash."""
 
     def __init__(self, secrets: list[bytes]) -> None:
-        self._keys = {_key_id(secret): secret[:64] for secret in secrets}
+        # Each with its key taken in already, which every ticket would do anew.
+        self._macs = {
+            _key_id(secret): blake2b(key=secret[:64], digest_size=MAC_BYTES) for secret in secrets
+        }
         self._signing = _key_id(secrets[0])
 
     def sign(self, ticket: Ticket) -> str:
         """The text of a ticket."""
+        plain = ticket.scale is PLAIN or ticket.scale == PLAIN
         head = _HEAD.pack(
-            FORM if ticket.scale == PLAIN else SCALED_FORM,
+            FORM if plain else SCALED_FORM,
             self._signing,
             ticket.incarnation,
             ticket.slice,
@@ -129,8 +133,10 @@ class TicketKeys:
             | (TEST if ticket.test else 0)
             | (OF_CONTROL if ticket.arm == CONTROL else 0),
         )
-        body = head + _packed(ticket.line_item) + _packed(ticket.source) + _facts(ticket)
-        return _text(body + _mac(self._keys[self._signing], body))
+        body = head + _names(ticket.line_item, ticket.source) + _facts(ticket)
+        if not plain:
+            body += _packed(ticket.scale)
+        return _text(body + _mac(self._macs[self._signing], body))
 
     def verify(self, text: str) -> Ticket:
         """
@@ -144,30 +150,42 @@ class TicketKeys:
         if not known or _text(raw) != text:
             raise BadTicket("not a ticket")
         body, mac = raw[:-MAC_BYTES], raw[-MAC_BYTES:]
-        key = self._keys.get(body[1 : 1 + KEY_ID_BYTES])
+        keyed = self._macs.get(body[1 : 1 + KEY_ID_BYTES])
         # In constant time, so that a forger learns nothing from how long a refusal takes.
-        if key is None or not hmac.compare_digest(mac, _mac(key, body)):
+        if keyed is None or not hmac.compare_digest(mac, _mac(keyed, body)):
             raise BadTicket("not signed by us")
         return _unpacked(body)
 
 
 def _unpacked(body: bytes) -> Ticket:
-    fields = _HEAD.unpack_from(body)
     form, _, incarnation, slice_id, counter, price, floor, snapshot, day, share, flat, flags = (
-        fields
+        _HEAD.unpack_from(body)
     )
-    pieces = _pieces(body[_HEAD.size :], 5 if form == SCALED_FORM else 4)
-    line_item, source, features, hint = pieces[:4]
-    texts = line_item.decode("ascii"), source.decode("ascii")
-    place = (*texts, slice_id, counter, price, snapshot, day, incarnation)
+    named = _end(body, _end(body, _HEAD.size))
+    line_item, source = _names_of(body[_HEAD.size : named])
+    featured = _end(body, named)
+    hinted = _end(body, featured)
     auction = _BY_FLAG.get(flags & ~(TEST | OF_CONTROL))
     if auction is None:
         raise BadTicket("an unknown kind of auction")
-    said = int.from_bytes(hint) if hint else None
-    sold = (auction, Fees(share, flat) if share or flat else NONE)
-    arm = CONTROL if flags & OF_CONTROL else MAIN
-    scale = _scale(pieces[4]) if form == SCALED_FORM else PLAIN
-    return Ticket(*place, bool(flags & TEST), floor, *sold, features, said, arm, scale)
+    return Ticket(
+        line_item,
+        source,
+        slice_id,
+        counter,
+        price,
+        snapshot,
+        day,
+        incarnation,
+        bool(flags & TEST),
+        floor,
+        auction,
+        Fees(share, flat) if share or flat else NONE,
+        body[named + 1 : featured],
+        int.from_bytes(body[featured + 1 : hinted]) if body[featured] else None,
+        CONTROL if flags & OF_CONTROL else MAIN,
+        _scale(body[hinted + 1 :]) if form == SCALED_FORM else PLAIN,
+    )
 
 
 def _scale(packed: bytes) -> Scale:
@@ -175,39 +193,43 @@ def _scale(packed: bytes) -> Scale:
     return Scale(currency.rstrip(b"\0").decode("ascii"), rate, multiplier)
 
 
-def _pieces(packed: bytes, count: int) -> list[bytes]:
-    pieces, at = list[bytes](), 0
-    for _ in range(count):
-        end = at + 1 + packed[at]
-        pieces.append(packed[at + 1 : end])
-        at = end
-    return pieces
+def _packed(scale: Scale) -> bytes:
+    return _piece(_SCALE.pack(scale.currency.encode("ascii"), scale.rate, scale.multiplier))
 
 
 def _facts(ticket: Ticket) -> bytes:
     # Nothing of a kind is one zero byte, and most bids have nothing of any kind.
-    if not ticket.features and ticket.hint is None and ticket.scale is PLAIN:
+    if not ticket.features and ticket.hint is None:
         return b"\0\0"
     hint = b"" if ticket.hint is None else ticket.hint.to_bytes(HINT_BYTES)
-    facts = _piece(ticket.features) + _piece(hint)
-    if ticket.scale == PLAIN:
-        return facts
-    scale = ticket.scale
-    packed = _SCALE.pack(scale.currency.encode("ascii"), scale.rate, scale.multiplier)
-    return facts + _piece(packed)
+    return _piece(ticket.features) + _piece(hint)
+
+
+# The same few names come with every ticket.
+@lru_cache(maxsize=4096)
+def _names(line_item: str, source: str) -> bytes:
+    return _piece(line_item.encode("ascii")) + _piece(source.encode("ascii"))
 
 
 @lru_cache(maxsize=4096)
-def _packed(text: str) -> bytes:
-    return _piece(text.encode("ascii"))
+def _names_of(packed: bytes) -> tuple[str, str]:
+    half = _end(packed, 0)
+    return packed[1:half].decode("ascii"), packed[half + 1 :].decode("ascii")
 
 
 def _piece(raw: bytes) -> bytes:
     return bytes([len(raw)]) + raw
 
 
-def _mac(key: bytes, body: bytes) -> bytes:
-    return blake2b(body, key=key, digest_size=MAC_BYTES).digest()
+def _end(body: bytes, begin: int) -> int:
+    """Where the piece that begins here ends."""
+    return begin + 1 + body[begin]
+
+
+def _mac(keyed: blake2b, body: bytes) -> bytes:
+    one = keyed.copy()
+    one.update(body)
+    return one.digest()
 
 
 def _key_id(secret: bytes) -> bytes:

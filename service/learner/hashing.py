@@ -94,20 +94,18 @@ def summed(placed: Iterable[Placed]) -> Hashed:
     sums: dict[int, int] = {}
     for place, parts in placed:
         sums[place] = sums.get(place, 0) + parts
-    return tuple(
-        [
-            (place, max(-WEIGHT_MAX, min(parts, WEIGHT_MAX)))
-            for place, parts in sorted(sums.items())
-            if parts
-        ]
-    )
+    # Nearly never is there anything to cut.
+    if not -WEIGHT_MAX <= min(sums.values()) <= max(sums.values()) <= WEIGHT_MAX:
+        sums = {place: max(-WEIGHT_MAX, min(sums[place], WEIGHT_MAX)) for place in sums}
+    return tuple([pair for pair in sorted(sums.items()) if pair[1]])
 
 
 def folded(features: Hashed, size: int) -> list[tuple[int, float]]:
     """What is not nought of 16, 32 or 64 numbers; a smaller size takes places modulo itself."""
     sums: dict[int, int] = {}
-    for place, parts in features:
-        sums[place % size] = sums.get(place % size, 0) + parts
+    for wide, parts in features:
+        place = wide % size
+        sums[place] = sums.get(place, 0) + parts
     return [(place, parts / PARTS) for place, parts in sums.items() if parts]
 
 
