@@ -2,17 +2,30 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping
-from typing import Annotated, Literal
+from typing import Annotated, Literal, TypeGuard
 
-from pydantic import Field, TypeAdapter, ValidationError
+from pydantic import Field
 
-from service.api.forms.fields import CapCpm, Features, FloorCpm, LineItemId, Printable, SeenValue
+from service import money
+from service.api.forms.features import features
+from service.api.forms.fields import (
+    ID,
+    PRINTABLE,
+    CapCpm,
+    Features,
+    FloorCpm,
+    LineItemId,
+    Printable,
+    SeenValue,
+)
 from service.api.forms.reading import OpenForm, at_most, bad_field, read, unknown_fields
 from service.decision.opportunity import NONE_SAID, Opportunity
 from service.errors import Refusal
 
-Deadline = Annotated[int, Field(ge=0, le=60_000, description="Milliseconds from arrival here.")]
+LONGEST_MS = 60_000
+Deadline = Annotated[int, Field(ge=0, le=LONGEST_MS, description="Milliseconds from arrival here.")]
 
 Competing = Annotated[
     list[LineItemId],
@@ -47,7 +60,11 @@ class BatchForm(OpenForm):
     deadline_ms: Deadline | None = None
 
 
-_FORMS = TypeAdapter(list[BidForm])
+# What nearly all opportunities say, and no more.
+_USUAL = {
+    *("line_item", "request_id", "source", "auction", "floor_cpm", "features", "value_hint"),
+    *("deadline_ms", "test"),
+}
 
 
 def read_bid(members: Mapping[str, object]) -> tuple[Opportunity, set[str]]:
@@ -58,8 +75,8 @@ def read_bid(members: Mapping[str, object]) -> tuple[Opportunity, set[str]]:
         Malformed: A field is not of its form.
         NotOffered: The opportunity asks for what this release does not do.
     """
-    form = read(BidForm, members)
-    return _opportunity(form, form.deadline_ms), _unused(form, members)
+    found = usual(members)
+    return by_form(members) if found is None else (found, set())
 
 
 def read_batch(
@@ -74,42 +91,73 @@ def read_batch(
     batch = read(BatchForm, members)
     at_most(rows_max, "opportunities", batch.opportunities)
     unused = unknown_fields(BatchForm, members)
-    return _rows(batch.opportunities, batch.deadline_ms, unused), unused
+    rows = [_row(row, batch.deadline_ms, unused) for row in batch.opportunities]
+    return rows, unused
 
 
-def _rows(
-    rows: list[object], deadline_ms: int | None, unused: set[str]
-) -> list[Opportunity | Refusal]:
-    try:
-        # All at once, which is quicker; nearly always every row is well.
-        forms = _FORMS.validate_python(rows)
-    except ValidationError:
-        return [_row_alone(row, deadline_ms, unused) for row in rows]
-    return [
-        _row(form, row, deadline_ms, unused)
-        for form, row in zip(forms, rows, strict=True)
-        if isinstance(row, dict)
-    ]
-
-
-def _row_alone(row: object, deadline_ms: int | None, unused: set[str]) -> Opportunity | Refusal:
+def _row(row: object, deadline_ms: int | None, unused: set[str]) -> Opportunity | Refusal:
     if not isinstance(row, dict):
         return bad_field("", "An opportunity must be an object.")
+    found = usual(row, deadline_ms)
+    if found is not None:
+        return found
     try:
-        form = read(BidForm, row)
+        opportunity, unknown = by_form(row, deadline_ms)
     except Refusal as refusal:
         return refusal
-    return _row(form, row, deadline_ms, unused)
+    unused |= unknown
+    return opportunity
 
 
-def _row(
-    form: BidForm, row: Mapping[str, object], deadline_ms: int | None, unused: set[str]
-) -> Opportunity | Refusal:
-    unused |= _unused(form, row)
+def by_form(
+    members: Mapping[str, object], batch_ms: int | None = None
+) -> tuple[Opportunity, set[str]]:
+    """As `read_bid`, of whatever there is; for a row with the deadline of its batch."""
+    form = read(BidForm, members)
+    deadline_ms = form.deadline_ms if batch_ms is None else batch_ms
+    return _opportunity(form, deadline_ms), _unused(form, members)
+
+
+def usual(members: Mapping[str, object], batch_ms: int | None = None) -> Opportunity | None:
+    """
+    One that says what nearly all say, in a third of the time that its form takes.
+
+    Args:
+        batch_ms: The deadline of its batch, which stands for its own.
+
+    Returns:
+        None for whatever else there is, and for what is unsound: the form says what is wrong.
+    """
+    if not members.keys() <= _USUAL:
+        return None
+    asked = members.get
+    name, request_id, source = asked("line_item"), asked("request_id"), asked("source", "default")
+    auction, deadline_ms, test = asked("auction"), asked("deadline_ms"), asked("test", False)
+    if not (
+        _is_text(name, ID)
+        and _is_text(source, PRINTABLE)
+        and (request_id is None or _is_text(request_id, PRINTABLE))
+        and (auction is None or auction == "second" or auction == "first")
+        and (deadline_ms is None or (type(deadline_ms) is int and 0 <= deadline_ms <= LONGEST_MS))
+        and isinstance(test, bool)
+    ):
+        return None
+    floor_cpm, hint, said = asked("floor_cpm"), asked("value_hint"), asked("features")
     try:
-        return _opportunity(form, form.deadline_ms if deadline_ms is None else deadline_ms)
-    except Refusal as refusal:
-        return refusal
+        floor = 0 if floor_cpm is None else money.price(floor_cpm, money.UP)
+        value = None if hint is None else money.nanos_rounded(hint, money.HALF_EVEN)
+        known = NONE_SAID if said is None else features(said)
+    except ValueError:
+        return None
+    # Below nothing, a floor is warned of and a hint refused.
+    if floor < 0 or (value is not None and value < 0):
+        return None
+    until_ms = deadline_ms if batch_ms is None else batch_ms
+    return Opportunity(name, request_id, source, floor, known, value, until_ms, test, auction)
+
+
+def _is_text(given: object, pattern: re.Pattern[str]) -> TypeGuard[str]:
+    return isinstance(given, str) and pattern.fullmatch(given) is not None
 
 
 def _opportunity(form: BidForm, deadline_ms: int | None) -> Opportunity:

@@ -3,15 +3,16 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from decimal import Decimal
 from typing import Any
 
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from service.api.body import parse_object
-from service.api.forms.bids import read_batch, read_bid
+from service.api.forms.bids import by_form, read_batch, read_bid, usual
 from service.api.forms.features import features
 from service.api.forms.fields import ID
 from service.decision.opportunity import Opportunity
@@ -117,6 +118,59 @@ def test_no_opportunity_fails_otherwise_than_by_a_refusal(members: dict[str, obj
     except Refusal:
         return
     assert ID.fullmatch(opportunity.line_item)
+
+
+def mostly(*sound: object, odd: Sequence[object]) -> st.SearchStrategy[object]:
+    """Sound more often than odd, or hardly any opportunity would be sound as a whole."""
+    return st.sampled_from([*sound] * 5 + [*odd])
+
+
+WORDS = ["x" * 65, "", "\u00e9", "a\n", "tab\t", None, True, 7]
+CENTS = st.decimals(-1, 10**10, allow_nan=False, places=7)
+SAID: st.SearchStrategy[dict[str, object]] = st.fixed_dictionaries(
+    {"line_item": mostly("a", "garden-1.B_2", odd=["a b", *WORDS])},
+    optional={
+        "request_id": mostly("op 1", "~", None, odd=WORDS),
+        "source": mostly("north-exchange", "a b", odd=WORDS),
+        "auction": mostly("first", "second", None, odd=["fixed", "third", 1, []]),
+        "floor_cpm": CENTS | mostly(0, 1, "0.4", None, odd=[-1, "1e3", True, [], Decimal("1e60")]),
+        "features": mostly(
+            None, {"hour": 13, "at": "lake", "gone": None}, {}, odd=[[], {"a": []}, {"a" * 65: 1}]
+        )
+        | st.dictionaries(st.text(max_size=3), ANYTHING, max_size=3),
+        "value_hint": mostly(None, 0, "0.002", Decimal("0.5"), odd=["-0.1", -1, 10**30, True]),
+        "deadline_ms": mostly(None, 0, 80, 60_000, odd=[60_001, -1, True, Decimal(5), "5"]),
+        "test": mostly(True, False, odd=[None, 0, "true"]),
+        "price_cpm": st.sampled_from([None, 1]),
+        "line_items": st.sampled_from([None, ["b"], []]),
+        "shiny": st.just(1),
+    },
+)
+
+
+@settings(max_examples=600)
+@given(SAID, st.sampled_from([None, 40]))
+def test_what_nearly_all_say_is_read_as_its_form_reads_it(
+    members: dict[str, object], batch_ms: int | None
+) -> None:
+    """The quick way takes neither more nor less than it should, and reads it alike."""
+    found = usual(members, batch_ms)
+    try:
+        opportunity, unused = by_form(members, batch_ms)
+    except Refusal:
+        assert found is None
+        return
+    more = {"price_cpm", "line_items", "shiny"} & members.keys() or opportunity.auction == "fixed"
+    assert found == (None if more or unused else opportunity)
+
+
+def test_what_nearly_all_say_goes_the_quick_way() -> None:
+    """The example of the contract does, with features and a hint too."""
+    said: dict[str, object] = {"line_item": "a", "request_id": "op-81f2", "source": "north"}
+    said |= {"auction": "second", "floor_cpm": Decimal("0.4"), "features": {"hour": 13}}
+    said |= {"value_hint": "0.002", "deadline_ms": 80, "test": False}
+    assert usual(said) == by_form(said)[0]
+    assert usual({"line_item": "a"}) == Opportunity("a")
 
 
 @given(ANYTHING)
