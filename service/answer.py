@@ -56,14 +56,14 @@ def decision(
     answer: Answer, opportunity: Opportunity, sale: Sale | None, wall_ms: int
 ) -> dict[str, Any]:
     """The row of the decision log that tells of an answer."""
-    draw = answer.draw or NOTHING
+    arm, arm_odds, odds = answer.draw or NOTHING
     return {
         "auction": (opportunity.auction or "") if sale is None else sale.auction,
         "floor_held": None if sale is None else sale.floor,
-        "arm": draw.arm,
+        "arm": arm,
         "held": answer.held,
-        "arm_odds": draw.arm_odds,
-        "odds": draw.odds,
+        "arm_odds": arm_odds,
+        "odds": odds,
         "at_ms": wall_ms,
         "line_item": answer.line_item,
         "ref": answer.ref,

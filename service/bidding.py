@@ -244,11 +244,12 @@ class Bidder:
         put = inside(opportunity, item.terms.currency, self._catalog.rates, wall_ms)
         if put is None:
             return _pass(opportunity, "no_rate")
-        seen = self._seen(item, put[0])
+        own, scale = put
+        seen = self._seen(item, own)
         plain, draw = drawn(item, seen, self._leasing.hand, self._feature_key)
         rule, set_by = (item.ready, None) if plain is None else (plain.ready, CONTROL)
         free = item.limits.cap if opportunity.test else held.free if held else 0
-        sold = Put(seen, opportunity, put[1])
+        sold = Put(seen, opportunity, scale)
         found = priced(rule, item.limits, sold, free, self._generator, set_by)
         if not isinstance(found, Priced):
             if found.cut:
@@ -257,7 +258,7 @@ class Bidder:
         # Of a price that the money cut nobody knows which one was drawn.
         if rule.law is not None and found.cleared.price == found.proposed:
             draw = draw._replace(odds=odds_of(rule, found.cleared.price))
-        return _Offer(item, found, held, seen.hashed, draw, sold.scale)
+        return _Offer(item, found, held, seen.hashed, draw, scale)
 
     def _refused(self, item: Item, opportunity: Opportunity, reason: str) -> Answer:
         if reason == "under_floor" and not opportunity.test:
@@ -280,14 +281,13 @@ class Bidder:
 
     def _commit(self, offer: _Offer, opportunity: Opportunity) -> Answer:
         """From here the price leaves: it is taken out of the slice, signed and answered."""
-        item, held = offer.item, offer.held
-        sale, cleared = offer.priced.sale, offer.priced.cleared
+        item, (sale, cleared, _, _, sent), held, hashed, draw, scale = offer
         # A test ticket must look like any other, but no slice and no money stand behind it.
         if held is None or opportunity.test:
             slice_id, counter, day = secrets.token_bytes(16), 0, 1
         else:
             slice_id, counter, day = held.id, held.take(cleared.price), held.day
-            if offer.draw.arm == CONTROL:
+            if draw.arm == CONTROL:
                 self._leasing.hand.by_control(item.id, cleared.price)
         ticket = Ticket(
             item.id,
@@ -302,24 +302,24 @@ class Bidder:
             sale.floor,
             sale.auction,
             item.limits.fees,
-            hashing.to_bytes(offer.hashed),
+            hashing.to_bytes(hashed) if hashed else b"",
             opportunity.value_hint,
-            offer.draw.arm,
-            offer.scale,
+            draw.arm,
+            scale,
         )
         return Answer(
             opportunity.request_id,
             item.id,
-            offer.priced.sent,
+            sent,
             None,
             self._keys.sign(ticket),
             ticket.ref,
-            item.terms.method if offer.draw.arm == MAIN else "flat",
+            item.terms.method if draw.arm == MAIN else "flat",
             cleared.set_by,
             item.snapshot,
             cleared.price,
-            offer.draw,
-            offer.scale.currency,
+            draw,
+            scale.currency,
             sale,
         )
 
