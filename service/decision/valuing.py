@@ -66,24 +66,25 @@ class ByFeatures:
 
     def value(self, hashed: hashing.Hashed) -> Valued | None:
         """Mean plus radius times width; None where features cancel out, and so say nothing."""
-        entries = hashing.folded(hashed, len(self.weights))
+        entries = list(hashing.folded(hashed, len(self.weights)).items())
         mean = square = 0.0
         # Few places are not nought: their sums cost less than products of whole matrices.
-        for count, (place, weight) in enumerate(entries):
+        for count, (place, parts) in enumerate(entries):
             row = self.inverse[place]
             # Every pair once and twice as much, for the matrix is symmetric.
             crossed = 0.0
             for other, by in entries[:count]:
                 crossed += row[other] * by
-            square += weight * (row[place] * weight + 2.0 * crossed)
-            mean += self.weights[place] * weight
+            square += parts * (row[place] * parts + 2.0 * crossed)
+            mean += self.weights[place] * parts
         # Features that share a dimension with opposite signs may leave a vector of nothing.
         if square <= 0.0:
             return None
+        unit = self.scale / hashing.PARTS
         return Valued(
             # A ridge knows no bounds, but no impression is worth less than nothing.
-            max(mean + self.radius * math.sqrt(square), 0.0) * self.scale,
-            max(mean, 0.0) * self.scale,
+            max(mean + self.radius * math.sqrt(square), 0.0) * unit,
+            max(mean, 0.0) * unit,
         )
 
 

@@ -100,20 +100,20 @@ def summed(placed: Iterable[Placed]) -> Hashed:
     return tuple([pair for pair in sorted(sums.items()) if pair[1]])
 
 
-def folded(features: Hashed, size: int) -> list[tuple[int, float]]:
-    """What is not nought of 16, 32 or 64 numbers; a smaller size takes places modulo itself."""
+def folded(features: Hashed, size: int) -> dict[int, int]:
+    """Parts of 2^-8 at each place of 16, 32 or 64; a smaller size takes places modulo itself."""
     sums: dict[int, int] = {}
     for wide, parts in features:
         place = wide % size
         sums[place] = sums.get(place, 0) + parts
-    return [(place, parts / PARTS) for place, parts in sums.items() if parts]
+    return sums
 
 
 def dense(features: Hashed, size: int) -> Numbers:
     """As a vector of 16, 32 or 64 numbers."""
     vector = np.zeros(size)
-    for place, weight in folded(features, size):
-        vector[place] = weight
+    for place, parts in folded(features, size).items():
+        vector[place] = parts / PARTS
     return double(vector)
 
 
