@@ -9,6 +9,7 @@ from __future__ import annotations
 import asyncio
 import secrets
 import time
+from collections.abc import Iterable
 from typing import NamedTuple
 
 import numpy
@@ -178,13 +179,18 @@ class Bidder:
         return self._commit(weighed, opportunity) if isinstance(weighed, _Offer) else weighed
 
     async def bid_batch(
-        self, opportunities: list[Opportunity], arrived: float
+        self, rows: Iterable[Opportunity | Refusal], arrived: float
     ) -> list[Answer | Refusal]:
-        """Answer many opportunities in order; an unknown line item spoils only its own row."""
+        """
+        Answer many opportunities in order; an unknown line item spoils only its own row.
+
+        Args:
+            rows: What was refused before stays in its place.
+        """
         answers: list[Answer | Refusal] = []
-        for opportunity in opportunities:
+        for row in rows:
             try:
-                answers.append(await self.bid(opportunity, arrived))
+                answers.append(row if isinstance(row, Refusal) else await self.bid(row, arrived))
             except Refusal as refusal:
                 answers.append(refusal)
             except StoreAway:

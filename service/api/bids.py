@@ -43,9 +43,7 @@ async def post_batch(request: Request) -> Response:
     rows, unused = read_batch(members, edge(request).batch_rows_max)
     if key.line_items is not None:
         rows = [_within_reach(request, row) for row in rows]
-    good = [row for row in rows if isinstance(row, Opportunity)]
-    priced = iter(await stories(request).bidder.bid_batch(good, arrived) if good else [])
-    results = [next(priced) if isinstance(row, Opportunity) else row for row in rows]
+    results = await stories(request).bidder.bid_batch(rows, arrived)
     written = [
         answers.bad_row(result) if isinstance(result, Refusal) else answers.bid(result)
         for result in results

@@ -38,16 +38,16 @@ class Bids:
         return Answer(opportunity.request_id, "a", 1_000_000, None, "t", "r", "flat", "value", 1)
 
     async def bid_batch(
-        self, opportunities: list[Opportunity], arrived: float
+        self, rows: list[Opportunity | Refusal], arrived: float
     ) -> list[Answer | Refusal]:
-        """A refusal in the place of what is unknown."""
-        rows: list[Answer | Refusal] = []
-        for opportunity in opportunities:
+        """A refusal in the place of what is unknown, or was refused before."""
+        answers: list[Answer | Refusal] = []
+        for row in rows:
             try:
-                rows.append(await self.bid(opportunity, arrived))
+                answers.append(row if isinstance(row, Refusal) else await self.bid(row, arrived))
             except Refusal as refusal:
-                rows.append(refusal)
-        return rows
+                answers.append(refusal)
+        return answers
 
 
 @dataclass
