@@ -66,17 +66,18 @@ class ByFeatures:
 
     def value(self, hashed: hashing.Hashed) -> Valued | None:
         """Mean plus radius times width; None where features cancel out, and so say nothing."""
-        entries = list(hashing.folded(hashed, len(self.weights)).items())
         mean = square = 0.0
+        before = list[tuple[int, int]]()
         # Few places are not nought: their sums cost less than products of whole matrices.
-        for count, (place, parts) in enumerate(entries):
+        for place, parts in hashing.folded(hashed, len(self.weights)).items():
             row = self.inverse[place]
             # Every pair once and twice as much, for the matrix is symmetric.
             crossed = 0.0
-            for other, by in entries[:count]:
+            for other, by in before:
                 crossed += row[other] * by
             square += parts * (row[place] * parts + 2.0 * crossed)
             mean += self.weights[place] * parts
+            before.append((place, parts))
         # Features that share a dimension with opposite signs may leave a vector of nothing.
         if square <= 0.0:
             return None
