@@ -15,8 +15,9 @@ from service.ledger.entries import Entry
 from service.store import epochs, lessons
 from service.store.books import Books
 from service.store.changes import SNAPSHOT, announce
-from service.store.database import Database, Writing, insert_many, locking
+from service.store.database import Database, Writing, locking
 from service.store.decisions import quarantine
+from service.store.driver import update_many
 from service.store.journal import note
 from service.store.learners import digest_of
 from service.store.leases import read_configs
@@ -155,21 +156,22 @@ def _turn(row: Any, page: Page, config: dict[str, Any], rules: _Rules) -> _Taugh
 
 def _keep(connection: Writing, taught: Mapping[str, _Taught], now_ms: int) -> None:
     """Write what was learnt, and tell the workers of what is published."""
-    learnt, published = [], []
+    learnt, published = list[dict[str, Any]](), list[dict[str, Any]]()
     for name, (_, seq, state, digest, public, checkpoint, law, poison, tries, _) in taught.items():
-        learnt.append((seq, state, poison, tries, name))
+        row = {"id": name, "seq": seq, "state": state, "digest": digest, "now": now_ms}
+        learnt.append({**row, "poison": poison, "tries": tries})
         if checkpoint:
-            row = {"id": name, "seq": seq, "state": state, "digest": digest, "now": now_ms}
             connection.execute(_CHECKPOINT, row)
         if public:
-            published.append((seq, state, digest, now_ms, name))
+            published.append(row)
         if law is not None:
             epochs.keep(connection, name, seq, law)
-    insert_many(connection, _LEARN, learnt)
-    insert_many(connection, _PUBLISH, published)
+    if learnt:
+        update_many(connection, _LEARN, learnt)
     # The change number last: its one row is what every writer waits for.
     if published:
-        announce(connection, SNAPSHOT, [row[-1] for row in published])
+        update_many(connection, _PUBLISH, published)
+        announce(connection, SNAPSHOT, [row["id"] for row in published])
 
 
 def _set_aside(connection: Writing, line_item: str, taught: _Taught, now: int) -> None:
@@ -185,7 +187,8 @@ def _set_aside(connection: Writing, line_item: str, taught: _Taught, now: int) -
     by_seq = books.accounts[line_item].seq
     lessons.cancel(connection, line_item, by_seq, ALL, [(taught.poison, taught.poison, ALL)])
     quarantine(connection, line_item, taught.error, {"event": "Lesson"}, now, taught.poison)
-    insert_many(connection, _LEARN, [(row.seq, bytes(row.working), 0, 0, line_item)])
+    unstuck = {"id": line_item, "seq": row.seq, "state": bytes(row.working)}
+    update_many(connection, _LEARN, [{**unstuck, "poison": 0, "tries": 0}])
     note(
         connection, wall_ms=now, actor="bidkeel", action="quarantine", line_item=line_item,
         reason="a lesson could not be learnt", detail=body,
@@ -197,10 +200,13 @@ _MINE = (
     "SELECT line_item, seq, working, digest, halted, stuck_seq, tries FROM learner"
     " WHERE line_item IN :ids ORDER BY line_item"
 )
-_LEARN = "UPDATE learner SET seq = ?, working = ?, stuck_seq = ?, tries = ? WHERE line_item = ?"
+_LEARN = (
+    "UPDATE learner SET seq = :seq, working = :state, stuck_seq = :poison, tries = :tries"
+    " WHERE line_item = :id"
+)
 _PUBLISH = (
-    "UPDATE learner SET snapshot = ?, state = ?, digest = ?, published_ms = ?, halted = 0"
-    " WHERE line_item = ?"
+    "UPDATE learner SET snapshot = :seq, state = :state, digest = :digest, published_ms = :now,"
+    " halted = 0 WHERE line_item = :id"
 )
 # A damaged one of the same seq is mended by the way.
 _CHECKPOINT = text(
