@@ -160,6 +160,12 @@ def _bench_store() -> ModuleType:
     return bench_store
 
 
+def _bench_workers() -> ModuleType:
+    from service.commands import bench_workers
+
+    return bench_workers
+
+
 def _bench_http() -> ModuleType:
     from service.commands import bench_http
 
@@ -239,6 +245,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "growth": ("see whether bids stay quick as line items and log grow", _bench_growth),
     "store": ("time what a bid's life costs in the database", _bench_store),
     "http": ("put one load on the service and on bare endpoints", _bench_http),
+    "workers": ("put one load on one worker and on two by turns", _bench_workers),
     "curve": ("learn win curves and first-price bids from real sealed bids", _bench_curve),
     "reads": ("time pages, tables and charts of a large log over HTTP", _bench_reads),
     "hindsight": ("see whether hindsight's intervals hold a known truth", _bench_hindsight),

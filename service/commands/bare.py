@@ -1,6 +1,6 @@
 """Bare endpoints with the shapes of ours and constant answers: what the frame itself costs.
 
-    python -m service.commands.bare PORT
+    python -m service.commands.bare PORT [WORKERS]
 
 Apart so that it shares no code with what it is compared with. Each path answers the same body in
 one of three ways: by the framework's own handling of bodies, from bytes by a validated model, and
@@ -116,8 +116,11 @@ def _answer(asked: Asked) -> Answered:
 
 if __name__ == "__main__":
     uvicorn.run(
-        create(),
+        # By name, since further processes have to find it for themselves.
+        "service.commands.bare:create",
+        factory=True,
         port=int(sys.argv[1]),
+        workers=int(sys.argv[2]) if len(sys.argv) > 2 else 1,
         loop="uvloop",
         http="httptools",
         access_log=False,

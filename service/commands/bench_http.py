@@ -3,38 +3,33 @@
 from __future__ import annotations
 
 import argparse
-import asyncio
-import itertools
-import json
 import statistics
-import sys
 import tempfile
-from collections.abc import Callable, Iterable, Iterator, Sequence
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
-from functools import partial
 from pathlib import Path
 
 from rich.console import Console
 
-from service.commands import bodies, duel, options, report
+from service.commands import bodies, contests, duel, figures, load, options, report
+from service.commands.contests import KINDS, Kind
 from service.commands.duel import Contest, Pair
+from service.commands.figures import Figure
 from service.commands.postgresql_process import PostgreSQLProcess
 
-SCALAR, COVARIATE = "bench-scalar", "bench-linear"
-SINGLE, LINEAR, BATCH, OUTCOMES = "bids, kl-ucbid", "bids, linear", "batches", "outcomes"
-HALF = "bids at half load"
-# Ours over the bare one's rate; for the one at an even rate the bare p99 over ours.
-TARGETS = {SINGLE: 0.90, LINEAR: 0.75, BATCH: 0.50, OUTCOMES: 0.35}
-WAIT_RATIO_MAX = 1.5
+Played = Mapping[str, Contest]
+_SHARES = ("half", "99")
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the command's options."""
+    parser.add_argument(
+        "--only", nargs="+", choices=KINDS, default=list(KINDS), help="kinds of traffic to play"
+    )
     parser.add_argument("--rounds", type=options.count, default=7, help="of each side, by turns")
-    parser.add_argument("--requests", type=options.count, default=8000, help="single bids a round")
-    kinds = ("sqlite", "postgresql")
-    parser.add_argument("--database", choices=kinds, default="sqlite", help="that the bids use")
-    parser.add_argument("--workers", type=options.count, default=1, help="processes that serve")
+    parser.add_argument("--requests", type=options.count, default=3000, help="single bids a round")
+    options.add_database(parser)
+    parser.add_argument("--workers", type=options.count, default=1, help="processes of each side")
     parser.add_argument("--json", action="store_true", help="print figures for a program")
 
 
@@ -45,131 +40,114 @@ def run(arguments: argparse.Namespace) -> int:
     Returns:
         0 when every answer was right, whatever the ratios; 3 when one was not.
     """
-    with tempfile.TemporaryDirectory() as folder, _settings(arguments) as settings:
-        contests = asyncio.run(_contests(Path(folder), settings, arguments))
+    with tempfile.TemporaryDirectory() as folder, _settings(arguments.database) as settings:
+        played = load.run(_played(Path(folder), settings, arguments))
     if arguments.json:
-        sys.stdout.write(json.dumps([duel.as_json(contest) for contest in contests]) + "\n")
+        figures.write(one for name in played for one in _figures(KINDS[name], played[name]))
     else:
-        _show(contests, arguments)
-    return 3 if any(side.wrong for contest in contests for side in contest.ours) else 0
+        _show(played, arguments)
+    sides = [side for contest in played.values() for side in contest.bare + contest.ours]
+    return 3 if any(side.wrong for side in sides) else 0
 
 
 @contextmanager
-def _settings(arguments: argparse.Namespace) -> Iterator[dict[str, str]]:
+def _settings(database: str) -> Iterator[dict[str, str]]:
     patience = {"BIDKEEL_DEADLINE_MS_MAX": str(bodies.PATIENT_MS)}
-    settings = {"BIDKEEL_WORKERS": str(arguments.workers), **patience}
-    if arguments.database == "sqlite":
-        yield settings
+    if database == "sqlite":
+        yield patience
         return
-    with PostgreSQLProcess() as database:
-        yield {**settings, "BIDKEEL_DATABASE_URL": database.url}
+    with PostgreSQLProcess() as server:
+        yield {**patience, "BIDKEEL_DATABASE_URL": server.url}
 
 
-async def _contests(
-    folder: Path, settings: dict[str, str], arguments: argparse.Namespace
-) -> list[Contest]:
-    async with Pair(folder, settings) as pair:
-        await pair.create(bodies.line_item(SCALAR, "kl-ucbid"))
-        await pair.create(bodies.line_item(COVARIATE, "linear"))
+async def _played(folder: Path, settings: dict[str, str], arguments: argparse.Namespace) -> Played:
+    rounds, requests = arguments.rounds, arguments.requests
+    found = dict[str, Contest]()
+    async with Pair(folder, settings, arguments.workers) as pair:
+        await contests.prepare(pair)
         with report.progress() as bar:
-            task = bar.add_task("Rounds", total=5 * (arguments.rounds + 1))
-            return await _played(pair, arguments, lambda: bar.advance(task))
+            task = bar.add_task("Rounds", total=len(arguments.only) * (rounds + 1))
+            for name in dict.fromkeys(arguments.only):
+                found[name] = await contests.play(
+                    pair, KINDS[name], rounds, requests, lambda: bar.advance(task)
+                )
+    return found
 
 
-async def _played(
-    pair: Pair, arguments: argparse.Namespace, on_round: Callable[[], None]
-) -> list[Contest]:
-    key, requests = pair.server.key, arguments.requests
-    calls = {
-        SINGLE: (bodies.bid(key, SCALAR), requests, 1),
-        LINEAR: (bodies.bid(key, COVARIATE, features=bodies.FEATURES), requests, 1),
-        BATCH: (bodies.batch(key, SCALAR), max(requests // 20, 1), bodies.BATCH_ROWS),
+def _figures(kind: Kind, contest: Contest) -> list[Figure]:
+    """The one with the aim first."""
+    half, last = ([getattr(side, f"wait_ms_{share}") for side in contest.ours] for share in _SHARES)
+    rate = [side.rate * contest.rows for side in contest.ours]
+    spent = {
+        "us of the bare endpoint": [side.processor_us for side in contest.bare],
+        "us of the workers": [side.processor_us for side in contest.ours],
+        "us of all processes of the service": [side.whole_us for side in contest.ours],
     }
-    contests = []
-    for name, (call, count, rows) in calls.items():
-        contest = Contest(name, rows)
-        await _rounds(pair, contest, partial(itertools.repeat, call, count), arguments, on_round)
-        contests.append(contest)
-    single = statistics.median(side.rate for side in contests[0].ours)
-    half = Contest(HALF)
-    steady = calls[SINGLE][0]
-    await _rounds(
-        *(pair, half, lambda: itertools.repeat(steady, requests), arguments, on_round), single / 2
-    )
-    told = Contest(OUTCOMES, bodies.BATCH_ROWS)
-    await _outcomes(pair, told, arguments, on_round)
-    return [*contests, half, told]
+    named = f"{contest.name}, "
+    return [
+        _judged(kind, contest),
+        figures.of_rounds(f"{named}p50", "ms", half),
+        figures.of_rounds(f"{named}p99", "ms", last),
+        figures.of_rounds(f"{named}bids and outcomes", "a second", rate),
+        *(
+            figures.of_rounds(f"{named}processor time of a request", unit, took)
+            for unit, took in spent.items()
+        ),
+    ]
 
 
-async def _rounds(
-    pair: Pair,
-    contest: Contest,
-    requests: Callable[[], Iterable[bytes]],
-    arguments: argparse.Namespace,
-    on_round: Callable[[], None],
-    rate: float | None = None,
-) -> None:
-    # The first round warms both sides and lets slices grow; it does not count.
-    await pair.round(Contest("warm"), requests, rate)
-    on_round()
-    for _ in range(arguments.rounds):
-        await pair.round(contest, requests, rate)
-        on_round()
+def _judged(kind: Kind, contest: Contest) -> Figure:
+    if kind.even:
+        name = f"{contest.name}, p99 over the bare one's"
+        return figures.of_rounds(name, "times", contest.wait_ratios, kind.aim)
+    name = f"{contest.name}, rate over the bare one's"
+    return figures.of_rounds(name, "times", contest.ratios, kind.aim, at_least=True)
 
 
-async def _outcomes(
-    pair: Pair, contest: Contest, arguments: argparse.Namespace, on_round: Callable[[], None]
-) -> None:
-    """Rounds of outcomes, each of tickets that were never told of before."""
-    count = max(arguments.requests // 40, 1)
-    for number in range(arguments.rounds + 1):
-        tickets = await pair.tickets(SCALAR, count * bodies.BATCH_ROWS)
-        calls = [
-            bodies.outcomes(pair.server.key, tickets[at : at + bodies.BATCH_ROWS])
-            for at in range(0, len(tickets), bodies.BATCH_ROWS)
-        ]
-        await pair.round(contest if number else Contest("warm"), partial(iter, calls))
-        on_round()
-
-
-def _show(contests: Sequence[Contest], arguments: argparse.Namespace) -> None:
-    rows = {
-        f"{contest.name}, {contest.rows} a request": (
-            f"{contest.ratio:.2f}",
-            duel.spread(contest.ratios),
-            f"{TARGETS[contest.name]:.2f}" if contest.name in TARGETS else "",
-            f"{contest.rows_rate:,.0f}",
-            f"{_median(contest, 'processor_us', 'bare'):,.0f}",
-            f"{_median(contest, 'processor_us', 'ours'):,.0f}",
-            f"{_waits(contest, 'bare')}",
-            f"{_waits(contest, 'ours')}",
-            f"{sum(side.marked for side in contest.ours):,}",
-        )
-        for contest in contests
-    }
-    heads = ["ratio", "from, to", "aim", "rows a second", "bare us", "ours us"]
-    heads += ["bare p50, p99 ms", "ours p50, p99 ms", "passes"]
+def _show(played: Played, arguments: argparse.Namespace) -> None:
     title = (
         f"{arguments.database}, {arguments.workers} at work, {duel.CONNECTIONS} connections, "
-        f"{arguments.rounds} rounds by turns; us: processor time for a request"
+        f"{arguments.rounds} rounds by turns"
     )
-    console = Console(width=150)
+    heads = ["ratio", "from, to", "aim", "rows a second", "passes"]
+    rows = {
+        f"{contest.name}, {contest.rows:g} a request": _cells(KINDS[name], contest)
+        for name, contest in played.items()
+    }
+    console = Console(width=figures.WIDTH)
     console.print(report.table(title, heads, rows))
-    half = next(contest for contest in contests if contest.name == HALF)
-    pairs = zip(half.ours, half.bare, strict=True)
-    longer = [our.wait_ms_99 / bare.wait_ms_99 for our, bare in pairs]
+    heads = ["bare us", "ours us", "with clerk us"]
+    heads += ["bare p50 ms", "ours p50 ms", "bare p99 ms", "ours p99 ms"]
+    costs = {contest.name: _costs(contest) for contest in played.values()}
+    console.print(report.table("Medians; us: processor time for a request", heads, costs))
     console.print(
-        f"p99 at half load is {statistics.median(longer):.2f} times the bare one's "
-        f"({duel.spread(longer)}); the aim is at most {WAIT_RATIO_MAX}."
+        "Ratio: our rate over the bare one's; at half load our p99 over the bare one's. In mixed "
+        "traffic 17 of 20 requests are single bids, two batches of 20, and one tells of 20 bids.",
+        highlight=False,
     )
+
+
+def _cells(kind: Kind, contest: Contest) -> tuple[str, ...]:
+    judged = _judged(kind, contest)
+    ends = judged.spread or (judged.figure, judged.figure)
+    return (
+        f"{judged.figure:.2f}",
+        duel.spread(ends),
+        "" if kind.aim is None else f"at {'most' if kind.even else 'least'} {kind.aim:g}",
+        f"{contest.rows_rate:,.0f}",
+        f"{sum(side.marked for side in contest.ours):,}",
+    )
+
+
+def _costs(contest: Contest) -> list[str]:
+    spent = (("processor_us", "bare"), ("processor_us", "ours"), ("whole_us", "ours"))
+    waits = [(f"wait_ms_{share}", side) for share in _SHARES for side in ("bare", "ours")]
+    return [
+        *(f"{_median(contest, member, side):,.0f}" for member, side in spent),
+        *(f"{_median(contest, member, side):.2f}" for member, side in waits),
+    ]
 
 
 def _median(contest: Contest, member: str, side: str) -> float:
     found: list[float] = [getattr(one, member) for one in getattr(contest, side)]
     return statistics.median(found)
-
-
-def _waits(contest: Contest, side: str) -> str:
-    return (
-        f"{_median(contest, 'wait_ms_half', side):.2f}, {_median(contest, 'wait_ms_99', side):.2f}"
-    )

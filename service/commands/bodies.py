@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 from service.commands.load import post
 
 BATCH_ROWS = 100
 PATIENT_MS = 5000
+# In the mix: bids of a batch, outcomes of a call, calls of a turn, bids and outcomes of a turn.
+MIX_ROWS, MIX_TOLD, MIX_CALLS = 20, 20, 20
+MIX_TURN_ROWS = 17 + 2 * MIX_ROWS + MIX_TOLD
 # Counted as bytes, since to parse each answer would slow the load it measures.
 PASSED = b'"ticket":null'
 FEATURES: dict[str, str | float | bool] = {
@@ -70,6 +73,29 @@ def outcomes(key: str, tickets: Iterable[str]) -> bytes:
     """One call that tells of a win for each ticket."""
     told = [{"ticket": ticket, "kind": "won", "clearing_cpm": 0.41} for ticket in tickets]
     return post("/v1/outcomes", _written({"outcomes": told}), key)
+
+
+def mixed(key: str, scalar: str, covariate: str, tickets: Sequence[str]) -> list[bytes]:
+    """
+    Calls as an exchange and its trackers send them, by turns, as many as the tickets allow.
+
+    Of twenty calls seventeen ask for one price, two for `MIX_ROWS` at once, and one tells of
+    `MIX_TOLD` earlier bids, three in ten of them won: a tenth of all bids is won and twice that
+    reported lost. The shares are common practice, without a source.
+    """
+    steady = [bid(key, scalar)] * 8 + [batch(key, scalar, MIX_ROWS)]
+    steady += [bid(key, covariate, features=FEATURES)] * 3
+    steady += [bid(key, scalar)] * 6 + [batch(key, scalar, MIX_ROWS)]
+    whole = range(0, len(tickets) - MIX_TOLD + 1, MIX_TOLD)
+    turns = ([*steady, _told(key, tickets[at : at + MIX_TOLD])] for at in whole)
+    return [call for turn in turns for call in turn]
+
+
+def _told(key: str, tickets: Sequence[str]) -> bytes:
+    won = len(tickets) * 3 // 10
+    wins = [{"ticket": one, "kind": "won", "clearing_cpm": 0.41} for one in tickets[:won]]
+    losses = [{"ticket": one, "kind": "lost", "to_win_cpm": 9.0} for one in tickets[won:]]
+    return post("/v1/outcomes", _written({"outcomes": wins + losses}), key)
 
 
 def tickets_of(answers: Iterable[bytes]) -> list[str]:

@@ -5,17 +5,17 @@ Apart from what is sent and from how it is shown.
 
 from __future__ import annotations
 
-import json
 import socket
 import statistics
 import subprocess
 import sys
 import time
 from collections.abc import Callable, Iterable, Mapping, Sequence
+from contextlib import AbstractContextManager, nullcontext
 from dataclasses import dataclass, field
 from pathlib import Path
 from types import TracebackType
-from typing import Any, Self
+from typing import Self
 
 from service.commands import bodies, pinning
 from service.commands.load import Load, Seen
@@ -29,10 +29,19 @@ _BARE_S_MAX = 20.0
 
 @dataclass(frozen=True, slots=True)
 class Side:
-    """What one server did in one round: answers a second, processor time each, passes."""
+    """
+    What one server did in one round.
+
+    Args:
+        rate: Answers a second.
+        processor_us: Of the processes that answer, for each answer.
+        whole_us: Of all its processes, the clerk's too.
+        marked: Passes among the answers.
+    """
 
     rate: float
     processor_us: float
+    whole_us: float
     wait_ms_half: float
     wait_ms_99: float
     marked: int
@@ -45,11 +54,11 @@ class Contest:
     Both sides' rounds of one kind of traffic.
 
     Args:
-        rows: Bids or outcomes in each request.
+        rows: Bids and outcomes in each request, on average.
     """
 
     name: str
-    rows: int = 1
+    rows: float = 1
     bare: list[Side] = field(default_factory=list)
     ours: list[Side] = field(default_factory=list)
 
@@ -70,16 +79,22 @@ class Contest:
         return statistics.median(bare.processor_us / our.processor_us for bare, our in pairs)
 
     @property
+    def wait_ratios(self) -> list[float]:
+        """Our wait that 99 in 100 answers stayed under, over the bare one's, round by round."""
+        pairs = zip(self.ours, self.bare, strict=True)
+        return [our.wait_ms_99 / bare.wait_ms_99 for our, bare in pairs]
+
+    @property
     def rows_rate(self) -> float:
         """Rows a second of ours, median of rounds."""
         return statistics.median(side.rate for side in self.ours) * self.rows
 
 
 class Bare:
-    """The bare endpoints in a process of their own."""
+    """The bare endpoints in processes of their own, as many as the service's workers."""
 
-    def __init__(self) -> None:
-        self.port = free_port()
+    def __init__(self, workers: int = 1) -> None:
+        self.port, self._workers = free_port(), workers
         self._child: subprocess.Popen[bytes] | None = None
 
     @property
@@ -89,6 +104,7 @@ class Bare:
 
     def __enter__(self) -> Self:
         words = [sys.executable, "-m", "service.commands.bare", str(self.port)]
+        words.append(str(self._workers))
         self._child = subprocess.Popen(words, env=inherited())  # noqa: S603 - Our own module.
         return self
 
@@ -99,7 +115,8 @@ class Bare:
         trace: TracebackType | None,
     ) -> None:
         if self._child is not None:
-            self._child.kill()
+            # Asked and not killed, or the processes that it started would stay behind.
+            self._child.terminate()
             self._child.wait()
 
     def wait(self) -> None:
@@ -119,14 +136,22 @@ class Bare:
 
 
 class Pair:
-    """Both servers on one processor, and connections to both from another one."""
+    """
+    Both servers, and connections to them from another processor where there is one.
 
-    def __init__(self, directory: Path, settings: Mapping[str, str] | None = None) -> None:
-        self.server = ServerProcess(directory, settings)
-        self.bare = Bare()
+    With one worker both servers share one processor; more workers go where the system puts them.
+    """
+
+    def __init__(
+        self, directory: Path, settings: Mapping[str, str] | None = None, workers: int = 1
+    ) -> None:
+        self.server = ServerProcess(
+            directory, {**(settings or {}), "BIDKEEL_WORKERS": str(workers)}
+        )
+        self.bare, self._pinned = Bare(workers), workers == 1
 
     async def __aenter__(self) -> Self:
-        with pinning.on(SERVING):
+        with self._on(SERVING):
             self.bare.__enter__()
             self.server.start()
         self.bare.wait()
@@ -140,31 +165,6 @@ class Pair:
     ) -> None:
         self.server.stop()
         self.bare.__exit__(kind, error, trace)
-
-    async def create(self, members: Mapping[str, Any]) -> None:
-        """
-        Make a line item.
-
-        Raises:
-            ServerFailed: It was refused.
-        """
-        async with self.server.wire() as wire:
-            reply = await wire.post("/v1/line-items", members)
-        if reply.status != 201:
-            raise ServerFailed(f"A line item was refused: {reply.content[:300]!r}")
-
-    async def tickets(self, name: str, count: int) -> list[str]:
-        """So many tickets of bids that left."""
-        load, found = Load(HOST, self.server.port, keep=True), list[str]()
-        await load.connect(4)
-        # A batch may hold passes, so it is asked on until there are enough.
-        while len(found) < count:
-            calls = [bodies.batch(self.server.key, name)] * max(
-                1, (count - len(found)) // bodies.BATCH_ROWS
-            )
-            found += bodies.tickets_of((await load.closed_loop(calls)).bodies)
-        await load.close()
-        return found[:count]
 
     async def round(
         self,
@@ -186,26 +186,31 @@ class Pair:
         pid, port = (
             (self.bare.pid, self.bare.port) if which == "bare" else (self._pid, self.server.port)
         )
+        serving_s = pinning.processor_s if which == "bare" else pinning.serving_s
         # Opened anew: a server closes what lay idle while the other side had its turn.
         load = Load(HOST, port, bodies.PASSED)
         await load.connect(CONNECTIONS)
         # Read before and after, so that only this round's processor time counts.
-        began_s = pinning.processor_s(pid)
-        with pinning.on(ASKING):
+        served_s, whole_s = serving_s(pid), pinning.processor_s(pid)
+        with self._on(ASKING):
             seen = await (load.open_loop(requests, rate) if rate else load.closed_loop(requests))
         await load.close()
-        return _side(seen, pinning.processor_s(pid) - began_s)
+        return _side(seen, serving_s(pid) - served_s, pinning.processor_s(pid) - whole_s)
+
+    def _on(self, processor: int) -> AbstractContextManager[None]:
+        return pinning.on(processor) if self._pinned else nullcontext()
 
     @property
     def _pid(self) -> int:
         return self.server.child.pid if self.server.child else 0
 
 
-def _side(seen: Seen, spent_s: float) -> Side:
+def _side(seen: Seen, served_s: float, whole_s: float) -> Side:
     count = len(seen.waits_s)
     return Side(
         rate=seen.rate,
-        processor_us=1e6 * spent_s / count,
+        processor_us=1e6 * served_s / count,
+        whole_us=1e6 * whole_s / count,
         wait_ms_half=seen.wait_ms(0.5),
         wait_ms_99=seen.wait_ms(0.99),
         marked=seen.marked,
@@ -216,22 +221,3 @@ def _side(seen: Seen, spent_s: float) -> Side:
 def spread(numbers: Sequence[float]) -> str:
     """The least and the most of several rounds."""
     return f"{min(numbers):.2f} to {max(numbers):.2f}"
-
-
-def as_json(contest: Contest) -> dict[str, Any]:
-    """A contest for a program."""
-    members: dict[str, Any] = json.loads(json.dumps([_plain(contest.bare), _plain(contest.ours)]))
-    bare, ours = members
-    return {
-        "name": contest.name,
-        "rows": contest.rows,
-        "ratio": contest.ratio,
-        "ratios": contest.ratios,
-        "work_ratio": contest.work_ratio,
-        "bare": bare,
-        "ours": ours,
-    }
-
-
-def _plain(sides: Sequence[Side]) -> list[dict[str, float]]:
-    return [{name: getattr(side, name) for name in Side.__slots__} for side in sides]

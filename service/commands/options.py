@@ -28,3 +28,13 @@ def seed(text: str) -> int:
     if not text.isascii() or not text.isdigit():
         raise argparse.ArgumentTypeError("not a whole number of at least 0")
     return int(text)
+
+
+def add_database(parser: argparse.ArgumentParser) -> None:
+    """Let a command choose the database that its servers use."""
+    parser.add_argument(
+        "--database",
+        choices=("sqlite", "postgresql"),
+        default="sqlite",
+        help="that the servers use, made for this run and deleted after it",
+    )
