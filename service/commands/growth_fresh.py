@@ -8,11 +8,13 @@ import itertools
 import json
 import statistics
 import time
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
-from service.commands import bodies
+import numpy as np
+
+from service.commands import bodies, planting
 from service.commands.figures import Figure
 from service.commands.growth_ground import SCALAR, Ground, Say, line_items, name_of
 from service.commands.server_process import ServerFailed, ServerProcess
@@ -20,15 +22,20 @@ from service.commands.wire import Wire
 
 FRESH_MS_MAX = 500.0
 # Nobody waits longer for one probe; it counts as this long, and so as missed.
-PROBE_S_MAX = 20.0
-POLL_S = 0.005
+PROBE_S_MAX = 5.0
+POLL_S = 0.01
+PROBERS = 4  # At once, or a slow price would be looked at less often than a quick one.
 TOGETHER = 10  # Bids of one call of the traffic beside; one of them is told of as won.
+CALLERS = 8  # Of the traffic beside, so that one late answer does not hold up all of it.
+SETTLE_S = 3.0  # Until the first probe, since so many first slices are taught first.
 
 
 @dataclass(slots=True)
 class Beside:
-    """What the traffic beside the probes has touched."""
+    """Whom the traffic beside the probes asks next, and what it has touched."""
 
+    turn: Iterator[str]
+    chosen: np.random.Generator = field(default_factory=lambda: np.random.default_rng(7))
     bids: int = 0
     told: set[str] = field(default_factory=set)
     seconds: float = 0.0
@@ -38,13 +45,11 @@ async def fresh(ground: Ground, arguments: argparse.Namespace, say: Say) -> list
     """With line items of each method, all of them bid for by turns."""
     found = list[Figure]()
     for method in arguments.method:
-        scalar = method == SCALAR
-        count = arguments.line_items if scalar else arguments.active
+        count = arguments.line_items if method == SCALAR else arguments.active
         say(f"making {count:,} line items of {method}")
-        server, _ = await ground.server("grown" if scalar else method, line_items(count, method))
-        say(f"freshness of {method}")
+        server, _ = await ground.server("grown", line_items(count, method))
         names = [name_of(number, method) for number in range(count)]
-        waits_s, beside = await _probed(server, names, arguments)
+        waits_s, beside = await _probed(server, names, arguments, say)
         found += _figures(f"outcome until its price moves, {method}", waits_s, beside)
     return found
 
@@ -61,16 +66,26 @@ def _figures(name: str, waits_s: Sequence[float], beside: Beside) -> list[Figure
 
 
 async def _probed(
-    server: ServerProcess, names: Sequence[str], arguments: argparse.Namespace
+    server: ServerProcess, names: Sequence[str], arguments: argparse.Namespace, say: Say
 ) -> tuple[list[float], Beside]:
     """Seconds from each receipt until the line item bids from a newer snapshot, under load."""
     # Under load, for an idle worker publishes sooner than a busy one.
-    stop, waits, beside = asyncio.Event(), list[float](), Beside()
-    traffic = asyncio.create_task(_traffic(server, names, arguments.rate, stop, beside))
-    began = time.monotonic()
-    async with server.wire() as wire:
-        for number in range(arguments.probes):
-            waits.append(await moved_s(wire, names[number % len(names)]))
+    stop, waits, beside = asyncio.Event(), list[float](), Beside(itertools.cycle(names))
+    calls = [bodies.bid(server.key, name, features=bodies.FEATURES) for name in names]
+    await planting.loaded(server, lambda load: load.closed_loop(calls))
+    callers = [_traffic(server, arguments.rate / CALLERS, stop, beside) for _ in range(CALLERS)]
+    traffic = asyncio.gather(*callers)
+    await asyncio.sleep(SETTLE_S)
+    began, beside.bids = time.monotonic(), 0
+    probed = iter([names[number % len(names)] for number in range(arguments.probes)])
+
+    async def probe() -> None:
+        async with server.wire() as wire:
+            for name in probed:
+                waits.append(await moved_s(wire, name))
+                say(f"{len(waits)} of {arguments.probes} probes among {len(names):,} line items")
+
+    await asyncio.gather(*(probe() for _ in range(PROBERS)))
     beside.seconds = time.monotonic() - began
     stop.set()
     await traffic
@@ -90,28 +105,27 @@ async def moved_s(wire: Wire, name: str) -> float:
     return time.monotonic() - began
 
 
-async def _traffic(
-    server: ServerProcess, names: Sequence[str], rate: float, stop: asyncio.Event, beside: Beside
-) -> None:
-    """Bids on all line items by turns, and a win told of for every tenth of them."""
-    turn = itertools.cycle(names)
+async def _traffic(server: ServerProcess, rate: float, stop: asyncio.Event, beside: Beside) -> None:
+    """Bids on all line items by turns, and a win told of for one in ten, whichever it is."""
     async with server.wire() as wire:
         while not stop.is_set():
             began = time.monotonic()
-            asked = [_opportunity(next(turn)) for _ in range(TOGETHER)]
+            asked = [_opportunity(next(beside.turn)) for _ in range(TOGETHER)]
             reply = await wire.post("/v1/bids/batch", {"opportunities": asked})
             beside.bids += TOGETHER
             answers = json.loads(reply.content)["answers"]
-            won = [one for one in answers if one.get("ticket")][:1]
+            one = answers[int(beside.chosen.integers(TOGETHER))]
+            won = [one] if one.get("ticket") else []
             told = [{"ticket": one["ticket"], "kind": "won", "clearing_cpm": 0.41} for one in won]
             if told:
                 await wire.post("/v1/outcomes", {"outcomes": told})
-            beside.told.update(one["line_item"] for one in won)
+                beside.told.add(one["line_item"])
             await asyncio.sleep(max(0.0, TOGETHER / rate - (time.monotonic() - began)))
 
 
 async def _bid(wire: Wire, name: str, *, test: bool = False) -> dict[str, Any]:
-    reply = await wire.post("/v1/bids", {**_opportunity(name), "test": test})
+    asked = {**_opportunity(name), "test": test, "deadline_ms": bodies.PATIENT_MS}
+    reply = await wire.post("/v1/bids", asked)
     answer: dict[str, Any] = json.loads(reply.content)
     if answer.get("ticket") is None:
         raise ServerFailed(f"A bid of the bench passed: {answer}")
@@ -119,5 +133,4 @@ async def _bid(wire: Wire, name: str, *, test: bool = False) -> dict[str, Any]:
 
 
 def _opportunity(name: str) -> dict[str, Any]:
-    asked = bodies.opportunity(name, features=bodies.FEATURES)
-    return {**asked, "deadline_ms": bodies.PATIENT_MS}
+    return bodies.opportunity(name, features=bodies.FEATURES)

@@ -22,6 +22,9 @@ from service.commands.postgresql_process import PostgreSQLProcess
 from service.commands.server_process import ServerProcess
 
 ROUNDS = 5
+# An even load must never wait for a connection: so many bids are under way at a thousand a
+# second if each of them waits for its whole deadline.
+CONNECTIONS = 80
 SCALAR, COVARIATE = "kl-ucbid", "linear"
 FLAT_MAX = 1.2
 
@@ -41,6 +44,7 @@ class Ground:
     def __init__(self, folder: Path, database: PostgreSQLProcess | None = None) -> None:
         self._folder, self._database = folder, database
         self._servers: dict[str, ServerProcess] = {}
+        self._made: dict[str, set[str]] = {}
         self._stack = ExitStack()
 
     def __enter__(self) -> Self:
@@ -58,13 +62,27 @@ class Ground:
         self, name: str, configs: Sequence[Mapping[str, Any]] = ()
     ) -> tuple[ServerProcess, float]:
         """
-        The server of this name; the first who asks has it started with these line items.
+        The server of this name with these line items; what is not there yet is made.
 
         Returns:
-            The server, and the seconds that making the line items took: 0 where it had them.
+            The server, and the seconds that making the line items took.
         """
-        if name in self._servers:
-            return self._servers[name], 0.0
+        server = self._servers.get(name) or self._started(name)
+        made = self._made.setdefault(name, set())
+        missing = [one for one in configs if one["id"] not in made]
+        if not missing:
+            return server, 0.0
+        seconds = (await planting.create(server, missing)).seconds
+        made.update(one["id"] for one in missing)
+        return server, seconds
+
+    def kept_bytes(self, name: str) -> int:
+        """What the database of this server keeps on disk; on PostgreSQL, those of all of them."""
+        if self._database:
+            return self._database.kept_bytes
+        return sum(one.stat().st_size for one in (self._folder / name).glob("bidkeel.sqlite*"))
+
+    def _started(self, name: str) -> ServerProcess:
         place = self._folder / name
         place.mkdir()
         # A probe is to find its price however late, and a late one is what it is there to find.
@@ -73,15 +91,7 @@ class Ground:
             settings["BIDKEEL_DATABASE_URL"] = self._database.new_database(name)
         server = self._stack.enter_context(ServerProcess(place, settings))
         self._servers[name] = server
-        if not configs:
-            return server, 0.0
-        return server, (await planting.create(server, configs)).seconds
-
-    def kept_bytes(self, name: str) -> int:
-        """What the database of this server keeps on disk; on PostgreSQL, those of all of them."""
-        if self._database:
-            return self._database.kept_bytes
-        return sum(one.stat().st_size for one in (self._folder / name).glob("bidkeel.sqlite*"))
+        return server
 
 
 def line_items(count: int, method: str) -> list[dict[str, Any]]:
@@ -112,9 +122,27 @@ async def by_turns(sides: Sequence[Side], arguments: argparse.Namespace) -> list
     return found
 
 
+async def enclosed(small: Side, grown: Side, arguments: argparse.Namespace) -> list[list[Seen]]:
+    """
+    Bids at an even rate on the grown side without a break, on the small side before and after.
+
+    By turns its line items would be asked half as often as the rate says, and each time have
+    lent their slice back. The first stretch, in which slices are leased, does not count.
+    """
+    each = max(1, arguments.bids // ROUNDS)
+    found = list[list[Seen]]()
+    for (server, calls), rounds in ((small, ROUNDS), (grown, 2 * ROUNDS), (small, ROUNDS)):
+        asking, seen = itertools.cycle(calls), list[Seen]()
+        for _ in range(rounds):
+            seen.append(await even(server, list(itertools.islice(asking, each)), arguments.rate))
+        found.append(seen)
+    before, among, after = found
+    return [[*before[1::2], *after[: ROUNDS - ROUNDS // 2]], among[ROUNDS:]]
+
+
 async def even(server: ServerProcess, calls: Sequence[bytes], rate: float) -> Seen:
     """These calls at an even rate."""
-    return await planting.loaded(server, lambda load: load.open_loop(calls, rate))
+    return await planting.loaded(server, lambda load: load.open_loop(calls, rate), CONNECTIONS)
 
 
 def flat(name: str, first: Sequence[Seen], last: Sequence[Seen]) -> list[Figure]:

@@ -15,6 +15,7 @@ from service.commands.growth_ground import (
     Say,
     asked,
     by_turns,
+    enclosed,
     flat,
     line_items,
     memory_kib,
@@ -38,11 +39,15 @@ async def items(ground: Ground, arguments: argparse.Namespace, say: Say) -> list
     idle_kib = memory_kib(grown)
     await _asked_once(grown, names)
     known_kib = (memory_kib(grown) - idle_kib) / count
-    say(f"bids on one and on {many}")
-    alone, among = await by_turns([asked(small, names[:1]), asked(grown, names)], arguments)
+    active = names[: arguments.active]
+    say(f"bids on one, on {len(active)} of {many} and on all")
+    one, few = asked(small, names[:1]), asked(grown, active)
+    some = await by_turns([one, few], arguments)
+    every = await enclosed(one, asked(grown, names), arguments)
     say("start")
     return [
-        *flat(f"1 to {many}", alone, among),
+        *flat(f"1 to {many}, {len(active)} of them asked", *some),
+        *flat(f"1 to {many}, all asked by turns", *every),
         Figure(f"{many}, made one call each", made_s, "s", aim=MADE_S_MAX),
         Figure("memory of a worker for an idle line item", known_kib, "KiB", aim=ITEM_KIB_MAX),
         Figure(f"start with {many}", _restarted_s(grown), "s", aim=START_S_MAX),

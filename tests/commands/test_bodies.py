@@ -110,3 +110,23 @@ def test_the_mark_of_a_pass_is_how_the_service_writes_one() -> None:
     """Answers are written without blanks, so the bytes can simply be counted."""
     written = json.dumps({"ticket": None}, separators=(",", ":")).encode()
     assert bodies.PASSED in written
+
+
+def test_mixed_calls_come_in_turns_of_twenty() -> None:
+    """As many turns as whole groups of tickets; nothing is told twice, and three in ten won."""
+    tickets = [f"t{number}" for number in range(2 * bodies.MIX_TOLD + 7)]
+    calls = [taken_apart(one) for one in bodies.mixed(KEY, "s", "c", tickets)]
+    assert len(calls) == 2 * bodies.MIX_CALLS
+    paths = [first[1] for first, _, _ in calls[: bodies.MIX_CALLS]]
+    counts = [paths.count(f"/v1/{path}") for path in ("bids", "bids/batch", "outcomes")]
+    assert counts == [17, 2, 1]
+    rows = [row for _, _, body in calls for row in body.get("outcomes", [])]
+    assert [row["ticket"] for row in rows] == tickets[: 2 * bodies.MIX_TOLD]
+    assert [row["kind"] for row in rows].count("won") == 2 * 6
+    bids = sum(len(body.get("opportunities", [0])) for _, _, body in calls) - 2
+    assert bids + len(rows) == 2 * bodies.MIX_TURN_ROWS
+
+
+def test_too_few_tickets_make_no_mixed_call() -> None:
+    """Half a turn would be another mix."""
+    assert bodies.mixed(KEY, "s", "c", ["t"] * (bodies.MIX_TOLD - 1)) == []

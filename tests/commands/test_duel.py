@@ -2,22 +2,21 @@
 
 from __future__ import annotations
 
-import json
 import statistics
 
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as some
 
-from service.commands.duel import Bare, Contest, Side, as_json, spread
+from service.commands.duel import Bare, Contest, Side, spread
 from service.commands.load import Seen
 
 POSITIVE = some.floats(0.01, 1e6)
 
 
-def side(rate: float, processor_us: float = 100.0) -> Side:
+def side(rate: float, processor_us: float = 100.0, wait_ms_99: float = 9.0) -> Side:
     """One round of one server."""
-    return Side(rate, processor_us, wait_ms_half=1.0, wait_ms_99=9.0, marked=0, wrong=0)
+    return Side(rate, processor_us, 2 * processor_us, 1.0, wait_ms_99, marked=0, wrong=0)
 
 
 def contest(*pairs: tuple[float, float], rows: int = 1) -> Contest:
@@ -72,13 +71,10 @@ def test_a_spread_names_the_least_and_the_most(numbers: list[float], words: str)
     assert spread(numbers) == words
 
 
-def test_a_program_reads_every_round_of_both_sides() -> None:
-    """All members of a side by their names, and the medians beside them."""
-    told = json.loads(json.dumps(as_json(contest((1000, 500), (100, 90), rows=3))))
-    assert (told["name"], told["rows"], told["ratios"]) == ("x", 3, [0.5, 0.9])
-    assert (told["ratio"], told["work_ratio"]) == (0.7, 1.0)
-    assert [one["rate"] for one in told["bare"]] == [1000, 100]
-    assert set(told["ours"][0]) == set(Side.__slots__)
+def test_waits_are_compared_round_by_round() -> None:
+    """Ours over the bare one's, so that more is worse."""
+    bare, ours = [side(1, 1, 2.0), side(1, 1, 8.0)], [side(1, 1, 3.0), side(1, 1, 4.0)]
+    assert Contest("x", 1, bare, ours).wait_ratios == [1.5, 0.5]
 
 
 def test_a_contest_without_rounds_has_no_ratio() -> None:

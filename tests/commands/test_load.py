@@ -5,12 +5,13 @@ from __future__ import annotations
 import asyncio
 import contextlib
 import itertools
+import time
 from collections.abc import AsyncIterator
 from contextlib import asynccontextmanager
 
 import pytest
 
-from service.commands.load import Load, Stalled, post
+from service.commands.load import Load, Stalled, post, run
 
 REQUEST = post("/path", b"{}", "key")
 
@@ -101,3 +102,19 @@ def test_a_server_that_hangs_up_ends_the_load() -> None:
             await load.close()
 
     asyncio.run(play())
+
+
+def test_an_even_load_leaves_the_processor_alone_between_requests() -> None:
+    """Two requests two fifths of a second apart take far less processor time than that."""
+
+    async def play() -> None:
+        async with answering() as port:
+            load = Load("127.0.0.1", port)
+            await load.connect(1)
+            before_s = time.process_time()
+            seen = await load.open_loop([REQUEST] * 2, rate=2.5)
+            assert time.process_time() - before_s < 0.2
+            assert seen.seconds >= 0.4
+            await load.close()
+
+    run(play())

@@ -45,3 +45,21 @@ def test_memory_is_what_psutil_counts() -> None:
     """In KiB, within a tenth."""
     seen = psutil.Process().memory_info().rss / 1024
     assert abs(pinning.memory_kib(os.getpid()) - seen) < 0.1 * seen
+
+
+def test_a_crew_answers_by_its_workers_and_a_server_without_one_by_itself() -> None:
+    """The workers are found below whoever started them; the clerk is none of them."""
+    words = [sys.executable, "-c", "input()", "service.commands.child"]
+    crew = "import subprocess, sys\nfor role in ('worker', 'clerk', 'worker'):\n"
+    crew += f"    subprocess.Popen([*{words}, role])\ninput()"
+    with subprocess.Popen([sys.executable, "-c", crew], stdin=subprocess.PIPE) as child:
+        end = time.monotonic() + 30
+        while len(pinning.children(child.pid)) < 3 and time.monotonic() < end:
+            time.sleep(0.05)
+        time.sleep(0.05)
+        started = pinning.children(child.pid)
+        assert sorted(pinning.workers(child.pid)) == sorted([started[0], started[2]])
+        assert pinning.workers(started[1]) == [started[1]]
+        assert pinning.processor_s(child.pid) >= pinning.serving_s(child.pid) > 0.0
+        child.communicate(b"\n\n\n\n")
+    assert pinning.processors() == len(os.sched_getaffinity(0))

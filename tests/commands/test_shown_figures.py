@@ -23,7 +23,6 @@ from service.commands import (
     settings_table,
     tripwires_try,
 )
-from service.commands.bench_growth import Finding
 from service.errors import Malformed
 from service.rehearsal.late import ORACLE, WAYS
 
@@ -188,20 +187,6 @@ def test_late_values_are_told_to_a_program_with_currency_and_size(
     told = json.loads(capsys.readouterr().out)
     assert (told["opportunities"], told["currency"], set(told["ways"])) == (700, "EUR", set(WAYS))
     assert told["ways"][ORACLE] == {"surplus": 1.0, "error": 0.0, "share": 1.0}
-
-
-def test_growth_is_shown_with_what_it_is_held_against(capsys: pytest.CaptureFixture[str]) -> None:
-    """A figure without anything beside it has an empty cell; reached is yes or no."""
-    findings = [
-        Finding("start (s)", 1.234, None, 5.0, reached=True),
-        Finding("bid p50 (ms)", 1234.5, 1000.0, 1.2, reached=False),
-    ]
-    bench_growth._show(findings, argparse.Namespace(rate=1000))
-    out = capsys.readouterr().out
-    first, second = (line.split() for line in out.splitlines() if "(" in line and ")" in line)
-    assert first[-3:] == ["1.23", "5", "yes"]
-    assert second[-4:] == ["1,234.50", "1,000.00", "1.2", "no"]
-    assert "1,000 a second" in out
 
 
 @pytest.mark.parametrize(
