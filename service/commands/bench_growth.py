@@ -51,6 +51,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "active": (200, "line items of a method with features that learn all the while"),
         "rate": (1000, "bids a second"),
         "bids": (10_000, "for each figure, over all rounds"),
+        "rounds": (5, "of each figure that is taken by turns"),
         "probes": (100, "of freshness, for each figure"),
     }
     for name, (usual, text) in numbers.items():

@@ -13,7 +13,6 @@ from dataclasses import dataclass
 from service.commands import bodies, figures, growth_log, planting
 from service.commands.figures import Figure
 from service.commands.growth_ground import (
-    ROUNDS,
     SCALAR,
     Ground,
     Say,
@@ -52,15 +51,15 @@ async def busy(ground: Ground, arguments: argparse.Namespace, say: Say) -> list[
     old = OLD_OF_A_BID * arguments.bids
     growth_log.fill(server, name_of(0), old, say, OLD_DAYS)
     calls = [bodies.bid(server.key, name_of(number)) for number in range(ITEMS)]
-    calls *= max(1, arguments.bids // ROUNDS // ITEMS)
+    calls *= max(1, arguments.bids // arguments.rounds // ITEMS)
     quiet, loud = list[Seen](), list[Busy]()
     await even(server, calls, arguments.rate)
-    for number in range(ROUNDS):
-        say(f"quiet and busy, {number + 1} of {ROUNDS}")
+    for number in range(arguments.rounds):
+        say(f"quiet and busy, {number + 1} of {arguments.rounds}")
         tickets = await _tickets(server, len(calls) // TOLD_SHARE)
         await asyncio.sleep(REST_S)
         quiet.append(await even(server, calls, arguments.rate))
-        loud.append(await _busy(server, calls, tickets, arguments.rate, old // ROUNDS))
+        loud.append(await _busy(server, calls, tickets, arguments.rate, old // arguments.rounds))
         await asyncio.sleep(REST_S)
     return _figures(quiet, loud)
 

@@ -21,7 +21,6 @@ from service.commands.load import Load, Seen
 from service.commands.postgresql_process import PostgreSQLProcess
 from service.commands.server_process import ServerProcess
 
-ROUNDS = 5
 # An even load must never wait for a connection: so many bids are under way at a thousand a
 # second if each of them waits for its whole deadline.
 CONNECTIONS = 80
@@ -111,13 +110,14 @@ def asked(server: ServerProcess, names: Sequence[str]) -> Side:
 
 async def by_turns(sides: Sequence[Side], arguments: argparse.Namespace) -> list[list[Seen]]:
     """Bids at an even rate on each side by turns; each line item has leased a slice before."""
+    each = max(1, arguments.bids // arguments.rounds)
     asking = [itertools.cycle(calls) for _, calls in sides]
     found = [list[Seen]() for _ in sides]
     for server, calls in sides:
         await planting.loaded(server, partial(Load.closed_loop, requests=calls))
-    for _ in range(ROUNDS):
+    for _ in range(arguments.rounds):
         for place, (server, _) in enumerate(sides):
-            calls = list(itertools.islice(asking[place], max(1, arguments.bids // ROUNDS)))
+            calls = list(itertools.islice(asking[place], each))
             found[place].append(await even(server, calls, arguments.rate))
     return found
 
@@ -129,15 +129,15 @@ async def enclosed(small: Side, grown: Side, arguments: argparse.Namespace) -> l
     By turns its line items would be asked half as often as the rate says, and each time have
     lent their slice back. The first stretch, in which slices are leased, does not count.
     """
-    each = max(1, arguments.bids // ROUNDS)
-    found = list[list[Seen]]()
-    for (server, calls), rounds in ((small, ROUNDS), (grown, 2 * ROUNDS), (small, ROUNDS)):
+    count = arguments.rounds
+    each, found = max(1, arguments.bids // count), list[list[Seen]]()
+    for (server, calls), rounds in ((small, count), (grown, 2 * count), (small, count)):
         asking, seen = itertools.cycle(calls), list[Seen]()
         for _ in range(rounds):
             seen.append(await even(server, list(itertools.islice(asking, each)), arguments.rate))
         found.append(seen)
     before, among, after = found
-    return [[*before[1::2], *after[: ROUNDS - ROUNDS // 2]], among[ROUNDS:]]
+    return [[*before[1::2], *after[: count - count // 2]], among[count:]]
 
 
 async def even(server: ServerProcess, calls: Sequence[bytes], rate: float) -> Seen:

@@ -9,7 +9,6 @@ import time
 from service.commands import bodies, figures, planting
 from service.commands.figures import Figure
 from service.commands.growth_ground import (
-    ROUNDS,
     SCALAR,
     Ground,
     Say,
@@ -59,7 +58,7 @@ async def crowd(ground: Ground, arguments: argparse.Namespace, say: Say) -> list
     server, _ = await ground.server("small", line_items(1, SCALAR))
     say(f"{FEW} and {CROWD} connections on one line item")
     found: dict[int, list[float]] = {FEW: [], CROWD: []}
-    for _ in range(ROUNDS + 1):
+    for _ in range(arguments.rounds + 1):
         for connections, rates in found.items():
             rates.append((await _flat_out(server, connections, arguments)).rate)
     # The first round lets slices grow.
@@ -76,7 +75,7 @@ async def crowd(ground: Ground, arguments: argparse.Namespace, say: Say) -> list
 
 
 async def _flat_out(server: ServerProcess, connections: int, arguments: argparse.Namespace) -> Seen:
-    calls = [bodies.bid(server.key, name_of(0))] * max(1, arguments.bids // ROUNDS)
+    calls = [bodies.bid(server.key, name_of(0))] * max(1, arguments.bids // arguments.rounds)
     return await planting.loaded(server, lambda load: load.closed_loop(calls), connections)
 
 

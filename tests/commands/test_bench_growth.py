@@ -3,14 +3,24 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Mapping
+from contextlib import closing
+from decimal import Decimal
+from functools import partial
 from typing import Any
 
 import pytest
 
 from service.__main__ import main
-from service.commands import growth_log
+from service.api.forms.configs import read_new
+from service.commands import bodies, growth_lessons, growth_log
 from service.commands.bench_growth import SECTIONS
 from service.commands.growth_log import Point
+from service.configuring import filled
+from service.store import auditing, charting, learners, line_items
+from service.store.audit import Balance
+from service.store.database import Database, Writing
+from service.teaching import FRESH
 
 SMALL = {
     "line-items": 20,
@@ -19,6 +29,7 @@ SMALL = {
     "active": 2,
     "rate": 400,
     "bids": 100,
+    "rounds": 1,
     "probes": 4,
 }
 
@@ -45,28 +56,50 @@ def test_many_line_items_are_made_known_and_taught(capsys: pytest.CaptureFixture
         assert 1 <= found[f"{name}: line items told of meanwhile"]["figure"] <= active
 
 
-def test_log_and_stream_grow_and_old_rows_go(capsys: pytest.CaptureFixture[str]) -> None:
-    """Each look at the log, each method's lessons, and all old rows pruned beside the bids."""
-    found = told(capsys, "--only", "decisions", "lessons", "busy")
+def test_the_log_grows_and_old_rows_go(capsys: pytest.CaptureFixture[str]) -> None:
+    """Each look at the log, and all old rows pruned beside the bids."""
+    found = told(capsys, "--only", "decisions", "busy")
     for count in ("200", "2,000"):
         assert f"0 to {count} decisions in the log, bid p50, after over before" in found
     assert found["a decision on disk"]["unit"] == "bytes"
-    for method in ("kl-ucbid", "linear"):
-        name = f"{method}, 10 to 40 lessons"
-        assert found[f"{name}, teaching an entry after"]["figure"] > 0.0
-        assert found[f"{name}, outcome until its price moves, after"]["figure"] > 0.0
     assert found["busy, old decisions pruned"]["figure"] == 100 * SMALL["bids"]
     assert found["busy, outcomes"]["figure"] > 0.0
     assert found["busy over quiet, bid p99"]["aim"] == 2.0
 
 
 @pytest.mark.long
+@pytest.mark.parametrize("backend", ["sqlite", "postgresql"])
 @pytest.mark.parametrize("section", SECTIONS)
-def test_each_section_stands_alone_on_postgresql(
-    section: str, capsys: pytest.CaptureFixture[str]
+def test_each_section_stands_alone(
+    section: str, backend: str, capsys: pytest.CaptureFixture[str]
 ) -> None:
-    """With servers and databases of its own."""
-    assert told(capsys, "--only", section, "--database", "postgresql")
+    """With servers and databases of its own, on both databases."""
+    assert told(capsys, "--only", section, "--database", backend)
+
+
+@pytest.mark.parametrize("method", ["kl-ucbid", "linear"])
+def test_a_stream_is_filled_as_workers_and_clerk_fill_it(migrated_url: str, method: str) -> None:
+    """Every lesson is booked, taught, counted for charts and audited, and no money is lost."""
+    said = list[str]()
+    with closing(Database(migrated_url)) as database:
+        asked = json.dumps(bodies.line_item("many", method))
+        config, _ = read_new(json.loads(asked, parse_float=Decimal), database.wall_ms())
+        database.write(partial(_begin, config=filled(config)[0], now=database.wall_ms()))
+        pages = growth_lessons.fill(database, "many", 45, said.append)
+        balance = database.read(partial(Balance.read, line_item="many"))
+        assert not database.read(learners.behind)
+        assert charting.roll(database) == 0
+        assert auditing.audit_on(database, "many") == (True, [], [])
+    assert said[-1] == "many: 45 of 45 lessons"
+    # 43 wins and the values of two of them; each was paid for.
+    assert balance.spent == 43 * growth_lessons.PAID
+    assert sum(page.entries for page in pages) == balance.seq
+    assert len(pages) >= 10
+
+
+def _begin(connection: Writing, config: Mapping[str, Any], now: int) -> None:
+    line_items.create(connection, config, now)
+    learners.begin(connection, config["id"], FRESH, now)
 
 
 @pytest.mark.parametrize(

@@ -42,7 +42,8 @@ def test_too_few_processors_are_said() -> None:
     assert said(8).startswith("8 processors: each worker")
 
 
-@pytest.mark.parametrize("traffic", ["single", pytest.param("mixed", marks=pytest.mark.long)])
+@pytest.mark.long
+@pytest.mark.parametrize("traffic", ["single", "mixed"])
 def test_both_crews_answer_the_same_load(traffic: str, capsys: pytest.CaptureFixture[str]) -> None:
     """No answer is wrong, and both crews have a rate and a price in processor time."""
     words = ["--rounds", "1", "--requests", "100", "--traffic", traffic, "--json"]
