@@ -21,7 +21,7 @@ from service.commands.growth_ground import (
     name_of,
 )
 from service.commands.load import Seen
-from service.commands.server_process import ServerProcess
+from service.commands.server_process import ServerFailed, ServerProcess
 
 ITEMS = 20
 BUSY_MAX = 2.0
@@ -70,7 +70,7 @@ def _figures(quiet: Sequence[Seen], loud: Sequence[Busy]) -> list[Figure]:
         return [one.seen.wait_ms(share) / alone.wait_ms(share) for one, alone in pairs]
 
     seconds = sum(one.seen.seconds for one in loud)
-    pruning = min(1.0, sum(one.pruning_s for one in loud) / seconds)
+    pruning = sum(min(one.pruning_s, one.seen.seconds) for one in loud) / seconds
     return [
         figures.of_rounds("busy over quiet, bid p99", "times", worse(0.99), BUSY_MAX),
         figures.of_rounds("busy over quiet, bid p50", "times", worse(0.5)),
@@ -98,12 +98,12 @@ async def _busy(
         stdin=subprocess.PIPE,
         stdout=subprocess.PIPE,
     ) as pruner:
-        await asyncio.sleep(REST_S)
+        if pruner.stdin is None or pruner.stdout is None or not pruner.stdout.readline():
+            raise ServerFailed("The pruning of the bench did not start.")
         stop, told = asyncio.Event(), list[str]()
         telling = asyncio.create_task(_tell(server, tickets, rate, stop, told))
-        if pruner.stdin:
-            pruner.stdin.write(b"\n")
-            pruner.stdin.flush()
+        pruner.stdin.write(b"\n")
+        pruner.stdin.flush()
         seen = await even(server, calls, rate)
         stop.set()
         await telling

@@ -2,8 +2,8 @@
 
     python -m service.commands.pruner ROWS
 
-It begins with a line of input, works as the clerk does, and prints how many rows it forgot in
-how many seconds. The settings are those of the server whose database it is.
+It says when it is ready, begins with a line of input, works as the clerk does, and prints how
+many rows it forgot in how many seconds. The settings are those of the server of that database.
 """
 
 from __future__ import annotations
@@ -24,7 +24,9 @@ def main(words: list[str]) -> int:
     """Forget at least so many rows, as far as there are any old enough; returns 0."""
     settings = load()
     with closing(open_database(settings)) as database:
-        # Ready by now, so that nothing but the pruning itself falls into what is timed.
+        # Else its own start would fall into what is timed.
+        sys.stdout.write("ready\n")
+        sys.stdout.flush()
         sys.stdin.readline()
         began = time.monotonic()
         rows = pruned(database, settings.decision_keep_days, int(words[0]))
