@@ -242,7 +242,7 @@ BENCHES: dict[str, tuple[str, Load]] = {
     "pacing": ("budgets, return targets and hints on invented markets", _bench_pacing),
     "rehearse": ("time simulated auctions, and bids beside a rehearsal", _bench_rehearse),
     "decide": ("time one price of each method, and the steps around it", _bench_decide),
-    "growth": ("see whether bids stay quick as line items and log grow", _bench_growth),
+    "growth": ("see whether bids stay quick as line items, log and lessons grow", _bench_growth),
     "store": ("time what a bid's life costs in the database", _bench_store),
     "http": ("put one load on the service and on bare endpoints", _bench_http),
     "workers": ("put one load on one worker and on two by turns", _bench_workers),

@@ -41,21 +41,28 @@ NOTES = (
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the command's options."""
     parser.add_argument(
-        "--only", nargs="+", choices=SECTIONS, default=list(SECTIONS), help="sections to measure"
+        "--only",
+        nargs="+",
+        choices=SECTIONS,
+        default=list(SECTIONS),
+        metavar="NAME",
+        help=f"sections to measure instead of all: {', '.join(SECTIONS)}",
     )
     options.add_database(parser)
     numbers = {
         "line-items": (10_000, "to grow to"),
         "decisions": (10_000_000, "in the log, to grow to"),
         "lessons": (1_000_000, "of one line item, to grow to"),
-        "active": (200, "line items of a method with features that learn all the while"),
+        "active": (200, "line items that are asked where not all are: of many, and of linear"),
         "rate": (1000, "bids a second"),
         "bids": (10_000, "for each figure, over all rounds"),
         "rounds": (5, "of each figure that is taken by turns"),
         "probes": (100, "of freshness, for each figure"),
     }
     for name, (usual, text) in numbers.items():
-        parser.add_argument(f"--{name}", type=options.count, default=usual, help=text)
+        parser.add_argument(
+            f"--{name}", type=options.count, default=usual, help=f"{text}; {usual:,} unless given"
+        )
     methods = [SCALAR, COVARIATE]
     parser.add_argument(
         "--method", nargs="+", choices=methods, default=methods, help="of freshness and lessons"

@@ -24,7 +24,12 @@ _SHARES = ("half", "99")
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the command's options."""
     parser.add_argument(
-        "--only", nargs="+", choices=KINDS, default=list(KINDS), help="kinds of traffic to play"
+        "--only",
+        nargs="+",
+        choices=KINDS,
+        default=list(KINDS),
+        metavar="NAME",
+        help=f"kinds of traffic to play instead of all: {', '.join(KINDS)}",
     )
     parser.add_argument("--rounds", type=options.count, default=7, help="of each side, by turns")
     parser.add_argument("--requests", type=options.count, default=3000, help="single bids a round")

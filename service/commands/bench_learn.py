@@ -55,7 +55,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--seed", type=options.seed, default=7, help="chooses the lessons")
     parser.add_argument("--quick", action="store_true", help="10,000 lessons in place of 10^6")
     parser.add_argument(
-        "--only", nargs="+", choices=LEARNERS, default=list(LEARNERS), help="learners to time"
+        "--only",
+        nargs="+",
+        choices=LEARNERS,
+        default=list(LEARNERS),
+        metavar="NAME",
+        help=f"learners to time instead of all: {'; '.join(LEARNERS)}",
     )
     parser.add_argument("--json", action="store_true", help="print figures for a program")
 
