@@ -34,7 +34,12 @@ GIB = 1024.0**3
 
 @dataclass(frozen=True, slots=True)
 class Point:
-    """A log of so many decisions: how p50 has grown since it was empty, and its bytes on disk."""
+    """
+    A log of so many decisions.
+
+    Args:
+        grown: p50 over that of an empty log, in the quietest rounds of both.
+    """
 
     decisions: int
     grown: float
@@ -56,7 +61,7 @@ async def log(ground: Ground, arguments: argparse.Namespace, say: Say) -> list[F
         )
         here = flat(f"0 to {count:,} decisions in the log", before, after)
         found += here
-        points.append(Point(count, here[0].figure, ground.kept_bytes("log") - begins))
+        points.append(Point(count, here[1].figure, ground.kept_bytes("log") - begins))
     return [*found, *projected(points[-2], points[-1])]
 
 
@@ -68,7 +73,8 @@ def steps(most: int) -> list[int]:
 
 def projected(first: Point, last: Point) -> list[Figure]:
     """What the last two looks come to at a hundred million decisions."""
-    rise = last.grown - first.grown
+    # A larger log makes no bid quicker: a fall is noise.
+    rise = max(0.0, last.grown - first.grown)
     # The log is only written to, through trees whose depth grows with the logarithm.
     decades = math.log10(FAR / last.decisions) / math.log10(last.decisions / first.decisions)
     each = (FAR - last.decisions) / (last.decisions - first.decisions)

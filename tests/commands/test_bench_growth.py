@@ -125,3 +125,9 @@ def test_a_projection_follows_the_last_rise() -> None:
     assert found[1] == pytest.approx(1.05 + 0.05 * 10)
     assert found[2] == pytest.approx(100.0)
     assert found[3] == pytest.approx(10**10 / 2**30)
+
+
+def test_a_log_that_seems_to_make_bids_quicker_is_noise() -> None:
+    """Nothing is projected from a fall."""
+    first, last = Point(10**6, 1.3, 10**8), Point(10**7, 1.1, 10**9)
+    assert [one.figure for one in growth_log.projected(first, last)][:2] == [1.1, 1.1]
