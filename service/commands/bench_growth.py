@@ -34,7 +34,8 @@ NOTES = (
     "Busy: the same rate while wins are booked and taught, the log is written and a second "
     "process prunes old decisions by the clerk's own function.",
     "Projected from the quietest rounds. By decades: the log is only written to, through trees "
-    "whose depth grows with the logarithm; in proportion: if the last rise went on for each further decision.",
+    "whose depth grows with the logarithm; in proportion: if the last rise went on for each "
+    "further decision.",
 )
 
 
