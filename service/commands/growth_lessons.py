@@ -22,10 +22,10 @@ from service.commands.server_process import ServerFailed, ServerProcess
 from service.learner import hashing
 from service.ledger.settle import Outcome
 from service.ledger.values import Value
-from service.store import auditing, charting, learners, leases, outcomes
+from service.store import auditing, charting, leases, outcomes, teachers
+from service.store.bookings import Booking
 from service.store.database import Database
 from service.store.leases import Denied, Leased, LeaseRequest
-from service.store.outcomes import Booking
 from service.teaching import lawful, lesson, weigh
 
 FEW = 10
@@ -119,16 +119,16 @@ def fill(database: Database, name: str, count: int, say: Say) -> list[Page]:
     while charting.roll(database):
         pass
     # Else the server would begin with it, in the middle of what is timed.
-    while not auditing.audit_on(database, name)[0]:
+    while not auditing.audit_on(database, [name])[0][0].whole:
         pass
     return pages
 
 
 def _teach(database: Database, name: str) -> Iterator[Page]:
     """Until the teacher has caught up."""
-    teach = partial(learners.teach, fold=lesson, lawful=lawful)
-    entries = learners.ENTRIES_MAX
-    while entries == learners.ENTRIES_MAX:
+    teach = partial(teachers.teach, fold=lesson, lawful=lawful)
+    entries = teachers.ENTRIES_MAX
+    while entries == teachers.ENTRIES_MAX:
         began_s = time.process_time()
         entries = teach(database, name, checkpoint_entries=CHECKPOINT_ENTRIES)
         if entries:

@@ -89,7 +89,8 @@ def test_a_stream_is_filled_as_workers_and_clerk_fill_it(migrated_url: str, meth
         balance = database.read(partial(Balance.read, line_item="many"))
         assert not database.read(learners.behind)
         assert charting.roll(database) == 0
-        assert auditing.audit_on(database, "many") == (True, [], [])
+        (piece,), frozen = auditing.audit_on(database, ["many"])
+        assert (piece.whole, piece.found, frozen) == (True, [], [])
     assert said[-1] == "many: 45 of 45 lessons"
     # 43 wins and the values of two of them; each was paid for.
     assert balance.spent == 43 * growth_lessons.PAID
