@@ -66,6 +66,7 @@ class Leasing:
         self._wake = asyncio.Event()
         self._denied: dict[str, tuple[str, float]] = {}
         self._before: dict[str, int] = {}
+        self._turn = 0
 
     def denied(self, line_item: str) -> str | None:
         """Why the last wish of a moment ago found no money, or None."""
@@ -137,12 +138,19 @@ class Leasing:
             for one in given:
                 await self._give_back_alone(one)
 
-    async def tick(self) -> None:
-        """Report what was priced since the last tick, so that silence counts as rounds too."""
-        passes, self.hand.under_floor = self.hand.under_floor, {}
+    async def tick(self, parts: int = 1) -> None:
+        """
+        Report what was priced since the last tick, so that silence counts as rounds too.
+
+        Args:
+            parts: Only of the line items whose turn it is, when each has one in so many turns.
+        """
+        self._turn = (self._turn + 1) % parts
+        slices = [s for s in self.hand.slices.values() if hash(s.line_item) % parts == self._turn]
+        mine = [name for name in self.hand.under_floor if hash(name) % parts == self._turn]
+        passes = {name: self.hand.under_floor.pop(name) for name in mine}
         reports = [
-            leases.Report(s.line_item, s.id, s.bids, passes.pop(s.line_item, 0))
-            for s in self.hand.slices.values()
+            leases.Report(s.line_item, s.id, s.bids, passes.pop(s.line_item, 0)) for s in slices
         ]
         # Passes without a slice in the hand are told under an id that no slice has.
         reports += [leases.Report(name, bytes(16), 0, count) for name, count in passes.items()]

@@ -29,6 +29,8 @@ DECISIONS_MAX = 2000
 GIVE_BACK_S = 0.2
 LOG_S = 0.5
 CLOCK_S = 1.0
+# A few at a time: what all reported at once was learnt, and became prices, all at once.
+TICK_S = 1.0
 # The bell is a number in memory: to look at it costs less than a hundredth of a bid.
 BELL_S = 0.01
 
@@ -70,7 +72,7 @@ class Upkeep:
             every(CLOCK_S, self.keep_time),
             self._follow_changes(),
             every(GIVE_BACK_S, self.give_back),
-            every(self._rhythm.tick_s, self._leasing.tick),
+            every(TICK_S, self.tick),
             every(LOG_S, self.log),
         ]
 
@@ -126,6 +128,10 @@ class Upkeep:
         """Retire slices whose time is over and free what they never issued."""
         self._leasing.hand.retire_expired(self._leasing.clock())
         await self._leasing.give_back()
+
+    async def tick(self) -> None:
+        """Report what was priced of some line items, so that each has its turn in time."""
+        await self._leasing.tick(parts=max(1, round(self._rhythm.tick_s / TICK_S)))
 
     async def log(self) -> None:
         """Write queued decisions."""

@@ -34,6 +34,7 @@ SWITCH_S = 0.0002
 # New objects until the young are looked through, and rounds until the older are: a fifth of the
 # processor time of outcomes went into the rounds of the interpreter's own thresholds.
 COLLECT_AFTER = (5000, 20, 20)
+NICE = 10
 FINISH_S = 4  # For requests in flight; the rest of the ten seconds is for slices and the log.
 
 
@@ -77,6 +78,8 @@ def serve(settings: Settings, post: Post, shared: list[socket.socket]) -> None:
 
 async def _clerk(settings: Settings, board: Board, place: int) -> None:
     logging.config.dictConfig(log_config(settings.log_format))
+    # Where processors are short, knowledge may come late but prices may not.
+    os.nice(NICE)
     stop, loop = asyncio.Event(), asyncio.get_running_loop()
     for number in (signal.SIGTERM, signal.SIGINT):
         loop.add_signal_handler(number, stop.set)

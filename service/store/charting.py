@@ -10,12 +10,14 @@ import math
 from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
+from itertools import groupby
+from operator import attrgetter
 from typing import Any
 
 from sqlalchemy import text
 
 from service.store import bodies
-from service.store.database import Database, Reading, Writing
+from service.store.database import Database, Reading, Writing, among
 
 # The finest step that is kept; coarser ones are summed when a chart is read.
 FIVE_MINUTES_MS = 300_000
@@ -176,13 +178,14 @@ def readable(told: str) -> dict[str, Any]:
 
 def _roll(database: Database, behind: Sequence[Any], entries_max: int) -> int:
     """Count some line items in one transaction: a commit for each would hold up all writers."""
-    limit = max(1, entries_max // len(behind))
-    wanted = [{"id": one.line_item, "was": one.seq, "limit": limit} for one in behind]
+    was = {one.line_item: one.seq for one in behind}
+    wanted = {"ids": list(was), "limit": max(1, entries_max // len(behind))}
     # Read outside of the write, for parsing is slow and SQLite lets one writer in at a time.
-    pages = database.read(lambda c: [c.execute(_NEXT, row).all() for row in wanted])
-    pairs = [(row, rows) for row, rows in zip(wanted, pages, strict=True) if rows]
+    rows = database.read(lambda connection: connection.execute(_NEXT, wanted).all())
+    pages = {name: list(page) for name, page in groupby(rows, attrgetter("line_item"))}
     pieces = [
-        (row | {"seq": rows[-1].seq}, _of_entries(str(row["id"]), rows)) for row, rows in pairs
+        ({"id": name, "was": was[name], "seq": page[-1].seq}, _of_entries(name, page))
+        for name, page in pages.items()
     ]
 
     def work(connection: Writing) -> None:
@@ -194,12 +197,12 @@ def _roll(database: Database, behind: Sequence[Any], entries_max: int) -> int:
         add(connection, counted)
 
     database.write(work)
-    return sum(map(len, pages))
+    return len(rows)
 
 
 def _of_entries(line_item: str, rows: Iterable[Any]) -> dict[Key, tuple[int, int]]:
     counted = dict[Key, tuple[int, int]]()
-    for _, kind, at_ms, service_ms, cost, body in rows:
+    for _, _, kind, at_ms, service_ms, cost, body in rows:
         place = line_item, _five(at_ms)
         if cost:
             _count(counted, (*place, "cost", ""), 1, -cost if kind == REFUNDED else cost)
@@ -294,9 +297,13 @@ _ADD = text(
     " VALUES (:id, :at, :what, :name, :n, :nanos) ON CONFLICT (line_item, at_ms, what, name)"
     " DO UPDATE SET n = chart_count.n + excluded.n, nanos = chart_count.nanos + excluded.nanos"
 )
-_NEXT = text(
-    "SELECT seq, kind, at_ms, service_ms, cost, body FROM stream"
-    " WHERE line_item = :id AND seq > :was ORDER BY seq LIMIT :limit"
+# Seqs have no gaps, so that the next so many lie up to a number that is known.
+_NEXT = among(
+    "SELECT s.line_item, s.seq, s.kind, s.at_ms, s.service_ms, s.cost, s.body FROM balance b"
+    " LEFT JOIN charted c ON c.line_item = b.line_item JOIN stream s"
+    " ON s.line_item = b.line_item AND s.seq > coalesce(c.seq, 0)"
+    " AND s.seq <= coalesce(c.seq, 0) + :limit"
+    " WHERE b.line_item IN :ids ORDER BY s.line_item, s.seq"
 )
 _KEEP = text(
     "INSERT INTO charted (line_item, seq) VALUES (:id, :seq) ON CONFLICT (line_item)"
