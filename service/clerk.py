@@ -6,12 +6,13 @@ one database do no harm: each piece of work takes its lock or changes nothing th
 
 from __future__ import annotations
 
+import asyncio
 import logging
 import time
 from collections.abc import Callable, Coroutine
 from dataclasses import dataclass
 from functools import partial
-from typing import Any
+from typing import Any, ParamSpec, TypeVar
 
 from service.learner.exptree_state import UnreadableTree
 from service.learner.memory import UnreadableMemory
@@ -43,6 +44,9 @@ from service.tripwiring import BUCKET_MS, QUIET_MS, Tending, Widths
 
 logger = logging.getLogger(__name__)
 
+P = ParamSpec("P")
+T = TypeVar("T")
+
 CLOSE_S = 1.0
 # What somebody has edited by hand is to be found within a minute.
 AUDIT_S = 10.0
@@ -51,7 +55,7 @@ MEASURE_S = 5.0
 PRUNE_S = 3600.0
 CHART_S = 2.0
 TOGETHER = 32  # Line items taught or audited in one transaction.
-# Of what prices do not wait for: so many times as long as it took nothing is done.
+# Lessons wait for no audit, chart or tripwire: so many times as long as a piece took it rests.
 REST = 2.0
 DAY_MS = 86_400_000
 REFUSAL_KEEP_DAYS = 90  # A quarter: long enough to look back at who tried what.
@@ -98,6 +102,7 @@ class Clerk:
         self._tending = Tending(database, widths, habits.tripwire_quiet_ms)
         self._posting = Posting(database, threads, receiver or Receiver())
         self._sound: dict[str, auditing.Standing] = {}
+        self._others = asyncio.Lock()
 
     def duties(self) -> list[Coroutine[Any, Any, None]]:
         """Every loop, to be run until cancelled."""
@@ -105,10 +110,10 @@ class Clerk:
         return [
             every(self._habits.teach_ms / 1000, self.teach),
             every(CLOSE_S, self.close),
-            every(AUDIT_S, self.audit, REST),
+            every(AUDIT_S, self.audit),
             every(PRUNE_S, self.prune),
-            every(CHART_S, self.chart, REST),
-            every(self._habits.tripwire_s, self.watch, REST),
+            every(CHART_S, self.chart),
+            every(self._habits.tripwire_s, self.watch),
             every(POST_S, self.tell),
             every(MEASURE_S, self.measure),
         ]
@@ -155,15 +160,19 @@ class Clerk:
 
     async def chart(self) -> None:
         """Count what is new for charts."""
-        while await self._threads.run(charting.roll, self._database) >= charting.ENTRIES_MAX:
-            pass
+        counted = charting.ENTRIES_MAX
+        while counted >= charting.ENTRIES_MAX:
+            behind, counted = await self._threads.run(self._database.read, charting.behind), 0
+            for at in range(0, len(behind), TOGETHER):
+                some = behind[at : at + TOGETHER]
+                counted += await self._aside(charting.count, self._database, some)
 
     async def watch(self) -> None:
         """Look at every line item whose tripwires are due."""
         after = ""
         while page := await self._threads.run(self._tending.due, after):
             for standing in page:
-                await self._threads.run(self._tending.look, standing)
+                await self._aside(self._tending.look, standing)
             after = page[-1].line_item
 
     async def tell(self) -> None:
@@ -201,8 +210,16 @@ class Clerk:
         for forget in (epochs.prune, changes.prune, workers.prune):
             await self._threads.run(self._database.write, forget)
 
+    async def _aside(self, work: Callable[P, T], *args: P.args, **kwargs: P.kwargs) -> T:
+        """Do a piece of what no price waits for: one at a time, and with a rest after each."""
+        async with self._others:
+            began = time.monotonic()
+            done = await self._threads.run(work, *args, **kwargs)
+            await asyncio.sleep(REST * (time.monotonic() - began))
+            return done
+
     async def _audit(self, line_items: list[str]) -> list[auditing.Piece]:
-        pieces, frozen = await self._threads.run(auditing.audit_on, self._database, line_items)
+        pieces, frozen = await self._aside(auditing.audit_on, self._database, line_items)
         for name in frozen:
             logger.critical("the stream of line item %s disagrees; it is frozen", name)
         return pieces

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import contextlib
 import logging
 import secrets
 import time
@@ -28,6 +29,8 @@ STEP_S = 2.0
 DENIED_S = 0.25
 OVERDUE_S = 0.25  # A batch takes a few milliseconds; one this late hangs.
 BATCH_MAX = 200
+# While nobody waits: a commit costs as much as the leases of many line items.
+GATHER_S = 0.05
 # Of all slices at once, thousands would keep every other writer waiting for a quarter second.
 TOLD_MAX = 100
 
@@ -63,7 +66,7 @@ class Leasing:
         self._database, self._threads = database, threads
         self._worker, self._lease_s = worker, lease_s
         self._wanted: dict[str, asyncio.Future[None]] = {}
-        self._wake = asyncio.Event()
+        self._wake, self._urgent = asyncio.Event(), asyncio.Event()
         self._denied: dict[str, tuple[str, float]] = {}
         self._before: dict[str, int] = {}
         self._turn = 0
@@ -83,6 +86,7 @@ class Leasing:
     async def obtain(self, line_item: str, wait_s: float) -> None:
         """Wait at most `wait_s` seconds for a slice; the caller looks into the hand after."""
         wish = self.wish(line_item)
+        self._urgent.set()
         # Nobody waits behind a database that hangs, or all who ask would pile up here.
         if time.monotonic() < self._overdue_at:
             # `wait` and not `wait_for`, which would cancel the wish that others wait for too.
@@ -103,7 +107,11 @@ class Leasing:
         """Lease what is wished for, batch by batch, until cancelled."""
         while True:
             await self._wake.wait()
+            with contextlib.suppress(TimeoutError):
+                async with asyncio.timeout(GATHER_S):
+                    await self._urgent.wait()
             self._wake.clear()
+            self._urgent.clear()
             names = list(self._wanted)[:BATCH_MAX]
             await self._lease(names)
             for name in names:

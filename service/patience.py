@@ -30,21 +30,11 @@ class Patience:
         self._database, self._threads = database, threads
         self._tally = tally or Tally()
 
-    async def every(
-        self, seconds: float, duty: Callable[[], Awaitable[None]], rest: float = 0.0
-    ) -> None:
-        """
-        Do a duty again and again, with so much time in between, until cancelled.
-
-        Args:
-            rest: How many times as long as it took the time in between must be at least.
-        """
-        took_s = 0.0
+    async def every(self, seconds: float, duty: Callable[[], Awaitable[None]]) -> None:
+        """Do a duty again and again, with so much time in between, until cancelled."""
         while True:
-            await asyncio.sleep(max(seconds, rest * took_s))
-            began = time.monotonic()
+            await asyncio.sleep(seconds)
             await self.unless_away(duty)
-            took_s = time.monotonic() - began
 
     async def unless_away(self, duty: Callable[[], Awaitable[None]]) -> None:
         """Do a duty once; while the database is away, wait a moment instead."""

@@ -128,7 +128,7 @@ class Settings(BaseSettings):
         "answered reach the learner this late.",
     )
     teach_ms: int = Field(
-        200,
+        100,
         ge=10,
         le=60_000,
         description="Milliseconds between two lessons: how old a price's knowledge may be when "

@@ -31,8 +31,8 @@ LOG_S = 0.5
 CLOCK_S = 1.0
 # A few at a time: what all reported at once was learnt, and became prices, all at once.
 TICK_S = 1.0
-# The bell is a number in memory: to look at it costs less than a hundredth of a bid.
-BELL_S = 0.01
+# The bell is a number in memory, cheap to look at; what it calls for is better done in heaps.
+BELL_S = 0.025
 
 
 @dataclass(frozen=True, slots=True)

@@ -9,11 +9,13 @@ many rows it forgot in how many seconds. The settings are those of the server of
 from __future__ import annotations
 
 import json
+import os
 import sys
 import time
 from contextlib import closing
 
 from service.clerk import DAY_MS
+from service.commands.child import NICE
 from service.connecting import open_database
 from service.settings import load
 from service.store import decisions
@@ -22,6 +24,8 @@ from service.store.database import Database
 
 def main(words: list[str]) -> int:
     """Forget at least so many rows, as far as there are any old enough; returns 0."""
+    # As the clerk does, which would do it otherwise.
+    os.nice(NICE)
     settings = load()
     with closing(open_database(settings)) as database:
         # Else its own start would fall into what is timed.

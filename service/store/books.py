@@ -39,6 +39,8 @@ class Books:
         self._accounts_before = dict(self.accounts)
         self._days_before: dict[tuple[str, str], Day] = {}
         self._slices_before: dict[bytes, Slice] = {}
+        self._days_sought: set[tuple[str, str]] = set()
+        self._new_days: list[dict[str, Any]] = []
         self._new_slices: list[dict[str, Any]] = []
         self._rows: list[tuple[Any, ...]] = []
         self._seqs: dict[str, int] = {}
@@ -60,9 +62,11 @@ class Books:
 
     def load_days(self, wanted: Iterable[tuple[str, str]]) -> None:
         """Read these days where they exist."""
-        missing = set(wanted) - set(self.days)
+        # What was looked for and is not there is not looked for again.
+        missing = set(wanted) - self._days_sought
         if not missing:
             return
+        self._days_sought |= missing
         names, days = zip(*missing, strict=True)
         row = {"ids": sorted(set(names)), "days": sorted(set(days))}
         for found in self._connection.execute(_SELECT_DAYS, row):
@@ -76,10 +80,7 @@ class Books:
         if (line_item, day) not in self.days:
             fresh = Day(line_item, day, budget, budget, 0, 0, 0)
             # The balance is locked, so nobody else can make the same day at this moment.
-            self._connection.execute(
-                _INSERT_DAY,
-                {"line_item": line_item, "day": day, "budget": budget},
-            )
+            self._new_days.append({"line_item": line_item, "day": day, "budget": budget})
             self._keep_day(fresh)
         return self.days[line_item, day]
 
@@ -146,6 +147,8 @@ class Books:
         Raises:
             BrokenPromise: A guard said no although the rules had allowed it.
         """
+        if self._new_days:
+            self._connection.execute(_INSERT_DAY, self._new_days)
         if self._new_slices:
             self._connection.execute(_INSERT_SLICE, self._new_slices)
         for name, seq in self._seqs.items():

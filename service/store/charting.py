@@ -154,9 +154,14 @@ def of_decisions(decisions: Iterable[Row]) -> dict[Key, tuple[int, int]]:
 
 def roll(database: Database, entries_max: int = ENTRIES_MAX) -> int:
     """Count what is new in every stream, a piece of each; returns how many entries that were."""
-    behind = database.read(lambda connection: connection.execute(_ALL_BEHIND).all())
-    pieces = range(0, len(behind), TOGETHER)
-    return sum(_roll(database, behind[at : at + TOGETHER], entries_max) for at in pieces)
+    found = database.read(behind)
+    pieces = range(0, len(found), TOGETHER)
+    return sum(count(database, found[at : at + TOGETHER], entries_max) for at in pieces)
+
+
+def behind(connection: Reading) -> Sequence[Any]:
+    """The line items with entries that are not counted yet, and the seq up to which they are."""
+    return connection.execute(_ALL_BEHIND).all()
 
 
 def prune(connection: Writing, before_ms: int) -> int:
@@ -176,10 +181,10 @@ def readable(told: str) -> dict[str, Any]:
     return body if isinstance(body, dict) else {}
 
 
-def _roll(database: Database, behind: Sequence[Any], entries_max: int) -> int:
+def count(database: Database, some: Sequence[Any], entries_max: int = ENTRIES_MAX) -> int:
     """Count some line items in one transaction: a commit for each would hold up all writers."""
-    was = {one.line_item: one.seq for one in behind}
-    wanted = {"ids": list(was), "limit": max(1, entries_max // len(behind))}
+    was = {one.line_item: one.seq for one in some}
+    wanted = {"ids": list(was), "limit": max(1, entries_max // len(some))}
     # Read outside of the write, for parsing is slow and SQLite lets one writer in at a time.
     rows = database.read(lambda connection: connection.execute(_NEXT, wanted).all())
     pages = {name: list(page) for name, page in groupby(rows, attrgetter("line_item"))}

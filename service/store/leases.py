@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Any
 
+import orjson
 from sqlalchemy import text
 
 from service.ledger.accounts import NO_LIMIT, Account, Day, Movement, Slice
@@ -225,7 +225,7 @@ def read_configs(
     """The configuration of these line items."""
     statement = among("SELECT id, config FROM line_item WHERE id IN :ids")
     rows = connection.execute(statement, {"ids": list(line_items)})
-    return {row.id: json.loads(row.config) for row in rows}
+    return {name: orjson.loads(config) for name, config in rows}
 
 
 _DUE = text(
