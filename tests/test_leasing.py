@@ -10,6 +10,7 @@ from typing import TypeVar
 import pytest
 from sqlalchemy import event, text
 
+from service import leasing
 from service.errors import StoreAway
 from service.leasing import DENIED_S, MARGIN_SHARE, STEP_S, Leasing
 from service.store.database import Database, Writing
@@ -231,3 +232,41 @@ async def test_a_stop_in_the_middle_of_a_lease_strands_nothing(migrated_url: str
     assert database.read(lambda c: c.execute(held).scalar_one()) == 0
     threads.close()
     database.close()
+
+
+async def test_every_line_item_has_its_turn_to_report(migrated_url: str) -> None:
+    """In so many parts as turns each slice and each pass is told of once."""
+    async with working(migrated_url) as worker:
+        names = [f"meadow-{number}" for number in range(12)]
+        for name in names:
+            await worker.create(id=name)
+            await worker.bid(name)
+            await worker.bid(name, floor=PRICE + 1)
+        told, ticks = "SELECT count(*) FROM stream WHERE kind = 'tick'", list[int]()
+        for _ in range(4):
+            await worker.leasing.tick(parts=4)
+            ticks.append(worker.one(told))
+        assert ticks[-1] == len(names)
+        # Names are hashed anew in each process; that all twelve share one part is no chance.
+        assert ticks[0] < len(names)
+        assert worker.leasing.hand.under_floor == {}
+
+
+async def test_many_slices_are_given_back_in_pieces(
+    migrated_url: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Each piece is a transaction; after a failure what was not told waits, in order."""
+    async with working(migrated_url) as worker:
+        monkeypatch.setattr(leasing, "TOLD_MAX", 2)
+        names = [f"meadow-{number}" for number in range(5)]
+        for name in names:
+            await worker.create(id=name)
+            await worker.bid(name)
+        worker.leasing.hand.retire_all()
+        mend = losing_answers(worker)
+        await worker.leasing.give_back()
+        mend()
+        assert [one.line_item for one in worker.leasing.hand.given] == names
+        await worker.leasing.give_back()
+        assert worker.leasing.hand.given == []
+        assert worker.one("SELECT count(*) FROM slice WHERE state = 'retired'") == 5

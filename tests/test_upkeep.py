@@ -9,7 +9,11 @@ from contextlib import asynccontextmanager
 
 import pytest
 
+from service.backlog import Backlog
 from service.feedback import Report
+from service.store import decisions
+from service.store.database import Database
+from service.upkeep import Rhythm, Upkeep
 from tests.builders import GRACE_MS, LEASE_S, NAME, PRICE, Worker, outage, working
 
 pytestmark = pytest.mark.anyio
@@ -217,3 +221,61 @@ async def test_a_duty_ends_on_what_it_does_not_understand(migrated_url: str) -> 
         async with on_duty(worker) as tasks:
             done, _ = await asyncio.wait(tasks, timeout=5, return_when=asyncio.FIRST_COMPLETED)
             assert "KeyError" in [type(task.exception()).__name__ for task in done]
+
+
+async def test_the_clerks_bell_wakes_a_worker_before_its_poll(migrated_url: str) -> None:
+    """On one host a snapshot is taken up a moment after it was published."""
+    rings = [0]
+    async with working(migrated_url) as worker:
+        await worker.create(policy=MEAN)
+        await win(worker, 4, WORTH)
+        slow = Rhythm(change_poll_ms=60_000, tick_s=10, clock_step_ms_max=2000)
+        upkeep = Upkeep(
+            *(worker.database, worker.threads, "one", worker.catalog, worker.leasing),
+            *(Backlog(10), asyncio.Event(), slow),
+            bell=lambda: rings[0],
+        )
+        following = asyncio.create_task(upkeep._follow_changes())
+        await asyncio.sleep(0.1)
+        await worker.clerk.teach()
+        before = (await worker.bid()).snapshot
+        rings[0] += 1
+        async with asyncio.timeout(10):
+            while (await worker.bid()).snapshot == before:
+                await asyncio.sleep(0.01)
+        following.cancel()
+        await asyncio.gather(following, return_exceptions=True)
+
+
+async def test_nobody_waits_to_hear_of_a_snapshot(migrated_url: str) -> None:
+    """Only what was ordered is confirmed by a write of its own; the next beat tells the rest."""
+    async with working(migrated_url) as worker:
+        await worker.create(policy=MEAN)
+        await worker.upkeep.follow()
+        seen = "SELECT change_seen FROM worker WHERE id = 'one'"
+        before = worker.one(seen)
+        await win(worker, 4, WORTH)
+        await worker.clerk.teach()
+        await worker.upkeep.follow()
+        assert worker.one(seen) == before < worker.catalog.change_seen
+        await worker.upkeep.keep_time()
+        assert worker.one(seen) == worker.catalog.change_seen
+
+
+async def test_the_log_leaves_what_came_meanwhile_to_its_next_turn(
+    migrated_url: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Else a commit would be made for every few decisions as long as bids come."""
+    async with working(migrated_url) as worker:
+        await worker.create()
+        await worker.bids(3)
+        log = decisions.log
+
+        def while_bids_come(database: Database, rows: list[decisions.Decision]) -> None:
+            log(database, rows)
+            worker.backlog.add(dict(rows[0]))
+
+        monkeypatch.setattr(decisions, "log", while_bids_come)
+        await worker.upkeep.log()
+        assert worker.one("SELECT count(*) FROM decision") == 3
+        assert len(worker.backlog) == 1

@@ -80,3 +80,13 @@ def test_no_reader_ever_sees_half_a_page() -> None:
         writer.join()
     assert seen
     assert [page for page in seen if page not in pages] == []
+
+
+def test_the_bell_of_the_clerk_is_heard_in_another_process() -> None:
+    """A worker that compares two looks knows that something was published between them."""
+    board, descriptor = Board.shared(2)
+    other = Board.inherited(descriptor)
+    before = board.rings()
+    other.ring()
+    assert board.rings() == before + 1
+    os.close(descriptor)

@@ -5,12 +5,14 @@ from __future__ import annotations
 import threading
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
+from contextlib import closing
 from pathlib import Path
 
 import pytest
 from sqlalchemy import text
 
 from service.errors import BrokenPromise, StoreAway, Unsafe
+from service.store import database
 from service.store.changes import announce, latest
 from service.store.database import Database, Reading, Writing, locking
 
@@ -150,3 +152,28 @@ def _insert(name: str) -> Callable[[Writing], object]:
 def _bump(connection: Writing, name: str) -> None:
     statement = text("UPDATE fact SET value = value || 'x' WHERE name = :name")
     connection.execute(statement, {"name": name})
+
+
+@pytest.mark.parametrize("backend", ["sqlite"], indirect=True)
+def test_a_writer_waits_for_its_turn_and_then_says_that_none_came(
+    migrated_url: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Another process holds SQLite's one lock: for a while is waited for, for long is told."""
+    monkeypatch.setattr(database, "BUSY_S", 1)
+    # A second object is to SQLite what a second process is: it shares no lock of ours.
+    with closing(Database(migrated_url)) as one, closing(Database(migrated_url)) as other:
+        begun, leave = threading.Event(), threading.Event()
+
+        def hold(connection: Writing) -> None:
+            announce(connection, "x", ["a"])
+            begun.set()
+            leave.wait(30)
+
+        with ThreadPoolExecutor(2) as pool:
+            held = pool.submit(one.write, hold)
+            begun.wait(30)
+            with pytest.raises(StoreAway):
+                other.write(lambda connection: announce(connection, "x", ["b"]))
+            waiting = pool.submit(other.write, lambda c: announce(c, "x", ["c"]))
+            leave.set()
+            assert (held.result(), waiting.result()) == (None, 2)
