@@ -12,6 +12,7 @@ from rich.console import Console
 
 from service.commands import figures, options, report
 from service.commands.figures import Figure
+from service.commands.profiling import add_profile, profiled
 from service.decision.price import ready
 from service.decision.terms import Terms
 from service.learner.fold import Lesson, fold
@@ -63,6 +64,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help=f"learners to time instead of all: {'; '.join(LEARNERS)}",
     )
     parser.add_argument("--json", action="store_true", help="print figures for a program")
+    add_profile(parser)
 
 
 def run(arguments: argparse.Namespace) -> int:
@@ -74,7 +76,7 @@ def run(arguments: argparse.Namespace) -> int:
         last, 1 when one's does.
     """
     sizes, found = QUICK_SIZES if arguments.quick else SIZES, dict[str, list[Reading]]()
-    with report.progress() as bar:
+    with report.progress() as bar, profiled(arguments.profile):
         task = bar.add_task("Lessons", total=len(arguments.only) * sizes[-1])
         for name in dict.fromkeys(arguments.only):
             stages = learnt(

@@ -22,6 +22,7 @@ from rich.console import Console
 
 from service.commands import options, report
 from service.commands.postgresql_process import PostgreSQLProcess
+from service.commands.profiling import add_profile, profiled
 from service.errors import BrokenPromise
 from service.ledger.settle import Outcome
 from service.store import (
@@ -64,6 +65,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--rows", type=options.count, default=20_000, help="of each kind")
     parser.add_argument("--database", choices=("sqlite", "postgresql"), default="sqlite")
     parser.add_argument("--json", action="store_true", help="print figures for a program")
+    add_profile(parser)
 
 
 def run(arguments: argparse.Namespace) -> int:
@@ -75,7 +77,8 @@ def run(arguments: argparse.Namespace) -> int:
     """
     with _database(arguments.database) as database, report.progress() as bar:
         task = bar.add_task("Rows", total=6 * arguments.rows)
-        steps = measured(database, arguments.rows, lambda done: bar.advance(task, done))
+        with profiled(arguments.profile):
+            steps = measured(database, arguments.rows, lambda done: bar.advance(task, done))
     if arguments.json:
         figures = {"database": arguments.database, "steps": [asdict(step) for step in steps]}
         sys.stdout.write(json.dumps(figures) + "\n")

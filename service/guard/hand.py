@@ -36,7 +36,7 @@ class SliceInHand:
     def take(self, price: int) -> int:
         """Set `price` nanos aside for a new bid; returns the bid's place in the slice."""
         # Checked although the gate has clamped the price: here the promise is kept or broken.
-        if not 0 < price <= self.amount - self.issued or self.bids >= COUNTER_MAX:
+        if not 0 < price <= self.free or self.bids >= COUNTER_MAX:
             raise ValueError("not in this slice")
         counter = self.bids
         self.issued += price

@@ -207,7 +207,7 @@ def count(database: Database, some: Sequence[Any], entries_max: int = ENTRIES_MA
 
 def _of_entries(line_item: str, rows: Iterable[Any]) -> dict[Key, tuple[int, int]]:
     counted = dict[Key, tuple[int, int]]()
-    for _, _, kind, at_ms, service_ms, cost, body in rows:
+    for _, kind, at_ms, service_ms, cost, body, *_ in rows:
         place = line_item, _five(at_ms)
         if cost:
             _count(counted, (*place, "cost", ""), 1, -cost if kind == REFUNDED else cost)
@@ -304,7 +304,7 @@ _ADD = text(
 )
 # Seqs have no gaps, so that the next so many lie up to a number that is known.
 _NEXT = among(
-    "SELECT s.line_item, s.seq, s.kind, s.at_ms, s.service_ms, s.cost, s.body FROM balance b"
+    "SELECT s.seq, s.kind, s.at_ms, s.service_ms, s.cost, s.body, s.line_item FROM balance b"
     " LEFT JOIN charted c ON c.line_item = b.line_item JOIN stream s"
     " ON s.line_item = b.line_item AND s.seq > coalesce(c.seq, 0)"
     " AND s.seq <= coalesce(c.seq, 0) + :limit"
