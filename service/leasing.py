@@ -48,6 +48,7 @@ class Leasing:
         worker: This worker's id.
         lease_s: Seconds a slice is leased for.
         clock: The boot-time clock; tests hand in their own.
+        gather_s: How long what nobody waits for yet may wait for more of its kind.
     """
 
     def __init__(
@@ -58,8 +59,10 @@ class Leasing:
         lease_s: int,
         clock: Callable[[], float] = boot_clock,
         tally: Tally | None = None,
+        gather_s: float = GATHER_S,
     ) -> None:
         self._tally = tally or Tally()
+        self._gather_s = gather_s
         self.hand = Hand()
         self._overdue_at = float("inf")
         self.clock = clock
@@ -108,7 +111,7 @@ class Leasing:
         while True:
             await self._wake.wait()
             with contextlib.suppress(TimeoutError):
-                async with asyncio.timeout(GATHER_S):
+                async with asyncio.timeout(self._gather_s):
                     await self._urgent.wait()
             self._wake.clear()
             self._urgent.clear()

@@ -270,3 +270,19 @@ async def test_many_slices_are_given_back_in_pieces(
         await worker.leasing.give_back()
         assert worker.leasing.hand.given == []
         assert worker.one("SELECT count(*) FROM slice WHERE state = 'retired'") == 5
+
+
+async def test_a_refresh_waits_for_company_and_a_bid_for_nobody(migrated_url: str) -> None:
+    """What is only to follow a slice is leased with what somebody waits for, in one transaction."""
+    async with working(migrated_url) as worker:
+        for name in ("meadow", "orchard"):
+            await worker.create(id=name)
+        slow = Leasing(worker.database, worker.threads, "one", LEASE_S, worker.clock, gather_s=30.0)
+        running = asyncio.create_task(slow.run())
+        first = slow.wish("meadow")
+        await asyncio.sleep(0.05)
+        assert not first.done()
+        await slow.obtain("orchard", 5)
+        assert set(slow.hand.slices) == {"meadow", "orchard"}
+        running.cancel()
+        await asyncio.gather(running, return_exceptions=True)
