@@ -11,7 +11,7 @@ from service.commands import bench_learn
 from service.commands.bench_learn import Reading, growth
 from service.rehearsal.lesson_stream import BATCH, LEARNERS
 
-QUICK = Namespace(seed=7, quick=True, json=True, only=list(LEARNERS))
+QUICK = Namespace(seed=7, quick=True, json=True, profile=False, only=list(LEARNERS))
 
 
 def test_every_learner_is_timed_at_every_size(capsys: pytest.CaptureFixture[str]) -> None:

@@ -20,7 +20,8 @@ def test_a_profile_stands_apart_from_the_figures(
     words: list[str], function: str, capsys: pytest.CaptureFixture[str]
 ) -> None:
     """Functions on standard error, whole JSON on standard output."""
-    assert main([*words, "--json", "--profile"]) == 0
+    # What it took is judged too, and on a busy machine an aim may be missed.
+    assert main([*words, "--json", "--profile"]) in (0, 1)
     said = capsys.readouterr()
     assert function in said.err
     assert json.loads(said.out)
