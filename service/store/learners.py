@@ -11,6 +11,7 @@ from sqlalchemy import text
 
 from service.store import epochs
 from service.store.database import Reading, Writing, among
+from service.store.driver import update_many
 from service.store.leases import read_configs
 
 STATES_MAX = 200  # Read at once; each may be 64 KiB.
@@ -110,7 +111,7 @@ def begin(connection: Writing, line_item: str, state: bytes, wall_ms: int) -> No
 def refold(connection: Writing, line_item: str, state: bytes) -> None:
     """Let the teacher read the whole stream again from `state`, after a change of terms."""
     row = {"id": line_item, "seq": 0, "state": state, "stuck": 0, "tries": 0}
-    connection.execute(_LEARN, row)
+    update_many(connection, LEARN, [row])
     # Checkpoints under the old terms would make a later rebuild differ from a fold from zero.
     connection.execute(text("DELETE FROM checkpoint WHERE line_item = :id"), {"id": line_item})
 
@@ -123,7 +124,7 @@ def begin_afresh(connection: Writing, line_item: str, seq: int) -> None:
     )
 
 
-_LEARN = text(
+LEARN = (
     "UPDATE learner SET seq = :seq, working = :state, stuck_seq = :stuck, tries = :tries"
     " WHERE line_item = :id"
 )

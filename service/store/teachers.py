@@ -19,7 +19,7 @@ from service.store.database import Database, Writing, locking
 from service.store.decisions import quarantine
 from service.store.driver import update_many
 from service.store.journal import note
-from service.store.learners import digest_of
+from service.store.learners import LEARN, digest_of
 from service.store.leases import read_configs
 from service.store.lessons import Lesson, Page
 
@@ -159,7 +159,7 @@ def _keep(connection: Writing, taught: Mapping[str, _Taught], now_ms: int) -> No
     learnt, published = list[dict[str, Any]](), list[dict[str, Any]]()
     for name, (_, seq, state, digest, public, checkpoint, law, poison, tries, _) in taught.items():
         row = {"id": name, "seq": seq, "state": state, "digest": digest, "now": now_ms}
-        learnt.append({**row, "poison": poison, "tries": tries})
+        learnt.append({**row, "stuck": poison, "tries": tries})
         if checkpoint:
             connection.execute(_CHECKPOINT, row)
         if public:
@@ -167,7 +167,7 @@ def _keep(connection: Writing, taught: Mapping[str, _Taught], now_ms: int) -> No
         if law is not None:
             epochs.keep(connection, name, seq, law)
     if learnt:
-        update_many(connection, _LEARN, learnt)
+        update_many(connection, LEARN, learnt)
     # The change number last: its one row is what every writer waits for.
     if published:
         update_many(connection, _PUBLISH, published)
@@ -188,7 +188,7 @@ def _set_aside(connection: Writing, line_item: str, taught: _Taught, now: int) -
     lessons.cancel(connection, line_item, by_seq, ALL, [(taught.poison, taught.poison, ALL)])
     quarantine(connection, line_item, taught.error, {"event": "Lesson"}, now, taught.poison)
     unstuck = {"id": line_item, "seq": row.seq, "state": bytes(row.working)}
-    update_many(connection, _LEARN, [{**unstuck, "poison": 0, "tries": 0}])
+    update_many(connection, LEARN, [{**unstuck, "stuck": 0, "tries": 0}])
     note(
         connection, wall_ms=now, actor="bidkeel", action="quarantine", line_item=line_item,
         reason="a lesson could not be learnt", detail=body,
@@ -199,10 +199,6 @@ def _set_aside(connection: Writing, line_item: str, taught: _Taught, now: int) -
 _MINE = (
     "SELECT line_item, seq, working, digest, halted, stuck_seq, tries FROM learner"
     " WHERE line_item IN :ids ORDER BY line_item"
-)
-_LEARN = (
-    "UPDATE learner SET seq = :seq, working = :state, stuck_seq = :poison, tries = :tries"
-    " WHERE line_item = :id"
 )
 _PUBLISH = (
     "UPDATE learner SET snapshot = :seq, state = :state, digest = :digest, published_ms = :now,"
